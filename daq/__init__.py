@@ -1,0 +1,1 @@
+"""tercet: the sequencer. Public names are loaded when first used, so that `tercet --help` is quick."""
