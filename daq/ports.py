@@ -216,8 +216,10 @@ class Bench(Protocol):
 
     clock: Clock
 
-    def true_rates_hz(self, openings: Sequence[int], positions_mm: Sequence[float]) -> Sequence[Sequence[float]]:
-        """Return the noise-free rate of every opening at every position, drift and dead time left out [1/s]."""
+    def true_rates_hz(
+        self, openings: Sequence[int], positions_mm: Sequence[float]
+    ) -> Sequence[Sequence[float]]:
+        """Return the noise-free rate of every opening at every position, without drift and dead time [1/s]."""
 
     def keep(self) -> bytes:
         """Return what a resumed rehearsal needs: axis positions and clock offset, as JSON."""

@@ -1,0 +1,56 @@
+"""Descriptions: a table read from TOML becomes a frozen model, or a list of everything wrong with it."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import Any, Literal, overload
+
+from pydantic import ValidationError
+
+from daq import openings
+from daq.description.measurement import Measurement
+from daq.description.problems import every_problem
+from daq.description.rig import Rig
+from daq.errors import DescriptionError
+
+__all__ = ["Measurement", "Rig", "joint_problems", "parse"]
+
+
+@overload
+def parse(table: Mapping[str, Any], source: str, kind: Literal["measurement"]) -> Measurement: ...
+@overload
+def parse(table: Mapping[str, Any], source: str, kind: Literal["rig"]) -> Rig: ...
+def parse(table: Mapping[str, Any], source: str, kind: str) -> Measurement | Rig:
+    """Return the description that a table holds.
+
+    Raises
+    ------
+    DescriptionError
+        With every problem at once, each with file (`source`), key and remedy.
+    """
+    model: type[Measurement] | type[Rig] = Measurement if kind == "measurement" else Rig
+    try:
+        return model.model_validate(table)
+    except ValidationError as error:
+        raise DescriptionError(every_problem(error, model, table, source)) from error
+
+
+def joint_problems(measurement: Measurement, rig: Rig, source: str) -> tuple[str, ...]:
+    """Return what is wrong between a measurement and its rig, as sentences."""
+    axis = rig.axes[rig.detector.axis]
+    low, high = axis.limits_mm
+    outside = [place for place in measurement.positions.places_mm if not low <= place <= high]
+    problems = []
+    if outside:
+        problems.append(
+            f"{source}, positions: {outside[0]:g} mm lies outside the limits {low:g} .. {high:g} mm of axis "
+            f"{rig.detector.axis!r}. Move the positions inside, or mend the limits in the rig file."
+        )
+    given = measurement.itinerary.opening_order
+    have = {openings.name(mask) for mask in rig.opening_masks}
+    if given is not None and sorted(given) != sorted(have):
+        problems.append(
+            f"{source}, itinerary.opening_order: name every opening of the mask once: "
+            f"{', '.join(sorted(have))}."
+        )
+    return tuple(problems)

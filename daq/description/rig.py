@@ -1,0 +1,185 @@
+"""The rig: slits, mask, axes, devices, and the limits that no move may leave."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Mapping
+from typing import Annotated, Any, Literal
+
+from pydantic import Field, field_validator, model_validator
+
+from daq import openings
+from daq.description.problems import ProblemsError, Table
+
+Positive = Annotated[float, Field(gt=0)]
+NotNegative = Annotated[float, Field(ge=0)]
+SlitLetter = Literal["A", "B", "C", "D", "E"]
+
+
+class Geometry(Table):
+    """Wavelength (or de Broglie wavelength) and distance from mask to detector."""
+
+    wavelength_m: Positive
+    distance_m: Positive
+
+
+class Slit(Table):
+    """One slit instance: where it was cut and how wide, with the uncertainties of its metrology."""
+
+    centre_m: float
+    width_m: Positive
+    centre_u_m: NotNegative = 0.0
+    width_u_m: NotNegative = 0.0
+
+
+class Shown(Table):
+    """An opening on the mask: where the translator stands, and slits that were cut apart for it."""
+
+    at_mm: float
+    cuts: Mapping[SlitLetter, Slit] = {}
+
+
+class Mask(Table):
+    """A mask translator with separate openings."""
+
+    axis: str
+    chip: str = ""
+    openings: Mapping[str, Shown]
+
+    @field_validator("openings")
+    @classmethod
+    def _named_in_order(cls, value: Mapping[str, Shown]) -> Mapping[str, Shown]:
+        for name in value:
+            openings.mask(name)
+        return value
+
+
+class Detector(Table):
+    """What carries the detector."""
+
+    axis: str
+
+
+class Axis(Table):
+    """One linear axis of a stage controller."""
+
+    device: str
+    letter: Annotated[str, Field(pattern="^[A-Z]$")]
+    limits_mm: tuple[float, float]
+    speed_mm_s: Positive
+    settle_s: NotNegative = 0.0
+    tolerance_mm: Positive = 0.01
+
+    @field_validator("limits_mm")
+    @classmethod
+    def _rising(cls, value: tuple[float, float]) -> tuple[float, float]:
+        if not value[0] < value[1]:
+            raise ValueError("the lower limit must lie below the upper one")
+        return value
+
+    def move_s(self, distance_mm: float) -> float:
+        """Return how long a move takes, settling included [s]; none takes no time."""
+        return self.settle_s + abs(distance_mm) / self.speed_mm_s if distance_mm else 0.0
+
+
+class DeviceEntry(Table):
+    """A device: which driver speaks to it, and where."""
+
+    driver: str
+    address: Annotated[str, Field(pattern=r"^tcp://[^\s:/]+:\d{1,5}$")]
+    timeout_s: Positive = 1.0
+    every_s: Positive = 60.0
+
+
+class Rig(Table):
+    """The hardware of a bench as its rig file describes it."""
+
+    schema_: Literal[1] = Field(alias="schema")
+    name: Annotated[str, Field(pattern="^[a-z0-9][a-z0-9-]*$")]
+    geometry: Geometry
+    slits: Mapping[SlitLetter, Slit]
+    mask: Mask
+    detector: Detector
+    axes: Mapping[str, Axis]
+    devices: Mapping[str, DeviceEntry]
+    bench: Mapping[str, Any] | None = None
+
+    @model_validator(mode="after")
+    def _hangs_together(self) -> Rig:
+        found = [*self._slit_problems(), *self._axis_problems(), *self._opening_problems()]
+        if found:
+            raise ProblemsError(found)
+        return self
+
+    def _slit_problems(self) -> Iterator[tuple[str, str]]:
+        letters = "".join(self.slits)
+        if not 2 <= len(letters) <= 5 or letters != openings.LETTERS[: len(letters)]:
+            yield "slits", f"a mask has two to five slits named A, B, C ... in order, not {letters or 'none'}"
+
+    def _axis_problems(self) -> Iterator[tuple[str, str]]:
+        for key, axis in (("mask.axis", self.mask.axis), ("detector.axis", self.detector.axis)):
+            if axis not in self.axes:
+                yield key, f"there is no axis {axis!r} in [axes]. Name one of {', '.join(self.axes)}"
+        for name, entry in self.axes.items():
+            if entry.device not in self.devices:
+                yield (
+                    f"axes.{name}.device",
+                    f"no device {entry.device!r} in [devices]. Name one of {', '.join(self.devices)}",
+                )
+
+    def _opening_problems(self) -> Iterator[tuple[str, str]]:
+        places: dict[float, str] = {}
+        for name, shown in self.mask.openings.items():
+            yield from self._shown_problems(name, shown)
+            if shown.at_mm in places:
+                yield f"mask.openings.{name}.at_mm", f"{places[shown.at_mm]} stands at {shown.at_mm:g} mm too"
+            places[shown.at_mm] = name
+
+    def _shown_problems(self, name: str, shown: Shown) -> Iterator[tuple[str, str]]:
+        key = f"mask.openings.{name}"
+        letters = set(name) if name != openings.NONE else set()
+        for foreign in sorted(letters - set(self.slits)):
+            yield key, f"there is no slit {foreign} in [slits]"
+        for odd in sorted(set(shown.cuts) - letters):
+            yield f"{key}.cuts", f"slit {odd} is not open there"
+        axis = self.axes.get(self.mask.axis)
+        if axis and not axis.limits_mm[0] <= shown.at_mm <= axis.limits_mm[1]:
+            low, high = axis.limits_mm
+            yield (
+                f"{key}.at_mm",
+                f"{shown.at_mm:g} lies outside the limits {low:g} .. {high:g} mm of axis {self.mask.axis!r}",
+            )
+
+    @property
+    def simulated(self) -> bool:
+        """Whether every device of this rig is simulated."""
+        return self.bench is not None
+
+    @property
+    def opening_masks(self) -> tuple[int, ...]:
+        """The openings that the mask has, as bit masks in binary order."""
+        return tuple(sorted(openings.mask(name) for name in self.mask.openings))
+
+    def slits_of(self, opening: int) -> Mapping[str, Slit]:
+        """Return the slit instances that an opening shows: its own cuts, else those of [slits]."""
+        name = openings.name(opening)
+        cuts = self.mask.openings[name].cuts if name in self.mask.openings else {}
+        shown = () if opening == 0 else tuple(name)
+        return {letter: cuts.get(letter, slit) for letter, slit in self.slits.items() if letter in shown}
+
+    def mask_at_mm(self, opening: int) -> float:
+        """Return where the mask translator stands for an opening [mm]."""
+        return self.mask.openings[openings.name(opening)].at_mm
+
+    def mask_move_s(self) -> dict[tuple[int, int], float]:
+        """Return the matrix of move times between openings, (from, to) -> seconds, settling included."""
+        axis = self.axes[self.mask.axis]
+        every = self.opening_masks
+        return {
+            (here, there): axis.move_s(self.mask_at_mm(there) - self.mask_at_mm(here))
+            for here in every
+            for there in every
+        }
+
+    def detector_move_s(self, distance_mm: float) -> float:
+        """Return how long a detector move takes, settling included [s]."""
+        return self.axes[self.detector.axis].move_s(distance_mm)
