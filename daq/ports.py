@@ -167,7 +167,9 @@ class Counter(Device, Protocol):
 
 
 class Sensor(Device, Protocol):
-    """One or more quantities that are read beside the counts."""
+    """One or more quantities that are read beside the counts, every `every_s` of run time."""
+
+    every_s: float
 
     def read(self) -> Mapping[str, tuple[float, str]]:
         """Return name -> (value, unit)."""
@@ -201,7 +203,7 @@ class Sink(Protocol):
 
 @dataclass(frozen=True, slots=True)
 class Devices:
-    """The devices of one rig, opened: what the sequencer is handed."""
+    """The devices of one rig, opened; `tolerance_mm` by axis, encoder against target."""
 
     mask: Mask
     detector: Stage
@@ -209,6 +211,7 @@ class Devices:
     sensors: Sequence[Sensor] = ()
     shutter: Shutter | None = None
     all: Sequence[Device] = field(default=())
+    tolerance_mm: Mapping[str, float] = field(default_factory=dict)
 
 
 class Bench(Protocol):
@@ -219,7 +222,7 @@ class Bench(Protocol):
     def true_rates_hz(
         self, openings: Sequence[int], positions_mm: Sequence[float]
     ) -> Sequence[Sequence[float]]:
-        """Return the noise-free rate of every opening at every position, without drift and dead time [1/s]."""
+        """Return noise-free rates, position by opening, without drift and dead time [1/s]."""
 
     def keep(self) -> bytes:
         """Return what a resumed rehearsal needs: axis positions and clock offset, as JSON."""

@@ -88,6 +88,7 @@ class DeviceEntry(Table):
     address: Annotated[str, Field(pattern=r"^tcp://[^\s:/]+:\d{1,5}$")]
     timeout_s: Positive = 1.0
     every_s: Positive = 60.0
+    readout_s: NotNegative = 0.0
 
 
 class Rig(Table):
@@ -128,6 +129,13 @@ class Rig(Table):
 
     def _opening_problems(self) -> Iterator[tuple[str, str]]:
         places: dict[float, str] = {}
+        wanted = set(openings.names(len(self.slits))) if 2 <= len(self.slits) <= 5 else set()
+        missing = sorted(wanted - set(self.mask.openings), key=openings.mask)
+        if missing:
+            yield (
+                "mask.openings",
+                f"the mask lacks {', '.join(missing)}; the residual needs every opening once",
+            )
         for name, shown in self.mask.openings.items():
             yield from self._shown_problems(name, shown)
             if shown.at_mm in places:
@@ -179,6 +187,11 @@ class Rig(Table):
             for here in every
             for there in every
         }
+
+    @property
+    def readout_s(self) -> float:
+        """The longest readout of a device between two gates [s]."""
+        return max((entry.readout_s for entry in self.devices.values()), default=0.0)
 
     def detector_move_s(self, distance_mm: float) -> float:
         """Return how long a detector move takes, settling included [s]."""

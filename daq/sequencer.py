@@ -1,0 +1,246 @@
+"""Sequencer: visits and devices become readings. A generator that keeps nothing and decides nothing.
+
+The order of work is: the gate closes, the next move starts, the counter is read, the reading is committed,
+what is left of the move is waited for, the next gate opens.
+"""
+
+from __future__ import annotations
+
+import math
+from collections import defaultdict
+from collections.abc import Iterable, Iterator, Mapping
+from dataclasses import dataclass
+from enum import Enum
+
+from daq.errors import DaqError, DeviceError
+from daq.ports import AxisState, Clock, Counted, Devices, Sink
+from daq.records import Quality, Reading, Visit
+
+POLL_NS = 10_000_000
+MOVE_GRACE_S = 10.0
+GATE_GRACE_S = 5.0
+UNPLANNED_BITS = defaultdict(lambda: Quality.GOOD, {4: Quality.DARK, 5: Quality.FLANK})  # by reason
+
+
+class State(Enum):
+    """State of a run."""
+
+    READY = "ready"
+    MOVING = "moving"
+    COUNTING = "counting"
+    HOLDING = "holding"
+    PARKING = "parking"
+    ENDED = "ended"
+
+
+STEPS: Mapping[State, frozenset[State]] = {
+    State.READY: frozenset({State.MOVING, State.HOLDING, State.PARKING, State.ENDED}),
+    State.MOVING: frozenset({State.COUNTING, State.HOLDING, State.PARKING}),
+    State.COUNTING: frozenset({State.MOVING, State.HOLDING, State.PARKING}),
+    State.HOLDING: frozenset({State.MOVING, State.PARKING}),
+    State.PARKING: frozenset({State.ENDED}),
+    State.ENDED: frozenset(),
+}
+
+
+def step(state: State, to: State) -> State:
+    """Return the next state of a run.
+
+    Raises
+    ------
+    DaqError
+        For a step that the table does not hold; nothing changes then.
+    """
+    if to not in STEPS[state]:
+        raise DaqError(f"a run that is {state.value} cannot become {to.value}", remedy="See `tercet status`")
+    return to
+
+
+Planned = tuple[Visit, int, int]  # visit, attempt, reason
+
+
+@dataclass(frozen=True, slots=True)
+class _Arrival:
+    """A move under way: when it should be over, and until when it may last."""
+
+    due_ns: int
+    limit_ns: int
+
+
+@dataclass(frozen=True, slots=True)
+class _Gate:
+    """An open gate: what it counts, since when, and where the axes stood when it opened."""
+
+    planned: Planned
+    open_ns: int
+    utc_ns: int
+    axes: Mapping[str, AxisState]
+
+
+def perform(
+    visits: Iterable[Planned], devices: Devices, sink: Sink, clock: Clock
+) -> Iterator[tuple[int, Reading]]:
+    """Yield (row, reading) for each visit, once the reading is durable.
+
+    Parameters
+    ----------
+    visits
+        (visit, attempt, reason) in order; the next one is asked for while the gate is open, so that whoever
+        supplies them may end the run there.
+
+    Raises
+    ------
+    DeviceError
+        When a device does not do what it was asked; the visit under way is lost, all committed ones are safe.
+    StorageError
+        When a reading could not be made durable.
+    """
+    upcoming = iter(visits)
+    planned = next(upcoming, None)
+    if planned is None:
+        return
+    arrival = _start_moves(planned[0], devices, clock)
+    sensed: dict[str, tuple[float, str, int]] = {}
+    while planned is not None:
+        gate = _open_gate(planned, arrival, devices, clock)
+        _sense(devices, clock, sensed)
+        following = next(upcoming, None)
+        _await_gate(gate, devices, clock)
+        closed = _axes(devices)
+        if following is not None:
+            arrival = _start_moves(following[0], devices, clock)
+        reading = _reading(gate, closed, devices.counter.read(), sensed, devices)
+        yield sink.commit(reading), reading
+        planned = following
+
+
+def _open_gate(planned: Planned, arrival: _Arrival, devices: Devices, clock: Clock) -> _Gate:
+    axes = _await_arrival(planned[0], arrival, devices, clock)
+    gate = _Gate(planned, clock.now_ns(), clock.utc_ns(), axes)
+    devices.counter.arm(planned[0].dwell_s)
+    return gate
+
+
+def _start_moves(visit: Visit, devices: Devices, clock: Clock) -> _Arrival:
+    """Start the moves to a visit; the detector stays where it is when it is there already."""
+    now_ns = clock.now_ns()
+    predicted_s = devices.mask.show(visit.opening)
+    if not math.isclose(devices.detector.state().position_mm, visit.position_mm, abs_tol=1e-6):
+        predicted_s = max(predicted_s, devices.detector.start(visit.position_mm))
+    due_ns = now_ns + round(predicted_s * 1e9)
+    return _Arrival(due_ns, due_ns + round((predicted_s + MOVE_GRACE_S) * 1e9))
+
+
+def _await_arrival(
+    visit: Visit, arrival: _Arrival, devices: Devices, clock: Clock
+) -> Mapping[str, AxisState]:
+    clock.sleep_until(arrival.due_ns)
+    axes = _axes(devices)
+    while any(axis.moving for axis in axes.values()):
+        if clock.now_ns() > arrival.limit_ns:
+            slow = next(name for name, axis in axes.items() if axis.moving)
+            raise DeviceError(
+                f"still moving {MOVE_GRACE_S:g} s after it should have arrived for visit {visit.number}",
+                where=f"axis {slow}",
+                remedy="Look at the stage, then resume",
+                kind="timeout",
+            )
+        clock.sleep_until(clock.now_ns() + POLL_NS)
+        axes = _axes(devices)
+    for name, axis in axes.items():
+        if axis.alarm or not axis.homed:
+            raise DeviceError(
+                axis.alarm or "lost its reference", where=f"axis {name}", remedy="Look at the stage"
+            )
+    return axes
+
+
+def _await_gate(gate: _Gate, devices: Devices, clock: Clock) -> None:
+    close_ns = gate.open_ns + round(gate.planned[0].dwell_s * 1e9)
+    clock.sleep_until(close_ns)
+    while devices.counter.busy():
+        if clock.now_ns() > close_ns + GATE_GRACE_S * 1e9:
+            raise DeviceError(
+                f"the gate is still open {GATE_GRACE_S:g} s after its end",
+                where=f"counter {devices.counter.name}",
+                remedy="Look at the counter, then resume",
+                kind="timeout",
+            )
+        clock.sleep_until(clock.now_ns() + POLL_NS)
+
+
+def _reading(
+    gate: _Gate,
+    closed: Mapping[str, AxisState],
+    counted: Counted,
+    sensed: Mapping[str, tuple[float, str, int]],
+    devices: Devices,
+) -> Reading:
+    visit, attempt, reason = gate.planned
+    return Reading(
+        visit=visit.number,
+        attempt=attempt,
+        opening=visit.opening,
+        position_mm=visit.position_mm,
+        dwell_s=visit.dwell_s,
+        gate_open_ns=gate.open_ns,
+        gate_close_ns=gate.open_ns + round(counted.live_s * 1e9),
+        utc_ns=gate.utc_ns,
+        live_s=counted.live_s,
+        values=counted.values,
+        values_var=counted.values_var,
+        repeats=counted.repeats,
+        slices=counted.slices,
+        encoder_mm={axis: (gate.axes[axis].encoder_mm, closed[axis].encoder_mm) for axis in gate.axes},
+        sensors=dict(sensed),
+        quality=_counter_quality(visit, counted)
+        | _axis_quality(gate, closed, devices)
+        | UNPLANNED_BITS[reason],
+        reason=reason,
+    )
+
+
+def _axes(devices: Devices) -> dict[str, AxisState]:
+    return {**devices.mask.state(), devices.detector.name: devices.detector.state()}
+
+
+def _sense(devices: Devices, clock: Clock, sensed: dict[str, tuple[float, str, int]]) -> None:
+    """Ask each sensor that is due; one that does not answer leaves its quantities out."""
+    for sensor in devices.sensors:
+        now_ns = clock.now_ns()
+        mine = [key for key in sensed if key.split(".")[0] == sensor.name]
+        if mine and now_ns - sensed[mine[0]][2] < sensor.every_s * 1e9:
+            continue
+        for key in mine:
+            del sensed[key]
+        try:
+            values = sensor.read()
+        except DeviceError:
+            continue
+        sensed.update(
+            {f"{sensor.name}.{key}": (value, unit, now_ns) for key, (value, unit) in values.items()}
+        )
+
+
+def _counter_quality(visit: Visit, counted: Counted) -> Quality:
+    quality = Quality.GOOD
+    if counted.overflow:
+        quality |= Quality.OVERFLOW
+    if counted.own_live_time:
+        quality |= Quality.OWN_LIVE_TIME
+    if abs(counted.live_s - visit.dwell_s) > 1e-3 * visit.dwell_s:
+        quality |= Quality.GATE_TIME
+    return quality
+
+
+def _axis_quality(gate: _Gate, closed: Mapping[str, AxisState], devices: Devices) -> Quality:
+    visit = gate.planned[0]
+    target = {**devices.mask.target_mm(visit.opening), devices.detector.name: visit.position_mm}
+    quality = Quality.GOOD
+    for axis, tolerance_mm in devices.tolerance_mm.items():
+        ends = (gate.axes[axis].encoder_mm, closed[axis].encoder_mm)
+        if max(abs(end - target[axis]) for end in ends) > tolerance_mm:
+            quality |= Quality.OFF_TARGET
+        if abs(ends[1] - ends[0]) > tolerance_mm:
+            quality |= Quality.MOVED
+    return quality
