@@ -55,7 +55,8 @@ class VirtualClock:
     kind = "virtual"
 
     def __init__(self, origin_utc_ns: int, start_ns: int = 0) -> None:
-        self.turn = threading.Condition(threading.RLock())  # hosts answer under it, one at a time
+        self.lock = threading.RLock()  # hosts answer under it, one at a time
+        self._turn = threading.Condition(self.lock)
         self._origin_utc_ns, self._now = origin_utc_ns, start_ns
         self._calls: list[tuple[int, int, Callable[[], None]]] = []
         self._order = itertools.count()
@@ -74,20 +75,20 @@ class VirtualClock:
 
     def sleep_until(self, at_ns: int) -> None:
         """Return when the run time has reached `at_ns`."""
-        self._wait(_never, at_ns)
+        self.wait(_never, at_ns)
 
     def event(self) -> Signal:
         """Return a new flag whose waiters pass virtual time."""
-        return _VirtualSignal(self.turn, self._wait)
+        return _VirtualSignal(self)
 
     def call_at(self, at_ns: int, function: Callable[[], None]) -> None:
         """Call a function, which must not wait, when time reaches `at_ns`; if past, at the next waiting."""
-        with self.turn:
+        with self.lock:
             heapq.heappush(self._calls, (at_ns, next(self._order), function))
 
     def wait_readable(self, connection: Connection, until_ns: int) -> bool:
         """Wait until bytes (or the end of the stream) can be read, at most until `until_ns`."""
-        return self._wait(cast(Readable, connection).readable, until_ns)
+        return self.wait(cast(Readable, connection).readable, until_ns)
 
     def connect(self, address: str, timeout_s: float) -> Connection:
         """Open a byte stream to the host that was published under an address, at once.
@@ -97,88 +98,104 @@ class VirtualClock:
         ConnectionRefusedError
             When nobody serves the address on this clock.
         """
-        with self.turn:
+        with self.lock:
             if address not in self._addresses:
                 raise ConnectionRefusedError(errno.ECONNREFUSED, f"nobody serves {address} on this clock")
             return self._addresses[address]()
 
     def publish(self, address: str, connect: Callable[[], Connection]) -> None:
         """Let `connect` find a host; raises OSError when the address is taken."""
-        with self.turn:
+        with self.lock:
             if address in self._addresses:
                 raise OSError(errno.EADDRINUSE, f"{address} is served already on this clock")
             self._addresses[address] = connect
 
     def withdraw(self, address: str) -> None:
         """Refuse further connections to an address."""
-        with self.turn:
+        with self.lock:
             self._addresses.pop(address, None)
 
     def register(self) -> Participant:
         """Return the share of a thread in the clock; time stands until that thread waits or leaves."""
-        with self.turn:
+        with self.lock:
             self._registered += 1
         return Participant(self._join, self._leave)
 
     def _join(self) -> None:
-        with self.turn:
+        with self.lock:
             self._members.add(threading.get_ident())
 
     def _leave(self) -> None:
-        with self.turn:
+        with self.lock:
             self._members.discard(threading.get_ident())
             self._registered -= 1
-            self.turn.notify_all()
+            self._turn.notify_all()
 
-    def _wait(self, ready: Callable[[], bool], until_ns: int) -> bool:
+    def wake(self) -> None:
+        """Let whoever waits look again; under the lock."""
+        if self._waits:
+            self._turn.notify_all()
+
+    def wait(self, ready: Callable[[], bool], until_ns: int) -> bool:
+        """Pass time until `ready`, at most until `until_ns`; return whether it is ready."""
+        if not self._calls and ready():
+            return True
         me = threading.get_ident()
         if self._caller == me:
             raise RuntimeError("a function given to call_at must not wait")
-        with self.turn:
+        with self.lock:
             self._run_due()
-            if ready() or until_ns <= self._now:
-                return ready()
             wait = _Wait(ready, until_ns, me in self._members)
             self._waits.append(wait)
             try:
-                while not wait.over(self._now):
-                    if self._all_wait():
-                        self._jump()
-                    else:
-                        self.turn.wait()
-                return ready()
+                return self._pass_time(wait)
             finally:
                 self._waits.remove(wait)
-                self.turn.notify_all()  # who still waits must look again whether time may go on
+                self.wake()  # who still waits must look again whether time may go on
+
+    def _pass_time(self, wait: _Wait) -> bool:
+        while not wait.over(self._now):
+            if self._all_wait():
+                self._jump()
+            else:
+                self._turn.wait()
+        return wait.ready()
 
     def _all_wait(self) -> bool:
-        if self._caller is not None or sum(wait.member for wait in self._waits) < self._registered:
-            return False
-        return not any(wait.over(self._now) for wait in self._waits)
+        members = 0
+        for wait in self._waits:
+            if wait.over(self._now):
+                return False
+            members += wait.member
+        return members >= self._registered and self._caller is None
 
     def _jump(self) -> None:
-        deadlines = [wait.until_ns for wait in self._waits]
-        if self._calls:
-            deadlines.append(self._calls[0][0])
-        self._now = min(deadlines)
+        until_ns = min([wait.until_ns for wait in self._waits])
+        self._now = min(until_ns, self._calls[0][0]) if self._calls else until_ns
         self._run_due()
-        self.turn.notify_all()
+        if len(self._waits) > 1:
+            self._turn.notify_all()
+
+    def _due(self) -> bool:
+        return bool(self._calls) and self._calls[0][0] <= self._now
 
     def _run_due(self) -> None:
         # Functions run without the lock: one that takes a link's write lock cannot lock the clock out.
-        while self._caller is None and self._calls and self._calls[0][0] <= self._now:
+        while self._caller is None and self._due():
             _, _, function = heapq.heappop(self._calls)
             self._caller = threading.get_ident()
-            self.turn.release()
+            self.lock.release()
             try:
                 function()
             finally:
-                self.turn.acquire()
+                self.lock.acquire()
                 self._caller = None
 
 
 class _Wait:
     """A thread that waits: for what, until when, and whether time stands without it."""
+
+    __slots__ = ("member", "ready", "until_ns")
 
     def __init__(self, ready: Callable[[], bool], until_ns: int, member: bool) -> None:
         self.ready, self.until_ns, self.member = ready, until_ns, member
@@ -190,14 +207,14 @@ class _Wait:
 class _VirtualSignal:
     """A flag on a virtual clock."""
 
-    def __init__(self, turn: threading.Condition, wait: Callable[[Callable[[], bool], int], bool]) -> None:
-        self._turn, self._wait = turn, wait
+    def __init__(self, clock: VirtualClock) -> None:
+        self._clock = clock
         self._up = False
 
     def set(self) -> None:
-        with self._turn:
+        with self._clock.lock:
             self._up = True
-            self._turn.notify_all()
+            self._clock.wake()
 
     def clear(self) -> None:
         self._up = False
@@ -206,7 +223,7 @@ class _VirtualSignal:
         return self._up
 
     def wait_until(self, at_ns: int) -> bool:
-        return self._wait(self.is_set, at_ns)
+        return self._clock.wait(self.is_set, at_ns)
 
 
 def _never() -> bool:

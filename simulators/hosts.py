@@ -84,59 +84,64 @@ class _Line:
     """One connection in process: the client's end, and the two things the host does with it."""
 
     def __init__(self, clock: VirtualClock, instrument: Instrument) -> None:
-        self._turn = clock.turn
-        self._inbox = bytearray()  # from the host, not yet read by the client
+        self._clock, self._lock = clock, clock.lock
+        self._inbox = bytearray()  # from the host, not yet on its way to the client
+        self._waiting = 0  # bytes that the client can read
         self._closed = False
         self.ended = False
         self._session = instrument.session(self.post)
 
     def send(self, data: bytes) -> None:
-        with self._turn:
+        with self._lock:
             self._refuse_when_closed()
             if self.ended:
                 raise BrokenPipeError(errno.EPIPE, "the host has gone")
-            self.post(self._session.feed(self._carry(data)))
+            self._put(self._session.feed(self._carry(data)))
 
     def recv(self, most: int) -> bytes:
-        with self._turn:
+        with self._lock:
             self._refuse_when_closed()
-            waiting = self._waiting()
-            if waiting:
-                return self._take(min(most, waiting))
+            if self._waiting:
+                return self._take(min(most, self._waiting))
             if self.ended:
                 return b""
             raise BlockingIOError(errno.EAGAIN, "nothing is waiting")
 
     def close(self) -> None:
-        with self._turn:
+        with self._lock:
             self._closed = True
             self.hang_up()
 
     def readable(self) -> bool:
-        return self.ended or self._waiting() > 0
+        return self._waiting > 0 or self.ended
 
     def post(self, data: bytes) -> None:
         """Send bytes to the client."""
-        with self._turn:
-            if data and not self.ended:
-                self._inbox += data
-                self._turn.notify_all()
+        with self._lock:
+            self._put(data)
 
     def hang_up(self) -> None:
         """End the connection from the host's side."""
-        with self._turn:
+        with self._lock:
             self.ended = True
-            self._turn.notify_all()
+            self._clock.wake()
+
+    def _put(self, data: bytes) -> None:
+        if data and not self.ended:
+            self._inbox += data
+            self._fill()
+            self._clock.wake()
 
     def _carry(self, data: bytes) -> bytes:
         return data
 
-    def _waiting(self) -> int:
-        return len(self._inbox)
+    def _fill(self) -> None:
+        self._waiting = len(self._inbox)
 
     def _take(self, size: int) -> bytes:
         taken = bytes(self._inbox[:size])
         del self._inbox[:size]
+        self._waiting -= size
         return taken
 
     def _refuse_when_closed(self) -> None:
@@ -149,42 +154,33 @@ class _TcpLine(_Line):
 
     def __init__(self, clock: VirtualClock, instrument: Instrument) -> None:
         self._client, self._server = _socket_pair()
-        self._on_wire = 0  # bytes written to the client's socket and not yet read from it
         super().__init__(clock, instrument)
 
-    def post(self, data: bytes) -> None:
-        with self._turn:
-            super().post(data)
-            self._fill()
-
     def hang_up(self) -> None:
-        with self._turn:
+        with self._lock:
             super().hang_up()
             self._server.close()
             if self._closed:
                 self._client.close()
 
-    def _fill(self) -> None:
-        piece = self._inbox[: _PIECE - self._on_wire]
-        if piece and not self.ended:
-            self._server.sendall(piece)
-            self._on_wire += len(piece)
-            del self._inbox[: len(piece)]
-
     def _carry(self, data: bytes) -> bytes:
-        arrived = bytearray()
+        arrived = b""
         for at in range(0, len(data), _PIECE):
             piece = data[at : at + _PIECE]
             self._client.sendall(piece)
             arrived += _read_exactly(self._server, len(piece))
-        return bytes(arrived)
+        return arrived
 
-    def _waiting(self) -> int:
-        return self._on_wire
+    def _fill(self) -> None:
+        piece = self._inbox[: _PIECE - self._waiting]
+        if piece and not self.ended:
+            self._server.sendall(piece)
+            self._waiting += len(piece)
+            del self._inbox[: len(piece)]
 
     def _take(self, size: int) -> bytes:
         taken = _read_exactly(self._client, size)
-        self._on_wire -= size
+        self._waiting -= size
         self._fill()
         return taken
 
