@@ -1,0 +1,1 @@
+"""The archive of a run: the only place that knows Zarr and SQLite."""

@@ -1,0 +1,278 @@
+"""A run's archive while it is written: created, gone on with after a break, finished."""
+
+from __future__ import annotations
+
+import fcntl
+import json
+import os
+import threading
+from collections.abc import Mapping
+from pathlib import Path
+from typing import TYPE_CHECKING, Any, Self
+
+import zarr
+
+from daq.errors import StorageError
+from daq.records import Reading
+from daq.storage.disk import Disk
+from daq.storage.journal import JOURNAL, Journal, create_journal, drop_journal, snapshot
+from daq.storage.layout import CHUNK, FORMAT, looked_up
+from daq.storage.reader import open_visits, planned_stands
+from daq.storage.rows import Rows
+from daq.storage.seal import ZARR, DurableStore, add_array, create_zarr, open_root, write_rows
+from daq.storage.sealer import Sealer
+from daq.storage.texts import write_texts
+from daq.storage.trouble import rim
+
+if TYPE_CHECKING:
+    from daq.itinerary.compose import Itinerary
+
+LOCK = "writer.lock"
+FINISHED = "finished"
+
+
+class Archive:
+    """The one writer of a run: a sink for readings that keeps the run's folder until it is closed."""
+
+    def __init__(self, folder: Path, lock: int, disk: Disk) -> None:
+        held = snapshot(folder)
+        if held is None:
+            raise _no_journal(folder)
+        self.folder, self.meta = folder, held.meta
+        self._disk, self._lock_file, self._open = disk, lock, True
+        self._form, self._chunk = Rows(held.meta), int(held.meta["chunk"])
+        self._stands = planned_stands(folder).tolist()
+        self._tries = _tries(folder, self._stands)
+        with rim(folder):
+            _drop_partial_files(folder)
+            self._journal = Journal(folder, self._form, held.sealed, held.sealed + len(held.rows))
+        self._mutex = threading.Lock()  # one transaction at a time on the one connection
+        self._sealer = Sealer(self._seal_next)
+        self._sealer.wake()
+
+    @property
+    def rows(self) -> int:
+        """The number of readings that are durable."""
+        return self._journal.rows
+
+    @property
+    def sealed(self) -> int:
+        """The number of readings that left the journal for the Zarr group."""
+        return self._journal.sealed
+
+    @property
+    def seal_error(self) -> StorageError | None:
+        """Why the last seal failed; the visits are safe in the journal meanwhile."""
+        return self._sealer.error
+
+    def commit(self, reading: Reading) -> int:
+        """Make a reading durable and return its row number.
+
+        Raises
+        ------
+        StorageError
+            When it could not be stored; all readings before it are safe, and a later commit may succeed.
+        """
+        flat = self._form.flat(reading)
+        with self._mutex:
+            row = self._journal.append(flat)
+        self._note_try(reading.visit, reading.attempt)
+        if (row + 1) % min(self._chunk, 64) == 0 and row + 1 - self._journal.sealed >= self._chunk:
+            self._sealer.wake()
+        return row
+
+    def append_events(self, chunk: bytes) -> None:
+        """Take list-mode events of the visit that is being counted."""
+        raise StorageError(
+            f"{len(chunk)} bytes of list-mode events cannot be stored: list mode is built later",
+            where=str(self.folder),
+            remedy="Run the counter in counting mode",
+        )
+
+    def stands_done(self) -> dict[int, int]:
+        """Return stand -> tries so far, for every stand with at least one reading."""
+        return dict(self._tries)
+
+    def finish(self, attributes: Mapping[str, Any]) -> None:
+        """Turn the archive into a plain Zarr group with the run's results as attributes, and close it."""
+        self._sealer.close()
+        with rim(self.folder):
+            while self._seal_next():
+                pass
+            self._write_rest({**self.meta, **plain(attributes), FINISHED: True})
+            self._journal.checkpoint()
+            self._journal.close()
+            drop_journal(self.folder)
+            self._disk.step("unlinked")
+            (self.folder / LOCK).unlink(missing_ok=True)
+            self._disk.sync_dir(self.folder)
+        self.close()
+
+    def close(self) -> None:
+        """Let the folder go; the run can be gone on with later."""
+        if self._open:
+            self._open = False
+            self._sealer.close()
+            self._journal.close()
+            os.close(self._lock_file)
+
+    def __enter__(self) -> Self:
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        self.close()
+
+    def _note_try(self, visit: int, attempt: int) -> None:
+        if 0 <= visit < len(self._stands):
+            stand = self._stands[visit]
+            self._tries[stand] = max(attempt, self._tries.get(stand, 0))
+
+    def _seal_next(self) -> bool:
+        first = self._journal.sealed
+        if self._journal.rows - first < self._chunk:
+            return False
+        held = snapshot(self.folder, first + self._chunk)
+        assert held is not None
+        with rim(self.folder / ZARR):
+            arrays = self._form.arrays(held.rows)
+            write_rows(open_root(self.folder, self._disk), arrays, first, arrays)
+        with self._mutex:
+            self._journal.forget(first + self._chunk)
+        self._disk.step("forgot")
+        return True
+
+    def _write_rest(self, attributes: Mapping[str, Any]) -> None:
+        dataset = open_visits(self.folder)
+        root = open_root(self.folder, self._disk)
+        first, arrays = self._journal.sealed, {}
+        for column in self._form.columns:
+            arrays[column.name] = dataset[column.name].values[first:]
+        write_rows(root, arrays, first, arrays)
+        for column in looked_up():
+            add_array(root, column, self._chunk)
+        names = [column.name for column in looked_up()]
+        write_rows(root, names, 0, {name: dataset[name].values for name in names})
+        root.update_attributes(dict(attributes))
+        store = root.store
+        assert isinstance(store, DurableStore)
+        zarr.consolidate_metadata(store)
+        store.sync()
+
+
+def create_run(
+    folder: Path,
+    *,
+    texts: Mapping[str, bytes],
+    itinerary: Itinerary,
+    meta: Mapping[str, Any],
+    chunk: int = CHUNK,
+    disk: Disk | None = None,
+) -> Archive:
+    """Return the archive of a new run in `folder`, which is made.
+
+    Parameters
+    ----------
+    folder
+        `lab/runs/<id>`; it must not hold a run already.
+    texts
+        File name in the folder -> contents, kept verbatim (description, rig, dialects).
+    itinerary
+        The planned visits, written to the group `itinerary/`.
+    meta
+        What the run is, JSON; kept as attributes of the Zarr group.
+    chunk
+        Visits sealed at once.
+    disk
+        A disk that a test watches.
+    """
+    disk = disk or Disk()
+    with rim(folder):
+        folder.mkdir(parents=True, exist_ok=True)
+        lock = _lock(folder)
+    try:
+        with rim(folder):
+            _refuse_second(folder)
+            digests = write_texts(folder, texts, disk)
+            whole = plain({**meta, "format": FORMAT, "chunk": chunk, "texts_sha256": digests})
+            create_zarr(folder, whole, itinerary, disk)
+            create_journal(folder, Rows(whole), whole)
+            disk.sync_dir(folder)
+            disk.sync_dir(folder.parent)
+        return Archive(folder, lock, disk)
+    except BaseException:
+        os.close(lock)
+        raise
+
+
+def open_run(folder: Path, *, disk: Disk | None = None) -> Archive:
+    """Return the archive of a run that was broken off, to go on with; no acknowledged visit is missing."""
+    if not folder.is_dir():
+        raise StorageError("there is no such run", where=str(folder), remedy="Check the path")
+    with rim(folder):
+        lock = _lock(folder)
+    try:
+        return Archive(folder, lock, disk or Disk())
+    except BaseException:
+        os.close(lock)
+        raise
+
+
+def plain(meta: Mapping[str, Any]) -> dict[str, Any]:
+    """Return a mapping as plain JSON values; numbers of numpy become numbers, and NaN is refused."""
+    done: dict[str, Any] = json.loads(json.dumps(dict(meta), default=_plain_value, allow_nan=False))
+    return done
+
+
+def _plain_value(value: Any) -> Any:
+    return value.tolist() if hasattr(value, "tolist") else str(value)
+
+
+def _lock(folder: Path) -> int:
+    handle = os.open(folder / LOCK, os.O_RDWR | os.O_CREAT | os.O_CLOEXEC, 0o644)
+    try:
+        fcntl.flock(handle, fcntl.LOCK_EX | fcntl.LOCK_NB)
+    except BlockingIOError:
+        os.close(handle)
+        raise StorageError(
+            "another process writes this run",
+            where=str(folder),
+            remedy="Wait until it has ended, or end it; two writers are never allowed",
+        ) from None
+    return handle
+
+
+def _refuse_second(folder: Path) -> None:
+    if (folder / JOURNAL).exists() or (folder / ZARR).exists():
+        raise StorageError(
+            "the folder holds a run already", where=str(folder), remedy="Choose another folder"
+        )
+
+
+def _no_journal(folder: Path) -> StorageError:
+    try:
+        attributes = zarr.open_group(folder / ZARR, mode="r").attrs.asdict()
+    except (OSError, ValueError):
+        attributes = {}
+    if attributes.get(FINISHED):
+        return StorageError("the run is finished", where=str(folder), remedy="Start a new run")
+    return StorageError(
+        "the run was broken off while its folder was being made, so it holds no visit",
+        where=str(folder),
+        remedy="Remove the folder and start the run again",
+    )
+
+
+def _tries(folder: Path, stands: list[int]) -> dict[int, int]:
+    dataset = open_visits(folder)
+    tries: dict[int, int] = {}
+    for visit, attempt in zip(
+        dataset["visit"].values.tolist(), dataset["attempt"].values.tolist(), strict=True
+    ):
+        if 0 <= visit < len(stands):
+            tries[stands[visit]] = max(attempt, tries.get(stands[visit], 0))
+    return tries
+
+
+def _drop_partial_files(folder: Path) -> None:
+    for path in (folder / ZARR).rglob("*.partial"):
+        path.unlink(missing_ok=True)

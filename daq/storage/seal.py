@@ -1,0 +1,106 @@
+"""Sealing: whole chunks of visits go from the journal into plain Zarr v3, durably, then leave the journal."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Mapping
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+import zarr
+from numcodecs import blosc
+from numpy.typing import NDArray
+from zarr.codecs import BloscCodec, Crc32cCodec
+from zarr.core.array_spec import ArrayConfigParams
+from zarr.core.buffer import Buffer
+from zarr.storage import LocalStore
+
+from daq.storage.disk import Disk, write_durably
+from daq.storage.layout import Column, columns, planned
+
+if TYPE_CHECKING:
+    from daq.itinerary.compose import Itinerary
+
+ZARR = "run.zarr"
+ITINERARY = "itinerary"
+blosc.use_threads = False  # a pool of threads for chunks of 32 kB costs more than it gives
+# A chunk of fill values is written too: then a file that is missing is damage.
+_CONFIG: ArrayConfigParams = {"write_empty_chunks": True}
+
+
+class DurableStore(LocalStore):
+    """A local store whose files are durable, and that knows which folders have names still to be synced."""
+
+    def __init__(self, root: Path, disk: Disk | None = None, *, read_only: bool = False) -> None:
+        super().__init__(root, read_only=read_only)
+        self.disk = disk or Disk()
+        self._unsynced: set[Path] = set()
+
+    async def set(self, key: str, value: Buffer) -> None:
+        """Write one key durably."""
+        path = self.root / key  # in the one thread of Zarr's event loop, so the set needs no lock
+        self._unsynced.update(folder for folder in path.parents if folder.is_relative_to(self.root))
+        self._unsynced.add(self.root.parent)
+        path.parent.mkdir(parents=True, exist_ok=True)
+        write_durably(self.disk, path, memoryview(value.as_buffer_like()))
+
+    def sync(self) -> None:
+        """Make the names of everything written since the last call durable, deepest folder first."""
+        for folder in sorted(self._unsynced, key=lambda path: -len(path.parts)):
+            self.disk.sync_dir(folder)
+        self._unsynced.clear()
+
+
+def create_zarr(folder: Path, meta: Mapping[str, Any], itinerary: Itinerary, disk: Disk) -> None:
+    """Write the Zarr group of a new run: its attributes, the planned itinerary, and arrays without rows."""
+    store = DurableStore(folder / ZARR, disk)
+    root = zarr.create_group(store, attributes=dict(meta))
+    for column in columns(meta):
+        add_array(root, column, int(meta["chunk"]))
+    group = root.create_group(ITINERARY)
+    for column in planned(int(meta["slits"]), itinerary.signs):
+        name = column.name.removeprefix("sign_")
+        values = itinerary.signs[name] if name != column.name else getattr(itinerary, name)
+        whole = np.asarray(values).astype(column.kind)
+        add_array(group, column, max(1, len(whole)), len(whole))[:] = whole
+    store.sync()
+
+
+def add_array(group: zarr.Group, column: Column, chunk: int, length: int = 0) -> zarr.Array[Any]:
+    """Return a new array of a group: core codecs, checksum on every chunk, unit and names."""
+    tail = (column.width,) if len(column.dims) > 1 else ()
+    return group.create_array(
+        column.name,
+        shape=(length, *tail),
+        chunks=(chunk, *tail),
+        dtype=column.kind,
+        fill_value=column.fill,
+        compressors=[BloscCodec(cname="zstd", clevel=3, shuffle="shuffle"), Crc32cCodec()],
+        dimension_names=column.dims,
+        attributes={"units": column.units, "long_name": column.long_name, **column.attributes},
+        config=_CONFIG,
+        overwrite=True,
+    )
+
+
+def open_root(folder: Path, disk: Disk) -> zarr.Group:
+    """Return the Zarr group of a run for writing; consolidated metadata count only when it is finished."""
+    return zarr.open_group(DurableStore(folder / ZARR, disk), mode="r+", use_consolidated=False)
+
+
+def write_rows(
+    root: zarr.Group, names: Iterable[str], first: int, arrays: Mapping[str, NDArray[Any]]
+) -> None:
+    """Write rows from `first` (the start of a chunk) on, and make them durable."""
+    for name in names:
+        array, rows = root[name], arrays[name]
+        assert isinstance(array, zarr.Array)
+        stop = first + len(rows)
+        if array.shape[0] != stop:
+            array.resize((stop, *array.shape[1:]))
+        array.with_config(_CONFIG)[first:stop] = rows
+    store = root.store
+    assert isinstance(store, DurableStore)
+    store.disk.step("chunks")
+    store.sync()
+    store.disk.step("synced")

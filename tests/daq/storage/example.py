@@ -1,0 +1,81 @@
+"""A small invented run for the tests of the archive: two slits, three positions, two channels."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import Any
+
+import numpy as np
+
+from daq.itinerary.compose import Itinerary
+from daq.records import Quality, Reading
+
+OPENINGS = (0, 1, 2, 3)
+POSITIONS_MM = (-1.5, 0.0, 1.5)
+META: Mapping[str, Any] = {
+    "run": "20261201T170000Z-small",
+    "name": "small",
+    "title": "Lantern bench, small",
+    "kind": "rehearsal",
+    "slits": 2,
+    "openings": list(OPENINGS),
+    "axes": ["mask", "detector"],
+    "sensors": {"room": "degC"},
+    "channels": 2,
+    "counting": "counts",
+    "weights": [1.0, 1.0, 1.0],
+    "signs": {"AB": [1.0, 1.0, -1.0]},
+}
+TEXTS = {"description.toml": b"schema = 1\n", "dialects/counter.toml": b"# \xc3\xa4\r\n"}
+
+
+def planned_visits(laps: int = 4) -> Itinerary:
+    """Return the itinerary of `laps` laps, twelve visits each."""
+    number = np.arange(12 * laps)
+    stand, lap = number // 4, number // 12
+    out_and_back = np.where(lap % 2 == 0, stand % 3, 2 - stand % 3)
+    return Itinerary(
+        opening=number % 4,
+        position_mm=np.array(POSITIONS_MM)[out_and_back],
+        start_s=np.float64(2.5) * number,
+        dwell_s=np.full(len(number), 2.0),
+        stand=stand,
+        lap=lap,
+        pair=lap // 2,
+        forward=lap // 2 % 2 == 0,
+        openings=np.array(OPENINGS),
+        positions_mm=np.array(POSITIONS_MM),
+        slits=2,
+        weights=np.ones(3),
+        signs={"AB": np.array([1.0, 1.0, -1.0])},
+        rates_hz=np.full((3, 4), 25_000.0),
+        order="zigzag",
+        seed=1,
+        total_s=30.0 * laps,
+    )
+
+
+def reading(visit: int, attempt: int = 1) -> Reading:
+    """Return what visit `visit` brings home: the same numbers every time it is asked."""
+    draw = np.random.default_rng([7, visit + 1, attempt])
+    plan = planned_visits(1 + visit // 12)
+    opened = 1_000_000_000 + 2_500_000_000 * visit
+    return Reading(
+        visit=visit,
+        attempt=attempt,
+        opening=int(plan.opening[visit]),
+        position_mm=float(plan.position_mm[visit]),
+        dwell_s=2.0,
+        gate_open_ns=opened,
+        gate_close_ns=opened + 2_000_000_123,
+        utc_ns=1_796_144_400_000_000_000 + opened,
+        live_s=2.0 + 1e-9 * float(draw.integers(1000)),
+        values=tuple(float(count) for count in draw.poisson(50_000, 2)),
+        encoder_mm={
+            "mask": (2.0 + float(draw.normal(0, 1e-3)), 2.0),
+            "detector": (-0.0, float(draw.normal())),
+        },
+        sensors={"room": (21.3 + float(draw.normal()), "degC", opened - 5)} if visit % 3 else {},
+        quality=Quality.OWN_LIVE_TIME if visit % 5 == 0 else Quality.GOOD,
+        reason=0,
+    )
