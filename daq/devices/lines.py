@@ -1,0 +1,116 @@
+"""Lines: a byte stream cut into lines, every wait with a deadline on the run clock."""
+
+from __future__ import annotations
+
+import logging
+
+from daq.errors import DeviceError
+from daq.ports import Clock, Connection
+
+log = logging.getLogger(__name__)
+
+CHECK = "Check power and cable of the device, then resume with `tercet resume`"
+
+_CHUNK = 65536
+
+
+class Lines:
+    """The bytes of one connection.
+
+    Parameters
+    ----------
+    clock
+        The run clock.
+    connection
+        The open stream.
+    end
+        What ends a line from the device.
+    most_bytes
+        No line is longer.
+    where
+        Device and address, for messages.
+    """
+
+    def __init__(self, clock: Clock, connection: Connection, end: bytes, most_bytes: int, where: str) -> None:
+        self._clock, self._connection, self._where = clock, connection, where
+        self._end, self._most_bytes = end, most_bytes
+        self.rest = b""  # came with the last line, behind its end
+
+    def send(self, data: bytes) -> None:
+        """Write all bytes at once; raises DeviceError "lost"."""
+        log.debug("%s < %r", self._where, data)
+        try:
+            self._connection.send(data)
+        except OSError as error:
+            raise self._lost(str(error)) from error
+
+    def close(self) -> None:
+        """Let the connection go."""
+        self._connection.close()
+
+    def line(self, until_ns: int, asked: str) -> str:
+        """Return the next line without its end; `asked` is what it answers, for the message.
+
+        Raises
+        ------
+        DeviceError
+            "timeout" when no whole line has come by `until_ns`, "garbage" for one that is too long or no
+            ASCII, "lost" at the end of the stream.
+        """
+        while self._end not in self.rest:
+            if len(self.rest) > self._most_bytes:
+                raise self._garbage(f"a reply without end to {asked!r}: {self.rest[:40]!r} ...")
+            if not self._clock.wait_readable(self._connection, until_ns):
+                raise self._timeout(asked)
+            self.rest += self._receive()
+        line, _, self.rest = self.rest.partition(self._end)
+        log.debug("%s > %r", self._where, line)
+        if len(line) > self._most_bytes or not line.isascii():
+            raise self._garbage(f"{line[:40]!r} in reply to {asked!r}")
+        return line.decode("ascii")
+
+    def waiting(self) -> bytes:
+        """Return, and so drop, what has come unasked, without waiting for more."""
+        dropped, self.rest = self.rest, b""
+        while data := self._receive():
+            dropped += data
+        return dropped
+
+    def drain(self, quiet_ns: int, most_ns: int) -> bytes:
+        """Return what comes, and so drop it, until nothing has come for `quiet_ns`.
+
+        Raises
+        ------
+        DeviceError
+            "garbage" when the device has not fallen silent after `most_ns`.
+        """
+        dropped, give_up_ns = self.waiting(), self._clock.now_ns() + most_ns
+        while self._clock.wait_readable(self._connection, self._clock.now_ns() + quiet_ns):
+            dropped += self.waiting()
+            if self._clock.now_ns() > give_up_ns:
+                raise self._garbage("the device does not fall silent")
+        return dropped
+
+    def _receive(self) -> bytes:
+        try:
+            data = self._connection.recv(_CHUNK)
+        except BlockingIOError:
+            return b""
+        except OSError as error:
+            raise self._lost(str(error)) from error
+        if not data:
+            raise self._lost("the device has closed the link")
+        return data
+
+    def _timeout(self, asked: str) -> DeviceError:
+        what = f"only {self.rest!r}" if self.rest else "nothing"
+        return DeviceError(
+            f"{what} came in reply to {asked!r} in time", where=self._where, remedy=CHECK, kind="timeout"
+        )
+
+    def _garbage(self, what: str) -> DeviceError:
+        remedy = "Check the line settings, the cable's shield and that the right device stands at the address"
+        return DeviceError(what, where=self._where, remedy=remedy, kind="garbage")
+
+    def _lost(self, what: str) -> DeviceError:
+        return DeviceError(f"link lost: {what}", where=self._where, remedy=CHECK, kind="lost")
