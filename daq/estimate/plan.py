@@ -1,0 +1,54 @@
+"""The plan: what the estimator knows of an itinerary."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+
+import numpy as np
+
+from daq.estimate.arrays import FloatArray, IntArray
+
+LAPS_PER_PAIR = 2
+
+
+@dataclass(frozen=True, slots=True)
+class Plan:
+    """What the estimator knows of an itinerary.
+
+    `openings` (K) bit masks in binary order; `positions_mm`, `weights` (J); `signs` "AB" -> (J) planned sign
+    of a pairwise term; `normalisation` "pairwise" or "central". The last four run over planned visits by
+    number: stand, pair (-1: in no complete pair), index into `positions_mm`, index into `openings`. A stand
+    shows every opening once, at one position.
+    """
+
+    slits: int
+    openings: IntArray
+    positions_mm: FloatArray
+    weights: FloatArray
+    signs: Mapping[str, FloatArray]
+    normalisation: str
+    dead_time_s: float
+    dead_time_kind: str
+    planned_pairs: int
+    stand: IntArray
+    pair: IntArray
+    position: IntArray
+    opening: IntArray
+    goal_se: float | None = None
+
+    @property
+    def stands_per_pair(self) -> int:
+        """How many stands a pair has: a lap over all positions, and its mirror."""
+        return LAPS_PER_PAIR * len(self.positions_mm)
+
+
+def stand_places(plan: Plan) -> tuple[IntArray, IntArray]:
+    """Return pair and position index of every stand, by stand number; -1 for a stand without a visit."""
+    stands = int(plan.stand.max(initial=-1)) + 1
+    pair = np.full(stands, -1, np.int64)
+    position = np.full(stands, -1, np.int64)
+    known = plan.stand >= 0
+    pair[plan.stand[known]] = plan.pair[known]
+    position[plan.stand[known]] = plan.position[known]
+    return pair, position
