@@ -210,7 +210,8 @@ class Devices:
     counter: Counter
     sensors: Sequence[Sensor] = ()
     shutter: Shutter | None = None
-    all: Sequence[Device] = field(default=())
+    stages: Sequence[Stage] = ()
+    all: Sequence[Device] = ()
     tolerance_mm: Mapping[str, float] = field(default_factory=dict)
 
 

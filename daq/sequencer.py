@@ -7,8 +7,7 @@ what is left of the move is waited for, the next gate opens.
 from __future__ import annotations
 
 import math
-from collections import defaultdict
-from collections.abc import Iterable, Iterator, Mapping
+from collections.abc import Callable, Iterable, Iterator, Mapping
 from dataclasses import dataclass
 from enum import Enum
 
@@ -19,7 +18,7 @@ from daq.records import Quality, Reading, Visit
 POLL_NS = 10_000_000
 MOVE_GRACE_S = 10.0
 GATE_GRACE_S = 5.0
-UNPLANNED_BITS = defaultdict(lambda: Quality.GOOD, {4: Quality.DARK, 5: Quality.FLANK})  # by reason
+UNPLANNED_BITS = {4: Quality.DARK, 5: Quality.FLANK}  # by reason (daq.records.REASONS)
 
 
 class State(Enum):
@@ -57,6 +56,7 @@ def step(state: State, to: State) -> State:
 
 
 Planned = tuple[Visit, int, int]  # visit, attempt, reason
+Sensed = dict[str, dict[str, tuple[float, str, int]]]  # sensor -> quantity -> value, unit, when
 
 
 @dataclass(frozen=True, slots=True)
@@ -78,7 +78,11 @@ class _Gate:
 
 
 def perform(
-    visits: Iterable[Planned], devices: Devices, sink: Sink, clock: Clock
+    visits: Iterable[Planned],
+    devices: Devices,
+    sink: Sink,
+    clock: Clock,
+    becomes: Callable[[State], None] = lambda state: None,
 ) -> Iterator[tuple[int, Reading]]:
     """Yield (row, reading) for each visit, once the reading is durable.
 
@@ -87,6 +91,8 @@ def perform(
     visits
         (visit, attempt, reason) in order; the next one is asked for while the gate is open, so that whoever
         supplies them may end the run there.
+    becomes
+        Told of every state that the run enters.
 
     Raises
     ------
@@ -99,15 +105,18 @@ def perform(
     planned = next(upcoming, None)
     if planned is None:
         return
+    becomes(State.MOVING)
     arrival = _start_moves(planned[0], devices, clock)
-    sensed: dict[str, tuple[float, str, int]] = {}
+    sensed: Sensed = {}
     while planned is not None:
         gate = _open_gate(planned, arrival, devices, clock)
+        becomes(State.COUNTING)
         _sense(devices, clock, sensed)
         following = next(upcoming, None)
         _await_gate(gate, devices, clock)
         closed = _axes(devices)
         if following is not None:
+            becomes(State.MOVING)
             arrival = _start_moves(following[0], devices, clock)
         reading = _reading(gate, closed, devices.counter.read(), sensed, devices)
         yield sink.commit(reading), reading
@@ -173,7 +182,7 @@ def _reading(
     gate: _Gate,
     closed: Mapping[str, AxisState],
     counted: Counted,
-    sensed: Mapping[str, tuple[float, str, int]],
+    sensed: Sensed,
     devices: Devices,
 ) -> Reading:
     visit, attempt, reason = gate.planned
@@ -192,10 +201,10 @@ def _reading(
         repeats=counted.repeats,
         slices=counted.slices,
         encoder_mm={axis: (gate.axes[axis].encoder_mm, closed[axis].encoder_mm) for axis in gate.axes},
-        sensors=dict(sensed),
+        sensors={key: value for values in sensed.values() for key, value in values.items()},
         quality=_counter_quality(visit, counted)
         | _axis_quality(gate, closed, devices)
-        | UNPLANNED_BITS[reason],
+        | UNPLANNED_BITS.get(reason, Quality.GOOD),
         reason=reason,
     )
 
@@ -204,22 +213,18 @@ def _axes(devices: Devices) -> dict[str, AxisState]:
     return {**devices.mask.state(), devices.detector.name: devices.detector.state()}
 
 
-def _sense(devices: Devices, clock: Clock, sensed: dict[str, tuple[float, str, int]]) -> None:
+def _sense(devices: Devices, clock: Clock, sensed: Sensed) -> None:
     """Ask each sensor that is due; one that does not answer leaves its quantities out."""
+    now_ns = clock.now_ns()
     for sensor in devices.sensors:
-        now_ns = clock.now_ns()
-        mine = [key for key in sensed if key.split(".")[0] == sensor.name]
-        if mine and now_ns - sensed[mine[0]][2] < sensor.every_s * 1e9:
+        last_ns = min((at_ns for _, _, at_ns in sensed.get(sensor.name, {}).values()), default=None)
+        if last_ns is not None and now_ns - last_ns < sensor.every_s * 1e9:
             continue
-        for key in mine:
-            del sensed[key]
         try:
             values = sensor.read()
         except DeviceError:
-            continue
-        sensed.update(
-            {f"{sensor.name}.{key}": (value, unit, now_ns) for key, (value, unit) in values.items()}
-        )
+            values = {}
+        sensed[sensor.name] = {f"{sensor.name}_{key}": (*pair, now_ns) for key, pair in values.items()}
 
 
 def _counter_quality(visit: Visit, counted: Counted) -> Quality:

@@ -89,6 +89,7 @@ class DeviceEntry(Table):
     timeout_s: Positive = 1.0
     every_s: Positive = 60.0
     readout_s: NotNegative = 0.0
+    channels: Annotated[int, Field(ge=1, le=64)] = 1
 
 
 class Rig(Table):

@@ -1,0 +1,7 @@
+"""`python -m daq`: the same as `tercet`."""
+
+import sys
+
+from daq.cli import main
+
+sys.exit(main())

@@ -1,0 +1,126 @@
+"""Commands that carry out a run: rehearse and run."""
+
+from __future__ import annotations
+
+import argparse
+import signal
+import sys
+import time
+from collections.abc import Callable, Iterator
+from contextlib import ExitStack, contextmanager
+from pathlib import Path
+from types import FrameType
+from typing import Any, TextIO
+
+from daq.cli.answer import Answer
+from daq.cli.plan import wishes
+from daq.errors import DescriptionError
+from daq.itinerary import Itinerary
+from daq.records import Reading
+from daq.report import lines, summary
+from daq.service.load import config_dir, load
+from daq.service.night import COMPLETE, Asked
+from daq.service.page import PageProcess, make_lab
+from daq.service.start import Wanted, begin, resume
+from daq.service.tell import Progress
+
+
+def rehearse(arguments: argparse.Namespace) -> Answer:
+    """Carry out a run on simulated hardware in virtual time."""
+    return _carry_out(arguments, arguments.link, arguments.file or config_dir() / "lantern.toml")
+
+
+def run(arguments: argparse.Namespace) -> Answer:
+    """Carry out a run on the real clock."""
+    if arguments.file is None and arguments.resume is None:
+        raise DescriptionError(("tercet run: name a measurement file, or a run with --resume.",))
+    return _carry_out(arguments, "", arguments.file)
+
+
+def _carry_out(arguments: argparse.Namespace, transport: str, file: Path) -> Answer:
+    loaded = None if arguments.resume else load(file, wishes(arguments))
+    lab = arguments.resume.resolve().parents[1] if arguments.resume else arguments.into
+    began_s = time.monotonic()
+    with ExitStack() as stack:
+        page = _page(stack, lab, sys.stderr if arguments.json else sys.stdout) if arguments.page else None
+        asked = stack.enter_context(_interrupts())
+        watch = _Watch()
+        wanted = Wanted(transport, getattr(arguments, "home", False), asked, watch.begins, watch.took)
+        folder, ended = begin(loaded, lab, wanted) if loaded else resume(arguments.resume, wanted)
+        watch.done()
+        figures = summary(folder)
+        wall_s = time.monotonic() - began_s
+        figures |= {"wall_s": wall_s, "speed_up": watch.run_s / watch.wall_s if watch.wall_s else None}
+        answer = Answer(0 if ended == COMPLETE else 1, figures, _told(figures, watch))
+        if page is not None and not arguments.json and sys.stdout.isatty():
+            print("\n".join(answer.lines))
+            answer = Answer(answer.status, figures)
+            _stay(page)
+    return answer
+
+
+class _Watch:
+    """What a terminal sees of a run, and how long it took."""
+
+    def __init__(self) -> None:
+        self._progress: Progress | None = None
+        self._began_s = self.wall_s = self.run_s = 0.0
+        self._first_ns: int | None = None
+
+    def begins(self, folder: Path, itinerary: Itinerary) -> None:
+        print(f"run: {folder}", file=sys.stderr)
+        self._progress = Progress(len(itinerary))
+        self._began_s = time.monotonic()
+
+    def took(self, reading: Reading) -> None:
+        if self._first_ns is None:
+            self._first_ns = reading.gate_open_ns
+        self.run_s = (reading.gate_close_ns - self._first_ns) / 1e9
+        if self._progress:
+            self._progress.took(reading)
+
+    def done(self) -> None:
+        self.wall_s = time.monotonic() - self._began_s
+        if self._progress:
+            self._progress.done()
+
+
+def _told(figures: dict[str, Any], watch: _Watch) -> list[str]:
+    faster = f", {figures['speed_up']:.0f} times as fast as the real clock" if figures["speed_up"] else ""
+    return [*lines(figures), f"took {watch.wall_s:.1f} s{faster}"]
+
+
+def _page(stack: ExitStack, lab: Path, stream: TextIO) -> PageProcess:
+    make_lab(lab)
+    page = stack.enter_context(PageProcess(lab))
+    print(f"page: {page.address}", file=stream, flush=True)
+    return page
+
+
+def _stay(page: PageProcess) -> None:
+    print(f"The page stays at {page.address} until Ctrl-C.")
+    try:
+        page.wait()
+    except KeyboardInterrupt:
+        print()
+
+
+@contextmanager
+def _interrupts() -> Iterator[Asked]:
+    """Ctrl-C once: end after this stand; twice, or SIGTERM: stop and park."""
+    asked = Asked()
+
+    def interrupted(number: int, frame: FrameType | None) -> None:
+        if asked.end or number == signal.SIGTERM:
+            raise KeyboardInterrupt
+        asked.end = True
+        print("\nending after this stand; Ctrl-C again stops at once", file=sys.stderr)
+
+    before: dict[int, Callable[..., Any] | int | None] = {
+        number: signal.signal(number, interrupted) for number in (signal.SIGINT, signal.SIGTERM)
+    }
+    try:
+        yield asked
+    finally:
+        for number, handler in before.items():
+            signal.signal(number, handler)

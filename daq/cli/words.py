@@ -1,0 +1,130 @@
+"""The words of the command line: commands, options, and an example for each."""
+
+from __future__ import annotations
+
+import argparse
+from collections.abc import Callable
+from importlib import import_module
+from pathlib import Path
+from typing import Any
+
+from daq.cli.answer import Answer
+
+ABOUT = """Plans and runs multi-mask interference scans, loses no count, and gives a residual that can be
+defended.
+
+The software holds and stops here are requests over data links. They are no safety functions."""
+
+
+def parser() -> argparse.ArgumentParser:
+    """Return the parser of the whole command line."""
+    whole = argparse.ArgumentParser(
+        prog="tercet",
+        description=ABOUT,
+        formatter_class=argparse.RawDescriptionHelpFormatter,
+        epilog="example: tercet rehearse --page    a whole simulated night with the live page",
+    )
+    commands = whole.add_subparsers(title="commands", required=True, metavar="COMMAND")
+    _plan_words(commands)
+    _night_words(commands)
+    _after_words(commands)
+    return whole
+
+
+def _plan_words(commands: Any) -> None:
+    check = _add(
+        commands,
+        "check",
+        "plan:check",
+        "read a description and list every problem",
+        "tercet check lantern.toml",
+    )
+    check.add_argument("file", type=Path, metavar="FILE", help="a measurement or a rig (TOML)")
+    compose = _add(
+        commands,
+        "compose",
+        "plan:plan",
+        "print the itinerary's figures and forecast",
+        "tercet compose lantern.toml --hours 8",
+    )
+    compose.add_argument("file", type=Path, metavar="FILE", help="a measurement (TOML)")
+    _wishes(compose)
+
+
+def _night_words(commands: Any) -> None:
+    rehearse = _add(
+        commands,
+        "rehearse",
+        "night:rehearse",
+        "carry out a whole run on simulated hardware in virtual time",
+        "tercet rehearse --hours 2 --seed 7 --page",
+    )
+    rehearse.add_argument(
+        "file", type=Path, nargs="?", metavar="FILE", help="a measurement; the Lantern night when left out"
+    )
+    _wishes(rehearse)
+    rehearse.add_argument(
+        "--link", choices=("tcp", "direct"), default="tcp", help="how instruments are reached (tcp)"
+    )
+    _folders(rehearse)
+    rehearse.add_argument(
+        "--page", action="store_true", help="show the live page; on a terminal it stays until Ctrl-C"
+    )
+    run = _add(
+        commands,
+        "run",
+        "night:run",
+        "start a run now, in the foreground, on the real clock",
+        "tercet run lantern.toml --into lab",
+    )
+    run.add_argument("file", type=Path, nargs="?", metavar="FILE", help="a measurement (TOML)")
+    _wishes(run)
+    _folders(run)
+    run.add_argument(
+        "--home", action="store_true", help="home axes that lost their reference (look at the bench first)"
+    )
+    run.add_argument("--page", action="store_true", help="show the live page while the run goes on")
+
+
+def _after_words(commands: Any) -> None:
+    report = _add(
+        commands,
+        "report",
+        "after:report",
+        "print the report of a run",
+        "tercet report lab/runs/20261201T170000Z-lantern",
+    )
+    report.add_argument("run", type=Path, metavar="RUN", help="a run folder")
+
+
+def _add(commands: Any, name: str, target: str, text: str, example: str) -> argparse.ArgumentParser:
+    one: argparse.ArgumentParser = commands.add_parser(
+        name, help=text, description=f"{text[:1].upper()}{text[1:]}.", epilog=f"example: {example}"
+    )
+    one.add_argument("--json", action="store_true", help="print one JSON object last on standard output")
+    one.set_defaults(command=_later(target))
+    return one
+
+
+def _later(target: str) -> Callable[[argparse.Namespace], Answer]:
+    """Return a command whose module is imported when it is carried out."""
+    module, _, function = target.partition(":")
+
+    def command(arguments: argparse.Namespace) -> Answer:
+        answer: Answer = getattr(import_module(f"daq.cli.{module}"), function)(arguments)
+        return answer
+
+    return command
+
+
+def _wishes(one: argparse.ArgumentParser) -> None:
+    one.add_argument("--hours", type=float, help="length in hours, rounded down to whole pairs of laps")
+    one.add_argument("--seed", type=int, help="one seed for the order and for the simulated bench")
+    one.add_argument("--order", choices=("zigzag", "blocked"), help="another order than the description's")
+
+
+def _folders(one: argparse.ArgumentParser) -> None:
+    one.add_argument("--into", type=Path, default=Path("lab"), metavar="LAB", help="lab folder (./lab)")
+    one.add_argument(
+        "--resume", type=Path, metavar="RUN", help="go on with an interrupted run, after its last count"
+    )

@@ -1,0 +1,62 @@
+"""Summary: the figures of a run as one JSON object, from its archive alone."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import xarray as xr
+
+from daq.estimate import estimate_run
+from daq.storage import digest, gate_digest, open_visits, read_meta
+
+
+def summary(folder: Path) -> dict[str, Any]:
+    """Return visits done and lost, the residual with its bars, truth and digest; None where undefined.
+
+    Raises
+    ------
+    StorageError
+        When the archive cannot be read.
+    """
+    meta = read_meta(folder)
+    visits = open_visits(folder)
+    estimate = estimate_run(visits)
+    return {
+        "run": str(folder),
+        "name": meta["run"],
+        "title": meta["title"],
+        "kind": meta["kind"],
+        "finished": bool(meta.get("finished", False)),
+        **_tally(visits),
+        **_live(visits),
+        **estimate.to_json(),
+        "truth_kappa": meta.get("truth_kappa"),
+        "ended": meta.get("ended"),
+        "digest": digest(visits),
+        "gate_digest": gate_digest(visits),
+    }
+
+
+def _tally(visits: xr.Dataset) -> dict[str, int]:
+    """Return how many visits were done, repeated and lost."""
+    number, attempt = visits["visit"].values, visits["attempt"].values
+    planned = number >= 0
+    done = np.unique(number[planned])
+    return {
+        "visits": int(number.size),
+        "visits_planned": int(visits.attrs["visits_planned"]),
+        "visits_done": int(done.size),
+        "visits_repeated": int((planned & (attempt > 1)).sum()),
+        "visits_not_used": int((planned & ~visits["use"].values.astype(bool)).sum()),
+        "visits_missing": int(visits.attrs["visits_planned"]) - int(done.size),
+    }
+
+
+def _live(visits: xr.Dataset) -> dict[str, float | None]:
+    if visits.sizes["row"] == 0:
+        return {"live_s": 0.0, "run_s": 0.0, "live_fraction": None}
+    live_s = float(visits["live_s"].values.sum())
+    run_s = float(visits["gate_close_ns"].values.max() - visits["gate_open_ns"].values.min()) / 1e9
+    return {"live_s": live_s, "run_s": run_s, "live_fraction": live_s / run_s}

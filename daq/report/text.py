@@ -1,0 +1,85 @@
+"""The report as text: what a person reads first in the morning."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import Any
+
+MINUS = "−"
+
+
+def lines(figures: Mapping[str, Any]) -> list[str]:
+    """Return the report of a run as lines of text; what is not known is left out or said.
+
+    Parameters
+    ----------
+    figures
+        What `summary` gave.
+    """
+    return [*_head(figures), "", *_residual(figures), "", *_visits(figures), "", *_archive(figures)]
+
+
+def _head(figures: Mapping[str, Any]) -> list[str]:
+    kind = {"rehearsal": "A rehearsal on simulated hardware.", "replay": "A replay of an archived run."}
+    title = figures["title"] or figures["name"]
+    return [f"{title} ({figures['name']})", *([kind[figures["kind"]]] if figures["kind"] in kind else [])]
+
+
+def _residual(figures: Mapping[str, Any]) -> list[str]:
+    if figures["kappa_se"] is None:
+        return [
+            f"No residual yet: {figures['pairs']} complete pairs of laps, two are needed for an error bar.",
+        ]
+    if not figures["printable"]:
+        return [
+            "The pairwise terms are too small to divide by: the plain residual is given instead of kappa.",
+            f"epsilon = {_signed(figures['epsilon'])} ± {figures['epsilon_se']:.3g} per second",
+        ]
+    found = [
+        f"kappa = {_signed(figures['kappa'])} ± {figures['kappa_se']:.2e} "
+        f"(jackknife over {figures['pairs']} pairs; {figures['normalisation']} normalisation)",
+        f"95 % interval, if read once at the planned end: {_interval(figures['interval_95'])}",
+        f"95 % over the whole night, whatever you do:     {_interval(figures['whole_night_95'])}",
+        f"counting alone would give ± {figures['kappa_counting_se']:.2e}; "
+        f"excess {figures['excess']:.2f} ± {figures['excess_se']:.2f}",
+        _zero(figures["interval_95"]),
+    ]
+    if figures["truth_kappa"] is not None:
+        off = (figures["kappa"] - figures["truth_kappa"]) / figures["kappa_se"]
+        found.append(
+            f"simulated truth {_signed(figures['truth_kappa'])}: off by {_number(off, '.2f')} standard errors"
+        )
+    return found
+
+
+def _visits(figures: Mapping[str, Any]) -> list[str]:
+    share = figures["live_fraction"]
+    live = f", {100 * share:.1f} % of the time live" if share is not None else ""
+    return [
+        f"{figures['visits_done']} of {figures['visits_planned']} visits done, "
+        f"{figures['visits_missing']} missing, {figures['visits_repeated']} repeated",
+        f"{figures['stands_left_out']} stands left out, {figures['visits_not_used']} visits not used",
+        f"{figures['run_s'] / 3600:.2f} h from first to last gate{live}",
+        *([f"ended: {figures['ended']}"] if figures["ended"] else []),
+    ]
+
+
+def _archive(figures: Mapping[str, Any]) -> list[str]:
+    return [f"archive {figures['run']}", f"digest  {figures['digest']}"]
+
+
+def _signed(value: float) -> str:
+    return _number(value, "+.3e")
+
+
+def _number(value: float, form: str) -> str:
+    return format(value, form).replace("-", MINUS, 1) if value < 0 else format(value, form)
+
+
+def _interval(interval: tuple[float, float] | None) -> str:
+    return "not yet" if interval is None else f"{_signed(interval[0])} to {_signed(interval[1])}"
+
+
+def _zero(interval: tuple[float, float]) -> str:
+    inside = interval[0] <= 0 <= interval[1]
+    return f"zero lies {'inside' if inside else 'outside'} the 95 % interval"

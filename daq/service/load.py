@@ -1,0 +1,152 @@
+"""Loading: description files from disk, with the command line's own wishes laid over them."""
+
+from __future__ import annotations
+
+import tomllib
+from collections.abc import Mapping
+from dataclasses import dataclass
+from hashlib import sha256
+from importlib import resources
+from pathlib import Path
+from typing import Any
+
+from daq.description import Measurement, Rig, joint_problems, parse
+from daq.errors import DescriptionError
+from daq.itinerary import Itinerary, compose
+
+DESCRIPTION, RIG = "description.toml", "rig.toml"
+
+
+@dataclass(frozen=True, slots=True)
+class Loaded:
+    """A measurement and its rig, their files verbatim, and what the command line changed."""
+
+    measurement: Measurement
+    rig: Rig
+    texts: Mapping[str, bytes]
+    wishes: Wishes
+
+    def itinerary(self) -> Itinerary:
+        """Return the composed itinerary."""
+        return compose(self.measurement, self.rig)
+
+    @property
+    def bench_seed(self) -> int | None:
+        """The seed of the simulated bench that the command line asked for, if any."""
+        return None if self.wishes.seed is None else derived_seed("bench", self.wishes.seed)
+
+
+@dataclass(frozen=True, slots=True)
+class Wishes:
+    """What the command line changes of a description: hours (whole pairs), one seed for all, the order."""
+
+    hours: float | None = None
+    seed: int | None = None
+    order: str | None = None
+
+    def laid_over(self, table: Mapping[str, Any]) -> dict[str, Any]:
+        """Return the measurement table with seed and order changed."""
+        changed = dict(table)
+        inner = dict(table.get("itinerary", {})) if isinstance(table.get("itinerary", {}), Mapping) else {}
+        if self.seed is not None:
+            inner["seed"] = derived_seed("itinerary", self.seed)
+        if self.order is not None:
+            inner["order"] = self.order
+        return changed | ({"itinerary": inner} if inner else {})
+
+
+NO_WISHES = Wishes()
+
+
+def derived_seed(tag: str, seed: int) -> int:
+    """Return the seed of one part of the program from the one seed of the command line."""
+    return int.from_bytes(sha256(f"tercet:{tag}:{seed}".encode()).digest()[:7], "big")
+
+
+def config_dir() -> Path:
+    """Return the folder of the example descriptions: in the wheel, or in the source tree."""
+    packaged = Path(str(resources.files("daq"))) / "configs"
+    return packaged if packaged.is_dir() else Path(str(resources.files("daq"))).parent / "configs"
+
+
+def load(path: Path, wishes: Wishes = NO_WISHES) -> Loaded:
+    """Return a measurement and its rig from their files.
+
+    Raises
+    ------
+    DescriptionError
+        With every problem of both files at once.
+    """
+    text = _read(path)
+    table = _toml(text, path)
+    rig_name = table.get("rig")
+    rig_path = path.parent / rig_name if isinstance(rig_name, str) else None
+    return _loaded(table, text, path, rig_path, wishes)
+
+
+def load_run(folder: Path, wishes: Wishes) -> Loaded:
+    """Return the description that a run folder holds verbatim, with the wishes it was started with."""
+    path = folder / DESCRIPTION
+    text = _read(path)
+    return _loaded(_toml(text, path), text, path, folder / RIG, wishes)
+
+
+def _loaded(table: dict[str, Any], text: bytes, path: Path, rig_path: Path | None, wishes: Wishes) -> Loaded:
+    problems: list[str] = []
+    measurement: Measurement | None = None
+    rig: Rig | None = None
+    rig_text = b""
+    try:
+        measurement = parse(wishes.laid_over(table), str(path), "measurement")
+    except DescriptionError as error:
+        problems += error.problems
+    try:
+        if rig_path is not None:
+            rig_text = _read(rig_path)
+            rig = parse(_toml(rig_text, rig_path), str(rig_path), "rig")
+    except DescriptionError as error:
+        problems += error.problems
+    if measurement and rig:
+        problems += joint_problems(measurement, rig, str(path))
+    if problems or not measurement or not rig:
+        raise DescriptionError(tuple(problems))
+    texts = {DESCRIPTION: text, RIG: rig_text}
+    return Loaded(_in_hours(measurement, rig, wishes, path), rig, texts, wishes)
+
+
+def _in_hours(measurement: Measurement, rig: Rig, wishes: Wishes, path: Path) -> Measurement:
+    """Return the measurement with as many whole pairs as fit into the hours wished for."""
+    if wishes.hours is None:
+        return measurement
+    one_pair_s = compose(_with_laps(measurement, 2), rig).total_s
+    pairs = int(wishes.hours * 3600 // one_pair_s)
+    while pairs and compose(_with_laps(measurement, 2 * pairs), rig).total_s > wishes.hours * 3600:
+        pairs -= 1
+    if pairs < 1:
+        raise DescriptionError(
+            (
+                f"{path}: {wishes.hours:g} h is shorter than one pair of laps, {one_pair_s / 3600:.2f} h. "
+                "Give more hours, or fewer positions, or a shorter dwell.",
+            )
+        )
+    return _with_laps(measurement, 2 * pairs)
+
+
+def _with_laps(measurement: Measurement, laps: int) -> Measurement:
+    order = measurement.itinerary.model_copy(update={"laps": laps})
+    return measurement.model_copy(update={"itinerary": order})
+
+
+def _read(path: Path) -> bytes:
+    try:
+        return path.read_bytes()
+    except OSError as error:
+        reason = error.strerror or "cannot be read"
+        raise DescriptionError((f"{path}: {reason.lower()}. Name a readable file.",)) from error
+
+
+def _toml(text: bytes, path: Path) -> dict[str, Any]:
+    try:
+        return tomllib.loads(text.decode())
+    except (UnicodeDecodeError, tomllib.TOMLDecodeError) as error:
+        raise DescriptionError((f"{path}: not a TOML file: {error}. Mend it there.",)) from error

@@ -1,0 +1,172 @@
+"""A night: visits performed, faults reacted to, every reading archived, watched and told."""
+
+from __future__ import annotations
+
+import logging
+from collections.abc import Callable, Iterator
+from dataclasses import dataclass, field
+from pathlib import Path
+from typing import Any
+
+from daq.errors import DeviceError
+from daq.estimate import Running
+from daq.itinerary import Itinerary
+from daq.openings import NONE, mask
+from daq.ports import Bench, Clock, Devices
+from daq.reactions import Action, reaction
+from daq.records import Reading
+from daq.sequencer import State, perform, step
+from daq.service.groups import AFTER_FAULT, Place, repeat_from, supply
+from daq.service.live import Live
+from daq.storage import Archive, RunLog
+
+log = logging.getLogger(__name__)
+
+COMPLETE, AT_REQUEST, STOPPED = "complete", "ended at request after a stand", "stopped at request"
+
+
+@dataclass(slots=True)
+class Asked:
+    """What an operator has asked for since the run began: end after this stand."""
+
+    end: bool = False
+
+
+@dataclass(slots=True)
+class Night:
+    """Everything one run holds while it is under way."""
+
+    folder: Path
+    itinerary: Itinerary
+    archive: Archive
+    clock: Clock
+    devices: Devices
+    running: Running
+    live: Live
+    log: RunLog
+    asked: Asked
+    bench: Bench | None = None
+    state: State = State.READY
+    on_visit: Callable[[Reading], None] = field(default=lambda reading: None)
+
+    def become(self, state: State) -> None:
+        """Take a step of the table of states."""
+        if state is not self.state:
+            self.state = step(self.state, state)
+
+
+def carry_out(night: Night, place: Place) -> str:
+    """Perform a run from a place to its end and return how it ended.
+
+    Raises
+    ------
+    DeviceError
+        When a fault could not be cured within the limits of the table; the run can be resumed.
+    StorageError
+        When a reading could not be stored; all before it are safe.
+    """
+    _tell(night, "run goes on" if place.number else "run begins", visit=place.number)
+    tries, good_ns = 0, night.clock.now_ns()
+    while True:
+        last: Reading | None = None
+        try:
+            for reading in _readings(night, place):
+                last, tries, good_ns = reading, 0, night.clock.now_ns()
+            night.become(State.PARKING)
+            return AT_REQUEST if night.asked.end else COMPLETE
+        except DeviceError as error:
+            _tell(night, "fault", text=str(error), kind=error.kind)
+            action, wait_s = reaction(error.kind, tries, (night.clock.now_ns() - good_ns) / 1e9)
+            if action is Action.PARK:
+                night.become(State.PARKING)
+                raise
+            place = _place_after_fault(night, place, last)
+            tries += 1
+            _recover(night, action, wait_s)
+
+
+def _readings(night: Night, place: Place) -> Iterator[Reading]:
+    visits = supply(night.itinerary, place, lambda: not night.asked.end)
+    for _, reading in perform(visits, night.devices, night.archive, night.clock, night.become):
+        night.running.add(reading)
+        night.live.took(reading)
+        night.on_visit(reading)
+        if _ends_stand(night.itinerary, reading.visit):
+            _keep_bench(night)
+        night.live.write(night.state.value, night.running)
+        yield reading
+
+
+def _ends_stand(itinerary: Itinerary, number: int) -> bool:
+    last = number + 1 == len(itinerary)
+    return last or itinerary.stand[number + 1] != itinerary.stand[number]
+
+
+def _place_after_fault(night: Night, place: Place, last: Reading | None) -> Place:
+    """Return the stand to repeat: the one that the visit after the last good one belongs to."""
+    if last is None:
+        return Place(place.number, place.attempt + 1, AFTER_FAULT)
+    if _ends_stand(night.itinerary, last.visit):
+        return Place(last.visit + 1, 2, AFTER_FAULT)
+    return repeat_from(night.itinerary, last.visit, last.attempt, AFTER_FAULT)
+
+
+def _recover(night: Night, action: Action, wait_s: float) -> None:
+    """Wait, and open the links again when the fault asks for it; a failure shows at the next try."""
+    night.become(State.HOLDING)
+    night.live.write(night.state.value, night.running, now=True)
+    night.clock.sleep_until(night.clock.now_ns() + round(wait_s * 1e9))
+    if action is not Action.RECONNECT:
+        return
+    for device in night.devices.all:
+        device.close()
+        try:
+            device.open()
+        except DeviceError as error:
+            log.warning("%s", error)
+
+
+def park(night: Night) -> None:
+    """Show no slit and let the detector rest; a device that does not answer is only told of."""
+    if night.state is not State.ENDED:
+        night.state = State.PARKING
+    try:
+        predicted_s = night.devices.mask.show(mask(NONE))
+        night.clock.sleep_until(night.clock.now_ns() + round(predicted_s * 1e9))
+    except DeviceError as error:
+        _tell(night, "could not park", text=str(error))
+
+
+def stop_now(night: Night) -> None:
+    """Ask every axis to stop and the counter to forget its gate: requests over data links, no more."""
+    for act in (night.devices.mask.stop_now, night.devices.detector.stop_now, night.devices.counter.abort):
+        try:
+            act()
+        except DeviceError as error:
+            log.warning("%s", error)
+
+
+def _keep_bench(night: Night) -> None:
+    if night.bench is not None:
+        keep_beside(night.folder, night.bench.keep())
+
+
+BENCH_FILE = "bench.json"
+
+
+def keep_beside(folder: Path, state: bytes) -> None:
+    """Replace the side file of a simulated bench."""
+    fresh = folder / (BENCH_FILE + ".new")
+    fresh.write_bytes(state)
+    fresh.replace(folder / BENCH_FILE)
+
+
+def _tell(night: Night, event: str, **fields: Any) -> None:
+    night.log.append(event, run_ns=night.clock.now_ns(), **fields)
+    night.live.say(fields.get("text") or _sentence(event, fields))
+    log.info("%s %s", event, fields)
+
+
+def _sentence(event: str, fields: dict[str, Any]) -> str:
+    text = event[:1].upper() + event[1:]
+    return f"{text} at visit {fields['visit']}." if "visit" in fields else f"{text}."

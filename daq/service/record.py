@@ -1,0 +1,67 @@
+"""The record: what the archive of a run says of it besides the counts."""
+
+from __future__ import annotations
+
+from dataclasses import asdict
+from importlib.metadata import version
+from typing import Any
+
+import numpy as np
+
+from daq import openings
+from daq.estimate import kappa
+from daq.itinerary import Itinerary
+from daq.ports import Bench, Clock, Devices
+from daq.service.live import stamp
+from daq.service.load import Loaded
+
+
+def record_of(
+    loaded: Loaded, itinerary: Itinerary, clock: Clock, devices: Devices, bench: Bench | None
+) -> dict[str, Any]:
+    """Return the attributes of a new run: set-up, settings, devices, seeds, software; JSON only."""
+    measurement, rig = loaded.measurement, loaded.rig
+    settings = measurement.estimate
+    return {
+        "name": measurement.name,
+        "title": measurement.title,
+        "kind": "rehearsal" if bench else "run",
+        "clock": clock.kind,
+        "slits": itinerary.slits,
+        "openings": itinerary.openings.tolist(),
+        "axes": [rig.mask.axis, rig.detector.axis],
+        "sensors": _sensors(devices),
+        "channels": max(entry.channels for entry in rig.devices.values()),
+        "counting": "counts",
+        "weights": itinerary.weights.tolist(),
+        "signs": {name: signs.tolist() for name, signs in itinerary.signs.items()},
+        "normalisation": settings.normalisation,
+        "dead_time_s": settings.dead_time_s,
+        "dead_time_kind": settings.dead_time_kind,
+        "planned_pairs": itinerary.planned_pairs,
+        "visits_planned": len(itinerary),
+        "order": itinerary.order,
+        "seed": itinerary.seed,
+        "goal_se": settings.goal_se,
+        "blinding": "open",
+        "software": f"tercet {version('tercet')}",
+        "identities": {device.name: device.identity() for device in devices.all},
+        "started_utc": stamp(clock.utc_ns()),
+        "wishes": asdict(loaded.wishes),
+        "truth_kappa": None if bench is None else _truth(bench, itinerary, settings.normalisation),
+    }
+
+
+def _sensors(devices: Devices) -> dict[str, str]:
+    return {
+        f"{sensor.name}_{key}": unit for sensor in devices.sensors for key, (_, unit) in sensor.read().items()
+    }
+
+
+def _truth(bench: Bench, itinerary: Itinerary, normalisation: str) -> float:
+    """Return kappa of the noise-free rates under the run's own weights."""
+    masks = itinerary.openings.tolist()
+    rates = np.asarray(bench.true_rates_hz(masks, itinerary.positions_mm.tolist()))
+    named = {openings.name(mask): rates[:, column] for column, mask in enumerate(masks)}
+    value, _ = kappa(named, named, itinerary.weights, signs=itinerary.signs, normalisation=normalisation)
+    return float(value)

@@ -1,0 +1,176 @@
+"""Starting: a run, a rehearsal, or one that goes on after a break; what all of them share."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from contextlib import ExitStack
+from dataclasses import dataclass, field
+from pathlib import Path
+
+import xarray as xr
+
+from daq.devices import RealClock, open_devices
+from daq.errors import DaqError, DeviceError, StorageError
+from daq.estimate import Running
+from daq.itinerary import Itinerary, plan_of
+from daq.ports import Bench, Clock, Devices
+from daq.records import Reading
+from daq.sequencer import State
+from daq.service.extensions import open_bench
+from daq.service.groups import Place, place_after, readings
+from daq.service.live import Live, stamp
+from daq.service.load import Loaded, Wishes, load_run
+from daq.service.night import BENCH_FILE, STOPPED, Asked, Night, carry_out, park, stop_now
+from daq.service.record import record_of
+from daq.storage import (
+    Archive,
+    RunLog,
+    create_run,
+    new_run_folder,
+    open_run,
+    open_visits,
+    read_meta,
+)
+
+
+@dataclass(frozen=True, slots=True)
+class Wanted:
+    """How a run is to be carried out; `transport` "tcp" or "direct" in a rehearsal, "" on the real clock."""
+
+    transport: str = ""
+    home: bool = False
+    asked: Asked = field(default_factory=Asked)
+    on_start: Callable[[Path, Itinerary], None] = lambda folder, itinerary: None
+    on_visit: Callable[[Reading], None] = lambda reading: None
+
+
+def begin(loaded: Loaded, lab: Path, wanted: Wanted) -> tuple[Path, str]:
+    """Carry out a new run and return its folder and how it ended.
+
+    Raises
+    ------
+    DeviceError, StorageError
+        See `carry_out`; the folder is kept and the run can be resumed.
+    """
+    itinerary = loaded.itinerary()
+    with ExitStack() as stack:
+        clock, bench = _clock(stack, loaded, wanted)
+        devices = stack.enter_context(open_devices(loaded.rig, clock))
+        _reference(devices, allowed=True)
+        meta = record_of(loaded, itinerary, clock, devices, bench)
+        folder = new_run_folder(lab, clock.utc_ns(), loaded.measurement.name)
+        meta["run"] = folder.name
+        archive = create_run(folder, texts=loaded.texts, itinerary=itinerary, meta=meta)
+        stack.enter_context(archive)
+        night = _night(folder, loaded, itinerary, archive, clock, devices, bench, wanted)
+        return folder, _through(night, Place(0), wanted)
+
+
+def resume(folder: Path, wanted: Wanted) -> tuple[Path, str]:
+    """Carry on with a run after a break: the interrupted stand again, whole, then the next one."""
+    meta = read_meta(folder)
+    if meta.get("finished"):
+        raise StorageError("this run is finished", where=str(folder), remedy="Start a new one")
+    loaded = load_run(folder, Wishes(**meta["wishes"]))
+    itinerary = loaded.itinerary()
+    with ExitStack() as stack:
+        archive = stack.enter_context(open_run(folder))
+        visits = open_visits(folder)
+        clock, bench = _clock(stack, loaded, wanted, visits, folder)
+        devices = stack.enter_context(open_devices(loaded.rig, clock))
+        _reference(devices, allowed=wanted.home or bench is not None)
+        night = _night(folder, loaded, itinerary, archive, clock, devices, bench, wanted)
+        for reading in readings(visits):
+            night.running.add(reading)
+            night.live.took(reading)
+        return folder, _through(night, place_after(itinerary, visits), wanted)
+
+
+def _through(night: Night, place: Place, wanted: Wanted) -> str:
+    """Carry a night out; the archive is finished when it ends in good order, else left to be resumed."""
+    wanted.on_start(night.folder, night.itinerary)
+    night.live.write(night.state.value, night.running, now=True)
+    try:
+        ended = carry_out(night, place)
+    except KeyboardInterrupt:
+        stop_now(night)
+        ended = STOPPED
+    except DaqError as error:
+        _end(night, str(error))
+        raise
+    _end(night, ended)
+    if ended != STOPPED:
+        night.archive.finish({"ended": ended, "ended_utc": stamp(night.clock.utc_ns())})
+    return ended
+
+
+def _end(night: Night, reason: str) -> None:
+    park(night)
+    night.become(State.ENDED)
+    night.log.append("ended", run_ns=night.clock.now_ns(), reason=reason)
+    night.live.say(f"Ended: {reason}.")
+    night.live.write(night.state.value, night.running, reason, now=True)
+
+
+def _night(
+    folder: Path,
+    loaded: Loaded,
+    itinerary: Itinerary,
+    archive: Archive,
+    clock: Clock,
+    devices: Devices,
+    bench: Bench | None,
+    wanted: Wanted,
+) -> Night:
+    return Night(
+        folder=folder,
+        itinerary=itinerary,
+        archive=archive,
+        clock=clock,
+        devices=devices,
+        running=Running(plan_of(itinerary, loaded.measurement)),
+        live=Live(folder, archive.meta, itinerary, clock),
+        log=RunLog(folder),
+        asked=wanted.asked,
+        bench=bench,
+        on_visit=wanted.on_visit,
+    )
+
+
+def _clock(
+    stack: ExitStack,
+    loaded: Loaded,
+    wanted: Wanted,
+    visits: xr.Dataset | None = None,
+    folder: Path | None = None,
+) -> tuple[Clock, Bench | None]:
+    """Return the clock of a run; a resumed one goes on after its last gate: no count is drawn twice."""
+    last_ns = int(visits["gate_close_ns"].values.max()) if visits is not None and visits.sizes["row"] else 0
+    if not wanted.transport:
+        return RealClock(start_ns=last_ns), None
+    kept = None if folder is None else _kept(folder)
+    bench = open_bench(loaded.rig, seed=loaded.bench_seed, transport=wanted.transport, state=kept)
+    stack.callback(bench.close)
+    bench.clock.sleep_until(last_ns)
+    return bench.clock, bench
+
+
+def _kept(folder: Path) -> bytes | None:
+    try:
+        return (folder / BENCH_FILE).read_bytes()
+    except FileNotFoundError:
+        return None
+
+
+def _reference(devices: Devices, allowed: bool) -> None:
+    """Home every axis that has no reference, when a person said so; refuse to move otherwise."""
+    for stage in devices.stages:
+        if stage.state().homed:
+            continue
+        if not allowed:
+            raise DeviceError(
+                "this axis has lost its reference",
+                where=f"axis {stage.name}",
+                remedy="See at the bench that nothing is in its way, then resume with --home",
+            )
+        stage.home()
