@@ -6,7 +6,7 @@ from daq.estimate.dataset import estimate_run, plan_of_dataset
 from daq.estimate.peeking import anytime_multiplier
 from daq.estimate.plan import Plan
 from daq.estimate.residual import Residual, kappa, residual, terms
-from daq.estimate.running import History, Running
+from daq.estimate.running import Running
 from daq.estimate.slits import (
     expected_rates_hz,
     jet_speed_m_s,
@@ -20,7 +20,6 @@ from daq.estimate.whole import Estimate, estimate_sums
 
 __all__ = [
     "Estimate",
-    "History",
     "Plan",
     "Residual",
     "Running",

@@ -2,12 +2,10 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
 from math import nan
 
 import numpy as np
 
-from daq.estimate.arrays import FloatArray, IntArray
 from daq.estimate.counting import true_counts
 from daq.estimate.dataset import DETECTOR
 from daq.estimate.plan import Plan, stand_places
@@ -15,20 +13,7 @@ from daq.estimate.sums import Rows, Sums, complete_pairs, countable, no_stands, 
 from daq.estimate.whole import Estimate, estimate_sums
 from daq.records import EXCLUDING, Reading
 
-
-@dataclass(frozen=True, slots=True)
-class History:
-    """What was known after each complete pair, in the order of the pairs; NaN while undefined.
-
-    `closed_ns` is the run clock at the last gate of the pair.
-    """
-
-    closed_ns: IntArray
-    kappa: FloatArray
-    interval_low: FloatArray
-    interval_high: FloatArray
-    whole_low: FloatArray
-    whole_high: FloatArray
+HISTORY_POINTS = 400  # the page draws no more
 
 
 class Running:
@@ -45,10 +30,11 @@ class Running:
         self._stands = no_stands(plan)
         self._open: dict[tuple[int, int], dict[int, Reading]] = {}
         self._used_attempt: dict[int, int] = {}
-        self._changes: dict[int, int] = {}  # pair -> how often one of its stands was taken in
         self._closed_ns: dict[int, int] = {}
+        self._first_ns: int | None = None
         self._estimate: Estimate | None = None
-        self._past: list[tuple[tuple[int, int], tuple[float, ...]]] = []
+        self._past_pairs: list[int] = []  # the complete pairs that the remembered history rests on
+        self._past: dict[int, dict[str, float | None]] = {}
 
     def add(self, reading: Reading) -> None:
         """Take in a reading; unplanned ones (visit -1) are passed over."""
@@ -66,21 +52,26 @@ class Running:
             self._estimate = estimate_sums(sums_of(self._stands, self._plan), self._plan)
         return self._estimate
 
-    def history(self) -> History:
-        """Return what was known after each complete pair."""
+    def history(self) -> dict[str, list[float | None]]:
+        """Return what was known after each complete pair, in the order of the pairs; None while undefined.
+
+        `hours` since the first gate, `kappa`, and both bands as `interval_low`, `interval_high`, `whole_low`,
+        `whole_high`; at most 400 pairs, evenly thinned, the last one always.
+        """
         pairs = complete_pairs(self._stands, self._plan).tolist()
-        keys = [(pair, self._changes[pair]) for pair in pairs]
-        known = 0
-        while known < min(len(keys), len(self._past)) and keys[known] == self._past[known][0]:
-            known += 1
-        del self._past[known:]
-        if known < len(keys):
+        if pairs[: len(self._past_pairs)] != self._past_pairs:
+            self._past.clear()
+        self._past_pairs = pairs
+        stride = max(1, -(-len(pairs) // HISTORY_POINTS))
+        ends = sorted({*range(stride, len(pairs) + 1, stride), len(pairs)} - {0})
+        if any(end not in self._past for end in ends):
             sums = sums_of(self._stands, self._plan)
-            self._past += [
-                (keys[at], _known_after(sums, at + 1, self._plan)) for at in range(known, len(keys))
-            ]
-        columns = np.array([numbers for _, numbers in self._past]).reshape(-1, 5).T
-        return History(np.array([self._closed_ns[pair] for pair in pairs], np.int64), *columns)
+            self._past = {end: self._past.get(end) or _known_after(sums, end, self._plan) for end in ends}
+        first_ns = self._first_ns or 0
+        columns: dict[str, list[float | None]] = {
+            "hours": [(self._closed_ns[pairs[end - 1]] - first_ns) / 3.6e12 for end in ends]
+        }
+        return columns | {name: [self._past[end][name] for end in ends] for name in _BANDS}
 
     def _take_in(self, stand: int, attempt: int, readings: dict[int, Reading]) -> None:
         in_order = [readings[opening] for opening in sorted(readings)]
@@ -90,13 +81,19 @@ class Running:
         )
         pair = self._pair[stand]
         self._stands.done[stand] = True
-        self._changes[pair] = self._changes.get(pair, 0) + 1
-        closed_ns = max(reading.gate_close_ns for reading in in_order)
-        self._closed_ns[pair] = max(self._closed_ns.get(pair, 0), closed_ns)
+        if pair in self._past_pairs:
+            self._past.clear()
+        self._note_times(pair, in_order)
         if good and attempt >= self._used_attempt.get(stand, 0):
             self._used_attempt[stand] = attempt
             self._write(stand, rows)
         self._estimate = None
+
+    def _note_times(self, pair: int, readings: list[Reading]) -> None:
+        first_ns = min(reading.gate_open_ns for reading in readings)
+        closed_ns = max(reading.gate_close_ns for reading in readings)
+        self._first_ns = first_ns if self._first_ns is None else min(self._first_ns, first_ns)
+        self._closed_ns[pair] = max(self._closed_ns.get(pair, closed_ns), closed_ns)
 
     def _write(self, stand: int, rows: Rows) -> None:
         plan, stands = self._plan, self._stands
@@ -121,12 +118,12 @@ def _rows(readings: list[Reading]) -> Rows:
     )
 
 
-def _known_after(sums: Sums, pairs: int, plan: Plan) -> tuple[float, ...]:
+_BANDS = ("kappa", "interval_low", "interval_high", "whole_low", "whole_high")
+
+
+def _known_after(sums: Sums, pairs: int, plan: Plan) -> dict[str, float | None]:
     """Return kappa and both bands as they stood after so many pairs."""
     then = estimate_sums(Sums(sums.value[:pairs], sums.live[:pairs], sums.variance[:pairs]), plan)
-    undefined = (nan, nan)
-    return (
-        nan if then.kappa is None else then.kappa,
-        *(then.interval_95 or undefined),
-        *(then.whole_night_95 or undefined),
-    )
+    undefined = (None, None)
+    bands = (then.kappa, *(then.interval_95 or undefined), *(then.whole_night_95 or undefined))
+    return dict(zip(_BANDS, bands, strict=True))

@@ -44,6 +44,7 @@ class Sums:
     """Dead-time corrected counts, live seconds and variance of the counts by pair, position, opening.
 
     Complete pairs only, (pairs, J, K); `going_on` holds what the incomplete ones have so far, as one block.
+    The numbers of stands (and of the visits in those used) are of everything done so far.
     """
 
     value: FloatArray
@@ -114,12 +115,12 @@ def sums_of(stands: Stands, plan: Plan) -> Sums:
     block[complete] = np.arange(len(complete))
     place = np.where(stands.done, block[pair], -1)
     rest = _blocks(stands, plan, np.where(place < 0, 0, -1), position, 1)
-    used = int(np.sum(stands.used & (place >= 0)))
+    used = int(stands.used.sum())
     return Sums(
         *_blocks(stands, plan, place, position, len(complete)),
         visits=used * len(plan.openings),
         stands_used=used,
-        stands_left_out=int(np.sum(place >= 0)) - used,
+        stands_left_out=int(stands.done.sum()) - used,
         going_on=Sums(*rest) if rest[1].any() else None,
     )
 

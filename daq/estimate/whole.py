@@ -28,11 +28,12 @@ Interval = tuple[float, float]
 class Estimate:
     """What a run says so far.
 
-    Single numbers rest on complete pairs; the tables by position, `rates_hz` (J, K) and the columns (J), on
-    every stand used so far, NaN where nothing was counted. `kappa_se` is the jackknife over pairs (None below
-    two), `kappa_counting_se` what counting alone gives, `excess` their ratio; `interval_95` is the t bar,
-    valid when read once, at the planned end; `whole_night_95` the band that holds at every look (None while
-    infinite). `forecast_se` is expected at the planned end. `epsilon`, `delta` are weighted means [1/s].
+    Kappa, epsilon, delta and their bars rest on complete pairs. The tables by position, `rates_hz` (J, K) and
+    the columns (J), rest on every stand used so far (NaN where nothing was counted), as do the numbers of
+    visits and stands. `kappa_se` is the jackknife over pairs (None below two), `kappa_counting_se` what
+    counting alone gives, `excess` their ratio; `interval_95` is the t bar, valid when read once, at the
+    planned end; `whole_night_95` the band that holds at every look (None while infinite). `forecast_se` is
+    expected at the planned end. `epsilon` and `delta` are weighted means [1/s].
     """
 
     kappa: float | None
