@@ -1,24 +1,24 @@
-"""Hosts: give an instrument an address, on a virtual clock (in process or loopback sockets) or a real port.
-
-On a virtual clock a host answers inside the client's `send`. Over TCP the same bytes cross a real pair of
-loopback sockets on the way; since both ends are in this process, the number of bytes that are under way is
-known exactly, every read asks for bytes that have been sent, and no read can wait for nothing.
-"""
+"""Hosts: give an instrument an address, on a virtual clock (in process or over sockets) or a real port."""
 
 from __future__ import annotations
 
-import errno
+import contextlib
+import selectors
 import socket
-from collections.abc import Callable
-from typing import Protocol
+import threading
+from collections.abc import Callable, Sequence
+from typing import Protocol, cast
+from urllib.parse import urlsplit
 
 from daq.ports import Connection
 from simulators.clock import VirtualClock
+from simulators.connections import DirectConnection, TcpConnection
 
 Send = Callable[[bytes], None]
 
-_STALL_S = 10.0  # a loopback socket that does not move for so long is broken: better an error than a hang
-_PIECE = 32 * 1024  # below every system's socket buffer, so that writing never waits for reading
+_STALL_S = 10.0  # a client that takes no bytes for so long is dropped
+_CHUNK = 65536
+_LOOK_S = 0.1  # how often a real host looks whether it shall stop
 
 
 class Session(Protocol):
@@ -47,8 +47,8 @@ class Host:
 
     def __init__(self, clock: VirtualClock, address: str, instrument: Instrument, transport: str) -> None:
         self._clock, self._address, self._instrument = clock, address, instrument
-        self._transport = {"direct": _Line, "tcp": _TcpLine}[transport]
-        self._lines: list[_Line] = []
+        self._transport = {"direct": DirectConnection, "tcp": TcpConnection}[transport]
+        self._connections: list[DirectConnection] = []
 
     def open(self) -> None:
         """Answer connections from now on."""
@@ -57,8 +57,8 @@ class Host:
     def close(self) -> None:
         """End every connection and refuse new ones, as a peer does that dies."""
         self._clock.withdraw(self._address)
-        while self._lines:
-            self._lines.pop().hang_up()
+        while self._connections:
+            self._connections.pop().hang_up()
 
     def __enter__(self) -> Host:
         return self
@@ -67,10 +67,10 @@ class Host:
         self.close()
 
     def _connect(self) -> Connection:
-        self._lines = [line for line in self._lines if not line.ended]
-        line = self._transport(self._clock, self._instrument)
-        self._lines.append(line)
-        return line
+        self._connections = [connection for connection in self._connections if not connection.ended]
+        connection = self._transport(self._clock, lambda send: self._instrument.session(send).feed)
+        self._connections.append(connection)
+        return connection
 
 
 def serve(clock: VirtualClock, address: str, instrument: Instrument, transport: str = "direct") -> Host:
@@ -80,133 +80,81 @@ def serve(clock: VirtualClock, address: str, instrument: Instrument, transport: 
     return host
 
 
-class _Line:
-    """One connection in process: the client's end, and the two things the host does with it."""
+class Listener:
+    """An instrument that listens on a real TCP port from construction on; `run_real` answers.
 
-    def __init__(self, clock: VirtualClock, instrument: Instrument) -> None:
-        self._clock, self._lock = clock, clock.lock
-        self._inbox = bytearray()  # from the host, not yet on its way to the client
-        self._waiting = 0  # bytes that the client can read
-        self._closed = False
-        self.ended = False
-        self._session = instrument.session(self.post)
+    Attributes
+    ----------
+    address
+        "tcp://host:port" with the port that it really has (a port 0 is replaced by a free one).
+    """
 
-    def send(self, data: bytes) -> None:
-        with self._lock:
-            self._refuse_when_closed()
-            if self.ended:
-                raise BrokenPipeError(errno.EPIPE, "the host has gone")
-            self._put(self._session.feed(self._carry(data)))
-
-    def recv(self, most: int) -> bytes:
-        with self._lock:
-            self._refuse_when_closed()
-            if self._waiting:
-                return self._take(min(most, self._waiting))
-            if self.ended:
-                return b""
-            raise BlockingIOError(errno.EAGAIN, "nothing is waiting")
-
-    def close(self) -> None:
-        with self._lock:
-            self._closed = True
-            self.hang_up()
-
-    def readable(self) -> bool:
-        return self._waiting > 0 or self.ended
-
-    def post(self, data: bytes) -> None:
-        """Send bytes to the client."""
-        with self._lock:
-            self._put(data)
-
-    def hang_up(self) -> None:
-        """End the connection from the host's side."""
-        with self._lock:
-            self.ended = True
-            self._clock.wake()
-
-    def _put(self, data: bytes) -> None:
-        if data and not self.ended:
-            self._inbox += data
-            self._fill()
-            self._clock.wake()
-
-    def _carry(self, data: bytes) -> bytes:
-        return data
-
-    def _fill(self) -> None:
-        self._waiting = len(self._inbox)
-
-    def _take(self, size: int) -> bytes:
-        taken = bytes(self._inbox[:size])
-        del self._inbox[:size]
-        self._waiting -= size
-        return taken
-
-    def _refuse_when_closed(self) -> None:
-        if self._closed:
-            raise OSError(errno.EBADF, "the connection is closed")
+    def __init__(self, address: str, instrument: Instrument) -> None:
+        place = urlsplit(address)
+        self.instrument = instrument
+        self.socket = socket.create_server((place.hostname or "", place.port or 0))
+        self.socket.setblocking(False)
+        self.address = f"tcp://{place.hostname}:{self.socket.getsockname()[1]}"
 
 
-class _TcpLine(_Line):
-    """One connection whose bytes cross a pair of loopback sockets."""
-
-    def __init__(self, clock: VirtualClock, instrument: Instrument) -> None:
-        self._client, self._server = _socket_pair()
-        super().__init__(clock, instrument)
-
-    def hang_up(self) -> None:
-        with self._lock:
-            super().hang_up()
-            self._server.close()
-            if self._closed:
-                self._client.close()
-
-    def _carry(self, data: bytes) -> bytes:
-        arrived = b""
-        for at in range(0, len(data), _PIECE):
-            piece = data[at : at + _PIECE]
-            self._client.sendall(piece)
-            arrived += _read_exactly(self._server, len(piece))
-        return arrived
-
-    def _fill(self) -> None:
-        piece = self._inbox[: _PIECE - self._waiting]
-        if piece and not self.ended:
-            self._server.sendall(piece)
-            self._waiting += len(piece)
-            del self._inbox[: len(piece)]
-
-    def _take(self, size: int) -> bytes:
-        taken = _read_exactly(self._client, size)
-        self._waiting -= size
-        self._fill()
-        return taken
+def run_real(listeners: Sequence[Listener], stop: threading.Event) -> None:
+    """Answer on real ports until `stop` is set, then let the ports go."""
+    with contextlib.ExitStack() as stack:
+        selector = stack.enter_context(selectors.DefaultSelector())
+        stack.callback(_close_all, selector)
+        for listener in listeners:
+            selector.register(listener.socket, selectors.EVENT_READ, _Acceptor(listener, selector))
+        while not stop.is_set():
+            for key, _ in selector.select(_LOOK_S):
+                key.data()
 
 
-def _socket_pair() -> tuple[socket.socket, socket.socket]:
-    # socket.socketpair would not be TCP on every system, and TCP is what is to be rehearsed.
-    with socket.create_server(("127.0.0.1", 0)) as listener:
-        listener.settimeout(_STALL_S)
-        client = socket.create_connection(listener.getsockname(), _STALL_S)
-        server, peer = listener.accept()
-        while peer != client.getsockname():  # somebody else on this machine was quicker
-            server.close()
-            server, peer = listener.accept()
-    for end in (client, server):
-        end.settimeout(_STALL_S)
-        end.setsockopt(socket.IPPROTO_TCP, socket.TCP_NODELAY, 1)
-    return client, server
+class _Acceptor:
+    """Called when somebody connects to a listener."""
+
+    def __init__(self, listener: Listener, selector: selectors.BaseSelector) -> None:
+        self._listener, self._selector = listener, selector
+
+    def __call__(self) -> None:
+        try:
+            stream, _ = self._listener.socket.accept()
+        except OSError:  # the client has gone already
+            return
+        stream.settimeout(_STALL_S)
+        stream.setsockopt(socket.IPPROTO_TCP, socket.TCP_NODELAY, 1)
+        answer = _Answer(stream, self._listener.instrument, self._selector)
+        self._selector.register(stream, selectors.EVENT_READ, answer)
 
 
-def _read_exactly(end: socket.socket, size: int) -> bytes:
-    data = end.recv(size)
-    while len(data) < size:
-        more = end.recv(size - len(data))
-        if not more:
-            raise ConnectionResetError(
-                errno.ECONNRESET, "the connection broke between two of our own sockets"
-            )
-        data += more
-    return data
+class _Answer:
+    """Called when bytes have come on a real connection."""
+
+    def __init__(
+        self, stream: socket.socket, instrument: Instrument, selector: selectors.BaseSelector
+    ) -> None:
+        self._stream, self._selector, self._writing = stream, selector, threading.Lock()
+        self._session = instrument.session(self._send_late)
+
+    def __call__(self) -> None:
+        try:
+            data = self._stream.recv(_CHUNK)
+            if data:
+                self._send(self._session.feed(data))
+        except OSError:
+            data = b""
+        if not data:
+            self._selector.unregister(self._stream)
+            self._stream.close()
+
+    def _send(self, data: bytes) -> None:
+        with self._writing:
+            self._stream.sendall(data)
+
+    def _send_late(self, data: bytes) -> None:
+        with contextlib.suppress(OSError):  # the connection has ended: dropped
+            self._send(data)
+
+
+def _close_all(selector: selectors.BaseSelector) -> None:
+    for key in list(selector.get_map().values()):
+        cast(socket.socket, key.fileobj).close()

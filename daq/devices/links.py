@@ -20,7 +20,7 @@ from daq.ports import Clock
 
 log = logging.getLogger(__name__)
 
-_PATIENCE_S = 60.0  # how long a thread waits for its turn on a link
+_PATIENCE_NS = 60_000_000_000  # how long a thread waits for its turn on a link
 _IDENTITY_TRIES = 3
 
 
@@ -254,7 +254,7 @@ class Link:
         return self._lines
 
     def _take_turn(self) -> None:
-        if not self._turn.take(self._from_now_ns(_PATIENCE_S)):
+        if not self._turn.take(_PATIENCE_NS):
             raise DeviceError("the link is busy", where=self._where, remedy=CHECK, kind="timeout")
 
     def _from_now_ns(self, seconds: float) -> int:

@@ -19,17 +19,19 @@ class Turn:
         self._lock = threading.Lock()
         self._free = clock.event()
 
-    def take(self, until_ns: int) -> bool:
-        """Return whether the turn was taken, waiting at most until `until_ns`."""
-        while not self._lock.acquire(blocking=False):
-            self._free.clear()
-            if self._lock.acquire(blocking=False):  # given back before the flag was lowered
-                return True
-            if not self._free.wait_until(until_ns):
-                return False
-        return True
+    def take(self, patience_ns: int) -> bool:
+        """Return whether the turn was taken, waiting at most for `patience_ns`."""
+        return self._lock.acquire(blocking=False) or self._wait(self._clock.now_ns() + patience_ns)
 
     def give(self) -> None:
         """Give the turn back."""
         self._lock.release()
         self._free.set()
+
+    def _wait(self, until_ns: int) -> bool:
+        while True:
+            self._free.clear()
+            if self._lock.acquire(blocking=False):  # given back before the flag was lowered
+                return True
+            if not self._free.wait_until(until_ns):
+                return False
