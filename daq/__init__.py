@@ -3,7 +3,7 @@
 from importlib import import_module
 from typing import Any
 
-_HOMES = {"open_visits": "daq.storage", "estimate_run": "daq.estimate"}
+_HOMES = {"open_visits": "daq.storage.reader", "estimate_run": "daq.estimate"}
 __all__ = ["estimate_run", "open_visits"]
 
 

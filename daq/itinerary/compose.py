@@ -123,9 +123,16 @@ def compose(measurement: Measurement, rig: Rig, seed: int | None = None) -> Itin
 
 
 def opening_order(measurement: Measurement, rig: Rig) -> tuple[str, ...]:
-    """Return the opening order of a forward stand: the one given, else along the mask (least travel)."""
-    given = measurement.itinerary.opening_order
-    return given or tuple(sorted(rig.mask.openings, key=lambda name: rig.mask.openings[name].at_mm))
+    """Return the order of the openings: the one given, else along the mask (least travel).
+
+    In blocked order, where one move an opening is all the travel there is, it is what is done by hand: from
+    no slit to all of them.
+    """
+    if measurement.itinerary.opening_order:
+        return measurement.itinerary.opening_order
+    if measurement.itinerary.order == "blocked":
+        return tuple(sorted(rig.mask.openings, key=lambda name: (openings.mask(name).bit_count(), name)))
+    return tuple(sorted(rig.mask.openings, key=lambda name: rig.mask.openings[name].at_mm))
 
 
 def expected_rates(measurement: Measurement, rig: Rig) -> FloatArray:

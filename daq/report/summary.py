@@ -9,7 +9,8 @@ import numpy as np
 import xarray as xr
 
 from daq.estimate import estimate_run
-from daq.storage import digest, gate_digest, open_visits, read_meta
+from daq.storage.digest import digest, gate_digest
+from daq.storage.reader import open_visits, read_meta
 
 
 def summary(folder: Path) -> dict[str, Any]:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import time
 from collections import deque
 from collections.abc import Mapping
@@ -11,16 +12,17 @@ from typing import Any
 
 import numpy as np
 
-from daq.estimate import Running
+from daq.estimate import History, Running
 from daq.estimate.watch import Watched, concerns
 from daq.itinerary import Itinerary
 from daq.ports import Clock
 from daq.records import Reading
-from daq.storage import write_feed
+from daq.storage.feed import write_feed
 
 EVERY_S = 1.0
 COLUMNS = 400
 LOG_LINES = 30
+HISTORY = ("kappa", "interval_low", "interval_high", "whole_low", "whole_high")
 
 
 class Live:
@@ -96,8 +98,8 @@ class Live:
             "positions_mm": self._itinerary.positions_mm.tolist(),
             "openings": self._itinerary.openings.tolist(),
             **_patterns(figures),
-            "kappa": _kappa(figures, self._meta),
-            "history": running.history(),
+            "kappa": _kappa(figures),
+            "history": _history(running.history(), self._started_ns),
             "rate": _columns(self._hours, self._levels, float(self._expected.mean())),
             "sensors": {} if self._last is None else {k: v[:2] for k, v in self._last.sensors.items()},
             "warnings": self._warnings(figures, run_ns),
@@ -148,20 +150,37 @@ def stamp(utc_ns: int) -> str:
 
 
 def _patterns(figures: Mapping[str, Any]) -> dict[str, Any]:
-    return {key: figures[key] for key in ("rates_hz", "rates_se_hz", "epsilon_hz", "epsilon_se_hz")}
+    by_opening = {
+        key: [list(column) for column in zip(*figures[key], strict=True)]
+        for key in ("rates_hz", "rates_se_hz")
+    }
+    return by_opening | {key: figures[key] for key in ("epsilon_hz", "epsilon_se_hz")}
 
 
-def _kappa(figures: Mapping[str, Any], meta: Mapping[str, Any]) -> dict[str, Any]:
-    pairs, planned, se = figures["pairs"], figures["planned_pairs"], figures["kappa_se"]
+def _kappa(figures: Mapping[str, Any]) -> dict[str, Any]:
+    same = ("interval_95", "whole_night_95", "pairs", "planned_pairs", "excess", "excess_se", "printable")
     return {
         "value": figures["kappa"],
-        "se": se,
+        "se": figures["kappa_se"],
         "counting_se": figures["kappa_counting_se"],
-        **{key: figures[key] for key in ("interval_95", "whole_night_95", "pairs", "planned_pairs")},
-        **{key: figures[key] for key in ("excess", "excess_se", "printable")},
-        "goal_se": meta.get("goal_se"),
-        "forecast_se": None if se is None else se * (pairs / planned) ** 0.5,
+        **{key: figures[key] for key in (*same, "goal_se", "forecast_se")},
     }
+
+
+def _history(history: History, started_ns: int) -> dict[str, list[float | None]]:
+    """Return what was known after each pair, thinned to COLUMNS points; the newest stays."""
+    many = history.kappa.size
+    chosen = np.unique(np.linspace(0, many - 1, min(COLUMNS, many)).astype(int)) if many else []
+    hours = (history.closed_ns - started_ns) / 3.6e12
+    columns = {"hours": hours} | {name: getattr(history, name) for name in HISTORY}
+    return {
+        name: [_finite(value) for value in np.asarray(column)[chosen].tolist()]
+        for name, column in columns.items()
+    }
+
+
+def _finite(value: float) -> float | None:
+    return value if math.isfinite(value) else None
 
 
 def _columns(hours: list[float], levels: list[float], scale_hz: float) -> dict[str, list[float]]:

@@ -18,7 +18,8 @@ from daq.records import Reading
 from daq.sequencer import State, perform, step
 from daq.service.groups import AFTER_FAULT, Place, repeat_from, supply
 from daq.service.live import Live
-from daq.storage import Archive, RunLog
+from daq.storage.log import RunLog
+from daq.storage.run import Archive
 
 log = logging.getLogger(__name__)
 

@@ -29,6 +29,7 @@ def record_of(
         "clock": clock.kind,
         "slits": itinerary.slits,
         "openings": itinerary.openings.tolist(),
+        "positions_mm": itinerary.positions_mm.tolist(),
         "axes": [rig.mask.axis, rig.detector.axis],
         "sensors": _sensors(devices),
         "channels": max(entry.channels for entry in rig.devices.values()),

@@ -8,8 +8,9 @@ from dataclasses import dataclass, field
 from pathlib import Path
 
 import xarray as xr
+from daq.devices.registry import open_devices
 
-from daq.devices import RealClock, open_devices
+from daq.devices.clock import RealClock
 from daq.errors import DaqError, DeviceError, StorageError
 from daq.estimate import Running
 from daq.itinerary import Itinerary, plan_of
@@ -22,15 +23,10 @@ from daq.service.live import Live, stamp
 from daq.service.load import Loaded, Wishes, load_run
 from daq.service.night import BENCH_FILE, STOPPED, Asked, Night, carry_out, park, stop_now
 from daq.service.record import record_of
-from daq.storage import (
-    Archive,
-    RunLog,
-    create_run,
-    new_run_folder,
-    open_run,
-    open_visits,
-    read_meta,
-)
+from daq.storage.lab import new_run_folder
+from daq.storage.log import RunLog
+from daq.storage.reader import open_visits, read_meta
+from daq.storage.run import Archive, create_run, open_run
 
 
 @dataclass(frozen=True, slots=True)

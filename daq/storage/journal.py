@@ -11,7 +11,7 @@ import json
 import os
 import sqlite3
 from collections.abc import Mapping, Sequence
-from contextlib import closing
+from contextlib import closing, suppress
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -64,7 +64,8 @@ class Journal:
         except sqlite3.Error as error:
             raise stored(error, self._where) from error
         self.rows = row + 1
-        os.pwrite(self._newest, b"%020d\n" % self.rows, 0)
+        with suppress(OSError):  # the row is durable all the same
+            os.pwrite(self._newest, b"%020d\n" % self.rows, 0)
         return row
 
     def forget(self, upto: int) -> None:

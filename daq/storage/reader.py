@@ -25,7 +25,8 @@ def open_visits(folder: Path) -> xr.Dataset:
 
     Notes
     -----
-    A chunk of the Zarr group that is missing reads as missing numbers (-1, NaN), never as counts or openings.
+    A chunk of the Zarr group that is missing reads as missing numbers (-1, NaN), never as counts or openings;
+    a visit of which a part is missing is set aside as unplanned (-1), so that no estimate takes its stand.
 
     Raises
     ------
@@ -38,7 +39,7 @@ def open_visits(folder: Path) -> xr.Dataset:
         root = _root(folder)
         meta = held.meta if held else dict(root.attrs.asdict())
         _refuse_unfinished(held, meta, folder)
-        arrays = _measured(root, held, meta)
+        arrays = _set_aside_incomplete(_measured(root, held, meta))
         arrays.update(_looked_up(root, arrays, meta))
     return _dataset((*columns(meta), *looked_up()), arrays, meta)
 
@@ -98,6 +99,13 @@ def _measured(root: zarr.Group, held: Snapshot | None, meta: dict[str, Any]) -> 
     if not held.sealed:
         return tail
     return {name: np.concatenate([_whole(root, name, held.sealed), tail[name]]) for name in names}
+
+
+def _set_aside_incomplete(arrays: dict[str, NDArray[Any]]) -> dict[str, NDArray[Any]]:
+    parts = [arrays[name] for name in ("attempt", "opening", "position_mm", "live_s", "quality")]
+    parts += list(arrays["values"].T)
+    missing = np.any([part < 0 if part.dtype.kind == "i" else np.isnan(part) for part in parts], axis=0)
+    return {**arrays, "visit": np.where(missing, -1, arrays["visit"])}
 
 
 def _looked_up(

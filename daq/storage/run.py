@@ -2,10 +2,10 @@
 
 from __future__ import annotations
 
-import fcntl
 import json
 import os
 import threading
+import warnings
 from collections.abc import Mapping
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, Self
@@ -17,6 +17,7 @@ from daq.records import Reading
 from daq.storage.disk import Disk
 from daq.storage.journal import JOURNAL, Journal, create_journal, drop_journal, snapshot
 from daq.storage.layout import CHUNK, FORMAT, looked_up
+from daq.storage.lock import LOCK, lock_run
 from daq.storage.reader import open_visits, planned_stands
 from daq.storage.rows import Rows
 from daq.storage.seal import ZARR, DurableStore, add_array, create_zarr, open_root, write_rows
@@ -27,7 +28,6 @@ from daq.storage.trouble import rim
 if TYPE_CHECKING:
     from daq.itinerary.compose import Itinerary
 
-LOCK = "writer.lock"
 FINISHED = "finished"
 
 
@@ -45,20 +45,20 @@ class Archive:
         self._tries = _tries(folder, self._stands)
         with rim(folder):
             _drop_partial_files(folder)
-            self._journal = Journal(folder, self._form, held.sealed, held.sealed + len(held.rows))
+            self.journal = Journal(folder, self._form, held.sealed, held.sealed + len(held.rows))
         self._mutex = threading.Lock()  # one transaction at a time on the one connection
-        self._sealer = Sealer(self._seal_next)
+        self._sealer = Sealer(self.seal_next)
         self._sealer.wake()
 
     @property
     def rows(self) -> int:
         """The number of readings that are durable."""
-        return self._journal.rows
+        return self.journal.rows
 
     @property
     def sealed(self) -> int:
         """The number of readings that left the journal for the Zarr group."""
-        return self._journal.sealed
+        return self.journal.sealed
 
     @property
     def seal_error(self) -> StorageError | None:
@@ -75,9 +75,10 @@ class Archive:
         """
         flat = self._form.flat(reading)
         with self._mutex:
-            row = self._journal.append(flat)
+            row = self.journal.append(flat)
+            self._disk.step("committed")
         self._note_try(reading.visit, reading.attempt)
-        if (row + 1) % min(self._chunk, 64) == 0 and row + 1 - self._journal.sealed >= self._chunk:
+        if (row + 1) % min(self._chunk, 64) == 0 and row + 1 - self.journal.sealed >= self._chunk:
             self._sealer.wake()
         return row
 
@@ -97,23 +98,57 @@ class Archive:
         """Turn the archive into a plain Zarr group with the run's results as attributes, and close it."""
         self._sealer.close()
         with rim(self.folder):
-            while self._seal_next():
+            while self.seal_next():
                 pass
-            self._write_rest({**self.meta, **plain(attributes), FINISHED: True})
-            self._journal.checkpoint()
-            self._journal.close()
+            self.write_rest({**self.meta, **plain(attributes), FINISHED: True})
+            self.journal.checkpoint()
+            self.journal.close()
             drop_journal(self.folder)
             self._disk.step("unlinked")
             (self.folder / LOCK).unlink(missing_ok=True)
             self._disk.sync_dir(self.folder)
         self.close()
 
+    def seal_next(self) -> bool:
+        """Seal the oldest whole chunk of the journal; return whether there was one."""
+        first = self.journal.sealed
+        if self.journal.rows - first < self._chunk:
+            return False
+        held = snapshot(self.folder, first + self._chunk)
+        assert held is not None
+        with rim(self.folder / ZARR):
+            arrays = self._form.arrays(held.rows)
+            write_rows(open_root(self.folder, self._disk), arrays, first, arrays)
+        with self._mutex:
+            self.journal.forget(first + self._chunk)
+        self._disk.step("forgot")
+        return True
+
+    def write_rest(self, attributes: Mapping[str, Any]) -> None:
+        """Write what is not sealed, what is looked up and the attributes; the journal keeps its rows."""
+        held, dataset = snapshot(self.folder), open_visits(self.folder)
+        assert held is not None
+        root = open_root(self.folder, self._disk)
+        arrays = self._form.arrays(held.rows)
+        write_rows(root, arrays, held.sealed, arrays)
+        for column in looked_up():
+            add_array(root, column, self._chunk)
+        names = [column.name for column in looked_up()]
+        write_rows(root, names, 0, {name: dataset[name].values for name in names})
+        root.update_attributes(dict(attributes))
+        store = root.store
+        assert isinstance(store, DurableStore)
+        with warnings.catch_warnings():  # in no specification yet, but one file then opens all arrays
+            warnings.filterwarnings("ignore", "Consolidated metadata is currently not part")
+            zarr.consolidate_metadata(store)
+        store.sync()
+
     def close(self) -> None:
         """Let the folder go; the run can be gone on with later."""
         if self._open:
             self._open = False
             self._sealer.close()
-            self._journal.close()
+            self.journal.close()
             os.close(self._lock_file)
 
     def __enter__(self) -> Self:
@@ -126,37 +161,6 @@ class Archive:
         if 0 <= visit < len(self._stands):
             stand = self._stands[visit]
             self._tries[stand] = max(attempt, self._tries.get(stand, 0))
-
-    def _seal_next(self) -> bool:
-        first = self._journal.sealed
-        if self._journal.rows - first < self._chunk:
-            return False
-        held = snapshot(self.folder, first + self._chunk)
-        assert held is not None
-        with rim(self.folder / ZARR):
-            arrays = self._form.arrays(held.rows)
-            write_rows(open_root(self.folder, self._disk), arrays, first, arrays)
-        with self._mutex:
-            self._journal.forget(first + self._chunk)
-        self._disk.step("forgot")
-        return True
-
-    def _write_rest(self, attributes: Mapping[str, Any]) -> None:
-        dataset = open_visits(self.folder)
-        root = open_root(self.folder, self._disk)
-        first, arrays = self._journal.sealed, {}
-        for column in self._form.columns:
-            arrays[column.name] = dataset[column.name].values[first:]
-        write_rows(root, arrays, first, arrays)
-        for column in looked_up():
-            add_array(root, column, self._chunk)
-        names = [column.name for column in looked_up()]
-        write_rows(root, names, 0, {name: dataset[name].values for name in names})
-        root.update_attributes(dict(attributes))
-        store = root.store
-        assert isinstance(store, DurableStore)
-        zarr.consolidate_metadata(store)
-        store.sync()
 
 
 def create_run(
@@ -188,12 +192,20 @@ def create_run(
     disk = disk or Disk()
     with rim(folder):
         folder.mkdir(parents=True, exist_ok=True)
-        lock = _lock(folder)
+        lock = lock_run(folder)
     try:
         with rim(folder):
             _refuse_second(folder)
             digests = write_texts(folder, texts, disk)
-            whole = plain({**meta, "format": FORMAT, "chunk": chunk, "texts_sha256": digests})
+            whole = plain(
+                {
+                    **{name: getattr(itinerary, name) for name in ("positions_mm", "weights", "signs")},
+                    **meta,
+                    "format": FORMAT,
+                    "chunk": chunk,
+                    "texts_sha256": digests,
+                }
+            )
             create_zarr(folder, whole, itinerary, disk)
             create_journal(folder, Rows(whole), whole)
             disk.sync_dir(folder)
@@ -209,7 +221,7 @@ def open_run(folder: Path, *, disk: Disk | None = None) -> Archive:
     if not folder.is_dir():
         raise StorageError("there is no such run", where=str(folder), remedy="Check the path")
     with rim(folder):
-        lock = _lock(folder)
+        lock = lock_run(folder)
     try:
         return Archive(folder, lock, disk or Disk())
     except BaseException:
@@ -225,20 +237,6 @@ def plain(meta: Mapping[str, Any]) -> dict[str, Any]:
 
 def _plain_value(value: Any) -> Any:
     return value.tolist() if hasattr(value, "tolist") else str(value)
-
-
-def _lock(folder: Path) -> int:
-    handle = os.open(folder / LOCK, os.O_RDWR | os.O_CREAT | os.O_CLOEXEC, 0o644)
-    try:
-        fcntl.flock(handle, fcntl.LOCK_EX | fcntl.LOCK_NB)
-    except BlockingIOError:
-        os.close(handle)
-        raise StorageError(
-            "another process writes this run",
-            where=str(folder),
-            remedy="Wait until it has ended, or end it; two writers are never allowed",
-        ) from None
-    return handle
 
 
 def _refuse_second(folder: Path) -> None:
