@@ -1,0 +1,134 @@
+"""Bench: the instruments of a rig around one truth, on a virtual clock or on their own."""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass
+from typing import Any, Literal
+
+from daq.description import Rig
+from daq.errors import DescriptionError
+from daq.ports import Clock
+from simulators.clock import VirtualClock
+from simulators.counters import GatedCounter
+from simulators.hosts import Host, Instrument, serve
+from simulators.motion import Track
+from simulators.sensors import RoomSensor
+from simulators.settings import Settings, read_settings, utc_ns
+from simulators.stages import StageController, Travel
+from simulators.truth import Truth
+
+_FOUND_AT = 0.37  # where on its travel an axis is found when it is switched on
+
+
+@dataclass(frozen=True, slots=True)
+class Built:
+    """The instruments of a rig by device name, and the truth that they share."""
+
+    instruments: Mapping[str, Instrument]
+    tracks: Mapping[str, Track]
+    truth: Truth
+
+
+class WaveletBench:
+    """A simulated bench on its own virtual clock; implements `daq.ports.Bench`."""
+
+    def __init__(self, clock: VirtualClock, built: Built, hosts: Sequence[Host]) -> None:
+        self.clock = clock
+        self._built, self._hosts = built, hosts
+
+    def true_rates_hz(
+        self, openings: Sequence[int], positions_mm: Sequence[float]
+    ) -> Sequence[Sequence[float]]:
+        """Return noise-free rates, position by opening, without drift and dead time [1/s]."""
+        rates: list[list[float]] = self._built.truth.rates_hz(openings, positions_mm).tolist()
+        return rates
+
+    def keep(self) -> bytes:
+        """Return what a resumed rehearsal needs: axis positions and clock offset, as JSON."""
+        now_ns = self.clock.now_ns()
+        axes = {
+            name: {"place_mm": track.true_mm(now_ns), "homed": track.homed(now_ns)}
+            for name, track in self._built.tracks.items()
+        }
+        return json.dumps({"format": 1, "now_ns": now_ns, "axes": axes}).encode()
+
+    def close(self) -> None:
+        """Stop the hosts and let their ports go."""
+        for host in self._hosts:
+            host.close()
+
+
+def open_bench(
+    rig: Rig, *, seed: int | None, transport: Literal["tcp", "direct"], state: bytes | None
+) -> WaveletBench:
+    """Return a bench whose hosts answer on its own virtual clock under the rig's addresses.
+
+    Parameters
+    ----------
+    rig
+        With a table [bench].
+    seed
+        Of the simulated truth; the table's own when None.
+    transport
+        "tcp" (loopback sockets) or "direct" (in process); both carry the same bytes.
+    state
+        What `keep` of an earlier bench gave, to go on from there; else every axis has lost its reference.
+    """
+    settings = read_settings(rig)
+    kept: Any = json.loads(state) if state else {"now_ns": 0, "axes": {}}
+    clock = VirtualClock(utc_ns(settings.origin_utc), kept["now_ns"])
+    built = build(rig, settings, settings.seed if seed is None else seed, clock, kept["axes"])
+    hosts = [
+        serve(clock, rig.devices[name].address, instrument, transport)
+        for name, instrument in built.instruments.items()
+    ]
+    return WaveletBench(clock, built, hosts)
+
+
+def build(
+    rig: Rig, settings: Settings, seed: int, clock: Clock, kept: Mapping[str, Mapping[str, float]]
+) -> Built:
+    """Return the instruments of a rig; `kept` holds place and homing of axes that are known.
+
+    Raises
+    ------
+    DescriptionError
+        When no simulated instrument understands the driver of a device.
+    """
+    tracks = {name: _track(axis.limits_mm, kept.get(name)) for name, axis in rig.axes.items()}
+    truth = Truth(rig, settings, seed, tracks)
+    makers: Mapping[str, Callable[[str], Instrument]] = {
+        "gcode-stage": lambda name: _controller(name, rig, tracks, clock),
+        "scpi-counter": lambda name: GatedCounter(
+            name, lambda open_ns, close_ns: truth.counts(name, open_ns, close_ns), settings.readout_s, clock
+        ),
+        "scpi-sensor": lambda name: RoomSensor(name, clock),
+    }
+    unknown = [
+        f"rig {rig.name}, devices.{name}.driver: no simulated instrument understands {entry.driver!r}. "
+        f"Name one of {', '.join(makers)}."
+        for name, entry in rig.devices.items()
+        if entry.driver not in makers
+    ]
+    if unknown:
+        raise DescriptionError(tuple(unknown))
+    instruments = {name: makers[entry.driver](name) for name, entry in rig.devices.items()}
+    return Built(instruments, tracks, truth)
+
+
+def _track(limits_mm: tuple[float, float], kept: Mapping[str, float] | None) -> Track:
+    low_mm, high_mm = limits_mm
+    if kept is None:
+        return Track(low_mm + _FOUND_AT * (high_mm - low_mm), low_mm, homed=False)
+    return Track(kept["place_mm"], low_mm, homed=bool(kept["homed"]))
+
+
+def _controller(name: str, rig: Rig, tracks: Mapping[str, Track], clock: Clock) -> StageController:
+    mine = {axis_name: axis for axis_name, axis in rig.axes.items() if axis.device == name}
+    return StageController(
+        {axis.letter: tracks[axis_name] for axis_name, axis in mine.items()},
+        {axis.letter: Travel(axis.limits_mm, axis.speed_mm_s) for axis in mine.values()},
+        clock,
+    )

@@ -1,0 +1,113 @@
+"""Counters: a simulated gated counter that speaks SCPI.
+
+===============================  =====================================================================
+command                          does
+===============================  =====================================================================
+``CONFigure:TOTalize:TIMed s``   sets the width of the gate, 1e-6 .. 1e5 s (1 s after ``*RST``)
+``CONFigure:TOTalize:TIMed?``    the width [s]
+``INITiate[:IMMediate]``         opens the gate now; -213 while one is open or being read out
+``FETCh?``                       number of the gate, counts, width [s], overflow (0, 1); ``BUSY`` until the
+                                 readout is over; -230 and no reply when there is nothing to fetch
+``ABORt``                        closes the gate and forgets what it counted
+``TOTalize:NUMBer?``             number of the last gate since power was switched on
+``STATus:OPERation:CONDition?``  16 while the gate is open, 256 while it is read out
+===============================  =====================================================================
+
+and the common and required commands of `simulators.status`. The subset and the replies are this counter's
+own, within the rules of SCPI-1999.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+
+from daq.ports import Clock
+from simulators.hosts import Send
+from simulators.lines import LineSession
+from simulators.motion import NS
+from simulators.scpi import Command, FaultError, Interpreter, decimal
+from simulators.status import Status
+
+MEASURING, READING_OUT = 16, 256
+CAPACITY = 2**32 - 1
+
+_NARROWEST_S, _WIDEST_S, _RESET_S = 1e-6, 1e5, 1.0
+
+
+@dataclass(frozen=True, slots=True)
+class Gate:
+    """An open or closed gate, times on the run clock."""
+
+    number: int
+    open_ns: int
+    close_ns: int
+
+
+class GatedCounter:
+    """A counter; `count` draws what a gate has counted, from its opening and its end [ns]."""
+
+    def __init__(self, name: str, count: Callable[[int, int], int], readout_s: float, clock: Clock) -> None:
+        self._count, self._readout_ns, self._clock = count, round(readout_s * NS), clock
+        self._width_ns = round(_RESET_S * NS)
+        self._gates = 0
+        self._gate: Gate | None = None
+        self._counted: int | None = None
+        status = Status(self._condition, lambda: bool(self._interpreter.responses))
+        commands = {
+            "*IDN?": Command(lambda: f"tercet simulators,gated counter,{name},1"),
+            "*RST": Command(self._reset),
+            "CONFigure:TOTalize:TIMed": Command(self._configure, (decimal,)),
+            "CONFigure:TOTalize:TIMed?": Command(lambda: f"{self._width_ns / NS:.9f}"),
+            "INITiate[:IMMediate]": Command(self._initiate),
+            "FETCh?": Command(self._fetch),
+            "ABORt": Command(self._abort),
+            "TOTalize:NUMBer?": Command(lambda: str(self._gates)),
+        }
+        self._interpreter = Interpreter({**status.commands(), **commands}, status.report)
+
+    def session(self, send: Send) -> LineSession:
+        """Return a session; the counter never speaks unasked."""
+        return LineSession(self._interpreter.answer)
+
+    def _condition(self) -> int:
+        if self._gate is None:
+            return 0
+        since_close_ns = self._clock.now_ns() - self._gate.close_ns
+        if since_close_ns < 0:
+            return MEASURING
+        return READING_OUT if since_close_ns < self._readout_ns else 0
+
+    def _configure(self, width_s: float) -> None:
+        if not _NARROWEST_S <= width_s <= _WIDEST_S:
+            raise FaultError(-222)
+        if self._condition():
+            raise FaultError(-221)
+        self._width_ns = round(width_s * NS)
+
+    def _initiate(self) -> None:
+        if self._condition():
+            raise FaultError(-213)
+        self._gates += 1
+        open_ns = self._clock.now_ns()
+        self._gate = Gate(self._gates, open_ns, open_ns + self._width_ns)
+        self._counted = None
+
+    def _fetch(self) -> str:
+        if self._gate is None:
+            raise FaultError(-230)
+        if self._condition():
+            return "BUSY"
+        gate = self._gate
+        if self._counted is None:
+            self._counted = self._count(gate.open_ns, gate.close_ns)
+        counts = self._counted
+        width_s = (gate.close_ns - gate.open_ns) / NS
+        return f"{gate.number},{min(counts, CAPACITY)},{width_s:.9f},{int(counts > CAPACITY)}"
+
+    def _abort(self) -> None:
+        self._gate = None
+
+    def _reset(self) -> None:
+        self._abort()
+        self._width_ns = round(_RESET_S * NS)

@@ -1,0 +1,71 @@
+"""Source: how its strength drifts, a function of time alone."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+
+import numpy as np
+from numpy.typing import NDArray
+
+from simulators.draws import generator
+
+FloatArray = NDArray[np.float64]
+Factor = Callable[[FloatArray], FloatArray]
+
+HOUR_S = 3600.0
+GRID_S = 0.25
+BLOCK = 4096
+
+
+def linear(per_hour: float) -> Factor:
+    """Return the factor of a linear drift, 1 at time zero; a source that has run dry stays at zero."""
+    return lambda time_s: np.maximum(1.0 + per_hour * time_s / HOUR_S, 0.0)
+
+
+class RandomWalk:
+    """The factor exp(W) of a random walk W of the logarithm, variance `per_sqrt_hour`**2 times hours.
+
+    Steps of `GRID_S` from a counter-based generator, summed block by block as far as time has been asked for,
+    with straight lines between: any time may be asked for, in any order.
+    """
+
+    def __init__(self, per_sqrt_hour: float, seed: int) -> None:
+        self._step = per_sqrt_hour * np.sqrt(GRID_S / HOUR_S)
+        self._seed = seed
+        self._walk: FloatArray = np.zeros(1)
+
+    def __call__(self, time_s: FloatArray) -> FloatArray:
+        """Return the factor at times not before zero [s]."""
+        steps = np.asarray(time_s, dtype=float) / GRID_S
+        self._extend(int(np.max(steps)) + 1)
+        whole = np.minimum(steps.astype(int), len(self._walk) - 2)
+        below, above = self._walk[whole], self._walk[whole + 1]
+        return np.exp(below + (steps - whole) * (above - below))
+
+    def _extend(self, steps: int) -> None:
+        while len(self._walk) <= steps:
+            block = (len(self._walk) - 1) // BLOCK
+            draws = generator(self._seed, "source walk", block).standard_normal(BLOCK)
+            self._walk = np.concatenate([self._walk, self._walk[-1] + self._step * np.cumsum(draws)])
+
+
+def relative(factors: Sequence[Factor], time_s: FloatArray) -> FloatArray:
+    """Return the strength of the source, 1 at time zero, at times [s] not before zero."""
+    product = np.ones(np.shape(time_s))
+    for factor in factors:
+        product = product * factor(time_s)
+    return product
+
+
+def mean_relative(factors: Sequence[Factor], start_s: float, stop_s: float) -> float:
+    """Return the mean strength of the source between two times.
+
+    Notes
+    -----
+    Trapezia between the points of the random walk's grid, where its logarithm is straight: for a step of s in
+    the logarithm the error is s**2 / 12 of the mean (below 1e-7 for 10 % per square root of an hour).
+    """
+    first, last = np.floor(start_s / GRID_S) + 1, np.ceil(stop_s / GRID_S)
+    time_s = np.concatenate([[start_s], np.arange(first, last) * GRID_S, [stop_s]])
+    strength = relative(factors, time_s)
+    return float(np.trapezoid(strength, time_s) / (stop_s - start_s))

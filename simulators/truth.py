@@ -1,0 +1,101 @@
+"""Truth: what really reaches the detector, one for all devices of a bench."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Mapping, Sequence
+from functools import lru_cache
+from itertools import pairwise
+
+import numpy as np
+from numpy.typing import NDArray
+
+from daq.description import Rig
+from simulators.detector import draw_counts
+from simulators.draws import generator
+from simulators.motion import NS, Track
+from simulators.optics import intensity
+from simulators.settings import Settings
+from simulators.source import Factor, RandomWalk, linear, mean_relative
+
+_MOVING_PARTS = 64  # parts into which a gate is cut while an axis moves
+
+
+class Truth:
+    """Counts as a function of where the axes were while a gate was open, and of the source.
+
+    Parameters
+    ----------
+    rig, settings
+        The bench as its rig file describes it, and its table [bench].
+    seed
+        Of the source's walk and of every count.
+    tracks
+        The axes by their names in the rig.
+    """
+
+    def __init__(self, rig: Rig, settings: Settings, seed: int, tracks: Mapping[str, Track]) -> None:
+        self._rig, self._settings, self._seed = rig, settings, seed
+        self._mask, self._detector = tracks[rig.mask.axis], tracks[rig.detector.axis]
+        self._source = _factors(settings, seed)
+        self._places = {opening: rig.mask_at_mm(opening) for opening in rig.opening_masks}
+        self._mask_tolerance_mm = rig.axes[rig.mask.axis].tolerance_mm
+        first = rig.slits["A"]
+        peak = self._intensity([first.centre_m], [(first.centre_m, first.width_m)])[0]
+        self._scale_hz = settings.single_slit_rate_hz / peak
+        self._light = lru_cache(maxsize=65_536)(self._light_hz)
+
+    def rates_hz(self, openings: Sequence[int], positions_mm: Sequence[float]) -> NDArray[np.float64]:
+        """Return pattern, background and dark counts, position by opening [1/s]: no drift, no dead time."""
+        light = [[self._light(opening, place) for opening in openings] for place in positions_mm]
+        return np.array(light).reshape(len(positions_mm), len(openings)) + self._settings.dark_rate_hz
+
+    def counts(self, device: str, open_ns: int, close_ns: int) -> int:
+        """Return what a gate of a device has counted, the same whenever it is asked for."""
+        gate_s = (close_ns - open_ns) / NS
+        rate_hz = self._settings.dark_rate_hz + self._mean_light_hz(open_ns, close_ns)
+        random = generator(self._seed, device, open_ns)
+        settings = self._settings
+        return draw_counts(rate_hz, gate_s, settings.dead_time_s, settings.dead_time_kind, random)
+
+    def shown(self, mask_mm: float) -> int | None:
+        """Return the opening that the mask shows at a place, or None between openings, where all is dark."""
+        for opening, place_mm in self._places.items():
+            if abs(mask_mm - place_mm) <= self._mask_tolerance_mm:
+                return opening
+        return None
+
+    def _mean_light_hz(self, open_ns: int, close_ns: int) -> float:
+        """Return the mean of light times source over a gate, piece by piece where an axis moved [1/s]."""
+        total = 0.0
+        for start_ns, stop_ns in self._pieces(open_ns, close_ns):
+            middle_ns = (start_ns + stop_ns) // 2
+            opening = self.shown(self._mask.true_mm(middle_ns))
+            if opening is not None:
+                light_hz = self._light(opening, self._detector.true_mm(middle_ns))
+                total += light_hz * self._strength(start_ns, stop_ns) * (stop_ns - start_ns)
+        return total / (close_ns - open_ns)
+
+    def _pieces(self, open_ns: int, close_ns: int) -> Iterator[tuple[int, int]]:
+        tracks = (self._mask, self._detector)
+        moments = {at for track in tracks for at in track.moments(open_ns, close_ns)}
+        for start_ns, stop_ns in pairwise(sorted({open_ns, close_ns, *moments})):
+            moves = any(track.true_mm(start_ns) != track.true_mm(stop_ns) for track in tracks)
+            parts = _MOVING_PARTS if moves else 1
+            yield from pairwise(start_ns + (stop_ns - start_ns) * part // parts for part in range(parts + 1))
+
+    def _strength(self, start_ns: int, stop_ns: int) -> float:
+        return mean_relative(self._source, start_ns / NS, stop_ns / NS)
+
+    def _light_hz(self, opening: int, position_mm: float) -> float:
+        slits = [(slit.centre_m, slit.width_m) for slit in self._rig.slits_of(opening).values()]
+        pattern = self._intensity([position_mm * 1e-3], slits)[0]
+        return float(self._scale_hz * pattern) + self._settings.background_rate_hz
+
+    def _intensity(self, positions_m: list[float], slits: list[tuple[float, float]]) -> NDArray[np.float64]:
+        geometry = self._rig.geometry
+        return intensity(np.array(positions_m), slits, geometry.wavelength_m, geometry.distance_m)
+
+
+def _factors(settings: Settings, seed: int) -> tuple[Factor, ...]:
+    source = settings.source
+    return linear(source.linear_per_hour), RandomWalk(source.random_walk_per_sqrt_hour, seed)
