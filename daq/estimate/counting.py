@@ -6,8 +6,7 @@ from math import isfinite
 from typing import Any
 
 import numpy as np
-from scipy.special import lambertw
-from scipy.stats import chi2
+from scipy.special import gammainccinv, gammaincinv, lambertw
 
 from daq.estimate.arrays import FloatArray
 
@@ -137,8 +136,8 @@ def poisson_interval(counts: int, confidence: float) -> tuple[float, float]:
     if not 0 < confidence < 1:
         raise ValueError(f"the confidence must lie between 0 and 1, not {confidence}")
     tail = (1 - confidence) / 2
-    low = float(chi2.ppf(tail, 2 * counts)) / 2 if counts else 0.0
-    return low, float(chi2.isf(tail, 2 * counts + 2)) / 2
+    low = float(gammaincinv(counts, tail)) if counts else 0.0
+    return low, float(gammainccinv(counts + 1, tail))
 
 
 def _check(dead_time_s: float, kind: str) -> None:

@@ -8,7 +8,7 @@ from math import inf, isfinite, sqrt
 from typing import Any
 
 import numpy as np
-from scipy.stats import t as student
+from scipy.special import stdtrit
 
 from daq.estimate.arrays import FloatArray
 from daq.estimate.blocks import jackknife
@@ -152,7 +152,7 @@ def _bars(kappa: float, counting: float, replicates: FloatArray, plan: Plan) -> 
         return {"forecast_se": counting * shrink}
     se, freedom = jackknife(replicates)
     excess = se / counting if counting > 0 else None
-    half = float(student.ppf(0.975, freedom)) * se
+    half = float(stdtrit(freedom, 0.975)) * se
     outer = anytime_multiplier(pairs, plan.planned_pairs) * se if se > 0 else inf
     return {
         "kappa_se": se,

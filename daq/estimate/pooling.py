@@ -1,0 +1,162 @@
+"""Pooling: several nights become one value, with the scatter between them looked at first."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+from math import sqrt
+
+import numpy as np
+from scipy.special import chdtrc, fdtrc, stdtrit
+
+from daq.estimate.arrays import FloatArray
+
+STEPS = 200
+
+Interval = tuple[float, float]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Pooled:
+    """Nights taken together.
+
+    `value`, `se`, `dof`, `interval_95`: one kappa for all nights, Student's t. How far the nights scatter:
+    `q` with `q_p` (chi-squared, as if the standard errors were known), `welch_f` with `welch_p` (which knows
+    that they are estimated), `birge`, `i2`, and `tau`, the standard deviation between nights (Paule-Mandel);
+    with it `random_value`, `random_se`, `random_interval_95` (t with nights - 1; None for two nights).
+    """
+
+    value: float
+    se: float
+    dof: float
+    interval_95: Interval
+    q: float
+    q_p: float
+    birge: float
+    i2: float
+    welch_f: float
+    welch_p: float
+    tau: float
+    random_value: float
+    random_se: float
+    random_interval_95: Interval | None
+    weights: FloatArray
+
+
+def pool(
+    values: Sequence[float] | FloatArray,
+    ses: Sequence[float] | FloatArray,
+    dofs: Sequence[float] | FloatArray,
+    weights: Sequence[float] | FloatArray | None = None,
+    common: Sequence[Sequence[float]] | FloatArray | None = None,
+) -> Pooled:
+    """Return nights taken together, with every measure of their scatter.
+
+    Parameters
+    ----------
+    values, ses, dofs
+        By night: kappa, its jackknife standard error, and the degrees of freedom of that.
+    weights
+        Fixed by counts or exposure. Without them the inverse squared standard errors, which cover less than
+        they say when these are estimated from few pairs.
+    common
+        Columns of shared systematic loads, one row of numbers by night for each cause.
+
+    Notes
+    -----
+    A shared cause moves all nights together: it widens the standard error and is invisible to `q`.
+
+    References
+    ----------
+    .. [1] "On the comparison of several mean values: an alternative approach", Biometrika 38, 330 (1951).
+    .. [2] "Consensus values and weighting factors", J. Res. Natl. Bur. Stand. 87, 377 (1982), `tau`.
+    """
+    value, se, dof = (np.asarray(column, float) for column in (values, ses, dofs))
+    _check(value, se, dof)
+    loads = np.zeros((0, len(value))) if common is None else np.asarray(common, float).reshape(-1, len(value))
+    covariance = np.diag(se**2) + loads.T @ loads
+    shares = _shares(covariance, weights)
+    mean = float(shares @ value)
+    variance = float(shares @ covariance @ shares)
+    freedom = variance**2 / float(np.sum((shares * se) ** 4 / dof))
+    q = _q(value, covariance)
+    nights = len(value)
+    f, f_p = _welch(value, se, dof)
+    tau2 = _tau2(value, se)
+    random_mean, random_se = _with_tau2(value, se, tau2)
+    return Pooled(
+        value=mean,
+        se=sqrt(variance),
+        dof=freedom,
+        interval_95=_interval(mean, sqrt(variance), freedom),
+        q=q,
+        q_p=float(chdtrc(nights - 1, q)),
+        birge=sqrt(q / (nights - 1)),
+        i2=max(0.0, 1 - (nights - 1) / q) if q > 0 else 0.0,
+        welch_f=f,
+        welch_p=f_p,
+        tau=sqrt(tau2),
+        random_value=random_mean,
+        random_se=random_se,
+        random_interval_95=_interval(random_mean, random_se, nights - 1) if nights > 2 else None,
+        weights=shares,
+    )
+
+
+def _check(value: FloatArray, se: FloatArray, dof: FloatArray) -> None:
+    if len(value) < 2 or not len(value) == len(se) == len(dof):
+        raise ValueError(
+            "pooling needs a value, a standard error and degrees of freedom for two nights or more"
+        )
+    if not (np.isfinite(value).all() and np.all(se > 0) and np.all(dof > 0)):
+        raise ValueError(
+            "every night needs a finite value, a standard error and degrees of freedom above zero"
+        )
+
+
+def _shares(covariance: FloatArray, weights: Sequence[float] | FloatArray | None) -> FloatArray:
+    raw = (
+        np.linalg.solve(covariance, np.ones(len(covariance)))
+        if weights is None
+        else np.asarray(weights, float)
+    )
+    return np.asarray(raw / raw.sum())
+
+
+def _q(value: FloatArray, covariance: FloatArray) -> float:
+    rest = value - _shares(covariance, None) @ value
+    return float(rest @ np.linalg.solve(covariance, rest))
+
+
+def _interval(mean: float, se: float, dof: float) -> Interval:
+    half = float(stdtrit(dof, 0.975)) * se
+    return mean - half, mean + half
+
+
+def _welch(value: FloatArray, se: FloatArray, dof: FloatArray) -> tuple[float, float]:
+    nights = len(value)
+    shares = se**-2 / np.sum(se**-2)
+    spread = float(np.sum((1 - shares) ** 2 / dof))
+    q = _q(value, np.diag(se**2))
+    f = q / (nights - 1) / (1 + 2 * (nights - 2) * spread / (nights**2 - 1))
+    if spread == 0:
+        return f, float(chdtrc(nights - 1, f * (nights - 1)))
+    return f, float(fdtrc(nights - 1, (nights**2 - 1) / (3 * spread), f))
+
+
+def _tau2(value: FloatArray, se: FloatArray) -> float:
+    """Return the variance between nights that makes the weighted squares nights - 1, or zero."""
+    tau2 = 0.0
+    for _ in range(STEPS):
+        inverse = 1 / (se**2 + tau2)
+        squares = inverse * (value - inverse @ value / inverse.sum()) ** 2
+        step = float((squares.sum() - (len(value) - 1)) / (squares @ inverse)) if squares.any() else 0.0
+        if step <= 1e-15 * tau2:  # Newton's method from the left: the steps are positive up to rounding
+            break
+        tau2 += step
+    return tau2
+
+
+def _with_tau2(value: FloatArray, se: FloatArray, tau2: float) -> tuple[float, float]:
+    inverse = 1 / (se**2 + tau2)
+    return float(inverse @ value / inverse.sum()), float(inverse.sum() ** -0.5)
