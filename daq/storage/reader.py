@@ -16,8 +16,8 @@ from daq.estimate.use import use
 from daq.storage.journal import Snapshot, check_format, snapshot
 from daq.storage.layout import Column, columns, looked_up, planned
 from daq.storage.rows import Rows
-from daq.storage.seal import ITINERARY, ZARR
-from daq.storage.trouble import rim, stored
+from daq.storage.seal import FINISHED, ITINERARY, ZARR
+from daq.storage.trouble import stored
 
 
 def open_visits(folder: Path) -> xr.Dataset:
@@ -33,60 +33,62 @@ def open_visits(folder: Path) -> xr.Dataset:
     StorageError
         When there is no run, or a part of it is damaged; the sentence says which.
     """
-    folder = Path(folder)
-    held = snapshot(folder)
-    with rim(folder / ZARR):
-        root = _root(folder)
-        meta = held.meta if held else dict(root.attrs.asdict())
-        _refuse_unfinished(held, meta, folder)
-        arrays = _set_aside_incomplete(_measured(root, held, meta))
-        arrays.update(_looked_up(root, arrays, meta))
+    root, held, meta = _opened(Path(folder))
+    arrays = _set_aside_incomplete(_measured(root, held, meta))
+    arrays.update(_looked_up(root, arrays, meta))
     return _dataset((*columns(meta), *looked_up()), arrays, meta)
 
 
 def open_itinerary(folder: Path) -> xr.Dataset:
     """Return what was planned: dimension `planned` (visits) and `position` (weights and signs)."""
-    meta = read_meta(folder)
-    with rim(Path(folder) / ZARR):
-        root = _root(Path(folder))
-        group = root[ITINERARY]
-        table = planned(int(meta["slits"]), meta["signs"])
-        return _dataset(table, {column.name: _whole(group, column.name) for column in table}, meta)
+    root, _, meta = _opened(Path(folder), rows=0)
+    table = planned(int(meta["slits"]), meta["signs"])
+    return _dataset(
+        table, {column.name: _whole(root, f"{ITINERARY}/{column.name}") for column in table}, meta
+    )
 
 
 def read_meta(folder: Path) -> dict[str, Any]:
     """Return what the run is: its meta data, with its results once it is finished."""
-    folder = Path(folder)
-    held = snapshot(folder, stop=0)
-    with rim(folder / ZARR):
-        meta = held.meta if held else dict(_root(folder).attrs.asdict())
-    _refuse_unfinished(held, meta, folder)
-    return meta
+    return _opened(Path(folder), rows=0)[2]
 
 
 def planned_stands(folder: Path) -> NDArray[np.int64]:
     """Return the stand of every planned visit."""
-    with rim(Path(folder) / ZARR):
-        return _whole(_root(Path(folder))[ITINERARY], "stand")
+    return _whole(_opened(Path(folder), rows=0)[0], f"{ITINERARY}/stand")
 
 
-def _root(folder: Path) -> zarr.Group:
-    return zarr.open_group(LocalStore(folder / ZARR, read_only=True), mode="r", use_consolidated=False)
-
-
-def _refuse_unfinished(held: Snapshot | None, meta: dict[str, Any], folder: Path) -> None:
-    if held is None and not meta.get("finished"):
-        raise StorageError(
-            "the run was broken off while its folder was being made, so it holds no visit",
-            where=str(folder),
-            remedy="Remove the folder and start the run again",
-        )
-    check_format(meta, folder)
-
-
-def _whole(group: Any, name: str, stop: int | None = None) -> NDArray[Any]:
+def _opened(folder: Path, rows: int | None = None) -> tuple[zarr.Group, Snapshot | None, dict[str, Any]]:
+    """Return the Zarr group, what the journal holds (rows below `rows`) and the meta data."""
+    if not folder.is_dir():
+        raise StorageError("there is no such run", where=str(folder), remedy="Check the path")
+    held = snapshot(folder, rows)
     try:
-        return np.asarray(group[name][:stop])
+        store = LocalStore(folder / ZARR, read_only=True)
+        root = zarr.open_group(store, mode="r", use_consolidated=False)
+        meta = held.meta if held else dict(root.attrs.asdict())
+    except (OSError, ValueError, KeyError) as error:
+        if held is None and isinstance(error, FileNotFoundError):
+            raise never_begun(folder) from error
+        raise stored(error, folder / ZARR) from error
+    if held is None and not meta.get(FINISHED):
+        raise never_begun(folder)
+    check_format(meta, folder)
+    return root, held, meta
+
+
+def never_begun(folder: Path) -> StorageError:
+    """Return the error for a folder that was left before its journal was whole."""
+    return StorageError(
+        "the run was broken off while its folder was being made, so it holds no visit",
+        where=str(folder),
+        remedy="Remove the folder and start the run again",
+    )
+
+
+def _whole(group: zarr.Group, name: str, stop: int | None = None) -> NDArray[Any]:
+    try:
+        return np.asarray(group[name][:stop])  # type: ignore[index]
     except (OSError, ValueError, KeyError, RuntimeError) as error:
         raise stored(error, f"{group.store_path}/{name}") from error
 
@@ -111,13 +113,15 @@ def _set_aside_incomplete(arrays: dict[str, NDArray[Any]]) -> dict[str, NDArray[
 def _looked_up(
     root: zarr.Group, arrays: dict[str, NDArray[Any]], meta: dict[str, Any]
 ) -> dict[str, NDArray[Any]]:
-    group = root[ITINERARY]
     visit = arrays["visit"]
-    found = {name: _by_visit(_whole(group, name), visit) for name in ("stand", "lap", "pair", "forward")}
-    taken = use(
-        found["stand"], arrays["attempt"], arrays["opening"], arrays["quality"], len(meta["openings"])
-    )
-    return {**found, "use": taken.astype(np.int64)}
+    names = ("stand", "lap", "pair", "forward")
+    found = {name: _by_visit(_whole(root, f"{ITINERARY}/{name}"), visit) for name in names}
+    known = found["stand"] >= 0
+    rows = (found["stand"], arrays["attempt"], arrays["opening"], arrays["quality"])
+    taken = np.zeros(len(visit), np.int64)
+    stand, attempt, opening, quality = (column[known] for column in rows)
+    taken[known] = use(stand, attempt, opening, quality, len(meta["openings"]))
+    return {**found, "use": taken}
 
 
 def _by_visit(column: NDArray[np.int64], visit: NDArray[np.int64]) -> NDArray[np.int64]:

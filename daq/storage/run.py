@@ -18,17 +18,15 @@ from daq.storage.disk import Disk
 from daq.storage.journal import JOURNAL, Journal, create_journal, drop_journal, snapshot
 from daq.storage.layout import CHUNK, FORMAT, looked_up
 from daq.storage.lock import LOCK, lock_run
-from daq.storage.reader import open_visits, planned_stands
+from daq.storage.reader import open_visits, planned_stands, read_meta
 from daq.storage.rows import Rows
-from daq.storage.seal import ZARR, DurableStore, add_array, create_zarr, open_root, write_rows
+from daq.storage.seal import FINISHED, ZARR, DurableStore, add_array, create_zarr, open_root, write_rows
 from daq.storage.sealer import Sealer
 from daq.storage.texts import write_texts
 from daq.storage.trouble import rim
 
 if TYPE_CHECKING:
     from daq.itinerary.compose import Itinerary
-
-FINISHED = "finished"
 
 
 class Archive:
@@ -247,17 +245,8 @@ def _refuse_second(folder: Path) -> None:
 
 
 def _no_journal(folder: Path) -> StorageError:
-    try:
-        attributes = zarr.open_group(folder / ZARR, mode="r").attrs.asdict()
-    except (OSError, ValueError):
-        attributes = {}
-    if attributes.get(FINISHED):
-        return StorageError("the run is finished", where=str(folder), remedy="Start a new run")
-    return StorageError(
-        "the run was broken off while its folder was being made, so it holds no visit",
-        where=str(folder),
-        remedy="Remove the folder and start the run again",
-    )
+    read_meta(folder)  # raises unless the run is finished
+    return StorageError("the run is finished", where=str(folder), remedy="Start a new run")
 
 
 def _tries(folder: Path, stands: list[int]) -> dict[int, int]:

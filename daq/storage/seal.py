@@ -23,6 +23,7 @@ if TYPE_CHECKING:
 
 ZARR = "run.zarr"
 ITINERARY = "itinerary"
+FINISHED = "finished"  # attribute of a run that is whole; it counts only when the journal is gone
 blosc.use_threads = False  # a pool of threads for chunks of 32 kB costs more than it gives
 # A chunk of fill values is written too: then a file that is missing is damage.
 _CONFIG: ArrayConfigParams = {"write_empty_chunks": True}

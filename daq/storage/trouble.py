@@ -28,7 +28,6 @@ _BY_ERRNO = {
     errno.EPERM: _READ_ONLY,
     errno.ENOTDIR: _NO_FOLDER,
     errno.EEXIST: ("it exists already", "Choose another folder, or go on with `--resume`"),
-    errno.ENOENT: ("there is no such run", "Check the path; runs stand in the lab's folder `runs`"),
 }
 _BY_NAME = {
     "SQLITE_FULL": _FULL,

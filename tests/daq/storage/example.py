@@ -2,13 +2,17 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
+from pathlib import Path
 from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from daq.itinerary.compose import Itinerary
 from daq.records import Quality, Reading
+from daq.storage.disk import Disk
+from daq.storage.run import Archive, create_run
 
 OPENINGS = (0, 1, 2, 3)
 POSITIONS_MM = (-1.5, 0.0, 1.5)
@@ -79,3 +83,32 @@ def reading(visit: int, attempt: int = 1) -> Reading:
         quality=Quality.OWN_LIVE_TIME if visit % 5 == 0 else Quality.GOOD,
         reason=0,
     )
+
+
+def started(folder: Path, chunk: int = 4096, laps: int = 4, disk: Disk | None = None) -> Archive:
+    """Return the archive of a new run in `folder`."""
+    return create_run(folder, texts=TEXTS, itinerary=planned_visits(laps), meta=META, chunk=chunk, disk=disk)
+
+
+def expected(readings: Sequence[Reading]) -> dict[str, NDArray[Any]]:
+    """Return what the measured columns must hold after these readings, worked out column by column."""
+    nan, plain = float("nan"), ("visit", "attempt", "opening", "gate_open_ns", "gate_close_ns", "utc_ns")
+    real = ("position_mm", "dwell_s", "live_s")
+    whole = {name: np.array([getattr(r, name) for r in readings], np.int64) for name in (*plain, "repeats")}
+    return {
+        **whole,
+        **{name: np.array([getattr(r, name) for r in readings], np.float64) for name in real},
+        "quality": np.array([int(r.quality) for r in readings], np.int64),
+        "reason": np.array([r.reason for r in readings], np.int64),
+        "values": np.array([r.values for r in readings], np.float64).astype(np.int64).reshape(-1, 2),
+        "values_var": np.array([r.values_var or (nan, nan) for r in readings], np.float64).reshape(-1, 2),
+        **{
+            f"encoder_{axis}_{edge}_mm": np.array([r.encoder_mm[axis][at] for r in readings], np.float64)
+            for axis in ("mask", "detector")
+            for at, edge in enumerate(("open", "close"))
+        },
+        "sensor_room": np.array([r.sensors.get("room", (nan,))[0] for r in readings], np.float64),
+        "sensor_room_at_ns": np.array(
+            [r.sensors["room"][2] if "room" in r.sensors else -1 for r in readings], np.int64
+        ),
+    }
