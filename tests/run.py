@@ -1,7 +1,8 @@
 """Set up the test environment and run all tests, the browser's too: `python3 tests/run.py [arguments]`.
 
 Arguments go to pytest. Standard library only. Makes `.venv` beside the project, installs it with its test
-tools at the pinned versions, finds Chromium (installs it when run as root on Debian), and runs pytest. A second run skips what is done.
+tools at the pinned versions, finds Chromium (installs it when run as root on Debian), and runs pytest. A
+second run skips what is done.
 """
 
 from __future__ import annotations

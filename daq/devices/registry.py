@@ -92,6 +92,7 @@ def _devices(rig: Rig, built: Sequence[tuple[str, Device]]) -> Devices:
         detector=stages[rig.detector.axis],
         counter=counter,
         sensors=tuple(cast(Sensor, device) for port, device in built if port == "sensor"),
+        stages=tuple(stages.values()),
         all=tuple(device for _, device in built),
         tolerance_mm={name: axis.tolerance_mm for name, axis in rig.axes.items()},
     )

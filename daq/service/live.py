@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import math
 import time
 from collections import deque
 from collections.abc import Mapping
@@ -12,7 +11,7 @@ from typing import Any
 
 import numpy as np
 
-from daq.estimate import History, Running
+from daq.estimate import Running
 from daq.estimate.watch import Watched, concerns
 from daq.itinerary import Itinerary
 from daq.ports import Clock
@@ -22,7 +21,6 @@ from daq.storage.feed import write_feed
 EVERY_S = 1.0
 COLUMNS = 400
 LOG_LINES = 30
-HISTORY = ("kappa", "interval_low", "interval_high", "whole_low", "whole_high")
 
 
 class Live:
@@ -99,7 +97,7 @@ class Live:
             "openings": self._itinerary.openings.tolist(),
             **_patterns(figures),
             "kappa": _kappa(figures),
-            "history": _history(running.history(), self._started_ns),
+            "history": running.history(),
             "rate": _columns(self._hours, self._levels, float(self._expected.mean())),
             "sensors": {} if self._last is None else {k: v[:2] for k, v in self._last.sensors.items()},
             "warnings": self._warnings(figures, run_ns),
@@ -165,22 +163,6 @@ def _kappa(figures: Mapping[str, Any]) -> dict[str, Any]:
         "counting_se": figures["kappa_counting_se"],
         **{key: figures[key] for key in (*same, "goal_se", "forecast_se")},
     }
-
-
-def _history(history: History, started_ns: int) -> dict[str, list[float | None]]:
-    """Return what was known after each pair, thinned to COLUMNS points; the newest stays."""
-    many = history.kappa.size
-    chosen = np.unique(np.linspace(0, many - 1, min(COLUMNS, many)).astype(int)) if many else []
-    hours = (history.closed_ns - started_ns) / 3.6e12
-    columns = {"hours": hours} | {name: getattr(history, name) for name in HISTORY}
-    return {
-        name: [_finite(value) for value in np.asarray(column)[chosen].tolist()]
-        for name, column in columns.items()
-    }
-
-
-def _finite(value: float) -> float | None:
-    return value if math.isfinite(value) else None
 
 
 def _columns(hours: list[float], levels: list[float], scale_hz: float) -> dict[str, list[float]]:
