@@ -130,7 +130,7 @@ def _one_sided(steps: FloatArray) -> FloatArray:
 
 
 def _one_sided_run_length(allowance: float, h: float) -> float:
-    """Return L(0), the mean run length of one side: L(u) = 1 + L(0) F(a - u) + INT_0^h L(y) f(y + a - u) dy."""
+    """Return the mean run length L(0) of one side: L(u) = 1 + L(0) F(a - u) + INT_0^h L f(y + a - u) dy."""
     nodes, shares = _nodes(0.0, h, h)
     starts = np.append(nodes, 0.0)[:, None]
     kernel = np.hstack([_bell(nodes + allowance - starts) * shares, ndtr(allowance - starts)])

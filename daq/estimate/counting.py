@@ -108,7 +108,7 @@ def dead_time_two_source_s(first_hz: float, second_hz: float, both_hz: float, ba
     Raises
     ------
     ValueError
-        If the rates fit no dead time.
+        If the rates fit no dead time. Noise may make a short one come out below zero.
 
     References
     ----------
@@ -117,7 +117,8 @@ def dead_time_two_source_s(first_hz: float, second_hz: float, both_hz: float, ba
     x = first_hz * second_hz - background_hz * both_hz
     y = first_hz * second_hz * (both_hz + background_hz) - background_hz * both_hz * (first_hz + second_hz)
     z = y * (first_hz + second_hz - both_hz - background_hz) / x**2 if x else np.inf
-    if y == 0 or not z <= 1:
+    # Both together must be more than each alone: where they are not, the formula gives 1/rate, saturation.
+    if y == 0 or not z <= 1 or not both_hz > max(first_hz, second_hz):
         raise ValueError(
             f"the rates {first_hz:g}, {second_hz:g}, {both_hz:g} and {background_hz:g} 1/s fit no dead time"
         )
