@@ -1,4 +1,8 @@
-"""Lines: a byte stream cut into lines, every wait with a deadline on the run clock."""
+"""Lines: a byte stream cut into lines, every wait with a deadline on the run clock.
+
+It keeps account of the replies that are owed: one that did not come in time may come later, and then looks
+like the reply to another question.
+"""
 
 from __future__ import annotations
 
@@ -29,20 +33,33 @@ class Lines:
         No line is longer.
     where
         Device and address, for messages.
+
+    Attributes
+    ----------
+    rest
+        What came with the last line, behind its end.
     """
 
     def __init__(self, clock: Clock, connection: Connection, end: bytes, most_bytes: int, where: str) -> None:
         self._clock, self._connection, self._where = clock, connection, where
         self._end, self._most_bytes = end, most_bytes
-        self.rest = b""  # came with the last line, behind its end
+        self.rest = b""
+        # Two counters, since one thread may send (a stop) while another reads.
+        self._asked, self._came, self._asked_ns = 0, 0, 0
 
-    def send(self, data: bytes) -> None:
-        """Write all bytes at once; raises DeviceError "lost"."""
+    def send(self, data: bytes, replies: int = 1) -> None:
+        """Write all bytes at once; `replies` may come to them. Raises DeviceError "lost"."""
         log.debug("%s < %r", self._where, data)
+        self.owe(replies)
         try:
             self._connection.send(data)
         except OSError as error:
             raise self._lost(str(error)) from error
+
+    def owe(self, replies: int) -> None:
+        """Expect that so many replies may come to what is sent now, or was sent by somebody before."""
+        self._asked_ns = self._clock.now_ns()
+        self._asked += replies
 
     def close(self) -> None:
         """Let the connection go."""
@@ -64,6 +81,7 @@ class Lines:
                 raise self._timeout(asked)
             self.rest += self._receive()
         line, _, self.rest = self.rest.partition(self._end)
+        self._came += 1
         log.debug("%s > %r", self._where, line)
         if len(line) > self._most_bytes or not line.isascii():
             raise self._garbage(f"{line[:40]!r} in reply to {asked!r}")
@@ -74,22 +92,39 @@ class Lines:
         dropped, self.rest = self.rest, b""
         while data := self._receive():
             dropped += data
+        self._came += dropped.count(self._end)
         return dropped
 
-    def drain(self, quiet_ns: int, most_ns: int) -> bytes:
-        """Return what comes, and so drop it, until nothing has come for `quiet_ns`.
+    def drain(self, quiet_ns: int, late_ns: int, most_ns: int) -> bytes:
+        """Return, and so drop, what comes until all replies have come that may come.
+
+        Parameters
+        ----------
+        quiet_ns
+            So long nothing has come at the end.
+        late_ns
+            No reply comes later than this after its question.
+        most_ns
+            The device has to fall silent after this.
 
         Raises
         ------
         DeviceError
-            "garbage" when the device has not fallen silent after `most_ns`.
+            "garbage" when it does not, "lost" at the end of the stream.
         """
         dropped, give_up_ns = self.waiting(), self._clock.now_ns() + most_ns
-        while self._clock.wait_readable(self._connection, self._clock.now_ns() + quiet_ns):
+        while self._clock.wait_readable(self._connection, self._silent_ns(quiet_ns, late_ns)):
             dropped += self.waiting()
             if self._clock.now_ns() > give_up_ns:
                 raise self._garbage("the device does not fall silent")
+        self._came = self._asked
         return dropped
+
+    def _silent_ns(self, quiet_ns: int, late_ns: int) -> int:
+        quiet_until_ns = self._clock.now_ns() + quiet_ns
+        if self._came >= self._asked:
+            return quiet_until_ns
+        return max(quiet_until_ns, self._asked_ns + late_ns)
 
     def _receive(self) -> bytes:
         try:

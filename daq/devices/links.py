@@ -3,7 +3,8 @@
 A late or doubled reply shifts every reply after it by one, and a stale "0" looks like a count. Hence: what
 waits before a command belongs to nobody, so it is dropped and the identity asked until it comes back; a
 reply is matched whole; a command whose reply stayed away leaves the stream in doubt, and so does whoever
-writes past the queue (a stop).
+writes past the queue (a stop); and a reply that stayed away is awaited, as long as it may still come,
+before anything else is asked: or it would land between the next question and its answer.
 """
 
 from __future__ import annotations
@@ -26,7 +27,10 @@ _IDENTITY_TRIES = 3
 
 @dataclass(frozen=True, slots=True)
 class Wire:
-    """How a device speaks: its identity, the ends of a line, limits and waiting times."""
+    """How a device speaks: its identity, the ends of a line, limits and waiting times.
+
+    `late_s` is how late a reply can come at most, after its question; it is waited only after an upset.
+    """
 
     identity: str = "*IDN?"
     identity_reply: str = r"\S.*"
@@ -34,6 +38,7 @@ class Wire:
     reply_end: str = "\n"
     timeout_s: float = 0.5
     quiet_s: float = 0.05
+    late_s: float = 1.5
     most_bytes: int = 256
     repeats: int = 2  # of a command that is safe to repeat
 
@@ -137,7 +142,7 @@ class Link:
         self._take_turn()
         try:
             self._step_in(urgent)
-            self._write(text, urgent)
+            self._write(text, urgent, replies=0)
         finally:
             self._turn.give()
 
@@ -226,22 +231,25 @@ class Link:
             what = f"nobody answers ({error})"
             raise DeviceError(what, where=self._where, remedy=CHECK, kind="lost") from error
         self._lines = Lines(self._clock, connection, self._end, wire.most_bytes, self._where)
+        if self.identity:  # a serial-to-LAN box may bring what the lost connection was owed
+            self._lines.owe(1)
         try:
             self._resync(b"", self._urgent)
         except DeviceError:
             self.close()
             raise
 
-    def _write(self, text: str, urgent: int) -> None:
+    def _write(self, text: str, urgent: int, replies: int = 1) -> None:
         data = (text + self._wire.send_end).encode("ascii")
         with self._writing:
             if self._urgent != urgent:
                 raise self._stopped(text)
-            self._opened().send(data)
+            self._opened().send(data, replies)
 
     def _drain(self) -> bytes:
-        quiet_ns, most_ns = round(self._wire.quiet_s * 1e9), round(self._wire.timeout_s * 1e9)
-        return self._opened().drain(quiet_ns, most_ns)
+        wire = self._wire
+        quiet_ns, late_ns = round(wire.quiet_s * 1e9), round(wire.late_s * 1e9)
+        return self._opened().drain(quiet_ns, late_ns, late_ns + round(wire.timeout_s * 1e9))
 
     def _drop(self, unasked: bytes) -> None:
         if unasked:
