@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable, Sequence
 
 import numpy as np
@@ -65,7 +66,7 @@ def mean_relative(factors: Sequence[Factor], start_s: float, stop_s: float) -> f
     Trapezia between the points of the random walk's grid, where its logarithm is straight: for a step of s in
     the logarithm the error is s**2 / 12 of the mean (below 1e-7 for 10 % per square root of an hour).
     """
-    first, last = np.floor(start_s / GRID_S) + 1, np.ceil(stop_s / GRID_S)
-    time_s = np.concatenate([[start_s], np.arange(first, last) * GRID_S, [stop_s]])
-    strength = relative(factors, time_s)
-    return float(np.trapezoid(strength, time_s) / (stop_s - start_s))
+    first, last = int(start_s // GRID_S) + 1, math.ceil(stop_s / GRID_S)
+    time_s = np.array([start_s, *(step * GRID_S for step in range(first, last)), stop_s])
+    strength, width_s = relative(factors, time_s), time_s[1:] - time_s[:-1]
+    return float(width_s @ (strength[1:] + strength[:-1])) / (2 * (stop_s - start_s))
