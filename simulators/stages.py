@@ -68,7 +68,7 @@ class StageController:
 
     def _answer(self, line: str) -> str | None:
         try:
-            return self._obey(parse(line))
+            return self._obey(parse(line)) if line.strip() else None
         except RefusalError as refusal:
             return f"refused {refusal.number} {refusal.text}"
 
@@ -99,7 +99,8 @@ class StageController:
             self._home(axes or dict.fromkeys(self._tracks, 0.0))
         else:
             self._motion = act
-            self._move(axes)
+            if axes:
+                self._move(axes)
         return TAKEN
 
     def _home(self, axes: Mapping[str, float]) -> None:

@@ -55,7 +55,7 @@ def test_non_paralysable_counts_of_a_short_gate_have_the_exact_distribution(
 
     counts = draw(rate_hz, gate_s, dead_time_s, "non-paralysable")
 
-    # at least k counts: the k-th arrival of a Poisson process comes within the time that k - 1 dead times leave
+    # at least k counts: the k-th Poisson arrival comes within the time that k - 1 dead times leave
     most = int(counts.max()) + 2
     live_s = np.maximum(gate_s - np.arange(most) * dead_time_s, 0)
     at_least = np.concatenate([[1.0], gammainc(np.arange(1, most + 1), rate_hz * live_s)])
