@@ -8,9 +8,9 @@ from dataclasses import dataclass, field
 from pathlib import Path
 
 import xarray as xr
-from daq.devices.registry import open_devices
 
 from daq.devices.clock import RealClock
+from daq.devices.registry import open_devices
 from daq.errors import DaqError, DeviceError, StorageError
 from daq.estimate import Running
 from daq.itinerary import Itinerary, plan_of

@@ -16,11 +16,11 @@ class Progress:
     """One line on a terminal, rewritten at most twice a second; silent when nobody is looking."""
 
     def __init__(
-        self, planned: int, stream: TextIO = sys.stderr, now_s: Callable[[], float] = time.monotonic
+        self, planned: int, stream: TextIO | None = None, now_s: Callable[[], float] = time.monotonic
     ):
-        self._planned, self._stream, self._now_s = planned, stream, now_s
+        self._planned, self._stream, self._now_s = planned, stream or sys.stderr, now_s
         self._shown_s = float("-inf")
-        self._wanted = stream.isatty()
+        self._wanted = self._stream.isatty()
 
     def took(self, reading: Reading) -> None:
         """Show how far the run is."""
