@@ -25,18 +25,15 @@ def main(arguments: Sequence[str] | None = None) -> int:
     )
     reader.add_argument("rig", type=Path, help="rig file with a table [bench]")
     wanted = reader.parse_args(arguments)
-    stop = threading.Event()
-    for number in (signal.SIGINT, signal.SIGTERM):
-        signal.signal(number, lambda *_: stop.set())
     try:
-        _serve(_read(wanted.rig), stop)
+        _serve(_read(wanted.rig))
     except DaqError as error:
         sys.stderr.write(f"{error}\n")
         return error.exit_status
     return 0
 
 
-def _serve(rig: Rig, stop: threading.Event) -> None:
+def _serve(rig: Rig) -> None:
     settings = read_settings(rig)
     built = build(rig, settings, settings.seed, RealClock(), {})
     try:
@@ -47,6 +44,9 @@ def _serve(rig: Rig, stop: threading.Event) -> None:
     except OSError as error:
         problem = f"rig {rig.name}: an address of [devices] cannot be listened on ({error}). Free its port."
         raise DescriptionError((problem,)) from error
+    stop = threading.Event()
+    for number in (signal.SIGINT, signal.SIGTERM):
+        signal.signal(number, lambda *_: stop.set())
     for name, listener in listeners.items():
         sys.stdout.write(f"{name}: {listener.address}\n")
     sys.stdout.flush()

@@ -1,0 +1,96 @@
+"""What every counter promises."""
+
+from __future__ import annotations
+
+import math
+
+import pytest
+
+from daq.errors import DeviceError
+from daq.ports import Clock, Counter, Devices
+from simulators.bench import WaveletBench
+from tests.examples import lantern_rig
+
+S = 1_000_000_000
+READOUT_S = lantern_rig().devices["counter"].readout_s
+
+
+@pytest.fixture
+def counter(devices: Devices) -> Counter:
+    return devices.counter
+
+
+@pytest.fixture
+def clock(bench: WaveletBench) -> Clock:
+    return bench.clock
+
+
+class TestCounter:
+    """The promises of `daq.ports.Counter`."""
+
+    def test_the_gate_is_open_for_the_dwell(self, counter: Counter, clock: Clock) -> None:
+        idle = counter.busy()
+
+        counter.arm(2.2)
+
+        assert (idle, counter.busy()) == (False, True)
+        clock.sleep_until(clock.now_ns() + 2_199_999_999)
+        assert counter.busy()
+        clock.sleep_until(clock.now_ns() + 1)
+        assert not counter.busy()
+
+    def test_reading_waits_for_what_is_left_of_gate_and_readout(self, counter: Counter, clock: Clock) -> None:
+        counter.arm(1.5)
+        begun_ns = clock.now_ns()
+
+        counted = counter.read()
+
+        assert clock.now_ns() == begun_ns + round((1.5 + READOUT_S) * S)
+        assert (counted.live_s, counted.overflow, len(counted.values)) == (1.5, False, 1)
+        assert counted.values[0] > 0 and isinstance(counted.values[0], int)
+
+    def test_reading_late_waits_no_more_and_gives_the_same_twice(
+        self, counter: Counter, clock: Clock
+    ) -> None:
+        counter.arm(1.0)
+        late_ns = clock.now_ns() + 5 * S
+        clock.sleep_until(late_ns)
+
+        counts = [counter.read(), counter.read()]
+
+        assert counts[0] == counts[1]
+        assert clock.now_ns() == late_ns
+
+    def test_nothing_armed_is_nothing_to_read(self, counter: Counter) -> None:
+        with pytest.raises(DeviceError, match="no gate to read"):
+            counter.read()
+
+    def test_an_aborted_gate_cannot_be_read_and_the_next_one_can(self, counter: Counter) -> None:
+        counter.arm(1.0)
+
+        counter.abort()
+
+        assert not counter.busy()
+        with pytest.raises(DeviceError, match="no gate to read"):
+            counter.read()
+        counter.arm(0.5)
+        assert counter.read().live_s == 0.5
+
+    @pytest.mark.parametrize("dwell_s", [0.0, -1.0, math.nan, math.inf, 1e-9, 1e9])
+    def test_a_gate_that_cannot_be_counted_is_refused_and_the_next_one_is_not(
+        self, counter: Counter, dwell_s: float
+    ) -> None:
+        with pytest.raises(DeviceError) as refusal:
+            counter.arm(dwell_s)
+
+        assert refusal.value.kind == "refused"
+        counter.arm(1.0)
+        assert counter.read().live_s == 1.0
+
+    def test_arming_again_forgets_the_gate_before(self, counter: Counter, clock: Clock) -> None:
+        counter.arm(5.0)
+        clock.sleep_until(clock.now_ns() + S)
+
+        counter.arm(0.25)
+
+        assert counter.read().live_s == 0.25
