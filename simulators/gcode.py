@@ -5,6 +5,7 @@ from __future__ import annotations
 import re
 from collections.abc import Mapping
 from dataclasses import dataclass
+from functools import lru_cache
 
 _COMMENT = re.compile(r"\([^()]*\)")
 _WORD = re.compile(r"([A-Z])([-+]?(?:\d+\.?\d*|\.\d+))")
@@ -27,6 +28,7 @@ class Block:
     values: Mapping[str, float]
 
 
+@lru_cache(maxsize=1024)  # a night repeats the same few lines
 def parse(line: str) -> Block:
     """Return the words of a line; blanks, comments in parentheses and case do not matter.
 

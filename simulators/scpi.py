@@ -12,6 +12,7 @@ import itertools
 import re
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass
+from functools import lru_cache
 from typing import Any
 
 ERRORS: Mapping[int, str] = {
@@ -126,10 +127,11 @@ def _node(name: str, optional: bool) -> set[str]:
     return {name.upper(), short} | ({""} if optional else set())
 
 
-def _units(message: str) -> list[str]:
+@lru_cache(maxsize=1024)  # a night repeats the same few messages
+def _units(message: str) -> tuple[str, ...]:
     if not (message.isascii() and message.replace("\t", " ").isprintable()):
         raise FaultError(-101)
-    return [unit.strip() for unit in _UNIT.findall(message) if unit.strip()]
+    return tuple(unit.strip() for unit in _UNIT.findall(message) if unit.strip())
 
 
 def _full(header: str, path: str) -> str:

@@ -53,7 +53,7 @@ class ScpiSensor:
     def read(self) -> Mapping[str, tuple[float, str]]:
         """Return name -> (value, unit)."""
         expect = f"(?P<temperature>{_NUMBER});(?P<pressure>{_NUMBER})"
-        reply = self._link.ask(":MEAS:TEMP?;:MEAS:PRES?", expect, safe_to_repeat=True)
+        reply = self._link.ask(":MEAS:TEMP?;:MEAS:PRESSURE?", expect, safe_to_repeat=True)
         return {
             "temperature": (measured(reply["temperature"]), "K"),
             "pressure": (measured(reply["pressure"]), "Pa"),

@@ -27,7 +27,7 @@ class Rows:
         self.readings: list[Reading] = []
 
     def append_events(self, chunk: bytes) -> None:
-        raise NotImplementedError
+        raise NotImplementedError(f"{len(chunk)} bytes of events")
 
     def commit(self, reading: Reading) -> int:
         self.readings.append(reading)

@@ -197,9 +197,9 @@ def test_the_operation_event_is_latched_until_it_is_read() -> None:
 
 def test_preset_disables_the_status_groups_but_not_the_event_register() -> None:
     bench = Bench()
-    bench.ask("*ESE 1;:STAT:OPER:ENAB 16;:STAT:QUES:ENAB 1;:STAT:PRES")
+    bench.ask("*ESE 1;:STAT:OPER:ENAB 16;:STAT:QUESTIONABLE:ENAB 1;:STAT:PRESET")
 
-    assert bench.ask("STAT:OPER:ENAB?;:STAT:QUES:ENAB?;*ESE?") == "0;0;1"
+    assert bench.ask("STAT:OPER:ENAB?;:STAT:QUESTIONABLE:ENAB?;*ESE?") == "0;0;1"
 
 
 def test_operation_complete_is_over_at_once() -> None:
