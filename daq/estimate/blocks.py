@@ -2,14 +2,11 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
-
 import numpy as np
+from numpy.typing import ArrayLike
 
-from daq.estimate.arrays import FloatArray
 
-
-def jackknife(leave_one_out: Sequence[float] | FloatArray) -> tuple[float, int]:
+def jackknife(leave_one_out: ArrayLike) -> tuple[float, int]:
     """Return the delete-one standard error and its degrees of freedom.
 
     Parameters

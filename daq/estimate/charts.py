@@ -2,11 +2,11 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
 from dataclasses import dataclass
 from itertools import accumulate
 
 import numpy as np
+from numpy.typing import ArrayLike
 from scipy.special import ndtr
 
 from daq.estimate.arrays import FloatArray, IntArray
@@ -33,7 +33,7 @@ class Ewma:
     alarms: IntArray
 
 
-def cusum(values: Sequence[float] | FloatArray, target: float, k: float, h: float) -> Cusum:
+def cusum(values: ArrayLike, target: float, k: float, h: float) -> Cusum:
     """Return the tabular CUSUM of values; it is not set back after an alarm.
 
     Parameters
@@ -50,9 +50,7 @@ def cusum(values: Sequence[float] | FloatArray, target: float, k: float, h: floa
     return Cusum(high, low, np.flatnonzero((high > h) | (low > h)))
 
 
-def ewma(
-    values: Sequence[float] | FloatArray, target: float, sigma: float, weight: float, limit: float
-) -> Ewma:
+def ewma(values: ArrayLike, target: float, sigma: float, weight: float, limit: float) -> Ewma:
     """Return the exponentially weighted moving average of values, started at the target.
 
     Parameters

@@ -2,14 +2,13 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
-
 import numpy as np
+from numpy.typing import ArrayLike
 
 from daq.estimate.arrays import FloatArray, IntArray
 
 
-def allan_deviation(values: Sequence[float] | FloatArray, m: int, overlapping: bool = False) -> float:
+def allan_deviation(values: ArrayLike, m: int, overlapping: bool = False) -> float:
     """Return the Allan deviation of frequency-type data at an averaging factor.
 
     Parameters
@@ -40,10 +39,10 @@ def allan_deviation(values: Sequence[float] | FloatArray, m: int, overlapping: b
 
 
 def structure_function(
-    log_rate: Sequence[float] | FloatArray,
-    time_s: Sequence[float] | FloatArray,
-    lags_s: Sequence[float] | FloatArray,
-    log_rate_var: float | FloatArray | None = None,
+    log_rate: ArrayLike,
+    time_s: ArrayLike,
+    lags_s: ArrayLike,
+    log_rate_var: ArrayLike | None = None,
 ) -> FloatArray:
     """Return D(l) = E[(g(t + l) - g(t))^2] of the log rate g without counting noise; NaN without samples.
 
@@ -61,16 +60,16 @@ def structure_function(
     -----
     The variance of adjacent means, where the drift is slow, is D/2.
     """
-    log_rate, time_s = np.asarray(log_rate, float), np.asarray(time_s, float)
-    if len(log_rate) != len(time_s) or len(time_s) < 2 or not np.all(np.diff(time_s) > 0):
+    rates, times, lags = (np.atleast_1d(np.asarray(column, float)) for column in (log_rate, time_s, lags_s))
+    if len(rates) != len(times) or len(times) < 2 or not np.all(np.diff(times) > 0):
         raise ValueError("a structure function needs a rising time for each of two or more samples")
-    sample_s = float(np.median(np.diff(time_s)))
+    sample_s = float(np.median(np.diff(times)))
     if log_rate_var is None:
-        one, two = (_raw(log_rate, time_s, lag_s, sample_s) for lag_s in (sample_s, 2 * sample_s))
+        one, two = (_raw(rates, times, lag, sample_s) for lag in (sample_s, 2 * sample_s))
         floor = max(0.0, 2 * one - two) if np.isfinite(two) else 0.0
-        return np.array([_raw(log_rate, time_s, lag_s, sample_s) - floor for lag_s in lags_s])
-    noise = np.broadcast_to(np.asarray(log_rate_var, float), log_rate.shape)
-    return np.array([_raw(log_rate, time_s, lag_s, sample_s, noise) for lag_s in lags_s])
+        return np.array([_raw(rates, times, lag, sample_s) - floor for lag in lags])
+    noise = np.broadcast_to(np.asarray(log_rate_var, float), rates.shape)
+    return np.array([_raw(rates, times, lag, sample_s, noise) for lag in lags])
 
 
 def _raw(

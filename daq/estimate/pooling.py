@@ -2,11 +2,11 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
 from dataclasses import dataclass
-from math import sqrt
+from math import inf, sqrt
 
 import numpy as np
+from numpy.typing import ArrayLike
 from scipy.special import chdtrc, fdtrc, stdtrit
 
 from daq.estimate.arrays import FloatArray
@@ -44,11 +44,11 @@ class Pooled:
 
 
 def pool(
-    values: Sequence[float] | FloatArray,
-    ses: Sequence[float] | FloatArray,
-    dofs: Sequence[float] | FloatArray,
-    weights: Sequence[float] | FloatArray | None = None,
-    common: Sequence[Sequence[float]] | FloatArray | None = None,
+    values: ArrayLike,
+    ses: ArrayLike,
+    dofs: ArrayLike,
+    weights: ArrayLike | None = None,
+    common: ArrayLike | None = None,
 ) -> Pooled:
     """Return nights taken together, with every measure of their scatter.
 
@@ -78,7 +78,8 @@ def pool(
     shares = _shares(covariance, weights)
     mean = float(shares @ value)
     variance = float(shares @ covariance @ shares)
-    freedom = variance**2 / float(np.sum((shares * se) ** 4 / dof))
+    doubt = float(np.sum((shares * se) ** 4 / dof))
+    freedom = variance**2 / doubt if doubt > 0 else inf
     q = _q(value, covariance)
     nights = len(value)
     f, f_p = _welch(value, se, dof)
@@ -114,7 +115,7 @@ def _check(value: FloatArray, se: FloatArray, dof: FloatArray) -> None:
         )
 
 
-def _shares(covariance: FloatArray, weights: Sequence[float] | FloatArray | None) -> FloatArray:
+def _shares(covariance: FloatArray, weights: ArrayLike | None) -> FloatArray:
     raw = (
         np.linalg.solve(covariance, np.ones(len(covariance)))
         if weights is None

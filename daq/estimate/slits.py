@@ -6,6 +6,7 @@ from collections.abc import Mapping, Sequence
 from typing import Any
 
 import numpy as np
+from numpy.typing import ArrayLike
 
 from daq import openings
 from daq.estimate.arrays import FloatArray, IntArray
@@ -57,7 +58,7 @@ def slit_pattern(
 
 def expected_rates_hz(
     slits_of: Mapping[int, Slits],
-    positions_mm: Sequence[float] | FloatArray,
+    positions_mm: ArrayLike,
     wavelength_m: float,
     distance_m: float,
     single_slit_rate_hz: float,
@@ -85,7 +86,7 @@ def expected_rates_hz(
 
 
 def planned_weights(
-    rates_hz: FloatArray, openings: Sequence[int] | IntArray, slits: int
+    rates_hz: ArrayLike, openings: Sequence[int] | IntArray, slits: int
 ) -> tuple[FloatArray, dict[str, FloatArray]]:
     """Return position weights (sum 1) and planned signs of the pairwise terms, from expected rates (J, K).
 

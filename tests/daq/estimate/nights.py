@@ -7,6 +7,7 @@ from dataclasses import replace
 
 import numpy as np
 import xarray as xr
+from numpy.typing import ArrayLike
 
 from daq import openings
 from daq.estimate import Plan, expected_rates_hz, planned_weights, seen_rate_hz
@@ -19,7 +20,7 @@ ORDER = (1, 3, 2, 5, 7, 6, 4, 0)  # a forward stand
 SLOT_S = 3.0
 
 
-def rates_hz(positions_mm: Sequence[float]) -> FloatArray:
+def rates_hz(positions_mm: ArrayLike) -> FloatArray:
     """Return the rates of three slits, (J, 8)."""
     cuts = {
         mask: {} if mask == 0 else {letter: SLITS_M[letter] for letter in openings.name(mask)}
@@ -31,7 +32,7 @@ def rates_hz(positions_mm: Sequence[float]) -> FloatArray:
 def plan(positions: int = 3, laps: int = 4, dead_time_s: float = DEAD_TIME_S) -> Plan:
     """Return a zig-zag plan: every stand reversed, every second lap backwards."""
     positions_mm = np.linspace(-2.0, 2.0, positions) if positions > 1 else np.zeros(1)
-    weights, signs = planned_weights(rates_hz(list(positions_mm)), range(8), 3)
+    weights, signs = planned_weights(rates_hz(positions_mm), range(8), 3)
     stands = np.arange(positions * laps)
     lap = stands // positions
     place = np.where(lap % 2, positions - 1 - stands % positions, stands % positions)
@@ -61,7 +62,7 @@ def readings(
 
     `level` is the source's relative strength by visit.
     """
-    true = rates_hz(list(of.positions_mm))[of.position, of.opening] * (1.0 if level is None else level)
+    true = rates_hz(of.positions_mm)[of.position, of.opening] * (1.0 if level is None else level)
     seen = seen_rate_hz(true, of.dead_time_s, of.dead_time_kind)
     counts = generator.poisson(seen * dwell_s)
     return [reading(of, number, int(counts[number]), dwell_s) for number in range(len(counts))]
@@ -103,7 +104,7 @@ def dataset(of: Plan, rows: Sequence[Reading]) -> xr.Dataset:
         "stand": np.where(planned, of.stand[visit], -1),
         "pair": np.where(planned, of.pair[visit], -1),
     }
-    values = np.array([row.values for row in rows]).reshape(len(rows), -1)
+    values = np.array([row.values for row in rows]).reshape(len(rows), 1)
     variances = np.array([row.values_var or [np.nan] * values.shape[1] for row in rows]).reshape(values.shape)
     return xr.Dataset(
         {name: ("row", column) for name, column in columns.items()}
