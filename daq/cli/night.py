@@ -86,7 +86,8 @@ class _Watch:
 
 
 def _told(figures: dict[str, Any], watch: _Watch) -> list[str]:
-    faster = f", {figures['speed_up']:.0f} times as fast as the real clock" if figures["speed_up"] else ""
+    virtual = figures["kind"] == "rehearsal" and figures["speed_up"]
+    faster = f", {figures['speed_up']:.0f} times as fast as the real clock" if virtual else ""
     return [*lines(figures), f"took {watch.wall_s:.1f} s{faster}"]
 
 
@@ -111,9 +112,12 @@ def _interrupts() -> Iterator[Asked]:
     asked = Asked()
 
     def interrupted(number: int, frame: FrameType | None) -> None:
-        if asked.end or number == signal.SIGTERM:
-            raise KeyboardInterrupt
+        asked.stop = asked.stop or asked.end or number == signal.SIGTERM
         asked.end = True
+        if asked.stop and asked.interruptible:
+            raise KeyboardInterrupt
+        if asked.stop:
+            return
         print("\nending after this stand; Ctrl-C again stops at once", file=sys.stderr)
 
     before: dict[int, Callable[..., Any] | int | None] = {

@@ -178,7 +178,7 @@ class Link:
             raise self._garbage(f"{line!r} in reply to {text!r}")
         if self._urgent != urgent:
             raise self._stopped(text)
-        if lines.rest.replace(line.encode("ascii") + self._end, b""):
+        if lines.rest and lines.rest.replace(line.encode("ascii") + self._end, b""):
             raise self._garbage(f"{lines.rest[:40]!r} behind the reply {line!r} to {text!r}")
         self._in_step_at = urgent
         return match

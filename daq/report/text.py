@@ -28,7 +28,7 @@ def _head(figures: Mapping[str, Any]) -> list[str]:
 def _residual(figures: Mapping[str, Any]) -> list[str]:
     if figures["kappa_se"] is None:
         return [
-            f"No residual yet: {figures['pairs']} complete pairs of laps, two are needed for an error bar.",
+            f"No residual yet: complete pairs of laps so far {figures['pairs']}; an error bar needs two.",
         ]
     if not figures["printable"]:
         return [

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import tomllib
 from collections.abc import Mapping
 from dataclasses import dataclass
@@ -15,6 +16,7 @@ from daq.errors import DescriptionError
 from daq.itinerary import Itinerary, compose
 
 DESCRIPTION, RIG = "description.toml", "rig.toml"
+LONGEST_H = 10_000
 
 
 @dataclass(frozen=True, slots=True)
@@ -118,6 +120,10 @@ def _in_hours(measurement: Measurement, rig: Rig, wishes: Wishes, path: Path) ->
     """Return the measurement with as many whole pairs as fit into the hours wished for."""
     if wishes.hours is None:
         return measurement
+    if not (math.isfinite(wishes.hours) and 0 < wishes.hours <= LONGEST_H):
+        raise DescriptionError(
+            (f"--hours: give a number above 0 and up to {LONGEST_H}, not {wishes.hours:g}.",)
+        )
     one_pair_s = compose(_with_laps(measurement, 2), rig).total_s
     pairs = int(wishes.hours * 3600 // one_pair_s)
     while pairs and compose(_with_laps(measurement, 2 * pairs), rig).total_s > wishes.hours * 3600:

@@ -28,9 +28,14 @@ COMPLETE, AT_REQUEST, STOPPED = "complete", "ended at request after a stand", "s
 
 @dataclass(slots=True)
 class Asked:
-    """What an operator has asked for since the run began: end after this stand."""
+    """What an operator has asked for since the run began: end after this stand, stop at once.
+
+    `interruptible` while visits are performed: only then may a stop break in.
+    """
 
     end: bool = False
+    stop: bool = False
+    interruptible: bool = False
 
 
 @dataclass(slots=True)

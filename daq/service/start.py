@@ -87,7 +87,7 @@ def _through(night: Night, place: Place, wanted: Wanted) -> str:
     wanted.on_start(night.folder, night.itinerary)
     night.live.write(night.state.value, night.running, now=True)
     try:
-        ended = carry_out(night, place)
+        ended = _interruptibly(night, place)
     except KeyboardInterrupt:
         stop_now(night)
         ended = STOPPED
@@ -98,6 +98,17 @@ def _through(night: Night, place: Place, wanted: Wanted) -> str:
     if ended != STOPPED:
         night.archive.finish({"ended": ended, "ended_utc": stamp(night.clock.utc_ns())})
     return ended
+
+
+def _interruptibly(night: Night, place: Place) -> str:
+    """Carry a night out; a stop may break in here, but not while an archive is opened or finished."""
+    night.asked.interruptible = True
+    try:
+        if night.asked.stop:
+            raise KeyboardInterrupt
+        return carry_out(night, place)
+    finally:
+        night.asked.interruptible = False
 
 
 def _end(night: Night, reason: str) -> None:

@@ -3,12 +3,10 @@
 from __future__ import annotations
 
 import json
-import os
 import random
 import signal
 import subprocess
 import sys
-import time
 from pathlib import Path
 
 import numpy as np
@@ -20,6 +18,7 @@ from daq import estimate_run, open_visits
 from daq.cli import main
 from daq.openings import names
 from tests.examples import CONFIGS
+from tests.runs.watching import begun, wait_for_rows
 
 MEASURE = {"--hours": "1.1", "--seed": "7"}
 
@@ -143,8 +142,8 @@ def test_the_report_of_the_archive_is_what_the_run_said(finished, capsys):
 def test_a_killed_rehearsal_is_gone_on_with_and_loses_nothing(tmp_path, kill):
     words = [sys.executable, "-m", "daq", "rehearse", "--hours", "1.1", "--seed", str(kill)]
     process = subprocess.Popen([*words, "--link", "direct", "--into", tmp_path], stderr=subprocess.DEVNULL)
-    folder = _begun(tmp_path, process)
-    _wait_for_rows(folder, random.Random(kill).randrange(1, 700))
+    folder = begun(tmp_path, process)
+    wait_for_rows(folder, random.Random(kill).randrange(1, 700))
     process.send_signal(signal.SIGKILL)
     process.wait()
     before = open_visits(folder).load()
@@ -169,24 +168,6 @@ def test_a_killed_rehearsal_is_gone_on_with_and_loses_nothing(tmp_path, kill):
     assert again.size in (0, 8)
     assert estimate_run(after).pairs == 2
     assert kappa_by_hand(folder) == pytest.approx(estimate_run(after).kappa, rel=0, abs=1e-12)
-
-
-def _begun(lab: Path, process: subprocess.Popen[bytes]) -> Path:
-    until_s = time.monotonic() + 60
-    while time.monotonic() < until_s and process.poll() is None:
-        found = list(lab.glob("runs/*/live.json"))
-        if found:
-            return found[0].parent
-        os.sched_yield()
-    raise AssertionError("the rehearsal did not begin")
-
-
-def _wait_for_rows(folder: Path, rows: int) -> None:
-    until_s = time.monotonic() + 60
-    while time.monotonic() < until_s:
-        if open_visits(folder).sizes["row"] >= rows:
-            return
-    raise AssertionError(f"the rehearsal did not reach {rows} visits")
 
 
 def test_a_drift_of_five_percent_leaves_zigzag_alone_and_ruins_blocked_order(tmp_path, capsys):

@@ -1,0 +1,104 @@
+"""What bad input gets on the command line: a sentence and an exit status, never a traceback."""
+
+from __future__ import annotations
+
+import json
+import subprocess
+import sys
+
+import pytest
+
+from daq.cli import main
+from tests.examples import CONFIGS
+
+
+def said(capsys, *words: str) -> tuple[int, str]:
+    status = main([*words])
+    return status, capsys.readouterr().err
+
+
+def test_a_rig_with_three_mistakes_gets_three_sentences_in_one_message(tmp_path, capsys):
+    rig = (CONFIGS / "rigs" / "lantern.toml").read_text()
+    rig = rig.replace("AB = { at_mm = 4.0 }", "AB = { at_mm = 2.0 }").replace(
+        "none = { at_mm = 16.0 }", "none = { at_mm = 26.0 }"
+    )
+    (tmp_path / "rig.toml").write_text(rig.replace('axis = "detector"', 'axis = "detector"\naxs = 1'))
+
+    status, text = said(capsys, "check", str(tmp_path / "rig.toml"))
+
+    assert status == 2
+    assert len(text.strip().splitlines()) == 3
+    assert all(line.startswith(str(tmp_path / "rig.toml")) for line in text.strip().splitlines())
+
+
+def test_problems_come_as_json_too(tmp_path, capsys):
+    (tmp_path / "bad.toml").write_text("schema = 1\n")
+
+    status = main(["check", str(tmp_path / "bad.toml"), "--json"])
+
+    figures = json.loads(capsys.readouterr().out)
+    assert status == 2
+    assert figures["ok"] is False
+    assert len(figures["problems"]) == 5
+
+
+def test_a_run_folder_below_a_file_is_an_archive_error(tmp_path, capsys):
+    (tmp_path / "lab").write_text("a file, not a folder")
+
+    status, text = said(
+        capsys, "rehearse", "--hours", "1.1", "--link", "direct", "--into", str(tmp_path / "lab")
+    )
+
+    assert status == 4
+    assert "is a file, not a folder" in text
+
+
+@pytest.mark.parametrize("command", [["report"], ["rehearse", "--resume"], ["run", "--resume"]])
+def test_a_run_that_is_not_there_is_an_archive_error(tmp_path, capsys, command):
+    status, text = said(capsys, *command, str(tmp_path / "nowhere"))
+
+    assert status == 4
+    assert "there is no such run" in text
+
+
+def test_a_run_without_file_or_run_asks_for_one(capsys):
+    status, text = said(capsys, "run")
+
+    assert status == 2
+    assert "name a measurement file" in text
+
+
+def test_a_rig_without_a_bench_cannot_be_rehearsed(tmp_path, capsys):
+    rig = (CONFIGS / "rigs" / "lantern.toml").read_text()
+    (tmp_path / "rigs").mkdir()
+    (tmp_path / "rigs" / "lantern.toml").write_text(rig[: rig.index("\n[bench]")])
+    (tmp_path / "lantern.toml").write_text((CONFIGS / "lantern.toml").read_text())
+
+    status, text = said(capsys, "rehearse", str(tmp_path / "lantern.toml"), "--into", str(tmp_path / "lab"))
+
+    assert status == 2
+    assert "has no table [bench]" in text
+    assert not (tmp_path / "lab").exists()
+
+
+def test_help_is_quick_because_it_imports_nothing_heavy():
+    code = (
+        "import sys\nfrom daq.cli import main\ntry:\n main(['--help'])\n"
+        "except SystemExit:\n print(sorted(sys.modules))"
+    )
+
+    out = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True).stdout
+
+    modules = set(out.splitlines()[-1].strip("[]").replace("'", "").split(", "))
+    assert not modules & {"numpy", "scipy", "zarr", "dash", "xarray", "pydantic", "matplotlib"}
+
+
+@pytest.mark.parametrize("command", ["check", "compose", "rehearse", "run", "report"])
+def test_every_command_has_help_with_an_example(command, capsys):
+    with pytest.raises(SystemExit) as stopped:
+        main([command, "--help"])
+
+    text = capsys.readouterr().out
+    assert stopped.value.code == 0
+    assert f"example: tercet {command}" in text
+    assert "--json" in text
