@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
+from functools import cache
 from pathlib import Path
 from typing import Any
 
@@ -33,6 +34,7 @@ META: Mapping[str, Any] = {
 TEXTS = {"description.toml": b"schema = 1\n", "dialects/counter.toml": b"# \xc3\xa4\r\n"}
 
 
+@cache
 def planned_visits(laps: int = 4) -> Itinerary:
     """Return the itinerary of `laps` laps, twelve visits each."""
     number = np.arange(12 * laps)
@@ -62,7 +64,7 @@ def planned_visits(laps: int = 4) -> Itinerary:
 def reading(visit: int, attempt: int = 1) -> Reading:
     """Return what visit `visit` brings home: the same numbers every time it is asked."""
     draw = np.random.default_rng([7, visit + 1, attempt])
-    plan = planned_visits(1 + visit // 12)
+    plan = planned_visits(200)
     opened = 1_000_000_000 + 2_500_000_000 * visit
     return Reading(
         visit=visit,

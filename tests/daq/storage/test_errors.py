@@ -61,7 +61,7 @@ def until_full(archive: Archive, words: str) -> list[int]:
     """Return the rows that were acknowledged before the disk was full."""
     acknowledged: list[int] = []
     with pytest.raises(StorageError, match=words):
-        acknowledged.extend(archive.commit(reading(visit)) for visit in range(4000))
+        acknowledged.extend(archive.commit(reading(visit)) for visit in range(2400))
     return acknowledged
 
 
@@ -208,7 +208,7 @@ def test_on_a_full_file_system_no_acknowledged_visit_is_lost_and_the_run_goes_on
     with mounted(tmp_path / "small", "-t", "tmpfs", "-o", "size=3m", "tmpfs"):
         run = tmp_path / "small" / "run"
         ballast = tmp_path / "small" / "ballast"
-        with started(run, laps=400) as archive:
+        with started(run, laps=200) as archive:
             free = os.statvfs(run).f_bavail * os.statvfs(run).f_frsize
             ballast.write_bytes(bytes(free - 400_000))
             acknowledged = until_full(archive, "the disk is full")
