@@ -7,7 +7,7 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from simulators.source import BLOCK, GRID_S, RandomWalk, linear, mean_relative, relative
+from simulators.source import BLOCK, GRID_S, Factor, RandomWalk, linear, mean_relative, relative
 
 HOUR_S = 3600.0
 
@@ -43,7 +43,7 @@ def test_a_random_walk_is_the_same_on_both_sides_of_a_block() -> None:
     edge_s = BLOCK * GRID_S
     asked_late = RandomWalk(0.01, 3)
 
-    around = asked_late(edge_s + np.array([-GRID_S, 0.0, GRID_S]))
+    around = asked_late(np.array([edge_s - GRID_S, edge_s, edge_s + GRID_S]))
 
     assert around[1] == RandomWalk(0.01, 3)(np.array(edge_s))
     assert len(set(around.tolist())) == 3
@@ -57,7 +57,7 @@ def test_another_seed_walks_elsewhere() -> None:
 
 def test_the_walk_spreads_by_its_share_per_square_root_of_an_hour() -> None:
     lag_s, lags = 10.0, 14_400
-    walk = np.log(RandomWalk(0.02, 11)(np.arange(lags + 1) * lag_s))
+    walk = np.log(RandomWalk(0.02, 11)(np.linspace(0.0, lags * lag_s, lags + 1)))
 
     variance = np.mean(np.diff(walk) ** 2)
 
@@ -66,7 +66,7 @@ def test_the_walk_spreads_by_its_share_per_square_root_of_an_hour() -> None:
 
 
 def test_the_mean_over_a_gate_is_that_of_many_points() -> None:
-    factors = [linear(-0.03), RandomWalk(0.1, 7)]
+    factors: list[Factor] = [linear(-0.03), RandomWalk(0.1, 7)]
     start_s, stop_s = 123.456, 131.9
 
     mean = mean_relative(factors, start_s, stop_s)
