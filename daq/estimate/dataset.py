@@ -9,7 +9,8 @@ import numpy as np
 
 from daq.estimate.arrays import FloatArray, IntArray
 from daq.estimate.plan import Plan
-from daq.estimate.sums import Rows, stands_of, sums_of
+from daq.estimate.rows import Rows
+from daq.estimate.sums import stands_of, sums_of
 from daq.estimate.whole import Estimate, estimate_sums
 
 DETECTOR = 0  # the channel that is estimated; others stand beside it in the archive
@@ -47,11 +48,6 @@ def plan_of_dataset(dataset: Any) -> Plan:
         )
     openings = np.asarray(attributes["openings"], np.int64)
     positions = np.asarray(attributes["positions_mm"], float)
-    visit = _integers(dataset, "visit")
-    planned = visit >= 0
-    columns = {name: _integers(dataset, name)[planned] for name in ("stand", "pair", "opening")}
-    place = _index(np.asarray(dataset["position_mm"].values, float)[planned], positions, "position")
-    shown = _index(columns["opening"], openings, "opening")
     return Plan(
         slits=int(attributes["slits"]),
         openings=openings,
@@ -62,11 +58,8 @@ def plan_of_dataset(dataset: Any) -> Plan:
         dead_time_s=float(attributes["dead_time_s"]),
         dead_time_kind=str(attributes["dead_time_kind"]),
         planned_pairs=int(attributes["planned_pairs"]),
-        stand=_by_visit(visit[planned], columns["stand"]),
-        pair=_by_visit(visit[planned], columns["pair"]),
-        position=_by_visit(visit[planned], place),
-        opening=_by_visit(visit[planned], shown),
         goal_se=attributes.get("goal_se"),
+        **_by_visit(dataset, openings, positions),
     )
 
 
@@ -97,7 +90,17 @@ def _index(values: IntArray | FloatArray, known: IntArray | FloatArray, what: st
     return place.astype(np.int64)
 
 
-def _by_visit(visit: IntArray, values: IntArray) -> IntArray:
-    column = np.full(int(visit.max(initial=-1)) + 1, -1, np.int64)
-    column[visit] = values
-    return column
+def _by_visit(dataset: Any, openings: IntArray, positions: FloatArray) -> dict[str, IntArray]:
+    """Return what is planned for each visit that a row shows, by visit number."""
+    visit = _integers(dataset, "visit")
+    planned = visit >= 0
+    rows = {
+        "stand": _integers(dataset, "stand")[planned],
+        "pair": _integers(dataset, "pair")[planned],
+        "position": _index(np.asarray(dataset["position_mm"].values, float)[planned], positions, "position"),
+        "opening": _index(_integers(dataset, "opening")[planned], openings, "opening"),
+    }
+    columns = {name: np.full(int(visit.max(initial=-1)) + 1, -1, np.int64) for name in rows}
+    for name, values in rows.items():
+        columns[name][visit[planned]] = values
+    return columns

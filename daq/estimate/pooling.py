@@ -80,28 +80,34 @@ def pool(
     variance = float(shares @ covariance @ shares)
     doubt = float(np.sum((shares * se) ** 4 / dof))
     freedom = variance**2 / doubt if doubt > 0 else inf
-    q = _q(value, covariance)
-    nights = len(value)
-    f, f_p = _welch(value, se, dof)
     tau2 = _tau2(value, se)
     random_mean, random_se = _with_tau2(value, se, tau2)
+    nights = len(value)
     return Pooled(
         value=mean,
         se=sqrt(variance),
         dof=freedom,
         interval_95=_interval(mean, sqrt(variance), freedom),
-        q=q,
-        q_p=float(chdtrc(nights - 1, q)),
-        birge=sqrt(q / (nights - 1)),
-        i2=max(0.0, 1 - (nights - 1) / q) if q > 0 else 0.0,
-        welch_f=f,
-        welch_p=f_p,
         tau=sqrt(tau2),
         random_value=random_mean,
         random_se=random_se,
         random_interval_95=_interval(random_mean, random_se, nights - 1) if nights > 2 else None,
         weights=shares,
+        **_scatter(value, se, dof, _q(value, covariance)),
     )
+
+
+def _scatter(value: FloatArray, se: FloatArray, dof: FloatArray, q: float) -> dict[str, float]:
+    free = len(value) - 1
+    welch_f, welch_p = _welch(value, se, dof)
+    return {
+        "q": q,
+        "q_p": float(chdtrc(free, q)),
+        "birge": sqrt(q / free),
+        "i2": max(0.0, 1 - free / q) if q > 0 else 0.0,
+        "welch_f": welch_f,
+        "welch_p": welch_p,
+    }
 
 
 def _check(value: FloatArray, se: FloatArray, dof: FloatArray) -> None:

@@ -9,7 +9,8 @@ import numpy as np
 from daq.estimate.counting import true_counts
 from daq.estimate.dataset import DETECTOR
 from daq.estimate.plan import Plan, stand_places
-from daq.estimate.sums import Rows, Sums, complete_pairs, countable, no_stands, sums_of
+from daq.estimate.rows import Rows, countable
+from daq.estimate.sums import Sums, complete_pairs, no_stands, sums_of
 from daq.estimate.whole import Estimate, estimate_sums
 from daq.records import EXCLUDING, Reading
 

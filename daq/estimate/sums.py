@@ -7,25 +7,11 @@ from dataclasses import dataclass
 import numpy as np
 
 from daq.estimate.arrays import BoolArray, FloatArray, IntArray
-from daq.estimate.counting import true_counts, within_range
+from daq.estimate.counting import true_counts
 from daq.estimate.plan import Plan, stand_places
+from daq.estimate.rows import Rows, countable
 from daq.estimate.use import stands_done, use
 from daq.records import Quality
-
-
-@dataclass(frozen=True, slots=True)
-class Rows:
-    """Planned visits as they came home, by row: numbers, try, quality, and what the detector gave.
-
-    `value` counts (or power), `live` seconds, `variance` of the value (NaN: Poisson).
-    """
-
-    visit: IntArray
-    attempt: IntArray
-    quality: IntArray
-    value: FloatArray
-    live: FloatArray
-    variance: FloatArray
 
 
 @dataclass(frozen=True, slots=True)
@@ -62,15 +48,6 @@ def no_stands(plan: Plan) -> Stands:
     cells = (stands, len(plan.openings))
     value, live, variance = (np.zeros(cells) for _ in range(3))
     return Stands(value, live, variance, np.zeros(stands, bool), np.zeros(stands, bool))
-
-
-def countable(rows: Rows, plan: Plan) -> BoolArray:
-    """Return which rows can be corrected: finite, not negative where Poisson, live, below saturation."""
-    live = np.isfinite(rows.live) & (rows.live > 0)
-    rate = np.divide(rows.value, rows.live, out=np.full(len(rows.live), np.nan), where=live)
-    poisson = np.isnan(rows.variance)
-    fine: BoolArray = within_range(rate, plan.dead_time_s, plan.dead_time_kind) & (~poisson | (rate >= 0))
-    return fine
 
 
 def stands_of(rows: Rows, plan: Plan) -> Stands:
