@@ -1,0 +1,224 @@
+"""Curves of the page, rounded and small, each with the sentence that says what it shows."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping, Sequence
+from datetime import datetime
+from typing import Any
+
+from daq import openings
+from dashboard.residual import INNER, OUTER, first_band_pair, is_blinded, unit
+from dashboard.words import fixed, spelt
+
+Feed = Mapping[str, Any]
+Column = Sequence[float | None]
+_PLATE_POINTS = 61
+_FULL = 1000
+
+
+def night(feed: Feed) -> dict[str, Any]:
+    """Return kappa by pair with both bands, the forecast to the planned end, and how far the axis reaches.
+
+    Values are in the printed unit of kappa, times in hours since the start.
+    """
+    kappa, history = feed["kappa"], feed["history"]
+    scale, name = unit(kappa)
+    end = _planned_hours(feed)
+    if is_blinded(feed):
+        return {"unit": name, "end": end, "empty": "κ is hidden while the run is blinded."}
+    curves = {key: _scaled(history[key], scale) for key in _HISTORY}
+    if not curves["kappa"]:
+        return {"unit": name, "end": end, "empty": "The first dot appears when the first pair is complete."}
+    return {
+        "unit": name,
+        "end": end,
+        "hours": _rounded(history["hours"], 3),
+        **curves,
+        "forecast": _forecast(feed, scale, end),
+        "reach": _reach(curves, (kappa["goal_se"] or 0) / scale),
+        "inner": INNER,
+        "outer": OUTER,
+        "caption": _night_caption(feed),
+        "alt": _night_alt(feed, scale, name),
+    }
+
+
+def pattern(feed: Feed, chosen: int) -> dict[str, Any]:
+    """Return the measured pattern of one opening, its prediction from the others, and what is left over.
+
+    The prediction is rate - sign * epsilon, the leftover sign * epsilon, both with the error of epsilon.
+    """
+    slits, masks = feed["slits"], feed["openings"]
+    opening = openings.name(chosen)
+    sign = openings.sign(opening, slits)
+    hidden = is_blinded(feed)
+    said = {"mask": chosen, "name": opening, "added": sign > 0, "positions": feed["positions_mm"]}
+    if hidden and chosen == max(masks):
+        return said | {"empty": f"The pattern of {opening} is hidden while the run is blinded."}
+    rates = feed["rates_hz"][masks.index(chosen)]
+    if all(rate is None for rate in rates):
+        return said | {"empty": f"{opening} has not been counted yet."}
+    scale, word = _rate_unit(rates)
+    said |= {"unit": word, "measured": _scaled(rates, scale, 4)}
+    if hidden or all(value is None for value in feed["epsilon_hz"]):
+        return said | {"alt": _peak_says(opening, feed["positions_mm"], rates)}
+    return said | _leftover(feed, opening, rates, scale)
+
+
+def plates(feed: Feed) -> dict[str, list[int | None]]:
+    """Return the small patterns of all openings, by bit mask: thousandths of the greatest amplitude.
+
+    Heights are the square root of the rate, so that one slit is still seen beside all of them.
+    """
+    hidden = {max(feed["openings"])} if is_blinded(feed) else set()
+    rows = [
+        row if mask not in hidden else []
+        for mask, row in zip(feed["openings"], feed["rates_hz"], strict=True)
+    ]
+    top = max((rate for row in rows for rate in row if rate is not None), default=0) or 1
+    return {str(mask): _silhouette(row, top) for mask, row in zip(feed["openings"], rows, strict=True)}
+
+
+def strip(feed: Feed) -> dict[str, Any]:
+    """Return the count rate by column of time: least, mean and most, so that every dip is kept."""
+    rate = feed["rate"]
+    if not rate["hours"]:
+        return {"empty": "The first column appears after the first stand."}
+    digits = 3 if is_blinded(feed) else 5
+    scale, word = _rate_unit(rate["high"])
+    return {
+        "unit": word,
+        "hours": _rounded(rate["hours"], 3),
+        "low": _scaled(rate["low"], scale, digits),
+        "mean": _scaled(rate["mean"], scale, digits),
+        "high": _scaled(rate["high"], scale, digits),
+        "tinted": _tinted(feed),
+        "caption": "Line: mean. Band: least and most of each stretch of time, so that no dip is lost.",
+        "alt": _strip_alt(rate, scale, word),
+    }
+
+
+_HISTORY = ("kappa", "interval_low", "interval_high", "whole_low", "whole_high")
+
+
+def _scaled(values: Column, scale: float, digits: int = 4) -> list[float | None]:
+    return [None if v is None else float(f"{v / scale:.{digits}g}") for v in values]
+
+
+def _rounded(values: Column, decimals: int) -> list[float | None]:
+    return [None if v is None else round(v, decimals) for v in values]
+
+
+def _planned_hours(feed: Feed) -> float | None:
+    if feed["ended"]:
+        return None
+    span = datetime.fromisoformat(feed["ends_utc"]) - datetime.fromisoformat(feed["started_utc"])
+    return round(span.total_seconds() / 3600, 3)
+
+
+def _forecast(feed: Feed, scale: float, end: float | None) -> dict[str, Any] | None:
+    """Return the half width of the inner bar at the planned end, and the one the goal asks for."""
+    kappa = feed["kappa"]
+    if feed["ended"] or end is None or not kappa["forecast_se"] or kappa["interval_95"] is None:
+        return None
+    from scipy.special import stdtrit
+
+    wide = float(stdtrit(max(1, kappa["planned_pairs"] - 1), 0.975))
+    goal = kappa["goal_se"]
+    return {
+        "half": round(wide * kappa["forecast_se"] / scale, 3),
+        "goal": round(wide * goal / scale, 3) if goal else None,
+        "pairs": kappa["pairs"],
+        "planned": kappa["planned_pairs"],
+    }
+
+
+def _reach(curves: Mapping[str, Column], goal: float) -> float:
+    dots = [abs(v) for v in curves["kappa"] if v is not None]
+    bands = [abs(v) for key in ("whole_low", "whole_high") for v in curves[key] if v is not None]
+    wide = sorted(bands)[(3 * len(bands)) // 4] if bands else 0.0
+    return round(1.1 * max(*dots, wide, 3 * goal), 3)
+
+
+def _night_caption(feed: Feed) -> str:
+    kappa = feed["kappa"]
+    start = first_band_pair(kappa["planned_pairs"])
+    early = f" The bands start at pair {start}." if start and kappa["whole_night_95"] is None else ""
+    rest = " Dotted: what the rest of the run will do to the dark band." if not feed["ended"] else ""
+    return f"Each dot holds all pairs up to then. Dark: {INNER}. Pale: {OUTER}.{rest}{early}"
+
+
+def _night_alt(feed: Feed, scale: float, name: str) -> str:
+    kappa = feed["kappa"]
+    dot = f"κ after {spelt(kappa['pairs'], 'pair')}: {fixed(kappa['value'] / scale, 1, plus=True)} {name}."
+    ends = kappa["whole_night_95"]
+    if ends is None:
+        return f"{dot} No band yet."
+    low, high = (fixed(v / scale, 1, plus=True) for v in ends)
+    return f"{dot} The whole-night band reaches from {low} to {high}."
+
+
+def _rate_unit(values: Column) -> tuple[float, str]:
+    top = max((abs(v) for v in values if v is not None), default=0)
+    return (1e3, "thousand counts per second") if top >= 2000 else (1.0, "counts per second")
+
+
+def _leftover(feed: Feed, opening: str, rates: Column, scale: float) -> dict[str, Any]:
+    sign = openings.sign(opening, feed["slits"])
+    epsilon = [None if e is None else sign * e for e in feed["epsilon_hz"]]
+    predicted = [None if r is None or e is None else r - e for r, e in zip(rates, epsilon, strict=True)]
+    said = _leftover_says(feed["positions_mm"], epsilon, feed["epsilon_se_hz"])
+    others = spelt(len(feed["openings"]) - 1, "opening").split()[0]
+    peak = _peak_says(opening, feed["positions_mm"], rates)
+    return {
+        "predicted": _scaled(predicted, scale, 4),
+        "leftover": _scaled(epsilon, 1.0, 3),
+        "leftover_se": _scaled(feed["epsilon_se_hz"], 1.0, 3),
+        "caption": f"Line: {opening} as measured. Broad grey line: predicted from the other {others}. "
+        f"Below, what is left over, with one standard error on either side; {said}",
+        "alt": f"{peak} Against the prediction from the other {others}, {said}",
+    }
+
+
+def _leftover_says(positions: Sequence[float], epsilon: Column, errors: Column) -> str:
+    pulls = [
+        (abs(e) / s, x) for x, e, s in zip(positions, epsilon, errors, strict=True) if e is not None and s
+    ]
+    if not pulls:
+        return "no error bar is known yet."
+    inside = sum(pull <= 1 for pull, _ in pulls)
+    worst, place = max(pulls)
+    return (
+        f"{inside} of {len(pulls)} positions lie within it (two in three by chance), "
+        f"the farthest {fixed(worst, 1)} standard errors off, at {fixed(place, 2, plus=True)} mm."
+    )
+
+
+def _peak_says(opening: str, positions: Sequence[float], rates: Column) -> str:
+    scale, word = _rate_unit(rates)
+    top, place = max((r, x) for r, x in zip(rates, positions, strict=True) if r is not None)
+    where = f"{fixed(place, 2, plus=True)} mm"
+    return f"Pattern of {opening}: highest at {where} with {fixed(top / scale, 1)} {word}."
+
+
+def _silhouette(row: Column, top: float) -> list[int | None]:
+    step = max(1, math.ceil(len(row) / _PLATE_POINTS))
+    chunks = [[v for v in row[i : i + step] if v is not None] for i in range(0, len(row), step)]
+    return [round(_FULL * math.sqrt(max(0.0, *chunk) / top)) if chunk else None for chunk in chunks]
+
+
+def _tinted(feed: Feed) -> list[float]:
+    start = datetime.fromisoformat(feed["started_utc"])
+    since = (datetime.fromisoformat(warning["since_utc"]) - start for warning in feed["warnings"])
+    return [max(0.0, round(span.total_seconds() / 3600, 3)) for span in since]
+
+
+def _strip_alt(rate: Mapping[str, Column], scale: float, word: str) -> str:
+    last = next(v for v in reversed(rate["mean"]) if v is not None)
+    least = min(v for v in rate["low"] if v is not None)
+    most = max(v for v in rate["high"] if v is not None)
+    return (
+        f"Count rate, {word}: now {fixed(last / scale, 1)}, least {fixed(least / scale, 1)}, "
+        f"most {fixed(most / scale, 1)} since the start."
+    )

@@ -1,0 +1,205 @@
+"""What the page says about kappa: figure, unit, both bands, zero, goal and scatter."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping
+from typing import Any
+
+from daq.estimate.peeking import anytime_multiplier
+from dashboard.words import decimals_of, fixed, spelt, unit_of
+
+Feed = Mapping[str, Any]
+_ORDINALS = {2: "Second", 3: "Third", 4: "Fourth", 5: "Fifth"}
+INNER = "95 % only if read once, at the planned end"
+OUTER = "95 % over the whole night, whatever you do"
+PRINTED_FROM_PAIR = 8
+_BAND_FROM_PAIR = 6
+
+
+def residual_view(feed: Feed) -> dict[str, Any]:
+    """Return everything the page says about kappa; nothing of its value while the run is blinded."""
+    kappa = feed["kappa"]
+    said: dict[str, Any] = {
+        "heading": f"{_ORDINALS[feed['slits']]}-order residual, κ",
+        "figure": None,
+        "se": None,
+        "bands": [],
+        "rule": None,
+    }
+    if is_blinded(feed):
+        return said | {
+            "short": "hidden",
+            "unit": _after(kappa, unit(kappa)[1]),
+            "says": ["κ is hidden: this run is blinded. Its error bar is not.", *_goal_says(feed)],
+        }
+    if kappa["pairs"] < 2 or kappa["value"] is None:
+        return said | {"short": "not yet", "unit": _after(kappa), "says": [_waiting_says(kappa)]}
+    if not kappa["printable"]:
+        return said | {"short": "not printed", "unit": _after(kappa), "says": [_WEAK]}
+    if kappa["pairs"] < PRINTED_FROM_PAIR:
+        return said | {"short": "too early", "unit": _after(kappa), "says": _early_says(feed)}
+    return said | _figure(feed)
+
+
+def is_blinded(feed: Feed) -> bool:
+    """Return whether kappa, and what gives it away, must not leave this process."""
+    return bool(feed.get("blinding") != "open")
+
+
+def unit(kappa: Mapping[str, Any]) -> tuple[float, str]:
+    """Return the unit of the printed kappa: that of the goal, or of the forecast where they are far apart."""
+    goal, forecast = kappa.get("goal_se"), kappa.get("forecast_se")
+    if goal and forecast:
+        return unit_of(goal if 0.2 < forecast / goal < 5 else forecast)
+    return unit_of(goal or forecast or kappa.get("se") or 1e-3)
+
+
+def first_band_pair(planned_pairs: int) -> int | None:
+    """Return the pair from which the whole-night band is drawn; None where the plan is too short for one.
+
+    References
+    ----------
+    The multiplier of the t mixture is infinite before; no band is drawn before pair 6 in any plan.
+    """
+    finite = (
+        n
+        for n in range(_BAND_FROM_PAIR, max(planned_pairs, _BAND_FROM_PAIR) + 1)
+        if math.isfinite(anytime_multiplier(n, planned_pairs))
+    )
+    return next(finite, None)
+
+
+_WEAK = (
+    "The interference is too weak to divide by (δ is below six of its standard errors), so κ is not printed. "
+    "Check that all slits are lit and that the mask is in register."
+)
+
+
+def _after(kappa: Mapping[str, Any], unit_name: str = "") -> str:
+    pairs = f"after {kappa['pairs']} of {spelt(kappa['planned_pairs'], 'pair')}"
+    return f"{unit_name}, {pairs}" if unit_name else pairs
+
+
+def _waiting_says(kappa: Mapping[str, Any]) -> str:
+    return f"κ needs two complete pairs; so far there {_are(kappa['pairs'])}."
+
+
+def _are(pairs: int) -> str:
+    return "is one" if pairs == 1 else f"are {spelt(pairs, 'pair').split()[0]}"
+
+
+def _early_says(feed: Feed) -> list[str]:
+    kappa = feed["kappa"]
+    scale, name = unit(kappa)
+    dot = fixed(kappa["value"] / scale, 1, plus=True)
+    return [
+        f"The dot stands at {dot} {name.split(' (')[0]}.",
+        f"Its error bar gets a number at pair {PRINTED_FROM_PAIR}.",
+        *_band_start(kappa),
+        *_goal_says(feed),
+    ]
+
+
+def _band_start(kappa: Mapping[str, Any]) -> list[str]:
+    if kappa["whole_night_95"] is not None:
+        return []
+    start = first_band_pair(kappa["planned_pairs"])
+    if start is None:
+        return ["The run is too short for a band that holds over the whole night."]
+    return [f"The band starts at pair {start}."]
+
+
+def _figure(feed: Feed) -> dict[str, Any]:
+    kappa = feed["kappa"]
+    scale, name = unit(kappa)
+    decimals = decimals_of(kappa["se"] / scale)
+    says = [*_zero_says(feed), *_band_start(kappa), *_goal_says(feed), *_scatter_says(kappa, scale)]
+    return {
+        "short": None,
+        "figure": fixed(kappa["value"] / scale, decimals, plus=True),
+        "se": fixed(kappa["se"] / scale, decimals),
+        "unit": _after(kappa, name),
+        "bands": _bands(feed, scale, decimals),
+        "says": [*says, *_truth_says(feed, scale, name, decimals)],
+    }
+
+
+def _bands(feed: Feed, scale: float, decimals: int) -> list[dict[str, Any]]:
+    kappa = feed["kappa"]
+    drawn = [("outer", kappa["whole_night_95"], OUTER), ("inner", kappa["interval_95"], INNER)]
+    drawn.sort(key=lambda band: band[0] != band_to_read(feed))
+    reach = 1.1 * max((abs(v) for _, ends, _ in drawn if ends for v in ends), default=1.0)
+    return [
+        {
+            "kind": kind,
+            "label": label,
+            "ends": " … ".join(fixed(v / scale, decimals, plus=True) for v in ends),
+            "read": kind == band_to_read(feed),
+            "from_percent": round(50 + 50 * ends[0] / reach, 1),
+            "to_percent": round(50 + 50 * ends[1] / reach, 1),
+        }
+        for kind, ends, label in drawn
+        if ends is not None
+    ]
+
+
+def band_to_read(feed: Feed) -> str:
+    """Return which band holds now: "inner" at the planned end, "outer" at any other time."""
+    kappa = feed["kappa"]
+    return "inner" if feed["ended"] and kappa["pairs"] >= kappa["planned_pairs"] else "outer"
+
+
+def _zero_says(feed: Feed) -> list[str]:
+    kappa = feed["kappa"]
+    if feed["slits"] == 2:
+        return ["With two slits this term is the interference itself; it is not expected to vanish."]
+    inner = band_to_read(feed) == "inner"
+    ends = kappa["interval_95"] if inner else kappa["whole_night_95"]
+    if ends is None:
+        return []
+    band = "95 % interval at the planned end" if inner else "whole-night band"
+    if ends[0] <= 0 <= ends[1]:
+        return [f"Zero lies inside the {band}."]
+    return [f"Zero lies outside the {band}. Look for a cause in the instrument first."]
+
+
+def _goal_says(feed: Feed) -> list[str]:
+    kappa = feed["kappa"]
+    goal, forecast = kappa["goal_se"], kappa["se"] if feed["ended"] else kappa["forecast_se"]
+    if not goal or not forecast:
+        return []
+    scale, _ = unit(kappa)
+    decimals = decimals_of(goal / scale)
+    ends = f"± {fixed(forecast / scale, decimals)}"
+    aim = f"± {fixed(goal / scale, decimals)}"
+    if feed["ended"]:
+        word = "meets" if forecast <= goal else "misses"
+        return [f"The run ended with {ends}; that {word} the goal of {aim}."]
+    if forecast <= goal:
+        return [f"At this pace the run ends with {ends} and meets its goal of {aim}."]
+    needed = math.ceil(kappa["planned_pairs"] * (forecast / goal) ** 2)
+    near = "just short of" if forecast <= 1.2 * goal else "short of"
+    return [
+        f"At this pace the run ends with {ends}, {near} the goal of {aim}; "
+        f"the goal would take about {needed} pairs instead of {kappa['planned_pairs']}."
+    ]
+
+
+def _scatter_says(kappa: Mapping[str, Any], scale: float) -> list[str]:
+    if not kappa["excess"] or not kappa["counting_se"]:
+        return []
+    counting = kappa["counting_se"] / scale
+    se = f" ± {fixed(kappa['excess_se'], 1)}" if kappa["excess_se"] else ""
+    return [
+        f"Counting alone would give ± {fixed(counting, decimals_of(counting))}; "
+        f"the pairs scatter {fixed(kappa['excess'], 1)}{se} times as much."
+    ]
+
+
+def _truth_says(feed: Feed, scale: float, name: str, decimals: int) -> list[str]:
+    truth = feed.get("truth_kappa")
+    if truth is None:
+        return []
+    word = name.split(" (", maxsplit=1)[0]
+    return [f"The simulated source was given κ = {fixed(truth / scale, decimals, plus=True)} {word}."]

@@ -1,0 +1,258 @@
+"""What the page says of a run, from its `live.json` alone: every sentence is made here, from data."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from datetime import datetime
+from typing import Any
+
+from daq import openings
+from dashboard.residual import residual_view
+from dashboard.words import MINUS, clock, count, duration, fixed, spelt
+
+Feed = Mapping[str, Any]
+SILENT_AFTER_S = 30.0
+CAUTION = (
+    "Hold and stop here are requests to the program, not safety functions. "
+    "In danger use the emergency stop in the room."
+)
+_KINDS = {
+    "rehearsal": ("Rehearsal", "Simulated hardware; nothing in the room moves."),
+    "replay": ("Replay", "An archived run, played again; nothing in the room moves."),
+}
+_GOING = {"run": "Running.", "rehearsal": "Rehearsal running.", "replay": "Replay running."}
+
+
+def view(feed: Feed, silent: bool) -> dict[str, Any]:
+    """Return everything that the page says in words, by part of the page.
+
+    Parameters
+    ----------
+    feed
+        The content of `live.json`, format 1.
+    silent
+        Whether the run stopped writing although it has not ended (`is_silent`).
+    """
+    return {
+        "header": {"title": feed["title"], "run": feed["run"], "kind": _kind(feed)},
+        "verdict": _verdict(feed, silent),
+        "warnings": _warnings(feed),
+        "kappa": residual_view(feed),
+        "rail": _rail(feed),
+        "now": _now(feed, silent),
+        "sensors": [_sensor(name, *reading) for name, reading in feed["sensors"].items()],
+        "log": [
+            {"utc": clock(entry["utc"]), "text": _stopped(entry["text"])} for entry in reversed(feed["log"])
+        ],
+    }
+
+
+def is_silent(feed: Feed, now_utc: datetime) -> bool:
+    """Return whether a run that has not ended wrote nothing for half a minute of the wall clock."""
+    written = datetime.fromisoformat(feed["written_utc"])
+    return not feed["ended"] and (now_utc - written).total_seconds() > SILENT_AFTER_S
+
+
+def empty_view(lab: str) -> dict[str, Any]:
+    """Return what the page says when the lab holds no run."""
+    return {
+        "header": {"title": lab, "run": "", "kind": None},
+        "verdict": {
+            "tone": "wait",
+            "first": "No run yet.",
+            "second": "",
+            "line": "This page shows the newest run of the lab as soon as there is one. "
+            "Start one with: tercet run FILE --into LAB, or tercet rehearse --into LAB.",
+            "ends_utc": None,
+            "progress": None,
+        },
+    }
+
+
+def waiting_view(run: str) -> dict[str, Any]:
+    """Return what the page says of a run that has a folder and has sent nothing yet."""
+    verdict = {"tone": "wait", "first": "Nothing heard of this run yet.", "second": ""}
+    line = "Its folder is there, its first news is not. The page shows it as soon as it comes."
+    return {
+        "header": {"title": run, "run": run, "kind": None},
+        "verdict": verdict | {"line": line, "ends_utc": None, "progress": None},
+    }
+
+
+def unreadable_view(run: str, why: str) -> dict[str, Any]:
+    """Return what the page says when the feed of a run cannot be read."""
+    verdict = {"tone": "stop", "first": "This run cannot be read.", "second": "", "line": why}
+    return {
+        "header": {"title": run, "run": run, "kind": None},
+        "verdict": verdict | {"ends_utc": None, "progress": None},
+    }
+
+
+def _sensor(name: str, value: float | None, unit: str) -> str:
+    return f"{name} not read" if value is None else f"{name} {f'{value:.5g}'.replace('-', MINUS)} {unit}"
+
+
+def _kind(feed: Feed) -> dict[str, str] | None:
+    if feed["kind"] not in _KINDS:
+        return None
+    word, says = _KINDS[feed["kind"]]
+    return {"kind": feed["kind"], "word": word, "says": says}
+
+
+def _verdict(feed: Feed, silent: bool) -> dict[str, Any]:
+    tone, first, second = _silence(feed) if silent else _judgement(feed)
+    return {
+        "tone": tone,
+        "first": first,
+        "second": second,
+        "line": _line(feed, silent),
+        "ends_utc": feed["ends_utc"]
+        if feed["clock"] == "real" and not feed["ended"] and not silent
+        else None,
+        "progress": _progress(feed),
+    }
+
+
+def _progress(feed: Feed) -> float | None:
+    visit, kappa = feed["visit"], feed["kappa"]
+    if visit is None:
+        return 0.0
+    if visit["number"] >= 0:
+        return round((visit["number"] + 1) / visit["of"], 4)
+    return round(kappa["pairs"] / kappa["planned_pairs"], 4) if kappa["planned_pairs"] else None
+
+
+def _silence(feed: Feed) -> tuple[str, str, str]:
+    written = clock(feed["written_utc"])
+    return "stop", f"No news from the run since {written}.", "Someone is needed."
+
+
+def _judgement(feed: Feed) -> tuple[str, str, str]:
+    state = feed["state"]
+    if state == "ended" or feed["ended"]:
+        return _ending(feed)
+    if state == "ready":
+        return "wait", "Ready.", "Not started yet."
+    if state == "holding":
+        return "stop", "Holding.", "Someone is needed."
+    if state == "parking":
+        return "look", "Parking.", "The stages go to their safe place."
+    return _going(feed)
+
+
+def _going(feed: Feed) -> tuple[str, str, str]:
+    first = _GOING[feed["kind"]]
+    if not feed["warnings"]:
+        return "fine", first, "Nobody is needed."
+    return "look", first, f"{spelt(len(feed['warnings']), 'thing').capitalize()} to look at."
+
+
+def _ending(feed: Feed) -> tuple[str, str, str]:
+    kappa = feed["kappa"]
+    if kappa["pairs"] >= kappa["planned_pairs"]:
+        return "done", "Done.", f"All {spelt(kappa['planned_pairs'], 'pair')} are counted."
+    after = f"{kappa['pairs']} of {spelt(kappa['planned_pairs'], 'pair')} are counted."
+    return "look", "Ended early.", after[0].upper() + after[1:]
+
+
+def _line(feed: Feed, silent: bool) -> str:
+    where, ended = _where(feed), feed["ended"]
+    if ended:
+        return f"{where}. Ended at {clock(ended['utc'])}: {_stopped(ended['reason'])}"
+    if silent:
+        return f"{where} was the last. Look at the computer at the bench: the program may have stopped."
+    if feed["state"] == "ready":
+        pairs = spelt(feed["kappa"]["planned_pairs"], "pair").capitalize()
+        return f"{pairs} are planned, until about {_when(feed)}."
+    if feed["state"] in ("holding", "parking"):
+        return f"{where}. Everything counted so far is saved."
+    return f"{where}. Done at about {_when(feed)}."
+
+
+def _where(feed: Feed) -> str:
+    visit = feed["visit"]
+    if visit is None:
+        return "Before the first visit"
+    if visit["number"] < 0:
+        return "A check between planned visits"
+    return f"Visit {count(visit['number'] + 1)} of {count(visit['of'])}"
+
+
+def _when(feed: Feed) -> str:
+    own = " on the rehearsal's own clock" if feed["clock"] == "virtual" else ""
+    return f"{clock(feed['ends_utc'])}{own}"
+
+
+def _stopped(sentence: str) -> str:
+    return sentence if sentence.endswith((".", "!", "?")) else f"{sentence}."
+
+
+def _warnings(feed: Feed) -> dict[str, Any]:
+    items, since = feed["warnings"], clock(feed["started_utc"])
+    return {
+        "heading": "To look at" if items else "Warnings",
+        "none": None if items else f"None since the start at {since}.",
+        "items": [_warning(feed, warning) for warning in items],
+    }
+
+
+def _warning(feed: Feed, warning: Mapping[str, Any]) -> dict[str, Any]:
+    return {
+        "what": _stopped(warning["what"]),
+        "do": _stopped(warning["do"]),
+        "good": _stopped(warning["good"]),
+        "since": f"Since {clock(warning['since_utc'])}.",
+        "since_utc": warning["since_utc"] if feed["clock"] == "real" else None,
+    }
+
+
+def _rail(feed: Feed) -> dict[str, Any]:
+    slits = feed["slits"]
+    groups = [_group(feed, number) for number in range(slits + 1)]
+    return {
+        "slits": slits,
+        "groups": [group for group in groups if group["openings"]],
+        "says": "Add the patterns marked +, take away those marked −. "
+        "If interference is only pairwise, nothing but noise is left."
+        if slits > 2
+        else "Add the patterns marked +, take away those marked −: what is left is the interference.",
+    }
+
+
+def _group(feed: Feed, number: int) -> dict[str, Any]:
+    slits = feed["slits"]
+    label = (
+        "none" if number == 0 else f"all {spelt(slits, 'slit')}" if number == slits else spelt(number, "slit")
+    )
+    masks = [mask for mask in feed["openings"] if mask.bit_count() == number]
+    return {
+        "label": label,
+        "added": (slits - number) % 2 == 0,
+        "openings": [{"mask": mask, "name": openings.name(mask)} for mask in masks],
+    }
+
+
+def _now(feed: Feed, silent: bool) -> dict[str, Any]:
+    visit, state = feed["visit"], feed["state"]
+    going = state in ("moving", "counting") and not feed["ended"] and not silent
+    doing = (
+        f"{state.capitalize()}; {duration(feed['run_s'])} into the run."
+        if going
+        else "Nothing is being counted."
+    )
+    if visit is None:
+        return {"mask": None, "says": doing}
+    again = f", attempt {visit['attempt']}" if visit["attempt"] > 1 else ""
+    place = f"at {fixed(visit['position_mm'], 2, plus=True)} mm"
+    return {
+        "mask": visit["opening"] if going else None,
+        "says": f"{doing} Latest visit: {_through(visit['opening'])} {place}{again}.",
+    }
+
+
+def _through(mask: int) -> str:
+    name = openings.name(mask)
+    if name == openings.NONE:
+        return "with every slit shut"
+    letters = list(name)
+    return f"through {', '.join(letters[:-1])} and {letters[-1]}" if len(letters) > 1 else f"through {name}"
