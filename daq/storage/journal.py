@@ -53,7 +53,7 @@ class Journal:
             self._connection.execute(setting)
         marks = ", ".join("?" * (len(form.names) + 2))
         self._insert = f"INSERT INTO visits VALUES ({marks})"
-        self._newest = os.open(folder / NEWEST, os.O_WRONLY)
+        self._newest = os.open(folder / NEWEST, os.O_WRONLY | os.O_CREAT | os.O_CLOEXEC, 0o644)
 
     def append(self, flat: Sequence[Any]) -> int:
         """Make a row durable and return its number; any error leaves the journal as it was."""

@@ -101,6 +101,7 @@ class Archive:
             self.write_rest({**self.meta, **plain(attributes), FINISHED: True})
             self.journal.checkpoint()
             self.journal.close()
+            self._disk.step("rest")
             drop_journal(self.folder)
             self._disk.step("unlinked")
             (self.folder / LOCK).unlink(missing_ok=True)

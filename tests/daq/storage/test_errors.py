@@ -274,6 +274,8 @@ def test_without_the_second_place_the_journal_alone_is_believed(tmp_path: Path) 
     (killed / NEWEST).unlink()
 
     assert open_visits(killed).sizes["row"] == 40
+    with open_run(killed) as archive:
+        assert archive.commit(reading(40)) == 40
 
 
 def test_a_flipped_bit_in_a_chunk_is_named_with_its_array(tmp_path: Path) -> None:
