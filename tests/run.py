@@ -41,8 +41,8 @@ def _environment(python: Path) -> bool:
     if subprocess.run([sys.executable, "-m", "venv", VENV], check=False).returncode:
         _refuse("this Python cannot make a virtual environment; on Debian: apt-get install python3-venv")
         return False
-    install = [python, "-m", "pip", "install", "--quiet", "--disable-pip-version-check", "-c", CONSTRAINTS]
-    if subprocess.run([*install, "--editable", EXTRAS], cwd=ROOT, check=False).returncode:
+    words = ("-m", "pip", "install", "--quiet", "--disable-pip-version-check", "-c", CONSTRAINTS)
+    if subprocess.run([python, *words, "--editable", EXTRAS], cwd=ROOT, check=False).returncode:
         _refuse("pip could not install the project; its words stand above")
         return False
     STAMP.write_text(wanted)

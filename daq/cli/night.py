@@ -17,12 +17,13 @@ from daq.cli.plan import wishes
 from daq.errors import DescriptionError
 from daq.itinerary import Itinerary
 from daq.records import Reading
-from daq.report import lines, summary
+from daq.report import lines
+from daq.service.figures import figures_of
 from daq.service.load import config_dir, load
 from daq.service.night import COMPLETE, Asked
 from daq.service.page import PageProcess, make_lab
+from daq.service.progress import Progress
 from daq.service.start import Wanted, begin, resume
-from daq.service.tell import Progress
 
 
 def rehearse(arguments: argparse.Namespace) -> Answer:
@@ -48,7 +49,7 @@ def _carry_out(arguments: argparse.Namespace, transport: str, file: Path) -> Ans
         wanted = Wanted(transport, getattr(arguments, "home", False), asked, watch.begins, watch.took)
         folder, ended = begin(loaded, lab, wanted) if loaded else resume(arguments.resume, wanted)
         watch.done()
-        figures = summary(folder)
+        figures = figures_of(folder)
         wall_s = time.monotonic() - began_s
         figures |= {"wall_s": wall_s, "speed_up": watch.run_s / watch.wall_s if watch.wall_s else None}
         answer = Answer(0 if ended == COMPLETE else 1, figures, _told(figures, watch))
@@ -111,7 +112,7 @@ def _interrupts() -> Iterator[Asked]:
     """Ctrl-C once: end after this stand; twice, or SIGTERM: stop and park."""
     asked = Asked()
 
-    def interrupted(number: int, frame: FrameType | None) -> None:
+    def interrupted(number: int, _: FrameType | None) -> None:
         asked.stop = asked.stop or asked.end or number == signal.SIGTERM
         asked.end = True
         if asked.stop and asked.interruptible:

@@ -93,7 +93,7 @@ def _delta(itinerary: Itinerary) -> float:
     rate = itinerary.rates_hz
     delta = np.zeros(rate.shape[0])
     for pair, sign in itinerary.signs.items():
-        first, second = pair
+        first, second = tuple(pair)
         term = (
             rate[:, index[pair]]
             - rate[:, index[first]]

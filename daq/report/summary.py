@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from pathlib import Path
 from typing import Any
 
@@ -9,20 +10,21 @@ import numpy as np
 import xarray as xr
 
 from daq.estimate import estimate_run
-from daq.storage.digest import digest, gate_digest
-from daq.storage.reader import open_visits, read_meta
 
 
-def summary(folder: Path) -> dict[str, Any]:
-    """Return visits done and lost, the residual with its bars, truth and digest; None where undefined.
+def summary(folder: Path, visits: xr.Dataset, digests: Mapping[str, str]) -> dict[str, Any]:
+    """Return visits done and lost, the residual with its bars, truth and digests; None where undefined.
 
-    Raises
-    ------
-    StorageError
-        When the archive cannot be read.
+    Parameters
+    ----------
+    folder
+        Where the archive stands, told as it is.
+    visits
+        All visits of the run, with its record as attributes.
+    digests
+        Name -> digest of the visits.
     """
-    meta = read_meta(folder)
-    visits = open_visits(folder)
+    meta = visits.attrs
     estimate = estimate_run(visits)
     return {
         "run": str(folder),
@@ -35,8 +37,7 @@ def summary(folder: Path) -> dict[str, Any]:
         **estimate.to_json(),
         "truth_kappa": meta.get("truth_kappa"),
         "ended": meta.get("ended"),
-        "digest": digest(visits),
-        "gate_digest": gate_digest(visits),
+        **digests,
     }
 
 

@@ -64,16 +64,9 @@ def supply(
 
 def readings(visits: xr.Dataset) -> Iterator[Reading]:
     """Yield the readings of an archive as far as the running estimate needs them, in order."""
-    names = (
-        "visit",
-        "attempt",
-        "opening",
-        "position_mm",
-        "dwell_s",
-        "gate_open_ns",
-        "gate_close_ns",
-        "utc_ns",
-    )
-    rest = ("live_s", "values", "quality")
-    for row in zip(*(visits[name].values.tolist() for name in names + rest), strict=True):
-        yield Reading(*row[:9], values=tuple(row[9]), quality=Quality(row[10]))
+    names = ("visit", "attempt", "opening", "position_mm", "dwell_s", "live_s", "values", "quality")
+    stamps = ("gate_open_ns", "gate_close_ns", "utc_ns")
+    columns = (visits[name].values.tolist() for name in names + stamps)
+    for row in zip(*columns, strict=True):
+        field = dict(zip(names + stamps, row, strict=True))
+        yield Reading(**field | {"values": tuple(field["values"]), "quality": Quality(field["quality"])})

@@ -130,7 +130,7 @@ def test_every_reading_before_a_fault_is_kept(bench):
 
 
 def test_the_states_alternate(bench):
-    states = []
+    states: list[State] = []
 
     list(perform(plan((1, 0.0), (3, 0.0)), bench.devices, bench.sink, bench.clock, states.append))
 

@@ -8,6 +8,7 @@ import signal
 import subprocess
 import sys
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 import pytest
@@ -23,10 +24,10 @@ from tests.runs.watching import begun, wait_for_rows
 MEASURE = {"--hours": "1.1", "--seed": "7"}
 
 
-def short_rehearsal(lab: Path, capsys: pytest.CaptureFixture[str], *more: str) -> dict:
+def short_rehearsal(lab: Path, capsys: pytest.CaptureFixture[str], *more: str) -> dict[str, Any]:
     words = [word for pair in MEASURE.items() for word in pair]
     status = main(["rehearse", *words, "--into", str(lab), "--json", *more])
-    figures = json.loads(capsys.readouterr().out.splitlines()[-1])
+    figures: dict[str, Any] = json.loads(capsys.readouterr().out.splitlines()[-1])
     return figures | {"status": status}
 
 
@@ -75,7 +76,7 @@ def test_gates_open_when_the_itinerary_says(finished):
 
 
 def test_a_finished_run_opens_with_zarr_and_xarray_alone(finished):
-    group = zarr.open_group(finished / "run.zarr", mode="r")
+    group: Any = zarr.open_group(finished / "run.zarr", mode="r")
     dataset = xr.open_zarr(finished / "run.zarr")
 
     assert group["values"].shape == (1312, 1)
@@ -87,7 +88,7 @@ def test_a_finished_run_opens_with_zarr_and_xarray_alone(finished):
 
 def kappa_by_hand(folder: Path) -> float:
     """Return kappa from the plain Zarr group with numpy alone."""
-    group = zarr.open_group(folder / "run.zarr", mode="r")
+    group: Any = zarr.open_group(folder / "run.zarr", mode="r")
     column = {name: group[name][:] for name in ("visit", "attempt", "opening", "position_mm", "live_s")}
     counts = group["values"][:, 0]
     stand = group["itinerary/stand"][:][column["visit"]]
@@ -115,7 +116,7 @@ def kappa_by_hand(folder: Path) -> float:
     a, b, c, none = (rates[name] for name in ("A", "B", "C", "none"))
     epsilon = rates["ABC"] - rates["AB"] - rates["AC"] - rates["BC"] + a + b + c - none
     pairs = {"AB": (a, b), "AC": (a, c), "BC": (b, c)}
-    delta = sum(
+    delta: Any = sum(
         np.array(attributes["signs"][name]) * (rates[name] - first - second + none)
         for name, (first, second) in pairs.items()
     )

@@ -183,5 +183,6 @@ def test_the_forecast_of_the_reference_night_meets_its_goal():
     assert expected.visits == 12464
     assert expected.pairs == 19
     assert expected.kappa_counting_se < expected.kappa_se < 1e-4
+    assert expected.goal_s is not None
     assert expected.goal_s < expected.total_s
     assert expected.duty == pytest.approx(expected.live_s / expected.total_s)

@@ -57,7 +57,7 @@ def test_a_repeated_stand_goes_in_the_same_direction_and_is_followed_by_first_at
 
 
 def test_whoever_ends_a_run_is_asked_before_each_stand_only(itinerary):
-    asked = []
+    asked: list[None] = []
 
     def may_go_on():
         asked.append(None)

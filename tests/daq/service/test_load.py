@@ -73,3 +73,9 @@ def test_problems_of_both_files_come_at_once(tmp_path):
     assert "itinerary.laps: this key is missing" in missing
     assert "Did you mean 'laps'?" in unknown
     assert "rigs/lantern.toml, axes.mask.speed_mm_s" in speed
+
+
+@pytest.mark.parametrize("hours", [-3.0, 0.0, float("nan"), float("inf"), 1e6])
+def test_hours_that_cannot_be_meant_are_a_sentence(hours):
+    with pytest.raises(DescriptionError, match="give a number above 0"):
+        load(CONFIGS / "lantern.toml", Wishes(hours=hours))

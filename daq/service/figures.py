@@ -1,0 +1,22 @@
+"""What a run says of itself, from its archive alone."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import Any
+
+from daq.report import summary
+from daq.storage.digest import digest, gate_digest
+from daq.storage.reader import open_visits
+
+
+def figures_of(folder: Path) -> dict[str, Any]:
+    """Return the figures of a run's report; the run may be going on.
+
+    Raises
+    ------
+    StorageError
+        When the archive cannot be read.
+    """
+    visits = open_visits(folder)
+    return summary(folder, visits, {"digest": digest(visits), "gate_digest": gate_digest(visits)})
