@@ -24,6 +24,7 @@ from daq.service.night import COMPLETE, Asked
 from daq.service.page import PageProcess, make_lab
 from daq.service.progress import Progress
 from daq.service.start import Wanted, begin, resume
+from daq.storage.probe import durable_write_s
 
 
 def rehearse(arguments: argparse.Namespace) -> Answer:
@@ -50,8 +51,11 @@ def _carry_out(arguments: argparse.Namespace, transport: str, file: Path) -> Ans
         folder, ended = begin(loaded, lab, wanted) if loaded else resume(arguments.resume, wanted)
         watch.done()
         figures = figures_of(folder)
-        wall_s = time.monotonic() - began_s
-        figures |= {"wall_s": wall_s, "speed_up": watch.run_s / watch.wall_s if watch.wall_s else None}
+        figures |= {
+            "wall_s": time.monotonic() - began_s,
+            "speed_up": watch.run_s / watch.wall_s if watch.wall_s else None,
+            "durable_write_s": durable_write_s(folder),
+        }
         answer = Answer(0 if ended == COMPLETE else 1, figures, _told(figures, watch))
         if page is not None and not arguments.json and sys.stdout.isatty():
             print("\n".join(answer.lines))
@@ -89,7 +93,8 @@ class _Watch:
 def _told(figures: dict[str, Any], watch: _Watch) -> list[str]:
     virtual = figures["kind"] == "rehearsal" and figures["speed_up"]
     faster = f", {figures['speed_up']:.0f} times as fast as the real clock" if virtual else ""
-    return [*lines(figures), f"took {watch.wall_s:.1f} s{faster}"]
+    durable = f"a durable write costs {1e3 * figures['durable_write_s']:.2f} ms here"
+    return [*lines(figures), f"took {watch.wall_s:.1f} s{faster}; {durable}"]
 
 
 def _page(stack: ExitStack, lab: Path, stream: TextIO) -> PageProcess:

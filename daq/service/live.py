@@ -12,6 +12,7 @@ from typing import Any
 import numpy as np
 
 from daq.estimate import Running
+from daq.estimate.dataset import DETECTOR
 from daq.estimate.watch import Watched, concerns
 from daq.itinerary import Itinerary
 from daq.ports import Clock
@@ -56,7 +57,7 @@ class Live:
         if reading.attempt > 1:
             self._repeated.add(stand)
         expected = float(self._itinerary.rates_hz[self._place[reading.visit], self._opening(reading)])
-        self._stand.append((sum(reading.values), reading.live_s, expected))
+        self._stand.append((reading.values[DETECTOR], reading.live_s, expected))
 
     def _opening(self, reading: Reading) -> int:
         return int(np.searchsorted(self._itinerary.openings, reading.opening))

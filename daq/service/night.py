@@ -109,11 +109,11 @@ def _ends_stand(itinerary: Itinerary, number: int) -> bool:
 
 
 def _place_after_fault(night: Night, place: Place, last: Reading | None) -> Place:
-    """Return the stand to repeat: the one that the visit after the last good one belongs to."""
+    """Return where to go on: a stand that has left readings is repeated whole, as another attempt."""
     if last is None:
-        return Place(place.number, place.attempt + 1, AFTER_FAULT)
+        return place
     if _ends_stand(night.itinerary, last.visit):
-        return Place(last.visit + 1, 2, AFTER_FAULT)
+        return Place(last.visit + 1)
     return repeat_from(night.itinerary, last.visit, last.attempt, AFTER_FAULT)
 
 

@@ -1,0 +1,165 @@
+import json
+from collections import Counter
+
+import pytest
+
+from daq.errors import DaqError, DeviceError
+from daq.estimate import Running
+from daq.itinerary import compose, plan_of
+from daq.sequencer import State
+from daq.service.groups import Place
+from daq.service.live import Live
+from daq.service.night import AT_REQUEST, COMPLETE, Asked, Night, carry_out, park
+from daq.storage.feed import read_feed
+from daq.storage.log import RunLog, read_log
+from simulators.clock import VirtualClock
+from tests.examples import lantern, lantern_rig
+from tests.standins import MemoryBench, fails_once, no_fault
+
+META = {
+    **dict.fromkeys(("run", "title", "kind"), "lantern"),
+    "clock": "virtual",
+    "slits": 3,
+    "normalisation": "pairwise",
+    "blinding": "open",
+}
+
+
+def a_night(folder, fault=no_fault, **changes):
+    measurement = lantern(itinerary__laps=4, positions__number=3, **changes)
+    itinerary = compose(measurement, lantern_rig())
+    bench = MemoryBench(VirtualClock(origin_utc_ns=0), fault)
+    night = Night(
+        folder=folder,
+        itinerary=itinerary,
+        archive=bench.sink,  # type: ignore[arg-type]
+        clock=bench.clock,
+        devices=bench.devices,
+        running=Running(plan_of(itinerary, measurement)),
+        live=Live(folder, META, itinerary, bench.clock),
+        log=RunLog(folder),
+        asked=Asked(),
+    )
+    return night, bench
+
+
+def events(folder):
+    return [entry["event"] for entry in read_log(folder)]
+
+
+def test_a_night_without_faults_performs_every_visit_once(tmp_path):
+    night, bench = a_night(tmp_path)
+
+    ended = carry_out(night, Place(0))
+
+    assert ended == COMPLETE
+    assert [reading.visit for reading in bench.sink.kept] == list(range(96))
+    assert night.running.estimate().pairs == 2
+    assert events(tmp_path) == ["run begins"]
+
+
+@pytest.mark.parametrize("kind", ["timeout", "lost", "garbage"])
+def test_after_a_fault_the_stand_is_repeated_whole_and_the_run_goes_on(tmp_path, kind):
+    night, bench = a_night(tmp_path, fails_once("counter read", kind))
+
+    ended = carry_out(night, Place(0))
+
+    tries = Counter((reading.visit, reading.attempt) for reading in bench.sink.kept)
+    assert ended == COMPLETE
+    assert set(tries.values()) == {1}
+    assert [visit for visit, attempt in tries if attempt == 2] == list(range(8))
+    assert [visit for visit, attempt in tries if attempt == 1] == [0, *range(8, 96)]
+    assert night.running.estimate().pairs == 2
+    assert "fault" in events(tmp_path)
+
+
+def test_a_lost_link_is_closed_and_opened_again(tmp_path):
+    night, bench = a_night(tmp_path, fails_once("counter read", "lost"))
+
+    carry_out(night, Place(0))
+
+    assert [word for _, word in bench.trace if word.endswith("close")] == [
+        "mask close",
+        "detector close",
+        "counter close",
+    ]
+
+
+def test_a_fault_in_blocked_order_costs_no_pair(tmp_path):
+    night, bench = a_night(tmp_path, fails_once("counter read", "timeout"), itinerary__order="blocked")
+
+    carry_out(night, Place(0))
+
+    assert {reading.attempt for reading in bench.sink.kept} == {1}
+    assert night.running.estimate().pairs == 2
+
+
+def test_a_device_that_stays_away_parks_the_run_after_half_an_hour(tmp_path):
+    night, bench = a_night(tmp_path, fails_once("counter read", "lost", times=10**6))
+
+    with pytest.raises(DeviceError, match="no reply"):
+        carry_out(night, Place(0))
+
+    assert night.state is State.PARKING
+    assert 1800 < bench.clock.now_ns() / 1e9 < 1800 + 120
+    assert [reading.visit for reading in bench.sink.kept] == [0]
+
+
+def test_a_refusal_parks_at_once(tmp_path):
+    night, bench = a_night(tmp_path, fails_once("mask start", "refused"))
+
+    with pytest.raises(DeviceError):
+        carry_out(night, Place(0))
+
+    assert night.state is State.PARKING
+    assert bench.clock.now_ns() < 10e9
+
+
+def test_who_asks_for_the_end_gets_it_after_the_stand(tmp_path):
+    night, bench = a_night(tmp_path)
+    night.on_visit = lambda reading: setattr(night.asked, "end", reading.visit >= 10)
+
+    ended = carry_out(night, Place(0))
+
+    assert ended == AT_REQUEST
+    assert bench.sink.kept[-1].visit == 15
+
+
+def test_parking_shows_no_slit(tmp_path):
+    night, bench = a_night(tmp_path)
+
+    park(night)
+
+    assert bench.mask_stage.target_mm == 0.0
+
+
+def test_an_ended_run_takes_no_further_step(tmp_path):
+    night, _ = a_night(tmp_path)
+    night.become(State.ENDED)
+
+    with pytest.raises(DaqError, match="cannot become moving"):
+        night.become(State.MOVING)
+
+
+def test_the_feed_tells_the_run_as_it_stands(tmp_path):
+    night, _ = a_night(tmp_path)
+
+    carry_out(night, Place(0))
+    night.live.write("ended", night.running, COMPLETE, now=True)
+
+    feed = read_feed(tmp_path)
+    assert feed is not None
+    assert feed["visit"] == {
+        "number": 95,
+        "of": 96,
+        "opening": feed["visit"]["opening"],
+        "position_mm": feed["visit"]["position_mm"],
+        "attempt": 1,
+    }
+    assert feed["kappa"]["pairs"] == 2
+    assert len(feed["rates_hz"]) == 8
+    assert len(feed["rates_hz"][0]) == len(feed["epsilon_hz"]) == 3
+    assert feed["history"]["kappa"][-1] == feed["kappa"]["value"]
+    assert feed["ended"]["reason"] == COMPLETE
+    assert feed["log"][0]["text"] == "Run begins at visit 0."
+    assert len(json.dumps(feed)) < 20_000
