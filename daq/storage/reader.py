@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from pathlib import Path
 from typing import Any
 
@@ -56,6 +57,15 @@ def read_meta(folder: Path) -> dict[str, Any]:
 def planned_stands(folder: Path) -> NDArray[np.int64]:
     """Return the stand of every planned visit."""
     return _whole(_opened(Path(folder), rows=0)[0], f"{ITINERARY}/stand")
+
+
+def tries_so_far(folder: Path, held: Snapshot) -> Iterator[tuple[int, int]]:
+    """Yield visit and attempt of every row, the sealed ones of the Zarr group first, then those of the journal."""
+    if held.sealed:
+        root = _opened(folder, rows=0)[0]
+        visit, attempt = (_whole(root, name, held.sealed).tolist() for name in ("visit", "attempt"))
+        yield from zip(visit, attempt, strict=True)
+    yield from ((row[0], row[1]) for row in held.rows)  # the table of columns begins with these two
 
 
 def _opened(folder: Path, rows: int | None = None) -> tuple[zarr.Group, Snapshot | None, dict[str, Any]]:

@@ -65,9 +65,7 @@ class Rows:
 
     def arrays(self, rows: Sequence[Sequence[Any]]) -> dict[str, NDArray[Any]]:
         """Return flat rows as one array a column."""
-        by_name = dict(
-            zip(self.names, zip(*rows, strict=True) if rows else ((),) * len(self.names), strict=True)
-        )
+        by_name = {name: [row[place] for row in rows] for place, name in enumerate(self.names)}
         return {column.name: _array(column, by_name) for column in self.columns}
 
     def _channel_parts(self, reading: Reading) -> tuple[float, ...]:

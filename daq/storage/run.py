@@ -18,7 +18,7 @@ from daq.storage.disk import Disk
 from daq.storage.journal import JOURNAL, Journal, create_journal, drop_journal, snapshot
 from daq.storage.layout import CHUNK, FORMAT, looked_up
 from daq.storage.lock import LOCK, lock_run
-from daq.storage.reader import open_visits, planned_stands, read_meta
+from daq.storage.reader import open_visits, planned_stands, read_meta, tries_so_far
 from daq.storage.rows import Rows
 from daq.storage.seal import FINISHED, ZARR, DurableStore, add_array, create_zarr, open_root, write_rows
 from daq.storage.sealer import Sealer
@@ -40,7 +40,9 @@ class Archive:
         self._disk, self._lock_file, self._open = disk, lock, True
         self._form, self._chunk = Rows(held.meta), int(held.meta["chunk"])
         self._stands = planned_stands(folder).tolist()
-        self._tries = _tries(folder, self._stands)
+        self._tries: dict[int, int] = {}
+        for visit, attempt in tries_so_far(folder, held):
+            self._note_try(visit, attempt)
         with rim(folder):
             _drop_partial_files(folder)
             self.journal = Journal(folder, self._form, held.sealed, held.sealed + len(held.rows))
@@ -248,17 +250,6 @@ def _refuse_second(folder: Path) -> None:
 def _no_journal(folder: Path) -> StorageError:
     read_meta(folder)  # raises unless the run is finished
     return StorageError("the run is finished", where=str(folder), remedy="Start a new run")
-
-
-def _tries(folder: Path, stands: list[int]) -> dict[int, int]:
-    dataset = open_visits(folder)
-    tries: dict[int, int] = {}
-    for visit, attempt in zip(
-        dataset["visit"].values.tolist(), dataset["attempt"].values.tolist(), strict=True
-    ):
-        if 0 <= visit < len(stands):
-            tries[stands[visit]] = max(attempt, tries.get(stands[visit], 0))
-    return tries
 
 
 def _drop_partial_files(folder: Path) -> None:
