@@ -4,14 +4,12 @@ from daq.estimate.watch import Watched, concerns
 
 QUIET = {
     "levels": [1.0] * 100,
-    **{
-        "hours": 3.0,
-        "pairs": 10,
-        "excess": 1.0,
-        "stands_done": 100,
-        "stands_left_out": 0,
-        "stands_repeated": 0,
-    },
+    "hours": 3.0,
+    "pairs": 10,
+    "excess": 1.0,
+    "stands_done": 100,
+    "stands_left_out": 0,
+    "stands_repeated": 0,
 }
 
 
