@@ -54,7 +54,7 @@ class DirectConnection:
                 return self._take(min(most, self._waiting))
             if self.ended:
                 return b""
-            raise BlockingIOError(errno.EAGAIN, "nothing is waiting")
+            raise BlockingIOError
 
     def close(self) -> None:
         """End the connection from the client's side."""
@@ -101,7 +101,7 @@ class DirectConnection:
 
 
 class TcpConnection(DirectConnection):
-    """One connection whose bytes cross a pair of loopback sockets."""
+    """A connection whose bytes cross a pair of loopback sockets; what waits for room dies with its host."""
 
     def __init__(self, clock: VirtualClock, begin: Begin) -> None:
         self._client, self._server = _socket_pair()

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import contextlib
+import errno
 import selectors
 import socket
 import threading
@@ -92,7 +93,7 @@ class _RealConnection:
         stream.setsockopt(socket.IPPROTO_TCP, socket.TCP_NODELAY, 1)
         stream.setblocking(False)
         self._stream, self._timeout_s, self._closed = stream, timeout_s, False
-        self._selector = selectors.DefaultSelector()
+        self._selector, self._reading = selectors.DefaultSelector(), threading.Lock()
         self._selector.register(stream, selectors.EVENT_READ)
 
     def send(self, data: bytes) -> None:
@@ -105,17 +106,22 @@ class _RealConnection:
                     raise TimeoutError("the device takes no more bytes") from error
 
     def recv(self, most: int) -> bytes:
+        if self._closed:
+            raise OSError(errno.EBADF, "the connection is closed")
         return self._stream.recv(most)
 
     def wait_readable(self, timeout_s: float) -> bool:
-        # A stream that was closed by another thread can be "read": recv says so with an OSError.
-        return self._closed or bool(self._selector.select(timeout_s)) or self._closed
+        # A stream that another thread has closed can be "read": recv says so with an OSError.
+        with self._reading:
+            return self._closed or bool(self._selector.select(timeout_s))
 
     def close(self) -> None:
         self._closed = True
         with contextlib.suppress(OSError):
-            self._stream.shutdown(socket.SHUT_RDWR)  # wakes whoever waits; the selector goes with the object
-        self._stream.close()
+            self._stream.shutdown(socket.SHUT_RDWR)  # wakes whoever waits ...
+        with self._reading:  # ... but only as long as the stream is open: a closed one wakes nobody
+            self._selector.close()
+            self._stream.close()
 
     def _wait_writable(self) -> bool:
         with selectors.DefaultSelector() as selector:

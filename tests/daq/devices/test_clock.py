@@ -130,14 +130,24 @@ def test_closing_from_another_thread_wakes_the_reader(
     clock: Clock, connection: Connection, listener: socket.socket
 ) -> None:
     peer, _ = listener.accept()
+    until_ns = clock.now_ns() + LONG_NS
     clock.call_at(clock.now_ns() + 5 * MS, connection.close)
+
+    readable = clock.wait_readable(connection, until_ns)
+
+    assert readable
+    assert clock.now_ns() < until_ns
+    with pytest.raises(OSError):
+        connection.recv(100)
+    peer.close()
+
+
+def test_a_closed_connection_holds_no_reader(clock: Clock, connection: Connection) -> None:
+    connection.close()
 
     readable = clock.wait_readable(connection, clock.now_ns() + LONG_NS)
 
     assert readable
-    with pytest.raises(OSError):
-        connection.recv(100)
-    peer.close()
 
 
 def test_a_peer_that_takes_nothing_does_not_hold_the_sender_for_ever(

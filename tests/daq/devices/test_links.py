@@ -47,7 +47,8 @@ class Device:
         if line == b"N?":
             self.asked.append(len(self.asked) + 1)
             return b"%d\n" % self.asked[-1]
-        return {b"*IDN?": self.identity.encode() + b"\n", b"BUSY?": b"0\n", b"ARM": b"ok\n"}.get(line, b"")
+        replies = {b"BUSY?": b"0\n", b"ARM": b"ok\n", b"LONG?": b"x" * 300 + b"\n", b"ENDLESS?": b"x" * 300}
+        return self.identity.encode() + b"\n" if line == b"*IDN?" else replies.get(line, b"")
 
 
 class DeviceSession:
@@ -254,6 +255,40 @@ class TestLink:
 
         assert clock.now_ns() - began_ns == round((0.9 + WIRE.quiet_s) * S)
 
+    def test_what_was_not_paid_in_its_time_is_owed_no_longer(
+        self, link: Link, device: Device, clock: VirtualClock
+    ) -> None:
+        self.spoil(device, ("silent", 0.0))
+        link.ask("N?", r"\d+", safe_to_repeat=True)
+        began_ns = clock.now_ns()
+        self.spoil(device, ("garbage", 0.0))
+
+        link.ask("N?", r"\d+", safe_to_repeat=True)
+
+        assert clock.now_ns() - began_ns == WIRE.quiet_s * S
+
+    def test_the_quiet_time_is_waited_whatever_is_owed(
+        self, host: Host, device: Device, clock: VirtualClock
+    ) -> None:
+        with Link(clock, ADDRESS, replace(WIRE, late_s=0.0), "counter") as link:
+            began_ns = clock.now_ns()
+            self.spoil(device, ("silent", 0.0))
+
+            link.ask("N?", r"\d+", safe_to_repeat=True)
+
+        assert clock.now_ns() - began_ns == (WIRE.timeout_s + WIRE.quiet_s) * S
+
+    def test_a_command_that_has_no_reply_is_owed_none(
+        self, link: Link, device: Device, clock: VirtualClock
+    ) -> None:
+        began_ns = clock.now_ns()
+        link.tell("HUSH")
+        self.spoil(device, ("garbage", 0.0))
+
+        link.ask("N?", r"\d+", safe_to_repeat=True)
+
+        assert clock.now_ns() - began_ns == WIRE.quiet_s * S
+
     def test_what_the_lost_connection_was_owed_may_come_over_the_new_one(
         self, link: Link, device: Device, clock: VirtualClock
     ) -> None:
@@ -301,11 +336,10 @@ class TestLink:
 
         assert caught.value.kind == "timeout"
 
-    def test_a_line_without_end_is_bounded(self, link: Link, device: Device) -> None:
-        device.identity = "x" * 300
-
+    @pytest.mark.parametrize("question", ["LONG?", "ENDLESS?"])
+    def test_a_line_is_bounded_with_and_without_its_end(self, link: Link, question: str) -> None:
         with pytest.raises(DeviceError, match=r"b'x+'") as caught:
-            link.ask("*IDN?", ".*")
+            link.ask(question, ".*")
 
         assert caught.value.kind == "garbage"
 
