@@ -29,11 +29,12 @@ _IDENTITY_TRIES = 3
 class Wire:
     """How a device speaks: its identity, the ends of a line, limits and waiting times.
 
-    `late_s` is how late a reply can come at most, after its question; it is waited only after an upset.
+    The identity is IEEE 488.2's by default: four fields between commas. `late_s` is how late a reply can come
+    at most, after its question; it is waited only after an upset.
     """
 
     identity: str = "*IDN?"
-    identity_reply: str = r"\S.*"
+    identity_reply: str = r"[^,]+(,[^,]+){3}"
     send_end: str = "\n"
     reply_end: str = "\n"
     timeout_s: float = 0.5

@@ -498,6 +498,21 @@ class TestLink:
 
         assert [error.kind for error in errors] == ["timeout"]
 
+    @pytest.mark.parametrize(("identity", "opens"), [("LANTERN,COUNTER,7,1.2", True), ("0", False)])
+    def test_an_identity_has_four_fields_by_default(
+        self, host: Host, device: Device, clock: VirtualClock, identity: str, opens: bool
+    ) -> None:
+        """A number that was left over from an earlier program is none."""
+        device.identity, link = identity, Link(clock, ADDRESS, Wire(), "counter")
+
+        try:
+            link.open()
+        except DeviceError:
+            assert not opens
+        else:
+            assert opens
+        link.close()
+
     def test_the_ends_of_line_are_the_wires(self, host: Host, clock: VirtualClock, device: Device) -> None:
         device.identity = IDENTITY + "\r"
         wire = Wire(identity_reply=WIRE.identity_reply, send_end=" \n", reply_end="\r\n")
