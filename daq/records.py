@@ -91,6 +91,9 @@ class Reading:
     events: bytes | None = None
 
 
+# What a person may say of a finished run.
+VERDICTS = ("counts", "counts in part", "doubtful", "does not count")
+
 # Reasons are ids in the archive; their words stand here and in the archive's attributes.
 REASONS: Mapping[int, str] = {
     0: "planned",

@@ -9,7 +9,9 @@ from pathlib import Path
 from typing import Any
 
 from daq.cli.answer import Answer
+from daq.records import VERDICTS
 
+RUN = "lab/runs/20261201T170000Z-lantern"
 ABOUT = """Plans and runs multi-mask interference scans, loses no count, and gives a residual that can be
 defended.
 
@@ -92,9 +94,28 @@ def _after_words(commands: Any) -> None:
         "report",
         "after:report",
         "print the report of a run",
-        "tercet report lab/runs/20261201T170000Z-lantern",
+        f"tercet report {RUN}",
     )
-    report.add_argument("run", type=Path, metavar="RUN", help="a run folder")
+    verify = _add(
+        commands, "verify", "after:verify", "check every part of a run's archive", f"tercet verify {RUN}"
+    )
+    note = _add(
+        commands, "note", "after:note", "add a note to a run's log", f"tercet note {RUN} 'door was open at 2'"
+    )
+    accept = _add(
+        commands,
+        "accept",
+        "after:accept",
+        "add your verdict on a run to its log",
+        f"tercet accept {RUN} counts",
+    )
+    for one in (report, verify, note, accept):
+        one.add_argument("run", type=Path, metavar="RUN", help="a run folder")
+    note.add_argument("text", metavar="TEXT", help="what you saw")
+    accept.add_argument("verdict", choices=VERDICTS, help="whether this night counts")
+    accept.add_argument("--remark", default="", help="why")
+    for one in (note, accept):
+        one.add_argument("--by", metavar="NAME", help="who says so (your login name)")
 
 
 def _add(commands: Any, name: str, target: str, text: str, example: str) -> argparse.ArgumentParser:

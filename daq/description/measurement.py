@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from typing import Annotated, Literal
+from collections.abc import Mapping
+from typing import Annotated, Any, Literal
 
 from pydantic import Field, model_validator
 
@@ -72,8 +73,10 @@ class Measurement(Table):
     schema_: Literal[1] = Field(alias="schema")
     name: Annotated[str, Field(pattern="^[a-z0-9][a-z0-9-]*$")]
     title: str = ""
+    purpose: str = ""
     rig: str
     positions: Positions
     itinerary: Order
     expect: Expect
     estimate: Estimate = Estimate()
+    notes: Mapping[str, Any] = {}

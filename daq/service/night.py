@@ -17,7 +17,7 @@ from daq.reactions import Action, reaction
 from daq.records import Reading
 from daq.sequencer import State, perform, step
 from daq.service.groups import AFTER_FAULT, Place, repeat_from, supply
-from daq.service.live import Live
+from daq.service.live import Live, stamp
 from daq.storage.log import RunLog
 from daq.storage.run import Archive
 
@@ -71,7 +71,7 @@ def carry_out(night: Night, place: Place) -> str:
     StorageError
         When a reading could not be stored; all before it are safe.
     """
-    _tell(night, "run goes on" if place.number else "run begins", visit=place.number)
+    tell(night, "run goes on" if place.number else "run begins", visit=place.number)
     tries, good_ns = 0, night.clock.now_ns()
     while True:
         last: Reading | None = None
@@ -81,7 +81,7 @@ def carry_out(night: Night, place: Place) -> str:
             night.become(State.PARKING)
             return AT_REQUEST if night.asked.end else COMPLETE
         except DeviceError as error:
-            _tell(night, "fault", text=str(error), kind=error.kind)
+            tell(night, "fault", text=str(error), kind=error.kind)
             action, wait_s = reaction(error.kind, tries, (night.clock.now_ns() - good_ns) / 1e9)
             if action is Action.PARK:
                 night.become(State.PARKING)
@@ -140,7 +140,7 @@ def park(night: Night) -> None:
         predicted_s = night.devices.mask.show(mask(NONE))
         night.clock.sleep_until(night.clock.now_ns() + round(predicted_s * 1e9))
     except DeviceError as error:
-        _tell(night, "could not park", text=str(error))
+        tell(night, "could not park", text=str(error))
 
 
 def stop_now(night: Night) -> None:
@@ -167,12 +167,16 @@ def keep_beside(folder: Path, state: bytes) -> None:
     fresh.replace(folder / BENCH_FILE)
 
 
-def _tell(night: Night, event: str, **fields: Any) -> None:
-    night.log.append(event, run_ns=night.clock.now_ns(), **fields)
+def tell(night: Night, event: str, **fields: Any) -> None:
+    """Say what happened, in the run's log, on the page and in the program's log."""
+    now = {"utc": stamp(night.clock.utc_ns()), "run_ns": night.clock.now_ns()}
+    night.log.append(event, **now, **fields)
     night.live.say(fields.get("text") or _sentence(event, fields))
     log.info("%s %s", event, fields)
 
 
 def _sentence(event: str, fields: dict[str, Any]) -> str:
     text = event[:1].upper() + event[1:]
-    return f"{text} at visit {fields['visit']}." if "visit" in fields else f"{text}."
+    if "visit" in fields:
+        return f"{text} at visit {fields['visit']}."
+    return f"{text}: {fields['reason']}." if "reason" in fields else f"{text}."

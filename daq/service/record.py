@@ -2,6 +2,9 @@
 
 from __future__ import annotations
 
+import platform
+import sys
+import uuid
 from dataclasses import asdict
 from importlib.metadata import version
 from typing import Any
@@ -9,11 +12,14 @@ from typing import Any
 import numpy as np
 
 from daq import openings
+from daq.description import Rig
 from daq.estimate import kappa
 from daq.itinerary import Itinerary
 from daq.ports import Bench, Clock, Devices
 from daq.service.live import stamp
 from daq.service.load import Loaded
+
+LIBRARIES = ("numpy", "scipy", "zarr", "numcodecs", "xarray", "pydantic", "pyserial", "pyvisa", "dash")
 
 
 def record_of(
@@ -23,10 +29,12 @@ def record_of(
     measurement, rig = loaded.measurement, loaded.rig
     settings = measurement.estimate
     return {
-        "name": measurement.name,
-        "title": measurement.title,
+        **_identity(loaded),
         "kind": "rehearsal" if bench else "run",
         "clock": clock.kind,
+        "set_up": _set_up(rig),
+        "devices": _devices(rig, devices),
+        "software": _software(),
         "slits": itinerary.slits,
         "openings": itinerary.openings.tolist(),
         "positions_mm": itinerary.positions_mm.tolist(),
@@ -45,11 +53,59 @@ def record_of(
         "seed": itinerary.seed,
         "goal_se": settings.goal_se,
         "blinding": "open",
-        "software": f"tercet {version('tercet')}",
-        "identities": {device.name: device.identity() for device in devices.all},
         "started_utc": stamp(clock.utc_ns()),
         "wishes": asdict(loaded.wishes),
         "truth_kappa": None if bench is None else _truth(bench, itinerary, settings.normalisation),
+    }
+
+
+def _identity(loaded: Loaded) -> dict[str, Any]:
+    measurement = loaded.measurement
+    return {
+        "id": str(uuid.uuid4()),
+        "name": measurement.name,
+        "title": measurement.title,
+        "purpose": measurement.purpose,
+        "notes": dict(measurement.notes),
+    }
+
+
+def _set_up(rig: Rig) -> dict[str, Any]:
+    """Return geometry, slits and openings as they were described, lengths in the units of their names."""
+    return {
+        "rig": rig.name,
+        "simulated": rig.simulated,
+        "chip": rig.mask.chip,
+        **rig.geometry.model_dump(),
+        "slits": {letter: slit.model_dump() for letter, slit in rig.slits.items()},
+        "openings": {name: shown.model_dump() for name, shown in rig.mask.openings.items()},
+        "axes": {name: axis.model_dump() for name, axis in rig.axes.items()},
+    }
+
+
+def _devices(rig: Rig, devices: Devices) -> dict[str, Any]:
+    """Return what each device entry is, with the identity replies verbatim."""
+    replies = {device.name: device.identity() for device in devices.all}
+    return {
+        name: entry.model_dump()
+        | {
+            "identity": replies.get(name)
+            or {axis: replies[axis] for axis, one in rig.axes.items() if one.device == name}
+        }
+        for name, entry in rig.devices.items()
+    }
+
+
+def _software() -> dict[str, Any]:
+    return {
+        "name": "tercet",
+        "version": version("tercet"),
+        "python": platform.python_version(),
+        "system": platform.system(),
+        "release": platform.release(),
+        "machine": platform.machine(),
+        "libraries": {name: version(name) for name in LIBRARIES},
+        "command": sys.argv[1:],
     }
 
 

@@ -6,6 +6,7 @@ from collections.abc import Callable
 from contextlib import ExitStack
 from dataclasses import dataclass, field
 from pathlib import Path
+from typing import Any
 
 import xarray as xr
 
@@ -21,8 +22,9 @@ from daq.service.extensions import open_bench
 from daq.service.groups import Place, place_after, readings
 from daq.service.live import Live, stamp
 from daq.service.load import Loaded, Wishes, load_run
-from daq.service.night import BENCH_FILE, STOPPED, Asked, Night, carry_out, park, stop_now
+from daq.service.night import BENCH_FILE, STOPPED, Asked, Night, carry_out, park, stop_now, tell
 from daq.service.record import record_of
+from daq.storage.digest import digest, gate_digest
 from daq.storage.lab import new_run_folder
 from daq.storage.log import RunLog
 from daq.storage.reader import open_visits, read_meta
@@ -96,8 +98,21 @@ def _through(night: Night, place: Place, wanted: Wanted) -> str:
         raise
     _end(night, ended)
     if ended != STOPPED:
-        night.archive.finish({"ended": ended, "ended_utc": stamp(night.clock.utc_ns())})
+        night.archive.finish(_results(night, ended))
     return ended
+
+
+def _results(night: Night, ended: str) -> dict[str, Any]:
+    """Return what a finished archive says of its outcome: derived, and checked again by `tercet verify`."""
+    visits = open_visits(night.folder)
+    figures = night.running.estimate().to_json()
+    return {
+        "ended": ended,
+        "ended_utc": stamp(night.clock.utc_ns()),
+        "results": {name: value for name, value in figures.items() if not isinstance(value, list)},
+        "digest": digest(visits),
+        "gate_digest": gate_digest(visits),
+    }
 
 
 def _interruptibly(night: Night, place: Place) -> str:
@@ -114,8 +129,7 @@ def _interruptibly(night: Night, place: Place) -> str:
 def _end(night: Night, reason: str) -> None:
     park(night)
     night.become(State.ENDED)
-    night.log.append("ended", run_ns=night.clock.now_ns(), reason=reason)
-    night.live.say(f"Ended: {reason}.")
+    tell(night, "ended", reason=reason)
     night.live.write(night.state.value, night.running, reason, now=True)
 
 

@@ -1,0 +1,100 @@
+"""What is done with a run afterwards: verify, note, accept, on a rehearsed run."""
+
+from __future__ import annotations
+
+import json
+import shutil
+from pathlib import Path
+
+import pytest
+
+from daq.cli import main
+from daq.storage.log import read_log
+from daq.storage.reader import read_meta
+
+
+@pytest.fixture(scope="module")
+def original(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    lab = tmp_path_factory.mktemp("lab")
+    main(["rehearse", "--hours", "1.1", "--seed", "3", "--link", "direct", "--into", str(lab)])
+    (folder,) = (lab / "runs").iterdir()
+    return folder
+
+
+@pytest.fixture
+def run(original: Path, tmp_path: Path) -> Path:
+    return Path(shutil.copytree(original, tmp_path / original.name))
+
+
+def answer(capsys, *words: str) -> tuple[int, dict]:
+    status = main([*words, "--json"])
+    return status, json.loads(capsys.readouterr().out)
+
+
+def test_a_sound_run_verifies(run, capsys):
+    status, figures = answer(capsys, "verify", str(run))
+
+    assert status == 0
+    assert figures == {"ok": True, "visits": 1312, "rows": 1312, "problems": []}
+
+
+@pytest.mark.parametrize("file", ["run.zarr/values/c/0/0", "run.zarr/live_s/c/0", "description.toml"])
+def test_one_flipped_byte_is_named(run, capsys, file):
+    data = bytearray((run / file).read_bytes())
+    data[len(data) // 2] ^= 1
+    (run / file).write_bytes(data)
+
+    status, figures = answer(capsys, "verify", str(run))
+
+    assert status == 4
+    assert any(file in problem for problem in figures["problems"])
+
+
+def test_a_result_that_the_counts_do_not_give_is_named(run, capsys):
+    root = run / "run.zarr" / "zarr.json"
+    meta = json.loads(root.read_text())
+    meta["attributes"]["results"]["kappa"] += 1e-9
+    root.write_text(json.dumps(meta))
+
+    status, figures = answer(capsys, "verify", str(run))
+
+    assert status == 4
+    assert figures["problems"]
+
+
+def test_a_note_is_added_and_nothing_else_changes(run, capsys):
+    before = read_log(run)
+
+    status, entry = answer(capsys, "note", str(run), "the door was open at 2", "--by", "night watch")
+
+    assert status == 0
+    assert read_log(run)[:-1] == before
+    assert read_log(run)[-1]["text"] == entry["text"] == "the door was open at 2"
+    assert answer(capsys, "verify", str(run))[0] == 0
+
+
+def test_an_empty_note_is_refused(run, capsys):
+    status, figures = answer(capsys, "note", str(run), "  ")
+
+    assert status == 2
+    assert "the note is empty" in figures["problems"][0]
+
+
+def test_a_verdict_is_bound_to_the_counts(run, capsys):
+    status, entry = answer(capsys, "accept", str(run), "counts in part", "--by", "night watch")
+
+    assert status == 0
+    assert entry["digest"] == read_meta(run)["digest"]
+    assert entry["verdict"] == "counts in part"
+
+
+def test_the_record_says_what_was_done_with_which_devices_and_which_program(run):
+    meta = read_meta(run)
+
+    wanted = "id name title purpose kind clock set_up devices software order seed wishes started_utc notes"
+    assert set(wanted.split()) <= set(meta)
+    assert meta["devices"]["counter"]["identity"]
+    assert set(meta["devices"]["stages"]["identity"]) == {"mask", "detector"}
+    assert meta["set_up"]["slits"]["A"]["width_m"] == 40e-6
+    assert set(meta["texts_sha256"]) == {"description.toml", "rig.toml"}
+    assert meta["results"]["pairs"] == 2
