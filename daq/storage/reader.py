@@ -14,11 +14,11 @@ from zarr.storage import LocalStore
 
 from daq.errors import StorageError
 from daq.estimate.use import use
-from daq.storage.journal import Snapshot, check_format, snapshot
 from daq.storage.layout import Column, columns, looked_up, planned
 from daq.storage.rows import Rows
 from daq.storage.seal import FINISHED, ITINERARY, ZARR
-from daq.storage.trouble import stored
+from daq.storage.snapshot import Snapshot, check_format, snapshot
+from daq.storage.trouble import LIBRARY_ERRORS, stored
 
 
 def open_visits(folder: Path) -> xr.Dataset:
@@ -60,7 +60,7 @@ def planned_stands(folder: Path) -> NDArray[np.int64]:
 
 
 def tries_so_far(folder: Path, held: Snapshot) -> Iterator[tuple[int, int]]:
-    """Yield visit and attempt of every row, the sealed ones of the Zarr group first, then those of the journal."""
+    """Yield visit and attempt of every row, those sealed in the Zarr group first."""
     if held.sealed:
         root = _opened(folder, rows=0)[0]
         visit, attempt = (_whole(root, name, held.sealed).tolist() for name in ("visit", "attempt"))
@@ -99,7 +99,7 @@ def never_begun(folder: Path) -> StorageError:
 def _whole(group: zarr.Group, name: str, stop: int | None = None) -> NDArray[Any]:
     try:
         return np.asarray(group[name][:stop])  # type: ignore[index]
-    except (OSError, ValueError, KeyError, RuntimeError) as error:
+    except LIBRARY_ERRORS as error:
         raise stored(error, f"{group.store_path}/{name}") from error
 
 

@@ -14,14 +14,17 @@ import zarr
 
 from daq.errors import StorageError
 from daq.records import Reading
+from daq.storage.digest import digest, gate_digest
 from daq.storage.disk import Disk
-from daq.storage.journal import JOURNAL, Journal, create_journal, drop_journal, snapshot
+from daq.storage.journal import Journal, create_journal, drop_journal
 from daq.storage.layout import CHUNK, FORMAT, looked_up
 from daq.storage.lock import LOCK, lock_run
+from daq.storage.manifest import write_manifest
 from daq.storage.reader import open_visits, planned_stands, read_meta, tries_so_far
 from daq.storage.rows import Rows
 from daq.storage.seal import FINISHED, ZARR, DurableStore, add_array, create_zarr, open_root, write_rows
 from daq.storage.sealer import Sealer
+from daq.storage.snapshot import JOURNAL, snapshot
 from daq.storage.texts import write_texts
 from daq.storage.trouble import rim
 
@@ -101,6 +104,7 @@ class Archive:
             while self.seal_next():
                 pass
             self.write_rest({**self.meta, **plain(attributes), FINISHED: True})
+            write_manifest(self.folder, self.meta["texts_sha256"], self._disk)
             self.journal.checkpoint()
             self.journal.close()
             self._disk.step("rest")
@@ -136,7 +140,8 @@ class Archive:
             add_array(root, column, self._chunk)
         names = [column.name for column in looked_up()]
         write_rows(root, names, 0, {name: dataset[name].values for name in names})
-        root.update_attributes(dict(attributes))
+        digests = {"digest": digest(dataset), "gate_digest": gate_digest(dataset)}
+        root.update_attributes({**attributes, **digests})
         store = root.store
         assert isinstance(store, DurableStore)
         with warnings.catch_warnings():  # in no specification yet, but one file then opens all arrays

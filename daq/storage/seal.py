@@ -89,6 +89,11 @@ def open_root(folder: Path, disk: Disk) -> zarr.Group:
     return zarr.open_group(DurableStore(folder / ZARR, disk), mode="r+", use_consolidated=False)
 
 
+def open_array(folder: Path, name: str) -> zarr.Array[Any]:
+    """Return one array of a run for reading, whatever became of the others."""
+    return zarr.open_array(LocalStore(folder / ZARR, read_only=True), path=name, mode="r")
+
+
 def write_rows(
     root: zarr.Group, names: Iterable[str], first: int, arrays: Mapping[str, NDArray[Any]]
 ) -> None:

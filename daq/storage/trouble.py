@@ -10,6 +10,9 @@ from pathlib import Path
 
 from daq.errors import StorageError
 
+# What the system, SQLite, Zarr and its codecs raise.
+LIBRARY_ERRORS = (OSError, sqlite3.Error, ValueError, KeyError, RuntimeError)
+
 _FULL = (
     "the disk is full",
     "Free space on it: every visit acknowledged so far is safe, and the run goes on once there is room",
@@ -53,7 +56,7 @@ def rim(where: Path | str) -> Iterator[None]:
     """Turn an error of the system, of SQLite or of Zarr inside the block into a StorageError."""
     try:
         yield
-    except (OSError, sqlite3.Error, ValueError, KeyError, RuntimeError) as error:
+    except LIBRARY_ERRORS as error:
         raise stored(error, where) from error
 
 

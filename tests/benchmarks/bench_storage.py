@@ -20,10 +20,10 @@ import numpy as np
 
 from daq.records import Reading
 from daq.storage.disk import Disk
-from daq.storage.journal import JOURNAL
 from daq.storage.layout import CHUNK
 from daq.storage.reader import open_visits
 from daq.storage.run import Archive, open_run
+from daq.storage.snapshot import JOURNAL
 from tests.daq.storage.example import reading, started
 
 ROUNDS, EACH = 40, 50

@@ -17,6 +17,7 @@ from daq.storage.run import Archive, create_run
 
 OPENINGS = (0, 1, 2, 3)
 POSITIONS_MM = (-1.5, 0.0, 1.5)
+MEANS = (1_000, 50_000, 52_000, 150_000)  # counts of a visit by opening
 META: Mapping[str, Any] = {
     "run": "20261201T170000Z-small",
     "name": "small",
@@ -76,7 +77,7 @@ def reading(visit: int, attempt: int = 1) -> Reading:
         gate_close_ns=opened + 2_000_000_123,
         utc_ns=1_796_144_400_000_000_000 + opened,
         live_s=2.0 + 1e-9 * float(draw.integers(1000)),
-        values=tuple(float(count) for count in draw.poisson(50_000, 2)),
+        values=tuple(float(count) for count in draw.poisson(MEANS[int(plan.opening[visit])], 2)),
         encoder_mm={
             "mask": (2.0 + float(draw.normal(0, 1e-3)), 2.0),
             "detector": (-0.0, float(draw.normal())),

@@ -13,7 +13,7 @@ from dataclasses import dataclass
 from pathlib import Path
 
 from daq.storage.disk import Disk
-from daq.storage.journal import JOURNAL
+from daq.storage.snapshot import JOURNAL
 
 MODES = ("lose", "some", "keep")  # of the names not yet synced: none, a random prefix, all of them
 

@@ -16,9 +16,9 @@ import pytest
 
 from daq.errors import StorageError
 from daq.storage.disk import Disk
-from daq.storage.journal import JOURNAL, NEWEST
 from daq.storage.reader import open_visits, read_meta
 from daq.storage.run import Archive, create_run, open_run
+from daq.storage.snapshot import JOURNAL, NEWEST
 from tests.daq.storage.example import META, planned_visits, reading, started
 
 

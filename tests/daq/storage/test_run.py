@@ -11,10 +11,10 @@ import xarray as xr
 import zarr
 
 from daq.records import Quality, Reading
-from daq.storage.journal import JOURNAL
 from daq.storage.layout import columns
 from daq.storage.reader import open_itinerary, open_visits, read_meta
 from daq.storage.run import Archive, create_run, open_run
+from daq.storage.snapshot import JOURNAL
 from tests.daq.storage.example import META, TEXTS, expected, planned_visits, reading, started
 
 
@@ -88,7 +88,7 @@ def test_a_finished_folder_holds_the_copies_and_the_zarr_group_alone(tmp_path: P
 
     names = sorted(path.name for path in (tmp_path / "run").iterdir())
 
-    assert names == ["description.toml", "dialects", "run.zarr"]
+    assert names == ["description.toml", "dialects", "run.zarr", "sha256.txt"]
     assert not list((tmp_path / "run").rglob("*.partial"))
     for name, text in TEXTS.items():
         assert (tmp_path / "run" / name).read_bytes() == text

@@ -10,8 +10,8 @@ import os
 import sys
 from pathlib import Path
 
-from daq.storage.journal import JOURNAL
 from daq.storage.run import open_run
+from daq.storage.snapshot import JOURNAL
 from tests.daq.storage.example import reading, started
 
 
