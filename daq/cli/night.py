@@ -18,9 +18,10 @@ from daq.errors import DescriptionError
 from daq.itinerary import Itinerary
 from daq.records import Reading
 from daq.report import lines
+from daq.service.asked import Asked
 from daq.service.figures import figures_of
 from daq.service.load import config_dir, load
-from daq.service.night import COMPLETE, Asked
+from daq.service.night import COMPLETE
 from daq.service.page import PageProcess, make_lab
 from daq.service.progress import Progress
 from daq.service.start import Wanted, begin, resume

@@ -29,6 +29,7 @@ def parser() -> argparse.ArgumentParser:
     commands = whole.add_subparsers(title="commands", required=True, metavar="COMMAND")
     _plan_words(commands)
     _night_words(commands)
+    _watch_words(commands)
     _after_words(commands)
     return whole
 
@@ -86,6 +87,25 @@ def _night_words(commands: Any) -> None:
         "--home", action="store_true", help="home axes that lost their reference (look at the bench first)"
     )
     run.add_argument("--page", action="store_true", help="show the live page while the run goes on")
+
+
+def _watch_words(commands: Any) -> None:
+    status = _add(
+        commands, "status", "watch:status", "say how a lab's newest run is getting on", "tercet status lab"
+    )
+    hold = _add(commands, "hold", "watch:hold", "ask a run to hold before its next stand", "tercet hold lab")
+    resume = _add(commands, "resume", "watch:resume", "ask a run that holds to go on", "tercet resume lab")
+    end = _add(
+        commands, "end", "watch:end", "ask a run to end after this stand", "tercet end lab --after-lap"
+    )
+    for one in (status, hold, resume, end):
+        one.add_argument("lab", type=Path, metavar="LAB", help="the lab folder")
+    for one in (hold, resume, end):
+        one.add_argument("--run", metavar="NAME", help="a run of the lab (the newest)")
+        one.add_argument("--by", metavar="NAME", help="who asks (your login name)")
+    end.add_argument("--after-lap", action="store_true", help="end at the edge of a lap, not of a stand")
+    log = _add(commands, "log", "watch:log", "print what happened in a run", f"tercet log {RUN}")
+    log.add_argument("run", type=Path, metavar="RUN", help="a run folder")
 
 
 def _after_words(commands: Any) -> None:

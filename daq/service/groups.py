@@ -48,14 +48,14 @@ def place_after(itinerary: Itinerary, visits: xr.Dataset) -> Place:
 
 
 def supply(
-    itinerary: Itinerary, place: Place, may_go_on: Callable[[], bool]
+    itinerary: Itinerary, place: Place, may_go_on: Callable[[int], bool]
 ) -> Iterator[tuple[Visit, int, int]]:
-    """Yield (visit, attempt, reason) from a place on, asking before every stand whether to go on."""
+    """Yield (visit, attempt, reason) from a place on; each stand asks, by its first visit, whether it may."""
     starts = set(stand_starts(itinerary).tolist())
     attempt, reason = place.attempt, place.reason
     for number in range(place.number, len(itinerary)):
         if number in starts:
-            if not may_go_on():
+            if not may_go_on(number):
                 return
             if number != place.number:
                 attempt, reason = 1, PLANNED

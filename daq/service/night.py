@@ -16,6 +16,7 @@ from daq.ports import Bench, Clock, Devices
 from daq.reactions import Action, reaction
 from daq.records import Reading
 from daq.sequencer import State, perform, step
+from daq.service.asked import Asked, hear
 from daq.service.groups import AFTER_FAULT, Place, repeat_from, supply
 from daq.service.live import Live, stamp
 from daq.storage.log import RunLog
@@ -24,18 +25,6 @@ from daq.storage.run import Archive
 log = logging.getLogger(__name__)
 
 COMPLETE, AT_REQUEST, STOPPED = "complete", "ended at request after a stand", "stopped at request"
-
-
-@dataclass(slots=True)
-class Asked:
-    """What an operator has asked for since the run began: end after this stand, stop at once.
-
-    `interruptible` while visits are performed: only then may a stop break in.
-    """
-
-    end: bool = False
-    stop: bool = False
-    interruptible: bool = False
 
 
 @dataclass(slots=True)
@@ -78,21 +67,32 @@ def carry_out(night: Night, place: Place) -> str:
         try:
             for reading in _readings(night, place):
                 last, tries, good_ns = reading, 0, night.clock.now_ns()
-            night.become(State.PARKING)
-            return AT_REQUEST if night.asked.end else COMPLETE
         except DeviceError as error:
-            tell(night, "fault", text=str(error), kind=error.kind)
-            action, wait_s = reaction(error.kind, tries, (night.clock.now_ns() - good_ns) / 1e9)
-            if action is Action.PARK:
-                night.become(State.PARKING)
-                raise
-            place = _place_after_fault(night, place, last)
+            action, wait_s = _reaction(night, error, tries, good_ns)
+            place = _place_after(night, place, last)
             tries += 1
             _recover(night, action, wait_s)
+            continue
+        place = _place_after(night, place, last)
+        if night.asked.end or place.number == len(night.itinerary):
+            break
+        _hold(night)
+    night.become(State.PARKING)
+    return COMPLETE if place.number == len(night.itinerary) else AT_REQUEST
+
+
+def _reaction(night: Night, error: DeviceError, tries: int, good_ns: int) -> tuple[Action, float]:
+    """Return what to do about a fault and how long to wait before; raises it when that is to park."""
+    tell(night, "fault", text=str(error), kind=error.kind)
+    action, wait_s = reaction(error.kind, tries, (night.clock.now_ns() - good_ns) / 1e9)
+    if action is Action.PARK:
+        night.become(State.PARKING)
+        raise error
+    return action, wait_s
 
 
 def _readings(night: Night, place: Place) -> Iterator[Reading]:
-    visits = supply(night.itinerary, place, lambda: not night.asked.end)
+    visits = supply(night.itinerary, place, lambda number: _may_go_on(night, number))
     for _, reading in perform(visits, night.devices, night.archive, night.clock, night.become):
         night.running.add(reading)
         night.live.took(reading)
@@ -103,13 +103,40 @@ def _readings(night: Night, place: Place) -> Iterator[Reading]:
         yield reading
 
 
+def _may_go_on(night: Night, number: int) -> bool:
+    """Return whether a stand may begin; asked while the gate before it is open, so nothing waits here."""
+    _hear(night)
+    if night.asked.end_after_lap and _begins_lap(night.itinerary, number):
+        night.asked.end = True
+    return not (night.asked.end or night.asked.hold)
+
+
+def _hold(night: Night) -> None:
+    """Return when the hold is over, or when the end is asked for."""
+    tell(night, "holding")
+    while night.asked.hold and not night.asked.end:
+        night.become(State.HOLDING)
+        night.live.write(night.state.value, night.running)
+        night.asked.idle()
+        _hear(night)
+
+
+def _begins_lap(itinerary: Itinerary, number: int) -> bool:
+    return number == 0 or bool(itinerary.lap[number] != itinerary.lap[number - 1])
+
+
+def _hear(night: Night) -> None:
+    for request in hear(night.asked, stamp(night.clock.utc_ns())):
+        tell(night, f"{request.what} asked", who=request.who)
+
+
 def _ends_stand(itinerary: Itinerary, number: int) -> bool:
     last = number + 1 == len(itinerary)
     return last or itinerary.stand[number + 1] != itinerary.stand[number]
 
 
-def _place_after_fault(night: Night, place: Place, last: Reading | None) -> Place:
-    """Return where to go on: a stand that has left readings is repeated whole, as another attempt."""
+def _place_after(night: Night, place: Place, last: Reading | None) -> Place:
+    """Return where to go on: a stand that was broken off is repeated whole, as another attempt."""
     if last is None:
         return place
     if _ends_stand(night.itinerary, last.visit):
@@ -179,4 +206,6 @@ def _sentence(event: str, fields: dict[str, Any]) -> str:
     text = event[:1].upper() + event[1:]
     if "visit" in fields:
         return f"{text} at visit {fields['visit']}."
+    if "who" in fields:
+        return f"{text} by {fields['who']}."
     return f"{text}: {fields['reason']}." if "reason" in fields else f"{text}."

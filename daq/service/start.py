@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import time
 from collections.abc import Callable
 from contextlib import ExitStack
 from dataclasses import dataclass, field
@@ -18,17 +19,21 @@ from daq.itinerary import Itinerary, plan_of
 from daq.ports import Bench, Clock, Devices
 from daq.records import Reading
 from daq.sequencer import State
+from daq.service.asked import Asked
 from daq.service.extensions import open_bench
 from daq.service.groups import Place, place_after, readings
 from daq.service.live import Live, stamp
 from daq.service.load import Loaded, Wishes, load_run
-from daq.service.night import BENCH_FILE, STOPPED, Asked, Night, carry_out, park, stop_now, tell
+from daq.service.night import BENCH_FILE, STOPPED, Night, carry_out, park, stop_now, tell
 from daq.service.record import record_of
+from daq.service.requests import open_requests, settle
 from daq.storage.digest import digest, gate_digest
 from daq.storage.lab import new_run_folder
 from daq.storage.log import RunLog
 from daq.storage.reader import open_visits, read_meta
 from daq.storage.run import Archive, create_run, open_run
+
+HOLD_POLL_S = 0.2
 
 
 @dataclass(frozen=True, slots=True)
@@ -86,6 +91,7 @@ def resume(folder: Path, wanted: Wanted) -> tuple[Path, str]:
 
 def _through(night: Night, place: Place, wanted: Wanted) -> str:
     """Carry a night out; the archive is finished when it ends in good order, else left to be resumed."""
+    _listen(night.asked, night.folder)
     wanted.on_start(night.folder, night.itinerary)
     night.live.write(night.state.value, night.running, now=True)
     try:
@@ -100,6 +106,14 @@ def _through(night: Night, place: Place, wanted: Wanted) -> str:
     if ended != STOPPED:
         night.archive.finish(_results(night, ended))
     return ended
+
+
+def _listen(asked: Asked, folder: Path) -> None:
+    """Let a run hear what operators leave for it in the book of its lab."""
+    lab = folder.parents[1]
+    asked.requests = lambda: open_requests(lab, folder.name)
+    asked.settled = lambda request, outcome: settle(lab, request, outcome)
+    asked.idle = lambda: time.sleep(HOLD_POLL_S)
 
 
 def _results(night: Night, ended: str) -> dict[str, Any]:

@@ -55,7 +55,9 @@ def lab_book(lab: Path) -> Iterator[sqlite3.Connection]:
         finally:
             connection.close()
     except (sqlite3.Error, OSError) as error:
-        raise StorageError(str(error), where=str(path), remedy="Check that the lab folder is whole") from error
+        raise StorageError(
+            str(error), where=str(path), remedy="Check that the lab folder is whole"
+        ) from error
 
 
 def insert(lab: Path, table: str, **fields: Any) -> int:

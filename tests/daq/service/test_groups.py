@@ -43,13 +43,13 @@ def test_unplanned_visits_do_not_move_the_place(itinerary):
 def test_a_whole_run_has_nothing_left(itinerary):
     place = place_after(itinerary, rows(range(48), [1] * 48))
 
-    assert list(supply(itinerary, place, lambda: True)) == []
+    assert list(supply(itinerary, place, lambda number: True)) == []
 
 
 def test_a_repeated_stand_goes_in_the_same_direction_and_is_followed_by_first_attempts(itinerary):
     place = repeat_from(itinerary, 11, 1, AFTER_FAULT)
 
-    supplied = list(supply(itinerary, place, lambda: True))
+    supplied = list(supply(itinerary, place, lambda number: True))
 
     assert [visit.number for visit, _, _ in supplied] == list(range(8, 48))
     assert [attempt for _, attempt, _ in supplied] == [2] * 8 + [1] * 32
@@ -57,15 +57,16 @@ def test_a_repeated_stand_goes_in_the_same_direction_and_is_followed_by_first_at
 
 
 def test_whoever_ends_a_run_is_asked_before_each_stand_only(itinerary):
-    asked: list[None] = []
+    asked: list[int] = []
 
-    def may_go_on():
-        asked.append(None)
+    def may_go_on(number):
+        asked.append(number)
         return len(asked) < 3
 
     supplied = list(supply(itinerary, Place(0), may_go_on))
 
     assert len(supplied) == 16
+    assert asked == [0, 8, 16]
 
 
 def test_in_blocked_order_a_broken_run_goes_on_at_the_next_visit():

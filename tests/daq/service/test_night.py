@@ -7,9 +7,11 @@ from daq.errors import DaqError, DeviceError
 from daq.estimate import Running
 from daq.itinerary import compose, plan_of
 from daq.sequencer import State
+from daq.service.asked import Asked
 from daq.service.groups import Place
 from daq.service.live import Live
-from daq.service.night import AT_REQUEST, COMPLETE, Asked, Night, carry_out, park
+from daq.service.night import AT_REQUEST, COMPLETE, Night, carry_out, park
+from daq.service.requests import Request
 from daq.storage.feed import read_feed
 from daq.storage.log import RunLog, read_log
 from simulators.clock import VirtualClock
@@ -123,6 +125,53 @@ def test_who_asks_for_the_end_gets_it_after_the_stand(tmp_path):
 
     assert ended == AT_REQUEST
     assert bench.sink.kept[-1].visit == 15
+
+
+def asking(night, *whats):
+    """Let operators ask one thing each time the run listens, from the second time on."""
+    waiting = iter(
+        [[], *([Request(number, what, "night watch", "now")] for number, what in enumerate(whats))]
+    )
+    night.asked.requests = lambda: next(waiting, [])
+    settled: list[tuple[str, str]] = []
+    night.asked.settled = lambda request, outcome: settled.append((request.what, outcome))
+    return settled
+
+
+def test_a_hold_waits_between_stands_and_loses_nothing(tmp_path):
+    night, bench = a_night(tmp_path)
+    settled = asking(night, "hold", "resume")
+
+    ended = carry_out(night, Place(0))
+
+    assert ended == COMPLETE
+    assert [what for what, _ in settled] == ["hold", "resume"]
+    assert [reading.visit for reading in bench.sink.kept] == list(range(96))
+    assert all(reading.attempt == 1 for reading in bench.sink.kept)
+    assert [event for event in events(tmp_path) if "asked" in event or event == "holding"] == [
+        "hold asked",
+        "holding",
+        "resume asked",
+    ]
+
+
+def test_an_end_asked_for_while_holding_ends_the_run(tmp_path):
+    night, bench = a_night(tmp_path)
+    asking(night, "hold", "end")
+
+    ended = carry_out(night, Place(0))
+
+    assert ended == AT_REQUEST
+    assert len(bench.sink.kept) == 8
+
+
+def test_an_end_after_the_lap_comes_at_the_edge_of_a_lap(tmp_path):
+    night, bench = a_night(tmp_path)
+    asking(night, "end-after-lap")
+
+    carry_out(night, Place(0))
+
+    assert len(bench.sink.kept) == 24
 
 
 def test_parking_shows_no_slit(tmp_path):
