@@ -100,6 +100,7 @@ def _register(app: dash.Dash, folder: Path, pinned: str | None) -> None:
             Output(name, "figure"),
             Output(f"{name}-image", "aria-label"),
             Output(f"{name}-caption", "children"),
+            Output(f"{name}-image", "className"),
             Input(f"{name}-data", "data"),
             Input("look", "data"),
         )

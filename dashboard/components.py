@@ -135,14 +135,13 @@ def _warning(item: Part) -> html.Article:
 
 
 def _kappa(part: Part) -> Children:
-    figure = (
-        [part["figure"], html.Span(" ± ", className="plusminus"), part["se"]]
-        if part["figure"]
-        else part["short"]
-    )
+    error = [html.Span(" ± ", className="plusminus"), part["se"]] if part["se"] else []
     return [
         html.H2(part["heading"]),
-        html.P(figure, className="figure" if part["figure"] else "figure short"),
+        html.P(
+            [part["figure"] or part["short"], *error],
+            className="figure" if part["figure"] else "figure short",
+        ),
         html.P(part["unit"], className="unit"),
         *(_band(band) for band in part["bands"]),
         *(html.P(sentence, className="says") for sentence in part["says"]),
@@ -166,9 +165,13 @@ def _rail(part: Part) -> Children:
 def _group(group: Part, slits: int) -> html.Div:
     word, sign, kind = ("added", "+", "added") if group["added"] else ("taken away", "−", "taken")
     plates = [_plate(opening, slits, kind, word) for opening in group["openings"]]
-    label = html.P([html.Span(sign, className="sign"), f" {group['label']}, {word}"], className="group-label")
+    label = [
+        html.Span(sign, className="sign"),
+        f" {group['label']}",
+        html.Span(f", {word}", className="word"),
+    ]
     return html.Div(
-        [label, html.Div(plates, className="plates")],
+        [html.P(label, className="group-label"), html.Div(plates, className="plates")],
         className=f"group {kind}",
         style={"--plates": len(plates)},
     )

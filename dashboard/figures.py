@@ -120,7 +120,7 @@ def _planned_hours(feed: Feed) -> float | None:
 def _forecast(feed: Feed, scale: float, end: float | None) -> dict[str, Any] | None:
     """Return the half width of the inner bar at the planned end, and the one the goal asks for."""
     kappa = feed["kappa"]
-    if feed["ended"] or end is None or not kappa["forecast_se"] or kappa["interval_95"] is None:
+    if feed["ended"] or end is None or not kappa["forecast_se"] or kappa["whole_night_95"] is None:
         return None
     from scipy.special import stdtrit
 
@@ -144,9 +144,11 @@ def _reach(curves: Mapping[str, Column], goal: float) -> float:
 def _night_caption(feed: Feed) -> str:
     kappa = feed["kappa"]
     start = first_band_pair(kappa["planned_pairs"])
-    early = f" The bands start at pair {start}." if start and kappa["whole_night_95"] is None else ""
-    rest = " Dotted: what the rest of the run will do to the dark band." if not feed["ended"] else ""
-    return f"Each dot holds all pairs up to then. Dark: {INNER}. Pale: {OUTER}.{rest}{early}"
+    dots = "Each dot holds all pairs up to then."
+    if kappa["whole_night_95"] is None:
+        return f"{dots} The bands start at pair {start}." if start else dots
+    rest = "" if feed["ended"] else " Dotted: what the rest of the run will do to the dark band."
+    return f"{dots} Dark: {INNER}. Pale: {OUTER}.{rest}"
 
 
 def _night_alt(feed: Feed, scale: float, name: str) -> str:

@@ -7,7 +7,7 @@ from collections.abc import Mapping
 from typing import Any
 
 from daq.estimate.peeking import anytime_multiplier
-from dashboard.words import decimals_of, fixed, spelt, unit_of
+from dashboard.words import NB, decimals_of, fixed, spelt, unit_of
 
 Feed = Mapping[str, Any]
 _ORDINALS = {2: "Second", 3: "Third", 4: "Fourth", 5: "Fifth"}
@@ -29,16 +29,17 @@ def residual_view(feed: Feed) -> dict[str, Any]:
     }
     if is_blinded(feed):
         return said | {
-            "short": "hidden",
+            "short": "Hidden",
+            "se": _bar(kappa),
             "unit": _after(kappa, unit(kappa)[1]),
-            "says": ["κ is hidden: this run is blinded. Its error bar is not.", *_goal_says(feed)],
+            "says": ["κ is hidden: this run is blinded.", *_goal_says(feed)],
         }
     if kappa["pairs"] < 2 or kappa["value"] is None:
-        return said | {"short": "not yet", "unit": _after(kappa), "says": [_waiting_says(kappa)]}
+        return said | {"short": "Not yet", "unit": _after(kappa), "says": [_waiting_says(kappa)]}
     if not kappa["printable"]:
-        return said | {"short": "not printed", "unit": _after(kappa), "says": [_WEAK]}
+        return said | {"short": "Not printed", "unit": _after(kappa), "says": [_WEAK]}
     if kappa["pairs"] < PRINTED_FROM_PAIR:
-        return said | {"short": "too early", "unit": _after(kappa), "says": _early_says(feed)}
+        return said | {"short": "Too early", "unit": _after(kappa), "says": _early_says(feed)}
     return said | _figure(feed)
 
 
@@ -86,7 +87,7 @@ def _waiting_says(kappa: Mapping[str, Any]) -> str:
 
 
 def _are(pairs: int) -> str:
-    return "is one" if pairs == 1 else f"are {spelt(pairs, 'pair').split()[0]}"
+    return "is one" if pairs == 1 else "are none"
 
 
 def _early_says(feed: Feed) -> list[str]:
@@ -95,8 +96,8 @@ def _early_says(feed: Feed) -> list[str]:
     dot = fixed(kappa["value"] / scale, 1, plus=True)
     return [
         f"The dot stands at {dot} {name.split(' (')[0]}.",
-        f"Its error bar gets a number at pair {PRINTED_FROM_PAIR}.",
         *_band_start(kappa),
+        f"The error bar gets a number at pair {PRINTED_FROM_PAIR}.",
         *_goal_says(feed),
     ]
 
@@ -118,11 +119,18 @@ def _figure(feed: Feed) -> dict[str, Any]:
     return {
         "short": None,
         "figure": fixed(kappa["value"] / scale, decimals, plus=True),
-        "se": fixed(kappa["se"] / scale, decimals),
+        "se": _bar(kappa),
         "unit": _after(kappa, name),
         "bands": _bands(feed, scale, decimals),
         "says": [*says, *_truth_says(feed, scale, name, decimals)],
     }
+
+
+def _bar(kappa: Mapping[str, Any]) -> str | None:
+    if not kappa["se"] or kappa["pairs"] < PRINTED_FROM_PAIR:
+        return None
+    scale, _ = unit(kappa)
+    return fixed(kappa["se"] / scale, decimals_of(kappa["se"] / scale))
 
 
 def _bands(feed: Feed, scale: float, decimals: int) -> list[dict[str, Any]]:
@@ -171,8 +179,10 @@ def _goal_says(feed: Feed) -> list[str]:
         return []
     scale, _ = unit(kappa)
     decimals = decimals_of(goal / scale)
-    ends = f"± {fixed(forecast / scale, decimals)}"
-    aim = f"± {fixed(goal / scale, decimals)}"
+    if kappa["pairs"] < PRINTED_FROM_PAIR and not feed["ended"]:
+        return [f"Whether its goal of ±{NB}{fixed(goal / scale, decimals)} will be met is said from then on."]
+    ends = f"±{NB}{fixed(forecast / scale, decimals)}"
+    aim = f"±{NB}{fixed(goal / scale, decimals)}"
     if feed["ended"]:
         word = "meets" if forecast <= goal else "misses"
         return [f"The run ended with {ends}; that {word} the goal of {aim}."]
@@ -190,9 +200,9 @@ def _scatter_says(kappa: Mapping[str, Any], scale: float) -> list[str]:
     if not kappa["excess"] or not kappa["counting_se"]:
         return []
     counting = kappa["counting_se"] / scale
-    se = f" ± {fixed(kappa['excess_se'], 1)}" if kappa["excess_se"] else ""
+    se = f"{NB}±{NB}{fixed(kappa['excess_se'], 1)}" if kappa["excess_se"] else ""
     return [
-        f"Counting alone would give ± {fixed(counting, decimals_of(counting))}; "
+        f"Counting alone would give ±{NB}{fixed(counting, decimals_of(counting))}; "
         f"the pairs scatter {fixed(kappa['excess'], 1)}{se} times as much."
     ]
 

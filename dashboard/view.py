@@ -8,10 +8,11 @@ from typing import Any
 
 from daq import openings
 from dashboard.residual import residual_view
-from dashboard.words import MINUS, clock, count, duration, fixed, spelt
+from dashboard.words import MINUS, clock, count, day_and_clock, duration, fixed, spelt
 
 Feed = Mapping[str, Any]
 SILENT_AFTER_S = 30.0
+_DAY_SAID_FROM_S = 20 * 3600
 CAUTION = (
     "Hold and stop here are requests to the program, not safety functions. "
     "In danger use the emergency stop in the room."
@@ -101,14 +102,13 @@ def _kind(feed: Feed) -> dict[str, str] | None:
 
 def _verdict(feed: Feed, silent: bool) -> dict[str, Any]:
     tone, first, second = _silence(feed) if silent else _judgement(feed)
+    line, ends_utc = _line(feed, silent)
     return {
         "tone": tone,
         "first": first,
         "second": second,
-        "line": _line(feed, silent),
-        "ends_utc": feed["ends_utc"]
-        if feed["clock"] == "real" and not feed["ended"] and not silent
-        else None,
+        "line": line,
+        "ends_utc": ends_utc if feed["clock"] == "real" else None,
         "progress": _progress(feed),
     }
 
@@ -144,29 +144,38 @@ def _going(feed: Feed) -> tuple[str, str, str]:
     first = _GOING[feed["kind"]]
     if not feed["warnings"]:
         return "fine", first, "Nobody is needed."
-    return "look", first, f"{spelt(len(feed['warnings']), 'thing').capitalize()} to look at."
+    return "look", first, f"{_capital(spelt(len(feed['warnings']), 'thing'))} to look at."
 
 
 def _ending(feed: Feed) -> tuple[str, str, str]:
     kappa = feed["kappa"]
     if kappa["pairs"] >= kappa["planned_pairs"]:
         return "done", "Done.", f"All {spelt(kappa['planned_pairs'], 'pair')} are counted."
-    after = f"{kappa['pairs']} of {spelt(kappa['planned_pairs'], 'pair')} are counted."
-    return "look", "Ended early.", after[0].upper() + after[1:]
+    return "look", "Ended early.", f"{kappa['pairs']} of {spelt(kappa['planned_pairs'], 'pair')} are counted."
 
 
-def _line(feed: Feed, silent: bool) -> str:
+def _line(feed: Feed, silent: bool) -> tuple[str, str | None]:
+    """Return the line below the verdict, and the time it ends with, if it does."""
     where, ended = _where(feed), feed["ended"]
     if ended:
-        return f"{where}. Ended at {clock(ended['utc'])}: {_stopped(ended['reason'])}"
+        return (
+            f"{where}. {_stopped(_capital(ended['reason']))} Ended on {day_and_clock(ended['utc'])}.",
+            ended["utc"],
+        )
     if silent:
-        return f"{where} was the last. Look at the computer at the bench: the program may have stopped."
-    if feed["state"] == "ready":
-        pairs = spelt(feed["kappa"]["planned_pairs"], "pair").capitalize()
-        return f"{pairs} are planned, until about {_when(feed)}."
+        return f"{where} was the last. Look at the computer at the bench: the program may have stopped.", None
     if feed["state"] in ("holding", "parking"):
-        return f"{where}. Everything counted so far is saved."
-    return f"{where}. Done at about {_when(feed)}."
+        return f"{where}. Everything counted so far is saved.", None
+    if feed["state"] == "ready":
+        where = f"{_capital(spelt(feed['kappa']['planned_pairs'], 'pair'))} are planned"
+    own = "On the rehearsal's own clock, done" if feed["clock"] == "virtual" else "Done"
+    return f"{where}. {own} {_about(feed)}.", feed["ends_utc"]
+
+
+def _about(feed: Feed) -> str:
+    left = datetime.fromisoformat(feed["ends_utc"]) - datetime.fromisoformat(feed["updated_utc"])
+    far = left.total_seconds() > _DAY_SAID_FROM_S
+    return f"about {day_and_clock(feed['ends_utc'])}" if far else f"at about {clock(feed['ends_utc'])}"
 
 
 def _where(feed: Feed) -> str:
@@ -178,9 +187,8 @@ def _where(feed: Feed) -> str:
     return f"Visit {count(visit['number'] + 1)} of {count(visit['of'])}"
 
 
-def _when(feed: Feed) -> str:
-    own = " on the rehearsal's own clock" if feed["clock"] == "virtual" else ""
-    return f"{clock(feed['ends_utc'])}{own}"
+def _capital(sentence: str) -> str:
+    return sentence[:1].upper() + sentence[1:]
 
 
 def _stopped(sentence: str) -> str:
@@ -221,9 +229,7 @@ def _rail(feed: Feed) -> dict[str, Any]:
 
 def _group(feed: Feed, number: int) -> dict[str, Any]:
     slits = feed["slits"]
-    label = (
-        "none" if number == 0 else f"all {spelt(slits, 'slit')}" if number == slits else spelt(number, "slit")
-    )
+    label = "none" if number == 0 else "all" if number == slits else spelt(number, "slit")
     masks = [mask for mask in feed["openings"] if mask.bit_count() == number]
     return {
         "label": label,

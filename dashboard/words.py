@@ -7,6 +7,7 @@ from datetime import datetime
 
 THIN = "\u202f"
 MINUS = "\u2212"
+NB = "\u00a0"
 _UNITS = {
     0: ("ones", ""),
     -1: ("tenths", "10⁻¹"),
@@ -16,6 +17,11 @@ _UNITS = {
     -5: ("hundred-thousandths", "10⁻⁵"),
     -6: ("millionths", "10⁻⁶"),
 }
+# Not strftime: the month's name must not hang on the locale of the computer.
+_MONTHS = (
+    *("January", "February", "March", "April", "May", "June", "July"),
+    *("August", "September", "October", "November", "December"),
+)
 _SMALL = ("no", "one", "two", "three", "four", "five", "six", "seven", "eight", "nine", "ten")
 
 
@@ -60,6 +66,12 @@ def unit_of(error: float) -> tuple[float, str]:
 def clock(utc: str, seconds: bool = False) -> str:
     """Return the time of day of an ISO date in UTC, "2026-12-01T06:37:00Z" -> "06:37 UTC"."""
     return f"{datetime.fromisoformat(utc):{'%H:%M:%S' if seconds else '%H:%M'}} UTC"
+
+
+def day_and_clock(utc: str) -> str:
+    """Return a date with its time of day in UTC, "2026-12-01T06:37:00Z" -> "1 December, 06:37 UTC"."""
+    date = datetime.fromisoformat(utc)
+    return f"{date.day} {_MONTHS[date.month - 1]}, {clock(utc)}"
 
 
 def duration(seconds: float) -> str:

@@ -107,16 +107,10 @@
     type: "line", xref: "paper", x0: 0, x1: 1, yref: axisName, y0: 0, y1: 0,
     line: { color: colour("edge"), width: 1 }, layer: "below",
   });
-  const blank = (text) => ({
-    data: [],
-    layout: layout({
-      xaxis: { visible: false }, yaxis: { visible: false }, annotations: [words(text, { x: 0, y: 1, xanchor: "left" })],
-    }),
-  });
-  const draw = (build) => (data) => {
+  const draw = (name, build) => (data) => {
     if (!data) throw window.dash_clientside.PreventUpdate;
-    if (data.empty) return [blank(""), data.empty, data.empty];
-    return [build(data), data.alt ?? "", data.caption ?? data.alt ?? ""];
+    if (data.empty) return [window.dash_clientside.no_update, data.empty, data.empty, "image empty"];
+    return [build(data), data.alt, data.caption ?? data.alt, `image ${name}`];
   };
 
   /* The dark bar shrinks as one over the square root of time, from its present half width to the forecast one. */
@@ -136,22 +130,23 @@
       error_y: { type: "constant", value: d.forecast.goal, color: colour("ink"), thickness: 3, width: 7 },
     };
   };
-  const bar = (d) => {
+  const bars = (d) => {
     const last = d.kappa.length - 1;
-    const known = d.interval_high[last] !== null && d.whole_high[last] !== null;
-    return {
-      type: "scatter", mode: "markers", x: [d.hours[last]], y: [d.kappa[last]],
-      marker: { size: 12, color: colour("kappa"), line: { color: colour("ground"), width: 2 } },
-      error_y: known ? {
-        type: "data", array: [d.interval_high[last] - d.kappa[last]], color: colour("kappa"), thickness: 4, width: 0,
-      } : undefined,
-    };
+    const dot = { type: "scatter", mode: "markers", x: [d.hours[last]], y: [d.kappa[last]] };
+    const bar = (high, name, thickness) => ({
+      ...dot, marker: { size: 1, color: colour(name) },
+      error_y: { type: "data", array: [high[last] - d.kappa[last]], color: colour(name), thickness, width: 0 },
+    });
+    const known = d.whole_high[last] !== null;
+    const drawn = known ? [bar(d.whole_high, "outer", 10), bar(d.interval_high, "kappa", 4)] : [];
+    const marker = { size: 12, color: colour("kappa"), line: { color: colour("ground"), width: 2 } };
+    return [...drawn, { ...dot, marker, name: "now" }];
   };
   const night = (d) => {
     const inner = d.interval_low.map((v, i) => (d.whole_low[i] === null ? null : v));
     const traces = [band(d.hours, d.whole_low, d.whole_high, "outer"), band(d.hours, inner, d.interval_high, "inner")];
     const dots = { size: d.kappa.length > 60 ? 3 : 6, color: colour("kappa") };
-    traces.push({ type: "scatter", mode: "markers", x: d.hours, y: d.kappa, marker: dots });
+    traces.push({ type: "scatter", mode: "markers", x: d.hours, y: d.kappa, marker: dots, name: "dots" });
     const notes = [above(`κ, ${d.unit}`), below("hours since the start")];
     const running = d.forecast && d.end > d.hours.at(-1);
     if (running) traces.push(...funnel(d));
@@ -162,7 +157,7 @@
         font: { size: 14, color: colour("ink") },
       });
     }
-    traces.push(bar(d));
+    traces.push(...bars(d));
     const end = Math.max(d.end ?? 0, d.hours.at(-1)) * 1.04;
     return {
       data: traces,
@@ -205,7 +200,7 @@
 
   const strip = (d) => ({
     data: [
-      band(d.hours, d.low, d.high, "ribbon"), { ...line(d.hours, d.mean, "ink", 1.5), name: "mean" },
+      { ...band(d.hours, d.low, d.high, "dip"), line: { color: colour("dip"), width: 1 } }, { ...line(d.hours, d.mean, "ink", 1.5), name: "mean" },
     ],
     layout: layout({
       xaxis: axis({ range: [0, d.hours.at(-1)], nticks: narrow() ? 6 : 9 }), yaxis: axis({ nticks: 5 }),
@@ -264,6 +259,7 @@
         plate.classList.toggle("now", mask === now?.props["data-mask"]);
         plate.querySelector(".silhouette").replaceChildren(silhouette(heights?.[mask] ?? []));
       }
+      document.getElementById("numbers-shown").hidden = Boolean(chosen?.empty);
       showNumbers();
       document.title = document.querySelector("h1")?.textContent || "tercet";
     });
@@ -271,6 +267,6 @@
   };
 
   window.dash_clientside = Object.assign({}, window.dash_clientside, {
-    tercet: { night: draw(night), pattern: draw(pattern), strip: draw(strip), mark },
+    tercet: { night: draw("night", night), pattern: draw("pattern", pattern), strip: draw("strip", strip), mark },
   });
 })();
