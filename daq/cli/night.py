@@ -45,8 +45,8 @@ def _carry_out(arguments: argparse.Namespace, transport: str, file: Path) -> Ans
     lab = arguments.resume.resolve().parents[1] if arguments.resume else arguments.into
     began_s = time.monotonic()
     with ExitStack() as stack:
-        page = _page(stack, lab, sys.stderr if arguments.json else sys.stdout) if arguments.page else None
-        asked = stack.enter_context(_interrupts())
+        page = show_page(stack, lab, sys.stderr if arguments.json else sys.stdout) if arguments.page else None
+        asked = stack.enter_context(interrupts())
         watch = _Watch()
         wanted = Wanted(transport, getattr(arguments, "home", False), asked, watch.begins, watch.took)
         folder, ended = begin(loaded, lab, wanted) if loaded else resume(arguments.resume, wanted)
@@ -98,7 +98,8 @@ def _told(figures: dict[str, Any], watch: _Watch) -> list[str]:
     return [*lines(figures), f"took {watch.wall_s:.1f} s{faster}; {durable}"]
 
 
-def _page(stack: ExitStack, lab: Path, stream: TextIO) -> PageProcess:
+def show_page(stack: ExitStack, lab: Path, stream: TextIO) -> PageProcess:
+    """Start the page of a lab for as long as a stack lasts, and print its address."""
     make_lab(lab)
     page = stack.enter_context(PageProcess(lab))
     print(f"page: {page.address}", file=stream, flush=True)
@@ -114,7 +115,7 @@ def _stay(page: PageProcess) -> None:
 
 
 @contextmanager
-def _interrupts() -> Iterator[Asked]:
+def interrupts() -> Iterator[Asked]:
     """Ctrl-C once: end after this stand; twice, or SIGTERM: stop and park."""
     asked = Asked()
 

@@ -29,6 +29,7 @@ def parser() -> argparse.ArgumentParser:
     commands = whole.add_subparsers(title="commands", required=True, metavar="COMMAND")
     _plan_words(commands)
     _night_words(commands)
+    _service_words(commands)
     _watch_words(commands)
     _after_words(commands)
     return whole
@@ -89,15 +90,43 @@ def _night_words(commands: Any) -> None:
     run.add_argument("--page", action="store_true", help="show the live page while the run goes on")
 
 
+def _service_words(commands: Any) -> None:
+    lab = "own a lab and start what is booked"
+    serve = _add(commands, "serve", "service:serve", lab, "tercet serve lab")
+    serve.add_argument("--no-page", action="store_true", help="do not show the page")
+    start = "book an unattended start, once or recurring"
+    example = "tercet book lab lantern.toml --at 18:30 --on mon,fri --end-by 08:00"
+    book = _add(commands, "book", "service:book", start, example)
+    became = "list bookings and what became of them"
+    listing = _add(commands, "bookings", "service:list_bookings", became, "tercet bookings lab")
+    for one in (serve, book, listing):
+        one.add_argument("lab", type=Path, metavar="LAB", help="the lab folder")
+    _booking_words(book)
+    listing.add_argument("--cancel", type=int, metavar="N", help="cancel booking N")
+
+
+def _booking_words(book: argparse.ArgumentParser) -> None:
+    book.add_argument("file", type=Path, metavar="FILE", help="a measurement (TOML)")
+    book.add_argument("--at", required=True, metavar="HH:MM", help="local time of the start")
+    days = "once, daily, or weekdays like mon,fri (once)"
+    book.add_argument("--on", default="once", metavar="DAYS", help=days)
+    book.add_argument("--first-day", metavar="DATE", help="not before this day (today)")
+    book.add_argument("--zone", help="time zone of the times, like Europe/Berlin (this machine's)")
+    book.add_argument("--end-by", metavar="HH:MM", help="end no later than this local time")
+    late = "start at most so late (60)"
+    book.add_argument("--late-min", type=float, default=60.0, metavar="MIN", help=late)
+    book.add_argument("--by", metavar="NAME", help="who books (your login name)")
+    _wishes(book)
+
+
 def _watch_words(commands: Any) -> None:
-    status = _add(
-        commands, "status", "watch:status", "say how a lab's newest run is getting on", "tercet status lab"
-    )
-    hold = _add(commands, "hold", "watch:hold", "ask a run to hold before its next stand", "tercet hold lab")
+    newest = "say how a lab's newest run is getting on"
+    status = _add(commands, "status", "watch:status", newest, "tercet status lab")
+    pause = "ask a run to hold before its next stand"
+    hold = _add(commands, "hold", "watch:hold", pause, "tercet hold lab")
     resume = _add(commands, "resume", "watch:resume", "ask a run that holds to go on", "tercet resume lab")
-    end = _add(
-        commands, "end", "watch:end", "ask a run to end after this stand", "tercet end lab --after-lap"
-    )
+    stop = "ask a run to end after this stand"
+    end = _add(commands, "end", "watch:end", stop, "tercet end lab --after-lap")
     for one in (status, hold, resume, end):
         one.add_argument("lab", type=Path, metavar="LAB", help="the lab folder")
     for one in (hold, resume, end):

@@ -12,7 +12,7 @@ from typing import Any
 import numpy as np
 
 from daq.estimate import Running
-from daq.estimate.dataset import DETECTOR
+from daq.estimate.rows import DETECTOR
 from daq.estimate.watch import Watched, concerns
 from daq.itinerary import Itinerary
 from daq.ports import Clock

@@ -8,6 +8,8 @@ from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
 
+import numpy as np
+
 from daq.errors import DeviceError
 from daq.estimate import Running
 from daq.itinerary import Itinerary
@@ -43,6 +45,7 @@ class Night:
     bench: Bench | None = None
     state: State = State.READY
     on_visit: Callable[[Reading], None] = field(default=lambda reading: None)
+    until_utc_ns: int | None = None
 
     def become(self, state: State) -> None:
         """Take a step of the table of states."""
@@ -106,9 +109,22 @@ def _readings(night: Night, place: Place) -> Iterator[Reading]:
 def _may_go_on(night: Night, number: int) -> bool:
     """Return whether a stand may begin; asked while the gate before it is open, so nothing waits here."""
     _hear(night)
+    if (
+        night.until_utc_ns is not None
+        and night.clock.utc_ns() + _stand_ns(night, number) > night.until_utc_ns
+    ):
+        night.asked.end = True
     if night.asked.end_after_lap and _begins_lap(night.itinerary, number):
         night.asked.end = True
     return not (night.asked.end or night.asked.hold)
+
+
+def _stand_ns(night: Night, number: int) -> int:
+    """Return how long the stand that a visit begins will take, and what is left of the one before."""
+    plan = night.itinerary
+    within = np.flatnonzero(plan.stand == plan.stand[number])
+    took_s = plan.start_s[within[-1]] + plan.dwell_s[within[-1]] - plan.start_s[number]
+    return round(1e9 * float(took_s + plan.dwell_s[number]))
 
 
 def _hold(night: Night) -> None:

@@ -6,6 +6,7 @@ import time
 from collections.abc import Callable
 from contextlib import ExitStack
 from dataclasses import dataclass, field
+from datetime import datetime
 from pathlib import Path
 from typing import Any
 
@@ -45,6 +46,7 @@ class Wanted:
     asked: Asked = field(default_factory=Asked)
     on_start: Callable[[Path, Itinerary], None] = lambda folder, itinerary: None
     on_visit: Callable[[Reading], None] = lambda reading: None
+    until: datetime | None = None
 
 
 def begin(loaded: Loaded, lab: Path, wanted: Wanted) -> tuple[Path, str]:
@@ -169,6 +171,7 @@ def _night(
         asked=wanted.asked,
         bench=bench,
         on_visit=wanted.on_visit,
+        until_utc_ns=None if wanted.until is None else round(wanted.until.timestamp() * 1e9),
     )
 
 

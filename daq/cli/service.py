@@ -1,0 +1,88 @@
+"""Commands of the service: serve, book, bookings."""
+
+from __future__ import annotations
+
+import argparse
+import getpass
+import sys
+from contextlib import ExitStack
+from datetime import UTC, datetime
+
+from daq.cli.answer import Answer
+from daq.cli.night import interrupts, show_page
+from daq.cli.plan import wishes
+from daq.service.bookings import Booking, bookings, cancel
+from daq.service.bookings import book as booked
+from daq.service.serve import serve as served
+from daq.storage.lab_book import select
+
+
+def serve(arguments: argparse.Namespace) -> Answer:
+    """Own a lab: start what is booked, show the page, until Ctrl-C."""
+    with ExitStack() as stack:
+        if not arguments.no_page:
+            show_page(stack, arguments.lab, sys.stderr if arguments.json else sys.stdout)
+        asked = stack.enter_context(interrupts())
+        started = served(arguments.lab, asked)
+    return Answer(0, {"started": started}, [f"{started} runs were started"])
+
+
+def book(arguments: argparse.Namespace) -> Answer:
+    """Book an unattended start, once or recurring."""
+    zone = arguments.zone or _local_zone()
+    today = datetime.now().astimezone().date().isoformat()
+    made = booked(
+        arguments.lab,
+        arguments.file,
+        days=arguments.on.split(","),
+        at=arguments.at,
+        zone=zone,
+        first_day=arguments.first_day or today,
+        late_s=60 * arguments.late_min,
+        end_at=arguments.end_by,
+        wishes=wishes(arguments),
+        who=arguments.by or getpass.getuser(),
+    )
+    return Answer(0, _figures(made), [f"booked as {made.number}; {_when(made)}"])
+
+
+def list_bookings(arguments: argparse.Namespace) -> Answer:
+    """List the bookings of a lab and what became of them, or cancel one."""
+    if arguments.cancel is not None:
+        cancel(arguments.lab, arguments.cancel)
+    found = bookings(arguments.lab)
+    starts = select(arguments.lab, "starts")
+    lines = [_line(one) for one in found] or ["nothing is booked"]
+    lines += [f"  {start['due_utc']}  booking {start['booking']}: {start['outcome']}" for start in starts]
+    return Answer(0, {"bookings": [_figures(one) for one in found], "starts": starts}, lines)
+
+
+def _line(one: Booking) -> str:
+    days = ",".join(one.times.days)
+    return f"{one.number}  {one.file.name}  {days} {one.times.at:%H:%M}  {_when(one)}"
+
+
+def _figures(one: Booking) -> dict[str, object]:
+    following = one.next_start(datetime.now(UTC))
+    return {
+        "booking": one.number,
+        "file": str(one.file),
+        "next_utc": None if following is None else following.isoformat(),
+        "zone": one.times.zone.key,
+        "who": one.who,
+    }
+
+
+def _when(one: Booking) -> str:
+    following = one.next_start(datetime.now(UTC))
+    if following is None:
+        return "no further start"
+    local = following.astimezone(one.times.zone)
+    return f"next start {local:%Y-%m-%d %H:%M} {one.times.zone.key} ({following:%H:%M} UTC)"
+
+
+def _local_zone() -> str:
+    """Return the name of the machine's time zone, UTC when it has no name that others know."""
+    from tzlocal import get_localzone_name
+
+    return str(get_localzone_name() or "UTC")
