@@ -10,11 +10,13 @@ from __future__ import annotations
 import json
 import os
 import sqlite3
-from collections.abc import Mapping, Sequence
+import zlib
+from collections.abc import Iterator, Mapping, Sequence
 from contextlib import closing, suppress
 from pathlib import Path
 from typing import Any
 
+from daq.storage.events import Piece
 from daq.storage.rows import Rows
 from daq.storage.snapshot import JOURNAL, NEWEST, connect
 from daq.storage.trouble import rim, stored
@@ -41,14 +43,14 @@ class Journal:
         self._insert = f"INSERT INTO visits VALUES ({marks})"
         self._newest = os.open(folder / NEWEST, os.O_WRONLY | os.O_CREAT | os.O_CLOEXEC, 0o644)
 
-    def append(self, flat: Sequence[Any]) -> int:
-        """Make a row durable and return its number; any error leaves the journal as it was."""
+    def append(self, flat: Sequence[Any], piece: Piece | None = None) -> int:
+        """Make a row durable, with its events, and return its number; any error leaves all as it was."""
         row = self.rows
-        crc = self._form.crc(row, flat)
-        try:
-            self._connection.execute(self._insert, (row, crc, *flat))
-        except sqlite3.Error as error:
-            raise stored(error, self._where) from error
+        numbers = (row, self._form.crc(row, flat), *flat)
+        if piece is None:
+            self._transact((self._insert, numbers))
+        else:
+            self._transact(*_events_of(row, piece), (self._insert, numbers))
         self.rows = row + 1
         with suppress(OSError):  # the row is durable all the same
             os.pwrite(self._newest, b"%020d\n" % self.rows, 0)
@@ -56,16 +58,25 @@ class Journal:
 
     def forget(self, upto: int) -> None:
         """Drop the rows below `upto`, which Zarr holds durably, and move the cursor: one transaction."""
-        try:
-            self._connection.execute("BEGIN IMMEDIATE")
-            self._connection.execute("UPDATE state SET value = ? WHERE name = 'sealed'", (upto,))
-            self._connection.execute("DELETE FROM visits WHERE row < ?", (upto,))
-            self._connection.execute("COMMIT")
-        except sqlite3.Error as error:
-            if self._connection.in_transaction:
-                self._connection.execute("ROLLBACK")
-            raise stored(error, self._where) from error
+        self._transact(
+            ("UPDATE state SET value = ? WHERE name = 'sealed'", (upto,)),
+            ("DELETE FROM visits WHERE row < ?", (upto,)),
+        )
         self.sealed = upto
+
+    def _transact(self, *statements: tuple[str, Sequence[Any]]) -> None:
+        connection = self._connection
+        try:
+            if len(statements) > 1:  # one alone is a transaction of itself
+                connection.execute("BEGIN IMMEDIATE")
+            for statement, values in statements:
+                connection.execute(statement, values)
+            if len(statements) > 1:
+                connection.execute("COMMIT")
+        except sqlite3.Error as error:
+            if connection.in_transaction:
+                connection.execute("ROLLBACK")
+            raise stored(error, self._where) from error
 
     def setting(self, name: str) -> int:
         """Return a setting of the connection, as SQLite tells it."""
@@ -92,13 +103,15 @@ def create_journal(folder: Path, form: Rows, meta: Mapping[str, Any]) -> None:
         connection.execute("PRAGMA page_size = 4096")
         connection.execute("PRAGMA auto_vacuum = 0")
         connection.execute("PRAGMA synchronous = FULL")
-        names = ", ".join(
-            f'"{name}"' for name in form.names
-        )  # no types: SQLite then keeps every number as it is
+        # Columns without a type: SQLite then keeps every number as it is.
+        names = ", ".join(f'"{name}"' for name in form.names)
         connection.execute("BEGIN IMMEDIATE")
         connection.execute(f"CREATE TABLE visits (row INTEGER PRIMARY KEY, crc INTEGER NOT NULL, {names})")
         connection.execute("CREATE TABLE state (name TEXT PRIMARY KEY, value)")
-        connection.execute("INSERT INTO state VALUES ('sealed', 0), ('meta', ?)", (json.dumps(meta),))
+        connection.execute("CREATE TABLE events (row INTEGER PRIMARY KEY, crc INTEGER NOT NULL, gaps BLOB)")
+        connection.execute(
+            "INSERT INTO state VALUES ('sealed', 0), ('events_sealed', 0), ('meta', ?)", (json.dumps(meta),)
+        )
         connection.execute("COMMIT")
         connection.execute("PRAGMA journal_mode = WAL")
     passing.replace(folder / JOURNAL)
@@ -108,3 +121,12 @@ def drop_journal(folder: Path) -> None:
     """Remove the journal of a finished run: its file first, for its absence says that the run is finished."""
     for name in (JOURNAL, f"{JOURNAL}-wal", f"{JOURNAL}-shm", NEWEST):
         (folder / name).unlink(missing_ok=True)
+
+
+def _events_of(row: int, piece: Piece) -> Iterator[tuple[str, Sequence[Any]]]:
+    if piece.moved:
+        yield "UPDATE state SET value = ? WHERE name = 'events_sealed'", (piece.sealed,)
+        yield "DELETE FROM events", ()
+    if len(piece.rest):
+        packed = piece.packed
+        yield "INSERT INTO events VALUES (?, ?, ?)", (row, zlib.crc32(packed), packed)

@@ -4,18 +4,21 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass, field
+from math import prod
 from typing import Any
 
 from daq.openings import LETTERS
 from daq.records import REASONS, Quality
 
 FORMAT = 1  # version of the archive; a reader refuses a newer one
+EVENT_CHUNK = 1 << 20
+EVENTS = "event_gap"
 CHUNK = 4096  # visits sealed at once (storage.md section 4: 16384 stalls a commit four times longer)
 
 
 @dataclass(frozen=True, slots=True)
 class Column:
-    """One array of the archive: `kind` "int64" or "float64", `width` entries (channels) a row.
+    """One array of the archive: `kind` "int64", "int32" or "float64", `shape` of the entry of one row.
 
     Missing is -1 in a whole-number column and NaN in a real one, so that nothing missing reads as a count,
     an opening or a position.
@@ -26,13 +29,18 @@ class Column:
     units: str
     long_name: str
     dims: tuple[str, ...] = ("row",)
-    width: int = 1
+    shape: tuple[int, ...] = ()
     attributes: Mapping[str, Any] = field(default_factory=dict)
 
     @property
     def fill(self) -> float:
         """What a missing entry reads as."""
-        return -1 if self.kind == "int64" else float("nan")
+        return float("nan") if self.kind == "float64" else -1
+
+    @property
+    def width(self) -> int:
+        """How many numbers stand in one row."""
+        return prod(self.shape)
 
 
 def columns(meta: Mapping[str, Any]) -> tuple[Column, ...]:
@@ -54,6 +62,7 @@ def columns(meta: Mapping[str, Any]) -> tuple[Column, ...]:
         *_value_columns(meta),
         *_encoder_columns(meta.get("axes", ())),
         *_sensor_columns(meta.get("sensors", {})),
+        *_event_columns(meta),
     )
 
 
@@ -92,17 +101,42 @@ def planned(slits: int, signs: Mapping[str, Any]) -> tuple[Column, ...]:
 def _value_columns(meta: Mapping[str, Any]) -> tuple[Column, ...]:
     counted, channels = meta["counting"] == "counts", int(meta["channels"])
     kind, units = ("int64", "count") if counted else ("float64", str(meta.get("values_unit", "W")))
-    dims = ("row", "channel")
+    dims, slices = ("row", "channel"), int(meta.get("slices", 0))
+    several = (channels,)
+    found = (
+        Column("values", kind, units, "what was counted, or the power that was read", dims, several),
+        Column("values_var", "float64", f"{units}2", "variance of values, if known", dims, several),
+    )
+    if not slices:
+        return found
+    words = "what was counted in equal parts of the gate"
+    return (*found, Column("slices", kind, units, words, ("row", "slice", "channel"), (slices, channels)))
+
+
+def list_mode(meta: Mapping[str, Any], longest_s: float) -> dict[str, Any]:
+    """Return the settings of list mode for a run whose meta data ask for it (`tick_s`), else nothing.
+
+    The time between two events is kept in 32 bits where the longest dwell fits in there.
+    """
+    if not meta.get("list_mode"):
+        return {}
+    fits = longest_s / meta["list_mode"]["tick_s"] < 2**31
+    return {"list_mode": {"kind": "int32" if fits else "int64", "chunk": EVENT_CHUNK, **meta["list_mode"]}}
+
+
+def events(meta: Mapping[str, Any]) -> Column:
+    """Return the column of list mode: the time from one event to the next, from the gate's opening on."""
+    mode = meta["list_mode"]
+    words = "time since the event before it, or since the gate opened"
+    return Column(EVENTS, mode["kind"], f"{mode['tick_s']:g} s", words, ("event",))
+
+
+def _event_columns(meta: Mapping[str, Any]) -> tuple[Column, ...]:
+    if not meta.get("list_mode"):
+        return ()
     return (
-        Column("values", kind, units, "what was counted, or the power that was read", dims, channels),
-        Column(
-            "values_var",
-            "float64",
-            f"{units}2",
-            "variance of values where the device knows it",
-            dims,
-            channels,
-        ),
+        Column("event_start", "int64", "1", "index of the visit's first event"),
+        Column("event_count", "int64", "1", "events of the visit"),
     )
 
 

@@ -14,7 +14,7 @@ from zarr.storage import LocalStore
 
 from daq.errors import StorageError
 from daq.estimate.use import use
-from daq.storage.layout import Column, columns, looked_up, planned
+from daq.storage.layout import EVENTS, Column, columns, looked_up, planned
 from daq.storage.rows import Rows
 from daq.storage.seal import FINISHED, ITINERARY, ZARR
 from daq.storage.snapshot import Snapshot, check_format, snapshot
@@ -28,6 +28,7 @@ def open_visits(folder: Path) -> xr.Dataset:
     -----
     A chunk of the Zarr group that is missing reads as missing numbers (-1, NaN), never as counts or openings;
     a visit of which a part is missing is set aside as unplanned (-1), so that no estimate takes its stand.
+    In list mode a finished run gives its events too, lazily; `read_events` gives those of a row at any time.
 
     Raises
     ------
@@ -37,7 +38,11 @@ def open_visits(folder: Path) -> xr.Dataset:
     root, held, meta = _opened(Path(folder))
     arrays = _set_aside_incomplete(_measured(root, held, meta))
     arrays.update(_looked_up(root, arrays, meta))
-    return _dataset((*columns(meta), *looked_up()), arrays, meta)
+    dataset = _dataset((*columns(meta), *looked_up()), arrays, meta)
+    if meta.get("list_mode") and held is None:
+        plain = xr.open_zarr(Path(folder) / ZARR, chunks=None, consolidated=False)
+        return dataset.assign({EVENTS: plain[EVENTS].variable})
+    return dataset
 
 
 def open_itinerary(folder: Path) -> xr.Dataset:
@@ -127,10 +132,10 @@ def _looked_up(
     names = ("stand", "lap", "pair", "forward")
     found = {name: _by_visit(_whole(root, f"{ITINERARY}/{name}"), visit) for name in names}
     known = found["stand"] >= 0
-    rows = (found["stand"], arrays["attempt"], arrays["opening"], arrays["quality"])
+    rows = (found["stand"], arrays["attempt"], visit, arrays["quality"])
     taken = np.zeros(len(visit), np.int64)
-    stand, attempt, opening, quality = (column[known] for column in rows)
-    taken[known] = use(stand, attempt, opening, quality, len(meta["openings"]))
+    stand, attempt, number, quality = (column[known] for column in rows)
+    taken[known] = use(stand, attempt, number, quality, meta.get("visits_per_stand", len(meta["openings"])))
     return {**found, "use": taken}
 
 

@@ -5,6 +5,7 @@ from __future__ import annotations
 import struct
 import zlib
 from collections.abc import Callable, Iterable, Mapping, Sequence
+from itertools import product
 from operator import attrgetter, index
 from typing import Any
 
@@ -15,9 +16,9 @@ from daq.errors import StorageError
 from daq.records import Reading
 from daq.storage.layout import Column, columns
 
-type_of = {"int64": "q", "float64": "d"}
+_TYPES = {"int64": "q", "float64": "d"}
 _NAN = float("nan")
-_GROUPED = ("values", "values_var", "encoder_", "sensor_")
+_GROUPED = ("values", "slices", "encoder_", "sensor_", "event_")
 
 
 class Rows:
@@ -26,17 +27,20 @@ class Rows:
     def __init__(self, meta: Mapping[str, Any]) -> None:
         self.columns: tuple[Column, ...] = columns(meta)
         self.names = tuple(name for column in self.columns for name in _flat_names(column))
-        self._channels = int(meta["channels"])
+        self._channels, self._slices = int(meta["channels"]), int(meta.get("slices", 0))
         self._axes, self._sensors = tuple(meta.get("axes", ())), tuple(meta.get("sensors", {}))
         plain = [column.name for column in self.columns if not column.name.startswith(_GROUPED)]
         self._plain = attrgetter(*plain)
         self._casts = tuple(_cast(column) for column in self.columns for _ in range(column.width))
-        types = "".join(type_of[column.kind] * column.width for column in self.columns)
+        types = "".join(_TYPES[column.kind] * column.width for column in self.columns)
         self._packer = struct.Struct(f"<q{types}")
         self._no_variance = (_NAN,) * self._channels
+        self._no_slices = ((-1,) * self._channels,) * self._slices
 
-    def flat(self, reading: Reading) -> tuple[Any, ...]:
+    def flat(self, reading: Reading, events: tuple[int, ...] = ()) -> tuple[Any, ...]:
         """Return a reading as numbers in the order of `names`; None where nothing was measured.
+
+        In list mode `events` holds index of the first event and number of events.
 
         Raises
         ------
@@ -44,7 +48,8 @@ class Rows:
             For a reading that the columns of this run cannot hold.
         """
         try:
-            raw = (*self._plain(reading), *self._channel_parts(reading), *self._device_parts(reading))
+            parts = (*self._channel_parts(reading), *self._device_parts(reading), *events)
+            raw = (*self._plain(reading), *parts)
             return tuple([cast(number) for cast, number in zip(self._casts, raw, strict=True)])
         except (TypeError, ValueError, KeyError, OverflowError) as error:
             raise StorageError(
@@ -68,11 +73,15 @@ class Rows:
         by_name = {name: [row[place] for row in rows] for place, name in enumerate(self.names)}
         return {column.name: _array(column, by_name) for column in self.columns}
 
-    def _channel_parts(self, reading: Reading) -> tuple[float, ...]:
+    def _channel_parts(self, reading: Reading) -> Iterable[float]:
         variances = self._no_variance if reading.values_var is None else reading.values_var
-        if len(reading.values) != self._channels or len(variances) != self._channels:
-            raise ValueError(f"{len(reading.values)} values for {self._channels} channels")
-        return (*reading.values, *variances)
+        slices = self._no_slices if reading.slices is None else reading.slices
+        if len(slices) != self._slices:
+            raise ValueError(f"{len(slices)} slices for {self._slices}")
+        for part in (reading.values, variances, *slices):
+            if len(part) != self._channels:
+                raise ValueError(f"{len(part)} values for {self._channels} channels")
+            yield from part
 
     def _device_parts(self, reading: Reading) -> Iterable[float]:
         _refuse_unknown(reading.encoder_mm, self._axes)
@@ -86,14 +95,13 @@ class Rows:
 
 
 def _flat_names(column: Column) -> Iterable[str]:
-    if len(column.dims) == 1:
-        return (column.name,)
-    return tuple(f"{column.name}_{channel}" for channel in range(column.width))
+    places = product(*(range(length) for length in column.shape))
+    return tuple("_".join((column.name, *map(str, place))) for place in places)
 
 
 def _array(column: Column, by_name: Mapping[str, Sequence[Any]]) -> NDArray[Any]:
     parts = [np.array(by_name[name], dtype=column.kind) for name in _flat_names(column)]
-    return parts[0] if len(column.dims) == 1 else np.stack(parts, axis=1)
+    return np.stack(parts, axis=1).reshape(-1, *column.shape) if column.shape else parts[0]
 
 
 def _cast(column: Column) -> Callable[[Any], int | float | None]:

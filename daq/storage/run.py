@@ -16,8 +16,9 @@ from daq.errors import StorageError
 from daq.records import Reading
 from daq.storage.digest import digest, gate_digest
 from daq.storage.disk import Disk
+from daq.storage.events import Events
 from daq.storage.journal import Journal, create_journal, drop_journal
-from daq.storage.layout import CHUNK, FORMAT, looked_up
+from daq.storage.layout import CHUNK, FORMAT, list_mode, looked_up
 from daq.storage.lock import LOCK, lock_run
 from daq.storage.manifest import write_manifest
 from daq.storage.reader import open_visits, planned_stands, read_meta, tries_so_far
@@ -49,6 +50,7 @@ class Archive:
         with rim(folder):
             _drop_partial_files(folder)
             self.journal = Journal(folder, self._form, held.sealed, held.sealed + len(held.rows))
+        self._events = Events(folder, self.meta, disk) if self.meta.get("list_mode") else None
         self._mutex = threading.Lock()  # one transaction at a time on the one connection
         self._sealer = Sealer(self.seal_next)
         self._sealer.wake()
@@ -76,10 +78,8 @@ class Archive:
         StorageError
             When it could not be stored; all readings before it are safe, and a later commit may succeed.
         """
-        flat = self._form.flat(reading)
-        with self._mutex:
-            row = self.journal.append(flat)
-            self._disk.step("committed")
+        row = self._append(reading) if self._events is None else self._append_with_events(reading)
+        self._disk.step("committed")
         self._note_try(reading.visit, reading.attempt)
         if (row + 1) % min(self._chunk, 64) == 0 and row + 1 - self.journal.sealed >= self._chunk:
             self._sealer.wake()
@@ -87,11 +87,18 @@ class Archive:
 
     def append_events(self, chunk: bytes) -> None:
         """Take list-mode events of the visit that is being counted."""
-        raise StorageError(
-            f"{len(chunk)} bytes of list-mode events cannot be stored: list mode is built later",
-            where=str(self.folder),
-            remedy="Run the counter in counting mode",
-        )
+        if self._events is None:
+            raise StorageError(
+                "the run was not begun in list mode",
+                where=str(self.folder),
+                remedy="Give the archive the counter's tick (`list_mode`)",
+            )
+        self._events.add(chunk)
+
+    def drop_events(self) -> None:
+        """Forget the events of a visit that will not be committed."""
+        if self._events is not None:
+            self._events.drop()
 
     def stands_done(self) -> dict[int, int]:
         """Return stand -> tries so far, for every stand with at least one reading."""
@@ -136,6 +143,8 @@ class Archive:
         root = open_root(self.folder, self._disk)
         arrays = self._form.arrays(held.rows)
         write_rows(root, arrays, held.sealed, arrays)
+        if self._events is not None:
+            self._events.finish()
         for column in looked_up():
             add_array(root, column, self._chunk)
         names = [column.name for column in looked_up()]
@@ -162,6 +171,28 @@ class Archive:
 
     def __exit__(self, *_: object) -> None:
         self.close()
+
+    def _append(self, reading: Reading) -> int:
+        if reading.events is not None:
+            self.append_events(reading.events)  # refused: there is no column for them
+        flat = self._form.flat(reading)
+        with self._mutex:
+            return self.journal.append(flat)
+
+    def _append_with_events(self, reading: Reading) -> int:
+        assert self._events is not None
+        try:
+            if reading.events is not None:
+                self._events.add(reading.events)
+            piece = self._events.write()
+            self._disk.step("events")
+            flat = self._form.flat(reading, (piece.first, piece.count))
+            with self._mutex:
+                row = self.journal.append(flat, piece)
+            self._events.written(piece)
+            return row
+        finally:
+            self._events.drop()  # a visit that could not be stored is made again, with events of its own
 
     def _note_try(self, visit: int, attempt: int) -> None:
         if 0 <= visit < len(self._stands):
@@ -207,6 +238,7 @@ def create_run(
                 {
                     **{name: getattr(itinerary, name) for name in ("positions_mm", "weights", "signs")},
                     **meta,
+                    **list_mode(meta, float(itinerary.dwell_s.max())),
                     "format": FORMAT,
                     "chunk": chunk,
                     "texts_sha256": digests,

@@ -16,7 +16,7 @@ from zarr.core.buffer import Buffer
 from zarr.storage import LocalStore
 
 from daq.storage.disk import Disk, write_durably
-from daq.storage.layout import Column, columns, planned
+from daq.storage.layout import EVENTS, Column, columns, events, planned
 
 if TYPE_CHECKING:
     from daq.itinerary.compose import Itinerary
@@ -25,6 +25,8 @@ ZARR = "run.zarr"
 ITINERARY = "itinerary"
 FINISHED = "finished"  # attribute of a run that is whole; it counts only when the journal is gone
 blosc.use_threads = False  # a pool of threads for chunks of 32 kB costs more than it gives
+_ROW_CODEC = BloscCodec(cname="zstd", clevel=3, shuffle="shuffle")
+_EVENT_CODEC = BloscCodec(cname="lz4", clevel=5, shuffle="bitshuffle")
 # A chunk of fill values is written too: then a file that is missing is damage.
 _CONFIG: ArrayConfigParams = {"write_empty_chunks": True}
 
@@ -58,6 +60,8 @@ def create_zarr(folder: Path, meta: Mapping[str, Any], itinerary: Itinerary, dis
     root = zarr.create_group(store, attributes=dict(meta))
     for column in columns(meta):
         add_array(root, column, int(meta["chunk"]))
+    if meta.get("list_mode"):
+        add_array(root, events(meta), int(meta["list_mode"]["chunk"]))
     group = root.create_group(ITINERARY)
     for column in planned(int(meta["slits"]), itinerary.signs):
         name = column.name.removeprefix("sign_")
@@ -69,14 +73,13 @@ def create_zarr(folder: Path, meta: Mapping[str, Any], itinerary: Itinerary, dis
 
 def add_array(group: zarr.Group, column: Column, chunk: int, length: int = 0) -> zarr.Array[Any]:
     """Return a new array of a group: core codecs, checksum on every chunk, unit and names."""
-    tail = (column.width,) if len(column.dims) > 1 else ()
     return group.create_array(
         column.name,
-        shape=(length, *tail),
-        chunks=(chunk, *tail),
+        shape=(length, *column.shape),
+        chunks=(chunk, *column.shape),
         dtype=column.kind,
         fill_value=column.fill,
-        compressors=[BloscCodec(cname="zstd", clevel=3, shuffle="shuffle"), Crc32cCodec()],
+        compressors=[_EVENT_CODEC if column.name == EVENTS else _ROW_CODEC, Crc32cCodec()],
         dimension_names=column.dims,
         attributes={"units": column.units, "long_name": column.long_name, **column.attributes},
         config=_CONFIG,
@@ -95,15 +98,15 @@ def open_array(folder: Path, name: str) -> zarr.Array[Any]:
 
 
 def write_rows(
-    root: zarr.Group, names: Iterable[str], first: int, arrays: Mapping[str, NDArray[Any]]
+    root: zarr.Group, names: Iterable[str], first: int, arrays: Mapping[str, NDArray[Any]], *, grow: int = 1
 ) -> None:
-    """Write rows from `first` (the start of a chunk) on, and make them durable."""
+    """Write rows from `first` (the start of a chunk) on, and make them durable; lengths grow in steps."""
     for name in names:
         array, rows = root[name], arrays[name]
         assert isinstance(array, zarr.Array)
         stop = first + len(rows)
-        if array.shape[0] != stop:
-            array.resize((stop, *array.shape[1:]))
+        if array.shape[0] < stop:
+            array.resize((-(-stop // grow) * grow, *array.shape[1:]))
         array.with_config(_CONFIG)[first:stop] = rows
     store = root.store
     assert isinstance(store, DurableStore)

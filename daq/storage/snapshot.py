@@ -28,6 +28,7 @@ class Snapshot:
     meta: dict[str, Any]
     sealed: int
     rows: list[tuple[Any, ...]]
+    events_sealed: int = 0
 
 
 def snapshot(folder: Path, stop: int | None = None) -> Snapshot | None:
@@ -59,7 +60,7 @@ def snapshot(folder: Path, stop: int | None = None) -> Snapshot | None:
     kept = _checked(Rows(meta), rows, sealed, path)
     if stop is None and sealed + len(kept) < newest:
         raise _ended(path, sealed + len(kept), newest)
-    return Snapshot(meta, sealed, kept)
+    return Snapshot(meta, sealed, kept, int(state["events_sealed"]))
 
 
 def salvaged(folder: Path) -> Snapshot | None:
@@ -72,7 +73,7 @@ def salvaged(folder: Path) -> Snapshot | None:
         good = [row[2:] for row in rows if _intact(form, row)]
     except (sqlite3.Error, ValueError, KeyError):
         return None
-    return Snapshot(meta, int(state["sealed"]), good)
+    return Snapshot(meta, int(state["sealed"]), good, int(state["events_sealed"]))
 
 
 def check_format(meta: Mapping[str, Any], where: Path) -> None:

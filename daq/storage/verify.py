@@ -16,7 +16,7 @@ from daq.errors import StorageError
 from daq.estimate.dataset import estimate_run
 from daq.openings import name as opening_name
 from daq.storage.digest import digest, gate_digest
-from daq.storage.layout import columns, planned
+from daq.storage.layout import EVENTS, columns, planned
 from daq.storage.manifest import changed_files
 from daq.storage.reader import open_itinerary, open_visits, read_meta
 from daq.storage.seal import ITINERARY, ZARR, open_array
@@ -54,12 +54,14 @@ def verify(folder: Path) -> Verified:
     if not (folder / JOURNAL).exists():
         meta, tail = read_meta(folder), 0
         good, problems = _whole_rows(folder, meta, _longest(folder, meta))
+        problems.update(_lost_events(folder, meta, None))
         problems.update(_changed_since_finish(folder, problems))
     else:
         held, problems = _journal(folder)
         meta, tail = held.meta, len(held.rows)
         good, found = _whole_rows(folder, meta, held.sealed)
         problems.update(found)
+        problems.update(_lost_events(folder, meta, held.events_sealed))
     problems.update({name: f"{name} is no longer what was written" for name in _changed_texts(folder, meta)})
     if not problems:
         problems = dict(_contradictions(open_visits(folder), open_itinerary(folder)))
@@ -104,6 +106,14 @@ def _whole_rows(folder: Path, meta: dict[str, Any], rows: int) -> tuple[NDArray[
         for file, _, words in _bad_chunks(folder, f"{ITINERARY}/{column.name}", None):
             problems[file] = f"{file} {words}: {column.name} of the planned visits is lost"
     return good, problems
+
+
+def _lost_events(folder: Path, meta: dict[str, Any], sealed: int | None) -> Problems:
+    """Return what is wrong with the events of list mode; the counts of their visits are not touched by it."""
+    if not meta.get("list_mode"):
+        return {}
+    bad = _bad_chunks(folder, EVENTS, sealed)
+    return {file: f"{file} {words}: events {at.start} to {at.stop - 1} are lost" for file, at, words in bad}
 
 
 def _bad_chunks(folder: Path, name: str, rows: int | None) -> Iterator[tuple[str, slice, str]]:

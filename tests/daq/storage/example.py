@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
+from dataclasses import replace
 from functools import cache
 from pathlib import Path
 from typing import Any
@@ -16,6 +17,7 @@ from daq.storage.disk import Disk
 from daq.storage.run import Archive, create_run
 
 OPENINGS = (0, 1, 2, 3)
+EVENT_CHUNK = 256
 POSITIONS_MM = (-1.5, 0.0, 1.5)
 MEANS = (1_000, 50_000, 52_000, 150_000)  # counts of a visit by opening
 META: Mapping[str, Any] = {
@@ -88,9 +90,28 @@ def reading(visit: int, attempt: int = 1) -> Reading:
     )
 
 
-def started(folder: Path, chunk: int = 4096, laps: int = 4, disk: Disk | None = None) -> Archive:
-    """Return the archive of a new run in `folder`."""
-    return create_run(folder, texts=TEXTS, itinerary=planned_visits(laps), meta=META, chunk=chunk, disk=disk)
+def ticks_of(visit: int) -> NDArray[np.uint64]:
+    """Return the event times of a visit [ns since its gate opened]: none, few, or several chunks."""
+    draw = np.random.default_rng([11, visit])
+    number = (0, 3, 100, EVENT_CHUNK, 700)[visit % 5]
+    return np.sort(draw.integers(0, 2_000_000_000, number)).astype(np.uint64)
+
+
+def listed(visit: int) -> Reading:
+    """Return what a visit brings home in list mode."""
+    return replace(reading(visit), events=ticks_of(visit).astype("<u8").tobytes())
+
+
+def started(
+    folder: Path,
+    chunk: int = 4096,
+    laps: int = 4,
+    disk: Disk | None = None,
+    tick_s: float | None = None,
+) -> Archive:
+    """Return the archive of a new run in `folder`; in list mode with a tick."""
+    meta = {**META, "list_mode": {"tick_s": tick_s, "chunk": EVENT_CHUNK}} if tick_s else META
+    return create_run(folder, texts=TEXTS, itinerary=planned_visits(laps), meta=meta, chunk=chunk, disk=disk)
 
 
 def expected(readings: Sequence[Reading]) -> dict[str, NDArray[Any]]:

@@ -129,7 +129,7 @@ class LateSync(FakeDisk):
 
     def step(self, name: str) -> None:
         super().step(name)
-        if name == "forgot":
+        if name == "forgot" or (name == "committed" and self._late):
             for folder in self._late:
                 super().sync_dir(folder)
             self._late, self.broken = (), False

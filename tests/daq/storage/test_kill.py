@@ -17,9 +17,10 @@ import pytest
 import xarray as xr
 
 from daq.errors import StorageError
+from daq.storage.events import read_events
 from daq.storage.reader import open_visits
 from daq.storage.run import open_run
-from tests.daq.storage.example import expected, reading
+from tests.daq.storage.example import expected, reading, ticks_of
 
 CHUNK, LAPS = 128, 200
 PATIENCE_S = 60.0
@@ -82,7 +83,10 @@ def writers() -> Iterator[Writers]:
     forker.close()
 
 
-def assert_holds(opened: Any, rows: int) -> None:
+def assert_holds(folder: Path, opened: Any, rows: int) -> None:
+    if "event_start" in opened:
+        for visit, ticks in enumerate(read_events(folder, range(rows))):
+            np.testing.assert_array_equal(ticks, ticks_of(visit), err_msg=f"events of {visit}")
     for name, values in expected([reading(visit) for visit in range(rows)]).items():
         np.testing.assert_array_equal(np.asarray(opened[name]), values, err_msg=name)
 
@@ -98,14 +102,14 @@ def rows_found(folder: Path, told: int | None, rows_before: int) -> int | None:
         return None
     rows = dataset.sizes["row"]
     assert rows in (acknowledged, acknowledged + 1)
-    assert_holds(dataset, rows)
+    assert_holds(folder, dataset, rows)
     return rows
 
 
 def assert_finishes(folder: Path, rows: int) -> None:
     with open_run(folder) as archive:
         archive.finish({})
-    assert_holds(xr.open_zarr(folder / "run.zarr", chunks=None), rows)
+    assert_holds(folder, xr.open_zarr(folder / "run.zarr", chunks=None), rows)
     assert not list(folder.glob("journal*"))
     assert not list(folder.rglob("*.partial"))
 
@@ -114,7 +118,7 @@ def kill_many(lab: Path, writers: Writers, kills: int, seed: int) -> tuple[int, 
     """Return runs finished, visits compared through plain Zarr, and kills while a folder was being made."""
     rng, run, rows, visits, unmade = np.random.default_rng(seed), 0, 0, 0, 0
     for kill in range(kills):
-        folder = lab / str(run)
+        folder = lab / (f"{run}-list" if run % 2 else str(run))
         told = writers.killed(folder, rng.uniform(0, 0.6), at_work=rng.random() < 0.9)
         found = rows_found(folder, told, rows)
         rows = found or 0

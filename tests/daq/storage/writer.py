@@ -12,7 +12,7 @@ from pathlib import Path
 
 from daq.storage.run import open_run
 from daq.storage.snapshot import JOURNAL
-from tests.daq.storage.example import reading, started
+from tests.daq.storage.example import listed, reading, started
 
 
 def tell(words: str) -> None:
@@ -20,10 +20,14 @@ def tell(words: str) -> None:
 
 
 def write_for_ever(folder: Path, chunk: int, laps: int) -> None:
-    archive = open_run(folder) if (folder / JOURNAL).exists() else started(folder, chunk=chunk, laps=laps)
+    make = listed if folder.name.endswith("-list") else reading
+    if (folder / JOURNAL).exists():
+        archive = open_run(folder)
+    else:
+        archive = started(folder, chunk=chunk, laps=laps, tick_s=1e-9 if make is listed else None)
     tell(f"rows {archive.rows}")
     for visit in range(archive.rows, 12 * laps):
-        tell(f"rows {archive.commit(reading(visit)) + 1}")
+        tell(f"rows {archive.commit(make(visit)) + 1}")
 
 
 def main() -> None:
