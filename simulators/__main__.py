@@ -7,15 +7,18 @@ import signal
 import sys
 import threading
 import tomllib
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from pathlib import Path
+from typing import Any
 
 from daq.description import Rig, parse
 from daq.devices.clock import RealClock
 from daq.errors import DaqError, DescriptionError
 from simulators.bench import build
+from simulators.faults import read_script
 from simulators.hosts import Listener, run_real
 from simulators.settings import read_settings
+from simulators.upsets import Upsets
 
 
 def main(arguments: Sequence[str] | None = None) -> int:
@@ -24,22 +27,27 @@ def main(arguments: Sequence[str] | None = None) -> int:
         prog="python -m simulators", description="Simulated instruments on real ports."
     )
     reader.add_argument("rig", type=Path, help="rig file with a table [bench]")
+    reader.add_argument("--faults", type=Path, metavar="FILE", help="fault script (TOML)")
     wanted = reader.parse_args(arguments)
     try:
-        _serve(_read(wanted.rig))
+        _serve(
+            parse(_read(wanted.rig), str(wanted.rig), "rig"), _read(wanted.faults) if wanted.faults else None
+        )
     except DaqError as error:
         sys.stderr.write(f"{error}\n")
         return error.exit_status
     return 0
 
 
-def _serve(rig: Rig) -> None:
-    settings = read_settings(rig)
-    built = build(rig, settings, settings.seed, RealClock(), {})
+def _serve(rig: Rig, faults: Mapping[str, Any] | None) -> None:
+    settings, clock = read_settings(rig), RealClock()
+    script = None if faults is None else read_script(faults, rig)
+    upsets = None if script is None else Upsets(clock)
+    built = build(rig, settings, settings.seed, clock, {}, upsets)
     try:
         listeners = {
             name: Listener(rig.devices[name].address, instrument)
-            for name, instrument in built.instruments.items()
+            for name, instrument in built.served(clock).items()
         }
     except OSError as error:
         problem = f"rig {rig.name}: an address of [devices] cannot be listened on ({error}). Free its port."
@@ -50,15 +58,16 @@ def _serve(rig: Rig) -> None:
     for name, listener in listeners.items():
         sys.stdout.write(f"{name}: {listener.address}\n")
     sys.stdout.flush()
+    if upsets and script:
+        upsets.begin(script, listeners, built.instruments, built.tracks)
     run_real(tuple(listeners.values()), stop)
 
 
-def _read(path: Path) -> Rig:
+def _read(path: Path) -> dict[str, Any]:
     try:
-        table = tomllib.loads(path.read_text(encoding="utf-8"))
+        return tomllib.loads(path.read_text(encoding="utf-8"))
     except (OSError, ValueError) as error:
         raise DescriptionError((f"{path}: it cannot be read as TOML ({error}). Mend the file.",)) from error
-    return parse(table, str(path), "rig")
 
 
 if __name__ == "__main__":

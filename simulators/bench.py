@@ -5,6 +5,7 @@ from __future__ import annotations
 import json
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
+from functools import partial
 from typing import Any, Literal
 
 from daq.description import Rig
@@ -12,12 +13,14 @@ from daq.errors import DescriptionError
 from daq.ports import Clock
 from simulators.clock import VirtualClock
 from simulators.counters import GatedCounter
+from simulators.faults import Struck, read_script
 from simulators.hosts import Host, Instrument, serve
 from simulators.motion import Track
 from simulators.sensors import RoomSensor
 from simulators.settings import Settings, read_settings, utc_ns
 from simulators.stages import StageController, Travel
 from simulators.truth import Truth
+from simulators.upsets import Spoilt, Upsets
 
 _FOUND_AT = 0.37  # where on its travel an axis is found when it is switched on
 
@@ -29,6 +32,13 @@ class Built:
     instruments: Mapping[str, Instrument]
     tracks: Mapping[str, Track]
     truth: Truth
+    upsets: Upsets | None = None
+
+    def served(self, clock: Clock) -> Mapping[str, Instrument]:
+        """Return the instruments as hosts serve them: their replies may be spoilt when there are upsets."""
+        if self.upsets is None:
+            return self.instruments
+        return {name: Spoilt(name, one, self.upsets, clock) for name, one in self.instruments.items()}
 
 
 class WaveletBench:
@@ -44,6 +54,11 @@ class WaveletBench:
         """Return noise-free rates, position by opening, without drift and dead time [1/s]."""
         rates: list[list[float]] = self._built.truth.rates_hz(openings, positions_mm).tolist()
         return rates
+
+    def struck(self) -> Sequence[Struck]:
+        """Return the faults that were injected, the truth behind what the run noticed."""
+        upsets = self._built.upsets
+        return list(upsets.faults.struck) if upsets and upsets.faults else []
 
     def keep(self) -> bytes:
         """Return what a resumed rehearsal needs: axis positions and clock offset, as JSON."""
@@ -61,7 +76,12 @@ class WaveletBench:
 
 
 def open_bench(
-    rig: Rig, *, seed: int | None, transport: Literal["tcp", "direct"], state: bytes | None
+    rig: Rig,
+    *,
+    seed: int | None,
+    transport: Literal["tcp", "direct"],
+    state: bytes | None,
+    faults: Mapping[str, Any] | None = None,
 ) -> WaveletBench:
     """Return a bench whose hosts answer on its own virtual clock under the rig's addresses.
 
@@ -75,20 +95,36 @@ def open_bench(
         "tcp" (loopback sockets) or "direct" (in process); both carry the same bytes.
     state
         What `keep` of an earlier bench gave, to go on from there; else every axis has lost its reference.
+    faults
+        A fault script (`simulators.faults`).
+
+    Raises
+    ------
+    DescriptionError
+        For a table [bench], a driver or a fault script that cannot be meant.
     """
     settings = read_settings(rig)
+    script = None if faults is None else read_script(faults, rig)
     kept: Any = json.loads(state) if state else {"now_ns": 0, "axes": {}}
     clock = VirtualClock(utc_ns(settings.origin_utc), kept["now_ns"])
-    built = build(rig, settings, settings.seed if seed is None else seed, clock, kept["axes"])
-    hosts = [
-        serve(clock, rig.devices[name].address, instrument, transport)
-        for name, instrument in built.instruments.items()
-    ]
-    return WaveletBench(clock, built, hosts)
+    upsets = None if script is None else Upsets(clock, clock.step_utc)
+    built = build(rig, settings, settings.seed if seed is None else seed, clock, kept["axes"], upsets)
+    hosts = {
+        name: serve(clock, rig.devices[name].address, instrument, transport)
+        for name, instrument in built.served(clock).items()
+    }
+    if upsets and script:
+        upsets.begin(script, hosts, built.instruments, built.tracks)
+    return WaveletBench(clock, built, tuple(hosts.values()))
 
 
 def build(
-    rig: Rig, settings: Settings, seed: int, clock: Clock, kept: Mapping[str, Mapping[str, float]]
+    rig: Rig,
+    settings: Settings,
+    seed: int,
+    clock: Clock,
+    kept: Mapping[str, Mapping[str, float]],
+    upsets: Upsets | None = None,
 ) -> Built:
     """Return the instruments of a rig; `kept` holds place and homing of axes that are known.
 
@@ -98,12 +134,15 @@ def build(
         When no simulated instrument understands the driver of a device.
     """
     tracks = {name: _track(axis.limits_mm, kept.get(name)) for name, axis in rig.axes.items()}
-    truth = Truth(rig, settings, seed, tracks)
+    truth = Truth(rig, settings, seed, tracks, upsets.beam if upsets else None)
+
+    def count(name: str, open_ns: int, close_ns: int) -> int:
+        counts = truth.counts(name, open_ns, close_ns)
+        return upsets.counted(name, open_ns, close_ns, counts) if upsets else counts
+
     makers: Mapping[str, Callable[[str], Instrument]] = {
         "gcode-stage": lambda name: _controller(name, rig, tracks, clock),
-        "scpi-counter": lambda name: GatedCounter(
-            name, lambda open_ns, close_ns: truth.counts(name, open_ns, close_ns), settings.readout_s, clock
-        ),
+        "scpi-counter": lambda name: GatedCounter(name, partial(count, name), settings.readout_s, clock),
         "scpi-sensor": lambda name: RoomSensor(name, clock),
     }
     unknown = [
@@ -115,7 +154,7 @@ def build(
     if unknown:
         raise DescriptionError(tuple(unknown))
     instruments = {name: makers[entry.driver](name) for name, entry in rig.devices.items()}
-    return Built(instruments, tracks, truth)
+    return Built(instruments, tracks, truth, upsets)
 
 
 def _track(limits_mm: tuple[float, float], kept: Mapping[str, float] | None) -> Track:

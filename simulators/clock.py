@@ -73,6 +73,10 @@ class VirtualClock:
         """Return the simulated UTC, nanoseconds since 1970-01-01."""
         return self._origin_utc_ns + self._now
 
+    def step_utc(self, by_ns: int) -> None:
+        """Let UTC jump, as a clock does that is set; run time does not notice."""
+        self._origin_utc_ns += by_ns
+
     def sleep_until(self, at_ns: int) -> None:
         """Return when the run time has reached `at_ns`."""
         self.wait(_never, at_ns)

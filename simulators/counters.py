@@ -45,12 +45,19 @@ class Gate:
 
 
 class GatedCounter:
-    """A counter; `count` draws what a gate has counted, from its opening and its end [ns]."""
+    """A counter; `count` draws what a gate has counted, from its opening and its end [ns].
+
+    Attributes
+    ----------
+    opened
+        Told the number of every gate that opens.
+    """
 
     def __init__(self, name: str, count: Callable[[int, int], int], readout_s: float, clock: Clock) -> None:
         self._count, self._readout_ns, self._clock = count, round(readout_s * NS), clock
         self._width_ns = round(_RESET_S * NS)
         self._gates = 0
+        self.opened: Callable[[int], None] = lambda number: None
         self._gate: Gate | None = None
         self._counted: int | None = None
         status = Status(self._condition, lambda: bool(self._interpreter.responses))
@@ -92,6 +99,7 @@ class GatedCounter:
         open_ns = self._clock.now_ns()
         self._gate = Gate(self._gates, open_ns, open_ns + self._width_ns)
         self._counted = None
+        self.opened(self._gates)
 
     def _fetch(self) -> str:
         if self._gate is None:

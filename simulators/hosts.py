@@ -83,6 +83,8 @@ def serve(clock: VirtualClock, address: str, instrument: Instrument, transport: 
 class Listener:
     """An instrument that listens on a real TCP port from construction on; `run_real` answers.
 
+    It can go away (`close`) and come back (`open`): meanwhile connections are ended as they come.
+
     Attributes
     ----------
     address
@@ -95,6 +97,15 @@ class Listener:
         self.socket = socket.create_server((place.hostname or "", place.port or 0))
         self.socket.setblocking(False)
         self.address = f"tcp://{place.hostname}:{self.socket.getsockname()[1]}"
+        self.down = False
+
+    def open(self) -> None:
+        """Answer connections from now on."""
+        self.down = False
+
+    def close(self) -> None:
+        """End every connection, and new ones as they come."""
+        self.down = True
 
 
 def run_real(listeners: Sequence[Listener], stop: threading.Event) -> None:
@@ -107,6 +118,8 @@ def run_real(listeners: Sequence[Listener], stop: threading.Event) -> None:
         while not stop.is_set():
             for key, _ in selector.select(_LOOK_S):
                 key.data()
+            for key in list(selector.get_map().values()):
+                key.data.end_when_down()
 
 
 class _Acceptor:
@@ -122,18 +135,20 @@ class _Acceptor:
             return
         stream.settimeout(_STALL_S)
         stream.setsockopt(socket.IPPROTO_TCP, socket.TCP_NODELAY, 1)
-        answer = _Answer(stream, self._listener.instrument, self._selector)
+        answer = _Answer(stream, self._listener, self._selector)
         self._selector.register(stream, selectors.EVENT_READ, answer)
+
+    def end_when_down(self) -> None:
+        """Stay: somebody has to end the connections that come."""
 
 
 class _Answer:
     """Called when bytes have come on a real connection."""
 
-    def __init__(
-        self, stream: socket.socket, instrument: Instrument, selector: selectors.BaseSelector
-    ) -> None:
+    def __init__(self, stream: socket.socket, listener: Listener, selector: selectors.BaseSelector) -> None:
         self._stream, self._selector, self._writing = stream, selector, threading.Lock()
-        self._session = instrument.session(self._send_late)
+        self._listener = listener
+        self._session = listener.instrument.session(self._send_late)
 
     def __call__(self) -> None:
         try:
@@ -143,8 +158,15 @@ class _Answer:
         except OSError:
             data = b""
         if not data:
-            self._selector.unregister(self._stream)
-            self._stream.close()
+            self._end()
+
+    def end_when_down(self) -> None:
+        if self._listener.down:
+            self._end()
+
+    def _end(self) -> None:
+        self._selector.unregister(self._stream)
+        self._stream.close()
 
     def _send(self, data: bytes) -> None:
         with self._writing:

@@ -46,6 +46,8 @@ class Track:
         self._reference_mm = reference_mm
         self._homed_at_ns: int | None = 0 if homed else None
         self._zero_mm = 0.0 if homed else place_mm
+        self._target_mm = place_mm
+        self._hidden_mm = 0.0  # how far it has slipped behind its encoder's back
 
     def true_mm(self, at_ns: int) -> float:
         """Return where the axis truly is at a time, also one that is past (the last 256 legs) [mm]."""
@@ -56,11 +58,11 @@ class Track:
 
     def shown_mm(self, at_ns: int) -> float:
         """Return where the axis believes to be [mm]; before homing that is a count from an unknown zero."""
-        return self.true_mm(at_ns) - (0.0 if self.homed(at_ns) else self._zero_mm)
+        return self.true_mm(at_ns) - self._offset_mm(at_ns)
 
     def target_mm(self, at_ns: int) -> float:
-        """Return the end of the last leg, as the axis believes it [mm]."""
-        return self._legs[-1].stop_mm - (0.0 if self.homed(at_ns) else self._zero_mm)
+        """Return where it was sent, or was stopped, as the axis believes it [mm]."""
+        return self._target_mm - self._offset_mm(at_ns)
 
     def moving(self, at_ns: int) -> bool:
         """Return whether a leg is under way."""
@@ -71,8 +73,11 @@ class Track:
         return self._homed_at_ns is not None and at_ns >= self._homed_at_ns
 
     def go(self, at_ns: int, target_mm: float, speed_mm_s: float) -> None:
-        """Start a leg to a true place [mm]."""
-        here_mm = self.true_mm(at_ns)
+        """Start a leg to a place, as the axis believes it once it is homed [mm]."""
+        self._go(at_ns, target_mm + self._hidden_mm, speed_mm_s)
+
+    def _go(self, at_ns: int, target_mm: float, speed_mm_s: float) -> None:
+        here_mm, self._target_mm = self.true_mm(at_ns), target_mm
         arrival_ns = at_ns + round(abs(target_mm - here_mm) / speed_mm_s * NS)
         self._legs.append(Leg(at_ns, arrival_ns, here_mm, target_mm))
 
@@ -80,17 +85,38 @@ class Track:
         """Start a leg to the reference switch; arriving there is being homed."""
         if self.homed(at_ns):
             self._zero_mm = 0.0
-        self.go(at_ns, self._reference_mm, speed_mm_s)
+        self._zero_mm, self._hidden_mm = self._zero_mm + self._hidden_mm, 0.0
+        self._go(at_ns, self._reference_mm, speed_mm_s)
         self._homed_at_ns = self._legs[-1].stop_ns
 
     def stop(self, at_ns: int) -> None:
         """End the leg under way where the axis is; a search for the reference then finds none."""
         if not self.moving(at_ns):
             return
+        self.stall(at_ns)
+        self._target_mm = self._legs[-1].stop_mm
+
+    def stall(self, at_ns: int) -> None:
+        """End the leg under way where the axis is, which the axis does not know: its target stays."""
+        if not self.moving(at_ns):
+            return
         if not self.homed(at_ns):
             self._homed_at_ns = None
-        cut = replace(self._legs[-1], stop_ns=at_ns, stop_mm=self.true_mm(at_ns))
-        self._legs[-1] = cut
+        self._legs[-1] = replace(self._legs[-1], stop_ns=at_ns, stop_mm=self.true_mm(at_ns))
+
+    def slip(self, at_ns: int, by_mm: float, *, seen: bool) -> None:
+        """Move the axis, and the rest of its leg, at once by some way, `seen` by its encoder or not."""
+        leg, here_mm = self._legs[-1], self.true_mm(at_ns)
+        if self.moving(at_ns):
+            self._legs[-1] = replace(leg, stop_ns=at_ns, stop_mm=here_mm)
+        stop_ns = max(leg.stop_ns, at_ns)
+        self._legs.append(Leg(at_ns, stop_ns, here_mm + by_mm, leg.stop_mm + by_mm))
+        if not seen:
+            self._hidden_mm += by_mm
+            self._target_mm += by_mm
+
+    def _offset_mm(self, at_ns: int) -> float:
+        return self._hidden_mm + (0.0 if self.homed(at_ns) else self._zero_mm)
 
     def moments(self, start_ns: int, stop_ns: int) -> Iterator[int]:
         """Yield the times between two times at which the axis starts or stops."""

@@ -31,12 +31,16 @@ class Truth:
         Of the source's walk and of every count.
     tracks
         The axes by their names in the rig.
+    beam
+        What injected faults do to the light.
     """
 
-    def __init__(self, rig: Rig, settings: Settings, seed: int, tracks: Mapping[str, Track]) -> None:
+    def __init__(
+        self, rig: Rig, settings: Settings, seed: int, tracks: Mapping[str, Track], beam: Factor | None = None
+    ) -> None:
         self._rig, self._settings, self._seed = rig, settings, seed
         self._mask, self._detector = tracks[rig.mask.axis], tracks[rig.detector.axis]
-        self._source = _factors(settings, seed)
+        self._source = _factors(settings, seed) + (() if beam is None else (beam,))
         self._places = {opening: rig.mask_at_mm(opening) for opening in rig.opening_masks}
         self._mask_tolerance_mm = rig.axes[rig.mask.axis].tolerance_mm
         first = rig.slits["A"]
