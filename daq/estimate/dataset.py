@@ -8,12 +8,10 @@ from typing import Any
 import numpy as np
 
 from daq.estimate.arrays import FloatArray, IntArray
-from daq.estimate.plan import Plan
+from daq.estimate.plan import Heralded, Plan
 from daq.estimate.rows import Rows
-from daq.estimate.sums import stands_of, sums_of
-from daq.estimate.whole import Estimate, estimate_sums
-
-DETECTOR = 0  # the channel that is estimated; others stand beside it in the archive
+from daq.estimate.visits import visits_of
+from daq.estimate.whole import Estimate, estimate_visits
 
 NEEDED = (
     *("slits", "openings", "positions_mm", "weights", "signs", "normalisation"),
@@ -35,7 +33,7 @@ def estimate_run(dataset: Any) -> Estimate:
         If the attributes lack a part of the plan, or a row has an opening or a position that is not planned.
     """
     plan = plan_of_dataset(dataset)
-    return estimate_sums(sums_of(stands_of(rows_of_dataset(dataset), plan), plan), plan)
+    return estimate_visits(visits_of(rows_of_dataset(dataset), plan), plan)
 
 
 def plan_of_dataset(dataset: Any) -> Plan:
@@ -59,21 +57,36 @@ def plan_of_dataset(dataset: Any) -> Plan:
         dead_time_kind=str(attributes["dead_time_kind"]),
         planned_pairs=int(attributes["planned_pairs"]),
         goal_se=attributes.get("goal_se"),
+        **_counting(attributes),
+        visits_per_stand=attributes.get("visits_per_stand"),
         **_by_visit(dataset, openings, positions),
     )
 
 
 def rows_of_dataset(dataset: Any) -> Rows:
-    """Return the planned visits of a dataset, the detector's channel alone."""
+    """Return the planned visits of a dataset."""
     planned = _integers(dataset, "visit") >= 0
+    opened, closed = (_integers(dataset, f"gate_{edge}_ns")[planned] for edge in ("open", "close"))
     return Rows(
         _integers(dataset, "visit")[planned],
         _integers(dataset, "attempt")[planned],
         _integers(dataset, "quality")[planned],
-        np.asarray(dataset["values"].values[:, DETECTOR], float)[planned],
+        np.asarray(dataset["values"].values, float)[planned],
+        np.asarray(dataset["values_var"].values, float)[planned],
         np.asarray(dataset["live_s"].values, float)[planned],
-        np.asarray(dataset["values_var"].values[:, DETECTOR], float)[planned],
+        (opened + closed) / 2e9,
     )
+
+
+def _counting(attributes: Mapping[str, Any]) -> dict[str, Any]:
+    """Return what a value is; an archive that does not say holds Poisson counts of one channel."""
+    pairs = attributes.get("heralded")
+    return {
+        "counting": str(attributes.get("counting", "counts")),
+        "fano": float(attributes.get("fano", 1.0)),
+        "monitor": attributes.get("monitor_channel"),
+        "heralded": None if pairs is None else Heralded(**pairs),
+    }
 
 
 def _integers(dataset: Any, name: str) -> IntArray:
@@ -90,7 +103,7 @@ def _index(values: IntArray | FloatArray, known: IntArray | FloatArray, what: st
     return place.astype(np.int64)
 
 
-def _by_visit(dataset: Any, openings: IntArray, positions: FloatArray) -> dict[str, IntArray]:
+def _by_visit(dataset: Any, openings: IntArray, positions: FloatArray) -> dict[str, Any]:
     """Return what is planned for each visit that a row shows, by visit number."""
     visit = _integers(dataset, "visit")
     planned = visit >= 0

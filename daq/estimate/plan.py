@@ -13,13 +13,25 @@ LAPS_PER_PAIR = 2
 
 
 @dataclass(frozen=True, slots=True)
+class Heralded:
+    """Counts are coincidences of two channels: which ones, and the whole width of the coincidence window."""
+
+    signal: int
+    idler: int
+    window_s: float
+
+
+@dataclass(frozen=True, slots=True)
 class Plan:
     """What the estimator knows of an itinerary.
 
     `openings` (K) bit masks in binary order; `positions_mm`, `weights` (J); `signs` "AB" -> (J) planned sign
     of a pairwise term; `normalisation` "pairwise" or "central". The last four run over planned visits by
     number: stand, pair (-1: in no complete pair), index into `positions_mm`, index into `openings`. A stand
-    shows every opening once, at one position.
+    shows every opening at one position, once, or as often as makes `visits_per_stand`.
+
+    `counting` "counts" or "power" (mean power of a visit, with its variance); `fano` variance over mean of
+    the counts behind the dead time; `monitor` the channel that watches the source, if any.
     """
 
     slits: int
@@ -36,6 +48,16 @@ class Plan:
     position: IntArray
     opening: IntArray
     goal_se: float | None = None
+    visits_per_stand: int | None = None  # None: every opening once
+    counting: str = "counts"
+    fano: float = 1.0
+    monitor: int | None = None
+    heralded: Heralded | None = None
+
+    @property
+    def whole_stand(self) -> int:
+        """How many visits a whole stand has."""
+        return self.visits_per_stand or len(self.openings)
 
     @property
     def stands_per_pair(self) -> int:

@@ -6,12 +6,13 @@ from math import nan
 
 import numpy as np
 
-from daq.estimate.counting import true_counts
-from daq.estimate.dataset import DETECTOR
+from daq.estimate.detected import detected
 from daq.estimate.plan import Plan, stand_places
-from daq.estimate.rows import Rows, countable
-from daq.estimate.sums import Sums, complete_pairs, no_stands, sums_of
-from daq.estimate.whole import Estimate, estimate_sums
+from daq.estimate.rows import Rows
+from daq.estimate.sums import Sums, sums_of
+from daq.estimate.tables import tables_of
+from daq.estimate.visits import complete_pairs, no_visits, write
+from daq.estimate.whole import Estimate, estimate_visits, headline
 from daq.records import EXCLUDING, Reading
 
 HISTORY_POINTS = 400  # the page draws no more
@@ -26,11 +27,13 @@ class Running:
 
     def __init__(self, plan: Plan) -> None:
         self._plan = plan
-        self._stand, self._opening = plan.stand.tolist(), plan.opening.tolist()
+        self._stand = plan.stand.tolist()
         self._pair = stand_places(plan)[0].tolist()
-        self._stands = no_stands(plan)
+        self._visits = no_visits(plan)
         self._open: dict[tuple[int, int], dict[int, Reading]] = {}
-        self._used_attempt: dict[int, int] = {}
+        self._spoken: dict[
+            int, tuple[bool, int]
+        ] = {}  # by stand: was the attempt that speaks good, and which
         self._closed_ns: dict[int, int] = {}
         self._first_ns: int | None = None
         self._estimate: Estimate | None = None
@@ -43,14 +46,14 @@ class Running:
             return
         stand = self._stand[reading.visit]
         attempt = self._open.setdefault((stand, reading.attempt), {})
-        attempt[self._opening[reading.visit]] = reading
-        if len(attempt) == len(self._plan.openings):
+        attempt[reading.visit] = reading
+        if len(attempt) == self._plan.whole_stand:
             self._take_in(stand, reading.attempt, self._open.pop((stand, reading.attempt)))
 
     def estimate(self) -> Estimate:
         """Return the estimate so far, the one that `estimate_run` gives for the same readings."""
         if self._estimate is None:
-            self._estimate = estimate_sums(sums_of(self._stands, self._plan), self._plan)
+            self._estimate = estimate_visits(self._visits, self._plan)
         return self._estimate
 
     def history(self) -> dict[str, list[float | None]]:
@@ -59,14 +62,14 @@ class Running:
         `hours` since the first gate, `kappa`, and both bands as `interval_low`, `interval_high`, `whole_low`,
         `whole_high`; at most 400 pairs, evenly thinned, the last one always.
         """
-        pairs = complete_pairs(self._stands, self._plan).tolist()
+        pairs = complete_pairs(self._visits, self._plan).tolist()
         if pairs[: len(self._past_pairs)] != self._past_pairs:
             self._past.clear()
         self._past_pairs = pairs
         stride = max(1, -(-len(pairs) // HISTORY_POINTS))
         ends = sorted({*range(stride, len(pairs) + 1, stride), len(pairs)} - {0})
         if any(end not in self._past for end in ends):
-            sums = sums_of(self._stands, self._plan)
+            sums = sums_of(self._visits, self._plan)
             self._past = {end: self._past.get(end) or _known_after(sums, end, self._plan) for end in ends}
         first_ns = self._first_ns or 0
         columns: dict[str, list[float | None]] = {
@@ -75,19 +78,19 @@ class Running:
         return columns | {name: [self._past[end][name] for end in ends] for name in _BANDS}
 
     def _take_in(self, stand: int, attempt: int, readings: dict[int, Reading]) -> None:
-        in_order = [readings[opening] for opening in sorted(readings)]
+        in_order = [readings[visit] for visit in sorted(readings)]
         rows = _rows(in_order)
-        good = bool(countable(rows, self._plan).all()) and not any(
-            reading.quality & EXCLUDING for reading in in_order
-        )
+        found = detected(rows, self._plan)
+        good = bool(found.fine.all()) and not any(reading.quality & EXCLUDING for reading in in_order)
         pair = self._pair[stand]
-        self._stands.done[stand] = True
+        self._visits.done[stand] = True
         if pair in self._past_pairs:
             self._past.clear()
         self._note_times(pair, in_order)
-        if good and attempt >= self._used_attempt.get(stand, 0):
-            self._used_attempt[stand] = attempt
-            self._write(stand, rows)
+        if (good, attempt) >= self._spoken.get(stand, (False, 0)):  # a good attempt, then the latest
+            self._spoken[stand] = (good, attempt)
+            self._visits.used[stand] = good
+            write(self._visits, rows, found, np.ones(len(in_order), bool), self._plan)
         self._estimate = None
 
     def _note_times(self, pair: int, readings: list[Reading]) -> None:
@@ -96,26 +99,18 @@ class Running:
         self._first_ns = first_ns if self._first_ns is None else min(self._first_ns, first_ns)
         self._closed_ns[pair] = max(self._closed_ns.get(pair, closed_ns), closed_ns)
 
-    def _write(self, stand: int, rows: Rows) -> None:
-        plan, stands = self._plan, self._stands
-        stands.live[stand] = rows.live
-        stands.value[stand], stands.variance[stand] = true_counts(
-            rows.value, rows.live, rows.variance, plan.dead_time_s, plan.dead_time_kind
-        )
-        stands.used[stand] = True
-
 
 def _rows(readings: list[Reading]) -> Rows:
     """Return readings of one attempt as rows."""
+    nothing = (nan,) * len(readings[0].values)
     return Rows(
         np.array([reading.visit for reading in readings], np.int64),
         np.array([reading.attempt for reading in readings], np.int64),
         np.array([int(reading.quality) for reading in readings], np.int64),
-        np.array([reading.values[DETECTOR] for reading in readings], float),
+        np.array([reading.values for reading in readings], float),
+        np.array([reading.values_var or nothing for reading in readings], float),
         np.array([reading.live_s for reading in readings], float),
-        np.array(
-            [nan if reading.values_var is None else reading.values_var[DETECTOR] for reading in readings]
-        ),
+        np.array([(reading.gate_open_ns + reading.gate_close_ns) / 2e9 for reading in readings]),
     )
 
 
@@ -124,7 +119,12 @@ _BANDS = ("kappa", "interval_low", "interval_high", "whole_low", "whole_high")
 
 def _known_after(sums: Sums, pairs: int, plan: Plan) -> dict[str, float | None]:
     """Return kappa and both bands as they stood after so many pairs."""
-    then = estimate_sums(Sums(sums.value[:pairs], sums.live[:pairs], sums.variance[:pairs]), plan)
+    then = Sums(sums.value[:pairs], sums.live[:pairs], sums.variance[:pairs])
+    numbers = headline(then, tables_of(then), plan)
     undefined = (None, None)
-    bands = (then.kappa, *(then.interval_95 or undefined), *(then.whole_night_95 or undefined))
+    bands = (
+        numbers["kappa"],
+        *(numbers["interval_95"] or undefined),
+        *(numbers["whole_night_95"] or undefined),
+    )
     return dict(zip(_BANDS, bands, strict=True))

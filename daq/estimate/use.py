@@ -11,14 +11,15 @@ from daq.records import EXCLUDING
 def use(
     stand: IntArray, attempt: IntArray, opening: IntArray, quality: IntArray, openings_per_stand: int
 ) -> BoolArray:
-    """Return which rows are used: the stand's latest attempt that has every opening and no excluding bit.
+    """Return which rows are used: the stand's latest attempt that has every visit and no excluding bit.
 
     Parameters
     ----------
     stand, attempt, opening, quality
-        By row, in any order; a row with `stand` -1 is never used.
+        By row, in any order; a row with `stand` -1 is never used. `opening` tells the visits of a stand
+        apart: the number of the visit, where a stand shows an opening several times.
     openings_per_stand
-        How many different openings a whole stand has.
+        How many different ones a whole stand has.
     """
     group, stand_of, attempt_of = _attempts(stand, attempt)
     bad = np.zeros(len(stand_of), bool)
@@ -28,6 +29,21 @@ def use(
     np.maximum.at(latest, stand_of[good], attempt_of[good])
     used: BoolArray = (good & (attempt_of == latest[stand_of]))[group]
     return used
+
+
+def held(
+    stand: IntArray, attempt: IntArray, opening: IntArray, used: BoolArray, openings_per_stand: int
+) -> BoolArray:
+    """Return which rows speak for their stand: those used, else those of its latest whole attempt."""
+    group, stand_of, attempt_of = _attempts(stand, attempt)
+    whole = _whole(group, opening, len(stand_of), openings_per_stand) & (stand_of >= 0)
+    settled = np.zeros(int(stand.max(initial=-1)) + 2, bool)
+    settled[stand[used]] = True
+    spare = whole & ~settled[stand_of]
+    latest = np.full(len(settled), -1, np.int64)
+    np.maximum.at(latest, stand_of[spare], attempt_of[spare])
+    rows: BoolArray = used | (spare & (attempt_of == latest[stand_of]))[group]
+    return rows
 
 
 def stands_done(stand: IntArray, attempt: IntArray, opening: IntArray, openings_per_stand: int) -> IntArray:
