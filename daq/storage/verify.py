@@ -75,13 +75,13 @@ def _journal(folder: Path) -> tuple[Snapshot, Problems]:
         assert held is not None
         return held, {}
     except StorageError as error:
-        found: Problems = {JOURNAL: str(error)}
+        found: Problems = {JOURNAL: str(error).rstrip(".")}
     held = salvaged(folder)
     if held is None:
         with_root = zarr.open_group(folder / ZARR, mode="r", use_consolidated=False)
         meta = dict(with_root.attrs.asdict())
         held = Snapshot(meta, _longest(folder, meta), [])
-        found[JOURNAL] += f" The {held.sealed} visits sealed before it are not touched by this."
+        found[JOURNAL] += f". The {held.sealed} visits sealed before it are not touched by this"
     return held, found
 
 
