@@ -64,7 +64,12 @@ def within_range(seen_hz: Any, dead_time_s: float, kind: str) -> Any:
 
 
 def true_counts(
-    values: FloatArray, live_s: FloatArray, values_var: FloatArray, dead_time_s: float, kind: str
+    values: FloatArray,
+    live_s: FloatArray,
+    values_var: FloatArray,
+    dead_time_s: float,
+    kind: str,
+    fano: float = 1.0,
 ) -> tuple[FloatArray, FloatArray]:
     """Return the counts without dead-time losses, and their variance.
 
@@ -74,6 +79,8 @@ def true_counts(
         Recorded counts and live time [s] by visit; rates within range.
     values_var
         Variance of the recorded counts; NaN means a Poisson source behind the dead time.
+    fano
+        Variance of such counts over that of a Poisson source.
 
     Notes
     -----
@@ -90,10 +97,10 @@ def true_counts(
     true = _true(seen, dead_time_s, kind)
     x = true * dead_time_s
     if kind == "non-paralysable":
-        slope, fano = (1 + x) ** 2, (1 + x) ** -2
+        slope, narrowed = (1 + x) ** 2, (1 + x) ** -2
     else:
-        slope, fano = np.exp(x) / (1 - x), 1 - 2 * x * np.exp(-x)
-    spread = np.where(np.isnan(values_var), values * fano, values_var)
+        slope, narrowed = np.exp(x) / (1 - x), 1 - 2 * x * np.exp(-x)
+    spread = np.where(np.isnan(values_var), values * fano * narrowed, values_var)
     return true * live_s, spread * slope**2
 
 

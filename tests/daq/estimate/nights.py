@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import replace
+from dataclasses import asdict, replace
 
 import numpy as np
 import xarray as xr
@@ -101,11 +101,14 @@ def dataset(of: Plan, rows: Sequence[Reading]) -> xr.Dataset:
         "position_mm": np.array([row.position_mm for row in rows]),
         "live_s": np.array([row.live_s for row in rows]),
         "quality": np.array([int(row.quality) for row in rows]),
+        "gate_open_ns": np.array([row.gate_open_ns for row in rows], np.int64),
+        "gate_close_ns": np.array([row.gate_close_ns for row in rows], np.int64),
         "stand": np.where(planned, of.stand[visit], -1),
         "pair": np.where(planned, of.pair[visit], -1),
     }
-    values = np.array([row.values for row in rows]).reshape(len(rows), 1)
-    variances = np.array([row.values_var or [np.nan] * values.shape[1] for row in rows]).reshape(values.shape)
+    channels = len(rows[0].values) if rows else 1
+    values = np.array([row.values for row in rows]).reshape(len(rows), channels)
+    variances = np.array([row.values_var or [np.nan] * channels for row in rows]).reshape(values.shape)
     return xr.Dataset(
         {name: ("row", column) for name, column in columns.items()}
         | {"values": (("row", "channel"), values), "values_var": (("row", "channel"), variances)},
@@ -119,5 +122,9 @@ def dataset(of: Plan, rows: Sequence[Reading]) -> xr.Dataset:
             "dead_time_s": of.dead_time_s,
             "dead_time_kind": of.dead_time_kind,
             "planned_pairs": of.planned_pairs,
+            "counting": of.counting,
+            "fano": of.fano,
+            "monitor_channel": of.monitor,
+            "heralded": None if of.heralded is None else asdict(of.heralded),
         },
     )

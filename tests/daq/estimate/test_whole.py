@@ -13,7 +13,8 @@ from numpy.typing import ArrayLike
 from scipy.stats import t as student
 
 from daq.estimate import Plan, Sums, anytime_multiplier, estimate_run, estimate_sums, kappa
-from daq.estimate.sums import Stands, no_stands, sums_of
+from daq.estimate.sums import sums_of
+from daq.estimate.visits import no_visits
 from daq.openings import names
 from tests.daq.estimate.nights import SLOT_S, dataset, plan, rates_hz, readings
 
@@ -23,15 +24,13 @@ NIGHT = readings(PLAN, np.random.default_rng(1))
 
 def noise_free(of: Plan, level: ArrayLike) -> Sums:
     """Return the sums of a night without counting noise and dead time; `level` of the source by visit."""
-    stands: Stands = no_stands(of)
-    stands.value[of.stand, of.opening] = rates_hz(of.positions_mm)[of.position, of.opening] * np.asarray(
-        level
-    )
-    stands.live[:] = 1.0
-    stands.variance[:] = stands.value
-    stands.used[:] = True
-    stands.done[:] = True
-    return sums_of(stands, of)
+    visits = no_visits(of)
+    visits.value[:] = rates_hz(of.positions_mm)[of.position, of.opening] * np.asarray(level)
+    visits.live[:] = 1.0
+    visits.variance[:] = visits.value
+    visits.used[:] = True
+    visits.done[:] = True
+    return sums_of(visits, of)
 
 
 @settings(max_examples=30)
@@ -246,11 +245,11 @@ def test_the_t_bar_covers_as_it_says_under_a_walking_source() -> None:
     covered, kappas, ses = 0, np.empty(nights), np.empty(nights)
     for night in range(nights):
         walk = np.cumsum(generator.normal(0.0, 0.005 / np.sqrt(8), len(rates)))
-        stands = no_stands(of)
+        visits = no_visits(of)
         counts = generator.poisson(rates * np.exp(walk))
-        stands.value[of.stand, of.opening] = stands.variance[of.stand, of.opening] = counts
-        stands.live[:], stands.used[:], stands.done[:] = 2.2, True, True
-        found = estimate_sums(sums_of(stands, of), of)
+        visits.value[:] = visits.variance[:] = counts
+        visits.live[:], visits.used[:], visits.done[:] = 2.2, True, True
+        found = estimate_sums(sums_of(visits, of), of)
         assert found.interval_95 is not None and found.kappa is not None and found.kappa_se is not None
         covered += found.interval_95[0] <= 0 <= found.interval_95[1]
         kappas[night], ses[night] = found.kappa, found.kappa_se
