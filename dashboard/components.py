@@ -9,6 +9,7 @@ from dash import dcc, html
 
 from dashboard.view import CAUTION
 
+_NEWEST = 4  # lines of the log that stand open beside the verdict
 Part = Mapping[str, Any]
 Children = list[Any]
 STORES = ("night-data", "pattern-data", "plates-data", "strip-data", "seen", "chosen", "look", "marked")
@@ -58,11 +59,11 @@ def _sections() -> Children:
             className="full",
             id="present",
         ),
+        html.Section(id="log", className="full"),
         html.Section(id="rail", className="full"),
         _figure("night", "κ over the night"),
         _figure("pattern", "Pattern and leftover", _numbers()),
         _figure("strip", "Count rate"),
-        html.Section(id="log", className="full"),
         html.Nav(id="runs", **{"aria-label": "Runs of this lab"}),
     ]
 
@@ -204,7 +205,9 @@ def _sensors(part: list[str]) -> Children:
 
 def _log(part: list[Part]) -> Children:
     lines = [html.Li([html.Span(f"{entry['utc']} ", className="soft"), entry["text"]]) for entry in part]
-    return [html.H2("What happened"), html.Ol(lines, className="log")] if lines else []
+    newest, earlier = lines[:_NEWEST], lines[_NEWEST:]
+    more = [html.Details([html.Summary(f"Earlier, {len(earlier)}"), html.Ol(earlier)])] if earlier else []
+    return [html.H2("What happened"), html.Ol(newest), *more] if lines else []
 
 
 def _runs(part: list[Part]) -> Children:

@@ -7,6 +7,8 @@ from collections.abc import Mapping, Sequence
 from datetime import datetime
 from typing import Any
 
+import numpy as np
+
 from daq import openings
 from dashboard.residual import INNER, OUTER, first_band_pair, is_blinded, unit
 from dashboard.words import fixed, spelt
@@ -20,23 +22,26 @@ _FULL = 1000
 def night(feed: Feed) -> dict[str, Any]:
     """Return kappa by pair with both bands, the forecast to the planned end, and how far the axis reaches.
 
-    Values are in the printed unit of kappa, times in hours since the start.
+    Values are in the printed unit of kappa, times in hours since the start. `interval` and `whole` are the
+    half widths of the two bands, which lie evenly about the dot.
     """
     kappa, history = feed["kappa"], feed["history"]
     scale, name = unit(kappa)
     end = _planned_hours(feed)
     if is_blinded(feed):
         return {"unit": name, "end": end, "empty": "κ is hidden while the run is blinded."}
-    curves = {key: _scaled(history[key], scale) for key in _HISTORY}
-    if not curves["kappa"]:
+    if not history["kappa"]:
         return {"unit": name, "end": end, "empty": "The first dot appears when the first pair is complete."}
+    reach = _reach(history, kappa["goal_se"] or 0)
     return {
         "unit": name,
         "end": end,
-        "hours": _rounded(history["hours"], 3),
-        **curves,
+        "hours": _rounded(history["hours"], 1, history["hours"][-1]),
+        "kappa": _rounded(history["kappa"], scale, reach),
+        "interval": _rounded(_half(history, "interval_high"), scale, reach),
+        "whole": _rounded(_half(history, "whole_high"), scale, reach),
         "forecast": _forecast(feed, scale, end),
-        "reach": _reach(curves, (kappa["goal_se"] or 0) / scale),
+        "reach": round(reach / scale, 3),
         "inner": INNER,
         "outer": OUTER,
         "caption": _night_caption(feed),
@@ -60,7 +65,7 @@ def pattern(feed: Feed, chosen: int) -> dict[str, Any]:
     if all(rate is None for rate in rates):
         return said | {"empty": f"{opening} has not been counted yet."}
     scale, word = _rate_unit(rates)
-    said |= {"unit": word, "measured": _scaled(rates, scale, 4)}
+    said |= {"unit": word, "measured": _scaled(rates, scale)}
     if hidden or all(value is None for value in feed["epsilon_hz"]):
         return said | {"alt": _peak_says(opening, feed["positions_mm"], rates)}
     return said | _leftover(feed, opening, rates, scale)
@@ -76,7 +81,7 @@ def plates(feed: Feed) -> dict[str, list[int | None]]:
         row if mask not in hidden else []
         for mask, row in zip(feed["openings"], feed["rates_hz"], strict=True)
     ]
-    top = max((rate for row in rows for rate in row if rate is not None), default=0) or 1
+    top = max((np.nanmax(np.asarray(row, dtype=float), initial=0) for row in rows), default=0) or 1
     return {str(mask): _silhouette(row, top) for mask, row in zip(feed["openings"], rows, strict=True)}
 
 
@@ -85,29 +90,33 @@ def strip(feed: Feed) -> dict[str, Any]:
     rate = feed["rate"]
     if not rate["hours"]:
         return {"empty": "The first column appears after the first stand."}
-    digits = 3 if is_blinded(feed) else 5
     scale, word = _rate_unit(rate["high"])
+    # Blinded, three digits: the sum over the night must not give the hidden opening back.
+    span = max(rate["high"]) if is_blinded(feed) else max(rate["high"]) - min(rate["low"])
     return {
         "unit": word,
-        "hours": _rounded(rate["hours"], 3),
-        "low": _scaled(rate["low"], scale, digits),
-        "mean": _scaled(rate["mean"], scale, digits),
-        "high": _scaled(rate["high"], scale, digits),
+        "hours": _rounded(rate["hours"], 1, rate["hours"][-1]),
+        **{key: _rounded(rate[key], scale, span) for key in ("low", "mean", "high")},
         "tinted": _tinted(feed),
         "caption": "Line: mean. Band: least and most of each stretch of time, so that no dip is lost.",
         "alt": _strip_alt(rate, scale, word),
     }
 
 
-_HISTORY = ("kappa", "interval_low", "interval_high", "whole_low", "whole_high")
-
-
 def _scaled(values: Column, scale: float, digits: int = 4) -> list[float | None]:
     return [None if v is None else float(f"{v / scale:.{digits}g}") for v in values]
 
 
-def _rounded(values: Column, decimals: int) -> list[float | None]:
-    return [None if v is None else round(v, decimals) for v in values]
+def _rounded(values: Column, scale: float, span: float) -> list[float | None]:
+    """Return values in a unit, rounded to a thousandth of what the curve spans, or finer."""
+    decimals = max(0, 3 - math.floor(math.log10(span / scale))) if span > 0 else 3
+    rounded = np.round(np.asarray(values, dtype=float) / scale, decimals)
+    return [None if value != value else value for value in rounded.tolist()]  # NaN is not itself
+
+
+def _half(history: Mapping[str, Column], high: str) -> list[float | None]:
+    ends = zip(history[high], history["kappa"], strict=True)
+    return [None if end is None or dot is None else end - dot for end, dot in ends]
 
 
 def _planned_hours(feed: Feed) -> float | None:
@@ -134,11 +143,12 @@ def _forecast(feed: Feed, scale: float, end: float | None) -> dict[str, Any] | N
     }
 
 
-def _reach(curves: Mapping[str, Column], goal: float) -> float:
-    dots = [abs(v) for v in curves["kappa"] if v is not None]
-    bands = [abs(v) for key in ("whole_low", "whole_high") for v in curves[key] if v is not None]
+def _reach(history: Mapping[str, Column], goal: float) -> float:
+    """Return how far the axis goes: all dots, and three quarters of the outer band, wide as it starts."""
+    dots = [abs(v) for v in history["kappa"] if v is not None]
+    bands = [abs(v) for key in ("whole_low", "whole_high") for v in history[key] if v is not None]
     wide = sorted(bands)[(3 * len(bands)) // 4] if bands else 0.0
-    return round(1.1 * max(*dots, wide, 3 * goal), 3)
+    return 1.1 * max(*dots, wide, 3 * goal)
 
 
 def _night_caption(feed: Feed) -> str:
@@ -170,29 +180,32 @@ def _leftover(feed: Feed, opening: str, rates: Column, scale: float) -> dict[str
     sign = openings.sign(opening, feed["slits"])
     epsilon = [None if e is None else sign * e for e in feed["epsilon_hz"]]
     predicted = [None if r is None or e is None else r - e for r, e in zip(rates, epsilon, strict=True)]
-    said = _leftover_says(feed["positions_mm"], epsilon, feed["epsilon_se_hz"])
+    said = _leftover_says(feed, epsilon)
+    small, word = _rate_unit(epsilon)
     others = spelt(len(feed["openings"]) - 1, "opening").split()[0]
     peak = _peak_says(opening, feed["positions_mm"], rates)
     return {
-        "predicted": _scaled(predicted, scale, 4),
-        "leftover": _scaled(epsilon, 1.0, 3),
-        "leftover_se": _scaled(feed["epsilon_se_hz"], 1.0, 3),
+        "predicted": _scaled(predicted, scale),
+        "leftover_unit": word,
+        "leftover": _scaled(epsilon, small, 3),
+        "leftover_se": _scaled(feed["epsilon_se_hz"], small, 3),
         "caption": f"Line: {opening} as measured. Broad grey line: predicted from the other {others}. "
-        f"Below, what is left over, with one standard error on either side; {said}",
-        "alt": f"{peak} Against the prediction from the other {others}, {said}",
+        f"Below, what is left over, with one standard error on either side. {said}",
+        "alt": f"{peak} Against the prediction from the other {others}: {said}",
     }
 
 
-def _leftover_says(positions: Sequence[float], epsilon: Column, errors: Column) -> str:
-    pulls = [
-        (abs(e) / s, x) for x, e, s in zip(positions, epsilon, errors, strict=True) if e is not None and s
-    ]
+def _leftover_says(feed: Feed, epsilon: Column) -> str:
+    if feed["slits"] == 2:
+        return "With two slits it is the interference itself."
+    rows = zip(feed["positions_mm"], epsilon, feed["epsilon_se_hz"], strict=True)
+    pulls = [(abs(e) / s, x) for x, e, s in rows if e is not None and s]
     if not pulls:
-        return "no error bar is known yet."
+        return "No error bar is known yet."
     inside = sum(pull <= 1 for pull, _ in pulls)
     worst, place = max(pulls)
     return (
-        f"{inside} of {len(pulls)} positions lie within it (two in three by chance), "
+        f"At {inside} of {len(pulls)} positions it is zero within that error (two in three by chance), "
         f"the farthest {fixed(worst, 1)} standard errors off, at {fixed(place, 2, plus=True)} mm."
     )
 
@@ -205,9 +218,11 @@ def _peak_says(opening: str, positions: Sequence[float], rates: Column) -> str:
 
 
 def _silhouette(row: Column, top: float) -> list[int | None]:
-    step = max(1, math.ceil(len(row) / _PLATE_POINTS))
-    chunks = [[v for v in row[i : i + step] if v is not None] for i in range(0, len(row), step)]
-    return [round(_FULL * math.sqrt(max(0.0, *chunk) / top)) if chunk else None for chunk in chunks]
+    rates = np.asarray(row, dtype=float)
+    step = max(1, math.ceil(rates.size / _PLATE_POINTS))
+    most = np.fmax.reduceat(rates, np.arange(0, rates.size, step)) if rates.size else rates
+    heights = _FULL * np.sqrt(np.maximum(most, 0) / top)
+    return [None if height != height else round(height) for height in heights.tolist()]
 
 
 def _tinted(feed: Feed) -> list[float]:

@@ -10,6 +10,25 @@ from daq.errors import StorageError
 from daq.storage.feed import FEED, read_feed
 from daq.storage.lab import runs
 
+_KEYS = {
+    *(
+        "run",
+        "title",
+        "state",
+        "kind",
+        "clock",
+        "slits",
+        "blinding",
+        "ended",
+        "visit",
+        "kappa",
+        "history",
+        "rate",
+    ),
+    *("started_utc", "run_s", "updated_utc", "written_utc", "ends_utc", "sensors", "warnings", "log"),
+    *("positions_mm", "openings", "rates_hz", "epsilon_hz", "epsilon_se_hz"),
+}
+
 
 def run_names(lab: Path) -> list[str]:
     """Return the names of all runs that have a feed, the one written last at the end.
@@ -34,15 +53,21 @@ def read(lab: Path, run: str, stamp: str) -> dict[str, Any]:
     StorageError
         For a feed that is not JSON, or of another format.
     """
-    path = lab / "runs" / run / FEED
-    feed = read_feed(path.parent)
-    if feed is None:
-        raise StorageError("the feed cannot be read", where=str(path), remedy="Look at the run's log")
-    if feed.get("format") != 1:
-        raise StorageError(
-            "the feed has another format", where=str(path), remedy="Use the program that wrote it"
-        )
+    folder = lab / "runs" / run
+    feed = read_feed(folder)
+    wrong = _wrong(feed)
+    if wrong or feed is None:
+        raise StorageError(wrong, where=str(folder / FEED), remedy="Look at the log of the run")
     return feed
+
+
+def _wrong(feed: Any) -> str:
+    if not isinstance(feed, dict):
+        return "the feed cannot be read"
+    if feed.get("format") != 1:
+        return "the feed has a format that this page does not know"
+    missing = sorted(_KEYS - set(feed))
+    return f"the feed lacks {', '.join(missing)}" if missing else ""
 
 
 def _written_ns(folder: Path) -> int:

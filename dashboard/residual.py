@@ -21,7 +21,7 @@ def residual_view(feed: Feed) -> dict[str, Any]:
     """Return everything the page says about kappa; nothing of its value while the run is blinded."""
     kappa = feed["kappa"]
     said: dict[str, Any] = {
-        "heading": f"{_ORDINALS[feed['slits']]}-order residual, κ",
+        "heading": f"{_ORDINALS[feed['slits']]}-order {'residual' if feed['slits'] > 2 else 'term'}, κ",
         "figure": None,
         "se": None,
         "bands": [],
@@ -31,7 +31,7 @@ def residual_view(feed: Feed) -> dict[str, Any]:
         return said | {
             "short": "Hidden",
             "se": _bar(kappa),
-            "unit": _after(kappa, unit(kappa)[1]),
+            "unit": _after(kappa, f"{unit(kappa)[1]}, one standard error"),
             "says": ["κ is hidden: this run is blinded.", *_goal_says(feed)],
         }
     if kappa["pairs"] < 2 or kappa["value"] is None:
@@ -120,7 +120,7 @@ def _figure(feed: Feed) -> dict[str, Any]:
         "short": None,
         "figure": fixed(kappa["value"] / scale, decimals, plus=True),
         "se": _bar(kappa),
-        "unit": _after(kappa, name),
+        "unit": _after(kappa, f"{name} ± one standard error"),
         "bands": _bands(feed, scale, decimals),
         "says": [*says, *_truth_says(feed, scale, name, decimals)],
     }

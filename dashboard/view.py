@@ -37,7 +37,7 @@ def view(feed: Feed, silent: bool) -> dict[str, Any]:
     return {
         "header": {"title": feed["title"], "run": feed["run"], "kind": _kind(feed)},
         "verdict": _verdict(feed, silent),
-        "warnings": _warnings(feed),
+        "warnings": _warnings(feed, silent),
         "kappa": residual_view(feed),
         "rail": _rail(feed),
         "now": _now(feed, silent),
@@ -195,11 +195,12 @@ def _stopped(sentence: str) -> str:
     return sentence if sentence.endswith((".", "!", "?")) else f"{sentence}."
 
 
-def _warnings(feed: Feed) -> dict[str, Any]:
+def _warnings(feed: Feed, silent: bool) -> dict[str, Any]:
     items, since = feed["warnings"], clock(feed["started_utc"])
+    until = f" up to the last news at {clock(feed['written_utc'])}" if silent else ""
     return {
         "heading": "To look at" if items else "Warnings",
-        "none": None if items else f"None since the start at {since}.",
+        "none": None if items else f"None since the start at {since}{until}.",
         "items": [_warning(feed, warning) for warning in items],
     }
 
@@ -239,13 +240,9 @@ def _group(feed: Feed, number: int) -> dict[str, Any]:
 
 
 def _now(feed: Feed, silent: bool) -> dict[str, Any]:
-    visit, state = feed["visit"], feed["state"]
-    going = state in ("moving", "counting") and not feed["ended"] and not silent
-    doing = (
-        f"{state.capitalize()}; {duration(feed['run_s'])} into the run."
-        if going
-        else "Nothing is being counted."
-    )
+    visit = feed["visit"]
+    going = feed["state"] in ("moving", "counting") and not feed["ended"] and not silent
+    doing = _doing(feed, going, silent)
     if visit is None:
         return {"mask": None, "says": doing}
     again = f", attempt {visit['attempt']}" if visit["attempt"] > 1 else ""
@@ -254,6 +251,14 @@ def _now(feed: Feed, silent: bool) -> dict[str, Any]:
         "mask": visit["opening"] if going else None,
         "says": f"{doing} Latest visit: {_through(visit['opening'])} {place}{again}.",
     }
+
+
+def _doing(feed: Feed, going: bool, silent: bool) -> str:
+    if silent:
+        return "Not known."
+    if not going:
+        return "Nothing is being counted."
+    return f"{_capital(feed['state'])}; {duration(feed['run_s'])} into the run."
 
 
 def _through(mask: int) -> str:

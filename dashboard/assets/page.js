@@ -81,7 +81,7 @@
   const narrow = () => innerWidth < 600;
   const axis = (more) => ({
     showgrid: false, zeroline: false, showline: true, ticks: "outside", ticklen: 4, fixedrange: true,
-    color: colour("soft"), linecolor: colour("edge"), tickcolor: colour("edge"), ...more,
+    color: colour("soft"), linecolor: colour("edge"), tickcolor: colour("edge"), exponentformat: "none", separatethousands: true, ...more,
   });
   const words = (text, more) => ({
     text, showarrow: false, xref: "paper", yref: "paper", font: { size: 14, color: colour("soft") }, ...more,
@@ -91,7 +91,7 @@
   const layout = (more) => ({
     margin: { l: 48, r: 14, t: 30, b: 46 }, paper_bgcolor: "rgba(0,0,0,0)", plot_bgcolor: "rgba(0,0,0,0)",
     font: { family: getComputedStyle(document.body).fontFamily, size: 14, color: colour("soft") },
-    showlegend: false, hovermode: false, ...more,
+    showlegend: false, hovermode: false, separators: ".\u202f", ...more,
   });
   const line = (x, y, name, width, more) =>
     ({ type: "scatter", mode: "lines", x, y, line: { color: colour(name), width, ...more } });
@@ -117,7 +117,7 @@
   const funnel = (d) => {
     const last = d.kappa.length - 1;
     const [now, value] = [d.hours[last], d.kappa[last]];
-    const half = (d.interval_high[last] - d.interval_low[last]) / 2;
+    const half = d.interval[last];
     const steps = [...Array(21).keys()].map((i) => now + ((d.end - now) * i) / 20);
     const share = (t) => (1 / Math.sqrt(t) - 1 / Math.sqrt(now)) / (1 / Math.sqrt(d.end) - 1 / Math.sqrt(now));
     const at = (t) => half + (d.forecast.half - half) * share(t);
@@ -133,18 +133,21 @@
   const bars = (d) => {
     const last = d.kappa.length - 1;
     const dot = { type: "scatter", mode: "markers", x: [d.hours[last]], y: [d.kappa[last]] };
-    const bar = (high, name, thickness) => ({
+    const bar = (half, name, thickness) => ({
       ...dot, marker: { size: 1, color: colour(name) },
-      error_y: { type: "data", array: [high[last] - d.kappa[last]], color: colour(name), thickness, width: 0 },
+      error_y: { type: "data", array: [half[last]], color: colour(name), thickness, width: 0 },
     });
-    const known = d.whole_high[last] !== null;
-    const drawn = known ? [bar(d.whole_high, "outer", 10), bar(d.interval_high, "kappa", 4)] : [];
+    const known = d.whole[last] !== null;
+    const drawn = known ? [bar(d.whole, "outer", 10), bar(d.interval, "kappa", 4)] : [];
     const marker = { size: 12, color: colour("kappa"), line: { color: colour("ground"), width: 2 } };
     return [...drawn, { ...dot, marker, name: "now" }];
   };
   const night = (d) => {
-    const inner = d.interval_low.map((v, i) => (d.whole_low[i] === null ? null : v));
-    const traces = [band(d.hours, d.whole_low, d.whole_high, "outer"), band(d.hours, inner, d.interval_high, "inner")];
+    const about = (half, fill) => {
+      const end = (side) => d.kappa.map((value, i) => (d.whole[i] === null ? null : value + side * half[i]));
+      return band(d.hours, end(-1), end(1), fill);
+    };
+    const traces = [about(d.whole, "outer"), about(d.interval, "inner")];
     const dots = { size: d.kappa.length > 60 ? 3 : 6, color: colour("kappa") };
     traces.push({ type: "scatter", mode: "markers", x: d.hours, y: d.kappa, marker: dots, name: "dots" });
     const notes = [above(`κ, ${d.unit}`), below("hours since the start")];
@@ -193,7 +196,7 @@
         xaxis: axis({ anchor: "y2", nticks: narrow() ? 5 : 9 }),
         yaxis: axis({ domain: [0.44, 1], rangemode: "tozero", nticks: 6 }), yaxis2: axis({ domain: [0, 0.33], nticks: 5 }),
         shapes: [zero("y2")],
-        annotations: [above(d.unit), above("left over, counts per second", 0.33), below("detector position, mm")],
+        annotations: [above(d.unit), above(`left over, ${d.leftover_unit}`, 0.33), below("detector position, mm")],
       }),
     };
   };
@@ -238,7 +241,7 @@
       }
     };
     const full = Boolean(d.leftover);
-    row(["position, mm", `${d.name}, ${d.unit}`, ...(full ? ["predicted", "left over, 1/s", "its error, 1/s"] : [])], "th");
+    row(["position, mm", `${d.name}, ${d.unit}`, ...(full ? ["predicted", `left over, ${d.leftover_unit}`, "its error"] : [])], "th");
     (d.measured ?? []).forEach((value, i) => row(
       [d.positions[i], value, ...(full ? [d.predicted[i], d.leftover[i], d.leftover_se[i]] : [])], "td"));
     return made;

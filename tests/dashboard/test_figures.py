@@ -32,6 +32,7 @@ def test_the_prediction_of_an_opening_is_made_from_all_the_others(slits: int, in
 def test_what_is_left_over_is_measured_less_predicted() -> None:
     shown = pattern(feed(), 3)
 
+    assert shown["leftover_unit"] == "counts per second"
     difference = (np.array(shown["measured"]) - np.array(shown["predicted"])) * 1000
     assert difference == pytest.approx(np.array(shown["leftover"]), abs=150)  # 4 digits of 2e5 are 1e2 apart
 
@@ -45,8 +46,21 @@ def test_the_pattern_s_sentence_says_where_it_is_highest_and_how_far_off() -> No
     shown = pattern(content, 7)
 
     assert shown["alt"].startswith("Pattern of ABC: highest at 0.00 mm with ")
-    assert "40 of 41 positions lie within it" in shown["alt"]
+    assert "At 40 of 41 positions it is zero within that error" in shown["alt"]
     assert "the farthest 3.2 standard errors off, at +6.40 mm" in shown["alt"]
+
+
+def test_a_great_leftover_is_drawn_in_thousands() -> None:
+    content = feed(slits=2)
+
+    shown = pattern(content, 3)
+
+    assert shown["leftover_unit"] == "thousand counts per second"
+    assert shown["leftover"][20] == pytest.approx(content["epsilon_hz"][20] / 1000, rel=6e-3)
+
+
+def test_for_two_slits_the_leftover_is_called_the_interference() -> None:
+    assert pattern(feed(slits=2), 3)["alt"].endswith("With two slits it is the interference itself.")
 
 
 def test_an_opening_that_was_not_counted_says_so() -> None:
@@ -78,11 +92,19 @@ def test_plates_stay_small_at_any_number_of_positions() -> None:
 
 
 def test_the_night_holds_both_bands_from_their_first_pair() -> None:
+    history = feed()["history"]
+
     shown = night(feed())
 
-    assert [value is None for value in shown["whole_low"]] == [True] * 5 + [False] * 7
+    assert [value is None for value in shown["whole"]] == [True] * 5 + [False] * 7
     assert shown["unit"] == "ten-thousandths (10⁻⁴)"
-    assert shown["kappa"] == pytest.approx([1e4 * v for v in feed()["history"]["kappa"]], rel=6e-4)
+    fine = 1e-3 * shown["reach"]
+    assert shown["kappa"] == pytest.approx([1e4 * v for v in history["kappa"]], abs=fine)
+    low = [dot - half for dot, half in zip(shown["kappa"][5:], shown["whole"][5:], strict=True)]
+    assert low == pytest.approx([1e4 * v for v in history["whole_low"][5:]], abs=2 * fine)
+    assert shown["interval"][-1] * 2 == pytest.approx(
+        1e4 * (history["interval_high"][-1] - history["interval_low"][-1]), abs=2 * fine
+    )
 
 
 def test_no_forecast_is_drawn_before_there_is_a_band() -> None:

@@ -43,12 +43,20 @@ def test_the_figure_carries_two_digits_of_its_error_bar() -> None:
     shown = said()
 
     assert (shown["figure"], shown["se"]) == ("−0.7", "1.2")
-    assert shown["unit"] == "ten-thousandths (10⁻⁴), after 12 of 19 pairs"
+    assert shown["unit"] == "ten-thousandths (10⁻⁴) ± one standard error, after 12 of 19 pairs"
 
 
-@pytest.mark.parametrize(("slits", "heading"), [(2, "Second"), (3, "Third"), (4, "Fourth"), (5, "Fifth")])
+@pytest.mark.parametrize(
+    ("slits", "heading"),
+    [
+        (2, "Second-order term"),
+        (3, "Third-order residual"),
+        (4, "Fourth-order residual"),
+        (5, "Fifth-order residual"),
+    ],
+)
 def test_the_order_follows_the_number_of_slits(slits: int, heading: str) -> None:
-    assert residual_view(feed(slits=slits))["heading"] == f"{heading}-order residual, κ"
+    assert residual_view(feed(slits=slits))["heading"] == f"{heading}, κ"
 
 
 def test_the_unit_stays_that_of_the_goal_all_night() -> None:

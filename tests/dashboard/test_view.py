@@ -121,6 +121,13 @@ def test_a_warning_says_what_happened_what_to_do_and_whether_kappa_is_good() -> 
     assert said["since"] == "Since 00:12 UTC."
 
 
+def test_a_silent_run_claims_nothing_after_its_last_news() -> None:
+    said = view(feed(written_utc="2026-12-02T02:10:00.250+00:00"), silent=True)
+
+    assert said["warnings"]["none"] == "None since the start at 20:15 UTC up to the last news at 02:10 UTC."
+    assert said["now"]["says"].startswith("Not known.")
+
+
 def test_without_warnings_the_page_says_since_when() -> None:
     assert view(feed(), silent=False)["warnings"]["none"] == "None since the start at 20:15 UTC."
 
