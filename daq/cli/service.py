@@ -11,8 +11,11 @@ from datetime import UTC, datetime
 from daq.cli.answer import Answer
 from daq.cli.night import interrupts, show_page
 from daq.cli.plan import wishes
+from daq.service.arming import checks, confirm
 from daq.service.bookings import Booking, bookings, cancel
 from daq.service.bookings import book as booked
+from daq.service.load import load
+from daq.service.mail import settings_of
 from daq.service.serve import serve as served
 from daq.storage.lab_book import select
 
@@ -25,6 +28,32 @@ def serve(arguments: argparse.Namespace) -> Answer:
         asked = stack.enter_context(interrupts())
         started = served(arguments.lab, asked)
     return Answer(0, {"started": started}, [f"{started} runs were started"])
+
+
+def arm(arguments: argparse.Namespace) -> Answer:
+    """Check everything, ask the cautions one by one, and arm one start within 24 hours."""
+    loaded = load(arguments.file)
+    if loaded.rig.simulated:
+        text = "Every device of this rig is simulated: it needs no arming."
+        return Answer(0, {"ok": True, "armed": False, "problems": []}, [text])
+    mail = settings_of(arguments.lab).mail
+    found = checks(loaded, arguments.lab, mail)
+    for one in found:
+        print(f"{'ok ' if one.ok else 'NOT'}  {one.what}: {one.seen}", file=sys.stderr)
+    problems = [f"{one.what}: {one.seen}" for one in found if not one.ok]
+    if not problems and mail is not None:
+        reason = confirm(loaded, arguments.lab, mail, arguments.by or getpass.getuser(), _typed)
+        problems = [reason] if reason else []
+    if problems:
+        return Answer(1, {"ok": False, "armed": False, "problems": problems}, ["Not armed.", *problems])
+    armed = "Armed for one start within 24 hours. This is no safety function."
+    return Answer(0, {"ok": True, "armed": True, "problems": []}, [armed])
+
+
+def _typed(question: str) -> str:
+    """Return what a person types; there is no switch that answers instead."""
+    print(question, end="", file=sys.stderr, flush=True)
+    return sys.stdin.readline().rstrip("\n")
 
 
 def book(arguments: argparse.Namespace) -> Answer:

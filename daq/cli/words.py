@@ -99,9 +99,13 @@ def _service_words(commands: Any) -> None:
     book = _add(commands, "book", "service:book", start, example)
     became = "list bookings and what became of them"
     listing = _add(commands, "bookings", "service:list_bookings", became, "tercet bookings lab")
-    for one in (serve, book, listing):
+    checked = "check everything, ask the cautions, and arm one unattended start"
+    arm = _add(commands, "arm", "service:arm", checked, "tercet arm lab lantern.toml")
+    for one in (serve, book, listing, arm):
         one.add_argument("lab", type=Path, metavar="LAB", help="the lab folder")
     _booking_words(book)
+    arm.add_argument("file", type=Path, metavar="FILE", help="a measurement (TOML)")
+    arm.add_argument("--by", metavar="NAME", help="who arms (your login name)")
     listing.add_argument("--cancel", type=int, metavar="N", help="cancel booking N")
 
 

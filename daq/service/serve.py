@@ -10,10 +10,12 @@ from pathlib import Path
 from apscheduler.schedulers.background import BackgroundScheduler
 
 from daq.errors import DaqError
+from daq.service.arming import use_arming
 from daq.service.asked import Asked
 from daq.service.bookings import Booking, bookings, dealt_with, end_of, note_start
 from daq.service.calendar import missed, starts
 from daq.service.load import load
+from daq.service.mail import post, send_what_waits, settings_of
 from daq.service.night import COMPLETE
 from daq.service.owner import owned
 from daq.service.start import Wanted, begin, resume
@@ -23,6 +25,7 @@ from daq.storage.reader import read_meta
 log = logging.getLogger(__name__)
 
 LOOK_EVERY_S = 2.0
+SEND_EVERY_S = 10.0
 Due = tuple[Booking, datetime]
 
 
@@ -43,12 +46,14 @@ def serve(lab: Path, asked: Asked) -> int:
         scheduler.add_job(
             _look, "interval", seconds=LOOK_EVERY_S, args=(lab, scheduler, due), max_instances=1
         )
+        scheduler.add_job(_send, "interval", seconds=SEND_EVERY_S, args=(lab,))
         scheduler.start()
         try:
             _look(lab, scheduler, due)
             return _start_what_is_due(lab, asked, due)
         finally:
-            scheduler.shutdown(wait=False)
+            scheduler.shutdown(wait=True)
+            _send(lab)
 
 
 def _start_what_is_due(lab: Path, asked: Asked, due: queue.Queue[Due]) -> int:
@@ -67,20 +72,33 @@ def _start(lab: Path, asked: Asked, booking: Booking, due: datetime) -> bool:
     """Start a booked run, or say why not; return whether it was started."""
     reason = _refusal(booking, due)
     if reason:
-        note_start(lab, booking, due, f"skipped: {reason}")
-        log.warning("booking %d skipped: %s", booking.number, reason)
+        _tell(lab, booking, due, f"skipped: {reason}")
         return False
     try:
         loaded = load(booking.file, booking.wishes)
+        unarmed = use_arming(loaded, lab)
+        if unarmed:
+            _tell(lab, booking, due, f"skipped: {unarmed}")
+            return False
         transport = "tcp" if loaded.rig.simulated else ""
         until = end_of(booking, datetime.now(UTC))
         folder, ended = begin(loaded, lab, Wanted(transport, asked=asked, until=until))
     except DaqError as error:
-        note_start(lab, booking, due, f"failed: {error}")
-        log.error("booking %d: %s", booking.number, error)
+        _tell(lab, booking, due, f"failed: {error}")
         return True
-    note_start(lab, booking, due, ended, folder.name)
+    _tell(lab, booking, due, ended, folder.name)
     return True
+
+
+def _tell(lab: Path, booking: Booking, due: datetime, outcome: str, run: str | None = None) -> None:
+    """Write down what became of a start, and leave a message for people."""
+    note_start(lab, booking, due, outcome, run)
+    post(
+        lab,
+        "start",
+        f"{booking.file.stem}: {outcome}",
+        f"Booking {booking.number}, due {due}: {outcome}. {run or ''}",
+    )
 
 
 def _refusal(booking: Booking, due: datetime) -> str:
@@ -88,6 +106,14 @@ def _refusal(booking: Booking, due: datetime) -> str:
     if missed(booking.times, due, datetime.now(UTC)):
         return f"more than {booking.times.late_s:g} s late"
     return ""
+
+
+def _send(lab: Path) -> None:
+    """Send the messages that wait; what is wrong with the settings goes to the log, and nothing is lost."""
+    try:
+        send_what_waits(lab, settings_of(lab).mail)
+    except DaqError as error:
+        log.error("%s", error)
 
 
 def _look(lab: Path, scheduler: BackgroundScheduler, due: queue.Queue[Due]) -> None:

@@ -1,0 +1,164 @@
+"""Arming: checks, cautions and a typed confirmation before a run may start with nobody present."""
+
+from __future__ import annotations
+
+import secrets
+import shutil
+from collections.abc import Callable, Iterator
+from dataclasses import dataclass
+from datetime import UTC, datetime, timedelta
+from hashlib import sha256
+from pathlib import Path
+
+from daq.description import Measurement
+from daq.devices.clock import RealClock
+from daq.devices.registry import open_devices
+from daq.errors import DaqError
+from daq.ports import Devices
+from daq.service.load import NO_WISHES, Loaded, load_run
+from daq.service.mail import Mail, post, send_what_waits
+from daq.service.requests import utc_now
+from daq.storage.lab import runs
+from daq.storage.lab_book import insert, select, update
+from daq.storage.reader import read_meta
+
+VALID_H = 24
+BYTES_A_VISIT = 2_000  # generous: a visit of counts takes about 300 bytes, journal and Zarr together
+EARLIEST = datetime(2026, 1, 1, tzinfo=UTC)  # a clock before this was never set
+
+CAUTIONS = (
+    "Emergency stop and interlocks are tested as local rules demand, and work without this computer.",
+    "Nobody will be near the moving parts; warning signs and lamps are on.",
+    "You have seen limits and parking positions with your own eyes during a dry lap.",
+    "Detector bias, source and vacuum are left in a state that your rules allow unattended.",
+    "The on-call person knows, has read the test message, and may enter.",
+    "Local permission for unattended running exists.",
+)
+
+
+@dataclass(frozen=True, slots=True)
+class Check:
+    """What was checked, whether it is in order, and what was seen."""
+
+    what: str
+    ok: bool
+    seen: str
+
+
+def checks(loaded: Loaded, lab: Path, mail: Mail | None) -> list[Check]:
+    """Return the checks that need no person, all of them, also when one fails."""
+    return [
+        *_device_checks(loaded),
+        _disk(lab, len(loaded.itinerary())),
+        _clock(datetime.now(UTC)),
+        _rehearsed(loaded, lab),
+        Check(
+            "messages",
+            mail is not None,
+            f"mail to {', '.join(mail.to)}" if mail else "lab.toml has no [mail]",
+        ),
+    ]
+
+
+def confirm(loaded: Loaded, lab: Path, mail: Mail, who: str, answer: Callable[[str], str]) -> str | None:
+    """Ask the cautions one by one, the code of a test message and the run's name; arm when all are given.
+
+    Returns why it did not arm, or None when it did.
+    """
+    for number, caution in enumerate(CAUTIONS, 1):
+        if answer(f"{number}. {caution} Type yes: ").strip().lower() != "yes":
+            return f"caution {number} was not confirmed"
+    code = secrets.token_hex(3)
+    post(lab, "test", "tercet test message", f"The code is {code}. Type it at the bench.")
+    send_what_waits(lab, mail)
+    if answer("Code of the test message: ").strip() != code:
+        return "the code is not the one that was sent"
+    if (
+        answer(f"Type the name of the measurement ({loaded.measurement.name}) to arm: ")
+        != loaded.measurement.name
+    ):
+        return "the name is not that of the measurement"
+    expires = datetime.now(UTC) + timedelta(hours=VALID_H)
+    row = {"sha256": digest_of(loaded), "who": who, "utc": utc_now(), "expires_utc": expires.isoformat()}
+    insert(lab, "armings", file=loaded.measurement.name, **row)
+    return None
+
+
+def use_arming(loaded: Loaded, lab: Path) -> str:
+    """Use up the arming of one start and return nothing, or return why the start may not be made."""
+    if loaded.rig.simulated:
+        return ""
+    now = datetime.now(UTC)
+    unused = select(lab, "armings", "sha256 = ? AND used_utc IS NULL", (digest_of(loaded),))
+    valid = [row for row in unused if datetime.fromisoformat(row["expires_utc"]) > now]
+    if not valid:
+        return "nobody has armed this description within 24 hours"
+    update(lab, "armings", valid[0]["id"], used_utc=utc_now())
+    return ""
+
+
+def digest_of(loaded: Loaded) -> str:
+    """Return one SHA-256 over the description's files, so that a changed file is not armed any more."""
+    whole = sha256()
+    for name in sorted(loaded.texts):
+        whole.update(name.encode() + b"\0" + loaded.texts[name] + b"\0")
+    return whole.hexdigest()
+
+
+def _device_checks(loaded: Loaded) -> Iterator[Check]:
+    try:
+        with open_devices(loaded.rig, RealClock()) as devices:
+            yield Check("identities", True, "; ".join(device.identity() for device in devices.all))
+            yield from _axis_checks(devices)
+            yield from _sensor_checks(devices)
+    except DaqError as error:
+        yield Check("devices", False, str(error))
+
+
+def _axis_checks(devices: Devices) -> Iterator[Check]:
+    for stage in devices.stages:
+        state = stage.state()
+        low_mm, high_mm = stage.limits_mm
+        sound = state.homed and low_mm <= state.encoder_mm <= high_mm and not state.alarm
+        place = f"at {state.encoder_mm:g} mm of {low_mm:g} .. {high_mm:g}"
+        seen = ", ".join(filter(None, ("homed" if state.homed else "not homed", place, state.alarm)))
+        yield Check(f"axis {stage.name}", sound, seen)
+
+
+def _sensor_checks(devices: Devices) -> Iterator[Check]:
+    for sensor in devices.sensors:
+        values = ", ".join(f"{key} {value:g} {unit}" for key, (value, unit) in sensor.read().items())
+        yield Check(f"sensor {sensor.name}", bool(values), values or "no value")
+
+
+def _disk(lab: Path, visits: int) -> Check:
+    free = shutil.disk_usage(lab if lab.exists() else lab.parent).free
+    needed = visits * BYTES_A_VISIT + 10**9
+    return Check(
+        "disk", free > needed, f"{free / 1e9:.1f} GB free, {needed / 1e9:.1f} GB wanted for the night"
+    )
+
+
+def _clock(now: datetime) -> Check:
+    return Check("clock", now > EARLIEST, f"{now:%Y-%m-%d %H:%M} UTC")
+
+
+def _messages(mail: Mail | None) -> Check:
+    seen = "lab.toml has no [mail]" if mail is None else f"mail to {', '.join(mail.to)}"
+    return Check("messages", mail is not None, seen)
+
+
+def _rehearsed(loaded: Loaded, lab: Path) -> Check:
+    """Return whether this very measurement, on whatever rig, was rehearsed to its end in this lab."""
+    mine = _without_rig(loaded)
+    for folder in reversed(runs(lab)):
+        meta = read_meta(folder)
+        if meta["kind"] != "rehearsal" or not meta.get("finished"):
+            continue
+        if _without_rig(load_run(folder, NO_WISHES)) == mine:
+            return Check("rehearsal", True, f"rehearsed as {folder.name}")
+    return Check("rehearsal", False, "this description was not rehearsed in this lab, or was changed since")
+
+
+def _without_rig(loaded: Loaded) -> Measurement:
+    return loaded.measurement.model_copy(update={"rig": ""})

@@ -1,0 +1,93 @@
+"""Arming, on a rig that the program takes for real: its instruments are served on real ports in this process."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from pathlib import Path
+
+import pytest
+
+from daq.service.arming import CAUTIONS, checks, confirm, use_arming
+from daq.service.load import Loaded, load
+from daq.service.mail import Mail
+from daq.storage.lab_book import select, update
+from tests.examples import CONFIGS
+
+MAIL = Mail(host="127.0.0.1", port=1, sender="bench@lab.example", to=("watch@lab.example",), tls=False)
+
+
+@pytest.fixture
+def real(tmp_path: Path) -> Loaded:
+    """Return the Lantern measurement on a rig without a bench: nobody can take it for simulated."""
+    (tmp_path / "rigs").mkdir()
+    rig = (CONFIGS / "rigs" / "lantern.toml").read_text()
+    (tmp_path / "rigs" / "lantern.toml").write_text(rig[: rig.index("\n[bench]")])
+    (tmp_path / "lantern.toml").write_text((CONFIGS / "lantern.toml").read_text())
+    return load(tmp_path / "lantern.toml")
+
+
+def a_person(lab: Path, **wrong: str) -> Callable[[str], str]:
+    """Return somebody who answers everything rightly but what is given as wrong."""
+
+    def answers(question: str) -> str:
+        if "Type yes" in question:
+            return wrong.get("caution", "yes")
+        if "Code" in question:
+            (message,) = select(lab, "messages")
+            return wrong.get("code", message["body"].split()[3].rstrip("."))
+        return wrong.get("name", "lantern")
+
+    return answers
+
+
+def test_every_caution_is_asked_and_the_arming_holds_for_one_start(real, tmp_path):
+    asked: list[str] = []
+    person = a_person(tmp_path)
+
+    refused = confirm(real, tmp_path, MAIL, "night watch", lambda text: asked.append(text) or person(text))
+
+    assert refused is None
+    assert sum("Type yes" in text for text in asked) == len(CAUTIONS)
+    assert use_arming(real, tmp_path) == ""
+    assert "nobody has armed" in use_arming(real, tmp_path)
+
+
+@pytest.mark.parametrize(
+    ("wrong", "words"),
+    [({"caution": "y"}, "caution 1"), ({"code": "000000"}, "the code"), ({"name": "Lantern"}, "the name")],
+)
+def test_one_wrong_answer_does_not_arm(real, tmp_path, wrong, words):
+    refused = confirm(real, tmp_path, MAIL, "night watch", a_person(tmp_path, **wrong))
+
+    assert refused is not None
+    assert words in refused
+    assert "nobody has armed" in use_arming(real, tmp_path)
+
+
+def test_an_arming_expires(real, tmp_path):
+    confirm(real, tmp_path, MAIL, "night watch", a_person(tmp_path))
+    update(tmp_path, "armings", 1, expires_utc="2026-01-01T00:00:00+00:00")
+
+    assert "nobody has armed" in use_arming(real, tmp_path)
+
+
+def test_a_changed_description_is_not_armed(real, tmp_path):
+    confirm(real, tmp_path, MAIL, "night watch", a_person(tmp_path))
+    changed = (tmp_path / "lantern.toml").read_text().replace("dwell_s = 2.2", "dwell_s = 2.3")
+    (tmp_path / "lantern.toml").write_text(changed)
+
+    assert "nobody has armed" in use_arming(load(tmp_path / "lantern.toml"), tmp_path)
+
+
+def test_a_rig_of_simulated_devices_needs_no_arming(tmp_path):
+    assert use_arming(load(CONFIGS / "lantern.toml"), tmp_path) == ""
+
+
+def test_checks_name_what_is_not_in_order(real, tmp_path):
+    found = {one.what: one for one in checks(real, tmp_path, None)}
+
+    assert not found["devices"].ok
+    assert "nobody answers" in found["devices"].seen
+    assert not found["messages"].ok
+    assert not found["rehearsal"].ok
+    assert found["clock"].ok
