@@ -26,7 +26,7 @@ from daq.storage.layout import EVENTS
 from daq.storage.reader import open_visits
 from daq.storage.seal import open_array, open_root, write_rows
 from daq.storage.snapshot import JOURNAL, connect
-from daq.storage.trouble import LIBRARY_ERRORS, stored
+from daq.storage.trouble import LIBRARY_ERRORS, rim, stored
 
 GROW = 64  # chunks by which the array grows at once: each growth rewrites its metadata
 _CODEC = Blosc(cname="lz4", clevel=5, shuffle=Blosc.BITSHUFFLE)
@@ -53,11 +53,13 @@ class Events:
 
     def __init__(self, folder: Path, meta: Mapping[str, Any], disk: Disk) -> None:
         mode = meta["list_mode"]
-        self._folder, self._disk = folder, disk
-        self._kind, self._chunk = np.dtype(mode["kind"]), int(mode["chunk"])
+        self._where, self._root = folder / EVENTS, open_root(folder, disk)
+        self._chunk = int(mode["chunk"])
         self._sealed, pieces = _kept(folder)
-        kept = (gaps for row in sorted(pieces) for gaps in pieces[row])
-        self._tail = np.concatenate([np.empty(0, self._kind), *kept])
+        kept = [gaps for row in sorted(pieces) for gaps in pieces[row]]
+        self._gaps = np.empty(self._chunk, mode["kind"])  # the started chunk, and room for what comes
+        self._filled = sum(map(len, kept))
+        self._gaps[: self._filled] = np.concatenate([self._gaps[:0], *kept])
         self._waiting: list[bytes] = []
 
     def add(self, chunk: bytes) -> None:
@@ -76,45 +78,54 @@ class Events:
         StorageError
             For times that do not ascend or do not fit, or a full disk; nothing has changed then.
         """
-        gaps = self._gaps(np.frombuffer(b"".join(self._waiting), "<u8"))
-        whole = (len(self._tail) + len(gaps)) // self._chunk * self._chunk
-        first = self._sealed + len(self._tail)
-        if not whole:
-            return Piece(first, len(gaps), self._sealed, gaps, False)
-        ready = np.concatenate([self._tail, gaps])
-        self._put(ready[:whole])
-        return Piece(first, len(gaps), self._sealed + whole, ready[whole:], True)
+        ticks = np.frombuffer(self._waiting[0] if len(self._waiting) == 1 else b"".join(self._waiting), "<u8")
+        start, stop = self._filled, self._filled + len(ticks)
+        self._make_room(stop)
+        self._differences(ticks, self._gaps[start:stop])
+        whole = stop // self._chunk * self._chunk
+        if whole:
+            self._put(self._gaps[:whole], grow=GROW * self._chunk)
+        rest = self._gaps[whole or start : stop]
+        return Piece(self._sealed + start, len(ticks), self._sealed + whole, rest, whole > 0)
 
     def written(self, piece: Piece) -> None:
         """Take note that the transaction of a piece is durable."""
         self._sealed = piece.sealed
-        self._tail = piece.rest if piece.moved else np.concatenate([self._tail, piece.rest])
+        if piece.moved:
+            self._filled = len(piece.rest)
+            self._gaps[: self._filled] = piece.rest
+        else:
+            self._filled += len(piece.rest)
 
     def finish(self) -> None:
         """Write the started chunk and give the array its true length; the journal keeps its pieces."""
-        try:
-            root = open_root(self._folder, self._disk)
-            root[EVENTS].resize((self._sealed + len(self._tail),))  # type: ignore[union-attr]
-            write_rows(root, (EVENTS,), self._sealed, {EVENTS: self._tail})
-        except LIBRARY_ERRORS as error:
-            raise stored(error, self._folder / EVENTS) from error
+        with rim(self._where):
+            self._root[EVENTS].resize((self._sealed + self._filled,))  # type: ignore[union-attr]
+        self._put(self._gaps[: self._filled])
 
-    def _gaps(self, ticks: NDArray[np.uint64]) -> NDArray[Any]:
-        gaps = np.diff(ticks.astype(np.int64), prepend=0)
-        if len(gaps) and (gaps.min() < 0 or gaps.max() > np.iinfo(self._kind).max):
+    def _make_room(self, length: int) -> None:
+        if length > len(self._gaps):
+            larger = np.empty(length, self._gaps.dtype)
+            larger[: self._filled] = self._gaps[: self._filled]
+            self._gaps = larger
+
+    def _differences(self, ticks: NDArray[np.uint64], gaps: NDArray[Any]) -> None:
+        if not len(ticks):
+            return
+        fits = ticks.max() <= np.iinfo(gaps.dtype).max  # then every difference is exact in this type
+        times = ticks.view(np.int64)
+        gaps[0] = times[0] if fits else -1
+        np.subtract(times[1:], times[:-1], out=gaps[1:], casting="same_kind")
+        if gaps.min() < 0:
             raise StorageError(
                 "the event times do not ascend, or lie too far apart",
-                where=f"event {self._sealed + len(self._tail)} and the following",
+                where=f"event {self._sealed + self._filled} and the following",
                 remedy="Check the unit of the counter's ticks",
             )
-        return gaps.astype(self._kind)
 
-    def _put(self, gaps: NDArray[Any]) -> None:
-        try:
-            root = open_root(self._folder, self._disk)
-            write_rows(root, (EVENTS,), self._sealed, {EVENTS: gaps}, grow=GROW * self._chunk)
-        except LIBRARY_ERRORS as error:
-            raise stored(error, self._folder / EVENTS) from error
+    def _put(self, gaps: NDArray[Any], grow: int = 1) -> None:
+        with rim(self._where):
+            write_rows(self._root, (EVENTS,), self._sealed, {EVENTS: gaps}, grow=grow)
 
 
 def read_events(folder: Path, rows: Sequence[int]) -> list[NDArray[np.int64]]:

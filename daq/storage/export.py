@@ -88,8 +88,9 @@ def _columns(visits: xr.Dataset, itinerary: xr.Dataset) -> Iterator[tuple[str, l
 def _pair_complete(visits: xr.Dataset, itinerary: xr.Dataset) -> NDArray[np.int64]:
     """Return 1 for visits of a pair every planned stand of which is done, else 0."""
     known = visits["stand"].values >= 0
-    stand, attempt, opening = (visits[name].values[known] for name in ("stand", "attempt", "opening"))
-    done = stands_done(stand, attempt, opening, len(visits.attrs["openings"]))
+    stand, attempt, number = (visits[name].values[known] for name in ("stand", "attempt", "visit"))
+    whole = visits.attrs.get("visits_per_stand", len(visits.attrs["openings"]))
+    done = stands_done(stand, attempt, number, whole)
     waiting = ~np.isin(itinerary["stand"].values, done)
     incomplete = np.append(itinerary["pair"].values[waiting], -1)
     return (~np.isin(visits["pair"].values, incomplete)).astype(np.int64)

@@ -13,6 +13,8 @@ import sys
 import tempfile
 import time
 from collections.abc import Callable, Iterator
+from dataclasses import replace
+from functools import partial
 from itertools import count
 from pathlib import Path
 
@@ -20,8 +22,8 @@ import numpy as np
 
 from daq.records import Reading
 from daq.storage.disk import Disk
-from daq.storage.layout import CHUNK
-from daq.storage.reader import open_visits
+from daq.storage.layout import CHUNK, EVENTS
+from daq.storage.reader import open_visits, read_meta
 from daq.storage.run import Archive, open_run
 from daq.storage.snapshot import JOURNAL
 from tests.daq.storage.example import reading, started
@@ -35,8 +37,9 @@ def main() -> None:
     place = Path(sys.argv[1]) if len(sys.argv) > 1 else None
     lab = Path(tempfile.mkdtemp(dir=place))
     try:
-        for line in (*commit_cost(lab / "commit"), *seal_cost(lab / "seal"), *reopening(lab / "reopen")):
-            print(line)
+        for figures in (commit_cost, seal_cost, reopening, reading_many, list_mode):
+            for line in figures(lab / figures.__name__):
+                print(line, flush=True)
     finally:
         shutil.rmtree(lab)
 
@@ -82,6 +85,63 @@ def reopening(folder: Path) -> Iterator[str]:
     yield f"open_visits of 16 000 unsealed {_seconds(lambda: open_visits(killed)):.3f} s"
     yield f"open_run of 16 000 unsealed {_seconds(lambda: open_run(killed).close()):.3f} s (target 0.2)"
     yield f"journal {(killed / JOURNAL).stat().st_size / 16_000:.0f} B a visit"
+
+
+def reading_many(folder: Path) -> Iterator[str]:
+    """Yield how the time to open a reader, and to verify, grows with the visits that are sealed."""
+    times = []
+    for visits in (1_000, 100_000):
+        run = folder / str(visits)
+        with started(run, laps=200, disk=_NoSync()) as archive:
+            commit = _committer(archive)
+            for _ in range(visits):
+                commit()
+            while archive.seal_next():
+                pass
+            times.append(_seconds(partial(read_meta, run)))
+            whole = _seconds(partial(open_visits, run))
+        yield f"{visits} visits: reader opens in {times[-1]:.4f} s, reads all in {whole:.3f} s"
+    yield f"opens at 1e5 / at 1e3: {times[1] / times[0]:.2f} (target 3 at 1e6)"
+
+
+def list_mode(folder: Path) -> Iterator[str]:
+    """Yield what an event costs against writing the same 64-bit times raw, in interleaved visits."""
+    number, visits = 1_000_000, 20
+    draw = np.random.default_rng(1)
+    gaps = draw.exponential(100.0, (4, number))
+    ticks = [np.cumsum(np.ceil(one)).astype("<u8").tobytes() for one in gaps]
+    with started(folder, laps=200, tick_s=1e-9, event_chunk=1 << 20) as archive:
+        raw = (folder / "raw").open("wb")
+        took = {"store": 0.0, "raw": 0.0}
+        cpu = 0.0
+        for visit in range(visits):
+            begun, busy = time.perf_counter(), time.process_time()
+            archive.commit(replace(POOL[visit], events=ticks[visit % 4]))
+            took["store"] += time.perf_counter() - begun
+            cpu += time.process_time() - busy
+            begun = time.perf_counter()
+            raw.write(ticks[visit % 4])
+            raw.flush()
+            os.fdatasync(raw.fileno())
+            took["raw"] += time.perf_counter() - begun
+        raw.close()
+        (folder / "raw").unlink()
+        archive.finish({})
+    events = number * visits
+    bits = 8 * _size(folder / "run.zarr" / EVENTS)[0] / events
+    speed, share = events / took["store"] / 1e6, took["raw"] / took["store"]
+    yield f"list mode {speed:.0f} M events/s (target 40), {cpu / events * 1e9:.1f} ns CPU each (target 15)"
+    yield f"raw time / store time {share:.2f} (target 0.3); {bits:.2f} bits an event (bound 8.09)"
+
+
+class _NoSync(Disk):
+    """Writes without waiting for the disk: only what is read afterwards is timed."""
+
+    def write(self, path: Path, data: bytes | memoryview) -> None:
+        path.write_bytes(data)
+
+    def sync_dir(self, folder: Path) -> None:
+        pass
 
 
 def _committer(archive: Archive) -> Callable[[], object]:

@@ -108,9 +108,10 @@ def started(
     laps: int = 4,
     disk: Disk | None = None,
     tick_s: float | None = None,
+    event_chunk: int = EVENT_CHUNK,
 ) -> Archive:
     """Return the archive of a new run in `folder`; in list mode with a tick."""
-    meta = {**META, "list_mode": {"tick_s": tick_s, "chunk": EVENT_CHUNK}} if tick_s else META
+    meta = {**META, "list_mode": {"tick_s": tick_s, "chunk": event_chunk}} if tick_s else META
     return create_run(folder, texts=TEXTS, itinerary=planned_visits(laps), meta=meta, chunk=chunk, disk=disk)
 
 
