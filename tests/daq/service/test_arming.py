@@ -1,4 +1,4 @@
-"""Arming, on a rig that the program takes for real: its instruments are served on real ports in this process."""
+"""Arming, on a rig without a bench: the program takes it for real."""
 
 from __future__ import annotations
 
@@ -34,7 +34,7 @@ def a_person(lab: Path, **wrong: str) -> Callable[[str], str]:
             return wrong.get("caution", "yes")
         if "Code" in question:
             (message,) = select(lab, "messages")
-            return wrong.get("code", message["body"].split()[3].rstrip("."))
+            return wrong.get("code", str(message["body"].split()[3]).rstrip("."))
         return wrong.get("name", "lantern")
 
     return answers
@@ -44,7 +44,11 @@ def test_every_caution_is_asked_and_the_arming_holds_for_one_start(real, tmp_pat
     asked: list[str] = []
     person = a_person(tmp_path)
 
-    refused = confirm(real, tmp_path, MAIL, "night watch", lambda text: asked.append(text) or person(text))
+    def answers(question: str) -> str:
+        asked.append(question)
+        return person(question)
+
+    refused = confirm(real, tmp_path, MAIL, "night watch", answers)
 
     assert refused is None
     assert sum("Type yes" in text for text in asked) == len(CAUTIONS)

@@ -1,4 +1,5 @@
 from datetime import UTC, datetime
+from typing import Any
 
 import pytest
 
@@ -10,7 +11,7 @@ from tests.examples import CONFIGS
 
 
 def make(lab, **changes):
-    words = {
+    words: dict[str, Any] = {
         "days": ["mon", "fri"],
         "at": "18:30",
         "zone": "Europe/Berlin",

@@ -13,8 +13,8 @@ def times(days=("daily",), at=time(18, 30), first_day=date(2026, 12, 1), late_s=
     return Times(days, at, zone, first_day, late_s)
 
 
-def utc(*numbers):
-    return datetime(*numbers, tzinfo=UTC)
+def utc(year, month, day, hour=0, minute=0):
+    return datetime(year, month, day, hour, minute, tzinfo=UTC)
 
 
 def test_a_single_booking_starts_once_at_its_local_time():
