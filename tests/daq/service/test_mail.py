@@ -59,9 +59,6 @@ def test_a_dead_server_loses_nothing(tmp_path, server):
     assert send_what_waits(tmp_path, mail_of(server)) == 2
     assert "Subject: first" in server.handler.got[0]
     assert "Subject: second" in server.handler.got[1]
-        True,
-        True,
-    ]
 
 
 def test_without_mail_settings_messages_wait(tmp_path):
