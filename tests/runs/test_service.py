@@ -19,7 +19,7 @@ ZONE = "Europe/Berlin"
 
 
 def service(lab: Path) -> subprocess.Popen[str]:
-    words = [sys.executable, "-m", "daq", "serve", lab, "--no-page", "--json"]
+    words: list[str | Path] = [sys.executable, "-m", "daq", "serve", lab, "--no-page", "--json"]
     return subprocess.Popen(words, stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True)
 
 
