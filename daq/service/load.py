@@ -12,7 +12,6 @@ from pathlib import Path
 from typing import Any
 
 from daq.description import Measurement, Rig, joint_problems, parse
-from daq.devices.files import with_dialects
 from daq.errors import DescriptionError
 from daq.itinerary import Itinerary, compose
 
@@ -98,7 +97,7 @@ def _loaded(table: dict[str, Any], text: bytes, path: Path, rig_path: Path | Non
     problems: list[str] = []
     measurement: Measurement | None = None
     rig: Rig | None = None
-    rig_text, dialects = b"", dict[str, bytes]()
+    rig_text = b""
     try:
         measurement = parse(wishes.laid_over(table), str(path), "measurement")
     except DescriptionError as error:
@@ -106,15 +105,14 @@ def _loaded(table: dict[str, Any], text: bytes, path: Path, rig_path: Path | Non
     try:
         if rig_path is not None:
             rig_text = _read(rig_path)
-            rig_table, dialects = with_dialects(_toml(rig_text, rig_path), rig_path.parent)
-            rig = parse(rig_table, str(rig_path), "rig")
+            rig = parse(_toml(rig_text, rig_path), str(rig_path), "rig")
     except DescriptionError as error:
         problems += error.problems
     if measurement and rig:
         problems += joint_problems(measurement, rig, str(path))
     if problems or not measurement or not rig:
         raise DescriptionError(tuple(problems))
-    texts = {DESCRIPTION: text, RIG: rig_text, **dialects}
+    texts = {DESCRIPTION: text, RIG: rig_text}
     return Loaded(_in_hours(measurement, rig, wishes, path), rig, texts, wishes)
 
 
