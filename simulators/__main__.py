@@ -13,6 +13,7 @@ from typing import Any
 
 from daq.description import Rig, parse
 from daq.devices.clock import RealClock
+from daq.devices.files import with_dialects
 from daq.errors import DaqError, DescriptionError
 from simulators.bench import build
 from simulators.faults import read_script
@@ -30,9 +31,9 @@ def main(arguments: Sequence[str] | None = None) -> int:
     reader.add_argument("--faults", type=Path, metavar="FILE", help="fault script (TOML)")
     wanted = reader.parse_args(arguments)
     try:
-        _serve(
-            parse(_read(wanted.rig), str(wanted.rig), "rig"), _read(wanted.faults) if wanted.faults else None
-        )
+        table, _ = with_dialects(_read(wanted.rig), wanted.rig.parent)
+        faults = _read(wanted.faults) if wanted.faults else None
+        _serve(parse(table, str(wanted.rig), "rig"), faults)
     except DaqError as error:
         sys.stderr.write(f"{error}\n")
         return error.exit_status

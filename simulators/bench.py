@@ -14,11 +14,14 @@ from daq.ports import Clock
 from simulators.clock import VirtualClock
 from simulators.counters import GatedCounter
 from simulators.faults import Struck, read_script
+from simulators.gauge import Gauge, ShutterBox
 from simulators.hosts import Host, Instrument, serve
 from simulators.motion import Track
+from simulators.scpi_stage import ScpiStage
 from simulators.sensors import RoomSensor
 from simulators.settings import Settings, read_settings, utc_ns
 from simulators.stages import StageController, Travel
+from simulators.totalisers import FrequencyMeter, Totaliser
 from simulators.truth import Truth
 from simulators.upsets import Spoilt, Upsets
 
@@ -140,20 +143,30 @@ def build(
         counts = truth.counts(name, open_ns, close_ns)
         return upsets.counted(name, open_ns, close_ns, counts) if upsets else counts
 
+    shutter = ShutterBox(clock)
     makers: Mapping[str, Callable[[str], Instrument]] = {
-        "gcode-stage": lambda name: _controller(name, rig, tracks, clock),
+        "gcode-stage": lambda name: _controller(StageController, name, rig, tracks, clock),
+        "scpi-stage": lambda name: _controller(partial(ScpiStage, name), name, rig, tracks, clock),
         "scpi-counter": lambda name: GatedCounter(name, partial(count, name), settings.readout_s, clock),
+        "scpi-totaliser-26": lambda name: Totaliser(name, partial(count, name), 26, clock),
+        "scpi-totaliser-32": lambda name: Totaliser(name, partial(count, name), 32, clock),
+        "scpi-frequency": lambda name: FrequencyMeter(name, partial(count, name), clock),
         "scpi-sensor": lambda name: RoomSensor(name, clock),
+        "gauge": lambda name: Gauge(name, clock),
+        "shutter": lambda name: shutter,
     }
+    models = {name: settings.instruments.get(name, entry.driver) for name, entry in rig.devices.items()}
     unknown = [
-        f"rig {rig.name}, devices.{name}.driver: no simulated instrument understands {entry.driver!r}. "
-        f"Name one of {', '.join(makers)}."
-        for name, entry in rig.devices.items()
-        if entry.driver not in makers
+        f"rig {rig.name}, devices.{name}.driver: no simulated instrument understands {model!r}. "
+        f"Name one of {', '.join(makers)} for it in [bench.instruments]."
+        for name, model in models.items()
+        if model not in makers
     ]
     if unknown:
         raise DescriptionError(tuple(unknown))
-    instruments = {name: makers[entry.driver](name) for name, entry in rig.devices.items()}
+    if "shutter" in models.values():
+        truth.behind(shutter)
+    instruments = {name: makers[model](name) for name, model in models.items()}
     return Built(instruments, tracks, truth, upsets)
 
 
@@ -164,9 +177,15 @@ def _track(limits_mm: tuple[float, float], kept: Mapping[str, float] | None) -> 
     return Track(kept["place_mm"], low_mm, homed=bool(kept["homed"]))
 
 
-def _controller(name: str, rig: Rig, tracks: Mapping[str, Track], clock: Clock) -> StageController:
+def _controller(
+    make: Callable[[Mapping[str, Track], Mapping[str, Travel], Clock], Instrument],
+    name: str,
+    rig: Rig,
+    tracks: Mapping[str, Track],
+    clock: Clock,
+) -> Instrument:
     mine = {axis_name: axis for axis_name, axis in rig.axes.items() if axis.device == name}
-    return StageController(
+    return make(
         {axis.letter: tracks[axis_name] for axis_name, axis in mine.items()},
         {axis.letter: Travel(axis.limits_mm, axis.speed_mm_s) for axis in mine.values()},
         clock,

@@ -14,6 +14,7 @@ kind                                        does, once it is due
 ``overflow``                                the next gate of the counter ``device`` overflows
 ``saturation``                              ``device`` counts no more than ``rate_hz``, for ``seconds``
 ``beam-off beam-step``                      no light for ``seconds``; ``factor`` times the light from then on
+``trip``                                    the pressure at the gauge ``device`` is ``factor`` times higher
 ``clock-step``                              UTC jumps by ``step_s``
 ==========================================  ==============================================================
 
@@ -32,6 +33,7 @@ from pydantic import Field, ValidationError, model_validator
 
 from daq.description import Rig
 from daq.description.problems import ProblemsError, Table, every_problem
+from daq.description.rig import DeviceEntry
 from daq.errors import DescriptionError
 from daq.ports import Clock
 from simulators.draws import generator
@@ -40,7 +42,7 @@ from simulators.motion import NS
 Positive = Annotated[float, Field(gt=0)]
 Kind = Literal[
     "silent", "half", "garbage", "double", "late", "nak",
-    "drop", "alarm", "stall", "slip", "overflow", "saturation", "beam-off", "beam-step", "clock-step",
+    "drop", "alarm", "stall", "slip", "overflow", "saturation", "beam-off", "beam-step", "trip", "clock-step",
 ]  # fmt: skip
 
 REPLY_KINDS = frozenset({"silent", "half", "garbage", "double", "late", "nak"})
@@ -52,6 +54,7 @@ _NEEDS: Mapping[str, tuple[str, ...]] = {
     "saturation": ("device", "seconds", "rate_hz"),
     "beam-off": ("seconds",),
     "beam-step": ("factor",),
+    "trip": ("device", "seconds", "factor"),
     "clock-step": ("step_s",),
 }
 _WHEN = ("at_s", "at_gate", "per_hour")
@@ -133,7 +136,7 @@ def read_script(table: Mapping[str, Any], rig: Rig) -> Script:
 
 def _foreign(script: Script, rig: Rig) -> Iterator[str]:
     controllers = [axis.device for axis in rig.axes.values()]
-    counters = {name for name, entry in rig.devices.items() if "counter" in entry.driver}
+    counters = {name for name, entry in rig.devices.items() if _counts(entry)}
     for place, fault in enumerate(script.fault):
         where = f"fault script, fault.{place}"
         for key, name, known in (("device", fault.device, rig.devices), ("axis", fault.axis, rig.axes)):
@@ -143,6 +146,10 @@ def _foreign(script: Script, rig: Rig) -> Iterator[str]:
             yield f"{where}.device: an alarm needs a device that moves an axis, not {fault.device!r}."
         if fault.kind in ("overflow", "saturation") and fault.device in (rig.devices.keys() - counters):
             yield f"{where}.device: a fault {fault.kind!r} needs a counter, not {fault.device!r}."
+
+
+def _counts(entry: DeviceEntry) -> bool:
+    return "counter" in entry.driver or (entry.dialect is not None and entry.dialect.kind == "counter")
 
 
 class Faults:

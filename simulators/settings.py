@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from datetime import datetime
 from typing import Annotated, Literal
 
@@ -13,6 +14,18 @@ from daq.errors import DescriptionError
 
 _Rate = Annotated[float, Field(ge=0, le=1e12)]
 _Small = Annotated[float, Field(ge=0, le=1.0)]
+
+
+# What stands behind a device whose driver fits more than one simulated instrument.
+Model = Literal[
+    "gcode-stage",
+    "scpi-stage",
+    "scpi-totaliser-26",
+    "scpi-totaliser-32",
+    "scpi-frequency",
+    "gauge",
+    "shutter",
+]
 
 
 class SourceSettings(Table):
@@ -35,6 +48,7 @@ class Settings(Table):
     dead_time_kind: Literal["non-paralysable", "paralysable"] = "non-paralysable"
     readout_s: Annotated[float, Field(ge=0, le=3600)] = 0.0
     source: SourceSettings = SourceSettings()
+    instruments: Mapping[str, Model] = {}
 
 
 def read_settings(rig: Rig) -> Settings:

@@ -48,6 +48,10 @@ class Truth:
         self._scale_hz = settings.single_slit_rate_hz / peak
         self._light = lru_cache(maxsize=65_536)(self._light_hz)
 
+    def behind(self, factor: Factor) -> None:
+        """Put something into the beam that takes light away as a function of time."""
+        self._source = (*self._source, factor)
+
     def rates_hz(self, openings: Sequence[int], positions_mm: Sequence[float]) -> NDArray[np.float64]:
         """Return pattern, background and dark counts, position by opening [1/s]: no drift, no dead time."""
         light = [[self._light(opening, place) for opening in openings] for place in positions_mm]

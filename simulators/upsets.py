@@ -11,8 +11,10 @@ from numpy.typing import NDArray
 from daq.ports import Clock
 from simulators.counters import CAPACITY, GatedCounter
 from simulators.faults import Fault, Faults, Script
+from simulators.gauge import Gauge
 from simulators.hosts import Instrument, Send, Session
 from simulators.motion import NS, Track
+from simulators.scpi_stage import ScpiStage
 from simulators.stages import StageController
 
 
@@ -86,6 +88,7 @@ class Upsets:
             "saturation": self._saturate,
             "beam-off": lambda fault: self.beam.block(self._now_s(), fault.seconds or 0.0),
             "beam-step": lambda fault: self.beam.step(self._now_s(), fault.factor or 0.0),
+            "trip": lambda fault: _raise(instruments[fault.target], fault),
             "clock-step": lambda fault: self._step_utc(round((fault.step_s or 0.0) * NS)),
         }
         self.faults = Faults(script, self._clock, acts)
@@ -158,5 +161,10 @@ class _SpoiltSession:
 
 
 def _trip(instrument: Instrument, alarm: str) -> None:
-    if isinstance(instrument, StageController):
+    if isinstance(instrument, StageController | ScpiStage):
         instrument.trip(alarm)
+
+
+def _raise(instrument: Instrument, fault: Fault) -> None:
+    if isinstance(instrument, Gauge):
+        instrument.trip(fault.seconds or 0.0, fault.factor or 1.0)

@@ -9,15 +9,25 @@ from pathlib import Path
 
 from daq.cli.answer import Answer
 from daq.description import parse
+from daq.description.dialect import dialect_warnings
+from daq.devices.clock import RealClock
+from daq.devices.files import read_dialect, with_dialects
+from daq.devices.trial import tried
+from daq.errors import DescriptionError
 from daq.itinerary import Forecast, forecast
 from daq.service.load import Wishes, load
 
 
 def check(arguments: argparse.Namespace) -> Answer:
-    """Read a measurement with its rig, or a rig, and list every problem."""
+    """Read a measurement with its rig, a rig, or a dialect, and list every problem."""
     path: Path = arguments.file
-    if _is_rig(path):
-        rig = parse(tomllib.loads(path.read_text()), str(path), "rig")
+    if _holds(path, "identity"):
+        return _dialect(path, arguments)
+    if arguments.address is not None:
+        raise DescriptionError((f"{path}: only a dialect can be tried. Leave out --try.",))
+    if _holds(path, "mask"):
+        table, _ = with_dialects(tomllib.loads(path.read_text()), path.parent)
+        rig = parse(table, str(path), "rig")
         return _fine(f"rig {rig.name!r}: {len(rig.slits)} slits, {len(rig.devices)} devices")
     loaded = load(path)
     return _fine(
@@ -38,9 +48,22 @@ def wishes(arguments: argparse.Namespace) -> Wishes:
     return Wishes(arguments.hours, arguments.seed, arguments.order)
 
 
-def _is_rig(path: Path) -> bool:
+def _dialect(path: Path, arguments: argparse.Namespace) -> Answer:
+    dialect, _ = read_dialect(path)
+    warnings = dialect_warnings(dialect)
+    lines = [f"dialect {dialect.name!r}, a {dialect.kind}: no problem found.", *warnings]
+    understood: list[str] = []
+    if arguments.address is not None:
+        address = arguments.address if ":/" in arguments.address else f"tcp://{arguments.address}"
+        understood += tried(dialect, address, arguments.letter, RealClock())
+    ok = not any("not understood" in line for line in understood)
+    figures = {"ok": ok, "problems": [], "warnings": list(warnings), "understood": understood}
+    return Answer(0 if ok else 1, figures, [*lines, *understood])
+
+
+def _holds(path: Path, key: str) -> bool:
     try:
-        return "mask" in tomllib.loads(path.read_text())
+        return key in tomllib.loads(path.read_text())
     except (OSError, UnicodeDecodeError, tomllib.TOMLDecodeError):
         return False  # `load` says what is wrong with it
 

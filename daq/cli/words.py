@@ -43,7 +43,11 @@ def _plan_words(commands: Any) -> None:
         "read a description and list every problem",
         "tercet check lantern.toml",
     )
-    check.add_argument("file", type=Path, metavar="FILE", help="a measurement or a rig (TOML)")
+    check.add_argument("file", type=Path, metavar="FILE", help="a measurement, a rig or a dialect (TOML)")
+    check.add_argument(
+        "--try", dest="address", metavar="HOST:PORT", help="talk to a device in this dialect, asking only"
+    )
+    check.add_argument("--letter", default="X", help="the axis of a stage controller that is asked (X)")
     compose = _add(
         commands,
         "compose",

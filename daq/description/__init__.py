@@ -8,19 +8,28 @@ from typing import Any, Literal, overload
 from pydantic import ValidationError
 
 from daq import openings
+from daq.description.dialect import Dialect
 from daq.description.measurement import Measurement
 from daq.description.problems import every_problem
 from daq.description.rig import Rig
 from daq.errors import DescriptionError
 
-__all__ = ["Measurement", "Rig", "joint_problems", "parse"]
+__all__ = ["Dialect", "Measurement", "Rig", "joint_problems", "parse"]
+
+_MODELS: Mapping[str, type[Measurement] | type[Rig] | type[Dialect]] = {
+    "measurement": Measurement,
+    "rig": Rig,
+    "dialect": Dialect,
+}
 
 
 @overload
 def parse(table: Mapping[str, Any], source: str, kind: Literal["measurement"]) -> Measurement: ...
 @overload
 def parse(table: Mapping[str, Any], source: str, kind: Literal["rig"]) -> Rig: ...
-def parse(table: Mapping[str, Any], source: str, kind: str) -> Measurement | Rig:
+@overload
+def parse(table: Mapping[str, Any], source: str, kind: Literal["dialect"]) -> Dialect: ...
+def parse(table: Mapping[str, Any], source: str, kind: str) -> Measurement | Rig | Dialect:
     """Return the description that a table holds.
 
     Raises
@@ -28,7 +37,7 @@ def parse(table: Mapping[str, Any], source: str, kind: str) -> Measurement | Rig
     DescriptionError
         With every problem at once, each with file (`source`), key and remedy.
     """
-    model: type[Measurement] | type[Rig] = Measurement if kind == "measurement" else Rig
+    model = _MODELS[kind]
     try:
         return model.model_validate(table)
     except ValidationError as error:

@@ -12,11 +12,12 @@ from daq.description.rig import NotNegative, Positive
 
 
 class Positions(Table):
-    """Detector positions [mm]: evenly spaced from `start_mm` to `stop_mm`, or `list_mm`."""
+    """Detector positions [mm]: evenly spaced from `start_mm` to `stop_mm`, or `list_mm`; and their time."""
 
     start_mm: float | None = None
     stop_mm: float | None = None
     number: Annotated[int, Field(ge=1, le=100_000)] | None = None
+    time: Literal["uniform", "worth"] = "uniform"
     list_mm: Annotated[tuple[float, ...], Field(min_length=1)] | None = None
 
     @model_validator(mode="after")
@@ -41,13 +42,36 @@ class Positions(Table):
 
 
 class Order(Table):
-    """How the visits follow one another."""
+    """How the visits follow one another, and how long they count."""
 
-    order: Literal["zigzag", "blocked"] = "zigzag"
+    order: Literal["zigzag", "searched", "cyclic", "random", "blocked"] = "zigzag"
     laps: Annotated[int, Field(ge=2, le=1_000_000)]
-    dwell_s: Annotated[float, Field(gt=0, le=86_400)]
+    fly_back: bool = False
+    dwell_s: Annotated[float, Field(gt=0, le=86_400)] | None = None
+    dwell: Literal["equal", "best"] = "equal"
+    dwell_floor: Annotated[float, Field(gt=0, le=1)] = 0.1
+    together: Annotated[int, Field(ge=1, le=100_000)] | Literal["best"] = 1
+    repeats: Annotated[int, Field(ge=1, le=3)] = 1
+    search_evaluations: Annotated[int, Field(ge=1, le=10**10)] = 4_000_000
     seed: Annotated[int, Field(ge=0)] = 1
     opening_order: tuple[str, ...] | None = None
+
+    @model_validator(mode="after")
+    def _fit(self) -> Order:
+        if self.repeats > 1 and self.order != "searched":
+            raise ValueError("repeats above 1 needs order 'searched'")
+        if self.opening_order and self.order == "searched":
+            raise ValueError("give either opening_order, or order 'searched', which finds it")
+        if self.order in ("cyclic", "random", "blocked") and (self.fly_back or self.together != 1):
+            raise ValueError(f"order {self.order!r} knows neither fly_back nor together")
+        return self
+
+
+class Line(Table):
+    """A periodic ripple of the source or the room: its period, and its relative amplitude where known."""
+
+    period_s: Positive
+    amplitude: NotNegative = 0.0
 
 
 class Expect(Table):
@@ -56,6 +80,24 @@ class Expect(Table):
     single_slit_rate_hz: Positive
     background_rate_hz: NotNegative = 0.0
     drift_per_sqrt_hour: NotNegative = 0.0
+    level_by_hour: Annotated[tuple[Positive, ...], Field(min_length=1)] = (1.0,)
+    lines: tuple[Line, ...] = ()
+    monitor_rate_hz: Positive | None = None
+
+
+class Pilot(Table):
+    """What a pilot found: the structure function of the log rate, with its errors, and periodic lines."""
+
+    lags_s: Annotated[tuple[Positive, ...], Field(min_length=1)]
+    structure: tuple[float, ...]
+    structure_se: tuple[Positive, ...]
+    lines: tuple[Line, ...] = ()
+
+    @model_validator(mode="after")
+    def _one_length(self) -> Pilot:
+        if not len(self.lags_s) == len(self.structure) == len(self.structure_se):
+            raise ValueError("lags_s, structure and structure_se need the same length")
+        return self
 
 
 class Estimate(Table):
@@ -65,6 +107,7 @@ class Estimate(Table):
     dead_time_kind: Literal["non-paralysable", "paralysable"] = "non-paralysable"
     normalisation: Literal["pairwise", "central"] = "pairwise"
     goal_se: Positive | None = None
+    dead_time_u_s: NotNegative = 0.0
 
 
 class Measurement(Table):
@@ -78,5 +121,6 @@ class Measurement(Table):
     positions: Positions
     itinerary: Order
     expect: Expect
+    pilot: Pilot | None = None
     estimate: Estimate = Estimate()
     notes: Mapping[str, Any] = {}

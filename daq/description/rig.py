@@ -8,6 +8,7 @@ from typing import Annotated, Any, Literal
 from pydantic import Field, field_validator, model_validator
 
 from daq import openings
+from daq.description.dialect import Dialect
 from daq.description.problems import ProblemsError, Table
 
 Positive = Annotated[float, Field(gt=0)]
@@ -67,6 +68,8 @@ class Axis(Table):
     limits_mm: tuple[float, float]
     speed_mm_s: Positive
     settle_s: NotNegative = 0.0
+    approach: Literal["either", "up", "down"] = "either"
+    takeup_s: NotNegative = 0.0
     tolerance_mm: Positive = 0.01
 
     @field_validator("limits_mm")
@@ -76,20 +79,58 @@ class Axis(Table):
             raise ValueError("the lower limit must lie below the upper one")
         return value
 
+    @model_validator(mode="after")
+    def _take_up_has_a_direction(self) -> Axis:
+        if self.takeup_s and self.approach == "either":
+            raise ValueError("takeup_s needs approach 'up' or 'down': the direction that needs no take-up")
+        return self
+
     def move_s(self, distance_mm: float) -> float:
-        """Return how long a move takes, settling included [s]; none takes no time."""
-        return self.settle_s + abs(distance_mm) / self.speed_mm_s if distance_mm else 0.0
+        """Return how long a move takes, settling included [s]; none takes no time.
+
+        A move along `approach` waits as long as one against it, which takes up the play of the axis: moves
+        that are as long in both directions let a linear drift cancel.
+        """
+        if not distance_mm:
+            return 0.0
+        return self.settle_s + abs(distance_mm) / self.speed_mm_s + self.takeup_s
+
+
+ADDRESS = r"^((tcp|socket|rfc2217)://[^\s:/]+:\d{1,5}|serial:[^\s?]+(\?[a-z0-9=&.]+)?|visa:\S+)$"
 
 
 class DeviceEntry(Table):
-    """A device: which driver speaks to it, and where."""
+    """A device: which driver speaks to it, and where.
+
+    `dialect` is a path beside the rig file; whoever reads the file puts the dialect itself there.
+    """
 
     driver: str
-    address: Annotated[str, Field(pattern=r"^tcp://[^\s:/]+:\d{1,5}$")]
+    dialect: Dialect | None = None
+    address: Annotated[str, Field(pattern=ADDRESS)]
     timeout_s: Positive = 1.0
     every_s: Positive = 60.0
     readout_s: NotNegative = 0.0
+    shortest_gate_s: NotNegative = 0.0
     channels: Annotated[int, Field(ge=1, le=64)] = 1
+
+    @model_validator(mode="after")
+    def _dialect_belongs(self) -> DeviceEntry:
+        if (self.driver == "dialect") != (self.dialect is not None):
+            raise ValueError("the driver 'dialect', and no other, needs a dialect file")
+        return self
+
+
+def _what_remains(have: Mapping[str, Shown], wanted: set[str]) -> str:
+    """Return which interference terms a mask without all openings can still give, as words."""
+    masks = {openings.mask(name) for name in have}
+    terms = [
+        name
+        for name in sorted(wanted, key=openings.mask)
+        if openings.mask(name).bit_count() >= 2
+        and all(sub in masks for sub in range(openings.mask(name) + 1) if not sub & ~openings.mask(name))
+    ]
+    return f"Terms that remain: {', '.join(terms)}" if terms else "No interference term remains"
 
 
 class Rig(Table):
@@ -107,7 +148,12 @@ class Rig(Table):
 
     @model_validator(mode="after")
     def _hangs_together(self) -> Rig:
-        found = [*self._slit_problems(), *self._axis_problems(), *self._opening_problems()]
+        found = [
+            *self._slit_problems(),
+            *self._axis_problems(),
+            *self._opening_problems(),
+            *self._dialect_problems(),
+        ]
         if found:
             raise ProblemsError(found)
         return self
@@ -128,6 +174,20 @@ class Rig(Table):
                     f"no device {entry.device!r} in [devices]. Name one of {', '.join(self.devices)}",
                 )
 
+    def _dialect_problems(self) -> Iterator[tuple[str, str]]:
+        for name, axis in self.axes.items():
+            entry = self.devices.get(axis.device)
+            if entry is None or entry.dialect is None:
+                continue
+            words = entry.dialect.axis_words
+            step_mm = 10.0**-words.decimals / words.device_per_mm
+            if axis.tolerance_mm < step_mm / 2:
+                yield (
+                    f"axes.{name}.tolerance_mm",
+                    f"{axis.tolerance_mm:g} mm is finer than what dialect {entry.dialect.name!r} can send, "
+                    f"steps of {step_mm:g} mm",
+                )
+
     def _opening_problems(self) -> Iterator[tuple[str, str]]:
         places: dict[float, str] = {}
         wanted = set(openings.names(len(self.slits))) if 2 <= len(self.slits) <= 5 else set()
@@ -135,7 +195,8 @@ class Rig(Table):
         if missing:
             yield (
                 "mask.openings",
-                f"the mask lacks {', '.join(missing)}; the residual needs every opening once",
+                f"the mask lacks {', '.join(missing)}; the residual needs every opening once. "
+                + _what_remains(self.mask.openings, wanted),
             )
         for name, shown in self.mask.openings.items():
             yield from self._shown_problems(name, shown)
@@ -193,6 +254,11 @@ class Rig(Table):
     def readout_s(self) -> float:
         """The longest readout of a device between two gates [s]."""
         return max((entry.readout_s for entry in self.devices.values()), default=0.0)
+
+    @property
+    def shortest_gate_s(self) -> float:
+        """The shortest gate that every device can make [s]."""
+        return max((entry.shortest_gate_s for entry in self.devices.values()), default=0.0)
 
     def detector_move_s(self, distance_mm: float) -> float:
         """Return how long a detector move takes, settling included [s]."""

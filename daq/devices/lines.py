@@ -7,6 +7,7 @@ like the reply to another question.
 from __future__ import annotations
 
 import logging
+import re
 
 from daq.errors import DeviceError
 from daq.ports import Clock, Connection
@@ -33,6 +34,8 @@ class Lines:
         No line is longer.
     where
         Device and address, for messages.
+    ignore
+        A pattern for whole lines that are no replies, and are passed over.
 
     Attributes
     ----------
@@ -40,9 +43,18 @@ class Lines:
         What came with the last line, behind its end.
     """
 
-    def __init__(self, clock: Clock, connection: Connection, end: bytes, most_bytes: int, where: str) -> None:
+    def __init__(
+        self,
+        clock: Clock,
+        connection: Connection,
+        end: bytes,
+        most_bytes: int,
+        where: str,
+        ignore: str | None = None,
+    ) -> None:
         self._clock, self._connection, self._where = clock, connection, where
         self._end, self._most_bytes = end, most_bytes
+        self._ignore = None if ignore is None else re.compile(ignore.encode("ascii"))
         self.rest = b""
         # Two counters, since one thread may send (a stop) while another reads.
         self._asked, self._came, self._asked_ns = 0, 0, 0
@@ -74,6 +86,16 @@ class Lines:
             "timeout" when no whole line has come by `until_ns`, "garbage" for one that is too long or no
             ASCII, "lost" at the end of the stream.
         """
+        line = self._next(until_ns, asked)
+        while self._ignore and self._ignore.fullmatch(line):
+            line = self._next(until_ns, asked)
+        self._came += 1
+        log.debug("%s > %r", self._where, line)
+        if len(line) > self._most_bytes or not line.isascii():
+            raise self._garbage(f"{line[:40]!r} in reply to {asked!r}")
+        return line.decode("ascii")
+
+    def _next(self, until_ns: int, asked: str) -> bytes:
         while self._end not in self.rest:
             if len(self.rest) > self._most_bytes:
                 raise self._garbage(f"a reply without end to {asked!r}: {self.rest[:40]!r} ...")
@@ -81,19 +103,26 @@ class Lines:
                 raise self._timeout(asked)
             self.rest += self._receive()
         line, _, self.rest = self.rest.partition(self._end)
-        self._came += 1
-        log.debug("%s > %r", self._where, line)
-        if len(line) > self._most_bytes or not line.isascii():
-            raise self._garbage(f"{line[:40]!r} in reply to {asked!r}")
-        return line.decode("ascii")
+        return line
 
     def waiting(self) -> bytes:
         """Return, and so drop, what has come unasked, without waiting for more."""
         dropped, self.rest = self.rest, b""
         while data := self._receive():
             dropped += data
+        dropped = self._meant(dropped)
         self._came += dropped.count(self._end)
         return dropped
+
+    def behind(self) -> bytes:
+        """Return what came with the last line, without what is passed over; it stays where it is."""
+        return self._meant(self.rest)
+
+    def _meant(self, data: bytes) -> bytes:
+        if not self._ignore:
+            return data
+        *lines, rest = data.split(self._end)
+        return b"".join(line + self._end for line in lines if not self._ignore.fullmatch(line)) + rest
 
     def drain(self, quiet_ns: int, late_ns: int, most_ns: int) -> bytes:
         """Return, and so drop, what comes until all replies have come that may come.

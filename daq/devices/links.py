@@ -30,7 +30,8 @@ class Wire:
     """How a device speaks: its identity, the ends of a line, limits and waiting times.
 
     The identity is IEEE 488.2's by default: four fields between commas. `late_s` is how late a reply can come
-    at most, after its question; it is waited only after an upset.
+    at most, after its question; it is waited only after an upset. `ignore` is a pattern for whole lines that
+    the device sends unasked and that answer nothing.
     """
 
     identity: str = "*IDN?"
@@ -42,6 +43,7 @@ class Wire:
     late_s: float = 1.5
     most_bytes: int = 256
     repeats: int = 2  # of a command that is safe to repeat
+    ignore: str | None = None
 
 
 class Link:
@@ -179,8 +181,9 @@ class Link:
             raise self._garbage(f"{line!r} in reply to {text!r}")
         if self._urgent != urgent:
             raise self._stopped(text)
-        if lines.rest and lines.rest.replace(line.encode("ascii") + self._end, b""):
-            raise self._garbage(f"{lines.rest[:40]!r} behind the reply {line!r} to {text!r}")
+        behind = lines.behind() if lines.rest else b""
+        if behind.replace(line.encode("ascii") + self._end, b""):
+            raise self._garbage(f"{behind[:40]!r} behind the reply {line!r} to {text!r}")
         self._in_step_at = urgent
         return match
 
@@ -231,7 +234,7 @@ class Link:
         except OSError as error:
             what = f"nobody answers ({error})"
             raise DeviceError(what, where=self._where, remedy=CHECK, kind="lost") from error
-        self._lines = Lines(self._clock, connection, self._end, wire.most_bytes, self._where)
+        self._lines = Lines(self._clock, connection, self._end, wire.most_bytes, self._where, wire.ignore)
         if self.identity:  # a serial-to-LAN box may bring what the lost connection was owed
             self._lines.owe(1)
         try:

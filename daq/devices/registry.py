@@ -4,13 +4,14 @@ from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
 from contextlib import ExitStack, contextmanager
-from importlib.metadata import entry_points
+from functools import cache
+from importlib.metadata import EntryPoints, entry_points
 from typing import Protocol, cast
 
-from daq.description.rig import Rig
+from daq.description.rig import DeviceEntry, Rig
 from daq.devices.mask import MaskTranslator
 from daq.errors import DescriptionError
-from daq.ports import Clock, Counter, Device, Devices, Sensor, Stage
+from daq.ports import Clock, Counter, Device, Devices, Sensor, Shutter, Stage
 
 GROUP = "tercet.devices"
 
@@ -24,9 +25,14 @@ class Driver(Protocol):
         """Return the devices behind one entry of [devices]: for a controller, one for each of its axes."""
 
 
+@cache  # reading the metadata of everything that is installed takes a while
+def _installed() -> EntryPoints:
+    return entry_points(group=GROUP)
+
+
 def known_drivers() -> tuple[str, ...]:
     """Return the names of the installed drivers."""
-    return tuple(sorted(entry.name for entry in entry_points(group=GROUP)))
+    return tuple(sorted(_installed().names))
 
 
 def device_problems(rig: Rig) -> tuple[str, ...]:
@@ -56,7 +62,7 @@ def open_devices(rig: Rig, clock: Clock) -> Iterator[Devices]:
     if problems:
         raise DescriptionError(problems)
     built = [
-        (_driver(entry.driver).port, device)
+        (_port(entry), device)
         for name, entry in rig.devices.items()
         for device in _driver(entry.driver).of_rig(name, rig, clock)
     ]
@@ -68,16 +74,23 @@ def open_devices(rig: Rig, clock: Clock) -> Iterator[Devices]:
 
 
 def _driver(name: str) -> Driver:
-    (entry,) = entry_points(group=GROUP, name=name)
-    return cast(Driver, entry.load())
+    return cast(Driver, _installed()[name].load())
+
+
+def _port(entry: DeviceEntry) -> str:
+    """Return the port that a device serves; a dialect's is the kind of its file."""
+    return entry.dialect.kind if entry.dialect else _driver(entry.driver).port
 
 
 def _port_problems(rig: Rig) -> Iterator[str]:
-    ports = {name: _driver(entry.driver).port for name, entry in rig.devices.items()}
+    ports = {name: _port(entry) for name, entry in rig.devices.items()}
     counters = [name for name, port in ports.items() if port == "counter"]
     if len(counters) != 1:
         found = ", ".join(counters) or "none"
         yield f"rig {rig.name}, devices: a rig has one counter, not {found}."
+    shutters = [name for name, port in ports.items() if port == "shutter"]
+    if len(shutters) > 1:
+        yield f"rig {rig.name}, devices: a rig has at most one shutter, not {', '.join(shutters)}."
     for name, axis in rig.axes.items():
         if ports[axis.device] != "stage":
             where = f"rig {rig.name}, axes.{name}.device"
@@ -92,6 +105,7 @@ def _devices(rig: Rig, built: Sequence[tuple[str, Device]]) -> Devices:
         detector=stages[rig.detector.axis],
         counter=counter,
         sensors=tuple(cast(Sensor, device) for port, device in built if port == "sensor"),
+        shutter=next((cast(Shutter, device) for port, device in built if port == "shutter"), None),
         stages=tuple(stages.values()),
         all=tuple(device for _, device in built),
         tolerance_mm={name: axis.tolerance_mm for name, axis in rig.axes.items()},

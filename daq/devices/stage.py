@@ -2,19 +2,14 @@
 
 from __future__ import annotations
 
-import math
-
 from daq.description.rig import Axis, Rig
+from daq.devices.axis import LinearStage
 from daq.devices.links import Link, Wire
-from daq.errors import DeviceError
 from daq.ports import AxisState, Clock
 
 NUMBER = r"[-+]?\d+\.\d{4}"
 _AXIS = rf"[A-Z] {NUMBER} {NUMBER} (?:still|moving) (?:homed|lost)"
 _TAKEN = r"taken|refused \d (?P<why>[^,]+)"
-
-_POLL_S = 0.1
-_HOMING_GRACE_S = 10.0
 
 
 class SharedLink:
@@ -36,7 +31,7 @@ class SharedLink:
         self.link.close()
 
 
-class GcodeStage:
+class GcodeStage(LinearStage):
     """One axis of a G-code controller.
 
     Parameters
@@ -54,9 +49,8 @@ class GcodeStage:
     port = "stage"
 
     def __init__(self, name: str, axis: Axis, shared: SharedLink, clock: Clock) -> None:
-        self.name, self.limits_mm = name, axis.limits_mm
-        self._axis, self._shared, self._clock = axis, shared, clock
-        self._place_mm: float | None = None  # where the next move begins, as far as is known
+        super().__init__(name, axis, clock)
+        self._shared = shared
         before, behind = rf"(?:{_AXIS}, )*", rf"(?:, {_AXIS})*"
         self._status = (
             rf"axes {before}{axis.letter} (?P<target>{NUMBER}) (?P<encoder>{NUMBER}) "
@@ -88,39 +82,6 @@ class GcodeStage:
         """Return the controller's identity, verbatim."""
         return self._shared.link.identity
 
-    def home(self) -> None:
-        """Find the reference; returns when the axis says that it is homed and stands still."""
-        low_mm, high_mm = self.limits_mm
-        longest_s = 2 * (high_mm - low_mm) / self._axis.speed_mm_s + _HOMING_GRACE_S
-        until_ns = self._clock.now_ns() + round(longest_s * 1e9)
-        self._order(f"G28 {self._axis.letter}0")
-        state = self.state()
-        while state.moving or not state.homed:
-            if state.alarm:
-                raise self._error(f"alarm {state.alarm} while it looked for its reference")
-            if self._clock.now_ns() >= until_ns:
-                raise self._error("it has not found its reference in time", kind="timeout")
-            self._clock.sleep_until(self._clock.now_ns() + round(_POLL_S * 1e9))
-            state = self.state()
-
-    def start(self, position_mm: float) -> float:
-        """Start a move and return how long it will take, settling included [s].
-
-        Raises
-        ------
-        DeviceError
-            For a target that is not finite or lies outside the limits (nothing is sent then), and when the
-            controller refuses.
-        """
-        low_mm, high_mm = self.limits_mm
-        if not (math.isfinite(position_mm) and low_mm <= position_mm <= high_mm):
-            raise self._error(f"a move to {position_mm:g} mm leaves {low_mm:g} .. {high_mm:g} mm; not sent")
-        here_mm = self.state().position_mm if self._place_mm is None else self._place_mm
-        speed_mm_min = self._axis.speed_mm_s * 60
-        self._order(f"G1 {self._axis.letter}{position_mm:.4f} F{speed_mm_min:.4f}")
-        self._place_mm = position_mm
-        return self._axis.move_s(position_mm - here_mm)
-
     def state(self) -> AxisState:
         """Return where the axis is and what it does."""
         reply = self._shared.link.ask("M101", self._status, safe_to_repeat=True)
@@ -131,20 +92,21 @@ class GcodeStage:
             homed=reply["reference"] == "homed",
             alarm="" if reply["alarm"] == "none" else reply["alarm"],
         )
-        self._place_mm = None if state.moving else state.encoder_mm
-        return state
+        return self._known(state)
 
     def stop_now(self) -> None:
         """Stop every axis of the controller, past everything else, from any thread."""
         self._place_mm = None
         self._shared.link.send_now(b"M0\n")
 
+    def _send_home(self) -> None:
+        self._order(f"G28 {self._axis.letter}0")
+
+    def _send_move(self, position_mm: float) -> None:
+        self._order(f"G1 {self._axis.letter}{position_mm:.4f} F{self._axis.speed_mm_s * 60:.4f}")
+
     def _order(self, words: str) -> None:
         # safe to repeat: positions are absolute, and looking for a reference twice finds the same one
         reply = self._shared.link.ask(words, _TAKEN, safe_to_repeat=True)
         if reply["why"]:
             raise self._error(f"the controller refused {words!r}: {reply['why']}")
-
-    def _error(self, what: str, kind: str = "refused") -> DeviceError:
-        remedy = "Look at the axis, then home it or mend the target"
-        return DeviceError(what, where=f"axis {self.name}", remedy=remedy, kind=kind)

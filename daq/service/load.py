@@ -12,6 +12,7 @@ from pathlib import Path
 from typing import Any
 
 from daq.description import Measurement, Rig, joint_problems, parse
+from daq.devices.files import with_dialects
 from daq.errors import DescriptionError
 from daq.itinerary import Itinerary, compose
 
@@ -97,7 +98,7 @@ def _loaded(table: dict[str, Any], text: bytes, path: Path, rig_path: Path | Non
     problems: list[str] = []
     measurement: Measurement | None = None
     rig: Rig | None = None
-    rig_text = b""
+    rig_text, dialects = b"", dict[str, bytes]()
     try:
         measurement = parse(wishes.laid_over(table), str(path), "measurement")
     except DescriptionError as error:
@@ -105,14 +106,15 @@ def _loaded(table: dict[str, Any], text: bytes, path: Path, rig_path: Path | Non
     try:
         if rig_path is not None:
             rig_text = _read(rig_path)
-            rig = parse(_toml(rig_text, rig_path), str(rig_path), "rig")
+            rig_table, dialects = with_dialects(_toml(rig_text, rig_path), rig_path.parent)
+            rig = parse(rig_table, str(rig_path), "rig")
     except DescriptionError as error:
         problems += error.problems
     if measurement and rig:
         problems += joint_problems(measurement, rig, str(path))
     if problems or not measurement or not rig:
         raise DescriptionError(tuple(problems))
-    texts = {DESCRIPTION: text, RIG: rig_text}
+    texts = {DESCRIPTION: text, RIG: rig_text, **dialects}
     return Loaded(_in_hours(measurement, rig, wishes, path), rig, texts, wishes)
 
 

@@ -47,8 +47,11 @@ class TestStage:
         assert after.encoder_mm == after.position_mm
 
     def test_a_move_before_homing_is_refused(self, stage: Stage) -> None:
-        with pytest.raises(DeviceError, match="not homed"):
+        with pytest.raises(DeviceError) as refusal:
             stage.start(5.0)
+
+        assert refusal.value.kind == "refused"
+        assert not stage.state().moving
 
     def test_a_move_takes_no_longer_than_predicted_and_ends_at_its_target(
         self, homed: Stage, clock: Clock

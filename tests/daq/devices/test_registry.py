@@ -18,7 +18,7 @@ def test_an_unknown_driver_is_named_with_its_place_and_the_known_ones() -> None:
     with pytest.raises(DescriptionError) as problem, open_devices(rig, VirtualClock(0)):
         pass
 
-    known = "Name one of gcode-stage, scpi-counter, scpi-sensor."
+    known = f"Name one of {', '.join(known_drivers())}."
     assert problem.value.problems == (
         f"rig lantern-bench, devices.counter.driver: there is no driver 'scpi-countre'. {known}",
         f"rig lantern-bench, devices.room.driver: there is no driver ''. {known}",

@@ -1,0 +1,57 @@
+"""Rigs that between them hold every driver, every dialect and every simulated instrument."""
+
+from __future__ import annotations
+
+from typing import Any
+
+from daq.description import Rig, parse
+from daq.devices.files import with_dialects
+from tests.examples import CONFIGS, changed, rig_table
+
+_LOCAL = "tcp://127.0.0.1"
+
+
+def _dialect(file: str, port: int, **more: Any) -> dict[str, Any]:
+    place = {"driver": "dialect", "dialect": f"{file}.toml", "address": f"{_LOCAL}:{port}", "timeout_s": 0.5}
+    return place | more
+
+
+def _rig(table: dict[str, Any]) -> Rig:
+    read, _ = with_dialects(table, CONFIGS / "dialects")
+    return parse(read, "rig.toml", "rig")
+
+
+def lantern() -> Rig:
+    """Return the Lantern rig."""
+    return _rig(rig_table())
+
+
+def words() -> Rig:
+    """Return the Lantern rig with its stages, a frequency meter, a gauge and a shutter behind dialects."""
+    table = changed(
+        rig_table(),
+        devices__stages=_dialect("gcode-words", 7801),
+        devices__counter=_dialect("scpi-frequency", 7802, readout_s=0.1),
+        devices__gauge=_dialect("text-gauge", 7804, every_s=60.0),
+        devices__shutter=_dialect("text-shutter", 7805),
+        bench__instruments={
+            "stages": "gcode-stage",
+            "counter": "scpi-frequency",
+            "gauge": "gauge",
+            "shutter": "shutter",
+        },
+    )
+    return _rig(table)
+
+
+def scpi() -> Rig:
+    """Return the Lantern rig with its stages behind the SCPI dialect."""
+    table = changed(
+        rig_table(),
+        devices__stages=_dialect("scpi-stage", 7801),
+        bench__instruments={"stages": "scpi-stage"},
+    )
+    return _rig(table)
+
+
+RIGS = {"lantern": lantern, "words": words, "scpi": scpi}
