@@ -2,17 +2,21 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from math import nan
+from typing import Any
 
 import numpy as np
 
 from daq.estimate.detected import detected
+from daq.estimate.headline import headline
 from daq.estimate.plan import Plan, stand_places
 from daq.estimate.rows import Rows
+from daq.estimate.settle import Settled, settle, taking
 from daq.estimate.sums import Sums, sums_of
 from daq.estimate.tables import tables_of
 from daq.estimate.visits import complete_pairs, no_visits, write
-from daq.estimate.whole import Estimate, estimate_visits, headline
+from daq.estimate.whole import Estimate, estimate_visits
 from daq.records import EXCLUDING, Reading
 
 HISTORY_POINTS = 400  # the page draws no more
@@ -31,12 +35,12 @@ class Running:
         self._pair = stand_places(plan)[0].tolist()
         self._visits = no_visits(plan)
         self._open: dict[tuple[int, int], dict[int, Reading]] = {}
-        self._spoken: dict[
-            int, tuple[bool, int]
-        ] = {}  # by stand: was the attempt that speaks good, and which
+        self._spoken: dict[int, tuple[bool, int]] = {}  # by stand: is the attempt that speaks good, which
         self._closed_ns: dict[int, int] = {}
         self._first_ns: int | None = None
         self._estimate: Estimate | None = None
+        self._settled: Settled | None = None  # what the complete pairs say
+        self._touched: set[int] = set()  # pairs with news since then
         self._past_pairs: list[int] = []  # the complete pairs that the remembered history rests on
         self._past: dict[int, dict[str, float | None]] = {}
 
@@ -53,8 +57,22 @@ class Running:
     def estimate(self) -> Estimate:
         """Return the estimate so far, the one that `estimate_run` gives for the same readings."""
         if self._estimate is None:
-            self._estimate = estimate_visits(self._visits, self._plan)
+            self._estimate = estimate_visits(self._visits, self._plan, self._settle())
         return self._estimate
+
+    def _settle(self) -> Settled:
+        """Return what the complete pairs say; it is worked out again when one of them has news."""
+        complete = set(complete_pairs(self._visits, self._plan).tolist())
+        if self._settled is None or self._touched & complete:
+            before, self._settled = self._settled, settle(self._visits, self._plan)
+            if (
+                self._settled.strength is not None
+                or before is None
+                or before.estimator != self._settled.estimator
+            ):
+                self._past.clear()
+        self._touched.clear()
+        return self._settled
 
     def history(self) -> dict[str, list[float | None]]:
         """Return what was known after each complete pair, in the order of the pairs; None while undefined.
@@ -68,9 +86,12 @@ class Running:
         self._past_pairs = pairs
         stride = max(1, -(-len(pairs) // HISTORY_POINTS))
         ends = sorted({*range(stride, len(pairs) + 1, stride), len(pairs)} - {0})
+        settled = self._settle()
         if any(end not in self._past for end in ends):
-            sums = sums_of(self._visits, self._plan)
+            sums = sums_of(self._visits, self._plan, taking(settled, self._visits, self._plan))
             self._past = {end: self._past.get(end) or _known_after(sums, end, self._plan) for end in ends}
+            if settled.strength is not None:
+                _without_bands(self._past, settled)
         first_ns = self._first_ns or 0
         columns: dict[str, list[float | None]] = {
             "hours": [(self._closed_ns[pairs[end - 1]] - first_ns) / 3.6e12 for end in ends]
@@ -84,6 +105,7 @@ class Running:
         good = bool(found.fine.all()) and not any(reading.quality & EXCLUDING for reading in in_order)
         pair = self._pair[stand]
         self._visits.done[stand] = True
+        self._touched.add(pair)
         if pair in self._past_pairs:
             self._past.clear()
         self._note_times(pair, in_order)
@@ -120,7 +142,18 @@ _BANDS = ("kappa", "interval_low", "interval_high", "whole_low", "whole_high")
 def _known_after(sums: Sums, pairs: int, plan: Plan) -> dict[str, float | None]:
     """Return kappa and both bands as they stood after so many pairs."""
     then = Sums(sums.value[:pairs], sums.live[:pairs], sums.variance[:pairs])
-    numbers = headline(then, tables_of(then), plan)
+    numbers = headline(tables_of(then), pairs, plan)
+    return _bands(numbers)
+
+
+def _without_bands(past: dict[int, dict[str, float | None]], settled: Settled) -> None:
+    """Take the bands of earlier ends away, which a fitted source does not tell; the last one is refitted."""
+    for end in past:
+        past[end] |= dict.fromkeys(_BANDS[1:])
+    past[max(past)] = _bands(settled.numbers)
+
+
+def _bands(numbers: Mapping[str, Any]) -> dict[str, float | None]:
     undefined = (None, None)
     bands = (
         numbers["kappa"],

@@ -6,7 +6,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from daq.estimate.arrays import BoolArray, FloatArray, IntArray
+from daq.estimate.arrays import BoolArray, FloatArray, IntArray, added
 from daq.estimate.plan import Plan, stand_places
 from daq.estimate.visits import Visits, complete_pairs
 
@@ -77,7 +77,5 @@ def _blocks(
     value, live = visits.value[chosen], visits.live[chosen] * taking.strength[chosen]
     variance = visits.variance[chosen] + value**2 * taking.strength_var[chosen]
     cells = blocks * shape[1] * shape[2]
-    one, two, three = (
-        np.bincount(cell, numbers, cells).astype(float).reshape(shape) for numbers in (value, live, variance)
-    )
+    one, two, three = (added(cell, numbers, cells).reshape(shape) for numbers in (value, live, variance))
     return one, two, three

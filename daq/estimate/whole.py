@@ -10,19 +10,16 @@ from typing import Any
 import numpy as np
 
 from daq.estimate.arrays import FloatArray
-from daq.estimate.bars import bars
-from daq.estimate.blocks import jackknife
-from daq.estimate.contrast import divisor_gradient, epsilon_and_delta
+from daq.estimate.choice import PLAIN
+from daq.estimate.headline import by_position
 from daq.estimate.plan import Plan
-from daq.estimate.residual import weighted_kappa
+from daq.estimate.settle import Settled, settle, taking, told
 from daq.estimate.sums import Sums, sums_of
-from daq.estimate.tables import Tables, kappa_of, measured, over, plan_contrast, tables_of
-from daq.estimate.terms import PRINTABLE, Terms, terms_of
+from daq.estimate.tables import tables_of
+from daq.estimate.terms import Terms
 from daq.estimate.visits import Visits
 
 Interval = tuple[float, float]
-
-PLAIN = "plain contrast"
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -36,6 +33,10 @@ class Estimate:
     planned end; `whole_night_95` the band that holds at every look (None while infinite). `forecast_se` is
     expected at the planned end. `epsilon` and `delta` are weighted means [1/s]; `epsilon_se` is a jackknife
     too. `printable`: delta is large enough for kappa to be told, else epsilon is. `terms` holds every order.
+
+    `estimator` and `why` it was chosen; `kappa_model_se` what counting and the source as a random walk
+    (`drift_per_sqrt_hour`) give; `kappa_with_excluded` the plain contrast with the stands that are left out,
+    and how far it may lie from that without them (None: nothing is left out).
     """
 
     kappa: float | None
@@ -67,6 +68,10 @@ class Estimate:
     estimator: str = PLAIN
     why: str = ""
     dof: int | None = None
+    kappa_model_se: float | None = None
+    drift_per_sqrt_hour: float | None = None
+    kappa_with_excluded: float | None = None
+    excluded_change_se: float | None = None
     terms: Terms | None = None
 
     def to_json(self) -> dict[str, Any]:
@@ -74,9 +79,16 @@ class Estimate:
         return {field.name: _plain(getattr(self, field.name)) for field in fields(self)}
 
 
-def estimate_visits(visits: Visits, plan: Plan) -> Estimate:
-    """Return the estimate of a run from its visits, by the estimator that suits them."""
-    return estimate_sums(sums_of(visits, plan), plan)
+def estimate_visits(visits: Visits, plan: Plan, settled: Settled | None = None) -> Estimate:
+    """Return the estimate of a run from its visits, by the estimator that suits them.
+
+    Parameters
+    ----------
+    settled
+        What `settle` gave for the same complete pairs, where it is known already.
+    """
+    settled = settle(visits, plan) if settled is None else settled
+    return _estimate(sums_of(visits, plan, taking(settled, visits, plan)), plan, settled.numbers)
 
 
 def estimate_sums(sums: Sums, plan: Plan) -> Estimate:
@@ -87,106 +99,20 @@ def estimate_sums(sums: Sums, plan: Plan) -> Estimate:
     Positions without live time (every stand left out) carry no weight. The plain contrast of totals is best
     linear unbiased for complete mirrored pairs under a random walk of the source.
     """
-    return _estimate(sums, tables_of(sums), plan)
+    return _estimate(sums, plan, told(tables_of(sums), len(sums.value), plan))
 
 
-def _estimate(sums: Sums, tables: Tables, plan: Plan) -> Estimate:
+def _estimate(sums: Sums, plan: Plan, numbers: Mapping[str, Any]) -> Estimate:
     return Estimate(
-        **headline(sums, tables, plan),
-        **_by_position(sums, plan),
+        **numbers,
+        **by_position(sums, plan),
         goal_se=plan.goal_se,
         planned_pairs=plan.planned_pairs,
         visits=sums.visits,
         stands_used=sums.stands_used,
         stands_left_out=sums.stands_left_out,
         normalisation=plan.normalisation,
-        terms=terms_of(tables, plan),
     )
-
-
-_HEADLINE = (
-    *(
-        "kappa",
-        "kappa_se",
-        "kappa_counting_se",
-        "interval_95",
-        "whole_night_95",
-        "excess",
-        "excess_se",
-        "dof",
-    ),
-    *("forecast_se", "epsilon", "epsilon_se", "epsilon_counting_se", "delta", "delta_se"),
-)
-
-
-def headline(sums: Sums, tables: Tables, plan: Plan) -> Mapping[str, Any]:
-    """Return kappa, epsilon, delta and their bars by name, None for what is undefined."""
-    weights = np.where(tables.measured, plan.weights, 0.0)
-    pairs = len(sums.value)
-    numbers: dict[str, Any] = dict.fromkeys(_HEADLINE) | {"printable": False, "pairs": pairs}
-    if not weights.sum() > 0:
-        return numbers
-    what, signs = plan_contrast(plan)
-    numbers |= _weighted_sums(tables, weights, plan)
-    if numbers["delta"] > 0:
-        kappa, counting = weighted_kappa(
-            tables.rates, tables.variances, weights, what, signs, plan.normalisation
-        )
-        numbers |= {"kappa": kappa, "kappa_counting_se": counting}
-        replicates = kappa_of(tables.without, tables.without_measured, plan)
-        numbers |= bars(kappa, counting, replicates, pairs, plan.planned_pairs)
-    return numbers
-
-
-def _weighted_sums(tables: Tables, weights: FloatArray, plan: Plan) -> Mapping[str, Any]:
-    what, signs = plan_contrast(plan)
-    rates, variances = tables.rates, tables.variances
-    epsilon, delta = epsilon_and_delta(rates, what, plan.normalisation, signs)
-    shares = weights / weights.sum()
-    delta_gradient = divisor_gradient(rates, shares, what, plan.normalisation, signs)
-    delta_se = _spread(delta_gradient, variances)
-    return {
-        "epsilon": float(shares @ epsilon),
-        "epsilon_se": _scatter(tables, plan),
-        "epsilon_counting_se": _spread(shares[:, None] * what.residual, variances),
-        "delta": float(shares @ delta),
-        "delta_se": delta_se,
-        "printable": bool(shares @ delta >= PRINTABLE * delta_se),
-    }
-
-
-def _scatter(tables: Tables, plan: Plan) -> float | None:
-    """Return the jackknife standard error of epsilon; None below two blocks."""
-    weights = np.where(tables.without_measured, plan.weights, 0.0)
-    total = weights.sum(axis=-1)
-    if tables.blocks < 2 or not np.all(total > 0):
-        return None
-    what, _ = plan_contrast(plan)
-    return jackknife(np.sum(weights * (tables.without @ what.residual), axis=-1) / total)[0]
-
-
-def _by_position(sums: Sums, plan: Plan) -> Mapping[str, Any]:
-    """Return rates, signed sum and divisor by position over every stand used so far."""
-    parts = [sums] if sums.going_on is None else [sums, sums.going_on]
-    value, live, variance = (
-        sum(getattr(part, name).sum(axis=0) for part in parts) for name in ("value", "live", "variance")
-    )
-    rates, variances = over(value, live, np.nan), over(variance, live**2, np.nan)
-    seen = measured(live)
-    what, signs = plan_contrast(plan)
-    filled = np.where(seen[:, None], rates, 0.0)
-    epsilon, delta = epsilon_and_delta(filled, what, plan.normalisation, signs)
-    return {
-        "rates_hz": rates,
-        "rates_se_hz": np.sqrt(variances),
-        "epsilon_hz": np.where(seen, epsilon, np.nan),
-        "epsilon_se_hz": np.sqrt(variances @ what.residual**2),
-        "delta_hz": np.where(seen, delta, np.nan),
-    }
-
-
-def _spread(gradient: FloatArray, variances: FloatArray) -> float:
-    return float(np.sqrt(np.sum(gradient**2 * variances)))
 
 
 def _plain(value: Any) -> Any:

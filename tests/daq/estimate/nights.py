@@ -55,6 +55,12 @@ def plan(positions: int = 3, laps: int = 4, dead_time_s: float = DEAD_TIME_S) ->
     )
 
 
+def shuffled(of: Plan, generator: np.random.Generator) -> Plan:
+    """Return a plan whose stands show their openings in any order."""
+    order = np.concatenate([stand * 8 + generator.permutation(8) for stand in range(len(of.stand) // 8)])
+    return replace(of, opening=of.opening[order])
+
+
 def readings(
     of: Plan, generator: np.random.Generator, level: FloatArray | None = None, dwell_s: float = 2.2
 ) -> list[Reading]:
@@ -83,6 +89,14 @@ def reading(of: Plan, number: int, counts: float, dwell_s: float = 2.2) -> Readi
         live_s=dwell_s,
         values=(counts,),
     )
+
+
+def monitored(
+    rows: Sequence[Reading], generator: np.random.Generator, level: FloatArray, counts: float = 1e6
+) -> list[Reading]:
+    """Return readings with a second channel that counts the source itself."""
+    beside = generator.poisson(counts * level)
+    return [replace(row, values=(*row.values, float(beside[row.visit]))) for row in rows]
 
 
 def again(of: Reading, attempt: int, counts: float, quality: Quality = Quality.GOOD) -> Reading:
