@@ -15,7 +15,7 @@ from daq.storage.reader import open_visits
 from daq.storage.run import create_run
 
 POSITIONS_MM = np.array([-2.0, -0.7, 0.1, 0.9, 2.3])
-LAPS, SLITS, OPENINGS = 6, 3, 8
+LAPS, SLITS, OPENINGS = 8, 3, 8
 WEIGHTS = np.array([0.5, 1.0, 1.0, 1.0, 0.25])
 SIGNS = {"AB": np.array([1.0, 1, 1, -1, 1]), "AC": np.array([1.0, -1, 1, 1, 1]), "BC": np.ones(5)}
 
@@ -26,7 +26,7 @@ def triple_itinerary() -> Itinerary:
     place = stand % len(POSITIONS_MM)
     place = np.where(lap % 2 == 0, place, len(POSITIONS_MM) - 1 - place)
     return Itinerary(
-        opening=number % OPENINGS,
+        opening=np.where(stand % 2 == 0, number % OPENINGS, OPENINGS - 1 - number % OPENINGS),
         position_mm=POSITIONS_MM[place],
         start_s=np.float64(2.5) * number,
         dwell_s=np.full(len(number), 2.0),
@@ -47,20 +47,18 @@ def triple_itinerary() -> Itinerary:
 
 
 def triple_readings(plan: Itinerary) -> list[Reading]:
-    """Return the readings of the run: one stand bad and made again, one dark visit, five visits too few."""
+    """Return the readings of three whole pairs, a dark visit among them, and a few of the fourth."""
     draw = np.random.default_rng(3)
     fields = {letter: 100.0 * np.exp(0.4j * i) for i, letter in enumerate("ABC")}
     readings = []
-    for visit in range(len(plan.opening) - 5):
+    for visit in range(3 * 2 * len(POSITIONS_MM) * OPENINGS + 11):
         mask = int(plan.opening[visit])
         field = sum(fields[letter] for bit, letter in enumerate("ABC") if mask >> bit & 1)
         rate = abs(field) ** 2 + 800.0
         count = float(draw.poisson(2.0 * rate / (1 + rate * 40e-9)))
         readings.append(_reading(plan, visit, count, 1 + 1e-9 * visit))
-    bad = [replace(one, quality=Quality.MOVED) if one.visit == 18 else one for one in readings[16:24]]
-    again = [replace(one, attempt=2, values=(one.values[0] + 9.0,)) for one in readings[16:24]]
     dark = replace(readings[0], visit=-1, quality=Quality.DARK, reason=4, values=(93.0,))
-    return [*readings[:16], *bad, *again, dark, *readings[24:]]
+    return [*readings[:24], dark, *readings[24:]]
 
 
 def _reading(plan: Itinerary, visit: int, count: float, stretch: float) -> Reading:

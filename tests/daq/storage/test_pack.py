@@ -74,7 +74,7 @@ def test_a_script_of_forty_lines_gets_kappa_and_its_error_from_the_table_alone(
 ) -> None:
     estimate = estimate_run(open_visits(triple))
     assert len(SCRIPT.read_text().splitlines()) <= 40
-    assert estimate.pairs == 2
+    assert (estimate.pairs, estimate.estimator) == (3, "plain contrast")
 
     done = subprocess.run(
         [sys.executable, "-I", str(SCRIPT), str(bag / "data")], capture_output=True, check=True, text=True
