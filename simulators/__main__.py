@@ -17,7 +17,8 @@ from daq.devices.files import with_dialects
 from daq.errors import DaqError, DescriptionError
 from simulators.bench import build
 from simulators.faults import read_script
-from simulators.hosts import Listener, run_real
+from simulators.hosts import run_real
+from simulators.ports import listen
 from simulators.settings import read_settings
 from simulators.upsets import Upsets
 
@@ -47,7 +48,7 @@ def _serve(rig: Rig, faults: Mapping[str, Any] | None) -> None:
     built = build(rig, settings, settings.seed, clock, {}, upsets)
     try:
         listeners = {
-            name: Listener(rig.devices[name].address, instrument)
+            name: listen(rig.devices[name].address, instrument)
             for name, instrument in built.served(clock).items()
         }
     except OSError as error:

@@ -7,7 +7,7 @@ import selectors
 import socket
 import threading
 from collections.abc import Callable, Sequence
-from typing import Protocol, cast
+from typing import Protocol
 from urllib.parse import urlsplit
 
 from daq.ports import Connection
@@ -91,12 +91,12 @@ class Listener:
         "tcp://host:port" with the port that it really has (a port 0 is replaced by a free one).
     """
 
-    def __init__(self, address: str, instrument: Instrument) -> None:
+    def __init__(self, address: str, instrument: Instrument, scheme: str = "tcp") -> None:
         place = urlsplit(address)
         self.instrument = instrument
         self.socket = socket.create_server((place.hostname or "", place.port or 0))
         self.socket.setblocking(False)
-        self.address = f"tcp://{place.hostname}:{self.socket.getsockname()[1]}"
+        self.address = f"{scheme}://{place.hostname}:{self.socket.getsockname()[1]}"
         self.down = False
 
     def open(self) -> None:
@@ -107,14 +107,34 @@ class Listener:
         """End every connection, and new ones as they come."""
         self.down = True
 
+    def begin(self, selector: selectors.BaseSelector) -> None:
+        """Let a selector call us when somebody connects."""
+        selector.register(self.socket, selectors.EVENT_READ, _Acceptor(self, selector))
 
-def run_real(listeners: Sequence[Listener], stop: threading.Event) -> None:
+    def let_go(self) -> None:
+        """Let the port go."""
+        self.socket.close()
+
+
+class Listening(Protocol):
+    """An instrument at a real address."""
+
+    def begin(self, selector: selectors.BaseSelector) -> None:
+        """Let a selector call us when there is something to do."""
+
+    def let_go(self) -> None:
+        """Let the port go."""
+
+
+def run_real(listeners: Sequence[Listening], stop: threading.Event) -> None:
     """Answer on real ports until `stop` is set, then let the ports go."""
     with contextlib.ExitStack() as stack:
         selector = stack.enter_context(selectors.DefaultSelector())
-        stack.callback(_close_all, selector)
         for listener in listeners:
-            selector.register(listener.socket, selectors.EVENT_READ, _Acceptor(listener, selector))
+            stack.callback(listener.let_go)
+        stack.callback(_end_all, selector)
+        for listener in listeners:
+            listener.begin(selector)
         while not stop.is_set():
             for key, _ in selector.select(_LOOK_S):
                 key.data()
@@ -158,13 +178,13 @@ class _Answer:
         except OSError:
             data = b""
         if not data:
-            self._end()
+            self.end()
 
     def end_when_down(self) -> None:
         if self._listener.down:
-            self._end()
+            self.end()
 
-    def _end(self) -> None:
+    def end(self) -> None:
         self._selector.unregister(self._stream)
         self._stream.close()
 
@@ -177,6 +197,7 @@ class _Answer:
             self._send(data)
 
 
-def _close_all(selector: selectors.BaseSelector) -> None:
+def _end_all(selector: selectors.BaseSelector) -> None:
     for key in list(selector.get_map().values()):
-        cast(socket.socket, key.fileobj).close()
+        if isinstance(key.data, _Answer):
+            key.data.end()

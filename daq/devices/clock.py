@@ -9,7 +9,7 @@ import socket
 import threading
 import time
 from collections.abc import Callable
-from typing import cast
+from typing import Protocol, cast
 from urllib.parse import urlsplit
 
 from daq.ports import Connection, Signal
@@ -54,10 +54,15 @@ class RealClock:
 
     def wait_readable(self, connection: Connection, until_ns: int) -> bool:
         """Wait until bytes (or the end of the stream) can be read, at most until `until_ns`."""
-        return cast(_RealConnection, connection).wait_readable(self.left_s(until_ns))
+        return cast(_Waits, connection).wait_readable(self.left_s(until_ns))
 
     def connect(self, address: str, timeout_s: float) -> Connection:
-        """Open a byte stream to "tcp://host:port"; raises OSError when nobody answers in time."""
+        """Open a byte stream to an address of a rig file; raises OSError when nobody answers in time."""
+        scheme = address.partition(":")[0]
+        if scheme in ("serial", "socket", "rfc2217"):
+            from daq.devices.serials import open_serial
+
+            return open_serial(address, timeout_s)
         place = urlsplit(address)
         stream = socket.create_connection((place.hostname or "", place.port or 0), timeout_s)
         return _RealConnection(stream, timeout_s)
@@ -65,6 +70,12 @@ class RealClock:
     def left_s(self, until_ns: int) -> float:
         """Return how long it is until a run time [s], 0 when it has passed."""
         return min(max(0, until_ns - self.now_ns()) * 1e-9, threading.TIMEOUT_MAX)
+
+
+class _Waits(Protocol):
+    """A connection on the real clock."""
+
+    def wait_readable(self, timeout_s: float) -> bool: ...
 
 
 class _RealSignal:

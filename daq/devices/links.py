@@ -15,6 +15,7 @@ import threading
 from dataclasses import dataclass
 
 from daq.devices.lines import CHECK, Lines
+from daq.devices.locks import Hold, hold
 from daq.devices.turns import Turn
 from daq.errors import DeviceError
 from daq.ports import Clock
@@ -54,7 +55,7 @@ class Link:
     clock
         The run clock: it connects, and every deadline is on it.
     address
-        "tcp://host:port".
+        As in a rig file, "tcp://host:port" for example.
     wire
         How the device speaks.
     name
@@ -71,10 +72,11 @@ class Link:
     def __init__(self, clock: Clock, address: str, wire: Wire, name: str) -> None:
         self.identity, self.stale, self.resyncs = "", 0, 0
         self._clock, self._address, self._wire = clock, address, wire
-        self._where = f"{name} on {address}"
+        self._name, self._where = name, f"{name} on {address}"
         self._end = wire.reply_end.encode("ascii")
         self._turn, self._writing = Turn(clock), threading.Lock()
         self._lines: Lines | None = None
+        self._hold: Hold | None = None
         self._urgent = 0  # how often somebody wrote past the queue ...
         self._in_step_at = -1  # ... when the stream was last known to be in step
 
@@ -86,7 +88,7 @@ class Link:
         self.close()
 
     def open(self) -> None:
-        """Connect and ask the identity, on a link that is not open; raises DeviceError."""
+        """Take the address, connect and ask the identity, on a link that is not open; raises DeviceError."""
         self._take_turn()
         try:
             self._open()
@@ -98,6 +100,9 @@ class Link:
         lines, self._lines = self._lines, None
         if lines is not None:
             lines.close()
+        held, self._hold = self._hold, None
+        if held is not None:
+            held.release()
 
     def recover(self) -> None:
         """Close, open, and ask the identity: the cure for a lost link; raises DeviceError."""
@@ -229,9 +234,12 @@ class Link:
 
     def _open(self) -> None:
         wire = self._wire
+        if self._clock.kind == "real":  # an address on a virtual clock is nobody else's
+            self._hold = hold(self._address, self._name)
         try:
             connection = self._clock.connect(self._address, wire.timeout_s)
         except OSError as error:
+            self.close()
             what = f"nobody answers ({error})"
             raise DeviceError(what, where=self._where, remedy=CHECK, kind="lost") from error
         self._lines = Lines(self._clock, connection, self._end, wire.most_bytes, self._where, wire.ignore)
