@@ -20,7 +20,7 @@ from daq.records import Reading
 from daq.report import lines
 from daq.service.asked import Asked
 from daq.service.figures import figures_of
-from daq.service.load import config_dir, load
+from daq.service.load import Loaded, config_dir, load
 from daq.service.night import COMPLETE
 from daq.service.page import PageProcess, make_lab
 from daq.service.progress import Progress
@@ -41,7 +41,7 @@ def run(arguments: argparse.Namespace) -> Answer:
 
 
 def _carry_out(arguments: argparse.Namespace, transport: str, file: Path) -> Answer:
-    loaded = None if arguments.resume else load(file, wishes(arguments))
+    loaded = None if arguments.resume else _loaded(arguments, file)
     lab = arguments.resume.resolve().parents[1] if arguments.resume else arguments.into
     began_s = time.monotonic()
     with ExitStack() as stack:
@@ -63,6 +63,12 @@ def _carry_out(arguments: argparse.Namespace, transport: str, file: Path) -> Ans
             answer = Answer(answer.status, figures)
             _stay(page)
     return answer
+
+
+def _loaded(arguments: argparse.Namespace, file: Path) -> Loaded:
+    loaded = load(file, wishes(arguments))
+    faults = getattr(arguments, "faults", None)
+    return loaded if faults is None else loaded.with_faults(faults)
 
 
 class _Watch:

@@ -75,6 +75,8 @@ def _night_words(commands: Any) -> None:
         "--link", choices=("tcp", "direct"), default="tcp", help="how instruments are reached (tcp)"
     )
     _folders(rehearse)
+    script = "a fault script: what goes wrong on the simulated bench, and when"
+    rehearse.add_argument("--faults", type=Path, metavar="FILE", help=script)
     rehearse.add_argument(
         "--page", action="store_true", help="show the live page; on a terminal it stays until Ctrl-C"
     )

@@ -2,15 +2,18 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from importlib.metadata import EntryPoint, entry_points
-from typing import cast
+from typing import Any, cast
 
 from daq.description import Rig
 from daq.errors import DescriptionError
 from daq.ports import Bench
 
 
-def open_bench(rig: Rig, *, seed: int | None, transport: str, state: bytes | None) -> Bench:
+def open_bench(
+    rig: Rig, *, seed: int | None, transport: str, state: bytes | None, faults: Mapping[str, Any] | None
+) -> Bench:
     """Return the simulated bench of a rig, its hosts up, on a virtual clock.
 
     Parameters
@@ -21,6 +24,8 @@ def open_bench(rig: Rig, *, seed: int | None, transport: str, state: bytes | Non
         "tcp" (loopback sockets) or "direct" (in process); the same bytes either way.
     state
         What `Bench.keep` gave before the break, for a resumed rehearsal.
+    faults
+        A fault script for the bench to read, None for none.
 
     Raises
     ------
@@ -33,7 +38,7 @@ def open_bench(rig: Rig, *, seed: int | None, transport: str, state: bytes | Non
         )
     model = str(rig.bench.get("model", ""))
     opener = _registered("tercet.bench", model, "bench.model").load()
-    return cast(Bench, opener(rig, seed=seed, transport=transport, state=state))
+    return cast(Bench, opener(rig, seed=seed, transport=transport, state=state, faults=faults))
 
 
 def page_module() -> str:

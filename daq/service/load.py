@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 import tomllib
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from hashlib import sha256
 from importlib import resources
 from pathlib import Path
@@ -16,7 +16,7 @@ from daq.devices.files import with_dialects
 from daq.errors import DescriptionError
 from daq.itinerary import Itinerary, compose
 
-DESCRIPTION, RIG = "description.toml", "rig.toml"
+DESCRIPTION, RIG, FAULTS = "description.toml", "rig.toml", "faults.toml"
 LONGEST_H = 10_000
 
 
@@ -32,6 +32,23 @@ class Loaded:
     def itinerary(self) -> Itinerary:
         """Return the composed itinerary."""
         return compose(self.measurement, self.rig)
+
+    def with_faults(self, path: Path) -> Loaded:
+        """Return the same with a fault script beside the description, for a simulated bench to read.
+
+        Raises
+        ------
+        DescriptionError
+            When it cannot be read, or is no TOML.
+        """
+        text = _read(path)
+        _toml(text, path)
+        return replace(self, texts={**self.texts, FAULTS: text})
+
+    @property
+    def faults(self) -> Mapping[str, Any] | None:
+        """The fault script of a rehearsal, if there is one."""
+        return tomllib.loads(self.texts[FAULTS].decode()) if FAULTS in self.texts else None
 
     @property
     def bench_seed(self) -> int | None:
@@ -91,7 +108,8 @@ def load_run(folder: Path, wishes: Wishes) -> Loaded:
     """Return the description that a run folder holds verbatim, with the wishes it was started with."""
     path = folder / DESCRIPTION
     text = _read(path)
-    return _loaded(_toml(text, path), text, path, folder / RIG, wishes)
+    loaded = _loaded(_toml(text, path), text, path, folder / RIG, wishes)
+    return loaded.with_faults(folder / FAULTS) if (folder / FAULTS).exists() else loaded
 
 
 def _loaded(table: dict[str, Any], text: bytes, path: Path, rig_path: Path | None, wishes: Wishes) -> Loaded:

@@ -187,7 +187,13 @@ def _clock(
     if not wanted.transport:
         return RealClock(start_ns=last_ns), None
     kept = None if folder is None else _kept(folder)
-    bench = open_bench(loaded.rig, seed=loaded.bench_seed, transport=wanted.transport, state=kept)
+    bench = open_bench(
+        loaded.rig,
+        seed=loaded.bench_seed,
+        transport=wanted.transport,
+        state=kept,
+        faults=loaded.faults,
+    )
     stack.callback(bench.close)
     bench.clock.sleep_until(last_ns)
     return bench.clock, bench
