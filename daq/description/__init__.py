@@ -62,4 +62,11 @@ def joint_problems(measurement: Measurement, rig: Rig, source: str) -> tuple[str
             f"{source}, itinerary.opening_order: name every opening of the mask once: "
             f"{', '.join(sorted(have))}."
         )
+    channels = max(entry.channels for entry in rig.devices.values())
+    problems += [
+        f"{source}, estimate.{key}: there is no channel {channel}; the counter of the rig has channels 0 to "
+        f"{channels - 1}. Name one of them, or mend `channels` in the rig file."
+        for key, channel in measurement.estimate.channels_needed.items()
+        if channel >= channels
+    ]
     return tuple(problems)

@@ -100,14 +100,54 @@ class Pilot(Table):
         return self
 
 
-class Estimate(Table):
-    """How counts become a residual."""
+class Heralded(Table):
+    """Channel 0 counts coincidences of two others, within a window of this whole width."""
 
+    signal: Annotated[int, Field(ge=1, le=63)]
+    idler: Annotated[int, Field(ge=1, le=63)]
+    window_s: Annotated[float, Field(gt=0, le=1)]
+
+
+class Estimate(Table):
+    """How counts, or power readings, become a residual."""
+
+    counting: Literal["counts", "power"] = "counts"
+    fano: Annotated[float, Field(gt=0, le=1e6)] = 1.0
+    monitor_channel: Annotated[int, Field(ge=1, le=63)] | None = None
+    heralded: Heralded | None = None
     dead_time_s: NotNegative = 0.0
     dead_time_kind: Literal["non-paralysable", "paralysable"] = "non-paralysable"
     normalisation: Literal["pairwise", "central"] = "pairwise"
     goal_se: Positive | None = None
     dead_time_u_s: NotNegative = 0.0
+
+    @model_validator(mode="after")
+    def _one_kind(self) -> Estimate:
+        for_counts = self.dead_time_s or self.dead_time_u_s or self.fano != 1 or self.heralded
+        if self.counting == "power" and for_counts:
+            raise ValueError("dead time, fano and heralded are for counts, not for power readings")
+        return self
+
+    @property
+    def channels_needed(self) -> Mapping[str, int]:
+        """The channels that are named, by key."""
+        named = {} if self.monitor_channel is None else {"monitor_channel": self.monitor_channel}
+        if self.heralded is None:
+            return named
+        return named | {"heralded.signal": self.heralded.signal, "heralded.idler": self.heralded.idler}
+
+
+class Quality(Table):
+    """Thresholds of the quality rules, frozen with the run; no rule on counts bites below 3.3 sigma."""
+
+    fingerprint_p: Annotated[float, Field(gt=0, le=1e-3)] = 6.4e-5
+    dispersion_p: Annotated[float, Field(gt=0, le=1e-3)] = 8e-6
+    no_counts_p: Annotated[float, Field(gt=0, le=1e-3)] = 8e-6
+    monitor_sigma: Annotated[float, Field(ge=3.3)] = 4.5
+    gate_time: Annotated[float, Field(gt=0, le=1)] = 1e-3
+    clock_step_s: Positive = 0.5
+    counter_range: Annotated[float, Field(gt=0)] | None = None
+    full_range: Annotated[float, Field(gt=0, le=1)] = 0.9
 
 
 class Measurement(Table):
@@ -123,4 +163,5 @@ class Measurement(Table):
     expect: Expect
     pilot: Pilot | None = None
     estimate: Estimate = Estimate()
+    quality: Quality = Quality()
     notes: Mapping[str, Any] = {}

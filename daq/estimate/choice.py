@@ -45,20 +45,18 @@ def choose(visits: Visits, plan: Plan) -> Choice:
     whole = taken_visits(visits, plan, visits.good)
     if whole is None:
         return Choice(PLAIN, "there is no complete pair with times yet", taken)
-    if spread_out(visits, plan):
+    uneven, share = unbalance(visits, plan, whole), _left_out(visits, plan)
+    spread = spread_out(visits, plan)
+    if uneven > MIRRORED and spread:
         why = "the visits of a stand lie far apart in time, which no estimator mends: the order is at fault"
         return Choice(PLAIN, why, taken)
-    uneven = unbalance(visits, plan, whole)
-    share = _left_out(visits, plan)
-    if taken is not None and uneven <= MIRRORED and share <= LEFT_OUT:
-        return _monitored(visits, plan, taken) or Choice(
-            PLAIN, f"the stands are mirrored and {100 * share:.1f} % of them are left out", taken
-        )
     if uneven > MIRRORED:
         return Choice(JOINT, f"the stands are not mirrored (unbalance {uneven:.2f})", taken)
-    return Choice(
-        JOINT, f"{100 * share:.1f} % of the stands are left out, and their good visits count", taken
-    )
+    if taken is None or (share > LEFT_OUT and not spread):
+        why = f"{100 * share:.1f} % of the stands are left out, and their good visits count"
+        return Choice(JOINT, why, taken)
+    why = f"the stands are mirrored and {100 * share:.1f} % of them are left out"
+    return _monitored(visits, plan, taken) or Choice(PLAIN, why, taken)
 
 
 def monitor_taking(visits: Visits, plan: Plan) -> Taking:

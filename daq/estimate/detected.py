@@ -63,9 +63,9 @@ def _coincidences(rows: Rows, live: FloatArray, plan: Plan, pairs: Heralded) -> 
 
     Notes
     -----
-    Accidentals are the product of both singles rates, the window and the live time. Every true coincidence
-    is in both singles too: the covariances are part of the variance. Each channel's losses scale the
-    coincidences.
+    Accidentals are the product of both singles rates, the window and the live time. Given both singles their
+    number is Poisson about that product, so taking it away adds nothing to the variance of the coincidences.
+    Each channel's dead time loses coincidences in the same share as singles.
 
     References
     ----------
@@ -75,13 +75,8 @@ def _coincidences(rows: Rows, live: FloatArray, plan: Plan, pairs: Heralded) -> 
     raw = tuple(rows.values[:, channel] for channel in (pairs.signal, pairs.idler))
     first, second = (_counts(channel, none, live, plan)[0] for channel in raw)
     loss = np.prod([_ratio(true, seen) for true, seen in zip((first, second), raw, strict=True)], axis=0)
-    both, share = rows.values[:, DETECTOR] * loss, pairs.window_s / live
-    chance = share * first * second
-    seen = np.where(both >= 0, both, np.nan)
-    spread = seen * (loss - 2 * share * (first + second)) + share**2 * (
-        second**2 * first + first**2 * second + 2 * first * second * seen
-    )
-    return seen - chance, np.maximum(spread, 0.0) * plan.fano
+    seen = np.where(rows.values[:, DETECTOR] >= 0, rows.values[:, DETECTOR], np.nan)
+    return seen * loss - pairs.window_s / live * first * second, seen * loss**2 * plan.fano
 
 
 def _ratio(true: FloatArray, seen: FloatArray) -> FloatArray:

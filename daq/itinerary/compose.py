@@ -9,7 +9,7 @@ from numpy.typing import NDArray
 
 from daq import openings
 from daq.description import Measurement, Rig
-from daq.estimate.plan import Plan
+from daq.estimate.plan import Heralded, Plan
 from daq.estimate.slits import expected_rates_hz, planned_weights
 from daq.itinerary.orders import FloatArray, IntArray, Order, blocked, zigzag
 from daq.records import Visit
@@ -170,6 +170,10 @@ def plan_of(itinerary: Itinerary, measurement: Measurement) -> Plan:
         position=itinerary.position_index,
         opening=itinerary.opening_index,
         goal_se=settings.goal_se,
+        counting=settings.counting,
+        fano=settings.fano,
+        monitor=settings.monitor_channel,
+        heralded=None if settings.heralded is None else Heralded(**settings.heralded.model_dump()),
     )
 
 
