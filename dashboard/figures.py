@@ -90,9 +90,8 @@ def strip(feed: Feed) -> dict[str, Any]:
     rate = feed["rate"]
     if not rate["hours"]:
         return {"empty": "The first column appears after the first stand."}
-    scale, word = _rate_unit(rate["high"])
-    # Blinded, three digits: the sum over the night must not give the hidden opening back.
-    span = max(rate["high"]) if is_blinded(feed) else max(rate["high"]) - min(rate["low"])
+    scale, word = _strip_unit(feed)
+    span = max(rate["high"]) - min(rate["low"])
     return {
         "unit": word,
         "hours": _rounded(rate["hours"], 1, rate["hours"][-1]),
@@ -223,6 +222,13 @@ def _silhouette(row: Column, top: float) -> list[int | None]:
     most = np.fmax.reduceat(rates, np.arange(0, rates.size, step)) if rates.size else rates
     heights = _FULL * np.sqrt(np.maximum(most, 0) / top)
     return [None if height != height else round(height) for height in heights.tolist()]
+
+
+def _strip_unit(feed: Feed) -> tuple[float, str]:
+    """Return the unit of the strip; blinded, a relative one: the total would give the hidden opening back."""
+    if not is_blinded(feed):
+        return _rate_unit(feed["rate"]["high"])
+    return float(np.mean(feed["rate"]["mean"])) / 100, "percent of the mean so far"
 
 
 def _tinted(feed: Feed) -> list[float]:

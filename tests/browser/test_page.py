@@ -113,6 +113,18 @@ def test_a_page_that_knows_everything_gets_an_empty_answer(lab: Lab, open_page: 
     assert waited.value.status == 204
 
 
+def test_an_empty_answer_is_contact_too(lab: Lab, open_page: Open) -> None:
+    lab.put(ended())
+    page = open_page(clock=True)
+    wait_for_curves(page)
+
+    for _ in range(5):
+        with page.expect_response(NEWS):
+            page.clock.run_for(3000)
+
+    expect(page.locator("#lost")).to_be_hidden()
+
+
 def test_a_hidden_tab_asks_nothing_and_a_shown_one_at_once(lab: Lab, open_page: Open, watch: Watch) -> None:
     lab.put(feed())
     page = open_page(clock=True)
@@ -150,7 +162,7 @@ def test_lost_contact_is_said_within_twelve_seconds_and_clears_itself(
     lab.serve()
     page.clock.run_for(5000)
     expect(page.locator("#lost")).to_be_hidden()
-    unreached = re.compile("ERR_CONNECTION_REFUSED|server did not respond")
+    unreached = re.compile("ERR_CONNECTION_REFUSED|ERR_CONNECTION_RESET|server did not respond")
     watch.complaints[:] = [text for text in watch.complaints if not unreached.search(text)]
 
 

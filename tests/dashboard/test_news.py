@@ -12,7 +12,7 @@ import pytest
 from dash.exceptions import PreventUpdate
 from plotly.utils import PlotlyJSONEncoder
 
-from dashboard.app import news
+from dashboard.news import news
 from tests.dashboard.feeds import START, feed, put
 
 

@@ -8,8 +8,8 @@ from typing import Any
 import pytest
 
 from daq.estimate import anytime_multiplier
-from dashboard.app import news
 from dashboard.figures import night, pattern, plates, strip
+from dashboard.news import news
 from dashboard.residual import INNER, OUTER, band_to_read, first_band_pair, residual_view, unit
 from dashboard.view import view
 from tests.dashboard import feeds
@@ -238,6 +238,13 @@ def test_a_blinded_run_gives_nothing_of_kappa_away(blinding: str | None, chosen:
 def test_a_blinded_run_hides_the_pattern_of_the_fullest_opening() -> None:
     assert "measured" not in pattern(feed(blinding="frozen"), 7)
     assert "measured" in pattern(feed(blinding="frozen"), 3)
+
+
+def test_a_blinded_run_shows_its_count_rate_only_relative_to_itself() -> None:
+    shown = strip(feed(blinding="frozen"))
+
+    assert shown["unit"] == "percent of the mean so far"
+    assert sum(shown["mean"]) / len(shown["mean"]) == pytest.approx(100, abs=1e-2)
 
 
 def test_a_blinded_run_still_shows_its_error_bar() -> None:

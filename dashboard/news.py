@@ -1,0 +1,134 @@
+"""What a browser has not seen yet: the page cut into parts, each sent only when it changed."""
+
+from __future__ import annotations
+
+import hashlib
+import json
+from collections.abc import Mapping
+from dataclasses import dataclass
+from datetime import datetime
+from functools import lru_cache
+from pathlib import Path
+from typing import Any
+
+from dash.exceptions import PreventUpdate
+
+from daq.errors import StorageError
+from dashboard import figures, lab
+from dashboard.components import render
+from dashboard.view import empty_view, is_silent, unreadable_view, view, waiting_view
+from dashboard.words import clock
+
+WORDS = (
+    *("header", "verdict", "line", "warnings", "kappa", "now"),
+    *("sensors", "log", "rail", "runs", "footer"),
+)
+CURVES = ("night-data", "pattern-data", "plates-data", "strip-data")
+
+
+def news(
+    folder: Path, run: str | None, chosen: Any, seen: Mapping[str, str], now: datetime
+) -> dict[str, Any]:
+    """Return the parts of the page that a browser has not seen yet, with the new state of what it has seen.
+
+    Parameters
+    ----------
+    folder
+        The lab.
+    run
+        The run to show; None for the one written last.
+    chosen
+        Bit mask of the opening whose pattern is shown; the fullest for any other value.
+    seen
+        What the last answer to this browser said under "seen".
+    now
+        The wall clock, which alone tells silence.
+
+    Raises
+    ------
+    PreventUpdate
+        When nothing changed.
+    """
+    scene = _scene(folder, run, chosen, now)
+    mark = _digest(repr(scene))
+    if seen.get("mark") == mark:
+        raise PreventUpdate
+    parts, digests = _parts(scene)
+    fresh = {name: part for name, part in parts.items() if seen.get(name) != digests[name]}
+    return {name: render(name, part) for name, part in fresh.items()} | {"seen": digests | {"mark": mark}}
+
+
+@dataclass(frozen=True, slots=True)
+class _Scene:
+    """All that the page depends on: two equal scenes look the same, whoever asks."""
+
+    folder: Path
+    names: tuple[str, ...]
+    run: str | None
+    stamp: str | None = None
+    silent: bool = False
+    chosen: int | None = None
+
+
+def _scene(folder: Path, run: str | None, chosen: Any, now: datetime) -> _Scene:
+    names = tuple(lab.run_names(folder))
+    shown = run if run is not None else names[-1] if names else None
+    if shown is None or shown not in names:
+        return _Scene(folder, names, shown)
+    stamp = lab.stamp(folder, shown)
+    mask = chosen if isinstance(chosen, int) else None
+    try:
+        silent = is_silent(lab.read(folder, shown, stamp), now)
+    except StorageError:
+        silent = False
+    return _Scene(folder, names, shown, stamp, silent, mask)
+
+
+@lru_cache(maxsize=32)
+def _parts(scene: _Scene) -> tuple[dict[str, Any], dict[str, str]]:
+    """Return the parts of the page and their digests; twenty pages of one run cost as much as one."""
+    runs = [{"name": name, "shown": name == scene.run} for name in reversed(scene.names)]
+    parts = _said(scene) | {"runs": runs}
+    return parts, {name: _digest(part) for name, part in parts.items()}
+
+
+def _said(scene: _Scene) -> dict[str, Any]:
+    if scene.run is None:
+        return _bare(empty_view(scene.folder.name))
+    if scene.stamp is None:
+        return _bare(waiting_view(scene.run))
+    try:
+        feed = lab.read(scene.folder, scene.run, scene.stamp)
+    except StorageError as error:
+        return _bare(unreadable_view(scene.run, str(error)))
+    return _whole(feed, scene)
+
+
+def _whole(feed: dict[str, Any], scene: _Scene) -> dict[str, Any]:
+    said = view(feed, scene.silent)
+    masks = feed["openings"]
+    chosen = max(masks) if scene.chosen is None or scene.chosen not in masks else scene.chosen
+    return {
+        "page": "whole",
+        **said,
+        "line": _line(said),
+        "footer": f"Data up to {clock(feed['updated_utc'], seconds=True)}.",
+        "night-data": figures.night(feed),
+        "pattern-data": figures.pattern(feed, chosen),
+        "plates-data": figures.plates(feed),
+        "strip-data": figures.strip(feed),
+    }
+
+
+def _bare(said: dict[str, Any]) -> dict[str, Any]:
+    return {"page": "bare", **said, "line": _line(said), "footer": ""}
+
+
+def _line(said: dict[str, Any]) -> dict[str, Any]:
+    """Take the ticking line out of the verdict, which is announced whenever it changes."""
+    verdict = said["verdict"]
+    return {key: verdict.pop(key) for key in ("line", "ends_utc", "progress")}
+
+
+def _digest(part: Any) -> str:
+    return hashlib.blake2b(json.dumps(part).encode(), digest_size=4).hexdigest()
