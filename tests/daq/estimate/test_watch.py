@@ -1,8 +1,10 @@
+from typing import Any
+
 import pytest
 
 from daq.estimate.watch import Watched, concerns
 
-QUIET = {
+QUIET: dict[str, Any] = {
     "levels": [1.0] * 100,
     "hours": 3.0,
     "pairs": 10,

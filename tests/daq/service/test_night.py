@@ -127,10 +127,10 @@ def test_who_asks_for_the_end_gets_it_after_the_stand(tmp_path):
     assert bench.sink.kept[-1].visit == 15
 
 
-def asking(night, *whats):
+def asking(night, *wanted):
     """Let operators ask one thing each time the run listens, from the second time on."""
     waiting = iter(
-        [[], *([Request(number, what, "night watch", "now")] for number, what in enumerate(whats))]
+        [[], *([Request(number, what, "night watch", "now")] for number, what in enumerate(wanted))]
     )
     night.asked.requests = lambda: next(waiting, [])
     settled: list[tuple[str, str]] = []
