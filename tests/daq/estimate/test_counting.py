@@ -1,5 +1,7 @@
 from __future__ import annotations
 
+import math
+
 import numpy as np
 import pytest
 from hypothesis import given
@@ -27,7 +29,7 @@ def test_without_dead_time_every_count_is_seen(kind: str) -> None:
     assert true_rate_hz(seen_rate_hz(5e6, 0.0, kind), 0.0, kind) == 5e6
 
 
-@pytest.mark.parametrize(("kind", "most_hz"), [("non-paralysable", 1e6), ("paralysable", 1e6 / np.e)])
+@pytest.mark.parametrize(("kind", "most_hz"), [("non-paralysable", 1e6), ("paralysable", 1e6 / math.e)])
 def test_a_rate_above_saturation_is_refused(kind: str, most_hz: float) -> None:
     assert within_range(most_hz * 0.999, 1e-6, kind)
     with pytest.raises(ValueError, match=f"is out of range for a {kind} dead time of 1e-06 s"):
