@@ -68,10 +68,18 @@ class Order(Table):
 
 
 class Line(Table):
-    """A periodic ripple of the source or the room: its period, and its relative amplitude where known."""
+    """A periodic ripple of the source or the room: period, its uncertainty, relative amplitude where known."""
 
     period_s: Positive
-    amplitude: NotNegative = 0.0
+    period_u_s: NotNegative = 0.0
+    amplitude: Annotated[float, Field(ge=0, lt=1)] = 0.0
+
+
+class Relaxing(Table):
+    """Wandering about a mean: relative standard deviation, and the time in which it is forgotten."""
+
+    sd: Positive
+    time_s: Positive
 
 
 class Expect(Table):
@@ -80,23 +88,30 @@ class Expect(Table):
     single_slit_rate_hz: Positive
     background_rate_hz: NotNegative = 0.0
     drift_per_sqrt_hour: NotNegative = 0.0
+    relaxing: tuple[Relaxing, ...] = ()
     level_by_hour: Annotated[tuple[Positive, ...], Field(min_length=1)] = (1.0,)
     lines: tuple[Line, ...] = ()
     monitor_rate_hz: Positive | None = None
 
 
 class Pilot(Table):
-    """What a pilot found: the structure function of the log rate, with its errors, and periodic lines."""
+    """How the source wandered while it was watched: counts of a steady opening, or their structure function.
 
-    lags_s: Annotated[tuple[Positive, ...], Field(min_length=1)]
-    structure: tuple[float, ...]
-    structure_se: tuple[Positive, ...]
-    lines: tuple[Line, ...] = ()
+    `counts` in a row, each over `sample_s`; or the structure function of the log rate at `lags_s`.
+    """
+
+    sample_s: Positive = 1.0
+    counts: Annotated[tuple[Annotated[int, Field(ge=1)], ...], Field(min_length=100)] | None = None
+    lags_s: Annotated[tuple[Positive, ...], Field(min_length=1)] | None = None
+    structure: tuple[NotNegative, ...] | None = None
 
     @model_validator(mode="after")
-    def _one_length(self) -> Pilot:
-        if not len(self.lags_s) == len(self.structure) == len(self.structure_se):
-            raise ValueError("lags_s, structure and structure_se need the same length")
+    def _one_form(self) -> Pilot:
+        given = [part is not None for part in (self.lags_s, self.structure)]
+        if (self.counts is None and not all(given)) or (self.counts is not None and any(given)):
+            raise ValueError("give either counts, or lags_s and structure")
+        if self.lags_s and self.structure and len(self.lags_s) != len(self.structure):
+            raise ValueError("lags_s and structure need the same length")
         return self
 
 
