@@ -9,6 +9,7 @@ from importlib.metadata import EntryPoints, entry_points
 from typing import Protocol, cast
 
 from daq.description.rig import DeviceEntry, Rig
+from daq.devices.guard import StopOrder, guarded
 from daq.devices.mask import MaskTranslator
 from daq.errors import DescriptionError
 from daq.ports import Clock, Counter, Device, Devices, Sensor, Shutter, Stage
@@ -23,6 +24,12 @@ class Driver(Protocol):
 
     def of_rig(self, name: str, rig: Rig, clock: Clock) -> Sequence[Device]:
         """Return the devices behind one entry of [devices]: for a controller, one for each of its axes."""
+
+
+class _Stops(Protocol):
+    """A stage that says what stops it, as bytes."""
+
+    stop_bytes: bytes
 
 
 @cache  # reading the metadata of everything that is installed takes a while
@@ -67,10 +74,22 @@ def open_devices(rig: Rig, clock: Clock) -> Iterator[Devices]:
         for device in _driver(entry.driver).of_rig(name, rig, clock)
     ]
     with ExitStack() as opened:
+        if clock.kind == "real":  # in virtual time nothing can go on moving without this process
+            opened.enter_context(guarded(_stop_orders(rig, built)))
         for _, device in built:
             opened.callback(device.close)
             device.open()
         yield _devices(rig, built)
+
+
+def _stop_orders(rig: Rig, built: Sequence[tuple[str, Device]]) -> Sequence[StopOrder]:
+    """Return what stops each controller, once."""
+    orders = {}
+    for name, axis in rig.axes.items():
+        stage = next(device for port, device in built if port == "stage" and device.name == name)
+        text = cast(_Stops, stage).stop_bytes.decode("ascii")
+        orders[axis.device, text] = StopOrder(axis.device, rig.devices[axis.device].address, text)
+    return tuple(orders.values())
 
 
 def _driver(name: str) -> Driver:

@@ -47,6 +47,7 @@ class GcodeStage(LinearStage):
     """
 
     port = "stage"
+    stop_bytes = b"M0\n"
 
     def __init__(self, name: str, axis: Axis, shared: SharedLink, clock: Clock) -> None:
         super().__init__(name, axis, clock)
@@ -97,7 +98,7 @@ class GcodeStage(LinearStage):
     def stop_now(self) -> None:
         """Stop every axis of the controller, past everything else, from any thread."""
         self._place_mm = None
-        self._shared.link.send_now(b"M0\n")
+        self._shared.link.send_now(self.stop_bytes)
 
     def _send_home(self) -> None:
         self._order(f"G28 {self._axis.letter}0")
