@@ -78,6 +78,12 @@ class Journal:
                 connection.execute("ROLLBACK")
             raise stored(error, self._where) from error
 
+    def recount(self) -> None:
+        """Look up how many rows are durable, after something broke in between a commit and its note."""
+        with rim(self._where):
+            newest = self._connection.execute("SELECT max(row) FROM visits").fetchone()[0]
+        self.rows = self.sealed if newest is None else newest + 1
+
     def setting(self, name: str) -> int:
         """Return a setting of the connection, as SQLite tells it."""
         return int(self._connection.execute(f"PRAGMA {name}").fetchone()[0])

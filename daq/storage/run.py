@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import json
 import os
 import threading
 import warnings
@@ -14,19 +13,19 @@ import zarr
 
 from daq.errors import StorageError
 from daq.records import Reading
+from daq.storage.begin import plain, write_beginning
 from daq.storage.digest import digest, gate_digest
 from daq.storage.disk import Disk
 from daq.storage.events import Events
-from daq.storage.journal import Journal, create_journal, drop_journal
-from daq.storage.layout import CHUNK, FORMAT, list_mode, looked_up
+from daq.storage.journal import Journal, drop_journal
+from daq.storage.layout import CHUNK, looked_up
 from daq.storage.lock import LOCK, lock_run
 from daq.storage.manifest import write_manifest
 from daq.storage.reader import open_visits, planned_stands, read_meta, tries_so_far
 from daq.storage.rows import Rows
-from daq.storage.seal import FINISHED, ZARR, DurableStore, add_array, create_zarr, open_root, write_rows
+from daq.storage.seal import FINISHED, ZARR, DurableStore, add_array, open_root, write_rows
 from daq.storage.sealer import Sealer
 from daq.storage.snapshot import JOURNAL, snapshot
-from daq.storage.texts import write_texts
 from daq.storage.trouble import rim
 
 if TYPE_CHECKING:
@@ -78,7 +77,13 @@ class Archive:
         StorageError
             When it could not be stored; all readings before it are safe, and a later commit may succeed.
         """
-        row = self._append(reading) if self._events is None else self._append_with_events(reading)
+        try:
+            row = self._append(reading) if self._events is None else self._append_with_events(reading)
+        except StorageError:
+            raise
+        except BaseException:  # Ctrl-C may fall between what SQLite did and what we noted of it
+            self._look_up_again()
+            raise
         self._disk.step("committed")
         self._note_try(reading.visit, reading.attempt)
         if (row + 1) % min(self._chunk, 64) == 0 and row + 1 - self.journal.sealed >= self._chunk:
@@ -172,6 +177,12 @@ class Archive:
     def __exit__(self, *_: object) -> None:
         self.close()
 
+    def _look_up_again(self) -> None:
+        with self._mutex:
+            self.journal.recount()
+        if self._events is not None:
+            self._events = Events(self.folder, self.meta, self._disk)
+
     def _append(self, reading: Reading) -> int:
         if reading.events is not None:
             self.append_events(reading.events)  # refused: there is no column for them
@@ -231,23 +242,7 @@ def create_run(
         folder.mkdir(parents=True, exist_ok=True)
         lock = lock_run(folder)
     try:
-        with rim(folder):
-            _refuse_second(folder)
-            digests = write_texts(folder, texts, disk)
-            whole = plain(
-                {
-                    **{name: getattr(itinerary, name) for name in ("positions_mm", "weights", "signs")},
-                    **meta,
-                    **list_mode(meta, float(itinerary.dwell_s.max())),
-                    "format": FORMAT,
-                    "chunk": chunk,
-                    "texts_sha256": digests,
-                }
-            )
-            create_zarr(folder, whole, itinerary, disk)
-            create_journal(folder, Rows(whole), whole)
-            disk.sync_dir(folder)
-            disk.sync_dir(folder.parent)
+        write_beginning(folder, texts, itinerary, {**meta, "chunk": chunk}, disk)
         return Archive(folder, lock, disk)
     except BaseException:
         os.close(lock)
@@ -258,6 +253,8 @@ def open_run(folder: Path, *, disk: Disk | None = None) -> Archive:
     """Return the archive of a run that was broken off, to go on with; no acknowledged visit is missing."""
     if not folder.is_dir():
         raise StorageError("there is no such run", where=str(folder), remedy="Check the path")
+    if not (folder / JOURNAL).exists():
+        raise _no_journal(folder)
     with rim(folder):
         lock = lock_run(folder)
     try:
@@ -265,23 +262,6 @@ def open_run(folder: Path, *, disk: Disk | None = None) -> Archive:
     except BaseException:
         os.close(lock)
         raise
-
-
-def plain(meta: Mapping[str, Any]) -> dict[str, Any]:
-    """Return a mapping as plain JSON values; numbers of numpy become numbers, and NaN is refused."""
-    done: dict[str, Any] = json.loads(json.dumps(dict(meta), default=_plain_value, allow_nan=False))
-    return done
-
-
-def _plain_value(value: Any) -> Any:
-    return value.tolist() if hasattr(value, "tolist") else str(value)
-
-
-def _refuse_second(folder: Path) -> None:
-    if (folder / JOURNAL).exists() or (folder / ZARR).exists():
-        raise StorageError(
-            "the folder holds a run already", where=str(folder), remedy="Choose another folder"
-        )
 
 
 def _no_journal(folder: Path) -> StorageError:

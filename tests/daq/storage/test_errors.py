@@ -108,6 +108,7 @@ def test_a_finished_run_is_not_gone_on_with(tmp_path: Path) -> None:
 
     with pytest.raises(StorageError, match="the run is finished"):
         open_run(tmp_path / "run")
+    assert not (tmp_path / "run" / "writer.lock").exists()
 
 
 @pytest.mark.parametrize("left", ["nothing", "zarr", "texts"])

@@ -11,6 +11,7 @@ import pytest
 import xarray as xr
 
 from daq.errors import StorageError
+from daq.storage.disk import Disk
 from daq.storage.events import Piece, read_events
 from daq.storage.layout import EVENTS
 from daq.storage.reader import open_visits
@@ -165,3 +166,28 @@ def test_a_missing_chunk_of_events_is_named_and_costs_no_visit(tmp_path: Path) -
 
     assert found.problems == ("run.zarr/event_gap/c/1 is missing: events 256 to 511 are lost",)
     assert found.visits == 10
+
+
+class Stopped(Disk):
+    """A disk at which somebody presses Ctrl-C when the events of a visit are written."""
+
+    armed = False
+
+    def step(self, name: str) -> None:
+        if self.armed and name == "events":
+            self.armed = False
+            raise KeyboardInterrupt
+
+
+def test_a_visit_that_a_stop_broke_off_leaves_no_event_behind(tmp_path: Path) -> None:
+    disk = Stopped()
+    with started(tmp_path / "run", chunk=16, tick_s=1e-9, disk=disk) as archive:
+        archive.commit(listed(2))
+        disk.armed = True
+        with pytest.raises(KeyboardInterrupt):
+            archive.commit(listed(4))
+
+        assert archive.commit(listed(3)) == 1
+
+        for row, visit in enumerate((2, 3)):
+            np.testing.assert_array_equal(read_events(tmp_path / "run", [row])[0], ticks_of(visit))

@@ -248,3 +248,18 @@ def test_lengths_around_a_chunk_are_finished_whole(tmp_path: Path, rows: int) ->
     dataset = open_visits(tmp_path / "run")
     assert dataset.sizes["row"] == rows
     assert_equal_to(readings, dataset)
+
+
+def test_a_row_whose_number_was_not_noted_is_found_again(tmp_path: Path) -> None:
+    with started(tmp_path / "run", chunk=16) as archive:
+        commit_all(archive, [reading(visit) for visit in range(20)])
+        archive.journal.rows -= 1  # as Ctrl-C leaves it between SQLite's commit and our note
+
+        archive.journal.recount()
+
+        assert archive.commit(reading(20)) == 20
+        while archive.seal_next():
+            pass
+        archive.journal.forget(archive.rows)
+        archive.journal.recount()
+        assert archive.rows == 21
