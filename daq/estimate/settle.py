@@ -14,6 +14,7 @@ from daq.estimate.choice import JOINT, MONITORED, PLAIN, Choice, choose, monitor
 from daq.estimate.exclusions import without_exclusions
 from daq.estimate.headline import headline
 from daq.estimate.irregular import irregular
+from daq.estimate.linearity import dead_time_left_s
 from daq.estimate.plan import Plan
 from daq.estimate.sensitivity import walk_per_s, walk_variance
 from daq.estimate.sums import Taking, plainly, sums_of
@@ -56,8 +57,10 @@ def taking(settled: Settled, visits: Visits, plan: Plan) -> Taking:
 
 
 def told(tables: Tables, pairs: int, plan: Plan, **more: Any) -> dict[str, Any]:
-    """Return headline and terms of tables as numbers by name, and more beside them."""
-    return {**headline(tables, pairs, plan), "terms": terms_of(tables, plan), **more}
+    """Return headline, terms and linearity of tables as numbers by name, and more beside them."""
+    left_s = dead_time_left_s(tables, plan)
+    linearity = {} if left_s is None else {"dead_time_left_s": left_s[0], "dead_time_left_se_s": left_s[1]}
+    return {**headline(tables, pairs, plan), "terms": terms_of(tables, plan), **linearity, **more}
 
 
 def _by_contrast(visits: Visits, plan: Plan, choice: Choice) -> Settled:

@@ -36,7 +36,8 @@ class Estimate:
 
     `estimator` and `why` it was chosen; `kappa_model_se` what counting and the source as a random walk
     (`drift_per_sqrt_hour`) give; `kappa_with_excluded` the plain contrast with the stands that are left out,
-    and how far it may lie from that without them (None: nothing is left out).
+    and how far it may lie from that without them (None: nothing is left out); `dead_time_left_s` what the
+    pattern shows of a dead time after the correction (zero: the counter is linear).
     """
 
     kappa: float | None
@@ -72,6 +73,8 @@ class Estimate:
     drift_per_sqrt_hour: float | None = None
     kappa_with_excluded: float | None = None
     excluded_change_se: float | None = None
+    dead_time_left_s: float | None = None
+    dead_time_left_se_s: float | None = None
     terms: Terms | None = None
 
     def to_json(self) -> dict[str, Any]:

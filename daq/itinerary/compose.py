@@ -9,6 +9,7 @@ from numpy.typing import NDArray
 
 from daq import openings
 from daq.description import Measurement, Rig
+from daq.estimate.linearity import marginal_weights
 from daq.estimate.plan import Heralded, Plan
 from daq.estimate.slits import expected_rates_hz, planned_weights
 from daq.itinerary.orders import FloatArray, IntArray, Order, blocked, zigzag
@@ -101,6 +102,8 @@ def compose(measurement: Measurement, rig: Rig, seed: int | None = None) -> Itin
     start_s = _start_times_s(order, masks, places, dwell_s, rig)
     rates_hz = expected_rates(measurement, rig)
     weights, signs = planned_weights(rates_hz, masks, len(rig.slits))
+    if measurement.estimate.counting == "counts":
+        weights = marginal_weights(weights, rates_hz, masks, len(rig.slits))
     return Itinerary(
         opening=masks[order.opening],
         position_mm=places[order.position],

@@ -13,7 +13,9 @@ from numpy.typing import ArrayLike
 from scipy.stats import t as student
 
 from daq.estimate import Plan, Sums, anytime_multiplier, estimate_run, estimate_sums, kappa
+from daq.estimate.headline import headline
 from daq.estimate.sums import sums_of
+from daq.estimate.tables import tables_of
 from daq.estimate.visits import no_visits
 from daq.openings import names
 from tests.daq.estimate.nights import SLOT_S, dataset, plan, rates_hz, readings
@@ -249,10 +251,9 @@ def test_the_t_bar_covers_as_it_says_under_a_walking_source() -> None:
         counts = generator.poisson(rates * np.exp(walk))
         visits.value[:] = visits.variance[:] = counts
         visits.live[:], visits.used[:], visits.done[:] = 2.2, True, True
-        found = estimate_sums(sums_of(visits, of), of)
-        assert found.interval_95 is not None and found.kappa is not None and found.kappa_se is not None
-        covered += found.interval_95[0] <= 0 <= found.interval_95[1]
-        kappas[night], ses[night] = found.kappa, found.kappa_se
+        found = headline(tables_of(sums_of(visits, of)), 8, of)
+        covered += found["interval_95"][0] <= 0 <= found["interval_95"][1]
+        kappas[night], ses[night] = found["kappa"], found["kappa_se"]
 
     # Standard error of the coverage sqrt(0.95 * 0.05 / 1500) = 0.56 %: four of them. The mean square of the
     # bar and the variance of kappa have relative errors of 1.4 % and 3.7 %: four of their sum.
