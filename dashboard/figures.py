@@ -10,7 +10,8 @@ from typing import Any
 import numpy as np
 
 from daq import openings
-from dashboard.residual import INNER, OUTER, first_band_pair, is_blinded, unit
+from dashboard.bands import BAND_FROM_PAIR, INNER, OUTER, first_band_pair, whole_night
+from dashboard.residual import is_blinded, unit
 from dashboard.words import fixed, spelt
 
 Feed = Mapping[str, Any]
@@ -39,7 +40,7 @@ def night(feed: Feed) -> dict[str, Any]:
         "hours": _rounded(history["hours"], 1, history["hours"][-1]),
         "kappa": _rounded(history["kappa"], scale, reach),
         "interval": _rounded(_half(history, "interval_high"), scale, reach),
-        "whole": _rounded(_half(history, "whole_high"), scale, reach),
+        "whole": _rounded(_from_sixth(_half(history, "whole_high"), kappa["pairs"]), scale, reach),
         "forecast": _forecast(feed, scale, end),
         "reach": round(reach / scale, 3),
         "inner": INNER,
@@ -128,7 +129,7 @@ def _planned_hours(feed: Feed) -> float | None:
 def _forecast(feed: Feed, scale: float, end: float | None) -> dict[str, Any] | None:
     """Return the half width of the inner bar at the planned end, and the one the goal asks for."""
     kappa = feed["kappa"]
-    if feed["ended"] or end is None or not kappa["forecast_se"] or kappa["whole_night_95"] is None:
+    if feed["ended"] or end is None or not kappa["forecast_se"] or whole_night(kappa) is None:
         return None
     from scipy.special import stdtrit
 
@@ -140,6 +141,12 @@ def _forecast(feed: Feed, scale: float, end: float | None) -> dict[str, Any] | N
         "pairs": kappa["pairs"],
         "planned": kappa["planned_pairs"],
     }
+
+
+def _from_sixth(half: Column, pairs: int) -> Column:
+    """Leave out what lies before pair 6; a history that was thinned is too long to have a band there."""
+    early = BAND_FROM_PAIR - 1 if len(half) == pairs else 0
+    return [*(None for _ in half[:early]), *half[early:]]
 
 
 def _reach(history: Mapping[str, Column], goal: float) -> float:
@@ -154,7 +161,7 @@ def _night_caption(feed: Feed) -> str:
     kappa = feed["kappa"]
     start = first_band_pair(kappa["planned_pairs"])
     dots = "Each dot holds all pairs up to then."
-    if kappa["whole_night_95"] is None:
+    if whole_night(kappa) is None:
         return f"{dots} The bands start at pair {start}." if start else dots
     rest = "" if feed["ended"] else " Dotted: what the rest of the run will do to the dark band."
     return f"{dots} Dark: {INNER}. Pale: {OUTER}.{rest}"
@@ -163,7 +170,7 @@ def _night_caption(feed: Feed) -> str:
 def _night_alt(feed: Feed, scale: float, name: str) -> str:
     kappa = feed["kappa"]
     dot = f"κ after {spelt(kappa['pairs'], 'pair')}: {fixed(kappa['value'] / scale, 1, plus=True)} {name}."
-    ends = kappa["whole_night_95"]
+    ends = whole_night(kappa)
     if ends is None:
         return f"{dot} No band yet."
     low, high = (fixed(v / scale, 1, plus=True) for v in ends)

@@ -16,8 +16,8 @@ from dash.exceptions import PreventUpdate
 from daq.errors import StorageError
 from dashboard import figures, lab
 from dashboard.components import render
+from dashboard.times import clock
 from dashboard.view import empty_view, is_silent, unreadable_view, view, waiting_view
-from dashboard.words import clock
 
 WORDS = (
     *("header", "verdict", "line", "warnings", "kappa", "now"),

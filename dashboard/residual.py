@@ -6,15 +6,12 @@ import math
 from collections.abc import Mapping
 from typing import Any
 
-from daq.estimate.peeking import anytime_multiplier
-from dashboard.words import NB, decimals_of, fixed, spelt, unit_of
+from dashboard.bands import INNER, OUTER, band_to_read, first_band_pair, whole_night
+from dashboard.words import NB, count, decimals_of, fixed, unit_of
 
 Feed = Mapping[str, Any]
 _ORDINALS = {2: "Second", 3: "Third", 4: "Fourth", 5: "Fifth"}
-INNER = "95 % only if read once, at the planned end"
-OUTER = "95 % over the whole night, whatever you do"
 PRINTED_FROM_PAIR = 8
-_BAND_FROM_PAIR = 6
 
 
 def residual_view(feed: Feed) -> dict[str, Any]:
@@ -56,21 +53,6 @@ def unit(kappa: Mapping[str, Any]) -> tuple[float, str]:
     return unit_of(goal or forecast or kappa.get("se") or 1e-3)
 
 
-def first_band_pair(planned_pairs: int) -> int | None:
-    """Return the pair from which the whole-night band is drawn; None where the plan is too short for one.
-
-    References
-    ----------
-    The multiplier of the t mixture is infinite before; no band is drawn before pair 6 in any plan.
-    """
-    finite = (
-        n
-        for n in range(_BAND_FROM_PAIR, max(planned_pairs, _BAND_FROM_PAIR) + 1)
-        if math.isfinite(anytime_multiplier(n, planned_pairs))
-    )
-    return next(finite, None)
-
-
 _WEAK = (
     "The interference is too weak to divide by (δ is below six of its standard errors), so κ is not printed. "
     "Check that all slits are lit and that the mask is in register."
@@ -78,7 +60,7 @@ _WEAK = (
 
 
 def _after(kappa: Mapping[str, Any], unit_name: str = "") -> str:
-    pairs = f"after {kappa['pairs']} of {spelt(kappa['planned_pairs'], 'pair')}"
+    pairs = f"after {kappa['pairs']} of {count(kappa['planned_pairs'])} pairs"
     return f"{unit_name}, {pairs}" if unit_name else pairs
 
 
@@ -103,7 +85,7 @@ def _early_says(feed: Feed) -> list[str]:
 
 
 def _band_start(kappa: Mapping[str, Any]) -> list[str]:
-    if kappa["whole_night_95"] is not None:
+    if whole_night(kappa) is not None:
         return []
     start = first_band_pair(kappa["planned_pairs"])
     if start is None:
@@ -150,12 +132,6 @@ def _bands(feed: Feed, scale: float, decimals: int) -> list[dict[str, Any]]:
         for kind, ends, label in drawn
         if ends is not None
     ]
-
-
-def band_to_read(feed: Feed) -> str:
-    """Return which band holds now: "inner" at the planned end, "outer" at any other time."""
-    kappa = feed["kappa"]
-    return "inner" if feed["ended"] and kappa["pairs"] >= kappa["planned_pairs"] else "outer"
 
 
 def _zero_says(feed: Feed) -> list[str]:

@@ -8,7 +8,8 @@ from typing import Any
 
 from daq import openings
 from dashboard.residual import residual_view
-from dashboard.words import MINUS, clock, count, day_and_clock, duration, fixed, spelt
+from dashboard.times import clock, day_and_clock, duration
+from dashboard.words import count, fixed, general, spelt
 
 Feed = Mapping[str, Any]
 SILENT_AFTER_S = 30.0
@@ -90,7 +91,8 @@ def unreadable_view(run: str, why: str) -> dict[str, Any]:
 
 
 def _sensor(name: str, value: float | None, unit: str) -> str:
-    return f"{name} not read" if value is None else f"{name} {f'{value:.5g}'.replace('-', MINUS)} {unit}"
+    plain = name.replace("_", " ")
+    return f"{plain} not read" if value is None else f"{plain} {general(value)} {unit}"
 
 
 def _kind(feed: Feed) -> dict[str, str] | None:
@@ -151,7 +153,7 @@ def _ending(feed: Feed) -> tuple[str, str, str]:
     kappa = feed["kappa"]
     if kappa["pairs"] >= kappa["planned_pairs"]:
         return "done", "Done.", f"All {spelt(kappa['planned_pairs'], 'pair')} are counted."
-    return "look", "Ended early.", f"{kappa['pairs']} of {spelt(kappa['planned_pairs'], 'pair')} are counted."
+    return "look", "Ended early.", f"{kappa['pairs']} of {count(kappa['planned_pairs'])} pairs are counted."
 
 
 def _line(feed: Feed, silent: bool) -> tuple[str, str | None]:

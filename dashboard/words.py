@@ -1,9 +1,8 @@
-"""Numbers, times and units as a person reads them."""
+"""Numbers and their units as a person reads them."""
 
 from __future__ import annotations
 
 import math
-from datetime import datetime
 
 THIN = "\u202f"
 MINUS = "\u2212"
@@ -17,11 +16,7 @@ _UNITS = {
     -5: ("hundred-thousandths", "10⁻⁵"),
     -6: ("millionths", "10⁻⁶"),
 }
-# Not strftime: the month's name must not hang on the locale of the computer.
-_MONTHS = (
-    *("January", "February", "March", "April", "May", "June", "July"),
-    *("August", "September", "October", "November", "December"),
-)
+_RAISED = str.maketrans("-0123456789", "⁻⁰¹²³⁴⁵⁶⁷⁸⁹")
 _SMALL = ("no", "one", "two", "three", "four", "five", "six", "seven", "eight", "nine", "ten")
 
 
@@ -44,6 +39,15 @@ def fixed(value: float, decimals: int, plus: bool = False) -> str:
     return f"{MINUS}{text}" if value < 0 else f"+{text}" if plus else text
 
 
+def general(value: float) -> str:
+    """Return a reading with about four digits, 293.8806 -> "293.9", 1.2e-7 -> "1.2 × 10⁻⁷"."""
+    if value and abs(value) < 1e-3:
+        mantissa, exponent = f"{value:.1e}".split("e")
+        return f"{fixed(float(mantissa), 1)} × 10{str(int(exponent)).translate(_RAISED)}"
+    digits = math.floor(math.log10(abs(value))) + 1 if value else 1
+    return fixed(value, max(0, 4 - max(digits, 0)))
+
+
 def decimals_of(error: float) -> int:
     """Return how many decimals show two significant digits of an error bar (none above ten)."""
     return max(0, 1 - math.floor(math.log10(error))) if error > 0 else 1
@@ -61,22 +65,3 @@ def unit_of(error: float) -> tuple[float, str]:
     exponent = min(0, max(-6, exponent))
     name, power = _UNITS[exponent]
     return 10.0**exponent, f"{name} ({power})" if power else name
-
-
-def clock(utc: str, seconds: bool = False) -> str:
-    """Return the time of day of an ISO date in UTC, "2026-12-01T06:37:00Z" -> "06:37 UTC"."""
-    return f"{datetime.fromisoformat(utc):{'%H:%M:%S' if seconds else '%H:%M'}} UTC"
-
-
-def day_and_clock(utc: str) -> str:
-    """Return a date with its time of day in UTC, "2026-12-01T06:37:00Z" -> "1 December, 06:37 UTC"."""
-    date = datetime.fromisoformat(utc)
-    return f"{date.day} {_MONTHS[date.month - 1]}, {clock(utc)}"
-
-
-def duration(seconds: float) -> str:
-    """Return a length of time in the words of a clock, 5400 -> "1 h 30 min"; seconds below two minutes."""
-    if seconds < 120:
-        return f"{seconds:.0f} s"
-    hours, minutes = divmod(round(seconds / 60), 60)
-    return f"{hours} h {minutes} min" if hours else f"{minutes} min"

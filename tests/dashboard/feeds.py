@@ -52,7 +52,7 @@ def feed(
         **_rates(slits, place, pairs, generator),
         **_kappa(pairs, planned, generator),
         "rate": _strip(hours, generator),
-        "sensors": {"room temperature": [21.314, "°C"], "room pressure": [1013.2, "hPa"]},
+        "sensors": {"room_temperature": [294.464, "K"], "room_pressure": [101324.0, "Pa"]},
         "warnings": [],
         "log": [
             {"utc": _utc(0), "text": "The run started"},

@@ -107,6 +107,17 @@ def test_the_night_holds_both_bands_from_their_first_pair() -> None:
     )
 
 
+def test_no_band_is_drawn_before_pair_six_even_where_it_is_finite() -> None:
+    """With nine pairs planned the multiplier is finite from pair 4."""
+    content = feed(pairs=9, planned=9)
+    assert content["history"]["whole_low"][4] is not None
+
+    shown = night(content)
+
+    assert [value is None for value in shown["whole"]] == [True] * 5 + [False] * 4
+    assert night(feed(pairs=5, planned=9))["alt"].endswith("No band yet.")
+
+
 def test_no_forecast_is_drawn_before_there_is_a_band() -> None:
     assert night(feed(pairs=5))["forecast"] is None
     assert night(feed(pairs=6))["forecast"] is not None

@@ -8,9 +8,10 @@ from typing import Any
 import pytest
 
 from daq.estimate import anytime_multiplier
+from dashboard.bands import INNER, OUTER, band_to_read, first_band_pair
 from dashboard.figures import night, pattern, plates, strip
 from dashboard.news import news
-from dashboard.residual import INNER, OUTER, band_to_read, first_band_pair, residual_view, unit
+from dashboard.residual import residual_view, unit
 from dashboard.view import view
 from tests.dashboard import feeds
 from tests.dashboard.feeds import ended, feed

@@ -168,9 +168,9 @@ def test_a_repeated_visit_says_which_attempt_it_is() -> None:
 
 
 def test_sensors_keep_their_names_and_units() -> None:
-    content = feed(sensors={"room-temperature": [-1.25, "°C"], "vacuum": [None, "hPa"]})
+    content = feed(sensors={"room_temperature": [-1.25, "°C"], "vacuum": [None, "hPa"]})
 
-    assert view(content, silent=False)["sensors"] == ["room-temperature −1.25 °C", "vacuum not read"]
+    assert view(content, silent=False)["sensors"] == ["room temperature −1.250 °C", "vacuum not read"]
 
 
 def test_the_log_is_told_newest_first() -> None:

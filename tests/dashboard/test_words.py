@@ -6,18 +6,8 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from dashboard.words import (
-    MINUS,
-    THIN,
-    clock,
-    count,
-    day_and_clock,
-    decimals_of,
-    duration,
-    fixed,
-    spelt,
-    unit_of,
-)
+from dashboard.times import clock, day_and_clock, duration
+from dashboard.words import MINUS, THIN, count, decimals_of, fixed, general, spelt, unit_of
 
 
 def test_counts_carry_thin_spaces() -> None:
@@ -78,6 +68,23 @@ def test_in_its_unit_an_error_lies_between_a_half_and_five(error: float) -> None
 )
 def test_a_length_of_time_is_said_in_hours_and_minutes(seconds: float, text: str) -> None:
     assert duration(seconds) == text
+
+
+@pytest.mark.parametrize(
+    ("value", "text"),
+    [
+        (293.8806, "293.9"),
+        (21.314, "21.31"),
+        (-1.25, "−1.250"),
+        (0.0123, "0.0123"),
+        (101497.0, f"101{THIN}497"),
+        (1.2e-7, "1.2 × 10⁻⁷"),
+        (-3.4e-12, "−3.4 × 10⁻¹²"),
+        (0.0, "0.000"),
+    ],
+)
+def test_a_reading_has_about_four_digits_and_no_letter_e(value: float, text: str) -> None:
+    assert general(value) == text
 
 
 def test_small_counts_are_words() -> None:
