@@ -47,7 +47,8 @@ class Visit:
     """A planned visit: show this opening, go to this position, count this long.
 
     `number` is its place in the itinerary (-1: unplanned), `opening` a bit mask, `start_s` the planned
-    opening of the gate since the start of the run; `forward` is the coin of its pair.
+    opening of the gate since the start of the run; `forward` is the coin of its pair; `pause_s` is waited
+    before the gate opens, besides the moves.
     """
 
     number: int
@@ -59,6 +60,7 @@ class Visit:
     lap: int = -1
     pair: int = -1
     forward: bool = True
+    pause_s: float = 0.0
 
 
 @dataclass(frozen=True, slots=True)

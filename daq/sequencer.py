@@ -131,11 +131,12 @@ def _open_gate(planned: Planned, arrival: _Arrival, devices: Devices, clock: Clo
 
 
 def _start_moves(visit: Visit, devices: Devices, clock: Clock) -> _Arrival:
-    """Start the moves to a visit; the detector stays where it is when it is there already."""
+    """Start the moves to a visit, and its pause; the detector stays where it is when it is there already."""
     now_ns = clock.now_ns()
     predicted_s = devices.mask.show(visit.opening)
     if not math.isclose(devices.detector.state().position_mm, visit.position_mm, abs_tol=1e-6):
         predicted_s = max(predicted_s, devices.detector.start(visit.position_mm))
+    predicted_s += visit.pause_s
     due_ns = now_ns + round(predicted_s * 1e9)
     return _Arrival(due_ns, due_ns + round((predicted_s + MOVE_GRACE_S) * 1e9))
 

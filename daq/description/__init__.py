@@ -57,10 +57,16 @@ def joint_problems(measurement: Measurement, rig: Rig, source: str) -> tuple[str
         )
     given = measurement.itinerary.opening_order
     have = {openings.name(mask) for mask in rig.opening_masks}
-    if given is not None and sorted(given) != sorted(have):
+    if given is not None and set(given) != have:
         problems.append(
-            f"{source}, itinerary.opening_order: name every opening of the mask once: "
+            f"{source}, itinerary.opening_order: name every opening of the mask, and no other: "
             f"{', '.join(sorted(have))}."
+        )
+    dwell_s, gate_s = measurement.itinerary.dwell_s, rig.shortest_gate_s
+    if dwell_s is not None and dwell_s < gate_s:
+        problems.append(
+            f"{source}, itinerary.dwell_s: the counter of the rig opens its gate for {gate_s:g} s at least, "
+            f"not {dwell_s:g} s. Give a longer dwell."
         )
     channels = max(entry.channels for entry in rig.devices.values())
     problems += [

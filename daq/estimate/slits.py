@@ -86,14 +86,22 @@ def expected_rates_hz(
 
 
 def planned_weights(
-    rates_hz: ArrayLike, openings: Sequence[int] | IntArray, slits: int
+    rates_hz: ArrayLike,
+    openings: Sequence[int] | IntArray,
+    slits: int,
+    dwell_s: FloatArray | None = None,
 ) -> tuple[FloatArray, dict[str, FloatArray]]:
     """Return position weights (sum 1) and planned signs of the pairwise terms, from expected rates (J, K).
 
+    Parameters
+    ----------
+    dwell_s
+        Counting time in any common unit, (J, K); the same everywhere when None.
+
     Notes
     -----
-    a_j = delta_j / var(epsilon_j) for equal dwell: the weights of least variance for a kappa that is the same
-    everywhere. They must not be made from the counts that they weigh.
+    a_j = delta_j / var(epsilon_j): the weights of least variance for a kappa that is the same everywhere.
+    They must not be made from the counts that they weigh.
 
     Raises
     ------
@@ -103,7 +111,7 @@ def planned_weights(
     what = contrast(tuple(map(int, openings)), slits)
     rates = np.asarray(rates_hz, float)
     _, delta = epsilon_and_delta(rates, what, "pairwise")
-    variance = rates @ what.residual**2
+    variance = (rates if dwell_s is None else rates / dwell_s) @ what.residual**2
     weights = np.divide(delta, variance, out=np.zeros_like(delta), where=variance > 0)
     if not weights.sum() > 0:
         raise ValueError("no pairwise interference is expected at any position: kappa would have no divisor")

@@ -1,19 +1,29 @@
 """Itinerary: the ordered visits of a run and what they will bring."""
 
-from daq.itinerary.compose import Itinerary, compose, expected_rates, opening_order, plan_of
-from daq.itinerary.forecast import Forecast, drift_variance, forecast
-from daq.itinerary.orders import blocked, random_walk_cost, zigzag
+from daq.itinerary.compose import Itinerary, compose, plan_of
+from daq.itinerary.forecast import Forecast, drift_variance, forecast, walk
+from daq.itinerary.known import expected_rates, opening_order
+from daq.itinerary.orders import blocked, cyclic, random_walk_cost, shuffled, zigzag
+from daq.itinerary.pilot import wander_of_counts, wander_of_structure
+from daq.itinerary.wander import Wander, wander_variance
 
 __all__ = [
     "Forecast",
     "Itinerary",
+    "Wander",
     "blocked",
     "compose",
+    "cyclic",
     "drift_variance",
     "expected_rates",
     "forecast",
     "opening_order",
     "plan_of",
     "random_walk_cost",
+    "shuffled",
+    "walk",
+    "wander_of_counts",
+    "wander_of_structure",
+    "wander_variance",
     "zigzag",
 ]

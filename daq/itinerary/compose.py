@@ -2,18 +2,23 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from collections.abc import Mapping
+from dataclasses import dataclass, field
 
 import numpy as np
-from numpy.typing import NDArray
 
 from daq import openings
 from daq.description import Measurement, Rig
-from daq.estimate.linearity import marginal_weights
 from daq.estimate.plan import Heralded, Plan
-from daq.estimate.slits import expected_rates_hz, planned_weights
-from daq.itinerary.orders import FloatArray, IntArray, Order, blocked, zigzag
+from daq.itinerary.cost import Pattern
+from daq.itinerary.decide import MIRRORED, Decision, decide, rhythm
+from daq.itinerary.design import dwell_table_s, lay_out, pattern_for
+from daq.itinerary.known import Known, known_of, opening_order
+from daq.itinerary.moves import start_times_s
+from daq.itinerary.orders import BoolArray, FloatArray, IntArray, Order
 from daq.records import Visit
+
+_SHUFFLE, _SEARCH, _PAUSE = 1, 2, 3  # streams of random numbers beside that of the coins
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -22,7 +27,8 @@ class Itinerary:
 
     Arrays of shape (visits,): `opening` (bit masks), `position_mm`, `start_s`, `dwell_s`, `stand`, `lap`,
     `pair`, `forward`. For the estimate: `openings` (K,) bit masks, `positions_mm` (J,), `weights` (J,),
-    `signs` "AB" -> (J,), `rates_hz` (J, K) as expected.
+    `signs` "AB" -> (J,), `rates_hz` (J, K) as expected. `pauses` visit -> seconds to wait before it besides
+    the moves; `notes` what the planner decided, and why.
     """
 
     opening: IntArray
@@ -32,7 +38,7 @@ class Itinerary:
     stand: IntArray
     lap: IntArray
     pair: IntArray
-    forward: NDArray[np.bool_]
+    forward: BoolArray
     openings: IntArray
     positions_mm: FloatArray
     slits: int
@@ -42,6 +48,8 @@ class Itinerary:
     order: str
     seed: int
     total_s: float
+    pauses: Mapping[int, float] = field(default_factory=dict)
+    notes: tuple[str, ...] = ()
 
     def __len__(self) -> int:
         return int(self.opening.size)
@@ -50,6 +58,11 @@ class Itinerary:
     def planned_pairs(self) -> int:
         """The number of complete pairs."""
         return (int(self.lap.max()) + 1) // 2
+
+    @property
+    def visits_per_stand(self) -> int:
+        """How many visits a stand has."""
+        return len(self) // (int(self.stand.max()) + 1)
 
     @property
     def position_index(self) -> IntArray:
@@ -74,6 +87,7 @@ class Itinerary:
             lap=int(self.lap[number]),
             pair=int(self.pair[number]),
             forward=bool(self.forward[number]),
+            pause_s=self.pauses.get(number, 0.0),
         )
 
 
@@ -83,74 +97,30 @@ def compose(measurement: Measurement, rig: Rig, seed: int | None = None) -> Itin
     Parameters
     ----------
     seed
-        Draws the coin of each pair; `itinerary.seed` of the measurement when None.
+        Draws the coin of each pair, pauses, random orders, and what a search tries; `itinerary.seed` of the
+        measurement when None.
+
+    Raises
+    ------
+    DescriptionError
+        When no dwell keeps the stands out of step with the lines that are known.
     """
-    plan = measurement.itinerary
-    seed = plan.seed if seed is None else seed
-    places = np.array(measurement.positions.places_mm)
-    masks = np.array(rig.opening_masks, dtype=np.int64)
-    coins = np.random.Generator(np.random.Philox(seed)).random((plan.laps + 1) // 2) < 0.5
-    sequence = [
-        int(np.flatnonzero(masks == openings.mask(name))[0]) for name in opening_order(measurement, rig)
-    ]
-    if plan.order == "zigzag":
-        order = zigzag(sequence, places.size, plan.laps, coins)
-    else:
-        order = blocked(sequence, places.size, plan.laps)
-        coins[:] = True
-    dwell_s = np.full(order.opening.size, plan.dwell_s)
-    start_s = _start_times_s(order, masks, places, dwell_s, rig)
-    rates_hz = expected_rates(measurement, rig)
-    weights, signs = planned_weights(rates_hz, masks, len(rig.slits))
-    if measurement.estimate.counting == "counts":
-        weights = marginal_weights(weights, rates_hz, masks, len(rig.slits))
-    return Itinerary(
-        opening=masks[order.opening],
-        position_mm=places[order.position],
-        start_s=start_s,
-        dwell_s=dwell_s,
-        stand=order.stand,
-        lap=order.lap,
-        pair=order.lap // 2,
-        forward=coins[order.lap // 2],
-        openings=masks,
-        positions_mm=places,
-        slits=len(rig.slits),
-        weights=weights,
-        signs=signs,
-        rates_hz=rates_hz,
-        order=plan.order,
-        seed=seed,
-        total_s=float(start_s[-1] + dwell_s[-1]),
-    )
+    known = known_of(measurement, rig)
+    seed = known.settings.seed if seed is None else seed
+    masks = known.openings.tolist()
+    word = [masks.index(openings.mask(name)) for name in opening_order(measurement, rig)]
+    return _itinerary(known, decide(known, word, _stream(seed, _SEARCH)), seed)
 
 
-def opening_order(measurement: Measurement, rig: Rig) -> tuple[str, ...]:
-    """Return the order of the openings: the one given, else along the mask (least travel).
-
-    In blocked order, where one move an opening is all the travel there is, it is what is done by hand: from
-    no slit to all of them.
-    """
-    if measurement.itinerary.opening_order:
-        return measurement.itinerary.opening_order
-    if measurement.itinerary.order == "blocked":
-        return tuple(sorted(rig.mask.openings, key=lambda name: (openings.mask(name).bit_count(), name)))
-    return tuple(sorted(rig.mask.openings, key=lambda name: rig.mask.openings[name].at_mm))
-
-
-def expected_rates(measurement: Measurement, rig: Rig) -> FloatArray:
-    """Return the rates that the description expects, shape (positions, openings) [1/s]."""
-    cuts = {
-        mask: {letter: (slit.centre_m, slit.width_m) for letter, slit in rig.slits_of(mask).items()}
-        for mask in rig.opening_masks
-    }
-    return expected_rates_hz(
-        cuts,
-        np.array(measurement.positions.places_mm),
-        rig.geometry.wavelength_m,
-        rig.geometry.distance_m,
-        measurement.expect.single_slit_rate_hz,
-        measurement.expect.background_rate_hz,
+def pattern_of_itinerary(itinerary: Itinerary, normalisation: str) -> Pattern:
+    """Return the expected pattern with the weights and signs of an itinerary."""
+    return Pattern(
+        itinerary.openings,
+        itinerary.slits,
+        itinerary.rates_hz,
+        itinerary.weights,
+        itinerary.signs,
+        normalisation,
     )
 
 
@@ -173,6 +143,7 @@ def plan_of(itinerary: Itinerary, measurement: Measurement) -> Plan:
         position=itinerary.position_index,
         opening=itinerary.opening_index,
         goal_se=settings.goal_se,
+        visits_per_stand=itinerary.visits_per_stand,
         counting=settings.counting,
         fano=settings.fano,
         monitor=settings.monitor_channel,
@@ -180,15 +151,52 @@ def plan_of(itinerary: Itinerary, measurement: Measurement) -> Plan:
     )
 
 
-def _start_times_s(
-    order: Order, masks: IntArray, places: FloatArray, dwell_s: FloatArray, rig: Rig
-) -> FloatArray:
-    """Return when each gate opens: the longest of mask move, detector move and readout lies between."""
-    moves = rig.mask_move_s()
-    matrix = np.array([[moves[int(here), int(there)] for there in masks] for here in masks])
-    mask_s = matrix[order.opening[:-1], order.opening[1:]]
-    axis = rig.axes[rig.detector.axis]
-    distance = np.abs(np.diff(places[order.position]))
-    detector_s = np.where(distance > 0, axis.settle_s + distance / axis.speed_mm_s, 0.0)
-    gap_s = np.maximum(np.maximum(mask_s, detector_s), rig.readout_s)
-    return np.concatenate([[0.0], np.cumsum(dwell_s[:-1] + gap_s)])
+def _itinerary(known: Known, decision: Decision, seed: int) -> Itinerary:
+    settings, design = known.settings, decision.design
+    coins = np.random.Generator(np.random.Philox(seed)).random((settings.laps + 1) // 2) < 0.5
+    if settings.order not in MIRRORED:
+        coins[:] = True
+    order = lay_out(known, design, settings.laps, coins, _generator(seed, _SHUFFLE))
+    dwell_s = dwell_table_s(known, design)[order.position, order.slot]
+    pauses = _pauses(order, rhythm(known, design).pair_s / 4, seed) if decision.pauses else {}
+    between_s = known.moves.between_s(order, known.places_mm)
+    between_s[np.array(list(pauses), np.int64) - 1] += list(pauses.values())
+    start_s = start_times_s(dwell_s, between_s)
+    pattern = pattern_for(known, design)
+    return Itinerary(
+        opening=known.openings[order.opening],
+        position_mm=known.places_mm[order.position],
+        start_s=start_s,
+        dwell_s=dwell_s,
+        stand=order.stand,
+        lap=order.lap,
+        pair=order.lap // 2,
+        forward=coins[order.lap // 2],
+        openings=known.openings,
+        positions_mm=known.places_mm,
+        slits=known.slits,
+        weights=pattern.weights,
+        signs=dict(pattern.signs),
+        rates_hz=known.rates_hz,
+        order=settings.order,
+        seed=seed,
+        total_s=float(start_s[-1] + dwell_s[-1]),
+        pauses=pauses,
+        notes=decision.notes,
+    )
+
+
+def _pauses(order: Order, longest_s: float, seed: int) -> dict[int, float]:
+    """Return a random pause before the first visit of each pair but the first."""
+    first = np.flatnonzero(np.diff(order.lap // 2) > 0) + 1
+    lengths_s = _generator(seed, _PAUSE).random(first.size) * longest_s
+    return dict(zip(first.tolist(), lengths_s.tolist(), strict=True))
+
+
+def _stream(seed: int, tag: int) -> int:
+    """Return the seed of one stream of random numbers."""
+    return int(np.random.SeedSequence((seed, tag)).generate_state(1, np.uint64)[0])
+
+
+def _generator(seed: int, tag: int) -> np.random.Generator:
+    return np.random.Generator(np.random.Philox(_stream(seed, tag)))

@@ -5,7 +5,7 @@ from hypothesis import strategies as st
 
 from daq import openings
 from daq.estimate import kappa
-from daq.itinerary import compose, drift_variance, forecast, random_walk_cost, zigzag
+from daq.itinerary import compose, forecast, random_walk_cost, zigzag
 from tests.examples import lantern, lantern_rig
 
 CENTRE = {"none": 0, "A": 1, "B": 1, "C": 1, "AB": 4, "AC": 4, "BC": 4, "ABC": 9}
@@ -154,26 +154,6 @@ def test_no_order_at_the_centre_costs_less_than_fifty_one():
     costs = (np.cumsum(signed[orders], axis=1) ** 2).sum(axis=1)
 
     assert costs.min() == 51
-
-
-def test_the_drift_variance_agrees_with_simulated_random_walks():
-    itinerary = compose(lantern(itinerary__laps=2, positions__number=5), lantern_rig())
-    rng = np.random.default_rng(20261201)
-    paths, walk = 4000, 0.05
-    steps_s = np.diff(itinerary.start_s, prepend=itinerary.start_s[0])
-    cell = itinerary.position_index * 8 + itinerary.opening_index
-    many = np.bincount(cell)
-    kappas = np.empty(paths)
-    for path in range(paths):
-        log_level = np.cumsum(rng.normal(0, walk * np.sqrt(steps_s / 3600)))
-        mean = (np.bincount(cell, weights=np.exp(log_level)) / many).reshape(5, 8)
-        named = {openings.name(mask): (itinerary.rates_hz * mean)[:, mask] for mask in range(8)}
-        kappas[path], _ = kappa(named, named, itinerary.weights, signs=itinerary.signs)
-
-    planned = drift_variance(itinerary, walk)
-
-    # four standard errors of a variance from 4000 normal draws: 4 sqrt(2 / 4000)
-    assert kappas.var() == pytest.approx(planned, rel=4 * np.sqrt(2 / paths))
 
 
 def test_the_forecast_of_the_reference_night_meets_its_goal():

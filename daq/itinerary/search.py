@@ -1,0 +1,241 @@
+"""Search: the order of the openings in a stand that costs the least time for the same error bar."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
+from math import inf
+
+import numpy as np
+from numpy.typing import NDArray
+
+from daq.itinerary.orders import FloatArray, IntArray
+
+CHAINS = 64  # of the annealing, side by side in one array
+FAILED = 1e-9  # relative: a smaller gain than this is rounding
+
+
+@dataclass(frozen=True, slots=True)
+class Stand:
+    """What the order of the openings within a stand has to weigh; sums over all positions of a lap.
+
+    `weight` (J, K) what a change of the log rate during all visits of an opening does to kappa; `dwell_s`
+    (J, K) their counting time; `between_s` (K, K) from gate to gate; `still_s` the time of a lap besides the
+    moves between openings, of which it has one set for each of `stands`; `walk_per_s` the random walk of the
+    source; `counting_var` variance of kappa from counting, of one lap.
+    """
+
+    weight: FloatArray
+    dwell_s: FloatArray
+    between_s: FloatArray
+    still_s: float
+    stands: int
+    walk_per_s: float
+    counting_var: float
+
+    def lap_s(self, travel_s: FloatArray) -> FloatArray:
+        """Return the length of a lap from the travel of one stand [s]."""
+        return np.asarray(self.still_s + self.stands * travel_s)
+
+    def cost(self, drift: FloatArray, travel_s: FloatArray) -> FloatArray:
+        """Return time x variance of a lap, from its drift integral and the travel of one stand."""
+        return np.asarray((self.counting_var + self.walk_per_s * drift) * self.lap_s(travel_s))
+
+
+@dataclass(frozen=True, slots=True)
+class Word:
+    """The visits of a forward stand: opening and share of the opening's dwell; what they cost."""
+
+    opening: tuple[int, ...]
+    share: tuple[float, ...]
+    cost: float
+    evaluations: int
+    exhaustive: bool
+
+
+def search(stand: Stand, repeats: int, budget: int, generator: np.random.Generator) -> Word:
+    """Return the best word found in which every opening is shown up to `repeats` times.
+
+    Parameters
+    ----------
+    budget
+        How many steps from one opening to the next may be weighed. Where that allows it, all orders are
+        (by dynamic programming over what has been shown); else exchanges are tried at random, annealed.
+    generator
+        For the exchanges.
+    """
+    best: Word | None = None
+    spent = 0
+    for times in range(1, repeats + 1):
+        states = float(times + 1) ** stand.weight.shape[1] * stand.weight.shape[1] ** 2
+        if spent + 2 * states <= budget:
+            word = _all_orders(stand, times, budget - spent)
+        else:
+            word = _annealed(stand, times, (budget - spent) // (repeats + 1 - times), generator)
+        spent += word.evaluations
+        if best is None or word.cost < best.cost * (1 - FAILED):
+            best = word
+    assert best is not None
+    return Word(best.opening, best.share, best.cost, spent, best.exhaustive)
+
+
+def weighed(stand: Stand, slots: Sequence[int], times: int = 1) -> Word:
+    """Return the word of given slots, each 1/times of its opening's dwell, neighbours that agree made one."""
+    drift, travel_s = _drift_and_travel(stand, np.array([slots]), times)
+    return _word(slots, times, float(stand.cost(drift, travel_s)[0]), 1, exhaustive=False)
+
+
+def _word(slots: Sequence[int], times: int, cost: float, evaluations: int, exhaustive: bool) -> Word:
+    opening: list[int] = []
+    share: list[float] = []
+    for slot in slots:
+        if opening and opening[-1] == slot:
+            share[-1] += 1 / times
+        else:
+            opening.append(int(slot))
+            share.append(1 / times)
+    return Word(tuple(opening), tuple(share), cost, evaluations, exhaustive)
+
+
+def _drift_and_travel(stand: Stand, slots: IntArray, times: int) -> tuple[FloatArray, FloatArray]:
+    """Return INT (cumulated weight)^2 dt of a lap, and travel of a stand [s], for words (words, slots)."""
+    step = stand.weight.T[slots] / times
+    after = np.cumsum(step, axis=1)
+    before = after - step
+    between_s = stand.between_s[slots[:, :-1], slots[:, 1:]]
+    moving = np.einsum("wi,wij->w", between_s, after[:, :-1] ** 2)
+    inside = before**2 + before * after + after**2
+    counting = np.einsum("wij,wij->w", stand.dwell_s.T[slots], inside) / (3 * times)
+    return moving + counting, between_s.sum(axis=1)
+
+
+def _all_orders(stand: Stand, times: int, budget: int) -> Word:
+    """Return the best of all orders.
+
+    Notes
+    -----
+    Time x variance is a product of two sums over the steps of an order; the least product lies on the
+    convex hull of all (drift, travel), so it is the least of drift + price x travel at the right price.
+    """
+    steps = _Steps.of(stand, times)
+    best, spent, prices = None, 0, [stand.counting_var / stand.still_s]
+    while prices and (best is None or spent + steps.evaluations <= budget):
+        price = prices.pop()
+        slots = steps.cheapest(stand, price)
+        spent += steps.evaluations
+        drift, travel_s = _drift_and_travel(stand, np.array([slots]), times)
+        cost = float(stand.cost(drift, travel_s)[0])
+        if best is None or cost < best.cost * (1 - FAILED):
+            best = _word(slots, times, cost, spent, exhaustive=True)
+            prices.append(cost / float(stand.lap_s(travel_s)[0]) ** 2)
+    assert best is not None
+    return Word(best.opening, best.share, best.cost, spent, best.exhaustive)
+
+
+@dataclass(frozen=True, slots=True)
+class _Steps:
+    """Everything a step can cost, by what has been shown before it (mixed radix: how often each opening)."""
+
+    counts: IntArray
+    radix: IntArray
+    squares: FloatArray
+    counting: FloatArray
+
+    @classmethod
+    def of(cls, stand: Stand, times: int) -> _Steps:
+        many = stand.weight.shape[1]
+        radix = (times + 1) ** np.arange(many)
+        counts = np.arange((times + 1) ** many)[:, None] // radix % (times + 1)
+        shown = counts / times
+        gram = stand.weight.T @ stand.weight
+        squares = np.einsum("sk,sk->s", shown @ gram, shown)
+        counting = np.empty(shown.shape)
+        for opening in range(many):
+            own = (stand.weight.T * stand.dwell_s[:, opening]) @ stand.weight / times
+            # inside a visit the cumulated weight C grows by w: C^2 + C w + w^2/3 on average
+            counting[:, opening] = np.einsum("sk,sk->s", shown @ own, shown)
+            counting[:, opening] += shown @ own[opening] / times + own[opening, opening] / (3 * times**2)
+        return cls(counts, radix, squares, counting)
+
+    @property
+    def evaluations(self) -> int:
+        many = len(self.radix)
+        return len(self.counts) * many * many
+
+    def cheapest(self, stand: Stand, price: float) -> list[int]:
+        """Return the slots of the order of least drift + price x travel, over all orders."""
+        many, top = len(self.radix), int(self.counts.max())
+        price *= stand.stands
+        cost = np.full(self.counts.shape, inf)
+        last = np.zeros(self.counts.shape, np.int8)
+        cost[self.radix, np.arange(many)] = stand.walk_per_s * self.counting[0]
+        layer = self.counts.sum(axis=1)
+        by_layer = np.split(np.argsort(layer, kind="stable"), np.cumsum(np.bincount(layer))[:-1])
+        for shown in by_layer[1:-1]:
+            squares = stand.walk_per_s * self.squares[shown, None] + price
+            for opening in range(many):
+                free = self.counts[shown, opening] < top
+                at = shown[free]
+                ways = cost[at] + squares[free] * stand.between_s[:, opening]
+                choice = ways.argmin(axis=1)
+                target = at + self.radix[opening]
+                cost[target, opening] = ways[np.arange(len(at)), choice] + (
+                    stand.walk_per_s * self.counting[at, opening]
+                )
+                last[target, opening] = choice
+        return self._traced(cost, last)
+
+    def _traced(self, cost: FloatArray, last: NDArray[np.int8]) -> list[int]:
+        state = len(cost) - 1
+        opening = int(cost[state].argmin())
+        slots: list[int] = []
+        while state:
+            slots.append(opening)
+            before = int(last[state, opening])
+            state -= int(self.radix[opening])
+            opening = before
+        return slots[::-1]
+
+
+def _annealed(stand: Stand, times: int, budget: int, generator: np.random.Generator) -> Word:
+    """Return the best word that exchanges and reversals at a falling temperature have found."""
+    light = _fewer_positions(stand)
+    many = stand.weight.shape[1]
+    slots = generator.permuted(np.tile(np.repeat(np.arange(many), times), (CHAINS, 1)), axis=1)
+    rounds = max(1, budget // slots.size)
+    cost = _costs(light, slots, times)
+    best, least = slots[cost.argmin()].copy(), float(cost.min())
+    place = np.arange(slots.shape[1])
+    for heat in np.geomspace(0.1, 1e-5, rounds - 1):
+        trial = _tried(slots, place, generator)
+        new = _costs(light, trial, times)
+        taken = generator.random(CHAINS) < np.exp(np.minimum((cost - new) / (cost * heat), 0.0))
+        slots[taken], cost[taken] = trial[taken], new[taken]
+        if cost.min() < least:
+            best, least = slots[cost.argmin()].copy(), float(cost.min())
+    word = weighed(stand, best.tolist(), times)
+    return Word(word.opening, word.share, word.cost, rounds * slots.size, exhaustive=False)
+
+
+def _tried(slots: IntArray, place: IntArray, generator: np.random.Generator) -> IntArray:
+    """Return every chain with two slots exchanged, or what lies between them reversed."""
+    ends = generator.integers(0, len(place), (len(slots), 2))
+    first, second = ends.min(axis=1)[:, None], ends.max(axis=1)[:, None]
+    within = (place >= first) & (place <= second)
+    edge = (place == first) | (place == second)
+    reverse = generator.random((len(slots), 1)) < 0.5
+    source = np.where(edge | (within & reverse), first + second - place, place)
+    return np.take_along_axis(slots, source, axis=1)
+
+
+def _costs(stand: Stand, slots: IntArray, times: int) -> FloatArray:
+    return stand.cost(*_drift_and_travel(stand, slots, times))
+
+
+def _fewer_positions(stand: Stand) -> Stand:
+    """Return a stand with the same drift integrals over fewer, rotated positions; dwell by its mean."""
+    _, size, rotated = np.linalg.svd(stand.weight, full_matrices=False)
+    kept = size > 1e-6 * size[0]
+    weight = size[kept, None] * rotated[kept]
+    dwell_s = np.tile(stand.dwell_s.mean(axis=0), (len(weight), 1))
+    return replace(stand, weight=weight, dwell_s=dwell_s)
