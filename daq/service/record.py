@@ -53,6 +53,7 @@ def record_of(
         "dead_time_kind": settings.dead_time_kind,
         "planned_pairs": itinerary.planned_pairs,
         "visits_planned": len(itinerary),
+        "visits_per_stand": itinerary.visits_per_stand,
         "order": itinerary.order,
         "seed": itinerary.seed,
         "goal_se": settings.goal_se,
