@@ -58,6 +58,10 @@ class WaveletBench:
         rates: list[list[float]] = self._built.truth.rates_hz(openings, positions_mm).tolist()
         return rates
 
+    def truth_mm(self, axis: str) -> float:
+        """Return where an axis truly is [mm], whatever its encoder says."""
+        return self._built.tracks[axis].true_mm(self.clock.now_ns())
+
     def struck(self) -> Sequence[Struck]:
         """Return the faults that were injected, the truth behind what the run noticed."""
         upsets = self._built.upsets

@@ -63,6 +63,10 @@ class RealClock:
             from daq.devices.serials import open_serial
 
             return open_serial(address, timeout_s)
+        if scheme == "visa":
+            from daq.devices.visa import open_visa
+
+            return open_visa(address, timeout_s)
         place = urlsplit(address)
         stream = socket.create_connection((place.hostname or "", place.port or 0), timeout_s)
         return _RealConnection(stream, timeout_s)

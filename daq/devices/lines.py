@@ -99,7 +99,7 @@ class Lines:
         while self._end not in self.rest:
             if len(self.rest) > self._most_bytes:
                 raise self._garbage(f"a reply without end to {asked!r}: {self.rest[:40]!r} ...")
-            if not self._clock.wait_readable(self._connection, until_ns):
+            if not self._readable(until_ns):
                 raise self._timeout(asked)
             self.rest += self._receive()
         line, _, self.rest = self.rest.partition(self._end)
@@ -142,7 +142,7 @@ class Lines:
             "garbage" when it does not, "lost" at the end of the stream.
         """
         dropped, give_up_ns = self.waiting(), self._clock.now_ns() + most_ns
-        while self._clock.wait_readable(self._connection, self._silent_ns(quiet_ns, late_ns)):
+        while self._readable(self._silent_ns(quiet_ns, late_ns)):
             dropped += self.waiting()
             if self._clock.now_ns() > give_up_ns:
                 raise self._garbage("the device does not fall silent")
@@ -154,6 +154,12 @@ class Lines:
         if self._came >= self._asked:
             return quiet_until_ns
         return max(quiet_until_ns, self._asked_ns + late_ns)
+
+    def _readable(self, until_ns: int) -> bool:
+        try:
+            return self._clock.wait_readable(self._connection, until_ns)
+        except OSError as error:
+            raise self._lost(str(error)) from error
 
     def _receive(self) -> bytes:
         try:

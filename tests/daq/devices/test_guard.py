@@ -16,12 +16,11 @@ import pytest
 from daq.devices import guard
 from daq.devices.clock import RealClock
 from simulators.counters import GatedCounter
-from simulators.hosts import Instrument, Listener
+from simulators.hosts import Instrument
 from simulators.motion import Track
-from simulators.ports import PtyListener
 from simulators.sensors import RoomSensor
 from simulators.stages import StageController, Travel
-from tests.daq.devices.real import on_port
+from tests.daq.devices.real import Port, on_port
 from tests.daq.devices.scripted import Scripted
 
 WAIT_S = 60.0
@@ -36,7 +35,7 @@ class Stops(Scripted):
         self.change = self._note
 
     def _note(self, message: str, reply: bytes) -> bytes:
-        if message == "M0":
+        if "M0" in message.splitlines():  # a serial port may bring it with the command before
             self.stopped_s = time.monotonic()
             self.stopped.set()
         return reply
@@ -54,7 +53,7 @@ class Bench:
             GatedCounter("counter", lambda open_ns, close_ns: 1, 0.1, clock),
             RoomSensor("room", clock),
         ]
-        ports: list[Listener | PtyListener] = [stack.enter_context(on_port(kind, self.stages, folder))]
+        ports: list[Port] = [stack.enter_context(on_port(kind, self.stages, folder))]
         ports += [stack.enter_context(on_port("tcp", other, folder)) for other in others]
         self.words = [sys.executable, "-m", "tests.daq.devices.engine", *(port.address for port in ports)]
 
