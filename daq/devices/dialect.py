@@ -28,7 +28,8 @@ class DialectStage(LinearStage):
     def open(self) -> None:
         """Open the link and send the settings."""
         self._shared.open()
-        self._place_mm = self._target_mm = None
+        self._forget_move()
+        self._target_mm = None
         if "setup" in self._spoken.dialect.command:
             self._spoken.ask("setup", letter=self._axis.letter)
 
@@ -40,26 +41,25 @@ class DialectStage(LinearStage):
         """Return the controller's identity, verbatim."""
         return self._spoken.link.identity
 
-    def state(self) -> AxisState:
-        """Return where the axis is and what it does."""
+    def _look(self) -> AxisState:
         spoken, reply = self._spoken, self._spoken.ask("status", letter=self._axis.letter)
         encoder_mm = number(reply["encoder"]) / self._words.device_per_mm
         target_mm = self._target_mm if self._target_mm is not None else encoder_mm
         if reply.groupdict().get("target") is not None:
             target_mm = number(reply["target"]) / self._words.device_per_mm
         alarm = spoken.dialect.command["status"].alarm_when
-        state = AxisState(
+        return AxisState(
             position_mm=target_mm,
             encoder_mm=encoder_mm,
             moving=spoken.holds("status", "busy_when", reply),
             homed=not self._words.home_required or spoken.holds("status", "homed_when", reply),
             alarm=reply[alarm.group] if alarm is not None and alarm.holds(reply) else "",
         )
-        return self._known(state)
 
     def stop_now(self) -> None:
         """Send the stop past everything else, from any thread."""
-        self._place_mm = self._target_mm = None
+        self._forget_move()
+        self._target_mm = None
         self._shared.link.send_now(self.stop_bytes)
 
     def _send_home(self) -> None:

@@ -70,7 +70,7 @@ class GcodeStage(LinearStage):
     def open(self) -> None:
         """Open the link, see that the controller has the axis, and set absolute positions."""
         self._shared.open()
-        self._place_mm = None
+        self._forget_move()
         if self._axis.letter not in self.identity().rpartition(" ")[2]:
             raise self._error(f"the controller has no axis {self._axis.letter}: {self.identity()!r}")
         self._order("G90")
@@ -83,21 +83,19 @@ class GcodeStage(LinearStage):
         """Return the controller's identity, verbatim."""
         return self._shared.link.identity
 
-    def state(self) -> AxisState:
-        """Return where the axis is and what it does."""
+    def _look(self) -> AxisState:
         reply = self._shared.link.ask("M101", self._status, safe_to_repeat=True)
-        state = AxisState(
+        return AxisState(
             position_mm=float(reply["target"]),
             encoder_mm=float(reply["encoder"]),
             moving=reply["motion"] == "moving",
             homed=reply["reference"] == "homed",
             alarm="" if reply["alarm"] == "none" else reply["alarm"],
         )
-        return self._known(state)
 
     def stop_now(self) -> None:
         """Stop every axis of the controller, past everything else, from any thread."""
-        self._place_mm = None
+        self._forget_move()
         self._shared.link.send_now(self.stop_bytes)
 
     def _send_home(self) -> None:

@@ -3,8 +3,8 @@
 python -m tests.studies.study_storm [gates] [share of spoilt replies]
 
 In virtual time over TCP with waits as on a real bench; in real time over TCP, a serial port, RFC 2217 and
-HiSLIP with waits a tenth of that, but for the longest: a busy computer is late too. The same storm is put on a
-client that does not look before a command. Another storm asks a stage to move and compares true places.
+HiSLIP with waits a tenth of that, but for the longest: a busy computer is late too. The same storm is put on
+a client that does not look before a command. Another storm asks a stage to move and compares true places.
 """
 
 from __future__ import annotations
