@@ -1,15 +1,18 @@
-"""Commands after a run: report, verify, note, accept."""
+"""Commands after a run: report, verify, pack, export, note, accept."""
 
 from __future__ import annotations
 
 import argparse
+from pathlib import Path
 
 from daq.cli.answer import Answer
-from daq.errors import StorageError
+from daq.errors import DescriptionError, StorageError
 from daq.report import lines
 from daq.service.figures import figures_of
 from daq.service.remarks import accept as accepted
 from daq.service.remarks import note as noted
+from daq.storage.export import write_csv, write_netcdf
+from daq.storage.pack import bag_problems, pack_bag, pack_zip
 from daq.storage.verify import verify as verified
 
 
@@ -27,6 +30,31 @@ def verify(arguments: argparse.Namespace) -> Answer:
     if found.ok:
         return Answer(0, figures, [f"{arguments.run}: {whole}; nothing is damaged."])
     return Answer(StorageError.exit_status, figures, [*(f"{one}." for one in found.problems), f"{whole}."])
+
+
+def pack(arguments: argparse.Namespace) -> Answer:
+    """Pack a finished run as a bag, or as one zip that Zarr opens; the run itself is left as it is."""
+    run: Path = arguments.run
+    if run.name.endswith(".bag"):
+        found = bag_problems(run)
+        figures = {"ok": not found, "problems": found}
+        lines = [f"{one}." for one in found] or [f"{run}: the bag is whole."]
+        return Answer(StorageError.exit_status if found else 0, figures, lines)
+    target = arguments.to or run.with_name(run.name + (".zip" if arguments.zip else ".bag"))
+    (pack_zip if arguments.zip else pack_bag)(run, target)
+    return Answer(0, {"ok": True, "packed": str(target)}, [f"packed as {target}"])
+
+
+def export(arguments: argparse.Namespace) -> Answer:
+    """Export the visits of a run as CSV or NetCDF, by the ending of the file."""
+    writers = {".csv": write_csv, ".nc": write_netcdf}
+    writer = writers.get(arguments.file.suffix)
+    if writer is None:
+        raise DescriptionError(
+            (f"{arguments.file}: end the name in .csv or .nc, so that the format is known.",)
+        )
+    writer(arguments.run, arguments.file)
+    return Answer(0, {"ok": True, "file": str(arguments.file)}, [f"written to {arguments.file}"])
 
 
 def note(arguments: argparse.Namespace) -> Answer:

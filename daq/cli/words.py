@@ -148,28 +148,23 @@ def _watch_words(commands: Any) -> None:
 
 
 def _after_words(commands: Any) -> None:
-    report = _add(
-        commands,
-        "report",
-        "after:report",
-        "print the report of a run",
-        f"tercet report {RUN}",
-    )
-    verify = _add(
-        commands, "verify", "after:verify", "check every part of a run's archive", f"tercet verify {RUN}"
-    )
-    note = _add(
-        commands, "note", "after:note", "add a note to a run's log", f"tercet note {RUN} 'door was open at 2'"
-    )
-    accept = _add(
-        commands,
-        "accept",
-        "after:accept",
-        "add your verdict on a run to its log",
-        f"tercet accept {RUN} counts",
-    )
-    for one in (report, verify, note, accept):
+    told = "print the report of a run"
+    report = _add(commands, "report", "after:report", told, f"tercet report {RUN}")
+    whole = "check every part of a run's archive"
+    verify = _add(commands, "verify", "after:verify", whole, f"tercet verify {RUN}")
+    bag = "pack a finished run as a bag (RFC 8493) or a zip, or check a bag"
+    pack = _add(commands, "pack", "after:pack", bag, f"tercet pack {RUN} --zip")
+    table = "write the visits of a run as CSV or NetCDF"
+    export = _add(commands, "export", "after:export", table, f"tercet export {RUN} visits.csv")
+    said = "add a note to a run's log"
+    note = _add(commands, "note", "after:note", said, f"tercet note {RUN} 'door was open at 2'")
+    verdict = "add your verdict on a run to its log"
+    accept = _add(commands, "accept", "after:accept", verdict, f"tercet accept {RUN} counts")
+    for one in (report, verify, pack, export, note, accept):
         one.add_argument("run", type=Path, metavar="RUN", help="a run folder")
+    pack.add_argument("--zip", action="store_true", help="one zip that Zarr opens, instead of a bag")
+    pack.add_argument("--to", type=Path, metavar="TARGET", help="where to (beside the run)")
+    export.add_argument("file", type=Path, metavar="FILE", help="a file that ends in .csv or .nc")
     note.add_argument("text", metavar="TEXT", help="what you saw")
     accept.add_argument("verdict", choices=VERDICTS, help="whether this night counts")
     accept.add_argument("--remark", default="", help="why")

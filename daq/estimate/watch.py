@@ -32,12 +32,24 @@ class Watched:
     stands_done: int
     stands_left_out: int
     stands_repeated: int
+    short_of_room: str = ""  # a sentence with figures
 
 
 def concerns(watched: Watched) -> tuple[Concern, ...]:
     """Return the warnings of a run as it stands."""
-    found = (_level(watched), _excess(watched), _left_out(watched), _repeated(watched))
+    found = (_room(watched), _level(watched), _excess(watched), _left_out(watched), _repeated(watched))
     return tuple(concern for concern in found if concern is not None)
+
+
+def _room(watched: Watched) -> Concern | None:
+    if not watched.short_of_room:
+        return None
+    return Concern(
+        "room",
+        watched.short_of_room,
+        "Make room on the disk; a run that holds for it goes on by itself.",
+        "Everything that was acknowledged is stored, so kappa is still good.",
+    )
 
 
 def _level(watched: Watched) -> Concern | None:

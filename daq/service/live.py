@@ -2,15 +2,17 @@
 
 from __future__ import annotations
 
+import logging
 import time
 from collections import deque
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from datetime import UTC, datetime
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 
+from daq.errors import StorageError
 from daq.estimate import Running
 from daq.estimate.rows import DETECTOR
 from daq.estimate.watch import Watched, concerns
@@ -18,6 +20,8 @@ from daq.itinerary import Itinerary
 from daq.ports import Clock
 from daq.records import Reading
 from daq.storage.feed import write_feed
+
+log = logging.getLogger(__name__)
 
 EVERY_S = 1.0
 COLUMNS = 400
@@ -27,7 +31,15 @@ LOG_LINES = 30
 class Live:
     """Keeps what the page shows of one run, and writes it to `live.json` beside the archive."""
 
-    def __init__(self, folder: Path, meta: Mapping[str, Any], itinerary: Itinerary, clock: Clock) -> None:
+    def __init__(
+        self,
+        folder: Path,
+        meta: Mapping[str, Any],
+        itinerary: Itinerary,
+        clock: Clock,
+        room: Callable[[], str] = lambda: "",
+    ) -> None:
+        self._room = room
         self._folder, self._meta, self._itinerary, self._clock = folder, meta, itinerary, clock
         self._expected = itinerary.rates_hz.mean(axis=1)
         self._place = itinerary.position_index
@@ -40,6 +52,7 @@ class Live:
         ] = []  # counts, live seconds, expected rate of this stand
         self._repeated: set[int] = set()
         self._log: deque[dict[str, str]] = deque(maxlen=LOG_LINES)
+        self._since: dict[str, str] = {}  # kind of warning -> when it was first raised
         self._last: Reading | None = None
 
     def say(self, text: str) -> None:
@@ -77,7 +90,10 @@ class Live:
         if not now and time.monotonic() - self._written_s < EVERY_S:
             return
         self._written_s = time.monotonic()
-        write_feed(self._folder, self._feed(state, running, ended))
+        try:
+            write_feed(self._folder, self._feed(state, running, ended))
+        except StorageError as error:
+            log.error("the page is not told: %s", error)
 
     def _feed(self, state: str, running: Running, ended: str | None) -> dict[str, Any]:
         estimate = running.estimate()
@@ -135,11 +151,20 @@ class Live:
             stands_done=len(self._levels),
             stands_left_out=figures["stands_left_out"],
             stands_repeated=len(self._repeated),
+            short_of_room=self._room(),
         )
-        since = stamp(self._clock.utc_ns())
+        now = stamp(self._clock.utc_ns())
+        found = concerns(watched)
+        self._since = {one.kind: self._since.get(one.kind, now) for one in found}
         return [
-            {"kind": found.kind, "what": found.what, "do": found.do, "good": found.good, "since_utc": since}
-            for found in concerns(watched)
+            {
+                "kind": one.kind,
+                "what": one.what,
+                "do": one.do,
+                "good": one.good,
+                "since_utc": self._since[one.kind],
+            }
+            for one in found
         ]
 
 

@@ -10,7 +10,7 @@ from typing import Any
 
 import numpy as np
 
-from daq.errors import DeviceError
+from daq.errors import DeviceError, StorageError
 from daq.estimate import Running
 from daq.itinerary import Itinerary
 from daq.openings import NONE, mask
@@ -45,6 +45,7 @@ class Night:
     bench: Bench | None = None
     state: State = State.READY
     on_visit: Callable[[Reading], None] = field(default=lambda reading: None)
+    shortage: Callable[[], str] = lambda: ""  # a sentence while there is too little room on the disk
     until_utc_ns: int | None = None
 
     def become(self, state: State) -> None:
@@ -76,6 +77,10 @@ def carry_out(night: Night, place: Place) -> str:
             tries += 1
             _recover(night, action, wait_s)
             continue
+        except StorageError as error:
+            if not night.shortage():
+                raise
+            tell(night, "not stored", text=str(error))
         place = _place_after(night, place, last)
         if night.asked.end or place.number == len(night.itinerary):
             break
@@ -116,7 +121,7 @@ def _may_go_on(night: Night, number: int) -> bool:
         night.asked.end = True
     if night.asked.end_after_lap and _begins_lap(night.itinerary, number):
         night.asked.end = True
-    return not (night.asked.end or night.asked.hold)
+    return not (night.asked.end or night.asked.hold or night.shortage())
 
 
 def _stand_ns(night: Night, number: int) -> int:
@@ -128,9 +133,10 @@ def _stand_ns(night: Night, number: int) -> int:
 
 
 def _hold(night: Night) -> None:
-    """Return when the hold is over, or when the end is asked for."""
-    tell(night, "holding")
-    while night.asked.hold and not night.asked.end:
+    """Return when the hold is over, whoever or whatever asked for it, or when the end is asked for."""
+    short = night.shortage()
+    tell(night, "holding", **({"text": short} if short else {}))
+    while (night.asked.hold or night.shortage()) and not night.asked.end:
         night.become(State.HOLDING)
         night.live.write(night.state.value, night.running)
         night.asked.idle()
@@ -206,14 +212,20 @@ BENCH_FILE = "bench.json"
 def keep_beside(folder: Path, state: bytes) -> None:
     """Replace the side file of a simulated bench."""
     fresh = folder / (BENCH_FILE + ".new")
-    fresh.write_bytes(state)
-    fresh.replace(folder / BENCH_FILE)
+    try:
+        fresh.write_bytes(state)
+        fresh.replace(folder / BENCH_FILE)
+    except OSError as error:
+        log.error("the simulated bench's place could not be kept: %s", error)
 
 
 def tell(night: Night, event: str, **fields: Any) -> None:
     """Say what happened, in the run's log, on the page and in the program's log."""
     now = {"utc": stamp(night.clock.utc_ns()), "run_ns": night.clock.now_ns()}
-    night.log.append(event, **now, **fields)
+    try:
+        night.log.append(event, **now, **fields)
+    except StorageError as error:
+        log.error("%s", error)
     night.live.say(fields.get("text") or _sentence(event, fields))
     log.info("%s %s", event, fields)
 

@@ -26,7 +26,14 @@ class PageProcess:
     def __init__(self, lab: Path, run: str | None = None) -> None:
         command = [sys.executable, "-m", page_module(), str(lab), "--port", "0"]
         command += ["--run", run] if run else []
-        self._process = subprocess.Popen(command, stdout=subprocess.PIPE, text=True, stdin=subprocess.DEVNULL)
+        # A session of its own: Ctrl-C ends the run after its stand, and must not end the page.
+        self._process = subprocess.Popen(
+            command,
+            stdout=subprocess.PIPE,
+            text=True,
+            stdin=subprocess.DEVNULL,
+            start_new_session=True,
+        )
         first = cast(IO[str], self._process.stdout).readline()
         if not first.startswith("page: "):
             self.close()

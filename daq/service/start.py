@@ -28,6 +28,7 @@ from daq.service.load import Loaded, Wishes, load_run
 from daq.service.night import BENCH_FILE, STOPPED, Night, carry_out, park, stop_now, tell
 from daq.service.record import record_of
 from daq.service.requests import open_requests, settle
+from daq.service.room import room_warning, shortage
 from daq.storage.digest import digest, gate_digest
 from daq.storage.lab import new_run_folder
 from daq.storage.log import RunLog
@@ -166,11 +167,12 @@ def _night(
         clock=clock,
         devices=devices,
         running=Running(plan_of(itinerary, loaded.measurement)),
-        live=Live(folder, archive.meta, itinerary, clock),
+        live=Live(folder, archive.meta, itinerary, clock, lambda: room_warning(folder, len(itinerary))),
         log=RunLog(folder),
         asked=wanted.asked,
         bench=bench,
         on_visit=wanted.on_visit,
+        shortage=lambda: shortage(folder),
         until_utc_ns=None if wanted.until is None else round(wanted.until.timestamp() * 1e9),
     )
 

@@ -10,7 +10,7 @@ from importlib.resources import files
 from pathlib import Path
 from typing import Any
 
-import bagit  # type: ignore[import-untyped]
+import bagit
 
 from daq.errors import StorageError
 from daq.storage.export import write_csv

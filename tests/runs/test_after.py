@@ -5,8 +5,11 @@ from __future__ import annotations
 import json
 import shutil
 from pathlib import Path
+from typing import Any
 
 import pytest
+import zarr
+import zarr.storage
 
 from daq.cli import main
 from daq.storage.log import read_log
@@ -98,3 +101,39 @@ def test_the_record_says_what_was_done_with_which_devices_and_which_program(run)
     assert meta["set_up"]["slits"]["A"]["width_m"] == 40e-6
     assert set(meta["texts_sha256"]) == {"description.toml", "rig.toml"}
     assert meta["results"]["pairs"] == 2
+
+
+def test_a_bag_is_whole_and_one_flipped_byte_is_named(run, capsys, tmp_path):
+    bag = tmp_path / "night.bag"
+    assert answer(capsys, "pack", str(run), "--to", str(bag)) == (0, {"ok": True, "packed": str(bag)})
+    assert answer(capsys, "pack", str(bag)) == (0, {"ok": True, "problems": []})
+    file = bag / "data" / "visits.csv"
+    file.write_bytes(file.read_bytes().replace(b"1", b"2", 1))
+
+    status, figures = answer(capsys, "pack", str(bag))
+
+    assert status == 4
+    assert "visits.csv" in figures["problems"][0]
+
+
+def test_a_zip_of_a_run_opens_with_zarr_alone(run, capsys, tmp_path):
+    status, figures = answer(capsys, "pack", str(run), "--zip")
+
+    group: Any = zarr.open_group(zarr.storage.ZipStore(figures["packed"], mode="r"), mode="r")
+    assert status == 0
+    assert group["values"].shape == (1312, 1)
+
+
+@pytest.mark.parametrize("name", ["visits.csv", "visits.nc"])
+def test_visits_are_exported_by_the_ending_of_the_file(run, capsys, tmp_path, name):
+    status, _ = answer(capsys, "export", str(run), str(tmp_path / name))
+
+    assert status == 0
+    assert (tmp_path / name).stat().st_size > 10_000
+
+
+def test_an_ending_that_names_no_format_is_refused(run, capsys, tmp_path):
+    status, figures = answer(capsys, "export", str(run), str(tmp_path / "visits.xls"))
+
+    assert status == 2
+    assert "end the name in .csv or .nc" in figures["problems"][0]

@@ -3,7 +3,7 @@ from collections import Counter
 
 import pytest
 
-from daq.errors import DaqError, DeviceError
+from daq.errors import DaqError, DeviceError, StorageError
 from daq.estimate import Running
 from daq.itinerary import compose, plan_of
 from daq.sequencer import State
@@ -172,6 +172,51 @@ def test_an_end_after_the_lap_comes_at_the_edge_of_a_lap(tmp_path):
     carry_out(night, Place(0))
 
     assert len(bench.sink.kept) == 24
+
+
+def test_a_run_holds_while_there_is_no_room_and_goes_on_when_there_is(tmp_path):
+    night, bench = a_night(tmp_path)
+    said = iter(["", "", "no room", "no room", "no room"])
+    night.shortage = lambda: next(said, "")
+
+    ended = carry_out(night, Place(0))
+
+    assert ended == COMPLETE
+    assert [reading.visit for reading in bench.sink.kept] == list(range(96))
+    assert "holding" in events(tmp_path)
+
+
+def test_a_visit_that_a_full_disk_refused_is_measured_again_with_its_stand(tmp_path):
+    night, bench = a_night(tmp_path)
+    store, full = bench.sink.commit, iter([False] * 10 + [True])
+
+    def commit(reading):
+        if next(full, False):
+            raise StorageError("the disk is full", where="run.zarr", remedy="Make room")
+        return store(reading)
+
+    bench.sink.commit = commit
+    said = iter([""] * 2 + ["no room"])
+    night.shortage = lambda: next(said, "")
+
+    ended = carry_out(night, Place(0))
+
+    tries = [(reading.visit, reading.attempt) for reading in bench.sink.kept]
+    assert ended == COMPLETE
+    assert tries[:12] == [*((visit, 1) for visit in range(10)), (8, 2), (9, 2)]
+    assert night.running.estimate().pairs == 2
+
+
+def test_a_storage_error_with_room_on_the_disk_ends_the_run(tmp_path):
+    night, bench = a_night(tmp_path)
+
+    def commit(reading):
+        raise StorageError("the disk has gone", where="run.zarr", remedy="Look at it")
+
+    bench.sink.commit = commit
+
+    with pytest.raises(StorageError):
+        carry_out(night, Place(0))
 
 
 def test_parking_shows_no_slit(tmp_path):

@@ -1,0 +1,26 @@
+"""Room on the disk: a warning when a night may not fit, a hold before the disk is full."""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+from daq.storage.layout import CHUNK
+from daq.storage.space import free_bytes, needed_bytes
+
+HOLD_BYTES = 1_000_000_000
+
+
+def shortage(folder: Path, hold_bytes: int = HOLD_BYTES) -> str:
+    """Return a sentence while there is so little room that a run has to hold, else nothing."""
+    free = free_bytes(folder)
+    if free >= hold_bytes:
+        return ""
+    return f"Only {free / 1e9:.2f} GB are free on the disk; the run holds below {hold_bytes / 1e9:g} GB."
+
+
+def room_warning(folder: Path, visits: int) -> str:
+    """Return a sentence when the whole night may not fit above the room at which a run holds."""
+    free, wanted = free_bytes(folder), needed_bytes(visits, CHUNK) + HOLD_BYTES
+    if free >= wanted:
+        return ""
+    return f"{free / 1e9:.2f} GB are free on the disk, and the whole night may want {wanted / 1e9:.2f} GB."
