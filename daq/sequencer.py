@@ -12,6 +12,7 @@ from dataclasses import dataclass
 from enum import Enum
 
 from daq.errors import DaqError, DeviceError
+from daq.estimate.quality import encoder_bits
 from daq.ports import AxisState, Clock, Counted, Devices, Sink
 from daq.records import Quality, Reading, Visit
 
@@ -83,6 +84,7 @@ def perform(
     sink: Sink,
     clock: Clock,
     becomes: Callable[[State], None] = lambda state: None,
+    judge: Callable[[Reading], Reading] = lambda reading: reading,
 ) -> Iterator[tuple[int, Reading]]:
     """Yield (row, reading) for each visit, once the reading is durable.
 
@@ -93,6 +95,8 @@ def perform(
         supplies them may end the run there.
     becomes
         Told of every state that the run enters.
+    judge
+        Adds to a reading's quality what the rules of the night say, before it is made durable.
 
     Raises
     ------
@@ -118,7 +122,7 @@ def perform(
         if following is not None:
             becomes(State.MOVING)
             arrival = _start_moves(following[0], devices, clock)
-        reading = _reading(gate, closed, devices.counter.read(), sensed, devices)
+        reading = judge(_reading(gate, closed, devices.counter.read(), sensed, devices))
         yield sink.commit(reading), reading
         planned = following
 
@@ -203,7 +207,7 @@ def _reading(
         slices=counted.slices,
         encoder_mm={axis: (gate.axes[axis].encoder_mm, closed[axis].encoder_mm) for axis in gate.axes},
         sensors={key: value for values in sensed.values() for key, value in values.items()},
-        quality=_counter_quality(visit, counted)
+        quality=_counter_quality(counted)
         | _axis_quality(gate, closed, devices)
         | UNPLANNED_BITS.get(reason, Quality.GOOD),
         reason=reason,
@@ -228,25 +232,13 @@ def _sense(devices: Devices, clock: Clock, sensed: Sensed) -> None:
         sensed[sensor.name] = {f"{sensor.name}_{key}": (*pair, now_ns) for key, pair in values.items()}
 
 
-def _counter_quality(visit: Visit, counted: Counted) -> Quality:
-    quality = Quality.GOOD
-    if counted.overflow:
-        quality |= Quality.OVERFLOW
-    if counted.own_live_time:
-        quality |= Quality.OWN_LIVE_TIME
-    if abs(counted.live_s - visit.dwell_s) > 1e-3 * visit.dwell_s:
-        quality |= Quality.GATE_TIME
-    return quality
+def _counter_quality(counted: Counted) -> Quality:
+    quality = Quality.OVERFLOW if counted.overflow else Quality.GOOD
+    return quality | (Quality.OWN_LIVE_TIME if counted.own_live_time else Quality.GOOD)
 
 
 def _axis_quality(gate: _Gate, closed: Mapping[str, AxisState], devices: Devices) -> Quality:
     visit = gate.planned[0]
-    target = {**devices.mask.target_mm(visit.opening), devices.detector.name: visit.position_mm}
-    quality = Quality.GOOD
-    for axis, tolerance_mm in devices.tolerance_mm.items():
-        ends = (gate.axes[axis].encoder_mm, closed[axis].encoder_mm)
-        if max(abs(end - target[axis]) for end in ends) > tolerance_mm:
-            quality |= Quality.OFF_TARGET
-        if abs(ends[1] - ends[0]) > tolerance_mm:
-            quality |= Quality.MOVED
-    return quality
+    target_mm = {**devices.mask.target_mm(visit.opening), devices.detector.name: visit.position_mm}
+    ends_mm = {axis: (state.encoder_mm, closed[axis].encoder_mm) for axis, state in gate.axes.items()}
+    return encoder_bits(target_mm, ends_mm, devices.tolerance_mm)

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from math import nan
 from typing import Any
 
 import numpy as np
@@ -11,7 +10,7 @@ import numpy as np
 from daq.estimate.detected import detected
 from daq.estimate.headline import headline
 from daq.estimate.plan import Plan, stand_places
-from daq.estimate.rows import Rows
+from daq.estimate.rows import rows_of_readings
 from daq.estimate.settle import Settled, settle, taking
 from daq.estimate.sums import Sums, sums_of
 from daq.estimate.tables import tables_of
@@ -100,7 +99,7 @@ class Running:
 
     def _take_in(self, stand: int, attempt: int, readings: dict[int, Reading]) -> None:
         in_order = [readings[visit] for visit in sorted(readings)]
-        rows = _rows(in_order)
+        rows = rows_of_readings(in_order)
         found = detected(rows, self._plan)
         good = bool(found.fine.all()) and not any(reading.quality & EXCLUDING for reading in in_order)
         pair = self._pair[stand]
@@ -120,20 +119,6 @@ class Running:
         closed_ns = max(reading.gate_close_ns for reading in readings)
         self._first_ns = first_ns if self._first_ns is None else min(self._first_ns, first_ns)
         self._closed_ns[pair] = max(self._closed_ns.get(pair, closed_ns), closed_ns)
-
-
-def _rows(readings: list[Reading]) -> Rows:
-    """Return readings of one attempt as rows."""
-    nothing = (nan,) * len(readings[0].values)
-    return Rows(
-        np.array([reading.visit for reading in readings], np.int64),
-        np.array([reading.attempt for reading in readings], np.int64),
-        np.array([int(reading.quality) for reading in readings], np.int64),
-        np.array([reading.values for reading in readings], float),
-        np.array([reading.values_var or nothing for reading in readings], float),
-        np.array([reading.live_s for reading in readings], float),
-        np.array([(reading.gate_open_ns + reading.gate_close_ns) / 2e9 for reading in readings]),
-    )
 
 
 _BANDS = ("kappa", "interval_low", "interval_high", "whole_low", "whole_high")

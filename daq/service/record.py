@@ -46,6 +46,7 @@ def record_of(
         "monitor_channel": settings.monitor_channel,
         "heralded": settings.heralded and settings.heralded.model_dump(),
         "quality": measurement.quality.model_dump(),
+        **_judged_by(itinerary, devices),
         "weights": itinerary.weights.tolist(),
         "signs": {name: signs.tolist() for name, signs in itinerary.signs.items()},
         "normalisation": settings.normalisation,
@@ -61,6 +62,16 @@ def record_of(
         "started_utc": stamp(clock.utc_ns()),
         "wishes": asdict(loaded.wishes),
         "truth_kappa": None if bench is None else _truth(bench, itinerary, settings.normalisation),
+    }
+
+
+def _judged_by(itinerary: Itinerary, devices: Devices) -> dict[str, Any]:
+    """Return what the quality rules compare with: expected rates, targets and tolerances of the axes."""
+    masks = itinerary.openings.tolist()
+    return {
+        "expected_hz": itinerary.rates_hz.tolist(),
+        "tolerance_mm": dict(devices.tolerance_mm),
+        "targets_mm": {openings.name(mask): dict(devices.mask.target_mm(mask)) for mask in masks},
     }
 
 

@@ -117,6 +117,8 @@ def dataset(of: Plan, rows: Sequence[Reading]) -> xr.Dataset:
         "quality": np.array([int(row.quality) for row in rows]),
         "gate_open_ns": np.array([row.gate_open_ns for row in rows], np.int64),
         "gate_close_ns": np.array([row.gate_close_ns for row in rows], np.int64),
+        "utc_ns": np.array([row.utc_ns for row in rows], np.int64),
+        "dwell_s": np.array([row.dwell_s for row in rows], float),
         "stand": np.where(planned, of.stand[visit], -1),
         "pair": np.where(planned, of.pair[visit], -1),
     }

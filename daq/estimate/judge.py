@@ -1,0 +1,197 @@
+"""Judge: the quality rules applied as readings come home, before they are stored; the same again off line."""
+
+from __future__ import annotations
+
+from bisect import insort
+from collections.abc import Sequence
+from dataclasses import dataclass, field, replace
+from math import inf, log, sqrt
+
+import numpy as np
+
+from daq import openings as names
+from daq.estimate.arrays import FloatArray, added
+from daq.estimate.detected import Detected, detected
+from daq.estimate.plan import Plan
+from daq.estimate.quality import Rules, clock_bits, counter_bits, dispersion, fingerprint
+from daq.estimate.rows import rows_of_readings
+from daq.records import EXCLUDING, Quality, Reading
+
+STANDS_TO_SCALE = 20  # from here the night's own median counts
+TO_SIGMA = 1.4826  # median absolute deviation of a normal distribution
+
+
+@dataclass(slots=True)
+class _Place:
+    """What is known of one position: kept counts and exposures by opening, the monitor, the last refused."""
+
+    counts: FloatArray
+    exposure: FloatArray
+    stands: int = 0
+    light: float = 0.0
+    refused: tuple[FloatArray, FloatArray] | None = None
+
+
+@dataclass(slots=True)
+class _Median:
+    """A running median, and a running scale that is never below one."""
+
+    values: list[float] = field(default_factory=list)
+
+    def add(self, value: float) -> None:
+        """Take in a value."""
+        insort(self.values, value)
+
+    @property
+    def middle(self) -> float:
+        """The median so far."""
+        return self.values[len(self.values) // 2] if self.values else 0.0
+
+    @property
+    def scale(self) -> float:
+        """The median as a scale: one while it is not known, or the night is quiet."""
+        return max(1.0, self.middle) if len(self.values) >= STANDS_TO_SCALE else 1.0
+
+
+class Judge:
+    """Applies the rules to the readings of a run in their order; `finding` is what the last one showed."""
+
+    def __init__(self, plan: Plan, rules: Rules, expected_hz: FloatArray | None = None) -> None:
+        self._plan, self._rules, self._expected_hz = plan, rules, expected_hz
+        self._places: dict[int, _Place] = {}
+        self._attempt: list[Reading] = []
+        self._before: Reading | None = None
+        self._sliced, self._stood, self._lit = _Median(), _Median(), _Median()
+        self.finding: str | None = None
+
+    def judge(self, reading: Reading) -> Reading:
+        """Return a reading with the bits that the rules add to its quality."""
+        self.finding = None
+        quality = reading.quality | clock_bits(self._before, reading, self._rules)
+        if reading.visit >= 0 and self._plan.counting == "counts":
+            quality |= counter_bits(reading, self._rules, self._due(reading))
+            quality |= self._sliced_bits(reading)
+        judged = replace(reading, quality=quality)
+        attempt = self._gathered(judged)
+        if len(attempt) == self._plan.whole_stand:
+            judged = replace(judged, quality=quality | self._stand_bits(attempt))
+        self._settle(judged)
+        return judged
+
+    def take(self, reading: Reading) -> None:
+        """Take in a reading that was judged before: a run goes on."""
+        if reading.visit >= 0 and self._plan.counting == "counts":
+            self._sliced_bits(reading)
+        attempt = self._gathered(reading)
+        if len(attempt) == self._plan.whole_stand:
+            self._stand_bits(attempt)
+        self._settle(reading)
+
+    def _due(self, reading: Reading) -> float | None:
+        """Return the counts that a visit should bring at least: what was kept here, else half the plan."""
+        position, opening = (
+            int(column[reading.visit]) for column in (self._plan.position, self._plan.opening)
+        )
+        place = self._places.get(position)
+        if place is not None and place.stands and place.exposure[opening] > 0:
+            return float(reading.live_s * place.counts[opening] / place.exposure[opening])
+        return (
+            None
+            if self._expected_hz is None
+            else reading.live_s * float(self._expected_hz[position, opening]) / 2
+        )
+
+    def _sliced_bits(self, reading: Reading) -> Quality:
+        if reading.slices is None:
+            return Quality.GOOD
+        found = dispersion([part[0] / self._plan.fano for part in reading.slices])
+        beyond = found.beyond(self._rules.dispersion_p, self._sliced.scale)
+        if found.dof:
+            self._sliced.add(found.ratio)
+        return Quality.DISPERSION if beyond else Quality.GOOD
+
+    def _gathered(self, reading: Reading) -> list[Reading]:
+        """Return the visits of this attempt so far, when nothing else was done between them."""
+        if reading.visit < 0:
+            return []
+        stand = self._plan.stand[reading.visit]
+        same = [
+            one
+            for one in self._attempt
+            if self._plan.stand[one.visit] == stand and one.attempt == reading.attempt
+        ]
+        self._attempt = [*same, reading] if len(same) == len(self._attempt) else [reading]
+        return self._attempt
+
+    def _settle(self, reading: Reading) -> None:
+        self._before = reading
+        if len(self._attempt) == self._plan.whole_stand:
+            self._attempt = []
+
+    def _stand_bits(self, attempt: Sequence[Reading]) -> Quality:
+        """Return what a whole stand adds; it is kept as a reference where nothing speaks against it."""
+        rows = rows_of_readings(attempt)
+        found = detected(rows, self._plan)
+        excluded = any(one.quality & EXCLUDING & ~Quality.FINGERPRINT for one in attempt)
+        if self._plan.counting != "counts" or excluded or not found.fine.all():
+            return Quality.GOOD
+        position = int(self._plan.position[attempt[0].visit])
+        opening, cells = self._plan.opening[rows.visit], len(self._plan.openings)
+        counts, exposure = (
+            added(opening, part, cells) for part in (found.value / self._plan.fano, rows.live)
+        )
+        place = self._places.setdefault(position, _Place(np.zeros(cells), np.zeros(cells)))
+        bits = self._fingerprint_bits(attempt, place, counts, exposure)
+        if bits & Quality.FINGERPRINT:
+            return bits
+        light = float(np.nansum(found.monitor)) if self._plan.monitor is not None else 0.0
+        bits |= self._monitor_bits(place, counts, exposure, light, found)
+        place.counts += counts
+        place.exposure += exposure
+        place.light += light
+        place.stands += 1
+        return bits
+
+    def _fingerprint_bits(
+        self, attempt: Sequence[Reading], place: _Place, counts: FloatArray, exposure: FloatArray
+    ) -> Quality:
+        if not place.stands:
+            return Quality.GOOD
+        found = fingerprint(counts, exposure, place.counts, place.exposure)
+        if not found.beyond(self._rules.fingerprint_p, self._stood.scale):
+            if found.dof:
+                self._stood.add(found.ratio)
+            return Quality.GOOD
+        if place.stands == 1 and place.refused is not None:
+            again = fingerprint(counts, exposure, *place.refused)
+            if not again.beyond(self._rules.fingerprint_p, self._stood.scale):
+                # Two that agree, and the only one kept before does not: that one is odd.
+                place.counts, place.exposure = (part.copy() for part in place.refused)
+                return Quality.GOOD
+        place.refused = (counts, exposure)
+        name = names.name(int(self._plan.openings[found.worst]))
+        where = f"{attempt[0].position_mm:g} mm"
+        self.finding = f"The stand at {where} does not fit the earlier ones there; opening {name} stands out."
+        return Quality.FINGERPRINT
+
+    def _monitor_bits(
+        self, place: _Place, counts: FloatArray, exposure: FloatArray, light: float, found: Detected
+    ) -> Quality:
+        """Return whether stand over monitor leaves the band that it kept all night."""
+        if not (place.stands and place.light > 0 and light > 0):
+            return Quality.GOOD
+        strength = log(counts.sum() / float(place.counts @ (exposure / place.exposure)))
+        off = strength - log(light / (place.light / place.stands))
+        noise = float(np.nansum(found.monitor_variance)) / light**2
+        again = 1 + 1 / place.stands
+        sigma = sqrt(again * (1 / counts.sum() + noise))
+        beyond = abs(off - self._lit.middle) > self._rules.monitor_sigma * max(sigma, self._wander())
+        self._lit.add(off)
+        return Quality.MONITOR if beyond else Quality.GOOD
+
+    def _wander(self) -> float:
+        """Return how far stand over monitor usually is from its median; infinite while that is not known."""
+        values = np.array(self._lit.values)
+        if len(values) < STANDS_TO_SCALE:
+            return inf
+        return TO_SIGMA * float(np.median(np.abs(values - np.median(values))))

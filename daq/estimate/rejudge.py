@@ -1,0 +1,89 @@
+"""Judging again: the quality bits of an archive, worked out from its own columns."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Mapping
+from dataclasses import replace
+from typing import Any
+
+import numpy as np
+
+from daq import openings
+from daq.estimate.arrays import IntArray
+from daq.estimate.dataset import plan_of_dataset
+from daq.estimate.judge import Judge
+from daq.estimate.quality import Rules, encoder_bits
+from daq.records import Quality, Reading
+
+# What can be worked out again; a counter's own overflow flag and what a device said of itself cannot.
+AGAIN = (
+    Quality.OFF_TARGET
+    | Quality.MOVED
+    | Quality.DISPERSION
+    | Quality.GATE_TIME
+    | Quality.CLOCK_STEP
+    | Quality.NO_COUNTS
+    | Quality.FINGERPRINT
+    | Quality.MONITOR
+)
+
+
+def judged_again(dataset: Any) -> IntArray:
+    """Return the quality of every row as the frozen rules give it off line.
+
+    Parameters
+    ----------
+    dataset
+        What `daq.open_visits` gives, rows in the order in which they were committed.
+    """
+    attributes: Mapping[str, Any] = dataset.attrs
+    expected = attributes.get("expected_hz")
+    judge = Judge(
+        plan_of_dataset(dataset),
+        Rules(**attributes.get("quality", {})),
+        None if expected is None else np.asarray(expected, float),
+    )
+    return np.array([int(judge.judge(reading).quality) for reading in _readings(dataset)], np.int64)
+
+
+def readings_of_dataset(dataset: Any) -> Iterator[Reading]:
+    """Yield the readings of a dataset, rows in their order, as far as estimate and rules look at them."""
+    plain = ("visit", "attempt", "opening", "position_mm", "dwell_s", "live_s", "quality")
+    names = (*plain, "gate_open_ns", "gate_close_ns", "utc_ns", "values", "values_var")
+    columns = [dataset[name].values.tolist() for name in names]
+    sliced = dataset["slices"].values if "slices" in dataset else None
+    for row, numbers in enumerate(zip(*columns, strict=True)):
+        field = dict(zip(names, numbers, strict=True))
+        variances = tuple(field["values_var"])
+        yield Reading(
+            **field
+            | {
+                "values": tuple(field["values"]),
+                "values_var": variances if variances[0] == variances[0] else None,
+                "quality": Quality(field["quality"]),
+                "slices": None if sliced is None else _slices(sliced[row]),
+            }
+        )
+
+
+def _readings(dataset: Any) -> Iterator[Reading]:
+    """Yield readings without the bits that can be worked out again, but for those of the encoders."""
+    axes = dataset.attrs.get("tolerance_mm", {})
+    ends = {
+        axis: [dataset[f"encoder_{axis}_{edge}_mm"].values for edge in ("open", "close")] for axis in axes
+    }
+    for row, reading in enumerate(readings_of_dataset(dataset)):
+        bits = Quality(reading.quality & ~AGAIN)
+        if axes:
+            seen = {axis: (float(opened[row]), float(closed[row])) for axis, (opened, closed) in ends.items()}
+            bits |= encoder_bits(_targets(dataset.attrs, reading), seen, axes)
+        yield replace(reading, quality=bits)
+
+
+def _targets(attributes: Mapping[str, Any], reading: Reading) -> dict[str, float]:
+    shown = attributes["targets_mm"][openings.name(reading.opening)]
+    return {**shown, attributes["axes"][-1]: reading.position_mm}
+
+
+def _slices(table: IntArray) -> tuple[tuple[int, ...], ...] | None:
+    return None if table.size == 0 or table[0, 0] < 0 else tuple(map(tuple, table.tolist()))
