@@ -4,12 +4,15 @@ from daq.estimate.blinding import blind_offset, shown
 from daq.estimate.blocks import jackknife
 from daq.estimate.charts import cusum, cusum_run_length, ewma, ewma_run_length
 from daq.estimate.counting import dead_time_two_source_s, poisson_interval, seen_rate_hz, true_rate_hz
-from daq.estimate.dataset import estimate_run, plan_of_dataset
+from daq.estimate.dataset import estimate_run, plan_of_dataset, readings_of_dataset
 from daq.estimate.drift import allan_deviation, structure_function
+from daq.estimate.judge import Judge
 from daq.estimate.limits import null_limit
 from daq.estimate.peeking import anytime_multiplier
 from daq.estimate.plan import Plan
 from daq.estimate.pooling import Pooled, pool
+from daq.estimate.quality import Rules
+from daq.estimate.rejudge import judged_again
 from daq.estimate.residual import Residual, kappa, residual, terms
 from daq.estimate.running import Running
 from daq.estimate.slits import (
@@ -25,9 +28,11 @@ from daq.estimate.whole import Estimate, estimate_sums
 
 __all__ = [
     "Estimate",
+    "Judge",
     "Plan",
     "Pooled",
     "Residual",
+    "Rules",
     "Running",
     "Sums",
     "allan_deviation",
@@ -43,12 +48,14 @@ __all__ = [
     "expected_rates_hz",
     "jackknife",
     "jet_speed_m_s",
+    "judged_again",
     "kappa",
     "null_limit",
     "plan_of_dataset",
     "planned_weights",
     "poisson_interval",
     "pool",
+    "readings_of_dataset",
     "residual",
     "seen_rate_hz",
     "shown",

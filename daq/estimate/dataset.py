@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Iterator, Mapping
 from typing import Any
 
 import numpy as np
@@ -12,6 +12,7 @@ from daq.estimate.plan import Heralded, Plan
 from daq.estimate.rows import Rows
 from daq.estimate.visits import visits_of
 from daq.estimate.whole import Estimate, estimate_visits
+from daq.records import Quality, Reading
 
 NEEDED = (
     *("slits", "openings", "positions_mm", "weights", "signs", "normalisation"),
@@ -78,6 +79,26 @@ def rows_of_dataset(dataset: Any) -> Rows:
     )
 
 
+def readings_of_dataset(dataset: Any) -> Iterator[Reading]:
+    """Yield the readings of a dataset, rows in their order, as far as estimate and rules look at them."""
+    plain = ("visit", "attempt", "opening", "position_mm", "dwell_s", "live_s", "quality")
+    names = (*plain, "gate_open_ns", "gate_close_ns", "utc_ns", "values", "values_var")
+    columns = [dataset[name].values.tolist() for name in names]
+    sliced = dataset["slices"].values if "slices" in dataset else None
+    for row, numbers in enumerate(zip(*columns, strict=True)):
+        field = dict(zip(names, numbers, strict=True))
+        variances = tuple(field["values_var"])
+        yield Reading(
+            **field
+            | {
+                "values": tuple(field["values"]),
+                "values_var": variances if variances[0] == variances[0] else None,
+                "quality": Quality(field["quality"]),
+                "slices": None if sliced is None else _slices(sliced[row]),
+            }
+        )
+
+
 def _counting(attributes: Mapping[str, Any]) -> dict[str, Any]:
     """Return what a value is; an archive that does not say holds Poisson counts of one channel."""
     pairs = attributes.get("heralded")
@@ -117,3 +138,7 @@ def _by_visit(dataset: Any, openings: IntArray, positions: FloatArray) -> dict[s
     for name, values in rows.items():
         columns[name][visit[planned]] = values
     return columns
+
+
+def _slices(table: IntArray) -> tuple[tuple[int, ...], ...] | None:
+    return None if table.size == 0 or table[0, 0] < 0 else tuple(map(tuple, table.tolist()))

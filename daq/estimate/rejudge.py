@@ -10,7 +10,7 @@ import numpy as np
 
 from daq import openings
 from daq.estimate.arrays import IntArray
-from daq.estimate.dataset import plan_of_dataset
+from daq.estimate.dataset import plan_of_dataset, readings_of_dataset
 from daq.estimate.judge import Judge
 from daq.estimate.quality import Rules, encoder_bits
 from daq.records import Quality, Reading
@@ -46,26 +46,6 @@ def judged_again(dataset: Any) -> IntArray:
     return np.array([int(judge.judge(reading).quality) for reading in _readings(dataset)], np.int64)
 
 
-def readings_of_dataset(dataset: Any) -> Iterator[Reading]:
-    """Yield the readings of a dataset, rows in their order, as far as estimate and rules look at them."""
-    plain = ("visit", "attempt", "opening", "position_mm", "dwell_s", "live_s", "quality")
-    names = (*plain, "gate_open_ns", "gate_close_ns", "utc_ns", "values", "values_var")
-    columns = [dataset[name].values.tolist() for name in names]
-    sliced = dataset["slices"].values if "slices" in dataset else None
-    for row, numbers in enumerate(zip(*columns, strict=True)):
-        field = dict(zip(names, numbers, strict=True))
-        variances = tuple(field["values_var"])
-        yield Reading(
-            **field
-            | {
-                "values": tuple(field["values"]),
-                "values_var": variances if variances[0] == variances[0] else None,
-                "quality": Quality(field["quality"]),
-                "slices": None if sliced is None else _slices(sliced[row]),
-            }
-        )
-
-
 def _readings(dataset: Any) -> Iterator[Reading]:
     """Yield readings without the bits that can be worked out again, but for those of the encoders."""
     axes = dataset.attrs.get("tolerance_mm", {})
@@ -83,7 +63,3 @@ def _readings(dataset: Any) -> Iterator[Reading]:
 def _targets(attributes: Mapping[str, Any], reading: Reading) -> dict[str, float]:
     shown = attributes["targets_mm"][openings.name(reading.opening)]
     return {**shown, attributes["axes"][-1]: reading.position_mm}
-
-
-def _slices(table: IntArray) -> tuple[tuple[int, ...], ...] | None:
-    return None if table.size == 0 or table[0, 0] < 0 else tuple(map(tuple, table.tolist()))

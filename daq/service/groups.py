@@ -10,7 +10,7 @@ import xarray as xr
 
 from daq.itinerary import Itinerary
 from daq.itinerary.orders import IntArray
-from daq.records import Quality, Reading, Visit
+from daq.records import Visit
 
 PLANNED, AFTER_BREAK, AFTER_FAULT = 0, 1, 2  # ids of daq.records.REASONS
 
@@ -60,13 +60,3 @@ def supply(
             if number != place.number:
                 attempt, reason = 1, PLANNED
         yield itinerary.visit(number), attempt, reason
-
-
-def readings(visits: xr.Dataset) -> Iterator[Reading]:
-    """Yield the readings of an archive as far as the running estimate needs them, in order."""
-    names = ("visit", "attempt", "opening", "position_mm", "dwell_s", "live_s", "values", "quality")
-    stamps = ("gate_open_ns", "gate_close_ns", "utc_ns")
-    columns = (visits[name].values.tolist() for name in names + stamps)
-    for row in zip(*columns, strict=True):
-        field = dict(zip(names + stamps, row, strict=True))
-        yield Reading(**field | {"values": tuple(field["values"]), "quality": Quality(field["quality"])})

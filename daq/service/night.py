@@ -11,7 +11,7 @@ from typing import Any
 import numpy as np
 
 from daq.errors import DeviceError, StorageError
-from daq.estimate import Running
+from daq.estimate import Judge, Running
 from daq.itinerary import Itinerary
 from daq.openings import NONE, mask
 from daq.ports import Bench, Clock, Devices
@@ -39,6 +39,7 @@ class Night:
     clock: Clock
     devices: Devices
     running: Running
+    judge: Judge
     live: Live
     log: RunLog
     asked: Asked
@@ -101,7 +102,10 @@ def _reaction(night: Night, error: DeviceError, tries: int, good_ns: int) -> tup
 
 def _readings(night: Night, place: Place) -> Iterator[Reading]:
     visits = supply(night.itinerary, place, lambda number: _may_go_on(night, number))
-    for _, reading in perform(visits, night.devices, night.archive, night.clock, night.become):
+    performed = perform(visits, night.devices, night.archive, night.clock, night.become, night.judge.judge)
+    for _, reading in performed:
+        if night.judge.finding:
+            tell(night, "left out", text=night.judge.finding)
         night.running.add(reading)
         night.live.took(reading)
         night.on_visit(reading)

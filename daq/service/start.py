@@ -15,14 +15,14 @@ import xarray as xr
 from daq.devices.clock import RealClock
 from daq.devices.registry import open_devices
 from daq.errors import DaqError, DeviceError, StorageError
-from daq.estimate import Running
+from daq.estimate import Judge, Rules, Running, readings_of_dataset
 from daq.itinerary import Itinerary, plan_of
 from daq.ports import Bench, Clock, Devices
 from daq.records import Reading
 from daq.sequencer import State
 from daq.service.asked import Asked
 from daq.service.extensions import open_bench
-from daq.service.groups import Place, place_after, readings
+from daq.service.groups import Place, place_after
 from daq.service.live import Live, stamp
 from daq.service.load import Loaded, Wishes, load_run
 from daq.service.night import BENCH_FILE, STOPPED, Night, carry_out, park, stop_now, tell
@@ -86,7 +86,8 @@ def resume(folder: Path, wanted: Wanted) -> tuple[Path, str]:
         devices = stack.enter_context(open_devices(loaded.rig, clock))
         _reference(devices, allowed=wanted.home or bench is not None)
         night = _night(folder, loaded, itinerary, archive, clock, devices, bench, wanted)
-        for reading in readings(visits):
+        for reading in readings_of_dataset(visits):
+            night.judge.take(reading)
             night.running.add(reading)
             night.live.took(reading)
         return folder, _through(night, place_after(itinerary, visits), wanted)
@@ -160,13 +161,16 @@ def _night(
     bench: Bench | None,
     wanted: Wanted,
 ) -> Night:
+    plan = plan_of(itinerary, loaded.measurement)
+    rules = Rules(**loaded.measurement.quality.model_dump())
     return Night(
         folder=folder,
         itinerary=itinerary,
         archive=archive,
         clock=clock,
         devices=devices,
-        running=Running(plan_of(itinerary, loaded.measurement)),
+        running=Running(plan),
+        judge=Judge(plan, rules, itinerary.rates_hz),
         live=Live(folder, archive.meta, itinerary, clock, lambda: room_warning(folder, len(itinerary))),
         log=RunLog(folder),
         asked=wanted.asked,

@@ -4,7 +4,7 @@ from collections import Counter
 import pytest
 
 from daq.errors import DaqError, DeviceError, StorageError
-from daq.estimate import Running
+from daq.estimate import Judge, Rules, Running
 from daq.itinerary import compose, plan_of
 from daq.sequencer import State
 from daq.service.asked import Asked
@@ -38,6 +38,7 @@ def a_night(folder, fault=no_fault, **changes):
         clock=bench.clock,
         devices=bench.devices,
         running=Running(plan_of(itinerary, measurement)),
+        judge=Judge(plan_of(itinerary, measurement), Rules()),
         live=Live(folder, META, itinerary, bench.clock),
         log=RunLog(folder),
         asked=Asked(),
