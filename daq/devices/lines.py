@@ -105,6 +105,42 @@ class Lines:
         line, _, self.rest = self.rest.partition(self._end)
         return line
 
+    def block(self, until_ns: int, asked: str, most_bytes: int) -> bytes:
+        """Return the payload of a block of known length; it may hold anything, ends of line too.
+
+        Raises
+        ------
+        DeviceError
+            "garbage" for what is no such block (one of unknown length is none) or is too long.
+
+        References
+        ----------
+        .. [1] IEEE 488.2, sect. 8.7.9, definite length arbitrary block response data.
+        """
+        head = self._exactly(2, until_ns, asked)
+        if head[:1] != b"#" or head[1:] not in b"123456789":
+            raise self._garbage(
+                f"{head + self.rest[:40]!r} and no block of known length in reply to {asked!r}"
+            )
+        length = self._exactly(int(head[1:]), until_ns, asked)
+        if not length.isdigit() or int(length) > most_bytes:
+            raise self._garbage(f"a block of length {length!r} in reply to {asked!r}")
+        payload = self._exactly(int(length), until_ns, asked)
+        if self._exactly(len(self._end), until_ns, asked) != self._end:
+            raise self._garbage(f"a block that does not end where it says in reply to {asked!r}")
+        self._came += 1
+        return payload
+
+    def _exactly(self, size: int, until_ns: int, asked: str) -> bytes:
+        data = bytearray(self.rest)
+        while len(data) < size:
+            if not self._readable(until_ns):
+                self.rest = bytes(data)
+                raise self._timeout(asked)
+            data += self._receive()
+        self.rest = bytes(data[size:])
+        return bytes(data[:size])
+
     def waiting(self) -> bytes:
         """Return, and so drop, what has come unasked, without waiting for more."""
         dropped, self.rest = self.rest, b""

@@ -144,6 +144,24 @@ class Link:
         finally:
             self._turn.give()
 
+    def ask_block(self, text: str, most_bytes: int, timeout_s: float | None = None) -> bytes:
+        """Return the payload of a block of known length (IEEE 488.2) that answers one command; asked once.
+
+        Raises
+        ------
+        DeviceError
+            As `ask`.
+        """
+        urgent, timeout_s = self._urgent, self._wire.timeout_s if timeout_s is None else timeout_s
+        self._take_turn()
+        try:
+            self._begin(text, urgent)
+            payload = self._opened().block(self._from_now_ns(timeout_s), text, most_bytes)
+            self._end_in_step(text, urgent, b"")
+            return payload
+        finally:
+            self._turn.give()
+
     def tell(self, text: str) -> None:
         """Send a command that has no reply; raises DeviceError "lost"."""
         urgent = self._urgent
@@ -176,21 +194,28 @@ class Link:
                 log.warning("%s; asking again", error)
 
     def _ask_once(self, text: str, pattern: re.Pattern[str], timeout_s: float, urgent: int) -> re.Match[str]:
-        self._step_in(urgent)
-        self._in_step_at = -1
-        self._write(text, urgent)
-        lines = self._opened()
-        line = lines.line(self._from_now_ns(timeout_s), text)
+        self._begin(text, urgent)
+        line = self._opened().line(self._from_now_ns(timeout_s), text)
         match = pattern.fullmatch(line)
         if match is None:
             raise self._garbage(f"{line!r} in reply to {text!r}")
+        self._end_in_step(text, urgent, line.encode("ascii") + self._end)
+        return match
+
+    def _begin(self, text: str, urgent: int) -> None:
+        self._step_in(urgent)
+        self._in_step_at = -1
+        self._write(text, urgent)
+
+    def _end_in_step(self, text: str, urgent: int, doubled: bytes) -> None:
+        """Be in step, unless a stop came between or something stands behind the reply, but for itself."""
         if self._urgent != urgent:
             raise self._stopped(text)
+        lines = self._opened()
         behind = lines.behind() if lines.rest else b""
-        if behind.replace(line.encode("ascii") + self._end, b""):
-            raise self._garbage(f"{behind[:40]!r} behind the reply {line!r} to {text!r}")
+        if behind.replace(doubled, b"") if doubled else behind:
+            raise self._garbage(f"{behind[:40]!r} behind the reply {doubled[:40]!r} to {text!r}")
         self._in_step_at = urgent
-        return match
 
     def _step_in(self, urgent: int) -> None:
         unasked = self._opened().waiting()

@@ -1,0 +1,224 @@
+"""Links: round trips, list-mode streams, block reads and duty cycle, each beside a yardstick of the same run.
+
+python -m tests.benchmarks.bench_links [seconds of the long stream]
+"""
+
+from __future__ import annotations
+
+import multiprocessing
+import resource
+import socket
+import statistics
+import sys
+import tempfile
+import threading
+import time
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import pyvisa
+
+from daq.devices.clock import RealClock
+from daq.devices.events import U32, U64, Binner, Layout
+from daq.devices.links import Link, Wire
+from daq.devices.stream import CHUNK, pump
+from daq.ports import Clock
+from daq.records import Visit
+from daq.sequencer import perform
+from simulators.clock import VirtualClock
+from simulators.hosts import Send, Session
+from simulators.listmode import StreamSource, example_words
+from tests.daq.devices.real import on_port
+from tests.daq.devices.test_links import Device
+from tests.standins import MemoryBench
+
+MANY = 16_000_000
+SLICES, CHANNELS = 22, 4
+REPEATS = 5
+
+
+def round_trips() -> None:
+    """Print the time of a question over every kind of link."""
+    wire = Wire(identity_reply=r"LANTERN,\w+,\d+")
+    for kind in ("tcp", "socket", "serial", "rfc2217", "hislip"):
+        clock = RealClock()
+        with (
+            tempfile.TemporaryDirectory() as folder,
+            on_port(kind, Device(clock), Path(folder)) as port,
+            Link(clock, port.address, wire, kind) as link,
+        ):
+            took_us = [1e6 * timed(lambda: link.ask("N?", r"\d+")) for _ in range(1000)]
+        took_us.sort()
+        print(
+            f"question over {kind:8} median {statistics.median(took_us):7.0f} us, p99 {took_us[990]:7.0f} us"
+        )
+
+
+def timed(act: Callable[[], object]) -> float:
+    began_s = time.perf_counter()
+    act()
+    return time.perf_counter() - began_s
+
+
+def _send(words: bytes, port: int, times: int) -> None:
+    with socket.create_connection(("127.0.0.1", port)) as client:
+        for _ in range(times):
+            client.sendall(words)
+
+
+@contextmanager
+def sender(target: Callable[..., None], *arguments: Any) -> Iterator[socket.socket]:
+    """Give a connection to a process that sends."""
+    with socket.create_server(("127.0.0.1", 0)) as server:
+        spawn = multiprocessing.get_context("spawn")
+        process = spawn.Process(target=target, args=(arguments[0], server.getsockname()[1], *arguments[1:]))
+        process.start()
+        stream, _ = server.accept()
+        with stream:
+            yield stream
+        process.join()
+
+
+def raw_hz(words: bytes, size: int, times: int) -> float:
+    """Return how many words a second a bare loop of recv_into takes."""
+    buffer, many = bytearray(CHUNK), 0
+    with sender(_send, words, times) as stream:
+        first = stream.recv_into(buffer)
+        began_s = time.perf_counter()
+        while got := stream.recv_into(buffer):
+            many += got
+        return (many + 0 * first) / size / (time.perf_counter() - began_s)
+
+
+def counted_hz(words: bytes, layout: Layout, times: int, compiled: bool) -> float:
+    """Return how many words a second are received, kept (by nobody) and counted."""
+    ticks = (1 << 60) // SLICES
+    Binner(layout, CHANNELS, SLICES, 0, ticks, compiled).feed(words[:1024])  # compiled now
+    binner = Binner(layout, CHANNELS, SLICES, 0, ticks, compiled)
+    with sender(_send, words, times) as stream:
+        binner.feed(stream.recv(4096))
+        began_s = time.perf_counter()
+        many = pump(stream, binner, _nobody, threading.Event())
+        return many / (layout.bits // 8) / (time.perf_counter() - began_s)
+
+
+def _nobody(chunk: bytes) -> None:
+    """Keep nothing."""
+
+
+def streams() -> None:
+    """Print received and counted words a second, and their ratio to a bare receiver in the same run."""
+    for layout in (U32, U64):
+        words = example_words(layout, 2_000_000, 168_000, CHANNELS, seed=1)
+        size, times = layout.bits // 8, MANY // 2_000_000
+        for name, compiled in (("numpy", False), ("numba", True)):
+            ratios, rates = [], []
+            for _ in range(REPEATS):
+                raw = raw_hz(words, size, times)
+                rates.append(counted_hz(words, layout, times, compiled))
+                ratios.append(rates[-1] / raw)
+            print(
+                f"stream of {layout.bits} bits, {name}: {statistics.median(rates) / 1e6:6.0f} M/s, "
+                f"{statistics.median(ratios):.2f} of a bare one ({min(ratios):.2f} .. {max(ratios):.2f})",
+                flush=True,
+            )
+
+
+def _source(words: bytes, port: int, seconds: float) -> None:
+    over = threading.Event()
+    threading.Timer(seconds, over.set).start()
+    with socket.create_connection(("127.0.0.1", port)) as client:
+        StreamSource(words, U32, 5e6).run(client, over)
+
+
+def long_stream(seconds: float) -> None:
+    """Take 5 M events a second, keep every byte in a file, and print losses and memory."""
+    words = example_words(U32, 2_000_000, 168_000, CHANNELS, seed=1)
+    binner = Binner(U32, CHANNELS, SLICES, 0, 1 << 56)
+    with tempfile.TemporaryDirectory() as folder, (Path(folder) / "events").open("wb") as file:
+
+        def keep(chunk: bytes) -> None:
+            file.write(chunk)
+
+        with sender(_source, words, seconds) as stream:
+            binner.feed(b"")
+            before = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss
+            many = pump(stream, binner, keep, threading.Event())
+            after = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss
+        file.flush()
+        kept = (Path(folder) / "events").stat().st_size
+    print(
+        f"{seconds:g} s at 5 M/s: {many // 4} words, {binner.binned.lost} lost, "
+        f"{kept - many} bytes not kept, memory grew by {(after - before) / 1024:.1f} MB"
+    )
+
+
+def live_fraction(clock: Clock, overlapped: bool, visits: int) -> float:
+    """Return live time over elapsed time: dwell 1 s, readout 0.3 s, moves of 0.5 s."""
+    bench = MemoryBench(clock, mask_move_s=0.5, detector_move_s=0.0, readout_s=0.3)
+    planned = [(Visit(number, number % 2, 0.0, 1.0), 1, 0) for number in range(visits)]
+    began_ns = clock.now_ns()
+    if overlapped:
+        for _ in perform(planned, bench.devices, bench.sink, clock):
+            pass
+    else:
+        for one in planned:
+            for _ in perform([one], bench.devices, bench.sink, clock):
+                pass
+    return visits * 1e9 / (clock.now_ns() - began_ns)
+
+
+class _Digitiser:
+    """Answers DATA? with a block of 4 MB."""
+
+    reply = b"#74000000" + bytes(4_000_000) + b"\n"
+
+    def session(self, send: Send) -> Session:
+        return self
+
+    def feed(self, data: bytes) -> bytes:
+        return b"LANTERN,DIGITISER,1,1\n" if b"*IDN?" in data else self.reply
+
+
+def blocks() -> None:
+    """Print how fast a block of 4 MB is read through our link, and through PyVISA's raw socket."""
+    with tempfile.TemporaryDirectory() as folder, on_port("tcp", _Digitiser(), Path(folder)) as port:
+        wire = Wire(timeout_s=60.0)
+        with Link(RealClock(), port.address, wire, "digitiser") as link:
+            ours_s = statistics.median(timed(lambda: link.ask_block("DATA?", 5_000_000)) for _ in range(5))
+        host, _, number = port.address.removeprefix("tcp://").partition(":")
+        with pyvisa.ResourceManager("@py").open_resource(f"TCPIP::{host}::{number}::SOCKET") as visa:
+            visa.timeout, visa.read_termination, visa.write_termination = 60_000, "\n", "\n"
+            visa.query("*IDN?")
+            visa_s = timed(lambda: visa.query_binary_values("DATA?", datatype="I", container=np.array))
+    print(
+        f"block of 4 MB: {4 / ours_s:.0f} MB/s, {visa_s / ours_s:.0f} times PyVISA's raw socket, "
+        f"{4 / visa_s:.1f} MB/s"
+    )
+
+
+def duty() -> None:
+    """Print live time against the ideal dwell / (dwell + move), virtual and real clock."""
+    makers: dict[str, tuple[Callable[[], Clock], int]] = {
+        "virtual": (lambda: VirtualClock(0), 200),
+        "real": (RealClock, 15),
+    }
+    for name, (make, visits) in makers.items():
+        ideal = visits / (visits + 0.5 * (visits - 1))  # the first opening is there already
+        both = [live_fraction(make(), overlapped, visits) for overlapped in (True, False)]
+        print(
+            f"live time, {name} clock: {both[0] / ideal:.3f} of ideal, not overlapped {both[1] / ideal:.3f}, "
+            f"ratio {both[0] / both[1]:.2f}",
+            flush=True,
+        )
+
+
+if __name__ == "__main__":
+    duty()
+    round_trips()
+    blocks()
+    streams()
+    long_stream(float(sys.argv[1]) if len(sys.argv) > 1 else 60.0)
