@@ -9,6 +9,7 @@ from functools import partial
 from typing import Any, Literal
 
 from daq.description import Rig
+from daq.description.rig import DeviceEntry
 from daq.errors import DescriptionError
 from daq.ports import Clock
 from simulators.clock import VirtualClock
@@ -16,6 +17,7 @@ from simulators.counters import GatedCounter
 from simulators.faults import Struck, read_script
 from simulators.gauge import Gauge, ShutterBox
 from simulators.hosts import Host, Instrument, serve
+from simulators.modbus import ModbusRoom
 from simulators.motion import Track
 from simulators.scpi_stage import ScpiStage
 from simulators.sensors import RoomSensor
@@ -156,6 +158,7 @@ def build(
         "scpi-totaliser-32": lambda name: Totaliser(name, partial(count, name), 32, clock),
         "scpi-frequency": lambda name: FrequencyMeter(name, partial(count, name), clock),
         "scpi-sensor": lambda name: RoomSensor(name, clock),
+        "modbus-sensor": lambda name: _modbus(rig.devices[name], clock),
         "gauge": lambda name: Gauge(name, clock),
         "shutter": lambda name: shutter,
     }
@@ -179,6 +182,10 @@ def _track(limits_mm: tuple[float, float], kept: Mapping[str, float] | None) -> 
     if kept is None:
         return Track(low_mm + _FOUND_AT * (high_mm - low_mm), low_mm, homed=False)
     return Track(kept["place_mm"], low_mm, homed=bool(kept["homed"]))
+
+
+def _modbus(entry: DeviceEntry, clock: Clock) -> Instrument:
+    return ModbusRoom(clock, numbered=entry.address.startswith("tcp:"), unit=entry.unit)
 
 
 def _controller(

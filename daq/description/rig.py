@@ -99,6 +99,17 @@ class Axis(Table):
 ADDRESS = r"^((tcp|socket|rfc2217)://[^\s:/]+:\d{1,5}|serial:[^\s?]+(\?[a-z0-9=&.]+)?|visa:\S+)$"
 
 
+class Register(Table):
+    """A quantity in the registers of a Modbus device: value = offset + factor * number."""
+
+    at: Annotated[int, Field(ge=0, le=65535)]
+    kind: Literal["u16", "i16", "u32", "i32", "f32"] = "u16"
+    table: Literal["input", "holding"] = "input"
+    unit: str
+    factor: float = 1.0
+    offset: float = 0.0
+
+
 class DeviceEntry(Table):
     """A device: which driver speaks to it, and where.
 
@@ -113,11 +124,16 @@ class DeviceEntry(Table):
     readout_s: NotNegative = 0.0
     shortest_gate_s: NotNegative = 0.0
     channels: Annotated[int, Field(ge=1, le=64)] = 1
+    unit: Annotated[int, Field(ge=0, le=247)] = 1
+    registers: Mapping[str, Register] = {}
+    late_s: NotNegative = 1.5
 
     @model_validator(mode="after")
     def _dialect_belongs(self) -> DeviceEntry:
         if (self.driver == "dialect") != (self.dialect is not None):
             raise ValueError("the driver 'dialect', and no other, needs a dialect file")
+        if (self.driver == "modbus-sensor") != bool(self.registers):
+            raise ValueError("the driver 'modbus-sensor', and no other, needs registers")
         return self
 
 

@@ -44,10 +44,18 @@ def words() -> Rig:
     return _rig(table)
 
 
+_REGISTERS = {
+    "temperature": {"at": 0, "unit": "K", "factor": 0.01},
+    "pressure": {"at": 2, "kind": "f32", "unit": "Pa"},
+}
+
+
 def scpi() -> Rig:
-    """Return the Lantern rig with its stages behind the SCPI dialect."""
+    """Return the Lantern rig with its stages behind the SCPI dialect, and Modbus sensors on both lines."""
     table = changed(
         rig_table(),
+        devices__modbus={"driver": "modbus-sensor", "address": f"{_LOCAL}:7806", "registers": _REGISTERS},
+        devices__line={"driver": "modbus-sensor", "address": "serial:/dev/ttyS9", "registers": _REGISTERS},
         devices__stages=_dialect("scpi-stage", 7801),
         bench__instruments={"stages": "scpi-stage"},
     )
