@@ -1,0 +1,112 @@
+"""Tables: results of the studies as Markdown, written between the markers of DEVELOPERS.md."""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Iterator, Mapping
+from pathlib import Path
+from typing import Any
+
+DEVELOPERS = Path(__file__).resolve().parents[2] / "DEVELOPERS.md"
+BEGIN, END = "<!-- studies: begin -->", "<!-- studies: end -->"
+
+
+def write(results: Path, page: Path = DEVELOPERS) -> None:
+    """Write the tables of every result between the markers of a page; the rest of it stays as it is."""
+    page.write_text(between(page.read_text(), text(results)))
+
+
+def between(page: str, tables: str) -> str:
+    """Return a page with tables between its markers, which are put at its end where they are missing."""
+    if BEGIN not in page:
+        page = f"{page.rstrip()}\n\n{BEGIN}\n{END}\n"
+    head, rest = page.split(BEGIN, 1)
+    return f"{head}{BEGIN}\n{tables}{END}{rest.split(END, 1)[1]}"
+
+
+def text(results: Path) -> str:
+    """Return every result that there is, as Markdown."""
+    parts = [line for name in _FORMS for line in _study(results / f"{name}.json", name)]
+    return "\n".join(
+        [
+            "## What the estimates do: studies",
+            "",
+            "Made by `python -m tests.studies tables` from `tests/studies/results`; a study is run by",
+            "`python -m tests.studies NAME [--nights N] [--json PATH]`; seeds are fixed. What misses its target",
+            "is marked with an exclamation mark.",
+            "",
+            *parts,
+        ]
+    )
+
+
+def _study(path: Path, name: str) -> Iterator[str]:
+    if not path.exists():
+        return
+    result = json.loads(path.read_text())
+    title, columns = _FORMS[name]
+    yield f"### {title}"
+    yield ""
+    yield f"{result['about']}. {result['cpu_s']:.0f} s of one core."
+    yield ""
+    yield f"| | {' | '.join(columns)} |"
+    yield f"|---|{'---|' * len(columns)}"
+    for row, found in result["rows"].items():
+        missed = "" if all(found.get("meets", {}).values()) else " !"
+        yield f"| {row}{missed} | {' | '.join(form(found) for form in columns.values())} |"
+    yield ""
+
+
+def _pm(value: str, error: str) -> Any:
+    return lambda found: f"{found[value]:+.3f} ± {found[error]:.3f}"
+
+
+def _plain(key: str, form: str = ".3f") -> Any:
+    return lambda found: format(found[key], form) if key in found else ""
+
+
+def _percent(key: str) -> Any:
+    return lambda found: f"{100 * found[key]:.1f} %" if key in found else ""
+
+
+def _monitored(found: Mapping[str, Any]) -> str:
+    return (
+        f"sd {found['monitored']['sd']:.3f}, {100 * found['monitored']['coverage_95']:.1f} %"
+        if "monitored" in found
+        else ""
+    )
+
+
+_NIGHTS = {"nights": _plain("nights", "d"), "bias": _pm("bias", "bias_se"), "sd": _pm("sd", "sd_se")}
+_COVERED = {"covers 68 %": _percent("coverage_68"), "covers 95 %": _percent("coverage_95")}
+
+_FORMS: dict[str, tuple[str, dict[str, Any]]] = {
+    "zigzag": (
+        "Complete zig-zag nights (bias and sd in counting bars)",
+        {
+            **_NIGHTS,
+            "sd over bound": _pm("sd_over_bound", "sd_over_bound_se"),
+            **_COVERED,
+            "with the monitor": _monitored,
+        },
+    ),
+    "irregular": (
+        "Random order, a tenth of the visits lost: the joint fit",
+        {**_NIGHTS, **_COVERED, "model bar covers": _percent("model_coverage_95")},
+    ),
+    "benches": ("Few counts, power readings, bunched counts", {**_NIGHTS, **_COVERED}),
+    "exclusions": (
+        "Lost visits (error of kappa in counting bars)",
+        {"nights": _plain("nights", "d"), "rms": _plain("rms", ".4f"), "largest": _plain("largest", ".4f")},
+    ),
+    "quality": (
+        "Quality rules",
+        {
+            "nights": _plain("nights", "d"),
+            "flags a night": _plain("flags", ".2f"),
+            "faults": _plain("faults", "d"),
+            "found": _percent("found"),
+            "wrongly named": _percent("wrongly_named"),
+        },
+    ),
+}
