@@ -11,6 +11,7 @@ from daq.report import lines
 from daq.service.figures import figures_of
 from daq.service.remarks import accept as accepted
 from daq.service.remarks import note as noted
+from daq.storage.copy import copy_to
 from daq.storage.export import write_csv, write_netcdf
 from daq.storage.pack import bag_problems, pack_bag, pack_zip
 from daq.storage.verify import verify as verified
@@ -42,7 +43,12 @@ def pack(arguments: argparse.Namespace) -> Answer:
         return Answer(StorageError.exit_status if found else 0, figures, lines)
     target = arguments.to or run.with_name(run.name + (".zip" if arguments.zip else ".bag"))
     (pack_zip if arguments.zip else pack_bag)(run, target)
-    return Answer(0, {"ok": True, "packed": str(target)}, [f"packed as {target}"])
+    figures = {"ok": True, "packed": str(target)}
+    if arguments.copy_to is None:
+        return Answer(0, figures, [f"packed as {target}"])
+    copied = copy_to(target, arguments.copy_to)
+    told = f"{copied} files copied to {arguments.copy_to}, each read back and compared"
+    return Answer(0, figures | {"copied": copied}, [f"packed as {target}", told])
 
 
 def export(arguments: argparse.Namespace) -> Answer:

@@ -164,6 +164,8 @@ def _after_words(commands: Any) -> None:
         one.add_argument("run", type=Path, metavar="RUN", help="a run folder")
     pack.add_argument("--zip", action="store_true", help="one zip that Zarr opens, instead of a bag")
     pack.add_argument("--to", type=Path, metavar="TARGET", help="where to (beside the run)")
+    address = "copy it there too, like s3://bucket/folder, and compare"
+    pack.add_argument("--copy-to", metavar="ADDRESS", help=address)
     export.add_argument("file", type=Path, metavar="FILE", help="a file that ends in .csv or .nc")
     note.add_argument("text", metavar="TEXT", help="what you saw")
     accept.add_argument("verdict", choices=VERDICTS, help="whether this night counts")
