@@ -11,7 +11,7 @@ from daq.estimate.arrays import FloatArray
 
 
 @dataclass(frozen=True, slots=True)
-class Line:
+class LinearFit:
     """Coefficients (P) with their covariance as the given variances make it; chi-squared of the rest."""
 
     coefficients: FloatArray
@@ -20,7 +20,7 @@ class Line:
     dof: int
 
 
-def weighted_fit(columns: ArrayLike, values: ArrayLike, variances: ArrayLike) -> Line:
+def weighted_fit(columns: ArrayLike, values: ArrayLike, variances: ArrayLike) -> LinearFit:
     """Return the coefficients of columns (N, P) that fit values (N) with known variances (N) best.
 
     Notes
@@ -45,4 +45,4 @@ def weighted_fit(columns: ArrayLike, values: ArrayLike, variances: ArrayLike) ->
     # Once more on what is left: rounding of the first pass goes away.
     coefficients += inverse @ (q.T @ (target - design @ coefficients))
     rest = target - design @ coefficients
-    return Line(coefficients, inverse @ inverse.T, float(rest @ rest), len(target) - design.shape[1])
+    return LinearFit(coefficients, inverse @ inverse.T, float(rest @ rest), len(target) - design.shape[1])

@@ -9,7 +9,8 @@ from typing import Any
 import numpy as np
 import xarray as xr
 
-from daq.estimate import estimate_run
+from daq.estimate import estimate_run, judged_again
+from daq.estimate.account import account_of
 
 
 def summary(folder: Path, visits: xr.Dataset, digests: Mapping[str, str]) -> dict[str, Any]:
@@ -33,12 +34,19 @@ def summary(folder: Path, visits: xr.Dataset, digests: Mapping[str, str]) -> dic
         "kind": meta["kind"],
         "finished": bool(meta.get("finished", False)),
         **estimate.to_json(),
+        "account": account_of(visits).to_json(),
+        "quality_differs": _judged_otherwise(visits),
         **_tally(visits),
         **_live(visits),
         "truth_kappa": meta.get("truth_kappa"),
         "ended": meta.get("ended"),
         **digests,
     }
+
+
+def _judged_otherwise(visits: xr.Dataset) -> int:
+    """Return how many rows the frozen rules judge otherwise off line than they did while it ran."""
+    return int(np.count_nonzero(judged_again(visits) != visits["quality"].values))
 
 
 def _tally(visits: xr.Dataset) -> dict[str, int]:

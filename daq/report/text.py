@@ -5,6 +5,8 @@ from __future__ import annotations
 from collections.abc import Mapping
 from typing import Any
 
+from daq.report.account import account_lines
+
 MINUS = "−"
 
 
@@ -16,7 +18,9 @@ def lines(figures: Mapping[str, Any]) -> list[str]:
     figures
         What `summary` gave.
     """
-    return [*_head(figures), "", *_residual(figures), "", *_visits(figures), "", *_archive(figures)]
+    account = account_lines(figures)
+    parts = (_head(figures), _residual(figures), account, _visits(figures), _archive(figures))
+    return [line for part in parts if part for line in (*part, "")][:-1]
 
 
 def _head(figures: Mapping[str, Any]) -> list[str]:

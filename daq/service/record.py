@@ -18,6 +18,7 @@ from daq.itinerary import Itinerary
 from daq.ports import Bench, Clock, Devices
 from daq.service.live import stamp
 from daq.service.load import Loaded
+from daq.service.metrology import described
 
 LIBRARIES = ("numpy", "scipy", "zarr", "numcodecs", "xarray", "pydantic", "pyserial", "pyvisa", "dash")
 
@@ -52,6 +53,8 @@ def record_of(
         "normalisation": settings.normalisation,
         "dead_time_s": settings.dead_time_s,
         "dead_time_kind": settings.dead_time_kind,
+        "dead_time_u_s": settings.dead_time_u_s,
+        **described(loaded, itinerary),
         "planned_pairs": itinerary.planned_pairs,
         "visits_planned": len(itinerary),
         "visits_per_stand": itinerary.visits_per_stand,

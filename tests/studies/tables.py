@@ -32,8 +32,8 @@ def text(results: Path) -> str:
             "## What the estimates do: studies",
             "",
             "Made by `python -m tests.studies tables` from `tests/studies/results`; a study is run by",
-            "`python -m tests.studies NAME [--nights N] [--json PATH]`; seeds are fixed. What misses its target",
-            "is marked with an exclamation mark.",
+            "`python -m tests.studies NAME [--nights N] [--json PATH]`; seeds are fixed. An exclamation mark",
+            "says that a target is missed.",
             "",
             *parts,
         ]
