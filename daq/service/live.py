@@ -70,7 +70,8 @@ class Live:
         if reading.attempt > 1:
             self._repeated.add(stand)
         expected = float(self._itinerary.rates_hz[self._place[reading.visit], self._opening(reading)])
-        self._stand.append((reading.values[DETECTOR], reading.live_s, expected))
+        amount = reading.live_s if self._meta.get("counting") == "power" else 1.0
+        self._stand.append((reading.values[DETECTOR] * amount, reading.live_s, expected))
 
     def _opening(self, reading: Reading) -> int:
         return int(np.searchsorted(self._itinerary.openings, reading.opening))
@@ -121,7 +122,7 @@ class Live:
             "log": list(self._log),
             "ended": None if ended is None else {"reason": ended, "utc": stamp(self._clock.utc_ns())},
             "truth_kappa": self._meta.get("truth_kappa"),
-            "estimator": "plain contrast",
+            **{key: figures[key] for key in ("estimator", "why")},
         }
 
     def _visit(self) -> dict[str, Any] | None:
