@@ -7,14 +7,16 @@ from collections.abc import Iterator
 from contextlib import contextmanager
 from pathlib import Path
 
+from daq.devices.clock import RealClock
 from simulators.hislip import HislipListener
 from simulators.hosts import Instrument, Listener, run_real
 from simulators.ports import PtyListener, listen
+from simulators.vxi11 import Vxi11Listener
 
-KINDS = ("tcp", "socket", "serial", "rfc2217", "hislip")
+KINDS = ("tcp", "socket", "serial", "rfc2217", "hislip", "vxi11")
 JOIN_S = 30.0
 
-Port = Listener | PtyListener | HislipListener
+Port = Listener | PtyListener | HislipListener | Vxi11Listener
 
 
 @contextmanager
@@ -22,6 +24,8 @@ def on_port(kind: str, instrument: Instrument, folder: Path) -> Iterator[Port]:
     """Give an instrument that answers on a port of its own."""
     if kind == "hislip":
         listener: Port = HislipListener(instrument)
+    elif kind == "vxi11":
+        listener = Vxi11Listener(instrument, RealClock())
     else:
         listener = listen(_address(kind, folder), instrument)
     stop = threading.Event()

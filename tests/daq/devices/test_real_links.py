@@ -134,7 +134,7 @@ class TestRealLink:
             assert spare.ask("N?", r"\d+")[0] == "1"
 
 
-@pytest.mark.parametrize("kind", ["tcp", "socket", "rfc2217", "hislip"])
+@pytest.mark.parametrize("kind", ["tcp", "socket", "rfc2217", "hislip", "vxi11"])
 def test_a_device_that_goes_away_is_a_lost_link_until_it_is_back(
     kind: str, clock: RealClock, device: Device, tmp_path: Path
 ) -> None:
