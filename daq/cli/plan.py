@@ -1,10 +1,9 @@
-"""Commands before a run: check and compose."""
+"""Commands before a run: check."""
 
 from __future__ import annotations
 
 import argparse
 import tomllib
-from dataclasses import asdict
 from pathlib import Path
 
 from daq.cli.answer import Answer
@@ -14,7 +13,6 @@ from daq.devices.clock import RealClock
 from daq.devices.files import read_dialect, with_dialects
 from daq.devices.trial import tried
 from daq.errors import DescriptionError
-from daq.itinerary import Forecast, forecast
 from daq.service.load import Wishes, load
 
 
@@ -34,13 +32,6 @@ def check(arguments: argparse.Namespace) -> Answer:
         f"measurement {loaded.measurement.name!r} on rig {loaded.rig.name!r}: "
         f"{len(loaded.itinerary())} visits"
     )
-
-
-def plan(arguments: argparse.Namespace) -> Answer:
-    """Compose the itinerary and print what it will bring."""
-    loaded = load(arguments.file, wishes(arguments))
-    expected = forecast(loaded.itinerary(), loaded.measurement)
-    return Answer(0, asdict(expected), _forecast_lines(expected, loaded.measurement.estimate.goal_se))
 
 
 def wishes(arguments: argparse.Namespace) -> Wishes:
@@ -70,24 +61,3 @@ def _holds(path: Path, key: str) -> bool:
 
 def _fine(text: str) -> Answer:
     return Answer(0, {"ok": True, "problems": []}, [f"{text}. No problem found."])
-
-
-def _forecast_lines(expected: Forecast, goal_se: float | None) -> list[str]:
-    return [
-        f"{expected.visits} visits, {expected.laps} laps, {expected.pairs} pairs",
-        f"{expected.total_s / 3600:.2f} h in all, {expected.live_s / 3600:.2f} h live "
-        f"(duty {100 * expected.duty:.1f} %)",
-        f"kappa will come out at ± {expected.kappa_se:.2e} "
-        f"(counting alone ± {expected.kappa_counting_se:.2e})",
-        f"Q = {expected.q:.2f}: this much longer than an ideal night without moves and drift",
-        *_goal_line(expected, goal_se),
-    ]
-
-
-def _goal_line(expected: Forecast, goal_se: float | None) -> list[str]:
-    if goal_se is None or expected.goal_s is None:
-        return []
-    hours = expected.goal_s / 3600
-    if expected.goal_s <= expected.total_s:
-        return [f"The goal of ± {goal_se:.2e} is met after {hours:.1f} h."]
-    return [f"The goal of ± {goal_se:.2e} is not met: it would take {hours:.1f} h in all."]

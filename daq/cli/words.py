@@ -51,12 +51,18 @@ def _plan_words(commands: Any) -> None:
     compose = _add(
         commands,
         "compose",
-        "plan:plan",
-        "print the itinerary's figures and forecast",
-        "tercet compose lantern.toml --hours 8",
+        "compose:compose",
+        "plan a run: the order, the error bar to come, and what would make it smaller",
+        "tercet compose lantern.toml --hours 8 --picture plan.svg --write tonight.toml",
     )
     compose.add_argument("file", type=Path, metavar="FILE", help="a measurement (TOML)")
     _wishes(compose)
+    compose.add_argument(
+        "--write", type=Path, metavar="PLAN", help="write a measurement that pins every choice, for run"
+    )
+    compose.add_argument(
+        "--picture", type=Path, metavar="FILE", help="draw the plan; the name ends in .svg, .png or .pdf"
+    )
 
 
 def _night_words(commands: Any) -> None:
@@ -197,7 +203,8 @@ def _later(target: str) -> Callable[[argparse.Namespace], Answer]:
 def _wishes(one: argparse.ArgumentParser) -> None:
     one.add_argument("--hours", type=float, help="length in hours, rounded down to whole pairs of laps")
     one.add_argument("--seed", type=int, help="one seed for the order and for the simulated bench")
-    one.add_argument("--order", choices=("zigzag", "blocked"), help="another order than the description's")
+    orders = ("zigzag", "searched", "cyclic", "random", "blocked")
+    one.add_argument("--order", choices=orders, help="another order than the description's")
 
 
 def _folders(one: argparse.ArgumentParser) -> None:

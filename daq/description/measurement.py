@@ -50,9 +50,9 @@ class Order(Table):
     dwell_s: Annotated[float, Field(gt=0, le=86_400)] | None = None
     dwell: Literal["equal", "best"] = "equal"
     dwell_floor: Annotated[float, Field(gt=0, le=1)] = 0.1
-    together: Annotated[int, Field(ge=1, le=100_000)] | Literal["best"] = 1
+    together: Annotated[int, Field(ge=0, le=100_000)] = 1
     repeats: Annotated[int, Field(ge=1, le=3)] = 1
-    search_evaluations: Annotated[int, Field(ge=1, le=10**10)] = 4_000_000
+    search_evaluations: Annotated[int, Field(ge=1, le=10**10)] = 2_000_000
     seed: Annotated[int, Field(ge=0)] = 1
     opening_order: tuple[str, ...] | None = None
 

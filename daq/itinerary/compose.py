@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass, field
+from typing import Any
 
 import numpy as np
 
@@ -12,7 +13,7 @@ from daq.description import Measurement, Rig
 from daq.estimate.plan import Heralded, Plan
 from daq.itinerary.cost import Pattern
 from daq.itinerary.decide import MIRRORED, Decision, decide, rhythm
-from daq.itinerary.design import dwell_table_s, lay_out, pattern_for
+from daq.itinerary.design import Design, dwell_table_s, lay_out, pattern_for
 from daq.itinerary.known import Known, known_of, opening_order
 from daq.itinerary.moves import start_times_s
 from daq.itinerary.orders import BoolArray, FloatArray, IntArray, Order
@@ -27,8 +28,8 @@ class Itinerary:
 
     Arrays of shape (visits,): `opening` (bit masks), `position_mm`, `start_s`, `dwell_s`, `stand`, `lap`,
     `pair`, `forward`. For the estimate: `openings` (K,) bit masks, `positions_mm` (J,), `weights` (J,),
-    `signs` "AB" -> (J,), `rates_hz` (J, K) as expected. `pauses` visit -> seconds to wait before it besides
-    the moves; `notes` what the planner decided, and why.
+    `signs` "AB" -> (J,), `rates_hz` (J, K) as expected. `design` what it was composed from, `pauses`
+    visit -> seconds to wait before it besides the moves, `notes` what the planner decided, and why.
     """
 
     opening: IntArray
@@ -48,6 +49,7 @@ class Itinerary:
     order: str
     seed: int
     total_s: float
+    design: Design | None = None
     pauses: Mapping[int, float] = field(default_factory=dict)
     notes: tuple[str, ...] = ()
 
@@ -110,6 +112,20 @@ def compose(measurement: Measurement, rig: Rig, seed: int | None = None) -> Itin
     masks = known.openings.tolist()
     word = [masks.index(openings.mask(name)) for name in opening_order(measurement, rig)]
     return _itinerary(known, decide(known, word, _stream(seed, _SEARCH)), seed)
+
+
+def pinned(itinerary: Itinerary, measurement: Measurement) -> dict[str, Any]:
+    """Return the table [itinerary] in which everything that was chosen is given, to the same visits."""
+    design = itinerary.design
+    assert design is not None
+    settings = measurement.itinerary.model_dump(exclude_defaults=True)
+    settings |= {"seed": itinerary.seed, "dwell_s": design.dwell_s, "together": design.together}
+    if itinerary.order in MIRRORED:
+        names = [openings.name(int(itinerary.openings[slot])) for slot in design.slots]
+        settings |= {"order": "zigzag", "opening_order": names}
+    for left_over in ("repeats", "search_evaluations"):
+        settings.pop(left_over, None)
+    return settings
 
 
 def pattern_of_itinerary(itinerary: Itinerary, normalisation: str) -> Pattern:
@@ -181,6 +197,7 @@ def _itinerary(known: Known, decision: Decision, seed: int) -> Itinerary:
         order=settings.order,
         seed=seed,
         total_s=float(start_s[-1] + dwell_s[-1]),
+        design=design,
         pauses=pauses,
         notes=decision.notes,
     )

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from collections import Counter
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, replace
 from math import factorial
@@ -35,12 +34,12 @@ class Decision:
     notes: tuple[str, ...]
 
 
-def decide(known: Known, word: Sequence[int], seed: int) -> Decision:
+def decide(known: Known, slots: Sequence[int], seed: int) -> Decision:
     """Return the design that the settings and the source ask for.
 
     Parameters
     ----------
-    word
+    slots
         The openings of a forward stand (indices), each at least once: what a search begins with.
     seed
         Of the search.
@@ -50,10 +49,7 @@ def decide(known: Known, word: Sequence[int], seed: int) -> Decision:
     DescriptionError
         When no dwell keeps the stand out of step with the lines that are known.
     """
-    shown = Counter(word)
-    share = tuple(1 / shown[opening] for opening in word)
-    given_s = known.settings.dwell_s
-    start = Design(tuple(word), share, 1, given_s or 1.0)
+    start = Design(tuple(slots), 1, known.settings.dwell_s or 1.0)
     design, notes = _nested(known, start, seed)
     design, pauses, measures = _kept_out_of_step(known, design)
     return Decision(design, pauses, (*notes, *measures, *_rig_notes(known, design)))
@@ -69,7 +65,7 @@ def rhythm(known: Known, design: Design) -> Rhythm:
 def _nested(known: Known, start: Design, seed: int) -> tuple[Design, tuple[str, ...]]:
     """Return the best design over the numbers of positions swept together, with reasons."""
     positions = known.places_mm.size
-    if known.settings.together != "best":
+    if known.settings.together:
         design = replace(start, together=min(known.settings.together, positions))
         return _chosen(known, design, seed)
     tries = sorted({*range(1, min(MANY_TOGETHER, positions) + 1), positions})
@@ -91,14 +87,14 @@ def _chosen(known: Known, design: Design, seed: int) -> tuple[Design, tuple[str,
     if free_dwell:
         design = replace(design, dwell_s=best_dwell_s(known, design))
     along, why = design, ""
-    for _ in range(SEARCH_ROUNDS if searched else 0):
+    for _ in range((SEARCH_ROUNDS if free_dwell else 1) if searched else 0):
         word = searched_word(known, design, seed)
-        found = replace(design, word=word.opening, share=word.share)
+        found = replace(design, slots=word.slots)
         if free_dwell:
             found = replace(found, dwell_s=best_dwell_s(known, found))
         if pair_cost(known, found).time_variance >= pair_cost(known, design).time_variance:
             break
-        design, why = found, _how(known, word.exhaustive, word.evaluations, len(word.opening))
+        design, why = found, _how(known, word.exhaustive, word.evaluations, len(word.slots))
     notes = _order_note(known, along, design, why) if searched else ()
     return design, (*notes, *(_dwell_note(known, design) if free_dwell else ()))
 

@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+from collections import Counter
 from collections.abc import Iterator
 from dataclasses import dataclass, replace
+from itertools import groupby
 
 import numpy as np
 
@@ -28,12 +30,27 @@ SEARCH_ROUNDS = 3  # word and dwell are chosen in turn
 
 @dataclass(frozen=True, slots=True)
 class Design:
-    """A stand: the openings of its visits (indices) with their shares, positions together, mean dwell [s]."""
+    """A stand and how stands follow one another.
 
-    word: tuple[int, ...]
-    share: tuple[float, ...]
+    `slots` openings (indices) in order, those of one opening equal parts of its time; neighbours that are
+    the same opening make one visit. `together` positions swept for one opening; `dwell_s` mean counting time
+    of an opening in a stand.
+    """
+
+    slots: tuple[int, ...]
     together: int
     dwell_s: float
+
+    @property
+    def word(self) -> tuple[int, ...]:
+        """The opening of each visit of a forward stand."""
+        return tuple(opening for opening, _ in groupby(self.slots))
+
+    @property
+    def share(self) -> tuple[float, ...]:
+        """The share of its opening's time that each visit of a forward stand gets."""
+        parts = Counter(self.slots)
+        return tuple(len(list(same)) / parts[opening] for opening, same in groupby(self.slots))
 
 
 @dataclass(frozen=True, slots=True)
@@ -115,7 +132,8 @@ def searched_word(known: Known, design: Design, seed: int) -> Word:
     )
     settings = known.settings
     generator = np.random.Generator(np.random.Philox(seed))
-    return search(stand, settings.repeats, settings.search_evaluations, generator)
+    start = list(dict.fromkeys(design.slots))
+    return search(stand, start, settings.repeats, settings.search_evaluations, generator)
 
 
 def best_dwell_s(known: Known, design: Design) -> float:

@@ -17,6 +17,7 @@ from daq.itinerary.pilot import HOUR_S, wander_of
 from daq.itinerary.wander import Wander, line_variance, wander_variance
 
 POINTS = 60  # of the error bar against time
+SMALL_LOSS = 1e-6  # share of the counts that the step of a numerical slope loses
 
 
 @dataclass(frozen=True, slots=True)
@@ -25,8 +26,10 @@ class Forecast:
 
     `kappa_se` everything that scatters from pair to pair together; `kappa_counting_se` counting alone; `duty`
     live over total time; `q` the factor in time over an ideal night of equal dwell without moves and drift;
-    `budget` standard errors of kappa by what brings them; `hours`, `se` the error bar against time; `goal_s`
-    when the goal is met (None: no goal, or out of reach for any length).
+    `budget` standard errors of kappa by what brings them (of these counting, drift and lines make `kappa_se`;
+    background is a part of counting; trend and dead time shift kappa as a whole; monitor is what normalising
+    to it would add); `hours`, `se` the error bar against time; `goal_s` when the goal is met (None: no goal,
+    or out of reach for any length).
     """
 
     visits: int
@@ -73,7 +76,7 @@ def forecast(itinerary: Itinerary, measurement: Measurement) -> Forecast:
         hours=tuple((count * total_s / pairs / HOUR_S).tolist()),
         se=tuple(np.sqrt(variance * pairs / count).tolist()),
         goal_se=goal,
-        goal_s=None if goal is None else _goal_s(variance, budget["dead time"], pairs, total_s, goal),
+        goal_s=None if goal is None else _goal_s(variance, _systematic_var(budget), pairs, total_s, goal),
     )
 
 
@@ -96,7 +99,7 @@ def mean_level(level_by_hour: tuple[float, ...], total_s: float) -> float:
 
 
 def _budget(itinerary: Itinerary, measurement: Measurement) -> dict[str, float]:
-    """Return standard errors of kappa by what brings them; the last ones do not add to `kappa_se`."""
+    """Return standard errors of kappa by what brings them."""
     pattern = pattern_of_itinerary(itinerary, measurement.estimate.normalisation)
     chosen = itinerary.pair < itinerary.planned_pairs
     start_s, dwell_s = itinerary.start_s[chosen], itinerary.dwell_s[chosen]
@@ -108,6 +111,7 @@ def _budget(itinerary: Itinerary, measurement: Measurement) -> dict[str, float]:
         "background": background,
         "drift": wander_variance(weight, start_s, dwell_s, replace(wander, lines=())),
         "lines": line_variance(weight, start_s, dwell_s, wander.lines),
+        "trend": _trend_bias(weight, start_s + dwell_s / 2, measurement) ** 2,
         "dead time": _dead_time_bias(pattern, measurement) ** 2,
     }
     monitor_hz = measurement.expect.monitor_rate_hz
@@ -124,23 +128,37 @@ def _counting(
     estimate, expect = measurement.estimate, measurement.expect
     level = mean_level(expect.level_by_hour, itinerary.total_s)
     each = pattern.counting_variances(exposure_s, estimate.dead_time_s) * estimate.fano / level
-    return float(each.sum()), float((each * expect.background_rate_hz / itinerary.rates_hz).sum())
+    rates_hz = itinerary.rates_hz
+    dark = np.divide(expect.background_rate_hz, rates_hz, out=np.zeros_like(rates_hz), where=rates_hz > 0)
+    return float(each.sum()), float((each * dark).sum())
+
+
+def _trend_bias(weight: FloatArray, middle_s: FloatArray, measurement: Measurement) -> float:
+    """Return how far the expected trend of the source moves kappa."""
+    levels = measurement.expect.level_by_hour
+    return float(weight @ np.log(np.interp(middle_s / HOUR_S, np.arange(len(levels)), levels)))
+
+
+def _systematic_var(budget: Mapping[str, float]) -> float:
+    """Return the variance of what shifts kappa as a whole, however long the run."""
+    return budget["dead time"] ** 2 + budget["trend"] ** 2
 
 
 def _dead_time_bias(pattern: Pattern, measurement: Measurement) -> float:
-    """Return how far kappa goes when the dead time is wrong by its standard uncertainty."""
+    """Return how far kappa goes, to first order, when the dead time is wrong by its standard uncertainty."""
     estimate = measurement.estimate
     if not estimate.dead_time_u_s:
         return 0.0
-    wrong_s, kind = estimate.dead_time_s + estimate.dead_time_u_s, estimate.dead_time_kind
+    kind, step_s = estimate.dead_time_kind, SMALL_LOSS / float(pattern.rates_hz.max())
     seen_hz = seen_rate_hz(pattern.rates_hz, estimate.dead_time_s, kind)
-    biased = pattern.kappa_of(np.asarray(true_rate_hz(seen_hz, wrong_s, kind)))
-    return abs(biased - pattern.kappa_of(pattern.rates_hz))
+    wrong_hz = np.asarray(true_rate_hz(seen_hz, estimate.dead_time_s + step_s, kind))
+    slope = (pattern.kappa_of(wrong_hz) - pattern.kappa_of(pattern.rates_hz)) / step_s
+    return abs(slope) * estimate.dead_time_u_s
 
 
-def _goal_s(variance: float, systematic: float, pairs: int, total_s: float, goal: float) -> float | None:
+def _goal_s(variance: float, systematic_var: float, pairs: int, total_s: float, goal: float) -> float | None:
     """Return when a goal is met, at the end of a pair; None where more time would not do."""
-    left = goal**2 - systematic**2
+    left = goal**2 - systematic_var
     needed = pairs * variance / left if left > 0 else inf
     return ceil(needed - 1e-9) * total_s / pairs if needed < inf else None
 

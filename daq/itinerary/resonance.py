@@ -27,7 +27,9 @@ def in_step(rhythm: Rhythm, ripple: Ripple) -> float | None:
 
 
 def harmonic(rhythm: Rhythm, ripple: Ripple) -> int | None:
-    """Return which harmonic of the pair a line cannot be told from during the run; None if there is none.
+    """Return which harmonic of the pair a line cannot be told from during the run, an even one first.
+
+    None if there is none.
 
     Notes
     -----
@@ -35,9 +37,11 @@ def harmonic(rhythm: Rhythm, ripple: Ripple) -> int | None:
     1/T_run and the uncertainty of f. Odd harmonics are cured by the coin of each pair: it turns their sign.
     """
     cycles = rhythm.pair_s / ripple.period_s
-    number = round(cycles)
-    unknown = cycles * ripple.period_u_s / ripple.period_s
-    return number if number and abs(cycles - number) < 1 / rhythm.pairs + unknown else None
+    near = 1 / rhythm.pairs + cycles * ripple.period_u_s / ripple.period_s
+    for number in (2 * round(cycles / 2), round(cycles)):
+        if number and abs(cycles - number) < near:
+            return number
+    return None
 
 
 def free(rhythm: Rhythm, ripples: tuple[Ripple, ...]) -> bool:

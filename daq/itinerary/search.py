@@ -12,6 +12,7 @@ from numpy.typing import NDArray
 from daq.itinerary.orders import FloatArray, IntArray
 
 CHAINS = 64  # of the annealing, side by side in one array
+HEAT = (0.02, 1e-4)  # relative, first and last: orders along the mask are good, and are not to be melted
 FAILED = 1e-9  # relative: a smaller gain than this is rounding
 
 
@@ -44,20 +45,26 @@ class Stand:
 
 @dataclass(frozen=True, slots=True)
 class Word:
-    """The visits of a forward stand: opening and share of the opening's dwell; what they cost."""
+    """The order of a forward stand: `slots`, equal parts of an opening's dwell, and what it costs.
 
-    opening: tuple[int, ...]
-    share: tuple[float, ...]
+    `exhaustive`: whether all orders were weighed; `evaluations`: how many steps.
+    """
+
+    slots: tuple[int, ...]
     cost: float
     evaluations: int
     exhaustive: bool
 
 
-def search(stand: Stand, repeats: int, budget: int, generator: np.random.Generator) -> Word:
+def search(
+    stand: Stand, start: Sequence[int], repeats: int, budget: int, generator: np.random.Generator
+) -> Word:
     """Return the best word found in which every opening is shown up to `repeats` times.
 
     Parameters
     ----------
+    start
+        An order of all openings that is good already: half of the exchanges begin with it.
     budget
         How many steps from one opening to the next may be weighed. Where that allows it, all orders are
         (by dynamic programming over what has been shown); else exchanges are tried at random, annealed.
@@ -71,30 +78,12 @@ def search(stand: Stand, repeats: int, budget: int, generator: np.random.Generat
         if spent + 2 * states <= budget:
             word = _all_orders(stand, times, budget - spent)
         else:
-            word = _annealed(stand, times, (budget - spent) // (repeats + 1 - times), generator)
+            word = _annealed(stand, start, times, (budget - spent) // (repeats + 1 - times), generator)
         spent += word.evaluations
         if best is None or word.cost < best.cost * (1 - FAILED):
             best = word
     assert best is not None
-    return Word(best.opening, best.share, best.cost, spent, best.exhaustive)
-
-
-def weighed(stand: Stand, slots: Sequence[int], times: int = 1) -> Word:
-    """Return the word of given slots, each 1/times of its opening's dwell, neighbours that agree made one."""
-    drift, travel_s = _drift_and_travel(stand, np.array([slots]), times)
-    return _word(slots, times, float(stand.cost(drift, travel_s)[0]), 1, exhaustive=False)
-
-
-def _word(slots: Sequence[int], times: int, cost: float, evaluations: int, exhaustive: bool) -> Word:
-    opening: list[int] = []
-    share: list[float] = []
-    for slot in slots:
-        if opening and opening[-1] == slot:
-            share[-1] += 1 / times
-        else:
-            opening.append(int(slot))
-            share.append(1 / times)
-    return Word(tuple(opening), tuple(share), cost, evaluations, exhaustive)
+    return replace(best, evaluations=spent)
 
 
 def _drift_and_travel(stand: Stand, slots: IntArray, times: int) -> tuple[FloatArray, FloatArray]:
@@ -126,10 +115,10 @@ def _all_orders(stand: Stand, times: int, budget: int) -> Word:
         drift, travel_s = _drift_and_travel(stand, np.array([slots]), times)
         cost = float(stand.cost(drift, travel_s)[0])
         if best is None or cost < best.cost * (1 - FAILED):
-            best = _word(slots, times, cost, spent, exhaustive=True)
+            best = Word(tuple(slots), cost, spent, exhaustive=True)
             prices.append(cost / float(stand.lap_s(travel_s)[0]) ** 2)
     assert best is not None
-    return Word(best.opening, best.share, best.cost, spent, best.exhaustive)
+    return replace(best, evaluations=spent)
 
 
 @dataclass(frozen=True, slots=True)
@@ -197,24 +186,26 @@ class _Steps:
         return slots[::-1]
 
 
-def _annealed(stand: Stand, times: int, budget: int, generator: np.random.Generator) -> Word:
+def _annealed(
+    stand: Stand, start: Sequence[int], times: int, budget: int, generator: np.random.Generator
+) -> Word:
     """Return the best word that exchanges and reversals at a falling temperature have found."""
     light = _fewer_positions(stand)
-    many = stand.weight.shape[1]
-    slots = generator.permuted(np.tile(np.repeat(np.arange(many), times), (CHAINS, 1)), axis=1)
+    slots = generator.permuted(np.tile(np.repeat(start, times), (CHAINS, 1)), axis=1)
+    slots[: CHAINS // 2] = np.repeat(start, times)
     rounds = max(1, budget // slots.size)
     cost = _costs(light, slots, times)
     best, least = slots[cost.argmin()].copy(), float(cost.min())
     place = np.arange(slots.shape[1])
-    for heat in np.geomspace(0.1, 1e-5, rounds - 1):
+    for heat in np.geomspace(*HEAT, rounds - 1):
         trial = _tried(slots, place, generator)
         new = _costs(light, trial, times)
         taken = generator.random(CHAINS) < np.exp(np.minimum((cost - new) / (cost * heat), 0.0))
         slots[taken], cost[taken] = trial[taken], new[taken]
         if cost.min() < least:
             best, least = slots[cost.argmin()].copy(), float(cost.min())
-    word = weighed(stand, best.tolist(), times)
-    return Word(word.opening, word.share, word.cost, rounds * slots.size, exhaustive=False)
+    cost = _costs(stand, best[None, :], times)
+    return Word(tuple(best.tolist()), float(cost[0]), rounds * slots.size, exhaustive=False)
 
 
 def _tried(slots: IntArray, place: IntArray, generator: np.random.Generator) -> IntArray:

@@ -1,0 +1,135 @@
+"""The command compose: what a plan will bring, as a table, a picture, and a description that pins it."""
+
+from __future__ import annotations
+
+import argparse
+import os
+import tomllib
+from collections.abc import Iterator, Mapping
+from dataclasses import asdict
+from pathlib import Path
+
+from daq.cli.answer import Answer
+from daq.cli.plan import wishes
+from daq.cli.toml import toml_text
+from daq.errors import DescriptionError
+from daq.itinerary import MIRRORED, Forecast, Itinerary, forecast, pinned
+from daq.itinerary.advice import LONGEST_GOAL_H, orders_compared, remedies, verdict
+from daq.itinerary.pilot import HOUR_S
+from daq.service.load import DESCRIPTION, Loaded, load
+
+
+def compose(arguments: argparse.Namespace) -> Answer:
+    """Compose the itinerary, print what it will bring, and write plan and picture where asked for."""
+    loaded = load(arguments.file, wishes(arguments))
+    itinerary = loaded.itinerary()
+    expected = forecast(itinerary, loaded.measurement)
+    _refuse_hopeless(loaded, itinerary, expected, arguments.file)
+    compared = orders_compared(loaded.measurement, loaded.rig, itinerary)
+    advice = remedies(loaded.measurement, loaded.rig, itinerary, expected)
+    if arguments.write is not None:
+        _write(arguments.write, loaded, itinerary, arguments.file)
+    if arguments.picture is not None:
+        from daq.report.planned import draw_plan
+
+        title = loaded.measurement.title or loaded.measurement.name
+        draw_plan(arguments.picture, title, itinerary, expected, compared)
+    figures = asdict(expected) | {
+        "order": itinerary.order,
+        "verdict": verdict(expected),
+        "remedies": list(advice),
+        "notes": list(itinerary.notes),
+        "orders": {name: {"q": one.q, "kappa_se": one.kappa_se} for name, one in compared.items()},
+    }
+    return Answer(0, figures, list(_lines(itinerary, expected, compared, advice, arguments)))
+
+
+def _refuse_hopeless(loaded: Loaded, itinerary: Itinerary, expected: Forecast, file: Path) -> None:
+    """Refuse a goal that would take longer than anybody measures; orders for comparison are only told of.
+
+    Raises
+    ------
+    DescriptionError
+        With the hours that it would take, what the plan gives, and what would help.
+    """
+    goal, order = loaded.measurement.estimate.goal_se, loaded.measurement.itinerary.order
+    if goal is None or order not in MIRRORED:
+        return
+    if expected.goal_s is not None and expected.goal_s <= LONGEST_GOAL_H * HOUR_S:
+        return
+    takes = "no length of run" if expected.goal_s is None else f"{expected.goal_s / HOUR_S:.0f} h"
+    helps = " ".join(remedies(loaded.measurement, loaded.rig, itinerary, expected))
+    raise DescriptionError(
+        (
+            f"{file}, estimate.goal_se: ± {goal:.2e} needs {takes}; {expected.total_s / HOUR_S:.1f} h give "
+            f"± {expected.kappa_se:.2e}. Give a goal that can be met. {helps}",
+        )
+    )
+
+
+def _write(path: Path, loaded: Loaded, itinerary: Itinerary, file: Path) -> None:
+    """Write a description that holds every choice, for run and rehearse to take as it is."""
+    table = loaded.wishes.laid_over(tomllib.loads(loaded.texts[DESCRIPTION].decode()))
+    rig = os.path.relpath((file.parent / str(table["rig"])).resolve(), path.resolve().parent)
+    table |= {"rig": Path(rig).as_posix(), "itinerary": pinned(itinerary, loaded.measurement)}
+    why = "".join(f"# {note}\n" for note in (f"Composed from {file.name}.", *itinerary.notes))
+    try:
+        path.write_text(f"{why}\n{toml_text(table)}")
+    except OSError as error:
+        raise DescriptionError((f"{path}: {(error.strerror or 'cannot be written').lower()}.",)) from error
+
+
+def _lines(
+    itinerary: Itinerary,
+    expected: Forecast,
+    compared: Mapping[str, Forecast],
+    advice: tuple[str, ...],
+    arguments: argparse.Namespace,
+) -> Iterator[str]:
+    yield f"{expected.visits} visits, {expected.laps} laps, {expected.pairs} pairs"
+    yield (
+        f"{expected.total_s / HOUR_S:.2f} h in all, {expected.live_s / HOUR_S:.2f} h live "
+        f"(duty {100 * expected.duty:.1f} %)"
+    )
+    yield f"Q = {expected.q:.2f}: this much longer than an ideal night without moves and drift"
+    yield from itinerary.notes
+    yield ""
+    yield from _budget_lines(expected.budget)
+    yield ""
+    yield from _order_lines(compared, itinerary.order)
+    yield ""
+    yield verdict(expected)
+    yield from advice
+    for path in (arguments.write, arguments.picture):
+        if path is not None:
+            yield f"written: {path}"
+
+
+_BUDGET_WORDS = {
+    "counting": "counting",
+    "background": "  of which background",
+    "drift": "drift of the source",
+    "lines": "lines of the source",
+    "trend": "expected trend (a shift)",
+    "dead time": "dead time (a shift)",
+    "monitor": "monitor, if normalised to it",
+}
+
+
+def _budget_lines(budget: Mapping[str, float]) -> Iterator[str]:
+    yield "standard errors of kappa"
+    for name, se in budget.items():
+        if se > 0:
+            yield f"  {_BUDGET_WORDS[name]:<30} {se:.2e}"
+
+
+def _order_lines(compared: Mapping[str, Forecast], own: str) -> Iterator[str]:
+    yield f"{'order':<12} {'hours':>7} {'Q':>9} {'kappa_se':>10} {'goal after':>11}"
+    for name, one in compared.items():
+        met = "never" if one.goal_s is None else f"{one.goal_s / HOUR_S:.1f} h"
+        mark = "*" if name == own else " "
+        q = f"{one.q:.3f}" if one.q < 1000 else f"{one.q:.3g}"
+        yield (
+            f"{name + mark:<12} {one.total_s / HOUR_S:7.2f} {q:>9} {one.kappa_se:10.2e} "
+            f"{met if one.goal_se else '':>11}"
+        )
