@@ -17,6 +17,7 @@ from daq.estimate.quality import Rules, clock_bits, counter_bits, dispersion, fi
 from daq.estimate.rows import rows_of_readings
 from daq.records import EXCLUDING, Quality, Reading
 
+SPOILT = int(EXCLUDING & ~Quality.FINGERPRINT)
 STANDS_TO_SCALE = 20  # from here the night's own median counts
 TO_SIGMA = 1.4826  # median absolute deviation of a normal distribution
 
@@ -59,6 +60,7 @@ class Judge:
     def __init__(self, plan: Plan, rules: Rules, expected_hz: FloatArray | None = None) -> None:
         self._plan, self._rules, self._expected_hz = plan, rules, expected_hz
         self._places: dict[int, _Place] = {}
+        self._stand: tuple[int, int] | None = None  # whose visits come in now, and at which attempt
         self._attempt: list[Reading] = []
         self._before: Reading | None = None
         self._sliced, self._stood, self._lit = _Median(), _Median(), _Median()
@@ -71,10 +73,10 @@ class Judge:
         if reading.visit >= 0 and self._plan.counting == "counts":
             quality |= counter_bits(reading, self._rules, self._due(reading))
             quality |= self._sliced_bits(reading)
-        judged = replace(reading, quality=quality)
+        judged = _with(reading, quality)
         attempt = self._gathered(judged)
         if len(attempt) == self._plan.whole_stand:
-            judged = replace(judged, quality=quality | self._stand_bits(attempt))
+            judged = _with(judged, quality | self._stand_bits(attempt))
         self._settle(judged)
         return judged
 
@@ -114,25 +116,22 @@ class Judge:
         """Return the visits of this attempt so far, when nothing else was done between them."""
         if reading.visit < 0:
             return []
-        stand = self._plan.stand[reading.visit]
-        same = [
-            one
-            for one in self._attempt
-            if self._plan.stand[one.visit] == stand and one.attempt == reading.attempt
-        ]
-        self._attempt = [*same, reading] if len(same) == len(self._attempt) else [reading]
+        stand = int(self._plan.stand[reading.visit]), reading.attempt
+        if stand != self._stand:
+            self._stand, self._attempt = stand, []
+        self._attempt.append(reading)
         return self._attempt
 
     def _settle(self, reading: Reading) -> None:
         self._before = reading
         if len(self._attempt) == self._plan.whole_stand:
-            self._attempt = []
+            self._stand, self._attempt = None, []
 
     def _stand_bits(self, attempt: Sequence[Reading]) -> Quality:
         """Return what a whole stand adds; it is kept as a reference where nothing speaks against it."""
         rows = rows_of_readings(attempt)
         found = detected(rows, self._plan)
-        excluded = any(one.quality & EXCLUDING & ~Quality.FINGERPRINT for one in attempt)
+        excluded = any(int(one.quality) & SPOILT for one in attempt)
         if self._plan.counting != "counts" or excluded or not found.fine.all():
             return Quality.GOOD
         position = int(self._plan.position[attempt[0].visit])
@@ -195,3 +194,8 @@ class Judge:
         if len(values) < STANDS_TO_SCALE:
             return inf
         return TO_SIGMA * float(np.median(np.abs(values - np.median(values))))
+
+
+def _with(reading: Reading, quality: Quality) -> Reading:
+    """Return a reading with a quality; the same one where nothing is new."""
+    return reading if quality == reading.quality else replace(reading, quality=quality)

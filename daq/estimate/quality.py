@@ -150,9 +150,11 @@ def _shares(table: FloatArray, time: FloatArray) -> FloatArray:
     """Return which share of each opening's counts is the stand's, for the likeliest ratio of strengths."""
     strength = table.sum(axis=1) / time.sum(axis=1)
     ratio = float(strength[0] / strength[1])
-    for _ in range(6):  # at once where exposures are equal, else by their inequality each time
-        rate = table.sum(axis=0) / (ratio * time[0] + time[1])
-        ratio = float(table[0].sum() / (time[0] @ rate))
+    both = table.sum(axis=0)
+    for _ in range(6):  # at once where exposures are equal, else better by their inequality each time
+        before, ratio = ratio, float(table[0].sum() / (time[0] @ (both / (ratio * time[0] + time[1]))))
+        if abs(ratio - before) < 1e-12 * ratio:
+            break
     return np.asarray(ratio * time[0] / (ratio * time[0] + time[1]))
 
 

@@ -81,7 +81,7 @@ def likeliest_per_s(weights: FloatArray, seen: FloatArray, step_s: FloatArray) -
 
     def unlikely(log_per_s: float) -> float:
         matrix = walk(weights, step_s, exp(log_per_s))
-        misfit = weights @ (seen * (seen - matrix.solve(weights * seen)))
+        misfit = np.sum(weights * seen * (seen - matrix.solve(weights * seen)))
         return matrix.log_determinant + (count - 1) * log_per_s + float(misfit)
 
     return exp(_least(unlikely, low, max(high, low + 1)))
