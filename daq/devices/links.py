@@ -12,11 +12,11 @@ from __future__ import annotations
 import logging
 import re
 import threading
-from dataclasses import dataclass
 
 from daq.devices.lines import CHECK, Lines
 from daq.devices.locks import Hold, hold
 from daq.devices.turns import Turn
+from daq.devices.wire import Wire as Wire
 from daq.errors import DeviceError
 from daq.ports import Clock
 
@@ -24,27 +24,6 @@ log = logging.getLogger(__name__)
 
 _PATIENCE_NS = 60_000_000_000  # how long a thread waits for its turn on a link
 _IDENTITY_TRIES = 3
-
-
-@dataclass(frozen=True, slots=True)
-class Wire:
-    """How a device speaks: its identity, the ends of a line, limits and waiting times.
-
-    The identity is IEEE 488.2's by default: four fields between commas. `late_s` is how late a reply can come
-    at most, after its question; it is waited only after an upset. `ignore` is a pattern for whole lines that
-    the device sends unasked and that answer nothing.
-    """
-
-    identity: str = "*IDN?"
-    identity_reply: str = r"[^,]+(,[^,]+){3}"
-    send_end: str = "\n"
-    reply_end: str = "\n"
-    timeout_s: float = 0.5
-    quiet_s: float = 0.05
-    late_s: float = 1.5
-    most_bytes: int = 256
-    repeats: int = 2  # of a command that is safe to repeat
-    ignore: str | None = None
 
 
 class Link:
