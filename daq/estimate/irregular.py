@@ -14,7 +14,7 @@ from daq.estimate.sums import Taking, sums_of
 from daq.estimate.tables import Tables, tables_of
 from daq.estimate.visits import Visits
 
-BLOCKS = 40  # at most: beyond, neighbouring pairs are left out together
+BLOCKS = 20  # of twice as many pairs and more: then neighbouring pairs are left out together
 
 
 @dataclass(frozen=True, slots=True)
@@ -79,7 +79,8 @@ def _spread(cell: IntArray, value: FloatArray, variance: FloatArray, cells: int)
 def _blocks(pair: IntArray) -> IntArray:
     """Return the block of every visit: its pair, or several neighbouring pairs where there are very many."""
     every, block = np.unique(pair, return_inverse=True)
-    return (block // -(-len(every) // BLOCKS)).astype(np.int64)
+    each = len(every) // BLOCKS if len(every) > 2 * BLOCKS else 1
+    return (block // each).astype(np.int64)
 
 
 def _refitted(tables: Tables, series: Series, found: Fit) -> Tables:

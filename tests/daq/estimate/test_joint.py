@@ -1,5 +1,6 @@
 from __future__ import annotations
 
+import tracemalloc
 from dataclasses import replace
 
 import numpy as np
@@ -7,6 +8,7 @@ import pytest
 from scipy.linalg import block_diag, cho_factor, cho_solve
 
 from daq.estimate.arrays import FloatArray
+from daq.estimate.irregular import _blocks
 from daq.estimate.joint import Fit, Series, fit, rates_without, standard_error
 from daq.estimate.walk import likeliest_per_s, walk
 
@@ -199,3 +201,23 @@ def test_the_work_of_the_solver_does_not_grow_with_the_number_of_visits(visits: 
     # Four cells: the Schur complement has four dimensions, so every solve takes at most four steps and one
     # or two more for rounding, and three fits settle in five Newton steps each.
     assert fit(of).work <= 3 * 5 * 6
+
+
+def test_memory_grows_no_faster_than_the_number_of_visits() -> None:
+    def peak(visits: int) -> int:
+        of, _ = series(np.random.default_rng(12), visits=visits)
+        tracemalloc.start()
+        fit(of)
+        most = tracemalloc.get_traced_memory()[1]
+        tracemalloc.stop()
+        return most
+
+    assert peak(16_000) < 2.2 * peak(8_000)
+
+
+@pytest.mark.parametrize(("pairs", "blocks"), [(1, 1), (19, 19), (40, 40), (41, 21), (1525, 21)])
+def test_very_many_pairs_are_left_out_some_at_once(pairs: int, blocks: int) -> None:
+    found = _blocks(np.repeat(np.arange(pairs) * 3, 2))
+
+    assert len(np.unique(found)) == blocks
+    assert np.all(np.diff(found) >= 0)
