@@ -92,8 +92,8 @@ def clock_bits(before: Reading | None, reading: Reading, rules: Rules) -> Qualit
     return Quality.CLOCK_STEP if abs(step_ns) > rules.clock_step_s * 1e9 else Quality.GOOD
 
 
-def dispersion(slices: Sequence[float]) -> Spread:
-    """Return how a visit's equal slices scatter about an even rate, neighbours merged to ten counts each.
+def dispersion(slices: Sequence[float], least: float = LEAST_IN_SLICE) -> Spread:
+    """Return how a visit's equal slices scatter about an even rate, neighbours merged to so many counts each.
 
     References
     ----------
@@ -103,7 +103,7 @@ def dispersion(slices: Sequence[float]) -> Spread:
     total, many = float(counts.sum()), len(counts)
     if total <= 0:
         return Spread(0.0, 0)
-    each = ceil(LEAST_IN_SLICE * many / total)
+    each = max(1, ceil(least * many / total))
     starts = np.arange(0, max(many - each + 1, 1), each)
     merged = np.add.reduceat(counts, starts)
     expected = np.diff(np.append(starts, many)) * total / many
