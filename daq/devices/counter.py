@@ -5,7 +5,8 @@ from __future__ import annotations
 import math
 
 from daq.description.rig import DeviceEntry, Rig
-from daq.devices.links import Link, Wire
+from daq.devices.links import Link
+from daq.devices.wire import Wire
 from daq.errors import DeviceError
 from daq.ports import Clock, Counted
 

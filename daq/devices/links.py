@@ -16,7 +16,7 @@ import threading
 from daq.devices.lines import CHECK, Lines
 from daq.devices.locks import Hold, hold
 from daq.devices.turns import Turn
-from daq.devices.wire import Wire as Wire
+from daq.devices.wire import Wire
 from daq.errors import DeviceError
 from daq.ports import Clock
 

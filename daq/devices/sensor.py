@@ -6,7 +6,8 @@ import math
 from collections.abc import Mapping
 
 from daq.description.rig import DeviceEntry, Rig
-from daq.devices.links import Link, Wire
+from daq.devices.links import Link
+from daq.devices.wire import Wire
 from daq.ports import Clock
 
 NOT_A_NUMBER = 9.91e37  # SCPI-1999, vol. 1, sect. 7.2.1

@@ -7,7 +7,8 @@ from collections.abc import Mapping
 
 from daq.description.rig import DeviceEntry
 from daq.description.speech import Command
-from daq.devices.links import Link, Wire
+from daq.devices.links import Link
+from daq.devices.wire import Wire
 from daq.errors import DeviceError
 from daq.ports import Clock
 

@@ -4,7 +4,8 @@ from __future__ import annotations
 
 from daq.description.rig import Axis, Rig
 from daq.devices.axis import LinearStage
-from daq.devices.links import Link, Wire
+from daq.devices.links import Link
+from daq.devices.wire import Wire
 from daq.ports import AxisState, Clock
 
 NUMBER = r"[-+]?\d+\.\d{4}"

@@ -23,8 +23,9 @@ import pyvisa
 
 from daq.devices.clock import RealClock
 from daq.devices.events import U32, U64, Binner, Layout
-from daq.devices.links import Link, Wire
+from daq.devices.links import Link
 from daq.devices.stream import CHUNK, pump
+from daq.devices.wire import Wire
 from daq.ports import Clock
 from daq.records import Visit
 from daq.sequencer import perform

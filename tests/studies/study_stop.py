@@ -20,7 +20,8 @@ from contextlib import ExitStack, contextmanager
 from pathlib import Path
 
 from daq.devices.clock import RealClock
-from daq.devices.links import Link, Wire
+from daq.devices.links import Link
+from daq.devices.wire import Wire
 from daq.errors import DeviceError
 from simulators.motion import Track
 from simulators.stages import StageController, Travel

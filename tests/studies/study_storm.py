@@ -20,8 +20,9 @@ from typing import Any
 import numpy as np
 
 from daq.devices.clock import RealClock
-from daq.devices.links import Link, Wire
+from daq.devices.links import Link
 from daq.devices.registry import open_devices
+from daq.devices.wire import Wire
 from daq.errors import DeviceError
 from daq.ports import Clock
 from simulators.bench import open_bench

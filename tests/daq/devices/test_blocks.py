@@ -7,7 +7,8 @@ from dataclasses import dataclass
 
 import pytest
 
-from daq.devices.links import Link, Wire
+from daq.devices.links import Link
+from daq.devices.wire import Wire
 from daq.errors import DeviceError
 from simulators.clock import VirtualClock
 from simulators.hosts import Send, Session, serve

@@ -8,8 +8,9 @@ from pathlib import Path
 import pytest
 
 from daq.devices.clock import RealClock
-from daq.devices.links import Link, Wire
+from daq.devices.links import Link
 from daq.devices.registry import open_devices
+from daq.devices.wire import Wire
 from daq.errors import DeviceError
 from daq.records import Reading, Visit
 from daq.sequencer import perform

@@ -10,7 +10,8 @@ import numpy as np
 import pytest
 
 from daq.devices.clock import RealClock
-from daq.devices.links import Link, Wire
+from daq.devices.links import Link
+from daq.devices.wire import Wire
 from daq.errors import DeviceError
 from daq.ports import Clock
 from simulators.clock import VirtualClock

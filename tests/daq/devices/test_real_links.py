@@ -12,8 +12,9 @@ from pathlib import Path
 import pytest
 
 from daq.devices.clock import RealClock
-from daq.devices.links import Link, Wire
+from daq.devices.links import Link
 from daq.devices.locks import Hold, hold, place_of
+from daq.devices.wire import Wire
 from daq.errors import DeviceError
 from simulators.telnet import COM_PORT_OPTION, IAC, SB, SE, Rfc2217Box, escaped, taken_apart
 from tests.daq.devices.real import JOIN_S, KINDS, Port, on_port

@@ -1,4 +1,4 @@
-"""A storm of faults on a stage: no move ends silently at a wrong place (counts: `test_links`, more: studies)."""
+"""A storm of faults on a stage: no move ends silently at a wrong place (of counts, `test_links` speaks)."""
 
 from __future__ import annotations
 
