@@ -50,7 +50,7 @@ def test_the_median_by_which_a_night_scales_its_dispersion() -> None:
 
 
 def test_a_table_of_two_rows() -> None:
-    """Common practice, by hand: rows 10, 20 and 30, 40; chi-squared (ad - bc)^2 N / (products of the sums)."""
+    """Common practice, by hand: chi-squared (ad - bc)^2 N / (product of the four sums)."""
     found = fingerprint([10, 20], [1.0, 1.0], [30, 40], [1.0, 1.0])
 
     assert found.chi2 == pytest.approx((10 * 40 - 20 * 30) ** 2 * 100 / (30 * 70 * 40 * 60))
