@@ -16,7 +16,7 @@ log = logging.getLogger(__name__)
 
 CHECK = "Check power and cable of the device, then resume with `tercet resume`"
 
-_CHUNK = 65536
+_CHUNK, _BLOCK = 65536, 1 << 20
 
 
 class Lines:
@@ -134,10 +134,11 @@ class Lines:
     def _exactly(self, size: int, until_ns: int, asked: str) -> bytes:
         data = bytearray(self.rest)
         while len(data) < size:
-            if not self._readable(until_ns):
+            chunk = self._receive(_BLOCK)
+            if not chunk and not self._readable(until_ns):
                 self.rest = bytes(data)
                 raise self._timeout(asked)
-            data += self._receive()
+            data += chunk
         self.rest = bytes(data[size:])
         return bytes(data[:size])
 
@@ -197,9 +198,9 @@ class Lines:
         except OSError as error:
             raise self._lost(str(error)) from error
 
-    def _receive(self) -> bytes:
+    def _receive(self, most: int = _CHUNK) -> bytes:
         try:
-            data = self._connection.recv(_CHUNK)
+            data = self._connection.recv(most)
         except BlockingIOError:
             return b""
         except OSError as error:
