@@ -5,6 +5,7 @@ from __future__ import annotations
 import socket
 import threading
 from collections.abc import Callable
+from queue import Queue
 
 from daq.devices.events import Binner
 from daq.devices.lines import CHECK
@@ -12,6 +13,7 @@ from daq.errors import DeviceError
 
 CHUNK = 256 * 1024  # larger ones do not fit the caches, and are slower
 _LOOK_S = 0.1
+_AHEAD = 256  # chunks, 64 MB at most
 
 
 def pump(
@@ -41,8 +43,24 @@ def pump(
     DeviceError
         "lost" when the connection breaks.
     """
+    chunks: Queue[bytes | OSError] = Queue(_AHEAD)
+    reader = threading.Thread(target=_read, args=(stream, chunks, over), daemon=True)
+    reader.start()
+    many = 0
+    while chunk := chunks.get():
+        if isinstance(chunk, OSError):
+            raise DeviceError(f"link lost: {chunk}", where=where, remedy=CHECK, kind="lost") from chunk
+        keep(chunk)
+        binner.feed(chunk)
+        many += len(chunk)
+    reader.join()
+    return many
+
+
+def _read(stream: socket.socket, chunks: Queue[bytes | OSError], over: threading.Event) -> None:
+    """Take what comes, ahead of a disk that is slow for a moment; an empty chunk is the end."""
     stream.settimeout(_LOOK_S)
-    buffer, many = bytearray(CHUNK), 0
+    buffer = bytearray(CHUNK)
     view = memoryview(buffer)
     while not over.is_set():
         try:
@@ -50,11 +68,9 @@ def pump(
         except TimeoutError:
             continue
         except OSError as error:
-            raise DeviceError(f"link lost: {error}", where=where, remedy=CHECK, kind="lost") from error
+            chunks.put(error)
+            return
         if not size:
             break
-        chunk = bytes(view[:size])
-        keep(chunk)
-        binner.feed(chunk)
-        many += size
-    return many
+        chunks.put(bytes(view[:size]))
+    chunks.put(b"")
