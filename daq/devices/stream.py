@@ -5,7 +5,6 @@ from __future__ import annotations
 import socket
 import threading
 from collections.abc import Callable
-from queue import Queue
 
 from daq.devices.events import Binner
 from daq.devices.lines import CHECK
@@ -13,7 +12,6 @@ from daq.errors import DeviceError
 
 CHUNK = 256 * 1024  # larger ones do not fit the caches, and are slower
 _LOOK_S = 0.1
-_AHEAD = 256  # chunks, 64 MB at most
 
 
 def pump(
@@ -43,24 +41,9 @@ def pump(
     DeviceError
         "lost" when the connection breaks.
     """
-    chunks: Queue[bytes | OSError] = Queue(_AHEAD)
-    reader = threading.Thread(target=_read, args=(stream, chunks, over), daemon=True)
-    reader.start()
-    many = 0
-    while chunk := chunks.get():
-        if isinstance(chunk, OSError):
-            raise DeviceError(f"link lost: {chunk}", where=where, remedy=CHECK, kind="lost") from chunk
-        keep(chunk)
-        binner.feed(chunk)
-        many += len(chunk)
-    reader.join()
-    return many
-
-
-def _read(stream: socket.socket, chunks: Queue[bytes | OSError], over: threading.Event) -> None:
-    """Take what comes, ahead of a disk that is slow for a moment; an empty chunk is the end."""
+    # One thread: a second one that only reads waits for this one at every chunk, and makes it many times slower.
     stream.settimeout(_LOOK_S)
-    buffer = bytearray(CHUNK)
+    buffer, many = bytearray(CHUNK), 0
     view = memoryview(buffer)
     while not over.is_set():
         try:
@@ -68,9 +51,11 @@ def _read(stream: socket.socket, chunks: Queue[bytes | OSError], over: threading
         except TimeoutError:
             continue
         except OSError as error:
-            chunks.put(error)
-            return
+            raise DeviceError(f"link lost: {error}", where=where, remedy=CHECK, kind="lost") from error
         if not size:
             break
-        chunks.put(bytes(view[:size]))
-    chunks.put(b"")
+        chunk = bytes(view[:size])
+        keep(chunk)
+        binner.feed(chunk)
+        many += size
+    return many
