@@ -101,6 +101,7 @@ def _left_out(dataset: Any, visits: Visits, plan: Plan) -> tuple[dict[str, int],
         for bit in Quality
         if bit & EXCLUDING
     }
+    by_rule["no usable number"] = int(np.count_nonzero(out & ~visits.countable))
     done = max(int(visits.done.sum()), 1)
     counted = int(np.count_nonzero(out & ((bits & int(BY_COUNTS)) != 0)))
     doubtful = counted / done > DOUBTFUL_BY_COUNTS or int(out.sum()) / done > DOUBTFUL

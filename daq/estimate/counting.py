@@ -33,7 +33,7 @@ def true_rate_hz(seen_hz: Any, dead_time_s: float, kind: str) -> Any:
     .. [1] "Radiation Detection and Measurement", 4th ed., ch. 4 (dead-time models); the inverse by the
        principal branch of the Lambert W function.
     """
-    _check(dead_time_s, kind)
+    check_dead_time(dead_time_s, kind)
     seen = np.asarray(seen_hz, float)
     lost = ~(seen >= 0) | ~within_range(seen, dead_time_s, kind)
     if lost.any():
@@ -51,7 +51,7 @@ def seen_rate_hz(true_hz: Any, dead_time_s: float, kind: str) -> Any:
     ----------
     .. [1] "Radiation Detection and Measurement", 4th ed., ch. 4 (dead-time models).
     """
-    _check(dead_time_s, kind)
+    check_dead_time(dead_time_s, kind)
     true = np.asarray(true_hz, float)
     x = true * dead_time_s
     return (true / (1 + x) if kind == "non-paralysable" else true * np.exp(-x))[()]
@@ -60,7 +60,16 @@ def seen_rate_hz(true_hz: Any, dead_time_s: float, kind: str) -> Any:
 def within_range(seen_hz: Any, dead_time_s: float, kind: str) -> Any:
     """Return whether a recorded rate lies below what a counter with this dead time can record at most."""
     most = 1.0 if kind == "non-paralysable" else np.exp(-1.0)
-    return np.isfinite(seen_hz) & (np.asarray(seen_hz) * dead_time_s < most)
+    finite = np.isfinite(seen_hz)
+    return finite & (np.where(finite, seen_hz, 0.0) * dead_time_s < most)
+
+
+def check_dead_time(dead_time_s: float, kind: str) -> None:
+    """Raise ValueError for a dead time that no counter has."""
+    if not (isfinite(dead_time_s) and dead_time_s >= 0):
+        raise ValueError(f"a dead time must not be below zero, not {dead_time_s:g} s")
+    if kind not in KINDS:
+        raise ValueError(f"the kind of dead time must be one of {', '.join(KINDS)}, not {kind!r}")
 
 
 def true_counts(
@@ -146,13 +155,6 @@ def poisson_interval(counts: int, confidence: float) -> tuple[float, float]:
     tail = (1 - confidence) / 2
     low = float(gammaincinv(counts, tail)) if counts else 0.0
     return low, float(gammainccinv(counts + 1, tail))
-
-
-def _check(dead_time_s: float, kind: str) -> None:
-    if not (isfinite(dead_time_s) and dead_time_s >= 0):
-        raise ValueError(f"a dead time must not be below zero, not {dead_time_s:g} s")
-    if kind not in KINDS:
-        raise ValueError(f"the kind of dead time must be one of {', '.join(KINDS)}, not {kind!r}")
 
 
 def _true(seen: FloatArray, dead_time_s: float, kind: str) -> FloatArray:

@@ -8,6 +8,7 @@ from typing import Any
 import numpy as np
 
 from daq.estimate.arrays import FloatArray, IntArray
+from daq.estimate.counting import check_dead_time
 from daq.estimate.plan import Heralded, Plan
 from daq.estimate.rows import Rows
 from daq.estimate.visits import visits_of
@@ -31,7 +32,8 @@ def estimate_run(dataset: Any) -> Estimate:
     Raises
     ------
     ValueError
-        If the attributes lack a part of the plan, or a row has an opening or a position that is not planned.
+        If the attributes lack a part of the plan or hold a dead time below zero, or a row has an opening or a
+        position that is not planned.
     """
     plan = plan_of_dataset(dataset)
     return estimate_visits(visits_of(rows_of_dataset(dataset), plan), plan)
@@ -45,6 +47,7 @@ def plan_of_dataset(dataset: Any) -> Plan:
         raise ValueError(
             f"the dataset's attributes lack {', '.join(missing)}: it carries no plan to estimate by"
         )
+    check_dead_time(float(attributes["dead_time_s"]), str(attributes["dead_time_kind"]))
     openings = np.asarray(attributes["openings"], np.int64)
     positions = np.asarray(attributes["positions_mm"], float)
     return Plan(

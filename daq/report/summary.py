@@ -9,6 +9,7 @@ from typing import Any
 import numpy as np
 import xarray as xr
 
+from daq import openings
 from daq.estimate import estimate_run, judged_again
 from daq.estimate.account import account_of
 
@@ -36,6 +37,7 @@ def summary(folder: Path, visits: xr.Dataset, digests: Mapping[str, str]) -> dic
         **estimate.to_json(),
         "account": account_of(visits).to_json(),
         "quality_differs": _judged_otherwise(visits),
+        "openings_missing": _missing(visits),
         **_tally(visits),
         **_live(visits),
         "truth_kappa": meta.get("truth_kappa"),
@@ -47,6 +49,12 @@ def summary(folder: Path, visits: xr.Dataset, digests: Mapping[str, str]) -> dic
 def _judged_otherwise(visits: xr.Dataset) -> int:
     """Return how many rows the frozen rules judge otherwise off line than they did while it ran."""
     return int(np.count_nonzero(judged_again(visits) != visits["quality"].values))
+
+
+def _missing(visits: xr.Dataset) -> list[str]:
+    """Return the openings of the mask that no visit of the run has measured yet."""
+    seen = set(visits["opening"].values[visits["visit"].values >= 0].tolist())
+    return [openings.name(mask) for mask in visits.attrs["openings"] if mask not in seen]
 
 
 def _tally(visits: xr.Dataset) -> dict[str, int]:

@@ -33,6 +33,7 @@ def _residual(figures: Mapping[str, Any]) -> list[str]:
     if figures["kappa_se"] is None:
         return [
             f"No residual yet: complete pairs of laps so far {figures['pairs']}; an error bar needs two.",
+            *_unmeasured(figures),
         ]
     if not figures["printable"]:
         return [
@@ -54,6 +55,11 @@ def _residual(figures: Mapping[str, Any]) -> list[str]:
             f"simulated truth {_signed(figures['truth_kappa'])}: off by {_number(off, '.2f')} standard errors"
         )
     return found
+
+
+def _unmeasured(figures: Mapping[str, Any]) -> list[str]:
+    missing = figures.get("openings_missing", ())
+    return [f"Never measured: {', '.join(missing)}. The residual needs every opening."] if missing else []
 
 
 def _visits(figures: Mapping[str, Any]) -> list[str]:

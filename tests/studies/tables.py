@@ -57,8 +57,8 @@ def _study(path: Path, name: str) -> Iterator[str]:
     yield ""
 
 
-def _pm(value: str, error: str) -> Any:
-    return lambda found: f"{found[value]:+.3f} ± {found[error]:.3f}"
+def _pm(value: str, error: str, sign: str = "") -> Any:
+    return lambda found: f"{found[value]:{sign}.3f} ± {found[error]:.3f}".replace("-", "−")
 
 
 def _plain(key: str, form: str = ".3f") -> Any:
@@ -77,7 +77,7 @@ def _monitored(found: Mapping[str, Any]) -> str:
     )
 
 
-_NIGHTS = {"nights": _plain("nights", "d"), "bias": _pm("bias", "bias_se"), "sd": _pm("sd", "sd_se")}
+_NIGHTS = {"nights": _plain("nights", "d"), "bias": _pm("bias", "bias_se", "+"), "sd": _pm("sd", "sd_se")}
 _COVERED = {"covers 68 %": _percent("coverage_68"), "covers 95 %": _percent("coverage_95")}
 
 _FORMS: dict[str, tuple[str, dict[str, Any]]] = {

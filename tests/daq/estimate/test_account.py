@@ -230,6 +230,16 @@ def test_stands_left_out_are_counted_by_rule_and_many_are_doubtful() -> None:
     assert spoilt(4, Quality.MOVED).doubtful is True
 
 
+@pytest.mark.parametrize("broken", [{"live_s": 0.0}, {"values": (-1.0,)}, {"values": (float("inf"),)}])
+def test_a_stand_without_a_usable_number_is_told_as_such(broken: dict[str, Any]) -> None:
+    rows = [
+        replace(row, **broken) if row.visit == 85 else row
+        for row in readings(PLAN, np.random.default_rng(16))
+    ]
+
+    assert account(PLAN, rows).left_out == {"no usable number": 1}
+
+
 def test_before_the_first_pair_there_is_no_budget() -> None:
     found = account(PLAN, readings(PLAN, np.random.default_rng(14))[:40])
 

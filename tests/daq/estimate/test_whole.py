@@ -260,3 +260,11 @@ def test_the_t_bar_covers_as_it_says_under_a_walking_source() -> None:
     assert covered / nights == pytest.approx(0.95, abs=0.0225)
     assert np.mean(ses**2) == pytest.approx(kappas.var(), rel=4 * sqrt(0.014**2 + 0.037**2))
     assert abs(kappas.mean()) < 4 * kappas.std() / sqrt(nights)
+
+
+def test_a_dead_time_below_zero_is_refused_with_a_sentence() -> None:
+    archive = dataset(PLAN, NIGHT)
+    archive.attrs["dead_time_s"] = -1e-9
+
+    with pytest.raises(ValueError, match="a dead time must not be below zero, not -1e-09 s"):
+        estimate_run(archive)

@@ -7,6 +7,7 @@ import numpy as np
 from daq.estimate import estimate_run
 from daq.estimate.account import account_of
 from daq.report.account import account_lines
+from daq.report.text import _residual
 from tests.daq.estimate.nights import dataset, plan, rates_hz, readings
 
 PLAN = plan(positions=4, laps=20, dead_time_s=0.0)
@@ -41,6 +42,14 @@ def test_a_check_that_is_off_is_pointed_at():
 
 def test_below_two_pairs_there_is_no_account():
     assert account_lines(figures(readings(PLAN, np.random.default_rng(3))[:64])) == []
+
+
+def test_an_opening_that_was_never_measured_is_named():
+    empty = {"kappa_se": None, "pairs": 0, "openings_missing": ["AB", "ABC"]}
+
+    text = "\n".join(_residual(empty))
+
+    assert "Never measured: AB, ABC. The residual needs every opening." in text
 
 
 def test_no_sentence_says_more_than_was_measured():
