@@ -41,7 +41,7 @@ def pump(
     DeviceError
         "lost" when the connection breaks.
     """
-    # One thread: a second one that only reads waits for this one at every chunk, and makes it many times slower.
+    # One thread: a second one that only reads waits for this one at every chunk, many times slower.
     stream.settimeout(_LOOK_S)
     buffer, many = bytearray(CHUNK), 0
     view = memoryview(buffer)
