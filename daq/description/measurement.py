@@ -68,7 +68,7 @@ class Order(Table):
 
 
 class Line(Table):
-    """A periodic ripple of the source or the room: period, its uncertainty, relative amplitude where known."""
+    """A periodic ripple of source or room: period, its uncertainty, relative amplitude where known."""
 
     period_s: Positive
     period_u_s: NotNegative = 0.0

@@ -135,7 +135,7 @@ def _one_lap(visits_per_stand: int, positions: int, together: int) -> tuple[IntA
 
 
 def _there_and_back(positions: int, laps: int, visits_per_stand: int) -> IntArray:
-    """Return the position of every visit of laps that run to and fro."""
+    """Return the position of every visit of laps that run there and back."""
     lap, within = np.divmod(np.arange(laps * positions), positions)
     return np.repeat(np.where(lap % 2 == 0, within, positions - 1 - within), visits_per_stand)
 
