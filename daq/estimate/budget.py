@@ -11,8 +11,9 @@ import numpy as np
 
 from daq.estimate.arrays import FloatArray, added
 from daq.estimate.contrast import epsilon_and_delta
+from daq.estimate.levels import levels
 from daq.estimate.plan import Plan
-from daq.estimate.sensitivity import Taken, levels, log_gradient
+from daq.estimate.sensitivity import Taken, log_gradient
 from daq.estimate.sums import sums_of
 from daq.estimate.tables import Tables, plan_contrast, tables_of
 from daq.estimate.visits import Visits

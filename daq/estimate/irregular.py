@@ -8,8 +8,9 @@ import numpy as np
 
 from daq.estimate.arrays import BoolArray, FloatArray, IntArray, added
 from daq.estimate.joint import Fit, Series, fit, rates_without, standard_error
+from daq.estimate.levels import levels
 from daq.estimate.plan import Plan
-from daq.estimate.sensitivity import Taken, levels, log_gradient, taken_visits
+from daq.estimate.sensitivity import Taken, log_gradient, taken_visits
 from daq.estimate.sums import Taking, sums_of
 from daq.estimate.tables import Tables, tables_of
 from daq.estimate.visits import Visits

@@ -11,7 +11,6 @@ from daq.estimate.contrast import divisor_gradient
 from daq.estimate.plan import Plan
 from daq.estimate.tables import measured, over, plan_contrast
 from daq.estimate.visits import Visits, complete_pairs
-from daq.estimate.walk import likeliest_per_s
 
 
 @dataclass(frozen=True, slots=True)
@@ -31,7 +30,7 @@ def taken_visits(visits: Visits, plan: Plan, chosen: BoolArray) -> Taken | None:
     inside = chosen & np.isin(plan.pair, complete_pairs(visits, plan)) & (plan.pair >= 0)
     number = np.flatnonzero(inside)
     number = number[np.argsort(visits.middle_s[number], kind="stable")]
-    value, live = (_table(plan, number, column[number]) for column in (visits.value, visits.live))
+    value, live = (by_cell(plan, number, column[number]) for column in (visits.value, visits.live))
     rates, seen = over(value, live), measured(live)
     gradient = log_gradient(rates, seen, plan)
     if gradient is None or not np.isfinite(visits.middle_s[number]).all():
@@ -81,52 +80,13 @@ def spread_out(visits: Visits, plan: Plan) -> bool:
     return bool(np.nansum(last - first) > 2 * np.ptp(time_s))
 
 
-def levels(visits: Visits, plan: Plan, taken: Taken, rounds: int = 4) -> tuple[FloatArray, FloatArray]:
-    """Return the level of each stand with a visit taken (by stand number, 1 on average), and its variance.
-
-    Value over what the stand's own visits would give at the mean rates; these are made again with the levels
-    a few times, since openings that lost visits saw another mean of the source. NaN for other stands.
-    """
-    stand = plan.stand[taken.visit]
-    cell = (plan.position[taken.visit], plan.opening[taken.visit])
-    value, live = visits.value[taken.visit], visits.live[taken.visit]
-    rates, level = taken.rates, np.ones(0)
-    for _ in range(rounds):
-        expected = added(stand, live * rates[cell])
-        level = over(added(stand, value), expected, np.nan)
-        level = level / np.nanmean(level)
-        strength = _table(plan, taken.visit, live * level[stand])
-        rates = over(_table(plan, taken.visit, value), strength)
-    variance = added(stand, visits.variance[taken.visit])
-    return level, over(variance, added(stand, live * rates[cell]) ** 2, np.nan)
-
-
-def walk_per_s(visits: Visits, plan: Plan, taken: Taken) -> float:
-    """Return the variance per second of the source's log as a random walk, from the levels of the stands."""
-    level, variance = levels(visits, plan, taken)
-    stand = plan.stand[taken.visit]
-    many = np.bincount(stand).astype(float)
-    time_s = over(added(stand, visits.middle_s[taken.visit]), many, np.nan)
-    known = np.flatnonzero((level > 0) & (variance > 0))
-    known = known[np.argsort(time_s[known], kind="stable")]
-    step_s = np.diff(time_s[known])
-    if len(known) < 3 or not np.all(step_s > 0):
-        return 0.0
-    return likeliest_per_s(level[known] ** 2 / variance[known], np.log(level[known]), step_s)
-
-
-def walk_variance(visits: Visits, taken: Taken, per_s: float) -> float:
-    """Return the variance of the plain kappa under a random walk of so much variance a second."""
-    step_s = np.diff(visits.middle_s[taken.visit])
-    return float(per_s * np.sum(step_s * np.cumsum(taken.weight)[:-1] ** 2))
-
-
 def _performed(visits: Visits, plan: Plan) -> IntArray:
     """Return the visits of complete pairs in whole attempts, used or not."""
     return np.flatnonzero(np.isin(plan.pair, complete_pairs(visits, plan)) & np.isfinite(visits.middle_s))
 
 
-def _table(plan: Plan, number: IntArray, column: FloatArray) -> FloatArray:
+def by_cell(plan: Plan, number: IntArray, column: FloatArray) -> FloatArray:
+    """Return a column of visits added up by position and opening (J, K)."""
     shape = (len(plan.positions_mm), len(plan.openings))
     cell = plan.position[number] * shape[1] + plan.opening[number]
     return added(cell, column, shape[0] * shape[1]).reshape(shape)

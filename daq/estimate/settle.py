@@ -14,9 +14,9 @@ from daq.estimate.choice import JOINT, MONITORED, PLAIN, Choice, choose, monitor
 from daq.estimate.exclusions import without_exclusions
 from daq.estimate.headline import headline
 from daq.estimate.irregular import irregular
+from daq.estimate.levels import walk_per_s, walk_variance
 from daq.estimate.linearity import dead_time_left_s
 from daq.estimate.plan import Plan
-from daq.estimate.sensitivity import walk_per_s, walk_variance
 from daq.estimate.sums import Taking, plainly, sums_of
 from daq.estimate.tables import Tables, tables_of
 from daq.estimate.terms import terms_of

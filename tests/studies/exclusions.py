@@ -8,8 +8,9 @@ import numpy as np
 
 from daq.estimate.arrays import FloatArray
 from daq.estimate.irregular import irregular
+from daq.estimate.levels import levels
 from daq.estimate.plan import Plan
-from daq.estimate.sensitivity import levels, taken_visits
+from daq.estimate.sensitivity import taken_visits
 from daq.estimate.sums import Sums, Taking, sums_of
 from daq.estimate.tables import kappa_of, tables_of
 from daq.estimate.visits import Visits
