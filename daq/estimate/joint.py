@@ -55,7 +55,7 @@ def fit(series: Series) -> Fit:
     -----
     Value of a visit: mean rate x live time x exp(level), variance `spread` times that; the level is a random
     walk. Newton's method; tridiagonal solves eliminate the levels, conjugate gradients solve for the rates on
-    the Schur complement. The common factor of rates and levels is fixed hard: every correction is kept
+    the Schur complement. The common factor of rates and levels is fixed hard: what is solved for is
     orthogonal to it, and the mean strength is one.
 
     References
@@ -128,7 +128,6 @@ class Schur:
         direction, size, first = np.zeros_like(right), 0.0, 0.0
         for step in range(SOLVER_STEPS):
             scaled = inverse * rest
-            scaled[informed] -= rest.sum() / total
             fresh = float(rest @ scaled)
             first = first or fresh
             if fresh <= TOLERANCE**2 * first:

@@ -9,15 +9,16 @@ from typing import Any
 
 import numpy as np
 import pytest
+from scipy import stats
 
 from daq.estimate import Plan, estimate_run
 from daq.estimate.account import Account, account_of
 from daq.estimate.arrays import FloatArray
 from daq.estimate.budget import Line, smooth_drift
-from daq.estimate.checks import Check
+from daq.estimate.checks import Check, _by_block
 from daq.estimate.dataset import rows_of_dataset
 from daq.estimate.sensitivity import taken_visits
-from daq.estimate.sums import plainly
+from daq.estimate.sums import plainly, sums_of
 from daq.estimate.visits import visits_of
 from daq.records import Quality, Reading
 from tests.daq.estimate.nights import dataset, monitored, plan, rates_hz, readings
@@ -69,6 +70,7 @@ def test_the_lines_of_a_quiet_night() -> None:
     assert 0 < (line(found, "background").value or 0) < (whole.kappa_counting_se or 0)
     assert (line(found, "smooth drift, missing visits").value or 0) < 1e-6
     assert line(found, "detector position").value is None  # no encoder in this record
+    assert line(found, "background").kind == "part"
     assert all(one.halve.endswith(".") for one in (found.budget.lines if found.budget else ()))
 
 
@@ -179,6 +181,19 @@ def test_checks_of_a_quiet_night_are_quiet() -> None:
     assert {"odd less even pairs", "first less second laps", "scatter of the pairs over counting"} <= names
     # 150 probabilities, uniform if all is well: the share below 5 % is known to 1.8 %; four of them.
     assert np.mean(np.array(ps) < 0.05) == pytest.approx(0.05, abs=4 * 0.018)
+
+
+def test_odd_and_even_pairs_are_compared_by_students_t() -> None:
+    rows = readings(PLAN, np.random.default_rng(17))
+    sums = sums_of(visits_of(rows_of_dataset(dataset(PLAN, rows)), PLAN), PLAN)
+    by_pair = _by_block(sums.value, sums.live, PLAN)
+
+    found = check(account(PLAN, rows), "odd less even pairs")
+
+    judge = stats.ttest_ind(by_pair[::2], by_pair[1::2])
+    assert found.p == pytest.approx(judge.pvalue, rel=1e-9)
+    assert found.value / (found.se or 0.0) == pytest.approx(judge.statistic, rel=1e-9)
+    assert by_pair.mean() == pytest.approx(estimate_run(dataset(PLAN, rows)).kappa, rel=1e-9)
 
 
 def leaky(of: Plan, generator: np.random.Generator, which: FloatArray, more: float) -> list[Reading]:

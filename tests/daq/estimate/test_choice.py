@@ -9,6 +9,8 @@ import pytest
 from daq.estimate import Estimate, Plan, Running, estimate_run
 from daq.estimate.arrays import FloatArray
 from daq.estimate.choice import JOINT, MONITORED, PLAIN
+from daq.estimate.dataset import rows_of_dataset
+from daq.estimate.visits import visits_of
 from daq.records import Quality, Reading
 from tests.daq.estimate.nights import SLOT_S, dataset, monitored, plan, reading, readings, shuffled
 from tests.daq.estimate.test_running import agree, run
@@ -64,6 +66,17 @@ def test_many_stands_left_out_call_for_the_joint_fit_and_few_do_not() -> None:
 
     assert (many.estimator, few.estimator) == (JOINT, PLAIN)
     assert many.why == "12.5 % of the stands are left out, and their good visits count"
+
+
+def test_a_stand_with_a_strange_fingerprint_lends_no_visit_to_the_fit() -> None:
+    rows = readings(PLAN, np.random.default_rng(18))
+    strange = [replace(row, quality=Quality.FINGERPRINT) if row.visit == 15 else row for row in rows]
+    moved = [replace(row, quality=Quality.MOVED) if row.visit == 15 else row for row in rows]
+
+    by_stand, by_visit = (visits_of(rows_of_dataset(dataset(PLAN, one)), PLAN) for one in (strange, moved))
+
+    assert np.flatnonzero(~by_stand.good).tolist() == list(range(8, 16))
+    assert np.flatnonzero(~by_visit.good).tolist() == [15]
 
 
 def test_a_night_en_bloc_is_not_mended_by_a_fit() -> None:

@@ -75,7 +75,7 @@ def test_power_is_a_mean_and_adds_up_by_the_time_it_was_taken() -> None:
 
     found = detected(rows([[3e-6]], [[4e-14]], live_s=2.5), of)
 
-    assert (found.value[0], found.variance[0]) == pytest.approx((7.5e-6, 2.5e-13))
+    assert (found.value[0], found.variance[0]) == pytest.approx((7.5e-6, 2.5e-13), rel=1e-12, abs=0.0)
 
 
 def test_power_below_zero_is_a_reading_like_any_other() -> None:
@@ -151,6 +151,7 @@ def test_each_channel_loses_coincidences_in_its_dead_time() -> None:
 
     expected = 100.0 * np.prod(1 + true * 1e-6) - true.prod() * 1e-6 * 2.0
     assert found.value[0] == pytest.approx(expected, rel=1e-9)
+    assert found.variance[0] == pytest.approx(100.0 * np.prod(1 + true * 1e-6) ** 2, rel=1e-9)
     assert true_rate_hz(seen / 2.0, 1e-6, "non-paralysable") == pytest.approx(true)
 
 

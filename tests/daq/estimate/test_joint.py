@@ -32,12 +32,16 @@ def series(
 
 def dense(of: Series, level: FloatArray, rates: FloatArray, per_s: float) -> FloatArray:
     """Return the Fisher matrix of the log rates (4) and the levels, the first of them fixed at zero."""
-    visits = len(of.cell)
     mean = rates[of.cell] * of.exposure * np.exp(level) / of.spread
-    design = np.hstack([np.eye(4)[of.cell], np.eye(visits)[:, 1:]])
+    return _dense(np.eye(4)[of.cell], mean, of.step_s, per_s)
+
+
+def _dense(cells: FloatArray, mean: FloatArray, step_s: FloatArray, per_s: float) -> FloatArray:
+    visits, many = cells.shape
+    design = np.hstack([cells, np.eye(visits)[:, 1:]])
     step = (np.eye(visits)[1:] - np.eye(visits)[:-1])[:, 1:]
-    prior = step.T @ np.diag(1 / (per_s * of.step_s)) @ step
-    return np.asarray(design.T @ (mean[:, None] * design) + block_diag(np.zeros((4, 4)), prior))
+    prior = step.T @ np.diag(1 / (per_s * step_s)) @ step
+    return np.asarray(design.T @ (mean[:, None] * design) + block_diag(np.zeros((many, many)), prior))
 
 
 def test_the_fit_is_where_the_penalised_likelihood_is_greatest() -> None:
@@ -72,6 +76,31 @@ def test_the_standard_error_is_that_of_dense_algebra() -> None:
     right = np.concatenate([gradient, np.zeros(len(of.cell) - 1)])
     matrix = dense(of, found.level, found.rates, found.per_s)
     assert told == pytest.approx(np.sqrt(right @ cho_solve(cho_factor(matrix), right)), rel=1e-8)
+
+
+def test_many_cells_under_a_wild_walk_are_solved_to_the_last_digits() -> None:
+    generator, cells, visits = np.random.default_rng(13), 24, 480
+    cell = np.concatenate([generator.permutation(cells) for _ in range(visits // cells)])
+    level = np.cumsum(generator.normal(0.0, 0.05, visits))
+    rates = np.linspace(2e3, 4e4, cells)
+    value = generator.poisson(rates[cell] * np.exp(level)).astype(float)
+    ones, start = np.ones(visits), np.zeros(visits)
+    of = Series(cell, value, ones, ones, np.full(visits - 1, STEP_S), cell * 0, start, cells)
+    gradient = generator.normal(size=cells)
+    gradient -= gradient.mean()
+
+    found = fit(of)
+    told = standard_error(of, found, gradient)
+
+    mean = found.rates[cell] * np.exp(found.level)
+    pull = np.diff(found.level) / (found.per_s * STEP_S)
+    slope = value - mean + np.diff(pull, prepend=0.0, append=0.0)
+    design = np.eye(cells)[cell]
+    matrix = _dense(design, mean, np.full(visits - 1, STEP_S), found.per_s)
+    right = np.concatenate([gradient, np.zeros(visits - 1)])
+    assert told == pytest.approx(np.sqrt(right @ np.linalg.solve(matrix, right)), rel=1e-9)
+    # The noise of a visit is 45 counts and more.
+    assert max(np.abs(slope).max(), np.abs(design.T @ (value - mean)).max()) < 1e-4
 
 
 def test_leaving_a_block_out_is_the_whole_newton_fit_without_it() -> None:
