@@ -10,11 +10,11 @@ from dataclasses import asdict
 from pathlib import Path
 
 from daq.cli.answer import Answer
-from daq.cli.plan import wishes
+from daq.cli.plan import refuse_hopeless, wishes
 from daq.cli.toml import toml_text
 from daq.errors import DescriptionError
-from daq.itinerary import MIRRORED, Forecast, Itinerary, forecast, pinned
-from daq.itinerary.advice import LONGEST_GOAL_H, orders_compared, remedies, verdict
+from daq.itinerary import Forecast, Itinerary, forecast, pinned
+from daq.itinerary.advice import orders_compared, remedies, verdict
 from daq.itinerary.pilot import HOUR_S
 from daq.service.load import DESCRIPTION, Loaded, load
 
@@ -24,7 +24,7 @@ def compose(arguments: argparse.Namespace) -> Answer:
     loaded = load(arguments.file, wishes(arguments))
     itinerary = loaded.itinerary()
     expected = forecast(itinerary, loaded.measurement)
-    _refuse_hopeless(loaded, itinerary, expected, arguments.file)
+    refuse_hopeless(loaded, itinerary, expected, arguments.file)
     compared = orders_compared(loaded.measurement, loaded.rig, itinerary)
     advice = remedies(loaded.measurement, loaded.rig, itinerary, expected)
     if arguments.write is not None:
@@ -42,29 +42,6 @@ def compose(arguments: argparse.Namespace) -> Answer:
         "orders": {name: {"q": one.q, "kappa_se": one.kappa_se} for name, one in compared.items()},
     }
     return Answer(0, figures, list(_lines(itinerary, expected, compared, advice, arguments)))
-
-
-def _refuse_hopeless(loaded: Loaded, itinerary: Itinerary, expected: Forecast, file: Path) -> None:
-    """Refuse a goal that would take longer than anybody measures; orders for comparison are only told of.
-
-    Raises
-    ------
-    DescriptionError
-        With the hours that it would take, what the plan gives, and what would help.
-    """
-    goal, order = loaded.measurement.estimate.goal_se, loaded.measurement.itinerary.order
-    if goal is None or order not in MIRRORED:
-        return
-    if expected.goal_s is not None and expected.goal_s <= LONGEST_GOAL_H * HOUR_S:
-        return
-    takes = "no length of run" if expected.goal_s is None else f"{expected.goal_s / HOUR_S:.0f} h"
-    helps = " ".join(remedies(loaded.measurement, loaded.rig, itinerary, expected))
-    raise DescriptionError(
-        (
-            f"{file}, estimate.goal_se: ± {goal:.2e} needs {takes}; {expected.total_s / HOUR_S:.1f} h give "
-            f"± {expected.kappa_se:.2e}. Give a goal that can be met. {helps}",
-        )
-    )
 
 
 def _write(path: Path, loaded: Loaded, itinerary: Itinerary, file: Path) -> None:

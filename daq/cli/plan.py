@@ -13,7 +13,9 @@ from daq.devices.clock import RealClock
 from daq.devices.files import read_dialect, with_dialects
 from daq.devices.trial import tried
 from daq.errors import DescriptionError
-from daq.service.load import Wishes, load
+from daq.itinerary import Forecast, Itinerary, forecast
+from daq.itinerary.advice import hopeless
+from daq.service.load import Loaded, Wishes, load
 
 
 def check(arguments: argparse.Namespace) -> Answer:
@@ -28,10 +30,24 @@ def check(arguments: argparse.Namespace) -> Answer:
         rig = parse(table, str(path), "rig")
         return _fine(f"rig {rig.name!r}: {len(rig.slits)} slits, {len(rig.devices)} devices")
     loaded = load(path)
+    itinerary = loaded.itinerary()
+    refuse_hopeless(loaded, itinerary, forecast(itinerary, loaded.measurement), path)
     return _fine(
-        f"measurement {loaded.measurement.name!r} on rig {loaded.rig.name!r}: "
-        f"{len(loaded.itinerary())} visits"
+        f"measurement {loaded.measurement.name!r} on rig {loaded.rig.name!r}: {len(itinerary)} visits"
     )
+
+
+def refuse_hopeless(loaded: Loaded, itinerary: Itinerary, expected: Forecast, file: Path) -> None:
+    """Refuse a goal that would take longer than anybody measures.
+
+    Raises
+    ------
+    DescriptionError
+        With the hours that it would take, what the plan gives, and what would help.
+    """
+    sentence = hopeless(loaded.measurement, loaded.rig, itinerary, expected)
+    if sentence is not None:
+        raise DescriptionError((f"{file}, estimate.goal_se: {sentence}",))
 
 
 def wishes(arguments: argparse.Namespace) -> Wishes:

@@ -43,6 +43,20 @@ def remedies(measurement: Measurement, rig: Rig, itinerary: Itinerary, expected:
     return (*(text for _, text in sorted(found)), *_brighter(expected), *_monitor(expected))
 
 
+def hopeless(measurement: Measurement, rig: Rig, itinerary: Itinerary, expected: Forecast) -> str | None:
+    """Return why a goal cannot be meant, with what the plan gives and what would help; None if it can.
+
+    Orders for comparison are only told of by `verdict`.
+    """
+    goal, goal_h = expected.goal_se, expected.goal_s and expected.goal_s / HOUR_S
+    if goal is None or itinerary.order not in MIRRORED or (goal_h and goal_h <= LONGEST_GOAL_H):
+        return None
+    takes = "is out of reach at any length" if goal_h is None else f"needs {goal_h:.0f} h"
+    gives = f"{expected.total_s / HOUR_S:.1f} h give ± {expected.kappa_se:.2e}"
+    helps = " ".join(remedies(measurement, rig, itinerary, expected))
+    return f"± {goal:.2e} {takes}; {gives}. Give a goal that can be met. {helps}"
+
+
 def orders_compared(measurement: Measurement, rig: Rig, itinerary: Itinerary) -> dict[str, Forecast]:
     """Return the forecast of the same laps in every order, the itinerary's own with its dwell as it is."""
     compared = {}

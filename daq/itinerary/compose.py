@@ -110,8 +110,8 @@ def compose(measurement: Measurement, rig: Rig, seed: int | None = None) -> Itin
     known = known_of(measurement, rig)
     seed = known.settings.seed if seed is None else seed
     masks = known.openings.tolist()
-    word = [masks.index(openings.mask(name)) for name in opening_order(measurement, rig)]
-    return _itinerary(known, decide(known, word, _stream(seed, _SEARCH)), seed)
+    slots = [masks.index(openings.mask(name)) for name in opening_order(measurement, rig)]
+    return laid_out(known, decide(known, slots, _stream(seed, _SEARCH)), seed)
 
 
 def pinned(itinerary: Itinerary, measurement: Measurement) -> dict[str, Any]:
@@ -167,7 +167,8 @@ def plan_of(itinerary: Itinerary, measurement: Measurement) -> Plan:
     )
 
 
-def _itinerary(known: Known, decision: Decision, seed: int) -> Itinerary:
+def laid_out(known: Known, decision: Decision, seed: int) -> Itinerary:
+    """Return the visits of a decision; the seed draws coins, pauses and random orders."""
     settings, design = known.settings, decision.design
     coins = np.random.Generator(np.random.Philox(seed)).random((settings.laps + 1) // 2) < 0.5
     if settings.order not in MIRRORED:

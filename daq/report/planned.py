@@ -46,10 +46,12 @@ def draw_plan(
 def _laps(axes: Axes, itinerary: Itinerary) -> None:
     """Draw the detector position of the whole run, the pairs shaded in turn."""
     hours = itinerary.start_s / 3600
-    axes.plot(hours, itinerary.position_mm, color=INK, linewidth=0.6)
-    for pair in range(0, itinerary.planned_pairs, 2):
-        inside = hours[itinerary.pair == pair]
-        axes.axvspan(inside.min(), inside.max(), color=LIGHT, linewidth=0)
+    shown = np.flatnonzero(np.diff(itinerary.position_mm, prepend=np.inf))
+    axes.plot(hours[shown], itinerary.position_mm[shown], color=INK, linewidth=0.6)
+    if np.all(np.diff(itinerary.pair) >= 0):  # in blocked order pairs lie within one another
+        begins = hours[np.searchsorted(itinerary.pair, np.arange(itinerary.planned_pairs))]
+        for first, last in zip(begins[::2], np.append(begins[1:], hours[-1])[::2], strict=True):
+            axes.axvspan(first, last, color=LIGHT, linewidth=0)
     axes.set(title="visits: where the detector stands", xlabel="hours", ylabel="position [mm]")
 
 

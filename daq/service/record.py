@@ -58,6 +58,7 @@ def record_of(
         "planned_pairs": itinerary.planned_pairs,
         "visits_planned": len(itinerary),
         "visits_per_stand": itinerary.visits_per_stand,
+        "plan_notes": list(itinerary.notes),
         "order": itinerary.order,
         "seed": itinerary.seed,
         "goal_se": settings.goal_se,

@@ -1,3 +1,5 @@
+from hashlib import sha256
+
 import numpy as np
 import pytest
 from hypothesis import given, settings
@@ -212,29 +214,72 @@ def test_forward_and_backward_stands_are_equal_at_every_position():
     assert (forward == 19).all()
 
 
-def test_a_linear_drift_leaves_kappa_alone():
-    itinerary = compose(lantern(), lantern_rig())
-    middle_s = itinerary.start_s + itinerary.dwell_s / 2
-    level = 1 - 0.03 / 3600 * middle_s
-    cell = itinerary.position_index * 8 + itinerary.opening_index
+@pytest.mark.parametrize(
+    "wishes",
+    [
+        {},
+        {"itinerary__order": "searched"},
+        {"itinerary__order": "searched", "itinerary__repeats": 2, "expect__drift_per_sqrt_hour": 0.2},
+        {"itinerary__dwell": "best"},
+        {"itinerary__dwell": "best", "positions__time": "worth"},
+        {"itinerary__together": 4},
+        {"itinerary__fly_back": True},
+        {"itinerary__fly_back": True, "positions__number": 40},
+    ],
+)
+def test_a_linear_drift_leaves_kappa_alone(wishes):
+    rig = lantern_rig(axes__mask__approach="down", axes__mask__takeup_s=0.3)
+    itinerary = compose(lantern(**wishes), rig)
 
-    mean_level = (np.bincount(cell, weights=level) / np.bincount(cell)).reshape(41, 8)
-    rates = itinerary.rates_hz * mean_level
-    named = {openings.name(mask): rates[:, mask] for mask in range(8)}
+    assert abs(kappa_of_a_source(itinerary, 1 - 0.03 / 3600 * middles_s(itinerary))) < 1e-9
+
+
+def middles_s(itinerary):
+    return itinerary.start_s + itinerary.dwell_s / 2
+
+
+def kappa_of_a_source(itinerary, level):
+    """Return kappa of a night without noise whose source has a strength by visit."""
+    many = len(itinerary.openings)
+    cell = itinerary.position_index * many + itinerary.opening_index
+    mean_level = np.bincount(cell, itinerary.dwell_s * level) / np.bincount(cell, itinerary.dwell_s)
+    rates = itinerary.rates_hz * mean_level.reshape(-1, many)
+    named = {openings.name(mask): rates[:, mask] for mask in range(many)}
     value, _ = kappa(named, named, itinerary.weights, signs=itinerary.signs)
+    return value
 
-    assert abs(value) < 1e-9
+
+def test_without_padding_a_take_up_in_one_direction_would_let_a_linear_drift_in():
+    itinerary = compose(lantern(), lantern_rig())
+    at_mm = np.array([lantern_rig().mask_at_mm(int(mask)) for mask in itinerary.opening])
+    later_s = 0.3 * np.cumsum(np.diff(at_mm, prepend=at_mm[0]) < 0)
+
+    value = kappa_of_a_source(itinerary, 1 - 0.03 / 3600 * (middles_s(itinerary) + later_s))
+
+    assert abs(value) > 1e-7
+
+
+# The visits of the reference night: a rehearsal's digest rests on them.
+REFERENCE = "91275bda085818508454a1026dc18933c2e7758293125b8b7bbc4d9951eb721d"
+
+
+def test_the_reference_night_is_what_it_always_was():
+    itinerary = compose(lantern(), lantern_rig())
+
+    columns = (
+        *(itinerary.opening, np.round(itinerary.position_mm * 1000), np.round(itinerary.dwell_s * 1000)),
+        *(itinerary.stand, itinerary.lap, itinerary.pair, itinerary.forward),
+        np.round(itinerary.start_s * 1000),
+    )
+    digest = sha256(b"".join(np.asarray(column).astype("<i8").tobytes() for column in columns))
+
+    assert digest.hexdigest() == REFERENCE
 
 
 def test_the_same_night_in_blocked_order_is_off_by_twenty_counting_standard_errors():
     itinerary = compose(lantern(itinerary__order="blocked"), lantern_rig())
-    level = 1 - 0.05 * itinerary.start_s / itinerary.total_s
-    cell = itinerary.position_index * 8 + itinerary.opening_index
 
-    mean_level = (np.bincount(cell, weights=level) / np.bincount(cell)).reshape(41, 8)
-    rates = itinerary.rates_hz * mean_level
-    named = {openings.name(mask): rates[:, mask] for mask in range(8)}
-    value, _ = kappa(named, named, itinerary.weights, signs=itinerary.signs)
+    value = kappa_of_a_source(itinerary, 1 - 0.05 * itinerary.start_s / itinerary.total_s)
 
     assert abs(value) > 20 * forecast(itinerary, lantern()).kappa_counting_se
 
