@@ -154,8 +154,6 @@ class Judge:
     def _fingerprint_bits(
         self, attempt: Sequence[Reading], place: _Place, counts: FloatArray, exposure: FloatArray
     ) -> Quality:
-        if not place.stands:
-            return Quality.GOOD
         found = fingerprint(counts, exposure, place.counts, place.exposure)
         if not found.beyond(self._rules.fingerprint_p, self._stood.scale):
             if found.dof:
