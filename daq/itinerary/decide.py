@@ -8,20 +8,16 @@ from math import factorial
 
 from daq import openings
 from daq.errors import DescriptionError
-from daq.itinerary.design import (
-    SEARCH_ROUNDS,
-    Design,
-    best_dwell_s,
-    dwell_range_s,
-    pair_cost,
-    searched_word,
-)
+from daq.itinerary.choice import best_dwell_s, dwell_range_s, pair_cost, pair_times, searched_word
+from daq.itinerary.design import Design
 from daq.itinerary.dwell import STEP_S
 from daq.itinerary.known import Known
 from daq.itinerary.pilot import HOUR_S
 from daq.itinerary.resonance import Rhythm, free, harmonic, in_step
 
 MIRRORED = ("zigzag", "searched")  # orders in which a pair is its own mirror image
+SEARCH_ROUNDS = 3  # word and dwell are chosen in turn
+MANY_NEAR = 40  # dwells are tried on either side of one that keeps step with a line
 MANY_TOGETHER = 8  # groups of neighbouring positions are tried up to here, and the whole lap
 
 
@@ -57,7 +53,7 @@ def decide(known: Known, slots: Sequence[int], seed: int) -> Decision:
 
 def rhythm(known: Known, design: Design) -> Rhythm:
     """Return the beat of a design."""
-    pair_s = pair_cost(known, design).total_s
+    *_, pair_s = pair_times(known, design)
     groups = -(-known.places_mm.size // design.together)
     return Rhythm(pair_s / (2 * groups), pair_s, max(1, known.settings.laps // 2))
 
@@ -125,10 +121,12 @@ def _kept_out_of_step(known: Known, design: Design) -> tuple[Design, bool, tuple
     """Return a design whose stand and pairs do not beat with a known line, whether it pauses, and why."""
     if not known.ripples or known.settings.order not in MIRRORED:
         return design, False, ()
-    tried = [(near, rhythm(known, near)) for near in _nearby(known, design)]
-    for near, beat in tried:
+    tried = []
+    for near in _nearby(known, design):
+        beat = rhythm(known, near)
         if free(beat, known.ripples):
             return near, False, tuple(_measure_notes(known, design, near))
+        tried.append((near, beat))
     for near, beat in tried:
         if all(in_step(beat, ripple) is None for ripple in known.ripples):
             return near, True, (*_measure_notes(known, design, near), *_pause_notes(known, beat))
@@ -141,10 +139,11 @@ def _kept_out_of_step(known: Known, design: Design) -> tuple[Design, bool, tuple
 
 
 def _nearby(known: Known, design: Design) -> Iterator[Design]:
-    """Yield the design with its own dwell, then with others ever further off, up to a third."""
+    """Yield the design with its own dwell, then with some others ever further off, up to a third."""
     yield design
-    for steps in range(1, max(5, round(design.dwell_s / STEP_S / 3)) + 1):
-        for dwell_s in (design.dwell_s + steps * STEP_S, design.dwell_s - steps * STEP_S):
+    step_s = STEP_S * max(1, round(design.dwell_s / STEP_S / 3 / MANY_NEAR))
+    for steps in range(1, max(5, round(design.dwell_s / step_s / 3)) + 1):
+        for dwell_s in (design.dwell_s + steps * step_s, design.dwell_s - steps * step_s):
             if dwell_s >= max(known.shortest_gate_s, STEP_S) - 1e-9:
                 yield replace(design, dwell_s=round(dwell_s, 9))
 

@@ -8,7 +8,8 @@ from typing import Any
 import numpy as np
 
 from daq.itinerary import Wander, compose, walk
-from daq.itinerary.design import Design, best_dwell_s, pair_cost
+from daq.itinerary.choice import best_dwell_s, pair_cost
+from daq.itinerary.design import Design
 from daq.itinerary.known import Known, known_of
 from tests.daq.itinerary.rigs import without_dwell
 from tests.examples import lantern_rig

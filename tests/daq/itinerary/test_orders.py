@@ -250,8 +250,9 @@ def kappa_of_a_source(itinerary, level):
 
 
 def test_without_padding_a_take_up_in_one_direction_would_let_a_linear_drift_in():
-    itinerary = compose(lantern(), lantern_rig())
-    at_mm = np.array([lantern_rig().mask_at_mm(int(mask)) for mask in itinerary.opening])
+    rig = lantern_rig()
+    itinerary = compose(lantern(), rig)
+    at_mm = np.array([rig.mask_at_mm(mask) for mask in range(8)])[itinerary.opening]
     later_s = 0.3 * np.cumsum(np.diff(at_mm, prepend=at_mm[0]) < 0)
 
     value = kappa_of_a_source(itinerary, 1 - 0.03 / 3600 * (middles_s(itinerary) + later_s))
