@@ -16,7 +16,7 @@ from daq.itinerary.pilot import HOUR_S
 from daq.itinerary.resonance import Rhythm, free, harmonic, in_step
 
 MIRRORED = ("zigzag", "searched")  # orders in which a pair is its own mirror image
-SEARCH_ROUNDS = 3  # word and dwell are chosen in turn
+SEARCHED_AT = (1.0, 1.6, 2.5)  # times the best dwell along the mask: good words often like a longer one
 MANY_NEAR = 40  # dwells are tried on either side of one that keeps step with a line
 MANY_TOGETHER = 8  # groups of neighbouring positions are tried up to here, and the whole lap
 
@@ -83,14 +83,14 @@ def _chosen(known: Known, design: Design, seed: int) -> tuple[Design, tuple[str,
     if free_dwell:
         design = replace(design, dwell_s=best_dwell_s(known, design))
     along, why = design, ""
-    for _ in range((SEARCH_ROUNDS if free_dwell else 1) if searched else 0):
-        word = searched_word(known, design, seed)
-        found = replace(design, slots=word.slots)
+    for longer in (SEARCHED_AT if free_dwell else (1.0,)) if searched else ():
+        tried = replace(along, dwell_s=round(longer * along.dwell_s, 1) if free_dwell else along.dwell_s)
+        word = searched_word(known, tried, seed)
+        found = replace(tried, slots=word.slots)
         if free_dwell:
             found = replace(found, dwell_s=best_dwell_s(known, found))
-        if pair_cost(known, found).time_variance >= pair_cost(known, design).time_variance:
-            break
-        design, why = found, _how(known, word.exhaustive, word.evaluations, len(word.slots))
+        if pair_cost(known, found).time_variance < pair_cost(known, design).time_variance:
+            design, why = found, _how(known, word.exhaustive, word.evaluations, len(word.slots))
     notes = _order_note(known, along, design, why) if searched else ()
     return design, (*notes, *(_dwell_note(known, design) if free_dwell else ()))
 

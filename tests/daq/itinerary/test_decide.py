@@ -66,3 +66,15 @@ def test_a_rig_laid_out_in_the_best_order_needs_no_search():
     (note,) = compose(measurement, lantern_rig()).notes
 
     assert note == "Order searched: none is better than along the mask."
+
+
+def test_words_and_dwell_are_chosen_together_and_pay_where_moves_are_slow_and_the_drift_is_strong():
+    rig = lantern_rig(axes__mask__settle_s=3.0)
+    wishes = {**NARROW, "itinerary__order": "searched", "expect__drift_per_sqrt_hour": 0.2}
+
+    once, twice = (
+        forecast(compose(plan, rig), plan).q
+        for plan in (without_dwell(**wishes), without_dwell(**wishes, itinerary__repeats=2))
+    )
+
+    assert twice < 0.9 * once
