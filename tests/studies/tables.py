@@ -32,8 +32,9 @@ def text(results: Path) -> str:
             "## What the estimates do: studies",
             "",
             "Made by `python -m tests.studies tables` from `tests/studies/results`; a study is run by",
-            "`python -m tests.studies NAME [--nights N] [--json PATH]`; seeds are fixed. An exclamation mark",
-            "says that a target is missed.",
+            "`python -m tests.studies NAME [--nights N] [--json PATH]`, one of plans by",
+            "`python -m tests.studies.plans NAME`; seeds are fixed. An exclamation mark says that a target",
+            "is missed.",
             "",
             *parts,
         ]
@@ -77,6 +78,10 @@ def _monitored(found: Mapping[str, Any]) -> str:
     )
 
 
+def _inside(table: str, key: str) -> Any:
+    return lambda found: f"{found[table][key]:.4g}" if key in found.get(table, {}) else ""
+
+
 _NIGHTS = {"nights": _plain("nights", "d"), "bias": _pm("bias", "bias_se", "+"), "sd": _pm("sd", "sd_se")}
 _COVERED = {"covers 68 %": _percent("coverage_68"), "covers 95 %": _percent("coverage_95")}
 
@@ -108,5 +113,51 @@ _FORMS: dict[str, tuple[str, dict[str, Any]]] = {
             "found": _percent("found"),
             "wrongly named": _percent("wrongly_named"),
         },
+    ),
+    "plan_orders": (
+        "Orders (Table 1: figures beside the known ones)",
+        {
+            "laps": _plain("laps", "d"),
+            "Q": _inside("figures", "Q"),
+            "Q over known": _plain("Q over known"),
+            "farthest column": lambda found: str(found.get("farthest column", "")),
+            "its ratio": _plain("farthest ratio"),
+        },
+    ),
+    "plan_search": (
+        "Searched orders (Q at the best dwell of each)",
+        {
+            name: _inside("points", name)
+            for name in ("random", "cyclic", "natural", "searched", "laid out", "words")
+        },
+    ),
+    "plan_drift": (
+        "Drift variance, simulated over planned",
+        {"paths": _plain("nights", "d"), "ratio": _pm("ratio", "ratio_se")},
+    ),
+    "plan_dwell": (
+        "Dwell chosen from a pilot: what it loses in Q",
+        {
+            "pilots": _plain("nights", "d"),
+            "median": _percent("median"),
+            "90th percentile": _percent("ninety"),
+            "worst": _percent("worst"),
+        },
+    ),
+    "plan_ripple": (
+        "Ripples: null nights rejected at 5 %",
+        {
+            "nights": _plain("nights", "d"),
+            "without the measures": _percent("without"),
+            "with them": _percent("with"),
+        },
+    ),
+    "plan_nights": (
+        "Nights against their forecast",
+        {"nights": _plain("nights", "d"), "ratio": _pm("ratio", "ratio_se")},
+    ),
+    "plan_rehearsals": (
+        "Rehearsals against their forecast",
+        {"nights": _plain("nights", "d"), "ratio": _pm("ratio", "ratio_se")},
     ),
 }

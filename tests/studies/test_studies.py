@@ -10,7 +10,7 @@ from typing import Any
 import numpy as np
 import pytest
 
-from tests.studies import benches, exclusions, irregular, quality, zigzag
+from tests.studies import benches, exclusions, irregular, plans, quality, zigzag
 from tests.studies.__main__ import RESULTS, STUDIES, main, misses
 from tests.studies.bench import generator_of, night, reduced
 from tests.studies.sources import SOURCES
@@ -112,7 +112,7 @@ def test_the_tables_in_print_are_those_of_the_results() -> None:
     page = DEVELOPERS.read_text()
 
     known = {path.stem for path in RESULTS.glob("*.json")}
-    assert {"zigzag", "irregular", "benches", "exclusions", "quality"} <= known <= set(STUDIES)
+    assert known == {*STUDIES, *plans.STUDIES}
     assert between(page, text(RESULTS)) == page
 
 
