@@ -17,6 +17,7 @@ from daq.ports import AxisState, Clock, Counted, Devices, Sink
 from daq.records import Quality, Reading, Visit
 
 POLL_NS = 10_000_000
+PAUSE_STEP_NS = 1_000_000_000
 MOVE_GRACE_S = 10.0
 GATE_GRACE_S = 5.0
 UNPLANNED_BITS = {4: Quality.DARK, 5: Quality.FLANK}  # by reason (daq.records.REASONS)
@@ -62,10 +63,11 @@ Sensed = dict[str, dict[str, tuple[float, str, int]]]  # sensor -> quantity -> v
 
 @dataclass(frozen=True, slots=True)
 class _Arrival:
-    """A move under way: when it should be over, and until when it may last."""
+    """A move under way: when it should be over, until when it may last, when the pause after it ends."""
 
     due_ns: int
     limit_ns: int
+    rested_ns: int
 
 
 @dataclass(frozen=True, slots=True)
@@ -85,6 +87,7 @@ def perform(
     clock: Clock,
     becomes: Callable[[State], None] = lambda state: None,
     judge: Callable[[Reading], Reading] = lambda reading: reading,
+    patient: Callable[[], bool] = lambda: True,
 ) -> Iterator[tuple[int, Reading]]:
     """Yield (row, reading) for each visit, once the reading is durable.
 
@@ -97,6 +100,8 @@ def perform(
         Told of every state that the run enters.
     judge
         Adds to a reading's quality what the rules of the night say, before it is made durable.
+    patient
+        Asked every second of a pause; the pause is cut short when somebody waits for the run.
 
     Raises
     ------
@@ -113,6 +118,7 @@ def perform(
     arrival = _start_moves(planned[0], devices, clock)
     sensed: Sensed = {}
     while planned is not None:
+        _rest(arrival, clock, patient)
         gate = _open_gate(planned, arrival, devices, clock)
         becomes(State.COUNTING)
         _sense(devices, clock, sensed)
@@ -135,20 +141,26 @@ def _open_gate(planned: Planned, arrival: _Arrival, devices: Devices, clock: Clo
 
 
 def _start_moves(visit: Visit, devices: Devices, clock: Clock) -> _Arrival:
-    """Start the moves to a visit, and its pause; the detector stays where it is when it is there already."""
+    """Start the moves to a visit; the detector stays where it is when it is there already."""
     now_ns = clock.now_ns()
     predicted_s = devices.mask.show(visit.opening)
     if not math.isclose(devices.detector.state().position_mm, visit.position_mm, abs_tol=1e-6):
         predicted_s = max(predicted_s, devices.detector.start(visit.position_mm))
-    predicted_s += visit.pause_s
     due_ns = now_ns + round(predicted_s * 1e9)
-    return _Arrival(due_ns, due_ns + round((predicted_s + MOVE_GRACE_S) * 1e9))
+    rested_ns = now_ns + round((predicted_s + visit.pause_s) * 1e9)
+    return _Arrival(due_ns, rested_ns + round((predicted_s + MOVE_GRACE_S) * 1e9), rested_ns)
+
+
+def _rest(arrival: _Arrival, clock: Clock, patient: Callable[[], bool]) -> None:
+    """Wait until a move should be over, and then through the pause of its visit."""
+    clock.sleep_until(arrival.due_ns)
+    while clock.now_ns() < arrival.rested_ns and patient():
+        clock.sleep_until(min(clock.now_ns() + PAUSE_STEP_NS, arrival.rested_ns))
 
 
 def _await_arrival(
     visit: Visit, arrival: _Arrival, devices: Devices, clock: Clock
 ) -> Mapping[str, AxisState]:
-    clock.sleep_until(arrival.due_ns)
     axes = _axes(devices)
     while any(axis.moving for axis in axes.values()):
         if clock.now_ns() > arrival.limit_ns:

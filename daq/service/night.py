@@ -102,7 +102,15 @@ def _reaction(night: Night, error: DeviceError, tries: int, good_ns: int) -> tup
 
 def _readings(night: Night, place: Place) -> Iterator[Reading]:
     visits = supply(night.itinerary, place, lambda number: _may_go_on(night, number))
-    performed = perform(visits, night.devices, night.archive, night.clock, night.become, night.judge.judge)
+    performed = perform(
+        visits,
+        night.devices,
+        night.archive,
+        night.clock,
+        night.become,
+        night.judge.judge,
+        lambda: _patient(night),
+    )
     for _, reading in performed:
         if night.judge.finding:
             tell(night, "left out", text=night.judge.finding)
@@ -111,6 +119,7 @@ def _readings(night: Night, place: Place) -> Iterator[Reading]:
         night.on_visit(reading)
         if _ends_stand(night.itinerary, reading.visit):
             _keep_bench(night)
+            _tell_pause(night, reading.visit + 1)
         night.live.write(night.state.value, night.running)
         yield reading
 
@@ -126,6 +135,20 @@ def _may_go_on(night: Night, number: int) -> bool:
     if night.asked.end_after_lap and _begins_lap(night.itinerary, number):
         night.asked.end = True
     return not (night.asked.end or night.asked.hold or night.shortage())
+
+
+def _patient(night: Night) -> bool:
+    """Return whether a pause may go on; asked every second of it."""
+    _hear(night)
+    return not (night.asked.end or night.asked.end_after_lap or night.asked.hold)
+
+
+def _tell_pause(night: Night, number: int) -> None:
+    pause_s = night.itinerary.pauses.get(number, 0.0)
+    if pause_s:
+        tell(
+            night, "pause", text=f"A pause of {pause_s:.0f} s before the next pair, as planned.", visit=number
+        )
 
 
 def _stand_ns(night: Night, number: int) -> int:

@@ -1,4 +1,4 @@
-"""The lab book: `lab.sqlite`, where processes leave bookings, requests and armings for one another."""
+"""The lab book: `lab.sqlite`, where processes leave bookings, requests, armings and people."""
 
 from __future__ import annotations
 
@@ -12,6 +12,7 @@ from daq.errors import StorageError
 
 BOOK = "lab.sqlite"
 BUSY_S = 10.0
+VERSION = 2
 
 TABLES = """
 CREATE TABLE IF NOT EXISTS bookings (
@@ -23,14 +24,22 @@ CREATE TABLE IF NOT EXISTS starts (
   outcome TEXT NOT NULL, run TEXT, UNIQUE (booking, due_utc));
 CREATE TABLE IF NOT EXISTS requests (
   id INTEGER PRIMARY KEY, run TEXT NOT NULL, what TEXT NOT NULL, who TEXT NOT NULL, utc TEXT NOT NULL,
-  settled_utc TEXT, outcome TEXT);
+  settled_utc TEXT, outcome TEXT, about TEXT NOT NULL DEFAULT '');
 CREATE TABLE IF NOT EXISTS armings (
   id INTEGER PRIMARY KEY, file TEXT NOT NULL, sha256 TEXT NOT NULL, who TEXT NOT NULL, utc TEXT NOT NULL,
   expires_utc TEXT NOT NULL, used_utc TEXT);
 CREATE TABLE IF NOT EXISTS messages (
   id INTEGER PRIMARY KEY, utc TEXT NOT NULL, kind TEXT NOT NULL, subject TEXT NOT NULL, body TEXT NOT NULL,
   sent_utc TEXT, error TEXT);
+CREATE TABLE IF NOT EXISTS people (
+  id INTEGER PRIMARY KEY, name TEXT NOT NULL UNIQUE, role TEXT NOT NULL, hash TEXT NOT NULL,
+  since_utc TEXT NOT NULL);
+CREATE TABLE IF NOT EXISTS sessions (
+  id INTEGER PRIMARY KEY, token_sha256 TEXT NOT NULL UNIQUE, name TEXT NOT NULL, since_utc TEXT NOT NULL,
+  expires_utc TEXT NOT NULL);
 """
+# From version 1: `about`, what a request is about (the warning to acknowledge).
+UPGRADE = "ALTER TABLE requests ADD COLUMN about TEXT NOT NULL DEFAULT '';"
 
 
 @contextmanager
@@ -48,8 +57,7 @@ def lab_book(lab: Path) -> Iterator[sqlite3.Connection]:
         connection = sqlite3.connect(path, timeout=BUSY_S)
         connection.row_factory = sqlite3.Row
         try:
-            if not connection.execute("PRAGMA user_version").fetchone()[0]:
-                connection.executescript(TABLES + "PRAGMA user_version = 1;")
+            _bring_up(connection)
             with connection:
                 yield connection
         finally:
@@ -58,6 +66,19 @@ def lab_book(lab: Path) -> Iterator[sqlite3.Connection]:
         raise StorageError(
             str(error), where=str(path), remedy="Check that the lab folder is whole"
         ) from error
+
+
+def _bring_up(connection: sqlite3.Connection) -> None:
+    """Make the tables of this version, whatever is there already."""
+    (version,) = connection.execute("PRAGMA user_version").fetchone()
+    if version >= VERSION:
+        return
+    connection.execute("BEGIN IMMEDIATE")  # only one process does this
+    (version,) = connection.execute("PRAGMA user_version").fetchone()
+    steps = (UPGRADE if version == 1 else "", TABLES, f"PRAGMA user_version = {VERSION}")
+    for statement in ";".join(steps).split(";") if version < VERSION else ():
+        connection.execute(statement)
+    connection.commit()
 
 
 def insert(lab: Path, table: str, **fields: Any) -> int:

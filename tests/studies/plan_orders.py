@@ -19,6 +19,7 @@ from tests.studies.bench import generator_of
 from tests.studies.plan_bench import NATURAL, NIGHT_S, POSITIONS, Machine, Timed, pattern, q_of, timed
 
 HOUR_S = 3600.0
+KNOWN_PATHS, PATHS, AT_ONCE = 300, 4000, 100  # the known figures of the walk rest on 300 simulated paths
 MACHINE, DWELL_S, WALK = Machine(0.5, 0.2), 2.0, walk(0.03)
 FLICKER = Wander(relaxing=tuple((0.005**2, float(time_s)) for time_s in np.geomspace(3.0, 1e4, 10)))
 TIE = 0.01  # the known figures rest on 300 paths of the walk: Q is known to about this
@@ -69,18 +70,44 @@ def _row(of: Pattern, name: str, laps: int, known: tuple[float, ...], nights: in
         if value > 1 and column != "Q"
     }
     q_ratio = found["Q"] / known[-1]
+    simulated, simulated_se = _simulated(name, draws[0])
     return {
         "laps": laps,
         "figures": found,
         "Q with gates averaged": float(np.mean([q_of(of, draw, WALK, 1.0) for draw in draws])),
         "Q over known": q_ratio,
+        "known off": _known_errors(of, draws, found["Q"], known[-1]),
+        "simulated": simulated,
+        "simulated_se": simulated_se,
         "farthest ratio": max(ratios.values(), key=lambda ratio: abs(np.log(ratio)), default=1.0),
         "farthest column": max(ratios, key=lambda key: abs(np.log(ratios[key])), default=""),
         "meets": {
             "Q": abs(q_ratio - 1) <= 0.03,
+            "simulated": abs(simulated - 1) <= 3 * simulated_se,
             "columns": all(1 / 1.5 <= ratio <= 1.5 for ratio in ratios.values()),
         },
     }
+
+
+def _known_errors(of: Pattern, draws: list[Timed], found_q: float, known_q: float) -> float:
+    """Return how far a known Q lies off ours, in standard errors of the paths that it was drawn from."""
+    still_q = float(np.mean([q_of(of, draw, Wander(), 0.0) for draw in draws]))
+    return (known_q - found_q) / ((found_q - still_q) * (2 / KNOWN_PATHS) ** 0.5)
+
+
+def _simulated(name: str, draw: Timed) -> tuple[float, float]:
+    """Return the simulated variance of an order under the walk over ours, and its standard error."""
+    generator = generator_of("plan orders, paths", name)
+    middle_s = draw.start_s + draw.dwell_s / 2
+    step = np.sqrt(WALK.walk_per_s * np.diff(middle_s, prepend=middle_s[0]))
+    errors = np.concatenate(
+        [
+            np.cumsum(step * generator.standard_normal((AT_ONCE, step.size)), axis=1) @ draw.weight
+            for _ in range(PATHS // AT_ONCE)
+        ]
+    )
+    ratio = float(np.mean(errors**2)) / draw.drift_var(WALK, 0.0)
+    return ratio, ratio * (2 / PATHS) ** 0.5
 
 
 def _misplaced(name: str, rows: Mapping[str, Any]) -> list[str]:

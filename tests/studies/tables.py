@@ -120,6 +120,8 @@ _FORMS: dict[str, tuple[str, dict[str, Any]]] = {
             "laps": _plain("laps", "d"),
             "Q": _inside("figures", "Q"),
             "Q over known": _plain("Q over known"),
+            "known off by (its errors)": _plain("known off", "+.1f"),
+            "simulated over ours": _pm("simulated", "simulated_se"),
             "farthest column": lambda found: str(found.get("farthest column", "")),
             "its ratio": _plain("farthest ratio"),
         },

@@ -56,3 +56,14 @@ def test_a_rehearsal_of_words_nested_positions_flown_back_laps_take_up_and_pause
     assert (visits["use"].values == 1).all()
     assert estimate.pairs == 2
     assert estimate.visits == len(planned)
+
+
+def test_a_pause_is_cut_short_for_somebody_who_waits():
+    bench = MemoryBench(VirtualClock(origin_utc_ns=0))
+    visits = [(Visit(0, 1, 0.0, 2.0), 1, 0), (Visit(1, 3, 0.0, 2.0, pause_s=600.0), 1, 0)]
+    patience = iter([True, True, False])
+
+    performed = perform(visits, bench.devices, bench.sink, bench.clock, patient=lambda: next(patience, False))
+    first, second = (reading for _, reading in performed)
+
+    assert (second.gate_open_ns - first.gate_close_ns) / 1e9 == pytest.approx(bench.mask_move_s + 2.0)

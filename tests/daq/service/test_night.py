@@ -1,5 +1,6 @@
 import json
 from collections import Counter
+from dataclasses import replace
 
 import pytest
 
@@ -258,3 +259,22 @@ def test_the_feed_tells_the_run_as_it_stands(tmp_path):
     assert feed["ended"]["reason"] == COMPLETE
     assert feed["log"][0]["text"] == "Run begins at visit 0."
     assert len(json.dumps(feed)) < 20_000
+
+
+def test_a_request_cuts_a_pause_short_and_the_run_ends_after_the_stand_that_follows(tmp_path):
+    night, bench = a_night(tmp_path)
+    pause_ns = round(600e9)
+    night.itinerary = replace(night.itinerary, pauses={48: 600.0})
+    night.asked.requests = lambda: (
+        [Request(1, "end", "Kim", "2026-12-01T00:00:00Z")] if len(bench.sink.kept) == 48 else []
+    )
+
+    ended = carry_out(night, Place(0))
+
+    before, after = (reading for reading in bench.sink.kept if reading.visit in (47, 48))
+    assert ended == AT_REQUEST
+    assert [entry["text"] for entry in read_log(tmp_path) if entry["event"] == "pause"] == [
+        "A pause of 600 s before the next pair, as planned."
+    ]
+    assert after.gate_open_ns - before.gate_close_ns < pause_ns / 100
+    assert bench.sink.kept[-1].visit == 55
