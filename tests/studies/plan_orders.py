@@ -92,7 +92,7 @@ def _row(of: Pattern, name: str, laps: int, known: tuple[float, ...], nights: in
 def _known_errors(of: Pattern, draws: list[Timed], found_q: float, known_q: float) -> float:
     """Return how far a known Q lies off ours, in standard errors of the paths that it was drawn from."""
     still_q = float(np.mean([q_of(of, draw, Wander(), 0.0) for draw in draws]))
-    return (known_q - found_q) / ((found_q - still_q) * (2 / KNOWN_PATHS) ** 0.5)
+    return float((known_q - found_q) / ((found_q - still_q) * (2 / KNOWN_PATHS) ** 0.5))
 
 
 def _simulated(name: str, draw: Timed) -> tuple[float, float]:
