@@ -143,17 +143,21 @@ def build(
         When no simulated instrument understands the driver of a device.
     """
     tracks = {name: _track(axis.limits_mm, kept.get(name)) for name, axis in rig.axes.items()}
-    truth = Truth(rig, settings, seed, tracks, upsets.beam if upsets else None)
+    lights = (upsets.beam, upsets.to_monitor) if upsets else (None, None)
+    truth = Truth(rig, settings, seed, tracks, *lights)
 
-    def count(name: str, open_ns: int, close_ns: int) -> int:
-        counts = truth.counts(name, open_ns, close_ns)
+    def count(name: str, open_ns: int, close_ns: int, channel: int = 0) -> int:
+        counts = truth.counts(name, open_ns, close_ns, channel)
         return upsets.counted(name, open_ns, close_ns, counts) if upsets else counts
+
+    def counts(name: str, open_ns: int, close_ns: int) -> tuple[int, ...]:
+        return tuple(count(name, open_ns, close_ns, one) for one in range(rig.devices[name].channels))
 
     shutter = ShutterBox(clock)
     makers: Mapping[str, Callable[[str], Instrument]] = {
         "gcode-stage": lambda name: _controller(StageController, name, rig, tracks, clock),
         "scpi-stage": lambda name: _controller(partial(ScpiStage, name), name, rig, tracks, clock),
-        "scpi-counter": lambda name: GatedCounter(name, partial(count, name), settings.readout_s, clock),
+        "scpi-counter": lambda name: GatedCounter(name, partial(counts, name), settings.readout_s, clock),
         "scpi-totaliser-26": lambda name: Totaliser(name, partial(count, name), 26, clock),
         "scpi-totaliser-32": lambda name: Totaliser(name, partial(count, name), 32, clock),
         "scpi-frequency": lambda name: FrequencyMeter(name, partial(count, name), clock),
@@ -169,8 +173,14 @@ def build(
         for name, model in models.items()
         if model not in makers
     ]
-    if unknown:
-        raise DescriptionError(tuple(unknown))
+    unseen = [
+        f"rig {rig.name}, devices.{name}.channels: [bench.channels] says what {len(settings.channels)} of "
+        f"them see, not {entry.channels}. Add the others there."
+        for name, entry in rig.devices.items()
+        if entry.channels > len(settings.channels)
+    ]
+    if unknown or unseen:
+        raise DescriptionError((*unknown, *unseen))
     if "shutter" in models.values():
         truth.behind(shutter)
     instruments = {name: makers[model](name) for name, model in models.items()}

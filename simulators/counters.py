@@ -5,9 +5,11 @@ command                          does
 ===============================  =====================================================================
 ``CONFigure:TOTalize:TIMed s``   sets the width of the gate, 1e-6 .. 1e5 s (1 s after ``*RST``)
 ``CONFigure:TOTalize:TIMed?``    the width [s]
+``CONFigure:TOTalize:SLICes n``  divides every gate into n equal parts (at most 1000; 0 after ``*RST``)
 ``INITiate[:IMMediate]``         opens the gate now; -213 while one is open or being read out
-``FETCh?``                       number of the gate, counts, width [s], overflow (0, 1); ``BUSY`` until the
-                                 readout is over; -230 and no reply when there is nothing to fetch
+``FETCh?``                       number of the gate, width [s], overflow (0, 1), count of each channel, and that
+                                 of each channel in each part of the gate; ``BUSY`` until the readout
+                                 is over; -230 and no reply when there is nothing to fetch
 ``ABORt``                        closes the gate and forgets what it counted
 ``TOTalize:NUMBer?``             number of the last gate since power was switched on
 ``STATus:OPERation:CONDition?``  16 while the gate is open, 256 while it is read out
@@ -19,8 +21,9 @@ own, within the rules of SCPI-1999.
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Iterable
 from dataclasses import dataclass
+from itertools import pairwise
 
 from daq.ports import Clock
 from simulators.hosts import Send
@@ -33,6 +36,7 @@ MEASURING, READING_OUT = 16, 256
 CAPACITY = 2**32 - 1
 
 _NARROWEST_S, _WIDEST_S, _RESET_S = 1e-6, 1e5, 1.0
+_MOST_SLICES = 1000
 
 
 @dataclass(frozen=True, slots=True)
@@ -44,8 +48,11 @@ class Gate:
     close_ns: int
 
 
+Count = Callable[[int, int], tuple[int, ...]]
+
+
 class GatedCounter:
-    """A counter; `count` draws what a gate has counted, from its opening and its end [ns].
+    """A counter; `count` draws what each channel has counted, from opening and end of a gate or a part [ns].
 
     Attributes
     ----------
@@ -53,19 +60,21 @@ class GatedCounter:
         Told the number of every gate that opens.
     """
 
-    def __init__(self, name: str, count: Callable[[int, int], int], readout_s: float, clock: Clock) -> None:
+    def __init__(self, name: str, count: Count, readout_s: float, clock: Clock) -> None:
         self._count, self._readout_ns, self._clock = count, round(readout_s * NS), clock
         self._width_ns = round(_RESET_S * NS)
         self._gates = 0
         self.opened: Callable[[int], None] = lambda number: None
         self._gate: Gate | None = None
-        self._counted: int | None = None
+        self._slices = 0
+        self._counted: tuple[tuple[int, ...], ...] = ()  # by part of the gate
         status = Status(self._condition, lambda: bool(self._interpreter.responses))
         commands = {
             "*IDN?": Command(lambda: f"tercet simulators,gated counter,{name},1"),
             "*RST": Command(self._reset),
             "CONFigure:TOTalize:TIMed": Command(self._configure, (decimal,)),
             "CONFigure:TOTalize:TIMed?": Command(lambda: f"{self._width_ns / NS:.9f}"),
+            "CONFigure:TOTalize:SLICes": Command(self._divide, (decimal,)),
             "INITiate[:IMMediate]": Command(self._initiate),
             "FETCh?": Command(self._fetch),
             "ABORt": Command(self._abort),
@@ -92,13 +101,20 @@ class GatedCounter:
             raise FaultError(-221)
         self._width_ns = round(width_s * NS)
 
+    def _divide(self, parts: float) -> None:
+        if parts not in range(_MOST_SLICES + 1):
+            raise FaultError(-222)
+        if self._condition():
+            raise FaultError(-221)
+        self._slices = int(parts)
+
     def _initiate(self) -> None:
         if self._condition():
             raise FaultError(-213)
         self._gates += 1
         open_ns = self._clock.now_ns()
         self._gate = Gate(self._gates, open_ns, open_ns + self._width_ns)
-        self._counted = None
+        self._counted = ()
         self.opened(self._gates)
 
     def _fetch(self) -> str:
@@ -107,15 +123,22 @@ class GatedCounter:
         if self._condition():
             return "BUSY"
         gate = self._gate
-        if self._counted is None:
-            self._counted = self._count(gate.open_ns, gate.close_ns)
-        counts = self._counted
-        width_s = (gate.close_ns - gate.open_ns) / NS
-        return f"{gate.number},{min(counts, CAPACITY)},{width_s:.9f},{int(counts > CAPACITY)}"
+        if not self._counted:
+            self._counted = tuple(self._count(*part) for part in self._parts(gate))
+        counts = tuple(map(sum, zip(*self._counted, strict=True)))
+        numbers = [*counts, *(count for part in self._counted if self._slices for count in part)]
+        width_s, overflow = (gate.close_ns - gate.open_ns) / NS, int(max(counts) > CAPACITY)
+        return (
+            f"{gate.number},{width_s:.9f},{overflow},{','.join(str(min(one, CAPACITY)) for one in numbers)}"
+        )
+
+    def _parts(self, gate: Gate) -> Iterable[tuple[int, int]]:
+        parts, width_ns = max(self._slices, 1), gate.close_ns - gate.open_ns
+        return pairwise(gate.open_ns + width_ns * part // parts for part in range(parts + 1))
 
     def _abort(self) -> None:
         self._gate = None
 
     def _reset(self) -> None:
         self._abort()
-        self._width_ns = round(_RESET_S * NS)
+        self._width_ns, self._slices = round(_RESET_S * NS), 0

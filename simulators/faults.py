@@ -14,6 +14,7 @@ kind                                        does, once it is due
 ``overflow``                                the next gate of the counter ``device`` overflows
 ``saturation``                              ``device`` counts no more than ``rate_hz``, for ``seconds``
 ``beam-off beam-step``                      no light for ``seconds``; ``factor`` times the light from then on
+``monitor-lost``                            no light at the monitor channels for ``seconds``
 ``trip``                                    the pressure at the gauge ``device`` is ``factor`` times higher
 ``clock-step``                              UTC jumps by ``step_s``
 ==========================================  ==============================================================
@@ -42,7 +43,8 @@ from simulators.motion import NS
 Positive = Annotated[float, Field(gt=0)]
 Kind = Literal[
     "silent", "half", "garbage", "double", "late", "nak",
-    "drop", "alarm", "stall", "slip", "overflow", "saturation", "beam-off", "beam-step", "trip", "clock-step",
+    "drop", "alarm", "stall", "slip", "overflow", "saturation", "beam-off", "beam-step",
+    "monitor-lost", "trip", "clock-step",
 ]  # fmt: skip
 
 REPLY_KINDS = frozenset({"silent", "half", "garbage", "double", "late", "nak"})
@@ -52,7 +54,7 @@ _NEEDS: Mapping[str, tuple[str, ...]] = {
     "stall": ("axis",),
     "slip": ("axis", "size_mm"),
     "saturation": ("device", "seconds", "rate_hz"),
-    "beam-off": ("seconds",),
+    **dict.fromkeys(("beam-off", "monitor-lost"), ("seconds",)),
     "beam-step": ("factor",),
     "trip": ("device", "seconds", "factor"),
     "clock-step": ("step_s",),

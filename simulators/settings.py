@@ -2,11 +2,11 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from datetime import datetime
 from typing import Annotated, Literal
 
-from pydantic import AwareDatetime, Field, ValidationError
+from pydantic import AwareDatetime, Field, ValidationError, model_validator
 
 from daq.description import Rig
 from daq.description.problems import Table, every_problem
@@ -35,6 +35,20 @@ class SourceSettings(Table):
     random_walk_per_sqrt_hour: Annotated[float, Field(ge=0, le=10)] = 0.0
 
 
+class ChannelSettings(Table):
+    """What a channel of the counter sees.
+
+    "detector": `share` of the light behind the mask, and dark counts; "monitor": `rate_hz` times the strength
+    of the source, before mask and shutter; "coincidence": `share` of the light whose twin was seen too, and
+    accidental ones of channels 1 and 2 within `window_s`.
+    """
+
+    sees: Literal["detector", "monitor", "coincidence"] = "detector"
+    share: Annotated[float, Field(ge=0, le=1)] = 1.0
+    rate_hz: _Rate = 0.0
+    window_s: _Small = 0.0
+
+
 class Settings(Table):
     """The simulated truth."""
 
@@ -48,7 +62,15 @@ class Settings(Table):
     dead_time_kind: Literal["non-paralysable", "paralysable"] = "non-paralysable"
     readout_s: Annotated[float, Field(ge=0, le=3600)] = 0.0
     source: SourceSettings = SourceSettings()
+    channels: Annotated[Sequence[ChannelSettings], Field(min_length=1)] = (ChannelSettings(),)
     instruments: Mapping[str, Model] = {}
+
+    @model_validator(mode="after")
+    def _twins_have_singles(self) -> Settings:
+        pairs = [place for place, one in enumerate(self.channels) if one.sees == "coincidence"]
+        if pairs and (pairs != [0] or len(self.channels) < 3):
+            raise ValueError("channel 0 alone sees coincidences, those of channels 1 and 2")
+        return self
 
 
 def read_settings(rig: Rig) -> Settings:

@@ -14,7 +14,7 @@ from simulators.detector import draw_counts
 from simulators.draws import generator
 from simulators.motion import NS, Track
 from simulators.optics import intensity
-from simulators.settings import Settings
+from simulators.settings import ChannelSettings, Settings
 from simulators.source import Factor, RandomWalk, linear, mean_relative
 
 _MOVING_PARTS = 64  # parts into which a gate is cut while an axis moves
@@ -31,16 +31,24 @@ class Truth:
         Of the source's walk and of every count.
     tracks
         The axes by their names in the rig.
-    beam
-        What injected faults do to the light.
+    beam, to_monitor
+        What injected faults do to the light of the source, and to what of it the monitor sees.
     """
 
     def __init__(
-        self, rig: Rig, settings: Settings, seed: int, tracks: Mapping[str, Track], beam: Factor | None = None
+        self,
+        rig: Rig,
+        settings: Settings,
+        seed: int,
+        tracks: Mapping[str, Track],
+        beam: Factor | None = None,
+        to_monitor: Factor | None = None,
     ) -> None:
         self._rig, self._settings, self._seed = rig, settings, seed
         self._mask, self._detector = tracks[rig.mask.axis], tracks[rig.detector.axis]
         self._source = _factors(settings, seed) + (() if beam is None else (beam,))
+        self._to_monitor = self._source + (() if to_monitor is None else (to_monitor,))
+        self._to_mask = self._source
         self._places = {opening: rig.mask_at_mm(opening) for opening in rig.opening_masks}
         self._mask_tolerance_mm = rig.axes[rig.mask.axis].tolerance_mm
         first = rig.slits["A"]
@@ -49,21 +57,34 @@ class Truth:
         self._light = lru_cache(maxsize=65_536)(self._light_hz)
 
     def behind(self, factor: Factor) -> None:
-        """Put something into the beam that takes light away as a function of time."""
-        self._source = (*self._source, factor)
+        """Put something between source and mask that takes light away as a function of time."""
+        self._to_mask = (*self._source, factor)
 
     def rates_hz(self, openings: Sequence[int], positions_mm: Sequence[float]) -> NDArray[np.float64]:
-        """Return pattern, background and dark counts, position by opening [1/s]: no drift, no dead time."""
+        """Return what channel 0 detects, position by opening [1/s]: no drift, dead time or chance pairs."""
         light = [[self._light(opening, place) for opening in openings] for place in positions_mm]
-        return np.array(light).reshape(len(positions_mm), len(openings)) + self._settings.dark_rate_hz
+        first = self._settings.channels[0]
+        dark_hz = self._settings.dark_rate_hz if first.sees == "detector" else 0.0
+        return first.share * np.array(light).reshape(len(positions_mm), len(openings)) + dark_hz
 
-    def counts(self, device: str, open_ns: int, close_ns: int) -> int:
-        """Return what a gate of a device has counted, the same whenever it is asked for."""
+    def counts(self, device: str, open_ns: int, close_ns: int, channel: int = 0) -> int:
+        """Return what a gate of a device has counted in a channel, the same whenever it is asked for."""
         gate_s = (close_ns - open_ns) / NS
-        rate_hz = self._settings.dark_rate_hz + self._mean_light_hz(open_ns, close_ns)
-        random = generator(self._seed, device, open_ns)
+        rate_hz = self._channel_hz(self._settings.channels[channel], open_ns, close_ns)
+        random = generator(self._seed, f"{device}/{channel}" if channel else device, open_ns)
         settings = self._settings
         return draw_counts(rate_hz, gate_s, settings.dead_time_s, settings.dead_time_kind, random)
+
+    def _channel_hz(self, channel: ChannelSettings, open_ns: int, close_ns: int) -> float:
+        """Return the mean rate of events at a channel over a gate [1/s]."""
+        if channel.sees == "monitor":
+            return channel.rate_hz * mean_relative(self._to_monitor, open_ns / NS, close_ns / NS)
+        light_hz = channel.share * self._mean_light_hz(open_ns, close_ns)
+        if channel.sees == "detector":
+            return light_hz + self._settings.dark_rate_hz
+        signal, idler = self._settings.channels[1:3]
+        singles = [self._channel_hz(one, open_ns, close_ns) for one in (signal, idler)]
+        return light_hz + channel.window_s * singles[0] * singles[1]
 
     def shown(self, mask_mm: float) -> int | None:
         """Return the opening that the mask shows at a place, or None between openings, where all is dark."""
@@ -92,7 +113,7 @@ class Truth:
             yield from pairwise(start_ns + (stop_ns - start_ns) * part // parts for part in range(parts + 1))
 
     def _strength(self, start_ns: int, stop_ns: int) -> float:
-        return mean_relative(self._source, start_ns / NS, stop_ns / NS)
+        return mean_relative(self._to_mask, start_ns / NS, stop_ns / NS)
 
     def _light_hz(self, opening: int, position_mm: float) -> float:
         slits = [(slit.centre_m, slit.width_m) for slit in self._rig.slits_of(opening).values()]

@@ -65,7 +65,7 @@ class Upsets:
     """
 
     def __init__(self, clock: Clock, step_utc: Callable[[int], None] = lambda by_ns: None) -> None:
-        self.beam = Beam()
+        self.beam, self.to_monitor = Beam(), Beam()
         self.faults: Faults | None = None
         self._clock, self._step_utc = clock, step_utc
         self._saturated: list[tuple[str, float, int]] = []
@@ -87,6 +87,7 @@ class Upsets:
             ),
             "saturation": self._saturate,
             "beam-off": lambda fault: self.beam.block(self._now_s(), fault.seconds or 0.0),
+            "monitor-lost": lambda fault: self.to_monitor.block(self._now_s(), fault.seconds or 0.0),
             "beam-step": lambda fault: self.beam.step(self._now_s(), fault.factor or 0.0),
             "trip": lambda fault: _raise(instruments[fault.target], fault),
             "clock-step": lambda fault: self._step_utc(round((fault.step_s or 0.0) * NS)),

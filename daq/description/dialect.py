@@ -110,6 +110,11 @@ class Dialect(Table):
         """What the counter is."""
         return self.counter or CounterWords()
 
+    @property
+    def gives_slices(self) -> bool:
+        """Whether the reply to a counter's fetch holds the parts of the gate."""
+        return "slices" in groups_of(self.command["fetch"].reply or "") if "fetch" in self.command else False
+
     def _table_problems(self) -> Iterator[tuple[str, str]]:
         wanted = list(_WANTED[self.kind])
         if self.kind == "stage" and self.axis_words.home_required:

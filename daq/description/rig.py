@@ -124,6 +124,7 @@ class DeviceEntry(Table):
     readout_s: NotNegative = 0.0
     shortest_gate_s: NotNegative = 0.0
     channels: Annotated[int, Field(ge=1, le=64)] = 1
+    slices: Annotated[int, Field(ge=0, le=1000)] = 0
     unit: Annotated[int, Field(ge=0, le=247)] = 1
     registers: Mapping[str, Register] = {}
     late_s: NotNegative = 1.5
@@ -191,6 +192,12 @@ class Rig(Table):
                 )
 
     def _dialect_problems(self) -> Iterator[tuple[str, str]]:
+        for name, device in self.devices.items():
+            if device.slices and device.dialect is not None and not device.dialect.gives_slices:
+                yield (
+                    f"devices.{name}.slices",
+                    f"dialect {device.dialect.name!r} has no group 'slices' in command.fetch.reply",
+                )
         for name, axis in self.axes.items():
             entry = self.devices.get(axis.device)
             if entry is None or entry.dialect is None:
@@ -270,6 +277,11 @@ class Rig(Table):
     def readout_s(self) -> float:
         """The longest readout of a device between two gates [s]."""
         return max((entry.readout_s for entry in self.devices.values()), default=0.0)
+
+    @property
+    def slices(self) -> int:
+        """Into how many equal parts the counter divides a gate, 0 when it does not."""
+        return max((entry.slices for entry in self.devices.values()), default=0)
 
     @property
     def shortest_gate_s(self) -> float:

@@ -3,9 +3,11 @@
 from __future__ import annotations
 
 import math
+import re
 
 from daq.description.rig import DeviceEntry, Rig
 from daq.devices.links import Link
+from daq.devices.slices import adds_up, in_slices, whole_numbers
 from daq.devices.wire import Wire
 from daq.errors import DeviceError
 from daq.ports import Clock, Counted
@@ -13,7 +15,11 @@ from daq.ports import Clock, Counted
 MEASURING = 16  # SCPI-1999, vol. 1, sect. 9: bit 4 of the operation status register
 
 _ARMED = r'(?P<error>[+-]?\d+),"(?P<text>[^"]*)";(?P<gate>\d+)'
-_FETCHED = r"BUSY|(?P<gate>\d+),(?P<counts>\d+),(?P<width>\d+\.\d{9}),(?P<overflow>[01])"
+_FETCHED = (
+    r"BUSY|(?P<gate>\d+),(?P<width>\d+\.\d{{9}}),(?P<overflow>[01])"
+    r"(?P<counts>(?:,\d+){{{channels}}})(?P<slices>(?:,\d+){{{sliced}}})"
+)
+_DIGITS = 12  # of a count and its comma, at most
 _POLL_S = 0.01
 
 
@@ -34,8 +40,11 @@ class ScpiCounter:
 
     def __init__(self, name: str, entry: DeviceEntry, clock: Clock) -> None:
         self.name = name
-        self._clock, self._readout_s, self._patience_s = clock, entry.readout_s, entry.timeout_s
-        self._link = Link(clock, entry.address, Wire(timeout_s=entry.timeout_s), name)
+        self._clock, self._entry = clock, entry
+        sliced = entry.slices * entry.channels
+        self._fetched = re.compile(_FETCHED.format(channels=entry.channels, sliced=sliced))
+        most_bytes = 256 + _DIGITS * (entry.channels + sliced)
+        self._link = Link(clock, entry.address, Wire(timeout_s=entry.timeout_s, most_bytes=most_bytes), name)
         self._gate: int | None = None  # its number, once the counter has said that it is open
         self._ready_ns = 0
 
@@ -45,10 +54,11 @@ class ScpiCounter:
         return (cls(name, rig.devices[name], clock),)
 
     def open(self) -> None:
-        """Open the link and bring the counter into its reset state, its error queue empty."""
+        """Open the link, bring the counter into its reset state, and say how a gate is divided."""
         self._gate = None
         self._link.open()
-        self._link.ask("*RST;*CLS;:SYST:ERR?", r'[+-]?0,"No error"', safe_to_repeat=True)
+        divided = f":CONF:TOT:SLIC {self._entry.slices};" if self._entry.slices else ""
+        self._link.ask(f"*RST;*CLS;{divided}:SYST:ERR?", r'[+-]?0,"No error"', safe_to_repeat=True)
 
     def close(self) -> None:
         """Let the link go; never raises."""
@@ -74,7 +84,7 @@ class ScpiCounter:
             self._link.tell("ABOR;*CLS")
             raise self._error(f"it did not open a gate of {dwell_s:g} s: {armed['text']}")
         self._gate = int(armed["gate"])
-        self._ready_ns = self._clock.now_ns() + round((dwell_s + self._readout_s) * 1e9)
+        self._ready_ns = self._clock.now_ns() + round((dwell_s + self._entry.readout_s) * 1e9)
 
     def busy(self) -> bool:
         """Return whether the gate is still open."""
@@ -92,25 +102,28 @@ class ScpiCounter:
         if self._gate is None:
             raise self._error("there is no gate to read: none was armed, or its arming was in doubt")
         self._clock.sleep_until(self._ready_ns)
-        fetched = self._link.ask(":FETC?", _FETCHED, safe_to_repeat=True)
+        fetched = self._fetch()
         while fetched["gate"] is None:
-            if self._clock.now_ns() > self._ready_ns + self._patience_s * 1e9:
+            if self._clock.now_ns() > self._ready_ns + self._entry.timeout_s * 1e9:
                 raise self._error("its readout does not end", kind="timeout")
             self._clock.sleep_until(self._clock.now_ns() + round(_POLL_S * 1e9))
-            fetched = self._link.ask(":FETC?", _FETCHED, safe_to_repeat=True)
+            fetched = self._fetch()
         if int(fetched["gate"]) != self._gate:
             what = f"it gave the count of gate {fetched['gate']} and not of gate {self._gate}"
             raise self._error(what, kind="garbage")
-        return Counted(
-            values=(int(fetched["counts"]),),
-            live_s=float(fetched["width"]),
-            overflow=fetched["overflow"] == "1",
-        )
+        values, overflow = whole_numbers(fetched["counts"]), fetched["overflow"] == "1"
+        slices = in_slices(whole_numbers(fetched["slices"]), len(values))
+        if not (overflow or adds_up(values, slices)):
+            raise self._error("the parts of its gate do not add up to the count", kind="garbage")
+        return Counted(values, live_s=float(fetched["width"]), overflow=overflow, slices=slices)
 
     def abort(self) -> None:
         """Close the gate and forget what it counted."""
         self._gate = None
         self._link.tell("ABOR")
+
+    def _fetch(self) -> re.Match[str]:
+        return self._link.ask(":FETC?", self._fetched, safe_to_repeat=True)
 
     def _error(self, what: str, kind: str = "refused") -> DeviceError:
         remedy = "The stand is repeated; if it happens again, look at the counter"

@@ -7,6 +7,7 @@ import re
 
 from daq.description.rig import DeviceEntry
 from daq.devices.rollover import counted_between, longest_s
+from daq.devices.slices import Slices, adds_up, in_slices, whole_numbers
 from daq.devices.spoken import Spoken, number
 from daq.errors import DeviceError
 from daq.ports import Clock, Counted
@@ -153,12 +154,21 @@ class DialectCounter:
             values = [value * live_s for value in values]
         if not all(math.isfinite(value) and value >= 0 for value in (*values, live_s)):
             raise self._error(f"{fetched[0]!r} is no count", kind="garbage")
-        return Counted(
-            values=self._channels([round(value) for value in values]),
-            live_s=live_s,
-            overflow=self._spoken.holds("fetch", "overflow_when", fetched),
-            own_live_time=live is not None,
-        )
+        whole = self._channels([round(value) for value in values])
+        overflow = self._spoken.holds("fetch", "overflow_when", fetched)
+        slices = self._slices(fetched, whole, overflow)
+        return Counted(whole, live_s, overflow, own_live_time=live is not None, slices=slices)
+
+    def _slices(self, fetched: re.Match[str], values: tuple[int, ...], overflow: bool) -> Slices | None:
+        """Return the parts of the gate, which add up to its count unless it overflowed."""
+        numbers = whole_numbers(fetched.groupdict().get("slices") or "")
+        wanted = self._entry.slices
+        if len(numbers) != wanted * len(values):
+            raise self._error(f"it gave {len(numbers)} numbers and not {wanted} slices", kind="garbage")
+        slices = in_slices(numbers, len(values))
+        if not (overflow or adds_up(values, slices)):
+            raise self._error("the parts of its gate do not add up to the count", kind="garbage")
+        return slices
 
     def _look(self, dwell_s: float) -> tuple[int, tuple[int, ...]]:
         """Return when the totals were read, and the totals; raises when that moment is in doubt."""

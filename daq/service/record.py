@@ -42,6 +42,7 @@ def record_of(
         "axes": [rig.mask.axis, rig.detector.axis],
         "sensors": _sensors(devices),
         "channels": max(entry.channels for entry in rig.devices.values()),
+        "slices": rig.slices,
         "counting": settings.counting,
         "fano": settings.fano,
         "monitor_channel": settings.monitor_channel,

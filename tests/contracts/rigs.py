@@ -44,6 +44,13 @@ def words() -> Rig:
     return _rig(table)
 
 
+def sliced() -> Rig:
+    """Return the Lantern rig with a monitor beside the detector, and gates in ten parts."""
+    sees = [{"sees": "detector"}, {"sees": "monitor", "rate_hz": 1e5}]
+    table = changed(rig_table(), devices__counter__channels=2, devices__counter__slices=10)
+    return _rig(changed(table, bench__channels=sees))
+
+
 _REGISTERS = {
     "temperature": {"at": 0, "unit": "K", "factor": 0.01},
     "pressure": {"at": 2, "kind": "f32", "unit": "Pa"},
@@ -62,4 +69,4 @@ def scpi() -> Rig:
     return _rig(table)
 
 
-RIGS = {"lantern": lantern, "words": words, "scpi": scpi}
+RIGS = {"lantern": lantern, "sliced": sliced, "words": words, "scpi": scpi}

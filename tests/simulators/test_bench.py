@@ -161,3 +161,16 @@ def test_a_rig_without_a_bench_cannot_be_simulated() -> None:
 def test_a_device_that_no_instrument_stands_for_is_named() -> None:
     with pytest.raises(DescriptionError, match=r"devices\.room\.driver: no simulated instrument .* 'modbus'"):
         open_bench(lantern_rig(devices__room__driver="modbus"), seed=None, transport="direct", state=None)
+
+
+def test_a_channel_of_which_the_bench_says_nothing_is_named() -> None:
+    with pytest.raises(
+        DescriptionError, match=r"devices\.counter\.channels: \[bench\.channels\] says what 1 of"
+    ):
+        open_bench(lantern_rig(devices__counter__channels=2), seed=1, transport="direct", state=None)
+
+
+@pytest.mark.parametrize("sees", [[{"sees": "coincidence"}], [{}, {"sees": "coincidence"}, {}]])
+def test_coincidences_need_their_singles(sees: list[dict[str, str]]) -> None:
+    with pytest.raises(DescriptionError, match="channel 0 alone sees coincidences"):
+        open_bench(lantern_rig(bench__channels=sees), seed=1, transport="direct", state=None)

@@ -9,11 +9,13 @@ from typing import Any, Literal
 
 import pytest
 
+from daq.description import Rig
 from daq.devices.registry import open_devices
 from daq.errors import DescriptionError, DeviceError
 from daq.ports import Devices
 from simulators.bench import WaveletBench, open_bench
 from simulators.counters import CAPACITY
+from tests.contracts.rigs import sliced
 from tests.examples import CONFIGS, lantern_rig
 
 S = 1_000_000_000
@@ -22,10 +24,13 @@ ABC = 7
 
 @contextmanager
 def faulty(
-    *faults: dict[str, Any], seed: int = 1, transport: Literal["tcp", "direct"] = "direct"
+    *faults: dict[str, Any],
+    seed: int = 1,
+    transport: Literal["tcp", "direct"] = "direct",
+    rig: Rig | None = None,
 ) -> Iterator[tuple[WaveletBench, Devices]]:
     """Give a homed bench at 100 s, the mask at ABC, with a fault script."""
-    rig = lantern_rig()
+    rig = rig or lantern_rig()
     script = {"seed": seed, "fault": list(faults)}
     bench = open_bench(rig, seed=1, transport=transport, state=None, faults=script)
     with open_devices(rig, bench.clock) as devices:
@@ -257,3 +262,27 @@ def test_a_seed_fixes_every_fault_and_every_count_on_both_transports() -> None:
     assert many > 100
     assert rough(5, "tcp")[0] == first
     assert rough(6, "direct")[0] != first
+
+
+def test_a_lost_monitor_counts_nothing_until_it_comes_back() -> None:
+    fault = {"kind": "monitor-lost", "at_s": 110.0, "seconds": 5.0}
+    with faulty(fault, rig=sliced()) as (bench, devices):
+        bench.clock.sleep_until(111 * S)
+        devices.counter.arm(1.0)
+        lost = devices.counter.read()
+        bench.clock.sleep_until(116 * S)
+        devices.counter.arm(1.0)
+        back = devices.counter.read()
+
+    assert lost.values[0] > 0 and lost.values[1] == 0
+    assert back.values[1] > 90_000
+
+
+def test_light_that_goes_away_within_a_gate_shows_in_its_parts() -> None:
+    with faulty({"kind": "beam-off", "at_s": 110.0, "seconds": 0.5}, rig=sliced()) as (bench, devices):
+        bench.clock.sleep_until(109_750_000_000)
+        devices.counter.arm(1.0)
+        counted = devices.counter.read()
+
+    parts = [part[0] for part in counted.slices or ()]
+    assert max(parts[4:7]) < 100 < min(*parts[:2], *parts[8:])

@@ -24,15 +24,30 @@ class Bench:
         self.session = GatedCounter("counter", self._count, 0.1, self.clock).session(lambda data: None)
         self.ask("*CLS")
 
-    def _count(self, open_ns: int, close_ns: int) -> int:
+    def _count(self, open_ns: int, close_ns: int) -> tuple[int, ...]:
         self.drawn.append((open_ns, close_ns))
-        return self._rate_hz * (close_ns - open_ns) // S
+        return (self._rate_hz * (close_ns - open_ns) // S,)
 
     def ask(self, line: str) -> str:
         return self.session.feed(line.encode() + b"\n").decode().removesuffix("\n")
 
     def wait(self, seconds: float) -> None:
         self.clock.sleep_until(self.clock.now_ns() + round(seconds * S))
+
+
+def test_a_divided_gate_gives_the_count_of_every_part() -> None:
+    bench = Bench()
+    assert bench.ask("CONF:TOT:SLIC 4;:SYST:ERR?") == '0,"No error"'
+    bench.ask("CONF:TOT:TIM 2;:INIT")
+
+    bench.wait(2.1)
+
+    assert bench.ask("FETC?") == "1,2.000000000,0,2000,500,500,500,500"
+
+
+@pytest.mark.parametrize("parts", ["-1", "2.5", "1001"])
+def test_a_gate_is_divided_into_whole_parts_only(parts: str) -> None:
+    assert Bench().ask(f"CONF:TOT:SLIC {parts};:SYST:ERR?") == '-222,"Data out of range"'
 
 
 def test_a_gate_counts_for_its_width_then_reads_out_then_gives_its_count() -> None:
@@ -46,8 +61,8 @@ def test_a_gate_counts_for_its_width_then_reads_out_then_gives_its_count() -> No
     bench.wait(2.2)
     assert [bench.ask("STAT:OPER:COND?"), bench.ask("FETC?")] == ["256", "BUSY"]
     bench.wait(0.1)
-    assert [bench.ask("STAT:OPER:COND?"), bench.ask("FETC?")] == ["0", "1,2200,2.200000000,0"]
-    assert bench.ask("FETC?") == "1,2200,2.200000000,0"
+    assert [bench.ask("STAT:OPER:COND?"), bench.ask("FETC?")] == ["0", "1,2.200000000,0,2200"]
+    assert bench.ask("FETC?") == "1,2.200000000,0,2200"
     assert bench.drawn == [(5 * S, 5 * S + 2_200_000_000)]
 
 
@@ -75,7 +90,7 @@ def test_a_full_register_says_so() -> None:
     bench.ask("CONF:TOT:TIM 500;:INIT")
     bench.wait(500.1)
 
-    assert bench.ask("FETC?") == f"1,{CAPACITY},500.000000000,1"
+    assert bench.ask("FETC?") == f"1,500.000000000,1,{CAPACITY}"
 
 
 def test_headers_have_a_short_and_a_long_form_and_optional_nodes() -> None:
@@ -165,7 +180,7 @@ def test_errors_come_out_in_the_order_they_went_in_and_a_full_queue_says_so() ->
 
 
 def test_power_on_is_reported_once() -> None:
-    counter = GatedCounter("counter", lambda open_ns, close_ns: 0, 0.0, VirtualClock(0))
+    counter = GatedCounter("counter", lambda open_ns, close_ns: (0,), 0.0, VirtualClock(0))
     session = counter.session(lambda data: None)
 
     assert session.feed(b"*ESR?;*ESR?\n") == b"128;0\n"

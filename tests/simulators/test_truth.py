@@ -168,3 +168,43 @@ def test_dead_time_takes_its_share() -> None:
 
     # narrower than Poisson, so four of its standard errors are more than enough
     assert within(bench.counts(100, 2.2), 2.2 * true_hz / (1 + true_hz * 1e-6))
+
+
+def _channels(*sees: dict[str, Any]) -> dict[str, Any]:
+    return {"bench__channels": list(sees)}
+
+
+def _mean(bench: Bench, channel: int, gates: int = 50) -> list[int]:
+    return [bench.truth.counts("counter", (1000 + n) * S, (1001 + n) * S, channel) for n in range(gates)]
+
+
+def test_a_monitor_sees_the_source_and_neither_mask_nor_shutter() -> None:
+    bench = Bench(**_channels({}, {"sees": "monitor", "rate_hz": 1e5}))
+    bench.mask.go(0, 3.0, 10.0)  # between two openings
+    bench.truth.behind(np.zeros_like)
+
+    assert within(_mean(bench, 1), 1e5)
+    assert within(_mean(bench, 0), 50.0)
+
+
+def test_a_monitor_drifts_with_the_source() -> None:
+    drifting: dict[str, Any] = {"bench__source__linear_per_hour": -0.36}
+    bench = Bench(**drifting, **_channels({}, {"sees": "monitor", "rate_hz": 1e5}))
+
+    assert within(_mean(bench, 1), 1e5 * (1 - 0.36 * 1025 / 3600))
+
+
+def test_coincidences_are_twins_and_chance_pairs() -> None:
+    singles = ({"sees": "detector"}, {"sees": "monitor", "rate_hz": 1e5})
+    bench = Bench(**_channels({"sees": "coincidence", "share": 0.1, "window_s": 1e-6}, *singles))
+    ((twins_hz,),) = bench.truth.rates_hz([ABC], [0.0]).tolist()
+    ((signal_hz,),) = Bench().truth.rates_hz([ABC], [0.0]).tolist()
+
+    assert twins_hz == pytest.approx(0.1 * (signal_hz - 50))
+    assert within(_mean(bench, 0), twins_hz + 1e-6 * signal_hz * 1e5)
+
+
+def test_channels_draw_their_own_counts() -> None:
+    bench = Bench(**_channels({}, {}))
+
+    assert _mean(bench, 0) != _mean(bench, 1)

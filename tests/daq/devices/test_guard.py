@@ -50,7 +50,7 @@ class Bench:
         travel = {letter: Travel((-15.0, 20.0), 32.0) for letter in "XY"}
         self.stages = Stops(StageController(tracks, travel, clock))
         others: list[Instrument] = [
-            GatedCounter("counter", lambda open_ns, close_ns: 1, 0.1, clock),
+            GatedCounter("counter", lambda open_ns, close_ns: (1,), 0.1, clock),
             RoomSensor("room", clock),
         ]
         ports: list[Port] = [stack.enter_context(on_port(kind, self.stages, folder))]
