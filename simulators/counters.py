@@ -7,9 +7,9 @@ command                          does
 ``CONFigure:TOTalize:TIMed?``    the width [s]
 ``CONFigure:TOTalize:SLICes n``  divides every gate into n equal parts (at most 1000; 0 after ``*RST``)
 ``INITiate[:IMMediate]``         opens the gate now; -213 while one is open or being read out
-``FETCh?``                       number of the gate, width [s], overflow (0, 1), count of each channel, and that
-                                 of each channel in each part of the gate; ``BUSY`` until the readout
-                                 is over; -230 and no reply when there is nothing to fetch
+``FETCh?``                       number of the gate, width [s], overflow (0, 1), counts by channel, then by
+                                 part of the gate and channel; ``BUSY`` until the readout is over; -230 and
+                                 no reply when there is nothing to fetch
 ``ABORt``                        closes the gate and forgets what it counted
 ``TOTalize:NUMBer?``             number of the last gate since power was switched on
 ``STATus:OPERation:CONDition?``  16 while the gate is open, 256 while it is read out
