@@ -72,14 +72,14 @@ class _ModbusSession:
         if len(frame) < 8:
             self._rest = frame
             return b""
-        if _crc(frame[:6]) != frame[6:] or frame[0] != self._room.unit:
+        if crc16(frame[:6]) != frame[6:] or frame[0] != self._room.unit:
             return b""  # as on a line: who is not meant, or did not understand, says nothing
         answer = frame[:1] + self._room.answer(frame[1:6])
-        return answer + _crc(answer)
+        return answer + crc16(answer)
 
 
-def _crc(data: bytes) -> bytes:
-    """Return the CRC as it is sent, by long division (the driver's is written another way)."""
+def crc16(data: bytes) -> bytes:
+    """Return the CRC as it is sent, by long division (the driver's is a library's)."""
     rest = 0xFFFF
     for bit in (byte >> place & 1 for byte in data for place in range(8)):
         rest = rest >> 1 ^ 0xA001 * ((rest ^ bit) & 1)

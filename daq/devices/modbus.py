@@ -1,19 +1,27 @@
 """Modbus: registers of a sensor, over TCP (numbered questions) or a serial line (checked by a CRC).
 
-Written here and not taken from a library, because it then runs on the run clock, virtual or real, over every
-kind of link, and fails in the three ways that the rest of the program knows.
+Frames, refusals and numbers are pymodbus's; the bytes go over our own clock, virtual or real, over every kind
+of link, and fail in the three ways that the rest of the program knows: its clients wait on a clock of their
+own.
 
 References
 ----------
-.. [1] MODBUS Application Protocol Specification V1.1b3, sect. 4, 6.3, 6.4 and 7; from memory.
+.. [1] MODBUS Application Protocol Specification V1.1b3, sect. 4, 6.3, 6.4 and 7.
 .. [2] MODBUS over Serial Line V1.02, sect. 6.2.2 (CRC).
 """
 
 from __future__ import annotations
 
+import logging
 import math
-import struct
 from collections.abc import Mapping, Sequence
+
+from pymodbus.client.mixin import ModbusClientMixin
+from pymodbus.constants import ExcCodes
+from pymodbus.exceptions import ModbusException
+from pymodbus.framer import FramerRTU, FramerSocket
+from pymodbus.pdu import DecodePDU, ExceptionResponse, ModbusPDU
+from pymodbus.pdu.register_message import ReadHoldingRegistersRequest, ReadInputRegistersRequest
 
 from daq.description.rig import DeviceEntry, Register, Rig
 from daq.devices.lines import CHECK
@@ -21,11 +29,21 @@ from daq.devices.locks import Hold, hold
 from daq.errors import DeviceError
 from daq.ports import Clock, Connection
 
-_FUNCTIONS = {"holding": 3, "input": 4}
-_FORMATS = {"u16": ">H", "i16": ">h", "u32": ">I", "i32": ">i", "f32": ">f"}
-_EXCEPTIONS = {1: "illegal function", 2: "illegal data address", 3: "illegal data value", 4: "device failure"}
+logging.getLogger("pymodbus.logging").setLevel(logging.CRITICAL)  # what it notes, we raise
+
+_Type = ModbusClientMixin.DATATYPE
+_KINDS = {
+    "u16": _Type.UINT16,
+    "i16": _Type.INT16,
+    "u32": _Type.UINT32,
+    "i32": _Type.INT32,
+    "f32": _Type.FLOAT32,
+}
+_QUESTIONS: Mapping[str, type[ModbusPDU]] = {
+    "holding": ReadHoldingRegistersRequest,
+    "input": ReadInputRegistersRequest,
+}
 _TRIES = 3
-_HEAD = struct.Struct(">HHHB")  # number, protocol, length, unit
 
 
 class ModbusSensor:
@@ -50,6 +68,7 @@ class ModbusSensor:
         self._connection: Connection | None = None
         self._hold: Hold | None = None
         self._numbered = entry.address.startswith("tcp:")
+        self._framer = (FramerSocket if self._numbered else FramerRTU)(DecodePDU(is_server=False))
         self._number, self._settled_ns = 0, 0
 
     @classmethod
@@ -89,37 +108,35 @@ class ModbusSensor:
         return {name: (self._quantity(one), one.unit) for name, one in self._entry.registers.items()}
 
     def _quantity(self, register: Register) -> float:
-        form = _FORMATS[register.kind]
-        question = struct.pack(">BHH", _FUNCTIONS[register.table], register.at, struct.calcsize(form) // 2)
+        kind = _KINDS[register.kind]
         for left in reversed(range(_TRIES)):
             try:
-                data = self._asked(question)
+                words = self._asked(_QUESTIONS[register.table], register.at, kind.value[1])
                 break
             except DeviceError as error:
                 if not left or error.kind not in ("timeout", "garbage"):
                     raise
-        if len(data) != struct.calcsize(form):
-            raise self._error(f"{len(data)} bytes for a register of {struct.calcsize(form)}", "garbage")
-        (value,) = struct.unpack(form, data)
+        value = ModbusClientMixin.convert_from_registers(words, kind)
+        assert isinstance(value, int | float)
         return math.fsum((register.offset, register.factor * value)) if math.isfinite(value) else math.nan
 
-    def _asked(self, question: bytes) -> bytes:
-        """Return the data behind the answer to one question."""
+    def _asked(self, question: type[ModbusPDU], at: int, many: int) -> Sequence[int]:
+        """Return so many registers from one on."""
         self._look_before()
         self._number = self._number % 0xFFFF + 1
-        unit, until_ns = self._entry.unit, self._clock.now_ns() + round(self._entry.timeout_s * 1e9)
         self._settled_ns = self._clock.now_ns() + round(self._entry.late_s * 1e9)
-        self._send(framed(question, unit, self._number if self._numbered else None))
-        answer = self._numbered_answer(until_ns) if self._numbered else self._checked_answer(until_ns)
+        number = self._number if self._numbered else 0
+        asked = question(address=at, count=many, dev_id=self._entry.unit, transaction_id=number)
+        self._send(self._framer.buildFrame(asked))
+        answer = self._answer(number)
         self._settled_ns = 0
-        if answer[0] == question[0] | 0x80:
-            why = _EXCEPTIONS.get(answer[1], f"exception {answer[1]}")
-            raise self._error(
-                f"it refused register {struct.unpack('>H', question[1:3])[0]}: {why}", "refused"
-            )
-        if answer[0] != question[0] or answer[1] != len(answer) - 2:
-            raise self._error(f"{answer[:20]!r} answers another question", "garbage")
-        return answer[2:]
+        if isinstance(answer, ExceptionResponse):
+            what = f"it refused register {at}: {_why(answer.exception_code)}"
+            remedy = "Compare `registers` in the rig file with the papers of the device"
+            raise DeviceError(what, where=self._where, remedy=remedy, kind="refused")
+        if answer.function_code != asked.function_code or len(answer.registers) != many:
+            raise self._error(f"{answer} answers another question", "garbage")
+        return answer.registers
 
     def _look_before(self) -> None:
         """Drop what nobody asked for; on a line without numbers, wait first for what may still be owed."""
@@ -128,22 +145,21 @@ class ModbusSensor:
         while self._waiting():
             continue
 
-    def _numbered_answer(self, until_ns: int) -> bytes:
+    def _answer(self, number: int) -> ModbusPDU:
+        """Return what comes in a sound frame of this unit and number; other bytes are passed over."""
+        until_ns, data = self._clock.now_ns() + round(self._entry.timeout_s * 1e9), b""
         while True:
-            number, protocol, length, unit = _HEAD.unpack(self._exactly(_HEAD.size, until_ns))
-            if protocol or not 3 <= length <= 254:
-                raise self._error("no Modbus frame", "garbage")
-            answer = self._exactly(length - 1, until_ns)
-            if (number, unit) == (self._number, self._entry.unit):
-                return answer  # any other answers a question whose time is over
-
-    def _checked_answer(self, until_ns: int) -> bytes:
-        head = self._exactly(3, until_ns)
-        size = 2 if head[1] & 0x80 else 2 + head[2]
-        frame = head + self._exactly(size, until_ns)
-        if crc16(frame[:-2]) != int.from_bytes(frame[-2:], "little") or frame[0] != self._entry.unit:
-            raise self._error(f"{frame[:20]!r} is no sound frame of unit {self._entry.unit}", "garbage")
-        return frame[1:-2]
+            connection = self._connection
+            if connection is None or not self._clock.wait_readable(connection, until_ns):
+                raise self._error("no whole answer came in time", "timeout")
+            data += self._waiting()
+            try:
+                used, answer = self._framer.handleFrame(data, self._entry.unit, number)
+            except ModbusException as error:
+                raise self._error(f"no Modbus frame ({error.string})", "garbage") from error
+            if answer is not None:
+                return answer
+            data = data[used:]
 
     def _send(self, data: bytes) -> None:
         if self._connection is None:
@@ -152,15 +168,6 @@ class ModbusSensor:
             self._connection.send(data)
         except OSError as error:
             raise self._error(f"link lost: {error}", "lost") from error
-
-    def _exactly(self, size: int, until_ns: int) -> bytes:
-        data = b""
-        while len(data) < size:
-            connection = self._connection
-            if connection is None or not self._clock.wait_readable(connection, until_ns):
-                raise self._error("no whole answer came in time", "timeout")
-            data += self._waiting(size - len(data))
-        return data
 
     def _waiting(self, most: int = 4096) -> bytes:
         if self._connection is None:
@@ -179,19 +186,7 @@ class ModbusSensor:
         return DeviceError(what, where=self._where, remedy=CHECK, kind=kind)
 
 
-def framed(question: bytes, unit: int, number: int | None) -> bytes:
-    """Return a question as it is sent: with a number, or (`number` None) with a CRC as on a serial line."""
-    if number is not None:
-        return _HEAD.pack(number, 0, len(question) + 1, unit) + question
-    line = bytes([unit]) + question
-    return line + crc16(line).to_bytes(2, "little")
-
-
-def crc16(data: bytes) -> int:
-    """Return the CRC of a frame on a serial line: begun with FFFF, polynomial A001 reflected."""
-    crc = 0xFFFF
-    for byte in data:
-        crc ^= byte
-        for _ in range(8):
-            crc = crc >> 1 ^ (0xA001 if crc & 1 else 0)
-    return crc
+def _why(code: int) -> str:
+    """Return the words for the code of a refusal."""
+    known = {one.value for one in ExcCodes}
+    return ExcCodes(code).name.replace("_", " ").lower() if code in known else f"exception {code}"

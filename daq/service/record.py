@@ -20,7 +20,18 @@ from daq.service.live import stamp
 from daq.service.load import Loaded
 from daq.service.metrology import described
 
-LIBRARIES = ("numpy", "scipy", "zarr", "numcodecs", "xarray", "pydantic", "pyserial", "pyvisa", "dash")
+LIBRARIES = (
+    "numpy",
+    "scipy",
+    "zarr",
+    "numcodecs",
+    "xarray",
+    "pydantic",
+    "pyserial",
+    "pymodbus",
+    "pyvisa",
+    "dash",
+)
 
 
 def record_of(

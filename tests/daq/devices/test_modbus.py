@@ -2,18 +2,19 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from typing import Any
 
 import pytest
+from pymodbus.framer import FramerRTU
 
 from daq.description.rig import DeviceEntry
-from daq.devices.modbus import ModbusSensor, crc16, framed
+from daq.devices.modbus import ModbusSensor
 from daq.errors import DeviceError
 from simulators.clock import VirtualClock
 from simulators.hosts import Send, Session, serve
-from simulators.modbus import ModbusRoom
+from simulators.modbus import ModbusRoom, crc16
 from simulators.sensors import pressure_pa, temperature_k
 
 S = 1_000_000_000
@@ -66,19 +67,46 @@ BOTH = pytest.mark.parametrize("address", [NUMBERED, CHECKED])
 
 @pytest.mark.parametrize(
     ("frame", "crc"),
-    [(b"123456789", 0x4B37), (b"\x02\x07", 0x1241), (bytes.fromhex("01030000000a"), 0xCDC5)],
+    [(b"123456789", "37 4b"), (b"\x02\x07", "41 12"), (bytes.fromhex("01030000000a"), "c5 cd")],
 )
-def test_the_crc_is_that_of_the_specification(frame: bytes, crc: int) -> None:
-    """MODBUS over Serial Line V1.02, sect. 6.2.2; the values from memory and computed anew."""
-    assert crc16(frame) == crc
+def test_the_crc_is_that_of_the_specification(frame: bytes, crc: str) -> None:
+    """MODBUS over Serial Line V1.02, sect. 6.2.2, low byte first; from memory and computed anew."""
+    assert crc16(frame).hex(" ") == crc
+    assert FramerRTU.compute_CRC(frame).to_bytes(2, "big").hex(" ") == crc
 
 
-def test_frames_are_those_of_the_specification() -> None:
-    """0x1241 goes out as 41 12, and ten registers from 0 as 01 03 00 00 00 0A C5 CD (from memory)."""
-    question = bytes.fromhex("030000000a")
+@pytest.mark.parametrize(
+    ("address", "question", "answer"),
+    [
+        (NUMBERED, "00 01 00 00 00 06 01 04 00 08 00 01", "00 01 00 00 00 05 01 04 02 00 0a"),
+        (CHECKED, "01 04 00 08 00 01 b0 08", "01 04 02 00 0a 39 37"),
+    ],
+)
+def test_frames_are_those_of_the_specification(address: str, question: str, answer: str) -> None:
+    """V1.1b3, sect. 6.4: input register 9 (its place 8) holds 00 0A; from memory, the CRCs computed."""
+    asked: list[bytes] = []
 
-    assert framed(question, 1, None).hex(" ") == "01 03 00 00 00 0a c5 cd"
-    assert framed(question, 1, 7).hex(" ") == "00 07 00 00 00 06 01 03 00 00 00 0a"
+    def reply(data: bytes) -> bytes:
+        asked.append(data)
+        return bytes.fromhex(answer)
+
+    clock, registers = VirtualClock(0), {"nine": {"at": 8, "unit": "1"}}
+    entry = DeviceEntry(driver="modbus-sensor", address=address, registers=registers)  # type: ignore[arg-type]
+    sensor = ModbusSensor("room", entry, clock)
+    with serve(clock, address, Answering(reply)):
+        sensor.open()
+
+    assert asked == [bytes.fromhex(question)]
+
+
+class Answering:
+    """An instrument that is one function from bytes to bytes."""
+
+    def __init__(self, feed: Callable[[bytes], bytes]) -> None:
+        self.feed = feed
+
+    def session(self, send: Send) -> Session:
+        return self
 
 
 @BOTH
@@ -126,7 +154,9 @@ def test_a_register_that_is_not_there_is_refused(address: str) -> None:
     registers = {"humidity": {"at": 40, "unit": "%"}}
 
     with (
-        pytest.raises(DeviceError, match="refused register 40: illegal data address") as refusal,
+        pytest.raises(
+            DeviceError, match=r"refused register 40: illegal address.* Compare `registers`"
+        ) as refusal,
         opened(address, registers=registers),
     ):
         pass
