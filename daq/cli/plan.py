@@ -7,14 +7,17 @@ import tomllib
 from pathlib import Path
 
 from daq.cli.answer import Answer
-from daq.description import parse
+from daq.description import Rig, parse
+from daq.description.address import address_problem
 from daq.description.dialect import dialect_warnings
 from daq.devices.clock import RealClock
 from daq.devices.files import read_dialect, with_dialects
+from daq.devices.registry import device_problems
 from daq.devices.trial import tried
 from daq.errors import DescriptionError
 from daq.itinerary import Forecast, Itinerary, forecast
 from daq.itinerary.advice import hopeless
+from daq.service.extensions import open_bench
 from daq.service.load import Loaded, Wishes, load
 
 
@@ -28,13 +31,24 @@ def check(arguments: argparse.Namespace) -> Answer:
     if _holds(path, "mask"):
         table, _ = with_dialects(tomllib.loads(path.read_text()), path.parent)
         rig = parse(table, str(path), "rig")
+        _refuse_devices(rig)
         return _fine(f"rig {rig.name!r}: {len(rig.slits)} slits, {len(rig.devices)} devices")
     loaded = load(path)
+    _refuse_devices(loaded.rig)
     itinerary = loaded.itinerary()
     refuse_hopeless(loaded, itinerary, forecast(itinerary, loaded.measurement), path)
     return _fine(
         f"measurement {loaded.measurement.name!r} on rig {loaded.rig.name!r}: {len(itinerary)} visits"
     )
+
+
+def _refuse_devices(rig: Rig) -> None:
+    """Refuse devices that no driver knows or that lack a port, and a simulated bench that cannot be meant."""
+    problems = device_problems(rig)
+    if problems:
+        raise DescriptionError(problems)
+    if rig.bench is not None:
+        open_bench(rig, seed=None, transport="direct", state=None, faults=None).close()
 
 
 def refuse_hopeless(loaded: Loaded, itinerary: Itinerary, expected: Forecast, file: Path) -> None:
@@ -61,7 +75,10 @@ def _dialect(path: Path, arguments: argparse.Namespace) -> Answer:
     lines = [f"dialect {dialect.name!r}, a {dialect.kind}: no problem found.", *warnings]
     understood: list[str] = []
     if arguments.address is not None:
-        address = arguments.address if ":/" in arguments.address else f"tcp://{arguments.address}"
+        known = ("tcp:", "socket:", "rfc2217:", "serial:", "visa:")
+        address = arguments.address if arguments.address.startswith(known) else f"tcp://{arguments.address}"
+        if problem := address_problem(address):
+            raise DescriptionError((f"--try {arguments.address}: {problem}.",))
         understood += tried(dialect, address, arguments.letter, RealClock())
     ok = not any("not understood" in line for line in understood)
     figures = {"ok": ok, "problems": [], "warnings": list(warnings), "understood": understood}

@@ -8,6 +8,7 @@ from typing import Annotated, Any, Literal
 from pydantic import Field, field_validator, model_validator
 
 from daq import openings
+from daq.description.address import Address, same_place
 from daq.description.dialect import Dialect
 from daq.description.problems import ProblemsError, Table
 
@@ -96,9 +97,6 @@ class Axis(Table):
         return self.settle_s + abs(distance_mm) / self.speed_mm_s + self.takeup_s
 
 
-ADDRESS = r"^((tcp|socket|rfc2217)://[^\s:/]+:\d{1,5}|serial:[^\s?]+(\?[a-z0-9=&.]+)?|visa:\S+)$"
-
-
 class Register(Table):
     """A quantity in the registers of a Modbus device: value = offset + factor * number."""
 
@@ -118,7 +116,7 @@ class DeviceEntry(Table):
 
     driver: str
     dialect: Dialect | None = None
-    address: Annotated[str, Field(pattern=ADDRESS)]
+    address: Address
     timeout_s: Positive = 1.0
     every_s: Positive = 60.0
     readout_s: NotNegative = 0.0
@@ -170,6 +168,7 @@ class Rig(Table):
             *self._axis_problems(),
             *self._opening_problems(),
             *self._dialect_problems(),
+            *same_place({name: entry.address for name, entry in self.devices.items()}),
         ]
         if found:
             raise ProblemsError(found)

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import shutil
 import subprocess
 import sys
 
@@ -29,6 +30,35 @@ def test_a_rig_with_three_mistakes_gets_three_sentences_in_one_message(tmp_path,
     assert status == 2
     assert len(text.strip().splitlines()) == 3
     assert all(line.startswith(str(tmp_path / "rig.toml")) for line in text.strip().splitlines())
+
+
+@pytest.mark.parametrize(
+    ("right", "wrong", "why"),
+    [
+        ("127.0.0.1:7802", "127.0.0.1:77802", "no port has a number above 65535"),
+        ('"scpi-counter"', '"scpi-countre"', "no driver 'scpi-countre'. Name one of dialect"),
+        ('"scpi-counter"', '"scpi-sensor"', "a rig has one counter, not none"),
+        ("dark_rate_hz", "dark_rat_hz", "Did you mean 'dark_rate_hz'"),
+        ('"wavelets"', '"wavelet"', "Known names: wavelets"),
+    ],
+)
+@pytest.mark.parametrize("file", ["lantern.toml", "rigs/lantern.toml"])
+def test_check_finds_what_would_stop_a_run_at_its_devices(tmp_path, capsys, file, right, wrong, why):
+    shutil.copytree(CONFIGS, tmp_path, dirs_exist_ok=True)
+    rig = tmp_path / "rigs" / "lantern.toml"
+    rig.write_text(rig.read_text().replace(right, wrong))
+
+    status, text = said(capsys, "check", str(tmp_path / file))
+
+    assert (status, why in text) == (2, True), text
+
+
+def test_a_port_that_cannot_be_is_not_tried(capsys):
+    gauge = str(CONFIGS / "dialects" / "text-gauge.toml")
+
+    status, text = said(capsys, "check", gauge, "--try", "localhost:70000")
+
+    assert (status, "no port has a number above 65535" in text) == (2, True)
 
 
 def test_problems_come_as_json_too(tmp_path, capsys):
