@@ -96,6 +96,9 @@ class Reading:
 # What a person may say of a finished run.
 VERDICTS = ("counts", "counts in part", "doubtful", "does not count")
 
+# What a person may do on the page: a watcher reads, an operator also asks.
+ROLES = ("watcher", "operator")
+
 # Reasons are ids in the archive; their words stand here and in the archive's attributes.
 REASONS: Mapping[int, str] = {
     0: "planned",

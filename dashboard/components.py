@@ -12,7 +12,10 @@ from dashboard.view import CAUTION
 _NEWEST = 4  # lines of the log that stand open beside the verdict
 Part = Mapping[str, Any]
 Children = list[Any]
-STORES = ("night-data", "pattern-data", "plates-data", "strip-data", "seen", "chosen", "look", "marked")
+STORES = (
+    *("night-data", "pattern-data", "plates-data", "strip-data", "seen", "chosen", "look", "marked"),
+    "asked",
+)
 
 
 def page() -> html.Div:
@@ -25,7 +28,14 @@ def page() -> html.Div:
             *(dcc.Store(id=name) for name in STORES),
             html.Header([html.Div(id="header"), _buttons()], className="top"),
             html.Main(_sections()),
-            html.Footer([html.P(CAUTION, className="caution"), html.P(id="footer", className="soft")]),
+            html.Footer(
+                [
+                    html.P(CAUTION, className="caution"),
+                    html.P(id="footer", className="soft"),
+                    html.Div(id="who", className="soft"),
+                ]
+            ),
+            _confirm(),
         ],
         id="page",
         className="bare",
@@ -36,6 +46,25 @@ def render(name: str, part: Any) -> Any:
     """Return the children of one part of the page; data of the figures pass as they are."""
     build = _RENDERERS.get(name)
     return build(part) if build else part
+
+
+def _confirm() -> html.Dialog:
+    """Return the question before anything is asked of a run; the browser fills it in."""
+    return html.Dialog(
+        [
+            html.H2(id="confirm-title"),
+            html.P(id="confirm-will"),
+            html.Div(
+                [
+                    html.Button("Do nothing", id="confirm-no", type="button"),
+                    html.Button(id="confirm-yes", type="button"),
+                ],
+                className="buttons",
+            ),
+        ],
+        id="confirm",
+        **{"aria-labelledby": "confirm-title", "aria-describedby": "confirm-will"},
+    )
 
 
 def _buttons() -> html.Div:
@@ -54,6 +83,9 @@ def _sections() -> Children:
         html.Div(id="line"),
         html.Section(id="warnings", className="full", **{"aria-live": "polite"}),
         html.Section(id="kappa", className="full"),
+        html.Section(
+            [html.Div(id="operate"), html.P(id="asked-says", role="status")], className="full", id="operating"
+        ),
         html.Section(
             [html.H2("At this moment"), html.Div(id="now"), html.Div(id="sensors")],
             className="full",
@@ -125,14 +157,39 @@ def _warnings(part: Part) -> Children:
 
 
 def _warning(item: Part) -> html.Article:
+    seen = [html.P(item["seen"], className="soft")] if item["seen"] else []
+    button = [html.Div(_act(item["button"]), className="buttons")] if item["button"] else []
     return html.Article(
         [
             html.P(item["what"], className="what"),
             html.P([item["do"], " ", html.Strong(item["good"])]),
             html.P([item["since"].removesuffix("."), *_here(item["since_utc"]), "."], className="soft"),
+            *seen,
+            *button,
         ],
         className="warning",
     )
+
+
+def _operate(part: Part | None) -> Children:
+    if part is None or not (part["acts"] or part["asked"]):
+        return []
+    asked = [html.Ol([html.Li(line) for line in part["asked"]], className="soft")] if part["asked"] else []
+    acts = [html.Div([_act(act) for act in part["acts"]], className="buttons")] if part["acts"] else []
+    return [html.H2("Ask of the run"), *acts, *asked]
+
+
+def _act(act: Part) -> html.Button:
+    """Return a button that first says what will happen."""
+    told = {f"data-{key}": act[key] for key in ("what", "about", "run", "will")}
+    return html.Button(act["label"], type="button", className="act", **told)
+
+
+def _who(part: Part | None) -> Children:
+    if part is None:
+        return []
+    leave = [html.Button("Log out", id="log-out", type="button")] if part["inside"] else []
+    return [html.Span(part["says"]), *leave]
 
 
 def _kappa(part: Part) -> Children:
@@ -233,4 +290,6 @@ _RENDERERS: dict[str, Callable[[Any], Any]] = {
     "sensors": _sensors,
     "log": _log,
     "runs": _runs,
+    "operate": _operate,
+    "who": _who,
 }

@@ -14,20 +14,28 @@ from typing import Any
 from dash.exceptions import PreventUpdate
 
 from daq.errors import StorageError
+from daq.storage.people import NOBODY, Person
 from dashboard import figures, lab
+from dashboard.asking import book_stamp, requests_of
 from dashboard.components import render
+from dashboard.operate import operate_view
 from dashboard.times import clock
 from dashboard.view import empty_view, is_silent, unreadable_view, view, waiting_view
 
 WORDS = (
     *("header", "verdict", "line", "warnings", "kappa", "now"),
-    *("sensors", "log", "rail", "runs", "footer"),
+    *("sensors", "log", "rail", "runs", "footer", "operate", "who"),
 )
 CURVES = ("night-data", "pattern-data", "plates-data", "strip-data")
 
 
 def news(
-    folder: Path, run: str | None, chosen: Any, seen: Mapping[str, str], now: datetime
+    folder: Path,
+    run: str | None,
+    chosen: Any,
+    seen: Mapping[str, str],
+    now: datetime,
+    person: Person = NOBODY,
 ) -> dict[str, Any]:
     """Return the parts of the page that a browser has not seen yet, with the new state of what it has seen.
 
@@ -43,13 +51,15 @@ def news(
         What the last answer to this browser said under "seen".
     now
         The wall clock, which alone tells silence.
+    person
+        Who asks: an operator is shown what to ask of the run.
 
     Raises
     ------
     PreventUpdate
         When nothing changed.
     """
-    scene = _scene(folder, run, chosen, now)
+    scene = _scene(folder, run, chosen, now, person)
     mark = _digest(repr(scene))
     if seen.get("mark") == mark:
         raise PreventUpdate
@@ -65,23 +75,25 @@ class _Scene:
     folder: Path
     names: tuple[str, ...]
     run: str | None
+    person: Person
     stamp: str | None = None
     silent: bool = False
     chosen: int | None = None
+    book: int = 0
 
 
-def _scene(folder: Path, run: str | None, chosen: Any, now: datetime) -> _Scene:
+def _scene(folder: Path, run: str | None, chosen: Any, now: datetime, person: Person) -> _Scene:
     names = tuple(lab.run_names(folder))
     shown = run if run is not None else names[-1] if names else None
     if shown is None or shown not in names:
-        return _Scene(folder, names, shown)
+        return _Scene(folder, names, shown, person)
     stamp = lab.stamp(folder, shown)
     mask = chosen if isinstance(chosen, int) else None
     try:
         silent = is_silent(lab.read(folder, shown, stamp), now)
     except StorageError:
         silent = False
-    return _Scene(folder, names, shown, stamp, silent, mask)
+    return _Scene(folder, names, shown, person, stamp, silent, mask, book_stamp(folder))
 
 
 @lru_cache(maxsize=32)
@@ -105,13 +117,16 @@ def _said(scene: _Scene) -> dict[str, Any]:
 
 
 def _whole(feed: dict[str, Any], scene: _Scene) -> dict[str, Any]:
-    said = view(feed, scene.silent)
+    said = view(feed, scene.silent, scene.person)
+    asks = operate_view(feed, scene.silent, scene.person, requests_of(scene.folder, str(scene.run)))
     masks = feed["openings"]
     chosen = max(masks) if scene.chosen is None or scene.chosen not in masks else scene.chosen
     return {
         "page": "whole",
         **said,
         "line": _line(said),
+        "operate": asks,
+        "who": {"says": asks["says"], "inside": bool(scene.person.name)},
         "footer": f"Data up to {clock(feed['updated_utc'], seconds=True)}.",
         "night-data": figures.night(feed),
         "pattern-data": figures.pattern(feed, chosen),
@@ -121,7 +136,7 @@ def _whole(feed: dict[str, Any], scene: _Scene) -> dict[str, Any]:
 
 
 def _bare(said: dict[str, Any]) -> dict[str, Any]:
-    return {"page": "bare", **said, "line": _line(said), "footer": ""}
+    return {"page": "bare", **said, "line": _line(said), "footer": "", "operate": None, "who": None}
 
 
 def _line(said: dict[str, Any]) -> dict[str, Any]:

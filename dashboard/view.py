@@ -7,6 +7,8 @@ from datetime import datetime
 from typing import Any
 
 from daq import openings
+from daq.storage.people import NOBODY, Person
+from dashboard.operate import acknowledging
 from dashboard.residual import residual_view
 from dashboard.times import clock, day_and_clock, duration
 from dashboard.words import count, fixed, general, spelt
@@ -25,7 +27,7 @@ _KINDS = {
 _GOING = {"run": "Running.", "rehearsal": "Rehearsal running.", "replay": "Replay running."}
 
 
-def view(feed: Feed, silent: bool) -> dict[str, Any]:
+def view(feed: Feed, silent: bool, person: Person = NOBODY) -> dict[str, Any]:
     """Return everything that the page says in words, by part of the page.
 
     Parameters
@@ -34,11 +36,13 @@ def view(feed: Feed, silent: bool) -> dict[str, Any]:
         The content of `live.json`, format 1.
     silent
         Whether the run stopped writing although it has not ended (`is_silent`).
+    person
+        Who reads: an operator may take note of a warning.
     """
     return {
         "header": {"title": feed["title"], "run": feed["run"], "kind": _kind(feed)},
         "verdict": _verdict(feed, silent),
-        "warnings": _warnings(feed, silent),
+        "warnings": _warnings(feed, silent, person),
         "kappa": residual_view(feed),
         "rail": _rail(feed),
         "now": _now(feed, silent),
@@ -197,13 +201,15 @@ def _stopped(sentence: str) -> str:
     return sentence if sentence.endswith((".", "!", "?")) else f"{sentence}."
 
 
-def _warnings(feed: Feed, silent: bool) -> dict[str, Any]:
+def _warnings(feed: Feed, silent: bool, person: Person) -> dict[str, Any]:
     items, since = feed["warnings"], clock(feed["started_utc"])
     until = f" up to the last news at {clock(feed['written_utc'])}" if silent else ""
     return {
         "heading": "To look at" if items else "Warnings",
         "none": None if items else f"None since the start at {since}{until}.",
-        "items": [_warning(feed, warning) for warning in items],
+        "items": [
+            _warning(feed, warning) | {"button": acknowledging(feed, person, warning)} for warning in items
+        ],
     }
 
 
@@ -214,7 +220,12 @@ def _warning(feed: Feed, warning: Mapping[str, Any]) -> dict[str, Any]:
         "good": _stopped(warning["good"]),
         "since": f"Since {clock(warning['since_utc'])}.",
         "since_utc": warning["since_utc"] if feed["clock"] == "real" else None,
+        "seen": _seen(warning.get("acknowledged")),
     }
+
+
+def _seen(noted: Mapping[str, Any] | None) -> str | None:
+    return None if noted is None else f"Seen by {noted['who']} at {clock(noted['utc'])}."
 
 
 def _rail(feed: Feed) -> dict[str, Any]:

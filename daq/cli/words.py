@@ -9,7 +9,7 @@ from pathlib import Path
 from typing import Any
 
 from daq.cli.answer import Answer
-from daq.records import VERDICTS
+from daq.records import ROLES, VERDICTS
 
 RUN = "lab/runs/20261201T170000Z-lantern"
 ABOUT = """Plans and runs multi-mask interference scans, loses no count, and gives a residual that can be
@@ -32,6 +32,7 @@ def parser() -> argparse.ArgumentParser:
     _service_words(commands)
     _watch_words(commands)
     _after_words(commands)
+    _people_words(commands)
     return whole
 
 
@@ -178,6 +179,19 @@ def _after_words(commands: Any) -> None:
     accept.add_argument("--remark", default="", help="why")
     for one in (note, accept):
         one.add_argument("--by", metavar="NAME", help="who says so (your login name)")
+
+
+def _people_words(commands: Any) -> None:
+    who = "say who may log in to the page of a lab"
+    people = _add(
+        commands, "people", "people:people", who, "tercet people lab add 'Night watch' --role watcher"
+    )
+    people.add_argument("lab", type=Path, metavar="LAB", help="the lab folder")
+    acts = ("list", "add", "password", "remove", "end-sessions")
+    people.add_argument("do", nargs="?", choices=acts, default="list", help="what to do (list)")
+    people.add_argument("name", nargs="?", metavar="NAME", help="whom (end-sessions: everybody)")
+    roles = "a watcher reads, an operator also asks (watcher)"
+    people.add_argument("--role", choices=ROLES, default="watcher", help=roles)
 
 
 def _add(commands: Any, name: str, target: str, text: str, example: str) -> argparse.ArgumentParser:

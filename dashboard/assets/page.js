@@ -16,19 +16,33 @@
     root.dataset.theme = stored("theme") ?? (system.matches ? "dark" : "light");
     tell("look", { data: look() });
   };
-  root.dataset.theme = stored("theme") ?? (system.matches ? "dark" : "light");
   system.addEventListener("change", applyTheme);
 
   const actions = {
     theme() { store("theme", root.dataset.theme === "dark" ? "light" : "dark"); applyTheme(); },
+    "confirm-no"() { document.getElementById("confirm").close(); },
+    "confirm-yes"(button) {
+      document.getElementById("confirm").close();
+      tell("asked", { data: { ...button.dataset, at: Date.now() } });
+    },
+    async "log-out"() { await fetch("/logout", { method: "POST" }); location.assign("/login"); },
     room(button) {
       const on = root.toggleAttribute("data-room");
       button.setAttribute("aria-pressed", String(on));
     },
   };
+  const confirm = (act) => {
+    const [box, yes] = ["confirm", "confirm-yes"].map((id) => document.getElementById(id));
+    document.getElementById("confirm-title").textContent = `${act.textContent}?`;
+    document.getElementById("confirm-will").textContent = act.dataset.will;
+    yes.textContent = act.textContent;
+    for (const key of ["run", "what", "about"]) yes.dataset[key] = act.dataset[key];
+    box.showModal();
+  };
   document.addEventListener("click", (event) => {
     const button = event.target.closest?.("button");
     if (button?.dataset.opening) tell("chosen", { data: Number(button.dataset.opening) });
+    else if (button?.classList.contains("act")) confirm(button);
     else if (button && actions[button.id]) actions[button.id](button);
   });
 
@@ -37,6 +51,7 @@
   const plainFetch = window.fetch.bind(window);
   window.fetch = async (...asked) => {
     const answer = await plainFetch(...asked);
+    if (answer.status === 401) location.reload();
     if (answer.ok) { heard = Date.now(); showContact(); }
     return answer;
   };

@@ -5,8 +5,9 @@ from __future__ import annotations
 import pytest
 from flask.testing import FlaskClient
 
-from dashboard.access import LONGEST_BODY, is_loopback
+from dashboard.access import LONGEST_BODY
 from dashboard.app import build
+from dashboard.senders import is_loopback
 from tests.dashboard import feeds
 
 HOST = "127.0.0.1:8050"
