@@ -176,7 +176,15 @@ class Sensor(Device, Protocol):
 
 
 class Shutter(Device, Protocol):
-    """Blocks the beam on request (no safety function)."""
+    """Blocks the beam on request (no safety function).
+
+    Attributes
+    ----------
+    armed
+        Whether it may let the beam pass: somebody is there, or has armed the run.
+    """
+
+    armed: bool
 
     def block(self) -> None:
         """Block the beam."""

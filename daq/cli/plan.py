@@ -7,18 +7,18 @@ import tomllib
 from pathlib import Path
 
 from daq.cli.answer import Answer
-from daq.description import Rig, parse
+from daq.description import Rig
 from daq.description.address import address_problem
 from daq.description.dialect import dialect_warnings
 from daq.devices.clock import RealClock
-from daq.devices.files import read_dialect, with_dialects
+from daq.devices.files import read_dialect
 from daq.devices.registry import device_problems
 from daq.devices.trial import tried
 from daq.errors import DescriptionError
 from daq.itinerary import Forecast, Itinerary, forecast
 from daq.itinerary.advice import hopeless
 from daq.service.extensions import open_bench
-from daq.service.load import Loaded, Wishes, load
+from daq.service.load import Loaded, Wishes, load, load_rig
 
 
 def check(arguments: argparse.Namespace) -> Answer:
@@ -29,8 +29,7 @@ def check(arguments: argparse.Namespace) -> Answer:
     if arguments.address is not None:
         raise DescriptionError((f"{path}: only a dialect can be tried. Leave out --try.",))
     if _holds(path, "mask"):
-        table, _ = with_dialects(tomllib.loads(path.read_text()), path.parent)
-        rig = parse(table, str(path), "rig")
+        rig = load_rig(path)
         _refuse_devices(rig)
         return _fine(f"rig {rig.name!r}: {len(rig.slits)} slits, {len(rig.devices)} devices")
     loaded = load(path)

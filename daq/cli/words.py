@@ -29,6 +29,7 @@ def parser() -> argparse.ArgumentParser:
     commands = whole.add_subparsers(title="commands", required=True, metavar="COMMAND")
     _plan_words(commands)
     _night_words(commands)
+    _task_words(commands)
     _service_words(commands)
     _watch_words(commands)
     _after_words(commands)
@@ -101,6 +102,14 @@ def _night_words(commands: Any) -> None:
         "--home", action="store_true", help="home axes that lost their reference (look at the bench first)"
     )
     run.add_argument("--page", action="store_true", help="show the live page while the run goes on")
+
+
+def _task_words(commands: Any) -> None:
+    """Add the bench tasks."""
+    what = "do a guided task at the bench: by-hand (home, go, read, the rate as a bar while you turn screws)"
+    task = _add(commands, "task", "task:task", what, "tercet task by-hand rigs/lantern.toml")
+    task.add_argument("name", choices=("by-hand",), metavar="NAME", help="by-hand")
+    task.add_argument("file", type=Path, metavar="RIG", help="a rig (TOML)")
 
 
 def _service_words(commands: Any) -> None:

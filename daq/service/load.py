@@ -104,6 +104,18 @@ def load(path: Path, wishes: Wishes = NO_WISHES) -> Loaded:
     return _loaded(table, text, path, rig_path, wishes)
 
 
+def load_rig(path: Path) -> Rig:
+    """Return a rig from its file, and the dialects that it names.
+
+    Raises
+    ------
+    DescriptionError
+        With every problem of the file at once.
+    """
+    table, _ = with_dialects(_toml(_read(path), path), path.parent)
+    return parse(table, str(path), "rig")
+
+
 def load_run(folder: Path, wishes: Wishes) -> Loaded:
     """Return the description that a run folder holds verbatim, with the wishes it was started with."""
     path = folder / DESCRIPTION
