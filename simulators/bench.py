@@ -19,6 +19,7 @@ from simulators.gauge import Gauge, ShutterBox
 from simulators.hosts import Host, Instrument, serve
 from simulators.modbus import ModbusRoom
 from simulators.motion import Track
+from simulators.powermeter import PowerMeter
 from simulators.scpi_stage import ScpiStage
 from simulators.sensors import RoomSensor
 from simulators.settings import Settings, read_settings, utc_ns
@@ -161,6 +162,7 @@ def build(
         "scpi-totaliser-26": lambda name: Totaliser(name, partial(count, name), 26, clock),
         "scpi-totaliser-32": lambda name: Totaliser(name, partial(count, name), 32, clock),
         "scpi-frequency": lambda name: FrequencyMeter(name, partial(count, name), clock),
+        "scpi-power": lambda name: PowerMeter(name, partial(truth.power, name), clock),
         "scpi-sensor": lambda name: RoomSensor(name, clock),
         "modbus-sensor": lambda name: _modbus(rig.devices[name], clock),
         "gauge": lambda name: Gauge(name, clock),

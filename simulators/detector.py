@@ -39,6 +39,11 @@ def draw_counts(
     return _non_paralysable(rate_hz, gate_s, dead_time_s, random)
 
 
+def draw_bunched(mean: float, fano: float, random: np.random.Generator) -> int:
+    """Return a negative binomial count; its variance is `fano`, above one, times its mean."""
+    return int(random.negative_binomial(mean / (fano - 1), 1 / fano)) if mean > 0 else 0
+
+
 def _non_paralysable(rate_hz: float, gate_s: float, dead_time_s: float, random: np.random.Generator) -> int:
     """Draw exactly, without going through every arrival.
 

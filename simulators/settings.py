@@ -23,6 +23,7 @@ Model = Literal[
     "scpi-totaliser-26",
     "scpi-totaliser-32",
     "scpi-frequency",
+    "scpi-power",
     "gauge",
     "shutter",
 ]
@@ -40,13 +41,38 @@ class ChannelSettings(Table):
 
     "detector": `share` of the light behind the mask, and dark counts; "monitor": `rate_hz` times the strength
     of the source, before mask and shutter; "coincidence": `share` of the light whose twin was seen too, and
-    accidental ones of channels 1 and 2 within `window_s`.
+    accidental ones of channels 1 and 2 within `window_s`. `fano`: variance over mean of what it counts.
     """
 
     sees: Literal["detector", "monitor", "coincidence"] = "detector"
     share: Annotated[float, Field(ge=0, le=1)] = 1.0
     rate_hz: _Rate = 0.0
     window_s: _Small = 0.0
+    fano: Annotated[float, Field(ge=1, le=1e6)] = 1.0
+
+
+class PowerSettings(Table):
+    """How a power meter reads: noise of one reading, and readings a second."""
+
+    noise: _Rate = 0.0
+    readings_per_s: Annotated[float, Field(gt=0, le=1e6)] = 10.0
+
+
+class LightSettings(Table):
+    """What the light does besides diffraction, by slit or pair of slits.
+
+    `amplitude` and `phase_rad` of each slit's illumination; `visibility` of each pair; `loop` and
+    `loop_phase_rad`: relative amplitude and phase of a wave that creeps along the mask from slit to slit,
+    once for each pair of open slits; `cut_sigma` draws the true slits about the described ones, by so many of
+    their stated uncertainties.
+    """
+
+    amplitude: Mapping[str, Annotated[float, Field(gt=0, le=10)]] = {}
+    phase_rad: Mapping[str, float] = {}
+    visibility: Mapping[str, Annotated[float, Field(ge=0, le=1)]] = {}
+    loop: Annotated[float, Field(ge=0, le=1)] = 0.0
+    loop_phase_rad: float = 0.0
+    cut_sigma: Annotated[float, Field(ge=0, le=10)] = 0.0
 
 
 class Settings(Table):
@@ -63,13 +89,17 @@ class Settings(Table):
     readout_s: Annotated[float, Field(ge=0, le=3600)] = 0.0
     source: SourceSettings = SourceSettings()
     channels: Annotated[Sequence[ChannelSettings], Field(min_length=1)] = (ChannelSettings(),)
+    power: PowerSettings = PowerSettings()
+    light: LightSettings = LightSettings()
     instruments: Mapping[str, Model] = {}
 
     @model_validator(mode="after")
-    def _twins_have_singles(self) -> Settings:
+    def _channels_fit(self) -> Settings:
         pairs = [place for place, one in enumerate(self.channels) if one.sees == "coincidence"]
         if pairs and (pairs != [0] or len(self.channels) < 3):
             raise ValueError("channel 0 alone sees coincidences, those of channels 1 and 2")
+        if self.dead_time_s and any(one.fano > 1 for one in self.channels):
+            raise ValueError("a channel of bunched counts has no dead time here")
         return self
 
 

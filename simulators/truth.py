@@ -10,11 +10,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from daq.description import Rig
-from simulators.detector import draw_counts
+from simulators.detector import draw_bunched, draw_counts
 from simulators.draws import generator
 from simulators.motion import NS, Track
-from simulators.optics import intensity
 from simulators.settings import ChannelSettings, Settings
+from simulators.slits import Slits
 from simulators.source import Factor, RandomWalk, linear, mean_relative
 
 _MOVING_PARTS = 64  # parts into which a gate is cut while an axis moves
@@ -44,16 +44,15 @@ class Truth:
         beam: Factor | None = None,
         to_monitor: Factor | None = None,
     ) -> None:
-        self._rig, self._settings, self._seed = rig, settings, seed
+        self._settings, self._seed = settings, seed
         self._mask, self._detector = tracks[rig.mask.axis], tracks[rig.detector.axis]
         self._source = _factors(settings, seed) + (() if beam is None else (beam,))
         self._to_monitor = self._source + (() if to_monitor is None else (to_monitor,))
         self._to_mask = self._source
         self._places = {opening: rig.mask_at_mm(opening) for opening in rig.opening_masks}
         self._mask_tolerance_mm = rig.axes[rig.mask.axis].tolerance_mm
-        first = rig.slits["A"]
-        peak = self._intensity([first.centre_m], [(first.centre_m, first.width_m)])[0]
-        self._scale_hz = settings.single_slit_rate_hz / peak
+        self._slits = Slits(rig, settings.light, seed)
+        self._scale_hz = settings.single_slit_rate_hz / self._slits.reference()
         self._light = lru_cache(maxsize=65_536)(self._light_hz)
 
     def behind(self, factor: Factor) -> None:
@@ -70,10 +69,22 @@ class Truth:
     def counts(self, device: str, open_ns: int, close_ns: int, channel: int = 0) -> int:
         """Return what a gate of a device has counted in a channel, the same whenever it is asked for."""
         gate_s = (close_ns - open_ns) / NS
-        rate_hz = self._channel_hz(self._settings.channels[channel], open_ns, close_ns)
+        settings, of = self._settings, self._settings.channels[channel]
+        rate_hz = self._channel_hz(of, open_ns, close_ns)
         random = generator(self._seed, f"{device}/{channel}" if channel else device, open_ns)
-        settings = self._settings
+        if of.fano > 1:
+            return draw_bunched(rate_hz * gate_s, of.fano, random)
         return draw_counts(rate_hz, gate_s, settings.dead_time_s, settings.dead_time_kind, random)
+
+    def power(self, device: str, open_ns: int, close_ns: int) -> tuple[float, float, int]:
+        """Return mean, variance of the mean and number of readings of a power meter between two times."""
+        of = self._settings.power
+        readings = max(2, round((close_ns - open_ns) / NS * of.readings_per_s))
+        edges = [open_ns + (close_ns - open_ns) * part // readings for part in range(readings + 1)]
+        light = [self._channel_hz(self._settings.channels[0], *edge) for edge in pairwise(edges)]
+        noise = of.noise * generator(self._seed, device, open_ns).standard_normal(readings)
+        taken = np.array(light) + noise
+        return float(taken.mean()), float(taken.var(ddof=1)) / readings, readings
 
     def _channel_hz(self, channel: ChannelSettings, open_ns: int, close_ns: int) -> float:
         """Return the mean rate of events at a channel over a gate [1/s]."""
@@ -116,13 +127,8 @@ class Truth:
         return mean_relative(self._to_mask, start_ns / NS, stop_ns / NS)
 
     def _light_hz(self, opening: int, position_mm: float) -> float:
-        slits = [(slit.centre_m, slit.width_m) for slit in self._rig.slits_of(opening).values()]
-        pattern = self._intensity([position_mm * 1e-3], slits)[0]
+        pattern = self._slits.intensity(opening, position_mm * 1e-3)
         return float(self._scale_hz * pattern) + self._settings.background_rate_hz
-
-    def _intensity(self, positions_m: list[float], slits: list[tuple[float, float]]) -> NDArray[np.float64]:
-        geometry = self._rig.geometry
-        return intensity(np.array(positions_m), slits, geometry.wavelength_m, geometry.distance_m)
 
 
 def _factors(settings: Settings, seed: int) -> tuple[Factor, ...]:

@@ -59,9 +59,14 @@ class AxisWords(Table):
 
 
 class CounterWords(Table):
-    """What a counter is: gated, running all the time (a totaliser that rolls over), or a frequency meter."""
+    """What a counter is.
 
-    mode: Literal["gated", "running", "frequency"] = "gated"
+    "gated"; "running" all the time (a totaliser that rolls over); "frequency": it gives a mean rate; "power":
+    it gives a mean power (group `value`), the variance of that mean (`variance`) and how many readings it is
+    the mean of (`repeats`).
+    """
+
+    mode: Literal["gated", "running", "frequency", "power"] = "gated"
     dwell_decimals: Annotated[int, Field(ge=0, le=9)] = 6
     bits: Annotated[int, Field(ge=8, le=63)] | None = None
     most_hz: Annotated[float, Field(gt=0)] | None = None
@@ -140,6 +145,16 @@ class Dialect(Table):
         words = self.counter_words
         if words.mode == "running" and (words.bits is None or words.most_hz is None):
             yield "counter", "a running totaliser needs bits (it rolls over at 2**bits) and most_hz"
+        missing = {"variance", "repeats"} - self._fetched_groups()
+        if words.mode == "power" and missing:
+            yield (
+                "command.fetch.reply",
+                f"a power meter's reply needs groups named {', '.join(sorted(missing))}",
+            )
+
+    def _fetched_groups(self) -> set[str]:
+        fetch = self.command.get("fetch")
+        return set(groups_of(fetch.reply)) if fetch and fetch.reply else set()
 
     def _quantity_problems(self) -> Iterator[tuple[str, str]]:
         if self.kind != "sensor" or "read" not in self.command:

@@ -23,7 +23,7 @@ class DialectCounter:
     -----
     A gated counter opens and closes its gate itself. A running totaliser is read when the gate opens and when
     it closes, and the time between is taken from the run clock, in the middle of each question. A frequency
-    meter gives a rate, and rate times gate is its count.
+    meter gives a rate, and rate times gate is its count. A power meter gives a mean power.
 
     Parameters
     ----------
@@ -148,6 +148,8 @@ class DialectCounter:
 
     def _counted(self, fetched: re.Match[str], dwell_s: float) -> Counted:
         values = [number(text) for text in _values(fetched)]
+        if self._words.mode == "power":
+            return self._powered(fetched, values[0], dwell_s)
         live = fetched.groupdict().get("live")
         live_s = dwell_s if live is None else number(live)
         if self._words.mode == "frequency":
@@ -169,6 +171,14 @@ class DialectCounter:
         if not (overflow or adds_up(values, slices)):
             raise self._error("the parts of its gate do not add up to the count", kind="garbage")
         return slices
+
+    def _powered(self, fetched: re.Match[str], mean: float, dwell_s: float) -> Counted:
+        """Return a mean power with the variance of that mean and the number of its readings."""
+        variance, repeats = number(fetched["variance"]), int(fetched["repeats"])
+        if not (math.isfinite(mean) and math.isfinite(variance) and variance >= 0 and repeats >= 2):
+            raise self._error(f"{fetched[0]!r} is no mean power of several readings", kind="garbage")
+        overflow = self._spoken.holds("fetch", "overflow_when", fetched)
+        return Counted((mean,), dwell_s, overflow, values_var=(variance,), repeats=repeats)
 
     def _look(self, dwell_s: float) -> tuple[int, tuple[int, ...]]:
         """Return when the totals were read, and the totals; raises when that moment is in doubt."""

@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 from scipy.special import gammainc
 from scipy.stats import chisquare
 
-from simulators.detector import draw_counts
+from simulators.detector import draw_bunched, draw_counts
 from simulators.draws import generator
 
 GATES = 4000
@@ -115,3 +115,13 @@ def test_a_draw_depends_on_seed_use_and_number_alone() -> None:
     assert generator(1, "counter", 7).integers(1 << 62) == wanted
     others = [(2, "counter", 7), (1, "monitor", 7), (1, "counter", 8)]
     assert wanted not in [generator(*other).integers(1 << 62) for other in others]
+
+
+def test_bunched_counts_have_the_variance_that_was_asked_for() -> None:
+    random = np.random.default_rng(1)
+
+    counts = np.array([draw_bunched(1000.0, 3.0, random) for _ in range(4000)])
+
+    assert counts.mean() == pytest.approx(1000, abs=4 * np.sqrt(3000 / 4000))
+    assert counts.var() == pytest.approx(3000, rel=4 * np.sqrt(2 / 4000))
+    assert draw_bunched(0.0, 3.0, random) == 0
