@@ -42,7 +42,7 @@ class DescriptionError(DaqError):
 
 
 class DeviceError(DaqError):
-    """A device that did not do what it was asked; `kind` is "timeout", "lost", "garbage" or "refused"."""
+    """A device that did not do what it was asked; `kind` says how, a row of the table of reactions."""
 
     exit_status = 3
 

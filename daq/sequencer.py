@@ -174,11 +174,20 @@ def _await_arrival(
         clock.sleep_until(clock.now_ns() + POLL_NS)
         axes = _axes(devices)
     for name, axis in axes.items():
-        if axis.alarm or not axis.homed:
-            raise DeviceError(
-                axis.alarm or "lost its reference", where=f"axis {name}", remedy="Look at the stage"
-            )
+        trouble = axis_trouble(name, axis)
+        if trouble is not None:
+            raise trouble
     return axes
+
+
+def axis_trouble(name: str, state: AxisState) -> DeviceError | None:
+    """Return what is wrong with an axis by its own account, if anything."""
+    remedy = "Look at the stage, and home it at the bench"
+    if state.alarm:
+        return DeviceError(f"alarm: {state.alarm}", where=f"axis {name}", remedy=remedy, kind="alarm")
+    if not state.homed:
+        return DeviceError("lost its reference", where=f"axis {name}", remedy=remedy, kind="reference")
+    return None
 
 
 def _await_gate(gate: _Gate, devices: Devices, clock: Clock) -> None:

@@ -126,8 +126,8 @@ def interrupts() -> Iterator[Asked]:
     asked = Asked()
 
     def interrupted(number: int, _: FrameType | None) -> None:
-        asked.stop = asked.stop or asked.end or number == signal.SIGTERM
-        asked.end = True
+        asked.stop = asked.stop or asked.leave or number == signal.SIGTERM
+        asked.leave = True
         if asked.stop and asked.interruptible:
             raise KeyboardInterrupt
         if asked.stop:

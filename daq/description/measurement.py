@@ -152,6 +152,23 @@ class Estimate(Table):
         return named | {"heralded.signal": self.heralded.signal, "heralded.idler": self.heralded.idler}
 
 
+class Limit(Table):
+    """A band that a sensor's quantity has to keep while a run counts: no safety function."""
+
+    above: float | None = None
+    below: float | None = None
+    settle_s: Annotated[float, Field(ge=0, le=7200)] = 60.0
+    interlock: bool = False
+
+    @model_validator(mode="after")
+    def _is_a_band(self) -> Limit:
+        if self.above is None and self.below is None:
+            raise ValueError("give above, below, or both")
+        if self.above is not None and self.below is not None and not self.above < self.below:
+            raise ValueError("above has to lie under below: the band is between them")
+        return self
+
+
 class Quality(Table):
     """Thresholds of the quality rules, frozen with the run; no rule on counts bites below 3.3 sigma."""
 
@@ -163,6 +180,8 @@ class Quality(Table):
     clock_step_s: Positive = 0.5
     counter_range: Annotated[float, Field(gt=0)] | None = None
     full_range: Annotated[float, Field(gt=0, le=1)] = 0.9
+    overload_hz: Positive | None = None
+    limits: Mapping[str, Limit] = {}
 
 
 class Measurement(Table):

@@ -13,7 +13,14 @@ from daq import openings as names
 from daq.estimate.arrays import FloatArray, added
 from daq.estimate.detected import Detected, detected
 from daq.estimate.plan import Plan
-from daq.estimate.quality import Rules, clock_bits, counter_bits, dispersion, fingerprint
+from daq.estimate.quality import (
+    Rules,
+    clock_bits,
+    counter_bits,
+    dispersion,
+    fingerprint,
+    sensor_bits,
+)
 from daq.estimate.rows import rows_of_readings
 from daq.records import EXCLUDING, Quality, Reading
 
@@ -58,30 +65,37 @@ class Judge:
     """Applies the rules to the readings of a run in their order; `finding` is what the last one showed."""
 
     def __init__(self, plan: Plan, rules: Rules, expected_hz: FloatArray | None = None) -> None:
-        self._plan, self._rules, self._expected_hz = plan, rules, expected_hz
+        self._plan, self._expected_hz = plan, expected_hz
+        self.rules, self.whole_stand = rules, plan.whole_stand
         self._places: dict[int, _Place] = {}
         self._stand: tuple[int, int] | None = None  # whose visits come in now, and at which attempt
         self._attempt: list[Reading] = []
         self._before: Reading | None = None
         self._sliced, self._stood, self._lit = _Median(), _Median(), _Median()
         self.finding: str | None = None
+        self.odd = ""  # the opening that stood out in the last reading's stand
+        self.stand_quality = Quality.GOOD  # of the whole stand that the last reading belongs to, so far
 
     def judge(self, reading: Reading) -> Reading:
         """Return a reading with the bits that the rules add to its quality."""
-        self.finding = None
-        quality = reading.quality | clock_bits(self._before, reading, self._rules)
+        self.finding, self.odd = None, ""
+        quality = reading.quality | clock_bits(self._before, reading, self.rules)
+        quality |= sensor_bits(reading, self.rules)
         if reading.visit >= 0 and self._plan.counting == "counts":
-            quality |= counter_bits(reading, self._rules, self._due(reading))
+            quality |= counter_bits(reading, self.rules, self._due(reading))
             quality |= self._sliced_bits(reading)
         judged = _with(reading, quality)
         attempt = self._gathered(judged)
         if len(attempt) == self._plan.whole_stand:
             judged = _with(judged, quality | self._stand_bits(attempt))
+        first = len(attempt) == 1
+        self.stand_quality = judged.quality | (Quality.GOOD if first else self.stand_quality)
         self._settle(judged)
         return judged
 
     def take(self, reading: Reading) -> None:
         """Take in a reading that was judged before: a run goes on."""
+        self.finding, self.odd = None, ""
         if reading.visit >= 0 and self._plan.counting == "counts":
             self._sliced_bits(reading)
         attempt = self._gathered(reading)
@@ -107,7 +121,7 @@ class Judge:
         if reading.slices is None:
             return Quality.GOOD
         found = dispersion([part[0] / self._plan.fano for part in reading.slices])
-        beyond = found.beyond(self._rules.dispersion_p, self._sliced.scale)
+        beyond = found.beyond(self.rules.dispersion_p, self._sliced.scale)
         if found.dof:
             self._sliced.add(found.ratio)
         return Quality.DISPERSION if beyond else Quality.GOOD
@@ -155,19 +169,20 @@ class Judge:
         self, attempt: Sequence[Reading], place: _Place, counts: FloatArray, exposure: FloatArray
     ) -> Quality:
         found = fingerprint(counts, exposure, place.counts, place.exposure)
-        if not found.beyond(self._rules.fingerprint_p, self._stood.scale):
+        if not found.beyond(self.rules.fingerprint_p, self._stood.scale):
             if found.dof:
                 self._stood.add(found.ratio)
             return Quality.GOOD
         if place.stands == 1 and place.refused is not None:
             again = fingerprint(counts, exposure, *place.refused)
-            if not again.beyond(self._rules.fingerprint_p, self._stood.scale):
+            if not again.beyond(self.rules.fingerprint_p, self._stood.scale):
                 # Two that agree, and the only one kept before does not: that one is odd.
                 place.counts, place.exposure = (part.copy() for part in place.refused)
                 return Quality.GOOD
         place.refused = (counts, exposure)
         name = names.name(int(self._plan.openings[found.worst]))
         where = f"{attempt[0].position_mm:g} mm"
+        self.odd = name
         self.finding = f"The stand at {where} does not fit the earlier ones there; opening {name} stands out."
         return Quality.FINGERPRINT
 
@@ -182,7 +197,7 @@ class Judge:
         noise = float(np.nansum(found.monitor_variance)) / light**2
         again = 1 + 1 / place.stands
         sigma = sqrt(again * (1 / counts.sum() + noise))
-        beyond = abs(off - self._lit.middle) > self._rules.monitor_sigma * max(sigma, self._wander())
+        beyond = abs(off - self._lit.middle) > self.rules.monitor_sigma * max(sigma, self._wander())
         self._lit.add(off)
         return Quality.MONITOR if beyond else Quality.GOOD
 

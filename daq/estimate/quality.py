@@ -7,8 +7,9 @@ that cutting there moves the mean by less than can be seen.
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from math import ceil, log
+from typing import Any
 
 import numpy as np
 from numpy.typing import ArrayLike
@@ -19,6 +20,30 @@ from daq.records import Quality, Reading
 
 LEAST_IN_SLICE = 10.0  # counts; thinner slices are merged with their neighbours
 LEAST_IN_CELL = 5.0  # expected counts; thinner cells are merged, the smallest first
+
+
+@dataclass(frozen=True, slots=True)
+class Limit:
+    """A band that a sensor's quantity has to keep; an `interlock` is cleared at the bench only.
+
+    Otherwise the run goes on by itself when the quantity has been good for `settle_s`.
+    """
+
+    above: float | None = None
+    below: float | None = None
+    settle_s: float = 60.0
+    interlock: bool = False
+
+    def holds(self, value: float) -> bool:
+        """Return whether a value lies within; one that is not a number does not."""
+        low = self.above is None or value >= self.above
+        return low and (self.below is None or value <= self.below) and value == value
+
+    def words(self) -> str:
+        """Return the band in words."""
+        low = "" if self.above is None else f"at least {self.above:g}"
+        high = "" if self.below is None else f"at most {self.below:g}"
+        return f"and has to be {' and '.join(filter(None, (low, high)))}"
 
 
 @dataclass(frozen=True, slots=True)
@@ -33,6 +58,14 @@ class Rules:
     clock_step_s: float = 0.5
     counter_range: float | None = None
     full_range: float = 0.9
+    overload_hz: float | None = None
+    limits: Mapping[str, Limit] = field(default_factory=dict)
+
+
+def rules_of(table: Mapping[str, Any]) -> Rules:
+    """Return the rules that a run's record holds as a table."""
+    limits = {name: Limit(**limit) for name, limit in table.get("limits", {}).items()}
+    return Rules(**{**table, "limits": limits})
 
 
 @dataclass(frozen=True, slots=True)
@@ -90,6 +123,15 @@ def clock_bits(before: Reading | None, reading: Reading, rules: Rules) -> Qualit
         return Quality.GOOD
     step_ns = (reading.utc_ns - before.utc_ns) - (reading.gate_open_ns - before.gate_open_ns)
     return Quality.CLOCK_STEP if abs(step_ns) > rules.clock_step_s * 1e9 else Quality.GOOD
+
+
+def sensor_bits(reading: Reading, rules: Rules) -> Quality:
+    """Return whether a sensor was out of its band."""
+    for name, limit in rules.limits.items():
+        seen = reading.sensors.get(name)
+        if seen is not None and not limit.holds(seen[0]):
+            return Quality.SENSOR
+    return Quality.GOOD
 
 
 def dispersion(slices: Sequence[float], least: float = LEAST_IN_SLICE) -> Spread:

@@ -12,10 +12,10 @@ from daq import openings
 from daq.estimate.arrays import IntArray
 from daq.estimate.dataset import plan_of_dataset, readings_of_dataset
 from daq.estimate.judge import Judge
-from daq.estimate.quality import Rules, encoder_bits
+from daq.estimate.quality import encoder_bits, rules_of
 from daq.records import Quality, Reading
 
-# What can be worked out again; a counter's own overflow flag and what a device said of itself cannot.
+# What can be worked out again; a counter's own overflow flag, and sensors, cannot.
 AGAIN = (
     Quality.OFF_TARGET
     | Quality.MOVED
@@ -40,7 +40,7 @@ def judged_again(dataset: Any) -> IntArray:
     expected = attributes.get("expected_hz")
     judge = Judge(
         plan_of_dataset(dataset),
-        Rules(**attributes.get("quality", {})),
+        rules_of(attributes.get("quality", {})),
         None if expected is None else np.asarray(expected, float),
     )
     return np.array([int(judge.judge(reading).quality) for reading in _readings(dataset)], np.int64)

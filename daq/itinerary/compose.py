@@ -61,6 +61,11 @@ class Itinerary:
         """The number of complete pairs."""
         return (int(self.lap.max()) + 1) // 2
 
+    def ends_stand(self, number: int) -> bool:
+        """Return whether a visit is the last of its stand."""
+        last = number + 1 == len(self)
+        return last or bool(self.stand[number + 1] != self.stand[number])
+
     @property
     def visits_per_stand(self) -> int:
         """How many visits a stand has."""

@@ -10,32 +10,27 @@ from daq.service.requests import Request
 
 @dataclass(slots=True)
 class Asked:
-    """What is asked of a run while it is under way.
+    """What is asked of a run while it is under way, and of the program that carries it out.
 
-    `end` after this stand, `hold` before the next one, `stop` at once; a stop breaks in only while
-    `interruptible`, that is while visits are performed. `requests` gives what operators left, `settled` tells
-    them what became of it, `idle` waits a little on the wall clock while a run holds.
+    `end` this run after this stand; `leave`: end it and the program too; `stop` at once. A stop breaks in
+    only while `interruptible`, that is while visits are performed. `requests` gives what operators left,
+    `settled` tells them what became of it, `idle` waits a little on the wall clock while a run holds.
     """
 
     end: bool = False
     end_after_lap: bool = False
-    hold: bool = False
+    leave: bool = False
     stop: bool = False
     interruptible: bool = False
     requests: Callable[[], Sequence[Request]] = tuple
     settled: Callable[[Request, str], None] = lambda request, outcome: None
     idle: Callable[[], None] = lambda: None
 
+    @property
+    def ends(self) -> bool:
+        """Whether the run is to end after its stand."""
+        return self.end or self.leave
 
-def hear(asked: Asked, utc: str) -> list[Request]:
-    """Take in what operators have asked, oldest first, and return it."""
-    heard = list(asked.requests())
-    for request in heard:
-        if request.what in ("hold", "resume"):
-            asked.hold = request.what == "hold"
-        elif request.what == "end-after-lap":
-            asked.end_after_lap = True
-        else:
-            asked.end = True
-        asked.settled(request, f"heard at {utc}")
-    return heard
+    def for_another_run(self) -> None:
+        """Forget what was asked of the run before."""
+        self.end = self.end_after_lap = False

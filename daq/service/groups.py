@@ -12,7 +12,7 @@ from daq.itinerary import Itinerary
 from daq.itinerary.orders import IntArray
 from daq.records import Visit
 
-PLANNED, AFTER_BREAK, AFTER_FAULT = 0, 1, 2  # ids of daq.records.REASONS
+PLANNED, AFTER_BREAK, AFTER_FAULT, BY_RULE = 0, 1, 2, 3  # ids of daq.records.REASONS
 
 
 @dataclass(frozen=True, slots=True)

@@ -10,21 +10,20 @@ from datetime import UTC, datetime
 from pathlib import Path
 from typing import Any
 
-import numpy as np
-
 from daq.errors import StorageError
 from daq.estimate import Running
-from daq.estimate.rows import DETECTOR
-from daq.estimate.watch import Watched, concerns
+from daq.estimate.standing import Change, Standing
+from daq.estimate.wake import Held
 from daq.itinerary import Itinerary
 from daq.ports import Clock
 from daq.records import Reading
+from daq.service.strip import Strip
+from daq.service.watcher import Watcher
 from daq.storage.feed import write_feed
 
 log = logging.getLogger(__name__)
 
 EVERY_S = 1.0
-COLUMNS = 400
 LOG_LINES = 30
 
 
@@ -38,53 +37,61 @@ class Live:
         itinerary: Itinerary,
         clock: Clock,
         room: Callable[[], str] = lambda: "",
+        restarts: int = 0,
     ) -> None:
-        self._room = room
         self._folder, self._meta, self._itinerary, self._clock = folder, meta, itinerary, clock
-        self._expected = itinerary.rates_hz.mean(axis=1)
-        self._place = itinerary.position_index
+        self._mean_hz = float(itinerary.rates_hz.mean())
         self._written_s = float("-inf")
-        self._started_ns, self._started_utc_ns = clock.now_ns(), clock.utc_ns()
-        self._hours: list[float] = []
-        self._levels: list[float] = []
-        self._stand: list[
-            tuple[float, float, float]
-        ] = []  # counts, live seconds, expected rate of this stand
-        self._repeated: set[int] = set()
+        self._started_utc = str(meta.get("started_utc") or stamp(clock.utc_ns()))
+        self._strip = Strip(itinerary, meta)
+        self.watcher = Watcher(self._strip, itinerary, meta, room, restarts)
         self._log: deque[dict[str, str]] = deque(maxlen=LOG_LINES)
-        self._since: dict[str, str] = {}  # kind of warning -> when it was first raised
         self._last: Reading | None = None
+        self._held: tuple[Held, str] | None = None  # and since when, UTC
+        self._muted_until_utc: str | None = None
+
+    @property
+    def stands(self) -> int:
+        """How many stands are closed."""
+        return len(self._strip.levels)
 
     def say(self, text: str) -> None:
         """Add a sentence to the log that the page shows."""
         self._log.append({"utc": stamp(self._clock.utc_ns()), "text": text})
 
-    def took(self, reading: Reading) -> None:
-        """Take a committed reading into the rate strip."""
-        before, self._last = self._last, reading
-        if reading.visit < 0:
-            return
-        stand = int(self._itinerary.stand[reading.visit])
-        if before is not None and before.visit >= 0 and int(self._itinerary.stand[before.visit]) != stand:
-            self._close_stand(before)
-        if reading.attempt > 1:
-            self._repeated.add(stand)
-        expected = float(self._itinerary.rates_hz[self._place[reading.visit], self._opening(reading)])
-        amount = reading.live_s if self._meta.get("counting") == "power" else 1.0
-        self._stand.append((reading.values[DETECTOR] * amount, reading.live_s, expected))
+    def took(self, reading: Reading, odd: str = "") -> bool:
+        """Take in a committed reading; return whether the stand before it is closed now.
 
-    def _opening(self, reading: Reading) -> int:
-        return int(np.searchsorted(self._itinerary.openings, reading.opening))
+        Parameters
+        ----------
+        odd
+            The opening that stood out in that stand, or nothing.
+        """
+        self._last = reading
+        self.watcher.took(reading)
+        closed = self._strip.took(reading)
+        if closed:
+            self.watcher.stood(odd)
+        return closed
 
-    def _close_stand(self, last: Reading) -> None:
-        counts, wanted = (
-            sum(entry[0] for entry in self._stand),
-            sum(live_s * hz for _, live_s, hz in self._stand),
-        )
-        self._stand.clear()
-        if wanted > 0:
-            self._hours.append((last.gate_close_ns - self._started_ns) / 3.6e12)
-            self._levels.append(counts / wanted)
+    def look(
+        self, running: Running, held: Held | None = None, ended: str = "", *, anew: bool = False
+    ) -> tuple[Change, ...]:
+        """Look at every condition again and return what became of the warnings; `anew` asks the estimate."""
+        if anew:
+            self.watcher.know(running.estimate().to_json())
+        now = stamp(self._clock.utc_ns())
+        if held is None:
+            self._held = None
+        elif self._held is None or self._held[0].cause != held.cause:
+            self._held = held, now
+        else:
+            self._held = held, self._held[1]
+        return self.watcher.look(now, self._left_s(), held, ended, over=bool(ended))
+
+    def mute(self, until_utc_ns: int) -> None:
+        """Say until when nobody wants to be called."""
+        self._muted_until_utc = stamp(until_utc_ns)
 
     def write(self, state: str, running: Running, ended: str | None = None, *, now: bool = False) -> None:
         """Write the feed, unless the last one is younger than a second."""
@@ -99,26 +106,28 @@ class Live:
     def _feed(self, state: str, running: Running, ended: str | None) -> dict[str, Any]:
         estimate = running.estimate()
         figures = estimate.to_json()
-        run_ns = self._clock.now_ns() - self._started_ns
         return {
             "format": 1,
             **{key: self._meta[key] for key in ("run", "title", "kind", "clock", "slits", "normalisation")},
             "blinding": self._meta["blinding"],
             "state": state,
-            "started_utc": stamp(self._started_utc_ns),
-            "run_s": run_ns / 1e9,
+            "started_utc": self._started_utc,
+            "run_s": self._run_s(),
             "updated_utc": stamp(self._clock.utc_ns()),
             "written_utc": datetime.now(UTC).isoformat(timespec="milliseconds"),
             "visit": self._visit(),
-            "ends_utc": stamp(self._ends_utc_ns(run_ns)),
+            "ends_utc": stamp(self._clock.utc_ns() + round(self._left_s() * 1e9)),
             "positions_mm": self._itinerary.positions_mm.tolist(),
             "openings": self._itinerary.openings.tolist(),
             **_patterns(figures),
             "kappa": _kappa(figures),
             "history": running.history(),
-            "rate": _columns(self._hours, self._levels, float(self._expected.mean())),
+            "rate": self._strip.columns(self._mean_hz),
             "sensors": {} if self._last is None else {k: v[:2] for k, v in self._last.sensors.items()},
-            "warnings": self._warnings(figures, run_ns),
+            "warnings": [_told(one) for one in self.watcher.standing],
+            "holding": self._holding(),
+            "in_doubt": any(one.says.in_doubt for one in self.watcher.standing),
+            "muted_until_utc": self._muted_until_utc,
             "log": list(self._log),
             "ended": None if ended is None else {"reason": ended, "utc": stamp(self._clock.utc_ns())},
             "truth_kappa": self._meta.get("truth_kappa"),
@@ -137,36 +146,41 @@ class Live:
             "attempt": last.attempt,
         }
 
-    def _ends_utc_ns(self, run_ns: int) -> int:
-        """Return when the run should end: what is left of the plan, added to now."""
+    def _left_s(self) -> float:
+        """Return what is left of the plan [s]."""
         done = -1 if self._last is None else self._last.visit
-        left_s = self._itinerary.total_s - (float(self._itinerary.start_s[done]) if done >= 0 else 0.0)
-        return self._started_utc_ns + run_ns + round(left_s * 1e9)
+        return self._itinerary.total_s - (float(self._itinerary.start_s[done]) if done >= 0 else 0.0)
 
-    def _warnings(self, figures: Mapping[str, Any], run_ns: int) -> list[dict[str, str]]:
-        watched = Watched(
-            levels=self._levels,
-            hours=run_ns / 3.6e12,
-            pairs=figures["pairs"],
-            excess=figures["excess"],
-            stands_done=len(self._levels),
-            stands_left_out=figures["stands_left_out"],
-            stands_repeated=len(self._repeated),
-            short_of_room=self._room(),
-        )
-        now = stamp(self._clock.utc_ns())
-        found = concerns(watched)
-        self._since = {one.kind: self._since.get(one.kind, now) for one in found}
-        return [
-            {
-                "kind": one.kind,
-                "what": one.what,
-                "do": one.do,
-                "good": one.good,
-                "since_utc": self._since[one.kind],
-            }
-            for one in found
-        ]
+    def _run_s(self) -> float:
+        """Return the time on the run clock since the first gate: breaks of the program do not count."""
+        first_ns = self._strip.first_ns
+        return 0.0 if first_ns is None else (self._clock.now_ns() - first_ns) / 1e9
+
+    def _holding(self) -> dict[str, Any] | None:
+        if self._held is None:
+            return None
+        held, since = self._held
+        return {"cause": held.cause, "why": held.why, "since_utc": since, "at_bench": held.at_bench}
+
+
+def _told(one: Standing) -> dict[str, Any]:
+    """Return a warning as the page gets it."""
+    says = one.says
+    seen = {"by": one.acknowledged_by, "utc": one.acknowledged_utc} if one.acknowledged_by else None
+    return {
+        "id": one.name,
+        "kind": says.kind,
+        "level": "wake" if says.wakes else "note",
+        "what": says.what,
+        "did": says.did,
+        "do": says.do,
+        "cost": says.cost,
+        "good": says.good,
+        "in_doubt": says.in_doubt,
+        "since_utc": one.since_utc,
+        "updated_utc": one.updated_utc,
+        "acknowledged": seen,
+    }
 
 
 def stamp(utc_ns: int) -> str:
@@ -189,19 +203,4 @@ def _kappa(figures: Mapping[str, Any]) -> dict[str, Any]:
         "se": figures["kappa_se"],
         "counting_se": figures["kappa_counting_se"],
         **{key: figures[key] for key in (*same, "goal_se", "forecast_se")},
-    }
-
-
-def _columns(hours: list[float], levels: list[float], scale_hz: float) -> dict[str, list[float]]:
-    """Return least, mean and most of the rate in at most COLUMNS columns: every dip is kept."""
-    if not hours:
-        return {"hours": [], "low": [], "mean": [], "high": []}
-    rates = np.asarray(levels) * scale_hz
-    cuts = np.unique(np.linspace(0, rates.size, min(COLUMNS, rates.size) + 1).astype(int))[:-1]
-    many = np.diff(np.append(cuts, rates.size))
-    return {
-        "hours": np.asarray(hours)[np.append(cuts[1:], rates.size) - 1].round(4).tolist(),
-        "low": np.minimum.reduceat(rates, cuts).round(2).tolist(),
-        "mean": (np.add.reduceat(rates, cuts) / many).round(2).tolist(),
-        "high": np.maximum.reduceat(rates, cuts).round(2).tolist(),
     }

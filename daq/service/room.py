@@ -8,6 +8,7 @@ from daq.storage.layout import CHUNK
 from daq.storage.space import free_bytes, needed_bytes
 
 HOLD_BYTES = 1_000_000_000
+END_BYTES = 200_000_000
 
 
 def shortage(folder: Path, hold_bytes: int = HOLD_BYTES) -> str:
@@ -16,6 +17,14 @@ def shortage(folder: Path, hold_bytes: int = HOLD_BYTES) -> str:
     if free >= hold_bytes:
         return ""
     return f"Only {free / 1e9:.2f} GB are free on the disk; the run holds below {hold_bytes / 1e9:g} GB."
+
+
+def exhausted(folder: Path, end_bytes: int = END_BYTES) -> str:
+    """Return a sentence when there is so little room that a run has to end cleanly, else nothing."""
+    free = free_bytes(folder)
+    if free >= end_bytes:
+        return ""
+    return f"Only {free / 1e9:.2f} GB are free on the disk; the run ends below {end_bytes / 1e9:g} GB."
 
 
 def room_warning(folder: Path, visits: int) -> str:

@@ -58,7 +58,7 @@ def serve(lab: Path, asked: Asked) -> int:
 
 def _start_what_is_due(lab: Path, asked: Asked, due: queue.Queue[Due]) -> int:
     started = 0
-    while not asked.end:
+    while not asked.leave:
         try:
             booking, when = due.get(timeout=0.2)
         except queue.Empty:

@@ -15,23 +15,27 @@ import xarray as xr
 from daq.devices.clock import RealClock
 from daq.devices.registry import open_devices
 from daq.errors import DaqError, DeviceError, StorageError
-from daq.estimate import Judge, Rules, Running, readings_of_dataset
+from daq.estimate import Judge, Running, readings_of_dataset
+from daq.estimate.quality import rules_of
+from daq.estimate.standing import Change
 from daq.itinerary import Itinerary, plan_of
 from daq.ports import Bench, Clock, Devices
 from daq.records import Reading
 from daq.sequencer import State
 from daq.service.asked import Asked
+from daq.service.course import carry_out
 from daq.service.extensions import open_bench
 from daq.service.groups import Place, place_after
 from daq.service.live import Live, stamp
 from daq.service.load import Loaded, Wishes, load_run
-from daq.service.night import BENCH_FILE, STOPPED, Night, carry_out, park, stop_now, tell
+from daq.service.night import COMPLETE, STOPPED, Night, look, tell
+from daq.service.parking import BENCH_FILE, park, stop_now
 from daq.service.record import record_of
-from daq.service.requests import open_requests, settle
-from daq.service.room import room_warning, shortage
+from daq.service.requests import lapse, open_requests, settle
+from daq.service.room import exhausted, room_warning, shortage
 from daq.storage.digest import digest, gate_digest
 from daq.storage.lab import new_run_folder
-from daq.storage.log import RunLog
+from daq.storage.log import RunLog, read_log
 from daq.storage.reader import open_visits, read_meta
 from daq.storage.run import Archive, create_run, open_run
 
@@ -47,6 +51,8 @@ class Wanted:
     asked: Asked = field(default_factory=Asked)
     on_start: Callable[[Path, Itinerary], None] = lambda folder, itinerary: None
     on_visit: Callable[[Reading], None] = lambda reading: None
+    on_warning: Callable[[Path, Change], None] = lambda folder, change: None
+    alive: Callable[[], None] = lambda: None
     until: datetime | None = None
 
 
@@ -89,8 +95,16 @@ def resume(folder: Path, wanted: Wanted) -> tuple[Path, str]:
         for reading in readings_of_dataset(visits):
             night.judge.take(reading)
             night.running.add(reading)
-            night.live.took(reading)
+            night.live.took(reading, night.judge.odd)
+        _let_lapse(night)
         return folder, _through(night, place_after(itinerary, visits), wanted)
+
+
+def _let_lapse(night: Night) -> None:
+    """Answer what was asked while nobody carried the run out: it is not obeyed hours later."""
+    why = f"not heard: nobody carried the run out; it goes on at {stamp(night.clock.utc_ns())}"
+    for request in lapse(night.folder.parents[1], night.folder.name, why):
+        tell(night, f"{request.what} lapsed", who=request.who, text=f"{request.who}'s {request.what}: {why}.")
 
 
 def _through(night: Night, place: Place, wanted: Wanted) -> str:
@@ -147,7 +161,9 @@ def _interruptibly(night: Night, place: Place) -> str:
 def _end(night: Night, reason: str) -> None:
     park(night)
     night.become(State.ENDED)
+    night.holds.clear()
     tell(night, "ended", reason=reason)
+    look(night, "" if reason == COMPLETE else reason, anew=True)
     night.live.write(night.state.value, night.running, reason, now=True)
 
 
@@ -162,7 +178,7 @@ def _night(
     wanted: Wanted,
 ) -> Night:
     plan = plan_of(itinerary, loaded.measurement)
-    rules = Rules(**loaded.measurement.quality.model_dump())
+    rules = rules_of(loaded.measurement.quality.model_dump())
     return Night(
         folder=folder,
         itinerary=itinerary,
@@ -171,12 +187,22 @@ def _night(
         devices=devices,
         running=Running(plan),
         judge=Judge(plan, rules, itinerary.rates_hz),
-        live=Live(folder, archive.meta, itinerary, clock, lambda: room_warning(folder, len(itinerary))),
+        live=Live(
+            folder,
+            archive.meta,
+            itinerary,
+            clock,
+            lambda: room_warning(folder, len(itinerary)),
+            _restarts(folder, clock),
+        ),
         log=RunLog(folder),
         asked=wanted.asked,
         bench=bench,
         on_visit=wanted.on_visit,
+        on_warning=lambda change: wanted.on_warning(folder, change),
+        alive=wanted.alive,
         shortage=lambda: shortage(folder),
+        exhausted=lambda: exhausted(folder),
         until_utc_ns=None if wanted.until is None else round(wanted.until.timestamp() * 1e9),
     )
 
@@ -203,6 +229,14 @@ def _clock(
     stack.callback(bench.close)
     bench.clock.sleep_until(last_ns)
     return bench.clock, bench
+
+
+def _restarts(folder: Path, clock: Clock) -> int:
+    """Return how often the program went on with a run within the last hour; rehearsals have no such hour."""
+    if clock.kind != "real":
+        return 0
+    since = stamp(clock.utc_ns() - 3600 * 10**9)
+    return sum(entry["event"] == "run goes on" and entry["utc"] >= since for entry in read_log(folder))
 
 
 def _kept(folder: Path) -> bytes | None:

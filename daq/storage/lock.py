@@ -30,3 +30,18 @@ def lock_run(folder: Path) -> int:
             remedy="Wait until it has ended, or end it; two writers are never allowed",
         ) from None
     return handle
+
+
+def is_written(folder: Path) -> bool:
+    """Return whether a process holds a run as its writer: somebody carries it out."""
+    try:
+        handle = os.open(folder / LOCK, os.O_RDONLY | os.O_CLOEXEC)
+    except OSError:
+        return False
+    try:
+        fcntl.flock(handle, fcntl.LOCK_SH | fcntl.LOCK_NB)
+    except BlockingIOError:
+        return True
+    finally:
+        os.close(handle)
+    return False

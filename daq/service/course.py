@@ -1,0 +1,228 @@
+"""The course of a night: visits performed, faults reacted to, every reading archived, watched and told."""
+
+from __future__ import annotations
+
+import logging
+from collections.abc import Iterator
+
+import numpy as np
+
+from daq.errors import DeviceError, StorageError
+from daq.itinerary import Itinerary
+from daq.reactions import Action, reaction
+from daq.records import Quality, Reading
+from daq.sequencer import State, axis_trouble, perform
+from daq.service.groups import AFTER_FAULT, BY_RULE, Place, repeat_from, supply
+from daq.service.hearing import hear
+from daq.service.holding import hold, pass_time, wait_out, watch_limits
+from daq.service.night import AT_REQUEST, COMPLETE, Night, Trouble, look, tell
+from daq.service.parking import keep_bench
+
+log = logging.getLogger(__name__)
+
+REPEATED = Quality.OFF_TARGET | Quality.MOVED | Quality.OVERFLOW | Quality.DISPERSION | Quality.FINGERPRINT
+REPEATED_SHARE = 0.1  # of the stands so far; above it a repeat is no cure
+ASTRAY_STANDS = 6
+DARK_STANDS = 2
+RESTARTS_AN_HOUR = 3
+
+
+def carry_out(night: Night, place: Place) -> str:
+    """Perform a run from a place to its end and return how it ended.
+
+    Raises
+    ------
+    DeviceError
+        When a fault could not be cured within the limits of the table; the run can be resumed.
+    StorageError
+        When a reading could not be stored; all before it are safe.
+    """
+    tell(night, "run goes on" if place.number else "run begins", visit=place.number)
+    if night.live.watcher.restarts >= RESTARTS_AN_HOUR:
+        night.asked.end_after_lap = True
+    night.trouble = Trouble(night.clock.now_ns())
+    while not night.asked.ends and place.number < len(night.itinerary):
+        place = _stretch(night, place)
+        wait_out(night)
+    night.become(State.PARKING)
+    return COMPLETE if place.number == len(night.itinerary) else AT_REQUEST
+
+
+def _stretch(night: Night, place: Place) -> Place:
+    """Perform visits until the plan is done or something comes between; return where to go on."""
+    last: Reading | None = None
+    try:
+        for reading in _readings(night, place):
+            last = reading
+            if _comes_between(night, reading):
+                break
+    except DeviceError as error:
+        found = _trouble_of(night, error)
+        _react(night, found)
+    except StorageError as error:
+        if not night.shortage():
+            raise
+        tell(night, "not stored", text=str(error))
+    if last is not None and _measure_again(night, last):
+        night.sat_out += 1
+        return repeat_from(night.itinerary, last.visit, last.attempt, BY_RULE)
+    return place_after(night.itinerary, place, last)
+
+
+def _readings(night: Night, place: Place) -> Iterator[Reading]:
+    visits = supply(night.itinerary, place, lambda number: _may_go_on(night, number))
+    performed = perform(
+        visits,
+        night.devices,
+        night.archive,
+        night.clock,
+        night.become,
+        night.judge.judge,
+        lambda: _patient(night),
+    )
+    for _, reading in performed:
+        if night.judge.finding:
+            tell(night, "left out", text=night.judge.finding)
+        night.running.add(reading)
+        closed = night.live.took(reading, night.judge.odd)
+        if night.trouble.kind != "no counts" or (closed and not night.live.watcher.dark_stands):
+            night.trouble = Trouble(night.clock.now_ns())
+        if closed:
+            _stood(night, reading)
+        night.on_visit(reading)
+        night.alive()
+        night.live.write(night.state.value, night.running)
+        yield reading
+
+
+def _stood(night: Night, reading: Reading) -> None:
+    """Do what is due at the end of a stand."""
+    following = reading.visit + 1
+    look(night, anew=following == len(night.itinerary) or _begins_lap(night.itinerary, following))
+    keep_bench(night)
+    pause_s = night.itinerary.pauses.get(following, 0.0)
+    if pause_s:
+        text = f"A pause of {pause_s:.0f} s before the next pair, as planned."
+        tell(night, "pause", text=text, visit=following)
+
+
+def _comes_between(night: Night, reading: Reading) -> bool:
+    """Return whether the visits have to be broken off after a reading: a hold, or a stand to be repeated."""
+    watch_limits(night, reading)
+    astray = bool(reading.quality & (Quality.OFF_TARGET | Quality.MOVED))
+    if night.itinerary.ends_stand(reading.visit):
+        night.astray = night.astray + 1 if astray else 0
+        if night.astray >= ASTRAY_STANDS:
+            night.astray = 0
+            hold(night, "reference", f"An axis is away from its target in {ASTRAY_STANDS} stands in a row.")
+        if night.live.watcher.dark_stands >= DARK_STANDS:
+            why = f"No light in {night.live.watcher.dark_stands} stands in a row"
+            _react(night, DeviceError(why, kind="no counts"))
+            return True
+    held = any(cause != "asked" for cause in night.holds)
+    return held or _measure_again(night, reading)
+
+
+def _measure_again(night: Night, last: Reading) -> bool:
+    """Return whether the stand that a reading ends is measured again: once, when a rule speaks."""
+    if night.itinerary.visits_per_stand != night.judge.whole_stand or night.asked.ends:
+        return False  # in blocked order a stand cannot be repeated on its own
+    if not night.itinerary.ends_stand(last.visit) or last.attempt > 1:
+        return False
+    return (
+        bool(night.judge.stand_quality & REPEATED) and night.sat_out <= 5 + REPEATED_SHARE * night.live.stands
+    )
+
+
+def _may_go_on(night: Night, number: int) -> bool:
+    """Return whether a stand may begin; asked while the gate before it is open, so nothing waits here."""
+    hear(night)
+    until_ns = night.until_utc_ns
+    if until_ns is not None and night.clock.utc_ns() + _stand_ns(night, number) > until_ns:
+        night.asked.end = True
+    if night.asked.end_after_lap and _begins_lap(night.itinerary, number):
+        night.asked.end = True
+    return not (night.asked.ends or night.holds or night.shortage())
+
+
+def _patient(night: Night) -> bool:
+    """Return whether a pause may go on; asked every second of it."""
+    hear(night)
+    night.alive()
+    return not (night.asked.ends or night.asked.end_after_lap or night.holds)
+
+
+def _stand_ns(night: Night, number: int) -> int:
+    """Return how long the stand that a visit begins will take, and what is left of the one before."""
+    plan = night.itinerary
+    within = np.flatnonzero(plan.stand == plan.stand[number])
+    took_s = plan.start_s[within[-1]] + plan.dwell_s[within[-1]] - plan.start_s[number]
+    return round(1e9 * float(took_s + plan.dwell_s[number]))
+
+
+def _begins_lap(itinerary: Itinerary, number: int) -> bool:
+    return number == 0 or bool(itinerary.lap[number] != itinerary.lap[number - 1])
+
+
+def place_after(itinerary: Itinerary, place: Place, last: Reading | None) -> Place:
+    """Return where to go on: a stand that was broken off is repeated whole, as another attempt."""
+    if last is None:
+        return place
+    if itinerary.ends_stand(last.visit):
+        return Place(last.visit + 1)
+    return repeat_from(itinerary, last.visit, last.attempt, AFTER_FAULT)
+
+
+def _trouble_of(night: Night, error: DeviceError) -> DeviceError:
+    """Return what is behind a refusal: an alarm or a lost reference, where an axis says so."""
+    if error.kind != "refused":
+        return error
+    try:
+        for stage in night.devices.stages:
+            found = axis_trouble(stage.name, stage.state())
+            if found is not None:
+                return found
+    except DeviceError as another:
+        return another
+    return error
+
+
+def _react(night: Night, error: DeviceError) -> None:
+    """Do about a fault what the table says; raises it when that is to park."""
+    trouble = night.trouble
+    tell(night, "fault", text=_said(error), kind=error.kind)
+    elapsed_s = (night.clock.now_ns() - trouble.good_ns) / 1e9
+    action, wait_s = reaction(error.kind, trouble.tries, elapsed_s)
+    if action is Action.PARK:
+        night.become(State.PARKING)
+        raise error
+    if action is Action.HOLD_AT_BENCH:
+        hold(night, error.kind, f"{_said(error)}")
+        return
+    trouble.tries, trouble.why, trouble.kind = trouble.tries + 1, _said(error), error.kind
+    _recover(night, action, wait_s)
+
+
+def _said(error: DeviceError) -> str:
+    """Return a fault as one sentence, without the advice that is for a run that has given up."""
+    place = f"{error.where}: " if error.where else ""
+    return f"{place}{error.what}".rstrip(".") + "."
+
+
+def _recover(night: Night, action: Action, wait_s: float) -> None:
+    """Wait, and open the links again when the fault asks for it; a failure shows at the next try."""
+    night.become(State.HOLDING)
+    look(night)
+    night.live.write(night.state.value, night.running, now=True)
+    until_ns = night.clock.now_ns() + round(wait_s * 1e9)
+    while night.clock.now_ns() < until_ns and not night.asked.ends:
+        pass_time(night, until_ns)
+        hear(night)
+    if action is not Action.RECONNECT:
+        return
+    for device in night.devices.all:
+        device.close()
+        try:
+            device.open()
+        except DeviceError as error:
+            log.warning("%s", error)
