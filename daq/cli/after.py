@@ -20,7 +20,7 @@ from daq.storage.verify import verify as verified
 def report(arguments: argparse.Namespace) -> Answer:
     """Print the report of a run, from its archive alone."""
     figures = figures_of(arguments.run)
-    return Answer(0, figures, lines(figures))
+    return Answer(StorageError.exit_status if figures["damaged"] else 0, figures, lines(figures))
 
 
 def verify(arguments: argparse.Namespace) -> Answer:
@@ -30,7 +30,12 @@ def verify(arguments: argparse.Namespace) -> Answer:
     whole = f"{found.visits} of {found.rows} visits are whole"
     if found.ok:
         return Answer(0, figures, [f"{arguments.run}: {whole}; nothing is damaged."])
-    return Answer(StorageError.exit_status, figures, [*(f"{one}." for one in found.problems), f"{whole}."])
+    told = [
+        *(f"{one}." for one in found.problems),
+        f"{whole}.",
+        *(f"Still good: {one}." for one in found.good),
+    ]
+    return Answer(StorageError.exit_status, figures | {"good": list(found.good)}, told)
 
 
 def pack(arguments: argparse.Namespace) -> Answer:

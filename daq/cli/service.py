@@ -17,6 +17,7 @@ from daq.service.bookings import book as booked
 from daq.service.load import load
 from daq.service.mail import settings_of
 from daq.service.serve import serve as served
+from daq.storage.lab import there
 from daq.storage.lab_book import select
 
 
@@ -77,6 +78,7 @@ def book(arguments: argparse.Namespace) -> Answer:
 
 def list_bookings(arguments: argparse.Namespace) -> Answer:
     """List the bookings of a lab and what became of them, or cancel one."""
+    there(arguments.lab)
     if arguments.cancel is not None:
         cancel(arguments.lab, arguments.cancel)
     found = bookings(arguments.lab)

@@ -10,7 +10,7 @@ from typing import Any
 from daq.cli.answer import Answer
 from daq.service.requests import ask
 from daq.storage.feed import read_feed
-from daq.storage.lab import runs
+from daq.storage.lab import runs, there
 from daq.storage.log import read_log
 
 NO_SAFETY = "This is a request to the program, no safety function."
@@ -18,7 +18,7 @@ NO_SAFETY = "This is a request to the program, no safety function."
 
 def status(arguments: argparse.Namespace) -> Answer:
     """Say how the newest run of a lab is getting on."""
-    found = runs(arguments.lab)
+    found = runs(there(arguments.lab))
     feed = read_feed(found[-1]) if found else None
     if feed is None:
         return Answer(0, {"state": "none", "run": None, "since": None}, [f"{arguments.lab}: no run yet"])
@@ -36,6 +36,10 @@ def status(arguments: argparse.Namespace) -> Answer:
 def log(arguments: argparse.Namespace) -> Answer:
     """Print what happened in a run."""
     entries = read_log(arguments.run)
+    if not entries:
+        from daq.storage.reader import read_meta
+
+        read_meta(arguments.run)  # raises where there is no run: an empty log would hide a mistyped path
     return Answer(0, {"run": str(arguments.run), "log": entries}, [_log_line(entry) for entry in entries])
 
 

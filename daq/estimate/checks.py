@@ -48,9 +48,10 @@ def odd_first_stands(visits: Visits, plan: Plan, rules: Rules) -> list[float]:
     """Return the positions [mm] whose first stand does not fit the later ones: no rule could see it then."""
     _, position = stand_places(plan)
     cells = len(plan.openings)
-    place = plan.stand * cells + plan.opening
+    shown = np.flatnonzero(plan.stand >= 0)  # of a damaged run visits may be lost before others
+    place = (plan.stand * cells + plan.opening)[shown]
     counts, live = (
-        np.bincount(place, column, len(position) * cells).reshape(-1, cells)
+        np.bincount(place, column[shown], len(position) * cells).reshape(-1, cells)
         for column in (visits.value / plan.fano, visits.live)
     )
     odd = []

@@ -34,6 +34,8 @@ def summary(folder: Path, visits: xr.Dataset, digests: Mapping[str, str]) -> dic
         "title": meta["title"],
         "kind": meta["kind"],
         "finished": bool(meta.get("finished", False)),
+        "damaged": list(meta.get("damaged", ())),
+        "recorded_kappa": meta.get("results", {}).get("kappa"),
         **estimate.to_json(),
         "account": account_of(visits).to_json(),
         "quality_differs": _judged_otherwise(visits),

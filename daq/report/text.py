@@ -26,7 +26,25 @@ def lines(figures: Mapping[str, Any]) -> list[str]:
 def _head(figures: Mapping[str, Any]) -> list[str]:
     kind = {"rehearsal": "A rehearsal on simulated hardware.", "replay": "A replay of an archived run."}
     title = figures["title"] or figures["name"]
-    return [f"{title} ({figures['name']})", *([kind[figures["kind"]]] if figures["kind"] in kind else [])]
+    return [
+        *_damage(figures),
+        f"{title} ({figures['name']})",
+        *([kind[figures["kind"]]] if figures["kind"] in kind else []),
+    ]
+
+
+def _damage(figures: Mapping[str, Any]) -> list[str]:
+    """Return what is lost of a damaged archive, before anything that rests on the rest."""
+    if not figures["damaged"]:
+        return []
+    then = figures["recorded_kappa"]
+    recorded = "" if then is None else f" When it was finished, kappa was {_signed(then)}."
+    return [
+        "DAMAGED: a part of this archive is lost. What follows rests on what is good, not on the whole run."
+        + recorded,
+        *(f"! {one}." for one in figures["damaged"]),
+        "",
+    ]
 
 
 def _residual(figures: Mapping[str, Any]) -> list[str]:

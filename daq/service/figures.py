@@ -13,10 +13,12 @@ from daq.storage.reader import open_visits
 def figures_of(folder: Path) -> dict[str, Any]:
     """Return the figures of a run's report; the run may be going on.
 
+    Of a damaged run they are those of what is still good; `damaged` then holds a sentence for each damage.
+
     Raises
     ------
     StorageError
         When the archive cannot be read.
     """
-    visits = open_visits(folder)
+    visits = open_visits(folder, salvage=True)
     return summary(folder, visits, {"digest": digest(visits), "gate_digest": gate_digest(visits)})

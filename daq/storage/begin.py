@@ -8,11 +8,11 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from daq.errors import StorageError
-from daq.storage.disk import Disk
+from daq.storage.disk import Disk, write_durably
 from daq.storage.journal import create_journal
-from daq.storage.layout import FORMAT, list_mode
+from daq.storage.layout import FORMAT, RECORD, ZARR, list_mode
 from daq.storage.rows import Rows
-from daq.storage.seal import ZARR, create_zarr
+from daq.storage.seal import create_zarr
 from daq.storage.snapshot import JOURNAL
 from daq.storage.texts import write_texts
 from daq.storage.trouble import rim
@@ -36,6 +36,7 @@ def write_beginning(
                 "texts_sha256": write_texts(folder, texts, disk),
             }
         )
+        write_durably(disk, folder / RECORD, json.dumps(whole, indent=1).encode())
         create_zarr(folder, whole, itinerary, disk)
         create_journal(folder, Rows(whole), whole)
         disk.sync_dir(folder)

@@ -7,6 +7,8 @@ from datetime import UTC, datetime
 from itertools import count
 from pathlib import Path
 
+from daq.errors import StorageError
+
 _RUN = re.compile(r"\d{8}T\d{6}Z-.+")
 
 
@@ -22,6 +24,13 @@ def new_run_folder(lab: Path, utc_ns: int, name: str) -> Path:
         return first
     others = (first.with_name(f"{first.name}-{number}") for number in count(2))
     return next(folder for folder in others if not folder.exists())
+
+
+def there(lab: Path) -> Path:
+    """Return a lab folder that is to be looked at; raises StorageError where there is none."""
+    if not lab.is_dir():
+        raise StorageError("there is no such lab", where=str(lab), remedy="Check the path")
+    return lab
 
 
 def runs(lab: Path) -> list[Path]:

@@ -13,6 +13,10 @@ from daq.records import REASONS, Quality
 FORMAT = 1  # version of the archive; a reader refuses a newer one
 EVENT_CHUNK = 1 << 20
 EVENTS = "event_gap"
+ZARR = "run.zarr"
+ITINERARY = "itinerary"
+RECORD = "record.json"  # what the run is, kept a second time: one lost file must not cost a run its meaning
+FINISHED = "finished"  # attribute of a run that is whole; it counts only when the journal is gone
 CHUNK = 4096  # visits sealed at once (storage.md section 4: 16384 stalls a commit four times longer)
 
 

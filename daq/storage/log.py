@@ -8,6 +8,7 @@ from typing import Any
 
 import orjson
 
+from daq.errors import StorageError
 from daq.storage.trouble import rim
 
 LOG = "log.jsonl"
@@ -36,6 +37,8 @@ def read_log(folder: Path) -> list[dict[str, Any]]:
     """Return the lines of a run's log, oldest first; a line that a crash tore is left out."""
     path = folder / LOG
     if not path.exists():
+        if not folder.is_dir():
+            raise StorageError("there is no such run", where=str(folder), remedy="Check the path")
         return []
     with rim(path):
         lines = path.read_bytes().splitlines()

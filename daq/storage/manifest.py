@@ -7,16 +7,16 @@ from collections.abc import Iterable
 from pathlib import Path
 
 from daq.storage.disk import Disk, write_durably
-from daq.storage.seal import ZARR
+from daq.storage.layout import RECORD, ZARR
 
 MANIFEST = "sha256.txt"
 
 
 def write_manifest(folder: Path, texts: Iterable[str], disk: Disk) -> None:
-    """Write the SHA-256 of every file of the Zarr group and of the verbatim copies."""
+    """Write the SHA-256 of every file of the Zarr group, of the record and of the verbatim copies."""
     files = [
         *sorted(path for path in (folder / ZARR).rglob("*") if path.is_file()),
-        *(folder / t for t in texts),
+        *(path for name in (RECORD, *texts) if (path := folder / name).is_file()),
     ]
     lines = (f"{_sha256(path)}  {path.relative_to(folder).as_posix()}\n" for path in files)
     write_durably(disk, folder / MANIFEST, "".join(lines).encode())

@@ -14,8 +14,8 @@ import bagit
 
 from daq.errors import StorageError
 from daq.storage.export import write_csv
+from daq.storage.layout import FINISHED, ZARR
 from daq.storage.reader import read_meta
-from daq.storage.seal import FINISHED, ZARR
 from daq.storage.trouble import rim
 
 UNKNOWN = ":unkn"  # DataCite's word for a value that nobody knows

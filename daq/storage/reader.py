@@ -2,32 +2,48 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Iterable, Iterator
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 import xarray as xr
-import zarr
 from numpy.typing import NDArray
-from zarr.storage import LocalStore
 
 from daq.errors import StorageError
 from daq.estimate.use import use
-from daq.storage.layout import EVENTS, Column, columns, looked_up, planned
+from daq.storage.absent import no_run
+from daq.storage.chunks import read_column
+from daq.storage.layout import EVENTS, FINISHED, ITINERARY, ZARR, Column, columns, looked_up, planned
 from daq.storage.rows import Rows
-from daq.storage.seal import FINISHED, ITINERARY, ZARR
+from daq.storage.salvage import Problems, root_meta, salvaged
+from daq.storage.seal import open_array
 from daq.storage.snapshot import Snapshot, check_format, snapshot
-from daq.storage.trouble import LIBRARY_ERRORS, stored
+from daq.storage.trouble import LIBRARY_ERRORS
+
+SALVAGE = "`tercet report` gives what is still good, `tercet verify` names every damage"
+_BY_VISIT = tuple(column for column in planned(1, {}) if column.name in ("stand", "lap", "pair", "forward"))
+# Without one of these a visit cannot be taken.
+_NEEDED = (
+    *("visit", "attempt", "opening", "position_mm", "dwell_s", "live_s", "quality"),
+    *("gate_open_ns", "gate_close_ns"),
+)
 
 
-def open_visits(folder: Path) -> xr.Dataset:
+def open_visits(folder: Path, *, salvage: bool = False) -> xr.Dataset:
     """Return all visits of a run in the order in which they were committed, dimension `row`.
+
+    Parameters
+    ----------
+    folder
+        The run; it may be going on.
+    salvage
+        Of a damaged run return what is still good, with one sentence for each damage in the attribute
+        `damaged`. What is lost reads as missing (-1, NaN), never as counts or openings; a visit of which a
+        part is lost is set aside as unplanned (-1), so that no estimate takes its stand.
 
     Notes
     -----
-    A chunk of the Zarr group that is missing reads as missing numbers (-1, NaN), never as counts or openings;
-    a visit of which a part is missing is set aside as unplanned (-1), so that no estimate takes its stand.
     In list mode a finished run gives its events too, lazily; `read_events` gives those of a row at any time.
 
     Raises
@@ -35,102 +51,108 @@ def open_visits(folder: Path) -> xr.Dataset:
     StorageError
         When there is no run, or a part of it is damaged; the sentence says which.
     """
-    root, held, meta = _opened(Path(folder))
-    arrays = _set_aside_incomplete(_measured(root, held, meta))
-    arrays.update(_looked_up(root, arrays, meta))
+    folder = Path(folder)
+    held, problems = salvaged(folder) if salvage else (_whole(folder), {})
+    found, lost = _measured(folder, held)
+    plan, lost_plan = _planned(folder, _BY_VISIT)
+    problems |= lost | lost_plan
+    if problems and not salvage:
+        raise _damaged(folder, list(problems.values()))
+    meta = held.meta | ({"damaged": list(problems.values())} if problems else {})
+    arrays = _set_aside_incomplete(found)
+    arrays.update(_looked_up(plan, arrays, meta))
     dataset = _dataset((*columns(meta), *looked_up()), arrays, meta)
-    if meta.get("list_mode") and held is None:
-        plain = xr.open_zarr(Path(folder) / ZARR, chunks=None, consolidated=False)
+    if meta.get("list_mode") and meta.get(FINISHED) and not problems:
+        plain = xr.open_zarr(folder / ZARR, chunks=None, consolidated=False)
         return dataset.assign({EVENTS: plain[EVENTS].variable})
     return dataset
 
 
 def open_itinerary(folder: Path) -> xr.Dataset:
     """Return what was planned: dimension `planned` (visits) and `position` (weights and signs)."""
-    root, _, meta = _opened(Path(folder), rows=0)
+    meta = read_meta(folder)
     table = planned(int(meta["slits"]), meta["signs"])
-    return _dataset(
-        table, {column.name: _whole(root, f"{ITINERARY}/{column.name}") for column in table}, meta
-    )
+    return _dataset(table, _intact_plan(Path(folder), table), meta)
 
 
 def read_meta(folder: Path) -> dict[str, Any]:
     """Return what the run is: its meta data, with its results once it is finished."""
-    return _opened(Path(folder), rows=0)[2]
+    return _whole(Path(folder), rows=0).meta
 
 
 def planned_stands(folder: Path) -> NDArray[np.int64]:
     """Return the stand of every planned visit."""
-    return _whole(_opened(Path(folder), rows=0)[0], f"{ITINERARY}/stand")
+    return _intact_plan(folder, [column for column in _BY_VISIT if column.name == "stand"])["stand"]
 
 
 def tries_so_far(folder: Path, held: Snapshot) -> Iterator[tuple[int, int]]:
     """Yield visit and attempt of every row, those sealed in the Zarr group first."""
     if held.sealed:
-        root = _opened(folder, rows=0)[0]
-        visit, attempt = (_whole(root, name, held.sealed).tolist() for name in ("visit", "attempt"))
-        yield from zip(visit, attempt, strict=True)
+        sealed = [read_column(folder, column, held.sealed) for column in columns(held.meta)[:2]]
+        if lost := [one.what for _, losses in sealed for one in losses]:
+            raise _damaged(folder, lost)
+        yield from zip(*(values.tolist() for values, _ in sealed), strict=True)
     yield from ((row[0], row[1]) for row in held.rows)  # the table of columns begins with these two
 
 
-def _opened(folder: Path, rows: int | None = None) -> tuple[zarr.Group, Snapshot | None, dict[str, Any]]:
-    """Return the Zarr group, what the journal holds (rows below `rows`) and the meta data."""
-    if not folder.is_dir():
-        raise StorageError("there is no such run", where=str(folder), remedy="Check the path")
-    held = snapshot(folder, rows)
+def _whole(folder: Path, rows: int | None = None) -> Snapshot:
+    """Return what the run holds, its journal's rows (below `rows`) compared with their checksums."""
+    held = snapshot(folder, rows) if folder.is_dir() else None
+    if held is not None:
+        return held
     try:
-        store = LocalStore(folder / ZARR, read_only=True)
-        root = zarr.open_group(store, mode="r", use_consolidated=False)
-        meta = held.meta if held else dict(root.attrs.asdict())
-    except (OSError, ValueError, KeyError) as error:
-        if held is None and isinstance(error, FileNotFoundError):
-            raise never_begun(folder) from error
-        raise stored(error, folder / ZARR) from error
-    if held is None and not meta.get(FINISHED):
-        raise never_begun(folder)
-    check_format(meta, folder)
-    return root, held, meta
-
-
-def never_begun(folder: Path) -> StorageError:
-    """Return the error for a folder that was left before its journal was whole."""
-    return StorageError(
-        "the run was broken off while its folder was being made, so it holds no visit",
-        where=str(folder),
-        remedy="Remove the folder and start the run again",
-    )
-
-
-def _whole(group: zarr.Group, name: str, stop: int | None = None) -> NDArray[Any]:
-    try:
-        return np.asarray(group[name][:stop])  # type: ignore[index]
+        meta = root_meta(folder)
     except LIBRARY_ERRORS as error:
-        raise stored(error, f"{group.store_path}/{name}") from error
+        raise no_run(folder) from error
+    if not meta.get(FINISHED):
+        raise no_run(folder)
+    check_format(meta, folder)
+    return Snapshot(meta, 0 if rows == 0 else open_array(folder, "visit").shape[0], [])
 
 
-def _measured(root: zarr.Group, held: Snapshot | None, meta: dict[str, Any]) -> dict[str, NDArray[Any]]:
-    names = [column.name for column in columns(meta)]
-    if held is None:
-        return {name: _whole(root, name) for name in names}
-    tail = Rows(meta).arrays(held.rows)
-    if not held.sealed:
-        return tail
-    return {name: np.concatenate([_whole(root, name, held.sealed), tail[name]]) for name in names}
+def _damaged(folder: Path, problems: list[str]) -> StorageError:
+    more = f", and {len(problems) - 1} more" if len(problems) > 1 else ""
+    return StorageError(f"{problems[0]}{more}", where=str(folder), remedy=SALVAGE)
+
+
+def _measured(folder: Path, held: Snapshot) -> tuple[dict[str, NDArray[Any]], Problems]:
+    """Return the measured columns, sealed rows first, and what of them is lost."""
+    arrays, problems = Rows(held.meta).arrays(held.rows), Problems()
+    for column in columns(held.meta) if held.sealed else ():
+        sealed, lost = read_column(folder, column, held.sealed)
+        problems |= {one.file: one.what for one in lost}
+        arrays[column.name] = np.concatenate([sealed, arrays[column.name]]) if held.rows else sealed
+    return arrays, problems
+
+
+def _planned(folder: Path, table: Iterable[Column]) -> tuple[dict[str, NDArray[Any]], Problems]:
+    """Return columns of the itinerary, and what of them is lost."""
+    arrays, problems = dict[str, NDArray[Any]](), Problems()
+    for column in table:
+        arrays[column.name], lost = read_column(folder, column, group=f"{ITINERARY}/")
+        problems |= {one.file: one.what for one in lost}
+    return arrays, problems
+
+
+def _intact_plan(folder: Path, table: Iterable[Column]) -> dict[str, NDArray[Any]]:
+    arrays, problems = _planned(folder, table)
+    if problems:
+        raise _damaged(folder, list(problems.values()))
+    return arrays
 
 
 def _set_aside_incomplete(arrays: dict[str, NDArray[Any]]) -> dict[str, NDArray[Any]]:
-    parts = [arrays[name] for name in ("attempt", "opening", "position_mm", "live_s", "quality")]
+    parts = [arrays[name] for name in _NEEDED]
     parts += list(arrays["values"].T)
     missing = np.any([part < 0 if part.dtype.kind == "i" else np.isnan(part) for part in parts], axis=0)
     return {**arrays, "visit": np.where(missing, -1, arrays["visit"])}
 
 
 def _looked_up(
-    root: zarr.Group, arrays: dict[str, NDArray[Any]], meta: dict[str, Any]
+    plan: dict[str, NDArray[Any]], arrays: dict[str, NDArray[Any]], meta: dict[str, Any]
 ) -> dict[str, NDArray[Any]]:
     visit = arrays["visit"]
-    names = ("stand", "lap", "pair", "forward")
-    found = {name: _by_visit(_whole(root, f"{ITINERARY}/{name}"), visit) for name in names}
+    found = {name: _by_visit(column, visit) for name, column in plan.items()}
     known = found["stand"] >= 0
     rows = (found["stand"], arrays["attempt"], visit, arrays["quality"])
     taken = np.zeros(len(visit), np.int64)

@@ -18,12 +18,12 @@ from daq.storage.digest import digest, gate_digest
 from daq.storage.disk import Disk
 from daq.storage.events import Events
 from daq.storage.journal import Journal, drop_journal
-from daq.storage.layout import CHUNK, looked_up
+from daq.storage.layout import CHUNK, FINISHED, ZARR, looked_up
 from daq.storage.lock import LOCK, lock_run
 from daq.storage.manifest import write_manifest
 from daq.storage.reader import open_visits, planned_stands, read_meta, tries_so_far
 from daq.storage.rows import Rows
-from daq.storage.seal import FINISHED, ZARR, DurableStore, add_array, open_root, write_rows
+from daq.storage.seal import DurableStore, add_array, open_root, write_rows
 from daq.storage.sealer import Sealer
 from daq.storage.snapshot import JOURNAL, snapshot
 from daq.storage.trouble import rim

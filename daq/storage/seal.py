@@ -16,14 +16,11 @@ from zarr.core.buffer import Buffer
 from zarr.storage import LocalStore
 
 from daq.storage.disk import Disk, write_durably
-from daq.storage.layout import EVENTS, Column, columns, events, planned
+from daq.storage.layout import EVENTS, ITINERARY, ZARR, Column, columns, events, planned
 
 if TYPE_CHECKING:
     from daq.itinerary.compose import Itinerary
 
-ZARR = "run.zarr"
-ITINERARY = "itinerary"
-FINISHED = "finished"  # attribute of a run that is whole; it counts only when the journal is gone
 blosc.use_threads = False  # a pool of threads for chunks of 32 kB costs more than it gives
 _ROW_CODEC = BloscCodec(cname="zstd", clevel=3, shuffle="shuffle")
 _EVENT_CODEC = BloscCodec(cname="lz4", clevel=5, shuffle="bitshuffle")

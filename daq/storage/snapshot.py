@@ -46,7 +46,7 @@ def snapshot(folder: Path, stop: int | None = None) -> Snapshot | None:
     StorageError
         For damaged or missing rows.
     """
-    newest = _newest(folder)  # before the rows: the writer may go on in between
+    newest = newest_rows(folder)  # before the rows: the writer may go on in between
     path = folder / JOURNAL
     try:
         with closing(connect(path, "ro")) as connection:
@@ -63,17 +63,28 @@ def snapshot(folder: Path, stop: int | None = None) -> Snapshot | None:
     return Snapshot(meta, sealed, kept, int(state["events_sealed"]))
 
 
-def salvaged(folder: Path) -> Snapshot | None:
-    """Return the rows of a damaged journal that are good; None where SQLite cannot read it."""
+def good_rows(folder: Path) -> Snapshot | None:
+    """Return the rows of a damaged journal that are good, one by one; None where SQLite cannot read any."""
+    newest = newest_rows(folder)
     try:
         with closing(connect(folder / JOURNAL, "ro")) as connection:
-            state, rows = _read(connection, None)
-        meta = json.loads(state["meta"])
-        form = Rows(meta)
-        good = [row[2:] for row in rows if _intact(form, row)]
+            state = dict(connection.execute("SELECT name, value FROM state"))
+            meta, sealed = json.loads(state["meta"]), int(state["sealed"])
+            check_format(meta, folder / JOURNAL)
+            form, upto = Rows(meta), max(newest, sealed + 2 * int(meta["chunk"]))
+            rows = [row for number in range(sealed, upto) for row in _row(connection, number)]
     except (sqlite3.Error, ValueError, KeyError):
         return None
-    return Snapshot(meta, int(state["sealed"]), good, int(state["events_sealed"]))
+    good = [row[2:] for row in rows if _intact(form, row)]
+    return Snapshot(meta, sealed, good, int(state["events_sealed"]))
+
+
+def _row(connection: sqlite3.Connection, number: int) -> list[tuple[Any, ...]]:
+    """Return one row as a list, empty where it is not there or its page cannot be read."""
+    try:
+        return connection.execute("SELECT * FROM visits WHERE row = ?", (number,)).fetchall()
+    except sqlite3.DatabaseError:
+        return []
 
 
 def check_format(meta: Mapping[str, Any], where: Path) -> None:
@@ -85,6 +96,14 @@ def check_format(meta: Mapping[str, Any], where: Path) -> None:
             where=str(where),
             remedy="Read it with the version of tercet that wrote it, or a later one",
         )
+
+
+def newest_rows(folder: Path) -> int:
+    """Return how many rows were acknowledged, as the second place says; 0 where it says nothing."""
+    try:
+        return int((folder / NEWEST).read_bytes())
+    except (OSError, ValueError):
+        return 0
 
 
 def connect(path: Path, mode: str) -> sqlite3.Connection:
@@ -133,13 +152,6 @@ def _intact(form: Rows, row: tuple[Any, ...]) -> bool:
 def _few(numbers: list[int]) -> str:
     shown = ", ".join(map(str, numbers[:5]))
     return shown if len(numbers) <= 5 else f"{shown} and {len(numbers) - 5} more"
-
-
-def _newest(folder: Path) -> int:
-    try:
-        return int((folder / NEWEST).read_bytes())
-    except (OSError, ValueError):
-        return 0
 
 
 def _ended(where: Path, rows: int, newest: int) -> StorageError:

@@ -9,32 +9,31 @@ from typing import Any
 
 import numpy as np
 import xarray as xr
-import zarr
 from numpy.typing import NDArray
 
-from daq.errors import StorageError
 from daq.estimate.dataset import estimate_run
 from daq.openings import name as opening_name
+from daq.storage.chunks import lost_chunks
 from daq.storage.digest import digest, gate_digest
-from daq.storage.layout import EVENTS, columns, planned
+from daq.storage.layout import ITINERARY, ZARR, columns, events, planned
 from daq.storage.manifest import changed_files
-from daq.storage.reader import open_itinerary, open_visits, read_meta
-from daq.storage.seal import ITINERARY, ZARR, open_array
-from daq.storage.snapshot import JOURNAL, Snapshot, salvaged, snapshot
+from daq.storage.reader import open_itinerary, open_visits
+from daq.storage.salvage import Problems, salvaged
+from daq.storage.snapshot import JOURNAL, Snapshot, newest_rows
 from daq.storage.texts import changed_texts
 from daq.storage.trouble import LIBRARY_ERRORS
 
 KAPPA_TOLERANCE = 1e-12  # the same estimate of the same numbers: rounding at most
-Problems = dict[str, str]  # file, or what else is wrong -> sentence
 
 
 @dataclass(frozen=True, slots=True)
 class Verified:
-    """What was found: `visits` of `rows` are whole; one sentence a problem."""
+    """What was found: `visits` of `rows` are whole; one sentence a problem, and what is good despite them."""
 
     rows: int
     visits: int
     problems: tuple[str, ...]
+    good: tuple[str, ...] = ()
 
     @property
     def ok(self) -> bool:
@@ -43,97 +42,71 @@ class Verified:
 
 
 def verify(folder: Path) -> Verified:
-    """Return what is damaged in a run, finished or not, and how many visits are still whole.
+    """Return what is damaged in a run, finished or not, and what is still good.
 
     Raises
     ------
     StorageError
-        When there is no run to verify, or not even its meta data can be read.
+        When there is no run to verify, or nowhere in its folder stands what it is.
     """
     folder = Path(folder)
-    if not (folder / JOURNAL).exists():
-        meta, tail = read_meta(folder), 0
-        good, problems = _whole_rows(folder, meta, _longest(folder, meta))
-        problems.update(_lost_events(folder, meta, None))
-        problems.update(_changed_since_finish(folder, problems))
-    else:
-        held, problems = _journal(folder)
-        meta, tail = held.meta, len(held.rows)
-        good, found = _whole_rows(folder, meta, held.sealed)
-        problems.update(found)
-        problems.update(_lost_events(folder, meta, held.events_sealed))
-    problems.update({name: f"{name} is no longer what was written" for name in _changed_texts(folder, meta)})
+    held, problems = salvaged(folder)
+    finished = not (folder / JOURNAL).exists()
+    whole, lost = _whole_rows(folder, held.meta, held.sealed)
+    problems |= lost | _lost_plan(folder, held.meta)
+    problems |= _lost_events(folder, held.meta, None if finished else held.events_sealed)
+    if finished:
+        problems |= _changed_since_finish(folder, problems)
+    changed = changed_texts(folder, held.meta["texts_sha256"])
+    problems |= {name: f"{name} is no longer what was written" for name in changed}
+    good = tuple(_still_good(held, whole, problems)) if problems else ()
     if not problems:
         problems = dict(_contradictions(open_visits(folder), open_itinerary(folder)))
-    return Verified(len(good) + tail, int(good.sum()) + tail, tuple(problems.values()))
+    rows = len(whole) + len(held.rows)
+    return Verified(
+        max(rows, newest_rows(folder)), int(whole.sum()) + len(held.rows), tuple(problems.values()), good
+    )
 
 
-def _journal(folder: Path) -> tuple[Snapshot, Problems]:
-    """Return the rows of the journal that are good, and what is wrong with it."""
-    try:
-        held = snapshot(folder)
-        assert held is not None
-        return held, {}
-    except StorageError as error:
-        found: Problems = {JOURNAL: str(error).rstrip(".")}
-    held = salvaged(folder)
-    if held is None:
-        with_root = zarr.open_group(folder / ZARR, mode="r", use_consolidated=False)
-        meta = dict(with_root.attrs.asdict())
-        held = Snapshot(meta, _longest(folder, meta), [])
-        found[JOURNAL] += f". The {held.sealed} visits sealed before it are not touched by this"
-    return held, found
-
-
-def _longest(folder: Path, meta: dict[str, Any]) -> int:
-    lengths = [0]
-    for column in columns(meta):
-        try:
-            lengths.append(open_array(folder, column.name).shape[0])
-        except LIBRARY_ERRORS:
-            continue  # named by _whole_rows
-    return max(lengths)
+def _still_good(held: Snapshot, whole: NDArray[np.bool_], problems: Problems) -> Iterator[str]:
+    """Yield what a damaged run still has."""
+    if whole.any():
+        edges = np.flatnonzero(np.diff(whole.astype(int), prepend=0, append=0))
+        spans = [f"{first} to {stop - 1}" for first, stop in edges.reshape(-1, 2).tolist()]
+        yield f"rows {', '.join(spans)} of the Zarr group are whole"
+    if held.rows:
+        yield f"{len(held.rows)} rows of the journal are whole"
+    if not any(name.startswith(f"{ZARR}/{ITINERARY}/") for name in problems):
+        yield "what was planned is whole"
+    texts = [name for name in held.meta["texts_sha256"] if name not in problems]
+    if texts:
+        yield f"the copies {', '.join(texts)} are what was written"
 
 
 def _whole_rows(folder: Path, meta: dict[str, Any], rows: int) -> tuple[NDArray[np.bool_], Problems]:
     """Return which sealed rows are whole in every column, and what is wrong with the others."""
-    good, problems = np.ones(rows, bool), {}
+    whole, problems = np.ones(rows, bool), Problems()
     for column in columns(meta):
-        for file, part, words in _bad_chunks(folder, column.name, rows):
-            good[part] = False
-            problems[file] = f"{file} {words}: {column.name} of rows {part.start} to {part.stop - 1} is lost"
-    for column in planned(int(meta["slits"]), meta["signs"]):
-        for file, _, words in _bad_chunks(folder, f"{ITINERARY}/{column.name}", None):
-            problems[file] = f"{file} {words}: {column.name} of the planned visits is lost"
-    return good, problems
+        for lost in lost_chunks(folder, column, rows):
+            whole[lost.rows] = False
+            problems[lost.file] = lost.what
+    return whole, problems
+
+
+def _lost_plan(folder: Path, meta: dict[str, Any]) -> Problems:
+    table = planned(int(meta["slits"]), meta["signs"])
+    return {
+        lost.file: lost.what
+        for column in table
+        for lost in lost_chunks(folder, column, group=f"{ITINERARY}/")
+    }
 
 
 def _lost_events(folder: Path, meta: dict[str, Any], sealed: int | None) -> Problems:
     """Return what is wrong with the events of list mode; the counts of their visits are not touched by it."""
     if not meta.get("list_mode"):
         return {}
-    bad = _bad_chunks(folder, EVENTS, sealed)
-    return {file: f"{file} {words}: events {at.start} to {at.stop - 1} are lost" for file, at, words in bad}
-
-
-def _bad_chunks(folder: Path, name: str, rows: int | None) -> Iterator[tuple[str, slice, str]]:
-    """Yield file, rows and what is wrong for every chunk of an array that cannot be read."""
-    try:
-        array = open_array(folder, name)
-    except LIBRARY_ERRORS as error:
-        yield f"{ZARR}/{name}/zarr.json", slice(0, rows or 0), f"cannot be read ({error})"
-        return
-    chunk, stop = array.chunks[0], array.shape[0] if rows is None else rows
-    for number, first in enumerate(range(0, stop, chunk)):
-        file = f"{ZARR}/{name}/c/{number}" + "/0" * (array.ndim - 1)
-        part = slice(first, min(first + chunk, stop))
-        if not (folder / file).exists() or array.shape[0] < part.stop:
-            yield file, part, "is missing"
-            continue
-        try:
-            array[part]
-        except LIBRARY_ERRORS as error:
-            yield file, part, f"is damaged ({error})"
+    return {lost.file: lost.what for lost in lost_chunks(folder, events(meta), sealed)}
 
 
 def _changed_since_finish(folder: Path, known: Problems) -> Problems:
@@ -146,10 +119,6 @@ def _changed_since_finish(folder: Path, known: Problems) -> Problems:
         for name, how in changed.items()
         if name not in known
     }
-
-
-def _changed_texts(folder: Path, meta: dict[str, Any]) -> list[str]:
-    return changed_texts(folder, meta["texts_sha256"])
 
 
 def _contradictions(dataset: xr.Dataset, itinerary: xr.Dataset) -> Iterator[tuple[str, str]]:

@@ -29,6 +29,12 @@ def run(original: Path, tmp_path: Path) -> Path:
     return Path(shutil.copytree(original, tmp_path / original.name))
 
 
+def flip(path: Path) -> None:
+    data = bytearray(path.read_bytes())
+    data[len(data) // 2] ^= 1
+    path.write_bytes(data)
+
+
 def answer(capsys, *words: str) -> tuple[int, dict]:
     status = main([*words, "--json"])
     return status, json.loads(capsys.readouterr().out)
@@ -43,14 +49,47 @@ def test_a_sound_run_verifies(run, capsys):
 
 @pytest.mark.parametrize("file", ["run.zarr/values/c/0/0", "run.zarr/live_s/c/0", "description.toml"])
 def test_one_flipped_byte_is_named(run, capsys, file):
-    data = bytearray((run / file).read_bytes())
-    data[len(data) // 2] ^= 1
-    (run / file).write_bytes(data)
+    flip(run / file)
 
     status, figures = answer(capsys, "verify", str(run))
 
     assert status == 4
     assert any(file in problem for problem in figures["problems"])
+
+
+@pytest.mark.parametrize(("harm", "how"), [(Path.unlink, "is missing"), (flip, "is damaged")])
+def test_a_report_on_a_damaged_archive_says_so_first_and_gives_the_rest(run, capsys, harm, how):
+    main(["report", str(run), "--json"])
+    recorded = json.loads(capsys.readouterr().out)["kappa"]
+    harm(run / "run.zarr/live_s/c/0")
+
+    status = main(["report", str(run)])
+    told = capsys.readouterr().out.splitlines()
+
+    assert status == 4
+    assert told[0].startswith("DAMAGED: a part of this archive is lost.")
+    assert f"kappa was {recorded:+.3e}".replace("-", "−", 1) in told[0].replace("e−", "e-")
+    assert told[1].startswith(f"! run.zarr/live_s/c/0 {how}")
+    assert told[1].endswith("live_s of rows 0 to 1311 is lost.")
+    assert "b'" not in "".join(told)
+
+
+@pytest.mark.parametrize("words", ["export {run} {run}/visits.csv", "pack {run}", "accept {run} counts"])
+def test_what_stands_for_a_whole_run_is_not_made_of_a_damaged_one(run, capsys, words):
+    flip(run / "run.zarr/live_s/c/0")
+
+    status = main(words.format(run=run).split())
+
+    assert status == 4
+    assert "live_s of rows 0 to 1311 is lost. `tercet report` gives" in capsys.readouterr().err
+
+
+@pytest.mark.parametrize("command", ["log", "report", "verify", "status", "bookings"])
+def test_a_path_that_leads_nowhere_is_an_error(tmp_path, capsys, command):
+    status = main([command, str(tmp_path / "lab")])
+
+    assert status == 4
+    assert "there is no such" in capsys.readouterr().err
 
 
 def test_a_result_that_the_counts_do_not_give_is_named(run, capsys):

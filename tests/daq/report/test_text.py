@@ -5,6 +5,8 @@ WHOLE = {
     "name": "20261201T170000Z-lantern",
     "title": "Lantern bench",
     "kind": "rehearsal",
+    "damaged": [],
+    "recorded_kappa": None,
     "kappa": -1.5e-5,
     "kappa_se": 9.5e-5,
     "kappa_counting_se": 1.0e-4,

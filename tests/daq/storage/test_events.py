@@ -164,7 +164,7 @@ def test_a_missing_chunk_of_events_is_named_and_costs_no_visit(tmp_path: Path) -
 
     found = verify(tmp_path / "run")
 
-    assert found.problems == ("run.zarr/event_gap/c/1 is missing: events 256 to 511 are lost",)
+    assert found.problems == ("run.zarr/event_gap/c/1 is missing: event_gap of events 256 to 511 is lost",)
     assert found.visits == 10
 
 

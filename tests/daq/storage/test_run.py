@@ -88,7 +88,7 @@ def test_a_finished_folder_holds_the_copies_and_the_zarr_group_alone(tmp_path: P
 
     names = sorted(path.name for path in (tmp_path / "run").iterdir())
 
-    assert names == ["description.toml", "dialects", "run.zarr", "sha256.txt"]
+    assert names == ["description.toml", "dialects", "record.json", "run.zarr", "sha256.txt"]
     assert not list((tmp_path / "run").rglob("*.partial"))
     for name, text in TEXTS.items():
         assert (tmp_path / "run" / name).read_bytes() == text

@@ -120,7 +120,7 @@ def test_metadata_that_cannot_be_read_cost_their_array(finished: Path) -> None:
     found = verify(finished)
 
     assert len(found.problems) == 1
-    assert "run.zarr/live_s/zarr.json cannot be read" in found.problems[0]
+    assert "run.zarr/live_s/zarr.json is damaged: live_s of rows 0 to 47 is lost" in found.problems[0]
     assert (found.rows, found.visits) == (48, 0)
 
 
@@ -128,7 +128,7 @@ def test_a_missing_chunk_of_the_itinerary_is_named(finished: Path) -> None:
     (finished / "run.zarr" / "itinerary" / "stand" / "c" / "0").unlink()
 
     assert verify(finished).problems == (
-        "run.zarr/itinerary/stand/c/0 is missing: stand of the planned visits is lost",
+        "run.zarr/itinerary/stand/c/0 is missing: stand of planned visits 0 to 47 is lost",
     )
 
 
@@ -157,7 +157,8 @@ def test_a_damaged_row_of_the_journal_is_named_and_the_others_are_good(tmp_path:
     found = verify(folder)
 
     assert "rows 36 of the journal are damaged or missing" in found.problems[0]
-    assert (found.rows, found.visits) == (39, 39)
+    assert (found.rows, found.visits) == (40, 39)
+    assert "7 rows of the journal are whole" in found.good
 
 
 def test_a_journal_that_is_no_database_leaves_the_sealed_visits(tmp_path: Path) -> None:
@@ -169,7 +170,7 @@ def test_a_journal_that_is_no_database_leaves_the_sealed_visits(tmp_path: Path) 
     found = verify(folder)
 
     assert "the journal is damaged" in found.problems[0]
-    assert "The 32 visits sealed before it" in found.problems[0]
+    assert "the 32 visits sealed before it" in found.problems[0]
     assert found.visits == 32
 
 
