@@ -35,7 +35,7 @@ def summary(folder: Path, visits: xr.Dataset, digests: Mapping[str, str]) -> dic
         "kind": meta["kind"],
         "finished": bool(meta.get("finished", False)),
         "damaged": list(meta.get("damaged", ())),
-        "recorded_kappa": meta.get("results", {}).get("kappa"),
+        "recorded_kappa": _recorded_kappa(meta),
         **estimate.to_json(),
         "account": account_of(visits).to_json(),
         "quality_differs": _judged_otherwise(visits),
@@ -46,6 +46,14 @@ def summary(folder: Path, visits: xr.Dataset, digests: Mapping[str, str]) -> dic
         "ended": meta.get("ended"),
         **digests,
     }
+
+
+def _recorded_kappa(meta: Mapping[str, Any]) -> float | None:
+    """Return kappa as it was written when the run was finished; not while it is blinded."""
+    if meta.get("blinding", "open") != "open":
+        return None
+    kappa: float | None = meta.get("results", {}).get("kappa")
+    return kappa
 
 
 def _judged_otherwise(visits: xr.Dataset) -> int:

@@ -68,7 +68,8 @@ def test_a_report_on_a_damaged_archive_says_so_first_and_gives_the_rest(run, cap
 
     assert status == 4
     assert told[0].startswith("DAMAGED: a part of this archive is lost.")
-    assert f"kappa was {recorded:+.3e}".replace("-", "−", 1) in told[0].replace("e−", "e-")
+    assert recorded > 0
+    assert f"When it was finished, kappa was {recorded:+.3e}." in told[0]
     assert told[1].startswith(f"! run.zarr/live_s/c/0 {how}")
     assert told[1].endswith("live_s of rows 0 to 1311 is lost.")
     assert "b'" not in "".join(told)
