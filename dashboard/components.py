@@ -2,16 +2,15 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
+from collections.abc import Callable
 from typing import Any
 
 from dash import dcc, html
 
+from dashboard.buttons import Children, Part, act_button, operate, question, who
 from dashboard.view import CAUTION
 
 _NEWEST = 4  # lines of the log that stand open beside the verdict
-Part = Mapping[str, Any]
-Children = list[Any]
 STORES = (
     *("night-data", "pattern-data", "plates-data", "strip-data", "seen", "chosen", "look", "marked"),
     "asked",
@@ -35,7 +34,7 @@ def page() -> html.Div:
                     html.Div(id="who", className="soft"),
                 ]
             ),
-            _confirm(),
+            question(),
         ],
         id="page",
         className="bare",
@@ -46,25 +45,6 @@ def render(name: str, part: Any) -> Any:
     """Return the children of one part of the page; data of the figures pass as they are."""
     build = _RENDERERS.get(name)
     return build(part) if build else part
-
-
-def _confirm() -> html.Dialog:
-    """Return the question before anything is asked of a run; the browser fills it in."""
-    return html.Dialog(
-        [
-            html.H2(id="confirm-title"),
-            html.P(id="confirm-will"),
-            html.Div(
-                [
-                    html.Button("Do nothing", id="confirm-no", type="button"),
-                    html.Button(id="confirm-yes", type="button"),
-                ],
-                className="buttons",
-            ),
-        ],
-        id="confirm",
-        **{"aria-labelledby": "confirm-title", "aria-describedby": "confirm-will"},
-    )
 
 
 def _buttons() -> html.Div:
@@ -96,6 +76,7 @@ def _sections() -> Children:
         _figure("night", "κ over the night"),
         _figure("pattern", "Pattern and leftover", _numbers()),
         _figure("strip", "Count rate"),
+        html.Section(id="budget", className="full"),
         html.Nav(id="runs", **{"aria-label": "Runs of this lab"}),
     ]
 
@@ -158,7 +139,7 @@ def _warnings(part: Part) -> Children:
 
 def _warning(item: Part) -> html.Article:
     seen = [html.P(item["seen"], className="soft")] if item["seen"] else []
-    button = [html.Div(_act(item["button"]), className="buttons")] if item["button"] else []
+    button = [html.Div(act_button(item["button"]), className="buttons")] if item["button"] else []
     return html.Article(
         [
             html.P(item["what"], className="what"),
@@ -171,25 +152,18 @@ def _warning(item: Part) -> html.Article:
     )
 
 
-def _operate(part: Part | None) -> Children:
-    if part is None or not (part["acts"] or part["asked"]):
-        return []
-    asked = [html.Ol([html.Li(line) for line in part["asked"]], className="soft")] if part["asked"] else []
-    acts = [html.Div([_act(act) for act in part["acts"]], className="buttons")] if part["acts"] else []
-    return [html.H2("Ask of the run"), *acts, *asked]
-
-
-def _act(act: Part) -> html.Button:
-    """Return a button that first says what will happen."""
-    told = {f"data-{key}": act[key] for key in ("what", "about", "run", "will")}
-    return html.Button(act["label"], type="button", className="act", **told)
-
-
-def _who(part: Part | None) -> Children:
+def _budget(part: Part | None) -> Children:
     if part is None:
         return []
-    leave = [html.Button("Log out", id="log-out", type="button")] if part["inside"] else []
-    return [html.Span(part["says"]), *leave]
+    lines = html.Ul([_budget_line(line) for line in part["lines"]])
+    says = [html.P(sentence, className="caption") for sentence in part["says"]]
+    return [html.H2("Where the error comes from"), lines, *says]
+
+
+def _budget_line(line: Part) -> html.Li:
+    drawn = html.Span(style={"width": f"{line['percent']}%"})
+    share = html.Span(drawn, className="share", **{"aria-hidden": "true"})
+    return html.Li([html.Span(line["name"]), html.Span(line["value"]), share])
 
 
 def _kappa(part: Part) -> Children:
@@ -290,6 +264,7 @@ _RENDERERS: dict[str, Callable[[Any], Any]] = {
     "sensors": _sensors,
     "log": _log,
     "runs": _runs,
-    "operate": _operate,
-    "who": _who,
+    "operate": operate,
+    "who": who,
+    "budget": _budget,
 }

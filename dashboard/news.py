@@ -17,6 +17,7 @@ from daq.errors import StorageError
 from daq.storage.people import NOBODY, Person
 from dashboard import figures, lab
 from dashboard.asking import book_stamp, requests_of
+from dashboard.budget import budget_view
 from dashboard.components import render
 from dashboard.operate import operate_view
 from dashboard.times import clock
@@ -24,7 +25,7 @@ from dashboard.view import empty_view, is_silent, unreadable_view, view, waiting
 
 WORDS = (
     *("header", "verdict", "line", "warnings", "kappa", "now"),
-    *("sensors", "log", "rail", "runs", "footer", "operate", "who"),
+    *("sensors", "log", "rail", "runs", "footer", "operate", "who", "budget"),
 )
 CURVES = ("night-data", "pattern-data", "plates-data", "strip-data")
 
@@ -126,6 +127,7 @@ def _whole(feed: dict[str, Any], scene: _Scene) -> dict[str, Any]:
         **said,
         "line": _line(said),
         "operate": asks,
+        "budget": budget_view(feed),
         "who": {"says": asks["says"], "inside": bool(scene.person.name)},
         "footer": f"Data up to {clock(feed['updated_utc'], seconds=True)}.",
         "night-data": figures.night(feed),
@@ -136,7 +138,8 @@ def _whole(feed: dict[str, Any], scene: _Scene) -> dict[str, Any]:
 
 
 def _bare(said: dict[str, Any]) -> dict[str, Any]:
-    return {"page": "bare", **said, "line": _line(said), "footer": "", "operate": None, "who": None}
+    nothing = dict.fromkeys(("operate", "who", "budget"))
+    return {"page": "bare", **said, "line": _line(said), "footer": "", **nothing}
 
 
 def _line(said: dict[str, Any]) -> dict[str, Any]:

@@ -9,7 +9,7 @@ from typing import Any
 import numpy as np
 
 from daq.estimate.arrays import FloatArray
-from daq.estimate.budget import Budget, Known, budget
+from daq.estimate.budget import Budget, budget, known_of
 from daq.estimate.checks import Check, checks, odd_first_stands
 from daq.estimate.dataset import plan_of_dataset, rows_of_dataset
 from daq.estimate.plan import Plan, stand_places
@@ -54,24 +54,14 @@ def account_of(dataset: Any) -> Account:
     visits = visits_of(rows_of_dataset(dataset), plan)
     numbers = settle(visits, plan).numbers
     taken = taken_visits(visits, plan, plainly(visits, plan).visits)
+    known = known_of(dataset.attrs, _place_mm(dataset, plan))
     left_out, doubtful = _left_out(dataset, visits, plan)
     return Account(
-        budget=None if taken is None else budget(visits, plan, taken, numbers, _known(dataset, plan)),
+        budget=None if taken is None else budget(visits, plan, taken, numbers, known),
         checks=() if taken is None else checks(visits, plan, taken, numbers),
         left_out=left_out,
         doubtful=doubtful,
         first_stands_odd_mm=tuple(odd_first_stands(visits, plan, Rules(**dataset.attrs.get("quality", {})))),
-    )
-
-
-def _known(dataset: Any, plan: Plan) -> Known:
-    attributes: Mapping[str, Any] = dataset.attrs
-    slope = attributes.get("slope_per_mm")
-    return Known(
-        dead_time_u_s=float(attributes.get("dead_time_u_s", 0.0)),
-        slit_loads=attributes.get("slit_loads"),
-        place_mm=_place_mm(dataset, plan),
-        slope_per_mm=None if slope is None else np.asarray(slope, float),
     )
 
 

@@ -65,6 +65,17 @@ class Known:
     slope_per_mm: FloatArray | None = None
 
 
+def known_of(attributes: Mapping[str, Any], place_mm: FloatArray | None = None) -> Known:
+    """Return what the attributes of a run's archive say of it beside its counts."""
+    slope = attributes.get("slope_per_mm")
+    return Known(
+        dead_time_u_s=float(attributes.get("dead_time_u_s", 0.0)),
+        slit_loads=attributes.get("slit_loads"),
+        place_mm=place_mm,
+        slope_per_mm=None if slope is None else np.asarray(slope, float),
+    )
+
+
 def budget(visits: Visits, plan: Plan, taken: Taken, numbers: Mapping[str, Any], known: Known) -> Budget:
     """Return the error budget of a run.
 

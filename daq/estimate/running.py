@@ -7,12 +7,14 @@ from typing import Any
 
 import numpy as np
 
+from daq.estimate.budget import Budget, Known, budget
 from daq.estimate.detected import detected
 from daq.estimate.headline import headline
 from daq.estimate.plan import Plan, stand_places
 from daq.estimate.rows import rows_of_readings
+from daq.estimate.sensitivity import taken_visits
 from daq.estimate.settle import Settled, settle, taking
-from daq.estimate.sums import Sums, sums_of
+from daq.estimate.sums import Sums, plainly, sums_of
 from daq.estimate.tables import tables_of
 from daq.estimate.visits import complete_pairs, no_visits, write
 from daq.estimate.whole import Estimate, estimate_visits
@@ -39,6 +41,7 @@ class Running:
         self._first_ns: int | None = None
         self._estimate: Estimate | None = None
         self._settled: Settled | None = None  # what the complete pairs say
+        self._budget: tuple[Settled, Budget | None] | None = None  # of what the complete pairs said
         self._touched: set[int] = set()  # pairs with news since then
         self._past_pairs: list[int] = []  # the complete pairs that the remembered history rests on
         self._past: dict[int, dict[str, float | None]] = {}
@@ -72,6 +75,20 @@ class Running:
                 self._past.clear()
         self._touched.clear()
         return self._settled
+
+    def budget(self, known: Known) -> Budget | None:
+        """Return where the error of kappa comes from after the complete pairs; None while there is no error.
+
+        What the encoders said of each visit is not kept here: the archive's own account adds that line.
+        """
+        settled = self._settle()
+        if settled.numbers.get("kappa_se") is None:
+            return None
+        if self._budget is None or self._budget[0] is not settled:
+            taken = taken_visits(self._visits, self._plan, plainly(self._visits, self._plan).visits)
+            found = None if taken is None else budget(self._visits, self._plan, taken, settled.numbers, known)
+            self._budget = settled, found
+        return self._budget[1]
 
     def history(self) -> dict[str, list[float | None]]:
         """Return what was known after each complete pair, in the order of the pairs; None while undefined.

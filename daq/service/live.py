@@ -12,6 +12,7 @@ from typing import Any
 
 from daq.errors import StorageError
 from daq.estimate import Running
+from daq.estimate.budget import Budget, known_of
 from daq.estimate.standing import Change, Standing
 from daq.estimate.wake import Held
 from daq.itinerary import Itinerary
@@ -40,6 +41,7 @@ class Live:
         restarts: int = 0,
     ) -> None:
         self._folder, self._meta, self._itinerary, self._clock = folder, meta, itinerary, clock
+        self._known = known_of(meta)
         self._mean_hz = float(itinerary.rates_hz.mean())
         self._written_s = float("-inf")
         self._started_utc = str(meta.get("started_utc") or stamp(clock.utc_ns()))
@@ -122,6 +124,7 @@ class Live:
             **_patterns(figures),
             "kappa": _kappa(figures),
             "history": running.history(),
+            "budget": _budget(running.budget(self._known)),
             "rate": self._strip.columns(self._mean_hz),
             "sensors": {} if self._last is None else {k: v[:2] for k, v in self._last.sensors.items()},
             "warnings": [_told(one) for one in self.watcher.standing],

@@ -58,6 +58,7 @@ def feed(
             {"utc": _utc(0), "text": "The run started"},
             {"utc": _utc(2.03), "text": "The counter did not reply for 0.5 s; it replied again at once"},
         ],
+        "budget": _budget(pairs),
         "normalisation": "pairwise",
         "blinding": "open",
         "ended": None,
@@ -168,6 +169,21 @@ def _ends(blocks: Any, planned: int) -> tuple[float, float | None, list[float] |
         [value - half, value + half],
         [value - wide, value + wide] if math.isfinite(wide) else None,
     )
+
+
+def _budget(pairs: int) -> dict[str, Any] | None:
+    """Return the lines of a night whose counting rules, and what the service adds them up to."""
+    if pairs < 2:
+        return None
+    lines = (
+        ("counting", 1.05e-4, "random", "Four times the counts: four such nights, or a brighter source."),
+        ("background", 6.4e-6, "part", "Four times the dwell on `none`, or a quarter of the background."),
+        ("source beyond counting", 3.1e-5, "random", "A stand in a quarter of the time, or a monitor."),
+        ("smooth drift, missing visits", 5e-10, "systematic", "Fewer stands left out."),
+        ("dead time", 2.2e-6, "systematic", "The dead time measured twice as well, or half the rate."),
+    )
+    keys = ("name", "value", "kind", "halve")
+    return {"lines": [dict(zip(keys, line, strict=True)) for line in lines], "total_se": 1.1e-4}
 
 
 def _end(ends: list[float] | None, side: int) -> float | None:

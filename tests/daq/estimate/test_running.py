@@ -11,6 +11,8 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from daq.estimate import Plan, Running, estimate_run
+from daq.estimate.account import account_of
+from daq.estimate.budget import known_of
 from daq.records import Quality, Reading
 from tests.daq.estimate.nights import again, dataset, plan, reading, readings
 
@@ -205,3 +207,23 @@ def test_the_pattern_fills_before_the_first_pair_is_complete() -> None:
 def test_visits_of_another_itinerary_are_an_error() -> None:
     with pytest.raises(IndexError):
         Running(PLAN).add(reading(plan(positions=3, laps=8), len(NIGHT), 1.0))
+
+
+def test_the_budget_while_the_run_goes_on_is_that_of_the_archive_but_for_the_encoders() -> None:
+    running = run(PLAN, NIGHT)
+    archive = dataset(PLAN, NIGHT)
+    archive.attrs |= {"dead_time_u_s": 5e-9, "slit_loads": {"A": 3e-6}}
+
+    found, whole = running.budget(known_of(archive.attrs)), account_of(archive).budget
+
+    assert found is not None
+    assert whole is not None
+    told = {line.name: line.value for line in found.lines}
+    assert agree(told, {line.name: line.value for line in whole.lines})
+    assert told["dead time"] > 0  # type: ignore[operator]
+    assert told["detector position"] is None
+    assert running.budget(known_of(archive.attrs)) is found
+
+
+def test_before_the_second_pair_there_is_no_running_budget() -> None:
+    assert run(PLAN, NIGHT[: len(NIGHT) // 3]).budget(known_of({})) is None
