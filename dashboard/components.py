@@ -143,7 +143,8 @@ def _warning(item: Part) -> html.Article:
     return html.Article(
         [
             html.P(item["what"], className="what"),
-            html.P([item["do"], " ", html.Strong(item["good"])]),
+            html.P([f"{item['did']} {item['do']} ".lstrip(), html.Strong(item["good"])]),
+            *([html.P(item["cost"])] if item["cost"] else []),
             html.P([item["since"].removesuffix("."), *_here(item["since_utc"]), "."], className="soft"),
             *seen,
             *button,

@@ -12,6 +12,7 @@ from dashboard.words import count
 
 Feed = Mapping[str, Any]
 NOT_SAFE = "This is a request over a data link, no safety function."
+MUTE_MIN = "480"
 GOING, HELD = ("moving", "counting"), ("holding",)
 
 
@@ -43,17 +44,11 @@ ACTS: Mapping[str, Act] = {
         "The run ends at the edge of the present lap, the stages go to their place of rest, and the run is "
         "finished for good. {done}",
     ),
-    "end": Act(
-        "End after this stand",
+    "park": Act(
+        "End and park",
         (*GOING, *HELD),
         "The run ends after the stand under way, the stages go to their place of rest, and the run is "
         "finished for good. {done}",
-    ),
-    "park": Act(
-        "Park now",
-        (*GOING, *HELD),
-        "The visit under way is given up, the stages go to their place of rest, and the run ends. "
-        "What was counted before is saved. {done}",
     ),
     "acknowledge": Act(
         "I have seen this",
@@ -64,7 +59,7 @@ ACTS: Mapping[str, Act] = {
     "mute": Act(
         "Mute messages",
         (*GOING, *HELD),
-        "No more messages are sent about this run, whatever happens to it, until it ends. The page goes on "
+        "Nobody is sent word of this run for the next 8 hours, whatever happens to it. The page goes on "
         "telling everything.",
     ),
 }
@@ -91,7 +86,14 @@ def acknowledging(feed: Feed, person: Person, warning: Mapping[str, Any]) -> dic
 
 
 def _offered(feed: Feed) -> list[dict[str, str]]:
-    return [_button(what, feed) for what, act in ACTS.items() if feed["state"] in act.states]
+    offered = [what for what, act in ACTS.items() if feed["state"] in act.states]
+    if _at_bench(feed):
+        offered.remove("resume")
+    return [_button(what, feed, MUTE_MIN if what == "mute" else "") for what in offered]
+
+
+def _at_bench(feed: Feed) -> bool:
+    return feed["state"] in HELD and bool((feed.get("holding") or {}).get("at_bench"))
 
 
 def _button(what: str, feed: Feed, about: str = "") -> dict[str, str]:
@@ -115,6 +117,8 @@ def _says(feed: Feed, silent: bool, person: Person) -> str:
         return "The run does not answer, so nothing can be asked of it from here."
     if not person.may("operator"):
         return "You may look. Operators, whom `tercet people` lets in, may also ask something of the run."
+    if _at_bench(feed):
+        return "This hold is cleared at the bench only, with `tercet resume LAB --at-bench`."
     return f"You are {person.name}, operator."
 
 

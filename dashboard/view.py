@@ -10,12 +10,12 @@ from daq import openings
 from daq.storage.people import NOBODY, Person
 from dashboard.operate import acknowledging
 from dashboard.residual import residual_view
-from dashboard.times import clock, day_and_clock, duration
-from dashboard.words import count, fixed, general, spelt
+from dashboard.times import clock, duration
+from dashboard.verdict import verdict
+from dashboard.words import capital, fixed, general, spelt, stopped
 
 Feed = Mapping[str, Any]
 SILENT_AFTER_S = 30.0
-_DAY_SAID_FROM_S = 20 * 3600
 CAUTION = (
     "Hold and stop here are requests to the program, not safety functions. "
     "In danger use the emergency stop in the room."
@@ -24,7 +24,6 @@ _KINDS = {
     "rehearsal": ("Rehearsal", "Simulated hardware; nothing in the room moves."),
     "replay": ("Replay", "An archived run, played again; nothing in the room moves."),
 }
-_GOING = {"run": "Running.", "rehearsal": "Rehearsal running.", "replay": "Replay running."}
 
 
 def view(feed: Feed, silent: bool, person: Person = NOBODY) -> dict[str, Any]:
@@ -41,14 +40,14 @@ def view(feed: Feed, silent: bool, person: Person = NOBODY) -> dict[str, Any]:
     """
     return {
         "header": {"title": feed["title"], "run": feed["run"], "kind": _kind(feed)},
-        "verdict": _verdict(feed, silent),
+        "verdict": verdict(feed, silent),
         "warnings": _warnings(feed, silent, person),
         "kappa": residual_view(feed),
         "rail": _rail(feed),
         "now": _now(feed, silent),
         "sensors": [_sensor(name, *reading) for name, reading in feed["sensors"].items()],
         "log": [
-            {"utc": clock(entry["utc"]), "text": _stopped(entry["text"])} for entry in reversed(feed["log"])
+            {"utc": clock(entry["utc"]), "text": stopped(entry["text"])} for entry in reversed(feed["log"])
         ],
     }
 
@@ -106,101 +105,6 @@ def _kind(feed: Feed) -> dict[str, str] | None:
     return {"kind": feed["kind"], "word": word, "says": says}
 
 
-def _verdict(feed: Feed, silent: bool) -> dict[str, Any]:
-    tone, first, second = _silence(feed) if silent else _judgement(feed)
-    line, ends_utc = _line(feed, silent)
-    return {
-        "tone": tone,
-        "first": first,
-        "second": second,
-        "line": line,
-        "ends_utc": ends_utc if feed["clock"] == "real" else None,
-        "progress": _progress(feed),
-    }
-
-
-def _progress(feed: Feed) -> float | None:
-    visit, kappa = feed["visit"], feed["kappa"]
-    if visit is None:
-        return 0.0
-    if visit["number"] >= 0:
-        return round((visit["number"] + 1) / visit["of"], 4)
-    return round(kappa["pairs"] / kappa["planned_pairs"], 4) if kappa["planned_pairs"] else None
-
-
-def _silence(feed: Feed) -> tuple[str, str, str]:
-    written = clock(feed["written_utc"])
-    return "stop", f"No news from the run since {written}.", "Someone is needed."
-
-
-def _judgement(feed: Feed) -> tuple[str, str, str]:
-    state = feed["state"]
-    if state == "ended" or feed["ended"]:
-        return _ending(feed)
-    if state == "ready":
-        return "wait", "Ready.", "Not started yet."
-    if state == "holding":
-        return "stop", "Holding.", "Someone is needed."
-    if state == "parking":
-        return "look", "Parking.", "The stages go to their safe place."
-    return _going(feed)
-
-
-def _going(feed: Feed) -> tuple[str, str, str]:
-    first = _GOING[feed["kind"]]
-    if not feed["warnings"]:
-        return "fine", first, "Nobody is needed."
-    return "look", first, f"{_capital(spelt(len(feed['warnings']), 'thing'))} to look at."
-
-
-def _ending(feed: Feed) -> tuple[str, str, str]:
-    kappa = feed["kappa"]
-    if kappa["pairs"] >= kappa["planned_pairs"]:
-        return "done", "Done.", f"All {spelt(kappa['planned_pairs'], 'pair')} are counted."
-    return "look", "Ended early.", f"{kappa['pairs']} of {count(kappa['planned_pairs'])} pairs are counted."
-
-
-def _line(feed: Feed, silent: bool) -> tuple[str, str | None]:
-    """Return the line below the verdict, and the time it ends with, if it does."""
-    where, ended = _where(feed), feed["ended"]
-    if ended:
-        return (
-            f"{where}. {_stopped(_capital(ended['reason']))} Ended on {day_and_clock(ended['utc'])}.",
-            ended["utc"],
-        )
-    if silent:
-        return f"{where} was the last. Look at the computer at the bench: the program may have stopped.", None
-    if feed["state"] in ("holding", "parking"):
-        return f"{where}. Everything counted so far is saved.", None
-    if feed["state"] == "ready":
-        where = f"{_capital(spelt(feed['kappa']['planned_pairs'], 'pair'))} are planned"
-    own = "On the rehearsal's own clock, done" if feed["clock"] == "virtual" else "Done"
-    return f"{where}. {own} {_about(feed)}.", feed["ends_utc"]
-
-
-def _about(feed: Feed) -> str:
-    left = datetime.fromisoformat(feed["ends_utc"]) - datetime.fromisoformat(feed["updated_utc"])
-    far = left.total_seconds() > _DAY_SAID_FROM_S
-    return f"about {day_and_clock(feed['ends_utc'])}" if far else f"at about {clock(feed['ends_utc'])}"
-
-
-def _where(feed: Feed) -> str:
-    visit = feed["visit"]
-    if visit is None:
-        return "Before the first visit"
-    if visit["number"] < 0:
-        return "A check between planned visits"
-    return f"Visit {count(visit['number'] + 1)} of {count(visit['of'])}"
-
-
-def _capital(sentence: str) -> str:
-    return sentence[:1].upper() + sentence[1:]
-
-
-def _stopped(sentence: str) -> str:
-    return sentence if sentence.endswith((".", "!", "?")) else f"{sentence}."
-
-
 def _warnings(feed: Feed, silent: bool, person: Person) -> dict[str, Any]:
     items, since = feed["warnings"], clock(feed["started_utc"])
     until = f" up to the last news at {clock(feed['written_utc'])}" if silent else ""
@@ -215,9 +119,11 @@ def _warnings(feed: Feed, silent: bool, person: Person) -> dict[str, Any]:
 
 def _warning(feed: Feed, warning: Mapping[str, Any]) -> dict[str, Any]:
     return {
-        "what": _stopped(warning["what"]),
-        "do": _stopped(warning["do"]),
-        "good": _stopped(warning["good"]),
+        "what": stopped(warning["what"]),
+        "did": stopped(warning["did"]) if warning.get("did") else "",
+        "cost": stopped(warning["cost"]) if warning.get("cost") else "",
+        "do": stopped(warning["do"]),
+        "good": stopped(warning["good"]),
         "since": f"Since {clock(warning['since_utc'])}.",
         "since_utc": warning["since_utc"] if feed["clock"] == "real" else None,
         "seen": _seen(warning.get("acknowledged")),
@@ -225,7 +131,7 @@ def _warning(feed: Feed, warning: Mapping[str, Any]) -> dict[str, Any]:
 
 
 def _seen(noted: Mapping[str, Any] | None) -> str | None:
-    return None if noted is None else f"Seen by {noted['who']} at {clock(noted['utc'])}."
+    return None if noted is None else f"Seen by {noted['by']} at {clock(noted['utc'])}."
 
 
 def _rail(feed: Feed) -> dict[str, Any]:
@@ -271,7 +177,7 @@ def _doing(feed: Feed, going: bool, silent: bool) -> str:
         return "Not known."
     if not going:
         return "Nothing is being counted."
-    return f"{_capital(feed['state'])}; {duration(feed['run_s'])} into the run."
+    return f"{capital(feed['state'])}; {duration(feed['run_s'])} into the run."
 
 
 def _through(mask: int) -> str:

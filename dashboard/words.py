@@ -65,3 +65,13 @@ def unit_of(error: float) -> tuple[float, str]:
     exponent = min(0, max(-6, exponent))
     name, power = _UNITS[exponent]
     return 10.0**exponent, f"{name} ({power})" if power else name
+
+
+def capital(sentence: str) -> str:
+    """Return a sentence that begins with a capital letter."""
+    return sentence[:1].upper() + sentence[1:]
+
+
+def stopped(sentence: str) -> str:
+    """Return a sentence that ends with a stop."""
+    return sentence if sentence.endswith((".", "!", "?")) else f"{sentence}."

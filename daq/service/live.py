@@ -166,6 +166,18 @@ class Live:
         return {"cause": held.cause, "why": held.why, "since_utc": since, "at_bench": held.at_bench}
 
 
+def _budget(found: Budget | None) -> dict[str, Any] | None:
+    """Return the lines of a budget that are known, in the words and figures that the page shows."""
+    if found is None:
+        return None
+    lines = [
+        {"name": line.name, "value": line.value, "kind": line.kind, "halve": line.halve}
+        for line in found.lines
+        if line.value is not None
+    ]
+    return {"lines": lines, "total_se": found.total_se}
+
+
 def _told(one: Standing) -> dict[str, Any]:
     """Return a warning as the page gets it."""
     says = one.says

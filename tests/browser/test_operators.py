@@ -101,9 +101,7 @@ def test_a_run_that_holds_offers_to_go_on(lab: Lab, enter: Any) -> None:
 
     page = enter("Night watch")
 
-    expect(page.locator("#operate button")).to_have_text(
-        ["Resume", "End after this stand", "Park now", "Mute messages"]
-    )
+    expect(page.locator("#operate button")).to_have_text(["Resume", "End and park", "Mute messages"])
 
 
 def test_a_watcher_and_a_finished_run_have_no_buttons(lab: Lab, enter: Any) -> None:

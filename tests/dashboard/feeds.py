@@ -17,7 +17,13 @@ from daq.estimate import anytime_multiplier
 START = datetime(2026, 12, 1, 20, 15, tzinfo=UTC)
 PAIR_H = 0.521
 WARNING = {
+    "id": "level",
     "kind": "level",
+    "level": "note",
+    "in_doubt": False,
+    "did": "The run goes on.",
+    "cost": "",
+    "acknowledged": None,
     "what": "The count rate fell by 5.5 % in 4.1 hours.",
     "do": "Nothing has to be done tonight; look at the source in the morning.",
     "good": "The order of measurement cancels a slow change, so kappa is still good.",
@@ -54,6 +60,8 @@ def feed(
         "rate": _strip(hours, generator),
         "sensors": {"room_temperature": [294.464, "K"], "room_pressure": [101324.0, "Pa"]},
         "warnings": [],
+        "holding": None,
+        "in_doubt": False,
         "log": [
             {"utc": _utc(0), "text": "The run started"},
             {"utc": _utc(2.03), "text": "The counter did not reply for 0.5 s; it replied again at once"},

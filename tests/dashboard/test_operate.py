@@ -21,9 +21,9 @@ def offered(content: dict[str, object], person: Person = OPERATOR, silent: bool 
 @pytest.mark.parametrize(
     ("state", "acts"),
     [
-        ("moving", ["hold", "end-after-lap", "end", "park", "mute"]),
-        ("counting", ["hold", "end-after-lap", "end", "park", "mute"]),
-        ("holding", ["resume", "end", "park", "mute"]),
+        ("moving", ["hold", "end-after-lap", "park", "mute"]),
+        ("counting", ["hold", "end-after-lap", "park", "mute"]),
+        ("holding", ["resume", "park", "mute"]),
         ("parking", []),
         ("ready", []),
     ],
@@ -47,24 +47,19 @@ def test_nothing_is_offered_of_a_run_that_ended_or_is_silent() -> None:
 def test_every_act_that_moves_or_stops_something_says_that_it_is_no_safety_function() -> None:
     acts = operate_view(feed(), False, OPERATOR, [])["acts"]
 
-    assert {act["what"] for act in acts if NOT_SAFE in act["will"]} == {
-        "hold",
-        "end-after-lap",
-        "end",
-        "park",
-    }
+    assert {act["what"] for act in acts if NOT_SAFE in act["will"]} == {"hold", "end-after-lap", "park"}
     assert all(act["run"] == feed()["run"] for act in acts)
 
 
 def test_an_end_says_how_much_is_counted() -> None:
-    (end,) = (act for act in operate_view(feed(), False, OPERATOR, [])["acts"] if act["what"] == "end")
+    (end,) = (act for act in operate_view(feed(), False, OPERATOR, [])["acts"] if act["what"] == "park")
 
     assert "12 of 19 pairs are counted by now." in end["will"]
 
 
 def test_a_warning_is_taken_note_of_once() -> None:
     button = acknowledging(feed(), OPERATOR, WARNING)
-    noted = acknowledging(feed(), OPERATOR, WARNING | {"acknowledged": {"who": "x", "utc": "now"}})
+    noted = acknowledging(feed(), OPERATOR, WARNING | {"acknowledged": {"by": "x", "utc": "now"}})
 
     assert button is not None
     assert (button["what"], button["about"]) == ("acknowledge", "level")
@@ -87,3 +82,19 @@ def test_requests_are_told_newest_first_with_what_became_of_them() -> None:
 
 def test_every_act_has_a_label_and_says_what_will_happen() -> None:
     assert all(act.label and act.will.endswith((".", "}")) for act in ACTS.values())
+
+
+def test_a_hold_that_only_the_bench_clears_offers_no_resume_and_says_so() -> None:
+    held = {"cause": "interlock", "why": "The pressure is out of band.", "since_utc": "x", "at_bench": True}
+
+    said = operate_view(feed(state="holding", holding=held), False, OPERATOR, [])
+
+    assert [act["what"] for act in said["acts"]] == ["park", "mute"]
+    assert "cleared at the bench only" in said["says"]
+
+
+def test_muting_says_for_how_long_and_asks_for_that_long() -> None:
+    (mute,) = (act for act in operate_view(feed(), False, OPERATOR, [])["acts"] if act["what"] == "mute")
+
+    assert "next 8 hours" in mute["will"]
+    assert mute["about"] == "480"

@@ -191,3 +191,40 @@ def test_what_the_page_says_is_plain_data(content: dict[str, Any]) -> None:
     said = view(content, silent=False)
 
     assert json.loads(json.dumps(said, allow_nan=False)) == said
+
+
+HELD = {"cause": "asked", "why": "Kim asked the run to hold.", "since_utc": "x", "at_bench": False}
+
+
+@pytest.mark.parametrize(
+    ("held", "level", "tone", "second"),
+    [
+        (HELD, "note", "look", "As somebody asked."),
+        (HELD | {"cause": "fault"}, "note", "look", "It goes on by itself when this is over."),
+        (HELD | {"cause": "fault"}, "wake", "stop", "Someone is needed."),
+        (HELD | {"cause": "interlock", "at_bench": True}, "note", "stop", "Someone is needed."),
+    ],
+)
+def test_a_hold_says_whether_somebody_is_needed(held: Any, level: str, tone: str, second: str) -> None:
+    said = view(feed(state="holding", holding=held, warnings=[WARNING | {"level": level}]), silent=False)
+
+    assert (said["verdict"]["tone"], said["verdict"]["second"]) == (tone, second)
+    assert "Kim asked the run to hold." in said["verdict"]["line"]
+
+
+def test_a_warning_that_wakes_needs_someone_and_one_in_doubt_says_so() -> None:
+    wakes = view(feed(warnings=[WARNING | {"level": "wake"}]), silent=False)["verdict"]
+    doubts = view(feed(warnings=[WARNING], in_doubt=True), silent=False)["verdict"]
+
+    assert (wakes["tone"], wakes["second"]) == ("stop", "Someone is needed.")
+    assert doubts["second"] == "One thing to look at. κ is in doubt."
+
+
+def test_a_warning_says_what_was_done_what_it_costs_and_who_has_seen_it() -> None:
+    seen = {"by": "Kim", "utc": "2026-12-02T03:12:00Z"}
+    warning = WARNING | {"did": "The run holds", "cost": "It loses 2 h", "acknowledged": seen}
+
+    (item,) = view(feed(warnings=[warning]), silent=False)["warnings"]["items"]
+
+    assert (item["did"], item["cost"]) == ("The run holds.", "It loses 2 h.")
+    assert item["seen"] == "Seen by Kim at 03:12 UTC."
