@@ -51,6 +51,10 @@ class Layout:
         return 1 << (self.bits - 1) | self.event(number, tag)
 
 
+FEW_CHANNELS = 8
+STRETCH = 1 << 15  # words that are sorted at once: what is made of them stays in the cache
+BLOCK = 2048  # words that the compiled rule looks at before it counts them
+
 U32, U64 = Layout("<u4", 32, 25, 6), Layout("<u8", 64, 56, 7)
 
 
@@ -107,88 +111,130 @@ Sort = Callable[[Words, Binned, Layout, int, int], None]
 
 def sort_words(words: Words, binned: Binned, layout: Layout, first_tick: int, ticks: int) -> None:
     """Add words to what is binned: cut at the special words, each stretch between them at once."""
-    special = np.flatnonzero(words >> np.array(layout.bits - 1, words.dtype))
-    mask = (1 << layout.tag_bits) - 1
-    start = 0
-    for place in special.tolist():
-        _add(words[start:place], binned, layout, first_tick, ticks)
-        word = int(words[place])
-        number, tag = word >> layout.tag_bits & layout.rolled, word & mask
-        if number == layout.rolled:
-            binned.rolled += tag
-        elif number == layout.rolled - 1:
-            binned.lost += tag
-        start = place + 1
-    _add(words[start:], binned, layout, first_tick, ticks)
+    for start in range(0, len(words), STRETCH):
+        stretch = words[start : start + STRETCH]
+        begun, top = 0, stretch.dtype.type(1 << (layout.bits - 1))
+        for place in np.flatnonzero(stretch >= top).tolist() if stretch.max() >= top else ():
+            _add(stretch[begun:place], binned, layout, first_tick, ticks)
+            _take_special(int(stretch[place]), binned, layout)
+            begun = place + 1
+        _add(stretch[begun:], binned, layout, first_tick, ticks)
+
+
+def _take_special(word: int, binned: Binned, layout: Layout) -> None:
+    number, tag = word >> layout.tag_bits & layout.rolled, word & (1 << layout.tag_bits) - 1
+    if number == layout.rolled:
+        binned.rolled += tag
+    elif number == layout.rolled - 1:
+        binned.lost += tag
 
 
 def _add(words: Words, binned: Binned, layout: Layout, first_tick: int, ticks: int) -> None:
-    """Add a stretch of events without a roll-over: one histogram of (slice, channel)."""
+    """Add a stretch of events without a roll-over; most lie within one slice, and nothing is divided then."""
     if not words.size:
-        return
+        return None
     slices, channels = binned.counts.shape
     base = (binned.rolled << layout.tag_bits) - first_tick
-    kind: Any = np.int64 if layout.bits == 64 or ticks.bit_length() > layout.tag_bits else np.int32
-    tags: NDArray[Any] = (words & words.dtype.type((1 << layout.tag_bits) - 1)).astype(kind)
+    tags = words & words.dtype.type((1 << layout.tag_bits) - 1)
+    channel = (words >> words.dtype.type(layout.tag_bits)).astype(np.uint8)
+    first, last = ((base + int(edge)) // ticks for edge in (tags.min(), tags.max()))
+    if first != last:
+        return _add_across(tags, channel, binned, base, ticks)
+    if not 0 <= first < slices:
+        binned.outside += words.size
+        return None
+    found = _by_channel(channel, channels)
+    binned.counts[first] += found
+    binned.outside += words.size - int(found.sum())
+    return None
+
+
+def _by_channel(channel: NDArray[np.uint8], channels: int) -> Counts:
+    """Return how many events each channel has; comparing is quicker than a histogram for a few channels."""
+    if channels > FEW_CHANNELS:
+        return np.bincount(channel, minlength=channels)[:channels]
+    return np.array([np.count_nonzero(channel == one) for one in range(channels)])
+
+
+def _add_across(tags: Words, channel: NDArray[np.uint8], binned: Binned, base: int, ticks: int) -> None:
+    """Add a stretch that reaches over several slices: one histogram of (slice, channel)."""
+    slices, channels = binned.counts.shape
+    kind: Any = np.int64 if tags.dtype.itemsize == 8 or ticks > np.iinfo(np.int32).max else np.int32
     # the slice of a tag, with the part that all of them share taken out so that it fits a small integer
     shared, offset = divmod(base, ticks)
-    place = (tags + kind(offset)) // kind(ticks) + kind(np.clip(shared, -(2**30), 2**30))
-    channel: NDArray[Any] = (words >> words.dtype.type(layout.tag_bits)).astype(kind)
+    if kind is np.int32 and offset > np.iinfo(np.int32).max - int(tags.max()):
+        kind = np.int64
+    place = (tags.astype(kind) + kind(offset)) // kind(ticks) + kind(np.clip(shared, -(2**30), 2**30))
     good = (place >= 0) & (place < slices) & (channel < channels)
-    if not good.all():
-        binned.outside += int(good.size - np.count_nonzero(good))
-        place, channel = place[good], channel[good]
-    flat = np.bincount(place * kind(channels) + channel, minlength=slices * channels)
+    binned.outside += int(good.size - np.count_nonzero(good))
+    flat = np.bincount(place[good] * kind(channels) + channel[good], minlength=slices * channels)
     binned.counts += flat.reshape(slices, channels)
 
 
-@cache  # compiling takes a third of a second
+@cache  # compiling takes a second
 def _compiled() -> Sort:
     numba: Any = import_module("numba")
     loop = numba.njit(nogil=True)(count_words)
 
     def sort(words: Words, binned: Binned, layout: Layout, first_tick: int, ticks: int) -> None:
-        outside, lost, binned.rolled = loop(
-            words,
-            binned.counts,
-            layout.bits,
-            layout.tag_bits,
-            layout.rolled,
-            binned.rolled,
-            first_tick,
-            ticks,
-        )
+        typed = words_of(layout)
+        outside, lost, binned.rolled = loop(words, binned.counts, *typed, binned.rolled, first_tick, ticks)
         binned.outside, binned.lost = binned.outside + outside, binned.lost + lost
 
     return sort
 
 
-def count_words(
-    words: Any, counts: Any, bits: int, tag_bits: int, mark: int, rolled: int, first_tick: int, ticks: int
-) -> tuple[int, int, int]:
-    """Add words to counts one by one and return (events outside, lost, roll-overs): the rule, for a compiler.
+def words_of(layout: Layout) -> tuple[Any, Any, Any, int]:
+    """Return mask of the tag, shift to the channel and top bit as words, and the number of a roll-over."""
+    kind = np.dtype(layout.dtype).type
+    return (
+        kind((1 << layout.tag_bits) - 1),
+        kind(layout.tag_bits),
+        kind(1 << (layout.bits - 1)),
+        layout.rolled,
+    )
 
-    Events come nearly in order, so the slice of the last one is tried before anything is divided.
+
+def count_words(
+    words: Any,
+    counts: Any,
+    mask: Any,
+    shift: Any,
+    top: Any,
+    mark: int,
+    rolled: int,
+    first_tick: int,
+    ticks: int,
+) -> tuple[int, int, int]:
+    """Add words to counts and return (events outside, lost, roll-overs): the rule, for a compiler.
+
+    Block by block: most have no special word and lie within one slice; then only channels are told apart.
     """
-    outside, lost, mask, top = 0, 0, (1 << tag_bits) - 1, 1 << (bits - 1)
+    outside, lost, wrap = 0, 0, np.int64(mask) + 1
     slices, channels = counts.shape
-    base, place, low = (rolled << tag_bits) - first_tick, 0, 0
-    for at in range(words.size):
-        word = int(words[at])
-        number = (word >> tag_bits) & mark
-        if word & top:
-            if number == mark:
-                rolled += word & mask
-                base = (rolled << tag_bits) - first_tick
-            elif number == mark - 1:
-                lost += word & mask
+    found = np.zeros((2, mark + 1), np.int64)
+    for start in range(0, words.size, BLOCK):
+        block = words[start : start + BLOCK]
+        low, high, special = block[0] & mask, block[0] & mask, block[0]
+        for word in block:
+            low, high, special = min(low, word & mask), max(high, word & mask), special | word
+        place = (rolled * wrap - first_tick + np.int64(low)) // ticks
+        last = (rolled * wrap - first_tick + np.int64(high)) // ticks
+        if special & top == 0 and place == last and 0 <= place < slices:
+            found[:] = 0
+            for at in range(block.size):  # in turn: one alone would wait for itself at every event
+                found[at & 1, block[at] >> shift] += 1
+            counts[place] += found[0, :channels] + found[1, :channels]
+            outside += found[:, channels:].sum()
             continue
-        since = base + (word & mask) - low
-        if not 0 <= since < ticks:
-            place = (since + low) // ticks
-            low = place * ticks
-        if 0 <= place < slices and number < channels:
-            counts[place, number] += 1
-        else:
-            outside += 1
+        for word in block:
+            number, tag = np.int64(word >> shift) & mark, np.int64(word & mask)
+            place = (rolled * wrap - first_tick + tag) // ticks
+            if word & top:
+                rolled += tag * (number == mark)
+                lost += tag * (number == mark - 1)
+            elif 0 <= place < slices and number < channels:
+                counts[place, number] += 1
+            else:
+                outside += 1
     return outside, lost, rolled

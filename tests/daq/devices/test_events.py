@@ -11,7 +11,7 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from daq.devices.events import U32, U64, Binned, Binner, Layout, count_words
+from daq.devices.events import U32, U64, Binned, Binner, Layout, count_words, words_of
 from daq.devices.stream import pump
 from daq.errors import DeviceError
 from simulators.listmode import StreamSource, example_words
@@ -21,9 +21,7 @@ def plainly(words: bytes, layout: Layout, channels: int, slices: int, first_tick
     """Return what the plain rule counts, word by word."""
     binned = Binned(np.zeros((slices, channels), dtype=np.int64))
     array = np.frombuffer(words, layout.dtype)
-    outside, lost, rolled = count_words(
-        array, binned.counts, layout.bits, layout.tag_bits, layout.rolled, 0, first_tick, ticks
-    )
+    outside, lost, rolled = count_words(array, binned.counts, *words_of(layout), 0, first_tick, ticks)
     return Binned(binned.counts, outside, lost, rolled)
 
 
