@@ -168,7 +168,7 @@ def _await_arrival(
             raise DeviceError(
                 f"still moving {MOVE_GRACE_S:g} s after it should have arrived for visit {visit.number}",
                 where=f"axis {slow}",
-                remedy="Look at the stage, then resume",
+                remedy="Look at the stage, then go on with `tercet run --resume RUN`",
                 kind="timeout",
             )
         clock.sleep_until(clock.now_ns() + POLL_NS)
@@ -198,7 +198,7 @@ def _await_gate(gate: _Gate, devices: Devices, clock: Clock) -> None:
             raise DeviceError(
                 f"the gate is still open {GATE_GRACE_S:g} s after its end",
                 where=f"counter {devices.counter.name}",
-                remedy="Look at the counter, then resume",
+                remedy="Look at the counter, then go on with `tercet run --resume RUN`",
                 kind="timeout",
             )
         clock.sleep_until(clock.now_ns() + POLL_NS)

@@ -4,10 +4,13 @@ from __future__ import annotations
 
 import argparse
 import logging
+import os
 import signal
 import socket
 import sys
+import threading
 from collections.abc import Sequence
+from contextlib import suppress
 from pathlib import Path
 
 from daq.errors import DaqError, DescriptionError, StorageError
@@ -48,6 +51,9 @@ def _parser() -> argparse.ArgumentParser:
     )
     parser.add_argument(
         "--behind-proxy", action="store_true", help="a TLS proxy on this computer passes requests on"
+    )
+    parser.add_argument(
+        "--until-eof", action="store_true", help="end when standard input ends, with whoever started it"
     )
     parser.add_argument("--run", metavar="NAME", help="show this run; without it, always the newest")
     return parser
@@ -102,9 +108,18 @@ def _serve(listening: socket.socket, asked: argparse.Namespace) -> int:
     )
     signal.signal(signal.SIGTERM, signal.default_int_handler)
     host, port = listening.getsockname()[:2]
-    _say_where(host, port, plain=afar and not asked.behind_proxy)
-    server.run()  # waitress ends it on KeyboardInterrupt
+    with suppress(KeyboardInterrupt):
+        _say_where(host, port, plain=afar and not asked.behind_proxy)
+        if asked.until_eof:
+            threading.Thread(target=_end_with_the_other, daemon=True).start()
+        server.run()  # waitress ends it on KeyboardInterrupt
     return 0
+
+
+def _end_with_the_other() -> None:
+    """End when whoever started the page is gone, also when it was killed."""
+    sys.stdin.read()
+    os.kill(os.getpid(), signal.SIGTERM)
 
 
 def _say_where(host: str, port: int, plain: bool) -> None:

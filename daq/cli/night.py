@@ -6,7 +6,7 @@ import argparse
 import signal
 import sys
 import time
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterator, Sequence
 from contextlib import ExitStack, contextmanager
 from pathlib import Path
 from types import FrameType
@@ -22,6 +22,7 @@ from daq.service.asked import Asked
 from daq.service.figures import figures_of
 from daq.service.load import Loaded, config_dir, load
 from daq.service.night import COMPLETE
+from daq.service.owner import refuse_owned
 from daq.service.page import PageProcess, make_lab
 from daq.service.progress import Progress
 from daq.service.start import Wanted, begin, resume
@@ -43,13 +44,14 @@ def run(arguments: argparse.Namespace) -> Answer:
 def _carry_out(arguments: argparse.Namespace, transport: str, file: Path) -> Answer:
     loaded = None if arguments.resume else _loaded(arguments, file)
     lab = arguments.resume.resolve().parents[1] if arguments.resume else arguments.into
+    refuse_owned(lab)
     began_s = time.monotonic()
     with ExitStack() as stack:
         page = show_page(stack, lab, sys.stderr if arguments.json else sys.stdout) if arguments.page else None
-        asked = stack.enter_context(interrupts())
         watch = _Watch()
-        wanted = Wanted(transport, getattr(arguments, "home", False), asked, watch.begins, watch.took)
-        folder, ended = begin(loaded, lab, wanted) if loaded else resume(arguments.resume, wanted)
+        with interrupts() as asked:
+            wanted = Wanted(transport, getattr(arguments, "home", False), asked, watch.begins, watch.took)
+            folder, ended = begin(loaded, lab, wanted) if loaded else resume(arguments.resume, wanted)
         watch.done()
         figures = figures_of(folder)
         figures |= {
@@ -104,10 +106,10 @@ def _told(figures: dict[str, Any], watch: _Watch) -> list[str]:
     return [*lines(figures), f"took {watch.wall_s:.1f} s{faster}; {durable}"]
 
 
-def show_page(stack: ExitStack, lab: Path, stream: TextIO) -> PageProcess:
+def show_page(stack: ExitStack, lab: Path, stream: TextIO, options: Sequence[str] = ()) -> PageProcess:
     """Start the page of a lab for as long as a stack lasts, and print its address."""
     make_lab(lab)
-    page = stack.enter_context(PageProcess(lab))
+    page = stack.enter_context(PageProcess(lab, options))
     print(f"page: {page.address}", file=stream, flush=True)
     return page
 

@@ -7,6 +7,7 @@ import getpass
 import sys
 from contextlib import ExitStack
 from datetime import UTC, datetime
+from pathlib import Path
 
 from daq.cli.answer import Answer
 from daq.cli.night import interrupts, show_page
@@ -16,6 +17,7 @@ from daq.service.bookings import Booking, bookings, cancel
 from daq.service.bookings import book as booked
 from daq.service.load import load
 from daq.service.mail import settings_of
+from daq.service.owner import owned
 from daq.service.serve import serve as served
 from daq.storage.lab import there
 from daq.storage.lab_book import select
@@ -23,12 +25,26 @@ from daq.storage.lab_book import select
 
 def serve(arguments: argparse.Namespace) -> Answer:
     """Own a lab: start what is booked, show the page, until Ctrl-C."""
+    stream = sys.stderr if arguments.json else sys.stdout
+
+    def say(text: str) -> None:
+        print(f"{datetime.now(UTC):%Y-%m-%d %H:%M} UTC  {text}", file=stream, flush=True)
+
     with ExitStack() as stack:
+        stack.enter_context(owned(arguments.lab))  # before anything is promised
         if not arguments.no_page:
-            show_page(stack, arguments.lab, sys.stderr if arguments.json else sys.stdout)
+            show_page(stack, arguments.lab, stream, _page_options(arguments))
         asked = stack.enter_context(interrupts())
-        started = served(arguments.lab, asked)
-    return Answer(0, {"started": started}, [f"{started} runs were started"])
+        done = served(arguments.lab, asked, say)
+    return Answer(0, done, [f"runs started: {done['started']}; gone on with: {done['resumed']}"])
+
+
+def _page_options(arguments: argparse.Namespace) -> list[str]:
+    """Return where the page listens, in the page's own words; off this computer it asks for passwords."""
+    options = ["--host", arguments.host, "--port", str(arguments.port)]
+    for name in arguments.name:
+        options += ["--name", name]
+    return [*options, "--behind-proxy"] if arguments.behind_proxy else options
 
 
 def arm(arguments: argparse.Namespace) -> Answer:
@@ -73,7 +89,17 @@ def book(arguments: argparse.Namespace) -> Answer:
         wishes=wishes(arguments),
         who=arguments.by or getpass.getuser(),
     )
-    return Answer(0, _figures(made), [f"booked as {made.number}; {_when(made)}"])
+    lines = [f"booked as {made.number}; {_when(made)}", _what_it_will_be(made, arguments.lab)]
+    return Answer(0, _figures(made), lines)
+
+
+def _what_it_will_be(made: Booking, lab: Path) -> str:
+    """Return what nobody should be surprised by at the start."""
+    if load(made.file, made.wishes).rig.simulated:
+        return (
+            "Every device of its rig is simulated: it will be a rehearsal in virtual time, over in a minute."
+        )
+    return f"Every start has to be armed within 24 h before it: tercet arm {lab} {made.file}"
 
 
 def list_bookings(arguments: argparse.Namespace) -> Answer:

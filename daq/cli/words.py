@@ -116,6 +116,15 @@ def _service_words(commands: Any) -> None:
     lab = "own a lab and start what is booked"
     serve = _add(commands, "serve", "service:serve", lab, "tercet serve lab")
     serve.add_argument("--no-page", action="store_true", help="do not show the page")
+    where = (
+        "address that the page listens on (this computer alone); others need passwords, see `tercet people`"
+    )
+    serve.add_argument("--host", default="127.0.0.1", help=where)
+    serve.add_argument("--port", type=int, default=8347, help="port of the page; 0 takes a free one (8347)")
+    called = "a name by which others call this computer (repeatable)"
+    serve.add_argument("--name", action="append", default=[], help=called)
+    proxy = "a TLS proxy on this computer passes requests to the page on"
+    serve.add_argument("--behind-proxy", action="store_true", help=proxy)
     start = "book an unattended start, once or recurring"
     example = "tercet book lab lantern.toml --at 18:30 --on mon,fri --end-by 08:00"
     book = _add(commands, "book", "service:book", start, example)
@@ -146,17 +155,25 @@ def _booking_words(book: argparse.ArgumentParser) -> None:
 
 
 def _watch_words(commands: Any) -> None:
-    newest = "say how a lab's newest run is getting on"
+    newest = "say how a run of a lab is getting on"
     status = _add(commands, "status", "watch:status", newest, "tercet status lab")
     pause = "ask a run to hold before its next stand"
     hold = _add(commands, "hold", "watch:hold", pause, "tercet hold lab")
     resume = _add(commands, "resume", "watch:resume", "ask a run that holds to go on", "tercet resume lab")
     stop = "ask a run to end after this stand"
     end = _add(commands, "end", "watch:end", stop, "tercet end lab --after-lap")
-    for one in (status, hold, resume, end):
+    seen = "say that you have seen the warnings of a run, or call nobody for some time"
+    acknowledge = _add(commands, "acknowledge", "watch:acknowledge", seen, "tercet acknowledge lab level-1")
+    for one in (status, hold, resume, end, acknowledge):
         one.add_argument("lab", type=Path, metavar="LAB", help="the lab folder")
-    for one in (hold, resume, end):
-        one.add_argument("--run", metavar="NAME", help="a run of the lab (the newest)")
+        one.add_argument("--run", metavar="NAME", help="a run of the lab (the one that goes on)")
+    acknowledge.add_argument("warning", nargs="?", metavar="WARNING", help="its name (every one)")
+    acknowledge.add_argument("--mute-min", type=float, metavar="MIN", help="call nobody for so many minutes")
+    resume.add_argument(
+        "--at-bench", action="store_true", help="clear a hold that only a person at the bench may clear"
+    )
+    resume.add_argument("--home", action="store_true", help="with --at-bench: home axes without a reference")
+    for one in (hold, resume, end, acknowledge):
         one.add_argument("--by", metavar="NAME", help="who asks (your login name)")
     end.add_argument("--after-lap", action="store_true", help="end at the edge of a lap, not of a stand")
     log = _add(commands, "log", "watch:log", "print what happened in a run", f"tercet log {RUN}")

@@ -14,7 +14,7 @@ from daq.ports import Clock, Connection
 
 log = logging.getLogger(__name__)
 
-CHECK = "Check power and cable of the device, then resume with `tercet resume`"
+CHECK = "Check power and cable of the device, then go on with `tercet run --resume RUN`"
 
 _CHUNK, _BLOCK = 65536, 1 << 20
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Mapping
 from typing import Any
 
@@ -21,6 +22,20 @@ def lines(figures: Mapping[str, Any]) -> list[str]:
     account = account_lines(figures)
     parts = (_head(figures), _residual(figures), account, _visits(figures), _archive(figures))
     return [line for part in parts if part for line in (*part, "")][:-1]
+
+
+def with_error(value: float, se: float) -> str:
+    """Return a value and its error in one power of ten, the error to two decimals: "−0.05e-04 ± 1.06e-04"."""
+    if not (se > 0 and math.isfinite(se) and math.isfinite(value)):
+        return f"{_signed(value)} ± {se:.2e}"
+    power = math.floor(math.log10(se))
+    scaled = _number(value / 10.0**power, "+.2f")
+    return f"{scaled}e{power:+03d} ± {se / 10.0**power:.2f}e{power:+03d}"
+
+
+def _truth(value: float, se: float) -> str:
+    """Return the truth; a rounding error of the arithmetic is none."""
+    return "0" if abs(value) < 1e-6 * se else _signed(value)
 
 
 def _head(figures: Mapping[str, Any]) -> list[str]:
@@ -59,7 +74,7 @@ def _residual(figures: Mapping[str, Any]) -> list[str]:
             f"epsilon = {_signed(figures['epsilon'])} ± {figures['epsilon_se']:.3g} per second",
         ]
     found = [
-        f"kappa = {_signed(figures['kappa'])} ± {figures['kappa_se']:.2e} "
+        f"kappa = {with_error(figures['kappa'], figures['kappa_se'])} "
         f"(jackknife over {figures['pairs']} pairs; {figures['normalisation']} normalisation)",
         f"95 % interval, if read once at the planned end: {_interval(figures['interval_95'])}",
         f"95 % over the whole night, whatever you do:     {_interval(figures['whole_night_95'])}",
@@ -69,9 +84,8 @@ def _residual(figures: Mapping[str, Any]) -> list[str]:
     ]
     if figures["truth_kappa"] is not None:
         off = (figures["kappa"] - figures["truth_kappa"]) / figures["kappa_se"]
-        found.append(
-            f"simulated truth {_signed(figures['truth_kappa'])}: off by {_number(off, '.2f')} standard errors"
-        )
+        truth = _truth(figures["truth_kappa"], figures["kappa_se"])
+        found.append(f"simulated truth {truth}: off by {_number(off, '.2f')} standard errors")
     return found
 
 

@@ -16,6 +16,8 @@ from daq.service.load import Wishes, load
 from daq.service.requests import utc_now
 from daq.storage.lab_book import insert, select, update
 
+GOING_ON = "going on"
+
 
 @dataclass(frozen=True, slots=True)
 class Booking:
@@ -45,17 +47,19 @@ def book(
     end_at: str | None,
     wishes: Wishes,
     who: str,
+    now: datetime | None = None,
 ) -> Booking:
     """Add a booking to a lab and return it.
 
     Raises
     ------
     DescriptionError
-        When the measurement cannot be carried out, or days, time or zone cannot be read.
+        When the measurement cannot be carried out, a time cannot be read, or it would never start.
     """
     load(file, wishes)
     times = _times(days, at, zone, first_day, late_s)
     over_by = _time(end_at, "--end-by") if end_at else None
+    _refuse_odd(times, over_by, now or datetime.now(UTC))
     number = insert(
         lab,
         "bookings",
@@ -73,9 +77,9 @@ def book(
     return Booking(number, file.resolve(), times, over_by, wishes, who)
 
 
-def bookings(lab: Path) -> list[Booking]:
-    """Return the bookings of a lab that nobody has cancelled."""
-    return [_of_row(row) for row in select(lab, "bookings", "cancelled_utc IS NULL")]
+def bookings(lab: Path, *, cancelled: bool = False) -> list[Booking]:
+    """Return the bookings of a lab that nobody has cancelled, or all of them."""
+    return [_of_row(row) for row in select(lab, "bookings", "1" if cancelled else "cancelled_utc IS NULL")]
 
 
 def cancel(lab: Path, number: int) -> None:
@@ -95,6 +99,19 @@ def note_start(lab: Path, booking: Booking, due: datetime, outcome: str, run: st
     """Write down what became of a start."""
     due_utc = due.isoformat()
     insert(lab, "starts", booking=booking.number, due_utc=due_utc, utc=utc_now(), outcome=outcome, run=run)
+
+
+def note_outcome(lab: Path, run: str, outcome: str) -> None:
+    """Write down how the run of a start has ended."""
+    started = start_of(lab, run)
+    if started is not None:
+        update(lab, "starts", started["id"], outcome=outcome)
+
+
+def start_of(lab: Path, run: str) -> dict[str, Any] | None:
+    """Return the booked start that a run came from, if it came from one."""
+    found = select(lab, "starts", "run = ?", (run,))
+    return found[-1] if found else None
 
 
 def dealt_with(lab: Path, booking: Booking, due: datetime) -> bool:
@@ -128,6 +145,18 @@ def _times(days: Sequence[str], at: str, zone: str, first_day: str, late_s: floa
     except ValueError as error:
         raise DescriptionError((f"--first-day: a date like 2026-12-01, not {first_day!r}.",)) from error
     return Times(lower, _time(at, "--at"), where, day, late_s)
+
+
+def _refuse_odd(times: Times, over_by: time | None, now: datetime) -> None:
+    """Refuse what nobody can mean: a start in the past, an end at the start, a lateness below zero."""
+    if not 0 <= times.late_s <= 86_400:
+        raise DescriptionError((f"--late-min: from 0 to 1440 minutes, not {times.late_s / 60:g}.",))
+    if over_by == times.at:
+        raise DescriptionError((f"--end-by: {over_by:%H:%M} is the time of the start; give a later one.",))
+    if next(starts(times, now), None) is None:
+        when = f"{times.first_day} {times.at:%H:%M} {times.zone.key}"
+        text = f"--at: {when} is past, so this booking would never start. Give --first-day or another time."
+        raise DescriptionError((text,))
 
 
 def _time(text: str, key: str) -> time:

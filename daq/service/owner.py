@@ -37,6 +37,30 @@ def owned(lab: Path) -> Iterator[None]:
         os.close(handle)
 
 
+def refuse_owned(lab: Path) -> None:
+    """Refuse to start a run by hand in a lab that a service owns.
+
+    Raises
+    ------
+    StorageError
+        With the name of the holder.
+    """
+    try:
+        handle = os.open(lab / LOCK, os.O_RDONLY | os.O_CLOEXEC)
+    except OSError:
+        return
+    try:
+        fcntl.flock(handle, fcntl.LOCK_SH | fcntl.LOCK_NB)
+    except BlockingIOError:
+        raise StorageError(
+            f"a service owns this lab: {_holder(handle)}",
+            where=str(lab),
+            remedy="Book the run there with `tercet book`, end the service first, or use another --into",
+        ) from None
+    finally:
+        os.close(handle)
+
+
 def _take(handle: int, lab: Path) -> None:
     try:
         fcntl.flock(handle, fcntl.LOCK_EX | fcntl.LOCK_NB)

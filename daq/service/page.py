@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import subprocess
 import sys
+from collections.abc import Sequence
 from pathlib import Path
 from typing import IO, Self, cast
 
@@ -23,15 +24,14 @@ def make_lab(lab: Path) -> None:
 class PageProcess:
     """A running page; closing it ends the process."""
 
-    def __init__(self, lab: Path, run: str | None = None) -> None:
-        command = [sys.executable, "-m", page_module(), str(lab), "--port", "0"]
-        command += ["--run", run] if run else []
+    def __init__(self, lab: Path, options: Sequence[str] = ()) -> None:
+        command = [sys.executable, "-m", page_module(), str(lab), "--until-eof", *options]
         # A session of its own: Ctrl-C ends the run after its stand, and must not end the page.
         self._process = subprocess.Popen(
             command,
             stdout=subprocess.PIPE,
             text=True,
-            stdin=subprocess.DEVNULL,
+            stdin=subprocess.PIPE,  # its end tells the page that this program is gone, however it went
             start_new_session=True,
         )
         first = cast(IO[str], self._process.stdout).readline()
@@ -54,5 +54,6 @@ class PageProcess:
         """End the page."""
         self._process.terminate()
         self._process.wait(timeout=10)
-        if self._process.stdout:
-            self._process.stdout.close()
+        for stream in (self._process.stdin, self._process.stdout):
+            if stream:
+                stream.close()

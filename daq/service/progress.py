@@ -21,11 +21,15 @@ class Progress:
         self._planned, self._stream, self._now_s = planned, stream or sys.stderr, now_s
         self._shown_s = float("-inf")
         self._wanted = self._stream.isatty()
+        self._last: Reading | None = None
 
     def took(self, reading: Reading) -> None:
         """Show how far the run is."""
-        if not self._wanted or self._now_s() - self._shown_s < EVERY_S:
-            return
+        self._last = reading
+        if self._wanted and self._now_s() - self._shown_s >= EVERY_S:
+            self._show(reading)
+
+    def _show(self, reading: Reading) -> None:
         self._shown_s = self._now_s()
         hours = reading.gate_close_ns / 3.6e12
         share = 100 * (reading.visit + 1) / self._planned
@@ -35,7 +39,8 @@ class Progress:
         self._stream.flush()
 
     def done(self) -> None:
-        """End the line."""
-        if self._wanted and self._shown_s > float("-inf"):
+        """Show the last visit and end the line."""
+        if self._wanted and self._last is not None:
+            self._show(self._last)
             self._stream.write("\n")
             self._stream.flush()

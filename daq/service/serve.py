@@ -4,22 +4,33 @@ from __future__ import annotations
 
 import logging
 import queue
+from collections.abc import Callable, Mapping
 from datetime import UTC, datetime, timedelta
 from pathlib import Path
+from typing import Any
 
 from apscheduler.schedulers.background import BackgroundScheduler
 
 from daq.errors import DaqError
 from daq.service.arming import use_arming
 from daq.service.asked import Asked
-from daq.service.bookings import Booking, bookings, dealt_with, end_of, note_start
+from daq.service.bookings import (
+    GOING_ON,
+    Booking,
+    bookings,
+    dealt_with,
+    end_of,
+    note_outcome,
+    note_start,
+    start_of,
+)
 from daq.service.calendar import missed, starts
-from daq.service.load import load
+from daq.service.load import Loaded, load
 from daq.service.mail import post, send_what_waits, settings_of
-from daq.service.night import COMPLETE
-from daq.service.owner import owned
+from daq.service.requests import current_run
 from daq.service.start import Wanted, begin, resume
-from daq.storage.lab import runs
+from daq.storage.feed import read_feed
+from daq.storage.lock import is_written
 from daq.storage.reader import read_meta
 
 log = logging.getLogger(__name__)
@@ -29,34 +40,39 @@ SEND_EVERY_S = 10.0
 Due = tuple[Booking, datetime]
 
 
-def serve(lab: Path, asked: Asked) -> int:
-    """Start what is booked in a lab until the end is asked for; return how many runs were started.
+def serve(lab: Path, asked: Asked, say: Callable[[str], None] = lambda text: None) -> dict[str, int]:
+    """Start what is booked in a lab that this process owns, until told to leave; return what was done.
 
     An interrupted run of the lab is gone on with first. While a run is going on, another start is skipped.
-
-    Raises
-    ------
-    StorageError
-        When another service owns the lab.
     """
-    with owned(lab):
-        _go_on(lab, asked)
-        due: queue.Queue[Due] = queue.Queue()
-        scheduler = BackgroundScheduler(timezone=UTC)
-        scheduler.add_job(
-            _look, "interval", seconds=LOOK_EVERY_S, args=(lab, scheduler, due), max_instances=1
-        )
-        scheduler.add_job(_send, "interval", seconds=SEND_EVERY_S, args=(lab,))
-        scheduler.start()
-        try:
-            _look(lab, scheduler, due)
-            return _start_what_is_due(lab, asked, due)
-        finally:
-            scheduler.shutdown(wait=True)
-            _send(lab)
+    done = {"resumed": _go_on(lab, asked, say), "started": 0}
+    due: queue.Queue[Due] = queue.Queue()
+    scheduler = BackgroundScheduler(timezone=UTC)
+    scheduler.add_job(_look, "interval", seconds=LOOK_EVERY_S, args=(lab, scheduler, due), max_instances=1)
+    scheduler.add_job(_send, "interval", seconds=SEND_EVERY_S, args=(lab,))
+    scheduler.start()
+    try:
+        _look(lab, scheduler, due)
+        if not asked.leave:
+            say(_waiting(lab))
+        done["started"] = _start_what_is_due(lab, asked, due, say)
+        return done
+    finally:
+        scheduler.shutdown(wait=True)
+        _send(lab)
 
 
-def _start_what_is_due(lab: Path, asked: Asked, due: queue.Queue[Due]) -> int:
+def _waiting(lab: Path) -> str:
+    """Return what the service waits for, in words."""
+    coming = [(when, one) for one in bookings(lab) if (when := _next(lab, one)) is not None]
+    if not coming:
+        return "nothing is booked; `tercet book` adds a start. Ctrl-C ends the service."
+    when, one = min(coming, key=lambda pair: pair[0])
+    local = when.astimezone(one.times.zone)
+    return f"next start {local:%Y-%m-%d %H:%M} {one.times.zone.key}: {one.file.name} (booking {one.number})"
+
+
+def _start_what_is_due(lab: Path, asked: Asked, due: queue.Queue[Due], say: Callable[[str], None]) -> int:
     started = 0
     while not asked.leave:
         try:
@@ -64,35 +80,59 @@ def _start_what_is_due(lab: Path, asked: Asked, due: queue.Queue[Due]) -> int:
         except queue.Empty:
             continue
         if not dealt_with(lab, booking, when):
-            started += _start(lab, asked, booking, when)
+            started += _start(lab, asked, booking, when, say)
     return started
 
 
-def _start(lab: Path, asked: Asked, booking: Booking, due: datetime) -> bool:
+def _start(lab: Path, asked: Asked, booking: Booking, due: datetime, say: Callable[[str], None]) -> bool:
     """Start a booked run, or say why not; return whether it was started."""
+    begun = list[str]()
+
+    def begins(folder: Path, _: object) -> None:
+        # Written down before the first visit: whatever happens from here on, it is not started twice.
+        note_start(lab, booking, due, GOING_ON, folder.name)
+        begun.append(folder.name)
+        say(f"booking {booking.number}: {folder.name} starts{_virtually(loaded)}")
+
     reason = _refusal(booking, due)
-    if reason:
-        _tell(lab, booking, due, f"skipped: {reason}")
-        return False
     try:
         loaded = load(booking.file, booking.wishes)
-        unarmed = use_arming(loaded, lab)
-        if unarmed:
-            _tell(lab, booking, due, f"skipped: {unarmed}")
+        reason = reason or use_arming(loaded, lab)
+        if reason:
+            _tell(lab, booking, due, f"skipped: {reason}", say)
             return False
-        transport = "tcp" if loaded.rig.simulated else ""
-        until = end_of(booking, datetime.now(UTC))
-        folder, ended = begin(loaded, lab, Wanted(transport, asked=asked, until=until))
+        asked.for_another_run()
+        wanted = Wanted(
+            "tcp" if loaded.rig.simulated else "",
+            asked=asked,
+            on_start=begins,
+            until=end_of(booking, datetime.now(UTC)),
+        )
+        _, ended = begin(loaded, lab, wanted)
     except DaqError as error:
-        _tell(lab, booking, due, f"failed: {error}")
-        return True
-    _tell(lab, booking, due, ended, folder.name)
-    return True
+        ended = f"failed: {error}"
+    _tell(lab, booking, due, ended, say, begun[0] if begun else None)
+    return bool(begun)
 
 
-def _tell(lab: Path, booking: Booking, due: datetime, outcome: str, run: str | None = None) -> None:
+def _virtually(loaded: Loaded) -> str:
+    return ": every device is simulated, so it is a rehearsal in virtual time" if loaded.rig.simulated else ""
+
+
+def _tell(
+    lab: Path,
+    booking: Booking,
+    due: datetime,
+    outcome: str,
+    say: Callable[[str], None],
+    run: str | None = None,
+) -> None:
     """Write down what became of a start, and leave a message for people."""
-    note_start(lab, booking, due, outcome, run)
+    if run is None:
+        note_start(lab, booking, due, outcome)
+    else:
+        note_outcome(lab, run, outcome)
+    say(f"booking {booking.number}: {run or booking.file.name}: {outcome}")
     post(
         lab,
         "start",
@@ -145,14 +185,41 @@ def _next(lab: Path, booking: Booking) -> datetime | None:
     return next((when for when in starts(booking.times, after) if not dealt_with(lab, booking, when)), None)
 
 
-def _go_on(lab: Path, asked: Asked) -> None:
-    """Go on with the newest run of a lab when it was broken off."""
-    found = runs(lab)
-    if not found or read_meta(found[-1]).get("finished"):
-        return
-    meta = read_meta(found[-1])
+def _go_on(lab: Path, asked: Asked, say: Callable[[str], None]) -> int:
+    """Go on with the run written last when it was broken off without a goodbye; return whether it did.
+
+    A run that a person or a fault has ended is left to a person.
+    """
+    folder = _broken_off(lab)
+    if folder is None:
+        return 0
+    say(f"{folder.name} was broken off and is gone on with")
+    started = start_of(lab, folder.name)
     try:
-        _, ended = resume(found[-1], Wanted("tcp" if meta["clock"] == "virtual" else "", asked=asked))
-        log.warning("%s: gone on with; %s", found[-1].name, ended if ended != COMPLETE else "complete")
+        meta = read_meta(folder)
+        wanted = Wanted("tcp" if meta["clock"] == "virtual" else "", asked=asked, until=_until(lab, started))
+        _, ended = resume(folder, wanted)
     except DaqError as error:
-        log.error("%s could not be gone on with: %s", found[-1].name, error)
+        ended = f"could not be gone on with: {error}"
+    say(f"{folder.name}: {ended}")
+    if started is not None:
+        note_outcome(lab, folder.name, ended)
+    post(lab, "start", f"{folder.name}: {ended}", f"{folder.name} was broken off and gone on with: {ended}.")
+    return 1
+
+
+def _broken_off(lab: Path) -> Path | None:
+    name = current_run(lab)
+    folder = lab / "runs" / name
+    if not name or is_written(folder) or read_meta(folder).get("finished"):
+        return None
+    feed = read_feed(folder)
+    return None if feed is not None and feed.get("ended") else folder
+
+
+def _until(lab: Path, started: Mapping[str, Any] | None) -> datetime | None:
+    """Return when the run of a booked start has to be over."""
+    if started is None:
+        return None
+    booking = next((one for one in bookings(lab, cancelled=True) if one.number == started["booking"]), None)
+    return None if booking is None else end_of(booking, datetime.fromisoformat(started["due_utc"]))

@@ -72,3 +72,16 @@ def test_a_port_that_is_none_is_a_sentence(tmp_path: Path, capsys: pytest.Captur
 
     assert status == 1
     assert "cannot listen" in capsys.readouterr().err
+
+
+def test_the_page_ends_with_whoever_started_it(tmp_path):
+    words = [sys.executable, "-m", "dashboard", str(tmp_path), "--until-eof"]
+    page = subprocess.Popen(words, stdin=subprocess.PIPE, stdout=subprocess.PIPE, text=True)
+    assert page.stdin is not None
+    assert page.stdout is not None
+    page.stdout.readline()
+
+    page.stdin.close()
+
+    assert page.wait(timeout=30) == 0
+    page.stdout.close()

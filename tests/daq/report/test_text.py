@@ -36,7 +36,7 @@ WHOLE = {
 def test_the_report_gives_kappa_with_both_bars_and_what_it_rests_on():
     text = "\n".join(lines(WHOLE))
 
-    assert "kappa = −1.500e-05 ± 9.50e-05 (jackknife over 19 pairs; pairwise normalisation)" in text
+    assert "kappa = −1.50e-05 ± 9.50e-05 (jackknife over 19 pairs; pairwise normalisation)" in text
     assert "if read once at the planned end: −2.100e-04 to +1.800e-04" in text
     assert "over the whole night, whatever you do:     −3.400e-04 to +3.100e-04" in text
     assert "zero lies inside the 95 % interval" in text

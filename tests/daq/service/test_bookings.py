@@ -4,7 +4,17 @@ from typing import Any
 import pytest
 
 from daq.errors import DescriptionError, StorageError
-from daq.service.bookings import book, bookings, cancel, dealt_with, end_of, note_start
+from daq.service.bookings import (
+    GOING_ON,
+    book,
+    bookings,
+    cancel,
+    dealt_with,
+    end_of,
+    note_outcome,
+    note_start,
+    start_of,
+)
 from daq.service.load import Wishes
 from daq.service.owner import owned
 from tests.examples import CONFIGS
@@ -20,6 +30,7 @@ def make(lab, **changes):
         "end_at": "08:00",
         "wishes": Wishes(hours=2.0),
         "who": "night watch",
+        "now": datetime(2026, 12, 1, 8, 0, tzinfo=UTC),
     }
     return book(lab, CONFIGS / "lantern.toml", **(words | changes))
 
@@ -52,6 +63,10 @@ def test_cancelling_what_is_not_booked_says_so(tmp_path):
         ({"end_at": "late"}, "a time like 18:30"),
         ({"zone": "Nowhere/Land"}, "no time zone"),
         ({"first_day": "tomorrow"}, "a date like"),
+        ({"late_s": -60.0}, "--late-min"),
+        ({"late_s": float("nan")}, "--late-min"),
+        ({"end_at": "18:30"}, "the time of the start"),
+        ({"days": ["once"], "first_day": "2026-11-30"}, "is past"),
     ],
 )
 def test_a_booking_that_cannot_be_read_is_refused_before_it_is_kept(tmp_path, changes, words):
@@ -72,6 +87,19 @@ def test_a_run_that_starts_after_midnight_is_over_the_same_morning(tmp_path):
     made = make(tmp_path)
 
     assert end_of(made, datetime(2026, 12, 5, 1, 0, tzinfo=UTC)) == datetime(2026, 12, 5, 7, 0, tzinfo=UTC)
+
+
+def test_the_outcome_of_a_start_is_written_to_its_run(tmp_path):
+    made = make(tmp_path)
+    note_start(tmp_path, made, datetime(2026, 12, 4, 17, 30, tzinfo=UTC), GOING_ON, "a run")
+
+    note_outcome(tmp_path, "a run", "complete")
+    note_outcome(tmp_path, "a run that nobody booked", "complete")
+
+    started = start_of(tmp_path, "a run")
+    assert started is not None
+    assert (started["booking"], started["outcome"]) == (made.number, "complete")
+    assert start_of(tmp_path, "a run that nobody booked") is None
 
 
 def test_a_start_is_dealt_with_once(tmp_path):
