@@ -2,14 +2,12 @@
 
 from __future__ import annotations
 
-import platform
-import sys
 import uuid
 from dataclasses import asdict
-from importlib.metadata import version
 from typing import Any
 
 import numpy as np
+from tzlocal import get_localzone_name
 
 from daq import openings
 from daq.description import Rig
@@ -19,19 +17,7 @@ from daq.ports import Bench, Clock, Devices
 from daq.service.live import stamp
 from daq.service.load import Loaded
 from daq.service.metrology import described
-
-LIBRARIES = (
-    "numpy",
-    "scipy",
-    "zarr",
-    "numcodecs",
-    "xarray",
-    "pydantic",
-    "pyserial",
-    "pymodbus",
-    "pyvisa",
-    "dash",
-)
+from daq.service.software import software
 
 
 def record_of(
@@ -46,7 +32,7 @@ def record_of(
         "clock": clock.kind,
         "set_up": _set_up(rig),
         "devices": _devices(rig, devices),
-        "software": _software(),
+        "software": software(),
         "slits": itinerary.slits,
         "openings": itinerary.openings.tolist(),
         "positions_mm": itinerary.positions_mm.tolist(),
@@ -76,6 +62,9 @@ def record_of(
         "goal_se": settings.goal_se,
         "blinding": "open",
         "started_utc": stamp(clock.utc_ns()),
+        "zone": str(get_localzone_name() or "UTC"),
+        "description": measurement.model_dump(mode="json", by_alias=True),
+        "bench_seed": None if bench is None else _bench_seed(loaded),
         "wishes": asdict(loaded.wishes),
         "truth_kappa": None if bench is None else _truth(bench, itinerary, settings.normalisation),
     }
@@ -121,24 +110,28 @@ def _devices(rig: Rig, devices: Devices) -> dict[str, Any]:
     return {
         name: entry.model_dump()
         | {
+            "role": _role(rig, devices, name),
             "identity": replies.get(name)
-            or {axis: replies[axis] for axis, one in rig.axes.items() if one.device == name}
+            or {axis: replies[axis] for axis, one in rig.axes.items() if one.device == name},
         }
         for name, entry in rig.devices.items()
     }
 
 
-def _software() -> dict[str, Any]:
-    return {
-        "name": "tercet",
-        "version": version("tercet"),
-        "python": platform.python_version(),
-        "system": platform.system(),
-        "release": platform.release(),
-        "machine": platform.machine(),
-        "libraries": {name: version(name) for name in LIBRARIES},
-        "command": sys.argv[1:],
-    }
+def _role(rig: Rig, devices: Devices, name: str) -> str:
+    """Return what a device is there for: to count, to sense, to block the beam, or to move axes."""
+    if name == devices.counter.name:
+        return "counter"
+    if name in {sensor.name for sensor in devices.sensors}:
+        return "sensor"
+    axes = [axis for axis, one in rig.axes.items() if one.device == name]
+    return f"moves {', '.join(axes)}" if axes else "shutter"
+
+
+def _bench_seed(loaded: Loaded) -> int | None:
+    """Return the seed of the simulated truth: the command line's, else that of the rig's table [bench]."""
+    seed: int | None = (loaded.rig.bench or {}).get("seed")
+    return seed if loaded.bench_seed is None else loaded.bench_seed
 
 
 def _sensors(devices: Devices) -> dict[str, str]:

@@ -1,7 +1,8 @@
 """Benchmarks of the archive: `python -m tests.benchmarks.bench_storage` prints a table of ratios.
 
-The yardstick is timed in the same process, in shuffled interleaved rounds: append 512 bytes to a file and
-fdatasync, the least that a durable visit can cost. Times of a shared machine mean little; ratios say more.
+Names of functions after it print those alone; `TMPDIR` says on which disk. The yardstick is timed in the same
+process, in shuffled interleaved rounds: append 512 bytes to a file and fdatasync, the least that a durable
+visit can cost. Times of a shared machine mean little; ratios say more.
 """
 
 from __future__ import annotations
@@ -26,19 +27,25 @@ from daq.storage.layout import CHUNK, EVENTS
 from daq.storage.reader import open_visits, read_meta
 from daq.storage.run import Archive, open_run
 from daq.storage.snapshot import JOURNAL
+from daq.storage.verify import verify
 from tests.daq.storage.example import reading, started
 
 ROUNDS, EACH = 40, 50
+GROWING = (1_000, 10_000, 100_000, 1_000_000)
+FIGURES = (
+    *("commit_cost", "seal_cost", "commit_beside_seal", "reopening"),
+    *("journal_size", "list_mode", "reading_many"),
+)
 POOL = [reading(visit) for visit in range(2400)]
 
 
 def main() -> None:
-    """Print every figure, on the disk of the folder given or of the temporary folder."""
-    place = Path(sys.argv[1]) if len(sys.argv) > 1 else None
-    lab = Path(tempfile.mkdtemp(dir=place))
+    """Print every figure, or those of the functions named, on the disk of the temporary folder."""
+    lab = Path(tempfile.mkdtemp())
     try:
-        for figures in (commit_cost, seal_cost, reopening, reading_many, list_mode):
-            for line in figures(lab / figures.__name__):
+        for name in sys.argv[1:] or FIGURES:
+            print(f"--- {name.replace('_', ' ')}", flush=True)
+            for line in globals()[name](lab / name):
                 print(line, flush=True)
     finally:
         shutil.rmtree(lab)
@@ -74,6 +81,39 @@ def seal_cost(folder: Path) -> Iterator[str]:
     yield f"sealed {size / CHUNK:.0f} B a visit, {files} files a chunk (target 24)"
 
 
+def commit_beside_seal(folder: Path) -> Iterator[str]:
+    """Yield what commits cost while chunks are sealed in the background, beside those without and a probe."""
+    took: dict[str, list[float]] = {"without": [], "during": [], "probe": []}
+    with started(folder, laps=200) as archive, (folder / "yardstick").open("wb") as file:
+        commit, probe = _committer(archive), _appender(file.fileno())
+        for number in range(8 * CHUNK):
+            before = archive.journal.rows - archive.sealed >= CHUNK
+            one = _timed(commit)
+            sealing = before and archive.journal.rows - archive.sealed >= CHUNK
+            took["during" if sealing else "without"].append(one)
+            if number % 8 == 0:
+                took["probe"].append(_timed(probe))
+    median = {name: float(np.median(times)) * 1e6 for name, times in took.items()}
+    worst = {name: max(times) * 1e3 for name, times in took.items()}
+    yield f"commit median {median['without']:.0f} us, {len(took['during'])} during a seal {median['during']:.0f} us"
+    yield f"during / without {median['during'] / median['without']:.2f} (target 3)"
+    yield (
+        f"worst during a seal {worst['during']:.1f} ms, of the probe {worst['probe']:.1f} ms, "
+        f"ratio {worst['during'] / worst['probe']:.2f} (target 3)"
+    )
+
+
+def journal_size(folder: Path) -> Iterator[str]:
+    """Yield how large the journal and its write-ahead log grow over many chunks."""
+    with started(folder, laps=200) as archive:
+        commit, most = _committer(archive), 0
+        for number in range(12 * CHUNK):
+            commit()
+            if number % 256 == 0:
+                most = max(most, sum(path.stat().st_size for path in folder.glob(f"{JOURNAL}*")))
+    yield f"journal with its log at most {most / CHUNK / 1e3:.2f} kB a row of a chunk (target 4)"
+
+
 def reopening(folder: Path) -> Iterator[str]:
     """Yield the time to read and to go on with a run of 16 000 visits that are not sealed."""
     with started(folder, laps=200, chunk=1 << 20) as archive:
@@ -88,50 +128,64 @@ def reopening(folder: Path) -> Iterator[str]:
 
 
 def reading_many(folder: Path) -> Iterator[str]:
-    """Yield how the time to open a reader, and to verify, grows with the visits that are sealed."""
-    times = []
-    for visits in (1_000, 100_000):
-        run = folder / str(visits)
-        with started(run, laps=200, disk=_NoSync()) as archive:
-            commit = _committer(archive)
-            for _ in range(visits):
+    """Yield how the time to open a reader, to read all and to verify grows with the sealed visits."""
+    opens: list[float] = []
+    verifies: list[float] = []
+    with started(folder, laps=200, disk=_NoSync()) as archive:
+        commit = _committer(archive)
+        for visits in GROWING:
+            while archive.rows < visits:
                 commit()
             while archive.seal_next():
                 pass
-            times.append(_seconds(partial(read_meta, run)))
-            whole = _seconds(partial(open_visits, run))
-        yield f"{visits} visits: reader opens in {times[-1]:.4f} s, reads all in {whole:.3f} s"
-    yield f"opens at 1e5 / at 1e3: {times[1] / times[0]:.2f} (target 3 at 1e6)"
+            opens.append(_seconds(partial(read_meta, folder), 9))
+            verifies.append(_seconds(partial(verify, folder), 1))
+            whole = _seconds(partial(open_visits, folder), 1)
+            yield (
+                f"{visits} visits: reader opens in {1e3 * opens[-1]:.1f} ms, reads all in {whole:.2f} s, "
+                f"verify {verifies[-1]:.2f} s ({verifies[-1] / visits * 1e6:.0f} us a visit), "
+                f"{_size(folder)[1]} files (target {24 * (visits // CHUNK) + 30})"
+            )
+    yield f"opens at {GROWING[-1]} / at {GROWING[0]}: {opens[-1] / opens[0]:.2f} (target 3)"
+    per_visit = (verifies[-1] - verifies[0]) / (GROWING[-1] - GROWING[0])
+    before = (verifies[-2] - verifies[0]) / (GROWING[-2] - GROWING[0])
+    yield f"verify, a visit more at {GROWING[-1]} / at {GROWING[-2]}: {per_visit / before:.2f} (linear: 1)"
 
 
 def list_mode(folder: Path) -> Iterator[str]:
     """Yield what an event costs against writing the same 64-bit times raw, in interleaved visits."""
-    number, visits = 1_000_000, 20
-    draw = np.random.default_rng(1)
-    gaps = draw.exponential(100.0, (4, number))
-    ticks = [np.cumsum(np.ceil(one)).astype("<u8").tobytes() for one in gaps]
+    for number, visits, targets in ((1_000_000, 20, (0.3, 2.0)), (20_000_000, 3, (0.8, 1.1))):
+        run = folder / str(number)
+        yield from _listed(run, number, visits, targets)
+        shutil.rmtree(run)
+
+
+def _listed(folder: Path, number: int, visits: int, targets: tuple[float, float]) -> Iterator[str]:
+    gaps = np.ceil(np.random.default_rng(1).exponential(100.0, number))
+    ticks = np.cumsum(gaps).astype("<u8").tobytes()
+    del gaps
+    store: list[float] = []
+    raw: list[float] = []
+    busy, written = 0.0, 0
     with started(folder, laps=200, tick_s=1e-9, event_chunk=1 << 20) as archive:
-        raw = (folder / "raw").open("wb")
-        took = {"store": 0.0, "raw": 0.0}
-        cpu = 0.0
-        for visit in range(visits):
-            begun, busy = time.perf_counter(), time.process_time()
-            archive.commit(replace(POOL[visit], events=ticks[visit % 4]))
-            took["store"] += time.perf_counter() - begun
-            cpu += time.process_time() - busy
-            begun = time.perf_counter()
-            raw.write(ticks[visit % 4])
-            raw.flush()
-            os.fdatasync(raw.fileno())
-            took["raw"] += time.perf_counter() - begun
-        raw.close()
+        with (folder / "raw").open("wb") as file:
+            for visit in range(visits):
+                before, begun = _written(), time.process_time()
+                store.append(_timed(partial(archive.commit, replace(POOL[visit], events=ticks))))
+                busy += time.process_time() - begun
+                written += _written() - before
+                raw.append(_timed(partial(_append, file.fileno(), ticks)))
         (folder / "raw").unlink()
+        before = _written()
         archive.finish({})
-    events = number * visits
+        written += _written() - before
+    events, share = number * visits, float(np.median(np.array(raw) / np.array(store)))
     bits = 8 * _size(folder / "run.zarr" / EVENTS)[0] / events
-    speed, share = events / took["store"] / 1e6, took["raw"] / took["store"]
-    yield f"list mode {speed:.0f} M events/s (target 40), {cpu / events * 1e9:.1f} ns CPU each (target 15)"
-    yield f"raw time / store time {share:.2f} (target 0.3); {bits:.2f} bits an event (bound 8.09)"
+    speed, cpu = events / sum(store) / 1e6, busy / events * 1e9
+    final = _size(folder / "run.zarr")[0]
+    yield f"{number} events a visit: {speed:.0f} M events/s (target 40), {cpu:.1f} ns CPU each (target 15)"
+    yield f"raw time / store time {share:.2f} (target {targets[0]}); {bits:.2f} bits an event (bound 8.09)"
+    yield f"bytes written / final {written / final:.2f} (target {targets[1]})"
 
 
 class _NoSync(Disk):
@@ -158,14 +212,14 @@ def _reading(number: int) -> Reading:
 
 
 def _appender(handle: int) -> Callable[[], object]:
-    block = bytes(512)
+    return partial(_append, handle, bytes(512))
 
-    def append() -> object:
-        os.write(handle, block)
-        os.fdatasync(handle)
-        return None
 
-    return append
+def _append(handle: int, block: bytes) -> None:
+    done = 0
+    while done < len(block):  # the system writes at most 2 GiB at once
+        done += os.write(handle, memoryview(block)[done:])
+    os.fdatasync(handle)
 
 
 def _interleaved(
@@ -199,13 +253,20 @@ def _size(folder: Path) -> tuple[int, int]:
     return sum(path.stat().st_size for path in files), len(files)
 
 
-def _seconds(function: Callable[[], object]) -> float:
-    times = []
-    for _ in range(3):
-        start = time.perf_counter()
-        function()
-        times.append(time.perf_counter() - start)
-    return sorted(times)[1]
+def _seconds(function: Callable[[], object], tries: int = 3) -> float:
+    return float(np.median([_timed(function) for _ in range(tries)]))
+
+
+def _timed(function: Callable[[], object]) -> float:
+    start = time.perf_counter()
+    function()
+    return time.perf_counter() - start
+
+
+def _written() -> int:
+    """Return how many bytes this process has handed to the system for writing (Linux)."""
+    fields = dict(line.split(": ") for line in Path("/proc/self/io").read_text("ascii").splitlines())
+    return int(fields["wchar"])
 
 
 if __name__ == "__main__":

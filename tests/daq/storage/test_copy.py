@@ -22,6 +22,10 @@ def test_every_file_of_a_bag_arrives_under_its_name(packed, tmp_path):
     assert (arrived / "bagit.txt").exists()
 
 
+def test_an_object_store_without_folders_takes_a_bag_too(packed):
+    assert copy_to(packed, "memory:///shelf") == 2  # each is read back from it and compared
+
+
 def test_a_zip_is_one_file(tmp_path):
     (tmp_path / "night.zip").write_bytes(b"PK")
 
