@@ -95,7 +95,8 @@ def commit_beside_seal(folder: Path) -> Iterator[str]:
                 took["probe"].append(_timed(probe))
     median = {name: float(np.median(times)) * 1e6 for name, times in took.items()}
     worst = {name: max(times) * 1e3 for name, times in took.items()}
-    yield f"commit median {median['without']:.0f} us, {len(took['during'])} during a seal {median['during']:.0f} us"
+    during = f"during a seal {median['during']:.0f} us ({len(took['during'])} commits)"
+    yield f"commit median {median['without']:.0f} us, {during}"
     yield f"during / without {median['during'] / median['without']:.2f} (target 3)"
     yield (
         f"worst during a seal {worst['during']:.1f} ms, of the probe {worst['probe']:.1f} ms, "
