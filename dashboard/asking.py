@@ -15,7 +15,8 @@ from dashboard.operate import ACTS
 from dashboard.times import clock
 
 SHOWN = 3
-LONGEST_ABOUT = 200
+LONGEST_ABOUT = 500
+OF_THE_LAB = ("book", "cancel")
 
 
 def leave(folder: Path, asked: Any, person: Person) -> str:
@@ -32,13 +33,15 @@ def leave(folder: Path, asked: Any, person: Person) -> str:
     if wanted is None:
         return "This was not understood, and nothing was asked. Load the page again."
     run, what, about = wanted
-    if _has_ended(folder, run):
+    if run and _has_ended(folder, run):
         return "The run has ended meanwhile; nothing was asked."
     utc = datetime.now(UTC).isoformat(timespec="seconds")
     try:
         insert(folder, "requests", run=run, what=what, who=person.name, utc=utc, about=about)
     except StorageError as error:
         return f"Nothing was asked: {error}"
+    if not run:
+        return f"{what.capitalize()}: asked at {clock(utc)}. The answer appears under Booked."
     return f"{ACTS[what].label}: asked at {clock(utc)}. The run hears it before its next stand."
 
 
@@ -65,7 +68,8 @@ def _understood(folder: Path, asked: Any) -> tuple[str, str, str] | None:
     run, what, about = (asked.get(key, "") for key in ("run", "what", "about"))
     if not all(isinstance(text, str) for text in (run, what, about)) or len(about) > LONGEST_ABOUT:
         return None
-    return (run, what, about) if what in ACTS and run in lab.run_names(folder) else None
+    known = what in ACTS and run in lab.run_names(folder) if run else what in OF_THE_LAB
+    return (run, what, about) if known else None
 
 
 def _has_ended(folder: Path, run: str) -> bool:

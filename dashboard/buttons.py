@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 from collections.abc import Mapping
 from typing import Any
 
@@ -51,3 +52,27 @@ def who(part: Part | None) -> Children:
         return []
     leave = [html.Button("Log out", id="log-out", type="button")] if part["inside"] else []
     return [html.Span(part["says"]), *leave]
+
+
+def desk(part: Part | None) -> Children:
+    """Return what is booked in the lab, and for an operator a form that books once more."""
+    if part is None:
+        return []
+    says = [html.P(part["says"])] if part["says"] else []
+    started = html.Ul([html.Li(line) for line in part["starts"]])
+    starts = [html.Details([html.Summary("Earlier starts"), started])] if part["starts"] else []
+    asked = [html.Ul([html.Li(line) for line in part["asked"]], className="soft")] if part["asked"] else []
+    form = [_form(part["form"])] if part["form"] else []
+    booked = html.Ul([_booked(line) for line in part["lines"]])
+    return [html.H2("Booked"), *says, booked, *form, *asked, *starts]
+
+
+def _booked(line: Part) -> html.Li:
+    cancel = [html.Div(act_button(line["cancel"]), className="buttons")] if line["cancel"] else []
+    return html.Li([html.P(line["says"]), html.P(line["ready"], className="soft"), *cancel])
+
+
+def _form(form: Part) -> html.Details:
+    """Return the place of a form; the browser fills it, and gathers what is in it."""
+    told = {"data-files": json.dumps(form["files"]), "data-will": form["will"]}
+    return html.Details([html.Summary("Book once more"), html.Div(id="booking-fields")], id="booking", **told)

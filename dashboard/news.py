@@ -19,13 +19,14 @@ from dashboard import figures, lab
 from dashboard.asking import book_stamp, requests_of
 from dashboard.budget import budget_view
 from dashboard.components import render
+from dashboard.desk import desk_stamp, desk_view
 from dashboard.operate import operate_view
 from dashboard.times import clock
 from dashboard.view import empty_view, is_silent, unreadable_view, view, waiting_view
 
 WORDS = (
     *("header", "verdict", "line", "warnings", "kappa", "now"),
-    *("sensors", "log", "rail", "runs", "footer", "operate", "who", "budget"),
+    *("sensors", "log", "rail", "runs", "footer", "operate", "who", "budget", "desk"),
 )
 CURVES = ("night-data", "pattern-data", "plates-data", "strip-data")
 
@@ -81,27 +82,31 @@ class _Scene:
     silent: bool = False
     chosen: int | None = None
     book: int = 0
+    desk: str = ""
 
 
 def _scene(folder: Path, run: str | None, chosen: Any, now: datetime, person: Person) -> _Scene:
-    names = tuple(lab.run_names(folder))
+    names, desk = tuple(lab.run_names(folder)), desk_stamp(folder, now)
     shown = run if run is not None else names[-1] if names else None
     if shown is None or shown not in names:
-        return _Scene(folder, names, shown, person)
+        return _Scene(folder, names, shown, person, book=book_stamp(folder), desk=desk)
     stamp = lab.stamp(folder, shown)
     mask = chosen if isinstance(chosen, int) else None
     try:
         silent = is_silent(lab.read(folder, shown, stamp), now)
     except StorageError:
         silent = False
-    return _Scene(folder, names, shown, person, stamp, silent, mask, book_stamp(folder))
+    return _Scene(folder, names, shown, person, stamp, silent, mask, book_stamp(folder), desk)
 
 
 @lru_cache(maxsize=32)
 def _parts(scene: _Scene) -> tuple[dict[str, Any], dict[str, str]]:
     """Return the parts of the page and their digests; twenty pages of one run cost as much as one."""
     runs = [{"name": name, "shown": name == scene.run} for name in reversed(scene.names)]
-    parts = _said(scene) | {"runs": runs}
+    parts = _said(scene) | {
+        "runs": runs,
+        "desk": desk_view(scene.desk, scene.person, requests_of(scene.folder, "")),
+    }
     return parts, {name: _digest(part) for name, part in parts.items()}
 
 

@@ -74,7 +74,7 @@ def operate_view(
     return {
         "acts": offered,
         "says": _says(feed, silent, person),
-        "asked": [_line(request) for request in reversed(requests)],
+        "asked": [request_line(request) for request in reversed(requests)],
     }
 
 
@@ -122,7 +122,8 @@ def _says(feed: Feed, silent: bool, person: Person) -> str:
     return f"You are {person.name}, operator."
 
 
-def _line(request: Mapping[str, Any]) -> str:
+def request_line(request: Mapping[str, Any]) -> str:
+    """Return who asked what and when, and what became of it."""
     act = ACTS.get(request["what"])
     label = act.label if act else str(request["what"]).capitalize()
     asked = f"{label}: asked by {request['who']} at {clock(request['utc'])}"

@@ -9,6 +9,7 @@ from dataclasses import dataclass
 from datetime import UTC, datetime, timedelta
 from hashlib import sha256
 from pathlib import Path
+from typing import Any
 
 from daq.description import Measurement
 from daq.devices.clock import RealClock
@@ -84,13 +85,22 @@ def confirm(loaded: Loaded, lab: Path, mail: Mail, who: str, answer: Callable[[s
     return None
 
 
+def is_armed(loaded: Loaded, lab: Path) -> bool:
+    """Return whether a start of this description is armed now."""
+    return bool(_armings(loaded, lab))
+
+
+def _armings(loaded: Loaded, lab: Path) -> list[dict[str, Any]]:
+    now = datetime.now(UTC)
+    unused = select(lab, "armings", "sha256 = ? AND used_utc IS NULL", (digest_of(loaded),))
+    return [row for row in unused if datetime.fromisoformat(row["expires_utc"]) > now]
+
+
 def use_arming(loaded: Loaded, lab: Path) -> str:
     """Use up the arming of one start and return nothing, or return why the start may not be made."""
     if loaded.rig.simulated:
         return ""
-    now = datetime.now(UTC)
-    unused = select(lab, "armings", "sha256 = ? AND used_utc IS NULL", (digest_of(loaded),))
-    valid = [row for row in unused if datetime.fromisoformat(row["expires_utc"]) > now]
+    valid = _armings(loaded, lab)
     if not valid:
         return "nobody has armed this description within 24 hours"
     update(lab, "armings", valid[0]["id"], used_utc=utc_now())

@@ -1,4 +1,4 @@
-"""The page's feed: `live.json`, replaced whole, so that a reader never sees half of it."""
+"""The page's feeds, `live.json` of a run and `desk.json` of a lab: replaced whole, never seen half."""
 
 from __future__ import annotations
 
@@ -10,21 +10,21 @@ import orjson
 
 from daq.storage.trouble import rim
 
-FEED = "live.json"
+FEED, DESK = "live.json", "desk.json"
 
 
-def write_feed(folder: Path, feed: Mapping[str, Any]) -> None:
-    """Replace the feed of a run; NaN becomes null. It is for the page only, so it is not made durable."""
-    passing = folder / f"{FEED}.partial"
-    with rim(folder / FEED):
+def write_feed(folder: Path, feed: Mapping[str, Any], name: str = FEED) -> None:
+    """Replace a feed; NaN becomes null. It is for the page only, so it is not made durable."""
+    passing = folder / f"{name}.partial"
+    with rim(folder / name):
         passing.write_bytes(orjson.dumps(dict(feed), option=orjson.OPT_SERIALIZE_NUMPY))
-        passing.replace(folder / FEED)
+        passing.replace(folder / name)
 
 
-def read_feed(folder: Path) -> dict[str, Any] | None:
-    """Return the feed of a run, or None where it has none that can be read."""
+def read_feed(folder: Path, name: str = FEED) -> dict[str, Any] | None:
+    """Return the feed of a run or lab, or None where there is none that can be read."""
     try:
-        feed: dict[str, Any] = orjson.loads((folder / FEED).read_bytes())
+        feed: dict[str, Any] = orjson.loads((folder / name).read_bytes())
     except (OSError, ValueError):
         return None
     return feed

@@ -268,6 +268,32 @@
   };
   document.addEventListener("toggle", showNumbers, true);
 
+  /* ---- the form that books once more: a child that Dash knows nothing of ----------------------------------- */
+  const field = (label, made) => {
+    const box = document.createElement("label");
+    box.append(`${label} `, made);
+    return box;
+  };
+  const input = (type, value) => Object.assign(document.createElement("input"), { type, value, required: type !== "text" });
+  const showBooking = () => {
+    const form = document.getElementById("booking"), place = document.getElementById("booking-fields");
+    if (!form?.open || place.childElementCount) return;
+    const file = document.createElement("select");
+    for (const one of JSON.parse(form.dataset.files)) file.append(new Option(one.name, one.file));
+    const day = input("date", new Date().toLocaleDateString("sv")), at = input("time", "18:00"), end = input("time", "");
+    const book = Object.assign(document.createElement("button"), { type: "button", className: "act", textContent: "Book" });
+    Object.assign(book.dataset, { what: "book", run: "", will: form.dataset.will });
+    const gather = () => {
+      book.dataset.about = JSON.stringify({ file: file.value, day: day.value, at: at.value, end_by: end.value });
+      book.disabled = !day.value || !at.value;
+    };
+    place.addEventListener("input", gather);
+    place.append(field("Run", file), field("Day", day), field("Start, by the bench's clock", at),
+      field("Over by (may stay empty)", end), book);
+    gather();
+  };
+  document.addEventListener("toggle", showBooking, true);
+
   const mark = (heights, now, rail, chosen) => {
     shown = chosen;
     requestAnimationFrame(() => {

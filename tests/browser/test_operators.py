@@ -2,13 +2,16 @@
 
 from __future__ import annotations
 
+import json
 from collections.abc import Iterator
+from datetime import UTC, datetime
 from pathlib import Path
 from typing import Any
 
 import pytest
 from playwright.sync_api import Browser, Page, expect
 
+from daq.storage.feed import DESK, write_feed
 from daq.storage.lab_book import select, update
 from daq.storage.people import add_person
 from daq.storage.sessions import end_sessions
@@ -16,6 +19,7 @@ from tests.browser.conftest import Lab, Watch, context_of
 from tests.browser.test_access_for_all import is_wide, violations
 from tests.dashboard.doors import PASSWORD, PEOPLE
 from tests.dashboard.feeds import WARNING, ended, feed
+from tests.dashboard.test_desk import DESK_TOLD
 
 pytestmark = pytest.mark.browser
 
@@ -154,3 +158,28 @@ def test_axe_finds_nothing_in_the_form_the_buttons_and_the_question(
     found += [violations(page), is_wide(page)]
 
     assert found == [[], False] * 3
+
+
+def test_a_run_is_booked_once_more_and_a_booking_cancelled(lab: Lab, enter: Any) -> None:
+    lab.put(feed())
+    write_feed(lab.folder, DESK_TOLD | {"written_utc": datetime.now(UTC).isoformat()}, DESK)
+    page = enter("Night watch")
+    before = len(asked(lab.folder))
+
+    page.get_by_text("Book once more").click()
+    page.get_by_label("Day").fill("2036-12-03")
+    page.get_by_label("Start, by the bench's clock").fill("19:00")
+    page.get_by_role("button", name="Book", exact=True).click()
+    expect(page.get_by_role("dialog")).to_contain_text("if it is armed then")
+    found = violations(page)
+    page.get_by_role("dialog").get_by_role("button", name="Book").click()
+    expect(page.locator("#desk")).to_contain_text("Book: asked by Night watch")
+    page.get_by_role("button", name="Cancel").click()
+    page.get_by_role("dialog").get_by_role("button", name="Cancel").click()
+    expect(page.locator("#desk")).to_contain_text("Cancel: asked by Night watch")
+
+    booked, cancelled = asked(lab.folder)[before:]
+    wanted = {"file": "/lab/lantern.toml", "day": "2036-12-03", "at": "19:00", "end_by": ""}
+    assert json.loads(booked[2]) == wanted
+    assert cancelled == ("cancel", "Night watch", "3")
+    assert found == []

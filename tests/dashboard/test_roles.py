@@ -115,8 +115,10 @@ def test_a_request_bears_the_name_of_who_logged_in(lab: Path, clients: dict[str,
         HOLD | {"what": "fire"},
         HOLD | {"what": ["hold"]},
         HOLD | {"run": "../../etc"},
+        HOLD | {"run": ""},
+        HOLD | {"what": "book"},
         HOLD | {"run": "20261201T201500Z-other"},
-        HOLD | {"about": "x" * 300},
+        HOLD | {"about": "x" * 501},
     ],
 )
 def test_what_is_not_understood_is_not_asked(lab: Path, clients: dict[str, FlaskClient], asked: Any) -> None:
