@@ -25,6 +25,7 @@ from daq.service.bookings import (
     start_of,
 )
 from daq.service.calendar import missed, starts
+from daq.service.desk import answer_desk, tell_desk
 from daq.service.load import Loaded, load
 from daq.service.mail import post, send_what_waits, settings_of
 from daq.service.requests import current_run
@@ -45,13 +46,16 @@ def serve(lab: Path, asked: Asked, say: Callable[[str], None] = lambda text: Non
 
     An interrupted run of the lab is gone on with first. While a run is going on, another start is skipped.
     """
-    done = {"resumed": _go_on(lab, asked, say), "started": 0}
+    done = {"resumed": 0, "started": 0}
     due: queue.Queue[Due] = queue.Queue()
     scheduler = BackgroundScheduler(timezone=UTC)
     scheduler.add_job(_look, "interval", seconds=LOOK_EVERY_S, args=(lab, scheduler, due), max_instances=1)
     scheduler.add_job(_send, "interval", seconds=SEND_EVERY_S, args=(lab,))
+    scheduler.add_job(_desk, "interval", seconds=LOOK_EVERY_S, args=(lab,), max_instances=1)
     scheduler.start()
     try:
+        _desk(lab)
+        done["resumed"] = _go_on(lab, asked, say)
         _look(lab, scheduler, due)
         if not asked.leave:
             say(_waiting(lab))
@@ -154,6 +158,12 @@ def _send(lab: Path) -> None:
         send_what_waits(lab, settings_of(lab).mail)
     except DaqError as error:
         log.error("%s", error)
+
+
+def _desk(lab: Path) -> None:
+    """Answer what operators asked of the lab, and tell the page what is booked."""
+    answer_desk(lab)
+    tell_desk(lab)
 
 
 def _look(lab: Path, scheduler: BackgroundScheduler, due: queue.Queue[Due]) -> None:

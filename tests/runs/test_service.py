@@ -17,7 +17,8 @@ from daq.cli import main
 from daq.errors import StorageError
 from daq.service.bookings import GOING_ON
 from daq.service.owner import owned, refuse_owned
-from daq.storage.lab_book import select
+from daq.storage.feed import DESK, read_feed
+from daq.storage.lab_book import insert, select
 from daq.storage.log import read_log
 from tests.examples import CONFIGS
 from tests.runs.watching import wait_for_rows
@@ -83,6 +84,23 @@ def test_a_booked_rehearsal_starts_by_itself_and_its_outcome_is_written_down(tmp
     assert (tmp_path / "runs" / start["run"] / "run.zarr").is_dir()
     assert json.loads(out) == {"resumed": 0, "started": 1}
     assert process.returncode == 0
+
+
+def test_what_an_operator_books_on_the_page_is_booked_by_the_service(tmp_path):
+    at = datetime.now(ZoneInfo(ZONE)) + timedelta(days=2)
+    book(tmp_path, at)
+    file = str((CONFIGS / "lantern.toml").resolve())
+    wanted = json.dumps({"file": file, "day": "2036-12-03", "at": "19:00", "end_by": ""})
+    process = service(tmp_path)
+
+    insert(tmp_path, "requests", run="", what="book", who="Night watch", utc="now", about=wanted)
+    until_s = time.monotonic() + 60
+    while len(told := (read_feed(tmp_path, DESK) or {"bookings": []})["bookings"]) < 2:
+        assert time.monotonic() < until_s, "the service never booked it"
+
+    ended(process)
+    assert [one["who"] for one in told] == [told[0]["who"], "Night watch"]
+    assert told[1]["next_utc"] == "2036-12-03T18:00:00+00:00"
 
 
 def test_an_operator_ends_the_run_and_not_the_service(tmp_path):
