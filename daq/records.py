@@ -26,6 +26,7 @@ class Quality(IntFlag):
     MONITOR = 1024  # the monitor ratio left its band
     DARK = 2048  # beam off: detector noise
     FLANK = 4096  # a visit on the flank of an opening
+    RATE = 8192  # the stand's counts left the band about those of the first stand here
 
 
 # A stand with one of these in any visit is left out of the sums, whole.

@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Mapping
 from typing import Annotated, Any, Literal
 
-from pydantic import Field, model_validator
+from pydantic import AfterValidator, Field, model_validator
 
 from daq.description.problems import Table
 from daq.description.rig import NotNegative, Positive
@@ -169,6 +169,12 @@ class Limit(Table):
         return self
 
 
+def _about_one(band: tuple[float, float]) -> tuple[float, float]:
+    if not band[0] < 1 < band[1]:
+        raise ValueError("the band lies about 1, the first stand's own rate")
+    return band
+
+
 class Quality(Table):
     """Thresholds of the quality rules, frozen with the run; no rule on counts bites below 3.3 sigma."""
 
@@ -181,6 +187,9 @@ class Quality(Table):
     counter_range: Annotated[float, Field(gt=0)] | None = None
     full_range: Annotated[float, Field(gt=0, le=1)] = 0.9
     overload_hz: Positive | None = None
+    rate_band: Annotated[tuple[Positive, Positive], AfterValidator(_about_one)] = (0.5, 1.5)
+    lap_p: Annotated[float, Field(gt=0, le=0.01)] = 1 / 380
+    settle_sigma: Annotated[float, Field(ge=3.3)] = 4.0
     limits: Mapping[str, Limit] = {}
 
 

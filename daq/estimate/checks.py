@@ -13,6 +13,7 @@ from scipy.special import fdtrc, stdtr
 from daq.estimate.arrays import BoolArray, FloatArray
 from daq.estimate.budget import smooth_drift
 from daq.estimate.contrast import epsilon_and_delta
+from daq.estimate.counting import scatter
 from daq.estimate.plan import Plan, stand_places
 from daq.estimate.quality import Rules, fingerprint
 from daq.estimate.sensitivity import Taken
@@ -48,11 +49,12 @@ def odd_first_stands(visits: Visits, plan: Plan, rules: Rules) -> list[float]:
     """Return the positions [mm] whose first stand does not fit the later ones: no rule could see it then."""
     _, position = stand_places(plan)
     cells = len(plan.openings)
+    wide = scatter(visits.value, visits.variance, plan.fano, plan.heralded is not None)
     shown = np.flatnonzero(plan.stand >= 0)  # of a damaged run visits may be lost before others
     place = (plan.stand * cells + plan.opening)[shown]
     counts, live = (
         np.bincount(place, column[shown], len(position) * cells).reshape(-1, cells)
-        for column in (visits.value / plan.fano, visits.live)
+        for column in (visits.value / wide, visits.live)
     )
     odd = []
     for at, where in enumerate(plan.positions_mm):

@@ -13,6 +13,15 @@ from daq.estimate.arrays import FloatArray
 KINDS = ("non-paralysable", "paralysable")
 
 
+def scatter(value: FloatArray, variance: FloatArray, fano: float, heralded: bool) -> float:
+    """Return variance over mean of counts that rules compare as Poisson counts.
+
+    The Fano factor; where accidental coincidences were taken away, what they left in the variance too.
+    """
+    total = float(value.sum())
+    return float(variance.sum()) / total if heralded and total > 0 else fano
+
+
 def true_rate_hz(seen_hz: Any, dead_time_s: float, kind: str) -> Any:
     """Return the true rate behind a recorded one [1/s].
 

@@ -2,16 +2,18 @@
 
 from __future__ import annotations
 
-from bisect import insort
 from collections.abc import Sequence
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, replace
 from math import inf, log, sqrt
 
 import numpy as np
 
 from daq import openings as names
 from daq.estimate.arrays import FloatArray, added
+from daq.estimate.counting import scatter
 from daq.estimate.detected import Detected, detected
+from daq.estimate.laps import Laps
+from daq.estimate.medians import RunningMedian
 from daq.estimate.plan import Plan
 from daq.estimate.quality import (
     Rules,
@@ -26,6 +28,7 @@ from daq.records import EXCLUDING, Quality, Reading
 
 SPOILT = int(EXCLUDING & ~Quality.FINGERPRINT)
 STANDS_TO_SCALE = 20  # from here the night's own median counts
+STRAYED = 3  # stands in a row outside the band of the rate, before a sentence is said
 TO_SIGMA = 1.4826  # median absolute deviation of a normal distribution
 
 
@@ -37,32 +40,15 @@ class _Place:
     exposure: FloatArray
     stands: int = 0
     light: float = 0.0
+    first_hz: FloatArray | None = None
     refused: tuple[FloatArray, FloatArray] | None = None
 
 
-@dataclass(slots=True)
-class _Median:
-    """A running median, and a running scale that is never below one."""
-
-    values: list[float] = field(default_factory=list)
-
-    def add(self, value: float) -> None:
-        """Take in a value."""
-        insort(self.values, value)
-
-    @property
-    def middle(self) -> float:
-        """The median so far."""
-        return self.values[len(self.values) // 2] if self.values else 0.0
-
-    @property
-    def scale(self) -> float:
-        """The median as a scale: one while it is not known, or the night is quiet."""
-        return max(1.0, self.middle) if len(self.values) >= STANDS_TO_SCALE else 1.0
-
-
 class Judge:
-    """Applies the rules to the readings of a run in their order; `finding` is what the last one showed."""
+    """Applies the rules to the readings of a run in their order.
+
+    `finding` is why the last one's stand is left out, if it says so; `notes` what else it showed.
+    """
 
     def __init__(self, plan: Plan, rules: Rules, expected_hz: FloatArray | None = None) -> None:
         self._plan, self._expected_hz = plan, expected_hz
@@ -71,14 +57,16 @@ class Judge:
         self._stand: tuple[int, int] | None = None  # whose visits come in now, and at which attempt
         self._attempt: list[Reading] = []
         self._before: Reading | None = None
-        self._sliced, self._stood, self._lit = _Median(), _Median(), _Median()
+        self._sliced, self._stood, self._lit = (RunningMedian(STANDS_TO_SCALE) for _ in range(3))
+        self._laps, self._strayed = Laps(plan, rules, expected_hz), 0
         self.finding: str | None = None
+        self.notes: list[str] = []
         self.odd = ""  # the opening that stood out in the last reading's stand
         self.stand_quality = Quality.GOOD  # of the whole stand that the last reading belongs to, so far
 
     def judge(self, reading: Reading) -> Reading:
         """Return a reading with the bits that the rules add to its quality."""
-        self.finding, self.odd = None, ""
+        self.finding, self.odd, self.notes = None, "", []
         quality = reading.quality | clock_bits(self._before, reading, self.rules)
         quality |= sensor_bits(reading, self.rules)
         if reading.visit >= 0 and self._plan.counting == "counts":
@@ -95,7 +83,7 @@ class Judge:
 
     def take(self, reading: Reading) -> None:
         """Take in a reading that was judged before: a run goes on."""
-        self.finding, self.odd = None, ""
+        self.finding, self.odd, self.notes = None, "", []
         if reading.visit >= 0 and self._plan.counting == "counts":
             self._sliced_bits(reading)
         attempt = self._gathered(reading)
@@ -120,7 +108,7 @@ class Judge:
     def _sliced_bits(self, reading: Reading) -> Quality:
         if reading.slices is None:
             return Quality.GOOD
-        found = dispersion([part[0] / self._plan.fano for part in reading.slices])
+        found = dispersion(self._parts(reading.slices))
         beyond = found.beyond(self.rules.dispersion_p, self._sliced.scale)
         if found.dof:
             self._sliced.add(found.ratio)
@@ -133,8 +121,14 @@ class Judge:
         stand = int(self._plan.stand[reading.visit]), reading.attempt
         if stand != self._stand:
             self._stand, self._attempt = stand, []
+            self.notes += self._laps.begins(stand[0])
         self._attempt.append(reading)
+        if reading.slices is not None:
+            self._laps.slices(int(self._plan.opening[reading.visit]), self._parts(reading.slices))
         return self._attempt
+
+    def _parts(self, slices: Sequence[Sequence[int]]) -> list[float]:
+        return [part[0] / self._plan.fano for part in slices]
 
     def _settle(self, reading: Reading) -> None:
         self._before = reading
@@ -150,15 +144,16 @@ class Judge:
             return Quality.GOOD
         position = int(self._plan.position[attempt[0].visit])
         opening, cells = self._plan.opening[rows.visit], len(self._plan.openings)
-        counts, exposure = (
-            added(opening, part, cells) for part in (found.value / self._plan.fano, rows.live)
-        )
+        wide = scatter(found.value, found.variance, self._plan.fano, self._plan.heralded is not None)
+        counts, exposure = (added(opening, part, cells) for part in (found.value / wide, rows.live))
         place = self._places.setdefault(position, _Place(np.zeros(cells), np.zeros(cells)))
         bits = self._fingerprint_bits(attempt, place, counts, exposure)
         if bits & Quality.FINGERPRINT:
             return bits
         light = float(np.nansum(found.monitor)) if self._plan.monitor is not None else 0.0
         bits |= self._monitor_bits(place, counts, exposure, light, found)
+        bits |= self._rate_bits(place, counts, exposure, attempt[0].position_mm)
+        self._laps.stand(position, counts, exposure)
         place.counts += counts
         place.exposure += exposure
         place.light += light
@@ -200,6 +195,24 @@ class Judge:
         beyond = abs(off - self._lit.middle) > self.rules.monitor_sigma * max(sigma, self._wander())
         self._lit.add(off)
         return Quality.MONITOR if beyond else Quality.GOOD
+
+    def _rate_bits(
+        self, place: _Place, counts: FloatArray, exposure: FloatArray, position_mm: float
+    ) -> Quality:
+        """Return whether a stand's counts leave the band about those of the first stand there."""
+        if place.first_hz is None:
+            place.first_hz = counts / exposure
+        low, high = self.rules.rate_band
+        if low <= counts.sum() / float(place.first_hz @ exposure) <= high:
+            self._strayed = 0
+            return Quality.GOOD
+        self._strayed += 1
+        if self._strayed == STRAYED:
+            self.notes.append(
+                f"{STRAYED} stands in a row, the last at {position_mm:g} mm, count outside "
+                f"{low:g} .. {high:g} of what the first stand there did: look at the source and the beam."
+            )
+        return Quality.RATE
 
     def _wander(self) -> float:
         """Return how far stand over monitor usually is from its median; infinite while that is not known."""

@@ -59,6 +59,9 @@ class Rules:
     counter_range: float | None = None
     full_range: float = 0.9
     overload_hz: float | None = None
+    rate_band: tuple[float, float] = (0.5, 1.5)
+    lap_p: float = 1 / 380
+    settle_sigma: float = 4.0
     limits: Mapping[str, Limit] = field(default_factory=dict)
 
 

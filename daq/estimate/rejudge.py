@@ -25,11 +25,17 @@ AGAIN = (
     | Quality.NO_COUNTS
     | Quality.FINGERPRINT
     | Quality.MONITOR
+    | Quality.RATE
 )
 
 
 def judged_again(dataset: Any) -> IntArray:
-    """Return the quality of every row as the frozen rules give it off line.
+    """Return the quality of every row as the frozen rules give it off line; see `rejudged`."""
+    return rejudged(dataset)[0]
+
+
+def rejudged(dataset: Any) -> tuple[IntArray, list[str]]:
+    """Return the quality of every row as the frozen rules give it off line, and what laps showed besides.
 
     Parameters
     ----------
@@ -43,7 +49,11 @@ def judged_again(dataset: Any) -> IntArray:
         rules_of(attributes.get("quality", {})),
         None if expected is None else np.asarray(expected, float),
     )
-    return np.array([int(judge.judge(reading).quality) for reading in _readings(dataset)], np.int64)
+    quality, notes = [], []
+    for reading in _readings(dataset):
+        quality.append(int(judge.judge(reading).quality))
+        notes += judge.notes
+    return np.array(quality, np.int64), notes
 
 
 def _readings(dataset: Any) -> Iterator[Reading]:

@@ -27,6 +27,7 @@ def account_lines(figures: Mapping[str, Any]) -> list[str]:
         "",
         *_checks(account),
         *_left_out(account, figures),
+        *figures["noticed"],
     ]
 
 

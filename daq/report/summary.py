@@ -10,8 +10,9 @@ import numpy as np
 import xarray as xr
 
 from daq import openings
-from daq.estimate import estimate_run, judged_again
+from daq.estimate import estimate_run
 from daq.estimate.account import account_of
+from daq.estimate.rejudge import rejudged
 
 
 def summary(folder: Path, visits: xr.Dataset, digests: Mapping[str, str]) -> dict[str, Any]:
@@ -38,7 +39,7 @@ def summary(folder: Path, visits: xr.Dataset, digests: Mapping[str, str]) -> dic
         "recorded_kappa": _recorded_kappa(meta),
         **estimate.to_json(),
         "account": account_of(visits).to_json(),
-        "quality_differs": _judged_otherwise(visits),
+        **_judged(visits),
         "openings_missing": _missing(visits),
         **_tally(visits),
         **_live(visits),
@@ -56,9 +57,11 @@ def _recorded_kappa(meta: Mapping[str, Any]) -> float | None:
     return kappa
 
 
-def _judged_otherwise(visits: xr.Dataset) -> int:
-    """Return how many rows the frozen rules judge otherwise off line than they did while it ran."""
-    return int(np.count_nonzero(judged_again(visits) != visits["quality"].values))
+def _judged(visits: xr.Dataset) -> dict[str, Any]:
+    """Return how many rows the frozen rules judge otherwise than while it ran, and what laps showed."""
+    quality, noticed = rejudged(visits)
+    differ = int(np.count_nonzero(quality != visits["quality"].values))
+    return {"quality_differs": differ, "noticed": noticed}
 
 
 def _missing(visits: xr.Dataset) -> list[str]:

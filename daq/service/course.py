@@ -83,6 +83,8 @@ def _readings(night: Night, place: Place) -> Iterator[Reading]:
     for _, reading in performed:
         if night.judge.finding:
             tell(night, "left out", text=night.judge.finding)
+        for note in night.judge.notes:
+            tell(night, "noticed", text=note)
         night.running.add(reading)
         closed = night.live.took(reading, night.judge.odd)
         if night.trouble.kind != "no counts" or (closed and not night.live.watcher.dark_stands):

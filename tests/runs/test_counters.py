@@ -14,6 +14,7 @@ from daq.cli import main
 from daq.cli.toml import toml_text
 from daq.estimate import judged_again
 from daq.estimate.account import account_of
+from daq.records import Quality
 from tests.examples import CONFIGS, changed, measurement_table, rig_table
 
 SHORT: dict[str, Any] = {
@@ -69,6 +70,7 @@ def test_accidental_coincidences_are_taken_away_visit_by_visit(tmp_path: Path) -
     left = np.nansum(rates) / (singles / visits["live_s"].values.sum() * rates.size)
     assert seen / singles > 1.5 * HERALDING  # what stands in the archive has the accidental ones
     assert left == pytest.approx(HERALDING, abs=4 * float(np.sqrt(np.sum(errors**2)) / rates.sum()))
+    assert not visits["quality"].values.any()  # the rules know how accidental ones scatter
     assert off_truth(visits) < 4
 
 
@@ -135,7 +137,7 @@ def test_a_dead_time_left_over_is_told_and_moves_kappa_not_at_all(tmp_path: Path
     assert off_truth(visits) < 4
 
 
-def test_slices_show_a_beam_that_failed_within_a_visit(tmp_path: Path) -> None:
+def test_slices_show_a_beam_that_failed_within_a_visit_and_the_stand_is_repeated(tmp_path: Path) -> None:
     faults = {"seed": 1, "fault": [{"kind": "beam-off", "at_s": 600.3, "seconds": 0.4}]}
     (tmp_path / "faults.toml").write_text(toml_text(faults))
 
@@ -146,4 +148,8 @@ def test_slices_show_a_beam_that_failed_within_a_visit(tmp_path: Path) -> None:
     assert visits["slices"].shape == (visits.sizes["row"], 10, 1)
     assert np.array_equal(visits["slices"].values.sum(axis=1), visits["values"].values)
     assert np.array_equal(judged_again(visits), visits["quality"].values)
-    assert account_of(visits).left_out["dispersion"] == 1
+    flagged = (visits["quality"].values & int(Quality.DISPERSION)) != 0
+    again = visits["attempt"].values == 2
+    assert flagged.sum() == 1 and again.sum() == 8
+    assert set(visits["stand"].values[again]) == set(visits["stand"].values[flagged])
+    assert account_of(visits).left_out == {}

@@ -10,7 +10,7 @@ from scipy.stats import poisson
 
 from daq.estimate import dead_time_two_source_s, poisson_interval, seen_rate_hz, true_rate_hz
 from daq.estimate.arrays import FloatArray
-from daq.estimate.counting import true_counts, within_range
+from daq.estimate.counting import scatter, true_counts, within_range
 
 KINDS = ["non-paralysable", "paralysable"]
 
@@ -132,3 +132,11 @@ def test_the_limits_of_a_poisson_mean_leave_equal_tails(counts: int, confidence:
 def test_limits_of_nonsense_are_refused(counts: int, confidence: float) -> None:
     with pytest.raises(ValueError, match="must"):
         poisson_interval(counts, confidence)
+
+
+def test_counts_without_their_accidental_part_scatter_as_all_that_was_counted() -> None:
+    value, variance = np.array([100.0, 300.0]), np.array([250.0, 750.0])
+
+    assert scatter(value, variance, 1.5, heralded=True) == 2.5
+    assert scatter(value, variance, 1.5, heralded=False) == 1.5
+    assert scatter(value * 0, variance, 1.5, heralded=True) == 1.5

@@ -17,7 +17,7 @@ def figures(rows):
     archive = dataset(PLAN, rows)
     archive.attrs["expected_hz"] = rates_hz(PLAN.positions_mm).tolist()
     archive.attrs["slit_loads"] = {}
-    return estimate_run(archive).to_json() | {"account": account_of(archive).to_json()}
+    return estimate_run(archive).to_json() | {"account": account_of(archive).to_json(), "noticed": []}
 
 
 def test_the_account_says_estimator_budget_and_checks():
@@ -38,6 +38,12 @@ def test_a_check_that_is_off_is_pointed_at():
 
     (off,) = [line for line in lines if line.startswith("first less second laps")]
     assert off.endswith("<-- look at this")
+
+
+def test_what_the_laps_showed_is_told():
+    found = figures(readings(PLAN, np.random.default_rng(4))) | {"noticed": ["Lap 9 does not fit."]}
+
+    assert account_lines(found)[-1] == "Lap 9 does not fit."
 
 
 def test_below_two_pairs_there_is_no_account():
