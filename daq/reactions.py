@@ -60,7 +60,7 @@ def reaction(kind: str, tries: int, elapsed_s: float) -> tuple[Action, float]:
     tries
         How often it has been tried since the last good visit, from 0.
     elapsed_s
-        Run time since the last good visit [s].
+        Run time since the first fault after the last good visit [s].
     """
     entry = TABLE.get(kind, TABLE["forbidden"])
     if elapsed_s > entry.limit_s or entry.action is Action.PARK:

@@ -61,9 +61,9 @@ class WaveletBench:
         rates: list[list[float]] = self._built.truth.rates_hz(openings, positions_mm).tolist()
         return rates
 
-    def truth_mm(self, axis: str) -> float:
-        """Return where an axis truly is [mm], whatever its encoder says."""
-        return self._built.tracks[axis].true_mm(self.clock.now_ns())
+    def truth_mm(self, axis: str, at_ns: int | None = None) -> float:
+        """Return where an axis truly is, or was [mm], whatever its encoder says."""
+        return self._built.tracks[axis].true_mm(self.clock.now_ns() if at_ns is None else at_ns)
 
     def struck(self) -> Sequence[Struck]:
         """Return the faults that were injected, the truth behind what the run noticed."""

@@ -48,6 +48,10 @@ class Fit:
     work: int
 
 
+class UnsettledError(ValueError):
+    """The visits do not tell rates and source apart well enough for the fit to come to rest."""
+
+
 def fit(series: Series) -> Fit:
     """Return rates and source that make the visits likeliest.
 
@@ -136,7 +140,7 @@ class Schur:
             image, size = self.times(direction), fresh
             along = fresh / float(direction @ image)
             solution, rest = solution + along * direction, rest - along * image
-        raise ValueError(f"the joint fit did not settle within {SOLVER_STEPS} steps")
+        raise UnsettledError(f"the joint fit did not settle within {SOLVER_STEPS} steps")
 
 
 def _settle(series: Series, level: FloatArray, per_s: float) -> tuple[FloatArray, int]:
@@ -147,7 +151,7 @@ def _settle(series: Series, level: FloatArray, per_s: float) -> tuple[FloatArray
         level, work = level + np.clip(step, -1.0, 1.0), work + steps
         if np.abs(step).max(initial=0.0) < SETTLED:
             return level, work
-    raise ValueError(f"the joint fit did not settle within {NEWTON_STEPS} steps")
+    raise UnsettledError(f"the joint fit did not settle within {NEWTON_STEPS} steps")
 
 
 def _step(series: Series, level: FloatArray, per_s: float, kept: BoolArray) -> tuple[FloatArray, int]:

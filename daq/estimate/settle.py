@@ -14,6 +14,7 @@ from daq.estimate.choice import JOINT, MONITORED, PLAIN, Choice, choose, monitor
 from daq.estimate.exclusions import without_exclusions
 from daq.estimate.headline import headline
 from daq.estimate.irregular import irregular
+from daq.estimate.joint import UnsettledError
 from daq.estimate.levels import walk_per_s, walk_variance
 from daq.estimate.linearity import dead_time_left_s
 from daq.estimate.plan import Plan
@@ -40,9 +41,14 @@ class Settled:
 def settle(visits: Visits, plan: Plan) -> Settled:
     """Return what the complete pairs of a run say."""
     choice = choose(visits, plan)
-    found = _by_joint_fit(visits, plan, choice) if choice.estimator == JOINT else None
+    found, why_not = None, "the joint fit needs visits one after another"
+    if choice.estimator == JOINT:
+        try:
+            found = _by_joint_fit(visits, plan, choice)
+        except UnsettledError as error:
+            why_not = f"{error}; whole stands are compared"
     if found is None:
-        found = _by_contrast(visits, plan, choice)
+        found = _by_contrast(visits, plan, choice, why_not)
     numbers = {**found.numbers, **without_exclusions(visits, plan)}
     return Settled(found.estimator, numbers, found.strength)
 
@@ -63,10 +69,16 @@ def told(tables: Tables, pairs: int, plan: Plan, **more: Any) -> dict[str, Any]:
     return {**headline(tables, pairs, plan), "terms": terms_of(tables, plan), **linearity, **more}
 
 
-def _by_contrast(visits: Visits, plan: Plan, choice: Choice) -> Settled:
-    """Return the contrast of totals, of live times or of live times scaled by the monitor."""
+def _by_contrast(visits: Visits, plan: Plan, choice: Choice, why_not: str = "") -> Settled:
+    """Return the contrast of totals, of live times or of live times scaled by the monitor.
+
+    Parameters
+    ----------
+    why_not
+        Why a joint fit that was chosen is not made.
+    """
     if choice.estimator == JOINT:
-        choice = Choice(PLAIN, "the joint fit needs visits one after another", choice.taken)
+        choice = Choice(PLAIN, why_not, choice.taken)
     sums = sums_of(visits, plan, taking(Settled(choice.estimator, {}), visits, plan))
     numbers = told(tables_of(sums), len(sums.value), plan, estimator=choice.estimator, why=choice.why)
     counting = numbers["kappa_counting_se"]

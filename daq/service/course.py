@@ -40,7 +40,6 @@ def carry_out(night: Night, place: Place) -> str:
     tell(night, "run goes on" if place.number else "run begins", visit=place.number)
     if night.live.watcher.restarts >= RESTARTS_AN_HOUR:
         night.asked.end_after_lap = True
-    night.trouble = Trouble(night.clock.now_ns())
     while not night.asked.ends and place.number < len(night.itinerary):
         place = _stretch(night, place)
         wait_out(night)
@@ -87,8 +86,9 @@ def _readings(night: Night, place: Place) -> Iterator[Reading]:
             tell(night, "noticed", text=note)
         night.running.add(reading)
         closed = night.live.took(reading, night.judge.odd)
-        if night.trouble.kind != "no counts" or (closed and not night.live.watcher.dark_stands):
-            night.trouble = Trouble(night.clock.now_ns())
+        night.trouble = Trouble()
+        if closed and not night.live.watcher.dark_stands:
+            night.darkness = Trouble()
         if closed:
             _stood(night, reading)
         night.on_visit(reading)
@@ -191,9 +191,12 @@ def _trouble_of(night: Night, error: DeviceError) -> DeviceError:
 
 def _react(night: Night, error: DeviceError) -> None:
     """Do about a fault what the table says; raises it when that is to park."""
-    trouble = night.trouble
+    trouble = night.darkness if error.kind == "no counts" else night.trouble
+    now_ns = night.clock.now_ns()
+    if not trouble.tries:
+        trouble.began_ns = now_ns
     tell(night, "fault", text=_said(error), kind=error.kind)
-    elapsed_s = (night.clock.now_ns() - trouble.good_ns) / 1e9
+    elapsed_s = (now_ns - trouble.began_ns) / 1e9
     action, wait_s = reaction(error.kind, trouble.tries, elapsed_s)
     if action is Action.PARK:
         night.become(State.PARKING)
@@ -201,7 +204,7 @@ def _react(night: Night, error: DeviceError) -> None:
     if action is Action.HOLD_AT_BENCH:
         hold(night, error.kind, f"{_said(error)}")
         return
-    trouble.tries, trouble.why, trouble.kind = trouble.tries + 1, _said(error), error.kind
+    trouble.tries, trouble.why = trouble.tries + 1, _said(error)
     _recover(night, action, wait_s)
 
 

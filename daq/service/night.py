@@ -41,12 +41,11 @@ class Hold:
 
 @dataclass(slots=True)
 class Trouble:
-    """Tries since something last went well."""
+    """What has gone wrong since the last good visit: since when (the first fault), and how often tried."""
 
-    good_ns: int
+    began_ns: int = 0
     tries: int = 0
     why: str = ""
-    kind: str = ""
 
 
 @dataclass(slots=True)
@@ -72,7 +71,8 @@ class Night:
     exhausted: Callable[[], str] = lambda: ""  # a sentence when there is next to none
     until_utc_ns: int | None = None
     holds: dict[str, Hold] = field(default_factory=dict)
-    trouble: Trouble = field(default_factory=lambda: Trouble(0))
+    trouble: Trouble = field(default_factory=Trouble)  # with a device
+    darkness: Trouble = field(default_factory=Trouble)  # no light, though every device answers
     sat_out: int = 0  # stands that were measured again because of a rule
     astray: int = 0  # stands in a row in which an axis was not where it should be
 
@@ -110,11 +110,10 @@ def held(night: Night) -> Held | None:
     if grave:
         first = grave[0]
         return Held(first.cause, first.why, (now_ns - first.began_ns) / 3.6e12, at_bench=first.at_bench)
-    trouble = night.trouble
-    if not trouble.tries:
-        return None
-    cause = trouble.kind if trouble.kind == "no counts" else "fault"
-    return Held(cause, trouble.why, (now_ns - trouble.good_ns) / 3.6e12, trouble.tries)
+    for cause, trouble in (("fault", night.trouble), ("no counts", night.darkness)):
+        if trouble.tries:
+            return Held(cause, trouble.why, (now_ns - trouble.began_ns) / 3.6e12, trouble.tries)
+    return None
 
 
 def _sentence(event: str, fields: dict[str, Any]) -> str:

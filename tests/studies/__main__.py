@@ -11,7 +11,7 @@ from importlib import import_module
 from pathlib import Path
 from typing import Any
 
-STUDIES = ("zigzag", "irregular", "benches", "exclusions", "quality")
+STUDIES = ("zigzag", "irregular", "benches", "exclusions", "quality", "chaos")
 RESULTS = Path(__file__).parent / "results"
 
 
