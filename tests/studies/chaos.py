@@ -1,8 +1,8 @@
 """Chaos: rehearsed nights of ten hours over TCP, faults of every kind, the program killed in a third.
 
 Each night runs in a process of its own, which writes down every visit when it is acknowledged, and where the
-axes truly stood while it counted; the kill comes from outside, at a visit that the seed chooses and at whatever
-instruction that happens to be. The night is then gone on with, as the service does it.
+axes truly stood while it counted; the kill comes from outside, at a visit that the seed chooses and at
+whatever instruction that happens to be. The night is then gone on with, as the service does it.
 """
 
 from __future__ import annotations
@@ -218,7 +218,7 @@ def _perform(lab: Path, run: Path | None) -> None:
         benches.append(simulated(*arguments, **more))
         return benches[-1]
 
-    start.open_bench = open_bench  # type: ignore[assignment]  # this process is the study's own
+    start.open_bench = open_bench  # type: ignore[assignment,attr-defined]  # this process is the study's own
     log = os.open(lab / "acknowledged.jsonl", os.O_WRONLY | os.O_CREAT | os.O_APPEND)
 
     def took(reading: Reading) -> None:

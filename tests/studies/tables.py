@@ -86,6 +86,21 @@ _NIGHTS = {"nights": _plain("nights", "d"), "bias": _pm("bias", "bias_se", "+"),
 _COVERED = {"covers 68 %": _percent("coverage_68"), "covers 95 %": _percent("coverage_95")}
 
 _FORMS: dict[str, tuple[str, dict[str, Any]]] = {
+    "chaos": (
+        "Chaos: nights with faults of every kind, killed in a third",
+        {
+            **{
+                key.replace("_", " "): _plain(key, "d")
+                for key in ("nights", "killed", "faults", "acknowledged", "lost", "misfiled")
+            },
+            "unseen by encoders": _plain("unseen", "d"),
+            "of these left out": _percent("detection"),
+            "complete": _plain("complete", "d"),
+            "parked": _plain("parked", "d"),
+            "no reason": _plain("without_reason", "d"),
+            "kappa inside 95 %": lambda found: f"{found['inside']} of {found['with_kappa']}",
+        },
+    ),
     "zigzag": (
         "Complete zig-zag nights (bias and sd in counting bars)",
         {
