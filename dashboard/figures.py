@@ -10,6 +10,7 @@ from typing import Any
 import numpy as np
 
 from daq import openings
+from daq.estimate.shown import HIDDEN_ORDER
 from dashboard.bands import BAND_FROM_PAIR, INNER, OUTER, first_band_pair, whole_night
 from dashboard.residual import is_blinded, unit
 from dashboard.words import fixed, spelt
@@ -60,7 +61,7 @@ def pattern(feed: Feed, chosen: int) -> dict[str, Any]:
     sign = openings.sign(opening, slits)
     hidden = is_blinded(feed)
     said = {"mask": chosen, "name": opening, "added": sign > 0, "positions": feed["positions_mm"]}
-    if hidden and chosen == max(masks):
+    if _is_hidden(feed, chosen):
         return said | {"empty": f"The pattern of {opening} is hidden while the run is blinded."}
     rates = feed["rates_hz"][masks.index(chosen)]
     if all(rate is None for rate in rates):
@@ -77,13 +78,18 @@ def plates(feed: Feed) -> dict[str, list[int | None]]:
 
     Heights are the square root of the rate, so that one slit is still seen beside all of them.
     """
-    hidden = {max(feed["openings"])} if is_blinded(feed) else set()
+    hidden = {mask for mask in feed["openings"] if _is_hidden(feed, mask)}
     rows = [
         row if mask not in hidden else []
         for mask, row in zip(feed["openings"], feed["rates_hz"], strict=True)
     ]
     top = max((np.nanmax(np.asarray(row, dtype=float), initial=0) for row in rows), default=0) or 1
     return {str(mask): _silhouette(row, top) for mask, row in zip(feed["openings"], rows, strict=True)}
+
+
+def _is_hidden(feed: Feed, mask: int) -> bool:
+    """Return whether the pattern of an opening would give kappa away."""
+    return is_blinded(feed) and mask.bit_count() >= HIDDEN_ORDER
 
 
 def strip(feed: Feed) -> dict[str, Any]:

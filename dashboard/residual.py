@@ -6,6 +6,7 @@ import math
 from collections.abc import Mapping
 from typing import Any
 
+from daq.estimate.blinding import Blinding
 from dashboard.bands import INNER, OUTER, band_to_read, first_band_pair, whole_night
 from dashboard.words import NB, count, decimals_of, fixed, unit_of
 
@@ -42,7 +43,7 @@ def residual_view(feed: Feed) -> dict[str, Any]:
 
 def is_blinded(feed: Feed) -> bool:
     """Return whether kappa, and what gives it away, must not leave this process."""
-    return bool(feed.get("blinding") != "open")
+    return Blinding(str(feed.get("blinding"))).hides
 
 
 def unit(kappa: Mapping[str, Any]) -> tuple[float, str]:

@@ -8,6 +8,7 @@ from pathlib import Path
 from daq.cli.answer import Answer
 from daq.errors import DescriptionError, StorageError
 from daq.report import lines
+from daq.service.blind import refuse_hidden
 from daq.service.figures import figures_of
 from daq.service.remarks import accept as accepted
 from daq.service.remarks import note as noted
@@ -46,6 +47,7 @@ def pack(arguments: argparse.Namespace) -> Answer:
         figures = {"ok": not found, "problems": found}
         lines = [f"{one}." for one in found] or [f"{run}: the bag is whole."]
         return Answer(StorageError.exit_status if found else 0, figures, lines)
+    refuse_hidden(run, arguments.raw, "a packed run")
     target = arguments.to or run.with_name(run.name + (".zip" if arguments.zip else ".bag"))
     (pack_zip if arguments.zip else pack_bag)(run, target)
     figures = {"ok": True, "packed": str(target)}
@@ -64,6 +66,7 @@ def export(arguments: argparse.Namespace) -> Answer:
         raise DescriptionError(
             (f"{arguments.file}: end the name in .csv or .nc, so that the format is known.",)
         )
+    refuse_hidden(arguments.run, arguments.raw, "an export")
     writer(arguments.run, arguments.file)
     return Answer(0, {"ok": True, "file": str(arguments.file)}, [f"written to {arguments.file}"])
 

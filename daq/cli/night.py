@@ -15,10 +15,12 @@ from typing import Any, TextIO
 from daq.cli.answer import Answer
 from daq.cli.plan import wishes
 from daq.errors import DescriptionError
+from daq.estimate.stopping import GOAL
 from daq.itinerary import Itinerary
 from daq.records import Reading
 from daq.report import lines
 from daq.service.asked import Asked
+from daq.service.ending import REASONS
 from daq.service.figures import figures_of
 from daq.service.load import Loaded, config_dir, load
 from daq.service.night import COMPLETE
@@ -59,7 +61,7 @@ def _carry_out(arguments: argparse.Namespace, transport: str, file: Path) -> Ans
             "speed_up": watch.run_s / watch.wall_s if watch.wall_s else None,
             "durable_write_s": durable_write_s(folder),
         }
-        answer = Answer(0 if ended == COMPLETE else 1, figures, _told(figures, watch))
+        answer = Answer(0 if ended in (COMPLETE, REASONS[GOAL]) else 1, figures, _told(figures, watch))
         if page is not None and not arguments.json and sys.stdout.isatty():
             print("\n".join(answer.lines))
             answer = Answer(answer.status, figures)

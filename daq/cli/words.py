@@ -34,6 +34,7 @@ def parser() -> argparse.ArgumentParser:
     _watch_words(commands)
     _after_words(commands)
     _people_words(commands)
+    _blind_words(commands)
     return whole
 
 
@@ -180,6 +181,18 @@ def _watch_words(commands: Any) -> None:
     log.add_argument("run", type=Path, metavar="RUN", help="a run folder")
 
 
+def _blind_words(commands: Any) -> None:
+    hide = "hide a run's kappa behind an offset, freeze its analysis, reveal it"
+    blind = _add(commands, "blind", "blinding:blind", hide, f"tercet blind {RUN} --freeze")
+    blind.add_argument("run", type=Path, metavar="RUN", help="a run folder in its lab")
+    blind.add_argument("--scope", default="run", metavar="NAME", help="a campaign with one offset (run)")
+    wide = "half width of the offset, like 0.001 (ten times the planned error bar)"
+    blind.add_argument("--halfwidth", metavar="NUMBER", help=wide)
+    blind.add_argument("--freeze", action="store_true", help="freeze settings and runs of the scope")
+    blind.add_argument("--reveal", action="store_true", help="reveal a frozen scope; asks for its name")
+    blind.add_argument("--by", metavar="NAME", help="who does it (your login name)")
+
+
 def _after_words(commands: Any) -> None:
     told = "print the report of a run"
     report = _add(commands, "report", "after:report", told, f"tercet report {RUN}")
@@ -203,6 +216,8 @@ def _after_words(commands: Any) -> None:
     note.add_argument("text", metavar="TEXT", help="what you saw")
     accept.add_argument("verdict", choices=VERDICTS, help="whether this night counts")
     accept.add_argument("--remark", default="", help="why")
+    for one in (pack, export):
+        one.add_argument("--raw", action="store_true", help="give raw counts of a blinded run; it is logged")
     for one in (note, accept):
         one.add_argument("--by", metavar="NAME", help="who says so (your login name)")
 

@@ -68,6 +68,11 @@ def joint_problems(measurement: Measurement, rig: Rig, source: str) -> tuple[str
             f"{source}, itinerary.dwell_s: the counter of the rig opens its gate for {gate_s:g} s at least, "
             f"not {dwell_s:g} s. Give a longer dwell."
         )
+    if measurement.blinding is not None and len(rig.slits) < 3:
+        problems.append(
+            f"{source}, blinding: a mask of {len(rig.slits)} slits has no third-order residual to hide. "
+            "Take the table out."
+        )
     channels = max(entry.channels for entry in rig.devices.values())
     problems += [
         f"{source}, estimate.{key}: there is no channel {channel}; the counter of the rig has channels 0 to "

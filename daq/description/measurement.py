@@ -2,12 +2,12 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Iterator, Mapping
 from typing import Annotated, Any, Literal
 
 from pydantic import AfterValidator, Field, model_validator
 
-from daq.description.problems import Table
+from daq.description.problems import ProblemsError, Table
 from daq.description.rig import NotNegative, Positive
 
 
@@ -193,6 +193,43 @@ class Quality(Table):
     limits: Mapping[str, Limit] = {}
 
 
+class Stop(Table):
+    """How a run may end besides its plan: `goal` and `futility`; `hard_end`: never later than its plan."""
+
+    goal: bool = False
+    futility: bool = False
+    hard_end: bool = False
+
+    @model_validator(mode="before")
+    @classmethod
+    def _forbidden(cls, table: Any) -> Any:
+        for key, why in _FORBIDDEN.items():
+            if isinstance(table, Mapping) and key in table:
+                raise ValueError(f"{key}: {why}. Take it out; `goal` ends a run without looking at kappa")
+        return table
+
+
+# Rules that people ask for, and what is left of 95 % where they choose the end (studies in DEVELOPERS.md).
+_FORBIDDEN = {
+    "significant": "a run that ends when kappa looks different from zero covers 77 to 84 %, not 95 %",
+    "null": "a limit that is taken when it first looks good is wrong three times as often as it says",
+    "error_bar": "a run that ends on its own scatter covers 90 to 94 %, not 95 %",
+}
+
+
+class Hidden(Table):
+    """Blinding: the runs that share an offset ("run", or a campaign's name), and its half width as text."""
+
+    scope: Annotated[str, Field(pattern=r"^[A-Za-z0-9][A-Za-z0-9._-]*$")] = "run"
+    halfwidth: Annotated[str, Field(pattern=r"^[0-9]*\.?[0-9]+(e-?[0-9]+)?$")]
+
+    @model_validator(mode="after")
+    def _above_zero(self) -> Hidden:
+        if not float(self.halfwidth) > 0:
+            raise ValueError("halfwidth must be above zero")
+        return self
+
+
 class Measurement(Table):
     """A measurement as its file describes it."""
 
@@ -207,4 +244,28 @@ class Measurement(Table):
     pilot: Pilot | None = None
     estimate: Estimate = Estimate()
     quality: Quality = Quality()
+    stop: Stop = Stop()
+    blinding: Hidden | None = None
     notes: Mapping[str, Any] = {}
+
+    @model_validator(mode="after")
+    def _hidden_well(self) -> Measurement:
+        found = list(self._blinding_problems()) if self.blinding else []
+        if self.stop.goal and self.estimate.goal_se is None:
+            found.append(("stop.goal", "it needs estimate.goal_se. Give one, or leave this out"))
+        if found:
+            raise ProblemsError(found)
+        return self
+
+    def _blinding_problems(self) -> Iterator[tuple[str, str]]:
+        assert self.blinding is not None
+        goal, half = self.estimate.goal_se, float(self.blinding.halfwidth)
+        if self.estimate.normalisation != "pairwise":
+            yield "blinding", "only the pairwise normalisation can be blinded. Choose it, or take this out"
+        if self.stop.futility:
+            yield "stop.futility", "an end for futility would tell how small a blinded kappa is. Take it out"
+        if goal is not None and half < 10 * goal:
+            yield (
+                "blinding.halfwidth",
+                f"{half:g} hides little beside a goal of {goal:g}. Give ten times that",
+            )

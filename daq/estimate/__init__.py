@@ -1,6 +1,6 @@
 """Estimates: pure functions from counts to the residual, its error bars, and what guards them."""
 
-from daq.estimate.blinding import blind_offset, shown
+from daq.estimate.blinding import Blinding, blind_offset
 from daq.estimate.blocks import jackknife
 from daq.estimate.charts import cusum, cusum_run_length, ewma, ewma_run_length
 from daq.estimate.counting import dead_time_two_source_s, poisson_interval, seen_rate_hz, true_rate_hz
@@ -15,6 +15,7 @@ from daq.estimate.quality import Rules
 from daq.estimate.rejudge import judged_again
 from daq.estimate.residual import Residual, kappa, residual, terms
 from daq.estimate.running import Running
+from daq.estimate.shown import shown
 from daq.estimate.slits import (
     expected_rates_hz,
     jet_speed_m_s,
@@ -27,6 +28,7 @@ from daq.estimate.use import use
 from daq.estimate.whole import Estimate, estimate_sums
 
 __all__ = [
+    "Blinding",
     "Estimate",
     "Judge",
     "Plan",

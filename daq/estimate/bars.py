@@ -11,13 +11,18 @@ from scipy.special import stdtrit
 
 from daq.estimate.arrays import FloatArray
 from daq.estimate.blocks import jackknife
-from daq.estimate.peeking import anytime_multiplier
+from daq.estimate.peeking import anytime_multiplier, hard_end_multiplier
 
 EXCESS_KNOWN = 8  # blocks from which the excess is steady enough to forecast with
 
 
 def bars(
-    kappa: float, counting: float, replicates: FloatArray, pairs: int, planned_pairs: int
+    kappa: float,
+    counting: float,
+    replicates: FloatArray,
+    pairs: int,
+    planned_pairs: int,
+    hard_end: bool = False,
 ) -> Mapping[str, Any]:
     """Return the bars of an estimate by name; no more than a forecast below two blocks.
 
@@ -27,6 +32,9 @@ def bars(
         The standard error that counting alone gives.
     replicates
         Kappa without each block in turn; a block is a pair, or several pairs where there are very many.
+
+    hard_end
+        The run ends at its plan whatever happens, which makes the band of every look narrower.
 
     Notes
     -----
@@ -40,7 +48,8 @@ def bars(
     se, freedom = jackknife(replicates)
     excess = se / counting if counting > 0 else None
     half = float(stdtrit(freedom, 0.975)) * se
-    outer = anytime_multiplier(blocks, round(planned_pairs * blocks / pairs)) * se if se > 0 else inf
+    planned = round(planned_pairs * blocks / pairs)
+    outer = (hard_end_multiplier if hard_end else anytime_multiplier)(blocks, planned) * se if se > 0 else inf
     return {
         "kappa_se": se,
         "dof": freedom,

@@ -19,6 +19,7 @@ from daq.estimate.quality import Rules, fingerprint
 from daq.estimate.sensitivity import Taken
 from daq.estimate.sums import plainly, sums_of
 from daq.estimate.tables import Tables, plan_contrast, tables_of
+from daq.estimate.veil import veiled
 from daq.estimate.visits import Visits
 
 
@@ -41,7 +42,7 @@ def checks(visits: Visits, plan: Plan, taken: Taken, numbers: Mapping[str, Any])
     if len(sums.value) >= 4:
         found += [_odd_and_even(sums.value, sums.live, plan)]
         found += [*_there_and_back(visits, plan, taken)]
-        found += [*_pattern(tables_of(sums), plan, numbers)]
+        found += [*_pattern(veiled(tables_of(sums), plan), plan, numbers)]
     return tuple(found)
 
 

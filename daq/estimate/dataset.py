@@ -8,9 +8,11 @@ from typing import Any
 import numpy as np
 
 from daq.estimate.arrays import FloatArray, IntArray
+from daq.estimate.blinding import OPEN, Blinding
 from daq.estimate.counting import check_dead_time
 from daq.estimate.plan import Heralded, Plan
 from daq.estimate.rows import Rows
+from daq.estimate.shown import shown
 from daq.estimate.visits import visits_of
 from daq.estimate.whole import Estimate, estimate_visits
 from daq.records import Quality, Reading
@@ -21,8 +23,11 @@ NEEDED = (
 )
 
 
+HIDDEN = "hidden"  # attribute of a dataset that was opened where the secret of its blinding lies
+
+
 def estimate_run(dataset: Any) -> Estimate:
-    """Return the estimate of a run from its dataset, the same that page and report show.
+    """Return the estimate of a run from its dataset, the same that page and report show, blinded as it is.
 
     Parameters
     ----------
@@ -33,10 +38,11 @@ def estimate_run(dataset: Any) -> Estimate:
     ------
     ValueError
         If the attributes lack a part of the plan or hold a dead time below zero, or a row has an opening or a
-        position that is not planned.
+        position that is not planned; if it is blinded and the secret is not at hand.
     """
     plan = plan_of_dataset(dataset)
-    return estimate_visits(visits_of(rows_of_dataset(dataset), plan), plan)
+    found = estimate_visits(visits_of(rows_of_dataset(dataset), plan), plan)
+    return shown(found, plan.blinding)
 
 
 def plan_of_dataset(dataset: Any) -> Plan:
@@ -63,6 +69,8 @@ def plan_of_dataset(dataset: Any) -> Plan:
         goal_se=attributes.get("goal_se"),
         **_counting(attributes),
         visits_per_stand=attributes.get("visits_per_stand"),
+        hard_end=bool(attributes.get("hard_end", False)),
+        blinding=attributes.get(HIDDEN, Blinding(str(attributes.get("blinding", OPEN)))),
         **_by_visit(dataset, openings, positions),
     )
 

@@ -12,6 +12,7 @@ from daq.estimate.plan import Plan, stand_places
 from daq.estimate.residual import weighted_kappa
 from daq.estimate.sums import plainly, sums_of
 from daq.estimate.tables import plan_contrast, tables_of
+from daq.estimate.veil import veiled
 from daq.estimate.visits import Visits, complete_pairs
 
 
@@ -37,7 +38,7 @@ def without_exclusions(visits: Visits, plan: Plan) -> Mapping[str, float]:
 
 
 def _plain(visits: Visits, plan: Plan, stands: BoolArray) -> tuple[float, float] | None:
-    tables = tables_of(sums_of(visits, plan, plainly(visits, plan, stands)))
+    tables = veiled(tables_of(sums_of(visits, plan, plainly(visits, plan, stands))), plan)
     what, signs = plan_contrast(plan)
     weights = np.where(tables.measured, plan.weights, 0.0)
     try:

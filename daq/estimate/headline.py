@@ -46,7 +46,7 @@ def headline(tables: Tables, pairs: int, plan: Plan) -> Mapping[str, Any]:
         )
         numbers |= {"kappa": kappa, "kappa_counting_se": counting}
         replicates = kappa_of(tables.without, tables.without_measured, plan)
-        numbers |= bars(kappa, counting, replicates, pairs, plan.planned_pairs)
+        numbers |= bars(kappa, counting, replicates, pairs, plan.planned_pairs, plan.hard_end)
     return numbers
 
 

@@ -3,11 +3,12 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 
 from daq.estimate.arrays import FloatArray, IntArray
+from daq.estimate.blinding import Blinding
 
 LAPS_PER_PAIR = 2
 
@@ -31,7 +32,8 @@ class Plan:
     shows every opening at one position, once, or as often as makes `visits_per_stand`.
 
     `counting` "counts" or "power" (mean power of a visit, with its variance); `fano` variance over mean of
-    the counts behind the dead time; `monitor` the channel that watches the source, if any.
+    the counts behind the dead time; `monitor` the channel that watches the source, if any. `hard_end`: the
+    run ends at its plan whatever happens; `blinding`: what is hidden of it.
     """
 
     slits: int
@@ -53,6 +55,8 @@ class Plan:
     fano: float = 1.0
     monitor: int | None = None
     heralded: Heralded | None = None
+    hard_end: bool = False
+    blinding: Blinding = field(default_factory=Blinding)
 
     @property
     def whole_stand(self) -> int:

@@ -7,7 +7,7 @@ from math import inf, sqrt
 
 import numpy as np
 from numpy.typing import ArrayLike
-from scipy.special import chdtrc, fdtrc, stdtrit
+from scipy.special import chdtrc, fdtrc, stdtr, stdtrit
 
 from daq.estimate.arrays import FloatArray
 
@@ -41,6 +41,45 @@ class Pooled:
     random_se: float
     random_interval_95: Interval | None
     weights: FloatArray
+
+
+@dataclass(frozen=True, slots=True)
+class LeftOut:
+    """A night against the mean of the others: its distance in standard errors, and how odd that is.
+
+    `p` among so many nights (Sidak), by Student's t with the night's own and the others' degrees of freedom.
+    """
+
+    others: float
+    z: float
+    p: float
+
+
+def leave_one_out(
+    values: ArrayLike, ses: ArrayLike, dofs: ArrayLike, tau: float = 0.0
+) -> tuple[LeftOut, ...]:
+    """Return each night against the mean of the others.
+
+    Parameters
+    ----------
+    tau
+        Standard deviation between nights, where that is granted; else the nights are taken as equal.
+    """
+    value, se, dof = (np.asarray(column, float) for column in (values, ses, dofs))
+    _check(value, se, dof)
+    inverse = 1 / (se**2 + tau**2)
+    found = []
+    for at in range(len(value)):
+        rest = np.arange(len(value)) != at
+        share = inverse[rest] / inverse[rest].sum()
+        others, variance = float(share @ value[rest]), float(1 / inverse[rest].sum())
+        apart = se[at] ** 2 + tau**2 + variance
+        spread = se[at] ** 4 / dof[at] + np.sum((share * se[rest]) ** 4 / dof[rest])
+        z = float((value[at] - others) / sqrt(apart))
+        freedom = float(apart**2 / spread) if spread > 0 else inf
+        single = min(2 * float(stdtr(freedom, -abs(z))), 1 - 1e-15)
+        found.append(LeftOut(others, z, float(-np.expm1(len(value) * np.log1p(-single)))))
+    return tuple(found)
 
 
 def pool(

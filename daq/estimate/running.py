@@ -7,6 +7,7 @@ from typing import Any
 
 import numpy as np
 
+from daq.estimate.arrays import FloatArray
 from daq.estimate.budget import Budget, Known, budget
 from daq.estimate.detected import detected
 from daq.estimate.headline import headline
@@ -14,8 +15,10 @@ from daq.estimate.plan import Plan, stand_places
 from daq.estimate.rows import rows_of_readings
 from daq.estimate.sensitivity import taken_visits
 from daq.estimate.settle import Settled, settle, taking
+from daq.estimate.shown import shown, shown_numbers
 from daq.estimate.sums import Sums, plainly, sums_of
 from daq.estimate.tables import tables_of
+from daq.estimate.veil import veiled
 from daq.estimate.visits import complete_pairs, no_visits, write
 from daq.estimate.whole import Estimate, estimate_visits
 from daq.records import EXCLUDING, Reading
@@ -57,10 +60,18 @@ class Running:
             self._take_in(stand, reading.attempt, self._open.pop((stand, reading.attempt)))
 
     def estimate(self) -> Estimate:
-        """Return the estimate so far, the one that `estimate_run` gives for the same readings."""
+        """Return the estimate so far, as shown: the one that `estimate_run` gives for the same readings."""
         if self._estimate is None:
-            self._estimate = estimate_visits(self._visits, self._plan, self._settle())
+            found = estimate_visits(self._visits, self._plan, self._settle())
+            self._estimate = shown(found, self._plan.blinding)
         return self._estimate
+
+    def after(self, pairs: int) -> Mapping[str, Any]:
+        """Return the headline as it stood after so many complete pairs, for rules of the program alone."""
+        value, live, variance = (column[:pairs] for column in self._columns())
+        then = Sums(value, live, variance)
+        found = headline(veiled(tables_of(then), self._plan), pairs, self._plan)
+        return {**found, "planned_pairs": self._plan.planned_pairs}
 
     def _settle(self) -> Settled:
         """Return what the complete pairs say; it is worked out again when one of them has news."""
@@ -104,15 +115,20 @@ class Running:
         ends = sorted({*range(stride, len(pairs) + 1, stride), len(pairs)} - {0})
         settled = self._settle()
         if any(end not in self._past for end in ends):
-            sums = sums_of(self._visits, self._plan, taking(settled, self._visits, self._plan))
+            sums = Sums(*self._columns())
             self._past = {end: self._past.get(end) or _known_after(sums, end, self._plan) for end in ends}
             if settled.strength is not None:
-                _without_bands(self._past, settled)
+                _without_bands(self._past, shown_numbers(settled.numbers, self._plan.blinding))
         first_ns = self._first_ns or 0
         columns: dict[str, list[float | None]] = {
             "hours": [(self._closed_ns[pairs[end - 1]] - first_ns) / 3.6e12 for end in ends]
         }
         return columns | {name: [self._past[end][name] for end in ends] for name in _BANDS}
+
+    def _columns(self) -> tuple[FloatArray, FloatArray, FloatArray]:
+        """Return value, live time and variance of the complete pairs, as the settled estimator takes them."""
+        sums = sums_of(self._visits, self._plan, taking(self._settle(), self._visits, self._plan))
+        return sums.value, sums.live, sums.variance
 
     def _take_in(self, stand: int, attempt: int, readings: dict[int, Reading]) -> None:
         in_order = [readings[visit] for visit in sorted(readings)]
@@ -144,15 +160,14 @@ _BANDS = ("kappa", "interval_low", "interval_high", "whole_low", "whole_high")
 def _known_after(sums: Sums, pairs: int, plan: Plan) -> dict[str, float | None]:
     """Return kappa and both bands as they stood after so many pairs."""
     then = Sums(sums.value[:pairs], sums.live[:pairs], sums.variance[:pairs])
-    numbers = headline(tables_of(then), pairs, plan)
-    return _bands(numbers)
+    return _bands(shown_numbers(headline(veiled(tables_of(then), plan), pairs, plan), plan.blinding))
 
 
-def _without_bands(past: dict[int, dict[str, float | None]], settled: Settled) -> None:
+def _without_bands(past: dict[int, dict[str, float | None]], numbers: Mapping[str, Any]) -> None:
     """Take the bands of earlier ends away, which a fitted source does not tell; the last one is refitted."""
     for end in past:
         past[end] |= dict.fromkeys(_BANDS[1:])
-    past[max(past)] = _bands(settled.numbers)
+    past[max(past)] = _bands(numbers)
 
 
 def _bands(numbers: Mapping[str, Any]) -> dict[str, float | None]:

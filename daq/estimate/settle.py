@@ -21,6 +21,7 @@ from daq.estimate.plan import Plan
 from daq.estimate.sums import Taking, plainly, sums_of
 from daq.estimate.tables import Tables, tables_of
 from daq.estimate.terms import terms_of
+from daq.estimate.veil import veiled
 from daq.estimate.visits import Visits, complete_pairs
 
 SECONDS_PER_HOUR = 3600.0
@@ -64,6 +65,7 @@ def taking(settled: Settled, visits: Visits, plan: Plan) -> Taking:
 
 def told(tables: Tables, pairs: int, plan: Plan, **more: Any) -> dict[str, Any]:
     """Return headline, terms and linearity of tables as numbers by name, and more beside them."""
+    tables = veiled(tables, plan)
     left_s = dead_time_left_s(tables, plan)
     linearity = {} if left_s is None else {"dead_time_left_s": left_s[0], "dead_time_left_se_s": left_s[1]}
     return {**headline(tables, pairs, plan), "terms": terms_of(tables, plan), **linearity, **more}

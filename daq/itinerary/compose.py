@@ -169,6 +169,7 @@ def plan_of(itinerary: Itinerary, measurement: Measurement) -> Plan:
         fano=settings.fano,
         monitor=settings.monitor_channel,
         heralded=None if settings.heralded is None else Heralded(**settings.heralded.model_dump()),
+        hard_end=measurement.stop.hard_end,
     )
 
 

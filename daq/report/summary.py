@@ -10,9 +10,13 @@ import numpy as np
 import xarray as xr
 
 from daq import openings
-from daq.estimate import estimate_run
-from daq.estimate.account import account_of
+from daq.estimate import estimate_run, plan_of_dataset
+from daq.estimate.account import Account, account_of
+from daq.estimate.blinding import OPEN, Blinding
+from daq.estimate.budget import SYSTEMATIC, Budget
+from daq.estimate.closing import closing_of
 from daq.estimate.rejudge import rejudged
+from daq.estimate.shown import shown_table
 
 
 def summary(folder: Path, visits: xr.Dataset, digests: Mapping[str, str]) -> dict[str, Any]:
@@ -29,6 +33,9 @@ def summary(folder: Path, visits: xr.Dataset, digests: Mapping[str, str]) -> dic
     """
     meta = visits.attrs
     estimate = estimate_run(visits)
+    hidden = plan_of_dataset(visits).blinding
+    account = account_of(visits)
+    closing = closing_of(visits, estimate, _systematic(account.budget))
     return {
         "run": str(folder),
         "name": meta["run"],
@@ -38,12 +45,15 @@ def summary(folder: Path, visits: xr.Dataset, digests: Mapping[str, str]) -> dic
         "damaged": list(meta.get("damaged", ())),
         "recorded_kappa": _recorded_kappa(meta),
         **estimate.to_json(),
-        "account": account_of(visits).to_json(),
+        "account": _shown_account(account, hidden),
+        **closing.to_json(),
+        "blinding": hidden.state,
         **_judged(visits),
         "openings_missing": _missing(visits),
         **_tally(visits),
         **_live(visits),
-        "truth_kappa": meta.get("truth_kappa"),
+        "truth_kappa": None if hidden.hides else meta.get("truth_kappa"),
+        "stop": meta.get("stop"),
         "ended": meta.get("ended"),
         **digests,
     }
@@ -51,7 +61,7 @@ def summary(folder: Path, visits: xr.Dataset, digests: Mapping[str, str]) -> dic
 
 def _recorded_kappa(meta: Mapping[str, Any]) -> float | None:
     """Return kappa as it was written when the run was finished; not while it is blinded."""
-    if meta.get("blinding", "open") != "open":
+    if str(meta.get("blinding", OPEN)) != OPEN:
         return None
     kappa: float | None = meta.get("results", {}).get("kappa")
     return kappa
@@ -62,6 +72,16 @@ def _judged(visits: xr.Dataset) -> dict[str, Any]:
     quality, noticed = rejudged(visits)
     differ = int(np.count_nonzero(quality != visits["quality"].values))
     return {"quality_differs": differ, "noticed": noticed}
+
+
+def _shown_account(account: Account, hidden: Blinding) -> dict[str, Any]:
+    found = account.to_json()
+    return found | {name: shown_table(found[name], hidden) for name in ("budget", "checks")}
+
+
+def _systematic(budget: Budget | None) -> list[float]:
+    lines = () if budget is None else budget.lines
+    return [line.value for line in lines if line.kind == SYSTEMATIC and line.value is not None]
 
 
 def _missing(visits: xr.Dataset) -> list[str]:

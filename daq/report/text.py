@@ -6,7 +6,10 @@ import math
 from collections.abc import Mapping
 from typing import Any
 
+from daq.estimate.blinding import Blinding
+from daq.estimate.stopping import ONCE, WHOLE_NIGHT
 from daq.report.account import account_lines
+from daq.report.closing import closing_lines, ending_lines
 
 MINUS = "−"
 
@@ -20,7 +23,8 @@ def lines(figures: Mapping[str, Any]) -> list[str]:
         What `summary` gave.
     """
     account = account_lines(figures)
-    parts = (_head(figures), _residual(figures), account, _visits(figures), _archive(figures))
+    closing = closing_lines(figures)
+    parts = (_head(figures), _residual(figures), closing, account, _visits(figures), _archive(figures))
     return [line for part in parts if part for line in (*part, "")][:-1]
 
 
@@ -73,6 +77,8 @@ def _residual(figures: Mapping[str, Any]) -> list[str]:
             "The pairwise terms are too small to divide by: the plain residual is given instead of kappa.",
             f"epsilon = {_signed(figures['epsilon'])} ± {figures['epsilon_se']:.3g} per second",
         ]
+    if Blinding(figures["blinding"]).hides:
+        return _moved(figures)
     found = [
         f"kappa = {with_error(figures['kappa'], figures['kappa_se'])} "
         f"(jackknife over {figures['pairs']} pairs; {figures['normalisation']} normalisation)",
@@ -80,7 +86,7 @@ def _residual(figures: Mapping[str, Any]) -> list[str]:
         f"95 % over the whole night, whatever you do:     {_interval(figures['whole_night_95'])}",
         f"counting alone would give ± {figures['kappa_counting_se']:.2e}; "
         f"excess {figures['excess']:.2f} ± {figures['excess_se']:.2f}",
-        _zero(figures["interval_95"]),
+        *_zero(figures),
     ]
     if figures["truth_kappa"] is not None:
         off = (figures["kappa"] - figures["truth_kappa"]) / figures["kappa_se"]
@@ -102,7 +108,7 @@ def _visits(figures: Mapping[str, Any]) -> list[str]:
         f"{figures['visits_missing']} missing, {figures['visits_repeated']} repeated",
         f"{figures['stands_left_out']} stands left out, {figures['visits_not_used']} visits not used",
         f"{figures['run_s'] / 3600:.2f} h from first to last gate{live}",
-        *([f"ended: {figures['ended']}"] if figures["ended"] else []),
+        *ending_lines(figures),
     ]
 
 
@@ -122,6 +128,23 @@ def _interval(interval: tuple[float, float] | None) -> str:
     return "not yet" if interval is None else f"{_signed(interval[0])} to {_signed(interval[1])}"
 
 
-def _zero(interval: tuple[float, float]) -> str:
-    inside = interval[0] <= 0 <= interval[1]
-    return f"zero lies {'inside' if inside else 'outside'} the 95 % interval"
+def _moved(figures: Mapping[str, Any]) -> list[str]:
+    """Return what may be said while blinded: no zero, no limit, nothing that a zero could be read from."""
+    return [
+        f"This run is blinded ({figures['blinding']}): kappa is moved by a hidden offset and rounded.",
+        f"kappa + offset = {_signed(figures['kappa'])} ± {figures['kappa_se']:.1e} "
+        f"(jackknife over {figures['pairs']} pairs)",
+        f"95 % interval of that, if read once at the planned end: {_interval(figures['interval_95'])}",
+        f"95 % over the whole night, whatever you do:             {_interval(figures['whole_night_95'])}",
+        f"counting alone would give about ± {figures['kappa_counting_se']:.1e}",
+    ]
+
+
+def _zero(figures: Mapping[str, Any]) -> list[str]:
+    """Return where zero lies, by the band that the end of the run leaves to be read."""
+    once = (figures.get("stop") or {"band": WHOLE_NIGHT})["band"] == ONCE
+    ends = figures["interval_95" if once else "whole_night_95"]
+    if ends is None:
+        return []
+    band = "95 % interval" if once else "whole-night band, which is the one to read here"
+    return [f"zero lies {'inside' if ends[0] <= 0 <= ends[1] else 'outside'} the {band}"]

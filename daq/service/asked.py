@@ -14,7 +14,8 @@ class Asked:
 
     `end` this run after this stand; `leave`: end it and the program too; `stop` at once. A stop breaks in
     only while `interruptible`, that is while visits are performed. `requests` gives what operators left,
-    `settled` tells them what became of it, `idle` waits a little on the wall clock while a run holds.
+    `settled` tells them what became of it, `idle` waits a little on the wall clock while a run holds. `kind`
+    and `who` say which kind of end it is (daq.estimate.stopping) and who asked for it.
     """
 
     end: bool = False
@@ -22,6 +23,8 @@ class Asked:
     leave: bool = False
     stop: bool = False
     interruptible: bool = False
+    kind: str = ""
+    who: str = ""
     requests: Callable[[], Sequence[Request]] = tuple
     settled: Callable[[Request, str], None] = lambda request, outcome: None
     idle: Callable[[], None] = lambda: None
@@ -34,3 +37,4 @@ class Asked:
     def for_another_run(self) -> None:
         """Forget what was asked of the run before."""
         self.end = self.end_after_lap = False
+        self.kind = self.who = ""

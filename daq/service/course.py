@@ -8,10 +8,12 @@ from collections.abc import Iterator
 import numpy as np
 
 from daq.errors import DeviceError, StorageError
+from daq.estimate.stopping import END_TIME, PLANNED
 from daq.itinerary import Itinerary
 from daq.reactions import Action, reaction
 from daq.records import Quality, Reading
 from daq.sequencer import State, axis_trouble, perform
+from daq.service.ending import REASONS, due_now
 from daq.service.groups import AFTER_FAULT, BY_RULE, Place, repeat_from, supply
 from daq.service.hearing import hear
 from daq.service.holding import hold, pass_time, wait_out, watch_limits
@@ -44,7 +46,10 @@ def carry_out(night: Night, place: Place) -> str:
         place = _stretch(night, place)
         wait_out(night)
     night.become(State.PARKING)
-    return COMPLETE if place.number == len(night.itinerary) else AT_REQUEST
+    if place.number == len(night.itinerary):
+        night.asked.kind = PLANNED
+        return COMPLETE
+    return REASONS.get(night.asked.kind, AT_REQUEST)
 
 
 def _stretch(night: Night, place: Place) -> Place:
@@ -141,10 +146,18 @@ def _may_go_on(night: Night, number: int) -> bool:
     hear(night)
     until_ns = night.until_utc_ns
     if until_ns is not None and night.clock.utc_ns() + _stand_ns(night, number) > until_ns:
-        night.asked.end = True
+        _end_for(night, END_TIME)
+    elif _begins_pair(night.itinerary, number) and not night.asked.ends:
+        _end_for(night, due_now(night.running, night.stopping, int(night.itinerary.pair[number])))
     if night.asked.end_after_lap and _begins_lap(night.itinerary, number):
         night.asked.end = True
     return not (night.asked.ends or night.holds or night.shortage())
+
+
+def _end_for(night: Night, kind: str) -> None:
+    """Ask for the end that is due, if one is; what a person asked before stays theirs."""
+    if kind:
+        night.asked.end, night.asked.kind = True, night.asked.kind or kind
 
 
 def _patient(night: Night) -> bool:
@@ -164,6 +177,10 @@ def _stand_ns(night: Night, number: int) -> int:
 
 def _begins_lap(itinerary: Itinerary, number: int) -> bool:
     return number == 0 or bool(itinerary.lap[number] != itinerary.lap[number - 1])
+
+
+def _begins_pair(itinerary: Itinerary, number: int) -> bool:
+    return number > 0 and bool(itinerary.pair[number] != itinerary.pair[number - 1])
 
 
 def place_after(itinerary: Itinerary, place: Place, last: Reading | None) -> Place:

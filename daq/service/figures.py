@@ -6,6 +6,7 @@ from pathlib import Path
 from typing import Any
 
 from daq.report import summary
+from daq.service.blind import at_hand
 from daq.storage.digest import digest, gate_digest
 from daq.storage.reader import open_visits
 
@@ -21,4 +22,5 @@ def figures_of(folder: Path) -> dict[str, Any]:
         When the archive cannot be read.
     """
     visits = open_visits(folder, salvage=True)
+    at_hand(folder, visits.attrs)
     return summary(folder, visits, {"digest": digest(visits), "gate_digest": gate_digest(visits)})

@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable, Mapping
 
 from daq.errors import DeviceError
+from daq.estimate.stopping import BY_HAND
 from daq.service.live import stamp
 from daq.service.night import Hold, Night, tell
 from daq.service.requests import Request
@@ -48,12 +49,12 @@ def _resume_at_bench(night: Night, request: Request) -> str:
 
 
 def _end(night: Night, request: Request) -> str:
-    night.asked.end = True
+    night.asked.end, night.asked.kind, night.asked.who = True, BY_HAND, request.who
     return "heard"
 
 
 def _end_after_lap(night: Night, request: Request) -> str:
-    night.asked.end_after_lap = True
+    night.asked.end_after_lap, night.asked.kind, night.asked.who = True, BY_HAND, request.who
     return "heard"
 
 

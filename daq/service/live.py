@@ -11,8 +11,9 @@ from pathlib import Path
 from typing import Any
 
 from daq.errors import StorageError
-from daq.estimate import Running
+from daq.estimate import Blinding, Running, plan_of_dataset, readings_of_dataset
 from daq.estimate.budget import Budget, known_of
+from daq.estimate.shown import shown_table
 from daq.estimate.standing import Change, Standing
 from daq.estimate.wake import Held
 from daq.itinerary import Itinerary
@@ -20,7 +21,8 @@ from daq.ports import Clock
 from daq.records import Reading
 from daq.service.strip import Strip
 from daq.service.watcher import Watcher
-from daq.storage.feed import write_feed
+from daq.storage.feed import read_feed, write_feed
+from daq.storage.reader import open_visits
 
 log = logging.getLogger(__name__)
 
@@ -42,6 +44,7 @@ class Live:
     ) -> None:
         self._folder, self._meta, self._itinerary, self._clock = folder, meta, itinerary, clock
         self._known = known_of(meta)
+        self._blinding = Blinding(str(meta["blinding"]))
         self._mean_hz = float(itinerary.rates_hz.mean())
         self._written_s = float("-inf")
         self._started_utc = str(meta.get("started_utc") or stamp(clock.utc_ns()))
@@ -124,7 +127,7 @@ class Live:
             **_patterns(figures),
             "kappa": _kappa(figures),
             "history": running.history(),
-            "budget": _budget(running.budget(self._known)),
+            "budget": shown_table(_budget(running.budget(self._known)), self._blinding),
             "rate": self._strip.columns(self._mean_hz),
             "sensors": {} if self._last is None else {k: v[:2] for k, v in self._last.sensors.items()},
             "warnings": [_told(one) for one in self.watcher.standing],
@@ -133,7 +136,7 @@ class Live:
             "muted_until_utc": self._muted_until_utc,
             "log": list(self._log),
             "ended": None if ended is None else {"reason": ended, "utc": stamp(self._clock.utc_ns())},
-            "truth_kappa": self._meta.get("truth_kappa"),
+            "truth_kappa": None if self._blinding.hides else self._meta.get("truth_kappa"),
             **{key: figures[key] for key in ("estimator", "why")},
         }
 
@@ -196,6 +199,25 @@ def _told(one: Standing) -> dict[str, Any]:
         "updated_utc": one.updated_utc,
         "acknowledged": seen,
     }
+
+
+def tell_again(folder: Path) -> None:
+    """Write the last feed of a run anew, with what may be seen of it now."""
+    feed, visits = read_feed(folder), open_visits(folder)
+    if feed is None:
+        return
+    plan = plan_of_dataset(visits)
+    running, hidden = Running(plan), plan.blinding
+    for reading in readings_of_dataset(visits):
+        running.add(reading)
+    figures = running.estimate().to_json()
+    feed |= {**_patterns(figures), "kappa": _kappa(figures), "history": running.history()}
+    feed |= {"budget": shown_table(_budget(running.budget(known_of(visits.attrs))), hidden)}
+    feed |= {"blinding": hidden.state}
+    feed |= {"truth_kappa": None if hidden.hides else visits.attrs.get("truth_kappa")}
+    if hidden.hides:  # its levels hold all openings together
+        feed["rate"] = {name: [] for name in feed["rate"]}
+    write_feed(folder, feed)
 
 
 def stamp(utc_ns: int) -> str:

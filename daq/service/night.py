@@ -9,8 +9,9 @@ from pathlib import Path
 from typing import Any
 
 from daq.errors import StorageError
-from daq.estimate import Judge, Running
+from daq.estimate import Blinding, Judge, Running
 from daq.estimate.standing import Change
+from daq.estimate.stopping import Stopping
 from daq.estimate.wake import Held
 from daq.itinerary import Itinerary
 from daq.ports import Bench, Clock, Devices
@@ -70,6 +71,8 @@ class Night:
     shortage: Callable[[], str] = lambda: ""  # a sentence while there is too little room on the disk
     exhausted: Callable[[], str] = lambda: ""  # a sentence when there is next to none
     until_utc_ns: int | None = None
+    stopping: Stopping = field(default_factory=Stopping)
+    blinding: Blinding = field(default_factory=Blinding)
     holds: dict[str, Hold] = field(default_factory=dict)
     trouble: Trouble = field(default_factory=Trouble)  # with a device
     darkness: Trouble = field(default_factory=Trouble)  # no light, though every device answers

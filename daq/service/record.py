@@ -12,6 +12,7 @@ from tzlocal import get_localzone_name
 from daq import openings
 from daq.description import Rig
 from daq.estimate import kappa
+from daq.estimate.blinding import OPEN
 from daq.itinerary import Itinerary
 from daq.ports import Bench, Clock, Devices
 from daq.service.live import stamp
@@ -60,7 +61,8 @@ def record_of(
         "order": itinerary.order,
         "seed": itinerary.seed,
         "goal_se": settings.goal_se,
-        "blinding": "open",
+        "blinding": OPEN,
+        "hard_end": measurement.stop.hard_end,
         "started_utc": stamp(clock.utc_ns()),
         "zone": str(get_localzone_name() or "UTC"),
         "description": measurement.model_dump(mode="json", by_alias=True),

@@ -2,10 +2,11 @@
 
 from __future__ import annotations
 
+import getpass
 import time
 from collections.abc import Callable
 from contextlib import ExitStack
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from datetime import datetime
 from pathlib import Path
 from typing import Any
@@ -18,12 +19,15 @@ from daq.errors import DaqError, DeviceError, StorageError
 from daq.estimate import Judge, Running, readings_of_dataset
 from daq.estimate.quality import rules_of
 from daq.estimate.standing import Change
+from daq.estimate.stopping import BROKEN, BY_HAND, Stopping
 from daq.itinerary import Itinerary, plan_of
 from daq.ports import Bench, Clock, Devices
 from daq.records import Reading
 from daq.sequencer import State
 from daq.service.asked import Asked
+from daq.service.blind import at_hand, keep_promise, promise
 from daq.service.course import carry_out
+from daq.service.ending import record_of_end
 from daq.service.extensions import open_bench
 from daq.service.groups import Place, place_after
 from daq.service.live import Live, stamp
@@ -72,8 +76,13 @@ def begin(loaded: Loaded, lab: Path, wanted: Wanted) -> tuple[Path, str]:
         meta = record_of(loaded, itinerary, clock, devices, bench)
         folder = new_run_folder(lab, clock.utc_ns(), loaded.measurement.name)
         meta["run"] = folder.name
+        hidden = loaded.measurement.blinding
+        if hidden is not None:
+            meta |= promise(lab, folder.name, itinerary.slits, hidden.model_dump())
         archive = create_run(folder, texts=loaded.texts, itinerary=itinerary, meta=meta)
         stack.enter_context(archive)
+        if hidden is not None:
+            keep_promise(folder, meta, getpass.getuser())
         night = _night(folder, loaded, itinerary, archive, clock, devices, bench, wanted)
         return folder, _through(night, Place(0), wanted)
 
@@ -118,6 +127,7 @@ def _through(night: Night, place: Place, wanted: Wanted) -> str:
         stop_now(night)
         ended = STOPPED
     except DaqError as error:
+        night.asked.kind = BROKEN
         _end(night, str(error))
         raise
     _end(night, ended)
@@ -141,7 +151,9 @@ def _results(night: Night, ended: str) -> dict[str, Any]:
     return {
         "ended": ended,
         "ended_utc": stamp(night.clock.utc_ns()),
-        "results": {name: value for name, value in figures.items() if not isinstance(value, list)},
+        "stop": {"reason": ended, **_stop(night, ended)},
+        "results": {name: value for name, value in figures.items() if not isinstance(value, list)}
+        | {"blinding": night.blinding.state},
         "digest": digest(visits),
         "gate_digest": gate_digest(visits),
     }
@@ -162,9 +174,16 @@ def _end(night: Night, reason: str) -> None:
     park(night)
     night.become(State.ENDED)
     night.holds.clear()
-    tell(night, "ended", reason=reason)
+    tell(night, "ended", reason=reason, **_stop(night, reason))
     look(night, "" if reason == COMPLETE else reason, anew=True)
     night.live.write(night.state.value, night.running, reason, now=True)
+
+
+def _stop(night: Night, reason: str) -> dict[str, Any]:
+    """Return the record of how a run ended, without the reason in words."""
+    asked, pairs = night.asked, night.running.estimate().pairs
+    found = record_of_end(reason, asked.kind or BY_HAND, asked.who, pairs, not night.blinding.hides)
+    return {name: value for name, value in found.items() if name != "reason"}
 
 
 def _night(
@@ -177,7 +196,9 @@ def _night(
     bench: Bench | None,
     wanted: Wanted,
 ) -> Night:
-    plan = plan_of(itinerary, loaded.measurement)
+    blinding = at_hand(folder, archive.meta)
+    plan = replace(plan_of(itinerary, loaded.measurement), blinding=blinding)
+    ends = loaded.measurement.stop
     rules = rules_of(loaded.measurement.quality.model_dump())
     return Night(
         folder=folder,
@@ -187,6 +208,8 @@ def _night(
         devices=devices,
         running=Running(plan),
         judge=Judge(plan, rules, itinerary.rates_hz),
+        stopping=Stopping(plan.goal_se if ends.goal else None, ends.futility),
+        blinding=blinding,
         live=Live(
             folder,
             archive.meta,

@@ -9,7 +9,9 @@ from typing import Any
 
 import numpy as np
 
+from daq.estimate import Blinding
 from daq.estimate.rows import DETECTOR
+from daq.estimate.shown import HIDDEN_ORDER
 from daq.itinerary import Itinerary
 from daq.records import Quality, Reading
 
@@ -40,6 +42,7 @@ class Strip:
         self.flagged: Counter[str] = Counter()
         self.first_ns: int | None = None
         self._itinerary = itinerary
+        self._hides = Blinding(str(meta["blinding"])).hides
         self._power = meta.get("counting") == "power"
         self._fano = float(meta.get("fano") or 1.0)
         self._monitor: int | None = meta.get("monitor_channel")
@@ -62,7 +65,7 @@ class Strip:
         return closes
 
     def _close(self) -> None:
-        visits, self._visits = self._visits, []
+        visits, self._visits = [visit for visit in self._visits if not self._hidden(visit)], []
         due = sum(visit.live_s * self._rate_hz(visit) for visit in visits)
         if not visits or due <= 0 or self.first_ns is None:
             return
@@ -90,6 +93,10 @@ class Strip:
             "mean": (np.add.reduceat(rates, cuts) / many).round(2).tolist(),
             "high": np.maximum.reduceat(rates, cuts).round(2).tolist(),
         }
+
+    def _hidden(self, reading: Reading) -> bool:
+        """Return whether a reading is hidden: with all others of a stand its level would give it away."""
+        return self._hides and reading.opening.bit_count() >= HIDDEN_ORDER
 
     def _key(self, reading: Reading) -> tuple[int, int]:
         return int(self._itinerary.stand[reading.visit]), reading.attempt

@@ -16,6 +16,7 @@ import xarray as xr
 from numpy.typing import NDArray
 
 from daq.errors import StorageError
+from daq.estimate.dataset import HIDDEN
 from daq.estimate.use import stands_done
 from daq.openings import name as opening_name
 from daq.storage.layout import EVENTS
@@ -109,7 +110,7 @@ def _position(asked: NDArray[np.float64], positions: NDArray[np.float64]) -> NDA
 
 
 def _cf(dataset: xr.Dataset) -> xr.Dataset:
-    attributes = {name: _cf_value(value) for name, value in dataset.attrs.items()}
+    attributes = {name: _cf_value(value) for name, value in dataset.attrs.items() if name != HIDDEN}
     named = {"Conventions": "CF-1.11", **attributes}
     encoding = {name: _encoding(array) for name, array in dataset.items()}
     found = dataset.assign_attrs(named)

@@ -11,8 +11,11 @@ import xarray as xr
 from numpy.typing import NDArray
 
 from daq.errors import StorageError
+from daq.estimate.blinding import OPEN
+from daq.estimate.dataset import HIDDEN
 from daq.estimate.use import use
 from daq.storage.absent import no_run
+from daq.storage.blinding import blinding_of
 from daq.storage.chunks import read_column
 from daq.storage.layout import EVENTS, FINISHED, ITINERARY, ZARR, Column, columns, looked_up, planned
 from daq.storage.rows import Rows
@@ -44,6 +47,8 @@ def open_visits(folder: Path, *, salvage: bool = False) -> xr.Dataset:
 
     Notes
     -----
+    The counts are told as they are, blinded or not; the blinding that the dataset carries makes
+    `estimate_run` hide what is hidden.
     In list mode a finished run gives its events too, lazily; `read_events` gives those of a row at any time.
 
     Raises
@@ -61,7 +66,9 @@ def open_visits(folder: Path, *, salvage: bool = False) -> xr.Dataset:
     meta = held.meta | ({"damaged": list(problems.values())} if problems else {})
     arrays = _set_aside_incomplete(found)
     arrays.update(_looked_up(plan, arrays, meta))
-    dataset = _dataset((*columns(meta), *looked_up()), arrays, meta)
+    blinding = blinding_of(folder, meta)
+    seen = {**meta, "blinding": blinding.state, HIDDEN: blinding} if blinding.state != OPEN else meta
+    dataset = _dataset((*columns(meta), *looked_up()), arrays, seen)
     if meta.get("list_mode") and meta.get(FINISHED) and not problems:
         plain = xr.open_zarr(folder / ZARR, chunks=None, consolidated=False)
         return dataset.assign({EVENTS: plain[EVENTS].variable})

@@ -11,7 +11,8 @@ import numpy as np
 import xarray as xr
 from numpy.typing import NDArray
 
-from daq.estimate.dataset import estimate_run
+from daq.estimate.blinding import OPEN, Blinding
+from daq.estimate.dataset import HIDDEN, estimate_run
 from daq.openings import name as opening_name
 from daq.storage.chunks import lost_chunks
 from daq.storage.digest import digest, gate_digest
@@ -128,9 +129,19 @@ def _contradictions(dataset: xr.Dataset, itinerary: xr.Dataset) -> Iterator[tupl
         if dataset.attrs.get(name, (value := found(dataset))) != value:
             yield name, f"the {name} of the visits is not the one written when the run was finished"
     if "kappa" in (results := dataset.attrs.get("results", {})):
-        now, then = estimate_run(dataset).kappa, results["kappa"]
-        if now != then and (now is None or then is None or abs(now - then) > KAPPA_TOLERANCE):
-            yield "kappa", f"kappa is {now} now, and was {then} when the run was finished"
+        yield from _against_results(dataset, results)
+
+
+def _against_results(dataset: xr.Dataset, results: dict[str, Any]) -> Iterator[tuple[str, str]]:
+    """Yield whether kappa is not what was written, hidden as it was then; no number while it is hidden."""
+    hidden: Blinding = dataset.attrs.get(HIDDEN, Blinding())
+    as_then = Blinding(str(results.get("blinding", OPEN)), hidden.offsets)
+    if as_then.hides and not hidden.offsets:
+        return  # the secret is not at hand
+    now, then = estimate_run(dataset.assign_attrs({HIDDEN: as_then})).kappa, results["kappa"]
+    if now != then and (now is None or then is None or abs(now - then) > KAPPA_TOLERANCE):
+        both = "not what it was" if hidden.hides else f"{now} now, and was {then}"
+        yield "kappa", f"kappa is {both} when the run was finished"
 
 
 def _against_itinerary(dataset: xr.Dataset, itinerary: xr.Dataset) -> Iterator[tuple[str, str]]:

@@ -18,7 +18,11 @@ from daq.estimate import (
     pool,
     residual,
 )
-from daq.estimate.peeking import t_mixture_multiplier
+from daq.estimate.blinding import GENESIS, chained
+from daq.estimate.peeking import hard_end_multiplier, t_mixture_multiplier
+from daq.estimate.pooling import leave_one_out
+from daq.estimate.positions import position_tests, sidak, sign_flips
+from daq.estimate.statement import statement
 from daq.openings import names
 
 
@@ -45,6 +49,37 @@ def test_the_band_for_a_given_prior() -> None:
 
     expected = [9.134533174479282, 4.079244504357698, 3.3898275133275413, 3.249093703720687]
     assert found == pytest.approx(expected, rel=1e-10)
+
+
+def test_the_band_of_very_many_pairs_is_that_of_a_known_variance() -> None:
+    """Derived: the normal mixture, sqrt((1 + 1/r)(ln(1 + r) + 2 ln 20)) with r = 8.211968 V / V_plan.
+
+    Wald-Robbins boundary with known variance; a million pairs leave 3e-4 at a twentieth of them.
+    """
+    million = 1_000_000
+    found = [anytime_multiplier(round(part * million), million) for part in (0.05, 0.1, 0.5, 1, 2, 10)]
+
+    expected = [4.665334403811492, 3.823218333037801, 3.078662538135512,
+                3.035122413028551, 3.064003115094519, 3.246310754613127]  # fmt: skip
+    assert found == pytest.approx(expected, rel=3e-4)
+    assert anytime_multiplier(million, million, 0.01) == pytest.approx(3.571606252443768, rel=1e-4)
+
+
+def test_a_boundary_of_the_sum_of_known_variance() -> None:
+    """Derived: sqrt((V + rho) ln((V + rho) / (rho alpha^2))) at V = 30, rho = 12 is 17.44298."""
+    pairs = 10**9
+    found = t_mixture_multiplier(pairs, pairs * 12 / 30, 0.05)
+
+    assert found * 30**0.5 == pytest.approx(17.442980125406915, rel=1e-6)
+
+
+def test_the_band_of_a_hard_end() -> None:
+    """Derived: P(sup |W| > 2.2414027) = 5 %, carried over to Student's t; nothing after the end."""
+    found = {pairs: hard_end_multiplier(pairs, 20) for pairs in (8, 10, 12, 20, 21)}
+
+    expected = {8: 6.326104378571082, 10: 4.483224317257981, 12: 3.6519016829820052,
+                20: 2.4334402110370066, 21: inf}  # fmt: skip
+    assert found == pytest.approx(expected, rel=1e-8)
 
 
 # Weighted epsilon and delta of eight pairs.
@@ -111,6 +146,32 @@ def test_an_offset_times_delta_shifts_kappa_by_the_offset() -> None:
 
     assert blinded["ABC"] == pytest.approx(9.014974151122699, rel=1e-12)
     assert residual(blinded, 1.0).kappa == pytest.approx(-0.0008376414795499895, abs=1e-12)
+
+
+def test_the_chain_of_a_blinding() -> None:
+    """Derived: SHA-256 over the hash before, a line feed and the event in canonical JSON."""
+    scope = {"scope": "campaign-2026a", "halfwidth": "0.001"}
+    commit = "ac6bc22d53e062cb8c40270c8764b4c984142e989c3a1ef2a5d58101dbcd33af"
+    digest = "14c829fbc7a5a33624db9c389f296ffad51368a367ca8eb2ce1bf68a2a9d53c9"
+    settings = "b79606fb3afea5bd1609ed40b622142f1c98125abcfe89a76a661b0e8e343910"
+    events = [
+        {"seq": 0, "event": "blind.open", "time": "2026-01-01T20:00:00Z", **scope, "commit": commit,
+         "key_id": "b778bab0e875325f"},
+        {"seq": 1, "event": "analysis.freeze", "time": "2026-01-09T08:00:00Z", "runs": ["r1", "r2"],
+         "config_sha256": settings},
+        {"seq": 2, "event": "blind.reveal", "time": "2026-01-09T09:00:00Z", **scope, "digest": digest},
+    ]  # fmt: skip
+
+    found, before = [], GENESIS
+    for event in events:
+        before = chained(before, event)
+        found.append(before)
+
+    assert found == [
+        "0ea345725478f4ebabffdf66a7a91db031033b2a01583845728b4125696417cc",
+        "c72134597b74fdddd685c3fea57d4b38a34a8c712996e8e69239e34e22ed0fec",
+        "273211ed1f191a2f8a99ea368484db94cbd8e8153a15eaf81e5be677afa34dae",
+    ]
 
 
 LABS = (
@@ -180,6 +241,48 @@ def test_a_cause_shared_by_nights(
 
     assert (found.value, found.se, found.q) == pytest.approx((value, se, q), rel=1e-9)
     assert found.weights == pytest.approx(weights, rel=1e-9)
+
+
+def test_each_night_against_the_others() -> None:
+    """Derived: mean of the others and distance, to the five digits given."""
+    found = leave_one_out(Y, S, [18] * 5)
+
+    expected = [(0.55831, 0.62137), (0.92611, -1.10426), (0.25605, 2.10331),
+                (0.89316, -0.61841), (0.91265, -1.3643)]  # fmt: skip
+    assert [(one.others, one.z) for one in found] == [pytest.approx(pair, abs=6e-6) for pair in expected]
+
+
+X = [
+    [0.86, -1.14, 5.91, -3.22, 1.32], [-0.29, -0.71, 2.73, -3.64, -1.97], [-0.23, 3.48, 0.78, 1.79, -3.73],
+    [-2.48, 1.94, -0.66, -0.13, 1.46], [-4.41, -2.4, 0.41, -3.09, -1.42], [-0.08, -1.33, 0.06, 0.08, 2.66],
+    [3.16, -0.79, -1.06, 1.78, 1.02], [0.5, -1.82, 1.89, 1.74, -3.57],
+]  # fmt: skip
+
+
+def test_eight_pairs_at_five_positions_turned_over_every_way() -> None:
+    """Derived: all 128 ways, weights 1."""
+    found = position_tests(np.array(X), np.ones(5), np.arange(5.0), sign_flips(8, np.random.default_rng(0)))
+
+    assert (found.chi2_p, found.largest_p, found.fourier_p) == (0.6171875, 0.578125, 0.6796875)
+    assert found.largest_t == pytest.approx(1.5762361331703605, rel=1e-9)
+    assert found.largest_sidak_p == pytest.approx(0.5792321150064318, rel=1e-9)
+
+
+def test_the_largest_of_many_positions() -> None:
+    """Derived: 1 - (1 - p)^41 of the two-sided normal p of 3.2 and 2.5."""
+    found = [sidak(p, 41) for p in (0.001374275874980872, 0.012419330651552318)]
+
+    assert found == pytest.approx([0.054823941375501506, 0.400932439025494], rel=1e-6)
+
+
+def test_a_limit_as_it_is_printed() -> None:
+    """Derived: limit rounded up, 90 % interval, two-sided 95 % interval, median limit of a null."""
+    found = statement(4.1e-5, 8.3e-5, 18, [(3.0e-5, None), (1.2e-5, 30)])
+
+    assert found.limit == 1.94e-4
+    assert found.interval_90 == pytest.approx((-1.11e-4, 1.93e-4), abs=5e-7)
+    assert found.interval_95 == pytest.approx((-1.43e-4, 2.25e-4), abs=5e-7)
+    assert found.sensitivity == pytest.approx((0.674 + 1.711) * 8.9067e-5, rel=1e-3)
 
 
 def test_a_limit_with_two_systematic_causes() -> None:

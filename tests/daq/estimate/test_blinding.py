@@ -3,8 +3,8 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from daq.estimate import Running, blind_offset, shown
-from tests.daq.estimate.nights import plan
+from daq.estimate import Blinding, blind_offset
+from daq.estimate.blinding import GENESIS, STATES, blind_digest, chained, commitment, revealed_offset
 
 SECRET = bytes(range(32))
 
@@ -43,9 +43,27 @@ def test_what_could_not_be_checked_later_is_refused(
         blind_offset(secret, scope, "ABC", halfwidth)
 
 
-def test_an_open_run_is_shown_and_any_other_is_not() -> None:
-    estimate = Running(plan()).estimate()
+def test_a_published_digest_gives_offset_and_commitment_without_the_secret() -> None:
+    offset, promised = blind_offset(SECRET, "campaign", "ABC", "0.001")
 
-    assert shown(estimate, "open") is estimate
-    with pytest.raises(ValueError, match="open runs only"):
-        shown(estimate, "frozen")
+    digest = blind_digest(SECRET, "campaign", "ABC", "0.001")
+
+    assert revealed_offset(digest, "0.001") == offset
+    assert commitment(digest, "campaign", "ABC", "0.001") == promised
+    assert commitment(digest, "campaign", "ABC", "0.01") != promised
+
+
+@pytest.mark.parametrize("state", [*STATES, "", "OPEN", "None"])
+def test_only_an_open_and_a_revealed_run_may_be_seen(state: str) -> None:
+    assert Blinding(state).hides == (state not in ("open", "revealed"))
+
+
+def test_an_offset_is_in_no_text_that_python_writes_of_a_blinding() -> None:
+    assert "0.00123" not in repr(Blinding("blinded", {"ABC": 0.00123}))
+
+
+def test_an_event_changed_later_breaks_the_chain() -> None:
+    first = {"seq": 0, "event": "blind.open", "scope": "ä"}
+
+    assert chained(GENESIS, first) != chained(GENESIS, first | {"scope": "b"})
+    assert chained(GENESIS, dict(reversed(first.items()))) == chained(GENESIS, first)

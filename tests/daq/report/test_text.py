@@ -30,6 +30,16 @@ WHOLE = {
     "digest": "abc",
     "epsilon": -1.2,
     "epsilon_se": 7.9,
+    "blinding": "open",
+    "stop": {
+        "kind": "planned",
+        "reason": "complete",
+        "who": "the plan",
+        "pairs": 19,
+        "kappa_visible": True,
+        "band": "once",
+        "remark": "",
+    },
 }
 
 

@@ -1,0 +1,44 @@
+"""Ending: which end a run has come to, looked for at the edge of every pair, and the record of it."""
+
+from __future__ import annotations
+
+import getpass
+from dataclasses import asdict
+from typing import Any
+
+from daq.estimate import Running
+from daq.estimate.stopping import (
+    BROKEN,
+    BY_HAND,
+    END_TIME,
+    EXCESS_FROM_PAIR,
+    FUTILITY,
+    GOAL,
+    Stopping,
+    due,
+    stop,
+)
+
+REASONS = {
+    GOAL: "the goal of the error bar is met",
+    FUTILITY: "stopped for futility: it would hardly have found a kappa other than zero",
+    END_TIME: "the time it was booked for is over",
+}
+
+
+def due_now(running: Running, stopping: Stopping, pair: int) -> str:
+    """Return which kind of end is due when so many pairs are through, the last stand still being counted."""
+    if pair < EXCESS_FROM_PAIR or stopping == Stopping():
+        return ""
+    pairs = running.estimate().pairs
+    if pairs < EXCESS_FROM_PAIR:
+        return ""
+    return due(stopping, running.after(pairs), running.after(EXCESS_FROM_PAIR)["excess"], pair)
+
+
+def record_of_end(ended: str, kind: str, who: str, pairs: int, kappa_visible: bool) -> dict[str, Any]:
+    """Return what the archive says of how a run ended."""
+    person = kind in (BY_HAND, BROKEN)
+    return asdict(
+        stop(kind, ended, (who or getpass.getuser()) if person else "the plan", pairs, kappa_visible)
+    )
