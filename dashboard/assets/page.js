@@ -51,7 +51,7 @@
   const plainFetch = window.fetch.bind(window);
   window.fetch = async (...asked) => {
     const answer = await plainFetch(...asked);
-    if (answer.status === 401) location.reload();
+    if (answer.status === 401) { location.reload(); return new Promise(() => {}); } // the form comes instead
     if (answer.ok) { heard = Date.now(); showContact(); }
     return answer;
   };
