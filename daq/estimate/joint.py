@@ -13,6 +13,7 @@ ALTERNATIONS = 3  # of the fit and the likeliest walk; the second changes kappa 
 NEWTON_STEPS = 30
 SETTLED = 1e-9  # of the log rate
 TOLERANCE = 1e-12  # of the conjugate gradient, relative, in the preconditioned norm
+ROUGH = 1e-4, 1e-5  # both, while the walk is still looked for: its size needs no more
 SOLVER_STEPS = 5000
 
 
@@ -68,11 +69,11 @@ def fit(series: Series) -> Fit:
     """
     level, work = series.start.copy(), 0
     per_s = 0.0
-    for _ in range(ALTERNATIONS):
+    for left in reversed(range(ALTERNATIONS)):
         mean, weights = _expected(series, level)
         seen = level + np.divide(series.value - mean, mean, out=np.zeros_like(mean), where=weights > 0)
         per_s = likeliest_per_s(weights, seen, series.step_s)
-        level, steps = _settle(series, level, per_s)
+        level, steps = _settle(series, level, per_s, ROUGH if left else (SETTLED, TOLERANCE))
         work += steps
     level = level - np.log(np.sum(series.exposure * np.exp(level)) / series.exposure.sum())
     return Fit(_rates(series, level, np.ones(len(level), bool)), level, per_s, work)
@@ -122,7 +123,7 @@ class Schur:
         inner = self.walk.solve(self.weights * by_cell[self.cell])
         return np.asarray(self.diagonal * by_cell - self.gather(self.weights * inner))
 
-    def solve(self, right: FloatArray) -> tuple[FloatArray, int]:
+    def solve(self, right: FloatArray, tolerance: float = TOLERANCE) -> tuple[FloatArray, int]:
         """Return the solution orthogonal to the common factor, and the steps that it took."""
         informed = self.diagonal > 0
         inverse = np.divide(1.0, self.diagonal, out=np.zeros_like(right), where=informed)
@@ -134,27 +135,32 @@ class Schur:
             scaled = inverse * rest
             fresh = float(rest @ scaled)
             first = first or fresh
-            if fresh <= TOLERANCE**2 * first:
+            if fresh <= tolerance**2 * first:
                 return solution, step
             direction = scaled + (fresh / size if size else 0.0) * direction
             image, size = self.times(direction), fresh
             along = fresh / float(direction @ image)
             solution, rest = solution + along * direction, rest - along * image
+            rest -= self.diagonal * (rest.sum() / total)  # rounding brings the common factor back
         raise UnsettledError(f"the joint fit did not settle within {SOLVER_STEPS} steps")
 
 
-def _settle(series: Series, level: FloatArray, per_s: float) -> tuple[FloatArray, int]:
-    """Return the likeliest level for a walk, and the steps of the conjugate gradient."""
+def _settle(
+    series: Series, level: FloatArray, per_s: float, within: tuple[float, float]
+) -> tuple[FloatArray, int]:
+    """Return the likeliest level for a walk, to so much of it and of each solution, and the steps it took."""
     work, every = 0, np.ones(len(level), bool)
     for _ in range(NEWTON_STEPS):
-        step, steps = _step(series, level, per_s, every)
+        step, steps = _step(series, level, per_s, every, within[1])
         level, work = level + np.clip(step, -1.0, 1.0), work + steps
-        if np.abs(step).max(initial=0.0) < SETTLED:
+        if np.abs(step).max(initial=0.0) < within[0]:
             return level, work
     raise UnsettledError(f"the joint fit did not settle within {NEWTON_STEPS} steps")
 
 
-def _step(series: Series, level: FloatArray, per_s: float, kept: BoolArray) -> tuple[FloatArray, int]:
+def _step(
+    series: Series, level: FloatArray, per_s: float, kept: BoolArray, tolerance: float = TOLERANCE
+) -> tuple[FloatArray, int]:
     """Return Newton's step of the level, the rates eliminated, and the steps that solving it took."""
     mean, weights = _expected(series, level)
     weights = np.where(kept, weights, 0.0)
@@ -162,7 +168,7 @@ def _step(series: Series, level: FloatArray, per_s: float, kept: BoolArray) -> t
     matrix = walk(weights, series.step_s, per_s)
     schur = Schur.of(series, weights, matrix)
     alone = matrix.solve(rest - matrix.pull(level))
-    log_rates, steps = schur.solve(schur.gather(rest - weights * alone))
+    log_rates, steps = schur.solve(schur.gather(rest - weights * alone), tolerance)
     return alone - matrix.solve(weights * log_rates[series.cell]), steps
 
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -24,6 +25,7 @@ from daq.estimate.whole import Estimate, estimate_visits
 from daq.records import EXCLUDING, Reading
 
 HISTORY_POINTS = 400  # the page draws no more
+FITS_AT_ONCE = 40  # earlier ends of an irregular run that are fitted again when a run goes on
 
 
 class Running:
@@ -78,12 +80,9 @@ class Running:
         complete = set(complete_pairs(self._visits, self._plan).tolist())
         if self._settled is None or self._touched & complete:
             before, self._settled = self._settled, settle(self._visits, self._plan)
-            if (
-                self._settled.strength is not None
-                or before is None
-                or before.estimator != self._settled.estimator
-            ):
-                self._past.clear()
+            changed = before is None or before.estimator != self._settled.estimator
+            if changed and self._settled.strength is None:
+                self._past.clear()  # what a fit told then stays: it would be long work to do again
         self._touched.clear()
         return self._settled
 
@@ -114,11 +113,13 @@ class Running:
         stride = max(1, -(-len(pairs) // HISTORY_POINTS))
         ends = sorted({*range(stride, len(pairs) + 1, stride), len(pairs)} - {0})
         settled = self._settle()
-        if any(end not in self._past for end in ends):
+        missing = [end for end in ends if end not in self._past]
+        if missing and settled.strength is not None:
+            self._past |= {end: self._fitted_after(pairs, end, settled, missing) for end in missing}
+        elif missing:
             sums = Sums(*self._columns())
-            self._past = {end: self._past.get(end) or _known_after(sums, end, self._plan) for end in ends}
-            if settled.strength is not None:
-                _without_bands(self._past, shown_numbers(settled.numbers, self._plan.blinding))
+            self._past |= {end: _known_after(sums, end, self._plan) for end in missing}
+        self._past = {end: self._past[end] for end in ends}
         first_ns = self._first_ns or 0
         columns: dict[str, list[float | None]] = {
             "hours": [(self._closed_ns[pairs[end - 1]] - first_ns) / 3.6e12 for end in ends]
@@ -129,6 +130,18 @@ class Running:
         """Return value, live time and variance of the complete pairs, as the settled estimator takes them."""
         sums = sums_of(self._visits, self._plan, taking(self._settle(), self._visits, self._plan))
         return sums.value, sums.live, sums.variance
+
+    def _fitted_after(
+        self, pairs: list[int], end: int, settled: Settled, missing: list[int]
+    ) -> dict[str, float | None]:
+        """Return kappa and bands of a fit to the first pairs; undefined where there are too many to fit."""
+        if end == len(pairs):
+            return _bands(shown_numbers(settled.numbers, self._plan.blinding))
+        if len(missing) > FITS_AT_ONCE:
+            return dict.fromkeys(_BANDS)
+        then = np.isin(stand_places(self._plan)[0], pairs[:end])
+        visits = replace(self._visits, done=self._visits.done & then)
+        return _bands(shown_numbers(settle(visits, self._plan).numbers, self._plan.blinding))
 
     def _take_in(self, stand: int, attempt: int, readings: dict[int, Reading]) -> None:
         in_order = [readings[visit] for visit in sorted(readings)]
@@ -161,13 +174,6 @@ def _known_after(sums: Sums, pairs: int, plan: Plan) -> dict[str, float | None]:
     """Return kappa and both bands as they stood after so many pairs."""
     then = Sums(sums.value[:pairs], sums.live[:pairs], sums.variance[:pairs])
     return _bands(shown_numbers(headline(veiled(tables_of(then), plan), pairs, plan), plan.blinding))
-
-
-def _without_bands(past: dict[int, dict[str, float | None]], numbers: Mapping[str, Any]) -> None:
-    """Take the bands of earlier ends away, which a fitted source does not tell; the last one is refitted."""
-    for end in past:
-        past[end] |= dict.fromkeys(_BANDS[1:])
-    past[max(past)] = _bands(numbers)
 
 
 def _bands(numbers: Mapping[str, Any]) -> dict[str, float | None]:

@@ -239,19 +239,23 @@ def test_kappa_with_the_excluded_stands_is_told_beside() -> None:
     assert every.kappa_with_excluded is None and every.excluded_change_se is None
 
 
-def test_history_of_a_joint_fit_ends_with_the_refitted_bar() -> None:
+def test_history_of_a_joint_fit_is_what_was_known_after_each_pair() -> None:
     generator = np.random.default_rng(15)
     of = shuffled(PLAN, generator)
-    running = Running(of)
-    for row in readings(of, generator, walking(of, generator)):
-        running.add(row)
+    rows = readings(of, generator, walking(of, generator))
+    known, running = [], Running(of)
+    for start in range(0, len(rows), 64):  # a pair
+        for row in rows[start : start + 64]:
+            running.add(row)
+        found = running.estimate()
+        known.append((found.kappa, *(found.interval_95 or (None, None))))
 
-    history, found = running.history(), running.estimate()
+    later = run(of, rows).history()
 
-    assert found.interval_95 is not None and found.kappa is not None
-    assert history["kappa"][-1] == pytest.approx(found.kappa, rel=1e-9)
-    assert (history["interval_low"][-1], history["interval_high"][-1]) == found.interval_95
-    assert history["interval_low"][:-1] == [None] * 7
+    for history in (running.history(), later):
+        told = zip(*(history[name] for name in ("kappa", "interval_low", "interval_high")), strict=True)
+        assert agree([list(one) for one in told], [list(one) for one in known])
+    assert known[0][1] is None and all(low is not None for _, low, _ in known[1:])
 
 
 def test_the_fit_is_not_made_again_before_another_pair_is_complete() -> None:

@@ -8,9 +8,13 @@ import pytest
 from scipy.linalg import block_diag, cho_factor, cho_solve
 
 from daq.estimate.arrays import FloatArray
-from daq.estimate.irregular import _blocks
+from daq.estimate.dataset import rows_of_dataset
+from daq.estimate.irregular import _blocks, series_of
 from daq.estimate.joint import Fit, Series, fit, rates_without, standard_error
+from daq.estimate.sensitivity import taken_visits
+from daq.estimate.visits import visits_of
 from daq.estimate.walk import likeliest_per_s, walk
+from tests.benchmarks.bench_estimate import irregular_night
 
 STEP_S = 3.0
 RATES = np.array([4e3, 9e3, 2e4, 3e4])  # counts of a visit in four cells
@@ -101,6 +105,17 @@ def test_many_cells_under_a_wild_walk_are_solved_to_the_last_digits() -> None:
     assert told == pytest.approx(np.sqrt(right @ np.linalg.solve(matrix, right)), rel=1e-9)
     # The noise of a visit is 45 counts and more.
     assert max(np.abs(slope).max(), np.abs(design.T @ (value - mean)).max()) < 1e-4
+
+
+def test_a_source_that_walks_as_far_as_it_is_strong_in_an_hour_settles() -> None:
+    of, archive = irregular_night((41, 38), 1.0)
+    visits = visits_of(rows_of_dataset(archive), of)
+    taken = taken_visits(visits, of, visits.good)
+    assert taken is not None
+
+    found = fit(series_of(visits, of, taken))
+
+    assert found.per_s * 3600 == pytest.approx(1.0, rel=4 * np.sqrt(2 / len(taken.visit)))
 
 
 def test_leaving_a_block_out_is_the_whole_newton_fit_without_it() -> None:
