@@ -5,6 +5,8 @@ from __future__ import annotations
 import argparse
 import getpass
 import sys
+import threading
+import time
 from contextlib import ExitStack
 from datetime import UTC, datetime
 from pathlib import Path
@@ -12,15 +14,20 @@ from pathlib import Path
 from daq.cli.answer import Answer
 from daq.cli.night import interrupts, show_page
 from daq.cli.plan import wishes
+from daq.errors import DaqError, DescriptionError
 from daq.service.arming import checks, confirm
 from daq.service.bookings import Booking, bookings, cancel
 from daq.service.bookings import book as booked
 from daq.service.load import load
-from daq.service.mail import settings_of
+from daq.service.messages import by_apprise
 from daq.service.owner import owned
 from daq.service.serve import serve as served
+from daq.service.settings import settings_of, with_secrets
+from daq.service.silence import Listener, listening
 from daq.storage.lab import there
 from daq.storage.lab_book import select
+
+LISTEN_EVERY_S = 0.5
 
 
 def serve(arguments: argparse.Namespace) -> Answer:
@@ -47,19 +54,45 @@ def _page_options(arguments: argparse.Namespace) -> list[str]:
     return [*options, "--behind-proxy"] if arguments.behind_proxy else options
 
 
+def listen(arguments: argparse.Namespace) -> Answer:
+    """On a second machine: speak up when no heartbeat has come for some time, until Ctrl-C."""
+    token = with_secrets(arguments.token)
+    if not token and arguments.host not in ("127.0.0.1", "::1", "localhost"):
+        text = f"--host {arguments.host}: off this computer a heartbeat needs a token: --token '${{NAME}}'."
+        raise DescriptionError((text,))
+    addresses = [with_secrets(address) for address in arguments.to]
+    listener = Listener(60 * arguments.after_min, time.monotonic())
+    try:
+        server = listening(arguments.host, arguments.port, token, listener, time.monotonic)
+    except OSError as error:
+        raise DaqError(f"cannot listen ({error})", where=f"{arguments.host}:{arguments.port}") from error
+    threading.Thread(target=server.serve_forever, daemon=True).start()
+    print(f"listening at http://{arguments.host}:{server.server_address[1]}/", file=sys.stderr, flush=True)
+    with interrupts() as asked, server:
+        while not asked.leave:
+            time.sleep(LISTEN_EVERY_S)
+            said = listener.look(time.monotonic())
+            if said:
+                print(f"{datetime.now(UTC):%Y-%m-%d %H:%M} UTC  {said}", file=sys.stderr, flush=True)
+                failed = by_apprise(addresses, "tercet: heartbeat", said) if addresses else ""
+                print(failed, end="\n" if failed else "", file=sys.stderr, flush=True)
+        server.shutdown()
+    return Answer(0, {"silent": listener.silent}, [])
+
+
 def arm(arguments: argparse.Namespace) -> Answer:
     """Check everything, ask the cautions one by one, and arm one start within 24 hours."""
     loaded = load(arguments.file)
     if loaded.rig.simulated:
         text = "Every device of this rig is simulated: it needs no arming."
         return Answer(0, {"ok": True, "armed": False, "problems": []}, [text])
-    mail = settings_of(arguments.lab).mail
-    found = checks(loaded, arguments.lab, mail)
+    messages = settings_of(arguments.lab).messages
+    found = checks(loaded, arguments.lab, messages)
     for one in found:
         print(f"{'ok ' if one.ok else 'NOT'}  {one.what}: {one.seen}", file=sys.stderr)
     problems = [f"{one.what}: {one.seen}" for one in found if not one.ok]
-    if not problems and mail is not None:
-        reason = confirm(loaded, arguments.lab, mail, arguments.by or getpass.getuser(), _typed)
+    if not problems and messages is not None:
+        reason = confirm(loaded, arguments.lab, messages, arguments.by or getpass.getuser(), _typed)
         problems = [reason] if reason else []
     if problems:
         return Answer(1, {"ok": False, "armed": False, "problems": problems}, ["Not armed.", *problems])

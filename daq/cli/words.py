@@ -136,6 +136,16 @@ def _service_words(commands: Any) -> None:
     for one in (serve, book, listing, arm):
         one.add_argument("lab", type=Path, metavar="LAB", help="the lab folder")
     _booking_words(book)
+    silence = "on a second machine: speak up when the heartbeat of a service stops"
+    example = "tercet listen --host 0.0.0.0 --token '${HEARTBEAT}' --to 'mailto://...'"
+    listen = _add(commands, "listen", "service:listen", silence, example)
+    listen.add_argument("--host", default="127.0.0.1", help="address to listen on (this computer alone)")
+    listen.add_argument("--port", type=int, default=8348, help="port to listen on; 0 takes a free one (8348)")
+    listen.add_argument("--after-min", type=float, default=10.0, metavar="MIN", help="speak up after (10)")
+    secret = "the word that a heartbeat has to bring, as ${NAME} from the environment"
+    listen.add_argument("--token", default="", help=secret)
+    where = "where messages go, as the library apprise writes it (repeatable)"
+    listen.add_argument("--to", action="append", default=[], metavar="ADDRESS", help=where)
     arm.add_argument("file", type=Path, metavar="FILE", help="a measurement (TOML)")
     arm.add_argument("--by", metavar="NAME", help="who arms (your login name)")
     listing.add_argument("--cancel", type=int, metavar="N", help="cancel booking N")

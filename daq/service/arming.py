@@ -17,8 +17,9 @@ from daq.devices.registry import open_devices
 from daq.errors import DaqError
 from daq.ports import Devices
 from daq.service.load import NO_WISHES, Loaded, load_run
-from daq.service.mail import Mail, post, send_what_waits
+from daq.service.messages import TEST, Send, by_apprise, post, send_urgent
 from daq.service.requests import utc_now
+from daq.service.settings import Messages
 from daq.storage.lab import runs
 from daq.storage.lab_book import insert, select, update
 from daq.storage.reader import read_meta
@@ -46,22 +47,25 @@ class Check:
     seen: str
 
 
-def checks(loaded: Loaded, lab: Path, mail: Mail | None) -> list[Check]:
+def checks(loaded: Loaded, lab: Path, messages: Messages | None) -> list[Check]:
     """Return the checks that need no person, all of them, also when one fails."""
     return [
         *_device_checks(loaded),
         _disk(lab, len(loaded.itinerary())),
         _clock(datetime.now(UTC)),
         _rehearsed(loaded, lab),
-        Check(
-            "messages",
-            mail is not None,
-            f"mail to {', '.join(mail.to)}" if mail else "lab.toml has no [mail]",
-        ),
+        _messages(messages),
     ]
 
 
-def confirm(loaded: Loaded, lab: Path, mail: Mail, who: str, answer: Callable[[str], str]) -> str | None:
+def confirm(
+    loaded: Loaded,
+    lab: Path,
+    messages: Messages,
+    who: str,
+    answer: Callable[[str], str],
+    send: Send = by_apprise,
+) -> str | None:
     """Ask the cautions one by one, the code of a test message and the run's name; arm when all are given.
 
     Returns why it did not arm, or None when it did.
@@ -70,8 +74,8 @@ def confirm(loaded: Loaded, lab: Path, mail: Mail, who: str, answer: Callable[[s
         if answer(f"{number}. {caution} Type yes: ").strip().lower() != "yes":
             return f"caution {number} was not confirmed"
     code = secrets.token_hex(3)
-    post(lab, "test", "tercet test message", f"The code is {code}. Type it at the bench.")
-    send_what_waits(lab, mail)
+    post(lab, TEST, "tercet test message", f"The code is {code}. Type it at the bench.")
+    send_urgent(lab, messages, datetime.now(UTC), send)
     if answer("Code of the test message: ").strip() != code:
         return "the code is not the one that was sent"
     if (
@@ -153,9 +157,10 @@ def _clock(now: datetime) -> Check:
     return Check("clock", now > EARLIEST, f"{now:%Y-%m-%d %H:%M} UTC")
 
 
-def _messages(mail: Mail | None) -> Check:
-    seen = "lab.toml has no [mail]" if mail is None else f"mail to {', '.join(mail.to)}"
-    return Check("messages", mail is not None, seen)
+def _messages(messages: Messages | None) -> Check:
+    many = 0 if messages is None else len(messages.urgent)
+    seen = f"addresses for urgent messages: {many}" if many else "lab.toml has no [messages]"
+    return Check("messages", bool(many), seen)
 
 
 def _rehearsed(loaded: Loaded, lab: Path) -> Check:

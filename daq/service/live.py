@@ -41,8 +41,10 @@ class Live:
         clock: Clock,
         room: Callable[[], str] = lambda: "",
         restarts: int = 0,
+        outlet: Callable[[Mapping[str, Any]], None] = lambda feed: None,
     ) -> None:
         self._folder, self._meta, self._itinerary, self._clock = folder, meta, itinerary, clock
+        self._outlet = outlet
         self._known = known_of(meta)
         self._blinding = Blinding(str(meta["blinding"]))
         self._mean_hz = float(itinerary.rates_hz.mean())
@@ -53,7 +55,7 @@ class Live:
         self._log: deque[dict[str, str]] = deque(maxlen=LOG_LINES)
         self._last: Reading | None = None
         self._held: tuple[Held, str] | None = None  # and since when, UTC
-        self._muted_until_utc: str | None = None
+        self._muted_until_utc_ns = 0
 
     @property
     def stands(self) -> int:
@@ -96,7 +98,12 @@ class Live:
 
     def mute(self, until_utc_ns: int) -> None:
         """Say until when nobody wants to be called."""
-        self._muted_until_utc = stamp(until_utc_ns)
+        self._muted_until_utc_ns = until_utc_ns
+
+    @property
+    def muted(self) -> bool:
+        """Whether nobody wants to be called now."""
+        return self._clock.utc_ns() < self._muted_until_utc_ns
 
     def write(self, state: str, running: Running, ended: str | None = None, *, now: bool = False) -> None:
         """Write the feed, unless the last one is younger than a second."""
@@ -104,7 +111,9 @@ class Live:
             return
         self._written_s = time.monotonic()
         try:
-            write_feed(self._folder, self._feed(state, running, ended))
+            feed = self._feed(state, running, ended)
+            write_feed(self._folder, feed)
+            self._outlet(feed)
         except StorageError as error:
             log.error("the page is not told: %s", error)
 
@@ -133,7 +142,7 @@ class Live:
             "warnings": [_told(one) for one in self.watcher.standing],
             "holding": self._holding(),
             "in_doubt": any(one.says.in_doubt for one in self.watcher.standing),
-            "muted_until_utc": self._muted_until_utc,
+            "muted_until_utc": stamp(self._muted_until_utc_ns) if self.muted else None,
             "log": list(self._log),
             "ended": None if ended is None else {"reason": ended, "utc": stamp(self._clock.utc_ns())},
             "truth_kappa": None if self._blinding.hides else self._meta.get("truth_kappa"),

@@ -12,6 +12,7 @@ from typing import Any
 from apscheduler.schedulers.background import BackgroundScheduler
 
 from daq.errors import DaqError
+from daq.itinerary import Itinerary
 from daq.service.arming import use_arming
 from daq.service.asked import Asked
 from daq.service.bookings import (
@@ -27,7 +28,8 @@ from daq.service.bookings import (
 from daq.service.calendar import missed, starts
 from daq.service.desk import answer_desk, tell_desk
 from daq.service.load import Loaded, load
-from daq.service.mail import post, send_what_waits, settings_of
+from daq.service.messages import NOTE, post
+from daq.service.outlets import Outlets
 from daq.service.requests import current_run
 from daq.service.start import Wanted, begin, resume
 from daq.storage.feed import read_feed
@@ -37,7 +39,6 @@ from daq.storage.reader import read_meta
 log = logging.getLogger(__name__)
 
 LOOK_EVERY_S = 2.0
-SEND_EVERY_S = 10.0
 Due = tuple[Booking, datetime]
 
 
@@ -50,20 +51,21 @@ def serve(lab: Path, asked: Asked, say: Callable[[str], None] = lambda text: Non
     due: queue.Queue[Due] = queue.Queue()
     scheduler = BackgroundScheduler(timezone=UTC)
     scheduler.add_job(_look, "interval", seconds=LOOK_EVERY_S, args=(lab, scheduler, due), max_instances=1)
-    scheduler.add_job(_send, "interval", seconds=SEND_EVERY_S, args=(lab,))
+    outlets = Outlets(lab, scheduler)
     scheduler.add_job(_desk, "interval", seconds=LOOK_EVERY_S, args=(lab,), max_instances=1)
     scheduler.start()
+    outlets.ready()
     try:
         _desk(lab)
-        done["resumed"] = _go_on(lab, asked, say)
+        done["resumed"] = _go_on(lab, asked, outlets, say)
         _look(lab, scheduler, due)
         if not asked.leave:
             say(_waiting(lab))
-        done["started"] = _start_what_is_due(lab, asked, due, say)
+        done["started"] = _start_what_is_due(lab, asked, due, outlets, say)
         return done
     finally:
         scheduler.shutdown(wait=True)
-        _send(lab)
+        outlets.send()
 
 
 def _waiting(lab: Path) -> str:
@@ -76,26 +78,32 @@ def _waiting(lab: Path) -> str:
     return f"next start {local:%Y-%m-%d %H:%M} {one.times.zone.key}: {one.file.name} (booking {one.number})"
 
 
-def _start_what_is_due(lab: Path, asked: Asked, due: queue.Queue[Due], say: Callable[[str], None]) -> int:
+def _start_what_is_due(
+    lab: Path, asked: Asked, due: queue.Queue[Due], outlets: Outlets, say: Callable[[str], None]
+) -> int:
     started = 0
     while not asked.leave:
+        outlets.alive()
         try:
             booking, when = due.get(timeout=0.2)
         except queue.Empty:
             continue
         if not dealt_with(lab, booking, when):
-            started += _start(lab, asked, booking, when, say)
+            started += _start(lab, asked, booking, when, outlets, say)
     return started
 
 
-def _start(lab: Path, asked: Asked, booking: Booking, due: datetime, say: Callable[[str], None]) -> bool:
+def _start(
+    lab: Path, asked: Asked, booking: Booking, due: datetime, outlets: Outlets, say: Callable[[str], None]
+) -> bool:
     """Start a booked run, or say why not; return whether it was started."""
     begun = list[str]()
 
-    def begins(folder: Path, _: object) -> None:
+    def begins(folder: Path, itinerary: Itinerary) -> None:
         # Written down before the first visit: whatever happens from here on, it is not started twice.
         note_start(lab, booking, due, GOING_ON, folder.name)
         begun.append(folder.name)
+        outlets.begins(itinerary)
         say(f"booking {booking.number}: {folder.name} starts{_virtually(loaded)}")
 
     reason = _refusal(booking, due)
@@ -111,6 +119,7 @@ def _start(lab: Path, asked: Asked, booking: Booking, due: datetime, say: Callab
             asked=asked,
             on_start=begins,
             until=end_of(booking, datetime.now(UTC)),
+            **outlets.wishes(),
         )
         _, ended = begin(loaded, lab, wanted)
     except DaqError as error:
@@ -139,7 +148,7 @@ def _tell(
     say(f"booking {booking.number}: {run or booking.file.name}: {outcome}")
     post(
         lab,
-        "start",
+        NOTE,
         f"{booking.file.stem}: {outcome}",
         f"Booking {booking.number}, due {due}: {outcome}. {run or ''}",
     )
@@ -150,14 +159,6 @@ def _refusal(booking: Booking, due: datetime) -> str:
     if missed(booking.times, due, datetime.now(UTC)):
         return f"more than {booking.times.late_s:g} s late"
     return ""
-
-
-def _send(lab: Path) -> None:
-    """Send the messages that wait; what is wrong with the settings goes to the log, and nothing is lost."""
-    try:
-        send_what_waits(lab, settings_of(lab).mail)
-    except DaqError as error:
-        log.error("%s", error)
 
 
 def _desk(lab: Path) -> None:
@@ -195,7 +196,7 @@ def _next(lab: Path, booking: Booking) -> datetime | None:
     return next((when for when in starts(booking.times, after) if not dealt_with(lab, booking, when)), None)
 
 
-def _go_on(lab: Path, asked: Asked, say: Callable[[str], None]) -> int:
+def _go_on(lab: Path, asked: Asked, outlets: Outlets, say: Callable[[str], None]) -> int:
     """Go on with the run written last when it was broken off without a goodbye; return whether it did.
 
     A run that a person or a fault has ended is left to a person.
@@ -207,14 +208,20 @@ def _go_on(lab: Path, asked: Asked, say: Callable[[str], None]) -> int:
     started = start_of(lab, folder.name)
     try:
         meta = read_meta(folder)
-        wanted = Wanted("tcp" if meta["clock"] == "virtual" else "", asked=asked, until=_until(lab, started))
+        wanted = Wanted(
+            "tcp" if meta["clock"] == "virtual" else "",
+            asked=asked,
+            on_start=lambda _, itinerary: outlets.begins(itinerary),
+            until=_until(lab, started),
+            **outlets.wishes(),
+        )
         _, ended = resume(folder, wanted)
     except DaqError as error:
         ended = f"could not be gone on with: {error}"
     say(f"{folder.name}: {ended}")
     if started is not None:
         note_outcome(lab, folder.name, ended)
-    post(lab, "start", f"{folder.name}: {ended}", f"{folder.name} was broken off and gone on with: {ended}.")
+    post(lab, NOTE, f"{folder.name}: {ended}", f"{folder.name} was broken off and gone on with: {ended}.")
     return 1
 
 

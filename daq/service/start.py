@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import getpass
 import time
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
 from contextlib import ExitStack
 from dataclasses import dataclass, field, replace
 from datetime import datetime
@@ -55,7 +55,8 @@ class Wanted:
     asked: Asked = field(default_factory=Asked)
     on_start: Callable[[Path, Itinerary], None] = lambda folder, itinerary: None
     on_visit: Callable[[Reading], None] = lambda reading: None
-    on_warning: Callable[[Path, Change], None] = lambda folder, change: None
+    on_warning: Callable[[str, Change, bool], None] = lambda run, change, quietly: None
+    on_feed: Callable[[Mapping[str, Any]], None] = lambda feed: None
     alive: Callable[[], None] = lambda: None
     until: datetime | None = None
 
@@ -200,6 +201,15 @@ def _night(
     plan = replace(plan_of(itinerary, loaded.measurement), blinding=blinding)
     ends = loaded.measurement.stop
     rules = rules_of(loaded.measurement.quality.model_dump())
+    live = Live(
+        folder,
+        archive.meta,
+        itinerary,
+        clock,
+        lambda: room_warning(folder, len(itinerary)),
+        _restarts(folder, clock),
+        wanted.on_feed,
+    )
     return Night(
         folder=folder,
         itinerary=itinerary,
@@ -210,19 +220,12 @@ def _night(
         judge=Judge(plan, rules, itinerary.rates_hz),
         stopping=Stopping(plan.goal_se if ends.goal else None, ends.futility),
         blinding=blinding,
-        live=Live(
-            folder,
-            archive.meta,
-            itinerary,
-            clock,
-            lambda: room_warning(folder, len(itinerary)),
-            _restarts(folder, clock),
-        ),
+        live=live,
         log=RunLog(folder),
         asked=wanted.asked,
         bench=bench,
         on_visit=wanted.on_visit,
-        on_warning=lambda change: wanted.on_warning(folder, change),
+        on_warning=lambda change: wanted.on_warning(folder.name, change, bench is not None or live.muted),
         alive=wanted.alive,
         shortage=lambda: shortage(folder),
         exhausted=lambda: exhausted(folder),

@@ -21,6 +21,14 @@ def write_feed(folder: Path, feed: Mapping[str, Any], name: str = FEED) -> None:
         passing.replace(folder / name)
 
 
+def replace_text(path: Path, text: str) -> None:
+    """Replace a text file, so that a reader never sees half of it."""
+    passing = path.with_name(f"{path.name}.partial")
+    with rim(path):
+        passing.write_text(text)
+        passing.replace(path)
+
+
 def read_feed(folder: Path, name: str = FEED) -> dict[str, Any] | None:
     """Return the feed of a run or lab, or None where there is none that can be read."""
     try:
