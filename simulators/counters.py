@@ -120,9 +120,9 @@ class GatedCounter:
     def _fetch(self) -> str:
         if self._gate is None:
             raise FaultError(-230)
-        if self._condition():
-            return "BUSY"
-        gate = self._gate
+        return "BUSY" if self._condition() else self._answer_of(self._gate)
+
+    def _answer_of(self, gate: Gate) -> str:
         if not self._counted:
             self._counted = tuple(self._count(*part) for part in self._parts(gate))
         counts = tuple(map(sum, zip(*self._counted, strict=True)))

@@ -50,7 +50,7 @@ def _carry_out(arguments: argparse.Namespace, transport: str, file: Path) -> Ans
     began_s = time.monotonic()
     with ExitStack() as stack:
         page = show_page(stack, lab, sys.stderr if arguments.json else sys.stdout) if arguments.page else None
-        watch = _Watch()
+        watch = Watch()
         with interrupts() as asked:
             wanted = Wanted(transport, getattr(arguments, "home", False), asked, watch.begins, watch.took)
             folder, ended = begin(loaded, lab, wanted) if loaded else resume(arguments.resume, wanted)
@@ -75,7 +75,7 @@ def _loaded(arguments: argparse.Namespace, file: Path) -> Loaded:
     return loaded if faults is None else loaded.with_faults(faults)
 
 
-class _Watch:
+class Watch:
     """What a terminal sees of a run, and how long it took."""
 
     def __init__(self) -> None:
@@ -84,11 +84,13 @@ class _Watch:
         self._first_ns: int | None = None
 
     def begins(self, folder: Path, itinerary: Itinerary) -> None:
+        """Say where the run is kept."""
         print(f"run: {folder}", file=sys.stderr)
         self._progress = Progress(len(itinerary))
         self._began_s = time.monotonic()
 
     def took(self, reading: Reading) -> None:
+        """Take in a reading."""
         if self._first_ns is None:
             self._first_ns = reading.gate_open_ns
         self.run_s = (reading.gate_close_ns - self._first_ns) / 1e9
@@ -96,12 +98,13 @@ class _Watch:
             self._progress.took(reading)
 
     def done(self) -> None:
+        """Take the time."""
         self.wall_s = time.monotonic() - self._began_s
         if self._progress:
             self._progress.done()
 
 
-def _told(figures: dict[str, Any], watch: _Watch) -> list[str]:
+def _told(figures: dict[str, Any], watch: Watch) -> list[str]:
     virtual = figures["kind"] == "rehearsal" and figures["speed_up"]
     faster = f", {figures['speed_up']:.0f} times as fast as the real clock" if virtual else ""
     durable = f"a durable write costs {1e3 * figures['durable_write_s']:.2f} ms here"

@@ -29,6 +29,7 @@ def parser() -> argparse.ArgumentParser:
     commands = whole.add_subparsers(title="commands", required=True, metavar="COMMAND")
     _plan_words(commands)
     _night_words(commands)
+    _replay_words(commands)
     _task_words(commands)
     _service_words(commands)
     _watch_words(commands)
@@ -80,9 +81,7 @@ def _night_words(commands: Any) -> None:
         "file", type=Path, nargs="?", metavar="FILE", help="a measurement; the Lantern night when left out"
     )
     _wishes(rehearse)
-    rehearse.add_argument(
-        "--link", choices=("tcp", "direct"), default="tcp", help="how instruments are reached (tcp)"
-    )
+    _link(rehearse)
     _folders(rehearse)
     script = "a fault script: what goes wrong on the simulated bench, and when"
     rehearse.add_argument("--faults", type=Path, metavar="FILE", help=script)
@@ -111,6 +110,23 @@ def _task_words(commands: Any) -> None:
     task = _add(commands, "task", "task:task", what, "tercet task by-hand rigs/lantern.toml")
     task.add_argument("name", choices=("by-hand",), metavar="NAME", help="by-hand")
     task.add_argument("file", type=Path, metavar="RIG", help="a rig (TOML)")
+
+
+def _replay_words(commands: Any) -> None:
+    again = "play an archived run again through simulated instruments, as it was or with something changed"
+    example = f"tercet replay {RUN} --set estimate.dead_time_s=50e-9"
+    replay = _add(commands, "replay", "again:replay", again, example)
+    replay.add_argument("run", type=Path, metavar="RUN", help="a run folder")
+    _into(replay)
+    _link(replay)
+    speed = "so many times as fast as the wall clock, 1 to 100 (as fast as it goes)"
+    replay.add_argument("--speed", type=float, metavar="TIMES", help=speed)
+    change = "change a key of its description, like quality.fingerprint_p=1e-6; may be given again"
+    replay.add_argument(
+        "--set", dest="changes", action="append", default=[], metavar="KEY=VALUE", help=change
+    )
+    replay.add_argument("--faults", type=Path, metavar="FILE", help="a fault script to lay over it")
+    replay.add_argument("--page", action="store_true", help="show the live page meanwhile")
 
 
 def _service_words(commands: Any) -> None:
@@ -272,8 +288,17 @@ def _wishes(one: argparse.ArgumentParser) -> None:
     one.add_argument("--order", choices=orders, help="another order than the description's")
 
 
-def _folders(one: argparse.ArgumentParser) -> None:
+def _link(one: argparse.ArgumentParser) -> None:
+    how = "how instruments are reached (tcp)"
+    one.add_argument("--link", choices=("tcp", "direct"), default="tcp", help=how)
+
+
+def _into(one: argparse.ArgumentParser) -> None:
     one.add_argument("--into", type=Path, default=Path("lab"), metavar="LAB", help="lab folder (./lab)")
+
+
+def _folders(one: argparse.ArgumentParser) -> None:
+    _into(one)
     one.add_argument(
         "--resume", type=Path, metavar="RUN", help="go on with an interrupted run, after its last count"
     )

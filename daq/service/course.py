@@ -62,7 +62,7 @@ def _stretch(night: Night, place: Place) -> Place:
                 break
     except DeviceError as error:
         found = _trouble_of(night, error)
-        _react(night, found)
+        react(night, found)
     except StorageError as error:
         if not night.shortage():
             raise
@@ -105,7 +105,7 @@ def _readings(night: Night, place: Place) -> Iterator[Reading]:
 def _stood(night: Night, reading: Reading) -> None:
     """Do what is due at the end of a stand."""
     following = reading.visit + 1
-    look(night, anew=following == len(night.itinerary) or _begins_lap(night.itinerary, following))
+    look(night, anew=following == len(night.itinerary) or begins_lap(night.itinerary, following))
     keep_bench(night)
     pause_s = night.itinerary.pauses.get(following, 0.0)
     if pause_s:
@@ -124,7 +124,7 @@ def _comes_between(night: Night, reading: Reading) -> bool:
             hold(night, "reference", f"An axis is away from its target in {ASTRAY_STANDS} stands in a row.")
         if night.live.watcher.dark_stands >= DARK_STANDS:
             why = f"No light in {night.live.watcher.dark_stands} stands in a row"
-            _react(night, DeviceError(why, kind="no counts"))
+            react(night, DeviceError(why, kind="no counts"))
             return True
     held = any(cause != "asked" for cause in night.holds)
     return held or _measure_again(night, reading)
@@ -149,7 +149,7 @@ def _may_go_on(night: Night, number: int) -> bool:
         _end_for(night, END_TIME)
     elif _begins_pair(night.itinerary, number) and not night.asked.ends:
         _end_for(night, due_now(night.running, night.stopping, int(night.itinerary.pair[number])))
-    if night.asked.end_after_lap and _begins_lap(night.itinerary, number):
+    if night.asked.end_after_lap and begins_lap(night.itinerary, number):
         night.asked.end = True
     return not (night.asked.ends or night.holds or night.shortage())
 
@@ -175,7 +175,8 @@ def _stand_ns(night: Night, number: int) -> int:
     return round(1e9 * float(took_s + plan.dwell_s[number]))
 
 
-def _begins_lap(itinerary: Itinerary, number: int) -> bool:
+def begins_lap(itinerary: Itinerary, number: int) -> bool:
+    """Return whether a visit begins a lap."""
     return number == 0 or bool(itinerary.lap[number] != itinerary.lap[number - 1])
 
 
@@ -206,7 +207,7 @@ def _trouble_of(night: Night, error: DeviceError) -> DeviceError:
     return error
 
 
-def _react(night: Night, error: DeviceError) -> None:
+def react(night: Night, error: DeviceError) -> None:
     """Do about a fault what the table says; raises it when that is to park."""
     trouble = night.darkness if error.kind == "no counts" else night.trouble
     now_ns = night.clock.now_ns()

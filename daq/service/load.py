@@ -118,10 +118,22 @@ def load_rig(path: Path) -> Rig:
 
 def load_run(folder: Path, wishes: Wishes) -> Loaded:
     """Return the description that a run folder holds verbatim, with the wishes it was started with."""
+    loaded = load_changed(folder, {}, wishes)
+    return loaded.with_faults(folder / FAULTS) if (folder / FAULTS).exists() else loaded
+
+
+def load_changed(folder: Path, changes: Mapping[str, Any], wishes: Wishes = NO_WISHES) -> Loaded:
+    """Return the description of a run with some keys ("estimate.dead_time_s") changed; its copies are not."""
     path = folder / DESCRIPTION
     text = _read(path)
-    loaded = _loaded(_toml(text, path), text, path, folder / RIG, wishes)
-    return loaded.with_faults(folder / FAULTS) if (folder / FAULTS).exists() else loaded
+    table = _toml(text, path)
+    for key, value in changes.items():
+        *tables, name = key.split(".")
+        inner = table
+        for one in tables:
+            inner = inner.setdefault(one, {})
+        inner[name] = value
+    return _loaded(table, text, path, folder / RIG, wishes)
 
 
 def _loaded(table: dict[str, Any], text: bytes, path: Path, rig_path: Path | None, wishes: Wishes) -> Loaded:

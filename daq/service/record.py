@@ -10,7 +10,7 @@ import numpy as np
 from tzlocal import get_localzone_name
 
 from daq import openings
-from daq.description import Rig
+from daq.description import Measurement, Rig
 from daq.estimate import kappa
 from daq.estimate.blinding import OPEN
 from daq.itinerary import Itinerary
@@ -41,18 +41,10 @@ def record_of(
         "sensors": _sensors(devices),
         "channels": max(entry.channels for entry in rig.devices.values()),
         "slices": rig.slices,
-        "counting": settings.counting,
-        "fano": settings.fano,
-        "monitor_channel": settings.monitor_channel,
-        "heralded": settings.heralded and settings.heralded.model_dump(),
-        "quality": measurement.quality.model_dump(),
         **_judged_by(itinerary, devices),
         "weights": itinerary.weights.tolist(),
         "signs": {name: signs.tolist() for name, signs in itinerary.signs.items()},
-        "normalisation": settings.normalisation,
-        "dead_time_s": settings.dead_time_s,
-        "dead_time_kind": settings.dead_time_kind,
-        "dead_time_u_s": settings.dead_time_u_s,
+        **settings_of(measurement),
         **described(loaded, itinerary),
         "planned_pairs": itinerary.planned_pairs,
         "visits_planned": len(itinerary),
@@ -60,15 +52,31 @@ def record_of(
         "plan_notes": list(itinerary.notes),
         "order": itinerary.order,
         "seed": itinerary.seed,
-        "goal_se": settings.goal_se,
         "blinding": OPEN,
         "hard_end": measurement.stop.hard_end,
         "started_utc": stamp(clock.utc_ns()),
         "zone": str(get_localzone_name() or "UTC"),
-        "description": measurement.model_dump(mode="json", by_alias=True),
         "bench_seed": None if bench is None else _bench_seed(loaded),
         "wishes": asdict(loaded.wishes),
         "truth_kappa": None if bench is None else _truth(bench, itinerary, settings.normalisation),
+    }
+
+
+def settings_of(measurement: Measurement) -> dict[str, Any]:
+    """Return how readings become a residual, and the description whole, its defaults filled in."""
+    settings = measurement.estimate
+    return {
+        "counting": settings.counting,
+        "fano": settings.fano,
+        "monitor_channel": settings.monitor_channel,
+        "heralded": settings.heralded and settings.heralded.model_dump(),
+        "quality": measurement.quality.model_dump(),
+        "normalisation": settings.normalisation,
+        "dead_time_s": settings.dead_time_s,
+        "dead_time_kind": settings.dead_time_kind,
+        "dead_time_u_s": settings.dead_time_u_s,
+        "goal_se": settings.goal_se,
+        "description": measurement.model_dump(mode="json", by_alias=True),
     }
 
 

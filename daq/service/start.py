@@ -84,8 +84,8 @@ def begin(loaded: Loaded, lab: Path, wanted: Wanted) -> tuple[Path, str]:
         stack.enter_context(archive)
         if hidden is not None:
             keep_promise(folder, meta, getpass.getuser())
-        night = _night(folder, loaded, itinerary, archive, clock, devices, bench, wanted)
-        return folder, _through(night, Place(0), wanted)
+        night = night_of(folder, loaded, itinerary, archive, clock, devices, bench, wanted)
+        return folder, through(night, wanted, lambda one: carry_out(one, Place(0)))
 
 
 def resume(folder: Path, wanted: Wanted) -> tuple[Path, str]:
@@ -93,6 +93,8 @@ def resume(folder: Path, wanted: Wanted) -> tuple[Path, str]:
     meta = read_meta(folder)
     if meta.get("finished"):
         raise StorageError("this run is finished", where=str(folder), remedy="Start a new one")
+    if meta["kind"] in ("replay", "import"):
+        raise StorageError(f"this is no run but a {meta['kind']}", where=str(folder), remedy="Make it again")
     loaded = load_run(folder, Wishes(**meta["wishes"]))
     itinerary = loaded.itinerary()
     with ExitStack() as stack:
@@ -101,13 +103,14 @@ def resume(folder: Path, wanted: Wanted) -> tuple[Path, str]:
         clock, bench = _clock(stack, loaded, wanted, visits, folder)
         devices = stack.enter_context(open_devices(loaded.rig, clock))
         _reference(devices, allowed=wanted.home or bench is not None)
-        night = _night(folder, loaded, itinerary, archive, clock, devices, bench, wanted)
+        night = night_of(folder, loaded, itinerary, archive, clock, devices, bench, wanted)
         for reading in readings_of_dataset(visits):
             night.judge.take(reading)
             night.running.add(reading)
             night.live.took(reading, night.judge.odd)
         _let_lapse(night)
-        return folder, _through(night, place_after(itinerary, visits), wanted)
+        place = place_after(itinerary, visits)
+        return folder, through(night, wanted, lambda one: carry_out(one, place))
 
 
 def _let_lapse(night: Night) -> None:
@@ -117,13 +120,13 @@ def _let_lapse(night: Night) -> None:
         tell(night, f"{request.what} lapsed", who=request.who, text=f"{request.who}'s {request.what}: {why}.")
 
 
-def _through(night: Night, place: Place, wanted: Wanted) -> str:
+def through(night: Night, wanted: Wanted, course: Callable[[Night], str]) -> str:
     """Carry a night out; the archive is finished when it ends in good order, else left to be resumed."""
     _listen(night.asked, night.folder)
     wanted.on_start(night.folder, night.itinerary)
     night.live.write(night.state.value, night.running, now=True)
     try:
-        ended = _interruptibly(night, place)
+        ended = _interruptibly(night, course)
     except KeyboardInterrupt:
         stop_now(night)
         ended = STOPPED
@@ -160,13 +163,13 @@ def _results(night: Night, ended: str) -> dict[str, Any]:
     }
 
 
-def _interruptibly(night: Night, place: Place) -> str:
+def _interruptibly(night: Night, course: Callable[[Night], str]) -> str:
     """Carry a night out; a stop may break in here, but not while an archive is opened or finished."""
     night.asked.interruptible = True
     try:
         if night.asked.stop:
             raise KeyboardInterrupt
-        return carry_out(night, place)
+        return course(night)
     finally:
         night.asked.interruptible = False
 
@@ -187,7 +190,7 @@ def _stop(night: Night, reason: str) -> dict[str, Any]:
     return {name: value for name, value in found.items() if name != "reason"}
 
 
-def _night(
+def night_of(
     folder: Path,
     loaded: Loaded,
     itinerary: Itinerary,
@@ -197,6 +200,7 @@ def _night(
     bench: Bench | None,
     wanted: Wanted,
 ) -> Night:
+    """Return everything that a run holds while it is under way."""
     blinding = at_hand(folder, archive.meta)
     plan = replace(plan_of(itinerary, loaded.measurement), blinding=blinding)
     ends = loaded.measurement.stop

@@ -39,7 +39,7 @@ def test_a_rig_with_three_mistakes_gets_three_sentences_in_one_message(tmp_path,
         ('"scpi-counter"', '"scpi-countre"', "no driver 'scpi-countre'. Name one of dialect"),
         ('"scpi-counter"', '"scpi-sensor"', "a rig has one counter, not none"),
         ("dark_rate_hz", "dark_rat_hz", "Did you mean 'dark_rate_hz'"),
-        ('"wavelets"', '"wavelet"', "Known names: wavelets"),
+        ('"wavelets"', '"wavelet"', "Known names: replay, wavelets"),
     ],
 )
 @pytest.mark.parametrize("file", ["lantern.toml", "rigs/lantern.toml"])
