@@ -145,9 +145,7 @@ def open_bench(
     table: Mapping[str, Any] = rig.bench or {}
     if "tape" not in table:
         raise DescriptionError(
-            (
-                f"rig {rig.name}, bench.model: 'replay' is for `tercet replay RUN`. Name 'wavelets' to rehearse.",
-            )
+            (f"rig {rig.name}, bench.model: 'replay' is for `tercet replay`. Name 'wavelets' to rehearse.",)
         )
     tape = Tape(**table["tape"])
     first = tape.readings[0]
