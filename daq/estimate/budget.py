@@ -13,7 +13,7 @@ from daq.estimate.arrays import FloatArray, added
 from daq.estimate.contrast import epsilon_and_delta
 from daq.estimate.levels import levels
 from daq.estimate.plan import Plan
-from daq.estimate.sensitivity import Taken, log_gradient
+from daq.estimate.sensitivity import Taken, rate_gradient
 from daq.estimate.sums import sums_of
 from daq.estimate.tables import Tables, plan_contrast, tables_of
 from daq.estimate.visits import Visits
@@ -114,12 +114,11 @@ def _counting(numbers: Mapping[str, Any]) -> Line:
 
 
 def _dark(tables: Tables, plan: Plan) -> Line:
-    gradient = log_gradient(tables.rates, tables.measured, plan)
+    gradient = rate_gradient(tables.rates, tables.measured, plan)
     shut = int(np.flatnonzero(plan.openings == 0)[0])
     value = None
     if gradient is not None:
-        rate = np.maximum(tables.rates[:, shut], 1e-300)
-        value = float(np.sqrt(np.sum((gradient[:, shut] / rate) ** 2 * tables.variances[:, shut])))
+        value = float(np.sqrt(np.sum(gradient[:, shut] ** 2 * tables.variances[:, shut])))
     return Line(
         name="background",
         value=value,

@@ -41,6 +41,12 @@ def taken_visits(visits: Visits, plan: Plan, chosen: BoolArray) -> Taken | None:
 
 def log_gradient(rates: FloatArray, seen: BoolArray, plan: Plan) -> FloatArray | None:
     """Return dkappa/dln(rate) of every opening and position (J, K); None where kappa has no divisor."""
+    gradient = rate_gradient(rates, seen, plan)
+    return None if gradient is None else gradient * rates
+
+
+def rate_gradient(rates: FloatArray, seen: BoolArray, plan: Plan) -> FloatArray | None:
+    """Return dkappa/drate of every opening and position (J, K) [s]; None where kappa has no divisor."""
     what, signs = plan_contrast(plan)
     weights = np.where(seen, plan.weights, 0.0)
     slope = divisor_gradient(rates, weights, what, plan.normalisation, signs)
@@ -48,7 +54,7 @@ def log_gradient(rates: FloatArray, seen: BoolArray, plan: Plan) -> FloatArray |
     if not total > 0:
         return None
     value = float(np.sum(weights * (rates @ what.residual))) / total
-    return np.asarray((weights[:, None] * what.residual - value * slope) * rates / total)
+    return np.asarray((weights[:, None] * what.residual - value * slope) / total)
 
 
 def unbalance(visits: Visits, plan: Plan, taken: Taken) -> float:

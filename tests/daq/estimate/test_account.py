@@ -24,6 +24,7 @@ from daq.records import Quality, Reading
 from tests.daq.estimate.nights import dataset, monitored, plan, rates_hz, readings
 
 PLAN = plan(positions=5, laps=40, dead_time_s=0.0)
+SHUT = 0
 
 
 def account(of: Plan, rows: list[Reading], **attributes: Any) -> Account:
@@ -265,3 +266,19 @@ def test_the_account_is_plain_json() -> None:
     found = account(PLAN, readings(PLAN, np.random.default_rng(15)), slit_loads={}).to_json()
 
     assert json.loads(json.dumps(found, allow_nan=False)) == found
+
+
+def test_the_background_of_a_power_reading_may_be_nothing_and_less() -> None:
+    of = replace(PLAN, counting="power")
+    generator = np.random.default_rng(21)
+    rows = [
+        replace(
+            row, values=(row.values[0] - 1760 if row.opening == SHUT else row.values[0],), values_var=(9e4,)
+        )
+        for row in readings(of, generator)
+    ]
+
+    background = line(account(of, rows), "background")
+
+    assert min(row.values[0] for row in rows) < 0
+    assert background.value is not None and 0 < background.value < 1
