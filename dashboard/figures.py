@@ -34,6 +34,8 @@ def night(feed: Feed) -> dict[str, Any]:
         return {"unit": name, "end": end, "empty": "κ is hidden while the run is blinded."}
     if not history["kappa"]:
         return {"unit": name, "end": end, "empty": "The first dot appears when the first pair is complete."}
+    if kappa["value"] is None:
+        return {"unit": name, "end": end, "empty": "κ cannot be worked out from what is counted so far."}
     reach = _reach(history, kappa["goal_se"] or 0)
     return {
         "unit": name,

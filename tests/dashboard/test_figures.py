@@ -175,3 +175,12 @@ def test_curves_are_plain_data(content: dict[str, Any]) -> None:
     made = [night(content), pattern(content, 3), plates(content), strip(content)]
 
     assert json.loads(json.dumps(made, allow_nan=False)) == made
+
+
+def test_a_night_whose_kappa_cannot_be_worked_out_says_so() -> None:
+    content = feed()
+    content["kappa"]["value"] = None
+
+    drawn = night(content)
+
+    assert drawn["empty"] == "κ cannot be worked out from what is counted so far."
