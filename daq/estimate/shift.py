@@ -13,6 +13,8 @@ from daq.estimate.arrays import FloatArray
 K, H = 0.5, 9.06  # a CUSUM of stands of 22 s with these alarms once a week on a steady source
 REFERENCE = 20  # stands that tell the level before
 AFTER = 10  # stands after the alarm before it is said what it was
+NEAR, JUMP_SIGMA = 3, 3.5  # a sudden change stands out among the differences of so many stands each
+TO_SIGMA = 1.4826  # median absolute deviation of a normal distribution
 
 
 @dataclass(frozen=True, slots=True)
@@ -84,11 +86,26 @@ def told_apart(levels: Sequence[float], variances: Sequence[float], hours: Seque
     bends = [_fit(values, weights, np.maximum(time - time[edge - 1], 0.0)) for edge in edges]
     best = int(np.argmin([fit[0] for fit in steps]))
     bend = int(np.argmin([fit[0] for fit in bends]))
-    sudden = steps[best][0] < bends[bend][0]
+    sudden = steps[best][0] < bends[bend][0] and _stands_out(values, edges[best])
     if sudden:
         return Shift(steps[best][2] / steps[best][1], float(time[edges[best]]), True)
     begins = float(time[edges[bend] - 1])
     return Shift(bends[bend][2] * (float(time[-1]) - begins) / bends[bend][1], begins, False)
+
+
+def _stands_out(values: FloatArray, edge: int) -> bool:
+    """Return whether the level jumps at an edge as it does nowhere else: a source that walks jumps too.
+
+    Jumps are differences between the means of a few stands before and after; their spread is the yardstick.
+    """
+    places = range(NEAR, len(values) - NEAR + 1)
+    jumps = np.array([values[at : at + NEAR].mean() - values[at - NEAR : at].mean() for at in places])
+    if not len(jumps):
+        return False
+    middle = float(np.median(jumps))
+    spread = TO_SIGMA * float(np.median(np.abs(jumps - middle)))
+    here = jumps[min(max(edge - NEAR, 0), len(jumps) - 1)]
+    return bool(abs(here - middle) > JUMP_SIGMA * spread)
 
 
 def _fit(values: FloatArray, weights: FloatArray, shape: FloatArray) -> tuple[float, float, float]:

@@ -10,6 +10,7 @@ from daq.estimate.watch import STAYS_GOOD, Concern
 
 LOSS_TO_WAKE_H = 1.5  # hours of measuring that may go missing before anybody is called
 HOLD_TO_WAKE_H = 0.5
+BRIEF_H = 1 / 60  # a fault that is cured within a minute is for the log
 INTERLOCK_TO_WAKE_H = 10 / 60
 DARK_STANDS = 2
 LEVEL_STANDS = 3
@@ -90,7 +91,9 @@ def cost(danger: Danger, rate: float = 0.0) -> tuple[float, str]:
     return lost_h, f"{text} and ends at ± {ends:.2g} instead of ± {danger.planned_se:.2g}."
 
 
-def _held(danger: Danger, held: Held) -> Concern:
+def _held(danger: Danger, held: Held) -> Concern | None:
+    if held.cause == "fault" and held.hours < BRIEF_H:
+        return None
     lost_h, text = cost(danger)
     costly = lost_h > LOSS_TO_WAKE_H
     wakes = {

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import logging
 from collections.abc import Iterator
 
 import numpy as np
@@ -16,11 +15,9 @@ from daq.sequencer import State, axis_trouble, perform
 from daq.service.ending import REASONS, due_now
 from daq.service.groups import AFTER_FAULT, BY_RULE, Place, repeat_from, supply
 from daq.service.hearing import hear
-from daq.service.holding import hold, pass_time, wait_out, watch_limits
+from daq.service.holding import hold, pass_time, reopen, reopen_silent, wait_out, watch_limits
 from daq.service.night import AT_REQUEST, COMPLETE, Night, Trouble, look, tell
 from daq.service.parking import keep_bench
-
-log = logging.getLogger(__name__)
 
 REPEATED = Quality.OFF_TARGET | Quality.MOVED | Quality.OVERFLOW | Quality.DISPERSION | Quality.FINGERPRINT
 REPEATED_SHARE = 0.1  # of the stands so far; above it a repeat is no cure
@@ -107,6 +104,7 @@ def _stood(night: Night, reading: Reading) -> None:
     following = reading.visit + 1
     look(night, anew=following == len(night.itinerary) or begins_lap(night.itinerary, following))
     keep_bench(night)
+    reopen_silent(night, reading)
     pause_s = night.itinerary.pauses.get(following, 0.0)
     if pause_s:
         text = f"A pause of {pause_s:.0f} s before the next pair, as planned."
@@ -244,8 +242,4 @@ def _recover(night: Night, action: Action, wait_s: float) -> None:
     if action is not Action.RECONNECT:
         return
     for device in night.devices.all:
-        device.close()
-        try:
-            device.open()
-        except DeviceError as error:
-            log.warning("%s", error)
+        reopen(device)

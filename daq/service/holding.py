@@ -2,7 +2,10 @@
 
 from __future__ import annotations
 
+import logging
+
 from daq.errors import DeviceError
+from daq.ports import Device
 from daq.reactions import TABLE, Action
 from daq.records import Reading
 from daq.sequencer import State
@@ -10,7 +13,10 @@ from daq.service.hearing import hear
 from daq.service.night import Hold, Night, look, tell
 from daq.service.parking import shield, unshield
 
+log = logging.getLogger(__name__)
+
 LOOK_AGAIN_S = 5.0
+REOPEN_NS = 60 * 10**9
 ON_THE_WALL = frozenset({"asked", "room"})  # these pass no time of a rehearsal
 
 
@@ -119,12 +125,33 @@ def _sensors(night: Night) -> None:
 
 def _all_good(night: Night) -> bool:
     limits = night.judge.rules.limits
+    for sensor in night.devices.sensors:
+        if not any(name.startswith(f"{sensor.name}_") for name in limits):
+            continue
+        try:
+            read = {f"{sensor.name}_{key}": value for key, (value, _) in sensor.read().items()}
+        except DeviceError:
+            reopen(sensor)
+            return False
+        if not all(limit.holds(read[name]) for name, limit in limits.items() if name in read):
+            return False
+    return True
+
+
+def reopen(device: Device) -> None:
+    """Close and open a device anew; one that stays away is tried again later."""
+    device.close()
     try:
-        values = {
-            f"{sensor.name}_{key}": value
-            for sensor in night.devices.sensors
-            for key, (value, _) in sensor.read().items()
-        }
-    except DeviceError:
-        return False
-    return all(limit.holds(values[name]) for name, limit in limits.items() if name in values)
+        device.open()
+    except DeviceError as error:
+        log.warning("%s", error)
+
+
+def reopen_silent(night: Night, reading: Reading) -> None:
+    """Open sensors anew that have not answered, at most once a minute: counts do not wait for them long."""
+    now_ns = night.clock.now_ns()
+    for sensor in night.devices.sensors:
+        silent = not any(name.startswith(f"{sensor.name}_") for name in reading.sensors)
+        if silent and now_ns - night.reopened_ns.get(sensor.name, -REOPEN_NS) >= REOPEN_NS:
+            night.reopened_ns[sensor.name] = now_ns
+            reopen(sensor)

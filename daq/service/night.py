@@ -76,6 +76,7 @@ class Night:
     holds: dict[str, Hold] = field(default_factory=dict)
     trouble: Trouble = field(default_factory=Trouble)  # with a device
     darkness: Trouble = field(default_factory=Trouble)  # no light, though every device answers
+    reopened_ns: dict[str, int] = field(default_factory=dict)  # by sensor: when it was last opened anew
     sat_out: int = 0  # stands that were measured again because of a rule
     astray: int = 0  # stands in a row in which an axis was not where it should be
 

@@ -18,6 +18,8 @@ from daq.cli.toml import toml_text
 from daq.cli.words import parser
 from daq.estimate import Blinding, estimate_run
 from daq.estimate.dataset import HIDDEN
+from daq.service.metrics import Tally, metrics_text
+from daq.service.telling import summary_of
 from daq.storage.blinding import read_events, state_of
 from daq.storage.feed import read_feed
 from daq.storage.log import read_log
@@ -99,6 +101,7 @@ NOTHING_OF_A_RUN = {
     **dict.fromkeys(("hold", "resume", "end", "acknowledge", "mute"), "it leaves a request"),
     **dict.fromkeys(("rehearse", "run", "replay"), "it prints what report prints; scanned as the rehearsal"),
     "serve": "what it shows is the page, what it tells is the log and live.json",
+    "listen": "it hears heartbeats, which say nothing",
     "task": "it measures the bench, not a run",
     "pool": "scanned in its own test",
     "study": "its nights are made up",
@@ -183,6 +186,8 @@ def test_live_json_log_page_and_results_give_nothing_away(run: Path) -> None:
         "page": json.loads(json.dumps(page, default=lambda part: part.to_plotly_json())),
         "results": [meta["results"], meta["stop"]],
         "blinding record": (run / "blinding.jsonl").read_text(),
+        "metrics": metrics_text(read_feed(run), Tally(), 1),
+        "digest": summary_of(run.parents[1], datetime.now(UTC)),
     }
 
     secrets = Secrets(run)

@@ -47,6 +47,17 @@ def test_a_slope_is_told_as_slow():
     assert shift.size < 0
 
 
+def test_a_source_that_walks_is_not_taken_for_steps():
+    random = np.random.default_rng(4)
+    walks = 1 + np.cumsum(random.normal(0, 3 * SIGMA, (40, 400)), axis=1) + random.normal(0, SIGMA, (40, 400))
+
+    told = [shift for levels in walks for _, shift in fed(levels)]
+
+    # With the chi-squared of the two models alone about half of them would be "sudden".
+    assert len(told) > 400
+    assert sum(shift.sudden for shift in told) < 0.1 * len(told)
+
+
 def test_a_step_without_noise_is_exact():
     levels = [1.0] * 20 + [0.9] * 10
 

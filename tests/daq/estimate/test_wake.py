@@ -81,6 +81,10 @@ def test_a_short_hold_and_a_hold_that_was_asked_for_wake_nobody():
     assert "tercet resume" in asked.do
 
 
+def test_a_fault_that_is_cured_within_a_minute_is_no_news():
+    assert found(held=Held("fault", "axis mask: no reply.", 0.5 / 60, 2)) == ()
+
+
 def test_a_hold_for_the_bench_says_where_it_is_cleared():
     (one,) = found(held=Held("interlock", "Pressure is 4e-3 Pa.", 0.2, at_bench=True))
 
