@@ -1,4 +1,4 @@
-"""The command replay: an archived run played again, as it was or with something changed."""
+"""Commands replay and import: an archived run, or a table of visits from elsewhere, taken up again."""
 
 from __future__ import annotations
 
@@ -15,6 +15,7 @@ from daq.cli.night import Watch, interrupts, show_page
 from daq.errors import DescriptionError
 from daq.report import lines
 from daq.service.figures import figures_of
+from daq.service.foreign import take_in as taken_in
 from daq.service.night import COMPLETE
 from daq.service.owner import refuse_owned
 from daq.service.replay import WhatIf
@@ -43,6 +44,13 @@ def replay(arguments: argparse.Namespace) -> Answer:
         watch.done()
     figures = _compared(arguments.run, folder, tape) | {"wall_s": time.monotonic() - began_s}
     return Answer(0 if ended == COMPLETE else 1, figures, [*lines(figures), "", *_told(figures, what_if)])
+
+
+def take_in(arguments: argparse.Namespace) -> Answer:
+    """Take in a table of visits from elsewhere as a finished run, and report on it."""
+    folder = taken_in(arguments.table, arguments.mapping, arguments.into)
+    figures = figures_of(folder)
+    return Answer(0, figures, lines(figures))
 
 
 def _times(speed: float | None) -> float | None:

@@ -127,6 +127,12 @@ def _replay_words(commands: Any) -> None:
     )
     replay.add_argument("--faults", type=Path, metavar="FILE", help="a fault script to lay over it")
     replay.add_argument("--page", action="store_true", help="show the live page meanwhile")
+    foreign = "take in a table of visits that was made elsewhere (CSV), as a finished run"
+    example = "tercet import visits.csv visits-elsewhere.toml --into lab"
+    taken = _add(commands, "import", "again:take_in", foreign, example)
+    taken.add_argument("table", type=Path, metavar="TABLE", help="a CSV file, one line a visit")
+    taken.add_argument("mapping", type=Path, metavar="MAPPING", help="which column is what (TOML)")
+    _into(taken)
 
 
 def _service_words(commands: Any) -> None:

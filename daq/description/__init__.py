@@ -9,17 +9,19 @@ from pydantic import ValidationError
 
 from daq import openings
 from daq.description.dialect import Dialect
+from daq.description.foreign import ForeignTable
 from daq.description.measurement import Measurement
 from daq.description.problems import every_problem
 from daq.description.rig import Rig
 from daq.errors import DescriptionError
 
-__all__ = ["Dialect", "Measurement", "Rig", "joint_problems", "parse"]
+__all__ = ["Dialect", "ForeignTable", "Measurement", "Rig", "joint_problems", "parse"]
 
-_MODELS: Mapping[str, type[Measurement] | type[Rig] | type[Dialect]] = {
+_MODELS: Mapping[str, type[Measurement] | type[Rig] | type[Dialect] | type[ForeignTable]] = {
     "measurement": Measurement,
     "rig": Rig,
     "dialect": Dialect,
+    "foreign table": ForeignTable,
 }
 
 
@@ -29,7 +31,9 @@ def parse(table: Mapping[str, Any], source: str, kind: Literal["measurement"]) -
 def parse(table: Mapping[str, Any], source: str, kind: Literal["rig"]) -> Rig: ...
 @overload
 def parse(table: Mapping[str, Any], source: str, kind: Literal["dialect"]) -> Dialect: ...
-def parse(table: Mapping[str, Any], source: str, kind: str) -> Measurement | Rig | Dialect:
+@overload
+def parse(table: Mapping[str, Any], source: str, kind: Literal["foreign table"]) -> ForeignTable: ...
+def parse(table: Mapping[str, Any], source: str, kind: str) -> Measurement | Rig | Dialect | ForeignTable:
     """Return the description that a table holds.
 
     Raises

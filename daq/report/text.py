@@ -43,7 +43,11 @@ def _truth(value: float, se: float) -> str:
 
 
 def _head(figures: Mapping[str, Any]) -> list[str]:
-    kind = {"rehearsal": "A rehearsal on simulated hardware.", "replay": "A replay of an archived run."}
+    kind = {
+        "rehearsal": "A rehearsal on simulated hardware.",
+        "replay": "A replay of an archived run.",
+        "import": "Visits that were made elsewhere.",
+    }
     title = figures["title"] or figures["name"]
     return [
         *_damage(figures),

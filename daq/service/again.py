@@ -75,6 +75,7 @@ def _completed(reading: Reading, archived: Reading) -> Reading:
     """Return a replayed reading with what its instruments do not say: sensors, and how it was counted."""
     return replace(
         reading,
+        encoder_mm=reading.encoder_mm if archived.encoder_mm else {},
         sensors=archived.sensors,
         slices=archived.slices,
         values_var=archived.values_var,

@@ -15,6 +15,7 @@ from daq.description import Measurement, Rig, joint_problems, parse
 from daq.devices.files import with_dialects
 from daq.errors import DescriptionError
 from daq.itinerary import Itinerary, compose
+from daq.service.files import read_file, read_table
 
 DESCRIPTION, RIG, FAULTS = "description.toml", "rig.toml", "faults.toml"
 LONGEST_H = 10_000
@@ -41,8 +42,8 @@ class Loaded:
         DescriptionError
             When it cannot be read, or is no TOML.
         """
-        text = _read(path)
-        _toml(text, path)
+        text = read_file(path)
+        read_table(text, path)
         return replace(self, texts={**self.texts, FAULTS: text})
 
     @property
@@ -97,8 +98,8 @@ def load(path: Path, wishes: Wishes = NO_WISHES) -> Loaded:
     DescriptionError
         With every problem of both files at once.
     """
-    text = _read(path)
-    table = _toml(text, path)
+    text = read_file(path)
+    table = read_table(text, path)
     rig_name = table.get("rig")
     rig_path = path.parent / rig_name if isinstance(rig_name, str) else None
     return _loaded(table, text, path, rig_path, wishes)
@@ -112,7 +113,7 @@ def load_rig(path: Path) -> Rig:
     DescriptionError
         With every problem of the file at once.
     """
-    table, _ = with_dialects(_toml(_read(path), path), path.parent)
+    table, _ = with_dialects(read_table(read_file(path), path), path.parent)
     return parse(table, str(path), "rig")
 
 
@@ -125,8 +126,8 @@ def load_run(folder: Path, wishes: Wishes) -> Loaded:
 def load_changed(folder: Path, changes: Mapping[str, Any], wishes: Wishes = NO_WISHES) -> Loaded:
     """Return the description of a run with some keys ("estimate.dead_time_s") changed; its copies are not."""
     path = folder / DESCRIPTION
-    text = _read(path)
-    table = _toml(text, path)
+    text = read_file(path)
+    table = read_table(text, path)
     for key, value in changes.items():
         *tables, name = key.split(".")
         inner = table
@@ -147,8 +148,8 @@ def _loaded(table: dict[str, Any], text: bytes, path: Path, rig_path: Path | Non
         problems += error.problems
     try:
         if rig_path is not None:
-            rig_text = _read(rig_path)
-            rig_table, dialects = with_dialects(_toml(rig_text, rig_path), rig_path.parent)
+            rig_text = read_file(rig_path)
+            rig_table, dialects = with_dialects(read_table(rig_text, rig_path), rig_path.parent)
             rig = parse(rig_table, str(rig_path), "rig")
     except DescriptionError as error:
         problems += error.problems
@@ -185,18 +186,3 @@ def _in_hours(measurement: Measurement, rig: Rig, wishes: Wishes, path: Path) ->
 def _with_laps(measurement: Measurement, laps: int) -> Measurement:
     order = measurement.itinerary.model_copy(update={"laps": laps})
     return measurement.model_copy(update={"itinerary": order})
-
-
-def _read(path: Path) -> bytes:
-    try:
-        return path.read_bytes()
-    except OSError as error:
-        reason = error.strerror or "cannot be read"
-        raise DescriptionError((f"{path}: {reason.lower()}. Name a readable file.",)) from error
-
-
-def _toml(text: bytes, path: Path) -> dict[str, Any]:
-    try:
-        return tomllib.loads(text.decode())
-    except (UnicodeDecodeError, tomllib.TOMLDecodeError) as error:
-        raise DescriptionError((f"{path}: not a TOML file: {error}. Mend it there.",)) from error

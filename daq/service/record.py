@@ -25,26 +25,36 @@ def record_of(
     loaded: Loaded, itinerary: Itinerary, clock: Clock, devices: Devices, bench: Bench | None
 ) -> dict[str, Any]:
     """Return the attributes of a new run: set-up, settings, devices, seeds, software; JSON only."""
-    measurement, rig = loaded.measurement, loaded.rig
-    settings = measurement.estimate
+    rig, normalisation = loaded.rig, loaded.measurement.estimate.normalisation
     return {
-        **_identity(loaded),
+        **plan_record(loaded, itinerary),
         "kind": "rehearsal" if bench else "run",
         "clock": clock.kind,
-        "set_up": _set_up(rig),
         "devices": _devices(rig, devices),
-        "software": software(),
-        "slits": itinerary.slits,
-        "openings": itinerary.openings.tolist(),
-        "positions_mm": itinerary.positions_mm.tolist(),
         "axes": [rig.mask.axis, rig.detector.axis],
         "sensors": _sensors(devices),
         "channels": max(entry.channels for entry in rig.devices.values()),
         "slices": rig.slices,
         **_judged_by(itinerary, devices),
+        "started_utc": stamp(clock.utc_ns()),
+        "bench_seed": None if bench is None else _bench_seed(loaded),
+        "truth_kappa": None if bench is None else _truth(bench, itinerary, normalisation),
+    }
+
+
+def plan_record(loaded: Loaded, itinerary: Itinerary) -> dict[str, Any]:
+    """Return what is known of a run before any device is asked."""
+    return {
+        **_identity(loaded),
+        "set_up": _set_up(loaded.rig),
+        "software": software(),
+        "slits": itinerary.slits,
+        "openings": itinerary.openings.tolist(),
+        "positions_mm": itinerary.positions_mm.tolist(),
         "weights": itinerary.weights.tolist(),
         "signs": {name: signs.tolist() for name, signs in itinerary.signs.items()},
-        **settings_of(measurement),
+        "expected_hz": itinerary.rates_hz.tolist(),
+        **settings_of(loaded.measurement),
         **described(loaded, itinerary),
         "planned_pairs": itinerary.planned_pairs,
         "visits_planned": len(itinerary),
@@ -53,12 +63,9 @@ def record_of(
         "order": itinerary.order,
         "seed": itinerary.seed,
         "blinding": OPEN,
-        "hard_end": measurement.stop.hard_end,
-        "started_utc": stamp(clock.utc_ns()),
+        "hard_end": loaded.measurement.stop.hard_end,
         "zone": str(get_localzone_name() or "UTC"),
-        "bench_seed": None if bench is None else _bench_seed(loaded),
         "wishes": asdict(loaded.wishes),
-        "truth_kappa": None if bench is None else _truth(bench, itinerary, settings.normalisation),
     }
 
 
@@ -81,10 +88,9 @@ def settings_of(measurement: Measurement) -> dict[str, Any]:
 
 
 def _judged_by(itinerary: Itinerary, devices: Devices) -> dict[str, Any]:
-    """Return what the quality rules compare with: expected rates, targets and tolerances of the axes."""
+    """Return what the quality rules compare encoders with: targets and tolerances of the axes."""
     masks = itinerary.openings.tolist()
     return {
-        "expected_hz": itinerary.rates_hz.tolist(),
         "tolerance_mm": dict(devices.tolerance_mm),
         "targets_mm": {openings.name(mask): dict(devices.mask.target_mm(mask)) for mask in masks},
     }

@@ -125,6 +125,7 @@ def test_the_record_stands_in_a_second_place(run: Path, record: dict[str, Any]) 
         "finished",
         "ended",
         "ended_utc",
+        "stop",
         "results",
         "digest",
         "gate_digest",
