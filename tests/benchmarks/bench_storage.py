@@ -147,15 +147,16 @@ def reading_many(folder: Path) -> Iterator[str]:
             took = _seconds(partial(verify, folder), 1)
             verifies.append(time.process_time() - begun)
             whole = _seconds(partial(open_visits, folder), 1)
+            each_us, files = verifies[-1] / visits * 1e6, _size(folder)[1]
             yield (
-                f"{visits} visits: reader opens in {1e3 * opens[-1]:.1f} ms, reads all in {whole:.2f} s, "
-                f"verify {took:.2f} s, CPU {verifies[-1]:.2f} s ({verifies[-1] / visits * 1e6:.1f} us a visit), "
-                f"{_size(folder)[1]} files (target {24 * (visits // CHUNK) + 30})"
+                f"{visits} visits: reader opens in {1e3 * opens[-1]:.1f} ms, reads all in {whole:.2f} s, verify "
+                f"{took:.2f} s, CPU {verifies[-1]:.2f} s ({each_us:.1f} us a visit); "
+                f"{files} files (target {24 * (visits // CHUNK) + 30})"
             )
     yield f"opens at {GROWING[-1]} / at {GROWING[0]}: {opens[-1] / opens[0]:.2f} (target 3)"
     per_visit = (verifies[-1] - verifies[0]) / (GROWING[-1] - GROWING[0])
     before = (verifies[-2] - verifies[0]) / (GROWING[-2] - GROWING[0])
-    yield f"verify, CPU of a visit more at {GROWING[-1]} / at {GROWING[-2]}: {per_visit / before:.2f} (linear: 1)"
+    yield f"verify, CPU of a visit at {GROWING[-1]} / at {GROWING[-2]}: {per_visit / before:.2f} (linear: 1)"
 
 
 def list_mode(folder: Path) -> Iterator[str]:
