@@ -149,8 +149,8 @@ def reading_many(folder: Path) -> Iterator[str]:
             whole = _seconds(partial(open_visits, folder), 1)
             each_us, files = verifies[-1] / visits * 1e6, _size(folder)[1]
             yield (
-                f"{visits} visits: reader opens in {1e3 * opens[-1]:.1f} ms, reads all in {whole:.2f} s, verify "
-                f"{took:.2f} s, CPU {verifies[-1]:.2f} s ({each_us:.1f} us a visit); "
+                f"{visits} visits: reader opens in {1e3 * opens[-1]:.1f} ms, reads all in {whole:.2f} s, "
+                f"verify {took:.2f} s, CPU {verifies[-1]:.2f} s ({each_us:.1f} us a visit); "
                 f"{files} files (target {24 * (visits // CHUNK) + 30})"
             )
     yield f"opens at {GROWING[-1]} / at {GROWING[0]}: {opens[-1] / opens[0]:.2f} (target 3)"
