@@ -97,6 +97,9 @@ class Reading:
 # What a person may say of a finished run.
 VERDICTS = ("counts", "counts in part", "doubtful", "does not count")
 
+# What can be measured at the bench, in the order of a day.
+TASKS = ("dark", "deadtime", "pilot")
+
 # What a person may do on the page: a watcher reads, an operator also asks.
 ROLES = ("watcher", "operator")
 
@@ -108,4 +111,5 @@ REASONS: Mapping[int, str] = {
     3: "stand repeated by a quality rule",
     4: "unplanned dark visit",
     5: "unplanned flank visit",
+    6: "visit of a bench task",
 }

@@ -12,11 +12,44 @@ from daq.cli.answer import Answer
 from daq.description import Rig
 from daq.errors import DaqError
 from daq.service.at_bench import in_hand, refuse_absent
-from daq.service.load import load_rig
+from daq.service.bench_task import Person, carry_out
+from daq.service.load import load, load_rig
+from daq.tasks import task_of
 from daq.tasks.by_hand import Bench, halt, obey
+
+BY_HAND = "by-hand"
 
 
 def task(arguments: argparse.Namespace) -> Answer:
+    """Carry out a bench task, or let a person home, move, read and watch the rate."""
+    return _by_hand(arguments) if arguments.name == BY_HAND else _measured(arguments)
+
+
+def _measured(arguments: argparse.Namespace) -> Answer:
+    """Carry out a task that measures, and say what it found."""
+    loaded, chosen = load(arguments.file), task_of(arguments.name)
+    refuse_absent(loaded.rig, _typed)
+    person = Person(arguments.by or "", lambda text: print(text, file=sys.stderr, flush=True), _turned)
+    record = carry_out(chosen, loaded, arguments.into, person)
+    lines = [f"{record['verdict']}: {record['sentence']}"]
+    if record["valid_until"]:
+        lines.append(
+            f"valid until {record['valid_until'][:16].replace('T', ' ')} UTC, "
+            f"or another {' or '.join(record['holds_for'])}"
+        )
+    lines.append(f"record {record['record']}, picture {record['picture']}")
+    return Answer(0 if record["ok"] else 1, record, lines)
+
+
+def _turned(what: str) -> None:
+    """Wait until a person has done what only a person may do."""
+    if _typed(f"{what} Then press Enter: ") == "":
+        raise DaqError(
+            "nobody has done it", where="at the bench", remedy="Repeat the task with somebody there"
+        )
+
+
+def _by_hand(arguments: argparse.Namespace) -> Answer:
     """Let a person home, move, read and watch the rate at the bench."""
     rig = load_rig(arguments.file)
     refuse_absent(rig, _typed)

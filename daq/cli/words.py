@@ -9,7 +9,7 @@ from pathlib import Path
 from typing import Any
 
 from daq.cli.answer import Answer
-from daq.records import ROLES, VERDICTS
+from daq.records import ROLES, TASKS, VERDICTS
 
 RUN = "lab/runs/20261201T170000Z-lantern"
 ABOUT = """Plans and runs multi-mask interference scans, loses no count, and gives a residual that can be
@@ -106,10 +106,14 @@ def _night_words(commands: Any) -> None:
 
 def _task_words(commands: Any) -> None:
     """Add the bench tasks."""
-    what = "do a guided task at the bench: by-hand (home, go, read, the rate as a bar while you turn screws)"
-    task = _add(commands, "task", "task:task", what, "tercet task by-hand rigs/lantern.toml")
-    task.add_argument("name", choices=("by-hand",), metavar="NAME", help="by-hand")
-    task.add_argument("file", type=Path, metavar="RIG", help="a rig (TOML)")
+    what = "do a guided task at the bench: by-hand (home, go, read, the rate as a bar), or one that measures"
+    task = _add(commands, "task", "task:task", what, "tercet task dark lantern.toml --into lab")
+    task.add_argument(
+        "name", choices=("by-hand", *TASKS), metavar="NAME", help=", ".join(("by-hand", *TASKS))
+    )
+    task.add_argument("file", type=Path, metavar="FILE", help="a measurement (by-hand: a rig; TOML)")
+    task.add_argument("--into", type=Path, default=Path("lab"), metavar="LAB", help="lab folder (./lab)")
+    task.add_argument("--by", metavar="NAME", help="who does it (your login name)")
 
 
 def _replay_words(commands: Any) -> None:

@@ -1,0 +1,66 @@
+"""Bench records in use: the newest one of each task that is valid for a rig, and why an older one is not."""
+
+from __future__ import annotations
+
+import hashlib
+import json
+from collections.abc import Mapping
+from datetime import UTC, datetime
+from pathlib import Path
+from typing import Any
+
+from daq.description import Rig
+from daq.records import TASKS
+from daq.service.load import Loaded
+from daq.storage.bench import outcomes
+
+
+def set_up_of(rig: Rig) -> dict[str, str]:
+    """Return what a record may hold for: chip, geometry, axes and devices, most of them as digests."""
+    described = rig.model_dump(mode="json", by_alias=True)
+    parts = {
+        "geometry": [described["geometry"], described["slits"]],
+        "axes": described["axes"],
+        "devices": described["devices"],
+    }
+    digests = {
+        name: hashlib.sha256(json.dumps(part, sort_keys=True).encode()).hexdigest()[:16]
+        for name, part in parts.items()
+    }
+    return {"rig": rig.name, "chip": rig.mask.chip, **digests}
+
+
+def why_not(record: Mapping[str, Any], rig: Rig, now: datetime) -> str:
+    """Return why a record may not be taken for a rig now, in words; "" when it may.
+
+    What a simulated bench gave was dated by its own clock: it does not grow old.
+    """
+    if record.get("verdict") not in ("pass", "doubtful"):
+        return f"it failed: {record.get('sentence', '')}"
+    until = record.get("valid_until")
+    if not rig.simulated and (not until or datetime.fromisoformat(until) < now):
+        return f"it held until {until}"
+    then, here = record.get("set_up", {}), set_up_of(rig)
+    for part in ("rig", *record.get("holds_for", ())):
+        if then.get(part) != here.get(part):
+            was = f" ({then.get(part)}, now {here.get(part)})" if part in ("rig", "chip") else ""
+            return f"it was taken with another {part}{was}"
+    return ""
+
+
+def newest(lab: Path, task: str, rig: Rig, now: datetime | None = None) -> tuple[dict[str, Any] | None, str]:
+    """Return the newest valid record of a task, or None and why the newest one may not be taken."""
+    now = now or datetime.now(UTC)
+    first = ""
+    for found in outcomes(lab, task):
+        why = why_not(found, rig, now)
+        if not why:
+            return found, ""
+        first = first or f"{found['record']}: {why}"
+    return None, first or "never done in this lab"
+
+
+def earlier(loaded: Loaded, lab: Path, now: datetime | None = None) -> dict[str, dict[str, Any]]:
+    """Return the newest valid record of every task, by task."""
+    found = {name: newest(lab, name, loaded.rig, now)[0] for name in TASKS}
+    return {name: record for name, record in found.items() if record is not None}

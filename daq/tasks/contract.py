@@ -1,0 +1,136 @@
+"""The contract of a bench task: visits asked for, readings fitted, a verdict, and what the record says."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass, field
+from typing import Any, Literal
+
+from scipy.stats import chi2 as chi2_distribution
+
+from daq.description import Measurement, Rig
+from daq.errors import DaqError
+from daq.estimate.arrays import FloatArray
+from daq.records import Reading
+from daq.tasks.yardstick import Yardstick
+
+Verdict = Literal["pass", "doubtful", "fail"]
+ODD_P = 1e-3  # a fit less probable than this is doubtful
+ANYWHERE = -1  # the opening of a visit that stands at a place of the mask instead
+
+
+@dataclass(frozen=True, slots=True)
+class Ask:
+    """A visit that a task asks for; `role` tells the fit what it is.
+
+    An `opening` (bit mask), or `ANYWHERE` and the mask's own `place_mm`; `via_mm` is gone to first;
+    `early` opens the gate as soon as nothing moves, without waiting for the stage to settle; `turn` is what a
+    person does before, in words.
+    """
+
+    role: str
+    dwell_s: float
+    position_mm: float = 0.0
+    opening: int = ANYWHERE
+    place_mm: float | None = None
+    via_mm: float | None = None
+    beam: Literal["", "open", "shut"] = ""
+    early: bool = False
+    turn: str = ""
+
+
+Taken = tuple[Ask, Reading]
+
+
+@dataclass(frozen=True, slots=True)
+class Setting:
+    """What a task knows before it begins: description, yardstick, shutter, what earlier records say."""
+
+    measurement: Measurement
+    rig: Rig
+    yardstick: Yardstick
+    shutter: bool = False
+    earlier: Mapping[str, Mapping[str, Any]] = field(default_factory=dict)  # task -> values of its record
+
+
+@dataclass(frozen=True, slots=True)
+class Curve:
+    """One set of points (with `bars`, their standard errors) or a line of a picture."""
+
+    x: FloatArray
+    y: FloatArray
+    label: str
+    bars: FloatArray | None = None
+    line: bool = False
+
+
+@dataclass(frozen=True, slots=True)
+class Panel:
+    """One plot of a picture: what was measured and what was fitted; `marks` are upright lines by name."""
+
+    title: str
+    x_label: str
+    y_label: str
+    curves: tuple[Curve, ...]
+    marks: Mapping[str, float] = field(default_factory=dict)
+
+
+@dataclass(frozen=True, slots=True)
+class Outcome:
+    """What a task found: values and their standard errors, a verdict, one sentence, and its picture."""
+
+    values: Mapping[str, Any]
+    se: Mapping[str, Any]
+    verdict: Verdict
+    sentence: str
+    model: str
+    panels: tuple[Panel, ...]
+    chi2: float | None = None
+    dof: int | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class Task:
+    """One bench task.
+
+    `lacks` says in sentences what the rig must have and has not; `asks` gives the next visits from those that
+    were taken, none when it has enough; `fit` gives the outcome. Both may raise DaqError: then nothing is
+    moved any further. Its record holds for `days`, and not beyond a change of `holds_for` of the set-up.
+    """
+
+    name: str
+    purpose: str
+    days: float
+    holds_for: tuple[str, ...]
+    lacks: Callable[[Setting], Sequence[str]]
+    asks: Callable[[Setting, Sequence[Taken]], Sequence[Ask]]
+    fit: Callable[[Setting, Sequence[Taken]], Outcome]
+
+
+def hopeless(task: str, what: str, remedy: str) -> DaqError:
+    """Return the error that ends a task: what was seen, and what to do."""
+    return DaqError(what, where=f"task {task}", remedy=remedy)
+
+
+def within(value: float, se: float, limit: float) -> Verdict:
+    """Return how a value stands to the limit that it must not pass; nearer than its error is doubtful."""
+    if value + se <= limit:
+        return "pass"
+    return "doubtful" if value - se <= limit else "fail"
+
+
+def worst(*verdicts: Verdict) -> Verdict:
+    """Return the worst of several verdicts."""
+    return max(verdicts, key=("pass", "doubtful", "fail").index)
+
+
+def fits(chi2: float, dof: int) -> Verdict:
+    """Return "doubtful" where chance alone is farther off less than once in a thousand."""
+    return "pass" if dof < 1 or chi2_distribution.sf(chi2, dof) >= ODD_P else "doubtful"
+
+
+def counts_only(setting: Setting) -> Sequence[str]:
+    """Return why a task that counts cannot be done on this rig; nothing when it can."""
+    if setting.measurement.estimate.counting == "counts":
+        return ()
+    return ("it needs counts, and this measurement reads power.",)

@@ -1,0 +1,150 @@
+"""Dark: what the detector counts without a beam, and what passes the mask with every slit shut.
+
+A check and an alarm reference: the night subtracts its own visits at `none`, never this value.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from math import sqrt
+from typing import Literal
+
+import numpy as np
+
+from daq.estimate.arrays import FloatArray
+from daq.tasks.contract import (
+    Ask,
+    Curve,
+    Outcome,
+    Panel,
+    Setting,
+    Taken,
+    Task,
+    counts_only,
+    fits,
+)
+
+DWELL_S, ROUNDS, PLACES = 10.0, 5, 5
+ONE_SIDED_95 = 1.645  # of a normal distribution
+CLOSED, DARK = "closed", "dark"
+
+
+def decision_and_limit(dark_hz: float, dark_s: float, closed_s: float) -> tuple[float, float]:
+    """Return decision threshold and detection limit of a rate above the dark one [1/s], 5 % errors each.
+
+    Notes
+    -----
+    The limit is that of counts: the variance of what is to be detected counts too.
+
+    References
+    ----------
+    .. [1] ISO 11929, gross and background counting; the forms of Anal. Chem. 40, 586 (1968), from memory.
+    """
+    decision = ONE_SIDED_95 * sqrt(dark_hz * (1 / closed_s + 1 / dark_s))
+    return decision, ONE_SIDED_95**2 / closed_s + 2 * decision
+
+
+def _asks(setting: Setting, taken: Sequence[Taken]) -> Sequence[Ask]:
+    """Return closed and dark visits in turn and back, at places over the range of the detector."""
+    if taken:
+        return ()
+    places = np.linspace(*_range_mm(setting), PLACES)
+    one = [CLOSED, DARK, DARK, CLOSED] if setting.shutter else [CLOSED, CLOSED]
+    return [
+        Ask(role, DWELL_S, float(place), 0, beam="" if not setting.shutter else _beam(role))
+        for _ in range(ROUNDS)
+        for place in places
+        for role in one
+    ]
+
+
+def _beam(role: str) -> Literal["open", "shut"]:
+    return "shut" if role == DARK else "open"
+
+
+def _range_mm(setting: Setting) -> tuple[float, float]:
+    places = setting.measurement.positions.places_mm
+    return min(places), max(places)
+
+
+def _fit(setting: Setting, taken: Sequence[Taken]) -> Outcome:
+    counts = {role: _counts(taken, role) for role in (CLOSED, DARK)}
+    closed = counts[CLOSED]
+    closed_hz, closed_se = _rate(closed)
+    chi2, dof = _even(closed)
+    values: dict[str, float | None] = {"closed_hz": closed_hz, "dark_hz": None, "leak_hz": None}
+    se: dict[str, float | None] = {"closed_hz": closed_se, "dark_hz": None, "leak_hz": None}
+    if len(counts[DARK]):
+        dark_hz, dark_se = _rate(counts[DARK])
+        limits = decision_and_limit(dark_hz, counts[DARK][:, 1].sum(), closed[:, 1].sum())
+        more, more_dof = _even(counts[DARK])
+        chi2, dof = chi2 + more, dof + more_dof
+        values |= {"dark_hz": dark_hz, "leak_hz": closed_hz - dark_hz}
+        values |= {"decision_hz": limits[0], "detection_limit_hz": limits[1]}
+        se |= {"dark_hz": dark_se, "leak_hz": sqrt(closed_se**2 + dark_se**2)}
+    verdict = fits(chi2, dof)
+    even = "even over place and time" if verdict == "pass" else "not even over place and time: look for light"
+    apart = _apart(values, se, setting.shutter)
+    return Outcome(
+        values=values,
+        se=se,
+        verdict=verdict,
+        sentence=(
+            f"With every slit shut the detector counts {closed_hz:.4g} +- {closed_se:.2g} a second{apart}; "
+            f"{even}."
+        ),
+        model="even rate",
+        panels=(_panel(taken, counts),),
+        chi2=chi2,
+        dof=dof,
+    )
+
+
+def _apart(values: dict[str, float | None], se: dict[str, float | None], shutter: bool) -> str:
+    if not shutter:
+        return " (dark and light together: the rig has no shutter)"
+    seen = "more" if (values["leak_hz"] or 0.0) > (values["decision_hz"] or 0.0) else "no more"
+    return f", {values['dark_hz']:.4g} with the beam shut, so {seen} than dark"
+
+
+def _counts(taken: Sequence[Taken], role: str) -> FloatArray:
+    """Return counts and live time of the visits of a role, shape (N, 2)."""
+    rows = [(reading.values[0], reading.live_s) for ask, reading in taken if ask.role == role]
+    return np.array(rows, float).reshape(-1, 2)
+
+
+def _rate(counts: FloatArray) -> tuple[float, float]:
+    total, live_s = counts.sum(axis=0)
+    return float(total / live_s), float(sqrt(max(total, 1.0)) / live_s)
+
+
+def _even(counts: FloatArray) -> tuple[float, int]:
+    """Return chi2 and degrees of freedom of counts against one rate."""
+    expected = counts[:, 1] * counts[:, 0].sum() / counts[:, 1].sum()
+    if not expected.min() > 0:
+        return 0.0, 0
+    return float(np.sum((counts[:, 0] - expected) ** 2 / expected)), len(counts) - 1
+
+
+def _panel(taken: Sequence[Taken], counts: dict[str, FloatArray]) -> Panel:
+    curves = []
+    for role, table in counts.items():
+        if not len(table):
+            continue
+        at = np.array([n for n, (ask, _) in enumerate(taken) if ask.role == role], float)
+        rate = table[:, 0] / table[:, 1]
+        bars = np.sqrt(np.maximum(table[:, 0], 1.0)) / table[:, 1]
+        curves.append(Curve(at, rate, role, bars))
+        curves.append(Curve(at, np.full(len(at), _rate(table)[0]), f"{role}, mean", line=True))
+    return Panel("Beam on and every slit shut; beam off", "visit", "counts a second", tuple(curves))
+
+
+TASK = Task(
+    name="dark",
+    purpose="What the detector counts with the beam off, and what passes the mask with every slit shut.",
+    days=1,
+    holds_for=("chip", "devices"),
+    lacks=counts_only,
+    asks=_asks,
+    fit=_fit,
+)
