@@ -86,6 +86,23 @@ _NIGHTS = {"nights": _plain("nights", "d"), "bias": _pm("bias", "bias_se", "+"),
 _COVERED = {"covers 68 %": _percent("coverage_68"), "covers 95 %": _percent("coverage_95")}
 
 _FORMS: dict[str, tuple[str, dict[str, Any]]] = {
+    "charts": (
+        "Charts: false alarms, delays, and what wakes in quiet weeks",
+        {
+            "changes, alarms or weeks": _plain("alarms", "d"),
+            "weeks from alarm to alarm": lambda found: (
+                _pm("weeks", "weeks_se")(found) if "weeks" in found else ""
+            ),
+            "in theory": _plain("theory"),
+            "delay of the chart [s]": lambda found: (
+                _pm("delay_s", "delay_se_s")(found) if "delay_s" in found else ""
+            ),
+            "told after [s]": _plain("told_s", ".0f"),
+            "step or slope told rightly": _percent("right"),
+            "wakes": _plain("wakes", "d"),
+            "notes": _plain("notes", "d"),
+        },
+    ),
     "chaos": (
         "Chaos: nights with faults of every kind, killed in a third",
         {
