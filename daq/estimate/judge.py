@@ -200,8 +200,10 @@ class Judge:
         self, place: _Place, counts: FloatArray, exposure: FloatArray, position_mm: float
     ) -> Quality:
         """Return whether a stand's counts leave the band about those of the first stand there."""
-        if place.first_hz is None:
+        if place.first_hz is None and counts.sum() > 0:
             place.first_hz = counts / exposure
+        if place.first_hz is None:
+            return Quality.GOOD  # in the dark: no band yet
         low, high = self.rules.rate_band
         if low <= counts.sum() / float(place.first_hz @ exposure) <= high:
             self._strayed = 0
