@@ -30,10 +30,11 @@ Model = Literal[
 
 
 class SourceSettings(Table):
-    """How the source drifts, relative; the kinds multiply."""
+    """How the source drifts, relative; the kinds multiply. `levels`: (run time [s], strength) in order."""
 
     linear_per_hour: float = 0.0
     random_walk_per_sqrt_hour: Annotated[float, Field(ge=0, le=10)] = 0.0
+    levels: tuple[tuple[float, Annotated[float, Field(ge=0)]], ...] = ()
 
 
 class ChannelSettings(Table):

@@ -23,6 +23,12 @@ def linear(per_hour: float) -> Factor:
     return lambda time_s: np.maximum(1.0 + per_hour * time_s / HOUR_S, 0.0)
 
 
+def between(levels: Sequence[tuple[float, float]]) -> Factor:
+    """Return the factor that has these values at these times [s], straight between, the same beyond."""
+    times_s, values = (np.array(column) for column in zip(*levels, strict=True))
+    return lambda time_s: np.interp(time_s, times_s, values)
+
+
 class RandomWalk:
     """The factor exp(W) of a random walk W of the logarithm, variance `per_sqrt_hour`**2 times hours.
 

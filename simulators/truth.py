@@ -15,7 +15,7 @@ from simulators.draws import generator
 from simulators.motion import NS, Track
 from simulators.settings import ChannelSettings, Settings
 from simulators.slits import Slits
-from simulators.source import Factor, RandomWalk, linear, mean_relative
+from simulators.source import Factor, RandomWalk, between, linear, mean_relative
 
 _MOVING_PARTS = 64  # parts into which a gate is cut while an axis moves
 
@@ -133,4 +133,5 @@ class Truth:
 
 def _factors(settings: Settings, seed: int) -> tuple[Factor, ...]:
     source = settings.source
-    return linear(source.linear_per_hour), RandomWalk(source.random_walk_per_sqrt_hour, seed)
+    found = (linear(source.linear_per_hour), RandomWalk(source.random_walk_per_sqrt_hour, seed))
+    return (*found, between(source.levels)) if source.levels else found

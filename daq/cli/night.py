@@ -20,6 +20,7 @@ from daq.itinerary import Itinerary
 from daq.records import Reading
 from daq.report import lines
 from daq.service.asked import Asked
+from daq.service.drift import with_drift
 from daq.service.ending import REASONS
 from daq.service.figures import figures_of
 from daq.service.load import Loaded, config_dir, load
@@ -71,6 +72,8 @@ def _carry_out(arguments: argparse.Namespace, transport: str, file: Path) -> Ans
 
 def _loaded(arguments: argparse.Namespace, file: Path) -> Loaded:
     loaded = load(file, wishes(arguments))
+    drift = getattr(arguments, "drift", None)
+    loaded = loaded if drift is None else with_drift(loaded, drift)
     faults = getattr(arguments, "faults", None)
     return loaded if faults is None else loaded.with_faults(faults)
 

@@ -85,6 +85,10 @@ def _night_words(commands: Any) -> None:
     _folders(rehearse)
     script = "a fault script: what goes wrong on the simulated bench, and when"
     rehearse.add_argument("--faults", type=Path, metavar="FILE", help=script)
+    source = (
+        "let the source drift as the description's pilot says (pilot), or as it did in a run (its folder)"
+    )
+    rehearse.add_argument("--drift", metavar="PILOT", help=source)
     rehearse.add_argument(
         "--page", action="store_true", help="show the live page; on a terminal it stays until Ctrl-C"
     )

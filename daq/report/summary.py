@@ -55,6 +55,7 @@ def summary(folder: Path, visits: xr.Dataset, digests: Mapping[str, str]) -> dic
         "truth_kappa": None if hidden.hides else meta.get("truth_kappa"),
         "stop": meta.get("stop"),
         "ended": meta.get("ended"),
+        "planned_se": meta.get("planned_se"),
         **digests,
     }
 

@@ -90,6 +90,7 @@ def _residual(figures: Mapping[str, Any]) -> list[str]:
         f"95 % over the whole night, whatever you do:     {_interval(figures['whole_night_95'])}",
         f"counting alone would give ± {figures['kappa_counting_se']:.2e}; "
         f"excess {figures['excess']:.2f} ± {figures['excess_se']:.2f}",
+        *_planned(figures),
         *_zero(figures),
     ]
     if figures["truth_kappa"] is not None:
@@ -142,6 +143,14 @@ def _moved(figures: Mapping[str, Any]) -> list[str]:
         f"95 % over the whole night, whatever you do:             {_interval(figures['whole_night_95'])}",
         f"counting alone would give about ± {figures['kappa_counting_se']:.1e}",
     ]
+
+
+def _planned(figures: Mapping[str, Any]) -> list[str]:
+    """Return what the plan said of the bar, beside what came out; only of a plan that was carried out."""
+    planned = figures.get("planned_se")
+    if planned is None or figures["visits_missing"]:
+        return []
+    return [f"the plan said ± {planned:.2e}: what came out is {figures['kappa_se'] / planned:.2f} of it"]
 
 
 def _zero(figures: Mapping[str, Any]) -> list[str]:

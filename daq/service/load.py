@@ -2,9 +2,10 @@
 
 from __future__ import annotations
 
+import json
 import math
 import tomllib
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
 from hashlib import sha256
 from importlib import resources
@@ -17,7 +18,7 @@ from daq.errors import DescriptionError
 from daq.itinerary import Itinerary, compose
 from daq.service.files import read_file, read_table
 
-DESCRIPTION, RIG, FAULTS = "description.toml", "rig.toml", "faults.toml"
+DESCRIPTION, RIG, FAULTS, LEVELS = "description.toml", "rig.toml", "faults.toml", "levels.json"
 LONGEST_H = 10_000
 
 
@@ -45,6 +46,22 @@ class Loaded:
         text = read_file(path)
         read_table(text, path)
         return replace(self, texts={**self.texts, FAULTS: text})
+
+    def with_levels(self, levels: Sequence[tuple[float, float]]) -> Loaded:
+        """Return the same with a source that stands at (run time [s], strength), straight between.
+
+        Raises
+        ------
+        DescriptionError
+            When the rig is not simulated.
+        """
+        if self.rig.bench is None:
+            raise DescriptionError((f"rig {self.rig.name!r} has no table [bench]: it cannot be rehearsed.",))
+        bench = {**self.rig.bench, "source": {"levels": [list(pair) for pair in levels]}}
+        text = json.dumps(bench["source"]["levels"]).encode()
+        return replace(
+            self, rig=self.rig.model_copy(update={"bench": bench}), texts={**self.texts, LEVELS: text}
+        )
 
     @property
     def faults(self) -> Mapping[str, Any] | None:
@@ -120,6 +137,8 @@ def load_rig(path: Path) -> Rig:
 def load_run(folder: Path, wishes: Wishes) -> Loaded:
     """Return the description that a run folder holds verbatim, with the wishes it was started with."""
     loaded = load_changed(folder, {}, wishes)
+    if (folder / LEVELS).exists():
+        loaded = loaded.with_levels(json.loads(read_file(folder / LEVELS)))
     return loaded.with_faults(folder / FAULTS) if (folder / FAULTS).exists() else loaded
 
 

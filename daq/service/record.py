@@ -13,7 +13,7 @@ from daq import openings
 from daq.description import Measurement, Rig
 from daq.estimate import kappa
 from daq.estimate.blinding import OPEN
-from daq.itinerary import Itinerary
+from daq.itinerary import Itinerary, forecast
 from daq.ports import Bench, Clock, Devices
 from daq.service.live import stamp
 from daq.service.load import Loaded
@@ -36,6 +36,7 @@ def record_of(
         "channels": max(entry.channels for entry in rig.devices.values()),
         "slices": rig.slices,
         **_judged_by(itinerary, devices),
+        "planned_se": forecast(itinerary, loaded.measurement).kappa_se,
         "started_utc": stamp(clock.utc_ns()),
         "bench_seed": None if bench is None else _bench_seed(loaded),
         "truth_kappa": None if bench is None else _truth(bench, itinerary, normalisation),
