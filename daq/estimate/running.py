@@ -24,7 +24,7 @@ from daq.estimate.visits import complete_pairs, no_visits, write
 from daq.estimate.whole import Estimate, estimate_visits
 from daq.records import EXCLUDING, Reading
 
-HISTORY_POINTS = 400  # the page draws no more
+HISTORY_POINTS = 60  # the page draws no more, so that a long run weighs what a short one does
 FITS_AT_ONCE = 40  # earlier ends of an irregular run that are fitted again when a run goes on
 
 
@@ -104,7 +104,7 @@ class Running:
         """Return what was known after each complete pair, in the order of the pairs; None while undefined.
 
         `hours` since the first gate, `kappa`, and both bands as `interval_low`, `interval_high`, `whole_low`,
-        `whole_high`; at most 400 pairs, evenly thinned, the last one always.
+        `whole_high`; at most 60 pairs, evenly thinned, the last one always.
         """
         pairs = complete_pairs(self._visits, self._plan).tolist()
         if pairs[: len(self._past_pairs)] != self._past_pairs:

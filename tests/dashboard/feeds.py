@@ -32,7 +32,13 @@ WARNING = {
 
 
 def feed(
-    slits: int = 3, pairs: int = 12, planned: int = 19, positions: int = 41, seed: int = 7, **changed: Any
+    slits: int = 3,
+    pairs: int = 12,
+    planned: int = 19,
+    positions: int = 41,
+    seed: int = 7,
+    columns: int = 120,
+    **changed: Any,
 ) -> dict[str, Any]:
     """Return the feed of a night of which so many pairs are done; `changed` replaces whole keys."""
     generator = np.random.default_rng(seed)
@@ -57,7 +63,7 @@ def feed(
         "openings": masks,
         **_rates(slits, place, pairs, generator),
         **_kappa(pairs, planned, generator),
-        "rate": _strip(hours, generator),
+        "rate": _strip(hours, generator, columns),
         "sensors": {"room_temperature": [294.464, "K"], "room_pressure": [101324.0, "Pa"]},
         "warnings": [],
         "holding": None,
@@ -198,7 +204,7 @@ def _end(ends: list[float] | None, side: int) -> float | None:
     return None if ends is None else ends[side]
 
 
-def _strip(hours: float, generator: np.random.Generator, columns: int = 300) -> dict[str, list[float]]:
+def _strip(hours: float, generator: np.random.Generator, columns: int) -> dict[str, list[float]]:
     """Return a rate that wanders by a percent, with one short dip early in the night."""
     walk = 41e3 * (1 + 0.01 * np.cumsum(generator.normal(0, 1, columns)) / math.sqrt(columns))
     low, high = walk - generator.uniform(60, 180, columns), walk + generator.uniform(60, 180, columns)

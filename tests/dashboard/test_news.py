@@ -12,6 +12,8 @@ import pytest
 from dash.exceptions import PreventUpdate
 from plotly.utils import PlotlyJSONEncoder
 
+from daq.estimate.running import HISTORY_POINTS
+from daq.service.strip import COLUMNS
 from dashboard.news import news
 from tests.dashboard.feeds import START, feed, put
 
@@ -31,8 +33,8 @@ def samples(content: Any) -> int:
 
 
 def full(**changed: Any) -> dict[str, Any]:
-    """Return a feed whose bounded parts are full: 400 pairs in the history, 400 columns in the strip."""
-    return feed(pairs=400, planned=600, positions=201, **changed)
+    """Return a feed whose bounded parts are full, at 201 positions."""
+    return feed(pairs=HISTORY_POINTS, planned=600, positions=201, columns=COLUMNS, **changed)
 
 
 def test_the_first_answer_holds_every_part(tmp_path: Path) -> None:
@@ -139,6 +141,16 @@ def test_a_refresh_of_everything_weighs_at_most_twelve_kilobytes(tmp_path: Path,
     answer = news(tmp_path, None, None, {}, START)
 
     assert weight({name: part for name, part in answer.items() if name.endswith("-data")}) <= 12_000
+
+
+def test_a_run_of_a_million_visits_weighs_hardly_more_than_one_of_a_thousand(tmp_path: Path) -> None:
+    """125 stands and 12 pairs at 41 positions, beside a history and a strip that are full."""
+    weights = []
+    for pairs, columns in ((12, min(125, COLUMNS)), (HISTORY_POINTS, COLUMNS)):
+        put(tmp_path, feed(pairs=pairs, planned=600, columns=columns))
+        weights.append(weight(news(tmp_path, None, None, {}, START)))
+
+    assert weights[1] <= 1.2 * weights[0]
 
 
 def test_history_and_strip_hold_at_most_four_thousand_samples() -> None:

@@ -185,7 +185,7 @@ def test_a_long_history_is_thinned_and_keeps_its_end() -> None:
 
     history = running.history()
 
-    assert len(history["kappa"]) == 268  # every third of 802 pairs, and the last
+    assert len(history["kappa"]) == 58  # every fourteenth of 802 pairs, and the last
     assert history["kappa"][-1] == pytest.approx(running.estimate().kappa, rel=1e-12)
 
 
