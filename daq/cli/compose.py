@@ -14,9 +14,11 @@ from daq.cli.plan import refuse_hopeless, wishes
 from daq.cli.toml import toml_text
 from daq.errors import DescriptionError
 from daq.itinerary import Forecast, Itinerary, forecast, pinned
-from daq.itinerary.advice import orders_compared, remedies, verdict
+from daq.itinerary.advice import cautions, orders_compared, remedies, verdict
 from daq.itinerary.pilot import HOUR_S
 from daq.service.load import DESCRIPTION, Loaded, load
+
+MANY = 1000.0  # from here two digits of Q are enough
 
 
 def compose(arguments: argparse.Namespace) -> Answer:
@@ -38,6 +40,7 @@ def compose(arguments: argparse.Namespace) -> Answer:
         "order": itinerary.order,
         "verdict": verdict(expected),
         "remedies": list(advice),
+        "cautions": list(cautions(itinerary)),
         "notes": list(itinerary.notes),
         "orders": {name: {"q": one.q, "kappa_se": one.kappa_se} for name, one in compared.items()},
     }
@@ -68,7 +71,8 @@ def _lines(
         f"{expected.total_s / HOUR_S:.2f} h in all, {expected.live_s / HOUR_S:.2f} h live "
         f"(duty {100 * expected.duty:.1f} %)"
     )
-    yield f"Q = {expected.q:.2f}: this much longer than an ideal night without moves and drift"
+    q = f"{expected.q:.2f}" if expected.q < MANY else f"{expected.q:.2g}"
+    yield f"Q = {q}: this much longer than an ideal night without moves and drift"
     yield from itinerary.notes
     yield ""
     yield from _budget_lines(expected.budget)
@@ -76,6 +80,7 @@ def _lines(
     yield from _order_lines(compared, itinerary.order)
     yield ""
     yield verdict(expected)
+    yield from cautions(itinerary)
     yield from advice
     for path in (arguments.write, arguments.picture):
         if path is not None:

@@ -71,7 +71,7 @@ def _carry_out(arguments: argparse.Namespace, transport: str, file: Path) -> Ans
 
 
 def _loaded(arguments: argparse.Namespace, file: Path) -> Loaded:
-    loaded = load(file, wishes(arguments))
+    loaded = load(file, wishes(arguments), getattr(arguments, "rig", None))
     drift = getattr(arguments, "drift", None)
     loaded = loaded if drift is None else with_drift(loaded, drift)
     faults = getattr(arguments, "faults", None)

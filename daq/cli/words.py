@@ -83,6 +83,8 @@ def _night_words(commands: Any) -> None:
     _wishes(rehearse)
     _link(rehearse)
     _folders(rehearse)
+    twin = "a simulated rig in the place of the measurement's own: the rehearsal that arming asks for"
+    rehearse.add_argument("--rig", type=Path, metavar="RIG", help=twin)
     script = "a fault script: what goes wrong on the simulated bench, and when"
     rehearse.add_argument("--faults", type=Path, metavar="FILE", help=script)
     source = (

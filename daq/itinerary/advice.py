@@ -31,6 +31,16 @@ def verdict(expected: Forecast) -> str:
     return f"The goal of ± {goal:.2e} is not met in {total_h:.1f} h, where {outcome}: it takes {hours:.1f} h."
 
 
+def cautions(itinerary: Itinerary) -> tuple[str, ...]:
+    """Return what a plan cannot give, however small its error bar."""
+    if itinerary.order != "blocked":
+        return ()
+    return (
+        "In this order drift of the source does not cancel: kappa is off by as much as the source drifts, "
+        "and the error bar cannot see it.",
+    )
+
+
 def remedies(measurement: Measurement, rig: Rig, itinerary: Itinerary, expected: Forecast) -> tuple[str, ...]:
     """Return what would meet the goal sooner, with figures, the greatest gain first; nothing if it is met."""
     if expected.goal_se is None or (expected.goal_s or 1e99) <= expected.total_s * (1 + 1e-9):

@@ -24,7 +24,15 @@ def lines(figures: Mapping[str, Any]) -> list[str]:
     """
     account = account_lines(figures)
     closing = closing_lines(figures)
-    parts = (_head(figures), _residual(figures), closing, account, _visits(figures), _archive(figures))
+    parts = (
+        _head(figures),
+        _residual(figures),
+        closing,
+        account,
+        _warnings(figures),
+        _visits(figures),
+        _archive(figures),
+    )
     return [line for part in parts if part for line in (*part, "")][:-1]
 
 
@@ -115,6 +123,13 @@ def _visits(figures: Mapping[str, Any]) -> list[str]:
         f"{figures['run_s'] / 3600:.2f} h from first to last gate{live}",
         *ending_lines(figures),
     ]
+
+
+def _warnings(figures: Mapping[str, Any]) -> list[str]:
+    found = figures.get("warnings") or ()
+    doubt = " (kappa is in doubt until somebody has looked)"
+    said = [f"{one['text']}{doubt if one['in_doubt'] else ''}" for one in found]
+    return ["Warnings at the end", *said] if said else []
 
 
 def _archive(figures: Mapping[str, Any]) -> list[str]:

@@ -107,8 +107,8 @@ def config_dir() -> Path:
     return packaged if packaged.is_dir() else Path(str(resources.files("daq"))).parent / "configs"
 
 
-def load(path: Path, wishes: Wishes = NO_WISHES) -> Loaded:
-    """Return a measurement and its rig from their files.
+def load(path: Path, wishes: Wishes = NO_WISHES, rig: Path | None = None) -> Loaded:
+    """Return a measurement and its rig from their files; `rig` takes the place of the rig that it names.
 
     Raises
     ------
@@ -118,7 +118,7 @@ def load(path: Path, wishes: Wishes = NO_WISHES) -> Loaded:
     text = read_file(path)
     table = read_table(text, path)
     rig_name = table.get("rig")
-    rig_path = path.parent / rig_name if isinstance(rig_name, str) else None
+    rig_path = rig or (path.parent / rig_name if isinstance(rig_name, str) else None)
     return _loaded(table, text, path, rig_path, wishes)
 
 

@@ -86,3 +86,11 @@ def test_a_run_on_real_hardware_has_no_truth():
 
     assert "truth" not in text
     assert "rehearsal" not in text
+
+
+def test_warnings_that_stood_at_the_end_are_in_the_report_with_their_doubt():
+    found = [{"text": "The rate fell.", "in_doubt": False}, {"text": "An opening is odd.", "in_doubt": True}]
+
+    told = "\n".join(lines(WHOLE | {"warnings": found}))
+
+    assert "Warnings at the end\nThe rate fell.\nAn opening is odd. (kappa is in doubt" in told

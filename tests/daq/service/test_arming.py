@@ -8,6 +8,7 @@ from pathlib import Path
 
 import pytest
 
+from daq.cli import main
 from daq.service.arming import CAUTIONS, checks, confirm, use_arming
 from daq.service.load import Loaded, load
 from daq.service.settings import Messages
@@ -92,6 +93,17 @@ def test_a_changed_description_is_not_armed(real, tmp_path):
 
 def test_a_rig_of_simulated_devices_needs_no_arming(tmp_path):
     assert use_arming(load(CONFIGS / "lantern.toml"), tmp_path) == ""
+
+
+def test_the_measurement_of_a_real_rig_is_rehearsed_on_a_simulated_twin(real, tmp_path, capsys):
+    twin = str(CONFIGS / "rigs" / "lantern.toml")
+    words = ["rehearse", str(tmp_path / "lantern.toml"), "--rig", twin, "--hours", "0.6", "--link", "direct"]
+
+    status = main([*words, "--into", str(tmp_path)])
+
+    (rehearsal,) = [one for one in checks(real, tmp_path, MAIL) if one.what == "rehearsal"]
+    assert status == 0
+    assert rehearsal.ok
 
 
 def test_checks_name_what_is_not_in_order(real, tmp_path):

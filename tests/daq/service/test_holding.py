@@ -111,11 +111,14 @@ def test_an_axis_with_an_alarm_or_without_its_reference_waits_for_a_person(tmp_p
     healthy = stage.state
     at_visit(night, 10, lambda: setattr(stage, "state", lambda: replace(healthy(), **state)))
     asking_when_held(night, "resume-at-bench")
-    shielded = night.devices.mask.show
-    night.devices.mask.show = lambda opening: (  # type: ignore[method-assign]
-        setattr(stage, "state", healthy) if night.holds else None,
-        shielded(opening),
-    )[1]
+    show = night.devices.mask.show
+
+    def mended_by_then(opening: int) -> float:
+        if night.holds:
+            stage.state = healthy  # type: ignore[method-assign]
+        return float(show(opening))
+
+    night.devices.mask.show = mended_by_then  # type: ignore[method-assign]
 
     ended = carry_out(night, Place(0))
 
@@ -146,11 +149,7 @@ def test_an_overloaded_detector_is_shut_off_and_puts_kappa_in_doubt(tmp_path):
     )
     doubts = list[bool]()
     settled = asking_when_held(night, "acknowledge", "resume-at-bench")
-    idle = night.alive
-    night.alive = lambda: (
-        doubts.append(any(one.says.in_doubt for one in night.live.watcher.standing)),
-        idle(),
-    )[1]
+    night.alive = lambda: doubts.append(any(one.says.in_doubt for one in night.live.watcher.standing))
 
     ended = carry_out(night, Place(0))
 
