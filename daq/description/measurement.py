@@ -230,6 +230,17 @@ class Hidden(Table):
         return self
 
 
+class Warn(Table):
+    """Above what a condition of the night becomes a note for the morning; nothing else depends on it."""
+
+    level_change: Positive = 0.05
+    step_change: Positive = 0.005
+    excess: Annotated[float, Field(ge=1)] = 1.47
+    left_out_share: Annotated[float, Field(gt=0, le=1)] = 0.05
+    load: Positive = 0.05
+    goal_margin: Annotated[float, Field(ge=1)] = 1.1
+
+
 class Measurement(Table):
     """A measurement as its file describes it."""
 
@@ -244,6 +255,7 @@ class Measurement(Table):
     pilot: Pilot | None = None
     estimate: Estimate = Estimate()
     quality: Quality = Quality()
+    warn: Warn = Warn()
     stop: Stop = Stop()
     blinding: Hidden | None = None
     notes: Mapping[str, Any] = {}

@@ -7,17 +7,23 @@ from dataclasses import dataclass, field
 
 from daq.estimate.shift import Shift
 
-LEVEL_CHANGE = 0.05  # relative change of the source that is worth a sentence
-STEP_CHANGE = 0.005  # relative size of a sudden change that is worth one
-EXCESS_LIMIT = 1.47  # 0.3 % of good nights of 19 pairs exceed it
-LEFT_OUT_SHARE = 0.05
 PAIRS_TO_JUDGE = 8
 MANY_STANDS = 5  # flagged by one rule: from here it is a pattern, not an accident
-LOAD_LIMIT = 0.05  # rate times dead time
-GOAL_MARGIN = 1.1
 GOES_ON = "Nothing; the run goes on."
 NO_COST = "Nothing."
 STAYS_GOOD = "kappa is still good"
+
+
+@dataclass(frozen=True, slots=True)
+class Thresholds:
+    """Above what a condition is worth a sentence; keys as in the table [warn] of the description."""
+
+    level_change: float = 0.05  # relative change of the source
+    step_change: float = 0.005  # relative size of a sudden change
+    excess: float = 1.47  # 0.3 % of good nights of 19 pairs exceed it
+    left_out_share: float = 0.05
+    load: float = 0.05  # rate times dead time
+    goal_margin: float = 1.1  # bar to come over the goal
 
 
 @dataclass(frozen=True, slots=True)
@@ -57,6 +63,7 @@ class Watched:
     forecast_se: float | None = None
     order: str = "zigzag"
     silent_sensors: Sequence[str] = ()
+    thresholds: Thresholds = Thresholds()
 
 
 def concerns(watched: Watched) -> tuple[Concern, ...]:
@@ -98,7 +105,7 @@ def _level(watched: Watched) -> Concern | None:
     first = sum(watched.levels[:10]) / 10
     last = sum(watched.levels[-10:]) / 10
     change = last / first - 1 if first else 0.0
-    if abs(change) < LEVEL_CHANGE:
+    if abs(change) < watched.thresholds.level_change:
         return None
     return Concern(
         "level",
@@ -112,7 +119,7 @@ def _level(watched: Watched) -> Concern | None:
 
 def _step(watched: Watched) -> Concern | None:
     shift = watched.shift
-    if shift is None or not shift.sudden or abs(shift.size) < STEP_CHANGE:
+    if shift is None or not shift.sudden or abs(shift.size) < watched.thresholds.step_change:
         return None
     return Concern(
         "step",
@@ -136,7 +143,7 @@ def _source_later(watched: Watched) -> str:
 
 
 def _excess(watched: Watched) -> Concern | None:
-    if watched.excess is None or watched.pairs < PAIRS_TO_JUDGE or watched.excess < EXCESS_LIMIT:
+    if watched.excess is None or watched.pairs < PAIRS_TO_JUDGE or watched.excess < watched.thresholds.excess:
         return None
     return Concern(
         "excess",
@@ -149,7 +156,7 @@ def _excess(watched: Watched) -> Concern | None:
 
 def _left_out(watched: Watched) -> Concern | None:
     share = watched.stands_left_out / watched.stands_done if watched.stands_done else 0.0
-    if share <= LEFT_OUT_SHARE:
+    if share <= watched.thresholds.left_out_share:
         return None
     return Concern(
         "left-out",
@@ -176,7 +183,7 @@ def _repeated(watched: Watched) -> Concern | None:
 
 
 def _load(watched: Watched) -> Concern | None:
-    if watched.load <= LOAD_LIMIT:
+    if watched.load <= watched.thresholds.load:
         return None
     return Concern(
         "load",
@@ -190,7 +197,12 @@ def _load(watched: Watched) -> Concern | None:
 
 def _goal(watched: Watched) -> Concern | None:
     goal, forecast = watched.goal_se, watched.forecast_se
-    if goal is None or forecast is None or watched.pairs < PAIRS_TO_JUDGE or forecast <= GOAL_MARGIN * goal:
+    if (
+        goal is None
+        or forecast is None
+        or watched.pairs < PAIRS_TO_JUDGE
+        or forecast <= watched.thresholds.goal_margin * goal
+    ):
         return None
     time = (forecast / goal) ** 2
     return Concern(

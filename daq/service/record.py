@@ -79,6 +79,7 @@ def settings_of(measurement: Measurement) -> dict[str, Any]:
         "monitor_channel": settings.monitor_channel,
         "heralded": settings.heralded and settings.heralded.model_dump(),
         "quality": measurement.quality.model_dump(),
+        "warn": measurement.warn.model_dump(),
         "normalisation": settings.normalisation,
         "dead_time_s": settings.dead_time_s,
         "dead_time_kind": settings.dead_time_kind,

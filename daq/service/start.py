@@ -25,6 +25,7 @@ from daq.ports import Bench, Clock, Devices
 from daq.records import Reading
 from daq.sequencer import State
 from daq.service.asked import Asked
+from daq.service.bench_records import earlier
 from daq.service.blind import at_hand, keep_promise, promise
 from daq.service.course import carry_out
 from daq.service.ending import record_of_end
@@ -76,7 +77,7 @@ def begin(loaded: Loaded, lab: Path, wanted: Wanted) -> tuple[Path, str]:
         _reference(devices, allowed=True)
         meta = record_of(loaded, itinerary, clock, devices, bench)
         folder = new_run_folder(lab, clock.utc_ns(), loaded.measurement.name)
-        meta["run"] = folder.name
+        meta |= {"run": folder.name, "bench_records": earlier(loaded, lab)}
         hidden = loaded.measurement.blinding
         if hidden is not None:
             meta |= promise(lab, folder.name, itinerary.slits, hidden.model_dump())

@@ -10,7 +10,7 @@ from daq.estimate.rows import DETECTOR
 from daq.estimate.shift import ShiftChart
 from daq.estimate.standing import Change, Standing, acknowledge, look_again
 from daq.estimate.wake import LATEST_STANDS, Closed, Danger, Held, dangers
-from daq.estimate.watch import Watched, concerns
+from daq.estimate.watch import Thresholds, Watched, concerns
 from daq.itinerary import Itinerary
 from daq.records import Quality, Reading
 from daq.service.strip import DUE_COUNTS, Strip
@@ -146,5 +146,6 @@ class Watcher:
             goal_se=self._figures.get("goal_se"),
             forecast_se=self._figures.get("forecast_se"),
             order=self._itinerary.order,
+            thresholds=Thresholds(**self._meta.get("warn", {})),
             silent_sensors=[name for name, times in self._silent.items() if times >= SILENT_STANDS * many],
         )

@@ -126,6 +126,17 @@ def test_another_quality_rule_changes_flags_and_no_count(source, tmp_path, capsy
     assert set(flags.tolist()) == {0, 128}  # the step of the clock is none by the new rule
 
 
+def test_changed_thresholds_change_the_warnings_and_nothing_else(source, tmp_path, capsys):
+    _, figures = replay(
+        source, tmp_path, capsys, "--set", "warn.level_change=1e-4", "--set", "warn.load=1e-9"
+    )
+
+    assert figures["same_digest"] and figures["same_times"]
+    assert changed(figures) == {"warnings"}
+    (row,) = (row for row in figures["differences"] if row["figure"] == "warnings")
+    assert "load" in row["new"] and "load" not in row["old"]
+
+
 def test_a_fault_laid_over_a_replay_costs_time_and_no_count(source, tmp_path, capsys):
     script = tmp_path / "over.toml"
     script.write_text('[[fault]]\ndevice = "counter"\nkind = "drop"\nat_s = 300\nseconds = 30\n')

@@ -36,9 +36,18 @@ REQUIRED = {
     "itinerary": ("visits_planned", "visits_per_stand", "planned_pairs", "order", "weights", "signs"),
     "estimate": ("dead_time_s", "dead_time_kind", "dead_time_u_s", "counting", "blinding"),
     "integrity": ("digest", "gate_digest"),
+    "calibrations": ("bench_records",),
     "notes": ("notes",),
 }
-EMPTY_ALLOWED = {"plan_notes", "notes", "software.command", "software.commit", "software.changed", "wishes"}
+EMPTY_ALLOWED = {
+    "bench_records",
+    "plan_notes",
+    "notes",
+    "software.command",
+    "software.commit",
+    "software.changed",
+    "wishes",
+}
 
 
 @pytest.fixture(scope="module")
