@@ -13,7 +13,7 @@ from typing import Any
 
 from daq.cli.answer import Answer
 from daq.errors import DescriptionError
-from daq.report.text import with_error
+from daq.report.numbers import with_error
 from daq.service.requests import ask, current_run
 from daq.storage.feed import read_feed
 from daq.storage.lab import there

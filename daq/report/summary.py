@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
+from dataclasses import asdict
 from pathlib import Path
 from typing import Any
 
@@ -15,6 +16,7 @@ from daq.estimate.account import Account, account_of
 from daq.estimate.blinding import OPEN, Blinding
 from daq.estimate.budget import SYSTEMATIC, Budget
 from daq.estimate.closing import closing_of
+from daq.estimate.geometry import geometry_of
 from daq.estimate.rejudge import rejudged
 from daq.estimate.shown import shown_table
 
@@ -48,6 +50,7 @@ def summary(folder: Path, visits: xr.Dataset, digests: Mapping[str, str]) -> dic
         "account": _shown_account(account, hidden),
         **closing.to_json(),
         "blinding": hidden.state,
+        "geometry": None if (found := geometry_of(visits)) is None else asdict(found),
         **_judged(visits),
         "openings_missing": _missing(visits),
         **_tally(visits),

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import math
 from collections.abc import Mapping
 from typing import Any
 
@@ -10,8 +9,8 @@ from daq.estimate.blinding import Blinding
 from daq.estimate.stopping import ONCE, WHOLE_NIGHT
 from daq.report.account import account_lines
 from daq.report.closing import closing_lines, ending_lines
-
-MINUS = "−"
+from daq.report.geometry import geometry_lines
+from daq.report.numbers import number, signed, with_error
 
 
 def lines(figures: Mapping[str, Any]) -> list[str]:
@@ -24,9 +23,13 @@ def lines(figures: Mapping[str, Any]) -> list[str]:
     """
     account = account_lines(figures)
     closing = closing_lines(figures)
+    geometry, residual = geometry_lines(figures), _residual(figures)
+    if geometry:
+        residual = ["Nothing of the slits accounted for:", *residual]
     parts = (
         _head(figures),
-        _residual(figures),
+        geometry,
+        residual,
         closing,
         account,
         _warnings(figures),
@@ -36,18 +39,9 @@ def lines(figures: Mapping[str, Any]) -> list[str]:
     return [line for part in parts if part for line in (*part, "")][:-1]
 
 
-def with_error(value: float, se: float) -> str:
-    """Return a value and its error in one power of ten, the error to two decimals: "−0.05e-04 ± 1.06e-04"."""
-    if not (se > 0 and math.isfinite(se) and math.isfinite(value)):
-        return f"{_signed(value)} ± {se:.2e}"
-    power = math.floor(math.log10(se))
-    scaled = _number(value / 10.0**power, "+.2f")
-    return f"{scaled}e{power:+03d} ± {se / 10.0**power:.2f}e{power:+03d}"
-
-
 def _truth(value: float, se: float) -> str:
     """Return the truth; a rounding error of the arithmetic is none."""
-    return "0" if abs(value) < 1e-6 * se else _signed(value)
+    return "0" if abs(value) < 1e-6 * se else signed(value)
 
 
 def _head(figures: Mapping[str, Any]) -> list[str]:
@@ -69,7 +63,7 @@ def _damage(figures: Mapping[str, Any]) -> list[str]:
     if not figures["damaged"]:
         return []
     then = figures["recorded_kappa"]
-    recorded = "" if then is None else f" When it was finished, kappa was {_signed(then)}."
+    recorded = "" if then is None else f" When it was finished, kappa was {signed(then)}."
     return [
         "DAMAGED: a part of this archive is lost. What follows rests on what is good, not on the whole run."
         + recorded,
@@ -87,7 +81,7 @@ def _residual(figures: Mapping[str, Any]) -> list[str]:
     if not figures["printable"]:
         return [
             "The pairwise terms are too small to divide by: the plain residual is given instead of kappa.",
-            f"epsilon = {_signed(figures['epsilon'])} ± {figures['epsilon_se']:.3g} per second",
+            f"epsilon = {signed(figures['epsilon'])} ± {figures['epsilon_se']:.3g} per second",
         ]
     if Blinding(figures["blinding"]).hides:
         return _moved(figures)
@@ -104,7 +98,7 @@ def _residual(figures: Mapping[str, Any]) -> list[str]:
     if figures["truth_kappa"] is not None:
         off = (figures["kappa"] - figures["truth_kappa"]) / figures["kappa_se"]
         truth = _truth(figures["truth_kappa"], figures["kappa_se"])
-        found.append(f"simulated truth {truth}: off by {_number(off, '.2f')} standard errors")
+        found.append(f"simulated truth {truth}: off by {number(off, '.2f')} standard errors")
     return found
 
 
@@ -136,23 +130,15 @@ def _archive(figures: Mapping[str, Any]) -> list[str]:
     return [f"archive {figures['run']}", f"digest  {figures['digest']}"]
 
 
-def _signed(value: float) -> str:
-    return _number(value, "+.3e")
-
-
-def _number(value: float, form: str) -> str:
-    return format(value, form).replace("-", MINUS, 1) if value < 0 else format(value, form)
-
-
 def _interval(interval: tuple[float, float] | None) -> str:
-    return "not yet" if interval is None else f"{_signed(interval[0])} to {_signed(interval[1])}"
+    return "not yet" if interval is None else f"{signed(interval[0])} to {signed(interval[1])}"
 
 
 def _moved(figures: Mapping[str, Any]) -> list[str]:
     """Return what may be said while blinded: no zero, no limit, nothing that a zero could be read from."""
     return [
         f"This run is blinded ({figures['blinding']}): kappa is moved by a hidden offset and rounded.",
-        f"kappa + offset = {_signed(figures['kappa'])} ± {figures['kappa_se']:.1e} "
+        f"kappa + offset = {signed(figures['kappa'])} ± {figures['kappa_se']:.1e} "
         f"(jackknife over {figures['pairs']} pairs)",
         f"95 % interval of that, if read once at the planned end: {_interval(figures['interval_95'])}",
         f"95 % over the whole night, whatever you do:             {_interval(figures['whole_night_95'])}",

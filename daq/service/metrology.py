@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
+from dataclasses import asdict
 from typing import Any
 
 import numpy as np
@@ -24,7 +25,7 @@ def described(loaded: Loaded, itinerary: Itinerary) -> dict[str, Any]:
     """Return what the description says of systematic errors.
 
     `slit_loads`: change of kappa for the uncertainty of each slit; `slope_per_mm` of the log of the expected
-    rates by detector position.
+    rates by detector position; `cuts`: every slit as it was measured, where openings have slits of their own.
     """
     rig, places_mm = loaded.rig, itinerary.positions_mm
     shown = {
@@ -35,7 +36,14 @@ def described(loaded: Loaded, itinerary: Itinerary) -> dict[str, Any]:
     plan = plan_of(itinerary, loaded.measurement)
     loads = slit_loads(_instances(rig), plan, lambda changed: _rates_hz(loaded, places_mm, changed))
     slope = np.log(np.maximum(above, TINY_HZ) / np.maximum(below, TINY_HZ)) / (2 * STEP_MM)
-    return {"slit_loads": loads, "slope_per_mm": slope.tolist()}
+    return {"slit_loads": loads, "slope_per_mm": slope.tolist(), "cuts": _cuts(rig)}
+
+
+def _cuts(rig: Rig) -> dict[str, Any] | None:
+    """Return the metrology of a mask with slits cut apart; None where all openings share them."""
+    if not any(shown.cuts for shown in rig.mask.openings.values()):
+        return None
+    return {**rig.geometry.model_dump(), "slits": [asdict(one) for one in _instances(rig)]}
 
 
 def _rates_hz(loaded: Loaded, places_mm: FloatArray, shown: Mapping[int, Slits]) -> FloatArray:

@@ -66,6 +66,10 @@ def _plain(key: str, form: str = ".3f") -> Any:
     return lambda found: format(found[key], form) if key in found else ""
 
 
+def _scaled(key: str, factor: float) -> Any:
+    return lambda found: format(found[key] * factor, ".2f") if key in found else ""
+
+
 def _percent(key: str) -> Any:
     return lambda found: f"{100 * found[key]:.1f} %" if key in found else ""
 
@@ -144,6 +148,18 @@ _FORMS: dict[str, tuple[str, dict[str, Any]]] = {
             "faults": _plain("faults", "d"),
             "found": _percent("found"),
             "wrongly named": _percent("wrongly_named"),
+        },
+    ),
+    "cuts": (
+        "Slits cut apart (kappa in 1e-4, the truth is zero)",
+        {
+            "draws": _plain("nights", "d"),
+            "before, rms": _scaled("before_rms", 1e4),
+            "after, rms": _scaled("rms", 1e4),
+            "covers 95 %": _percent("coverage_95"),
+            "all patterns, rms": _scaled("joint_rms", 1e4),
+            "chi-squared over freedom": _plain("chi2_over_dof"),
+            "flagged": _percent("flagged"),
         },
     ),
     "plan_orders": (
