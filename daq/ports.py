@@ -139,7 +139,10 @@ class Mask(Protocol):
 
 @dataclass(frozen=True, slots=True)
 class Counted:
-    """The counter's part of a Reading."""
+    """The counter's part of a Reading.
+
+    `events` of list mode: little-endian uint64, ticks since the gate opened times channels, plus channel.
+    """
 
     values: tuple[float, ...]
     live_s: float
@@ -148,6 +151,7 @@ class Counted:
     values_var: tuple[float, ...] | None = None
     repeats: int = 1
     slices: tuple[tuple[int, ...], ...] | None = None
+    events: bytes | None = None
 
 
 class Counter(Device, Protocol):

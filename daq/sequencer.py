@@ -226,6 +226,7 @@ def _reading(
         values_var=counted.values_var,
         repeats=counted.repeats,
         slices=counted.slices,
+        events=counted.events,
         encoder_mm={axis: (gate.axes[axis].encoder_mm, closed[axis].encoder_mm) for axis in gate.axes},
         sensors={key: value for values in sensed.values() for key, value in values.items()},
         quality=_counter_quality(counted)

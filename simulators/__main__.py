@@ -48,8 +48,8 @@ def _serve(rig: Rig, faults: Mapping[str, Any] | None) -> None:
     built = build(rig, settings, settings.seed, clock, {}, upsets)
     try:
         listeners = {
-            name: listen(rig.devices[name].address, instrument)
-            for name, instrument in built.served(clock).items()
+            name: listen(address, instrument)
+            for name, (address, instrument) in built.served(rig, clock).items()
         }
     except OSError as error:
         problem = f"rig {rig.name}: an address of [devices] cannot be listened on ({error}). Free its port."

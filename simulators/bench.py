@@ -4,12 +4,12 @@ from __future__ import annotations
 
 import json
 from collections.abc import Callable, Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from functools import partial
 from typing import Any, Literal
 
 from daq.description import Rig
-from daq.description.rig import DeviceEntry
+from daq.description.device import DeviceEntry
 from daq.errors import DescriptionError
 from daq.ports import Clock
 from simulators.clock import VirtualClock
@@ -17,6 +17,7 @@ from simulators.counters import GatedCounter
 from simulators.faults import Struck, read_script
 from simulators.gauge import Gauge, ShutterBox
 from simulators.hosts import Host, Instrument, serve
+from simulators.listmode import PARTS, EventStream
 from simulators.modbus import ModbusRoom
 from simulators.motion import Track
 from simulators.powermeter import PowerMeter
@@ -39,12 +40,18 @@ class Built:
     tracks: Mapping[str, Track]
     truth: Truth
     upsets: Upsets | None = None
+    streams: Mapping[str, Instrument] = field(default_factory=dict)
 
-    def served(self, clock: Clock) -> Mapping[str, Instrument]:
-        """Return the instruments as hosts serve them: their replies may be spoilt when there are upsets."""
-        if self.upsets is None:
-            return self.instruments
-        return {name: Spoilt(name, one, self.upsets, clock) for name, one in self.instruments.items()}
+    def served(self, rig: Rig, clock: Clock) -> Mapping[str, tuple[str, Instrument]]:
+        """Return address and instrument, as hosts serve it, by name; replies may be spoilt by upsets."""
+        spoilt = {
+            name: one if self.upsets is None else Spoilt(name, one, self.upsets, clock)
+            for name, one in self.instruments.items()
+        }
+        return {
+            **{name: (rig.devices[name].address, one) for name, one in spoilt.items()},
+            **{f"{name}.stream": (str(rig.devices[name].stream), one) for name, one in self.streams.items()},
+        }
 
 
 class WaveletBench:
@@ -120,8 +127,8 @@ def open_bench(
     upsets = None if script is None else Upsets(clock, clock.step_utc)
     built = build(rig, settings, settings.seed if seed is None else seed, clock, kept["axes"], upsets)
     hosts = {
-        name: serve(clock, rig.devices[name].address, instrument, transport)
-        for name, instrument in built.served(clock).items()
+        name: serve(clock, address, instrument, transport)
+        for name, (address, instrument) in built.served(rig, clock).items()
     }
     if upsets and script:
         upsets.begin(script, hosts, built.instruments, built.tracks)
@@ -159,6 +166,9 @@ def build(
         "gcode-stage": lambda name: _controller(StageController, name, rig, tracks, clock),
         "scpi-stage": lambda name: _controller(partial(ScpiStage, name), name, rig, tracks, clock),
         "scpi-counter": lambda name: GatedCounter(name, partial(counts, name), settings.readout_s, clock),
+        "list-mode-counter": lambda name: GatedCounter(
+            name, partial(counts, name), settings.readout_s, clock, PARTS
+        ),
         "scpi-totaliser-26": lambda name: Totaliser(name, partial(count, name), 26, clock),
         "scpi-totaliser-32": lambda name: Totaliser(name, partial(count, name), 32, clock),
         "scpi-frequency": lambda name: FrequencyMeter(name, partial(count, name), clock),
@@ -186,7 +196,12 @@ def build(
     if "shutter" in models.values():
         truth.behind(shutter)
     instruments = {name: makers[model](name) for name, model in models.items()}
-    return Built(instruments, tracks, truth, upsets)
+    streams = {
+        name: EventStream.of(one, rig.devices[name], settings.dead_time_s, seed, clock)
+        for name, one in instruments.items()
+        if isinstance(one, GatedCounter) and rig.devices[name].stream is not None
+    }
+    return Built(instruments, tracks, truth, upsets, streams)
 
 
 def _track(limits_mm: tuple[float, float], kept: Mapping[str, float] | None) -> Track:

@@ -21,6 +21,7 @@ own, within the rules of SCPI-1999.
 
 from __future__ import annotations
 
+import threading
 from collections.abc import Callable, Iterable
 from dataclasses import dataclass
 from itertools import pairwise
@@ -54,20 +55,26 @@ Count = Callable[[int, int], tuple[int, ...]]
 class GatedCounter:
     """A counter; `count` draws what each channel has counted, from opening and end of a gate or a part [ns].
 
+    Parameters
+    ----------
+    parts
+        In how many parts at least a gate is drawn, whether they are asked for or not.
+
     Attributes
     ----------
-    opened
-        Told the number of every gate that opens.
+    watchers
+        Told of every gate that opens.
     """
 
-    def __init__(self, name: str, count: Count, readout_s: float, clock: Clock) -> None:
+    def __init__(self, name: str, count: Count, readout_s: float, clock: Clock, parts: int = 1) -> None:
         self._count, self._readout_ns, self._clock = count, round(readout_s * NS), clock
         self._width_ns = round(_RESET_S * NS)
         self._gates = 0
-        self.opened: Callable[[int], None] = lambda number: None
+        self.watchers: list[Callable[[Gate], None]] = []
         self._gate: Gate | None = None
-        self._slices = 0
+        self._slices, self._least_parts = 0, parts
         self._counted: tuple[tuple[int, ...], ...] = ()  # by part of the gate
+        self._drawing = threading.Lock()
         status = Status(self._condition, lambda: bool(self._interpreter.responses))
         commands = {
             "*IDN?": Command(lambda: f"tercet simulators,gated counter,{name},1"),
@@ -115,7 +122,8 @@ class GatedCounter:
         open_ns = self._clock.now_ns()
         self._gate = Gate(self._gates, open_ns, open_ns + self._width_ns)
         self._counted = ()
-        self.opened(self._gates)
+        for watcher in self.watchers:
+            watcher(self._gate)
 
     def _fetch(self) -> str:
         if self._gate is None:
@@ -123,17 +131,26 @@ class GatedCounter:
         return "BUSY" if self._condition() else self._answer_of(self._gate)
 
     def _answer_of(self, gate: Gate) -> str:
-        if not self._counted:
-            self._counted = tuple(self._count(*part) for part in self._parts(gate))
-        counts = tuple(map(sum, zip(*self._counted, strict=True)))
-        numbers = [*counts, *(count for part in self._counted if self._slices for count in part)]
+        drawn = self.drawn(gate)
+        counts = tuple(map(sum, zip(*drawn, strict=True)))
+        numbers = [*counts, *(count for part in drawn if self._slices for count in part)]
         width_s, overflow = (gate.close_ns - gate.open_ns) / NS, int(max(counts) > CAPACITY)
         return (
             f"{gate.number},{width_s:.9f},{overflow},{','.join(str(min(one, CAPACITY)) for one in numbers)}"
         )
 
-    def _parts(self, gate: Gate) -> Iterable[tuple[int, int]]:
-        parts, width_ns = max(self._slices, 1), gate.close_ns - gate.open_ns
+    def drawn(self, gate: Gate) -> tuple[tuple[int, ...], ...]:
+        """Return what each channel counted in each part of a gate, nothing for one that was given up."""
+        with self._drawing:  # on a real clock a stream of events asks from a thread of its own
+            if gate is not self._gate:
+                return ()
+            if not self._counted:
+                self._counted = tuple(self._count(*part) for part in self.parts(gate))
+            return self._counted
+
+    def parts(self, gate: Gate) -> Iterable[tuple[int, int]]:
+        """Return opening and end of every part of a gate [ns]."""
+        parts, width_ns = self._slices or self._least_parts, gate.close_ns - gate.open_ns
         return pairwise(gate.open_ns + width_ns * part // parts for part in range(parts + 1))
 
     def _abort(self) -> None:

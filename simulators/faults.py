@@ -33,8 +33,8 @@ from typing import Annotated, Any, Literal
 from pydantic import Field, ValidationError, model_validator
 
 from daq.description import Rig
+from daq.description.device import DeviceEntry
 from daq.description.problems import ProblemsError, Table, every_problem
-from daq.description.rig import DeviceEntry
 from daq.errors import DescriptionError
 from daq.ports import Clock
 from simulators.draws import generator

@@ -9,7 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from daq.ports import Clock
-from simulators.counters import CAPACITY, GatedCounter
+from simulators.counters import CAPACITY, Gate, GatedCounter
 from simulators.faults import Fault, Faults, Script
 from simulators.gauge import Gauge
 from simulators.hosts import Instrument, Send, Session
@@ -95,7 +95,11 @@ class Upsets:
         self.faults = Faults(script, self._clock, acts)
         for instrument in instruments.values():
             if isinstance(instrument, GatedCounter):
-                instrument.opened = self.faults.gate_opened
+                instrument.watchers.append(self._opened)
+
+    def _opened(self, gate: Gate) -> None:
+        if self.faults:
+            self.faults.gate_opened(gate.number)
 
     def counted(self, device: str, open_ns: int, close_ns: int, counts: int) -> int:
         """Return what a counter makes of the counts of one gate."""

@@ -7,8 +7,7 @@ from typing import Annotated, Any, Literal
 
 from pydantic import AfterValidator, Field, model_validator
 
-from daq.description.problems import ProblemsError, Table
-from daq.description.rig import NotNegative, Positive
+from daq.description.problems import NotNegative, Positive, ProblemsError, Table
 
 
 class Positions(Table):

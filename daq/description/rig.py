@@ -8,12 +8,10 @@ from typing import Annotated, Any, Literal
 from pydantic import Field, field_validator, model_validator
 
 from daq import openings
-from daq.description.address import Address, same_place
-from daq.description.dialect import Dialect
-from daq.description.problems import ProblemsError, Table
+from daq.description.address import same_place
+from daq.description.device import DeviceEntry
+from daq.description.problems import NotNegative, Positive, ProblemsError, Table
 
-Positive = Annotated[float, Field(gt=0)]
-NotNegative = Annotated[float, Field(ge=0)]
 SlitLetter = Literal["A", "B", "C", "D", "E"]
 
 
@@ -97,45 +95,6 @@ class Axis(Table):
         return self.settle_s + abs(distance_mm) / self.speed_mm_s + self.takeup_s
 
 
-class Register(Table):
-    """A quantity in the registers of a Modbus device: value = offset + factor * number."""
-
-    at: Annotated[int, Field(ge=0, le=65535)]
-    kind: Literal["u16", "i16", "u32", "i32", "f32"] = "u16"
-    table: Literal["input", "holding"] = "input"
-    unit: str
-    factor: float = 1.0
-    offset: float = 0.0
-
-
-class DeviceEntry(Table):
-    """A device: which driver speaks to it, and where.
-
-    `dialect` is a path beside the rig file; whoever reads the file puts the dialect itself there.
-    """
-
-    driver: str
-    dialect: Dialect | None = None
-    address: Address
-    timeout_s: Positive = 1.0
-    every_s: Positive = 60.0
-    readout_s: NotNegative = 0.0
-    shortest_gate_s: NotNegative = 0.0
-    channels: Annotated[int, Field(ge=1, le=64)] = 1
-    slices: Annotated[int, Field(ge=0, le=1000)] = 0
-    unit: Annotated[int, Field(ge=0, le=247)] = 1
-    registers: Mapping[str, Register] = {}
-    late_s: NotNegative = 1.5
-
-    @model_validator(mode="after")
-    def _dialect_belongs(self) -> DeviceEntry:
-        if (self.driver == "dialect") != (self.dialect is not None):
-            raise ValueError("the driver 'dialect', and no other, needs a dialect file")
-        if (self.driver == "modbus-sensor") != bool(self.registers):
-            raise ValueError("the driver 'modbus-sensor', and no other, needs registers")
-        return self
-
-
 def _what_remains(have: Mapping[str, Shown], wanted: set[str]) -> str:
     """Return which interference terms a mask without all openings can still give, as words."""
     masks = {openings.mask(name) for name in have}
@@ -169,6 +128,7 @@ class Rig(Table):
             *self._opening_problems(),
             *self._dialect_problems(),
             *same_place({name: entry.address for name, entry in self.devices.items()}),
+            *same_place({f"{name}.stream": one.stream for name, one in self.devices.items() if one.stream}),
         ]
         if found:
             raise ProblemsError(found)
@@ -281,6 +241,14 @@ class Rig(Table):
     def slices(self) -> int:
         """Into how many equal parts the counter divides a gate, 0 when it does not."""
         return max((entry.slices for entry in self.devices.values()), default=0)
+
+    @property
+    def list_mode(self) -> Mapping[str, float] | None:
+        """Unit of the event times [s] and channels of a counter in list mode, None without one."""
+        found = [entry for entry in self.devices.values() if entry.stream is not None]
+        return (
+            {"tick_s": found[0].tick_s / found[0].channels, "channels": found[0].channels} if found else None
+        )
 
     @property
     def shortest_gate_s(self) -> float:

@@ -5,7 +5,8 @@ from __future__ import annotations
 import math
 import re
 
-from daq.description.rig import DeviceEntry, Rig
+from daq.description.device import DeviceEntry
+from daq.description.rig import Rig
 from daq.devices.links import Link
 from daq.devices.slices import adds_up, in_slices, whole_numbers
 from daq.devices.wire import Wire

@@ -5,7 +5,8 @@ from __future__ import annotations
 import math
 from collections.abc import Mapping, Sequence
 
-from daq.description.rig import Axis, DeviceEntry, Rig
+from daq.description.device import DeviceEntry
+from daq.description.rig import Axis, Rig
 from daq.devices.axis import LinearStage
 from daq.devices.dialect_counter import DialectCounter
 from daq.devices.spoken import Spoken, number

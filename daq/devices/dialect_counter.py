@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 import re
 
-from daq.description.rig import DeviceEntry
+from daq.description.device import DeviceEntry
 from daq.devices.rollover import counted_between, longest_s
 from daq.devices.slices import Slices, adds_up, in_slices, whole_numbers
 from daq.devices.spoken import Spoken, number

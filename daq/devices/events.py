@@ -4,8 +4,9 @@
 word        bits
 ==========  ================================================================================================
 32 bits     31: special; 30-25: channel; 24-0: tag. Special: 63 the tag counter has rolled over (tag: how
-            often), 62 events were lost (tag: how many)
-64 bits     63: special; 62-56: channel; 55-0: tag. Special: 127 rolled over, 126 lost
+            often), 62 events were lost (tag: how many), 61 a gate has opened, 60 it has closed (tag: number
+            of the gate)
+64 bits     63: special; 62-56: channel; 55-0: tag. Special: 127 rolled over, 126 lost, 125 opened, 124 closed
 ==========  ================================================================================================
 
 Little-endian; the tag counts ticks and is continued over roll-overs, so that a time is known however long the
@@ -42,6 +43,16 @@ class Layout:
         """The special number of a roll-over; the one below it marks losses."""
         return (1 << self.channel_bits) - 1
 
+    @property
+    def opened(self) -> int:
+        """The special number of a gate's opening."""
+        return self.rolled - 2
+
+    @property
+    def closed(self) -> int:
+        """The special number of a gate's end, the lowest of all."""
+        return self.rolled - 3
+
     def event(self, channel: int, tag: int) -> int:
         """Return the word of an event."""
         return channel << self.tag_bits | tag & (1 << self.tag_bits) - 1
@@ -69,7 +80,7 @@ class Binned:
 
 
 class Binner:
-    """Sorts the words of one gate into slices of equal length; half a word waits for the next chunk.
+    """Sorts the words of one gate into slices of equal length.
 
     Parameters
     ----------
@@ -88,22 +99,11 @@ class Binner:
     ) -> None:
         self.binned = Binned(np.zeros((slices, channels), dtype=np.int64))
         self._layout, self._first_tick, self._ticks = layout, first_tick, ticks
-        self._rest = b""
         self._sort = _compiled() if compiled and find_spec("numba") else sort_words
 
-    def feed(self, chunk: bytes) -> None:
-        """Take bytes as they come."""
-        data = self._rest + chunk if self._rest else chunk
-        size = np.dtype(self._layout.dtype).itemsize
-        whole = len(data) - len(data) % size
-        self._rest = bytes(data[whole:])
-        self._sort(
-            np.frombuffer(data, self._layout.dtype, whole // size),
-            self.binned,
-            self._layout,
-            self._first_tick,
-            self._ticks,
-        )
+    def sort(self, words: Words) -> None:
+        """Take whole words as they come."""
+        self._sort(words, self.binned, self._layout, self._first_tick, self._ticks)
 
 
 Sort = Callable[[Words, Binned, Layout, int, int], None]
@@ -119,6 +119,23 @@ def sort_words(words: Words, binned: Binned, layout: Layout, first_tick: int, ti
             _take_special(int(stretch[place]), binned, layout)
             begun = place + 1
         _add(stretch[begun:], binned, layout, first_tick, ticks)
+
+
+def times_of(words: Words, layout: Layout, rolled: int, channels: int) -> NDArray[np.uint64]:
+    """Return when events came, in ticks times channels, plus the channel; `rolled` roll-overs came before.
+
+    An event of a channel that is not one of them is left out.
+    """
+    number = words >> words.dtype.type(layout.tag_bits)
+    ticks = (words & words.dtype.type((1 << layout.tag_bits) - 1)).astype(np.uint64)
+    special = words >= words.dtype.type(1 << (layout.bits - 1))
+    turns: Any = np.uint64(rolled)
+    if special.any():
+        rolls = number == words.dtype.type(layout.rolled | 1 << layout.channel_bits)
+        turns = turns + np.cumsum(np.where(rolls, ticks, np.uint64(0)))
+    times = (ticks + (turns << np.uint64(layout.tag_bits))) * np.uint64(channels) + number
+    good = number < channels  # a special word's number is above every channel's
+    return times if good.all() else times[good]
 
 
 def _take_special(word: int, binned: Binned, layout: Layout) -> None:

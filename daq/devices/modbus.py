@@ -23,7 +23,8 @@ from pymodbus.framer import FramerRTU, FramerSocket
 from pymodbus.pdu import DecodePDU, ExceptionResponse, ModbusPDU
 from pymodbus.pdu.register_message import ReadHoldingRegistersRequest, ReadInputRegistersRequest
 
-from daq.description.rig import DeviceEntry, Register, Rig
+from daq.description.device import DeviceEntry, Register
+from daq.description.rig import Rig
 from daq.devices.lines import CHECK
 from daq.devices.locks import Hold, hold
 from daq.errors import DeviceError

@@ -8,7 +8,8 @@ from functools import cache
 from importlib.metadata import EntryPoints, entry_points
 from typing import Protocol, cast
 
-from daq.description.rig import DeviceEntry, Rig
+from daq.description.device import DeviceEntry
+from daq.description.rig import Rig
 from daq.devices.guard import StopOrder, guarded
 from daq.devices.mask import MaskTranslator
 from daq.errors import DescriptionError

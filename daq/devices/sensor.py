@@ -5,7 +5,8 @@ from __future__ import annotations
 import math
 from collections.abc import Mapping
 
-from daq.description.rig import DeviceEntry, Rig
+from daq.description.device import DeviceEntry
+from daq.description.rig import Rig
 from daq.devices.links import Link
 from daq.devices.wire import Wire
 from daq.ports import Clock

@@ -5,7 +5,7 @@ from __future__ import annotations
 import re
 from collections.abc import Mapping
 
-from daq.description.rig import DeviceEntry
+from daq.description.device import DeviceEntry
 from daq.description.speech import Command
 from daq.devices.links import Link
 from daq.devices.wire import Wire

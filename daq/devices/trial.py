@@ -4,8 +4,8 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 
+from daq.description.device import DeviceEntry
 from daq.description.dialect import Dialect
-from daq.description.rig import DeviceEntry
 from daq.devices.spoken import Spoken
 from daq.errors import DeviceError
 from daq.ports import Clock

@@ -35,6 +35,7 @@ def record_of(
         "sensors": _sensors(devices),
         "channels": max(entry.channels for entry in rig.devices.values()),
         "slices": rig.slices,
+        **({"list_mode": dict(rig.list_mode)} if rig.list_mode else {}),
         **_judged_by(itinerary, devices),
         "planned_se": forecast(itinerary, loaded.measurement).kappa_se,
         "started_utc": stamp(clock.utc_ns()),

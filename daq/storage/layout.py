@@ -132,7 +132,19 @@ def events(meta: Mapping[str, Any]) -> Column:
     """Return the column of list mode: the time from one event to the next, from the gate's opening on."""
     mode = meta["list_mode"]
     words = "time since the event before it, or since the gate opened"
-    return Column(EVENTS, mode["kind"], f"{mode['tick_s']:g} s", words, ("event",))
+    channels = int(mode.get("channels", 1))
+    told = {
+        "channels": channels,
+        "comment": "channel: remainder of the time since the gate opened by channels",
+    }
+    return Column(
+        EVENTS,
+        mode["kind"],
+        f"{mode['tick_s']:g} s",
+        words,
+        ("event",),
+        attributes=told if channels > 1 else {},
+    )
 
 
 def _event_columns(meta: Mapping[str, Any]) -> tuple[Column, ...]:

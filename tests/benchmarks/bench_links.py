@@ -1,37 +1,36 @@
 """Links: round trips, list-mode streams, block reads and duty cycle, each beside a yardstick of the same run.
 
-python -m tests.benchmarks.bench_links [seconds of the long stream]
+python -m tests.benchmarks.bench_links
 """
 
 from __future__ import annotations
 
 import multiprocessing
-import resource
 import socket
 import statistics
-import sys
 import tempfile
 import threading
 import time
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
+from importlib.util import find_spec
 from pathlib import Path
-from typing import Any
+from typing import Any, NamedTuple
 
 import numpy as np
 import pyvisa
 
 from daq.devices.clock import RealClock
 from daq.devices.events import U32, U64, Binner, Layout
+from daq.devices.intake import CHUNK
 from daq.devices.links import Link
-from daq.devices.stream import CHUNK, pump
 from daq.devices.wire import Wire
 from daq.ports import Clock
 from daq.records import Visit
 from daq.sequencer import perform
 from simulators.clock import VirtualClock
 from simulators.hosts import Listener, Send, Session, run_real
-from simulators.listmode import StreamSource, example_words
+from simulators.listmode import example_words
 from tests.daq.devices.real import on_port
 from tests.daq.devices.test_links import Device
 from tests.standins import MemoryBench
@@ -83,78 +82,65 @@ def sender(target: Callable[..., None], *arguments: Any) -> Iterator[socket.sock
         process.join()
 
 
-def raw_hz(words: bytes, size: int, times: int) -> float:
-    """Return how many words a second a bare loop of recv_into takes."""
-    buffer, many = bytearray(CHUNK), 0
+class Took(NamedTuple):
+    """Wall time and time of this process's own [s]."""
+
+    wall_s: float
+    own_s: float
+
+    def over(self, other: Took) -> tuple[float, float]:
+        """Return how many times longer it took."""
+        return self.wall_s / other.wall_s, self.own_s / other.own_s
+
+
+def raw_took(words: bytes, times: int) -> Took:
+    """Return how long a bare loop of recv_into takes for so many times the words."""
+    buffer = bytearray(CHUNK)
     with sender(_send, words, times) as stream:
-        first = stream.recv_into(buffer)
-        began_s = time.perf_counter()
-        while got := stream.recv_into(buffer):
-            many += got
-        return (many + 0 * first) / size / (time.perf_counter() - began_s)
+        stream.recv_into(buffer)
+        began = Took(time.perf_counter(), time.process_time())
+        while stream.recv_into(buffer):
+            pass
+        return Took(time.perf_counter() - began.wall_s, time.process_time() - began.own_s)
 
 
-def counted_hz(words: bytes, layout: Layout, times: int, compiled: bool) -> float:
-    """Return how many words a second are received, kept (by nobody) and counted."""
-    ticks = (1 << 60) // SLICES
-    Binner(layout, CHANNELS, SLICES, 0, ticks, compiled).feed(words[:1024])  # compiled now
-    binner = Binner(layout, CHANNELS, SLICES, 0, ticks, compiled)
+def counted_took(words: bytes, layout: Layout, times: int, compiled: bool) -> Took:
+    """Return how long it takes to receive and count them, chunk by chunk."""
+    ticks, kind = (1 << 60) // SLICES, np.dtype(layout.dtype)
+    for warm in (True, False):  # compiled first
+        binner = Binner(layout, CHANNELS, SLICES, 0, ticks, compiled)
+        if warm:
+            binner.sort(np.frombuffer(words[:1024], kind))
+    buffer = bytearray(CHUNK)
     with sender(_send, words, times) as stream:
-        binner.feed(stream.recv(4096))
-        began_s = time.perf_counter()
-        many = pump(stream, binner, _nobody, threading.Event())
-        return many / (layout.bits // 8) / (time.perf_counter() - began_s)
-
-
-def _nobody(chunk: bytes) -> None:
-    """Keep nothing."""
+        stream.recv_into(buffer, kind.itemsize, socket.MSG_WAITALL)
+        began = Took(time.perf_counter(), time.process_time())
+        while got := stream.recv_into(buffer, CHUNK, socket.MSG_WAITALL):  # gathered into whole chunks
+            binner.sort(np.frombuffer(buffer, kind, got // kind.itemsize))
+        took = Took(time.perf_counter() - began.wall_s, time.process_time() - began.own_s)
+    assert binner.binned.counts.sum() + binner.binned.outside > 0.99 * times * len(words) / kind.itemsize
+    return took
 
 
 def streams() -> None:
-    """Print received and counted words a second, and their ratio to a bare receiver in the same run."""
+    """Print received and counted words a second beside a bare receiver of the same run, wall and own time."""
     for layout in (U32, U64):
         words = example_words(layout, 2_000_000, 168_000, CHANNELS, seed=1)
-        size, times = layout.bits // 8, MANY // 2_000_000
-        for name, compiled in (("numpy", False), ("numba", True)):
-            ratios, rates = [], []
+        times = MANY // 2_000_000
+        for name, compiled in (("numpy", False), ("numba", True))[: 2 if find_spec("numba") else 1]:
+            wall, own, rates = list[float](), list[float](), list[float]()
             for _ in range(REPEATS):
-                raw = raw_hz(words, size, times)
-                rates.append(counted_hz(words, layout, times, compiled))
-                ratios.append(rates[-1] / raw)
+                raw = raw_took(words, times)
+                counted = counted_took(words, layout, times, compiled)
+                rates.append(MANY / counted.wall_s)
+                for ratios, ratio in zip((wall, own), raw.over(counted), strict=True):
+                    ratios.append(ratio)
             print(
                 f"stream of {layout.bits} bits, {name}: {statistics.median(rates) / 1e6:6.0f} M/s, "
-                f"{statistics.median(ratios):.2f} of a bare one ({min(ratios):.2f} .. {max(ratios):.2f})",
+                f"{statistics.median(wall):.2f} of a bare one ({min(wall):.2f} .. {max(wall):.2f}), "
+                f"{statistics.median(own):.2f} by the process's own time",
                 flush=True,
             )
-
-
-def _source(words: bytes, port: int, seconds: float) -> None:
-    over = threading.Event()
-    threading.Timer(seconds, over.set).start()
-    with socket.create_connection(("127.0.0.1", port)) as client:
-        StreamSource(words, U32, 5e6).run(client, over)
-
-
-def long_stream(seconds: float) -> None:
-    """Take 5 M events a second, keep every byte in a file, and print losses and memory."""
-    words = example_words(U32, 2_000_000, 168_000, CHANNELS, seed=1)
-    binner = Binner(U32, CHANNELS, SLICES, 0, 1 << 56)
-    with tempfile.TemporaryDirectory() as folder, (Path(folder) / "events").open("wb") as file:
-
-        def keep(chunk: bytes) -> None:
-            file.write(chunk)
-
-        with sender(_source, words, seconds) as stream:
-            binner.feed(b"")
-            before = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss
-            many = pump(stream, binner, keep, threading.Event())
-            after = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss
-        file.flush()
-        kept = (Path(folder) / "events").stat().st_size
-    print(
-        f"{seconds:g} s at 5 M/s: {many // 4} words, {binner.binned.lost} lost, "
-        f"{kept - many} bytes not kept, memory grew by {(after - before) / 1024:.1f} MB"
-    )
 
 
 def live_fraction(clock: Clock, overlapped: bool, visits: int) -> float:
@@ -232,4 +218,3 @@ if __name__ == "__main__":
     round_trips()
     blocks()
     streams()
-    long_stream(float(sys.argv[1]) if len(sys.argv) > 1 else 60.0)

@@ -13,7 +13,17 @@ from simulators.bench import WaveletBench, open_bench
 from tests.contracts.rigs import RIGS
 
 
-@pytest.fixture(params=["lantern-direct", "lantern-tcp", "sliced-direct", "words-direct", "scpi-direct"])
+@pytest.fixture(
+    params=[
+        "lantern-direct",
+        "lantern-tcp",
+        "sliced-direct",
+        "events-direct",
+        "events-tcp",
+        "words-direct",
+        "scpi-direct",
+    ]
+)
 def case(request: pytest.FixtureRequest) -> str:
     return str(request.param)
 

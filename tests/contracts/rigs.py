@@ -51,6 +51,20 @@ def sliced() -> Rig:
     return _rig(changed(table, bench__channels=sees))
 
 
+def events() -> Rig:
+    """Return the Lantern rig with a counter in list mode, detector and monitor, gates in ten parts."""
+    sees = [{"sees": "detector"}, {"sees": "monitor", "rate_hz": 2e3}]
+    counter = {
+        "driver": "list-mode-counter",
+        "address": f"{_LOCAL}:7802",
+        "stream": f"{_LOCAL}:7807",
+        "channels": 2,
+        "slices": 10,
+        "readout_s": 0.1,
+    }
+    return _rig(changed(rig_table(), devices__counter=counter, bench__channels=sees))
+
+
 _REGISTERS = {
     "temperature": {"at": 0, "unit": "K", "factor": 0.01},
     "pressure": {"at": 2, "kind": "f32", "unit": "Pa"},
@@ -69,4 +83,4 @@ def scpi() -> Rig:
     return _rig(table)
 
 
-RIGS = {"lantern": lantern, "sliced": sliced, "words": words, "scpi": scpi}
+RIGS = {"lantern": lantern, "sliced": sliced, "events": events, "words": words, "scpi": scpi}

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 
+import numpy as np
 import pytest
 
 from daq.description import Rig
@@ -61,6 +62,19 @@ class TestCounter:
         parts = counted.slices or ()
         assert len(parts) == rig.slices
         assert not parts or tuple(map(sum, zip(*parts, strict=True))) == counted.values
+
+    def test_a_counter_in_list_mode_gives_every_event(self, counter: Counter, rig: Rig) -> None:
+        counter.arm(1.5)
+
+        counted = counter.read()
+
+        mode = rig.list_mode
+        assert (counted.events is None) == (mode is None)
+        if mode is not None:
+            times, channels = np.frombuffer(counted.events or b"", "<u8"), int(mode["channels"])
+            assert tuple(np.bincount(times % channels)) == counted.values
+            assert (np.diff(times.astype(np.int64)) >= 0).all()
+            assert float(times[-1]) * mode["tick_s"] < 1.5 + 1e-6
 
     def test_reading_late_waits_no_more_and_gives_the_same_twice(
         self, counter: Counter, clock: Clock

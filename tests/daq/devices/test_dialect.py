@@ -13,9 +13,10 @@ from typing import Any
 import pytest
 
 from daq.description import Dialect, parse
+from daq.description.device import DeviceEntry
 from daq.description.dialect import dialect_warnings
 from daq.description.patterns import pattern_problem, shared_text
-from daq.description.rig import Axis, DeviceEntry
+from daq.description.rig import Axis
 from daq.devices.dialect import DialectSensor, DialectStage
 from daq.devices.dialect_counter import DialectCounter
 from daq.devices.files import with_dialects

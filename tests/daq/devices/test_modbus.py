@@ -9,7 +9,7 @@ from typing import Any
 import pytest
 from pymodbus.framer import FramerRTU
 
-from daq.description.rig import DeviceEntry
+from daq.description.device import DeviceEntry
 from daq.devices.modbus import ModbusSensor
 from daq.errors import DeviceError
 from simulators.clock import VirtualClock

@@ -9,7 +9,7 @@ from typing import Any
 import pytest
 
 from daq.description import parse
-from daq.description.rig import DeviceEntry
+from daq.description.device import DeviceEntry
 from daq.devices.counter import ScpiCounter
 from daq.devices.dialect_counter import DialectCounter
 from daq.devices.slices import adds_up, in_slices, whole_numbers
