@@ -7,8 +7,7 @@ from typing import Annotated, Literal
 
 from pydantic import AwareDatetime, Field
 
-from daq.description.problems import Table
-from daq.description.rig import Positive
+from daq.description.problems import Positive, Table
 
 
 class Columns(Table):

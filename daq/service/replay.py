@@ -11,7 +11,7 @@ from pathlib import Path
 from typing import Any
 
 from daq.description import Rig
-from daq.description.rig import DeviceEntry
+from daq.description.device import DeviceEntry
 from daq.devices.files import read_dialect
 from daq.devices.registry import open_devices
 from daq.errors import StorageError
