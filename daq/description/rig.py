@@ -22,6 +22,9 @@ class Geometry(Table):
     distance_m: Positive
 
 
+WIDEST_M, FARTHEST = 10.0, 10_000  # beyond, a length was written in another unit
+
+
 class Slit(Table):
     """One slit instance: where it was cut and how wide, with the uncertainties of its metrology."""
 
@@ -29,6 +32,21 @@ class Slit(Table):
     width_m: Positive
     centre_u_m: NotNegative = 0.0
     width_u_m: NotNegative = 0.0
+
+    @model_validator(mode="after")
+    def _in_metres(self) -> Slit:
+        """Refuse lengths that can only be meant in another unit."""
+        metres = "Lengths here are in metres: 80 nm is 80e-9"
+        if self.width_m > WIDEST_M:
+            raise ValueError(f"a slit {self.width_m:g} m wide fits on no mask. {metres}")
+        if abs(self.centre_m) > FARTHEST * self.width_m:
+            raise ValueError(
+                f"a centre at {self.centre_m:g} m is too far off for a width of {self.width_m:g} m. {metres}"
+            )
+        for key, known in (("centre_u_m", self.centre_u_m), ("width_u_m", self.width_u_m)):
+            if known > self.width_m:
+                raise ValueError(f"{key} {known:g} m is more than the width {self.width_m:g} m. {metres}")
+        return self
 
 
 class Shown(Table):

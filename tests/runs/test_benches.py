@@ -27,7 +27,7 @@ def off_truth(figures: dict[str, Any]) -> float:
     return float(abs(figures["kappa"] - figures["truth_kappa"]) / figures["kappa_counting_se"])
 
 
-@pytest.mark.parametrize("name", ["lantern", "beam", "vapour"])
+@pytest.mark.parametrize("name", ["lantern", "vapour"])
 def test_a_bench_gives_the_residual_of_its_truth(
     name: str, tmp_path: Path, capsys: pytest.CaptureFixture[str]
 ) -> None:
@@ -35,6 +35,21 @@ def test_a_bench_gives_the_residual_of_its_truth(
 
     assert off_truth(figures) < 4
     assert figures["visits"] >= 304 and figures["stands_left_out"] <= 1
+
+
+def test_the_beam_bench_shows_the_geometry_of_its_slits_and_nothing_else(
+    tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    figures = rehearsed("beam", tmp_path, capsys)
+
+    found = figures["geometry"]
+    assert off_truth(figures) < 4
+    assert abs(figures["kappa"]) > 1e-2  # slits of 80 nm cut to 2 nm
+    assert abs(found["kappa"]) < 4 * (found["counting_se"] ** 2 + found["geometry_se"] ** 2) ** 0.5 < 2e-3
+    assert found["geometry_se"] < 3e-4 and not found["differ"]
+    assert abs(found["joint_kappa"]) < 4 * found["joint_se"]
+    first = found["spectrum"]["lines"][0]
+    assert first["before"] > 100 and first["after"] < 10
 
 
 def test_an_absorber_takes_the_looped_paths_of_the_horn_bench_away(

@@ -118,3 +118,33 @@ def test_the_matrix_of_move_times_counts_slots_and_settling():
     assert times_s[(1, 0)] == pytest.approx(0.5 + 7 * 0.2)
     assert times_s[(7, 7)] == 0.0
     assert all(times_s[(here, there)] == times_s[(there, here)] for here, there in times_s)
+
+
+@pytest.mark.parametrize(
+    ("cut", "what"),
+    [
+        ({"width_m": 0.0}, "width_m: input should be greater than 0"),
+        ({"width_m": 40.0}, "a slit 40 m wide fits on no mask. Lengths here are in metres"),
+        (
+            {"centre_m": -120.0},
+            "a centre at -120 m is too far off for a width of 4e-05 m. Lengths here are in",
+        ),
+        ({"width_u_m": 0.3}, "width_u_m 0.3 m is more than the width 4e-05 m. Lengths here are in metres"),
+        ({"width_nm": 40e3}, "width_nm: unknown key. Did you mean 'width_m'?"),
+        ({"centre_u_m": -1e-9}, "centre_u_m: input should be greater than or equal to 0"),
+    ],
+)
+def test_a_row_of_metrology_that_cannot_be_meant_is_told_with_its_opening_and_slit(cut, what):
+    table = rig_table()
+    table["mask"]["openings"]["AB"]["cuts"] = {"A": {"centre_m": -120e-6, "width_m": 40e-6} | cut}
+
+    (problem,) = problems_of(table, "rig")
+
+    assert problem.startswith("rig.toml, mask.openings.AB.cuts.A") and what in problem
+
+
+def test_a_row_of_metrology_for_a_slit_that_does_not_exist_is_told():
+    table = rig_table()
+    table["mask"]["openings"]["AB"]["cuts"] = {"D": {"centre_m": 240e-6, "width_m": 40e-6}}
+
+    assert problems_of(table, "rig") == ("rig.toml, mask.openings.AB.cuts: slit D is not open there.",)
