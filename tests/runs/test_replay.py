@@ -210,3 +210,19 @@ def _cut_short(source: Path, folder: Path, rows: int) -> None:
     with create_run(folder, texts=texts, itinerary=plan, meta=meta) as archive:
         for reading in tape.readings[:rows]:
             archive.commit(reading)
+
+
+@pytest.mark.long
+@pytest.mark.parametrize("link", ["direct", "tcp"])
+def test_ten_hours_with_thirty_faults_are_replayed_row_by_row(tmp_path, capsys, link):
+    script = str(CONFIGS / "faults" / "rough-night.toml")
+    words = ["--hours", "10", "--seed", "7", "--link", "direct", "--faults", script]
+    assert main(["rehearse", *words, "--into", str(tmp_path)]) == 0
+    (night,) = (tmp_path / "runs").iterdir()
+
+    status, figures = replay(night, tmp_path / "again", capsys, "--link", link)
+
+    assert len(events(night, "fault")) >= 30
+    assert status == 0
+    assert figures["same_digest"] and figures["same_times"]
+    assert changed(figures) == set()

@@ -1,0 +1,59 @@
+"""How the cost of a rehearsal grows with its visits: `python -m tests.benchmarks.bench_rehearsal_growth`.
+
+CPU of this process (in process, so that instruments and sequencer are in it), from 10^3 to 10^5 visits, or to
+10^6 with `--whole`. Linear means that a visit more costs the same at every length.
+"""
+
+from __future__ import annotations
+
+import contextlib
+import io
+import json
+import sys
+import tempfile
+import time
+from pathlib import Path
+
+from daq.cli import main
+from tests.examples import CONFIGS
+
+LAPS = (24, 250, 2500)
+WHOLE = 25_000
+
+
+def night(folder: Path, laps: int) -> Path:
+    """Return a measurement of five positions and so many laps."""
+    text = (CONFIGS / "lantern.toml").read_text().replace("number = 41", "number = 5")
+    file = folder / f"laps-{laps}.toml"
+    file.write_text(text.replace("laps = 38", f"laps = {laps}"))
+    return file
+
+
+def cost_s(file: Path, lab: Path) -> tuple[float, float, int]:
+    """Return CPU and wall time of a rehearsal [s], and its visits."""
+    out, begun, wall = io.StringIO(), time.process_time(), time.perf_counter()
+    with contextlib.redirect_stdout(out), contextlib.redirect_stderr(io.StringIO()):
+        main(["rehearse", str(file), "--link", "direct", "--into", str(lab), "--json"])
+    spent = time.process_time() - begun, time.perf_counter() - wall
+    return (*spent, int(json.loads(out.getvalue())["visits"]))
+
+
+def growth() -> None:
+    """Print the cost of every length, and of a visit more from one length to the next."""
+    laps = (*LAPS, WHOLE) if "--whole" in sys.argv else LAPS
+    with tempfile.TemporaryDirectory() as place:
+        folder = Path(place)
+        (folder / "rigs").mkdir()
+        (folder / "rigs" / "lantern.toml").write_text((CONFIGS / "rigs" / "lantern.toml").read_text())
+        before = (0.0, 0)
+        for many in laps:
+            cpu_s, wall_s, visits = cost_s(night(folder, many), folder / "lab")
+            more_us = (cpu_s - before[0]) / (visits - before[1]) * 1e6
+            print(
+                f"{visits:8} visits: CPU {cpu_s:7.1f} s, wall {wall_s:7.1f} s; a visit more {more_us:.0f} us CPU"
+            )
+            before = (cpu_s, visits)
+
+
+if __name__ == "__main__":
+    growth()
