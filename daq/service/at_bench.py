@@ -10,6 +10,7 @@ from daq.devices.clock import RealClock
 from daq.devices.registry import open_devices
 from daq.errors import DaqError, DeviceError
 from daq.ports import Clock, Devices
+from daq.service.beam import shut_out
 
 PRESENT = "here"
 ASKED = (
@@ -48,8 +49,7 @@ def in_hand(rig: Rig) -> Iterator[tuple[Devices, Clock]]:
         opened = open_devices(rig, clock)
         with opened as devices:
             yield devices, clock
-            if devices.shutter is not None:
-                devices.shutter.block()
+            shut_out(devices)
     except DeviceError as error:
         if rig.simulated and error.kind == "lost":
             remedy = "Serve the simulated instruments first: `python -m simulators RIG`"

@@ -17,6 +17,7 @@ from daq.devices.registry import open_devices
 from daq.errors import DaqError, DeviceError, StorageError
 from daq.itinerary import Itinerary
 from daq.ports import Bench, Clock, Devices
+from daq.service.beam import let_in, shut_out
 from daq.service.bench_records import earlier, set_up_of
 from daq.service.extensions import open_bench
 from daq.service.live import stamp
@@ -82,6 +83,7 @@ def carry_out(task: Task, loaded: Loaded, lab: Path, person: Person) -> dict[str
                 " ".join(lacking).rstrip("."), where=f"task {task.name}", remedy="Use another task"
             )
         _refuse_lost(devices, bench)
+        let_in(devices, clock)
         folder = new_bench_folder(lab, task.name, clock.utc_ns())
         person.said(f"{task.name}: {task.purpose}")
         trouble: DaqError | None = None
@@ -107,22 +109,17 @@ def _at_bench(loaded: Loaded, lab: Path) -> Iterator[tuple[Devices, Clock, Bench
         clock = RealClock()
         with open_devices(loaded.rig, clock) as devices:
             yield devices, clock, None
-            _shut(devices)
+            shut_out(devices)
         return
     state = kept_state(lab, loaded.rig.name)
     bench = open_bench(loaded.rig, seed=loaded.bench_seed, transport="direct", state=state, faults=None)
     try:
         with open_devices(loaded.rig, bench.clock) as devices:
             yield devices, bench.clock, bench
-            _shut(devices)
+            shut_out(devices)
         keep_state(lab, loaded.rig.name, bench.keep())
     finally:
         bench.close()
-
-
-def _shut(devices: Devices) -> None:
-    if devices.shutter is not None:
-        devices.shutter.block()
 
 
 def _refuse_lost(devices: Devices, bench: Bench | None) -> None:

@@ -8,6 +8,7 @@ from pathlib import Path
 from daq.errors import DeviceError
 from daq.openings import NONE, mask
 from daq.sequencer import State
+from daq.service.beam import let_in, shut_out
 from daq.service.night import Night, tell
 
 log = logging.getLogger(__name__)
@@ -16,12 +17,13 @@ BENCH_FILE = "bench.json"
 
 
 def park(night: Night) -> None:
-    """Show no slit and let the detector rest; a device that does not answer is only told of."""
+    """Show no slit, shut the beam out, let the detector rest; a device that does not answer is told of."""
     if night.state is not State.ENDED:
         night.state = State.PARKING
     try:
         predicted_s = night.devices.mask.show(mask(NONE))
         night.clock.sleep_until(night.clock.now_ns() + round(predicted_s * 1e9))
+        shut_out(night.devices)
     except DeviceError as error:
         tell(night, "could not park", text=str(error))
 
@@ -49,8 +51,7 @@ def shield(night: Night) -> None:
 
 def unshield(night: Night) -> None:
     """Let the beam pass again."""
-    if night.devices.shutter is not None:
-        night.devices.shutter.unblock()
+    let_in(night.devices, night.clock)
 
 
 def keep_bench(night: Night) -> None:

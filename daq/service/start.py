@@ -25,6 +25,7 @@ from daq.ports import Bench, Clock, Devices
 from daq.records import Reading
 from daq.sequencer import State
 from daq.service.asked import Asked
+from daq.service.beam import let_in
 from daq.service.bench_records import earlier
 from daq.service.blind import at_hand, keep_promise, promise
 from daq.service.course import carry_out
@@ -170,6 +171,7 @@ def _interruptibly(night: Night, course: Callable[[Night], str]) -> str:
     try:
         if night.asked.stop:
             raise KeyboardInterrupt
+        let_in(night.devices, night.clock)
         return course(night)
     finally:
         night.asked.interruptible = False

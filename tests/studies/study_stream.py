@@ -25,6 +25,7 @@ import numpy as np
 from daq.devices.clock import RealClock
 from daq.devices.events import U32, times_of
 from daq.devices.intake import Form, Intake
+from daq.records import Reading
 from daq.storage.events import read_events
 from daq.storage.layout import EVENT_CHUNK
 from daq.storage.reader import open_visits
@@ -61,13 +62,15 @@ def resident_mb() -> float:
     return pages * os.sysconf("SC_PAGE_SIZE") / 1e6
 
 
-def taken(archive: Archive, intake: Intake, clock: RealClock, gates: int) -> tuple[int, int, list[float]]:
+def taken(
+    archive: Archive, intake: Intake, clock: RealClock, example: Reading, gates: int
+) -> tuple[int, int, list[float]]:
     """Commit every gate; return events, losses, and the memory after each gate [MB]."""
     many, lost, memory = 0, 0, list[float]()
     for number in range(1, gates + 1):
         gate = intake.take(number, clock.now_ns() + PATIENCE_S * 10**9)
         events = int(gate.binned.counts.sum()) + gate.binned.outside
-        archive.commit(replace(reading(number % 2400), events=gate.packed()))
+        archive.commit(replace(example, attempt=number, events=gate.packed()))
         many, lost = many + events, lost + gate.binned.lost
         memory.append(resident_mb())
         if number % 30 == 0:
@@ -84,10 +87,11 @@ def study(folder: Path, gates: int, rate_hz: int) -> None:
     connection = clock.connect(f"tcp://127.0.0.1:{here.recv()}", 10.0)
     intake = Intake(clock, connection, Form(U32, CHANNELS, SLICES), "stream")
     intake.ticks = (-(-rate_hz // PER_ROLL) << U32.tag_bits) // SLICES + 1
-    own_s, began_s = time.process_time(), time.monotonic()
+    example = reading(0)
     with started(folder / "run", laps=200, tick_s=1e-9 / CHANNELS, event_chunk=EVENT_CHUNK) as archive:
+        own_s, began_s = time.process_time(), time.monotonic()
         here.send(None)
-        many, lost, memory = taken(archive, intake, clock, gates)
+        many, lost, memory = taken(archive, intake, clock, example, gates)
         own_s, took_s = time.process_time() - own_s, time.monotonic() - began_s
         sent = here.recv()
         here.send(None)
