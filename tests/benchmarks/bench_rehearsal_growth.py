@@ -49,9 +49,8 @@ def growth() -> None:
         for many in laps:
             cpu_s, wall_s, visits = cost_s(night(folder, many), folder / "lab")
             more_us = (cpu_s - before[0]) / (visits - before[1]) * 1e6
-            print(
-                f"{visits:8} visits: CPU {cpu_s:7.1f} s, wall {wall_s:7.1f} s; a visit more {more_us:.0f} us CPU"
-            )
+            each = f"a visit more {more_us:.0f} us CPU"
+            print(f"{visits:8} visits: CPU {cpu_s:7.1f} s, wall {wall_s:7.1f} s; {each}", flush=True)
             before = (cpu_s, visits)
 
 
