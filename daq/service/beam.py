@@ -1,4 +1,4 @@
-"""The beam: a shutter opened for a run that somebody started or armed, shut at its end; no safety function."""
+"""The beam: a shutter opened for a run that was started or armed, shut at its end; no safety function."""
 
 from __future__ import annotations
 
