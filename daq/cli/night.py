@@ -138,6 +138,7 @@ def interrupts() -> Iterator[Asked]:
     def interrupted(number: int, _: FrameType | None) -> None:
         asked.stop = asked.stop or asked.leave or number == signal.SIGTERM
         asked.leave = True
+        asked.by_system = asked.by_system or number == signal.SIGTERM
         if asked.stop and asked.interruptible:
             raise KeyboardInterrupt
         if asked.stop:

@@ -22,6 +22,7 @@ class Asked:
     end_after_lap: bool = False
     leave: bool = False
     stop: bool = False
+    by_system: bool = False  # the computer ends the program (SIGTERM), not a person the run
     interruptible: bool = False
     kind: str = ""
     who: str = ""

@@ -25,6 +25,7 @@ from daq.storage.run import Archive
 log = logging.getLogger(__name__)
 
 COMPLETE, AT_REQUEST, STOPPED = "complete", "ended at request after a stand", "stopped at request"
+WITH_PROGRAM = "stopped with the program"  # by the computer: the service goes on with such a run by itself
 
 
 @dataclass(slots=True)

@@ -29,6 +29,7 @@ from daq.service.calendar import missed, starts
 from daq.service.desk import answer_desk, tell_desk
 from daq.service.load import Loaded, load
 from daq.service.messages import NOTE, post
+from daq.service.night import WITH_PROGRAM
 from daq.service.outlets import Outlets
 from daq.service.requests import current_run
 from daq.service.start import Wanted, begin, resume
@@ -230,8 +231,8 @@ def _broken_off(lab: Path) -> Path | None:
     folder = lab / "runs" / name
     if not name or is_written(folder) or read_meta(folder).get("finished"):
         return None
-    feed = read_feed(folder)
-    return None if feed is not None and feed.get("ended") else folder
+    ended = (read_feed(folder) or {}).get("ended")
+    return None if ended and ended["reason"] != WITH_PROGRAM else folder
 
 
 def _until(lab: Path, started: Mapping[str, Any] | None) -> datetime | None:

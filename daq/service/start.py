@@ -34,7 +34,7 @@ from daq.service.extensions import open_bench
 from daq.service.groups import Place, place_after
 from daq.service.live import Live, stamp
 from daq.service.load import Loaded, Wishes, load_run
-from daq.service.night import COMPLETE, STOPPED, Night, look, tell
+from daq.service.night import COMPLETE, STOPPED, WITH_PROGRAM, Night, look, tell
 from daq.service.parking import BENCH_FILE, park, stop_now
 from daq.service.record import record_of
 from daq.service.requests import lapse, open_requests, settle
@@ -131,13 +131,13 @@ def through(night: Night, wanted: Wanted, course: Callable[[Night], str]) -> str
         ended = _interruptibly(night, course)
     except KeyboardInterrupt:
         stop_now(night)
-        ended = STOPPED
+        ended = WITH_PROGRAM if night.asked.by_system else STOPPED
     except DaqError as error:
         night.asked.kind = BROKEN
         _end(night, str(error))
         raise
     _end(night, ended)
-    if ended != STOPPED:
+    if ended not in (STOPPED, WITH_PROGRAM):
         night.archive.finish(_results(night, ended))
     return ended
 

@@ -10,7 +10,7 @@ from importlib import import_module
 from pathlib import Path
 from typing import Any
 
-STUDIES = ("zigzag", "irregular", "benches", "exclusions", "quality", "cuts")
+STUDIES = ("zigzag", "irregular", "benches", "exclusions", "quality", "cuts", "matrix")
 RESULTS = Path(__file__).parent / "results"
 
 

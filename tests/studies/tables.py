@@ -89,7 +89,23 @@ def _inside(table: str, key: str) -> Any:
 _NIGHTS = {"nights": _plain("nights", "d"), "bias": _pm("bias", "bias_se", "+"), "sd": _pm("sd", "sd_se")}
 _COVERED = {"covers 68 %": _percent("coverage_68"), "covers 95 %": _percent("coverage_95")}
 
+
+def _lost(found: Mapping[str, Any]) -> str:
+    if "lost_s" not in found:
+        return ""
+    return f"{found['lost_s']:.1f}" if found["ended"] == "complete" else "parks and can be resumed"
+
+
 _FORMS: dict[str, tuple[str, dict[str, Any]]] = {
+    "matrix": (
+        "Faults: what is done, what it costs, which test says so",
+        {
+            "reaction": lambda found: str(found["reaction"]),
+            "time lost [s]": _lost,
+            "visits repeated": _plain("repeated", "d"),
+            "test": lambda found: f"`{found['test'].removeprefix('tests/')}`",
+        },
+    ),
     "charts": (
         "Charts: false alarms, delays, and what wakes in quiet weeks",
         {

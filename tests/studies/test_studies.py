@@ -10,7 +10,7 @@ from typing import Any
 import numpy as np
 import pytest
 
-from tests.studies import benches, exclusions, irregular, plans, quality, zigzag
+from tests.studies import benches, chaos, exclusions, irregular, matrix, plans, quality, zigzag
 from tests.studies.__main__ import RESULTS, STUDIES, main, misses
 from tests.studies.bench import generator_of, night, reduced
 from tests.studies.sources import SOURCES
@@ -121,3 +121,37 @@ def test_only_what_stands_between_the_markers_is_written() -> None:
 
     assert between(page, "new\n") == f"# Mine\n\n{BEGIN}\nnew\n{END}\n\ntail\n"
     assert between("# Mine\n", "new\n") == f"# Mine\n\n{BEGIN}\nnew\n{END}\n"
+
+
+@pytest.mark.parametrize("test", sorted({test for _, _, test in matrix.FAULTS.values()}))
+def test_every_fault_of_the_matrix_has_its_test(test: str) -> None:
+    path, name = test.split("::")
+
+    assert f"def {name}(" in (DEVELOPERS.parent / path).read_text()
+
+
+@pytest.mark.parametrize("test", sorted({test for _, test in matrix.OTHERS.values()}))
+def test_everything_else_that_may_happen_has_its_test(test: str) -> None:
+    path, name = test.split("::")
+
+    assert f"def {name}(" in (DEVELOPERS.parent / path).read_text()
+
+
+def test_a_fault_costs_what_the_matrix_says() -> None:
+    kind = "pressure too high for 300 s"
+    quiet_s, _, _ = matrix._run(None)
+
+    run_s, ended, repeated = matrix._run(matrix.FAULTS[kind][0])
+
+    told = json.loads((RESULTS / "matrix.json").read_text())["rows"][kind]
+    assert run_s - quiet_s == pytest.approx(told["lost_s"], abs=1e-6)
+    assert (ended, repeated) == (told["ended"], told["repeated"])
+
+
+def test_a_night_of_chaos_that_is_killed_loses_nothing() -> None:
+    found = chaos.night(0)
+
+    assert found["killed"]
+    assert found["acknowledged"] >= 1520
+    assert (found["lost"], found["misfiled"]) == (0, 0)
+    assert found["ended"]
