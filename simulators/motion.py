@@ -56,6 +56,10 @@ class Track:
                 return leg.place_mm(at_ns)
         return self._legs[0].start_mm
 
+    def last_leg(self, at_ns: int) -> Leg:
+        """Return the leg that the axis is on, or has last come to its end of."""
+        return next((leg for leg in reversed(self._legs) if leg.start_ns <= at_ns), self._legs[0])
+
     def shown_mm(self, at_ns: int) -> float:
         """Return where the axis believes to be [mm]; before homing that is a count from an unknown zero."""
         return self.true_mm(at_ns) - self._offset_mm(at_ns)

@@ -76,6 +76,27 @@ class LightSettings(Table):
     cut_sigma: Annotated[float, Field(ge=0, le=10)] = 0.0
 
 
+class ChipSettings(Table):
+    """The mask as it truly is, and how its stage stands.
+
+    Windows of `window_mm` (0: an opening is shown within its tolerance), edges blurred by `edge_mm`, off the
+    drawing by `offset_mm` altogether and by `off_mm` each; put in `mirrored`, or with windows `missing`. The
+    stage stands off its encoder by half of `backlash_mm` along its last move, by `repeat_mm` at random; after
+    a move the light is off by the share `transient`, which fades in `transient_s`.
+    """
+
+    window_mm: Annotated[float, Field(ge=0, le=100)] = 0.0
+    edge_mm: Annotated[float, Field(gt=0, le=10)] = 0.03
+    offset_mm: float = 0.0
+    off_mm: Mapping[str, float] = {}
+    mirrored: bool = False
+    missing: tuple[str, ...] = ()
+    backlash_mm: Annotated[float, Field(ge=0, le=1)] = 0.0
+    repeat_mm: Annotated[float, Field(ge=0, le=1)] = 0.0
+    transient: Annotated[float, Field(gt=-1, le=1)] = 0.0
+    transient_s: Annotated[float, Field(gt=0, le=60)] = 0.1
+
+
 class Settings(Table):
     """The simulated truth."""
 
@@ -92,6 +113,7 @@ class Settings(Table):
     channels: Annotated[Sequence[ChannelSettings], Field(min_length=1)] = (ChannelSettings(),)
     power: PowerSettings = PowerSettings()
     light: LightSettings = LightSettings()
+    chip: ChipSettings = ChipSettings()
     instruments: Mapping[str, Model] = {}
 
     @model_validator(mode="after")

@@ -10,6 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from daq.description import Rig
+from simulators.chip import Chip
 from simulators.detector import draw_bunched, draw_counts
 from simulators.draws import generator
 from simulators.motion import NS, Track
@@ -52,6 +53,7 @@ class Truth:
         self._places = {opening: rig.mask_at_mm(opening) for opening in rig.opening_masks}
         self._mask_tolerance_mm = rig.axes[rig.mask.axis].tolerance_mm
         self._slits = Slits(rig, settings.light, seed)
+        self._chip = Chip(rig, settings.chip, seed)
         self._scale_hz = settings.single_slit_rate_hz / self._slits.reference()
         self._light = lru_cache(maxsize=65_536)(self._light_hz)
 
@@ -108,12 +110,27 @@ class Truth:
         """Return the mean of light times source over a gate, piece by piece where an axis moved [1/s]."""
         total = 0.0
         for start_ns, stop_ns in self._pieces(open_ns, close_ns):
-            middle_ns = (start_ns + stop_ns) // 2
-            opening = self.shown(self._mask.true_mm(middle_ns))
-            if opening is not None:
-                light_hz = self._light(opening, self._detector.true_mm(middle_ns))
+            light_hz = self._behind_mask_hz(start_ns, stop_ns)
+            if light_hz:
                 total += light_hz * self._strength(start_ns, stop_ns) * (stop_ns - start_ns)
         return total / (close_ns - open_ns)
+
+    def _behind_mask_hz(self, start_ns: int, stop_ns: int) -> float:
+        """Return the light between two times, at the places of their middle, for an even source [1/s]."""
+        middle_ns = (start_ns + stop_ns) // 2
+        mask_mm, detector_mm = self._mask.true_mm(middle_ns), self._detector.true_mm(middle_ns)
+        if not self._settings.chip.window_mm:
+            opening = self.shown(mask_mm)
+            return 0.0 if opening is None else self._light(opening, detector_mm)
+        leg = self._mask.last_leg(middle_ns)
+        light_hz = background_hz = self._settings.background_rate_hz
+        for opening, share in self._chip.shares(mask_mm + self._chip.off_mm(leg)):
+            behind_hz = self._light(opening, detector_mm)
+            if share == 1.0:  # the whole beam: to the last digit what it is without a chip
+                light_hz = behind_hz
+                break
+            light_hz += share * (behind_hz - background_hz)
+        return light_hz * self._chip.transient(leg, start_ns, stop_ns)
 
     def _pieces(self, open_ns: int, close_ns: int) -> Iterator[tuple[int, int]]:
         tracks = (self._mask, self._detector)

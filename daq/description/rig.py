@@ -57,10 +57,16 @@ class Shown(Table):
 
 
 class Mask(Table):
-    """A mask translator with separate openings."""
+    """A mask translator with separate openings.
+
+    `window_mm`: how wide every window is drawn; `key_mm`: where a window stands that no opening uses, and by
+    which it is seen which way round the chip is.
+    """
 
     axis: str
     chip: str = ""
+    window_mm: Positive | None = None
+    key_mm: float | None = None
     openings: Mapping[str, Shown]
 
     @field_validator("openings")

@@ -18,6 +18,7 @@ STEADY: dict[str, Any] = {
     "bench__source__linear_per_hour": 0.0,
     "bench__source__random_walk_per_sqrt_hour": 0.0,
     "bench__dead_time_s": 0.0,
+    "bench__chip": {},  # an opening is there within its tolerance, and dark beside it
 }
 ABC, A, NONE = 7, 1, 0
 

@@ -10,6 +10,7 @@ from pathlib import Path
 import pytest
 
 from daq import open_visits
+from daq.description.measurement import Positions
 from daq.errors import DaqError
 from daq.service.bench_records import newest, why_not
 from daq.service.bench_task import Person, carry_out
@@ -17,7 +18,7 @@ from daq.service.load import Loaded, config_dir, load
 from daq.storage.verify import verify
 from daq.tasks import Outcome, Task, task_of
 from tests.contracts.rigs import words
-from tests.examples import lantern_rig
+from tests.examples import lantern_rig, rig_table
 
 
 @pytest.fixture
@@ -114,3 +115,68 @@ def test_a_record_of_a_real_rig_grows_old(loaded: Loaded, tmp_path: Path) -> Non
 
     assert why_not(record, real, until - timedelta(minutes=1)) == ""
     assert "it held until" in why_not(record, real, until + timedelta(minutes=1))
+
+
+def on_chip(loaded: Loaded, **chip: object) -> Loaded:
+    """Return the Lantern bench with another true chip."""
+    table = rig_table()
+    return replace(loaded, rig=lantern_rig(bench__chip=table["bench"]["chip"] | chip))
+
+
+def test_register_finds_windows_play_and_scatter_of_the_bench(loaded: Loaded, tmp_path: Path) -> None:
+    record = carry_out(task_of("register"), loaded, tmp_path, Person())
+    values, se = record["values"], record["se"]
+
+    assert record["verdict"] == "pass"
+    own_mm = {"AB": -0.004, "BC": 0.006}
+    for name, off_mm in values["off_drawing_mm"].items():
+        assert abs(off_mm - 0.012 - own_mm.get(name, 0.0)) < 5 * se["centre_mm"][name]
+    assert abs(values["play_mm"] - 0.008) < 5 * se["play_mm"]
+    assert values["repeat_mm"] == pytest.approx(0.001, rel=0.3)
+
+
+@pytest.mark.parametrize(
+    ("chip", "said"),
+    [
+        ({"mirrored": True}, "the chip is in the wrong way"),
+        ({"missing": ["B"]}, "7 windows were seen where the drawing has 8. Nothing near B"),
+    ],
+)
+def test_a_wrong_chip_is_a_sentence_and_nothing_is_moved_further(
+    loaded: Loaded, tmp_path: Path, chip: dict[str, object], said: str
+) -> None:
+    record = carry_out(task_of("register"), on_chip(loaded, **chip), tmp_path, Person())
+
+    assert record["verdict"] == "fail"
+    assert said in record["sentence"]
+    assert {ask["role"] for ask in record["asked"]} == {"coarse"}
+
+
+def test_a_dark_mask_is_a_sentence(loaded: Loaded, tmp_path: Path) -> None:
+    everything = [name for name in loaded.rig.mask.openings if name != "none"]
+    dark = on_chip(loaded, missing=everything, offset_mm=100.0)
+
+    record = carry_out(task_of("register"), dark, tmp_path, Person())
+
+    assert "no window was seen on the whole travel" in record["sentence"]
+
+
+def test_backlash_takes_the_flanks_of_register_and_finds_the_play_of_the_bench(
+    loaded: Loaded, tmp_path: Path
+) -> None:
+    with pytest.raises(DaqError, match="no valid record of register yet"):
+        carry_out(task_of("backlash"), loaded, tmp_path, Person())
+    carry_out(task_of("register"), loaded, tmp_path, Person())
+
+    record = carry_out(task_of("backlash"), loaded, tmp_path, Person())
+
+    assert record["verdict"] == "pass"
+    assert abs(record["values"]["play_mm"] - 0.008) < 3 * record["se"]["play_mm"] + 0.0003
+    assert record["values"]["repeat_mm"] == pytest.approx(0.001, rel=0.4)
+
+
+def test_a_dry_lap_stops_everywhere_once(loaded: Loaded, tmp_path: Path) -> None:
+    few = loaded.measurement.model_copy(update={"positions": Positions(start_mm=-4.0, stop_mm=4.0, number=3)})
+    quick = replace(loaded, measurement=few)
+    good = carry_out(task_of("dry-lap"), quick, tmp_path, Person())
+    assert (good["verdict"], good["values"]["moves"], good["values"]["astray"]) == ("pass", 24, 0)
