@@ -1,7 +1,8 @@
 """Intake: list-mode words of one stream, taken as they come and kept gate by gate.
 
 Words stand between two marks that name their gate, so that no event is ever taken for another gate's. On the
-real clock a thread takes them: a disk that is slow for a moment, or a counter that is asked, costs no word.
+real clock a thread takes the bytes and does little else: a disk that is slow for a moment, or a busy
+interpreter, costs no word. They are sorted when their gate is asked for, or by the thread when many wait.
 """
 
 from __future__ import annotations
@@ -21,9 +22,8 @@ from daq.errors import DeviceError
 from daq.ports import Clock, Connection
 
 CHUNK = 256 * 1024  # larger ones do not fit the caches, and are slower
-MOST_EVENTS = (
-    200_000_000  # that wait for somebody to ask; then words are left to the source, which marks losses
-)
+MOST_BYTES = 1 << 30  # that wait to be asked for; then words are left to the source, which marks losses
+SORT_BYTES = 1 << 26  # that wait before the thread sorts them itself
 _LOOK_NS = 100_000_000
 _PAUSE_NS = 10_000_000
 
@@ -77,14 +77,16 @@ class Intake:
     """
 
     def __init__(self, clock: Clock, connection: Connection, form: Form, where: str) -> None:
-        self.ticks, self.bytes = 1, 0
+        self.ticks = 1
         self._clock, self._connection, self._form, self._where = clock, connection, form, where
         self._open: Gathered | None = None
         self._done: deque[Gathered] = deque()
-        self._rest = b""
+        self._rest, self._raw = b"", deque[bytes]()
+        self._received, self._given = 0, 0  # bytes so far; two counters, for two threads
+        self._sorting = threading.Lock()
         self._came, self._over = clock.event(), threading.Event()
         self._failed: DeviceError | None = None
-        self._binner().sort(np.zeros(1, form.layout.dtype))  # what is compiled is compiled now
+        self._binner().sort(np.frombuffer(bytes(8), form.layout.dtype))  # what is compiled is compiled now
         self._thread = threading.Thread(target=self._run, daemon=True) if clock.kind == "real" else None
         if self._thread is not None:
             self._thread.start()
@@ -98,6 +100,8 @@ class Intake:
             "timeout" when its end has not come by `until_ns`, "lost" when the stream has broken.
         """
         while (gate := self._found(number)) is None:
+            if self._sort_some():
+                continue
             if self._failed is not None:
                 raise self._failed
             if self._clock.now_ns() >= until_ns:
@@ -112,13 +116,19 @@ class Intake:
         if self._thread is not None:
             self._thread.join(5.0)
 
-    def pump(self, until_ns: int) -> None:
-        """Take what has come, waiting for it at most until a time; raises DeviceError "lost"."""
+    def _receive(self, until_ns: int) -> None:
+        """Take the bytes that have come, waiting for them at most until a time; raises DeviceError "lost"."""
         try:
-            if self._clock.wait_readable(self._connection, until_ns):
-                self._feed(self._gathered())
+            if not self._clock.wait_readable(self._connection, until_ns):
+                return
+            data = self._gathered()
         except OSError as error:
             raise self._error(f"stream lost: {error}", "lost") from error
+        if not data:
+            raise self._error("the device has closed the stream", "lost")
+        self._raw.append(data)
+        self._received += len(data)
+        self._came.set()
 
     def _gathered(self) -> bytes:
         """Return what has come, in one piece: many small ones cost more than one large one."""
@@ -133,35 +143,42 @@ class Intake:
     def _found(self, number: int) -> Gathered | None:
         while self._done and self._done[0].number < number:
             self._done.popleft()
-        return self._done.popleft() if self._done and self._done[0].number == number else None
+        if not self._done or self._done[0].number != number:
+            return None
+        gate = self._done.popleft()
+        self._given = self._received - sum(map(len, tuple(self._raw)))
+        return gate
 
     def _wait(self, until_ns: int) -> None:
         if self._thread is None:
-            self.pump(until_ns)
-        elif not self._done and self._failed is None:
+            self._receive(until_ns)
+        elif not self._raw and self._failed is None:
             self._came.wait_until(min(until_ns, self._clock.now_ns() + _LOOK_NS))
             self._came.clear()
 
     def _run(self) -> None:
         while not self._over.is_set():
             try:
-                if self._waiting() < MOST_EVENTS:
-                    self.pump(self._clock.now_ns() + _LOOK_NS)
+                if self._received - self._given < MOST_BYTES:
+                    self._receive(self._clock.now_ns() + _LOOK_NS)
                 else:
                     self._clock.sleep_until(self._clock.now_ns() + _PAUSE_NS)
             except DeviceError as error:
                 self._failed = error
                 self._came.set()
                 return
+            if sum(map(len, tuple(self._raw))) > SORT_BYTES:
+                self._sort_some()
 
-    def _waiting(self) -> int:
-        gates = [*self._done, *([self._open] if self._open else [])]
-        return sum(len(part) for gate in gates for part in gate.times)
+    def _sort_some(self) -> bool:
+        """Sort the oldest bytes; return whether there were any."""
+        with self._sorting:
+            if not self._raw:
+                return False
+            self._feed(self._raw.popleft())
+            return True
 
     def _feed(self, data: bytes) -> None:
-        if not data:
-            raise self._error("the device has closed the stream", "lost")
-        self.bytes += len(data)
         data = self._rest + data if self._rest else data
         size = np.dtype(self._form.layout.dtype).itemsize
         whole = len(data) - len(data) % size
