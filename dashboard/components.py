@@ -8,6 +8,7 @@ from typing import Any
 from dash import dcc, html
 
 from dashboard.buttons import Children, Part, act_button, desk, operate, question, who
+from dashboard.spectrum import spectrum
 from dashboard.view import CAUTION
 
 _NEWEST = 4  # lines of the log that stand open beside the verdict
@@ -77,6 +78,7 @@ def _sections() -> Children:
         _figure("pattern", "Pattern and leftover", _numbers()),
         _figure("strip", "Count rate"),
         html.Section(id="budget", className="full"),
+        html.Section(id="cuts", className="full"),
         html.Section(id="desk"),
         html.Nav(id="runs", **{"aria-label": "Runs of this lab"}),
     ]
@@ -269,5 +271,6 @@ _RENDERERS: dict[str, Callable[[Any], Any]] = {
     "operate": operate,
     "who": who,
     "budget": _budget,
+    "cuts": spectrum,
     "desk": desk,
 }

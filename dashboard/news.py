@@ -19,6 +19,7 @@ from dashboard import figures, lab
 from dashboard.asking import book_stamp, requests_of
 from dashboard.budget import budget_view
 from dashboard.components import render
+from dashboard.cuts import cuts_view
 from dashboard.desk import desk_stamp, desk_view
 from dashboard.operate import operate_view
 from dashboard.times import clock
@@ -26,7 +27,7 @@ from dashboard.view import empty_view, is_silent, unreadable_view, view, waiting
 
 WORDS = (
     *("header", "verdict", "line", "warnings", "kappa", "now"),
-    *("sensors", "log", "rail", "runs", "footer", "operate", "who", "budget", "desk"),
+    *("sensors", "log", "rail", "runs", "footer", "operate", "who", "budget", "cuts", "desk"),
 )
 CURVES = ("night-data", "pattern-data", "plates-data", "strip-data")
 
@@ -133,6 +134,7 @@ def _whole(feed: dict[str, Any], scene: _Scene) -> dict[str, Any]:
         "line": _line(said),
         "operate": asks,
         "budget": budget_view(feed),
+        "cuts": cuts_view(feed),
         "who": {"says": asks["says"], "inside": bool(scene.person.name)},
         "footer": f"Data up to {clock(feed['updated_utc'], seconds=True)}.",
         "night-data": figures.night(feed),
@@ -143,7 +145,7 @@ def _whole(feed: dict[str, Any], scene: _Scene) -> dict[str, Any]:
 
 
 def _bare(said: dict[str, Any]) -> dict[str, Any]:
-    nothing = dict.fromkeys(("operate", "who", "budget"))
+    nothing = dict.fromkeys(("operate", "who", "budget", "cuts"))
     return {"page": "bare", **said, "line": _line(said), "footer": "", **nothing}
 
 

@@ -22,7 +22,7 @@ from daq.estimate.loads import Instance
 from daq.estimate.marginal import Marginal, marginal
 from daq.estimate.plan import Plan
 from daq.estimate.sensitivity import by_cell
-from daq.estimate.settle import SECONDS_PER_HOUR, settle, taking
+from daq.estimate.settle import SECONDS_PER_HOUR, Settled, settle, taking
 from daq.estimate.spectrum import frequencies, lines, spectrum
 from daq.estimate.sums import sums_of
 from daq.estimate.tables import Tables, kappa_of, over, plan_contrast, tables_of
@@ -64,10 +64,24 @@ def geometry_of(dataset: Any) -> Geometry | None:
     """
     record: Mapping[str, Any] | None = dataset.attrs.get("cuts")
     plan = plan_of_dataset(dataset)
+    visits = visits_of(rows_of_dataset(dataset), plan)
+    return geometry_after(visits, plan, settle(visits, plan), record)
+
+
+def geometry_after(
+    visits: Visits, plan: Plan, settled: Settled, record: Mapping[str, Any] | None
+) -> Geometry | None:
+    """Return what the cuts did to the complete pairs; see `geometry_of`.
+
+    Parameters
+    ----------
+    settled
+        What `settle` gave for the same visits.
+    record
+        The cuts as the run's record holds them.
+    """
     if record is None or plan.blinding.hides:
         return None
-    visits = visits_of(rows_of_dataset(dataset), plan)
-    settled = settle(visits, plan)
     tables = tables_of(sums_of(visits, plan, taking(settled, visits, plan)))
     if not (tables.blocks and tables.measured.all() and (tables.variances > 0).all()):
         return None

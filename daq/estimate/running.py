@@ -11,6 +11,7 @@ import numpy as np
 from daq.estimate.arrays import FloatArray
 from daq.estimate.budget import Budget, Known, budget
 from daq.estimate.detected import detected
+from daq.estimate.geometry import Geometry, geometry_after
 from daq.estimate.headline import headline
 from daq.estimate.plan import Plan, stand_places
 from daq.estimate.rows import rows_of_readings
@@ -47,6 +48,7 @@ class Running:
         self._estimate: Estimate | None = None
         self._settled: Settled | None = None  # what the complete pairs say
         self._budget: tuple[Settled, Budget | None] | None = None  # of what the complete pairs said
+        self._geometry: tuple[Settled, Geometry | None] | None = None
         self._touched: set[int] = set()  # pairs with news since then
         self._past_pairs: list[int] = []  # the complete pairs that the remembered history rests on
         self._past: dict[int, dict[str, float | None]] = {}
@@ -99,6 +101,13 @@ class Running:
             found = None if taken is None else budget(self._visits, self._plan, taken, settled.numbers, known)
             self._budget = settled, found
         return self._budget[1]
+
+    def geometry(self, record: Mapping[str, Any] | None) -> Geometry | None:
+        """Return what the cuts of the slits did to the complete pairs, from the run's record of them."""
+        settled = self._settle()
+        if self._geometry is None or self._geometry[0] is not settled:
+            self._geometry = settled, geometry_after(self._visits, self._plan, settled, record)
+        return self._geometry[1]
 
     def history(self) -> dict[str, list[float | None]]:
         """Return what was known after each complete pair, in the order of the pairs; None while undefined.

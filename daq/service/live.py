@@ -6,6 +6,7 @@ import logging
 import time
 from collections import deque
 from collections.abc import Callable, Mapping
+from dataclasses import asdict
 from datetime import UTC, datetime
 from pathlib import Path
 from typing import Any
@@ -13,6 +14,7 @@ from typing import Any
 from daq.errors import StorageError
 from daq.estimate import Blinding, Running, plan_of_dataset, readings_of_dataset
 from daq.estimate.budget import Budget, known_of
+from daq.estimate.geometry import Geometry
 from daq.estimate.shown import shown_table
 from daq.estimate.standing import Change, Standing
 from daq.estimate.wake import Held
@@ -137,6 +139,7 @@ class Live:
             "kappa": _kappa(figures),
             "history": running.history(),
             "budget": shown_table(_budget(running.budget(self._known)), self._blinding),
+            "geometry": _geometry(running.geometry(self._meta.get("cuts"))),
             "rate": self._strip.columns(self._mean_hz),
             "sensors": {} if self._last is None else {k: v[:2] for k, v in self._last.sensors.items()},
             "warnings": [_told(one) for one in self.watcher.standing],
@@ -190,6 +193,10 @@ def _budget(found: Budget | None) -> dict[str, Any] | None:
     return {"lines": lines, "total_se": found.total_se}
 
 
+def _geometry(found: Geometry | None) -> dict[str, Any] | None:
+    return None if found is None else asdict(found)
+
+
 def _told(one: Standing) -> dict[str, Any]:
     """Return a warning as the page gets it."""
     says = one.says
@@ -222,6 +229,7 @@ def tell_again(folder: Path) -> None:
     figures = running.estimate().to_json()
     feed |= {**_patterns(figures), "kappa": _kappa(figures), "history": running.history()}
     feed |= {"budget": shown_table(_budget(running.budget(known_of(visits.attrs))), hidden)}
+    feed |= {"geometry": _geometry(running.geometry(visits.attrs.get("cuts")))}
     feed |= {"blinding": hidden.state}
     feed |= {"truth_kappa": None if hidden.hides else visits.attrs.get("truth_kappa")}
     if hidden.hides:  # its levels hold all openings together
