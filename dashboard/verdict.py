@@ -101,7 +101,8 @@ def _line(feed: Feed, silent: bool) -> tuple[str, str | None]:
         return f"{where}. Everything counted so far is saved.", None
     if feed["state"] == "ready":
         where = f"{capital(spelt(feed['kappa']['planned_pairs'], 'pair'))} are planned"
-    own = "On the rehearsal's own clock, done" if feed["clock"] == "virtual" else "Done"
+    kind = "replay" if feed["kind"] == "replay" else "rehearsal"
+    own = f"On the {kind}'s own clock, done" if feed["clock"] == "virtual" else "Done"
     return f"{where}. {own} {_about(feed)}.", feed["ends_utc"]
 
 

@@ -45,17 +45,20 @@ def pack(arguments: argparse.Namespace) -> Answer:
     if run.name.endswith(".bag"):
         found = bag_problems(run)
         figures = {"ok": not found, "problems": found}
-        lines = [f"{one}." for one in found] or [f"{run}: the bag is whole."]
-        return Answer(StorageError.exit_status if found else 0, figures, lines)
+        told = [f"{one}." for one in found] or [f"{run}: the bag is whole."]
+        return Answer(StorageError.exit_status if found else 0, figures, told)
     refuse_hidden(run, arguments.raw, "a packed run")
     target = arguments.to or run.with_name(run.name + (".zip" if arguments.zip else ".bag"))
-    (pack_zip if arguments.zip else pack_bag)(run, target)
+    if arguments.zip:
+        pack_zip(run, target)
+    else:
+        pack_bag(run, target, "\n".join([*lines(figures_of(run)), ""]))
     figures = {"ok": True, "packed": str(target)}
     if arguments.copy_to is None:
         return Answer(0, figures, [f"packed as {target}"])
     copied = copy_to(target, arguments.copy_to)
-    told = f"{copied} files copied to {arguments.copy_to}, each read back and compared"
-    return Answer(0, figures | {"copied": copied}, [f"packed as {target}", told])
+    sent = f"{copied} files copied to {arguments.copy_to}, each read back and compared"
+    return Answer(0, figures | {"copied": copied}, [f"packed as {target}", sent])
 
 
 def export(arguments: argparse.Namespace) -> Answer:

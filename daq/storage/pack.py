@@ -21,8 +21,8 @@ from daq.storage.trouble import rim
 UNKNOWN = ":unkn"  # DataCite's word for a value that nobody knows
 
 
-def pack_bag(folder: Path, target: Path) -> None:
-    """Write a bag: the run folder as it is, visits.csv, settings.json, datacite.json and README.txt.
+def pack_bag(folder: Path, target: Path, report: str) -> None:
+    """Write a bag: the run folder as it is, report.txt, visits.csv, settings.json, datacite.json, README.txt.
 
     Raises
     ------
@@ -35,6 +35,7 @@ def pack_bag(folder: Path, target: Path) -> None:
         shutil.rmtree(passing, ignore_errors=True)
         shutil.copytree(folder, passing / folder.name)
         write_csv(folder, passing / "visits.csv")
+        (passing / "report.txt").write_text(report, "utf-8")
         _write_json(passing / "settings.json", meta)
         _write_json(passing / "datacite.json", _datacite(folder, meta))
         (passing / "README.txt").write_text(_readme(folder, meta), "utf-8")

@@ -6,6 +6,7 @@ import csv
 import json
 import subprocess
 import sys
+from functools import partial
 from pathlib import Path
 
 import numpy as np
@@ -21,13 +22,14 @@ from daq.storage.reader import open_itinerary, open_visits
 from daq.storage.verify import verify
 from tests.daq.storage.example import listed, started
 
+REPORT = "kappa = 0\n"
 SCRIPT = Path(__file__).with_name("kappa_by_hand.py")
 
 
 @pytest.fixture(scope="module")
 def bag(triple: Path, tmp_path_factory: pytest.TempPathFactory) -> Path:
     target = tmp_path_factory.mktemp("bags") / "triple-bag"
-    pack_bag(triple, target)
+    pack_bag(triple, target, REPORT)
     return target
 
 
@@ -36,11 +38,11 @@ def test_a_bag_validates_and_holds_the_run_as_it_is(bag: Path, triple: Path) -> 
     assert verify(bag / "data" / triple.name).ok
     names = {path.name for path in bag.iterdir()} | {path.name for path in (bag / "data").iterdir()}
     assert {"bagit.txt", "bag-info.txt", "manifest-sha512.txt", "tagmanifest-sha512.txt", "data"} <= names
-    assert {"README.txt", "visits.csv", "settings.json", "datacite.json", triple.name} <= names
+    assert {"README.txt", "report.txt", "visits.csv", "settings.json", "datacite.json", triple.name} <= names
 
 
 def test_one_flipped_byte_in_a_bag_is_named(triple: Path, tmp_path: Path) -> None:
-    pack_bag(triple, tmp_path / "bag")
+    pack_bag(triple, tmp_path / "bag", REPORT)
     chunk = tmp_path / "bag" / "data" / triple.name / "run.zarr" / "values" / "c" / "0" / "0"
     data = bytearray(chunk.read_bytes())
     data[20] ^= 1
@@ -89,7 +91,7 @@ def test_a_script_of_forty_lines_gets_kappa_and_its_error_from_the_table_alone(
 def test_a_run_that_is_not_finished_is_not_packed(tmp_path: Path) -> None:
     started(tmp_path / "run").close()
 
-    for pack in (pack_bag, pack_zip):
+    for pack in (partial(pack_bag, report=REPORT), pack_zip):
         with pytest.raises(StorageError, match="the run is not finished"):
             pack(tmp_path / "run", tmp_path / "target")
 
@@ -97,7 +99,7 @@ def test_a_run_that_is_not_finished_is_not_packed(tmp_path: Path) -> None:
 def test_a_target_that_exists_is_kept(triple: Path, tmp_path: Path) -> None:
     (tmp_path / "target").write_text("mine")
 
-    for pack in (pack_bag, pack_zip):
+    for pack in (partial(pack_bag, report=REPORT), pack_zip):
         with pytest.raises(StorageError, match="it exists already"):
             pack(triple, tmp_path / "target")
 
