@@ -36,6 +36,7 @@ def parser() -> argparse.ArgumentParser:
     _after_words(commands)
     _people_words(commands)
     _blind_words(commands)
+    _scale_words(commands)
     return whole
 
 
@@ -221,6 +222,21 @@ def _watch_words(commands: Any) -> None:
     end.add_argument("--after-lap", action="store_true", help="end at the edge of a lap, not of a stand")
     log = _add(commands, "log", "watch:log", "print what happened in a run", f"tercet log {RUN}")
     log.add_argument("run", type=Path, metavar="RUN", help="a run folder")
+
+
+def _scale_words(commands: Any) -> None:
+    many = "draw many nights, made up or rehearsed, and tell what they say"
+    study = _add(commands, "study", "study:study", many, "tercet study studies/coverage.toml --workers 2")
+    study.add_argument("file", type=Path, metavar="FILE", help="a study (TOML)")
+    study.add_argument("--draws", type=int, metavar="N", help="how many draws (as described)")
+    study.add_argument("--block", type=int, metavar="N", help="draws a worker gets at once (as described)")
+    study.add_argument("--into", type=Path, metavar="FOLDER", help="where draws are kept (studies/NAME)")
+    _workers(study)
+
+
+def _workers(one: argparse.ArgumentParser) -> None:
+    one.add_argument("--workers", type=int, default=0, metavar="N", help="worker processes here; 0: none (0)")
+    one.add_argument("--cluster", metavar="ADDRESS", help="a dask scheduler, like tcp://host:8786")
 
 
 def _blind_words(commands: Any) -> None:

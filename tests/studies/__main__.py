@@ -10,7 +10,10 @@ from importlib import import_module
 from pathlib import Path
 from typing import Any
 
-STUDIES = ("zigzag", "irregular", "benches", "exclusions", "quality", "cuts", "matrix")
+STUDIES = (
+    *("zigzag", "irregular", "benches", "exclusions", "quality", "cuts", "matrix"),
+    *("watched", "stopped", "places", "pooled"),
+)
 RESULTS = Path(__file__).parent / "results"
 
 

@@ -178,6 +178,45 @@ _FORMS: dict[str, tuple[str, dict[str, Any]]] = {
             "flagged": _percent("flagged"),
         },
     ),
+    "watched": (
+        "Nights that are watched: how often a band leaves a kappa of zero",
+        {
+            "nights": _plain("nights", "d"),
+            **{
+                name: _percent(name)
+                for name in ("whole night", "hard end", "t at the end", "t from 2", "t from 8")
+            },
+        },
+    ),
+    "stopped": (
+        "Nights that a rule ends: how often the t bar covers there",
+        {
+            "nights": _plain("nights", "d"),
+            "goal": _percent("goal"),
+            "its pairs": _plain("goal, pairs", ".1f"),
+            **{name: _percent(name) for name in ("own scatter from 8", "significance from 3", "futility")},
+        },
+    ),
+    "places": (
+        "Tests of every position by turning pairs over",
+        {
+            "nights": _plain("nights", "d"),
+            **{name: _percent(name) for name in ("chi-squared", "largest", "Fourier", "combined")},
+        },
+    ),
+    "pooled": (
+        "Several nights pooled: coverage, and alarms where nights are equal",
+        {
+            "sets": _plain("nights", "d"),
+            **{
+                name: _percent(name)
+                for name in (
+                    *("count weights", "Paule-Mandel"),
+                    *("chi-squared alarms", "Welch alarms", "one night alarms"),
+                )
+            },
+        },
+    ),
     "plan_orders": (
         "Orders (Table 1: figures beside the known ones)",
         {

@@ -1,0 +1,92 @@
+"""The command study: many nights, made up or rehearsed, drawn once each and told in one table."""
+
+from __future__ import annotations
+
+import argparse
+import sys
+import time
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
+from pathlib import Path
+
+from daq.cli.answer import Answer
+from daq.errors import DescriptionError
+from daq.scale.described import read_study
+from daq.scale.job import Job, job_of
+from daq.scale.study import Found, Runner, carry_out, here
+
+EVERY_S = 1.0
+
+
+def study(arguments: argparse.Namespace) -> Answer:
+    """Draw what is missing of a study and tell what all its draws say."""
+    if arguments.workers < 0:
+        raise DescriptionError(("--workers: give 0 for this process alone, or how many workers.",))
+    described, parameters = read_study(arguments.file)
+    job = job_of(described.kernel, parameters, described.seed, arguments.draws or described.draws)
+    folder = arguments.into or Path("studies") / described.name
+    block = arguments.block or described.block
+    began_s = time.monotonic()
+    with runner(arguments.workers, arguments.cluster) as run:
+        found = carry_out(job, folder, block, run, _progress(job))
+    figures = _figures(found, job, folder, time.monotonic() - began_s)
+    return Answer(1 if found.failed else 0, figures, list(_lines(found, job, folder)))
+
+
+@contextmanager
+def runner(workers: int, address: str | None) -> Iterator[Runner]:
+    """Give what draws blocks: this process, workers of its own, or a cluster at an address."""
+    if not workers and address is None:
+        yield here
+        return
+    from daq.scale.cluster import Cluster
+
+    with Cluster(workers, address) as cluster:
+        yield cluster
+
+
+def _progress(job: Job) -> Callable[[int], None]:
+    told_s = float("-inf")
+
+    def progress(done: int) -> None:
+        nonlocal told_s
+        if sys.stderr.isatty() and (time.monotonic() - told_s > EVERY_S or done == job.draws):
+            told_s = time.monotonic()
+            end = "\n" if done == job.draws else ""
+            print(f"\r{done} of {job.draws} draws", end=end, file=sys.stderr, flush=True)
+
+    return progress
+
+
+def _figures(found: Found, job: Job, folder: Path, took_s: float) -> dict[str, object]:
+    return {
+        "ok": not found.failed,
+        "study": job.key,
+        "folder": str(folder),
+        "draws": job.draws,
+        "done": found.done,
+        "digest": found.digest,
+        "columns": found.figures,
+        "failed": [{"first": one.first, "count": one.count, "why": one.why} for one in found.failed],
+        "took_s": took_s,
+    }
+
+
+def _lines(found: Found, job: Job, folder: Path) -> Iterator[str]:
+    for one in found.failed:
+        yield f"draws {one.first} to {one.first + one.count - 1} failed: {one.why}"
+    if found.digest is None:
+        yield f"{found.done} of {job.draws} draws are done; they are kept in {folder}"
+        return
+    yield f"{job.draws} draws, kept in {folder}"
+    yield f"{'':<26}{'number':>10}{'mean':>14}{'± its error':>12}{'sd':>12}{'least':>14}{'most':>14}"
+    for name, column in found.figures.items():
+        number, mean, sd = column["number"], column["mean"], column["sd"]
+        if mean is None or number is None:
+            yield f"{name:<26}{0:>10}"
+            continue
+        error = f"{sd / number**0.5:.2g}" if sd is not None else ""
+        spread = f"{sd:.4g}" if sd is not None else ""
+        least, most = column["least"], column["most"]
+        yield f"{name:<26}{number:>10.0f}{mean:>14.5g}{error:>12}{spread:>12}{least:>14.5g}{most:>14.5g}"
+    yield f"digest {found.digest}"

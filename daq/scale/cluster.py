@@ -1,0 +1,136 @@
+"""A cluster: blocks drawn by workers of dask.distributed, on this machine or at an address."""
+
+from __future__ import annotations
+
+import os
+from collections.abc import Iterable, Iterator
+from contextlib import ExitStack
+from importlib.util import find_spec
+from typing import Any
+
+from daq.errors import DaqError
+from daq.scale.job import Job, code_version, drawn
+from daq.scale.study import Block, Failed, Outcome
+
+OUTSTANDING = 8  # blocks a worker that wait at the scheduler at any time
+ANSWERS_WITHIN_S = 10.0
+RETRIES = 1  # of a block that raised; those that killed their worker are tried again alone
+
+
+class Cluster:
+    """A runner for `carry_out`; holds workers of its own, or the way to those at an address."""
+
+    def __init__(self, workers: int = 0, address: str | None = None) -> None:
+        if find_spec("distributed") is None:
+            raise DaqError(
+                "workers need the package distributed",
+                remedy="Install it: pip install 'tercet[scale]'; or leave it to one process: --workers 0",
+            )
+        os.environ.setdefault("OMP_NUM_THREADS", "1")
+        self._stack = ExitStack()
+        try:
+            self._client = self._stack.enter_context(_client(self._stack, workers, address))
+        except BaseException:
+            self._stack.close()
+            raise
+
+    def __call__(self, job: Job, blocks: Iterable[Block]) -> Iterator[Outcome]:
+        """Yield blocks as they come home; those that kill their worker are tried once more, alone."""
+        self._refuse_others(job)
+        guilty = []
+        for outcome in self._windowed(job, blocks):
+            if isinstance(outcome, Failed) and outcome.why.startswith("KilledWorker"):
+                guilty.append((outcome.first, outcome.count))
+            else:
+                yield outcome
+        for block in guilty:
+            yield from self._windowed(job, [block])
+
+    def close(self) -> None:
+        """Let the workers go."""
+        self._stack.close()
+
+    def __enter__(self) -> Cluster:
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        self.close()
+
+    def _windowed(self, job: Job, blocks: Iterable[Block]) -> Iterator[Outcome]:
+        from distributed import as_completed
+
+        waiting, going = iter(blocks), dict[Any, Block]()
+        queue = as_completed()
+        workers = max(1, len(self._client.scheduler_info(n_workers=-1)["workers"]))
+        for block in (block for block, _ in zip(waiting, range(OUTSTANDING * workers), strict=False)):
+            queue.add(self._submit(job, block, going))
+        for future in queue:
+            block = going.pop(future.key)
+            yield _home(future, block)
+            future.release()
+            following = next(waiting, None)
+            if following is not None:
+                queue.add(self._submit(job, following, going))
+
+    def _submit(self, job: Job, block: Block, going: dict[Any, Block]) -> Any:
+        key = f"{job.key[:16]}-{block[0]}-{block[1]}"
+        going[key] = block
+        return self._client.submit(drawn, job, *block, key=key, retries=RETRIES)
+
+    def _refuse_others(self, job: Job) -> None:
+        """Refuse workers of another version: their draws would be other numbers under the same name."""
+        mine = code_version(job.kernel)
+        found = self._client.run(code_version, job.kernel, on_error="return")
+        others = sorted(address for address, theirs in found.items() if theirs != mine)
+        if others:
+            raise DaqError(
+                f"{len(others)} of {len(found)} workers have another version of the program, or lack it",
+                where=others[0],
+                remedy="Install this version there and start them again",
+            )
+
+
+def _home(future: Any, block: Block) -> Outcome:
+    """Return what a future brought; one whose worker died with it is waited for until it is made again."""
+    from distributed import CancelledError, KilledWorker
+
+    try:
+        return block, future.result()
+    except KilledWorker:
+        return Failed(*block, "KilledWorker: every worker that tried it died")
+    except CancelledError as error:
+        raise DaqError(
+            "the scheduler has gone", remedy="What is drawn is kept: give the same command again"
+        ) from error
+    except Exception as error:  # what the kernel raised on the worker
+        return Failed(*block, f"{type(error).__name__}: {error}")
+
+
+def _client(stack: ExitStack, workers: int, address: str | None) -> Any:
+    import logging
+
+    import dask
+    from distributed import Client, LocalCluster
+
+    for name in ("distributed", "tornado.application"):
+        logging.getLogger(name).setLevel(logging.CRITICAL)
+    dask.config.set({"distributed.comm.timeouts.connect": f"{ANSWERS_WITHIN_S}s"})
+    if address is None:
+        own = LocalCluster(
+            n_workers=workers,
+            threads_per_worker=1,
+            host="127.0.0.1",
+            dashboard_address=None,
+            silence_logs=logging.CRITICAL,
+        )
+        address = stack.enter_context(own).scheduler_address
+    try:
+        client = Client(address, timeout=ANSWERS_WITHIN_S)
+        client.wait_for_workers(1, timeout=ANSWERS_WITHIN_S)
+    except (OSError, TimeoutError, ValueError) as error:
+        raise DaqError(
+            "no cluster with workers answers here",
+            where=address,
+            remedy="Start `dask scheduler` and `dask worker` there, or leave --cluster out",
+        ) from error
+    return client
