@@ -13,7 +13,9 @@ from typing import Any
 
 from daq.cli.answer import Answer
 from daq.errors import DescriptionError
+from daq.estimate.blinding import Blinding
 from daq.report.numbers import with_error
+from daq.report.text import with_error
 from daq.service.requests import ask, current_run
 from daq.storage.feed import read_feed
 from daq.storage.lab import there
@@ -43,7 +45,7 @@ def status(arguments: argparse.Namespace) -> Answer:
         "run": feed["run"],
         "since": feed["started_utc"],
         "age_s": _age_s(feed["written_utc"]),
-        **{key: feed[key] for key in ("kind", "visit", "ends_utc", "kappa", "warnings", "ended")},
+        **{key: feed[key] for key in ("kind", "visit", "ends_utc", "kappa", "blinding", "warnings", "ended")},
         **{key: feed.get(key) for key in ("holding", "in_doubt", "muted_until_utc")},
     }
     return Answer(0, figures, list(_status_lines(figures, arguments.lab)))
@@ -108,7 +110,8 @@ def _status_lines(figures: dict[str, Any], lab: Path) -> Iterator[str]:
     place = f"visit {visit['number'] + 1} of {visit['of']}" if visit else "no visit yet"
     yield f"{figures['run']}: {figures['state']}, {place}{_end_words(figures)}"
     value = "not yet" if kappa["se"] is None else with_error(kappa["value"], kappa["se"])
-    yield f"kappa {value} after {kappa['pairs']} of {kappa['planned_pairs']} pairs"
+    name = "kappa + offset" if Blinding(str(figures["blinding"])).hides else "kappa"
+    yield f"{name} {value} after {kappa['pairs']} of {kappa['planned_pairs']} pairs"
     if figures["state"] == BROKEN_OFF:
         yield f"Nobody carries it out. Go on with: tercet run --resume {lab / 'runs' / figures['run']}"
     if figures["muted_until_utc"]:

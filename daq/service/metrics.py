@@ -19,7 +19,9 @@ from prometheus_client.core import (
 from prometheus_client.openmetrics.exposition import generate_latest
 
 from daq import openings
+from daq.estimate.blinding import Blinding
 from daq.estimate.rows import DETECTOR
+from daq.estimate.shown import HIDDEN_ORDER
 from daq.records import Reading
 from daq.sequencer import State
 from daq.storage.feed import replace_text
@@ -31,8 +33,12 @@ LEVELS = ("note", "wake")
 
 @dataclass(slots=True)
 class Tally:
-    """Sums by opening since the service started: visits, detections, live seconds."""
+    """Sums by opening since the service started: visits, detections, live seconds.
 
+    `hides`: the present run is blinded, and detections of its openings of three and more slits are not added.
+    """
+
+    hides: bool = False
     by_opening: dict[int, list[float]] = field(default_factory=dict)
     last_utc_s: float | None = None
 
@@ -40,7 +46,8 @@ class Tally:
         """Take in a reading."""
         sums = self.by_opening.setdefault(reading.opening, [0.0, 0.0, 0.0])
         sums[0] += 1
-        sums[1] += reading.values[DETECTOR]
+        if not (self.hides and reading.opening.bit_count() >= HIDDEN_ORDER):
+            sums[1] += reading.values[DETECTOR]
         sums[2] += reading.live_s
         self.last_utc_s = (reading.utc_ns + reading.gate_close_ns - reading.gate_open_ns) / 1e9
 
@@ -100,14 +107,14 @@ def _of_run(feed: Mapping[str, Any] | None) -> Iterator[Metric]:
         return
     states = {state.value: state.value == feed["state"] for state in State}
     yield StateSetMetricFamily("tercet_run_state", "State of the present run.", value=states)
-    kappa = feed["kappa"]
+    kappa, hidden = feed["kappa"], Blinding(str(feed["blinding"])).hides
     yield _gauge("tercet_pairs", "Complete pairs of laps.", kappa["pairs"])
     yield _gauge("tercet_planned_pairs", "Planned pairs of laps.", kappa["planned_pairs"])
     for name, key, text in (
         ("tercet_kappa_ratio", "value", "Running residual over its normalisation."),
         ("tercet_kappa_standard_error_ratio", "se", "Standard error of kappa from the pairs."),
     ):
-        if kappa[key] is not None:
+        if kappa[key] is not None and not (key == "value" and hidden):
             yield _gauge(name, text, kappa[key], "ratio")
     warnings = GaugeMetricFamily("tercet_warnings", "Warnings that stand.", labels=["level"])
     for level in LEVELS:

@@ -11,6 +11,7 @@ from typing import Any
 from apscheduler.schedulers.background import BackgroundScheduler
 
 from daq.errors import DaqError
+from daq.estimate.blinding import Blinding
 from daq.estimate.standing import Change
 from daq.itinerary import Itinerary
 from daq.records import Reading
@@ -100,6 +101,8 @@ class Outlets:
             log.error("%s", error)
 
     def _write(self, feed: Mapping[str, Any] | None) -> None:
+        if feed is not None:
+            self._tally.hides = Blinding(str(feed["blinding"])).hides
         try:
             write_metrics(self._lab, feed, self._tally)
         except DaqError as error:

@@ -6,6 +6,7 @@ from collections.abc import Iterator
 from datetime import datetime, timedelta
 from pathlib import Path
 
+from daq.estimate.blinding import Blinding
 from daq.estimate.standing import Change
 from daq.service.messages import NOTE, URGENT, post
 from daq.storage.feed import read_feed
@@ -52,5 +53,6 @@ def _run_lines(folder: Path, since: float) -> Iterator[str]:
     state = f"ended ({ended['reason']})" if ended else feed["state"]
     yield f"{feed['run']}: {state}, {kappa['pairs']} of {kappa['planned_pairs']} pairs."
     if kappa["se"] is not None and kappa["value"] is not None:  # what is hidden is not in the feed
-        yield f"  kappa = {kappa['value']:+.2e} ± {kappa['se']:.2e}"
+        name = "kappa + offset" if Blinding(str(feed["blinding"])).hides else "kappa"
+        yield f"  {name} = {kappa['value']:+.2e} ± {kappa['se']:.2e}"
     yield from (f"  ! {one['what']} {one['good']}" for one in feed["warnings"])

@@ -17,7 +17,7 @@ from daq.cli import main
 from daq.cli.toml import toml_text
 from daq.cli.words import parser
 from daq.estimate import Blinding, estimate_run
-from daq.estimate.dataset import HIDDEN
+from daq.estimate.dataset import HIDDEN, readings_of_dataset
 from daq.service.metrics import Tally, metrics_text
 from daq.service.telling import summary_of
 from daq.storage.blinding import read_events, state_of
@@ -188,8 +188,6 @@ def test_live_json_log_page_and_results_give_nothing_away(run: Path) -> None:
         "page": json.loads(json.dumps(page, default=lambda part: part.to_plotly_json())),
         "results": [meta["results"], meta["stop"]],
         "blinding record": (run / "blinding.jsonl").read_text(),
-        "metrics": metrics_text(read_feed(run), Tally(), 1),
-        "digest": summary_of(run.parents[1], datetime.now(UTC)),
     }
 
     secrets = Secrets(run)
@@ -221,6 +219,27 @@ def test_the_feed_gives_nothing_away_at_any_time_of_the_night(tmp_path: Path) ->
     assert len({json.dumps(feed) for feed in seen}) >= 2
     assert [secrets.found_in(feed) for feed in seen] == [[]] * len(seen)
     assert all(feed is None or feed["rates_hz"][7] == [None] * 5 for feed in seen)
+
+
+def test_metrics_and_digest_give_nothing_away(run: Path) -> None:
+    """Detections by opening, of all positions together, would be a residual of their own."""
+    feed, visits = read_feed(run), open_visits(run)
+    assert feed is not None
+    tally = Tally(hides=Blinding(feed["blinding"]).hides)
+    for reading in readings_of_dataset(visits):
+        tally.add(reading)
+
+    text = metrics_text(feed, tally, 10**9)
+    digest = summary_of(run.parents[1], datetime.now(UTC))
+
+    high = visits["opening"].values == 7
+    detections = float(visits["values"].values[high, 0].sum())
+    secrets = Secrets(run)
+    assert secrets.found_in([text, digest]) == []
+    assert detections not in set(numbers(text))
+    assert float(visits["values"].values[visits["opening"].values == 3, 0].sum()) in set(numbers(text))
+    assert "kappa + offset" in digest
+    assert "tercet_kappa_ratio" not in text
 
 
 def test_the_truth_of_a_simulated_bench_is_hidden_with_kappa(run, capsys):
