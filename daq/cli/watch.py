@@ -15,7 +15,6 @@ from daq.cli.answer import Answer
 from daq.errors import DescriptionError
 from daq.estimate.blinding import Blinding
 from daq.report.numbers import with_error
-from daq.report.text import with_error
 from daq.service.requests import ask, current_run
 from daq.storage.feed import read_feed
 from daq.storage.lab import there

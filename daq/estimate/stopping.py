@@ -10,7 +10,7 @@ from typing import Any
 from scipy.special import ndtr
 
 ONCE, WHOLE_NIGHT = "once", "whole night"
-GOAL_FROM_PAIR, EXCESS_FROM_PAIR, FUTILE_FROM_PAIR = 12, 8, 8
+GOAL_FROM_PAIR, FUTILE_FROM_PAIR = 12, 8
 FUTILE_BELOW, Z_CRITICAL = 0.10, 1.959963984540054
 
 PLANNED, GOAL, END_TIME = "planned", "goal", "end time"
@@ -19,10 +19,14 @@ FUTILITY, BY_HAND, BROKEN = "futility", "by hand", "broken off"
 
 @dataclass(frozen=True, slots=True)
 class Stopping:
-    """What a measurement allows besides its planned end: a goal of the error bar, futility."""
+    """What a measurement allows besides its planned end: a goal of the error bar, futility.
+
+    `excess`: jackknife over counting as it was planned.
+    """
 
     goal_se: float | None = None
     futility: bool = False
+    excess: float = 1.0
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -70,34 +74,27 @@ _REMARKS = {
 }
 
 
-def due(
-    stopping: Stopping,
-    numbers: Mapping[str, Any],
-    excess: float | None,
-    through: int | None = None,
-) -> str:
+def due(stopping: Stopping, numbers: Mapping[str, Any], through: int | None = None) -> str:
     """Return which kind of end is due after a complete pair, or nothing.
 
     Parameters
     ----------
     numbers
         Of `Running.after`: kappa, kappa_se, kappa_counting_se, pairs; and planned_pairs.
-    excess
-        Jackknife over counting, as it stood after pair 8: frozen, so that its noise does not choose the end.
 
     through
         Pairs that will be complete at the end, where that is one more than the numbers rest on.
 
     Notes
     -----
-    The goal is compared with the counting error times the frozen excess, never with the jackknife of the
-    moment: that one covers 90 to 94 % when it chooses its own end.
+    The goal is compared with the counting error times the planned excess, never with the jackknife of the
+    moment, nor with an excess that this run has shown: their noise would choose the end (studies).
     """
     pairs = through or numbers["pairs"]
     counting, se = numbers["kappa_counting_se"], numbers["kappa_se"]
-    if stopping.goal_se and excess and counting and pairs >= GOAL_FROM_PAIR:
+    if stopping.goal_se and counting and pairs >= GOAL_FROM_PAIR:
         to_come = counting * sqrt(numbers["pairs"] / pairs)
-        if to_come * excess <= stopping.goal_se:
+        if to_come * stopping.excess <= stopping.goal_se:
             return GOAL
     if stopping.futility and pairs >= FUTILE_FROM_PAIR and se:
         share = numbers["pairs"] / numbers["planned_pairs"]

@@ -6,6 +6,7 @@ import os
 from collections.abc import Iterable, Iterator
 from contextlib import ExitStack
 from importlib.util import find_spec
+from itertools import islice
 from typing import Any
 
 from daq.errors import DaqError
@@ -14,6 +15,8 @@ from daq.scale.study import Block, Failed, Outcome
 
 OUTSTANDING = 8  # blocks a worker that wait at the scheduler at any time
 ANSWERS_WITHIN_S = 10.0
+LOOK_EVERY_S, WITHOUT_WORKERS_S = 5.0, 60.0
+KILLED = "killed:"
 RETRIES = 1  # of a block that raised; those that killed their worker are tried again alone
 
 
@@ -38,13 +41,13 @@ class Cluster:
         """Yield blocks as they come home; those that kill their worker are tried once more, alone."""
         self._refuse_others(job)
         guilty = []
-        for outcome in self._windowed(job, blocks):
-            if isinstance(outcome, Failed) and outcome.why.startswith("KilledWorker"):
+        for outcome in self._windowed(job, blocks, ""):
+            if isinstance(outcome, Failed) and outcome.why.startswith(KILLED):
                 guilty.append((outcome.first, outcome.count))
             else:
                 yield outcome
         for block in guilty:
-            yield from self._windowed(job, [block])
+            yield from self._windowed(job, [block], "-alone")
 
     def close(self) -> None:
         """Let the workers go."""
@@ -56,26 +59,36 @@ class Cluster:
     def __exit__(self, *_: object) -> None:
         self.close()
 
-    def _windowed(self, job: Job, blocks: Iterable[Block]) -> Iterator[Outcome]:
-        from distributed import as_completed
-
+    def _windowed(self, job: Job, blocks: Iterable[Block], tag: str) -> Iterator[Outcome]:
+        """Yield blocks as they come home, a few for each worker out at any time."""
         waiting, going = iter(blocks), dict[Any, Block]()
-        queue = as_completed()
-        workers = max(1, len(self._client.scheduler_info(n_workers=-1)["workers"]))
-        for block in (block for block, _ in zip(waiting, range(OUTSTANDING * workers), strict=False)):
-            queue.add(self._submit(job, block, going))
-        for future in queue:
-            block = going.pop(future.key)
-            yield _home(future, block)
-            future.release()
-            following = next(waiting, None)
-            if following is not None:
-                queue.add(self._submit(job, following, going))
+        while True:
+            for block in islice(waiting, max(0, OUTSTANDING * self._workers() - len(going))):
+                key = f"{job.key[:16]}-{block[0]}-{block[1]}{tag}"
+                going[self._client.submit(drawn, job, *block, key=key, retries=RETRIES)] = block
+            if not going:
+                return
+            for future in self._next_home(list(going)):
+                yield _home(future, going.pop(future))
+                future.release()
 
-    def _submit(self, job: Job, block: Block, going: dict[Any, Block]) -> Any:
-        key = f"{job.key[:16]}-{block[0]}-{block[1]}"
-        going[key] = block
-        return self._client.submit(drawn, job, *block, key=key, retries=RETRIES)
+    def _next_home(self, going: list[Any]) -> list[Any]:
+        """Return the futures that are done, when there is one; patient while there are workers."""
+        from distributed import CancelledError, wait
+
+        alone_s = 0.0
+        while True:
+            try:
+                return list(wait(going, timeout=LOOK_EVERY_S, return_when="FIRST_COMPLETED").done)
+            except CancelledError as error:
+                raise _gone() from error
+            except TimeoutError:
+                alone_s = 0.0 if self._workers(at_least=0) else alone_s + LOOK_EVERY_S
+            if alone_s > WITHOUT_WORKERS_S:
+                raise DaqError("no worker is left", remedy="Start workers and give the same command again")
+
+    def _workers(self, at_least: int = 1) -> int:
+        return max(at_least, len(self._client.scheduler_info(n_workers=-1)["workers"]))
 
     def _refuse_others(self, job: Job) -> None:
         """Refuse workers of another version: their draws would be other numbers under the same name."""
@@ -97,13 +110,15 @@ def _home(future: Any, block: Block) -> Outcome:
     try:
         return block, future.result()
     except KilledWorker:
-        return Failed(*block, "KilledWorker: every worker that tried it died")
+        return Failed(*block, f"{KILLED} every worker that tried it died")
     except CancelledError as error:
-        raise DaqError(
-            "the scheduler has gone", remedy="What is drawn is kept: give the same command again"
-        ) from error
+        raise _gone() from error
     except Exception as error:  # what the kernel raised on the worker
         return Failed(*block, f"{type(error).__name__}: {error}")
+
+
+def _gone() -> DaqError:
+    return DaqError("the scheduler has gone", remedy="What is drawn is kept: give the same command again")
 
 
 def _client(stack: ExitStack, workers: int, address: str | None) -> Any:
@@ -124,6 +139,7 @@ def _client(stack: ExitStack, workers: int, address: str | None) -> Any:
             silence_logs=logging.CRITICAL,
         )
         address = stack.enter_context(own).scheduler_address
+        own.adapt(minimum=workers, maximum=workers)  # a nanny that gives up is replaced
     try:
         client = Client(address, timeout=ANSWERS_WITHIN_S)
         client.wait_for_workers(1, timeout=ANSWERS_WITHIN_S)

@@ -11,7 +11,7 @@ from daq.estimate.stopping import (
     BROKEN,
     BY_HAND,
     END_TIME,
-    EXCESS_FROM_PAIR,
+    FUTILE_FROM_PAIR,
     FUTILITY,
     GOAL,
     Stopping,
@@ -28,12 +28,10 @@ REASONS = {
 
 def due_now(running: Running, stopping: Stopping, pair: int) -> str:
     """Return which kind of end is due when so many pairs are through, the last stand still being counted."""
-    if pair < EXCESS_FROM_PAIR or stopping == Stopping():
+    if pair < FUTILE_FROM_PAIR or not (stopping.goal_se or stopping.futility):
         return ""
     pairs = running.estimate().pairs
-    if pairs < EXCESS_FROM_PAIR:
-        return ""
-    return due(stopping, running.after(pairs), running.after(EXCESS_FROM_PAIR)["excess"], pair)
+    return due(stopping, running.after(pairs), pair) if pairs > 1 else ""
 
 
 def record_of_end(ended: str, kind: str, who: str, pairs: int, kappa_visible: bool) -> dict[str, Any]:

@@ -13,6 +13,7 @@ from typing import Any
 
 import xarray as xr
 
+from daq.description import Measurement
 from daq.devices.clock import RealClock
 from daq.devices.registry import open_devices
 from daq.errors import DaqError, DeviceError, StorageError
@@ -20,7 +21,7 @@ from daq.estimate import Judge, Running, readings_of_dataset
 from daq.estimate.quality import rules_of
 from daq.estimate.standing import Change
 from daq.estimate.stopping import BROKEN, BY_HAND, Stopping
-from daq.itinerary import Itinerary, plan_of
+from daq.itinerary import Itinerary, forecast, plan_of
 from daq.ports import Bench, Clock, Devices
 from daq.records import Reading
 from daq.sequencer import State
@@ -206,7 +207,6 @@ def night_of(
     """Return everything that a run holds while it is under way."""
     blinding = at_hand(folder, archive.meta)
     plan = replace(plan_of(itinerary, loaded.measurement), blinding=blinding)
-    ends = loaded.measurement.stop
     rules = rules_of(loaded.measurement.quality.model_dump())
     live = Live(
         folder,
@@ -225,7 +225,7 @@ def night_of(
         devices=devices,
         running=Running(plan),
         judge=Judge(plan, rules, itinerary.rates_hz),
-        stopping=Stopping(plan.goal_se if ends.goal else None, ends.futility),
+        stopping=_stopping(itinerary, loaded.measurement),
         blinding=blinding,
         live=live,
         log=RunLog(folder),
@@ -238,6 +238,16 @@ def night_of(
         exhausted=lambda: exhausted(folder),
         until_utc_ns=None if wanted.until is None else round(wanted.until.timestamp() * 1e9),
     )
+
+
+def _stopping(itinerary: Itinerary, measurement: Measurement) -> Stopping:
+    """Return the ends that a measurement allows besides its plan, with the excess that is planned."""
+    ends = measurement.stop
+    if not ends.goal:
+        return Stopping(futility=ends.futility)
+    expected = forecast(itinerary, measurement)
+    excess = max(1.0, expected.kappa_se / expected.budget["counting"])
+    return Stopping(measurement.estimate.goal_se, ends.futility, excess)
 
 
 def _clock(

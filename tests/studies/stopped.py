@@ -3,12 +3,13 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
 
 from daq.estimate.arrays import FloatArray
-from daq.estimate.stopping import EXCESS_FROM_PAIR, FUTILITY, GOAL, Stopping, due
+from daq.estimate.stopping import FUTILITY, GOAL, Stopping, due
 from tests.studies.figures import within
 from tests.studies.pairs import TOGETHER, counted, pairs_of, planned, quantile, share
 from tests.studies.scaled import drawn
@@ -16,8 +17,8 @@ from tests.studies.sources import SOURCES
 
 NIGHTS = 2000
 POSITIONS, PAIRS, GOAL_AT, DWELL_S = 11, 38, 19, 4.4
-RULES = ("goal", "own scatter from 8", "significance from 3", "futility")
-LIKELY_EXCESS = {"flicker": 4.0, "random walk": 1.1}  # for the goal alone, so that it is met about pair 19
+RULES = ("goal", "excess of pair 8", "own scatter from 8", "significance from 3", "futility")
+PLANNED_EXCESS = {"flicker": 4.0, "random walk": 1.1}
 
 
 def study(nights: int = NIGHTS) -> dict[str, Any]:
@@ -35,10 +36,11 @@ def nights(parameters: Mapping[str, Any], generator: np.random.Generator) -> dic
     pairs = pairs_of(of, counted(of, parameters["source"], generator))
     after = [pairs.after(many) for many in range(2, PAIRS + 1)]
     kappa, se, counting = (np.array([one[part] for one in after]) for part in range(3))
-    goal = of.counting_se * np.sqrt(PAIRS / GOAL_AT) * parameters["excess"]
+    excess = parameters["excess"]
+    rules = Stopping(of.counting_se * np.sqrt(PAIRS / GOAL_AT) * excess, excess=excess)
     found: dict[str, Any] = {}
     for rule in RULES:
-        ends = [_end(rule, kappa[:, one], se[:, one], counting[:, one], goal) for one in range(TOGETHER)]
+        ends = [_end(rule, kappa[:, one], se[:, one], counting[:, one], rules) for one in range(TOGETHER)]
         quantiles = np.array([quantile(end) for end in ends])
         at = np.array(ends) - 2, np.arange(TOGETHER)
         found[rule] = (np.abs(kappa[at]) <= quantiles * se[at]).astype(float)
@@ -46,25 +48,26 @@ def nights(parameters: Mapping[str, Any], generator: np.random.Generator) -> dic
     return found
 
 
-def _end(rule: str, kappa: FloatArray, se: FloatArray, counting: FloatArray, goal: float) -> int:
+def _end(rule: str, kappa: FloatArray, se: FloatArray, counting: FloatArray, goal: Stopping) -> int:
     """Return after how many pairs a rule ends a night."""
-    excess = float(se[EXCESS_FROM_PAIR - 2] / counting[EXCESS_FROM_PAIR - 2])
+    shown = replace(goal, excess=float(se[6] / counting[6]))
     for pairs in range(3, PAIRS):
         k, s, c = (float(column[pairs - 2]) for column in (kappa, se, counting))
         numbers = {"kappa": k, "kappa_se": s, "kappa_counting_se": c, "pairs": pairs, "planned_pairs": PAIRS}
-        if rule == "goal" and pairs >= EXCESS_FROM_PAIR and due(Stopping(goal), numbers, excess) == GOAL:
-            return pairs
-        if rule == "futility" and due(Stopping(futility=True), numbers, None) == FUTILITY:
-            return pairs
-        if rule == "own scatter from 8" and pairs >= 8 and s <= goal:
-            return pairs
-        if rule == "significance from 3" and abs(k) > quantile(pairs) * s:
+        ends = {
+            "goal": due(goal, numbers) == GOAL,
+            "excess of pair 8": due(shown, numbers) == GOAL,
+            "own scatter from 8": pairs >= 8 and s <= (goal.goal_se or 0.0),
+            "significance from 3": abs(k) > quantile(pairs) * s,
+            "futility": due(Stopping(futility=True), numbers) == FUTILITY,
+        }
+        if ends[rule]:
             return pairs
     return PAIRS
 
 
 def _row(source: str, nights: int) -> dict[str, Any]:
-    parameters = {"source": source, "excess": LIKELY_EXCESS.get(source, 1.0)}
+    parameters = {"source": source, "excess": PLANNED_EXCESS.get(source, 1.0)}
     found = drawn("stopped:nights", -(-nights // TOGETHER), parameters)
     shares = {rule: share(found[rule])["share"] for rule in RULES}
     return {

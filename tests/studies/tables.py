@@ -194,7 +194,8 @@ _FORMS: dict[str, tuple[str, dict[str, Any]]] = {
             "nights": _plain("nights", "d"),
             "goal": _percent("goal"),
             "its pairs": _plain("goal, pairs", ".1f"),
-            **{name: _percent(name) for name in ("own scatter from 8", "significance from 3", "futility")},
+            **{name: _percent(name) for name in ("excess of pair 8", "own scatter from 8")},
+            **{name: _percent(name) for name in ("significance from 3", "futility")},
         },
     ),
     "places": (

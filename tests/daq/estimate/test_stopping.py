@@ -51,43 +51,42 @@ def test_the_bar_read_once_holds_when_the_end_did_not_look_at_kappa(
 
 
 @pytest.mark.parametrize(
-    ("pairs", "counting", "excess", "goal", "expected"),
+    ("pairs", "counting", "rule", "expected"),
     [
-        (12, 1e-4, 1.0, 1e-4, GOAL),
-        (11, 1e-4, 1.0, 1e-4, ""),  # never before pair 12
-        (12, 1e-4, 1.01, 1e-4, ""),  # the frozen excess counts
-        (12, 1.01e-4, 1.0, 1e-4, ""),
-        (12, 1e-4, None, 1e-4, ""),  # not known yet
-        (12, 1e-4, 1.0, None, ""),
+        (12, 1e-4, Stopping(1e-4), GOAL),
+        (11, 1e-4, Stopping(1e-4), ""),  # never before pair 12
+        (12, 1e-4, Stopping(1e-4, excess=1.01), ""),
+        (12, 1.01e-4, Stopping(1e-4), ""),
+        (12, 1e-4, Stopping(), ""),
     ],
 )
-def test_the_goal_is_met_by_counting_error_times_excess(
-    pairs: int, counting: float, excess: float | None, goal: float | None, expected: str
+def test_the_goal_is_met_by_counting_error_times_planned_excess(
+    pairs: int, counting: float, rule: Stopping, expected: str
 ) -> None:
-    assert due(Stopping(goal), numbers(pairs=pairs, kappa_counting_se=counting), excess) == expected
+    assert due(rule, numbers(pairs=pairs, kappa_counting_se=counting)) == expected
 
 
 def test_the_jackknife_of_the_moment_does_not_end_a_run() -> None:
-    assert due(GOAL_RULE, numbers(kappa_se=1e-9, kappa_counting_se=2e-4), 1.0) == ""
+    assert due(GOAL_RULE, numbers(kappa_se=1e-9, kappa_counting_se=2e-4)) == ""
 
 
 def test_a_pair_that_is_all_but_complete_counts() -> None:
     just_short = numbers(pairs=12, kappa_counting_se=1.04e-4)
 
-    assert due(GOAL_RULE, just_short, 1.0) == ""
-    assert due(GOAL_RULE, just_short, 1.0, through=13) == GOAL
+    assert due(GOAL_RULE, just_short) == ""
+    assert due(GOAL_RULE, just_short, through=13) == GOAL
 
 
 @pytest.mark.parametrize(
     ("kappa", "expected"), [(0.0, FUTILITY), (0.5e-4, FUTILITY), (2e-4, ""), (-2e-4, "")]
 )
 def test_a_run_that_will_hardly_find_anything_may_end(kappa: float, expected: str) -> None:
-    assert due(FUTILE_RULE, numbers(kappa=kappa), 1.0) == expected
+    assert due(FUTILE_RULE, numbers(kappa=kappa)) == expected
 
 
 def test_nothing_is_due_that_was_not_asked_for() -> None:
-    assert due(Stopping(), numbers(), 1.0) == ""
-    assert due(FUTILE_RULE, numbers(pairs=7), 1.0) == ""
+    assert due(Stopping(), numbers()) == ""
+    assert due(FUTILE_RULE, numbers(pairs=7)) == ""
 
 
 def test_power_at_the_end_is_what_was_found() -> None:
