@@ -97,7 +97,7 @@ GIVES_OUT: Mapping[str, Callable[[Any, Path], list[Any]]] = {
     "bookings": lambda capsys, run: both(capsys, "bookings", str(run.parents[1])),
 }
 NOTHING_OF_A_RUN = {
-    **dict.fromkeys(("check", "compose", "book", "arm", "people"), "it reads descriptions alone"),
+    **dict.fromkeys(("check", "compose", "book", "arm", "people", "import"), "it reads no run"),
     **dict.fromkeys(("hold", "resume", "end", "acknowledge", "mute"), "it leaves a request"),
     **dict.fromkeys(("rehearse", "run", "replay"), "it prints what report prints; scanned as the rehearsal"),
     "serve": "what it shows is the page, what it tells is the log and live.json",
