@@ -64,6 +64,8 @@ def geometry_of(dataset: Any) -> Geometry | None:
     """
     record: Mapping[str, Any] | None = dataset.attrs.get("cuts")
     plan = plan_of_dataset(dataset)
+    if record is None or plan.blinding.hides:
+        return None
     visits = visits_of(rows_of_dataset(dataset), plan)
     return geometry_after(visits, plan, settle(visits, plan), record)
 
