@@ -5,9 +5,10 @@ from __future__ import annotations
 import argparse
 import os
 import tomllib
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterable, Iterator, Mapping
 from dataclasses import asdict
 from pathlib import Path
+from typing import Any
 
 from daq.cli.answer import Answer
 from daq.cli.plan import refuse_hopeless, wishes
@@ -16,21 +17,24 @@ from daq.errors import DescriptionError
 from daq.itinerary import Forecast, Itinerary, forecast, pinned
 from daq.itinerary.advice import cautions, orders_compared, remedies, verdict
 from daq.itinerary.pilot import HOUR_S
-from daq.service.load import DESCRIPTION, Loaded, load
+from daq.service.bench_use import Used, changes, laid_in
+from daq.service.load import DESCRIPTION, RIG, Loaded, load
+from daq.storage.lab import there
 
 MANY = 1000.0  # from here two digits of Q are enough
 
 
 def compose(arguments: argparse.Namespace) -> Answer:
     """Compose the itinerary, print what it will bring, and write plan and picture where asked for."""
-    loaded = load(arguments.file, wishes(arguments))
+    used = _used(load(arguments.file, wishes(arguments)), arguments.bench)
+    loaded = used.loaded
     itinerary = loaded.itinerary()
     expected = forecast(itinerary, loaded.measurement)
     refuse_hopeless(loaded, itinerary, expected, arguments.file)
     compared = orders_compared(loaded.measurement, loaded.rig, itinerary)
     advice = remedies(loaded.measurement, loaded.rig, itinerary, expected)
     if arguments.write is not None:
-        _write(arguments.write, loaded, itinerary, arguments.file)
+        _write(arguments.write, used, itinerary, arguments.file)
     if arguments.picture is not None:
         from daq.report.planned import draw_plan
 
@@ -41,18 +45,48 @@ def compose(arguments: argparse.Namespace) -> Answer:
         "verdict": verdict(expected),
         "remedies": list(advice),
         "cautions": list(cautions(itinerary)),
-        "notes": list(itinerary.notes),
+        "notes": [*used.said, *itinerary.notes],
         "orders": {name: {"q": one.q, "kappa_se": one.kappa_se} for name, one in compared.items()},
     }
-    return Answer(0, figures, list(_lines(itinerary, expected, compared, advice, arguments)))
+    return Answer(0, figures, [*used.said, *_lines(itinerary, expected, compared, advice, arguments)])
 
 
-def _write(path: Path, loaded: Loaded, itinerary: Itinerary, file: Path) -> None:
+def _used(loaded: Loaded, lab: Path | None) -> Used:
+    """Return a description as it is, or with the bench records of a lab laid in."""
+    return Used(loaded, {}, ()) if lab is None else laid_in(loaded, there(lab))
+
+
+def _write(path: Path, used: Used, itinerary: Itinerary, file: Path) -> None:
     """Write a description that holds every choice, for run and rehearse to take as it is."""
+    loaded = used.loaded
     table = loaded.wishes.laid_over(tomllib.loads(loaded.texts[DESCRIPTION].decode()))
-    rig = os.path.relpath((file.parent / str(table["rig"])).resolve(), path.resolve().parent)
+    rig_name = str(table["rig"])
+    rig = os.path.relpath((file.parent / rig_name).resolve(), path.resolve().parent)
     table |= {"rig": Path(rig).as_posix(), "itinerary": pinned(itinerary, loaded.measurement)}
-    why = "".join(f"# {note}\n" for note in (f"Composed from {file.name}.", *itinerary.notes))
+    notes = (f"Composed from {file.name}.", *used.said, *itinerary.notes)
+    if used.said:
+        table |= dict(changes(used, table))
+    if used.at_mm:
+        own = path.with_name(f"{path.stem}-rig.toml")
+        _put(own, notes, _rig_table(used, (file.parent / rig_name).resolve(), path.resolve().parent))
+        table["rig"] = own.name
+    _put(path, notes, table)
+
+
+def _rig_table(used: Used, rig: Path, beside: Path) -> dict[str, Any]:
+    """Return the table of a rig whose openings stand where they were found, with paths from its new folder."""
+    table = tomllib.loads(used.loaded.texts[RIG].decode())
+    for name, at_mm in used.at_mm.items():
+        table["mask"]["openings"][name]["at_mm"] = at_mm
+    for entry in table["devices"].values():
+        if "dialect" in entry:
+            away = os.path.relpath((rig.parent / str(entry["dialect"])).resolve(), beside)
+            entry["dialect"] = Path(away).as_posix()
+    return table
+
+
+def _put(path: Path, notes: Iterable[str], table: Mapping[str, Any]) -> None:
+    why = "".join(f"# {note}\n" for note in notes)
     try:
         path.write_text(f"{why}\n{toml_text(table)}")
     except OSError as error:

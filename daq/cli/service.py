@@ -7,6 +7,7 @@ import getpass
 import sys
 import threading
 import time
+from collections.abc import Sequence
 from contextlib import ExitStack
 from datetime import UTC, datetime
 from pathlib import Path
@@ -15,6 +16,7 @@ from daq.cli.answer import Answer
 from daq.cli.night import interrupts, show_page
 from daq.cli.plan import wishes
 from daq.errors import DaqError, DescriptionError
+from daq.records import TASKS
 from daq.service.arming import checks, confirm
 from daq.service.bookings import Booking, bookings, cancel
 from daq.service.bookings import book as booked
@@ -87,7 +89,7 @@ def arm(arguments: argparse.Namespace) -> Answer:
         text = "Every device of this rig is simulated: it needs no arming."
         return Answer(0, {"ok": True, "armed": False, "problems": []}, [text])
     messages = settings_of(arguments.lab).messages
-    found = checks(loaded, arguments.lab, messages)
+    found = checks(loaded, arguments.lab, messages, _reasons(arguments.without))
     for one in found:
         print(f"{'ok ' if one.ok else 'NOT'}  {one.what}: {one.seen}", file=sys.stderr)
     problems = [f"{one.what}: {one.seen}" for one in found if not one.ok]
@@ -98,6 +100,17 @@ def arm(arguments: argparse.Namespace) -> Answer:
         return Answer(1, {"ok": False, "armed": False, "problems": problems}, ["Not armed.", *problems])
     armed = "Armed for one start within 24 hours. This is no safety function."
     return Answer(0, {"ok": True, "armed": True, "problems": []}, [armed])
+
+
+def _reasons(without: Sequence[str]) -> dict[str, str]:
+    """Return task -> reason; every one is a task and has a reason."""
+    parted = [one.partition("=") for one in without]
+    wrong = [task for task, _, reason in parted if task not in TASKS or not reason.strip()]
+    if wrong:
+        raise DescriptionError(
+            (f"--without {wrong[0]}: give TASK=REASON, a task of {', '.join(TASKS)} and a reason in words.",)
+        )
+    return {task: reason.strip() for task, _, reason in parted}
 
 
 def _typed(question: str) -> str:

@@ -65,6 +65,8 @@ def _plan_words(commands: Any) -> None:
     compose.add_argument(
         "--write", type=Path, metavar="PLAN", help="write a measurement that pins every choice, for run"
     )
+    records = "take the newest valid bench records of this lab, and say which"
+    compose.add_argument("--bench", type=Path, metavar="LAB", help=records)
     compose.add_argument(
         "--picture", type=Path, metavar="FILE", help="draw the plan; the name ends in .svg, .png or .pdf"
     )
@@ -181,6 +183,8 @@ def _service_words(commands: Any) -> None:
     listen.add_argument("--to", action="append", default=[], metavar="ADDRESS", help=where)
     arm.add_argument("file", type=Path, metavar="FILE", help="a measurement (TOML)")
     arm.add_argument("--by", metavar="NAME", help="who arms (your login name)")
+    reason = "do without a valid bench record, and why (repeatable)"
+    arm.add_argument("--without", action="append", default=[], metavar="TASK=REASON", help=reason)
     listing.add_argument("--cancel", type=int, metavar="N", help="cancel booking N")
 
 

@@ -8,6 +8,7 @@ from typing import Annotated, Any, Literal
 from pydantic import AfterValidator, Field, model_validator
 
 from daq.description.problems import NotNegative, Positive, ProblemsError, Table
+from daq.records import TASKS
 
 
 class Positions(Table):
@@ -216,6 +217,18 @@ _FORBIDDEN = {
 }
 
 
+def _a_task(name: str) -> str:
+    if name not in TASKS:
+        raise ValueError(f"there is no task {name!r}. Name some of {', '.join(TASKS)}")
+    return name
+
+
+class Ready(Table):
+    """Bench tasks of which a valid record has to be there before a run may be armed."""
+
+    tasks: tuple[Annotated[str, AfterValidator(_a_task)], ...] = ("dark", "pilot", "register", "dry-lap")
+
+
 class Hidden(Table):
     """Blinding: the runs that share an offset ("run", or a campaign's name), and its half width as text."""
 
@@ -257,6 +270,7 @@ class Measurement(Table):
     warn: Warn = Warn()
     stop: Stop = Stop()
     blinding: Hidden | None = None
+    ready: Ready = Ready()
     notes: Mapping[str, Any] = {}
 
     @model_validator(mode="after")

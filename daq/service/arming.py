@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import secrets
 import shutil
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterator, Mapping
 from dataclasses import dataclass
 from datetime import UTC, datetime, timedelta
 from hashlib import sha256
@@ -16,6 +16,7 @@ from daq.devices.clock import RealClock
 from daq.devices.registry import open_devices
 from daq.errors import DaqError
 from daq.ports import Devices
+from daq.service.bench_records import newest
 from daq.service.load import NO_WISHES, Loaded, load_run
 from daq.service.messages import TEST, Send, by_apprise, post, send_urgent
 from daq.service.requests import utc_now
@@ -47,13 +48,22 @@ class Check:
     seen: str
 
 
-def checks(loaded: Loaded, lab: Path, messages: Messages | None) -> list[Check]:
-    """Return the checks that need no person, all of them, also when one fails."""
+def checks(
+    loaded: Loaded, lab: Path, messages: Messages | None, without: Mapping[str, str] | None = None
+) -> list[Check]:
+    """Return the checks that need no person, all of them, also when one fails.
+
+    Parameters
+    ----------
+    without
+        Bench task -> why somebody wants to do without a valid record of it.
+    """
     return [
         *_device_checks(loaded),
         _disk(lab, len(loaded.itinerary())),
         _clock(datetime.now(UTC)),
         _rehearsed(loaded, lab),
+        *_bench_checks(loaded, lab, without or {}),
         _messages(messages),
     ]
 
@@ -127,6 +137,21 @@ def _device_checks(loaded: Loaded) -> Iterator[Check]:
             yield from _sensor_checks(devices)
     except DaqError as error:
         yield Check("devices", False, str(error))
+
+
+def _bench_checks(loaded: Loaded, lab: Path, without: Mapping[str, str]) -> Iterator[Check]:
+    """Yield what is recorded of every bench task that has to be done before; a typed reason stands in."""
+    for task in loaded.measurement.ready.tasks:
+        found, why = newest(lab, task, loaded.rig)
+        if found is not None:
+            age_d = (datetime.now(UTC) - datetime.fromisoformat(found["at_utc"])).total_seconds() / 86_400
+            seen = f"{found['verdict']}, {age_d:.1f} days old ({found['record']}): {found['sentence']}"
+            yield Check(f"bench {task}", True, seen)
+        elif task in without:
+            yield Check(f"bench {task}", True, f"left out, because {without[task]} ({why})")
+        else:
+            remedy = f"do `tercet task {task}`, or say why not: --without '{task}=reason'"
+            yield Check(f"bench {task}", False, f"{why}; {remedy}")
 
 
 def _axis_checks(devices: Devices) -> Iterator[Check]:

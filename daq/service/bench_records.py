@@ -61,6 +61,10 @@ def newest(lab: Path, task: str, rig: Rig, now: datetime | None = None) -> tuple
 
 
 def earlier(loaded: Loaded, lab: Path, now: datetime | None = None) -> dict[str, dict[str, Any]]:
-    """Return the newest valid record of every task, by task."""
+    """Return the newest valid record of every task, by task, without the list of its visits."""
     found = {name: newest(lab, name, loaded.rig, now)[0] for name in TASKS}
-    return {name: record for name, record in found.items() if record is not None}
+    return {name: _without_visits(record) for name, record in found.items() if record is not None}
+
+
+def _without_visits(record: Mapping[str, Any]) -> dict[str, Any]:
+    return {name: value for name, value in record.items() if name != "asked"}

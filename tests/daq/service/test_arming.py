@@ -4,14 +4,17 @@ from __future__ import annotations
 
 import re
 from collections.abc import Callable, Sequence
+from datetime import UTC, datetime, timedelta
 from pathlib import Path
 
 import pytest
 
 from daq.cli import main
 from daq.service.arming import CAUTIONS, checks, confirm, use_arming
+from daq.service.bench_records import set_up_of
 from daq.service.load import Loaded, load
 from daq.service.settings import Messages
+from daq.storage.bench import new_bench_folder, write_outcome
 from daq.storage.lab_book import select, update
 from tests.examples import CONFIGS
 
@@ -114,3 +117,51 @@ def test_checks_name_what_is_not_in_order(real, tmp_path):
     assert not found["messages"].ok
     assert not found["rehearsal"].ok
     assert found["clock"].ok
+
+
+def test_bench_tasks_that_are_due_are_named_and_a_reason_stands_in(real, tmp_path):
+    found = {
+        one.what: one for one in checks(real, tmp_path, MAIL, {"pilot": "the source was watched by hand"})
+    }
+
+    assert not found["bench dark"].ok
+    assert "never done in this lab; do `tercet task dark`" in found["bench dark"].seen
+    assert found["bench pilot"].ok
+    assert "left out, because the source was watched by hand" in found["bench pilot"].seen
+
+
+@pytest.mark.parametrize(
+    ("change", "said"),
+    [
+        ({}, ""),
+        ({"verdict": "fail", "sentence": "no light"}, "it failed: no light"),
+        ({"valid_until": "2020-01-01T00:00:00+00:00"}, "it held until 2020"),
+        ({"set_up": {"chip": "another"}}, "taken with another"),
+    ],
+)
+def test_a_bench_record_counts_when_it_passed_holds_and_is_of_this_set_up(real, tmp_path, change, said):
+    folder = new_bench_folder(tmp_path, "dark", 0)
+    folder.mkdir(parents=True)
+    good = {
+        "task": "dark",
+        "verdict": "pass",
+        "sentence": "dark enough",
+        "at_utc": datetime.now(UTC).isoformat(),
+        "valid_until": (datetime.now(UTC) + timedelta(days=1)).isoformat(),
+        "holds_for": ["chip", "devices"],
+        "set_up": set_up_of(real.rig),
+    }
+    write_outcome(folder, good | change)
+
+    (found,) = [one for one in checks(real, tmp_path, MAIL) if one.what == "bench dark"]
+
+    assert found.ok == (not said)
+    assert said in found.seen
+
+
+@pytest.mark.parametrize("without", ["pilot", "pilot=", "flying=no"])
+def test_a_reason_is_asked_for(real, tmp_path, capsys, without):
+    status = main(["arm", str(tmp_path), str(tmp_path / "lantern.toml"), "--without", without])
+
+    assert status == 2
+    assert "give TASK=REASON" in capsys.readouterr().err
