@@ -237,6 +237,9 @@ class Bench(Protocol):
     ) -> Sequence[Sequence[float]]:
         """Return noise-free rates, position by opening, without drift and dead time [1/s]."""
 
+    def free_bytes(self) -> float:
+        """Return how much room is left on the disk as far as the bench has a say, else infinity."""
+
     def keep(self) -> bytes:
         """Return what a resumed rehearsal needs: axis positions and clock offset, as JSON."""
 

@@ -77,6 +77,10 @@ class WaveletBench:
         upsets = self._built.upsets
         return list(upsets.faults.struck) if upsets and upsets.faults else []
 
+    def free_bytes(self) -> float:
+        """Return how much is left on a disk that a fault fills, infinite while none does."""
+        return self._built.upsets.free_bytes() if self._built.upsets else float("inf")
+
     def keep(self) -> bytes:
         """Return what a resumed rehearsal needs: axis positions and clock offset, as JSON."""
         now_ns = self.clock.now_ns()

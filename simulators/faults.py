@@ -16,6 +16,7 @@ kind                                        does, once it is due
 ``beam-off beam-step``                      no light for ``seconds``; ``factor`` times the light from then on
 ``monitor-lost``                            no light at the monitor channels for ``seconds``
 ``trip``                                    the pressure at the gauge ``device`` is ``factor`` times higher
+``disk-full``                               ``free_bytes`` are left on the disk, for ``seconds``
 ``clock-step``                              UTC jumps by ``step_s``
 ==========================================  ==============================================================
 
@@ -44,7 +45,7 @@ Positive = Annotated[float, Field(gt=0)]
 Kind = Literal[
     "silent", "half", "garbage", "double", "late", "nak",
     "drop", "alarm", "stall", "slip", "overflow", "saturation", "beam-off", "beam-step",
-    "monitor-lost", "trip", "clock-step",
+    "monitor-lost", "trip", "clock-step", "disk-full",
 ]  # fmt: skip
 
 REPLY_KINDS = frozenset({"silent", "half", "garbage", "double", "late", "nak"})
@@ -58,6 +59,7 @@ _NEEDS: Mapping[str, tuple[str, ...]] = {
     "beam-step": ("factor",),
     "trip": ("device", "seconds", "factor"),
     "clock-step": ("step_s",),
+    "disk-full": ("seconds", "free_bytes"),
 }
 _WHEN = ("at_s", "at_gate", "per_hour")
 _OPTIONS = {"nak": ("text",), "alarm": ("text",), "slip": ("hidden",)}
@@ -79,6 +81,7 @@ class Fault(Table):
     rate_hz: Positive | None = None
     factor: Annotated[float, Field(ge=0)] | None = None
     step_s: float | None = None
+    free_bytes: Annotated[float, Field(ge=0)] | None = None
     text: Annotated[str, Field(pattern=r"^[ -~]{1,60}$")] | None = None
 
     @model_validator(mode="after")

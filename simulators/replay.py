@@ -110,6 +110,10 @@ class ReplayBench:
         """Return no number: an archive does not know the truth behind its counts."""
         return [[float("nan")] * len(openings) for _ in positions_mm]
 
+    def free_bytes(self) -> float:
+        """Return that a replay has no say in the room on the disk."""
+        return float("inf")
+
     def keep(self) -> bytes:
         """Return nothing: a replay begins at its beginning."""
         return b""

@@ -69,6 +69,7 @@ class Upsets:
         self.faults: Faults | None = None
         self._clock, self._step_utc = clock, step_utc
         self._saturated: list[tuple[str, float, int]] = []
+        self._full: list[tuple[int, float]] = []  # until when, and what is left
 
     def begin(
         self,
@@ -90,6 +91,7 @@ class Upsets:
             "monitor-lost": lambda fault: self.to_monitor.block(self._now_s(), fault.seconds or 0.0),
             "beam-step": lambda fault: self.beam.step(self._now_s(), fault.factor or 0.0),
             "trip": lambda fault: _raise(instruments[fault.target], fault),
+            "disk-full": self._fill,
             "clock-step": lambda fault: self._step_utc(round((fault.step_s or 0.0) * NS)),
         }
         self.faults = Faults(script, self._clock, acts)
@@ -109,6 +111,15 @@ class Upsets:
             if saturated == device and open_ns < until_ns:
                 counts = min(counts, round(rate_hz * (close_ns - open_ns) / NS))
         return counts
+
+    def free_bytes(self) -> float:
+        """Return how much is left on the disk as far as faults have a say."""
+        now_ns = self._clock.now_ns()
+        return min((left for until_ns, left in self._full if now_ns < until_ns), default=float("inf"))
+
+    def _fill(self, fault: Fault) -> None:
+        until_ns = self._clock.now_ns() + round((fault.seconds or 0.0) * NS)
+        self._full.append((until_ns, fault.free_bytes or 0.0))
 
     def _saturate(self, fault: Fault) -> None:
         until_ns = self._clock.now_ns() + round((fault.seconds or 0.0) * NS)

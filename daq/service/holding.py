@@ -12,6 +12,7 @@ from daq.sequencer import State
 from daq.service.hearing import hear
 from daq.service.night import Hold, Night, look, tell
 from daq.service.parking import shield, unshield
+from daq.service.room import HOLD_BYTES
 
 log = logging.getLogger(__name__)
 
@@ -57,7 +58,8 @@ def wait_out(night: Night) -> None:
 
 def pass_time(night: Night, until_ns: int | None = None) -> None:
     """Let a little time pass: on the wall for people, on the run clock for what heals by itself."""
-    if until_ns is None and set(night.holds) <= ON_THE_WALL:
+    simulated = "room" in night.holds and night.bench is not None and night.bench.free_bytes() < HOLD_BYTES
+    if until_ns is None and set(night.holds) <= ON_THE_WALL and not simulated:
         night.asked.idle()
     else:
         next_ns = night.clock.now_ns() + round(LOOK_AGAIN_S * 1e9)

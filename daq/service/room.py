@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from pathlib import Path
 
+from daq.ports import Bench
 from daq.storage.layout import CHUNK
 from daq.storage.space import free_bytes, needed_bytes
 
@@ -11,17 +12,22 @@ HOLD_BYTES = 1_000_000_000
 END_BYTES = 200_000_000
 
 
-def shortage(folder: Path, hold_bytes: int = HOLD_BYTES) -> str:
+def room_left(folder: Path, bench: Bench | None = None) -> float:
+    """Return how much room a run has; the faults of a simulated bench may leave it less than there is."""
+    return min(free_bytes(folder), float("inf") if bench is None else bench.free_bytes())
+
+
+def shortage(folder: Path, hold_bytes: int = HOLD_BYTES, bench: Bench | None = None) -> str:
     """Return a sentence while there is so little room that a run has to hold, else nothing."""
-    free = free_bytes(folder)
+    free = room_left(folder, bench)
     if free >= hold_bytes:
         return ""
     return f"Only {free / 1e9:.2f} GB are free on the disk; the run holds below {hold_bytes / 1e9:g} GB."
 
 
-def exhausted(folder: Path, end_bytes: int = END_BYTES) -> str:
+def exhausted(folder: Path, end_bytes: int = END_BYTES, bench: Bench | None = None) -> str:
     """Return a sentence when there is so little room that a run has to end cleanly, else nothing."""
-    free = free_bytes(folder)
+    free = room_left(folder, bench)
     if free >= end_bytes:
         return ""
     return f"Only {free / 1e9:.2f} GB are free on the disk; the run ends below {end_bytes / 1e9:g} GB."

@@ -234,8 +234,8 @@ def night_of(
         on_visit=wanted.on_visit,
         on_warning=lambda change: wanted.on_warning(folder.name, change, bench is not None or live.muted),
         alive=wanted.alive,
-        shortage=lambda: shortage(folder),
-        exhausted=lambda: exhausted(folder),
+        shortage=lambda: shortage(folder, bench=bench),
+        exhausted=lambda: exhausted(folder, bench=bench),
         until_utc_ns=None if wanted.until is None else round(wanted.until.timestamp() * 1e9),
     )
 

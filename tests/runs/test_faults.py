@@ -52,3 +52,17 @@ def test_a_script_that_cannot_be_meant_is_a_sentence(tmp_path, capsys, text, wor
     assert status == 2
     assert words in capsys.readouterr().err
     assert not (tmp_path / "runs").exists()
+
+
+@pytest.mark.parametrize(("free", "status"), [(5e8, 0), (1e8, 1)])
+def test_a_full_disk_holds_a_rehearsal_until_there_is_room_or_ends_it_cleanly(tmp_path, capsys, free, status):
+    fault = f'kind = "disk-full"\nat_s = 1000\nseconds = 600\nfree_bytes = {free:g}\n'
+    (tmp_path / "faults.toml").write_text(f"[[fault]]\n{fault}")
+    words = ["rehearse", "--hours", "1.1", "--link", "direct", "--faults", str(tmp_path / "faults.toml")]
+
+    assert main([*words, "--into", str(tmp_path / "lab"), "--json"]) == status
+
+    figures = json.loads(capsys.readouterr().out)
+    told = [str(one.get("text")) for one in read_log(Path(figures["run"]))]
+    assert figures["finished"] and any("are free on the disk" in text for text in told)
+    assert (figures["visits_missing"] == 0) == (status == 0)

@@ -286,3 +286,14 @@ def test_light_that_goes_away_within_a_gate_shows_in_its_parts() -> None:
 
     parts = [part[0] for part in counted.slices or ()]
     assert max(parts[4:7]) < 100 < min(*parts[:2], *parts[8:])
+
+
+def test_a_disk_that_fills_up_has_room_again_after_a_while() -> None:
+    fault = {"kind": "disk-full", "at_s": 110.0, "seconds": 5.0, "free_bytes": 5e8}
+    with faulty(fault) as (bench, _):
+        before = bench.free_bytes()
+        bench.clock.sleep_until(111 * S)
+        full = bench.free_bytes()
+        bench.clock.sleep_until(116 * S)
+
+        assert (before, full, bench.free_bytes()) == (float("inf"), 5e8, float("inf"))
