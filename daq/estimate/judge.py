@@ -47,7 +47,8 @@ class _Place:
 class Judge:
     """Applies the rules to the readings of a run in their order.
 
-    `finding` is why the last one's stand is left out, if it says so; `notes` what else it showed.
+    `finding` is why the last one's stand is left out, if it says so; `notes` what else it showed; `labels`
+    that the openings of the first lap look like others.
     """
 
     def __init__(self, plan: Plan, rules: Rules, expected_hz: FloatArray | None = None) -> None:
@@ -61,6 +62,7 @@ class Judge:
         self._laps, self._strayed = Laps(plan, rules, expected_hz), 0
         self.finding: str | None = None
         self.notes: list[str] = []
+        self.labels = ""
         self.odd = ""  # the opening that stood out in the last reading's stand
         self.stand_quality = Quality.GOOD  # of the whole stand that the last reading belongs to, so far
 
@@ -122,6 +124,7 @@ class Judge:
         if stand != self._stand:
             self._stand, self._attempt = stand, []
             self.notes += self._laps.begins(stand[0])
+            self.labels = self._laps.labels
         self._attempt.append(reading)
         if reading.slices is not None:
             self._laps.slices(int(self._plan.opening[reading.visit]), self._parts(reading.slices))

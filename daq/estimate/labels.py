@@ -8,7 +8,7 @@ from scipy.optimize import linear_sum_assignment
 from daq.estimate.arrays import FloatArray
 
 GAIN = 50.0  # of the log likelihood that other labels must bring
-BETTER = 4.0  # and so many times less chi-squared: where no labels fit, none are accused
+BETTER = 10.0  # and so many times less chi-squared: where no labels fit, none are accused
 
 
 def taken_for(counts: FloatArray, expected: FloatArray) -> dict[int, int]:

@@ -28,6 +28,7 @@ class Laps:
         self._first, self._whole = np.zeros(shape[1]), np.zeros(shape[1])
         self._slices, self._lap = 1, 0
         self._spread = RunningMedian(LAPS_TO_SCALE)
+        self.labels = ""  # what the lap that just ended says of its openings
 
     def stand(self, position: int, counts: FloatArray, exposure: FloatArray) -> None:
         """Take in a stand that is kept: corrected counts and live seconds by opening."""
@@ -42,27 +43,23 @@ class Laps:
 
     def begins(self, stand: int) -> list[str]:
         """Return what the lap before shows when a stand is the first of another one."""
-        lap = stand // len(self._plan.positions_mm)
+        lap, self.labels = stand // len(self._plan.positions_mm), ""
         if lap == self._lap:
             return []
-        found = [*self._labels(), *self._settling(), *self._fit()]
+        self.labels = self._labels()
+        found = [*self._settling(), *self._fit()]
         self._lap = lap
         for table in (self._counts, self._exposure, self._first, self._whole):
             table[:] = 0
         return found
 
-    def _labels(self) -> list[str]:
-        """Return which openings of the first lap look like others."""
+    def _labels(self) -> str:
+        """Return which openings of the first lap look like others; nothing where none does."""
         if self._lap or self._expected_hz is None or not (self._exposure > 0).all():
-            return []
+            return ""
         odd = taken_for(self._counts, self._expected_hz * self._exposure)
-        if not odd:
-            return []
         pairs = ", ".join(f"{self._name(one)} looks like {self._name(other)}" for one, other in odd.items())
-        return [
-            f"The patterns of the first lap fit much better with other labels: {pairs}. "
-            "Look at the mask, its places and its orientation before anybody leaves."
-        ]
+        return f"The patterns of the first lap fit much better with other labels: {pairs}." if odd else ""
 
     def _settling(self) -> list[str]:
         """Return the openings whose first slice differs from the others."""

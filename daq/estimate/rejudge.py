@@ -52,7 +52,7 @@ def rejudged(dataset: Any) -> tuple[IntArray, list[str]]:
     quality, notes = [], []
     for reading in _readings(dataset):
         quality.append(int(judge.judge(reading).quality))
-        notes += judge.notes
+        notes += [*judge.notes, *([judge.labels] if judge.labels and judge.labels not in notes else [])]
     return np.array(quality, np.int64), notes
 
 

@@ -91,6 +91,12 @@ def cost(danger: Danger, rate: float = 0.0) -> tuple[float, str]:
     return lost_h, f"{text} and ends at ± {ends:.2g} instead of ± {danger.planned_se:.2g}."
 
 
+_DOUBT = {
+    "overload": "The visits just before may be wrong: look at them before you use this run.",
+    "labels": "Counts may stand under wrong openings: look at the mask, its places and orientation.",
+}
+
+
 def _held(danger: Danger, held: Held) -> Concern | None:
     if held.cause == "fault" and held.hours < BRIEF_H:
         return None
@@ -101,19 +107,18 @@ def _held(danger: Danger, held: Held) -> Concern | None:
         "room": True,
         "no counts": costly,
         "overload": True,
+        "labels": True,
         "interlock": held.hours > INTERLOCK_TO_WAKE_H,
     }.get(held.cause, held.hours > HOLD_TO_WAKE_H and costly)
     return Concern(
         "hold",
         held.why if held.cause == "asked" else f"{held.why} The run has waited {_minutes(held.hours)}.",
         _to_do(held),
-        f"Everything counted so far is stored; {STAYS_GOOD}."
-        if held.cause != "overload"
-        else "The visits just before may be wrong: look at them before you use this run.",
+        _DOUBT.get(held.cause, f"Everything counted so far is stored; {STAYS_GOOD}."),
         did=_done(held),
         cost=text,
         wakes=wakes,
-        in_doubt=held.cause == "overload",
+        in_doubt=held.cause in _DOUBT,
     )
 
 

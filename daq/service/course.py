@@ -114,6 +114,9 @@ def _stood(night: Night, reading: Reading) -> None:
 def _comes_between(night: Night, reading: Reading) -> bool:
     """Return whether the visits have to be broken off after a reading: a hold, or a stand to be repeated."""
     watch_limits(night, reading)
+    if night.judge.labels:
+        hold(night, "labels", night.judge.labels)
+        night.judge.labels = ""
     astray = bool(reading.quality & (Quality.OFF_TARGET | Quality.MOVED))
     if night.itinerary.ends_stand(reading.visit):
         night.astray = night.astray + 1 if astray else 0

@@ -27,7 +27,8 @@ def heard(rows: list[Reading], of: Plan = PLAN) -> tuple[list[str], list[Reading
     judge, notes, judged = Judge(of, Rules(), EXPECTED_HZ), [], []
     for row in rows:
         judged.append(judge.judge(row))
-        notes += judge.notes
+        notes += [*judge.notes, *([judge.labels] if judge.labels else [])]
+        judge.labels = ""  # heard
     return notes, judged
 
 

@@ -17,6 +17,7 @@ CAUSES: dict[str, tuple[dict[str, Any], str]] = {
     "W4 a run that parked": ({"ended": "axis mask: lost its reference."}, "ended-early"),
     "W5 an interlock": ({"held": Held("interlock", "Pressure is 4e-3 Pa.", 0.2, at_bench=True)}, "hold"),
     "W6 an overload": ({"held": Held("overload", "9.3e6 per second.", 0.0, at_bench=True)}, "hold"),
+    "W6b labels that are wrong": ({"held": Held("labels", "AB looks like AC.", 0.0, at_bench=True)}, "hold"),
     "W7 a disk that refuses": ({"refused": "The disk refused visit 8123."}, "storage"),
     "W8 an opening that is wrong": ({"odd_openings": ("",) * 21 + ("AC", "") * 10}, "openings"),
     "W10 a program that was restarted": ({"restarts": 3}, "restarts"),

@@ -5,10 +5,13 @@ from __future__ import annotations
 from collections.abc import Callable
 from dataclasses import replace
 
+import numpy as np
 import pytest
 
 from daq.errors import DeviceError
+from daq.estimate import Judge, Rules
 from daq.estimate.quality import rules_of
+from daq.ports import Counted
 from daq.records import Quality, Reading
 from daq.service.course import carry_out
 from daq.service.groups import Place
@@ -253,3 +256,28 @@ def test_a_hold_that_was_asked_for_says_how_to_go_on(tmp_path):
     (warning,) = told(tmp_path, "warning")
     assert warning["text"] == "night watch asked the run to hold."
     assert not warning["wakes"]
+
+
+def test_openings_that_look_like_others_hold_the_run_before_anybody_leaves(tmp_path):
+    night, bench = a_night(tmp_path)
+    rates = night.itinerary.rates_hz
+    swapped = {3: 7, 7: 3}  # AB and ABC
+    night.judge = Judge(night.running._plan, Rules(), rates)
+    count, shown = bench.counter.read, night.itinerary
+
+    def other() -> Counted:
+        visit = len(bench.sink.kept) % len(shown)
+        opening = int(shown.opening[visit])
+        column = int(np.flatnonzero(shown.openings == swapped.get(opening, opening))[0])
+        counted = count()
+        value = round(float(rates[shown.position_index[visit], column]) * counted.live_s)
+        return Counted((value,), counted.live_s)
+
+    bench.counter.read = other  # type: ignore[method-assign]
+    settled = asking_when_held(night, "acknowledge", "resume-at-bench")
+
+    carry_out(night, Place(0))
+
+    (entry,) = told(tmp_path, "holding")
+    assert entry["cause"] == "labels" and "AB looks like ABC, ABC looks like AB" in entry["text"]
+    assert [what for what, _ in settled] == ["acknowledge", "resume-at-bench"]
