@@ -74,7 +74,7 @@ def _write(path: Path, used: Used, itinerary: Itinerary, file: Path) -> None:
 
 
 def _rig_table(used: Used, rig: Path, beside: Path) -> dict[str, Any]:
-    """Return the table of a rig whose openings stand where they were found, with paths from its new folder."""
+    """Return the table of a rig whose openings stand where they were found, paths from its new folder."""
     table = tomllib.loads(used.loaded.texts[RIG].decode())
     for name, at_mm in used.at_mm.items():
         table["mask"]["openings"][name]["at_mm"] = at_mm
