@@ -84,7 +84,13 @@ class Live:
         return closed
 
     def look(
-        self, running: Running, held: Held | None = None, ended: str = "", *, anew: bool = False
+        self,
+        running: Running,
+        held: Held | None = None,
+        ended: str = "",
+        *,
+        anew: bool = False,
+        over: bool = False,
     ) -> tuple[Change, ...]:
         """Look at every condition again and return what became of the warnings; `anew` asks the estimate."""
         if anew:
@@ -96,7 +102,7 @@ class Live:
             self._held = held, now
         else:
             self._held = held, self._held[1]
-        return self.watcher.look(now, self._left_s(), held, ended, over=bool(ended))
+        return self.watcher.look(now, self._left_s(), held, ended, over=over)
 
     def mute(self, until_utc_ns: int) -> None:
         """Say until when nobody wants to be called."""

@@ -98,9 +98,9 @@ def tell(night: Night, event: str, **fields: Any) -> None:
     log.info("%s %s", event, fields)
 
 
-def look(night: Night, ended: str = "", *, anew: bool = False) -> None:
+def look(night: Night, ended: str = "", *, anew: bool = False, over: bool = False) -> None:
     """Look at every condition again; what has changed goes to the log and to whoever wants to know."""
-    for change in night.live.look(night.running, held(night), ended, anew=anew):
+    for change in night.live.look(night.running, held(night), ended, anew=anew, over=over):
         one = change.warning
         verb = {"raised": "warning", "worse": "warning worse", "cleared": "warning cleared"}[change.became]
         text = one.says.what if change.became != "cleared" else f"No longer: {one.says.what}"

@@ -35,7 +35,7 @@ from daq.service.extensions import open_bench
 from daq.service.groups import Place, place_after
 from daq.service.live import Live, stamp
 from daq.service.load import Loaded, Wishes, load_run
-from daq.service.night import COMPLETE, STOPPED, WITH_PROGRAM, Night, look, tell
+from daq.service.night import AT_REQUEST, COMPLETE, STOPPED, WITH_PROGRAM, Night, look, tell
 from daq.service.parking import BENCH_FILE, park, stop_now
 from daq.service.record import record_of
 from daq.service.requests import lapse, open_requests, settle
@@ -183,7 +183,8 @@ def _end(night: Night, reason: str) -> None:
     night.become(State.ENDED)
     night.holds.clear()
     tell(night, "ended", reason=reason, **_stop(night, reason))
-    look(night, "" if reason == COMPLETE else reason, anew=True)
+    asked_for = reason in (COMPLETE, AT_REQUEST, STOPPED, WITH_PROGRAM)
+    look(night, "" if asked_for else reason, anew=True, over=True)
     night.live.write(night.state.value, night.running, reason, now=True)
 
 
@@ -260,7 +261,7 @@ def _clock(
     """Return the clock of a run; a resumed one goes on after its last gate: no count is drawn twice."""
     last_ns = int(visits["gate_close_ns"].values.max()) if visits is not None and visits.sizes["row"] else 0
     if not wanted.transport:
-        return RealClock(start_ns=last_ns), None
+        return RealClock(start_ns=last_ns + _break_ns(visits, time.time_ns())), None
     kept = None if folder is None else _kept(folder)
     bench = open_bench(
         loaded.rig,
@@ -280,6 +281,15 @@ def _restarts(folder: Path, clock: Clock) -> int:
         return 0
     since = stamp(clock.utc_ns() - 3600 * 10**9)
     return sum(entry["event"] == "run goes on" and entry["utc"] >= since for entry in read_log(folder))
+
+
+def _break_ns(visits: xr.Dataset | None, now_utc_ns: int) -> int:
+    """Return how long a run was broken off: its clock goes on meanwhile, as the source does."""
+    if visits is None or not visits.sizes["row"]:
+        return 0
+    last = visits.isel(row=-1)
+    ended_ns = int(last["utc_ns"]) + int(last["gate_close_ns"]) - int(last["gate_open_ns"])
+    return max(0, now_utc_ns - ended_ns)
 
 
 def _kept(folder: Path) -> bytes | None:
