@@ -236,6 +236,13 @@ def _scale_words(commands: Any) -> None:
     study.add_argument("--block", type=int, metavar="N", help="draws a worker gets at once (as described)")
     study.add_argument("--into", type=Path, metavar="FOLDER", help="where draws are kept (studies/NAME)")
     _workers(study)
+    taken = "estimate archived runs anew and take them together"
+    pool = _add(commands, "pool", "pool:pool", taken, "tercet pool lab/runs/*-lantern --picture forest.svg")
+    where = "a run folder, a zip of one, or an address like s3://bucket/run.zip"
+    pool.add_argument("run", nargs="+", metavar="RUN", help=where)
+    pool.add_argument("--picture", type=Path, metavar="FILE", help="draw the forest (.svg, .png or .pdf)")
+    pool.add_argument("--into", type=Path, metavar="FOLDER", help="keep the figures of each run there")
+    _workers(pool)
 
 
 def _workers(one: argparse.ArgumentParser) -> None:

@@ -16,13 +16,14 @@ GENESIS = "0" * 64
 
 @dataclass(frozen=True, slots=True)
 class Blinding:
-    """What is hidden of a run: its state, and the offset of every term of order three and above.
+    """What is hidden of a run: its state, the offset of every term of order three and above, whose it is.
 
     A state that hides has no offsets where the secret is not at hand: nothing of kappa can be shown then.
     """
 
     state: str = OPEN
     offsets: Mapping[str, float] = field(default_factory=dict, repr=False)
+    scope: str = ""
 
     @property
     def hides(self) -> bool:

@@ -48,12 +48,11 @@ def blinding_of(folder: Path, meta: Mapping[str, Any]) -> Blinding:
     if not events:
         return Blinding(str(meta.get("blinding", OPEN)))
     state, first = state_of(events), events[0]
+    scope = str(first["scope"])
     if state == REVEALED:
-        return Blinding(state, revealed_offsets(events))
+        return Blinding(state, revealed_offsets(events), scope)
     secret = read_secret(lab_of(folder))
-    if secret is None:
-        return Blinding(state)
-    return Blinding(state, _offsets(secret, first, folder))
+    return Blinding(state, {} if secret is None else _offsets(secret, first, folder), scope)
 
 
 def read_events(folder: Path) -> list[Event]:

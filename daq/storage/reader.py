@@ -68,7 +68,7 @@ def open_visits(folder: Path, *, salvage: bool = False) -> xr.Dataset:
     arrays.update(_looked_up(plan, arrays, meta))
     blinding = blinding_of(folder, meta)
     seen = {**meta, "blinding": blinding.state, HIDDEN: blinding} if blinding.state != OPEN else meta
-    dataset = _dataset((*columns(meta), *looked_up()), arrays, seen)
+    dataset = dataset_of((*columns(meta), *looked_up()), arrays, seen)
     if meta.get("list_mode") and meta.get(FINISHED) and not problems:
         plain = xr.open_zarr(folder / ZARR, chunks=None, consolidated=False)
         return dataset.assign({EVENTS: plain[EVENTS].variable})
@@ -79,7 +79,7 @@ def open_itinerary(folder: Path) -> xr.Dataset:
     """Return what was planned: dimension `planned` (visits) and `position` (weights and signs)."""
     meta = read_meta(folder)
     table = planned(int(meta["slits"]), meta["signs"])
-    return _dataset(table, _intact_plan(Path(folder), table), meta)
+    return dataset_of(table, _intact_plan(Path(folder), table), meta)
 
 
 def read_meta(folder: Path) -> dict[str, Any]:
@@ -173,7 +173,10 @@ def _by_visit(column: NDArray[np.int64], visit: NDArray[np.int64]) -> NDArray[np
     return np.where(known, column[np.where(known, visit, 0)], -1)
 
 
-def _dataset(table: tuple[Column, ...], arrays: dict[str, NDArray[Any]], meta: dict[str, Any]) -> xr.Dataset:
+def dataset_of(
+    table: tuple[Column, ...], arrays: dict[str, NDArray[Any]], meta: dict[str, Any]
+) -> xr.Dataset:
+    """Return columns as a dataset, with their units, and the meta data as its attributes."""
     variables = {
         column.name: (
             column.dims,

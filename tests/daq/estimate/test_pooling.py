@@ -4,6 +4,7 @@ import numpy as np
 import pytest
 
 from daq.estimate import pool
+from daq.estimate.pooling import leave_one_out
 
 VALUES, SES, DOFS = [1.2, -0.4, 2.6, 0.3, -1.1], [0.9, 1.1, 1.0, 0.8, 1.4], [18.0] * 5
 
@@ -78,3 +79,38 @@ def test_nights_that_cannot_be_pooled_are_refused(
 ) -> None:
     with pytest.raises(ValueError, match=words):
         pool(values, ses, dofs)
+
+
+@pytest.mark.judges
+@pytest.mark.parametrize("nights", [3, 9])
+def test_an_independent_library_finds_the_same(nights: int) -> None:
+    """statsmodels.stats.meta_analysis.combine_effects: fixed effect, Q, and Paule-Mandel with t."""
+    judge = pytest.importorskip("statsmodels.stats.meta_analysis")
+    generator = np.random.default_rng(nights)
+    se = generator.uniform(0.5, 2.0, nights)
+    value = generator.normal(0, np.sqrt(se**2 + 2.0))
+
+    found = pool(value, se, np.full(nights, np.inf))
+    theirs = judge.combine_effects(value, se**2, method_re="iterated", use_t=True)
+
+    assert (found.value, found.se) == pytest.approx((theirs.mean_effect_fe, theirs.sd_eff_w_fe), rel=1e-10)
+    assert found.q == pytest.approx(theirs.q, rel=1e-10)
+    assert found.tau**2 == pytest.approx(theirs.tau2, rel=1e-6)
+    assert (found.random_value, found.random_se) == pytest.approx(
+        (theirs.mean_effect_re, theirs.sd_eff_w_re), rel=1e-6
+    )
+
+
+def test_a_night_that_is_odd_stands_out_alone() -> None:
+    value, se = [0.0, 0.1, -0.1, 8.0, 0.05], [1.0] * 5
+
+    found = leave_one_out(value, se, [18] * 5)
+
+    assert [one.p < 0.05 for one in found] == [False, False, False, True, False]
+    assert found[3].others == pytest.approx(0.0125)
+
+
+def test_a_scatter_that_is_granted_makes_no_night_odd() -> None:
+    value, se = [0.0, 0.1, -0.1, 8.0, 0.05], [1.0] * 5
+
+    assert all(one.p > 0.05 for one in leave_one_out(value, se, [18] * 5, tau=4.0))

@@ -1,0 +1,66 @@
+"""The command pool: archived runs estimated anew and taken together."""
+
+from __future__ import annotations
+
+import argparse
+import tempfile
+from collections.abc import Iterator
+from pathlib import Path
+
+from daq.cli.answer import Answer
+from daq.cli.study import runner
+from daq.scale.pool import Pool, pool_runs
+
+ODD = 0.05
+
+
+def pool(arguments: argparse.Namespace) -> Answer:
+    """Estimate runs anew, wherever they lie, and take them together."""
+    with tempfile.TemporaryDirectory() as passing, runner(arguments.workers, arguments.cluster) as run:
+        found = pool_runs(arguments.run, run, arguments.into or Path(passing))
+    if arguments.picture is not None:
+        _draw(found, arguments.picture)
+    return Answer(0, found.to_json(), list(_lines(found)))
+
+
+def _draw(found: Pool, path: Path) -> None:
+    from daq.report.forest import draw_forest
+
+    columns = (found.nights[name] for name in ("kappa", "kappa_se", "dof"))
+    nights = [(*one, left.p) for one, left in zip(zip(*columns, strict=True), found.against, strict=True)]
+    together = [("by counts", found.pooled.value, found.pooled.interval_95)]
+    if found.pooled.random_interval_95 is not None:
+        together.append(("with scatter", found.pooled.random_value, found.pooled.random_interval_95))
+    if not found.homogeneous:
+        together.reverse()
+    draw_forest(path, [_short(run) for run in found.runs], nights, together, zero=not found.hidden)
+
+
+def _lines(found: Pool) -> Iterator[str]:
+    name = "kappa + offset" if found.hidden else "kappa"
+    yield f"{'':<44}{name:>14}{'± its error':>13}{'weight':>8}{'others':>12}{'z':>7}{'p':>7}"
+    nights = zip(found.runs, found.against, found.pooled.weights.tolist(), strict=True)
+    for at, (run, left, weight) in enumerate(nights):
+        kappa, se = (found.nights[column][at] for column in ("kappa", "kappa_se"))
+        mark = "  <-- look at this" if left.p < ODD else ""
+        yield (
+            f"{_short(run):<44}{kappa:>+14.3e}{se:>13.2e}{weight:>8.3f}{left.others:>+12.2e}"
+            f"{left.z:>+7.2f}{left.p:>7.2f}{mark}"
+        )
+    one = found.pooled
+    yield f"do the nights agree? Welch's p = {one.welch_p:.2g} (as if the errors were known: {one.q_p:.2g})"
+    for cause, many in found.shared.items():
+        yield f"{cause}: one cause for {many} nights, added to the error once and not night by night"
+    kappa, se, (low, high) = found.headline
+    why = "by counts" if found.homogeneous else f"with a scatter of {one.tau:.2e} between nights"
+    told = f"{name} = {kappa:+.3e} ± {se:.2e} ({len(found.runs)} nights, {why})"
+    yield f"{told}; 95 %: {low:+.3e} to {high:+.3e}"
+    if found.homogeneous and one.random_interval_95 is not None:
+        low, high = one.random_interval_95
+        yield f"were there a scatter between nights: {one.random_value:+.3e}; 95 %: {low:+.3e} to {high:+.3e}"
+    if found.limit is not None:
+        yield f"|kappa| < {found.limit.limit:.3g} at 95 % confidence"
+
+
+def _short(run: str) -> str:
+    return run.rstrip("/").rpartition("/")[2].removesuffix(".zip")[:43]

@@ -1,0 +1,148 @@
+"""A finished run wherever it lies: a run folder, a zip of one, or either at an address (obstore)."""
+
+from __future__ import annotations
+
+import tempfile
+from collections.abc import Iterator
+from contextlib import contextmanager
+from importlib.util import find_spec
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import xarray as xr
+import zarr
+from zarr.storage import ObjectStore, ZipStore
+
+from daq.errors import StorageError
+from daq.storage.blinding import blinding_of
+from daq.storage.digest import digest
+from daq.storage.layout import FINISHED, columns, looked_up
+from daq.storage.reader import dataset_of, open_visits, read_meta
+from daq.storage.snapshot import check_format
+from daq.storage.trouble import LIBRARY_ERRORS, rim
+
+ADDRESS = "://"
+
+
+def open_finished(where: str) -> xr.Dataset:
+    """Return all visits of a finished run, compared with the digest that it was finished with.
+
+    Parameters
+    ----------
+    where
+        A run folder, a `.zip` that `tercet pack --zip` wrote, or the address of a zip or of a Zarr group
+        ("s3://bucket/run.zip", "file:///..."); credentials come from the environment.
+
+    Raises
+    ------
+    StorageError
+        When there is none, it is not finished, or its counts are not what they were.
+    """
+    if ADDRESS not in where and not where.endswith(".zip"):
+        dataset = open_visits(Path(where))
+    else:
+        with _group(where) as group:
+            dataset = _read(group, where)
+    if not dataset.attrs.get(FINISHED):
+        raise StorageError("the run is not finished", where=where, remedy="Go on with it first")
+    if digest(dataset) != dataset.attrs.get("digest"):
+        raise StorageError(
+            "the counts are not those that the run was finished with",
+            where=where,
+            remedy="`tercet verify` names the damage where the run folder is",
+        )
+    return dataset
+
+
+def stamp_of(where: str) -> str:
+    """Return a text that changes when a run does, or what may be seen of it; nothing for an address."""
+    path = Path(where)
+    if ADDRESS in where or not path.exists():
+        return ""
+    if path.is_file():
+        found = path.stat()
+        return f"{found.st_size} {found.st_mtime_ns}"
+    try:
+        meta = read_meta(path)
+        return f"{meta.get('digest')} {blinding_of(path, meta).state}"
+    except StorageError:
+        return ""  # reading it says what is wrong
+
+
+@contextmanager
+def _group(where: str) -> Iterator[zarr.Group]:
+    """Give the Zarr group of a run that is no folder of this computer."""
+    if ADDRESS not in where:
+        with _zipped(Path(where)) as group:
+            yield group
+    elif where.endswith(".zip"):
+        with tempfile.TemporaryDirectory() as folder:
+            path = Path(folder) / "run.zip"
+            path.write_bytes(_fetched(where))
+            with _zipped(path, where) as group:
+                yield group
+    else:
+        store = ObjectStore(_store(where), read_only=True)
+        yield _opened(store, where)
+
+
+@contextmanager
+def _zipped(path: Path, where: str = "") -> Iterator[zarr.Group]:
+    if not path.exists():
+        raise StorageError("there is no such run", where=where or str(path), remedy="Check the path")
+    with rim(where or path), ZipStore(path, mode="r") as store:
+        yield _opened(store, where or str(path))
+
+
+def _opened(store: Any, where: str) -> zarr.Group:
+    try:
+        return zarr.open_group(store, mode="r")
+    except LIBRARY_ERRORS as error:
+        raise StorageError(f"no run can be read here ({_first_line(error)})", where=where) from error
+
+
+def _read(group: zarr.Group, where: str) -> xr.Dataset:
+    meta = dict(group.attrs.asdict())
+    check_format(meta, Path(where))
+    table = (*columns(meta), *looked_up())
+    try:
+        arrays = {column.name: np.asarray(group[column.name][:]) for column in table}  # type: ignore[index]
+    except Exception as error:  # whatever a codec or a store raises for a part that is damaged
+        raise StorageError(
+            f"a part of the run is missing or damaged ({_first_line(error)})",
+            where=where,
+            remedy="Take another copy of it",
+        ) from error
+    return dataset_of(table, arrays, meta)
+
+
+def _fetched(where: str) -> bytes:
+    base, _, name = where.rpartition("/")
+    store = _store(base)
+    import obstore
+
+    try:
+        return bytes(obstore.get(store, name).bytes())
+    except (obstore.exceptions.BaseError, OSError) as error:
+        raise StorageError(
+            f"there is no such run ({_first_line(error)})", where=where, remedy="Check the address"
+        ) from error
+
+
+def _store(address: str) -> Any:
+    if find_spec("obstore") is None:
+        raise StorageError(
+            "reading from an address needs obstore", remedy="Install it: pip install 'tercet[scale]'"
+        )
+    import obstore
+    from obstore.store import from_url
+
+    try:
+        return from_url(address)
+    except (obstore.exceptions.BaseError, ValueError, OSError) as error:
+        raise StorageError(f"this address cannot be opened ({_first_line(error)})", where=address) from error
+
+
+def _first_line(error: Exception) -> str:
+    return (str(error).strip() or type(error).__name__).splitlines()[0]
