@@ -6,6 +6,7 @@ from collections.abc import Iterator
 from dataclasses import replace
 
 from daq.errors import DeviceError
+from daq.estimate.stopping import PLANNED
 from daq.records import Quality, Reading
 from daq.sequencer import Planned, State, perform
 from daq.service.course import begins_lap, react
@@ -32,7 +33,10 @@ def carry_out_again(night: Night, tape: Tape) -> str:
         _stretch(night, tape, lost)
         wait_out(night)
     night.become(State.PARKING)
-    return COMPLETE if night.archive.rows == len(tape.readings) else AT_REQUEST
+    if night.archive.rows < len(tape.readings):
+        return AT_REQUEST
+    night.asked.kind = str(tape.meta.get("stop", {}).get("kind", PLANNED))  # it ended as the archived run did
+    return COMPLETE
 
 
 def _stretch(night: Night, tape: Tape, lost: Lost) -> None:

@@ -29,7 +29,7 @@ from daq.storage.lab import new_run_folder
 from daq.storage.run import Archive, create_run
 
 COUNTER, STAGES = "counter", "stages"
-AT_ONCE_MM_S = 1e12  # an axis of a replay is where it was before its gate opens: no nanosecond is lost
+AT_ONCE_MM_S = 1e16  # an axis of a replay is where it was before its gate opens: no nanosecond is lost
 # What belongs to the run that is replayed, and not to its replay.
 _ITS_OWN = (
     *("finished", "ended", "ended_utc", "results", "digest", "gate_digest", "texts_sha256"),

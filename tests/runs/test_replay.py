@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import re
 import shutil
 from pathlib import Path
 from typing import Any
@@ -102,6 +103,7 @@ def test_the_record_and_the_page_say_that_it_is_a_replay(source, tmp_path, capsy
     assert meta["replay_of"]["run"] == source.name
     assert meta["replay_of"]["digest"] == read_meta(source)["digest"]
     assert meta["id"] != read_meta(source)["id"]
+    assert meta["stop"] == read_meta(source)["stop"]
     assert main(["report", figures["run"]]) == 0
     assert "A replay of an archived run." in capsys.readouterr().out
     assert main(["verify", figures["run"]]) == 0
@@ -194,6 +196,36 @@ def test_a_run_that_was_broken_off_is_replayed_as_far_as_it_came(source, tmp_pat
 
     assert status == 0
     assert figures["rows"] == 101 and figures["same_digest"]
+
+
+def test_a_run_that_went_on_after_a_break_is_replayed_with_the_stand_that_was_begun_twice(
+    source, tmp_path, capsys
+):
+    folder = tmp_path / "lab" / "runs" / "20261201T170000Z-broken"
+    _cut_short(source, folder, rows=101)
+    assert main(["rehearse", "--resume", str(folder), "--link", "direct"]) == 0
+
+    status, figures = replay(folder, tmp_path / "again", capsys)
+
+    assert 1 in open_visits(folder)["reason"].values
+    assert status == 0
+    assert figures["same_digest"] and figures["same_times"]
+    assert open_visits(figures["run"])["reason"].equals(open_visits(folder)["reason"])
+
+
+@pytest.mark.parametrize("file", ["horn.toml", "beam.toml"])
+def test_power_readings_and_detected_particles_are_replayed_too(tmp_path, capsys, file):
+    for part in ("rigs", "dialects"):
+        shutil.copytree(CONFIGS / part, tmp_path / part)
+    text = re.sub(r"(?m)^laps = \d+", "laps = 2", (CONFIGS / file).read_text())
+    (tmp_path / file).write_text(re.sub(r"(?m)^number = \d+", "number = 3", text))
+    assert main(["rehearse", str(tmp_path / file), "--link", "direct", "--into", str(tmp_path / "lab")]) == 0
+    (night,) = (tmp_path / "lab" / "runs").iterdir()
+
+    status, figures = replay(night, tmp_path / "again", capsys)
+
+    assert status == 0
+    assert figures["same_digest"] and figures["same_times"]
 
 
 def _cut_short(source: Path, folder: Path, rows: int) -> None:
