@@ -7,7 +7,8 @@ on a dead one, so ``tcp://host:port`` is the address for that.
 Notes
 -----
 The timeouts of the pure-Python back end over VXI-11 are taken from the wall clock: a clock that is set back
-by 4 s makes them 4 s longer, one set forward by an hour ends them at once. Over HiSLIP they are the socket's own, and no clock step reaches them.
+by 4 s makes them 4 s longer, one that is set forward by an hour ends them at once. Over HiSLIP they are the
+socket's own, and no clock step reaches them.
 """
 
 from __future__ import annotations
