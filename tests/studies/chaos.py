@@ -57,6 +57,11 @@ LIMIT = "\n[quality.limits.gauge_pressure]\nbelow = 1e-2\nsettle_s = 300\n"
 REPLIES = ("silent", "half", "garbage", "double", "late", "nak")
 ENDED_WELL = ("complete", "ended at request after a stand")
 
+ABOUT = (
+    "Nights of 10 h over TCP in virtual time: 5 positions, 19 pairs, dwell 22 s, 1520 visits; a fault "
+    "script of every kind, drawn anew for each; the process killed in every third"
+)
+
 
 def study(nights: int = NIGHTS) -> dict[str, Any]:
     """Return what a row of nights left: what was lost, what was filed wrongly, how they ended."""
@@ -64,6 +69,12 @@ def study(nights: int = NIGHTS) -> dict[str, Any]:
     for number in range(nights):
         found.append(night(number))
         print(json.dumps(found[-1]), file=sys.stderr, flush=True)
+    return {"about": ABOUT, "rows": {"chaos": summed(found)}}
+
+
+def summed(found: list[dict[str, Any]]) -> dict[str, Any]:
+    """Return what nights left, together."""
+    nights = len(found)
     with_kappa = [one for one in found if one["inside"] is not None]
     inside = sum(one["inside"] for one in with_kappa)
     kinds = sorted({kind for one in found for kind in one["struck"]})
@@ -91,11 +102,7 @@ def study(nights: int = NIGHTS) -> dict[str, Any]:
         "ended": row["without_reason"] == 0,
         "inside": inside >= 0.88 * len(with_kappa),
     }
-    about = (
-        "Nights of 10 h over TCP in virtual time: 5 positions, 19 pairs, dwell 22 s, 1520 visits; a fault "
-        "script of every kind, drawn anew for each; the process killed in every third"
-    )
-    return {"about": about, "rows": {"chaos": row}}
+    return row
 
 
 def script(number: int) -> dict[str, Any]:
