@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import re
 import tempfile
 from collections.abc import Mapping
 from contextlib import suppress
@@ -160,7 +161,8 @@ def _describe(lab: Path, fault: Mapping[str, Any] | None) -> None:
     )
     head, bench = GAUGE.split("[bench]\n")
     rig = (CONFIGS / "rigs" / "lantern.toml").read_text()
-    rig = rig.replace("\n[bench] ", f"{head}\n[bench] ").replace("[bench.source]", f"{bench}[bench.source]")
+    before, line, after = re.split(r"\n(\[bench\] .*\n)", rig, maxsplit=1)
+    rig = f"{before}{head}\n{line}{bench}{after}"
     (lab / "rig.toml").write_text(rig)
     text = (CONFIGS / "lantern.toml").read_text()
     for old, new in SMALL:
