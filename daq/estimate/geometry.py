@@ -60,6 +60,8 @@ class Geometry:
 def geometry_of(dataset: Any) -> Geometry | None:
     """Return what the cuts did to a run; None where all openings share their slits, or nothing can be told.
 
+    Two slits have no residual that should vanish.
+
     While a run is blinded nothing is told: what is left of the third order would give its rates away.
     """
     record: Mapping[str, Any] | None = dataset.attrs.get("cuts")
@@ -82,7 +84,7 @@ def geometry_after(
     record
         The cuts as the run's record holds them.
     """
-    if record is None or plan.blinding.hides:
+    if record is None or plan.blinding.hides or plan.slits < 3:
         return None
     tables = tables_of(sums_of(visits, plan, taking(settled, visits, plan)))
     if not (tables.blocks and tables.measured.all() and (tables.variances > 0).all()):

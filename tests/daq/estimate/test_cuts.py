@@ -128,6 +128,33 @@ def test_a_residual_that_cuts_make_goes_away_and_a_true_one_stays() -> None:
         assert joint.fits
 
 
+def test_the_fourth_order_of_four_slits_cut_apart_goes_away_too() -> None:
+    generator, slits = np.random.default_rng(8), 4
+    cut_m = generator.normal(0, 1e-9, (2**slits, slits, 2)) + [0.0, 100e-9]
+    cuts = tuple(
+        Instance(
+            f"{letter} of {opening}", letter, (opening,), cut_m[opening, slit, 0] + (slit - 1.5) * 300e-9,
+            cut_m[opening, slit, 1], 0.3e-9, 0.3e-9,
+        )
+        for opening in range(1, 2**slits)
+        for slit, letter in enumerate("ABCD")
+        if opening >> slit & 1
+    )  # fmt: skip
+    mask = Mask(np.arange(2**slits), slits, cuts, SINE, 0.0)
+    light = Light(np.full(slits, 30.0), np.array([0.0, 0.1, -0.2, 0.3]), np.ones(6), 20.0)
+    rates, _ = patterns(mask, mask.measured, light)
+    what = contrast(tuple(range(2**slits)), slits)
+    epsilon, delta = epsilon_and_delta(rates, what, "pairwise")
+    variance = 1e-6 * rates
+
+    lit = light_of(mask, rates, variance)
+    found = marginal(mask, lit, what.residual, epsilon, delta, variance @ what.residual**2)
+
+    assert np.abs(epsilon / delta).max() > 3e-3
+    assert abs(found.kappa) < 1e-6 and 0 < found.geometry_se < 1e-3
+    assert abs(fitted(mask, lit, rates, variance, delta).kappa) < 1e-6
+
+
 def test_without_uncertainty_the_marginal_is_the_best_contrast() -> None:
     generator = np.random.default_rng(4)
     mask = cut_apart(generator, known_m=0.0)

@@ -10,8 +10,9 @@ import xarray as xr
 from daq.estimate import planned_weights
 from daq.estimate.blinding import Blinding
 from daq.estimate.cuts import Light, mask_of, patterns
-from daq.estimate.geometry import Geometry, geometry_of, wander_s
+from daq.estimate.geometry import Geometry, geometry_after, geometry_of, wander_s
 from daq.estimate.loads import Instance
+from daq.estimate.settle import Settled
 from daq.estimate.visits import no_visits
 from daq.report.geometry import geometry_lines
 from tests.daq.estimate.nights import SLITS_M, dataset, plan, reading
@@ -84,6 +85,12 @@ def test_a_model_that_fails_is_told_loudly_and_its_figure_is_not(changes: Any, w
 def test_where_all_openings_share_their_slits_there_is_nothing_to_tell() -> None:
     assert geometry_of(archive(cuts=None)) is None
     assert geometry_lines({"geometry": None}) == []
+
+
+def test_two_slits_have_no_residual_that_should_vanish() -> None:
+    visits = no_visits(PLAN)
+
+    assert geometry_after(visits, replace(PLAN, slits=2), Settled("", {}), CUTS) is None
 
 
 def test_nothing_is_told_while_a_run_is_blinded() -> None:
