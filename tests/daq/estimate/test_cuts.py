@@ -130,7 +130,7 @@ def test_a_residual_that_cuts_make_goes_away_and_a_true_one_stays() -> None:
 
 def test_the_fourth_order_of_four_slits_cut_apart_goes_away_too() -> None:
     generator, slits = np.random.default_rng(8), 4
-    cut_m = generator.normal(0, 1e-9, (2**slits, slits, 2)) + [0.0, 100e-9]
+    cut_m = generator.normal([0.0, 100e-9], 1e-9, (2**slits, slits, 2))
     cuts = tuple(
         Instance(
             f"{letter} of {opening}", letter, (opening,), cut_m[opening, slit, 0] + (slit - 1.5) * 300e-9,
