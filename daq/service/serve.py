@@ -229,7 +229,10 @@ def _go_on(lab: Path, asked: Asked, outlets: Outlets, say: Callable[[str], None]
 def _broken_off(lab: Path) -> Path | None:
     name = current_run(lab)
     folder = lab / "runs" / name
-    if not name or is_written(folder) or read_meta(folder).get("finished"):
+    if not name or is_written(folder):
+        return None
+    meta = read_meta(folder)
+    if meta.get("finished") or meta["kind"] in ("replay", "import"):
         return None
     ended = (read_feed(folder) or {}).get("ended")
     return None if ended and ended["reason"] != WITH_PROGRAM else folder
