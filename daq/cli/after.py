@@ -10,6 +10,7 @@ from daq.errors import DescriptionError, StorageError
 from daq.report import lines
 from daq.service.blind import refuse_hidden
 from daq.service.figures import figures_of
+from daq.service.morning import write_report
 from daq.service.remarks import accept as accepted
 from daq.service.remarks import note as noted
 from daq.storage.copy import copy_to
@@ -21,7 +22,9 @@ from daq.storage.verify import verify as verified
 def report(arguments: argparse.Namespace) -> Answer:
     """Print the report of a run, from its archive alone."""
     figures = figures_of(arguments.run)
-    return Answer(StorageError.exit_status if figures["damaged"] else 0, figures, lines(figures))
+    files = write_report(arguments.run, figures)
+    told = [*lines(figures), "", *(f"{kind:<8}{path}" for kind, path in files.items())]
+    return Answer(StorageError.exit_status if figures["damaged"] else 0, figures | {"files": files}, told)
 
 
 def verify(arguments: argparse.Namespace) -> Answer:

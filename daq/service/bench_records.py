@@ -5,7 +5,7 @@ from __future__ import annotations
 import hashlib
 import json
 from collections.abc import Mapping
-from datetime import UTC, datetime
+from datetime import UTC, datetime, timedelta
 from pathlib import Path
 from typing import Any
 
@@ -68,3 +68,11 @@ def earlier(loaded: Loaded, lab: Path, now: datetime | None = None) -> dict[str,
 
 def _without_visits(record: Mapping[str, Any]) -> dict[str, Any]:
     return {name: value for name, value in record.items() if name != "asked"}
+
+
+def due_at(record: Mapping[str, Any], ended_utc: str, within_days: float = 0.75) -> bool:
+    """Return whether a record will have run out by the evening after a run."""
+    until = record.get("valid_until")
+    if not until or not ended_utc:
+        return False
+    return datetime.fromisoformat(until) < datetime.fromisoformat(ended_utc) + timedelta(days=within_days)

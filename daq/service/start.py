@@ -140,7 +140,19 @@ def through(night: Night, wanted: Wanted, course: Callable[[Night], str]) -> str
     _end(night, ended)
     if ended not in (STOPPED, WITH_PROGRAM):
         night.archive.finish(_results(night, ended))
+        if not wanted.transport:
+            _report(night)
     return ended
+
+
+def _report(night: Night) -> None:
+    """Write the morning report beside a run; a report that fails costs the run nothing."""
+    from daq.service.morning import write_report  # pictures take a second to import
+
+    try:
+        write_report(night.folder)
+    except DaqError as error:
+        tell(night, "no report", text=f"The morning report was not written: {error}")
 
 
 def _listen(asked: Asked, folder: Path) -> None:

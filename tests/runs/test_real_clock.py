@@ -72,6 +72,8 @@ def test_a_run_on_the_real_clock_counts_every_visit(measurement, instruments, ca
     figures = json.loads(capsys.readouterr().out)
     assert status == 0
     assert figures["kind"] == "run"
+    assert (Path(figures["run"]) / "report.pdf").read_bytes().startswith(b"%PDF")
+    assert "<h1>" in (Path(figures["run"]) / "report.html").read_text()
     assert figures["visits_done"] == figures["visits_planned"] == 96
     assert figures["visits_repeated"] == figures["visits_missing"] == 0
     assert figures["kappa"] is not None
