@@ -3,12 +3,14 @@
 from __future__ import annotations
 
 import json
+import tomllib
 from pathlib import Path
 from typing import Any
 
 import pytest
 
 from daq.cli import main
+from daq.estimate import jet_speed_m_s, wavelength_m
 from tests.examples import CONFIGS
 
 # Name of the measurement, and hours of it that are enough to see what it shows.
@@ -61,3 +63,26 @@ def test_an_absorber_takes_the_looped_paths_of_the_horn_bench_away(
     assert max(off_truth(without), off_truth(with_absorber)) < 4
     assert 0.02 < without["kappa"] < 0.06  # several per cent
     assert abs(with_absorber["kappa"]) < 4 * with_absorber["kappa_counting_se"] < 0.005
+
+
+@pytest.mark.parametrize(
+    ("name", "mass_u", "speed_m_s"),
+    [("beam", 20.18, jet_speed_m_s(20.18, 293.0)), ("vapour", 1300.0, 200.0)],  # neon, 293 K; an oven
+)
+def test_the_waves_of_a_bench_are_those_of_its_particles(name: str, mass_u: float, speed_m_s: float) -> None:
+    geometry = tomllib.loads((CONFIGS / "rigs" / f"{name}.toml").read_text())["geometry"]
+
+    assert geometry["wavelength_m"] == pytest.approx(wavelength_m(mass_u, speed_m_s), rel=5e-3)
+
+
+def test_the_slits_of_the_beam_bench_are_cut_apart_to_two_nanometres() -> None:
+    table = tomllib.loads((CONFIGS / "rigs" / "beam.toml").read_text())
+    off_nm = [
+        1e9 * (cut[key] - table["slits"][letter][key])
+        for shown in table["mask"]["openings"].values()
+        for letter, cut in shown.get("cuts", {}).items()
+        for key in ("centre_m", "width_m")
+    ]
+
+    assert len(off_nm) == 24
+    assert sum(one**2 for one in off_nm) ** 0.5 == pytest.approx(2 * 24**0.5, rel=4 / 48**0.5)
