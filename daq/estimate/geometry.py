@@ -36,8 +36,8 @@ APART = 3.0  # standard errors between the two estimates from which they are sai
 class Geometry:
     """The residual with the cuts accounted for (headline), and beside it from all patterns together.
 
-    `kappa_before` nothing accounted for; `kappa_se` holds the jackknife and
-    `geometry_se`, `interval_95` both. `joint_kappa` is None where the model does not fit (`joint_fits`);
+    `kappa_before` nothing accounted for; `kappa_se` holds the jackknife and `geometry_se`, `interval_95` and
+    `limit_95` ("|kappa| < X") both. `joint_kappa` is None where the model does not fit (`joint_fits`);
     `joint_ratio` is chi-squared over freedom. `differ`: the two are too far apart, or the model does not fit.
     `spectrum`: power of epsilon by frequency before and after, and at the lines that imperfect cuts predict.
     """
@@ -48,6 +48,7 @@ class Geometry:
     counting_se: float
     geometry_se: float
     interval_95: tuple[float, float] | None
+    limit_95: float | None
     joint_kappa: float | None
     joint_se: float | None
     joint_ratio: float | None
@@ -125,6 +126,7 @@ def accounted(tables: Tables, plan: Plan, mask: Mask, wander: FloatArray) -> Geo
     except np.linalg.LinAlgError:
         return None
     jackknife_se = _jackknife_se(tables, plan, found.weights)
+    interval_95, limit_95 = _bands(found, jackknife_se, tables.blocks)
     joint = _joint(mask, light, tables, tables.variances + wander * tables.rates**2, delta)
     shown = joint is not None and joint.fits
     apart = joint is not None and abs(joint.kappa - found.kappa) > APART * found.se
@@ -134,7 +136,8 @@ def accounted(tables: Tables, plan: Plan, mask: Mask, wander: FloatArray) -> Geo
         kappa_se=sqrt(jackknife_se**2 + found.geometry_se**2),
         counting_se=found.counting_se,
         geometry_se=found.geometry_se,
-        interval_95=_interval(found, jackknife_se, tables.blocks),
+        interval_95=interval_95,
+        limit_95=limit_95,
         joint_kappa=joint.kappa if joint and shown else None,
         joint_se=joint.se if joint and shown else None,
         joint_ratio=joint.chi2 / joint.dof if joint else None,
@@ -160,12 +163,15 @@ def _jackknife_se(tables: Tables, plan: Plan, weights: FloatArray) -> float:
     return jackknife((epsilon @ weights) / (delta @ weights))[0]
 
 
-def _interval(found: Marginal, jackknife_se: float, blocks: int) -> tuple[float, float] | None:
+def _bands(
+    found: Marginal, jackknife_se: float, blocks: int
+) -> tuple[tuple[float, float] | None, float | None]:
+    """Return the 95 % interval of kappa, and the limit of its size; None below two blocks."""
     if blocks < 2:
-        return None
-    _, total, dof = null_limit(found.kappa, jackknife_se, blocks - 1, [(found.geometry_se, None)])
+        return None, None
+    limit, total, dof = null_limit(found.kappa, jackknife_se, blocks - 1, [(found.geometry_se, None)])
     half = float(stdtrit(dof, 0.975)) * total
-    return found.kappa - half, found.kappa + half
+    return (found.kappa - half, found.kappa + half), limit
 
 
 def _joint(

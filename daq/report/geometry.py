@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Iterator, Mapping
 from typing import Any
 
-from daq.report.numbers import signed, with_error
+from daq.report.numbers import signed, upwards, with_error
 
 NOISE = 7.0  # power above which a line is pointed at: chance alone is there once in a thousand
 
@@ -31,6 +31,7 @@ def _residuals(found: Mapping[str, Any]) -> Iterator[str]:
     if found["interval_95"]:
         low, high = found["interval_95"]
         yield f"95 % interval: {signed(low)} to {signed(high)}"
+        yield f"|kappa| < {upwards(found['limit_95'])} at 95 % confidence"
     yield f"before that it is {with_error(found['kappa_before'], found['counting_se'])} (counting alone)"
     if found["joint_kappa"] is not None:
         ratio = f"chi-squared over freedom {found['joint_ratio']:.2f}"

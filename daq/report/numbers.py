@@ -24,3 +24,9 @@ def signed(value: float) -> str:
 def number(value: float, form: str) -> str:
     """Return a number in a form, a minus sign before it where it is negative."""
     return format(value, form).replace("-", MINUS, 1) if value < 0 else format(value, form)
+
+
+def upwards(value: float) -> str:
+    """Return a limit in three digits, rounded up: what is told is never less than what was found."""
+    step = 10.0 ** (math.floor(math.log10(value)) - 2)
+    return f"{math.ceil(value / step - 1e-9) * step:.3g}"

@@ -62,7 +62,7 @@ def test_the_residual_with_its_cuts_accounted_for_stands_before_the_one_without(
 
     first, second = (text.index(words) for words in ("accounted for:", "before that it is"))
     assert first < second
-    assert "what the measurement of the slits leaves open" in text
+    assert "what the measurement of the slits leaves open" in text and "|kappa| < 0.00" in text
     assert "all patterns together" in text and "LOOK AT THIS" not in text
     assert all(f"{name}: " in text for name in ("each slit", "A and B", "A and C", "B and C"))
 
@@ -125,3 +125,5 @@ def test_kappa_agrees_with_and_without_where_the_cuts_are_the_same() -> None:
     assert abs(found.kappa - found.kappa_before) < 4 * found.kappa_se
     assert abs(found.joint_kappa) < 4 * found.joint_se and not found.differ
     assert found.interval_95 is not None and found.interval_95[0] < found.kappa < found.interval_95[1]
+    assert found.limit_95 is not None and abs(found.kappa) + found.kappa_se < found.limit_95
+    assert found.limit_95 < max(map(abs, found.interval_95))
