@@ -180,3 +180,11 @@ def test_a_dry_lap_stops_everywhere_once(loaded: Loaded, tmp_path: Path) -> None
     quick = replace(loaded, measurement=few)
     good = carry_out(task_of("dry-lap"), quick, tmp_path, Person())
     assert (good["verdict"], good["values"]["moves"], good["values"]["astray"]) == ("pass", 24, 0)
+
+
+def test_scale_finds_the_fringes_that_the_geometry_of_the_bench_makes(loaded: Loaded, tmp_path: Path) -> None:
+    record = carry_out(task_of("scale"), loaded, tmp_path, Person())
+
+    # 12.8 mm at 1.2 m: places grow faster than sines by half the square of the angle, at most 5.7e-5
+    assert record["verdict"] == "pass"
+    assert abs(record["values"]["scale"] - 1.0) < 4 * record["se"]["scale"] + 5.7e-5
