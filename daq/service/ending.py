@@ -6,6 +6,7 @@ import getpass
 from dataclasses import asdict
 from typing import Any
 
+from daq.description import Measurement
 from daq.estimate import Running
 from daq.estimate.stopping import (
     BROKEN,
@@ -18,6 +19,7 @@ from daq.estimate.stopping import (
     due,
     stop,
 )
+from daq.itinerary import Itinerary, forecast
 
 REASONS = {
     GOAL: "the goal of the error bar is met",
@@ -40,3 +42,13 @@ def record_of_end(ended: str, kind: str, who: str, pairs: int, kappa_visible: bo
     return asdict(
         stop(kind, ended, (who or getpass.getuser()) if person else "the plan", pairs, kappa_visible)
     )
+
+
+def stopping_of(itinerary: Itinerary, measurement: Measurement) -> Stopping:
+    """Return the ends that a measurement allows besides its plan, with the excess that is planned."""
+    ends = measurement.stop
+    if not ends.goal:
+        return Stopping(futility=ends.futility)
+    expected = forecast(itinerary, measurement)
+    excess = max(1.0, expected.kappa_se / expected.budget["counting"])
+    return Stopping(measurement.estimate.goal_se, ends.futility, excess)

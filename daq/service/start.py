@@ -13,15 +13,14 @@ from typing import Any
 
 import xarray as xr
 
-from daq.description import Measurement
 from daq.devices.clock import RealClock
 from daq.devices.registry import open_devices
 from daq.errors import DaqError, DeviceError, StorageError
 from daq.estimate import Judge, Running, readings_of_dataset
 from daq.estimate.quality import rules_of
 from daq.estimate.standing import Change
-from daq.estimate.stopping import BROKEN, BY_HAND, Stopping
-from daq.itinerary import Itinerary, forecast, plan_of
+from daq.estimate.stopping import BROKEN, BY_HAND
+from daq.itinerary import Itinerary, plan_of
 from daq.ports import Bench, Clock, Devices
 from daq.records import Reading
 from daq.sequencer import State
@@ -30,7 +29,7 @@ from daq.service.beam import let_in
 from daq.service.bench_records import earlier
 from daq.service.blind import at_hand, keep_promise, promise
 from daq.service.course import carry_out
-from daq.service.ending import record_of_end
+from daq.service.ending import record_of_end, stopping_of
 from daq.service.extensions import open_bench
 from daq.service.groups import Place, place_after
 from daq.service.live import Live, stamp
@@ -238,7 +237,7 @@ def night_of(
         devices=devices,
         running=Running(plan),
         judge=Judge(plan, rules, itinerary.rates_hz),
-        stopping=_stopping(itinerary, loaded.measurement),
+        stopping=stopping_of(itinerary, loaded.measurement),
         blinding=blinding,
         live=live,
         log=RunLog(folder),
@@ -251,16 +250,6 @@ def night_of(
         exhausted=lambda: exhausted(folder, bench=bench),
         until_utc_ns=None if wanted.until is None else round(wanted.until.timestamp() * 1e9),
     )
-
-
-def _stopping(itinerary: Itinerary, measurement: Measurement) -> Stopping:
-    """Return the ends that a measurement allows besides its plan, with the excess that is planned."""
-    ends = measurement.stop
-    if not ends.goal:
-        return Stopping(futility=ends.futility)
-    expected = forecast(itinerary, measurement)
-    excess = max(1.0, expected.kappa_se / expected.budget["counting"])
-    return Stopping(measurement.estimate.goal_se, ends.futility, excess)
 
 
 def _clock(
