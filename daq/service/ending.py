@@ -20,6 +20,7 @@ from daq.estimate.stopping import (
     stop,
 )
 from daq.itinerary import Itinerary, forecast
+from daq.service.night import Night
 
 REASONS = {
     GOAL: "the goal of the error bar is met",
@@ -36,12 +37,13 @@ def due_now(running: Running, stopping: Stopping, pair: int) -> str:
     return due(stopping, running.after(pairs), pair) if pairs > 1 else ""
 
 
-def record_of_end(ended: str, kind: str, who: str, pairs: int, kappa_visible: bool) -> dict[str, Any]:
-    """Return what the archive says of how a run ended."""
-    person = kind in (BY_HAND, BROKEN)
-    return asdict(
-        stop(kind, ended, (who or getpass.getuser()) if person else "the plan", pairs, kappa_visible)
-    )
+def how_it_ended(night: Night) -> dict[str, Any]:
+    """Return the record of how a run ended, without the reason in words."""
+    asked, pairs = night.asked, night.running.estimate().pairs
+    kind = asked.kind or BY_HAND
+    who = (asked.who or getpass.getuser()) if kind in (BY_HAND, BROKEN) else "the plan"
+    found = asdict(stop(kind, "", who, pairs, not night.blinding.hides))
+    return {name: value for name, value in found.items() if name != "reason"}
 
 
 def stopping_of(itinerary: Itinerary, measurement: Measurement) -> Stopping:

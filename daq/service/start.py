@@ -19,7 +19,7 @@ from daq.errors import DaqError, DeviceError, StorageError
 from daq.estimate import Judge, Running, readings_of_dataset
 from daq.estimate.quality import rules_of
 from daq.estimate.standing import Change
-from daq.estimate.stopping import BROKEN, BY_HAND
+from daq.estimate.stopping import BROKEN
 from daq.itinerary import Itinerary, plan_of
 from daq.ports import Bench, Clock, Devices
 from daq.records import Reading
@@ -29,7 +29,7 @@ from daq.service.beam import let_in
 from daq.service.bench_records import earlier
 from daq.service.blind import at_hand, keep_promise, promise
 from daq.service.course import carry_out
-from daq.service.ending import record_of_end, stopping_of
+from daq.service.ending import how_it_ended, stopping_of
 from daq.service.extensions import open_bench
 from daq.service.groups import Place, place_after
 from daq.service.live import Live, stamp
@@ -169,7 +169,7 @@ def _results(night: Night, ended: str) -> dict[str, Any]:
     return {
         "ended": ended,
         "ended_utc": stamp(night.clock.utc_ns()),
-        "stop": {"reason": ended, **_stop(night, ended)},
+        "stop": {"reason": ended, **how_it_ended(night)},
         "results": {name: value for name, value in figures.items() if not isinstance(value, list)}
         | {"blinding": night.blinding.state},
         "digest": digest(visits),
@@ -193,17 +193,10 @@ def _end(night: Night, reason: str) -> None:
     park(night)
     night.become(State.ENDED)
     night.holds.clear()
-    tell(night, "ended", reason=reason, **_stop(night, reason))
+    tell(night, "ended", reason=reason, **how_it_ended(night))
     asked_for = reason in (COMPLETE, AT_REQUEST, STOPPED, WITH_PROGRAM)
     look(night, "" if asked_for else reason, anew=True, over=True)
     night.live.write(night.state.value, night.running, reason, now=True)
-
-
-def _stop(night: Night, reason: str) -> dict[str, Any]:
-    """Return the record of how a run ended, without the reason in words."""
-    asked, pairs = night.asked, night.running.estimate().pairs
-    found = record_of_end(reason, asked.kind or BY_HAND, asked.who, pairs, not night.blinding.hides)
-    return {name: value for name, value in found.items() if name != "reason"}
 
 
 def night_of(
