@@ -13,6 +13,7 @@ from daq.estimate.arrays import FloatArray
 K, H = 0.5, 9.06  # a CUSUM of stands of 22 s with these alarms once a week on a steady source
 REFERENCE = 20  # stands that tell the level before
 AFTER = 10  # stands after the alarm before it is said what it was
+WINDOW = 120  # stands that are looked at then
 NEAR, JUMP_SIGMA = 3, 3.5  # a sudden change stands out among the differences of so many stands each
 TO_SIGMA = 1.4826  # median absolute deviation of a normal distribution
 
@@ -55,7 +56,8 @@ class ShiftChart:
             self._alarm = many
         if self._alarm is None or many < self._alarm + AFTER:
             return False
-        self.last = told_apart(self._levels, self._variances, self._hours)
+        lately = slice(-WINDOW, None)
+        self.last = told_apart(self._levels[lately], self._variances[lately], self._hours[lately])
         self._again()
         return True
 
