@@ -17,7 +17,7 @@ from daq.service.bench_task import Person, carry_out
 from daq.service.load import Loaded, config_dir, load
 from daq.storage.verify import verify
 from daq.tasks import Outcome, Task, task_of
-from tests.contracts.rigs import words
+from tests.contracts.rigs import sliced, words
 from tests.examples import lantern_rig, rig_table
 
 
@@ -188,3 +188,15 @@ def test_scale_finds_the_fringes_that_the_geometry_of_the_bench_makes(loaded: Lo
     # 12.8 mm at 1.2 m: places grow faster than sines by half the square of the angle, at most 5.7e-5
     assert record["verdict"] == "pass"
     assert abs(record["values"]["scale"] - 1.0) < 4 * record["se"]["scale"] + 5.7e-5
+
+
+def test_the_monitor_of_the_bench_sees_nothing_of_its_mask(loaded: Loaded, tmp_path: Path) -> None:
+    seen = loaded.measurement.estimate.model_copy(update={"monitor_channel": 1})
+    watched = replace(
+        loaded, measurement=loaded.measurement.model_copy(update={"estimate": seen}), rig=sliced()
+    )
+
+    record = carry_out(task_of("monitor"), watched, tmp_path, Person())
+
+    assert record["values"]["p"] > 1e-3
+    assert "nothing of the mask" in record["sentence"]
