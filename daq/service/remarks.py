@@ -8,6 +8,8 @@ from pathlib import Path
 from typing import Any
 
 from daq.errors import DescriptionError
+from daq.estimate.blinding import REVEALED
+from daq.storage.blinding import blinding_of
 from daq.storage.digest import digest
 from daq.storage.log import RunLog, read_log
 from daq.storage.reader import open_visits, read_meta
@@ -35,5 +37,7 @@ def verdict_of(folder: Path) -> dict[str, Any] | None:
 
 def _add(folder: Path, event: str, by: str | None, **fields: Any) -> dict[str, Any]:
     entry = {"utc": datetime.now(UTC).isoformat(timespec="seconds"), "by": by or getpass.getuser(), **fields}
+    if blinding_of(folder, read_meta(folder)).state == REVEALED:
+        entry["after_unblinding"] = True
     RunLog(folder).append(event, **entry)
     return {"event": event, **entry}

@@ -295,6 +295,7 @@ def test_frozen_then_revealed_and_no_way_back(run, capsys, monkeypatch):
     assert again[1] == figures  # nothing was typed: the first answer is given again
     assert answer(capsys, "blind", str(run), "--freeze")[1]["state"] == "revealed"
     assert answer(capsys, "blind", str(run))[0] == 2
+    assert answer(capsys, "accept", str(run), "counts")[1]["after_unblinding"] is True
     report = answer(capsys, "report", str(run))[1]
     assert report["kappa"] == pytest.approx(secrets.kappa, abs=1e-15)
     assert report["statement"]["limit"] > 0
