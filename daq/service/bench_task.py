@@ -80,7 +80,7 @@ def carry_out(task: Task, loaded: Loaded, lab: Path, person: Person) -> dict[str
         lacking = task.lacks(setting)
         if lacking:
             raise DaqError(
-                " ".join(lacking).rstrip("."), where=f"task {task.name}", remedy="Use another task"
+                " ".join(lacking).rstrip("."), where=f"task {task.name}", remedy="Nothing was moved"
             )
         _refuse_lost(devices, bench)
         let_in(devices, clock)
@@ -112,7 +112,9 @@ def _at_bench(loaded: Loaded, lab: Path) -> Iterator[tuple[Devices, Clock, Bench
             shut_out(devices)
         return
     state = kept_state(lab, loaded.rig.name)
-    bench = open_bench(loaded.rig, seed=loaded.bench_seed, transport="direct", state=state, faults=None)
+    bench = open_bench(
+        loaded.rig, seed=loaded.bench_seed, transport="direct", state=state, faults=loaded.faults
+    )
     try:
         with open_devices(loaded.rig, bench.clock) as devices:
             yield devices, bench.clock, bench

@@ -11,7 +11,7 @@ import pytest
 
 from daq import open_visits
 from daq.description.measurement import Positions
-from daq.errors import DaqError
+from daq.errors import DaqError, DeviceError
 from daq.service.bench_records import newest, why_not
 from daq.service.bench_task import Person, carry_out
 from daq.service.load import Loaded, config_dir, load
@@ -200,3 +200,35 @@ def test_the_monitor_of_the_bench_sees_nothing_of_its_mask(loaded: Loaded, tmp_p
 
     assert record["values"]["p"] > 1e-3
     assert "nothing of the mask" in record["sentence"]
+
+
+def with_fault(loaded: Loaded, folder: Path, text: str) -> Loaded:
+    """Return the Lantern bench on which something goes wrong."""
+    (folder / "faults.toml").write_text(f"[[fault]]\n{text}\n")
+    return loaded.with_faults(folder / "faults.toml")
+
+
+def test_a_saturated_detector_is_a_sentence_and_nothing_is_moved_further(
+    loaded: Loaded, tmp_path: Path
+) -> None:
+    spoilt = with_fault(loaded, tmp_path, 'kind = "overflow"\ndevice = "counter"\nat_gate = 4')
+
+    record = carry_out(short(task_of("dark"), 10), spoilt, tmp_path, Person())
+
+    assert record["verdict"] == "fail"
+    assert "the detector is saturated. Take light away" in record["sentence"]
+    assert len(open_visits(tmp_path / "bench" / record["record"])["visit"]) == 4
+
+
+def test_a_device_that_falls_silent_ends_the_task_and_what_was_counted_is_kept(
+    loaded: Loaded, tmp_path: Path
+) -> None:
+    silent = with_fault(loaded, tmp_path, 'kind = "drop"\ndevice = "counter"\nat_s = 60\nseconds = 600')
+
+    with pytest.raises(DeviceError):
+        carry_out(short(task_of("dark"), 20), silent, tmp_path, Person())
+
+    (folder,) = (tmp_path / "bench" / "dark").iterdir()
+    kept = json.loads((folder / "outcome.json").read_text())
+    assert kept["verdict"] == "fail"
+    assert 0 < len(open_visits(folder)["visit"]) < 20
