@@ -11,7 +11,7 @@ from pathlib import Path
 from typing import Any
 
 STUDIES = (
-    *("zigzag", "irregular", "benches", "exclusions", "quality", "cuts", "matrix", "chaos"),
+    *("zigzag", "irregular", "benches", "exclusions", "quality", "cuts", "matrix", "chaos", "charts"),
     *("watched", "stopped", "places", "pooled"),
 )
 RESULTS = Path(__file__).parent / "results"

@@ -10,7 +10,7 @@ from typing import Any
 import numpy as np
 import pytest
 
-from tests.studies import benches, chaos, exclusions, irregular, matrix, plans, quality, zigzag
+from tests.studies import benches, chaos, charts, exclusions, irregular, matrix, plans, quality, zigzag
 from tests.studies.__main__ import RESULTS, STUDIES, main, misses
 from tests.studies.bench import generator_of, night, reduced
 from tests.studies.sources import SOURCES
@@ -155,3 +155,12 @@ def test_a_night_of_chaos_that_is_killed_loses_nothing() -> None:
     assert found["acknowledged"] >= 1520
     assert (found["lost"], found["misfiled"]) == (0, 0)
     assert found["ended"]
+
+
+def test_a_few_alarms_and_quiet_weeks() -> None:
+    found = charts.study(12)["rows"]
+
+    steady = found["false alarms, level known"]
+    assert abs(steady["weeks"] - steady["theory"]) < 4 * steady["weeks_se"]
+    assert all(found[row]["meets"]["delay"] for row in ("step of 0.5 %", "ramp of 1 % an hour"))
+    assert found["quiet weeks"]["wakes"] == 0
