@@ -98,7 +98,7 @@ class Reading:
 VERDICTS = ("counts", "counts in part", "doubtful", "does not count")
 
 # What can be measured at the bench, in the order of a day.
-TASKS = ("dark", "deadtime", "pilot", "register", "backlash", "scale", "monitor", "dry-lap")
+TASKS = ("dark", "deadtime", "pilot", "register", "backlash", "scale", "settle", "monitor", "dry-lap")
 
 # What a person may do on the page: a watcher reads, an operator also asks.
 ROLES = ("watcher", "operator")

@@ -232,3 +232,13 @@ def test_a_device_that_falls_silent_ends_the_task_and_what_was_counted_is_kept(
     kept = json.loads((folder / "outcome.json").read_text())
     assert kept["verdict"] == "fail"
     assert 0 < len(open_visits(folder)["visit"]) < 20
+
+
+def test_settle_finds_what_fades_after_a_move_of_the_bench(loaded: Loaded, tmp_path: Path) -> None:
+    record = carry_out(
+        task_of("settle"), on_chip(loaded, transient=0.03, transient_s=0.15), tmp_path, Person()
+    )
+
+    # the first gate opens up to 10 ms after the mask has come to a stand: up to 7 % of it has faded
+    assert record["values"]["seen"]
+    assert 0.93 * 0.03 - 4 * record["se"]["size"] < record["values"]["size"] < 0.03 + 4 * record["se"]["size"]
