@@ -13,7 +13,10 @@ def test_the_examples_are_found_beside_the_sources_or_in_the_wheel():
 
 @pytest.mark.parametrize("file", sorted(CONFIGS.glob("*.toml")), ids=lambda file: file.name)
 def test_every_example_measurement_loads_with_its_rig(file):
-    assert len(load(file).itinerary()) == 12464
+    itinerary = load(file).itinerary()
+
+    assert itinerary.planned_pairs >= 2  # fewer have no error bar
+    assert len(itinerary) == 12464 or not file.name.startswith("lantern")
 
 
 def test_hours_are_rounded_down_to_whole_pairs():
