@@ -40,10 +40,10 @@ def serve(arguments: argparse.Namespace) -> Answer:
         print(f"{datetime.now(UTC):%Y-%m-%d %H:%M} UTC  {text}", file=stream, flush=True)
 
     with ExitStack() as stack:
+        asked = stack.enter_context(interrupts())
         stack.enter_context(owned(arguments.lab))  # before anything is promised
         if not arguments.no_page:
             show_page(stack, arguments.lab, stream, _page_options(arguments))
-        asked = stack.enter_context(interrupts())
         done = served(arguments.lab, asked, say)
     return Answer(0, done, [f"runs started: {done['started']}; gone on with: {done['resumed']}"])
 

@@ -5,6 +5,7 @@ from __future__ import annotations
 import fcntl
 import json
 import os
+import time
 from collections.abc import Iterator
 from contextlib import contextmanager
 from pathlib import Path
@@ -13,6 +14,7 @@ from daq.errors import StorageError
 from daq.service.requests import utc_now
 
 LOCK = "service.lock"
+LOOK_S = 1.0
 
 
 @contextmanager
@@ -62,16 +64,26 @@ def refuse_owned(lab: Path) -> None:
 
 
 def _take(handle: int, lab: Path) -> None:
+    """Take the lock; whoever only looks at it (`refuse_owned`) holds it for a moment, which is waited out."""
+    until_s = time.monotonic() + LOOK_S
+    while not _taken(handle):
+        if time.monotonic() > until_s:
+            raise StorageError(
+                f"a service owns this lab already: {_holder(handle)}",
+                where=str(lab),
+                remedy="Use that one, or end it first",
+            )
+        time.sleep(0.01)
+    os.ftruncate(handle, 0)
+    os.pwrite(handle, json.dumps({"pid": os.getpid(), "since": utc_now()}).encode(), 0)
+
+
+def _taken(handle: int) -> bool:
     try:
         fcntl.flock(handle, fcntl.LOCK_EX | fcntl.LOCK_NB)
     except BlockingIOError:
-        raise StorageError(
-            f"a service owns this lab already: {_holder(handle)}",
-            where=str(lab),
-            remedy="Use that one, or end it first",
-        ) from None
-    os.ftruncate(handle, 0)
-    os.pwrite(handle, json.dumps({"pid": os.getpid(), "since": utc_now()}).encode(), 0)
+        return False
+    return True
 
 
 def _holder(handle: int) -> str:
