@@ -11,10 +11,10 @@ from daq.estimate.arrays import BoolArray, FloatArray, IntArray
 from daq.estimate.blocks import jackknife
 from daq.estimate.contrast import Contrast, contrast, epsilon_and_delta
 from daq.estimate.plan import Plan
-from daq.estimate.regression import weighted_fit
 from daq.estimate.tables import Tables, plan_contrast
 
 DEAREST = 1.05  # factor of kappa's variance that may be paid; usual patterns ask for 1.0001 to 1.03
+TOLD_APART = 1e-13
 
 
 def marginal_weights(
@@ -76,23 +76,37 @@ def dead_time_left_s(tables: Tables, plan: Plan) -> tuple[float, float] | None:
         return None
     try:
         whole = _fitted(tables.rates, tables.variances, seen, plan)
-        parts = [
-            _fitted(rates, tables.variances, seen & there, plan)
-            for rates, there in zip(tables.without, tables.without_measured, strict=True)
-        ]
-    except (ValueError, np.linalg.LinAlgError):  # the two shapes cannot be told apart here
+        parts = _fitted(tables.without, tables.variances, seen & tables.without_measured, plan)
+    except ValueError:  # the two shapes cannot be told apart here
         return None
-    return whole, jackknife(parts)[0]
+    return float(whole), jackknife(parts)[0]
 
 
-def _fitted(rates: FloatArray, variances: FloatArray, seen: BoolArray, plan: Plan) -> float:
+def _fitted(rates: FloatArray, variances: FloatArray, seen: BoolArray, plan: Plan) -> FloatArray:
+    """Return the coefficient of the template for tables (..., J, K), where they were seen (..., J).
+
+    Notes
+    -----
+    Of two columns the least-squares coefficient of the second is its part at right angles to the first, taken
+    twice against rounding; thousands of blocks at once.
+    """
     what, signs = plan_contrast(plan)
     epsilon, delta = epsilon_and_delta(rates, what, "pairwise", signs)
-    columns = np.stack([delta, _template(rates, what)], axis=-1)[seen]
-    spread = (variances @ what.residual**2)[seen]
-    if not np.all(spread > 0):
+    spread = variances @ what.residual**2
+    if not np.all((spread > 0) | ~seen):
         raise ValueError("a position without counts has no weight")
-    return float(weighted_fit(columns, epsilon[seen], spread).coefficients[1])
+    scale = np.where(seen, 1 / np.sqrt(np.where(spread > 0, spread, 1.0)), 0.0)
+    first, second, target = delta * scale, _template(rates, what) * scale, epsilon * scale
+    along = first / np.linalg.norm(first, axis=-1, keepdims=True)
+    apart = _across(_across(second, along), along)
+    size = np.sum(apart**2, axis=-1)
+    if not np.all(np.sqrt(size) > TOLD_APART * np.linalg.norm(second, axis=-1)):
+        raise ValueError("the columns of a fit cannot be told apart")
+    return np.asarray(np.sum(apart * _across(target, along), axis=-1) / size)
+
+
+def _across(columns: FloatArray, along: FloatArray) -> FloatArray:
+    return np.asarray(columns - along * np.sum(columns * along, axis=-1, keepdims=True))
 
 
 def _template(rates: FloatArray, what: Contrast) -> FloatArray:

@@ -9,8 +9,14 @@ import pytest
 
 from daq.estimate import estimate_run, expected_rates_hz, planned_weights, seen_rate_hz
 from daq.estimate.arrays import FloatArray
+from daq.estimate.blocks import jackknife
 from daq.estimate.contrast import contrast, epsilon_and_delta
-from daq.estimate.linearity import marginal_weights
+from daq.estimate.dataset import rows_of_dataset
+from daq.estimate.linearity import dead_time_left_s, marginal_weights
+from daq.estimate.regression import weighted_fit
+from daq.estimate.sums import sums_of
+from daq.estimate.tables import plan_contrast, tables_of
+from daq.estimate.visits import visits_of
 from daq.openings import name
 from tests.daq.estimate.nights import dataset, plan, rates_hz, readings
 
@@ -120,3 +126,23 @@ def test_where_the_pattern_cannot_tell_nothing_is_told(changes: dict[str, Any]) 
     rows = [replace(row, values_var=(row.values[0],)) for row in readings(of, np.random.default_rng(4))]
 
     assert estimate_run(dataset(of, rows)).dead_time_left_s is None
+
+
+def test_the_dead_time_left_is_that_of_weighted_least_squares_block_by_block() -> None:
+    """Against the library's own fit of two columns, for every block that is left out."""
+    of = plan(positions=9, laps=12)
+    visits = visits_of(rows_of_dataset(dataset(of, readings(of, np.random.default_rng(5)))), of)
+    tables = tables_of(sums_of(visits, of))
+    what, signs = plan_contrast(of)
+    spread = tables.variances @ what.residual**2
+
+    def fitted(rates: FloatArray) -> float:
+        epsilon, delta = epsilon_and_delta(rates, what, "pairwise", signs)
+        columns = np.stack([delta, -(rates**2) @ what.residual], axis=-1)
+        return float(weighted_fit(columns, epsilon, spread).coefficients[1])
+
+    found = dead_time_left_s(tables, of)
+
+    assert found is not None
+    assert found[0] == pytest.approx(fitted(tables.rates), rel=1e-9)
+    assert found[1] == pytest.approx(jackknife([fitted(rates) for rates in tables.without])[0], rel=1e-9)
