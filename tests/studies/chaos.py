@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import json
 import os
+import re
 import signal
 import sys
 import tempfile
@@ -184,8 +185,7 @@ def _describe(lab: Path, number: int) -> None:
         (CONFIGS / "dialects" / "text-gauge.toml").read_bytes()
     )
     rig = (CONFIGS / "rigs" / "lantern.toml").read_text()
-    head, bench = GAUGE.split("[bench]\n")
-    rig = rig.replace("\n[bench] ", f"{head}\n[bench] ").replace("[bench.source]", f"{bench}[bench.source]")
+    rig = with_gauge(rig)
     rig = rig.replace("\nwindow_mm = 1.2\nedge_mm", "\nwindow_mm = 0\nedge_mm")  # a mask that slips is dark
     rig = rig.replace("seed = 1\n", f"seed = {1000 + number}\n")
     (lab / "rig.toml").write_text(rig)
@@ -199,6 +199,13 @@ def _describe(lab: Path, number: int) -> None:
         lines += ["[[fault]]\n", *(f"{key} = {json.dumps(value)}\n" for key, value in fault.items())]
     (lab / "faults.toml").write_text("".join(lines))
     tomllib.loads((lab / "faults.toml").read_text())
+
+
+def with_gauge(rig: str) -> str:
+    """Return a rig file with the gauge among its devices, and in the first table of its bench."""
+    head, bench = GAUGE.split("[bench]\n")
+    before, line, after = re.split(r"\n(\[bench\] .*\n)", rig, maxsplit=1)
+    return f"{before}{head}\n{line}{bench}{after}"
 
 
 def _carried_out(lab: Path, run: Path | None, at_visit: int | None) -> None:

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import json
-import re
 import tempfile
 from collections.abc import Mapping
 from contextlib import suppress
@@ -17,7 +16,7 @@ from daq.storage.feed import read_feed
 from daq.storage.log import read_log
 from daq.storage.reader import open_visits
 from tests.examples import CONFIGS
-from tests.studies.chaos import GAUGE, LIMIT
+from tests.studies.chaos import LIMIT, with_gauge
 
 AT_S = 400.0
 MOVING_AT_S = 400.7  # the mask is on its way then
@@ -159,11 +158,7 @@ def _describe(lab: Path, fault: Mapping[str, Any] | None) -> None:
     (lab / "dialects" / "text-gauge.toml").write_bytes(
         (CONFIGS / "dialects" / "text-gauge.toml").read_bytes()
     )
-    head, bench = GAUGE.split("[bench]\n")
-    rig = (CONFIGS / "rigs" / "lantern.toml").read_text()
-    before, line, after = re.split(r"\n(\[bench\] .*\n)", rig, maxsplit=1)
-    rig = f"{before}{head}\n{line}{bench}{after}"
-    (lab / "rig.toml").write_text(rig)
+    (lab / "rig.toml").write_text(with_gauge((CONFIGS / "rigs" / "lantern.toml").read_text()))
     text = (CONFIGS / "lantern.toml").read_text()
     for old, new in SMALL:
         assert old in text, old
