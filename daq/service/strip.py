@@ -42,6 +42,7 @@ class Strip:
         self.flagged: Counter[str] = Counter()
         self.first_ns: int | None = None
         self._itinerary = itinerary
+        self._place = itinerary.position_index  # of every visit: too long to work out anew at each
         self._hides = Blinding(str(meta["blinding"])).hides
         self._power = meta.get("counting") == "power"
         self._fano = float(meta.get("fano") or 1.0)
@@ -103,7 +104,7 @@ class Strip:
 
     def _rate_hz(self, reading: Reading) -> float:
         opening = int(np.searchsorted(self._itinerary.openings, reading.opening))
-        return float(self._itinerary.rates_hz[self._itinerary.position_index[reading.visit], opening])
+        return float(self._itinerary.rates_hz[self._place[reading.visit], opening])
 
     def _light(self, visits: list[Reading]) -> float | None:
         channel = self._monitor
