@@ -97,7 +97,10 @@ def _fitted(rates: FloatArray, variances: FloatArray, seen: BoolArray, plan: Pla
         raise ValueError("a position without counts has no weight")
     scale = np.where(seen, 1 / np.sqrt(np.where(spread > 0, spread, 1.0)), 0.0)
     first, second, target = delta * scale, _template(rates, what) * scale, epsilon * scale
-    along = first / np.linalg.norm(first, axis=-1, keepdims=True)
+    length = np.linalg.norm(first, axis=-1, keepdims=True)
+    if not np.all(length > 0):
+        raise ValueError("nothing interferes: a fit has no first column")
+    along = first / length
     apart = _across(_across(second, along), along)
     size = np.sum(apart**2, axis=-1)
     if not np.all(np.sqrt(size) > TOLD_APART * np.linalg.norm(second, axis=-1)):

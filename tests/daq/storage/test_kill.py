@@ -22,7 +22,7 @@ from daq.storage.reader import open_visits
 from daq.storage.run import open_run
 from tests.daq.storage.example import expected, reading, ticks_of
 
-CHUNK, LAPS = 128, 200
+CHUNK, LAPS = 128, 1000  # more than a writer on a fast disk gets through before it is killed
 PATIENCE_S = 60.0
 
 
