@@ -8,6 +8,7 @@ import signal
 import subprocess
 import sys
 from collections.abc import Iterator
+from contextlib import suppress
 from pathlib import Path
 from time import monotonic
 from typing import IO, Any
@@ -46,8 +47,12 @@ class Writers:
         rows = self._said(PATIENCE_S)[1] if at_work else None
         until = monotonic() + seconds
         while (left := until - monotonic()) > 0 and self._speaks(left):
-            rows = self._said(0)[1]
-        os.kill(pid, signal.SIGKILL)
+            word, number = self._said(0)
+            if word == "dead":
+                return rows
+            rows = number
+        with suppress(ProcessLookupError):  # a fast disk has taken everything: this one came to its end
+            os.kill(pid, signal.SIGKILL)
         while (line := self._said(PATIENCE_S))[0] != "dead":
             rows = line[1]
         return rows
