@@ -51,6 +51,7 @@ class Archive:
             self.journal = Journal(folder, self._form, held.sealed, held.sealed + len(held.rows))
         self._events = Events(folder, self.meta, disk) if self.meta.get("list_mode") else None
         self._mutex = threading.Lock()  # one transaction at a time on the one connection
+        self._sealing = threading.Lock()  # one seal at a time, whoever asks for it
         self._sealer = Sealer(self.seal_next)
         self._sealer.wake()
 
@@ -127,19 +128,9 @@ class Archive:
         self.close()
 
     def seal_next(self) -> bool:
-        """Seal the oldest whole chunk of the journal; return whether there was one."""
-        first = self.journal.sealed
-        if self.journal.rows - first < self._chunk:
-            return False
-        held = snapshot(self.folder, first + self._chunk)
-        assert held is not None
-        with rim(self.folder / ZARR):
-            arrays = self._form.arrays(held.rows)
-            write_rows(open_root(self.folder, self._disk), arrays, first, arrays)
-        with self._mutex:
-            self.journal.forget(first + self._chunk)
-        self._disk.step("forgot")
-        return True
+        """Seal the oldest whole chunk of the journal; return whether there was one. One caller at a time."""
+        with self._sealing:
+            return self._seal_next()
 
     def write_rest(self, attributes: Mapping[str, Any]) -> None:
         """Write what is not sealed, what is looked up and the attributes; the journal keeps its rows."""
@@ -204,6 +195,20 @@ class Archive:
             return row
         finally:
             self._events.drop()  # a visit that could not be stored is made again, with events of its own
+
+    def _seal_next(self) -> bool:
+        first = self.journal.sealed
+        if self.journal.rows - first < self._chunk:
+            return False
+        held = snapshot(self.folder, first + self._chunk)
+        assert held is not None
+        with rim(self.folder / ZARR):
+            arrays = self._form.arrays(held.rows)
+            write_rows(open_root(self.folder, self._disk), arrays, first, arrays)
+        with self._mutex:
+            self.journal.forget(first + self._chunk)
+        self._disk.step("forgot")
+        return True
 
     def _note_try(self, visit: int, attempt: int) -> None:
         if 0 <= visit < len(self._stands):

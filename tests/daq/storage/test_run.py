@@ -1,6 +1,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from concurrent.futures import ThreadPoolExecutor
 from dataclasses import replace
 from pathlib import Path
 from typing import Any
@@ -250,16 +251,24 @@ def test_lengths_around_a_chunk_are_finished_whole(tmp_path: Path, rows: int) ->
     assert_equal_to(readings, dataset)
 
 
+def test_seals_asked_for_at_once_are_done_one_after_the_other(tmp_path: Path) -> None:
+    readings = [reading(visit) for visit in range(48)]
+    with started(tmp_path / "run", chunk=8) as archive, ThreadPoolExecutor(4) as pool:
+        commit_all(archive, readings)
+        for seal in [pool.submit(archive.seal_next) for _ in range(12)]:
+            seal.result()
+        assert archive.sealed == 48
+        assert_equal_to(readings, open_visits(tmp_path / "run"))
+
+
 def test_a_row_whose_number_was_not_noted_is_found_again(tmp_path: Path) -> None:
-    with started(tmp_path / "run", chunk=16) as archive:
+    with started(tmp_path / "run", chunk=64) as archive:  # too few visits for the sealer to meddle
         commit_all(archive, [reading(visit) for visit in range(20)])
         archive.journal.rows -= 1  # as Ctrl-C leaves it between SQLite's commit and our note
 
         archive.journal.recount()
 
         assert archive.commit(reading(20)) == 20
-        while archive.seal_next():
-            pass
         archive.journal.forget(archive.rows)
         archive.journal.recount()
         assert archive.rows == 21
