@@ -127,15 +127,17 @@ def _client(stack: ExitStack, workers: int, address: str | None) -> Any:
     import dask
     from distributed import Client, LocalCluster
 
-    for name in ("distributed", "tornado.application"):
-        logging.getLogger(name).setLevel(logging.CRITICAL)
+    for name in ("tornado.application", *logging.root.manager.loggerDict):
+        if name.startswith(("distributed", "tornado")):  # some of them have levels and handlers of their own
+            logging.getLogger(name).setLevel(logging.CRITICAL)
     dask.config.set({"distributed.comm.timeouts.connect": f"{ANSWERS_WITHIN_S}s"})
     if address is None:
         own = LocalCluster(
             n_workers=workers,
             threads_per_worker=1,
             host="127.0.0.1",
-            dashboard_address=None,
+            dashboard_address="127.0.0.1:0",  # it listens even when told not to: here alone, on a free port
+            scheduler_kwargs={"dashboard": False},
             silence_logs=logging.CRITICAL,
         )
         address = stack.enter_context(own).scheduler_address

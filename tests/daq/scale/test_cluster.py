@@ -6,7 +6,6 @@ import hashlib
 import os
 import shutil
 import signal
-import socket
 import subprocess
 import sys
 import time
@@ -17,15 +16,13 @@ from typing import Any
 import numpy as np
 import pytest
 
-import daq
 from daq.errors import DaqError
 from daq.scale.cluster import Cluster
 from daq.scale.job import Job, drawn, job_of
 from daq.scale.study import carry_out, here
+from tests.daq.scale.outside import ROOT, Outside, free_address
 
 KERNELS = "tests.daq.scale.kernels"
-ROOT = Path(daq.__file__).parents[1]
-WAIT_S = 60.0
 
 
 def job(kernel: str = "normal", draws: int = 400, **parameters: Any) -> Job:
@@ -40,42 +37,6 @@ def least(draws: int) -> float:
 
 def serial(of: Job) -> str:
     return hashlib.sha256(drawn(of, 0, of.draws)).hexdigest()
-
-
-class Outside:
-    """A scheduler with workers, each a process of its own, as somebody would start them by hand."""
-
-    def __init__(self, folder: Path, workers: int = 2, path: Path = ROOT) -> None:
-        with socket.create_server(("127.0.0.1", 0)) as free:
-            self.address = f"tcp://127.0.0.1:{free.getsockname()[1]}"
-        port = self.address.rpartition(":")[2]
-        self.folder, self._path = folder, path
-        self.scheduler = self._start(
-            "scheduler", "--host", "127.0.0.1", "--port", port, "--no-dashboard", "--no-show"
-        )
-        self.workers = [
-            self._start(
-                *("worker", self.address, "--host", "127.0.0.1", "--nthreads", "1", "--no-dashboard"),
-                *("--local-directory", str(folder / f"worker-{number}")),
-            )
-            for number in range(workers)
-        ]
-
-    def _start(self, what: str, *words: str) -> subprocess.Popen[bytes]:
-        command = [sys.executable, "-m", "dask", what, *words]
-        environment = os.environ | {"PYTHONPATH": f"{self._path}{os.pathsep}{ROOT}"}
-        return subprocess.Popen(
-            command, env=environment, stdout=subprocess.DEVNULL, stderr=subprocess.DEVNULL, cwd=self._path
-        )
-
-    def close(self) -> None:
-        for process in (*self.workers, self.scheduler):
-            process.terminate()
-        for process in (*self.workers, self.scheduler):
-            try:
-                process.wait(WAIT_S)
-            except subprocess.TimeoutExpired:
-                process.kill()
 
 
 @pytest.fixture
@@ -105,7 +66,7 @@ def test_a_scheduler_by_address_and_workers_killed_change_no_bit(outside: Outsid
     def kill_one(done: int) -> None:
         if done >= 10 and not killed:
             killed.append(done)
-            outside.workers[0].kill()
+            outside.kill_worker()
 
     with Cluster(address=outside.address) as cluster:
         found = carry_out(of, tmp_path / "study", 2, cluster, kill_one)
@@ -120,7 +81,7 @@ def test_a_scheduler_that_is_killed_is_said_and_the_study_goes_on_with_another(t
 
     def kill(done: int) -> None:
         if done >= 10:
-            first.scheduler.kill()
+            first.kill_scheduler()
 
     with pytest.raises(DaqError, match="scheduler has gone"), Cluster(address=first.address) as cluster:
         carry_out(of, tmp_path / "study", 2, cluster, kill)
@@ -168,12 +129,10 @@ def test_a_client_that_is_killed_leaves_what_is_drawn(tmp_path: Path) -> None:
 
 
 def test_an_address_that_nobody_answers_is_said() -> None:
-    with socket.create_server(("127.0.0.1", 0)) as free:
-        port = free.getsockname()[1]
     began_s = time.monotonic()
 
     with pytest.raises(DaqError, match="no cluster with workers answers here"):
-        Cluster(address=f"tcp://127.0.0.1:{port}")
+        Cluster(address=free_address())
 
     assert time.monotonic() - began_s < 60
 
