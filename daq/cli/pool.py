@@ -3,12 +3,13 @@
 from __future__ import annotations
 
 import argparse
-import tempfile
 from collections.abc import Iterator
 from pathlib import Path
 
 from daq.cli.answer import Answer
-from daq.cli.study import runner
+from daq.cli.study import progress_of, runner
+from daq.estimate.positions import PositionTests
+from daq.scale.kept import Kept, usual_folder
 from daq.scale.pool import Pool, pool_runs
 
 ODD = 0.05
@@ -16,24 +17,38 @@ ODD = 0.05
 
 def pool(arguments: argparse.Namespace) -> Answer:
     """Estimate runs anew, wherever they lie, and take them together."""
-    with tempfile.TemporaryDirectory() as passing, runner(arguments.workers, arguments.cluster) as run:
-        found = pool_runs(arguments.run, run, arguments.into or Path(passing))
+    kept = Kept(arguments.into or usual_folder())
+    with runner(arguments.workers, arguments.cluster) as run:
+        found = pool_runs(arguments.run, run, kept, progress_of(len(arguments.run), "runs"))
     if arguments.picture is not None:
         _draw(found, arguments.picture)
-    return Answer(0, found.to_json(), list(_lines(found)))
+    where = {"kept_in": None if kept.trouble else str(kept.folder)}
+    return Answer(0, found.to_json() | where, [*_lines(found), _read(found, kept)])
+
+
+def _read(found: Pool, kept: Kept) -> str:
+    told = f"{found.read} of {len(found.runs)} runs were read"
+    if kept.trouble:
+        return f"{told}; nothing can be kept in {kept.folder} ({kept.trouble}): --into names another folder"
+    return f"{told}; what all of them say is kept in {kept.folder}"
 
 
 def _draw(found: Pool, path: Path) -> None:
-    from daq.report.forest import draw_forest
+    from daq.report.forest import Line, draw_forest
 
     columns = (found.nights[name] for name in ("kappa", "kappa_se", "dof"))
-    nights = [(*one, left.p) for one, left in zip(zip(*columns, strict=True), found.against, strict=True)]
+    each = zip(
+        map(_short, found.runs), *columns, found.pooled.weights.tolist(), (left.p for left in found.against),
+        strict=True,
+    )  # fmt: skip
     together = [("by counts", found.pooled.value, found.pooled.interval_95)]
     if found.pooled.random_interval_95 is not None:
         together.append(("with scatter", found.pooled.random_value, found.pooled.random_interval_95))
-    if not found.homogeneous:
+    if not found.by_counts:
         together.reverse()
-    draw_forest(path, [_short(run) for run in found.runs], nights, together, zero=not found.hidden)
+    agree = "agree" if found.homogeneous else "differ"
+    title = f"{len(found.runs)} nights, {agree} (Welch's p = {found.pooled.welch_p:.2g})"
+    draw_forest(path, [Line(*one) for one in each], together, title, zero=not found.hidden)
 
 
 def _lines(found: Pool) -> Iterator[str]:
@@ -52,14 +67,23 @@ def _lines(found: Pool) -> Iterator[str]:
     for cause, many in found.shared.items():
         yield f"{cause}: one cause for {many} nights, added to the error once and not night by night"
     kappa, se, (low, high) = found.headline
-    why = "by counts" if found.homogeneous else f"with a scatter of {one.tau:.2e} between nights"
+    why = "by counts" if found.by_counts else f"with a scatter of {one.tau:.2e} between nights"
     told = f"{name} = {kappa:+.3e} ± {se:.2e} ({len(found.runs)} nights, {why})"
     yield f"{told}; 95 %: {low:+.3e} to {high:+.3e}"
     if found.homogeneous and one.random_interval_95 is not None:
         low, high = one.random_interval_95
         yield f"were there a scatter between nights: {one.random_value:+.3e}; 95 %: {low:+.3e} to {high:+.3e}"
+    if found.by_counts and not found.homogeneous:
+        yield "two nights that disagree do not say how far nights scatter: this bar is too short; add nights"
+    if found.positions is not None:
+        yield _everywhere(found.positions)
     if found.limit is not None:
         yield f"|kappa| < {found.limit.limit:.3g} at 95 % confidence"
+
+
+def _everywhere(of: PositionTests) -> str:
+    told = f"structure by position beside kappa, pairs of all nights: p = {of.combined_p:.2g}"
+    return f"{told} (farthest at {of.largest_mm:g} mm, {of.largest_t:+.1f}, p = {of.largest_sidak_p:.2g})"
 
 
 def _short(run: str) -> str:

@@ -28,7 +28,7 @@ def study(arguments: argparse.Namespace) -> Answer:
     block = arguments.block or described.block
     began_s = time.monotonic()
     with runner(arguments.workers, arguments.cluster) as run:
-        found = carry_out(job, folder, block, run, _progress(job))
+        found = carry_out(job, folder, block, run, progress_of(job.draws, "draws"))
     figures = _figures(found, job, folder, time.monotonic() - began_s)
     return Answer(1 if found.failed else 0, figures, list(_lines(found, job, folder)))
 
@@ -45,15 +45,16 @@ def runner(workers: int, address: str | None) -> Iterator[Runner]:
         yield cluster
 
 
-def _progress(job: Job) -> Callable[[int], None]:
+def progress_of(wanted: int, what: str) -> Callable[[int], None]:
+    """Return what tells on a terminal how many of so many are done, at most once a second."""
     told_s = float("-inf")
 
     def progress(done: int) -> None:
         nonlocal told_s
-        if sys.stderr.isatty() and (time.monotonic() - told_s > EVERY_S or done == job.draws):
+        if sys.stderr.isatty() and (time.monotonic() - told_s > EVERY_S or done == wanted):
             told_s = time.monotonic()
-            end = "\n" if done == job.draws else ""
-            print(f"\r{done} of {job.draws} draws", end=end, file=sys.stderr, flush=True)
+            end = "\n" if done == wanted else ""
+            print(f"\r{done} of {wanted} {what}", end=end, file=sys.stderr, flush=True)
 
     return progress
 

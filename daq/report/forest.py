@@ -3,7 +3,10 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from dataclasses import dataclass
+from math import floor, log10
 from pathlib import Path
+from typing import Any
 
 from matplotlib.figure import Figure
 from scipy.special import stdtrit
@@ -13,21 +16,39 @@ from daq.report.planned import ACCENT, FORMATS, INK, LIGHT
 
 ODD = 0.05
 LABELLED = 60  # nights that still have room for their names
+ROW_IN, THIN_ROW_IN, HIGHEST_IN = 0.25, 0.06, 40.0
+Interval = tuple[float, float]
+
+
+@dataclass(frozen=True, slots=True)
+class Line:
+    """A night: kappa, standard error, degrees of freedom, weight, and the p of lying so far from others."""
+
+    name: str
+    kappa: float
+    se: float
+    dof: float
+    weight: float
+    p: float
+
+    @property
+    def ends(self) -> Interval:
+        """The 95 % interval."""
+        half = float(stdtrit(self.dof, 0.975)) * self.se
+        return self.kappa - half, self.kappa + half
 
 
 def draw_forest(
     path: Path,
-    names: Sequence[str],
-    nights: Sequence[tuple[float, float, float, float]],
-    together: Sequence[tuple[str, float, tuple[float, float]]],
+    nights: Sequence[Line],
+    together: Sequence[tuple[str, float, Interval]],
+    title: str,
     zero: bool = True,
 ) -> None:
     """Write the picture; the ending of the path says in which format.
 
     Parameters
     ----------
-    nights
-        By night: kappa, standard error, degrees of freedom, and the p of lying so far from the others.
     together
         Name, value and 95 % interval of every way to take the nights together; the first is the headline.
     zero
@@ -40,31 +61,73 @@ def draw_forest(
     """
     if path.suffix not in FORMATS:
         raise DescriptionError((f"{path}: a picture ends in {', '.join(FORMATS)}. Give it such a name.",))
+    labelled = len(nights) <= LABELLED
     rows = len(nights) + len(together) + 1
-    figure = Figure(figsize=(8.0, min(2.0 + 0.22 * rows, 40.0)), layout="constrained")
+    height_in = 1.6 + (ROW_IN if labelled else THIN_ROW_IN) * len(nights) + ROW_IN * len(together)
+    figure = Figure(figsize=(9.0, min(height_in, HIGHEST_IN)), layout="constrained")
     axes = figure.subplots()
+    axes.set_ylim(rows - 0.4, -0.6)
+    power = _power([end for line in nights for end in line.ends])
+    axes.axvspan(*(end / 10.0**power for end in together[0][2]), color=LIGHT, alpha=0.35, linewidth=0)
     if zero:
-        axes.axvline(0.0, color=LIGHT, linewidth=1.0)
-    for at, (kappa, se, dof, p) in enumerate(nights):
-        half, colour = float(stdtrit(dof, 0.975)) * se, ACCENT if p < ODD else INK
-        axes.plot([kappa - half, kappa + half], [at, at], color=colour, linewidth=0.9)
-        axes.plot([kappa], [at], "s", color=colour, markersize=3.0)
-    for at, (_, value, ends) in enumerate(together, start=len(nights) + 1):
-        axes.fill(
-            [ends[0], value, ends[1], value],
-            [at, at - 0.35, at, at + 0.35],
-            color=INK if at == len(nights) + 1 else LIGHT,
-        )
-    labels = [
-        *(names if len(names) <= LABELLED else [""] * len(names)),
-        "",
-        *(name for name, _, _ in together),
-    ]
-    axes.set_yticks(range(rows), labels, fontsize=7)
-    axes.set_ylim(rows - 0.5, -0.5)
-    axes.ticklabel_format(axis="x", style="sci", scilimits=(0, 0))
-    axes.set(xlabel="kappa, 95 % intervals" if zero else "kappa + hidden offset, 95 % intervals")
+        axes.axvline(0.0, color=INK, linewidth=0.8, linestyle=(0, (4, 3)))
+    _nights(axes, nights, power, labelled)
+    _together(axes, together, power, len(nights) + 1)
+    _label(axes, nights if labelled else [], together, power, len(nights) + 1)
+    what = "kappa" if zero else "kappa + hidden offset"
+    axes.set_xlabel(f"{what} [1e{power:+03d}], 95 % intervals" if power else f"{what}, 95 % intervals")
+    axes.set_title(title, fontsize=9, loc="left")
     try:
-        figure.savefig(path, metadata={"Date": None} if path.suffix == ".svg" else None)
+        figure.savefig(path, dpi=150, metadata={"Date": None} if path.suffix == ".svg" else None)
     except OSError as error:
         raise DescriptionError((f"{path}: {(error.strerror or 'cannot be written').lower()}.",)) from error
+
+
+def _nights(axes: Any, nights: Sequence[Line], power: int, labelled: bool) -> None:
+    """Draw bars, and squares whose area is the weight."""
+    heaviest = max(line.weight for line in nights)
+    for at, line in enumerate(nights):
+        colour = ACCENT if line.p < ODD else INK
+        axes.plot([end / 10.0**power for end in line.ends], [at, at], color=colour, linewidth=1.0)
+        size = (7.0 if labelled else 3.0) * (line.weight / heaviest) ** 0.5
+        axes.plot([line.kappa / 10.0**power], [at], "s", color=colour, markersize=max(size, 1.0))
+
+
+def _together(axes: Any, together: Sequence[tuple[str, float, Interval]], power: int, first: int) -> None:
+    """Draw diamonds, the headline filled."""
+    for at, (_, value, ends) in enumerate(together, start=first):
+        x = [one / 10.0**power for one in (ends[0], value, ends[1], value)]
+        face = INK if at == first else "white"
+        axes.fill(x, [at, at - 0.35, at, at + 0.35], facecolor=face, edgecolor=INK, linewidth=1.0, zorder=3)
+
+
+def _label(
+    axes: Any, nights: Sequence[Line], together: Sequence[tuple[str, float, Interval]], power: int, first: int
+) -> None:
+    """Name the rows at the left, and tell their numbers at the right."""
+    unit = 10.0**power
+    left = [*(line.name for line in nights), *(name for name, _, _ in together)]
+    right = [
+        *(f"{line.kappa / unit:+.2f} ± {line.se / unit:.2f}   {100 * line.weight:.0f} %" for line in nights),
+        *(
+            f"{value / unit:+.2f}   {low / unit:+.2f} to {high / unit:+.2f}"
+            for _, value, (low, high) in together
+        ),
+    ]
+    places = [*range(len(nights)), *range(first, first + len(together))]
+    axes.set_yticks(places, left, fontsize=8)
+    axes.tick_params(axis="y", length=0)
+    other = axes.twinx()
+    other.set_ylim(axes.get_ylim())
+    other.set_yticks(places, [text.replace("-", "−") for text in right], fontsize=8)
+    other.tick_params(axis="y", length=0)
+    for one in (axes, other):
+        for edge in ("left", "right", "top"):
+            one.spines[edge].set_visible(False)
+
+
+def _power(values: Sequence[float]) -> int:
+    """Return the power of ten that numbers are told in; 0 where they are about 1."""
+    largest = max(abs(value) for value in values)
+    found = floor(log10(largest)) if largest > 0 else 0
+    return found if not -2 < found < 3 else 0

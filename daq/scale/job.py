@@ -18,7 +18,7 @@ import numpy as np
 from daq.errors import DescriptionError
 
 Draw = Mapping[str, float | Sequence[float]]
-Kernel = Callable[[Mapping[str, Any], np.random.Generator], Draw]
+Kernel = Callable[[Mapping[str, Any], np.random.Generator], Any]
 
 KNOWN = {"synthetic": "daq.scale.synthetic:night", "rehearsed": "daq.scale.rehearsed:night"}
 PACKAGES = ("daq", "simulators")
@@ -26,7 +26,10 @@ PACKAGES = ("daq", "simulators")
 
 @dataclass(frozen=True, slots=True)
 class Job:
-    """So many draws of a kernel; `entropy` seeds them, each by its own number, `columns` by `rows` a draw."""
+    """So many draws of a kernel; `entropy` seeds them, each by its own number, `columns` by `rows` a draw.
+
+    Without columns the kernel gives bytes, which are taken as they are.
+    """
 
     kernel: str
     parameters: str  # JSON: the same text, the same draws
@@ -67,6 +70,9 @@ def job_of(kernel: str, parameters: Mapping[str, Any], entropy: int, draws: int)
 
 def drawn(job: Job, first: int, count: int) -> bytes:
     """Return draws `first` to `first + count - 1` as float64, little-endian, draw by draw, row by row."""
+    if not job.columns:
+        numbers = range(first, first + count)
+        return b"".join(_one(job.kernel, job.parameters, job.entropy, number) for number in numbers)
     table = np.empty((count, job.rows, len(job.columns)), "<f8")
     for place in range(count):
         found = _one(job.kernel, job.parameters, job.entropy, first + place)
@@ -77,9 +83,14 @@ def drawn(job: Job, first: int, count: int) -> bytes:
 @lru_cache(maxsize=16)
 def code_version(kernel: str) -> str:
     """Return a hash of the program and of the kernel's own module: workers of another version differ."""
-    whole = hashlib.sha256(version("tercet").encode())
-    modules = (*PACKAGES, kernel.partition(":")[0])
-    for path in sorted({path for name in modules for path in _sources(name)}):
+    return version("tercet") + code_of(*PACKAGES, kernel.partition(":")[0])
+
+
+@lru_cache(maxsize=16)
+def code_of(*names: str) -> str:
+    """Return a hash of the sources of packages and modules."""
+    whole = hashlib.sha256()
+    for path in sorted({path for name in names for path in _sources(name)}):
         whole.update(path.name.encode() + path.read_bytes())
     return whole.hexdigest()[:16]
 
@@ -92,7 +103,7 @@ def _sources(name: str) -> list[Path]:
     return sorted(origin.parent.rglob("*.py")) if origin.name == "__init__.py" else [origin]
 
 
-def _one(kernel: str, parameters: str, entropy: int, number: int) -> Draw:
+def _one(kernel: str, parameters: str, entropy: int, number: int) -> Any:
     seed = np.random.SeedSequence(entropy, spawn_key=(number,))
     generator = np.random.Generator(np.random.PCG64DXSM(seed))
     return _kernel(kernel)(json.loads(parameters), generator)

@@ -3,9 +3,8 @@
 from __future__ import annotations
 
 import json
-from collections.abc import Sequence
-from dataclasses import asdict, dataclass
-from pathlib import Path
+from collections.abc import Callable, Iterator, Mapping, Sequence
+from dataclasses import asdict, dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -13,23 +12,29 @@ from numpy.typing import NDArray
 
 from daq.errors import DescriptionError, StorageError
 from daq.estimate.pooling import LeftOut, Pooled, leave_one_out, pool
+from daq.estimate.positions import PositionTests
 from daq.estimate.statement import Statement, statement
+from daq.scale.everywhere import everywhere
 from daq.scale.job import Job
-from daq.scale.nights import SHARED
-from daq.scale.study import Runner, carry_out, draws_of
-from daq.storage.elsewhere import stamp_of
+from daq.scale.kept import Kept
+from daq.scale.nights import SHARED, Night
+from daq.scale.study import Failed, Runner
+from daq.storage.elsewhere import facts_of
 
 KERNEL = "daq.scale.nights:night"
 HOMOGENEOUS_P = 0.05  # Welch's p below which the headline is the one with scatter between nights
+FIGURES = ("kappa", "kappa_se", "dof", "kappa_counting_se", "pairs")
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Pool:
     """Runs taken together: `pooled` of all, each night against the others, and the headline.
 
-    `homogeneous`: the nights agree by Welch's test; then the headline is the mean weighted by counts, else
-    the one with a scatter between nights. The rule is fixed: never the narrower of the two. `hidden`: the
-    runs are blinded, so kappa is moved by their common offset and there is no `limit`.
+    `homogeneous`: the nights agree by Welch's test. Then, and with two nights, the headline is the mean
+    `by_counts`, else the one with a scatter between nights. The rule is fixed: never the narrower of the two.
+    `positions`: tests of every position over the pairs of all nights, where they have the same positions.
+    `hidden`: the runs are blinded, so kappa is moved by their common offset and there is no `limit`.
+    `read`: of how many runs the visits were read; the others were kept.
     """
 
     runs: tuple[str, ...]
@@ -40,13 +45,21 @@ class Pool:
     homogeneous: bool
     hidden: bool
     limit: Statement | None
+    positions: PositionTests | None
+    read: int
+
+    @property
+    def by_counts(self) -> bool:
+        """Whether the headline is the mean weighted by counts."""
+        return self.homogeneous or self.pooled.random_interval_95 is None
 
     @property
     def headline(self) -> tuple[float, float, tuple[float, float]]:
         """Kappa, its standard error and the 95 % interval."""
-        if self.homogeneous or self.pooled.random_interval_95 is None:
-            return self.pooled.value, self.pooled.se, self.pooled.interval_95
-        return self.pooled.random_value, self.pooled.random_se, self.pooled.random_interval_95
+        one = self.pooled
+        if one.random_interval_95 is None or self.by_counts:
+            return one.value, one.se, one.interval_95
+        return one.random_value, one.random_se, one.random_interval_95
 
     def to_json(self) -> dict[str, Any]:
         """Return plain lists and numbers by name."""
@@ -56,10 +69,13 @@ class Pool:
             "kappa_se": se,
             "interval_95": list(interval),
             "homogeneous": self.homogeneous,
+            "by_counts": self.by_counts,
             "hidden": self.hidden,
             "shared": self.shared,
             "limit": None if self.limit is None else self.limit.to_json(),
+            "positions": None if self.positions is None else self.positions.to_json(),
             "pooled": {**asdict(self.pooled), "weights": self.pooled.weights.tolist()},
+            "read": self.read,
             "nights": [
                 {"run": run, **{name: column[at] for name, column in self.nights.items()}, **asdict(left)}
                 for at, (run, left) in enumerate(zip(self.runs, self.against, strict=True))
@@ -67,8 +83,10 @@ class Pool:
         }
 
 
-def pool_runs(runs: Sequence[str], runner: Runner, folder: Path) -> Pool:
-    """Return runs taken together; `folder` keeps the figures of each, once for each version of the program.
+def pool_runs(
+    runs: Sequence[str], runner: Runner, kept: Kept, progress: Callable[[int], None] = lambda done: None
+) -> Pool:
+    """Return runs taken together; each is read once for each version of the estimator, and `kept`.
 
     Raises
     ------
@@ -79,64 +97,85 @@ def pool_runs(runs: Sequence[str], runner: Runner, folder: Path) -> Pool:
     """
     if len(runs) < 2 or len(set(runs)) < len(runs):
         raise DescriptionError(("tercet pool: name two runs or more, each once.",))
-    job = _job(tuple(runs))
-    found = carry_out(job, folder, 1, runner)
-    if found.failed:
-        raise StorageError("\n".join(_why(runs[one.first], one.why) for one in found.failed))
-    columns = {name: column[:, 0] for name, column in draws_of(job, folder).items()}
-    return _pooled(tuple(runs), columns)
+    facts = {run: _facts(run) for run in runs}
+    found = {run: night for run in runs if (night := kept.get(facts[run])) is not None}
+    missing = [run for run in runs if run not in found]
+    failed = []
+    progress(len(found))
+    for run, outcome in _read(missing, runner):
+        if isinstance(outcome, str):
+            failed.append(outcome)
+            continue
+        kept.put(facts[run], outcome)
+        found[run] = Night.from_bytes(outcome)
+        progress(len(found))
+    if failed:
+        raise StorageError("\n".join(failed))
+    return _pooled({run: found[run] for run in runs}, len(missing))
 
 
-def _job(runs: tuple[str, ...]) -> Job:
-    """Return the job of reading runs; the names of its columns come from the first that can be read."""
-    columns = ("kappa", "kappa_se", "dof", "kappa_counting_se", "pairs", "visits", "hidden_by")
-    loads = tuple(f"{name}_{what}" for name in SHARED.values() for what in ("load", "of"))
-    told = json.dumps({"runs": runs, "stamps": [stamp_of(run) for run in runs]})
-    return Job(KERNEL, told, 0, len(runs), (*columns, *loads))
+def _facts(run: str) -> Mapping[str, Any]:
+    """Return what a run is; nothing where it cannot be read: reading it whole says why."""
+    try:
+        return facts_of(run)
+    except StorageError:
+        return {}
 
 
-def _why(run: str, why: str) -> str:
-    sentence = why.removeprefix("StorageError: ")
-    return sentence if run in sentence else f"{run}: {sentence}"
+def _read(runs: Sequence[str], runner: Runner) -> Iterator[tuple[str, bytes | str]]:
+    """Yield runs with their nights as they come home, or with a sentence."""
+    job = Job(KERNEL, json.dumps({"runs": runs}), 0, len(runs), ())
+    for outcome in runner(job, ((at, 1) for at in range(len(runs)))):
+        if isinstance(outcome, Failed):
+            run = runs[outcome.first]
+            sentence = outcome.why.removeprefix("StorageError: ")
+            yield run, sentence if run in sentence else f"{run}: {sentence}"
+        else:
+            (first, _), night = outcome
+            yield runs[first], night
 
 
-def _pooled(runs: tuple[str, ...], columns: dict[str, NDArray[np.float64]]) -> Pool:
-    hidden = set(columns["hidden_by"].tolist())
+def _pooled(of: Mapping[str, Night], read: int) -> Pool:
+    nights = list(of.values())
+    hidden = {night.hidden_by for night in nights}
     if len(hidden) > 1:
         raise DescriptionError(
             ("tercet pool: the runs are hidden by different offsets, or some are open. Reveal them first.",)
         )
-    kappa, se, dof = (columns[name] for name in ("kappa", "kappa_se", "dof"))
-    shared, loads = _shared(columns)
+    columns = {name: np.array([night.figures[name] for night in nights]) for name in FIGURES}
+    kappa, se, dof = (columns[name] for name in FIGURES[:3])
+    shared, loads = _shared(nights)
     together = pool(kappa, se, dof, columns["kappa_counting_se"] ** -2, loads if len(loads) else None)
     homogeneous = together.welch_p >= HOMOGENEOUS_P
-    value, error = (
-        (together.value, together.se) if homogeneous else (together.random_value, together.random_se)
-    )
-    freedom = together.dof if homogeneous else float(len(runs) - 1)
-    blind = hidden != {0.0}
-    return Pool(
-        runs=runs,
-        nights={
-            name: columns[name].tolist()
-            for name in ("kappa", "kappa_se", "dof", "kappa_counting_se", "pairs")
-        },
+    blind = hidden != {""}
+    found = Pool(
+        runs=tuple(of),
+        nights={name: columns[name].tolist() for name in FIGURES},
         pooled=together,
         against=leave_one_out(kappa, se, dof, 0.0 if homogeneous else together.tau),
         shared=shared,
         homogeneous=homogeneous,
         hidden=blind,
-        limit=None if blind else statement(value, error, freedom),
+        limit=None,
+        positions=everywhere(nights),
+        read=read,
     )
+    return found if blind else replace(found, limit=_limit(found))
 
 
-def _shared(columns: dict[str, NDArray[np.float64]]) -> tuple[dict[str, int], NDArray[np.float64]]:
+def _limit(found: Pool) -> Statement:
+    value, error, _ = found.headline
+    return statement(value, error, found.pooled.dof if found.by_counts else float(len(found.runs) - 1))
+
+
+def _shared(nights: Sequence[Night]) -> tuple[dict[str, int], NDArray[np.float64]]:
     """Return how many nights share each cause, and a column of loads by night for every cause."""
     loads, shared = [], dict[str, int]()
     for line, name in SHARED.items():
-        load, owner = columns[f"{name}_load"], columns[f"{name}_of"]
+        load = np.array([night.loads[name] for night in nights])
+        owner = np.array([night.owners[name] for night in nights])
         for one in np.unique(owner[load > 0]).tolist():
             of = (owner == one) & (load > 0)
             loads.append(np.where(of, load, 0.0))
             shared[line] = shared.get(line, 0) + int(of.sum())
-    return shared, np.array(loads).reshape(len(loads), -1)
+    return shared, np.array(loads).reshape(-1, len(nights))
