@@ -5,6 +5,18 @@ from __future__ import annotations
 from hashlib import blake2b
 
 import numpy as np
+from numpy.random.bit_generator import ISeedSequence
+
+
+class _Key(ISeedSequence):
+    """Hands a generator its key, which then need not ask the system for chance that it would not use."""
+
+    def __init__(self, text: str) -> None:
+        self._words = np.frombuffer(blake2b(text.encode(), digest_size=16).digest(), dtype="<u8")
+
+    def generate_state(self, n_words: int, dtype: object = np.uint32) -> np.ndarray:
+        """Return the two words of a Philox key."""
+        return self._words
 
 
 def generator(seed: int, use: str, number: int) -> np.random.Generator:
@@ -23,5 +35,6 @@ def generator(seed: int, use: str, number: int) -> np.random.Generator:
     ----------
     .. [1] "Parallel random numbers: as easy as 1, 2, 3", Proc. SC11, art. 16 (2011), the Philox generator.
     """
-    key = int.from_bytes(blake2b(f"{seed}/{use}".encode(), digest_size=16).digest(), "little")
-    return np.random.Generator(np.random.Philox(key=key, counter=number << 192))
+    counter = np.array((0, 0, 0, number), dtype=np.uint64)
+    philox = np.random.Philox(_Key(f"{seed}/{use}"), counter=counter)  # type: ignore[arg-type]  # stubs too narrow
+    return np.random.Generator(philox)

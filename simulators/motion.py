@@ -58,8 +58,10 @@ class Track:
 
     def last_leg(self, at_ns: int) -> Leg:
         """Return the leg that the axis is on, or has last come to its end of; one of no length is none."""
-        begun = [leg for leg in self._legs if leg.start_ns <= at_ns and leg.start_mm != leg.stop_mm]
-        return begun[-1] if begun else self._legs[0]
+        for leg in reversed(self._legs):
+            if leg.start_ns <= at_ns and leg.start_mm != leg.stop_mm:
+                return leg
+        return self._legs[0]
 
     def shown_mm(self, at_ns: int) -> float:
         """Return where the axis believes to be [mm]; before homing that is a count from an unknown zero."""
