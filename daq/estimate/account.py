@@ -12,7 +12,7 @@ from daq.estimate.arrays import FloatArray
 from daq.estimate.budget import Budget, budget, known_of
 from daq.estimate.checks import Check, checks, odd_first_stands
 from daq.estimate.dataset import plan_of_dataset, rows_of_dataset
-from daq.estimate.plan import Plan, stand_places
+from daq.estimate.plan import Plan
 from daq.estimate.quality import Rules
 from daq.estimate.sensitivity import taken_visits
 from daq.estimate.settle import settle
@@ -83,7 +83,7 @@ def _left_out(dataset: Any, visits: Visits, plan: Plan) -> tuple[dict[str, int],
     """Return how many stands each rule left out (a stand may count twice), and whether that is doubtful."""
     visit, quality = (np.asarray(dataset[name].values, np.int64) for name in ("visit", "quality"))
     planned = visit >= 0
-    bits = np.zeros(len(stand_places(plan)[0]), np.int64)
+    bits = np.zeros(len(plan.stand_places[0]), np.int64)
     np.bitwise_or.at(bits, plan.stand[visit[planned]], quality[planned])
     out = visits.done & ~visits.used
     by_rule = {

@@ -14,7 +14,7 @@ from daq.estimate.arrays import BoolArray, FloatArray
 from daq.estimate.budget import smooth_drift
 from daq.estimate.contrast import epsilon_and_delta
 from daq.estimate.counting import scatter
-from daq.estimate.plan import Plan, stand_places
+from daq.estimate.plan import Plan
 from daq.estimate.quality import Rules, fingerprint
 from daq.estimate.sensitivity import Taken
 from daq.estimate.sums import plainly, sums_of
@@ -48,7 +48,7 @@ def checks(visits: Visits, plan: Plan, taken: Taken, numbers: Mapping[str, Any])
 
 def odd_first_stands(visits: Visits, plan: Plan, rules: Rules) -> list[float]:
     """Return the positions [mm] whose first stand does not fit the later ones: no rule could see it then."""
-    _, position = stand_places(plan)
+    _, position = plan.stand_places
     cells = len(plan.openings)
     wide = scatter(visits.value, visits.variance, plan.fano, plan.heralded is not None)
     shown = np.flatnonzero(plan.stand >= 0)  # of a damaged run visits may be lost before others
@@ -148,7 +148,7 @@ def _by_block(value: FloatArray, live: FloatArray, plan: Plan) -> FloatArray:
 
 def _first_laps(plan: Plan) -> BoolArray:
     """Return which stands belong to the first lap of their pair."""
-    pair, _ = stand_places(plan)
+    pair, _ = plan.stand_places
     first = np.zeros(len(pair), bool)
     for one in np.unique(pair[pair >= 0]):
         stands = np.flatnonzero(pair == one)

@@ -7,7 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from daq.estimate.arrays import FloatArray, IntArray, added
-from daq.estimate.plan import Plan, stand_places
+from daq.estimate.plan import Plan
 from daq.estimate.sensitivity import Taken, spread_out, taken_visits, unbalance
 from daq.estimate.sums import Taking, plainly
 from daq.estimate.visits import Visits, complete_pairs
@@ -114,5 +114,5 @@ def _stand_mean(stand: IntArray, values: FloatArray) -> FloatArray:
 
 def _left_out(visits: Visits, plan: Plan) -> float:
     """Return the share of the stands of complete pairs that are left out."""
-    stands = np.isin(stand_places(plan)[0], complete_pairs(visits, plan))
+    stands = np.isin(plan.stand_places[0], complete_pairs(visits, plan))
     return float(1 - visits.used[stands].mean()) if stands.any() else 0.0

@@ -8,7 +8,7 @@ from math import sqrt
 import numpy as np
 
 from daq.estimate.arrays import BoolArray
-from daq.estimate.plan import Plan, stand_places
+from daq.estimate.plan import Plan
 from daq.estimate.residual import weighted_kappa
 from daq.estimate.sums import plainly, sums_of
 from daq.estimate.tables import plan_contrast, tables_of
@@ -26,7 +26,7 @@ def without_exclusions(visits: Visits, plan: Plan) -> Mapping[str, float]:
     The stands kept are part of all stands: the change has the variance of the kept ones less that of all.
     More than three of its standard errors say that the exclusions move the result.
     """
-    inside = np.isin(stand_places(plan)[0], complete_pairs(visits, plan))
+    inside = np.isin(plan.stand_places[0], complete_pairs(visits, plan))
     spare = visits.done & visits.countable & ~visits.used & inside
     if not spare.any():
         return {}

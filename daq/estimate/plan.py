@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass, field
+from functools import cached_property
 
 import numpy as np
 
@@ -22,7 +23,7 @@ class Heralded:
     window_s: float
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True)  # no slots: what follows from it is worked out once
 class Plan:
     """What the estimator knows of an itinerary.
 
@@ -68,13 +69,13 @@ class Plan:
         """How many stands a pair has: a lap over all positions, and its mirror."""
         return LAPS_PER_PAIR * len(self.positions_mm)
 
-
-def stand_places(plan: Plan) -> tuple[IntArray, IntArray]:
-    """Return pair and position index of every stand, by stand number; -1 for a stand without a visit."""
-    stands = int(plan.stand.max(initial=-1)) + 1
-    pair = np.full(stands, -1, np.int64)
-    position = np.full(stands, -1, np.int64)
-    known = plan.stand >= 0
-    pair[plan.stand[known]] = plan.pair[known]
-    position[plan.stand[known]] = plan.position[known]
-    return pair, position
+    @cached_property
+    def stand_places(self) -> tuple[IntArray, IntArray]:
+        """Pair and position index of every stand, by stand number; -1 for a stand without a visit."""
+        stands = int(self.stand.max(initial=-1)) + 1
+        pair = np.full(stands, -1, np.int64)
+        position = np.full(stands, -1, np.int64)
+        known = self.stand >= 0
+        pair[self.stand[known]] = self.pair[known]
+        position[self.stand[known]] = self.position[known]
+        return pair, position

@@ -13,7 +13,7 @@ from daq.estimate.budget import Budget, Known, budget
 from daq.estimate.detected import detected
 from daq.estimate.geometry import Geometry, geometry_after
 from daq.estimate.headline import headline
-from daq.estimate.plan import Plan, stand_places
+from daq.estimate.plan import Plan
 from daq.estimate.rows import rows_of_readings
 from daq.estimate.sensitivity import taken_visits
 from daq.estimate.settle import Settled, settle, taking
@@ -39,7 +39,7 @@ class Running:
     def __init__(self, plan: Plan) -> None:
         self._plan = plan
         self._stand = plan.stand.tolist()
-        self._pair = stand_places(plan)[0].tolist()
+        self._pair = plan.stand_places[0].tolist()
         self._visits = no_visits(plan)
         self._open: dict[tuple[int, int], dict[int, Reading]] = {}
         self._spoken: dict[int, tuple[bool, int]] = {}  # by stand: is the attempt that speaks good, which
@@ -148,7 +148,7 @@ class Running:
             return _bands(shown_numbers(settled.numbers, self._plan.blinding))
         if len(missing) > FITS_AT_ONCE:
             return dict.fromkeys(_BANDS)
-        then = np.isin(stand_places(self._plan)[0], pairs[:end])
+        then = np.isin(self._plan.stand_places[0], pairs[:end])
         visits = replace(self._visits, done=self._visits.done & then)
         return _bands(shown_numbers(settle(visits, self._plan).numbers, self._plan.blinding))
 

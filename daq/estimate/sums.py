@@ -7,7 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from daq.estimate.arrays import BoolArray, FloatArray, IntArray, added
-from daq.estimate.plan import Plan, stand_places
+from daq.estimate.plan import Plan
 from daq.estimate.visits import Visits, complete_pairs
 
 
@@ -51,7 +51,7 @@ def plainly(visits: Visits, plan: Plan, stands: BoolArray | None = None) -> Taki
 def sums_of(visits: Visits, plan: Plan, taking: Taking | None = None) -> Sums:
     """Return sums over what is taken (the stands used), complete pairs apart from the rest."""
     taking = plainly(visits, plan) if taking is None else taking
-    pair, _ = stand_places(plan)
+    pair, _ = plan.stand_places
     complete = complete_pairs(visits, plan)
     block = np.full(int(pair.max(initial=-1)) + 2, -1)  # the last entry: stands of no pair
     block[complete] = np.arange(len(complete))

@@ -9,7 +9,7 @@ import numpy as np
 
 from daq.estimate.arrays import BoolArray, FloatArray, IntArray
 from daq.estimate.detected import Detected, detected
-from daq.estimate.plan import Plan, stand_places
+from daq.estimate.plan import Plan
 from daq.estimate.rows import Rows
 from daq.estimate.use import held, stands_done, use
 from daq.records import EXCLUDING, Quality
@@ -41,7 +41,7 @@ class Visits:
 
 def no_visits(plan: Plan) -> Visits:
     """Return the visits of a plan before the first one: nothing counted, nothing done."""
-    visits, stands = len(plan.stand), len(stand_places(plan)[0])
+    visits, stands = len(plan.stand), len(plan.stand_places[0])
     value, live, variance = np.zeros((3, visits))
     middle_s, monitor, monitor_variance = np.full((3, visits), np.nan)
     used, done, countable = np.zeros((3, stands), bool)
@@ -84,7 +84,7 @@ def complete_pairs(visits: Visits, plan: Plan) -> IntArray:
 
     A stand all of whose attempts are bad is done: it is in no sum, and holds no pair up.
     """
-    pair, _ = stand_places(plan)
+    pair, _ = plan.stand_places
     done = np.bincount(pair[visits.done & (pair >= 0)], minlength=plan.planned_pairs)
     complete: IntArray = np.flatnonzero(done == plan.stands_per_pair)
     return complete

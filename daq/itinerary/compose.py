@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass, field
+from functools import cached_property
 from typing import Any
 
 import numpy as np
@@ -22,7 +23,7 @@ from daq.records import Visit
 _SHUFFLE, _SEARCH, _PAUSE = 1, 2, 3  # streams of random numbers beside that of the coins
 
 
-@dataclass(frozen=True, slots=True, eq=False)
+@dataclass(frozen=True, eq=False)  # no slots: what follows from it is worked out once
 class Itinerary:
     """The ordered visits of a run.
 
@@ -66,12 +67,16 @@ class Itinerary:
         last = number + 1 == len(self)
         return last or bool(self.stand[number + 1] != self.stand[number])
 
-    @property
+    def begins_lap(self, number: int) -> bool:
+        """Return whether a visit is the first of its lap; so is what would follow the last visit."""
+        return number in (0, len(self)) or bool(self.lap[number] != self.lap[number - 1])
+
+    @cached_property
     def visits_per_stand(self) -> int:
         """How many visits a stand has."""
         return len(self) // (int(self.stand.max()) + 1)
 
-    @property
+    @cached_property
     def position_index(self) -> IntArray:
         """Where each visit's position stands in `positions_mm`, shape (visits,)."""
         by_value = np.argsort(self.positions_mm)

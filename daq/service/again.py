@@ -9,10 +9,10 @@ from daq.errors import DeviceError
 from daq.estimate.stopping import PLANNED
 from daq.records import Quality, Reading
 from daq.sequencer import Planned, State, perform
-from daq.service.course import begins_lap, react
+from daq.service.course import react
 from daq.service.hearing import hear
 from daq.service.holding import wait_out
-from daq.service.night import AT_REQUEST, COMPLETE, Night, Trouble, look, tell
+from daq.service.night import AT_REQUEST, COMPLETE, Night, Trouble, look_after, tell
 from daq.service.tape import Tape
 
 Lost = dict[int, list[int]]  # row -> run times of faults before it that are still to come
@@ -95,8 +95,7 @@ def _took(night: Night, reading: Reading) -> None:
     closed = night.live.took(reading, night.judge.odd)
     night.trouble = Trouble(night.clock.now_ns())
     if closed:
-        following = reading.visit + 1
-        look(night, anew=following == len(night.itinerary) or begins_lap(night.itinerary, following))
+        look_after(night, reading.visit)
     night.on_visit(reading)
     night.alive()
     night.live.write(night.state.value, night.running)

@@ -16,7 +16,7 @@ from daq.service.ending import REASONS, due_now
 from daq.service.groups import AFTER_FAULT, BY_RULE, Place, repeat_from, supply
 from daq.service.hearing import hear
 from daq.service.holding import hold, pass_time, reopen, reopen_silent, wait_out, watch_limits
-from daq.service.night import AT_REQUEST, COMPLETE, Night, Trouble, look, tell
+from daq.service.night import AT_REQUEST, COMPLETE, Night, Trouble, look, look_after, tell
 from daq.service.parking import keep_bench
 
 REPEATED = Quality.OFF_TARGET | Quality.MOVED | Quality.OVERFLOW | Quality.DISPERSION | Quality.FINGERPRINT
@@ -102,7 +102,7 @@ def _readings(night: Night, place: Place) -> Iterator[Reading]:
 def _stood(night: Night, reading: Reading) -> None:
     """Do what is due at the end of a stand."""
     following = reading.visit + 1
-    look(night, anew=following == len(night.itinerary) or begins_lap(night.itinerary, following))
+    look_after(night, reading.visit)
     keep_bench(night)
     reopen_silent(night, reading)
     pause_s = night.itinerary.pauses.get(following, 0.0)
@@ -150,7 +150,7 @@ def _may_go_on(night: Night, number: int) -> bool:
         _end_for(night, END_TIME)
     elif _begins_pair(night.itinerary, number) and not night.asked.ends:
         _end_for(night, due_now(night.running, night.stopping, int(night.itinerary.pair[number])))
-    if night.asked.end_after_lap and begins_lap(night.itinerary, number):
+    if night.asked.end_after_lap and night.itinerary.begins_lap(number):
         night.asked.end = True
     return not (night.asked.ends or night.holds or night.shortage())
 
@@ -174,11 +174,6 @@ def _stand_ns(night: Night, number: int) -> int:
     within = np.flatnonzero(plan.stand == plan.stand[number])
     took_s = plan.start_s[within[-1]] + plan.dwell_s[within[-1]] - plan.start_s[number]
     return round(1e9 * float(took_s + plan.dwell_s[number]))
-
-
-def begins_lap(itinerary: Itinerary, number: int) -> bool:
-    """Return whether a visit begins a lap."""
-    return number == 0 or bool(itinerary.lap[number] != itinerary.lap[number - 1])
 
 
 def _begins_pair(itinerary: Itinerary, number: int) -> bool:

@@ -28,7 +28,9 @@ from daq.storage.reader import open_visits
 
 log = logging.getLogger(__name__)
 
-EVERY_S = 1.0
+EVERY_S, MOST_S = 1.0, 5.0  # between two feeds; a long run's takes a while to work out, and the run goes on
+SHARE = 0.05  # of the time that the feed may take
+GROWN = 1 + 1 / 64  # an estimate costs what the run is long, so a long run asks it after many laps
 LOG_LINES = 30
 
 
@@ -50,7 +52,8 @@ class Live:
         self._known = known_of(meta)
         self._blinding = Blinding(str(meta["blinding"]))
         self._mean_hz = float(itinerary.rates_hz.mean())
-        self._written_s = float("-inf")
+        self._next_s = float("-inf")  # on the wall's clock: when the feed is written again
+        self._asked_stands = 0
         self._started_utc = str(meta.get("started_utc") or stamp(clock.utc_ns()))
         self._strip = Strip(itinerary, meta)
         self.watcher = Watcher(self._strip, itinerary, meta, room, restarts)
@@ -63,6 +66,11 @@ class Live:
     def stands(self) -> int:
         """How many stands are closed."""
         return len(self._strip.levels)
+
+    @property
+    def due(self) -> bool:
+        """Whether the run has grown so much that its estimate is worth asking again."""
+        return self.stands >= GROWN * self._asked_stands
 
     def say(self, text: str) -> None:
         """Add a sentence to the log that the page shows."""
@@ -94,6 +102,7 @@ class Live:
     ) -> tuple[Change, ...]:
         """Look at every condition again and return what became of the warnings; `anew` asks the estimate."""
         if anew:
+            self._asked_stands = self.stands
             self.watcher.know(running.estimate().to_json())
         now = stamp(self._clock.utc_ns())
         if held is None:
@@ -114,16 +123,18 @@ class Live:
         return self._clock.utc_ns() < self._muted_until_utc_ns
 
     def write(self, state: str, running: Running, ended: str | None = None, *, now: bool = False) -> None:
-        """Write the feed, unless the last one is younger than a second."""
-        if not now and time.monotonic() - self._written_s < EVERY_S:
+        """Write the feed, unless the last one is younger than a second; where it is long work, up to five."""
+        begun_s = time.monotonic()
+        if not now and begun_s < self._next_s:
             return
-        self._written_s = time.monotonic()
         try:
             feed = self._feed(state, running, ended)
             write_feed(self._folder, feed)
             self._outlet(feed)
         except StorageError as error:
             log.error("the page is not told: %s", error)
+        took_s = time.monotonic() - begun_s
+        self._next_s = begun_s + min(max(EVERY_S, took_s / SHARE), MOST_S)
 
     def _feed(self, state: str, running: Running, ended: str | None) -> dict[str, Any]:
         estimate = running.estimate()

@@ -108,6 +108,13 @@ def look(night: Night, ended: str = "", *, anew: bool = False, over: bool = Fals
         night.on_warning(change)
 
 
+def look_after(night: Night, visit: int) -> None:
+    """Look at every condition after a stand; at the end of a lap, when that is due, at a new estimate."""
+    following = visit + 1
+    last = following == len(night.itinerary)
+    look(night, anew=last or (night.live.due and night.itinerary.begins_lap(following)))
+
+
 def held(night: Night) -> Held | None:
     """Return why the run holds, the gravest cause first; None while it does not."""
     now_ns = night.clock.now_ns()

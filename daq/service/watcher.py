@@ -9,15 +9,15 @@ from typing import Any
 from daq.estimate.rows import DETECTOR
 from daq.estimate.shift import ShiftChart
 from daq.estimate.standing import Change, Standing, acknowledge, look_again
-from daq.estimate.wake import LATEST_STANDS, Closed, Danger, Held, dangers
+from daq.estimate.wake import LATEST_STANDS, Danger, Held, dangers
 from daq.estimate.watch import Thresholds, Watched, concerns
 from daq.itinerary import Itinerary
 from daq.records import Quality, Reading
+from daq.service.shut import Shut
 from daq.service.strip import DUE_COUNTS, Strip
 
 SILENT_STANDS = 3
 DARK_LEVEL = 0.05  # of the expected counts; what a detector counts in the dark stays below
-LAPS_BEFORE = 2
 
 
 class Watcher:
@@ -40,7 +40,7 @@ class Watcher:
         self._odd: deque[str] = deque(maxlen=LATEST_STANDS)
         self._dark = 0
         self._load = 0.0
-        self._closed: dict[int, list[float]] = {}  # lap -> counts and live seconds behind shut slits
+        self._shut = Shut()
         self._silent: Counter[str] = Counter()
 
     def took(self, reading: Reading) -> None:
@@ -51,9 +51,8 @@ class Watcher:
         if not reading.quality & Quality.OVERFLOW:
             self._load = max(self._load, rate * float(self._meta.get("dead_time_s") or 0.0))
         if reading.opening == 0:
-            lap = self._closed.setdefault(int(self._itinerary.lap[reading.visit]), [0.0, 0.0])
-            lap[0] += reading.values[DETECTOR]
-            lap[1] += reading.live_s
+            lap = int(self._itinerary.lap[reading.visit])
+            self._shut.add(lap, reading.values[DETECTOR], reading.live_s)
         for name in self._meta.get("sensors", ()):
             self._silent[name] = 0 if name in reading.sensors else self._silent[name] + 1
 
@@ -114,19 +113,10 @@ class Watcher:
             expected_counts=0.0 if latest is None else latest.due,
             monitor_lives=lit,
             odd_openings=tuple(self._odd),
-            closed=self._shut(),
+            closed=self._shut.rates(),
             restarts=self._restarts,
             ended=ended,
         )
-
-    def _shut(self) -> Closed | None:
-        """Return the rates behind shut slits of the last two whole laps against those before."""
-        laps = [part for _, part in sorted(self._closed.items())][:-1]
-        before, last = laps[:-2], laps[-2:]
-        counts, live_s = (sum(part[index] for part in before) for index in (0, 1))
-        if len(before) < LAPS_BEFORE or not live_s:
-            return None
-        return Closed([part[0] / part[1] for part in last if part[1]], counts / live_s, counts**0.5 / live_s)
 
     def _watched(self, over: bool) -> Watched:
         many = self._itinerary.visits_per_stand or 1

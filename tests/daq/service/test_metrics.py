@@ -2,10 +2,6 @@
 
 from __future__ import annotations
 
-import time
-from dataclasses import replace
-
-import pytest
 from prometheus_client.openmetrics.parser import text_string_to_metric_families
 
 from daq.records import Reading
@@ -81,18 +77,3 @@ def test_a_tally_keeps_a_few_numbers_however_long_the_run_is():
     tally = tallied(1000)
 
     assert tally.by_opening == {3: [1000.0, 8e7, 2000.0]}
-
-
-@pytest.mark.long
-def test_building_the_text_costs_less_than_a_millisecond():
-    content, tally = feed(), tallied()
-    for mask in range(8):
-        tally.add(replace(READING, opening=mask))
-    metrics_text(content, tally, 1)
-
-    begun = time.process_time()
-    for _ in range(200):
-        metrics_text(content, tally, 1)
-    spent_s = (time.process_time() - begun) / 200
-
-    assert spent_s <= 1e-3
