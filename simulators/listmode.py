@@ -59,7 +59,7 @@ class EventStream:
     layout, tick_s
         Of the words.
     dead_ticks
-        No two events of a channel are nearer.
+        No two events of a channel are nearer; a part of a tick counts.
     seed
         Of the times.
     clock
@@ -67,7 +67,7 @@ class EventStream:
     """
 
     def __init__(
-        self, counter: GatedCounter, layout: Layout, tick_s: float, dead_ticks: int, seed: int, clock: Clock
+        self, counter: GatedCounter, layout: Layout, tick_s: float, dead_ticks: float, seed: int, clock: Clock
     ) -> None:
         self._counter, self._layout, self._clock = counter, layout, clock
         self._tick_s, self._dead_ticks, self._seed = tick_s, dead_ticks, seed
@@ -80,7 +80,7 @@ class EventStream:
     ) -> EventStream:
         """Return the stream of a counter of a rig."""
         layout = {32: U32, 64: U64}[entry.word_bits]
-        return cls(counter, layout, entry.tick_s, round(dead_time_s / entry.tick_s), seed, clock)
+        return cls(counter, layout, entry.tick_s, dead_time_s / entry.tick_s, seed, clock)
 
     def session(self, send: Send) -> Session:
         """Return a session; what the client says is not heard."""
@@ -109,17 +109,18 @@ class EventStream:
         return round(ns / NS / self._tick_s)
 
 
-def spaced(many: int, first: int, last: int, dead: int, random: np.random.Generator) -> Times:
-    """Return so many times between two, none nearer than `dead` to the one before, otherwise even.
+def spaced(many: int, first: int, last: int, dead: float, random: np.random.Generator) -> Times:
+    """Return so many times [ticks] between two, none nearer than `dead` to the one before, otherwise even.
 
     Notes
     -----
     Given their number, events of a Poisson process behind a non-paralysable dead time are evenly spread over
-    the live time, with the dead times put back between them.
+    the live time, with the dead times put back between them; the last one's ends before `last`, so that the
+    next stretch may begin there. A counter gives the whole ticks that have passed.
     """
-    dead = min(dead, (last - first) // max(many, 1))
-    live = random.integers(first, max(last - dead * max(many - 1, 0), first + 1), many, dtype=np.uint64)
-    return np.sort(live) + np.uint64(dead) * np.arange(many, dtype=np.uint64)
+    dead = min(dead, (last - first) / max(many, 1))
+    live = np.sort(random.random(many)) * (last - first - dead * many)
+    return (first + live + dead * np.arange(many)).astype(np.uint64)
 
 
 class _Deaf:

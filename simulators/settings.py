@@ -98,7 +98,11 @@ class ChipSettings(Table):
 
 
 class Settings(Table):
-    """The simulated truth."""
+    """The simulated truth.
+
+    Of a rate of events the share `sag_s` times that rate never reaches the threshold of the detector: pulses
+    that sag, which between two counts nobody sees.
+    """
 
     model: Literal["wavelets"]
     seed: Annotated[int, Field(ge=0)] = 1
@@ -108,6 +112,7 @@ class Settings(Table):
     dark_rate_hz: _Rate = 0.0
     dead_time_s: _Small = 0.0
     dead_time_kind: Literal["non-paralysable", "paralysable"] = "non-paralysable"
+    sag_s: _Small = 0.0
     readout_s: Annotated[float, Field(ge=0, le=3600)] = 0.0
     source: SourceSettings = SourceSettings()
     channels: Annotated[Sequence[ChannelSettings], Field(min_length=1)] = (ChannelSettings(),)

@@ -76,6 +76,7 @@ class Truth:
         random = generator(self._seed, f"{device}/{channel}" if channel else device, open_ns)
         if of.fano > 1:
             return draw_bunched(rate_hz * gate_s, of.fano, random)
+        rate_hz *= max(1.0 - settings.sag_s * rate_hz, 0.0)
         return draw_counts(rate_hz, gate_s, settings.dead_time_s, settings.dead_time_kind, random)
 
     def power(self, device: str, open_ns: int, close_ns: int) -> tuple[float, float, int]:

@@ -24,8 +24,9 @@ class Ask:
     """A visit that a task asks for; `role` tells the fit what it is.
 
     An `opening` (bit mask), or `ANYWHERE` and the mask's own `place_mm`; `via_mm` is gone to first;
-    `early` opens the gate as soon as nothing moves, without waiting for the stage to settle; `turn` is what a
-    person does before, in words.
+    `early` opens the gate as soon as nothing moves, without waiting for the stage to settle; with `events`
+    the fit gets the times of its counts, where the counter tells them; `turn` is what a person does before,
+    in words.
     """
 
     role: str
@@ -36,6 +37,7 @@ class Ask:
     via_mm: float | None = None
     beam: Literal["", "open", "shut"] = ""
     early: bool = False
+    events: bool = False
     turn: str = ""
 
 
@@ -73,6 +75,7 @@ class Panel:
     y_label: str
     curves: tuple[Curve, ...]
     marks: Mapping[str, float] = field(default_factory=dict)
+    log_x: bool = False
 
 
 @dataclass(frozen=True, slots=True)

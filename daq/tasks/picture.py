@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from pathlib import Path
+from textwrap import wrap
 
 from matplotlib.axes import Axes
 from matplotlib.figure import Figure
@@ -11,6 +12,7 @@ from matplotlib.figure import Figure
 from daq.errors import StorageError
 from daq.tasks.contract import Panel
 
+WIDE = 115  # letters of a line of the title
 INKS = ("#1b1b1b", "#b5490b", "#3f6ea8", "#7a7a7a")
 MARKERS, LINES = ("o", "s", "^", "x"), ("-", "--", ":", "-.")
 
@@ -19,7 +21,7 @@ def draw_task(path: Path, title: str, panels: Sequence[Panel]) -> None:
     """Write the picture of what a task found."""
     rows = max(len(panels), 1)
     figure = Figure(figsize=(9.0, 1.0 + 3.2 * rows), layout="constrained")
-    figure.suptitle(title, fontsize=10, wrap=True)
+    figure.suptitle("\n".join(wrap(title, WIDE)), fontsize=10)
     for axes, panel in zip(figure.subplots(rows, 1, squeeze=False)[:, 0], panels, strict=False):
         _panel(axes, panel)
     try:
@@ -45,5 +47,7 @@ def _panel(axes: Axes, panel: Panel) -> None:
         axes.axvline(place, color=INKS[3], linewidth=0.8, linestyle=":")
         axes.annotate(name, (place, high), rotation=90, fontsize=7, ha="right", va="top")
     axes.set(title=panel.title, xlabel=panel.x_label, ylabel=panel.y_label)
+    if panel.log_x:
+        axes.set_xscale("log")
     if len(panel.curves) > 1:
         axes.legend(fontsize=8)

@@ -56,6 +56,24 @@ def test_the_truth_of_the_bench_is_found(loaded: Loaded, tmp_path: Path) -> None
     assert dead["at_utc"] > dark["at_utc"]  # the bench goes on where it was left
 
 
+def test_a_counter_in_list_mode_shows_its_dead_time_by_gaps_and_that_its_gain_sags(
+    loaded: Loaded, tmp_path: Path
+) -> None:
+    listed = lantern_rig(
+        devices__counter__driver="list-mode-counter",
+        devices__counter__stream="tcp://127.0.0.1:7807",
+        bench__single_slit_rate_hz=2e3,
+        bench__sag_s=1e-5,
+    )
+
+    record = carry_out(task_of("deadtime"), replace(loaded, rig=listed), tmp_path, Person())
+
+    assert abs(record["values"]["by_gaps_s"] - 40e-9) < 4 * record["se"]["by_gaps_s"]
+    assert record["values"]["apart_in_se"] > 3
+    assert record["verdict"] == "fail"
+    assert "Sums and gaps disagree by" in record["sentence"]
+
+
 def test_with_a_shutter_dark_and_light_are_told_apart(loaded: Loaded, tmp_path: Path) -> None:
     shuttered = replace(loaded, rig=words())
 

@@ -7,6 +7,7 @@ from collections.abc import Callable, Sequence
 import numpy as np
 
 from daq.description import Measurement, Rig
+from daq.estimate import seen_rate_hz
 from daq.records import UNPLANNED, Reading
 from daq.tasks.contract import Ask, Setting, Taken
 from daq.tasks.yardstick import yardstick
@@ -54,3 +55,46 @@ def reading(ask: Ask, values: tuple[float, ...], opened_s: float = 0.0, **more: 
         "values": values,
     }
     return Reading(**plain | more)  # type: ignore[arg-type]
+
+
+def crossing_rates(
+    alone_hz: float = 1e6, background_hz: float = 800.0, scale: float = 0.0, far: float = 0.8
+) -> np.ndarray:
+    """Return rates of none, A, B, AB at the four crossings (4, 4); a scale off by some radians a quarter."""
+    rows = []
+    for light, turns in ((alone_hz, 1), (alone_hz, 1), (far * alone_hz, 3), (far * alone_hz, 3)):
+        cross = 2 * light * np.cos(turns * (np.pi / 2 + scale))
+        rows.append([0.0, light, light, 2 * light + cross])
+    return np.array(rows) + background_hz
+
+
+def cycles_of(
+    rates_hz: np.ndarray, number: int, live_s: float, kind: str, random: np.random.Generator
+) -> np.ndarray:
+    """Return recorded rates of cycles (C, 4, 4) behind a dead time of 40 ns, counted at random [1/s].
+
+    The number of counts behind a dead time varies less than by itself, by (1 + x)^-2 or 1 - 2 x exp(-x),
+    x = rate times dead time (renewal theory, from memory).
+    """
+    seen, x = seen_rate_hz(rates_hz, 40e-9, kind), rates_hz * 40e-9
+    narrowed = (1 + x) ** -2 if kind == "non-paralysable" else 1 - 2 * x * np.exp(-x)
+    noise = random.standard_normal((number, *seen.shape))
+    return np.asarray(seen + noise * np.sqrt(seen * narrowed / live_s))
+
+
+def gate_ticks(
+    rate_hz: float, number: int, tau_s: float, tick_s: float, random: np.random.Generator
+) -> np.ndarray:
+    """Return the times of counts of a non-paralysable counter [ticks]: an arrival after each dead time."""
+    times_s = np.cumsum(tau_s + random.exponential(1 / rate_hz, number + 1))
+    return np.floor(times_s / tick_s).astype(np.int64)
+
+
+def sums_sd_s(alone_hz: float, live_s: float) -> float:
+    """Return the standard error of a dead time by sums of two equal slits at four crossings alike [s].
+
+    Of one crossing it is sqrt((a + b + ab)/T)/(2 a b) = 1/(n^1.5 sqrt T), T the live time of each opening
+    (first order in counts and dead time, derived). Weights of 1, 1, 1/3, 1/3 leave (2 + 2/9)/(8/3)^2 of its
+    square.
+    """
+    return float(np.sqrt((2 + 2 / 9) / (8 / 3) ** 2) / (alone_hz**1.5 * np.sqrt(live_s)))

@@ -1,0 +1,109 @@
+"""Agreement: a dead time by sums and by gaps, whether they agree, and what is said of them."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from math import hypot, sqrt
+
+from daq.tasks.contract import Setting, Verdict, fits, within, worst
+from daq.tasks.crossings import Sums
+from daq.tasks.gaps import Gaps
+from daq.tasks.said import with_error
+
+LARGEST_LOSS = 0.05
+APART = 3.0  # standard errors: sums and gaps that lie farther apart do not agree
+
+
+@dataclass(frozen=True, slots=True)
+class Found:
+    """What sums say, what gaps say where the counter tells them, and by how many errors they differ."""
+
+    sums: Sums
+    gaps: Gaps | None
+
+    @property
+    def apart(self) -> float:
+        """By how many standard errors sums lie above gaps; 0 without gaps."""
+        return 0.0 if self.gaps is None else self.apart_s / hypot(self.sums.se_s, self.gaps.se_s)
+
+    @property
+    def apart_s(self) -> float:
+        """By how much sums lie above gaps."""
+        return 0.0 if self.gaps is None else self.sums.tau_s - self.gaps.tau_s
+
+    @property
+    def best(self) -> tuple[float, float]:
+        """The dead time to correct with, and its error: of both where they agree, else of the sums."""
+        if self.gaps is None or abs(self.apart) > APART:
+            return self.sums.tau_s, self.sums.se_s
+        share = self.sums.se_s**2 / (self.sums.se_s**2 + self.gaps.se_s**2)  # of gaps
+        return self.sums.tau_s - share * self.apart_s, self.gaps.se_s * sqrt(share)
+
+
+def kappa_shift(setting: Setting, found: Found) -> float:
+    """Return what an error of the dead time by one standard error does to kappa."""
+    return abs(setting.yardstick.per_dead_time) * found.best[1]
+
+
+def verdict_of(setting: Setting, found: Found) -> Verdict:
+    """Return the verdict on losses, error, agreement with what is described and of sums with gaps."""
+    (tau, se), yardstick = found.best, setting.yardstick
+    loss = within(yardstick.brightest_hz * abs(tau), yardstick.brightest_hz * se, LARGEST_LOSS)
+    allowed: Verdict = "pass" if kappa_shift(setting, found) <= yardstick.allowed else "fail"
+    told = setting.measurement.estimate.dead_time_s
+    as_told: Verdict = "pass" if abs(tau - told) <= APART * se else "doubtful"
+    even: Verdict = "pass" if found.gaps is None else fits(found.gaps.chi2, found.gaps.dof)
+    return worst(loss, allowed, as_told, even, _agrees(setting, found))
+
+
+def _agrees(setting: Setting, found: Found) -> Verdict:
+    """Return "fail" where sums and gaps disagree by what moves kappa more than one defect may."""
+    if abs(found.apart) <= APART:
+        return "pass"
+    return "doubtful" if _moved(setting, found) <= setting.yardstick.allowed else "fail"
+
+
+def _moved(setting: Setting, found: Found) -> float:
+    """Return by how much kappa moves between the dead time of sums and that of gaps."""
+    return abs(setting.yardstick.per_dead_time * found.apart_s)
+
+
+def sentence_of(setting: Setting, found: Found) -> str:
+    """Return what was found, and what gaps and sums say of one another."""
+    (tau, se), told = found.best, setting.measurement.estimate.dead_time_s
+    lost = 100 * setting.yardstick.brightest_hz * tau
+    said = (
+        f"The dead time is {with_error(1e9 * tau, 1e9 * se)} ns ({1e9 * told:.3g} described); its error "
+        f"moves kappa by {_tiny(kappa_shift(setting, found), setting)}, and at the brightest place "
+        f"{lost:.2g} % of the counts are lost."
+    )
+    return " ".join((said, *_agreement(setting, found)))
+
+
+def _agreement(setting: Setting, found: Found) -> list[str]:
+    if found.gaps is None:
+        return []
+    both = (
+        f"{with_error(1e9 * found.sums.tau_s, 1e9 * found.sums.se_s)} ns by sums, "
+        f"{with_error(1e9 * found.gaps.tau_s, 1e9 * found.gaps.se_s)} ns by {found.gaps.number} gaps"
+    )
+    said = [f"Sums and gaps agree: {both}."]
+    if abs(found.apart) > APART:
+        said = [
+            f"Sums and gaps disagree by {abs(found.apart):.1f} standard errors: {both}, which moves kappa by "
+            f"{_tiny(_moved(setting, found), setting)}. Something beside the dead time changes the counts "
+            f"with the rate: look at the pulse height and the threshold."
+        ]
+    if fits(found.gaps.chi2, found.gaps.dof) != "pass":
+        said.append(
+            f"Gaps are not those of an even rate ({100 * found.gaps.soon:+.2g} +- "
+            f"{100 * found.gaps.soon_se:.1g} % of the counts come too soon after another): look for "
+            f"afterpulses, ringing and room light."
+        )
+    return said
+
+
+def _tiny(shift: float, setting: Setting) -> str:
+    allowed = setting.yardstick.allowed
+    least = 1e-3 * allowed
+    return f"less than {least:.0e}" if shift < least else f"{shift:.1e} of {allowed:.1e} allowed"
