@@ -240,6 +240,9 @@ class Bench(Protocol):
     def free_bytes(self) -> float:
         """Return how much room is left on the disk as far as the bench has a say, else infinity."""
 
+    def turn(self, knob: str, value: float) -> None:
+        """Set a knob of the bench, as a person would at a real one."""
+
     def keep(self) -> bytes:
         """Return what a resumed rehearsal needs: axis positions and clock offset, as JSON."""
 

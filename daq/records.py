@@ -98,7 +98,10 @@ class Reading:
 VERDICTS = ("counts", "counts in part", "doubtful", "does not count")
 
 # What can be measured at the bench, in the order of a day.
-TASKS = ("dark", "deadtime", "pilot", "register", "backlash", "scale", "settle", "monitor", "dry-lap")
+TASKS = (
+    *("plateau", "dark", "deadtime", "pilot", "register", "backlash"),
+    *("scale", "settle", "crosstalk", "monitor", "dry-lap"),
+)
 
 # What a person may do on the page: a watcher reads, an operator also asks.
 ROLES = ("watcher", "operator")

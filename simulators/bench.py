@@ -81,6 +81,10 @@ class WaveletBench:
         """Return how much is left on a disk that a fault fills, infinite while none does."""
         return self._built.upsets.free_bytes() if self._built.upsets else float("inf")
 
+    def turn(self, knob: str, value: float) -> None:
+        """Set a knob, as a person would at a real bench; a fresh bench has all as described."""
+        self._built.truth.knobs.turn(knob, value)
+
     def keep(self) -> bytes:
         """Return what a resumed rehearsal needs: axis positions and clock offset, as JSON."""
         now_ns = self.clock.now_ns()

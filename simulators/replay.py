@@ -114,6 +114,9 @@ class ReplayBench:
         """Return that a replay has no say in the room on the disk."""
         return float("inf")
 
+    def turn(self, knob: str, value: float) -> None:
+        """Turn nothing: an archive holds what was."""
+
     def keep(self) -> bytes:
         """Return nothing: a replay begins at its beginning."""
         return b""

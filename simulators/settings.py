@@ -41,8 +41,9 @@ class ChannelSettings(Table):
     """What a channel of the counter sees.
 
     "detector": `share` of the light behind the mask, and dark counts; "monitor": `rate_hz` times the strength
-    of the source, before mask and shutter; "coincidence": `share` of the light whose twin was seen too, and
-    accidental ones of channels 1 and 2 within `window_s`. `fano`: variance over mean of what it counts.
+    of the source, before mask and shutter, and by the share `bends` more at `rate_hz`; "coincidence": `share`
+    of the light whose twin was seen too, and accidental ones of channels 1 and 2 within `window_s`. `fano`:
+    variance over mean of what it counts.
     """
 
     sees: Literal["detector", "monitor", "coincidence"] = "detector"
@@ -50,6 +51,7 @@ class ChannelSettings(Table):
     rate_hz: _Rate = 0.0
     window_s: _Small = 0.0
     fano: Annotated[float, Field(ge=1, le=1e6)] = 1.0
+    bends: Annotated[float, Field(ge=-0.5, le=0.5)] = 0.0
 
 
 class PowerSettings(Table):
@@ -97,11 +99,28 @@ class ChipSettings(Table):
     transient_s: Annotated[float, Field(gt=0, le=60)] = 0.1
 
 
+class DialSettings(Table):
+    """How the detector answers to what a person sets on it (`[by_hand]`), in the dial's own unit.
+
+    Where it stands `now` all is as described; half of the pulses are lost at `knee`, blurred by `blur`, above
+    it rates rise by the share `slope` for one unit, and dark counts e-fold in `dark_e`. Each count a second
+    takes `sag` off what is set.
+    """
+
+    now: float = 0.0
+    knee: float = -1e6
+    blur: Annotated[float, Field(gt=0)] = 1.0
+    slope: float = 0.0
+    dark_e: Annotated[float, Field(gt=0)] = 1e6
+    sag: Annotated[float, Field(ge=0)] = 0.0
+
+
 class Settings(Table):
     """The simulated truth.
 
     Of a rate of events the share `sag_s` times that rate never reaches the threshold of the detector: pulses
-    that sag, which between two counts nobody sees.
+    that sag, which between two counts nobody sees. A gate also sees the share `memory` of the light of the
+    gate before it.
     """
 
     model: Literal["wavelets"]
@@ -119,6 +138,9 @@ class Settings(Table):
     power: PowerSettings = PowerSettings()
     light: LightSettings = LightSettings()
     chip: ChipSettings = ChipSettings()
+    detector: DialSettings = DialSettings()
+    room_light_hz: _Rate = 0.0
+    memory: Annotated[float, Field(ge=0, lt=1)] = 0.0
     instruments: Mapping[str, Model] = {}
 
     @model_validator(mode="after")

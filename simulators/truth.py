@@ -13,6 +13,7 @@ from daq.description import Rig
 from simulators.chip import Chip
 from simulators.detector import draw_bunched, draw_counts
 from simulators.draws import generator
+from simulators.knobs import Knobs
 from simulators.motion import NS, Track
 from simulators.settings import ChannelSettings, Settings
 from simulators.slits import Slits
@@ -56,6 +57,8 @@ class Truth:
         self._chip = Chip(rig, settings.chip, seed)
         self._scale_hz = settings.single_slit_rate_hz / self._slits.reference()
         self._light = lru_cache(maxsize=65_536)(self._light_hz)
+        self.knobs = Knobs(settings.detector, settings.room_light_hz)
+        self._gates: dict[str, list[tuple[int, float]]] = {}  # by device: opening and light of the last two
 
     def behind(self, factor: Factor) -> None:
         """Put something between source and mask that takes light away as a function of time."""
@@ -72,12 +75,21 @@ class Truth:
         """Return what a gate of a device has counted in a channel, the same whenever it is asked for."""
         gate_s = (close_ns - open_ns) / NS
         settings, of = self._settings, self._settings.channels[channel]
-        rate_hz = self._channel_hz(of, open_ns, close_ns)
+        rate_hz = self._remembered(device, open_ns, self._channel_hz(of, open_ns, close_ns), channel)
         random = generator(self._seed, f"{device}/{channel}" if channel else device, open_ns)
         if of.fano > 1:
             return draw_bunched(rate_hz * gate_s, of.fano, random)
         rate_hz *= max(1.0 - settings.sag_s * rate_hz, 0.0)
         return draw_counts(rate_hz, gate_s, settings.dead_time_s, settings.dead_time_kind, random)
+
+    def _remembered(self, device: str, open_ns: int, rate_hz: float, channel: int) -> float:
+        """Return a rate with what the detector remembers of the gate before it; gates are asked in order."""
+        share = self._settings.memory
+        if not share or channel:
+            return rate_hz
+        before = [gate for gate in self._gates.get(device, []) if gate[0] < open_ns][-1:]
+        self._gates[device] = [*before, (open_ns, rate_hz)]
+        return rate_hz + share * (before[0][1] - rate_hz) if before else rate_hz
 
     def power(self, device: str, open_ns: int, close_ns: int) -> tuple[float, float, int]:
         """Return mean, variance of the mean and number of readings of a power meter between two times."""
@@ -91,11 +103,14 @@ class Truth:
 
     def _channel_hz(self, channel: ChannelSettings, open_ns: int, close_ns: int) -> float:
         """Return the mean rate of events at a channel over a gate [1/s]."""
+        passed = self.knobs.passed
         if channel.sees == "monitor":
-            return channel.rate_hz * mean_relative(self._to_monitor, open_ns / NS, close_ns / NS)
-        light_hz = channel.share * self._mean_light_hz(open_ns, close_ns)
+            strength = passed * mean_relative(self._to_monitor, open_ns / NS, close_ns / NS)
+            return channel.rate_hz * strength * (1.0 + channel.bends * strength)
+        light_hz = passed * channel.share * self._mean_light_hz(open_ns, close_ns)
         if channel.sees == "detector":
-            return light_hz + self._settings.dark_rate_hz
+            light_hz += self.knobs.room_hz
+            return light_hz * self.knobs.seen(light_hz) + self._settings.dark_rate_hz * self.knobs.darker()
         signal, idler = self._settings.channels[1:3]
         singles = [self._channel_hz(one, open_ns, close_ns) for one in (signal, idler)]
         return light_hz + channel.window_s * singles[0] * singles[1]

@@ -4,9 +4,11 @@ from __future__ import annotations
 
 import argparse
 import contextlib
+import math
 import select
 import sys
 from collections.abc import Iterator
+from dataclasses import replace
 
 from daq.cli.answer import Answer
 from daq.description import Rig
@@ -16,6 +18,7 @@ from daq.service.bench_task import Person, carry_out
 from daq.service.load import load, load_rig
 from daq.tasks import task_of
 from daq.tasks.by_hand import Bench, halt, obey
+from daq.tasks.contract import Turn
 
 BY_HAND = "by-hand"
 
@@ -41,12 +44,27 @@ def _measured(arguments: argparse.Namespace) -> Answer:
     return Answer(0 if record["ok"] else 1, record, lines)
 
 
-def _turned(what: str) -> None:
-    """Wait until a person has done what only a person may do."""
-    if _typed(f"{what} Then press Enter: ") == "":
-        raise DaqError(
-            "nobody has done it", where="at the bench", remedy="Repeat the task with somebody there"
-        )
+def _turned(turn: Turn) -> Turn:
+    """Wait until a person has done what only a person may do; what the instrument shows may be typed."""
+    _say("\n".join(filter(None, (turn.caution, turn.text))))
+    while True:
+        typed = _typed("Press Enter when it is done, or type the value that is shown there: ")
+        if not typed:
+            remedy = "Set back what was turned, then repeat the task with somebody there"
+            raise DaqError("nobody has done it", where="at the bench", remedy=remedy)
+        if not typed.strip():
+            return turn
+        with contextlib.suppress(ValueError):
+            return replace(turn, shown=_finite(typed))
+        _say(f"{typed.strip()!r} is no number.")
+
+
+def _finite(typed: str) -> float:
+    """Return a number that was typed; raises ValueError for what is none."""
+    value = float(typed)
+    if not math.isfinite(value):
+        raise ValueError(typed)
+    return value
 
 
 def _by_hand(arguments: argparse.Namespace) -> Answer:

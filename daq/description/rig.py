@@ -9,6 +9,7 @@ from pydantic import Field, field_validator, model_validator
 
 from daq import openings
 from daq.description.address import same_place
+from daq.description.by_hand import ByHand
 from daq.description.device import DeviceEntry
 from daq.description.problems import NotNegative, Positive, ProblemsError, Table
 
@@ -142,6 +143,7 @@ class Rig(Table):
     detector: Detector
     axes: Mapping[str, Axis]
     devices: Mapping[str, DeviceEntry]
+    by_hand: ByHand = ByHand()
     bench: Mapping[str, Any] | None = None
 
     @model_validator(mode="after")

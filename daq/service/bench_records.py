@@ -18,10 +18,11 @@ from daq.storage.bench import outcomes
 def set_up_of(rig: Rig) -> dict[str, str]:
     """Return what a record may hold for: chip, geometry, axes and devices, most of them as digests."""
     described = rig.model_dump(mode="json", by_alias=True)
+    dial = described["by_hand"]["detector"]
     parts = {
         "geometry": [described["geometry"], described["slits"]],
         "axes": described["axes"],
-        "devices": described["devices"],
+        "devices": [described["devices"], dial["now"]] if dial else described["devices"],
     }
     digests = {
         name: hashlib.sha256(json.dumps(part, sort_keys=True).encode()).hexdigest()[:16]

@@ -7,6 +7,7 @@ from collections.abc import Callable, Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from dataclasses import asdict, dataclass
 from datetime import UTC, datetime, timedelta
+from functools import partial
 from pathlib import Path
 from typing import Any, cast
 
@@ -27,7 +28,7 @@ from daq.service.software import software
 from daq.storage.bench import keep_state, kept_state, new_bench_folder, write_outcome
 from daq.storage.run import create_run
 from daq.tasks import Outcome, Setting, Task
-from daq.tasks.contract import Ask, Taken
+from daq.tasks.contract import Ask, Taken, Turn
 from daq.tasks.moves import FreeMask, mask_stage, taken
 from daq.tasks.picture import draw_task
 from daq.tasks.yardstick import yardstick
@@ -41,7 +42,7 @@ class Person:
 
     name: str = ""
     said: Callable[[str], None] = lambda text: None
-    turns: Callable[[str], None] = lambda text: None
+    turns: Callable[[Turn], Turn] = lambda turn: turn
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -161,11 +162,12 @@ def _measured(
         "visits_per_stand": 1,
     }
     planned = cast(Itinerary, _planned(asks, whole))
+    turned = partial(_turned, person, bench)
     with create_run(folder, texts=loaded.texts, itinerary=planned, meta=meta) as archive:
         try:
             first: int | None = 0
             while asks:
-                for one in taken(asks, devices, mask, archive, clock, first, person.turns):
+                for one in taken(asks, devices, mask, archive, clock, first, turned):
                     readings.append(one)
                     if len(readings) % 100 == 0:
                         person.said(f"{len(readings)} visits")
@@ -173,6 +175,15 @@ def _measured(
             return task.fit(setting, tuple(readings))
         finally:
             archive.finish({"ended_utc": stamp(clock.utc_ns())})
+
+
+def _turned(person: Person, bench: Bench | None, turn: Turn) -> Turn:
+    """Have a knob turned: by the person, or on a simulated bench as a person would."""
+    if bench is None:
+        return person.turns(turn)
+    person.said(f"on the simulated bench: {turn.text}")
+    bench.turn(turn.knob, turn.value)
+    return turn
 
 
 def _planned(asks: Sequence[Ask], whole: Itinerary) -> _Planned:

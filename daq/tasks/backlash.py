@@ -12,8 +12,7 @@ import numpy as np
 from scipy.special import ndtri
 
 from daq.estimate.arrays import FloatArray
-from daq.estimate.counting import true_rate_hz
-from daq.tasks.contract import Ask, Curve, Outcome, Panel, Setting, Taken, Task, counts_only, hopeless
+from daq.tasks.contract import Ask, Curve, Outcome, Panel, Setting, Taken, Task, counts_only, hopeless, once
 from daq.tasks.windows import ramp_mm
 
 REPEATS, DWELL_S, TAKE_UP_MM = 10, 1.0, 0.5
@@ -56,9 +55,7 @@ def _flanks(setting: Setting) -> dict[str, tuple[float, float]]:
     }
 
 
-def _asks(setting: Setting, taken: Sequence[Taken]) -> Sequence[Ask]:
-    if taken:
-        return ()
+def _visits(setting: Setting) -> Sequence[Ask]:
     place = float(setting.earlier["register"]["position_mm"])
     low, high = setting.rig.axes[setting.rig.mask.axis].limits_mm
     return [
@@ -124,8 +121,7 @@ def _fit(setting: Setting, taken: Sequence[Taken]) -> Outcome:
 def _places_mm(setting: Setting, name: str, counts: FloatArray, edge_mm: float) -> FloatArray:
     """Return how far from the flank each visit stood, from its counts on the edge [mm]."""
     known = setting.earlier["register"]["up"][name]
-    counter = setting.measurement.estimate
-    rate = true_rate_hz(counts / DWELL_S, counter.dead_time_s, counter.dead_time_kind)
+    rate = setting.true_hz(counts / DWELL_S)
     share = (rate * setting.earlier["register"]["gate_s"] - known["background"]) / known["height"]
     if not np.all((share > 0.02) & (share < 0.98)):
         raise hopeless(
@@ -143,6 +139,6 @@ TASK = Task(
     days=90,
     holds_for=("axes",),
     lacks=_lacks,
-    asks=_asks,
+    asks=once(_visits),
     fit=_fit,
 )

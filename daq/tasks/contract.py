@@ -6,17 +6,37 @@ from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field
 from typing import Any, Literal
 
+import numpy as np
 from scipy.stats import chi2 as chi2_distribution
 
 from daq.description import Measurement, Rig
 from daq.errors import DaqError
 from daq.estimate.arrays import FloatArray
+from daq.estimate.counting import true_rate_hz
 from daq.records import Reading
 from daq.tasks.yardstick import Yardstick
 
 Verdict = Literal["pass", "doubtful", "fail"]
 ODD_P = 1e-3  # a fit less probable than this is doubtful
+BENCH_VISIT = 6  # the reason of a visit (daq.records.REASONS)
 ANYWHERE = -1  # the opening of a visit that stands at a place of the mask instead
+
+
+Knob = Literal["detector", "attenuator", "room light"]
+
+
+@dataclass(frozen=True, slots=True)
+class Turn:
+    """What only a person may do: which knob to set, to what, in words; `caution` is told before.
+
+    `shown` is what the instrument itself then shows, where the person types it.
+    """
+
+    knob: Knob
+    value: float
+    text: str
+    caution: str = ""
+    shown: float | None = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -25,8 +45,8 @@ class Ask:
 
     An `opening` (bit mask), or `ANYWHERE` and the mask's own `place_mm`; `via_mm` is gone to first;
     `early` opens the gate as soon as nothing moves, without waiting for the stage to settle; with `events`
-    the fit gets the times of its counts, where the counter tells them; `turn` is what a person does before,
-    in words.
+    the fit gets the times of its counts, where the counter tells them; `turn` is what a person does before;
+    `reason` is one of `daq.records.REASONS`.
     """
 
     role: str
@@ -38,7 +58,8 @@ class Ask:
     beam: Literal["", "open", "shut"] = ""
     early: bool = False
     events: bool = False
-    turn: str = ""
+    turn: Turn | None = None
+    reason: int = BENCH_VISIT
 
 
 Taken = tuple[Ask, Reading]
@@ -53,6 +74,21 @@ class Setting:
     yardstick: Yardstick
     shutter: bool = False
     earlier: Mapping[str, Mapping[str, Any]] = field(default_factory=dict)  # task -> values of its record
+
+    @property
+    def open_beam(self) -> Literal["", "open"]:
+        """How the shutter has to stand where light is wanted."""
+        return "open" if self.shutter else ""
+
+    @property
+    def shut_beam(self) -> Literal["", "shut"]:
+        """How the shutter has to stand where none is wanted."""
+        return "shut" if self.shutter else ""
+
+    def true_hz(self, seen_hz: FloatArray) -> FloatArray:
+        """Return rates with the described dead time taken out [1/s]."""
+        known = self.measurement.estimate
+        return np.asarray(true_rate_hz(seen_hz, known.dead_time_s, known.dead_time_kind))
 
 
 @dataclass(frozen=True, slots=True)
@@ -92,6 +128,13 @@ class Outcome:
     dof: int | None = None
 
 
+def counts_only(setting: Setting) -> Sequence[str]:
+    """Return why a task that counts cannot be done on this rig; nothing when it can."""
+    if setting.measurement.estimate.counting == "counts":
+        return ()
+    return ("it needs counts, and this measurement reads power.",)
+
+
 @dataclass(frozen=True, slots=True)
 class Task:
     """One bench task.
@@ -105,9 +148,14 @@ class Task:
     purpose: str
     days: float
     holds_for: tuple[str, ...]
-    lacks: Callable[[Setting], Sequence[str]]
     asks: Callable[[Setting, Sequence[Taken]], Sequence[Ask]]
     fit: Callable[[Setting, Sequence[Taken]], Outcome]
+    lacks: Callable[[Setting], Sequence[str]] = counts_only
+
+
+def once(visits: Callable[[Setting], Sequence[Ask]]) -> Callable[[Setting, Sequence[Taken]], Sequence[Ask]]:
+    """Return the `asks` of a task that knows all its visits from the start."""
+    return lambda setting, taken: () if taken else visits(setting)
 
 
 def hopeless(task: str, what: str, remedy: str) -> DaqError:
@@ -127,13 +175,11 @@ def worst(*verdicts: Verdict) -> Verdict:
     return max(verdicts, key=("pass", "doubtful", "fail").index)
 
 
+def level(x: FloatArray, value: float, label: str) -> Curve:
+    """Return a value as a line across a picture."""
+    return Curve(x, np.full(len(x), value), label, line=True)
+
+
 def fits(chi2: float, dof: int) -> Verdict:
     """Return "doubtful" where chance alone is farther off less than once in a thousand."""
     return "pass" if dof < 1 or chi2_distribution.sf(chi2, dof) >= ODD_P else "doubtful"
-
-
-def counts_only(setting: Setting) -> Sequence[str]:
-    """Return why a task that counts cannot be done on this rig; nothing when it can."""
-    if setting.measurement.estimate.counting == "counts":
-        return ()
-    return ("it needs counts, and this measurement reads power.",)

@@ -7,7 +7,6 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from math import sqrt
-from typing import Literal
 
 import numpy as np
 
@@ -20,13 +19,15 @@ from daq.tasks.contract import (
     Setting,
     Taken,
     Task,
-    counts_only,
     fits,
+    level,
+    once,
 )
+from daq.tasks.turns import light_room, told_once
 
-DWELL_S, ROUNDS, PLACES = 10.0, 5, 5
+DWELL_S, ROUNDS, PLACES, ROOM_ROUNDS = 10.0, 5, 5, 2
 ONE_SIDED_95 = 1.645  # of a normal distribution
-CLOSED, DARK = "closed", "dark"
+CLOSED, DARK, NIGHT, LIT = "closed", "dark", "room at night", "room lit"
 
 
 def decision_and_limit(dark_hz: float, dark_s: float, closed_s: float) -> tuple[float, float]:
@@ -44,22 +45,28 @@ def decision_and_limit(dark_hz: float, dark_s: float, closed_s: float) -> tuple[
     return decision, ONE_SIDED_95**2 / closed_s + 2 * decision
 
 
-def _asks(setting: Setting, taken: Sequence[Taken]) -> Sequence[Ask]:
+def _visits(setting: Setting) -> Sequence[Ask]:
     """Return closed and dark visits in turn and back, at places over the range of the detector."""
-    if taken:
-        return ()
     places = np.linspace(*_range_mm(setting), PLACES)
     one = [CLOSED, DARK, DARK, CLOSED] if setting.shutter else [CLOSED, CLOSED]
-    return [
-        Ask(role, DWELL_S, float(place), 0, beam="" if not setting.shutter else _beam(role))
+    found = [
+        Ask(role, DWELL_S, float(place), 0, beam=setting.shut_beam if role == DARK else setting.open_beam)
         for _ in range(ROUNDS)
         for place in places
         for role in one
     ]
+    return [*found, *_room(setting, float(np.median(places)))]
 
 
-def _beam(role: str) -> Literal["open", "shut"]:
-    return "shut" if role == DARK else "open"
+def _room(setting: Setting, place_mm: float) -> Sequence[Ask]:
+    """Return visits with the room dark and lit, dark again at the end; none without a light to switch."""
+    if not setting.rig.by_hand.room_light:
+        return []
+    return told_once(
+        Ask(role, DWELL_S, place_mm, 0, beam=setting.open_beam, turn=light_room(role == LIT))
+        for _ in range(ROOM_ROUNDS)
+        for role in (NIGHT, LIT, LIT, NIGHT)
+    )
 
 
 def _range_mm(setting: Setting) -> tuple[float, float]:
@@ -69,6 +76,7 @@ def _range_mm(setting: Setting) -> tuple[float, float]:
 
 def _fit(setting: Setting, taken: Sequence[Taken]) -> Outcome:
     counts = {role: _counts(taken, role) for role in (CLOSED, DARK)}
+    room = {role: _counts(taken, role) for role in (NIGHT, LIT)}
     closed = counts[CLOSED]
     closed_hz, closed_se = _rate(closed)
     chi2, dof = _even(closed)
@@ -85,16 +93,20 @@ def _fit(setting: Setting, taken: Sequence[Taken]) -> Outcome:
     verdict = fits(chi2, dof)
     even = "even over place and time" if verdict == "pass" else "not even over place and time: look for light"
     apart = _apart(values, se, setting.shutter)
+    lit = _lit(taken, values, se)
     return Outcome(
         values=values,
         se=se,
         verdict=verdict,
         sentence=(
             f"With every slit shut the detector counts {closed_hz:.4g} +- {closed_se:.2g} a second{apart}; "
-            f"{even}."
+            f"{even}{lit}."
         ),
         model="even rate",
-        panels=(_panel(taken, counts),),
+        panels=(
+            _panel("Beam on and every slit shut; beam off", taken, counts),
+            *((_panel("The room", taken, room),) if len(room[LIT]) else ()),
+        ),
         chi2=chi2,
         dof=dof,
     )
@@ -105,6 +117,19 @@ def _apart(values: dict[str, float | None], se: dict[str, float | None], shutter
         return " (dark and light together: the rig has no shutter)"
     seen = "more" if (values["leak_hz"] or 0.0) > (values["decision_hz"] or 0.0) else "no more"
     return f", {values['dark_hz']:.4g} with the beam shut, so {seen} than dark"
+
+
+def _lit(taken: Sequence[Taken], values: dict[str, float | None], se: dict[str, float | None]) -> str:
+    """Add what the light of the room adds to values and errors, and return it in words."""
+    night, lit = (_counts(taken, role) for role in (NIGHT, LIT))
+    if not len(night) or not len(lit):
+        return ""
+    (night_hz, night_se), (lit_hz, lit_se) = _rate(night), _rate(lit)
+    adds_hz, adds_se = lit_hz - night_hz, sqrt(night_se**2 + lit_se**2)
+    decision_hz, _ = decision_and_limit(night_hz, night[:, 1].sum(), lit[:, 1].sum())
+    values["room_hz"], se["room_hz"] = adds_hz, adds_se
+    seen = "leave it off at night" if adds_hz > decision_hz else "which is not seen"
+    return f"; the room's light adds {adds_hz:.3g} +- {adds_se:.2g}, {seen}"
 
 
 def _counts(taken: Sequence[Taken], role: str) -> FloatArray:
@@ -126,7 +151,7 @@ def _even(counts: FloatArray) -> tuple[float, int]:
     return float(np.sum((counts[:, 0] - expected) ** 2 / expected)), len(counts) - 1
 
 
-def _panel(taken: Sequence[Taken], counts: dict[str, FloatArray]) -> Panel:
+def _panel(title: str, taken: Sequence[Taken], counts: dict[str, FloatArray]) -> Panel:
     curves = []
     for role, table in counts.items():
         if not len(table):
@@ -135,8 +160,8 @@ def _panel(taken: Sequence[Taken], counts: dict[str, FloatArray]) -> Panel:
         rate = table[:, 0] / table[:, 1]
         bars = np.sqrt(np.maximum(table[:, 0], 1.0)) / table[:, 1]
         curves.append(Curve(at, rate, role, bars))
-        curves.append(Curve(at, np.full(len(at), _rate(table)[0]), f"{role}, mean", line=True))
-    return Panel("Beam on and every slit shut; beam off", "visit", "counts a second", tuple(curves))
+        curves.append(level(at, _rate(table)[0], f"{role}, mean"))
+    return Panel(title, "visit", "counts a second", tuple(curves))
 
 
 TASK = Task(
@@ -144,7 +169,6 @@ TASK = Task(
     purpose="What the detector counts with the beam off, and what passes the mask with every slit shut.",
     days=1,
     holds_for=("chip", "devices"),
-    lacks=counts_only,
-    asks=_asks,
+    asks=once(_visits),
     fit=_fit,
 )

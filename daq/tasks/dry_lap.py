@@ -10,15 +10,13 @@ import numpy as np
 from daq.estimate.arrays import FloatArray
 from daq.itinerary import compose
 from daq.records import Quality
-from daq.tasks.contract import Ask, Curve, Outcome, Panel, Setting, Taken, Task
+from daq.tasks.contract import Ask, Curve, Outcome, Panel, Setting, Taken, Task, once
 
 GATE_S, LATE, LATE_S = 0.1, 0.05, 0.2
 ASTRAY = Quality.OFF_TARGET | Quality.MOVED
 
 
-def _asks(setting: Setting, taken: Sequence[Taken]) -> Sequence[Ask]:
-    if taken:
-        return ()
+def _visits(setting: Setting) -> Sequence[Ask]:
     plan = compose(setting.measurement, setting.rig)
     gate_s = max(GATE_S, setting.rig.shortest_gate_s)
     return [
@@ -27,7 +25,7 @@ def _asks(setting: Setting, taken: Sequence[Taken]) -> Sequence[Ask]:
             gate_s,
             float(plan.position_mm[at]),
             int(plan.opening[at]),
-            beam="shut" if setting.shutter else "",
+            beam=setting.shut_beam,
         )
         for at in np.flatnonzero(plan.lap == 0)
     ]
@@ -105,6 +103,6 @@ TASK = Task(
     days=1,
     holds_for=("axes",),
     lacks=lambda setting: (),
-    asks=_asks,
+    asks=once(_visits),
     fit=_fit,
 )

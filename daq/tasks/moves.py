@@ -9,9 +9,8 @@ from daq.errors import DeviceError
 from daq.ports import AxisState, Clock, Devices, Mask, Sink, Stage
 from daq.records import UNPLANNED, Quality, Reading, Visit
 from daq.sequencer import perform
-from daq.tasks.contract import Ask, Taken, hopeless
+from daq.tasks.contract import Ask, Taken, Turn, hopeless
 
-BENCH_VISIT = 6  # the reason of a visit (daq.records.REASONS)
 GRACE_S, POLL_NS = 10.0, 20_000_000
 
 
@@ -51,7 +50,7 @@ def taken(
     sink: Sink,
     clock: Clock,
     first: int | None,
-    person: Callable[[str], None],
+    turned: Callable[[Turn], Turn],
 ) -> Iterator[Taken]:
     """Yield every visit that is asked for with its reading, once that is durable.
 
@@ -59,8 +58,8 @@ def taken(
     ----------
     first
         Planned number of the first visit; None for visits that nobody had planned.
-    person
-        Asked to do what a visit wants of a person, and waited for.
+    turned
+        Has what only a person may do done, waits for it, and returns it with what was shown then.
 
     Raises
     ------
@@ -70,16 +69,15 @@ def taken(
         When a device does not do what it was asked.
     """
     hands = replace(devices, mask=mask)
-    for place, ask in enumerate(asks):
-        if ask.turn:
-            person(ask.turn)
+    for place, asked in enumerate(asks):
+        ask = asked if asked.turn is None else replace(asked, turn=turned(asked.turn))
         _beam(ask, devices, clock)
         mask.ask = ask
         if ask.via_mm is not None:
             _go(mask_stage(devices, mask), ask.via_mm, clock)
         number = UNPLANNED if first is None else first + place
         visit = Visit(number, ask.opening, ask.position_mm, ask.dwell_s)
-        for _, reading in perform([(visit, 1, BENCH_VISIT)], hands, sink, clock):
+        for _, reading in perform([(visit, 1, ask.reason)], hands, sink, clock):
             _refuse_overflow(reading)
             # events are in the archive; a watch of twenty minutes is not kept in memory count by count
             yield ask, reading if ask.events else replace(reading, events=None)

@@ -14,7 +14,7 @@ from daq.estimate.drift import structure_function
 from daq.itinerary import compose, forecast
 from daq.itinerary.pilot import HOUR_S, wander_of_counts
 from daq.itinerary.wander import Wander
-from daq.tasks.contract import Ask, Curve, Outcome, Panel, Setting, Taken, Task, counts_only, hopeless, within
+from daq.tasks.contract import Ask, Curve, Outcome, Panel, Setting, Taken, Task, hopeless, once, within
 
 SAMPLE_S, WATCH_S, LOOK_S = 1.0, 1200.0, 100.0
 LEAST = 25  # counts of a sample: below it the logarithm is no longer even
@@ -26,13 +26,9 @@ def with_pilot(measurement: Measurement, counts: Sequence[int], sample_s: float)
     return measurement.model_copy(update={"pilot": Pilot(sample_s=sample_s, counts=tuple(counts))})
 
 
-def _asks(setting: Setting, taken: Sequence[Taken]) -> Sequence[Ask]:
-    if taken:
-        return ()
+def _visits(setting: Setting) -> Sequence[Ask]:
     place, opening = setting.yardstick.position_mm, setting.yardstick.opening
-    return [Ask("watch", SAMPLE_S, place, opening, beam="open" if setting.shutter else "")] * round(
-        WATCH_S / SAMPLE_S
-    )
+    return [Ask("watch", SAMPLE_S, place, opening, beam=setting.open_beam)] * round(WATCH_S / SAMPLE_S)
 
 
 def _fit(setting: Setting, taken: Sequence[Taken]) -> Outcome:
@@ -106,7 +102,6 @@ TASK = Task(
     purpose="How the source wanders, and the dwell that suits it.",
     days=1,
     holds_for=("devices",),
-    lacks=counts_only,
-    asks=_asks,
+    asks=once(_visits),
     fit=_fit,
 )

@@ -10,7 +10,6 @@ from scipy.stats import norm
 
 from daq import openings
 from daq.estimate.arrays import FloatArray
-from daq.estimate.counting import true_rate_hz
 from daq.itinerary import expected_rates
 from daq.tasks.contract import Ask, Curve, Outcome, Panel, Setting, Taken, Task, counts_only, within, worst
 from daq.tasks.windows import NAME, Edges, clipped, named, plain, seen_windows, together, window
@@ -111,8 +110,7 @@ def _scan(setting: Setting, taken: Sequence[Taken], role: str) -> tuple[FloatArr
     """Return places and rates, the described dead time taken out, of one scan."""
     rows = [(ask.place_mm, reading.values[0] / reading.live_s) for ask, reading in taken if ask.role == role]
     table = np.array(sorted(rows), float)
-    known = setting.measurement.estimate
-    return table[:, 0], true_rate_hz(table[:, 1], known.dead_time_s, known.dead_time_kind)
+    return table[:, 0], setting.true_hz(table[:, 1])
 
 
 def _fit(setting: Setting, taken: Sequence[Taken]) -> Outcome:

@@ -9,7 +9,7 @@ import numpy as np
 from daq.description import Measurement, Rig
 from daq.estimate.arrays import FloatArray
 from daq.estimate.sensitivity import log_gradient
-from daq.itinerary import compose, forecast, plan_of
+from daq.itinerary import Itinerary, compose, forecast, plan_of
 
 SHARE = 0.3  # of the goal: what one systematic may take
 
@@ -30,6 +30,8 @@ class Yardstick:
         Rms relative error of the openings' rates, independent of one another, that makes `allowed`.
     per_dead_time
         Change of kappa for a dead time left over [1/s].
+    per_memory
+        Change of kappa for the share of the visit before that a visit also sees.
     position_mm, opening
         Where the mask's fullest opening is brightest, and that opening.
     brightest_hz
@@ -41,6 +43,7 @@ class Yardstick:
     load: dict[int, float]
     rate_error: float
     per_dead_time: float
+    per_memory: float
     position_mm: float
     opening: int
     brightest_hz: float
@@ -70,7 +73,20 @@ def yardstick(measurement: Measurement, rig: Rig) -> Yardstick:
         load=dict(zip(itinerary.openings.tolist(), by_opening.tolist(), strict=True)),
         rate_error=SHARE * goal / size,
         per_dead_time=float(-np.sum(gradient * rates)),
+        per_memory=float(np.sum(gradient * (_before(itinerary) / rates - 1))),
         position_mm=float(itinerary.positions_mm[place]),
         opening=int(itinerary.openings[fullest]),
         brightest_hz=float(rates[place, fullest]),
     )
+
+
+def _before(itinerary: Itinerary) -> FloatArray:
+    """Return the mean rate of the visits before those at each position and opening (J, K) [1/s]."""
+    place = itinerary.position_index
+    column = itinerary.opening_index
+    rates: FloatArray = itinerary.rates_hz
+    at, before = (place[1:], column[1:]), rates[place[:-1], column[:-1]]
+    total, visits = np.zeros_like(rates), np.zeros_like(rates)
+    np.add.at(total, at, before)
+    np.add.at(visits, at, 1.0)
+    return np.asarray(np.where(visits > 0, total / np.maximum(visits, 1.0), rates))

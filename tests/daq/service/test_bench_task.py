@@ -3,9 +3,11 @@
 from __future__ import annotations
 
 import json
+from collections.abc import Mapping
 from dataclasses import replace
 from datetime import UTC, datetime, timedelta
 from pathlib import Path
+from typing import Any
 
 import pytest
 
@@ -217,6 +219,8 @@ def test_the_monitor_of_the_bench_sees_nothing_of_its_mask(loaded: Loaded, tmp_p
     record = carry_out(task_of("monitor"), watched, tmp_path, Person())
 
     assert record["values"]["p"] > 1e-3
+    # 40 ns at 1e5 a second: the dead time bends it by that much
+    assert abs(record["values"]["bend"] + 0.004) < 4 * record["se"]["bend"]
     assert "nothing of the mask" in record["sentence"]
 
 
@@ -236,6 +240,57 @@ def test_a_saturated_detector_is_a_sentence_and_nothing_is_moved_further(
     assert record["verdict"] == "fail"
     assert "the detector is saturated. Take light away" in record["sentence"]
     assert len(open_visits(tmp_path / "bench" / record["record"])["visit"]) == 4
+
+
+def truly(loaded: Loaded, **bench: object) -> Loaded:
+    """Return the Lantern bench with another truth behind it."""
+    changes = {f"bench__{name}": value for name, value in bench.items()}
+    return replace(loaded, rig=lantern_rig(**changes))
+
+
+def test_plateau_has_the_dial_turned_and_finds_the_knee_of_the_bench(loaded: Loaded, tmp_path: Path) -> None:
+    said: list[str] = []
+
+    record = carry_out(task_of("plateau"), loaded, tmp_path, Person(said=said.append))
+    values = record["values"]
+
+    assert record["verdict"] == "pass"
+    assert values["begins"] == pytest.approx(870 + 2.326 * 15, abs=12.5)  # 1 % lost; half a step
+    assert abs(values["slope"] - 4e-5) < 4 * record["se"]["slope"]
+    assert said[1] == "on the simulated bench: Set the detector's bias to 1000 V."
+    assert record["asked"][3]["turn"]["value"] == 850.0
+
+
+def test_a_gain_that_sags_with_the_rate_is_seen_on_the_bench(loaded: Loaded, tmp_path: Path) -> None:
+    table = rig_table()["bench"]["detector"] | {"sag": 2.5e-4, "slope": 4e-4}
+
+    record = carry_out(task_of("plateau"), truly(loaded, detector=table), tmp_path, Person())
+
+    bright, dim = (_begins(record["values"], role) for role in ("bright_hz", "dim_hz"))
+    assert bright > dim + 25.0  # 3.6e5 a second take 90 V off what is set, 4e4 take 10
+
+
+def _begins(values: Mapping[str, Any], rates: str) -> float:
+    """Return the setting at which half of the top rate is reached on the way up."""
+    top = max(values[rates])
+    pairs = zip(values["settings"][1:], values[rates][1:], strict=True)
+    return float(next(at for at, rate in pairs if rate - values["dark_hz"][0] > top / 2))
+
+
+def test_crosstalk_finds_what_a_gate_of_the_bench_has_of_the_one_before(
+    loaded: Loaded, tmp_path: Path
+) -> None:
+    record = carry_out(task_of("crosstalk"), truly(loaded, memory=2e-3), tmp_path, Person())
+
+    assert record["verdict"] == "fail"
+    assert abs(record["values"]["memory"] - 2e-3) < 4 * record["se"]["memory"]
+
+
+def test_dark_tells_what_the_light_of_the_room_adds(loaded: Loaded, tmp_path: Path) -> None:
+    record = carry_out(task_of("dark"), loaded, tmp_path, Person())
+
+    assert abs(record["values"]["room_hz"] - 4e3) < 4 * record["se"]["room_hz"]
+    assert "leave it off at night" in record["sentence"]
 
 
 def test_a_device_that_falls_silent_ends_the_task_and_what_was_counted_is_kept(
@@ -258,5 +313,8 @@ def test_settle_finds_what_fades_after_a_move_of_the_bench(loaded: Loaded, tmp_p
     )
 
     # the first gate opens up to 10 ms after the mask has come to a stand: up to 7 % of it has faded
-    assert record["values"]["seen"]
-    assert 0.93 * 0.03 - 4 * record["se"]["size"] < record["values"]["size"] < 0.03 + 4 * record["se"]["size"]
+    values, se = record["values"], record["se"]["size"]
+    for stroke in ("long", "short"):
+        assert values["seen"][stroke]
+        assert 0.93 * 0.03 - 4 * se[stroke] < values["size"][stroke] < 0.03 + 4 * se[stroke]
+    assert (values["stroke_mm"], values["apart_p"] > 1e-3) == ({"long": 8.0, "short": 2.0}, True)

@@ -1,0 +1,242 @@
+"""Crosstalk: what a visit has of the one before, of the direction it is come to, and of slits that are shut.
+
+Stands there and back at the brightest place, then slits alone at both ends of the detector's travel, where
+little light of theirs should fall.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+from math import sqrt
+
+import numpy as np
+from scipy.stats import f as f_distribution
+from scipy.stats import norm
+
+from daq import openings
+from daq.description.measurement import Positions
+from daq.estimate.arrays import FloatArray
+from daq.itinerary import expected_rates
+from daq.tasks.contract import Ask, Curve, Outcome, Panel, Setting, Taken, Task, Verdict, level, once, worst
+from daq.tasks.stands import by_stand, there_and_back
+
+STANDS, DWELL_S = 60, 2.0
+FAR, FAR_ROUNDS, FAR_S = "far", 5, 10.0
+NOTED, DOUBTED = 3.0, 4.0  # standard errors
+DRIFT_POWERS = 2  # of time, in the log of the light from stand to stand
+
+
+@dataclass(frozen=True, slots=True)
+class Memory:
+    """The share of the visit before that a visit also sees, and what is left by direction and opening."""
+
+    share: float
+    se: float
+    direction: FloatArray  # log rate there less back, by opening (K,)
+    direction_se: FloatArray
+    p: float
+    chi2: float
+    dof: int
+
+
+def memory(counts: FloatArray, middle_s: FloatArray, before: FloatArray) -> Memory:
+    """Return the memory in counts of stands there and back (S, K), taken at times (S, K).
+
+    Parameters
+    ----------
+    before
+        Which opening (its column) was counted before each visit (S, K).
+
+    Notes
+    -----
+    n_v = r_v + beta (r_(v-1) - r_v), in shares of the stand, so that the light of a stand drops out; a steady
+    drift inside stands is taken from all of them. Openings have different ones before them there and back,
+    which is what tells beta from the rates. Errors grow with the root of chi2 over freedom above one.
+    """
+    stands, many = counts.shape
+    share = _shares(counts, middle_s)
+    mean = (share[::2].mean(axis=0) + share[1::2].mean(axis=0)) / 2
+    weight = mean / mean.sum() * counts.sum(axis=1).mean()  # counts of a visit
+    left = share / mean - 1
+    also = mean[before] / mean - 1
+    also = also - (also @ mean / mean.sum())[:, None]
+    also = also - also.mean(axis=0)
+    information = float(np.sum(weight * also**2))
+    beta = float(np.sum(weight * also * left)) / information
+    left = left - beta * also
+    chi2, dof = float(np.sum(weight * left**2)), (stands - 1) * (many - 1) - 1
+    wider = max(chi2 / dof, 1.0)
+    there_less_back = left[::2].mean(axis=0) - left[1::2].mean(axis=0)
+    se = np.sqrt(4 / (stands * weight) * wider)
+    odd = float(np.sum((there_less_back / se) ** 2)) / (many - 2)
+    p = float(f_distribution.sf(odd, many - 2, dof))
+    return Memory(beta, sqrt(wider / information), there_less_back, se, p, chi2, dof)
+
+
+def _shares(counts: FloatArray, middle_s: FloatArray) -> FloatArray:
+    """Return the counts of every visit as a share of its stand, a smooth drift over the stands taken out."""
+    time = middle_s - middle_s.mean()
+    curve = np.polyfit(time.mean(axis=1), np.log(counts.sum(axis=1)), DRIFT_POWERS)
+    even = counts / np.exp(np.polyval(curve, time))
+    return np.asarray(even / even.sum(axis=1, keepdims=True))
+
+
+def _visits(setting: Setting) -> Sequence[Ask]:
+    return [*there_and_back(setting, STANDS, DWELL_S), *_far(setting)]
+
+
+def _ends_mm(setting: Setting) -> tuple[float, float]:
+    return setting.rig.axes[setting.rig.detector.axis].limits_mm
+
+
+def _alone(setting: Setting) -> list[int]:
+    return [mask for mask in setting.rig.opening_masks if mask.bit_count() == 1]
+
+
+def _far(setting: Setting) -> list[Ask]:
+    shown = [0, *_alone(setting)]
+    return [
+        Ask(FAR, FAR_S, place, opening, beam=setting.open_beam)
+        for place in _ends_mm(setting)
+        for _ in range(FAR_ROUNDS)
+        for opening in (*shown, *shown[::-1])
+    ]
+
+
+def leaks(setting: Setting, taken: Sequence[Taken]) -> tuple[FloatArray, FloatArray]:
+    """Return the light beyond the described one of slits alone, against their mean, by end of travel (2, N).
+
+    With standard errors [1/s]: what leaks past shut slits is not alike for all of them.
+    """
+    alone = _alone(setting)
+    over, se = np.zeros((2, 2, len(alone)))
+    for end, place in enumerate(_ends_mm(setting)):
+        none_hz, none_var = _rate(setting, taken, place, 0)
+        for column, mask in enumerate(alone):
+            rate_hz, rate_var = _rate(setting, taken, place, mask)
+            over[end, column] = rate_hz - none_hz - _described_hz(setting, place, mask)
+            se[end, column] = sqrt(rate_var + none_var)
+    spread = np.sqrt(1 - 1 / len(alone))
+    return over - over.mean(axis=1, keepdims=True), se * spread
+
+
+def _described_hz(setting: Setting, place_mm: float, mask: int) -> float:
+    """Return the light of a slit alone as described [1/s], its pattern about its own middle."""
+    (slit,) = setting.rig.slits_of(mask).values()
+    here = Positions(list_mm=(place_mm - 1e3 * slit.centre_m,))
+    rates = expected_rates(setting.measurement.model_copy(update={"positions": here}), setting.rig)[0]
+    return float(rates[list(setting.rig.opening_masks).index(mask)] - rates[0])
+
+
+def _rate(setting: Setting, taken: Sequence[Taken], place_mm: float, opening: int) -> tuple[float, float]:
+    mine = [
+        r for ask, r in taken if ask.role == FAR and ask.position_mm == place_mm and ask.opening == opening
+    ]
+    counts, live_s = sum(r.values[0] for r in mine), sum(r.live_s for r in mine)
+    return float(setting.true_hz(np.asarray(counts / live_s))), max(counts, 1.0) / live_s**2
+
+
+def _memory(setting: Setting, taken: Sequence[Taken]) -> Memory:
+    stands = [one for one in taken if one[0].role != FAR]
+    masks = list(setting.rig.opening_masks)
+    rate = by_stand(setting, stands, lambda r: float(setting.true_hz(np.asarray(r.values[0] / r.live_s))))
+    live_s = by_stand(setting, stands, lambda r: r.live_s)
+    middle_s = by_stand(setting, stands, lambda r: (r.gate_open_ns + r.gate_close_ns) / 2e9)
+    order = [masks.index(ask.opening) for ask, _ in stands[: len(masks)]]
+    before = np.zeros(rate.shape, int)
+    for stand in range(len(rate)):
+        row = order if stand % 2 == 0 else order[::-1]
+        before[stand, row] = [row[0], *row[:-1]]
+    return memory(np.maximum(rate * live_s, 0.5), middle_s, before)
+
+
+def _fit(setting: Setting, taken: Sequence[Taken]) -> Outcome:
+    found, (over, over_se) = _memory(setting, taken), leaks(setting, taken)
+    per = setting.yardstick.per_memory
+    shift, shift_se = found.share * per, abs(found.se * per)
+    signs = {
+        "the memory": abs(found.share) / found.se,
+        "the direction": float(norm.isf(found.p / 2)),
+        "the light far out": float(np.max(np.abs(over / over_se))),
+    }
+    masks = [openings.name(mask) for mask in setting.rig.opening_masks]
+    alone = [openings.name(mask) for mask in _alone(setting)]
+    most = int(np.argmax(np.abs(found.direction / found.direction_se)))
+    end, slit = np.unravel_index(int(np.argmax(np.abs(over / over_se))), over.shape)
+    return Outcome(
+        values={
+            "memory": found.share,
+            "kappa_shift": shift,
+            "direction": dict(zip(masks, found.direction.tolist(), strict=True)),
+            "direction_p": found.p,
+            "far_hz": {name: over[:, at].tolist() for at, name in enumerate(alone)},
+            "far_mm": list(_ends_mm(setting)),
+        },
+        se={
+            "memory": found.se,
+            "kappa_shift": shift_se,
+            "direction": dict(zip(masks, found.direction_se.tolist(), strict=True)),
+            "far_hz": {name: over_se[:, at].tolist() for at, name in enumerate(alone)},
+        },
+        verdict=worst(_moves_kappa(shift, shift_se, setting.yardstick.allowed), _odd(signs)),
+        sentence=(
+            f"A visit sees {1e4 * found.share:+.1f} +- {1e4 * found.se:.1f} in 1e4 of the one before, which "
+            f"moves kappa by {shift:+.1e} +- {shift_se:.1e} ({setting.yardstick.allowed:.1e} allowed); "
+            f"{masks[most]} is off most there and back (p = {found.p:.2g} for all); of the slits alone, far "
+            f"out, {alone[slit]} is off most, {over[end, slit]:+.2g} +- {over_se[end, slit]:.2g} a "
+            f"second{_noted(signs)}."
+        ),
+        model="shares of stands there and back, a share of the visit before",
+        panels=_panels(found, masks, over, over_se, alone),
+        chi2=found.chi2,
+        dof=found.dof,
+    )
+
+
+def _moves_kappa(shift: float, se: float, allowed: float) -> Verdict:
+    """Return "fail" where kappa is moved for certain by more than is allowed."""
+    return "fail" if abs(shift) - NOTED * se > allowed else "pass"
+
+
+def _odd(signs: dict[str, float]) -> Verdict:
+    return "doubtful" if max(signs.values()) > DOUBTED else "pass"
+
+
+def _noted(signs: dict[str, float]) -> str:
+    odd = [f"{what} ({size:.1f} errors)" for what, size in signs.items() if size > NOTED]
+    return f"; look at {' and '.join(odd)}" if odd else ""
+
+
+def _panels(
+    found: Memory, masks: list[str], over: FloatArray, over_se: FloatArray, alone: list[str]
+) -> tuple[Panel, ...]:
+    at, slits = np.arange(float(len(masks))), np.arange(float(len(alone)))
+    ends = [
+        Curve(slits + 0.1 * end, over[end], f"{word} end of travel", over_se[end])
+        for end, word in enumerate(("lower", "upper"))
+    ]
+    return (
+        Panel(
+            "Openings there less back, the memory taken out",
+            ", ".join(masks),
+            "log, in 1e4",
+            (Curve(at, 1e4 * found.direction, "measured", 1e4 * found.direction_se), level(at, 0.0, "alike")),
+        ),
+        Panel(
+            "Slits alone far out, against the described light and their mean",
+            ", ".join(alone),
+            "counts a second",
+            (*ends, level(slits, 0.0, "as described")),
+        ),
+    )
+
+
+TASK = Task(
+    name="crosstalk",
+    purpose="What a visit has of the one before, of the direction it is come to, and of slits that are shut.",
+    days=30,
+    holds_for=("chip", "devices"),
+    asks=once(_visits),
+    fit=_fit,
+)
