@@ -34,11 +34,14 @@ def draw_task(path: Path, title: str, panels: Sequence[Panel]) -> None:
 
 def _panel(axes: Axes, panel: Panel) -> None:
     points = lines = 0
+    inks: dict[str, str] = {}  # of what was measured, by its label: a line "label, fit" has the same
     for curve in panel.curves:
         if curve.line:
-            axes.plot(curve.x, curve.y, LINES[lines % 4], color=INKS[(lines + 1) % 4], label=curve.label)
+            ink = inks.get(curve.label.rpartition(",")[0], INKS[(lines + 1) % 4])
+            axes.plot(curve.x, curve.y, LINES[lines % 4], color=ink, label=curve.label)
             lines += 1
             continue
+        inks[curve.label] = INKS[points % 4]
         style = {"marker": MARKERS[points % 4], "color": INKS[points % 4], "markersize": 3.5, "linestyle": ""}
         axes.errorbar(curve.x, curve.y, curve.bars, label=curve.label, elinewidth=0.8, **style)  # type: ignore[arg-type]
         points += 1

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Mapping, Sequence
 
 import numpy as np
 
@@ -98,3 +98,45 @@ def sums_sd_s(alone_hz: float, live_s: float) -> float:
     square.
     """
     return float(np.sqrt((2 + 2 / 9) / (8 / 3) ** 2) / (alone_hz**1.5 * np.sqrt(live_s)))
+
+
+PERIODS_MM = {"AB": 5.32, "BC": 5.32, "AC": 2.66}
+MIDDLE_MM, LOBE_MM, RANGE_MM = 0.11, 16.0, 25.6
+
+
+def scan_mm() -> np.ndarray:
+    """Return places of a scan with eight points a finest fringe [mm]."""
+    return np.linspace(-RANGE_MM / 2, RANGE_MM / 2, 79)
+
+
+def pair_counts(
+    visibility: float,
+    alone: float,
+    lobe_mm: float,
+    none: float = 0.0,
+    place_mm: np.ndarray | None = None,
+    lit: Mapping[str, float] | None = None,
+    periods_mm: Mapping[str, float] = PERIODS_MM,
+) -> dict[str, np.ndarray]:
+    """Return what is counted on average at every place of a scan, of none, slits and pairs."""
+    place_mm = scan_mm() if place_mm is None else place_mm
+    amplitude = np.sqrt(alone) * np.sinc(place_mm / lobe_mm)
+    each = {slit: amplitude * np.sqrt((lit or {}).get(slit, 1.0)) for slit in "ABC"}
+    found = {"none": np.full(len(place_mm), none)}
+    found |= {slit: one**2 + none for slit, one in each.items()}
+    for pair, period_mm in periods_mm.items():
+        a, b = (each[slit] for slit in pair)
+        wave = np.cos(2 * np.pi * (place_mm - MIDDLE_MM) / period_mm)
+        found[pair] = none + a**2 + b**2 + 2 * visibility * a * b * wave
+    return found
+
+
+def fringe_sd_mm(pair: str, counts: Mapping[str, np.ndarray], visibility: float) -> tuple[float, float]:
+    """Return the least standard errors of period and middle of a fringe of N counts in even light [mm].
+
+    L/(2 pi sqrt(N (1 - sqrt(1 - V^2)))) for the middle, sqrt(12) L / range of that for the period: the Fisher
+    information of n (1 + V cos) about its phase, integrated over whole fringes (derived).
+    """
+    period_mm, total = PERIODS_MM[pair], float(counts[pair[0]].sum() + counts[pair[1]].sum())
+    middle = period_mm / (2 * np.pi * np.sqrt(total * (1 - np.sqrt(1 - visibility**2))))
+    return float(np.sqrt(12) * period_mm / RANGE_MM * middle), float(middle)
