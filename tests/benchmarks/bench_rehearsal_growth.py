@@ -1,7 +1,8 @@
 """How the cost of a rehearsal grows with its visits: `python -m tests.benchmarks.bench_rehearsal_growth`.
 
 CPU of this process (in process, so that instruments and sequencer are in it), from 10^3 to 5 10^4 visits, or
-to 10^6 with `--whole`. Linear means that a visit more costs the same at every length.
+to 10^6 with `--whole`. Linear means that a visit more costs the same at every length, in units of a yardstick
+(JSON of a list of numbers) that is timed just before and after: a shared machine is not always as fast.
 """
 
 from __future__ import annotations
@@ -29,6 +30,14 @@ def night(folder: Path, laps: int) -> Path:
     return file
 
 
+def yardstick_us() -> float:
+    """Return the CPU time of a piece of work that is always the same [us]."""
+    numbers, begun = list(range(100)), time.process_time()
+    for _ in range(40_000):
+        json.dumps(numbers)
+    return (time.process_time() - begun) / 40_000 * 1e6
+
+
 def cost_s(file: Path, lab: Path) -> tuple[float, float, int]:
     """Return CPU and wall time of a rehearsal [s], and its visits."""
     out, begun, wall = io.StringIO(), time.process_time(), time.perf_counter()
@@ -49,9 +58,10 @@ def growth() -> None:
         )
         before = (0.0, 0)
         for many in laps:
+            early_us = yardstick_us()
             cpu_s, wall_s, visits = cost_s(night(folder, many), folder / "lab")
             more_us = (cpu_s - before[0]) / (visits - before[1]) * 1e6
-            each = f"a visit more {more_us:.0f} us CPU"
+            each = f"a visit more {more_us:.0f} us CPU, {2 * more_us / (early_us + yardstick_us()):.0f} yardsticks"
             print(f"{visits:8} visits: CPU {cpu_s:7.1f} s, wall {wall_s:7.1f} s; {each}", flush=True)
             before = (cpu_s, visits)
 

@@ -1,6 +1,8 @@
 import json
+import math
 from collections import Counter
 from dataclasses import replace
+from itertools import pairwise
 
 import pytest
 
@@ -30,10 +32,10 @@ META = {
 }
 
 
-def a_night(folder, fault=no_fault, **changes):
+def a_night(folder, fault=no_fault, laps=4, **changes):
     # about as many counts as the stand-in gives, so that nothing has to be warned of
     expect = {"expect__single_slit_rate_hz": 250.0, "expect__background_rate_hz": 0.0}
-    measurement = lantern(itinerary__laps=4, positions__number=3, **expect, **changes)
+    measurement = lantern(itinerary__laps=laps, positions__number=3, **expect, **changes)
     itinerary = compose(measurement, lantern_rig())
     bench = MemoryBench(VirtualClock(origin_utc_ns=0), fault)
     night = Night(
@@ -263,6 +265,19 @@ def test_the_feed_tells_the_run_as_it_stands(tmp_path):
     assert feed["ended"]["reason"] == COMPLETE
     assert feed["log"][0]["text"] == "Run begins at visit 0."
     assert len(json.dumps(feed)) < 20_000
+
+
+def test_the_estimate_is_asked_after_every_lap_of_a_night_and_more_rarely_in_a_long_run(tmp_path):
+    night, bench = a_night(tmp_path, laps=200)
+    asked_after: list[float] = []
+    night.live.watcher.know = lambda figures: asked_after.append(len(bench.sink.kept) / 24)
+
+    carry_out(night, Place(0))
+
+    assert asked_after[:64] == list(range(1, 65))
+    assert all(late <= early * (1 + 1 / 64) + 1 for early, late in pairwise(asked_after))
+    assert len(asked_after) <= 64 * (1 + math.log(200 / 64)) + 1  # each time the run is longer by a 64th
+    assert asked_after[-1] == 200
 
 
 def test_a_request_cuts_a_pause_short_and_the_run_ends_after_the_stand_that_follows(tmp_path):
