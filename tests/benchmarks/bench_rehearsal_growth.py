@@ -61,7 +61,8 @@ def growth() -> None:
             early_us = yardstick_us()
             cpu_s, wall_s, visits = cost_s(night(folder, many), folder / "lab")
             more_us = (cpu_s - before[0]) / (visits - before[1]) * 1e6
-            each = f"a visit more {more_us:.0f} us CPU, {2 * more_us / (early_us + yardstick_us()):.0f} yardsticks"
+            stick_us = (early_us + yardstick_us()) / 2
+            each = f"a visit more {more_us:.0f} us CPU, {more_us / stick_us:.0f} yardsticks"
             print(f"{visits:8} visits: CPU {cpu_s:7.1f} s, wall {wall_s:7.1f} s; {each}", flush=True)
             before = (cpu_s, visits)
 
