@@ -12,6 +12,7 @@ from pathlib import Path
 from typing import Any
 
 from dash.exceptions import PreventUpdate
+from plotly.io.json import to_json_plotly
 
 from daq.errors import StorageError
 from daq.storage.people import NOBODY, Person
@@ -68,7 +69,7 @@ def news(
         raise PreventUpdate
     parts, digests = _parts(scene)
     fresh = {name: part for name, part in parts.items() if seen.get(name) != digests[name]}
-    return {name: render(name, part) for name, part in fresh.items()} | {"seen": digests | {"mark": mark}}
+    return fresh | {"seen": digests | {"mark": mark}}
 
 
 @dataclass(frozen=True, slots=True)
@@ -102,13 +103,14 @@ def _scene(folder: Path, run: str | None, chosen: Any, now: datetime, person: Pe
 
 @lru_cache(maxsize=32)
 def _parts(scene: _Scene) -> tuple[dict[str, Any], dict[str, str]]:
-    """Return the parts of the page and their digests; twenty pages of one run cost as much as one."""
+    """Return the parts of the page as plain data, and their digests: twenty browsers cost as one does."""
     runs = [{"name": name, "shown": name == scene.run} for name in reversed(scene.names)]
     parts = _said(scene) | {
         "runs": runs,
         "desk": desk_view(scene.desk, scene.person, requests_of(scene.folder, "")),
     }
-    return parts, {name: _digest(part) for name, part in parts.items()}
+    plain = json.loads(to_json_plotly({name: render(name, part) for name, part in parts.items()}))
+    return plain, {name: _digest(part) for name, part in parts.items()}
 
 
 def _said(scene: _Scene) -> dict[str, Any]:
