@@ -11,7 +11,7 @@ from typing import Any
 
 from daq.errors import DaqError
 from daq.scale.job import Job, code_version, drawn
-from daq.scale.study import Block, Failed, Outcome
+from daq.scale.study import Block, Failed, Outcome, why
 
 OUTSTANDING = 8  # blocks a worker that wait at the scheduler at any time
 ANSWERS_WITHIN_S = 10.0
@@ -23,7 +23,9 @@ RETRIES = 1  # of a block that raised; those that killed their worker are tried 
 class Cluster:
     """A runner for `carry_out`; holds workers of its own, or the way to those at an address."""
 
-    def __init__(self, workers: int = 0, address: str | None = None) -> None:
+    def __init__(
+        self, workers: int = 0, address: str | None = None, answers_within_s: float = ANSWERS_WITHIN_S
+    ) -> None:
         if find_spec("distributed") is None:
             raise DaqError(
                 "workers need the package distributed",
@@ -32,7 +34,7 @@ class Cluster:
         os.environ.setdefault("OMP_NUM_THREADS", "1")
         self._stack = ExitStack()
         try:
-            self._client = self._stack.enter_context(_client(self._stack, workers, address))
+            self._client = self._stack.enter_context(_client(self._stack, workers, address, answers_within_s))
         except BaseException:
             self._stack.close()
             raise
@@ -114,14 +116,14 @@ def _home(future: Any, block: Block) -> Outcome:
     except CancelledError as error:
         raise _gone() from error
     except Exception as error:  # what the kernel raised on the worker
-        return Failed(*block, f"{type(error).__name__}: {error}")
+        return Failed(*block, why(error))
 
 
 def _gone() -> DaqError:
     return DaqError("the scheduler has gone", remedy="What is drawn is kept: give the same command again")
 
 
-def _client(stack: ExitStack, workers: int, address: str | None) -> Any:
+def _client(stack: ExitStack, workers: int, address: str | None, within_s: float) -> Any:
     import logging
 
     import dask
@@ -130,7 +132,7 @@ def _client(stack: ExitStack, workers: int, address: str | None) -> Any:
     for name in ("tornado.application", *logging.root.manager.loggerDict):
         if name.startswith(("distributed", "tornado")):  # some of them have levels and handlers of their own
             logging.getLogger(name).setLevel(logging.CRITICAL)
-    dask.config.set({"distributed.comm.timeouts.connect": f"{ANSWERS_WITHIN_S}s"})
+    dask.config.set({"distributed.comm.timeouts.connect": f"{within_s}s"})
     if address is None:
         own = LocalCluster(
             n_workers=workers,
@@ -143,8 +145,8 @@ def _client(stack: ExitStack, workers: int, address: str | None) -> Any:
         address = stack.enter_context(own).scheduler_address
         own.adapt(minimum=workers, maximum=workers)  # a nanny that gives up is replaced
     try:
-        client = Client(address, timeout=ANSWERS_WITHIN_S)
-        client.wait_for_workers(1, timeout=ANSWERS_WITHIN_S)
+        client = Client(address, timeout=within_s)
+        client.wait_for_workers(1, timeout=within_s)
     except (OSError, TimeoutError, ValueError) as error:
         raise DaqError(
             "no cluster with workers answers here",

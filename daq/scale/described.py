@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import tomllib
-from collections.abc import Mapping
+from collections.abc import Iterator, Mapping
 from pathlib import Path
 from typing import Annotated, Any, Literal
 
@@ -12,14 +12,17 @@ from pydantic import Field, ValidationError
 from daq.description.problems import Table, every_problem
 from daq.devices.files import with_dialects
 from daq.errors import DescriptionError
-from daq.service.load import load
+from daq.scale.job import KNOWN
+from daq.service.files import changed
+from daq.service.load import FAULTS, Wishes, load
 
 
 class Study(Table):
     """A study: `kernel` draws so many times, each with its own seed; `block` draws go to a worker at once.
 
-    `measurement` is a path beside the file; `changes` are laid over it by dotted key; `parameters` are for a
-    kernel of your own.
+    `measurement` is a path beside the file; `changes` are laid over it by dotted key. `vary` names one such
+    key and its values, each a study of its own with the same seeds. `parameters` are for a kernel of your
+    own.
     """
 
     schema_: Literal[1] = Field(alias="schema")
@@ -32,11 +35,12 @@ class Study(Table):
     hours: Annotated[float, Field(gt=0)] | None = None
     faults: str | None = None
     changes: Mapping[str, Any] = {}
+    vary: Annotated[Mapping[str, tuple[str | int | float | bool, ...]], Field(max_length=1)] = {}
     parameters: Mapping[str, Any] = {}
 
 
-def read_study(path: Path) -> tuple[Study, dict[str, Any]]:
-    """Return a study and what its kernel is given.
+def read_study(path: Path) -> tuple[Study, dict[str, dict[str, Any]]]:
+    """Return a study, and what its kernel is given, by what is varied ("" where nothing is).
 
     Raises
     ------
@@ -48,51 +52,43 @@ def read_study(path: Path) -> tuple[Study, dict[str, Any]]:
         study = Study.model_validate(table)
     except ValidationError as error:
         raise DescriptionError(every_problem(error, Study, table, str(path))) from error
-    if study.kernel == "synthetic":
-        return study, dict(study.parameters) | _tables(study, path)
-    if study.kernel == "rehearsed":
-        return study, dict(study.parameters) | _texts(study, path)
-    return study, dict(study.parameters)
+    return study, {told: _given(study, changes, path) for told, changes in _variants(study)}
 
 
-def _tables(study: Study, path: Path) -> dict[str, Any]:
-    """Return measurement and rig as tables, changes laid over."""
+def _variants(study: Study) -> Iterator[tuple[str, dict[str, Any]]]:
+    """Yield what is changed, with its name."""
+    if not study.vary:
+        yield "", dict(study.changes)
+    for key, values in study.vary.items():
+        for value in values:
+            yield f"{key} = {value}", dict(study.changes) | {key: value}
+
+
+def _given(study: Study, changes: Mapping[str, Any], path: Path) -> dict[str, Any]:
+    """Return what a kernel is given: files as text or tables, since a worker elsewhere has no way to them."""
+    given = dict(study.parameters)
+    if study.kernel not in KNOWN:
+        return given | ({"changes": changes} if changes else {})
     file = _measurement(study, path)
-    load(file)  # every problem of both at once
-    table = _changed(_toml(file), study.changes)
-    rig, _ = with_dialects(_toml(file.parent / str(table["rig"])), (file.parent / str(table["rig"])).parent)
-    return {"measurement": table, "rig": rig}
-
-
-def _texts(study: Study, path: Path) -> dict[str, Any]:
-    """Return the files of the description as text: a worker elsewhere has no other way to them."""
-    if study.changes:
-        raise DescriptionError((f"{path}, changes: for kernel 'synthetic' only. Change a copy of the file.",))
-    loaded = load(_measurement(study, path))
-    texts = {name: text.decode() for name, text in loaded.texts.items()}
-    table = tomllib.loads(texts["description.toml"])
-    texts["description.toml"] = texts["description.toml"].replace(f'"{table["rig"]}"', '"rig.toml"')
-    found: dict[str, Any] = {"texts": texts, "measurement": "description.toml", "hours": study.hours}
+    loaded = load(file, Wishes(hours=study.hours), changes=changes)
+    if study.kernel == "rehearsed":
+        texts = {name: text.decode() for name, text in loaded.texts.items()}
+        if study.faults is not None:
+            texts[FAULTS] = _read(path.parent / study.faults).decode()
+        return given | {"texts": texts, "changes": dict(changes), "hours": study.hours}
     if study.faults is not None:
-        found["texts"]["faults.toml"] = _read(path.parent / study.faults).decode()
-        found["faults"] = "faults.toml"
-    return found
+        raise DescriptionError((f"{path}, faults: for kernel 'rehearsed' only. Take it out.",))
+    table = changed(_toml(file), changes)
+    if study.hours is not None:
+        table["itinerary"]["laps"] = loaded.measurement.itinerary.laps
+    rig = file.parent / table["rig"]
+    return given | {"measurement": table, "rig": with_dialects(_toml(rig), rig.parent)[0]}
 
 
 def _measurement(study: Study, path: Path) -> Path:
     if study.measurement is None:
         raise DescriptionError((f"{path}, measurement: kernel {study.kernel!r} needs one. Name its file.",))
     return path.parent / study.measurement
-
-
-def _changed(table: dict[str, Any], changes: Mapping[str, Any]) -> dict[str, Any]:
-    for dotted, value in changes.items():
-        *path, last = dotted.split(".")
-        inner = table
-        for key in path:
-            inner = inner.setdefault(key, {})
-        inner[last] = value
-    return table
 
 
 def _toml(path: Path) -> dict[str, Any]:

@@ -58,9 +58,13 @@ class Job:
 
 
 def job_of(kernel: str, parameters: Mapping[str, Any], entropy: int, draws: int) -> Job:
-    """Return a job, with the names and the number of rows that its first draw shows."""
+    """Return a job; its columns are told by its module (`COLUMNS`), or shown by its first draw."""
     name = KNOWN.get(kernel, kernel)
     text = json.dumps(dict(parameters), sort_keys=True)
+    _kernel(name)
+    told = getattr(import_module(name.partition(":")[0]), "COLUMNS", None)
+    if told is not None:
+        return Job(name, text, entropy, draws, tuple(told))
     first = _one(name, text, entropy, 0)
     rows = {len(np.atleast_1d(values)) for values in first.values()}
     if len(rows) != 1:

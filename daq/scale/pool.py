@@ -128,8 +128,7 @@ def _read(runs: Sequence[str], runner: Runner) -> Iterator[tuple[str, bytes | st
     for outcome in runner(job, ((at, 1) for at in range(len(runs)))):
         if isinstance(outcome, Failed):
             run = runs[outcome.first]
-            sentence = outcome.why.removeprefix("StorageError: ")
-            yield run, sentence if run in sentence else f"{run}: {sentence}"
+            yield run, outcome.why if run in outcome.why else f"{run}: {outcome.why}"
         else:
             (first, _), night = outcome
             yield runs[first], night

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 import tempfile
 from collections.abc import Mapping
 from pathlib import Path
@@ -11,38 +12,52 @@ import numpy as np
 
 from daq.errors import DaqError
 from daq.estimate import estimate_run
-from daq.service.load import Wishes, load
+from daq.service.load import FAULTS, Wishes, load_changed
 from daq.service.night import COMPLETE
 from daq.service.start import Wanted, begin
 from daq.storage.reader import open_visits
 
+COLUMNS = (
+    *("complete", "visits", "pairs", "stands_left_out"),
+    *("kappa", "kappa_se", "truth_kappa", "covered_95"),
+)
+SEED = re.compile(r"^\s*seed\s*=.*$", re.MULTILINE)
+
 
 def night(parameters: Mapping[str, Any], generator: np.random.Generator) -> dict[str, float]:
-    """Return what one rehearsed night came to; one that was broken off has no kappa.
+    """Return what one rehearsed night came to; one that was broken off has what its pairs say.
 
     Parameters
     ----------
     parameters
-        `texts`: name -> contents of the description's files; `measurement`: which of them; `hours`; `faults`.
+        `texts`: name -> contents of the description's files, a fault script among them or not; `changes` laid
+        over by dotted key; `hours`.
     """
-    seed = int(generator.integers(0, 2**31))
+    bench, faults = (int(seed) for seed in generator.integers(0, 2**31, 2))
     with tempfile.TemporaryDirectory() as place:
         folder = Path(place)
         for name, text in parameters["texts"].items():
             path = folder / name
             path.parent.mkdir(parents=True, exist_ok=True)
-            path.write_text(text)
-        loaded = load(folder / parameters["measurement"], Wishes(hours=parameters.get("hours"), seed=seed))
-        if parameters.get("faults"):
-            loaded = loaded.with_faults(folder / parameters["faults"])
+            path.write_text(reseeded(text, faults) if name == FAULTS else text)
+        wishes = Wishes(hours=parameters.get("hours"), seed=bench)
+        loaded = load_changed(folder, parameters.get("changes", {}), wishes)
+        if FAULTS in parameters["texts"]:
+            loaded = loaded.with_faults(folder / FAULTS)
         began: list[Path] = []
+        wanted = Wanted("direct", on_start=lambda run, _: began.append(run))
         try:
-            run, ended = begin(
-                loaded, folder / "lab", Wanted("direct", on_start=lambda at, _: began.append(at))
-            )
+            run, ended = begin(loaded, folder / "lab", wanted)
         except DaqError:
+            if not began:
+                raise
             run, ended = began[0], ""
         return _figures(run, ended == COMPLETE)
+
+
+def reseeded(script: str, seed: int) -> str:
+    """Return a fault script whose faults come at other moments."""
+    return f"seed = {seed}\n{SEED.sub('', script, count=1)}"
 
 
 def _figures(run: Path, complete: bool) -> dict[str, float]:

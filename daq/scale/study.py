@@ -46,7 +46,12 @@ def here(job: Job, blocks: Iterable[Block]) -> Iterator[Outcome]:
         try:
             yield (first, count), drawn(job, first, count)
         except Exception as error:  # whatever a kernel raises: the other blocks are not to blame
-            yield Failed(first, count, f"{type(error).__name__}: {error}")
+            yield Failed(first, count, why(error))
+
+
+def why(error: Exception) -> str:
+    """Return what a kernel raised, as a sentence where it is one of ours."""
+    return str(error) if isinstance(error, DaqError) else f"{type(error).__name__}: {error}"
 
 
 def carry_out(

@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+import copy
 import tomllib
+from collections.abc import Mapping
 from pathlib import Path
 from typing import Any
 
@@ -24,3 +26,23 @@ def read_table(text: bytes, path: Path) -> dict[str, Any]:
         return tomllib.loads(text.decode())
     except (UnicodeDecodeError, tomllib.TOMLDecodeError) as error:
         raise DescriptionError((f"{path}: not a TOML file: {error}. Mend it there.",)) from error
+
+
+def changed(table: Mapping[str, Any], changes: Mapping[str, Any]) -> dict[str, Any]:
+    """Return a table with changes laid over it by dotted key ("estimate.dead_time_s").
+
+    Raises
+    ------
+    DescriptionError
+        When a key leads through what is no table.
+    """
+    found = copy.deepcopy(dict(table))
+    for key, value in changes.items():
+        *tables, name = key.split(".")
+        inner = found
+        for one in tables:
+            inner = inner.setdefault(one, {})
+            if not isinstance(inner, dict):
+                raise DescriptionError((f"{key}: {one} is no table that could be changed. Mend the key.",))
+        inner[name] = value
+    return found

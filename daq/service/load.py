@@ -10,13 +10,14 @@ from dataclasses import dataclass, replace
 from hashlib import sha256
 from importlib import resources
 from pathlib import Path
+from types import MappingProxyType
 from typing import Any
 
 from daq.description import Measurement, Rig, joint_problems, parse
 from daq.devices.files import with_dialects
 from daq.errors import DescriptionError
 from daq.itinerary import Itinerary, compose
-from daq.service.files import read_file, read_table
+from daq.service.files import changed, read_file, read_table
 
 DESCRIPTION, RIG, FAULTS, LEVELS = "description.toml", "rig.toml", "faults.toml", "levels.json"
 LONGEST_H = 10_000
@@ -107,8 +108,15 @@ def config_dir() -> Path:
     return packaged if packaged.is_dir() else Path(str(resources.files("daq"))).parent / "configs"
 
 
-def load(path: Path, wishes: Wishes = NO_WISHES, rig: Path | None = None) -> Loaded:
+def load(
+    path: Path,
+    wishes: Wishes = NO_WISHES,
+    rig: Path | None = None,
+    changes: Mapping[str, Any] = MappingProxyType({}),
+) -> Loaded:
     """Return a measurement and its rig from their files; `rig` takes the place of the rig that it names.
+
+    `changes` are laid over the measurement by dotted key ("estimate.dead_time_s"); its text is as it was.
 
     Raises
     ------
@@ -116,7 +124,7 @@ def load(path: Path, wishes: Wishes = NO_WISHES, rig: Path | None = None) -> Loa
         With every problem of both files at once.
     """
     text = read_file(path)
-    table = read_table(text, path)
+    table = changed(read_table(text, path), changes)
     rig_name = table.get("rig")
     rig_path = rig or (path.parent / rig_name if isinstance(rig_name, str) else None)
     return _loaded(table, text, path, rig_path, wishes)
@@ -144,16 +152,7 @@ def load_run(folder: Path, wishes: Wishes) -> Loaded:
 
 def load_changed(folder: Path, changes: Mapping[str, Any], wishes: Wishes = NO_WISHES) -> Loaded:
     """Return the description of a run with some keys ("estimate.dead_time_s") changed; its copies are not."""
-    path = folder / DESCRIPTION
-    text = read_file(path)
-    table = read_table(text, path)
-    for key, value in changes.items():
-        *tables, name = key.split(".")
-        inner = table
-        for one in tables:
-            inner = inner.setdefault(one, {})
-        inner[name] = value
-    return _loaded(table, text, path, folder / RIG, wishes)
+    return load(folder / DESCRIPTION, wishes, folder / RIG, changes)
 
 
 def _loaded(table: dict[str, Any], text: bytes, path: Path, rig_path: Path | None, wishes: Wishes) -> Loaded:

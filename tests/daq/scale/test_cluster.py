@@ -132,9 +132,9 @@ def test_an_address_that_nobody_answers_is_said() -> None:
     began_s = time.monotonic()
 
     with pytest.raises(DaqError, match="no cluster with workers answers here"):
-        Cluster(address=free_address())
+        Cluster(address=free_address(), answers_within_s=1.0)
 
-    assert time.monotonic() - began_s < 60
+    assert time.monotonic() - began_s < 10
 
 
 def test_workers_of_another_version_are_refused_before_they_draw(tmp_path: Path) -> None:

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import json
 import shutil
 import zipfile
 from collections.abc import Iterable, Iterator
@@ -29,11 +28,11 @@ from daq.scale.study import Block, Outcome, here
 from daq.storage.elsewhere import open_finished
 from daq.storage.pack import pack_zip
 from daq.storage.reader import open_visits
-from tests.daq.scale.outside import free_address
+from tests.daq.scale.answers import answer
 from tests.examples import CONFIGS, changed, measurement_table
 
 NIGHTS = 3
-SMALL = {"positions__number": 5, "itinerary__laps": 12, "itinerary__dwell_s": 0.5, "estimate__goal_se": 1e-3}
+SMALL = {"positions__number": 3, "itinerary__laps": 6, "itinerary__dwell_s": 0.5, "estimate__goal_se": 1e-3}
 
 
 def rehearsed(lab: Path, seed: int, **more: Any) -> Path:
@@ -50,12 +49,6 @@ def rehearsed(lab: Path, seed: int, **more: Any) -> Path:
 def nights(tmp_path_factory: pytest.TempPathFactory) -> list[Path]:
     lab = tmp_path_factory.mktemp("pool") / "lab"
     return [rehearsed(lab, seed) for seed in range(NIGHTS)]
-
-
-def answer(capsys: pytest.CaptureFixture[str], *words: str) -> tuple[int, dict[str, Any]]:
-    capsys.readouterr()
-    status = main([*words, "--json"])
-    return status, json.loads(capsys.readouterr().out)
 
 
 def test_runs_are_pooled_as_their_estimates_are(nights, capsys):
@@ -315,8 +308,8 @@ def test_a_forest_is_drawn(nights, tmp_path, capsys, ending):
     assert picture.stat().st_size > 5_000
 
 
-def test_a_cluster_that_nobody_answers_is_a_sentence(nights, capsys):
-    status, found = answer(capsys, "pool", *map(str, nights), "--cluster", free_address())
+def test_an_address_that_is_none_is_a_sentence(nights, capsys):
+    status, found = answer(capsys, "pool", *map(str, nights), "--cluster", "nowhere://here")
 
     assert status == 1
     assert "no cluster with workers answers here" in found["problems"][0]
