@@ -16,7 +16,7 @@ class _Key(ISeedSequence):
 
     def generate_state(self, n_words: int, dtype: object = np.uint32) -> np.ndarray:
         """Return the two words of a Philox key."""
-        return self._words
+        return self._words[:n_words]
 
 
 def generator(seed: int, use: str, number: int) -> np.random.Generator:
