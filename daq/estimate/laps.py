@@ -15,6 +15,7 @@ from daq.estimate.plan import Plan
 from daq.estimate.quality import Rules, fingerprint
 
 LAPS_TO_SCALE = 6  # from here the night's own median counts
+DARK_ROUNDS = 4  # of finding dark counts and the source's strength from each other: both settle at once
 
 
 class Laps:
@@ -80,7 +81,9 @@ class Laps:
         if not (self._exposure > 0).all():
             return []
         counts, exposure = self._counts.sum(axis=0), self._exposure.sum(axis=0)
-        match = fingerprint(counts, exposure, self._earlier, self._earlier_exposure)
+        match = fingerprint(
+            counts, self._as_the_source(counts, exposure), self._earlier, self._earlier_exposure
+        )
         odd, found = match.beyond(self._rules.lap_p, self._spread.scale), []
         if odd:
             ratio = counts / exposure * self._earlier_exposure / self._earlier
@@ -94,6 +97,24 @@ class Laps:
         self._earlier += counts
         self._earlier_exposure += exposure
         return found
+
+    def _as_the_source(self, counts: FloatArray, exposure: FloatArray) -> FloatArray:
+        """Return exposures with which a lap compares as if all that it counts followed the source.
+
+        Dark counts do not: as the source falls, every opening falls less than the light, `none` least of all.
+        How many of the counts of `none` are dark is read from them; from none to all of them may be.
+        """
+        if not self._earlier.all() or self._plan.openings[0]:
+            return exposure
+        rate_hz, dark_hz, strength = self._earlier / self._earlier_exposure, 0.0, 1.0
+        for _ in range(DARK_ROUNDS):
+            light = float(counts.sum() - dark_hz * exposure.sum())
+            strength = light / float((rate_hz - dark_hz) @ exposure)
+            if strength in (0.0, 1.0):
+                return exposure
+            apart_hz = float(counts[0] / exposure[0] - strength * rate_hz[0])
+            dark_hz = min(max(apart_hz / (1 - strength), 0.0), float(rate_hz[0]))
+        return np.asarray(exposure * (1 + (1 - strength) * dark_hz / (strength * rate_hz)))
 
     def _name(self, opening: int) -> str:
         return openings.name(int(self._plan.openings[opening]))

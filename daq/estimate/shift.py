@@ -11,7 +11,7 @@ import numpy as np
 from daq.estimate.arrays import FloatArray
 
 K, H = 0.5, 9.06  # a CUSUM of stands of 22 s with these alarms once a week on a steady source
-REFERENCE = 20  # stands that tell the level before
+REFERENCE = 20  # stands that tell the level before the first is held against them
 AFTER = 10  # stands after the alarm before it is said what it was
 WINDOW = 120  # stands that are looked at then
 NEAR, JUMP_SIGMA = 3, 3.5  # a sudden change stands out among the differences of so many stands each
@@ -29,9 +29,17 @@ class Shift:
 
 @dataclass(slots=True)
 class ShiftChart:
-    """A CUSUM of the stands' levels that starts anew after each alarm; `last` is the latest change.
+    """A self-starting CUSUM of the stands' levels, begun anew after each alarm; `last` is the latest change.
 
-    The level before is the mean of the first stands after each start, whose own error is allowed for.
+    Each stand is held against the mean of all stands since the start, whose own error is allowed for. Such
+    scores are independent, so a steady source alarms as rarely as against a level that is known. The variance
+    of counts follows from the mean, not from the count itself: a low count must not weigh more.
+
+    References
+    ----------
+    .. [1] "Self-starting cusum charts for location and scale", The Statistician 36, 299 (1987); the scores
+       are the recursive residuals of "Techniques for testing the constancy of regression relationships over
+       time", J. R. Stat. Soc. B 37, 149 (1975). Both from memory; the studies show the run length.
     """
 
     k: float = K
@@ -40,39 +48,41 @@ class ShiftChart:
     _levels: list[float] = field(default_factory=list)
     _variances: list[float] = field(default_factory=list)
     _hours: list[float] = field(default_factory=list)
+    _weight: float = 0.0
+    _mean: float = 0.0
     _high: float = 0.0
     _low: float = 0.0
     _alarm: int | None = None
 
     def add(self, level: float, variance: float, hours: float) -> bool:
         """Take in the level of a stand with its counting variance; return whether a change was told apart."""
+        if variance <= 0:
+            return False
+        if self._alarm is None and self._moved(level, level / variance):
+            self._alarm = len(self._levels)
         self._levels.append(level)
         self._variances.append(variance)
         self._hours.append(hours)
-        many = len(self._levels)
-        if many <= REFERENCE or variance <= 0:
-            return False
-        if self._alarm is None and self._moved(level, variance):
-            self._alarm = many
-        if self._alarm is None or many < self._alarm + AFTER:
+        if self._alarm is None or len(self._levels) <= self._alarm + AFTER:
             return False
         lately = slice(-WINDOW, None)
         self.last = told_apart(self._levels[lately], self._variances[lately], self._hours[lately])
         self._again()
         return True
 
-    def _moved(self, level: float, variance: float) -> bool:
+    def _moved(self, level: float, weight: float) -> bool:
         """Take one step of the chart; return whether it alarms."""
-        mean = sum(self._levels[:REFERENCE]) / REFERENCE
-        own = sum(self._variances[:REFERENCE]) / REFERENCE**2
-        score = (level - mean) / sqrt(variance + own)
-        self._high = max(0.0, self._high + score - self.k)
-        self._low = max(0.0, self._low - score - self.k)
+        if len(self._levels) >= REFERENCE:
+            score = (level - self._mean) / sqrt(self._mean * (1 / weight + 1 / self._weight))
+            self._high = max(0.0, self._high + score - self.k)
+            self._low = max(0.0, self._low - score - self.k)
+        self._weight += weight
+        self._mean += (level - self._mean) * weight / self._weight
         return max(self._high, self._low) > self.h
 
     def _again(self) -> None:
         self._levels, self._variances, self._hours = [], [], []
-        self._high = self._low = 0.0
+        self._weight = self._mean = self._high = self._low = 0.0
         self._alarm = None
 
 

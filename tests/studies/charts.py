@@ -1,7 +1,8 @@
 """Charts and quiet weeks: how often they cry wolf, and how late they speak up.
 
 Stands of 22 s with 6e5 counts. A CUSUM with k = 0.5 and h = 9.06, once against a known level, and once as the
-service runs it: against the first stands, anew after each alarm.
+service runs it: self-starting, against the mean of the stands before, anew after each alarm. A change comes
+after 100 steady stands.
 """
 
 from __future__ import annotations
@@ -14,7 +15,7 @@ import numpy as np
 
 from daq.estimate import cusum, cusum_run_length
 from daq.estimate.arrays import FloatArray
-from daq.estimate.shift import H, K, ShiftChart
+from daq.estimate.shift import AFTER, H, K, ShiftChart
 from daq.estimate.wake import LATEST_STANDS, Closed, Danger, dangers
 from tests.studies.bench import generator_of
 
@@ -37,7 +38,7 @@ def study(alarms: int = ALARMS) -> dict[str, Any]:
     )
     rows = {
         "false alarms, level known": _steady(alarms),
-        "false alarms, as it runs": _steady_running(max(alarms // 10, 5)),
+        "false alarms, as it runs": _steady_running(alarms),
         "step of 0.5 %": _delay("step", alarms),
         "ramp of 1 % an hour": _delay("ramp", alarms),
         "quiet weeks": _weeks(alarms),
@@ -74,7 +75,13 @@ def _steady_running(alarms: int) -> dict[str, Any]:
             stands += 1
             told += chart.add(float(level), SIGMA**2, stands * STAND_S / 3600)
     weeks = stands / told / WEEK_STANDS
-    return {"alarms": told, "weeks": weeks, "weeks_se": weeks / sqrt(told)}
+    return {
+        "alarms": told,
+        "weeks": weeks,
+        "weeks_se": weeks / sqrt(told),
+        "theory": cusum_run_length(K, H, 0.0) / WEEK_STANDS,
+        "meets": {"interval": 0.9 <= weeks <= 1.1},
+    }
 
 
 def _delay(sort: str, changes: int) -> dict[str, Any]:
@@ -97,13 +104,16 @@ def _delay(sort: str, changes: int) -> dict[str, Any]:
         told_s.append(STAND_S * (told[0] - at + 1))
         right += told[1] == (sort == "step")
     limit_s = 120.0 if sort == "step" else 720.0
+    running = np.array(told_s) - AFTER * STAND_S
     return {
         "alarms": changes,
         "delay_s": float(np.mean(known)),
         "delay_se_s": float(np.std(known, ddof=1)) / sqrt(changes),
+        "running_s": float(running.mean()),
+        "running_se_s": float(running.std(ddof=1)) / sqrt(changes),
         "told_s": float(np.mean(told_s)),
         "right": right / changes,
-        "meets": {"delay": float(np.mean(known)) <= limit_s},
+        "meets": {"delay": float(np.mean(known)) <= limit_s, "as it runs": bool(running.mean() <= limit_s)},
     }
 
 

@@ -117,6 +117,9 @@ _FORMS: dict[str, tuple[str, dict[str, Any]]] = {
             "delay of the chart [s]": lambda found: (
                 _pm("delay_s", "delay_se_s")(found) if "delay_s" in found else ""
             ),
+            "as it runs [s]": lambda found: (
+                _pm("running_s", "running_se_s")(found) if "running_s" in found else ""
+            ),
             "told after [s]": _plain("told_s", ".0f"),
             "step or slope told rightly": _percent("right"),
             "wakes": _plain("wakes", "d"),

@@ -58,6 +58,21 @@ def test_an_opening_that_loses_a_little_in_one_lap_is_named_with_its_size_and_st
     assert not any(row.quality & EXCLUDING for row in judged)
 
 
+def test_dark_counts_that_do_not_follow_a_falling_source_are_no_change_and_hide_none() -> None:
+    level = np.linspace(1.0, 0.7, len(PLAN.stand))
+    seen_hz = EXPECTED_HZ[PLAN.position, PLAN.opening] * level + 300.0
+    quiet = np.random.default_rng(6).poisson(seen_hz * 2.2)
+    less = np.round(quiet * np.where((LAP == 9) & (PLAN.opening == 0), 0.93, 1.0))
+
+    night, changed_night = (
+        heard([replace(row, values=(float(count),)) for row, count in zip(NIGHT, counts, strict=True)])[0]
+        for counts in (quiet, less)
+    )
+
+    assert night == []
+    assert changed_night[0].startswith("Lap 10 does not fit the laps before; opening none stands out by -")
+
+
 def test_an_opening_whose_visits_begin_darker_has_not_settled() -> None:
     generator = np.random.default_rng(3)
     rows = [sliced(row, 0.97 if row.opening == AB else 1.0, generator) for row in NIGHT]

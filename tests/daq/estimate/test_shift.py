@@ -3,7 +3,8 @@
 import numpy as np
 import pytest
 
-from daq.estimate.shift import AFTER, ShiftChart, told_apart
+from daq.estimate.charts import cusum_run_length
+from daq.estimate.shift import AFTER, REFERENCE, K, ShiftChart, told_apart
 
 SIGMA = 1 / np.sqrt(6e5)  # a stand of 6e5 counts
 STAND_H = 22 / 3600
@@ -21,6 +22,20 @@ def test_a_steady_source_makes_no_news_in_a_night():
     noise = np.random.default_rng(1).normal(0, SIGMA, 1600)
 
     assert fed(1 + noise) == []
+
+
+def test_that_the_level_is_learnt_costs_no_false_alarms():
+    due = np.tile([2e3, 2e4, 6e3], 150_000)  # stands of a fringe: dark and bright ones
+    counts = np.random.default_rng(5).poisson(due)
+    chart, alarms = ShiftChart(h=6.0), 0
+
+    for number, (one, expected) in enumerate(zip(counts.tolist(), due.tolist(), strict=True)):
+        alarms += chart.add(one / expected, one / expected**2, number * STAND_H)
+
+    # Four standard errors of so many alarms; against the first twenty stands alone it is two thirds of that.
+    interval = cusum_run_length(K, 6.0, 0.0) + REFERENCE + AFTER
+    assert len(due) / alarms == pytest.approx(interval, rel=4 / np.sqrt(alarms))
+    assert alarms > 250
 
 
 @pytest.mark.parametrize("size", [-0.02, 0.005])
