@@ -6,7 +6,7 @@ from math import isfinite
 from typing import Any
 
 import numpy as np
-from scipy.special import gammainccinv, gammaincinv, lambertw
+from scipy.special import betainc, gammainccinv, gammaincinv, lambertw
 
 from daq.estimate.arrays import FloatArray
 
@@ -164,6 +164,22 @@ def poisson_interval(counts: int, confidence: float) -> tuple[float, float]:
     tail = (1 - confidence) / 2
     low = float(gammaincinv(counts, tail)) if counts else 0.0
     return low, float(gammainccinv(counts + 1, tail))
+
+
+def chance_of_more(counts: float, live_s: float, dark: float, dark_s: float) -> float:
+    """Return how probable so many counts or more are beside dark ones where both come at one rate.
+
+    Notes
+    -----
+    Exact, also of few counts: of all counts together each is one of `counts` with the probability of its live
+    time. The threshold of few counts that a normal law gives is too low.
+
+    References
+    ----------
+    .. [1] "Detection and quantification capabilities", in "Applied Modeling and Computations in Nuclear
+       Science", ACS Symp. Ser. 945 (2006), for the smallest pairs; the rest is the binomial law.
+    """
+    return float(betainc(counts, dark + 1, live_s / (live_s + dark_s))) if counts > 0 else 1.0
 
 
 def _true(seen: FloatArray, dead_time_s: float, kind: str) -> FloatArray:

@@ -11,15 +11,17 @@ from daq.tasks.gaps import Gaps
 from daq.tasks.said import with_error
 
 LARGEST_LOSS = 0.05
+FINE = 0.05  # error over dead time that is aimed at, where the dead time itself is wanted
 APART = 3.0  # standard errors: sums and gaps that lie farther apart do not agree
 
 
 @dataclass(frozen=True, slots=True)
 class Found:
-    """What sums say, what gaps say where the counter tells them, and by how many errors they differ."""
+    """What sums of so much time at the bench say, and what gaps say where the counter tells them."""
 
     sums: Sums
     gaps: Gaps | None
+    sums_took_s: float = 0.0
 
     @property
     def apart(self) -> float:
@@ -43,6 +45,12 @@ class Found:
 def kappa_shift(setting: Setting, found: Found) -> float:
     """Return what an error of the dead time by one standard error does to kappa."""
     return abs(setting.yardstick.per_dead_time) * found.best[1]
+
+
+def budget_s(found: Found) -> float | None:
+    """Return how long sums would have to be taken for an error of a twentieth; None where nothing is seen."""
+    (tau, se) = found.sums.tau_s, found.sums.se_s
+    return found.sums_took_s * (se / (FINE * tau)) ** 2 if tau > APART * se else None
 
 
 def verdict_of(setting: Setting, found: Found) -> Verdict:
@@ -77,7 +85,18 @@ def sentence_of(setting: Setting, found: Found) -> str:
         f"moves kappa by {_tiny(kappa_shift(setting, found), setting)}, and at the brightest place "
         f"{lost:.2g} % of the counts are lost."
     )
-    return " ".join((said, *_agreement(setting, found)))
+    return " ".join((said, *_budget(found), *_agreement(setting, found)))
+
+
+def _budget(found: Found) -> list[str]:
+    """Return what an error of a twentieth would take, where there is none."""
+    needed_s = budget_s(found)
+    if needed_s is None or found.best[1] <= FINE * found.best[0]:
+        return []
+    return [
+        f"An error of {100 * FINE:.0f} % would take {needed_s / 3600:.1f} h of this; a counter in list mode "
+        f"needs far less."
+    ]
 
 
 def _agreement(setting: Setting, found: Found) -> list[str]:

@@ -12,6 +12,7 @@ import numpy as np
 from scipy.special import ndtri
 
 from daq.estimate.arrays import FloatArray
+from daq.estimate.regression import weighted_fit
 from daq.tasks.contract import Ask, Curve, Outcome, Panel, Setting, Taken, Task, counts_only, hopeless, once
 from daq.tasks.windows import ramp_mm
 
@@ -30,11 +31,9 @@ def reversal(moved: FloatArray, place_mm: FloatArray) -> tuple[float, float, flo
     """
     number = np.arange(len(moved), dtype=float)
     design = np.stack([np.ones(len(moved)), moved / 2, number - number.mean()], axis=1)
-    solved = np.linalg.lstsq(design, place_mm, rcond=None)[0]
-    left = place_mm - design @ solved
-    scatter = sqrt(float(left @ left) / (len(moved) - 3))
-    inverse = np.linalg.inv(design.T @ design)
-    return float(solved[1]), scatter * sqrt(float(inverse[1, 1])), scatter
+    found = weighted_fit(design, place_mm, np.ones(len(moved)))
+    scatter = sqrt(found.chi2 / found.dof)
+    return float(found.coefficients[1]), scatter * sqrt(float(found.covariance[1, 1])), scatter
 
 
 def _lacks(setting: Setting) -> Sequence[str]:

@@ -11,6 +11,7 @@ from math import sqrt
 import numpy as np
 
 from daq.estimate.arrays import FloatArray
+from daq.estimate.counting import chance_of_more
 from daq.tasks.contract import (
     Ask,
     Curve,
@@ -26,7 +27,7 @@ from daq.tasks.contract import (
 from daq.tasks.turns import light_room, told_once
 
 DWELL_S, ROUNDS, PLACES, ROOM_ROUNDS = 10.0, 5, 5, 2
-ONE_SIDED_95 = 1.645  # of a normal distribution
+ONE_SIDED_95, ONE_IN_TWENTY = 1.645, 0.05  # of a normal distribution; what it leaves above
 CLOSED, DARK, NIGHT, LIT = "closed", "dark", "room at night", "room lit"
 
 
@@ -89,6 +90,7 @@ def _fit(setting: Setting, taken: Sequence[Taken]) -> Outcome:
         chi2, dof = chi2 + more, dof + more_dof
         values |= {"dark_hz": dark_hz, "leak_hz": closed_hz - dark_hz}
         values |= {"decision_hz": limits[0], "detection_limit_hz": limits[1]}
+        values |= {"leak_p": _chance(closed, counts[DARK])}
         se |= {"dark_hz": dark_se, "leak_hz": sqrt(closed_se**2 + dark_se**2)}
     verdict = fits(chi2, dof)
     even = "even over place and time" if verdict == "pass" else "not even over place and time: look for light"
@@ -115,7 +117,7 @@ def _fit(setting: Setting, taken: Sequence[Taken]) -> Outcome:
 def _apart(values: dict[str, float | None], se: dict[str, float | None], shutter: bool) -> str:
     if not shutter:
         return " (dark and light together: the rig has no shutter)"
-    seen = "more" if (values["leak_hz"] or 0.0) > (values["decision_hz"] or 0.0) else "no more"
+    seen = "no more" if values["leak_p"] is None or values["leak_p"] > ONE_IN_TWENTY else "more"
     return f", {values['dark_hz']:.4g} with the beam shut, so {seen} than dark"
 
 
@@ -126,10 +128,16 @@ def _lit(taken: Sequence[Taken], values: dict[str, float | None], se: dict[str, 
         return ""
     (night_hz, night_se), (lit_hz, lit_se) = _rate(night), _rate(lit)
     adds_hz, adds_se = lit_hz - night_hz, sqrt(night_se**2 + lit_se**2)
-    decision_hz, _ = decision_and_limit(night_hz, night[:, 1].sum(), lit[:, 1].sum())
-    values["room_hz"], se["room_hz"] = adds_hz, adds_se
-    seen = "leave it off at night" if adds_hz > decision_hz else "which is not seen"
+    chance = _chance(lit, night)
+    values["room_hz"], se["room_hz"], values["room_p"] = adds_hz, adds_se, chance
+    seen = "leave it off at night" if chance <= ONE_IN_TWENTY else "which is not seen"
     return f"; the room's light adds {adds_hz:.3g} +- {adds_se:.2g}, {seen}"
+
+
+def _chance(more: FloatArray, less: FloatArray) -> float:
+    """Return how probable it is that the first counts more than the second by chance alone."""
+    (counts, live_s), (dark, dark_s) = more.sum(axis=0), less.sum(axis=0)
+    return chance_of_more(float(counts), float(live_s), float(dark), float(dark_s))
 
 
 def _counts(taken: Sequence[Taken], role: str) -> FloatArray:

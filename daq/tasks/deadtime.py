@@ -13,7 +13,7 @@ from typing import Any
 import numpy as np
 
 from daq.estimate.arrays import FloatArray
-from daq.tasks.agreement import Found, kappa_shift, sentence_of, verdict_of
+from daq.tasks.agreement import Found, budget_s, kappa_shift, sentence_of, verdict_of
 from daq.tasks.contract import (
     Ask,
     Curve,
@@ -58,8 +58,9 @@ def _gates(setting: Setting) -> list[Ask]:
 
 def _fit(setting: Setting, taken: Sequence[Taken]) -> Outcome:
     kind = setting.measurement.estimate.dead_time_kind
-    cycles = _rates([one for one in taken if one[0].role != GAPS])
-    found = Found(dead_time_of_cycles(cycles, kind), _gaps(setting, taken))
+    summed = [one for one in taken if one[0].role != GAPS]
+    took_s = (summed[-1][1].gate_close_ns - summed[0][1].gate_open_ns) / 1e9
+    found = Found(dead_time_of_cycles(_rates(summed), kind), _gaps(setting, taken), took_s)
     values, se = _values(setting, found)
     timed, timed_se = _by_gaps(found)
     return Outcome(
@@ -84,6 +85,7 @@ def _values(setting: Setting, found: Found) -> tuple[dict[str, Any], dict[str, A
         "described_s": told,
         "away_in_se": (tau - told) / se,
         "by_sums_s": found.sums.tau_s,
+        "fine_after_s": budget_s(found),
     }
     return values, {"dead_time_s": se, "largest_loss": top_hz * se, "by_sums_s": found.sums.se_s}
 

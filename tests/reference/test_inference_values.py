@@ -307,3 +307,11 @@ def test_the_quantile_of_a_table() -> None:
     limit, _, _ = null_limit(0.0, 32.0, 16, confidence=0.995)
 
     assert limit == pytest.approx(93, abs=0.5)
+
+
+def test_the_effective_freedom_of_an_end_gauge() -> None:
+    """JCGM 100:2008, H.1.6: 25, 9.7, 2.9, 16.6 nm with 18, 25.6, 50, 2 are 32 nm with 16.7; from memory."""
+    _, total, dof = null_limit(0.0, 25.0, 18, [(9.7, 25.6), (2.9, 50), (16.6, 2)])
+
+    assert total == pytest.approx(32, abs=0.5)
+    assert dof == pytest.approx(16.7, abs=0.1)

@@ -12,6 +12,7 @@ import pytest
 from daq.estimate import jackknife
 from daq.estimate.arrays import FloatArray
 from daq.estimate.regression import weighted_fit
+from daq.tasks.backlash import reversal
 
 NORRIS_X = [
     0.2,
@@ -172,3 +173,40 @@ def test_sets_of_simultaneous_observations() -> None:
     assert u == pytest.approx([0.071, 0.295, 0.236], abs=7e-4)
     r = np.corrcoef(without)
     assert (r[0, 1], r[0, 2], r[1, 2]) == pytest.approx((-0.588, -0.485, 0.993), abs=5.1e-4)
+
+
+def test_the_calibration_of_a_thermometer() -> None:
+    """JCGM 100:2008, H.3: corrections read at eleven temperatures, a line about 20 degrees; from memory.
+
+    y1 = -0.1712(29), y2 = 0.002 18(67), r = -0.930, s = 0.0035; at 30 degrees -0.1494(41).
+    """
+    read = [21.521, 22.012, 22.512, 23.003, 23.507, 23.999, 24.513, 25.002, 25.503, 26.010, 26.511]
+    correction = [-171, -169, -166, -159, -164, -165, -156, -157, -159, -161, -160]
+    columns = np.stack([np.ones(11), np.array(read) - 20.0], axis=1)
+
+    found = weighted_fit(columns, 1e-3 * np.array(correction), np.ones(11))
+
+    covariance = found.covariance * found.chi2 / found.dof
+    u = np.sqrt(np.diag(covariance))
+    at_30 = np.array([1.0, 10.0])
+    assert found.coefficients[0] == pytest.approx(-0.1712, abs=5.1e-5)
+    assert found.coefficients[1] == pytest.approx(0.00218, abs=5.1e-6)
+    assert u[0] == pytest.approx(0.0029, abs=5.1e-5)
+    assert u[1] == pytest.approx(0.00067, abs=5.1e-6)
+    assert covariance[0, 1] / (u[0] * u[1]) == pytest.approx(-0.930, abs=5.1e-4)
+    assert np.sqrt(found.chi2 / found.dof) == pytest.approx(0.0035, abs=5.1e-5)
+    assert at_30 @ found.coefficients == pytest.approx(-0.1494, abs=5.1e-5)
+    assert np.sqrt(at_30 @ covariance @ at_30) == pytest.approx(0.0041, abs=5.1e-5)
+
+
+def test_the_play_of_a_stage_comes_from_the_same_fit() -> None:
+    """The values of Norris as places of a stage: the task gives what the certified fit gives."""
+    number = len(NORRIS_Y)
+    moved = np.where(np.arange(number) % 4 < 2, 1.0, -1.0)
+    columns = np.stack([np.ones(number), moved / 2, np.arange(number) - (number - 1) / 2], axis=1)
+    coefficients, sd, rest = spread(columns, np.array(NORRIS_Y))
+
+    play, play_se, scatter = reversal(moved, np.array(NORRIS_Y))
+
+    assert (play, play_se) == pytest.approx((coefficients[1], sd[1]), rel=1e-12)
+    assert scatter == pytest.approx(np.sqrt(rest / (number - 3)), rel=1e-12)

@@ -141,6 +141,22 @@ _FORMS: dict[str, tuple[str, dict[str, Any]]] = {
             "kappa inside 95 %": lambda found: f"{found['inside']} of {found['with_kappa']}",
         },
     ),
+    "tasks": (
+        "Bench tasks: their own errors against many draws and against formulas",
+        {
+            "draws": _plain("draws", "d"),
+            "bias [errors]": lambda found: _pm("bias", "bias_se", "+")(found) if "bias" in found else "",
+            "scatter over what is said": lambda found: (
+                _pm("over_said", "over_said_se")(found) if "over_said" in found else ""
+            ),
+            "over the formula": lambda found: (
+                _pm("over_formula", "over_formula_se")(found) if "over_formula" in found else ""
+            ),
+            "middle, over its formula": _plain("middle_over_formula"),
+            "scatter over the truth": _percent("share"),
+            "false alarms": lambda found: f"{100 * found['alarms']:.2f} %" if "alarms" in found else "",
+        },
+    ),
     "zigzag": (
         "Complete zig-zag nights (bias and sd in counting bars)",
         {

@@ -10,7 +10,7 @@ from typing import Any
 import numpy as np
 import pytest
 
-from tests.studies import benches, chaos, charts, exclusions, irregular, matrix, plans, quality, zigzag
+from tests.studies import benches, chaos, charts, exclusions, irregular, matrix, plans, quality, tasks, zigzag
 from tests.studies.__main__ import RESULTS, STUDIES, main, misses
 from tests.studies.bench import generator_of, night, reduced
 from tests.studies.sources import SOURCES
@@ -166,3 +166,13 @@ def test_a_few_alarms_and_quiet_weeks() -> None:
     assert abs(running["weeks"] - running["theory"]) < 4 * running["weeks_se"]
     assert all(all(found[row]["meets"].values()) for row in ("step of 0.5 %", "ramp of 1 % an hour"))
     assert found["quiet weeks"]["wakes"] == 0
+
+
+def test_a_few_draws_of_bench_tasks() -> None:
+    found = tasks.study(16)["rows"]
+
+    assert set(found) == set(json.loads((RESULTS / "tasks.json").read_text())["rows"])
+    for name, row in found.items():
+        assert abs(row.get("bias", 0.0)) < 4.5 * row.get("bias_se", 1.0), name
+        if name.startswith("clipping"):
+            assert row["meets"]["said"], name

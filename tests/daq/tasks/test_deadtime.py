@@ -13,7 +13,7 @@ from daq.tasks.contract import Ask, Outcome, Setting, Taken
 from daq.tasks.crossings import crossings_mm
 from daq.tasks.deadtime import GAPS, TASK
 from daq.tasks.yardstick import SHARE
-from tests.daq.tasks.made import crossing_rates, drawn, gate_ticks, reading, setting
+from tests.daq.tasks.made import GAP_S, crossing_rates, drawn, gate_ticks, reading, setting
 from tests.examples import lantern, lantern_rig
 
 TAU_S, BRIGHT_HZ = 40e-9, 360e3
@@ -66,6 +66,19 @@ def test_sums_alone_find_it_within_their_error() -> None:
 
     assert abs(found.values["dead_time_s"] - TAU_S) < 4 * found.se["dead_time_s"]
     assert found.verdict == "pass"
+
+
+def test_it_says_how_long_an_error_of_a_twentieth_takes() -> None:
+    known, random = setting(), np.random.default_rng(5)
+    asks = TASK.asks(known, ())
+
+    found = TASK.fit(known, drawn(asks, _rate(0.0, 1e5), random))
+
+    needed_s = found.values["fine_after_s"]
+    took_s = sum(ask.dwell_s + GAP_S for ask in asks) - GAP_S
+    tau, se = found.values["dead_time_s"], found.se["dead_time_s"]
+    assert se * np.sqrt(took_s / needed_s) == pytest.approx(0.05 * tau)
+    assert ("An error of 5 % would take" in found.sentence) == (se > 0.05 * tau)
 
 
 def test_sums_and_gaps_agree_and_both_are_taken() -> None:
