@@ -176,8 +176,8 @@ def chance_of_more(counts: float, live_s: float, dark: float, dark_s: float) -> 
 
     References
     ----------
-    .. [1] "Detection and quantification capabilities", in "Applied Modeling and Computations in Nuclear
-       Science", ACS Symposium 945 (2006), for the smallest pairs; the rest is the binomial law.
+    .. [1] "Applied Modeling and Computations in Nuclear Science", ACS Symposium (2006), for the smallest
+       pairs; the rest is the binomial law.
     """
     return float(betainc(counts, dark + 1, live_s / (live_s + dark_s))) if counts > 0 else 1.0
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from dataclasses import dataclass
 from math import sqrt
 
 import numpy as np
@@ -11,7 +12,7 @@ from daq.description import Measurement
 from daq.description.measurement import Pilot
 from daq.estimate.arrays import FloatArray
 from daq.estimate.drift import structure_function
-from daq.itinerary import compose, forecast
+from daq.itinerary import Forecast, compose, forecast
 from daq.itinerary.pilot import HOUR_S, wander_of_counts
 from daq.itinerary.wander import Wander
 from daq.tasks.contract import Ask, Curve, Outcome, Panel, Setting, Taken, Task, hopeless, once, within
@@ -35,43 +36,81 @@ def _fit(setting: Setting, taken: Sequence[Taken]) -> Outcome:
     counts = np.array([reading.values[0] for _, reading in taken], float)
     opened_s = np.array([reading.gate_open_ns for _, reading in taken]) / 1e9
     sample_s = float(np.median(np.diff(opened_s)))
+    _refuse_few(counts)
+    wander, ripples = wander_of_counts(counts, sample_s)
+    plans = _plans(setting, counts, sample_s)
+    return Outcome(
+        values={
+            "counts": counts.astype(int).tolist(),
+            "sample_s": sample_s,
+            "wander_100_s": float(np.sqrt(wander.structure(np.array([LOOK_S]))[0])),
+            **plans.values,
+            "lines_s": [ripple.period_s for ripple in ripples],
+        },
+        se={"lines_s": [ripple.period_u_s for ripple in ripples]},
+        verdict=within(plans.drift_share, 0.0, DRIFT_SHARE),
+        sentence=plans.sentence,
+        model="random walk and relaxing parts, by the spectrum of the log rate",
+        panels=_panels(opened_s, counts, sample_s, wander),
+    )
+
+
+def _refuse_few(counts: FloatArray) -> None:
     if counts.min() < LEAST:
         raise hopeless(
             "pilot",
             f"a sample counted {counts.min():.0f} only; what the source does drowns in counting",
             "See that light falls on the detector, or watch a brighter place, then repeat",
         )
-    wander, ripples = wander_of_counts(counts, sample_s)
+
+
+@dataclass(frozen=True, slots=True)
+class _Plans:
+    """The night with the best dwell and the night as it is planned: dwell and forecast of each."""
+
+    best_s: float
+    best: Forecast
+    planned_s: float
+    planned: Forecast
+
+    @property
+    def drift_share(self) -> float:
+        """The variance that drift adds over that of counting, as planned."""
+        return float((self.planned.budget["drift"] / self.planned.budget["counting"]) ** 2)
+
+    @property
+    def values(self) -> dict[str, float]:
+        """What stands in the record."""
+        return {
+            "best_dwell_s": self.best_s,
+            "dwell_s": self.planned_s,
+            "q_at_best": self.best.q,
+            "q": self.planned.q,
+            "drift_share": self.drift_share,
+            "kappa_se": self.planned.kappa_se,
+        }
+
+    @property
+    def sentence(self) -> str:
+        """What a person is told."""
+        goal = "no goal is set" if self.planned.goal_se is None else _goal(self.planned.goal_s)
+        return (
+            f"The best dwell is {self.best_s:.1f} s ({self.planned_s:.1f} s planned); drift adds "
+            f"{100 * (sqrt(1 + self.drift_share) - 1):.1f} % to the error bar, "
+            f"{self.planned.kappa_se:.2e} at the end; {goal}."
+        )
+
+
+def _plans(setting: Setting, counts: FloatArray, sample_s: float) -> _Plans:
+    """Return what the planner makes of a source as it was watched, with the dwell free and as described."""
     watched = with_pilot(setting.measurement, counts.astype(int).tolist(), sample_s)
     free = watched.model_copy(update={"itinerary": watched.itinerary.model_copy(update={"dwell_s": None})})
     best, planned = compose(free, setting.rig), compose(watched, setting.rig)
-    at_best, at_planned = forecast(best, watched), forecast(planned, watched)
-    share = (at_planned.budget["drift"] / at_planned.budget["counting"]) ** 2
-    wandered = float(np.sqrt(wander.structure(np.array([LOOK_S]))[0]))
-    best_s = float(np.mean(best.dwell_s))
-    goal = "no goal is set" if at_planned.goal_se is None else _goal(at_planned.goal_s)
-    return Outcome(
-        values={
-            "counts": counts.astype(int).tolist(),
-            "sample_s": sample_s,
-            "wander_100_s": wandered,
-            "best_dwell_s": best_s,
-            "dwell_s": float(np.mean(planned.dwell_s)),
-            "q_at_best": at_best.q,
-            "q": at_planned.q,
-            "drift_share": share,
-            "kappa_se": at_planned.kappa_se,
-            "lines_s": [ripple.period_s for ripple in ripples],
-        },
-        se={"lines_s": [ripple.period_u_s for ripple in ripples]},
-        verdict=within(share, 0.0, DRIFT_SHARE),
-        sentence=(
-            f"The best dwell is {best_s:.1f} s ({float(np.mean(planned.dwell_s)):.1f} s planned); drift adds "
-            f"{100 * (sqrt(1 + share) - 1):.1f} % to the error bar, "
-            f"{at_planned.kappa_se:.2e} at the end; {goal}."
-        ),
-        model="random walk and relaxing parts, by the spectrum of the log rate",
-        panels=_panels(opened_s, counts, sample_s, wander),
+    return _Plans(
+        best_s=float(np.mean(best.dwell_s)),
+        best=forecast(best, watched),
+        planned_s=float(np.mean(planned.dwell_s)),
+        planned=forecast(planned, watched),
     )
 
 

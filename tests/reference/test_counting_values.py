@@ -133,7 +133,7 @@ def test_the_detection_limit_solves_the_implicit_definition_of_the_standard(
     [(0, 4, 0.0625), (0, 5, 0.03125), (1, 7, 0.03515625), (5, 13, 0.048126220703125)],
 )
 def test_the_fewest_counts_that_are_more_than_dark(dark: int, counts: int, chance: float) -> None:
-    """From "Applied Modeling and Computations in Nuclear Science", ACS Symposium 945 (2006), text of fig. 4.
+    """From "Applied Modeling and Computations in Nuclear Science", ACS Symposium (2006), text of fig. 4.
 
     (0, 5) is the smallest pair that is detected at 5 %; the probabilities are those of a fair coin.
     """
