@@ -44,6 +44,7 @@ TABLE: dict[str, Reaction] = {
     "overload": _BENCH,
     "interlock": _BENCH,
     "labels": _BENCH,
+    "flank": _BENCH,
     "sensor": Reaction(Action.HOLD, 2 * 3600.0),
     "no counts": Reaction(Action.REPEAT_STAND, 2 * 3600.0, (60.0, 120.0, 300.0)),
     "room": Reaction(Action.HOLD, inf),

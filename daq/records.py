@@ -115,4 +115,6 @@ REASONS: Mapping[int, str] = {
     4: "unplanned dark visit",
     5: "unplanned flank visit",
     6: "visit of a bench task",
+    7: "unplanned visit behind shut slits",
 }
+DARK_VISIT, FLANK_VISIT, BENCH_VISIT, CLOSED_VISIT = 4, 5, 6, 7

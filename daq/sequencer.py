@@ -14,13 +14,13 @@ from enum import Enum
 from daq.errors import DaqError, DeviceError
 from daq.estimate.quality import encoder_bits
 from daq.ports import AxisState, Clock, Counted, Devices, Sink
-from daq.records import Quality, Reading, Visit
+from daq.records import DARK_VISIT, FLANK_VISIT, Quality, Reading, Visit
 
 POLL_NS = 10_000_000
 PAUSE_STEP_NS = 1_000_000_000
 MOVE_GRACE_S = 10.0
 GATE_GRACE_S = 5.0
-UNPLANNED_BITS = {4: Quality.DARK, 5: Quality.FLANK}  # by reason (daq.records.REASONS)
+UNPLANNED_BITS = {DARK_VISIT: Quality.DARK, FLANK_VISIT: Quality.FLANK}  # by reason
 
 
 class State(Enum):

@@ -66,6 +66,7 @@ def _write(path: Path, used: Used, itinerary: Itinerary, file: Path) -> None:
     notes = (f"Composed from {file.name}.", *used.said, *itinerary.notes)
     if used.said:
         table |= dict(changes(used, table))
+        table["notes"] = {**table.get("notes", {}), "bench": list(used.said)}
     if used.at_mm:
         own = path.with_name(f"{path.stem}-rig.toml")
         _put(own, notes, _rig_table(used, (file.parent / rig_name).resolve(), path.resolve().parent))

@@ -89,12 +89,14 @@ def arm(arguments: argparse.Namespace) -> Answer:
         text = "Every device of this rig is simulated: it needs no arming."
         return Answer(0, {"ok": True, "armed": False, "problems": []}, [text])
     messages = settings_of(arguments.lab).messages
-    found = checks(loaded, arguments.lab, messages, _reasons(arguments.without))
+    without = _reasons(arguments.without)
+    found = checks(loaded, arguments.lab, messages, without)
     for one in found:
         print(f"{'ok ' if one.ok else 'NOT'}  {one.what}: {one.seen}", file=sys.stderr)
     problems = [f"{one.what}: {one.seen}" for one in found if not one.ok]
     if not problems and messages is not None:
-        reason = confirm(loaded, arguments.lab, messages, arguments.by or getpass.getuser(), _typed)
+        who = arguments.by or getpass.getuser()
+        reason = confirm(loaded, arguments.lab, messages, who, _typed, without=without)
         problems = [reason] if reason else []
     if problems:
         return Answer(1, {"ok": False, "armed": False, "problems": problems}, ["Not armed.", *problems])

@@ -63,6 +63,9 @@ def _readings(dataset: Any) -> Iterator[Reading]:
         axis: [dataset[f"encoder_{axis}_{edge}_mm"].values for edge in ("open", "close")] for axis in axes
     }
     for row, reading in enumerate(readings_of_dataset(dataset)):
+        if reading.visit < 0:  # where it was to stand is not in the archive, and no rule looks at it
+            yield reading
+            continue
         bits = Quality(reading.quality & ~AGAIN)
         if axes:
             seen = {axis: (float(opened[row]), float(closed[row])) for axis, (opened, closed) in ends.items()}

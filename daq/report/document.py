@@ -106,7 +106,16 @@ def _happened(facts: Mapping[str, Any]) -> Block:
         ),
     )
     kept = tuple(row for row in rows if all(row))
+    done = (*done, *_armed(facts))
     return Block("What happened", done, (("when (UTC)", "what"), *kept) if kept else ())
+
+
+def _armed(facts: Mapping[str, Any]) -> Iterator[str]:
+    """Yield who armed the start, and which bench records it did without, and why."""
+    yield from all_said(facts, ("Armed by {armed.by}, {armed.utc}.",))
+    for task, reason in (fact(facts, "armed.without") or {}).items():
+        if isinstance(reason, str) and reason:
+            yield f"Armed without a valid record of {task}: {reason}."
 
 
 def _tonight(facts: Mapping[str, Any]) -> Block:
@@ -136,7 +145,9 @@ def _bench(facts: Mapping[str, Any]) -> Block:
         for task, one in records.items()
         if isinstance(one, Mapping)
     ]
-    return Block("Bench records that held at the start", rows=(("record", "verdict", "when", "what"), *rows))
+    laid_in = _texts(facts, "laid_in") or (("Plan and estimate took none of them.",) if rows else ())
+    head = ("record", "verdict", "when", "what")
+    return Block("Bench records that held at the start", laid_in, (head, *rows))
 
 
 def _exclusions(facts: Mapping[str, Any]) -> Block:

@@ -2,11 +2,12 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
 from dataclasses import replace
 
 from daq.errors import DeviceError
 from daq.estimate.stopping import PLANNED
+from daq.ports import Mask
 from daq.records import Quality, Reading
 from daq.sequencer import Planned, State, perform
 from daq.service.course import react
@@ -39,11 +40,29 @@ def carry_out_again(night: Night, tape: Tape) -> str:
     return COMPLETE
 
 
+class _StillMask:
+    """The mask of a replay: where a visit stood at no opening, nothing moves, and its encoder is believed."""
+
+    def __init__(self, mask: Mask) -> None:
+        self._mask = mask
+        self.state, self.stop_now = mask.state, mask.stop_now
+
+    def show(self, opening: int) -> float:
+        """Start the move to an opening and return how long it will take [s]."""
+        return 0.0 if opening < 0 else self._mask.show(opening)
+
+    def target_mm(self, opening: int) -> Mapping[str, float]:
+        """Return where every axis of the mask stands when an opening is shown."""
+        if opening < 0:
+            return {axis: state.encoder_mm for axis, state in self._mask.state().items()}
+        return self._mask.target_mm(opening)
+
+
 def _stretch(night: Night, tape: Tape, lost: Lost) -> None:
     """Perform rows until they are through or a link is lost."""
     performed = perform(
         _supply(night, tape, lost),
-        night.devices,
+        replace(night.devices, mask=_StillMask(night.devices.mask)),
         night.archive,
         night.clock,
         night.become,

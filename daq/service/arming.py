@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 import secrets
 import shutil
 from collections.abc import Callable, Iterator, Mapping
@@ -75,6 +76,7 @@ def confirm(
     who: str,
     answer: Callable[[str], str],
     send: Send = by_apprise,
+    without: Mapping[str, str] | None = None,
 ) -> str | None:
     """Ask the cautions one by one, the code of a test message and the run's name; arm when all are given.
 
@@ -95,13 +97,21 @@ def confirm(
         return "the name is not that of the measurement"
     expires = datetime.now(UTC) + timedelta(hours=VALID_H)
     row = {"sha256": digest_of(loaded), "who": who, "utc": utc_now(), "expires_utc": expires.isoformat()}
-    insert(lab, "armings", file=loaded.measurement.name, **row)
+    insert(lab, "armings", file=loaded.measurement.name, without=json.dumps(dict(without or {})), **row)
     return None
 
 
 def is_armed(loaded: Loaded, lab: Path) -> bool:
     """Return whether a start of this description is armed now."""
     return bool(_armings(loaded, lab))
+
+
+def arming_of(loaded: Loaded, lab: Path) -> dict[str, Any]:
+    """Return who armed the next start, when, and which bench records it does without and why; or nothing."""
+    valid = [] if loaded.rig.simulated else _armings(loaded, lab)
+    if not valid:
+        return {}
+    return {"by": valid[0]["who"], "utc": valid[0]["utc"], "without": json.loads(valid[0]["without"])}
 
 
 def _armings(loaded: Loaded, lab: Path) -> list[dict[str, Any]]:

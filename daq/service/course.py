@@ -18,6 +18,7 @@ from daq.service.hearing import hear
 from daq.service.holding import hold, pass_time, reopen, reopen_silent, wait_out, watch_limits
 from daq.service.night import AT_REQUEST, COMPLETE, Night, Trouble, look, look_after, tell
 from daq.service.parking import keep_bench
+from daq.service.readying import make_ready
 
 REPEATED = Quality.OFF_TARGET | Quality.MOVED | Quality.OVERFLOW | Quality.DISPERSION | Quality.FINGERPRINT
 REPEATED_SHARE = 0.1  # of the stands so far; above it a repeat is no cure
@@ -53,6 +54,8 @@ def _stretch(night: Night, place: Place) -> Place:
     """Perform visits until the plan is done or something comes between; return where to go on."""
     last: Reading | None = None
     try:
+        if not make_ready(night):
+            return place
         for reading in _readings(night, place):
             last = reading
             if _comes_between(night, reading):
@@ -87,6 +90,7 @@ def _readings(night: Night, place: Place) -> Iterator[Reading]:
         for note in night.judge.notes:
             tell(night, "noticed", text=note)
         night.running.add(reading)
+        night.counted_ns = reading.gate_close_ns
         closed = night.live.took(reading, night.judge.odd)
         night.trouble = Trouble()
         if closed and not night.live.watcher.dark_stands:

@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import json
 from collections.abc import Mapping
-from datetime import datetime
 from itertools import pairwise
 from math import ceil, isfinite
 from pathlib import Path
@@ -17,6 +16,7 @@ from daq.estimate.blinding import Blinding
 from daq.report.closing import closing_lines
 from daq.report.document import document
 from daq.report.facts import fact
+from daq.report.happened import happened, marks_h
 from daq.report.html import html_text, svg_of
 from daq.report.night_plot import draw_night
 from daq.report.pdf import write_pdf
@@ -28,19 +28,6 @@ from daq.storage.log import read_log
 from daq.storage.reader import read_meta
 
 HTML, PDF, JSON = "report.html", "report.pdf", "report.json"
-TOLD = (
-    "warning",
-    "warning worse",
-    "fault",
-    "left out",
-    "not stored",
-    "noticed",
-    "hold",
-    "note",
-    "ended",
-    "pause",
-)
-MOST = 14  # of what happened stands on the page
 SIZE = (7.4, 4.2)
 
 
@@ -92,14 +79,16 @@ def facts_of(folder: Path, figures: Mapping[str, Any]) -> dict[str, Any]:
             name: meta.get(name) for name in ("order", "dead_time_s", "dead_time_u_s", "dead_time_kind")
         },
         "bench": meta.get("bench_records"),
+        "armed": meta.get("armed"),
+        "laid_in": fact(meta, "notes.bench"),
         "history": live.get("history"),
         "rate": live.get("rate"),
         "once": _ends(figures.get("interval_95")),
         "whole": _ends(figures.get("whole_night_95")),
         "counted": _counted(meta, figures),
         "level": _level(live),
-        "happened": _happened(log),
-        "marks": _marks(meta, log),
+        "happened": happened(log),
+        "marks": marks_h(log),
         "tonight": _tonight(meta, figures),
         "accepted": next((entry for entry in reversed(log) if entry["event"] == "verdict"), None),
         **_said(figures, hidden),
@@ -156,34 +145,6 @@ def _counted(meta: Mapping[str, Any], figures: Mapping[str, Any]) -> dict[str, A
 def _level(live: Mapping[str, Any]) -> dict[str, float]:
     means = [one for one in fact(live, "rate.mean") or [] if one]
     return {"range_pc": 100 * (max(means) - min(means)) / means[0]} if means else {}
-
-
-def _happened(log: list[dict[str, Any]]) -> list[dict[str, str]]:
-    found = [entry for entry in log if entry.get("event") in TOLD]
-    told = [{"utc": entry.get("utc", ""), "text": _text(entry)} for entry in found]
-    if len(told) <= MOST:
-        return told
-    more = {
-        "utc": told[MOST - 1]["utc"],
-        "text": f"and {len(told) - MOST + 1} more from here on, see `tercet log`",
-    }
-    return [*told[: MOST - 1], more]
-
-
-def _text(entry: Mapping[str, Any]) -> str:
-    return str(
-        entry.get("text") or f"{str(entry['event']).capitalize()}: {entry.get('reason', '')}".rstrip(": ")
-    )
-
-
-def _marks(meta: Mapping[str, Any], log: list[dict[str, Any]]) -> list[float]:
-    """Return when something was noticed, in hours since the first entry of the log."""
-    times = [
-        (entry, datetime.fromisoformat(entry["utc"]))
-        for entry in log
-        if entry.get("utc") and entry.get("run_ns")
-    ]
-    return [(at - times[0][1]).total_seconds() / 3600 for entry, at in times if entry["event"] in TOLD[:-2]]
 
 
 def _tonight(meta: Mapping[str, Any], figures: Mapping[str, Any]) -> dict[str, Any]:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import logging
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
@@ -79,6 +79,9 @@ class Night:
     darkness: Trouble = field(default_factory=Trouble)  # no light, though every device answers
     reopened_ns: dict[str, int] = field(default_factory=dict)  # by sensor: when it was last opened anew
     sat_out: int = 0  # stands that were measured again because of a rule
+    records: Mapping[str, Any] | None = None  # of the bench; without them nothing is looked at after a wait
+    counted_ns: int | None = None  # when the last gate closed
+    unready: bool = False  # what has to be looked at after a long wait was not, or was not in order
     astray: int = 0  # stands in a row in which an axis was not where it should be
 
     def become(self, state: State) -> None:

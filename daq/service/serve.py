@@ -13,7 +13,7 @@ from apscheduler.schedulers.background import BackgroundScheduler
 
 from daq.errors import DaqError
 from daq.itinerary import Itinerary
-from daq.service.arming import use_arming
+from daq.service.arming import arming_of, use_arming
 from daq.service.asked import Asked
 from daq.service.bookings import (
     GOING_ON,
@@ -110,6 +110,7 @@ def _start(
     reason = _refusal(booking, due)
     try:
         loaded = load(booking.file, booking.wishes)
+        armed = arming_of(loaded, lab)
         reason = reason or use_arming(loaded, lab)
         if reason:
             _tell(lab, booking, due, f"skipped: {reason}", say)
@@ -120,6 +121,7 @@ def _start(
             asked=asked,
             on_start=begins,
             until=end_of(booking, datetime.now(UTC)),
+            armed=armed,
             **outlets.wishes(),
         )
         _, ended = begin(loaded, lab, wanted)

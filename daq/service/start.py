@@ -61,6 +61,7 @@ class Wanted:
     on_feed: Callable[[Mapping[str, Any]], None] = lambda feed: None
     alive: Callable[[], None] = lambda: None
     until: datetime | None = None
+    armed: Mapping[str, Any] = field(default_factory=dict)  # by whom, when, without which records and why
 
 
 def begin(loaded: Loaded, lab: Path, wanted: Wanted) -> tuple[Path, str]:
@@ -78,7 +79,7 @@ def begin(loaded: Loaded, lab: Path, wanted: Wanted) -> tuple[Path, str]:
         _reference(devices, allowed=True)
         meta = record_of(loaded, itinerary, clock, devices, bench)
         folder = new_run_folder(lab, clock.utc_ns(), loaded.measurement.name)
-        meta |= {"run": folder.name, "bench_records": earlier(loaded, lab)}
+        meta |= {"run": folder.name, "bench_records": earlier(loaded, lab), "armed": dict(wanted.armed)}
         hidden = loaded.measurement.blinding
         if hidden is not None:
             meta |= promise(lab, folder.name, itinerary.slits, hidden.model_dump())
@@ -110,6 +111,7 @@ def resume(folder: Path, wanted: Wanted) -> tuple[Path, str]:
             night.judge.take(reading)
             night.running.add(reading)
             night.live.took(reading, night.judge.odd)
+            night.counted_ns = reading.gate_close_ns
         _let_lapse(night)
         place = place_after(itinerary, visits)
         return folder, through(night, wanted, lambda one: carry_out(one, place))
@@ -241,6 +243,7 @@ def night_of(
         alive=wanted.alive,
         shortage=lambda: shortage(folder, bench=bench),
         exhausted=lambda: exhausted(folder, bench=bench),
+        records=archive.meta.get("bench_records", {}) if archive.meta["counting"] == "counts" else None,
         until_utc_ns=None if wanted.until is None else round(wanted.until.timestamp() * 1e9),
     )
 

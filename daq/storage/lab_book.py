@@ -12,7 +12,7 @@ from daq.errors import StorageError
 
 BOOK = "lab.sqlite"
 BUSY_S = 10.0
-VERSION = 2
+VERSION = 3
 
 TABLES = """
 CREATE TABLE IF NOT EXISTS bookings (
@@ -27,7 +27,7 @@ CREATE TABLE IF NOT EXISTS requests (
   settled_utc TEXT, outcome TEXT, about TEXT NOT NULL DEFAULT '');
 CREATE TABLE IF NOT EXISTS armings (
   id INTEGER PRIMARY KEY, file TEXT NOT NULL, sha256 TEXT NOT NULL, who TEXT NOT NULL, utc TEXT NOT NULL,
-  expires_utc TEXT NOT NULL, used_utc TEXT);
+  expires_utc TEXT NOT NULL, used_utc TEXT, without TEXT NOT NULL DEFAULT '{}');
 CREATE TABLE IF NOT EXISTS messages (
   id INTEGER PRIMARY KEY, utc TEXT NOT NULL, kind TEXT NOT NULL, subject TEXT NOT NULL, body TEXT NOT NULL,
   sent_utc TEXT, error TEXT);
@@ -38,8 +38,11 @@ CREATE TABLE IF NOT EXISTS sessions (
   id INTEGER PRIMARY KEY, token_sha256 TEXT NOT NULL UNIQUE, name TEXT NOT NULL, since_utc TEXT NOT NULL,
   expires_utc TEXT NOT NULL);
 """
-# From version 1: `about`, what a request is about (the warning to acknowledge).
-UPGRADE = "ALTER TABLE requests ADD COLUMN about TEXT NOT NULL DEFAULT '';"
+# What came later: what a request is about (the warning to acknowledge); what an arming does without, and why.
+LATER = (
+    ("requests", "about", "TEXT NOT NULL DEFAULT ''"),
+    ("armings", "without", "TEXT NOT NULL DEFAULT '{}'"),
+)
 
 
 @contextmanager
@@ -75,9 +78,13 @@ def _bring_up(connection: sqlite3.Connection) -> None:
         return
     connection.execute("BEGIN IMMEDIATE")  # only one process does this
     (version,) = connection.execute("PRAGMA user_version").fetchone()
-    steps = (UPGRADE if version == 1 else "", TABLES, f"PRAGMA user_version = {VERSION}")
-    for statement in ";".join(steps).split(";") if version < VERSION else ():
+    for statement in TABLES.split(";") if version < VERSION else ():
         connection.execute(statement)
+    for table, column, form in LATER if version < VERSION else ():
+        known = {row["name"] for row in connection.execute(f"PRAGMA table_info({table})")}
+        if column not in known:
+            connection.execute(f"ALTER TABLE {table} ADD COLUMN {column} {form}")
+    connection.execute(f"PRAGMA user_version = {VERSION}")
     connection.commit()
 
 

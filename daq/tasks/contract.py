@@ -13,12 +13,11 @@ from daq.description import Measurement, Rig
 from daq.errors import DaqError
 from daq.estimate.arrays import FloatArray
 from daq.estimate.counting import true_rate_hz
-from daq.records import Reading
+from daq.records import BENCH_VISIT, Reading
 from daq.tasks.yardstick import Yardstick
 
 Verdict = Literal["pass", "doubtful", "fail"]
 ODD_P = 1e-3  # a fit less probable than this is doubtful
-BENCH_VISIT = 6  # the reason of a visit (daq.records.REASONS)
 ANYWHERE = -1  # the opening of a visit that stands at a place of the mask instead
 
 

@@ -21,7 +21,7 @@ def test_recovery_is_limited_by_elapsed_time_not_by_tries(kind):
         assert reaction(kind, 0, limit_s + 1)[0] is Action.PARK
 
 
-@pytest.mark.parametrize("kind", ["interlock", "overload", "reference", "alarm", "labels"])
+@pytest.mark.parametrize("kind", ["interlock", "overload", "reference", "alarm", "labels", "flank"])
 def test_what_may_do_harm_is_cleared_at_the_bench_only(kind):
     assert reaction(kind, 0, 0.0)[0] is Action.HOLD_AT_BENCH
 

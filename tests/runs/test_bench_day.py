@@ -9,7 +9,9 @@ from typing import Any
 
 import pytest
 
+from daq import open_visits
 from daq.cli import main
+from daq.records import CLOSED_VISIT, FLANK_VISIT
 from tests.examples import CONFIGS
 
 
@@ -62,3 +64,34 @@ def test_the_night_meets_its_forecast_and_its_record_quotes_the_bench(
     assert abs(night["kappa"] - night["truth_kappa"]) < 4 * night["kappa_se"]
     quoted = json.loads((Path(night["run"]) / "record.json").read_text())["bench_records"]
     assert {"dark", "pilot", "register", "dry-lap"} <= set(quoted)
+    assert main(["report", night["run"]]) == 0
+    page = (Path(night["run"]) / "report.html").read_text()
+    assert "The drift is that of pilot/" in page
+    assert "The openings stand where register/" in page
+
+
+def test_after_eleven_minutes_without_a_link_flanks_and_dark_are_looked_at_first(
+    day: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    fault = '[[fault]]\nkind = "drop"\ndevice = "stages"\nseconds = 660.0\nat_s = 400.0\n'
+    (day / "faults.toml").write_text(fault)
+    lab = str(day / "lab")
+
+    status, night = told(
+        capsys,
+        *("rehearse", str(day / "night.toml"), "--faults", str(day / "faults.toml")),
+        *("--link", "direct", "--into", lab),
+    )
+    _, sound = told(capsys, "verify", night["run"])
+    _, again = told(capsys, "replay", night["run"], "--into", str(day / "again"))
+    assert main(["report", night["run"]]) == 0
+
+    assert status == 0
+    visits = open_visits(night["run"])
+    unplanned = visits["reason"].values[visits["visit"].values < 0].tolist()
+    assert unplanned == [FLANK_VISIT] * 4 + [CLOSED_VISIT]
+    assert (sound["ok"], again["same_digest"]) == (True, True)
+    said = json.loads((Path(night["run"]) / "report.json").read_text())["happened"]
+    (ready,) = (one["text"] for one in said if "without a count" in one["text"])
+    assert "A stands" in ready and "off its middle" in ready and "by dark/" in ready
+    assert "min without a count: A stands" in (Path(night["run"]) / "report.html").read_text()

@@ -10,7 +10,7 @@ from pathlib import Path
 import pytest
 
 from daq.cli import main
-from daq.service.arming import CAUTIONS, checks, confirm, use_arming
+from daq.service.arming import CAUTIONS, arming_of, checks, confirm, use_arming
 from daq.service.bench_records import set_up_of
 from daq.service.load import Loaded, load
 from daq.service.settings import Messages
@@ -77,6 +77,16 @@ def test_one_wrong_answer_does_not_arm(real, tmp_path, wrong, words):
     assert refused is not None
     assert words in refused
     assert "nobody has armed" in use_arming(real, tmp_path)
+
+
+def test_an_arming_keeps_what_it_does_without_and_why(real, tmp_path):
+    without = {"pilot": "the source was watched by hand"}
+
+    confirm(real, tmp_path, MAIL, "night watch", a_person(tmp_path), sent, without=without)
+
+    armed = arming_of(real, tmp_path)
+    assert (armed["by"], armed["without"]) == ("night watch", without)
+    assert arming_of(load(CONFIGS / "lantern.toml"), tmp_path) == {}
 
 
 def test_an_arming_expires(real, tmp_path):

@@ -57,7 +57,9 @@ def facts(run: Path) -> dict[str, Any]:
             "sentence": "steady",
         }
     }
-    return {**found, **left_out, "bench": bench, "kappa_with_excluded": 1e-4}
+    armed = {"by": "night watch", "utc": "2026-12-01T16:00:00Z", "without": {"register": "the chip is new"}}
+    more = {"bench": bench, "armed": armed, "laid_in": ["The drift is that of pilot/1."]}
+    return {**found, **left_out, **more, "kappa_with_excluded": 1e-4}
 
 
 def leaves(value: Any, path: tuple[Any, ...] = ()) -> Iterator[tuple[Any, ...]]:
@@ -225,3 +227,15 @@ def test_text_from_people_cannot_become_html(facts: dict[str, Any]) -> None:
     page = html_text(document({**facts, "title": "<script>alert(1)</script>"}), "<svg></svg>")
 
     assert "<script>" not in page
+
+
+def test_what_a_start_was_armed_without_is_told_with_its_reason(facts: dict[str, Any]) -> None:
+    told = list(words(document(facts)))
+
+    assert "Armed by night watch, 2026-12-01T16:00:00Z." in told
+    assert "Armed without a valid record of register: the chip is new." in told
+    assert "The drift is that of pilot/1." in told
+
+
+def test_records_that_a_plan_did_not_take_are_told_to_be_unused(facts: dict[str, Any]) -> None:
+    assert "Plan and estimate took none of them." in list(words(document(facts | {"laid_in": None})))
