@@ -67,8 +67,8 @@ def news(
     mark = _digest(repr(scene))
     if seen.get("mark") == mark:
         raise PreventUpdate
-    parts, digests = _parts(scene)
-    fresh = {name: part for name, part in parts.items() if seen.get(name) != digests[name]}
+    told, digests = _parts(scene)
+    fresh = {name: _drawn(name, told[name]) for name in told if seen.get(name) != digests[name]}
     return fresh | {"seen": digests | {"mark": mark}}
 
 
@@ -102,15 +102,22 @@ def _scene(folder: Path, run: str | None, chosen: Any, now: datetime, person: Pe
 
 
 @lru_cache(maxsize=32)
-def _parts(scene: _Scene) -> tuple[dict[str, Any], dict[str, str]]:
-    """Return the parts of the page as plain data, and their digests: twenty browsers cost as one does."""
+def _parts(scene: _Scene) -> tuple[dict[str, str], dict[str, str]]:
+    """Return what the parts of the page tell, as JSON, and its digests; twenty pages of a run cost as one."""
     runs = [{"name": name, "shown": name == scene.run} for name in reversed(scene.names)]
     parts = _said(scene) | {
         "runs": runs,
         "desk": desk_view(scene.desk, scene.person, requests_of(scene.folder, "")),
     }
-    plain = json.loads(to_json_plotly({name: render(name, part) for name, part in parts.items()}))
-    return plain, {name: _digest(part) for name, part in parts.items()}
+    told = {name: json.dumps(part) for name, part in parts.items()}
+    return told, {name: _digest(text) for name, text in told.items()}
+
+
+@lru_cache(maxsize=256)
+def _drawn(name: str, told: str) -> Any:
+    """Return a part of the page as plain data; one that tells the same again is not drawn again."""
+    part = json.loads(told)
+    return part if name in CURVES else json.loads(to_json_plotly(render(name, part)))
 
 
 def _said(scene: _Scene) -> dict[str, Any]:
@@ -157,5 +164,5 @@ def _line(said: dict[str, Any]) -> dict[str, Any]:
     return {key: verdict.pop(key) for key in ("line", "ends_utc", "progress")}
 
 
-def _digest(part: Any) -> str:
-    return hashlib.blake2b(json.dumps(part).encode(), digest_size=4).hexdigest()
+def _digest(text: str) -> str:
+    return hashlib.blake2b(text.encode(), digest_size=4).hexdigest()
