@@ -8,6 +8,7 @@ import sys
 import time
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import ExitStack, contextmanager
+from dataclasses import replace
 from pathlib import Path
 from types import FrameType
 from typing import Any, TextIO
@@ -25,6 +26,7 @@ from daq.service.ending import REASONS
 from daq.service.figures import figures_of
 from daq.service.load import Loaded, config_dir, load
 from daq.service.night import COMPLETE
+from daq.service.outlets import Outlets, outlets_of_run
 from daq.service.owner import refuse_owned
 from daq.service.page import PageProcess, make_lab
 from daq.service.progress import Progress
@@ -52,8 +54,10 @@ def _carry_out(arguments: argparse.Namespace, transport: str, file: Path) -> Ans
     with ExitStack() as stack:
         page = show_page(stack, lab, sys.stderr if arguments.json else sys.stdout) if arguments.page else None
         watch = Watch()
+        outlets = None if transport else stack.enter_context(outlets_of_run(lab))
         with interrupts() as asked:
             wanted = Wanted(transport, getattr(arguments, "home", False), asked, watch.begins, watch.took)
+            wanted = wanted if outlets is None else _told_outside(wanted, outlets)
             folder, ended = begin(loaded, lab, wanted) if loaded else resume(arguments.resume, wanted)
         watch.done()
         figures = figures_of(folder)
@@ -68,6 +72,21 @@ def _carry_out(arguments: argparse.Namespace, transport: str, file: Path) -> Ans
             answer = Answer(answer.status, figures)
             _stay(page)
     return answer
+
+
+def _told_outside(wanted: Wanted, outlets: Outlets) -> Wanted:
+    """Return wishes that also tell the world, as a service does."""
+    calls = outlets.wishes()
+
+    def begins(folder: Path, itinerary: Itinerary) -> None:
+        wanted.on_start(folder, itinerary)
+        outlets.begins(itinerary)
+
+    def took(reading: Reading) -> None:
+        wanted.on_visit(reading)
+        calls["on_visit"](reading)
+
+    return replace(wanted, **calls | {"on_start": begins, "on_visit": took})
 
 
 def _loaded(arguments: argparse.Namespace, file: Path) -> Loaded:

@@ -49,3 +49,21 @@ def starts(times: Times, after: datetime) -> Iterator[datetime]:
 def missed(times: Times, due: datetime, now: datetime) -> bool:
     """Return whether a start that was due is too late to make up for."""
     return (now - due).total_seconds() > times.late_s
+
+
+def latest(at: str, zone: str, now: datetime) -> datetime:
+    """Return when it was that local time last, UTC."""
+    today = _on(0, at, zone, now)
+    return today if today <= now else _on(-1, at, zone, now)
+
+
+def coming(at: str, zone: str, now: datetime) -> datetime:
+    """Return when it will be that local time next, UTC."""
+    today = _on(0, at, zone, now)
+    return today if today > now else _on(1, at, zone, now)
+
+
+def _on(days: int, at: str, zone: str, now: datetime) -> datetime:
+    where = ZoneInfo(zone)
+    day = now.astimezone(where).date() + timedelta(days=days)
+    return datetime.combine(day, time.fromisoformat(at), where).astimezone(UTC)

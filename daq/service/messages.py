@@ -4,18 +4,20 @@ from __future__ import annotations
 
 import logging
 from collections.abc import Callable, Sequence
-from datetime import UTC, datetime, time, timedelta
+from datetime import UTC, datetime, timedelta
 from pathlib import Path
 from typing import Any
 from zoneinfo import ZoneInfo
 
 from daq.errors import DescriptionError
+from daq.service.calendar import latest
 from daq.service.requests import utc_now
 from daq.service.settings import Messages, with_secrets
 from daq.storage.lab_book import insert, select, update
 
-URGENT, NOTE, TEST, DIGEST = "urgent", "note", "test", "digest"
-AT_ONCE = (URGENT, TEST)
+URGENT, NOTE, TEST, DIGEST, WELL = "urgent", "note", "test", "digest", "well"
+AT_ONCE = (URGENT, TEST, WELL)
+EVENING_LATE = timedelta(hours=1)  # a word for the evening is none later
 SILENT_REPEAT_S = 3600.0
 MORE_WAIT = "More has happened than may be sent tonight: look at the page, or at the digest in the morning."
 Send = Callable[[Sequence[str], str, str], str]  # addresses, subject, body -> what went wrong, or nothing
@@ -38,12 +40,12 @@ def post(lab: Path, kind: str, subject: str, body: str) -> int:
 def send_urgent(lab: Path, messages: Messages, now: datetime, send: Send) -> int:
     """Send what is urgent, oldest first, within the limits of hour and night; return how many went."""
     went = 0
-    for row in select(lab, "messages", "sent_utc IS NULL AND kind IN (?, ?)", AT_ONCE):
+    for row in select(lab, "messages", "sent_utc IS NULL AND kind IN (?, ?, ?)", AT_ONCE):
         body = f"{row['body']}\n\n({row['utc']})"
         if row["kind"] == URGENT:
             left = _left(lab, messages, now)
             if left <= 0:
-                break
+                continue
             body += f"\n\n{MORE_WAIT}" if left == 1 and _waiting(lab) > 1 else ""
         if not _sent(lab, [row], send(_filled(messages.urgent), row["subject"], body), now):
             break
@@ -52,7 +54,7 @@ def send_urgent(lab: Path, messages: Messages, now: datetime, send: Send) -> int
 
 
 def send_digest(
-    lab: Path, messages: Messages, now: datetime, since: datetime, summary: str, send: Send
+    lab: Path, messages: Messages, now: datetime, since: datetime, summary: Callable[[], str], send: Send
 ) -> bool:
     """Send the morning's digest when it is due; return whether one went.
 
@@ -61,19 +63,47 @@ def send_digest(
     since
         When the service started: a morning before it has no digest.
     summary
-        What the lab did, in words.
+        What ran, waits and is armed, in words.
     """
-    due = _latest_morning(messages, now)
+    due = latest(messages.digest_at, messages.zone, now)
     before = select(lab, "messages", "kind = ?", (DIGEST,))
     last = max([since, *(datetime.fromisoformat(row["sent_utc"]) for row in before)])
     if due <= last:
         return False
+    local = due.astimezone(ZoneInfo(messages.zone))
+    title = f"the day to {local:%Y-%m-%d %H:%M} {messages.zone}"
+    return send_notes(lab, messages, now, title, summary(), send)
+
+
+def send_notes(lab: Path, messages: Messages, now: datetime, title: str, summary: str, send: Send) -> bool:
+    """Send everything that waits as one message below a summary; return whether it went."""
     rows = select(lab, "messages", "sent_utc IS NULL")
-    lines = [summary, "", *(f"{row['utc']}  {row['subject']}\n{row['body']}\n" for row in rows)]
-    subject, body = f"tercet: the night to {due:%Y-%m-%d %H:%M} UTC", "\n".join(lines)
+    told = (f"{row['utc']}  {row['subject']}\n{row['body']}\n" for row in rows)
+    subject, body = f"tercet: {title}", "\n".join([summary, "", *told])
     if not _sent(lab, rows, send(_filled(messages.digest or messages.urgent), subject, body), now):
         return False
     insert(lab, "messages", utc=utc_now(), kind=DIGEST, subject=subject, body=body, sent_utc=_text(now))
+    return True
+
+
+def post_evening(
+    lab: Path, messages: Messages, now: datetime, since: datetime, says: Callable[[], tuple[str, str] | None]
+) -> bool:
+    """Leave the word before a night, subject and text, when its time has come; return whether there is one.
+
+    Parameters
+    ----------
+    since
+        When the service started: an evening before it has no word.
+    """
+    if not messages.evening_at:
+        return False
+    due = latest(messages.evening_at, messages.zone, now)
+    told = select(lab, "messages", "kind = ? AND utc >= ?", (WELL, _text(due)))
+    word = None if told or due <= since or now - due > EVENING_LATE else says()
+    if word is None:
+        return False
+    insert(lab, "messages", utc=_text(now), kind=WELL, subject=word[0], body=word[1])
     return True
 
 
@@ -108,22 +138,12 @@ def _left(lab: Path, messages: Messages, now: datetime) -> int:
     """Return how many urgent messages may still go now."""
     where = "kind = ? AND sent_utc >= ?"
     hour = select(lab, "messages", where, (URGENT, _text(now - timedelta(hours=1))))
-    night = select(lab, "messages", where, (URGENT, _text(_latest_morning(messages, now))))
+    night = select(lab, "messages", where, (URGENT, _text(latest(messages.digest_at, messages.zone, now))))
     return min(messages.an_hour - len(hour), messages.a_night - len(night))
 
 
 def _waiting(lab: Path) -> int:
     return len(select(lab, "messages", "sent_utc IS NULL AND kind = ?", (URGENT,)))
-
-
-def _latest_morning(messages: Messages, now: datetime) -> datetime:
-    """Return the latest time of the digest that is past, UTC."""
-    zone = ZoneInfo(messages.zone)
-    local = now.astimezone(zone)
-    at = time.fromisoformat(messages.digest_at)
-    today = datetime.combine(local.date(), at, zone).astimezone(UTC)
-    yesterday = datetime.combine(local.date() - timedelta(days=1), at, zone).astimezone(UTC)
-    return today if today <= now else yesterday
 
 
 def _text(moment: datetime) -> str:

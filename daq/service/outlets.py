@@ -3,7 +3,8 @@
 from __future__ import annotations
 
 import logging
-from collections.abc import Mapping
+from collections.abc import Iterator, Mapping
+from contextlib import contextmanager
 from datetime import UTC, datetime
 from pathlib import Path
 from typing import Any
@@ -15,12 +16,13 @@ from daq.estimate.blinding import Blinding
 from daq.estimate.standing import Change
 from daq.itinerary import Itinerary
 from daq.records import Reading
+from daq.service.daily import evening_word, summary_of
 from daq.service.heartbeat import Pulse, send_heartbeat
-from daq.service.messages import by_apprise, send_digest, send_urgent
+from daq.service.messages import by_apprise, post_evening, send_digest, send_notes, send_urgent
 from daq.service.metrics import Tally, write_metrics
 from daq.service.settings import LabSettings, settings_of
 from daq.service.systemd import Supervisor
-from daq.service.telling import summary_of, tell_people
+from daq.service.telling import tell_people
 
 log = logging.getLogger(__name__)
 
@@ -33,7 +35,7 @@ class Outlets:
     def __init__(self, lab: Path, scheduler: BackgroundScheduler) -> None:
         self._lab, self._since = lab, datetime.now(UTC)
         self._pulse, self._supervisor, self._tally = Pulse(), Supervisor(), Tally()
-        scheduler.add_job(self.send, "interval", seconds=SEND_EVERY_S, max_instances=1)
+        self._sending = scheduler.add_job(self.send, "interval", seconds=SEND_EVERY_S, max_instances=1)
         heartbeat = self._settings().heartbeat
         if heartbeat is not None:
             every_s = heartbeat.every_s
@@ -71,8 +73,23 @@ class Outlets:
             if messages is None:
                 return
             now = datetime.now(UTC)
-            send_urgent(self._lab, messages, now, by_apprise)
-            send_digest(self._lab, messages, now, self._since, summary_of(self._lab, now), by_apprise)
+            lab, since, zone = self._lab, self._since, messages.zone
+            post_evening(lab, messages, now, since, lambda: evening_word(lab, messages, now))
+            send_urgent(lab, messages, now, by_apprise)
+            send_digest(lab, messages, now, since, lambda: summary_of(lab, zone, now), by_apprise)
+        except DaqError as error:
+            log.error("%s", error)
+
+    def send_rest(self, title: str) -> None:
+        """Send what is urgent, and everything else as one message under a title; it waits if it cannot go."""
+        self.send()
+        try:
+            messages = self._settings().messages
+            if messages is not None:
+                now = datetime.now(UTC)
+                send_notes(
+                    self._lab, messages, now, title, summary_of(self._lab, messages.zone, now), by_apprise
+                )
         except DaqError as error:
             log.error("%s", error)
 
@@ -97,6 +114,8 @@ class Outlets:
     def _warned(self, run: str, change: Change, quietly: bool) -> None:
         try:
             tell_people(self._lab, run, change, quietly=quietly)
+            if change.warning.says.wakes and not quietly:
+                self._sending.modify(next_run_time=datetime.now(UTC))  # at once, but beside the run
         except DaqError as error:
             log.error("%s", error)
 
@@ -110,3 +129,28 @@ class Outlets:
         if feed is not None and feed["visit"] is not None:
             visit = feed["visit"]
             self._supervisor.status(f"{feed['state']}, visit {visit['number'] + 1} of {visit['of']}")
+
+
+@contextmanager
+def outlets_of_run(lab: Path) -> Iterator[Outlets | None]:
+    """Give a run in the foreground what a service has, where the lab says whom to tell; None where not.
+
+    When it is over, urgent messages and the rest are sent; what cannot be sent waits in the lab book.
+
+    Raises
+    ------
+    DescriptionError
+        When the settings of the lab cannot be read.
+    """
+    settings = settings_of(lab)
+    if settings.messages is None and settings.heartbeat is None:
+        yield None
+        return
+    scheduler = BackgroundScheduler(timezone=UTC)
+    outlets = Outlets(lab, scheduler)
+    scheduler.start()
+    try:
+        yield outlets
+    finally:
+        scheduler.shutdown(wait=True)
+        outlets.send_rest("a run in the foreground is over")

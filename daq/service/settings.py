@@ -10,7 +10,7 @@ from pathlib import Path
 from typing import Annotated
 from zoneinfo import ZoneInfo, ZoneInfoNotFoundError
 
-from pydantic import Field, ValidationError, field_validator, model_validator
+from pydantic import Field, ValidationError, ValidationInfo, field_validator, model_validator
 
 from daq.description.problems import Table, every_problem
 from daq.errors import DescriptionError
@@ -23,20 +23,24 @@ _PASSWORD_IN_PLACE = re.compile(r"://[^/?@\s]*:(?!\$\{)[^/?@\s]+@|[?&](pass|pass
 class Messages(Table):
     """Where messages go: `urgent` at once, within limits; everything else in the morning's digest.
 
+    `evening_at`: when "armed and well" is said before a night with a run in it; "" for never.
+
     An address is a URL as the library apprise knows it, like "mailto://host:587?from=...&to=...".
     """
 
     urgent: Annotated[tuple[str, ...], Field(min_length=1)]
     digest: tuple[str, ...] = ()
     digest_at: str = "08:00"
+    evening_at: str = "22:00"
     zone: str = "UTC"
     an_hour: Annotated[int, Field(ge=1, le=60)] = 3
     a_night: Annotated[int, Field(ge=1, le=100)] = 6
 
-    @field_validator("digest_at")
+    @field_validator("digest_at", "evening_at")
     @classmethod
-    def _is_a_time(cls, value: str) -> str:
-        time.fromisoformat(value)
+    def _is_a_time(cls, value: str, info: ValidationInfo) -> str:
+        if value or info.field_name == "digest_at":
+            time.fromisoformat(value)
         return value
 
     @field_validator("zone")

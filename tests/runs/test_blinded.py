@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import os
 import re
 import shutil
 from collections.abc import Callable, Iterator, Mapping
@@ -18,10 +19,12 @@ from daq.cli.toml import toml_text
 from daq.cli.words import parser
 from daq.estimate import Blinding, estimate_run
 from daq.estimate.dataset import HIDDEN, readings_of_dataset
+from daq.service.daily import evening_word, summary_of
 from daq.service.metrics import Tally, metrics_text
-from daq.service.telling import summary_of
+from daq.service.settings import Messages
 from daq.storage.blinding import read_events, state_of
 from daq.storage.feed import read_feed
+from daq.storage.lock import lock_run
 from daq.storage.log import read_log
 from daq.storage.reader import open_visits, read_meta
 from dashboard.news import news
@@ -230,15 +233,19 @@ def test_metrics_and_digest_give_nothing_away(run: Path) -> None:
         tally.add(reading)
 
     text = metrics_text(feed, tally, 10**9)
-    digest = summary_of(run.parents[1], datetime.now(UTC))
+    digest = summary_of(run.parents[1], "UTC", datetime.now(UTC))
+    handle = lock_run(run)  # as if it were going on
+    evening = evening_word(run.parents[1], Messages(urgent=("mailto://lab.example",)), datetime.now(UTC))
+    os.close(handle)
 
     high = visits["opening"].values == 7
     detections = float(visits["values"].values[high, 0].sum())
     secrets = Secrets(run)
-    assert secrets.found_in([text, digest]) == []
+    assert secrets.found_in([text, digest, *(evening or ())]) == []
     assert detections not in set(numbers(text))
     assert float(visits["values"].values[visits["opening"].values == 3, 0].sum()) in set(numbers(text))
     assert "kappa + offset" in digest
+    assert evening is not None and "kappa + offset" in evening[1]
     assert "tercet_kappa_ratio" not in text
 
 
