@@ -2,6 +2,10 @@
 
 from __future__ import annotations
 
+import re
+
+_QUOTED = re.compile(r"""b?'(?:[^'\\]|\\.)*'|b?"(?:[^"\\]|\\.)*\"""")
+
 
 class DaqError(Exception):
     """An error that a person can act on.
@@ -55,3 +59,16 @@ class StorageError(DaqError):
     """An archive that cannot be written or read."""
 
     exit_status = 4
+
+
+def without_replies(error: DeviceError) -> DeviceError:
+    """Return an error that quotes nothing a device replied: it may be a count that is to stay hidden."""
+    garbled = "it gave a reply that makes no sense"
+    what = garbled if error.kind == "garbage" else _QUOTED.sub("...", error.what)
+    return DeviceError(what, where=error.where, remedy=error.remedy, kind=error.kind)
+
+
+def in_short(error: DaqError) -> str:
+    """Return an error as one sentence, without the advice that is for a run that has given up."""
+    place = f"{error.where}: " if error.where else ""
+    return f"{place}{error.what}".rstrip(".") + "."

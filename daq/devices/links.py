@@ -17,7 +17,7 @@ from daq.devices.lines import CHECK, Lines
 from daq.devices.locks import Hold, hold
 from daq.devices.turns import Turn
 from daq.devices.wire import Wire
-from daq.errors import DeviceError
+from daq.errors import DeviceError, in_short, without_replies
 from daq.ports import Clock
 
 log = logging.getLogger(__name__)
@@ -170,7 +170,7 @@ class Link:
                 tries -= 1
                 if not tries or error.kind not in ("timeout", "garbage"):
                     raise
-                log.warning("%s; asking again", error)
+                log.warning("%s It is asked again.", in_short(without_replies(error)))
 
     def _ask_once(self, text: str, pattern: re.Pattern[str], timeout_s: float, urgent: int) -> re.Match[str]:
         self._begin(text, urgent)
@@ -270,7 +270,8 @@ class Link:
     def _drop(self, unasked: bytes) -> None:
         if unasked:
             self.stale += max(1, unasked.count(self._end))
-            log.warning("%s: out of step, dropped %r", self._where, unasked[:80])
+            log.warning("%s: out of step, dropped %d bytes", self._where, len(unasked))
+            log.debug("%s > %r", self._where, unasked[:80])
 
     def _opened(self) -> Lines:
         if self._lines is None:

@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import json
 import secrets
-import shutil
 from collections.abc import Callable, Iterator, Mapping
 from dataclasses import dataclass
 from datetime import UTC, datetime, timedelta
@@ -21,13 +20,14 @@ from daq.service.bench_records import newest
 from daq.service.load import NO_WISHES, Loaded, load_run
 from daq.service.messages import TEST, Send, by_apprise, post, send_urgent
 from daq.service.requests import utc_now
+from daq.service.room import events_due, wanted_bytes
 from daq.service.settings import Messages
 from daq.storage.lab import runs
 from daq.storage.lab_book import insert, select, update
 from daq.storage.reader import read_meta
+from daq.storage.space import free_bytes
 
 VALID_H = 24
-BYTES_A_VISIT = 2_000  # generous: a visit of counts takes about 300 bytes, journal and Zarr together
 EARLIEST = datetime(2026, 1, 1, tzinfo=UTC)  # a clock before this was never set
 
 CAUTIONS = (
@@ -61,7 +61,7 @@ def checks(
     """
     return [
         *_device_checks(loaded),
-        _disk(lab, len(loaded.itinerary())),
+        _disk(lab, loaded),
         _clock(datetime.now(UTC)),
         _rehearsed(loaded, lab),
         *_bench_checks(loaded, lab, without or {}),
@@ -180,9 +180,10 @@ def _sensor_checks(devices: Devices) -> Iterator[Check]:
         yield Check(f"sensor {sensor.name}", bool(values), values or "no value")
 
 
-def _disk(lab: Path, visits: int) -> Check:
-    free = shutil.disk_usage(lab if lab.exists() else lab.parent).free
-    needed = visits * BYTES_A_VISIT + 10**9
+def _disk(lab: Path, loaded: Loaded) -> Check:
+    itinerary = loaded.itinerary()
+    free = free_bytes(lab)
+    needed = wanted_bytes(len(itinerary), events_due(itinerary, loaded.rig.list_mode))
     return Check(
         "disk", free > needed, f"{free / 1e9:.1f} GB free, {needed / 1e9:.1f} GB wanted for the night"
     )

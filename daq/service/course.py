@@ -6,7 +6,7 @@ from collections.abc import Iterator
 
 import numpy as np
 
-from daq.errors import DeviceError, StorageError
+from daq.errors import DeviceError, StorageError, in_short, without_replies
 from daq.estimate.stopping import END_TIME, PLANNED
 from daq.itinerary import Itinerary
 from daq.reactions import Action, reaction
@@ -209,27 +209,22 @@ def _trouble_of(night: Night, error: DeviceError) -> DeviceError:
 
 def react(night: Night, error: DeviceError) -> None:
     """Do about a fault what the table says; raises it when that is to park."""
+    error = without_replies(error) if night.blinding.hides else error
     trouble = night.darkness if error.kind == "no counts" else night.trouble
     now_ns = night.clock.now_ns()
     if not trouble.tries:
         trouble.began_ns = now_ns
-    tell(night, "fault", text=_said(error), kind=error.kind)
+    tell(night, "fault", text=in_short(error), kind=error.kind)
     elapsed_s = (now_ns - trouble.began_ns) / 1e9
     action, wait_s = reaction(error.kind, trouble.tries, elapsed_s)
     if action is Action.PARK:
         night.become(State.PARKING)
         raise error
     if action is Action.HOLD_AT_BENCH:
-        hold(night, error.kind, f"{_said(error)}")
+        hold(night, error.kind, in_short(error))
         return
-    trouble.tries, trouble.why = trouble.tries + 1, _said(error)
+    trouble.tries, trouble.why = trouble.tries + 1, in_short(error)
     _recover(night, action, wait_s)
-
-
-def _said(error: DeviceError) -> str:
-    """Return a fault as one sentence, without the advice that is for a run that has given up."""
-    place = f"{error.where}: " if error.where else ""
-    return f"{place}{error.what}".rstrip(".") + "."
 
 
 def _recover(night: Night, action: Action, wait_s: float) -> None:

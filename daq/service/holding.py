@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import logging
 
-from daq.errors import DeviceError
+from daq.errors import DeviceError, in_short, without_replies
 from daq.ports import Device
 from daq.reactions import TABLE, Action
 from daq.records import Reading
@@ -146,7 +146,7 @@ def reopen(device: Device) -> None:
     try:
         device.open()
     except DeviceError as error:
-        log.warning("%s", error)
+        log.warning("%s It is tried again.", in_short(without_replies(error)))
 
 
 def reopen_silent(night: Night, reading: Reading) -> None:

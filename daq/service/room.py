@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from pathlib import Path
 
+from daq.itinerary import Itinerary
 from daq.ports import Bench
 from daq.storage.layout import CHUNK
 from daq.storage.space import free_bytes, needed_bytes
@@ -33,9 +35,23 @@ def exhausted(folder: Path, end_bytes: int = END_BYTES, bench: Bench | None = No
     return f"Only {free / 1e9:.2f} GB are free on the disk; the run ends below {end_bytes / 1e9:g} GB."
 
 
-def room_warning(folder: Path, visits: int) -> str:
-    """Return a sentence when the whole night may not fit above the room at which a run holds."""
-    free, wanted = free_bytes(folder), needed_bytes(visits, CHUNK) + HOLD_BYTES
+def room_warning(folder: Path, visits: int, events: float = 0.0) -> str:
+    """Return a sentence when what is left of a night may not fit above the room at which a run holds."""
+    free, wanted = free_bytes(folder), wanted_bytes(visits, events)
     if free >= wanted:
         return ""
-    return f"{free / 1e9:.2f} GB are free on the disk, and the whole night may want {wanted / 1e9:.2f} GB."
+    wants = f"what is left of the night may want {wanted / 1e9:.2f} GB"
+    return f"{free / 1e9:.2f} GB are free on the disk, and {wants}."
+
+
+def wanted_bytes(visits: int, events: float = 0.0) -> int:
+    """Return how much room has to be free for so many visits and events, with what a run holds at."""
+    return needed_bytes(visits, CHUNK, round(events)) + HOLD_BYTES
+
+
+def events_due(itinerary: Itinerary, list_mode: Mapping[str, float] | None) -> float:
+    """Return how many events a plan brings in list mode, every channel taken as bright as the detector."""
+    if list_mode is None:
+        return 0.0
+    rates_hz = itinerary.rates_hz[itinerary.position_index, itinerary.opening_index]
+    return float(rates_hz @ itinerary.dwell_s) * list_mode["channels"]

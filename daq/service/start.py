@@ -38,7 +38,7 @@ from daq.service.night import AT_REQUEST, COMPLETE, STOPPED, WITH_PROGRAM, Night
 from daq.service.parking import BENCH_FILE, park, stop_now
 from daq.service.record import record_of
 from daq.service.requests import lapse, open_requests, settle
-from daq.service.room import exhausted, room_warning, shortage
+from daq.service.room import events_due, exhausted, room_warning, shortage
 from daq.storage.digest import digest, gate_digest
 from daq.storage.lab import new_run_folder
 from daq.storage.log import RunLog, read_log
@@ -215,12 +215,13 @@ def night_of(
     blinding = at_hand(folder, archive.meta)
     plan = replace(plan_of(itinerary, loaded.measurement), blinding=blinding)
     rules = rules_of(loaded.measurement.quality.model_dump())
+    many, events = len(itinerary), events_due(itinerary, loaded.rig.list_mode)
     live = Live(
         folder,
         archive.meta,
         itinerary,
         clock,
-        lambda: room_warning(folder, len(itinerary)),
+        lambda: room_warning(folder, left := max(many - archive.rows, 0), events * left / many),
         _restarts(folder, clock),
         wanted.on_feed,
     )

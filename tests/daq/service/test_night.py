@@ -7,7 +7,7 @@ from itertools import pairwise
 import pytest
 
 from daq.errors import DaqError, DeviceError, StorageError
-from daq.estimate import Judge, Rules, Running
+from daq.estimate import Blinding, Judge, Rules, Running
 from daq.itinerary import compose, plan_of
 from daq.sequencer import State
 from daq.service.asked import Asked
@@ -93,6 +93,30 @@ def test_a_lost_link_is_closed_and_opened_again(tmp_path):
         "detector close",
         "counter close",
     ]
+
+
+@pytest.mark.parametrize("state", ["open", "blinded"])
+@pytest.mark.parametrize("kind", ["garbage", "timeout"])
+def test_what_a_device_replied_is_told_unless_the_run_is_blinded(tmp_path, caplog, state, kind):
+    def fault(doing: str) -> None:
+        if doing in ("counter read", "counter open") and bench.sink.kept:
+            raise DeviceError(
+                "b'#13412908' in reply to 'TOT?'",
+                where="counter",
+                remedy="Look, then `run --resume`",
+                kind=kind,
+            )
+
+    night, bench = a_night(tmp_path, fault)
+    night.blinding = Blinding(state)
+
+    with caplog.at_level("WARNING"), pytest.raises(DeviceError) as raised:
+        carry_out(night, Place(0))
+
+    told = json.dumps(read_log(tmp_path)) + json.dumps(read_feed(tmp_path)) + str(raised.value)
+    assert ("412908" in told) == (state == "open")
+    assert '"counter: ' in told
+    assert "412908" not in caplog.text and "resume" not in caplog.text
 
 
 def test_a_fault_in_blocked_order_costs_no_pair(tmp_path):
