@@ -21,7 +21,7 @@ CURVE = "path.js-line"
 
 
 def waited_s(browser: Browser, address: str) -> tuple[float, float]:
-    """Return the time from the first request to an empty drawing, the yardstick, and to the first curve [s]."""
+    """Return the time from the first request to an empty page, the yardstick, and to a curve [s]."""
     context = browser.new_context(viewport={"width": 390, "height": 844})  # an empty cache each time
     page, began_s = context.new_page(), time.monotonic()
     page.goto(address, wait_until="commit")
