@@ -54,6 +54,7 @@ class Danger:
     expected_counts: float = 0.0  # in a stand
     monitor_lives: bool | None = None
     odd_openings: Sequence[str] = ()  # of the latest stands: the opening that stands out, or nothing
+    remedy_left: bool = False  # the mask may still find its reference again by itself
     closed: Closed | None = None
     restarts: int = 0  # in the last hour
     refused: str = ""  # what the disk did not take
@@ -94,6 +95,7 @@ def cost(danger: Danger, rate: float = 0.0) -> tuple[float, str]:
 _DOUBT = {
     "overload": "The visits just before may be wrong: look at them before you use this run.",
     "labels": "Counts may stand under wrong openings: look at the mask, its places and orientation.",
+    "flank": "Stands that did not fit are left out; look at the latest ones before you use this run.",
 }
 
 
@@ -108,6 +110,7 @@ def _held(danger: Danger, held: Held) -> Concern | None:
         "no counts": costly,
         "overload": True,
         "labels": True,
+        "flank": costly,
         "interlock": held.hours > INTERLOCK_TO_WAKE_H,
     }.get(held.cause, held.hours > HOLD_TO_WAKE_H and costly)
     return Concern(
@@ -183,22 +186,30 @@ def _rate(danger: Danger) -> Concern | None:
     )
 
 
-def _openings(danger: Danger) -> Concern | None:
-    latest = [name for name in danger.odd_openings[-LATEST_STANDS:] if name]
+def wrong_opening(odd_openings: Sequence[str]) -> str:
+    """Return the opening that does not fit in many of the latest stands, "" where there is none."""
+    latest = [name for name in odd_openings[-LATEST_STANDS:] if name]
     worst = max(set(latest), key=lambda name: (latest.count(name), name), default="")
-    many = latest.count(worst)
-    if len(danger.odd_openings) < LATEST_STANDS or many <= WRONG_SHARE * LATEST_STANDS:
+    enough = len(odd_openings) >= LATEST_STANDS and latest.count(worst) > WRONG_SHARE * LATEST_STANDS
+    return worst if enough else ""
+
+
+def _openings(danger: Danger) -> Concern | None:
+    worst = wrong_opening(danger.odd_openings)
+    if not worst:
         return None
+    latest = [name for name in danger.odd_openings[-LATEST_STANDS:] if name]
     lost_h, text = cost(danger, 1 - len(latest) / LATEST_STANDS)
+    tries = "The mask finds its reference again, and two windows are looked at before the run goes on."
     return Concern(
         "openings",
-        f"Opening {worst} does not fit what it counted before, in {many} of the last {LATEST_STANDS} stands: "
-        "it may be half covered or off its place.",
+        f"Opening {worst} does not fit what it counted before, in {latest.count(worst)} of the last "
+        f"{LATEST_STANDS} stands: it may be half covered or off its place.",
         "Look at the mask and register its openings again.",
         "Such stands are left out; the data before are good, later ones should be looked at.",
-        did="The stands are left out; the run goes on.",
+        did=tries if danger.remedy_left else "The stands are left out; the run goes on.",
         cost=text,
-        wakes=lost_h > LOSS_TO_WAKE_H,
+        wakes=lost_h > LOSS_TO_WAKE_H and not danger.remedy_left,
         in_doubt=True,
     )
 

@@ -33,7 +33,7 @@ EARLIEST = datetime(2026, 1, 1, tzinfo=UTC)  # a clock before this was never set
 CAUTIONS = (
     "Emergency stop and interlocks are tested as local rules demand, and work without this computer.",
     "Nobody will be near the moving parts; warning signs and lamps are on.",
-    "You have seen limits and parking positions with your own eyes during a dry lap.",
+    "You have seen limits, parking positions and the mask finding its reference with your own eyes.",
     "Detector bias, source and vacuum are left in a state that your rules allow unattended.",
     "The on-call person knows, has read the test message, and may enter.",
     "Local permission for unattended running exists.",

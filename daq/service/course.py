@@ -127,8 +127,12 @@ def _comes_between(night: Night, reading: Reading) -> bool:
         if night.astray >= ASTRAY_STANDS:
             night.astray = 0
             hold(night, "reference", f"An axis is away from its target in {ASTRAY_STANDS} stands in a row.")
-        if night.live.watcher.dark_stands >= DARK_STANDS:
-            why = f"No light in {night.live.watcher.dark_stands} stands in a row"
+        watcher = night.live.watcher
+        if watcher.remedy_left and watcher.wrong_opening and watcher.dark_stands == 0:
+            night.suspect = watcher.wrong_opening
+            return True
+        if watcher.dark_stands >= DARK_STANDS:
+            why = f"No light in {watcher.dark_stands} stands in a row"
             react(night, DeviceError(why, kind="no counts"))
             return True
     held = any(cause != "asked" for cause in night.holds)

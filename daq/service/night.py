@@ -81,6 +81,7 @@ class Night:
     sat_out: int = 0  # stands that were measured again because of a rule
     records: Mapping[str, Any] | None = None  # of the bench; without them nothing is looked at after a wait
     counted_ns: int | None = None  # when the last gate closed
+    suspect: str = ""  # the opening for whose sake the mask has to find its reference again
     unready: bool = False  # what has to be looked at after a long wait was not, or was not in order
     astray: int = 0  # stands in a row in which an axis was not where it should be
 

@@ -1,8 +1,11 @@
-"""Readying: after a long wait two windows and the dark are looked at before a run goes on."""
+"""Readying: after a long wait two windows and the dark are looked at before a run goes on.
+
+The same where an opening does not fit: the mask finds its reference again first, once in a run.
+"""
 
 from __future__ import annotations
 
-from daq.errors import DaqError, DeviceError, StorageError
+from daq.errors import DaqError, DeviceError, StorageError, in_short
 from daq.sequencer import State
 from daq.service.beam import let_in
 from daq.service.holding import hold
@@ -15,7 +18,7 @@ QUIET_S = 600.0  # without a count: beyond, things may have crept
 
 
 def make_ready(night: Night) -> bool:
-    """Measure what has to be after a long wait; return whether the run may go on.
+    """Measure what has to be after a long wait or a doubt of the mask; return whether the run may go on.
 
     A window that is off its place holds the run for a person at the bench, and is measured again after that.
 
@@ -24,6 +27,8 @@ def make_ready(night: Night) -> bool:
     DeviceError, StorageError
         As in any visit of the run.
     """
+    if night.suspect and not _found_again(night):
+        return False
     quiet_s = 0.0 if night.counted_ns is None else (night.clock.now_ns() - night.counted_ns) / 1e9
     if night.records is None or not (night.unready or quiet_s > QUIET_S):
         return True
@@ -38,13 +43,30 @@ def make_ready(night: Night) -> bool:
         return False
     let_in(night.devices, night.clock)
     night.counted_ns = night.clock.now_ns()
-    tell(night, "ready", text=f"After {quiet_s / 60:.0f} min without a count: {found.said}")
+    when = f"After {quiet_s / 60:.0f} min without a count" if quiet_s > QUIET_S else "Before the run goes on"
+    tell(night, "ready", text=f"{when}: {found.said}")
     if found.bright:
         tell(night, "noticed", text=found.bright)
     if found.astray:
         hold(night, "flank", found.astray)
         return False
     night.unready = False
+    return True
+
+
+def _found_again(night: Night) -> bool:
+    """Let the mask find its reference again; one that cannot waits for a person at the bench."""
+    name, night.suspect = night.suspect, ""
+    night.live.watcher.use_remedy()
+    why = f"Opening {name} does not fit what it counted before: half covered, or off its place."
+    tell(night, "reference", text=f"{why} The mask finds its reference again.")
+    night.become(State.MOVING)
+    try:
+        mask_stage(night.devices, night.devices.mask).home()
+    except DeviceError as error:
+        hold(night, "flank", f"{why} The mask did not find its reference: {in_short(error)}")
+        return False
+    night.unready = True
     return True
 
 

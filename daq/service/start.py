@@ -225,6 +225,8 @@ def night_of(
         _restarts(folder, clock),
         wanted.on_feed,
     )
+    records = archive.meta.get("bench_records", {}) if archive.meta["counting"] == "counts" else None
+    live.watcher.remedy_left = "register" in (records or {})
     return Night(
         folder=folder,
         itinerary=itinerary,
@@ -244,7 +246,7 @@ def night_of(
         alive=wanted.alive,
         shortage=lambda: shortage(folder, bench=bench),
         exhausted=lambda: exhausted(folder, bench=bench),
-        records=archive.meta.get("bench_records", {}) if archive.meta["counting"] == "counts" else None,
+        records=records,
         until_utc_ns=None if wanted.until is None else round(wanted.until.timestamp() * 1e9),
     )
 

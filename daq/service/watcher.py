@@ -9,7 +9,7 @@ from typing import Any
 from daq.estimate.rows import DETECTOR
 from daq.estimate.shift import ShiftChart
 from daq.estimate.standing import Change, Standing, acknowledge, look_again
-from daq.estimate.wake import LATEST_STANDS, Danger, Held, dangers
+from daq.estimate.wake import LATEST_STANDS, Danger, Held, dangers, wrong_opening
 from daq.estimate.watch import Thresholds, Watched, concerns
 from daq.itinerary import Itinerary
 from daq.records import Quality, Reading
@@ -38,6 +38,7 @@ class Watcher:
         self._raised: dict[str, int] = {}
         self._chart = ShiftChart()
         self._odd: deque[str] = deque(maxlen=LATEST_STANDS)
+        self.remedy_left = False  # the mask may find its reference again by itself, once
         self._dark = 0
         self._load = 0.0
         self._shut = Shut()
@@ -70,6 +71,16 @@ class Watcher:
     def dark_stands(self) -> int:
         """How many stands in a row brought no light."""
         return self._dark
+
+    @property
+    def wrong_opening(self) -> str:
+        """The opening that does not fit in many of the latest stands, "" where there is none."""
+        return wrong_opening(tuple(self._odd))
+
+    def use_remedy(self) -> None:
+        """Note that the mask finds its reference again: what did not fit before says nothing any more."""
+        self.remedy_left = False
+        self._odd.clear()
 
     @property
     def restarts(self) -> int:
@@ -113,6 +124,7 @@ class Watcher:
             expected_counts=0.0 if latest is None else latest.due,
             monitor_lives=lit,
             odd_openings=tuple(self._odd),
+            remedy_left=self.remedy_left,
             closed=self._shut.rates(),
             restarts=self._restarts,
             ended=ended,

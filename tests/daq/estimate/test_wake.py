@@ -141,3 +141,12 @@ def test_the_monitor_says_on_which_side_to_look(monitor, word):
 
 def test_an_opening_that_is_odd_now_and_then_is_no_news():
     assert found(odd_openings=("",) * 34 + ("AC",) * 7) == ()
+
+
+def test_nobody_is_called_for_an_opening_while_the_mask_may_still_find_its_reference():
+    odd = ("",) * 21 + ("AC", "") * 10
+
+    (concern,) = found(odd_openings=odd, remedy_left=True)
+
+    assert not concern.wakes
+    assert concern.did.startswith("The mask finds its reference again")

@@ -97,3 +97,83 @@ def test_a_night_without_records_waits_and_goes_on(tmp_path: Path) -> None:
 
     assert carry_out(night, Place(0)) == COMPLETE
     assert [one.reason for one in bench.sink.kept if one.visit == UNPLANNED] == [CLOSED_VISIT]
+
+
+def half_covered(folder: Path, *, cured: bool) -> tuple[Night, MemoryBench]:
+    """Return a night in which AC counts half from its 14th lap on, until the mask has found its reference."""
+    night, bench = a_night(folder, laps=40)
+    night.records = {"register": {"values": BALANCED}}
+    night.live.watcher.remedy_left = True
+    count, home, homed = bench.counter.read, bench.mask_stage.home, list[int]()
+    arm, shown = bench.counter.arm, [""]
+
+    def read() -> Counted:
+        counted: Counted = count()
+        covered = shown[-1] == "mask to 5" and len(bench.sink.kept) > 13 * 24
+        half = covered and not (homed and cured)
+        return replace(counted, values=(1000.0 / 2 if half else 1000.0,))
+
+    def find() -> None:
+        homed.append(bench.clock.now_ns())
+        home()
+
+    def armed(dwell_s: float) -> None:
+        shown.append(_last_move(bench))
+        arm(dwell_s)
+
+    bench.counter.read, bench.mask_stage.home, bench.counter.arm = read, find, armed  # type: ignore[method-assign]
+    return night, bench
+
+
+def test_an_opening_that_does_not_fit_lets_the_mask_find_its_reference_once_and_the_run_goes_on(tmp_path):
+    night, bench = half_covered(tmp_path, cured=True)
+
+    ended = carry_out(night, Place(0))
+
+    assert ended == COMPLETE
+    (found,) = told(tmp_path, "reference")
+    assert found["text"].startswith("Opening AC does not fit what it counted before")
+    assert "Before the run goes on: A stands" in told(tmp_path, "ready")[0]["text"]
+    assert told(tmp_path, "holding") == []
+    assert sum(one.visit == UNPLANNED for one in bench.sink.kept) == 5
+    assert [entry for entry in told(tmp_path, "warning") if entry["wakes"]] == []
+
+
+def test_a_window_that_is_off_its_place_all_the_same_holds_for_the_bench_with_one_call(tmp_path):
+    night, bench = half_covered(tmp_path, cured=False)
+    count = bench.counter.read
+
+    def read() -> Counted:
+        return (
+            replace(count(), values=(0.0,))
+            if _last_move(bench) in ("mask to 1.6", "mask to 4.6")
+            else count()
+        )
+
+    bench.counter.read = read  # type: ignore[method-assign]
+
+    with pytest.raises(DeviceError, match="off its place"):
+        carry_out(night, Place(0))
+
+    assert [entry["cause"] for entry in told(tmp_path, "holding")] == ["flank"]
+    assert len(told(tmp_path, "reference")) == 1
+
+
+def test_a_mask_that_cannot_find_its_reference_holds_for_the_bench(tmp_path):
+    night, bench = half_covered(tmp_path, cured=False)
+
+    def lost() -> None:
+        raise DeviceError("no reference switch", where="axis mask", kind="reference")
+
+    bench.mask_stage.home = lost  # type: ignore[method-assign]
+
+    with pytest.raises(DeviceError, match="did not find its reference: axis mask: no reference switch"):
+        carry_out(night, Place(0))
+
+
+def test_an_opening_that_still_does_not_fit_is_left_out_and_calls_somebody(tmp_path):
+    night, _ = half_covered(tmp_path, cured=False)
+
+    assert carry_out(night, Place(0)) == COMPLETE
+    assert len(told(tmp_path, "reference")) == 1
+    assert [one["id"] for one in told(tmp_path, "warning") if one["id"].startswith("openings")]
