@@ -12,10 +12,10 @@ from dataclasses import replace
 
 from daq.cli.answer import Answer
 from daq.description import Rig
-from daq.errors import DaqError
+from daq.errors import DaqError, DescriptionError
 from daq.service.at_bench import in_hand, refuse_absent
 from daq.service.bench_task import Person, carry_out
-from daq.service.load import load, load_rig
+from daq.service.load import Loaded, load, load_rig
 from daq.tasks import task_of
 from daq.tasks.by_hand import Bench, halt, obey
 from daq.tasks.contract import Turn
@@ -30,7 +30,7 @@ def task(arguments: argparse.Namespace) -> Answer:
 
 def _measured(arguments: argparse.Namespace) -> Answer:
     """Carry out a task that measures, and say what it found."""
-    loaded, chosen = load(arguments.file), task_of(arguments.name)
+    loaded, chosen = _loaded(arguments), task_of(arguments.name)
     refuse_absent(loaded.rig, _typed)
     person = Person(arguments.by or "", lambda text: print(text, file=sys.stderr, flush=True), _turned)
     record = carry_out(chosen, loaded, arguments.into, person)
@@ -42,6 +42,24 @@ def _measured(arguments: argparse.Namespace) -> Answer:
         )
     lines.append(f"record {record['record']}, picture {record['picture']}")
     return Answer(0 if record["ok"] else 1, record, lines)
+
+
+def _loaded(arguments: argparse.Namespace) -> Loaded:
+    """Return the description, with the fault script of a simulated bench.
+
+    Raises
+    ------
+    DescriptionError
+        For a fault script with real devices.
+    """
+    loaded = load(arguments.file)
+    if arguments.faults is None:
+        return loaded
+    if not loaded.rig.simulated:
+        raise DescriptionError(
+            (f"--faults {arguments.faults}: the devices of {loaded.rig.name} are real. Leave it out.",)
+        )
+    return loaded.with_faults(arguments.faults)
 
 
 def _turned(turn: Turn) -> Turn:

@@ -122,6 +122,8 @@ def _task_words(commands: Any) -> None:
     task.add_argument("file", type=Path, metavar="FILE", help="a measurement (by-hand: a rig; TOML)")
     task.add_argument("--into", type=Path, default=Path("lab"), metavar="LAB", help="lab folder (./lab)")
     task.add_argument("--by", metavar="NAME", help="who does it (your login name)")
+    script = "a fault script: what goes wrong on a simulated bench, and when"
+    task.add_argument("--faults", type=Path, metavar="FILE", help=script)
 
 
 def _replay_words(commands: Any) -> None:

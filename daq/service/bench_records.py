@@ -36,11 +36,18 @@ def why_not(record: Mapping[str, Any], rig: Rig, now: datetime) -> str:
 
     What a simulated bench gave was dated by its own clock: it does not grow old.
     """
-    if record.get("verdict") not in ("pass", "doubtful"):
+    other = _other_set_up(record, rig)
+    if other:
+        return other
+    if _failed(record):
         return f"it failed: {record.get('sentence', '')}"
     until = record.get("valid_until")
     if not rig.simulated and (not until or datetime.fromisoformat(until) < now):
         return f"it held until {until}"
+    return ""
+
+
+def _other_set_up(record: Mapping[str, Any], rig: Rig) -> str:
     then, here = record.get("set_up", {}), set_up_of(rig)
     for part in ("rig", *record.get("holds_for", ())):
         if then.get(part) != here.get(part):
@@ -49,8 +56,16 @@ def why_not(record: Mapping[str, Any], rig: Rig, now: datetime) -> str:
     return ""
 
 
+def _failed(record: Mapping[str, Any]) -> bool:
+    return record.get("verdict") not in ("pass", "doubtful")
+
+
 def newest(lab: Path, task: str, rig: Rig, now: datetime | None = None) -> tuple[dict[str, Any] | None, str]:
-    """Return the newest valid record of a task, or None and why the newest one may not be taken."""
+    """Return the newest valid record of a task, or None and why the newest one may not be taken.
+
+    What failed on the bench as it stands is not passed over for what was good before; what a broken link
+    ended says nothing of the bench.
+    """
     now = now or datetime.now(UTC)
     first = ""
     for found in outcomes(lab, task):
@@ -58,7 +73,16 @@ def newest(lab: Path, task: str, rig: Rig, now: datetime | None = None) -> tuple
         if not why:
             return found, ""
         first = first or f"{found['record']}: {why}"
+        if _failed(found) and not found.get("broken_off") and not _other_set_up(found, rig):
+            break
     return None, first or "never done in this lab"
+
+
+def known(loaded: Loaded, lab: Path) -> tuple[dict[str, Any], dict[str, str]]:
+    """Return the values of every task that has a valid record, and why each other one has none."""
+    found = {name: newest(lab, name, loaded.rig) for name in TASKS}
+    values = {name: record["values"] for name, (record, _) in found.items() if record is not None}
+    return values, {name: why for name, (record, why) in found.items() if record is None}
 
 
 def earlier(loaded: Loaded, lab: Path, now: datetime | None = None) -> dict[str, dict[str, Any]]:

@@ -16,10 +16,11 @@ import numpy as np
 from daq.devices.clock import RealClock
 from daq.devices.registry import open_devices
 from daq.errors import DaqError, DeviceError, StorageError
+from daq.estimate.quality import rules_of
 from daq.itinerary import Itinerary
 from daq.ports import Bench, Clock, Devices
 from daq.service.beam import let_in, shut_out
-from daq.service.bench_records import earlier, set_up_of
+from daq.service.bench_records import known, set_up_of
 from daq.service.extensions import open_bench
 from daq.service.live import stamp
 from daq.service.load import Loaded
@@ -73,11 +74,10 @@ def carry_out(task: Task, loaded: Loaded, lab: Path, person: Person) -> dict[str
         When a device or the disk failed; what was counted is kept, with a record that says so.
     """
     rig = loaded.rig
-    known = {name: found["values"] for name, found in earlier(loaded, lab).items()}
+    values, missing = known(loaded, lab)
     with _at_bench(loaded, lab) as (devices, clock, bench):
-        setting = Setting(
-            loaded.measurement, rig, yardstick(loaded.measurement, rig), bool(devices.shutter), known
-        )
+        measures = yardstick(loaded.measurement, rig)
+        setting = Setting(loaded.measurement, rig, measures, bool(devices.shutter), values, missing)
         lacking = task.lacks(setting)
         if lacking:
             raise DaqError(
@@ -96,6 +96,7 @@ def carry_out(task: Task, loaded: Loaded, lab: Path, person: Person) -> dict[str
         except DaqError as error:
             outcome = _failed(error)
         record = _record(task, loaded, folder, outcome, clock, person, readings)
+        record |= {"broken_off": trouble is not None}
     write_outcome(folder, record)
     draw_task(folder / PICTURE, f"{task.name}: {outcome.verdict}. {outcome.sentence}", outcome.panels)
     if trouble is not None:
@@ -163,11 +164,12 @@ def _measured(
     }
     planned = cast(Itinerary, _planned(asks, whole))
     turned = partial(_turned, person, bench)
+    rules = rules_of(loaded.measurement.quality.model_dump())
     with create_run(folder, texts=loaded.texts, itinerary=planned, meta=meta) as archive:
         try:
             first: int | None = 0
             while asks:
-                for one in taken(asks, devices, mask, archive, clock, first, turned):
+                for one in taken(asks, devices, mask, archive, clock, first, turned, rules):
                     readings.append(one)
                     if len(readings) % 100 == 0:
                         person.said(f"{len(readings)} visits")

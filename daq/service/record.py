@@ -159,10 +159,13 @@ def _sensors(devices: Devices) -> dict[str, str]:
     }
 
 
-def _truth(bench: Bench, itinerary: Itinerary, normalisation: str) -> float:
-    """Return kappa of the noise-free rates under the run's own weights."""
+def _truth(bench: Bench, itinerary: Itinerary, normalisation: str) -> float | None:
+    """Return kappa of the noise-free rates under the run's own weights; None where nothing interferes."""
     masks = itinerary.openings.tolist()
     rates = np.asarray(bench.true_rates_hz(masks, itinerary.positions_mm.tolist()))
     named = {openings.name(mask): rates[:, column] for column, mask in enumerate(masks)}
-    value, _ = kappa(named, named, itinerary.weights, signs=itinerary.signs, normalisation=normalisation)
+    try:
+        value, _ = kappa(named, named, itinerary.weights, signs=itinerary.signs, normalisation=normalisation)
+    except ValueError:
+        return None
     return float(value)

@@ -37,10 +37,13 @@ def reversal(moved: FloatArray, place_mm: FloatArray) -> tuple[float, float, flo
 
 
 def _lacks(setting: Setting) -> Sequence[str]:
-    known = (
-        () if "register" in setting.earlier else ("there is no valid record of register yet: do that first.",)
+    if "register" in setting.earlier:
+        return counts_only(setting)
+    why = setting.missing.get("register", "never done in this lab")
+    return (
+        *counts_only(setting),
+        f"it needs a valid record of register, and there is none ({why}): do that first.",
     )
-    return (*counts_only(setting), *known)
 
 
 def _flanks(setting: Setting) -> dict[str, tuple[float, float]]:

@@ -66,13 +66,17 @@ Taken = tuple[Ask, Reading]
 
 @dataclass(frozen=True, slots=True)
 class Setting:
-    """What a task knows before it begins: description, yardstick, shutter, what earlier records say."""
+    """What a task knows before it begins: description, yardstick, shutter, what earlier records say.
+
+    `earlier` holds the values of each task that has a valid record, `missing` why another has none.
+    """
 
     measurement: Measurement
     rig: Rig
     yardstick: Yardstick
     shutter: bool = False
-    earlier: Mapping[str, Mapping[str, Any]] = field(default_factory=dict)  # task -> values of its record
+    earlier: Mapping[str, Mapping[str, Any]] = field(default_factory=dict)
+    missing: Mapping[str, str] = field(default_factory=dict)
 
     @property
     def open_beam(self) -> Literal["", "open"]:

@@ -6,6 +6,7 @@ from collections.abc import Callable, Iterable, Iterator, Mapping
 from dataclasses import replace
 
 from daq.errors import DeviceError
+from daq.estimate.quality import Rules, counter_bits
 from daq.ports import AxisState, Clock, Devices, Mask, Sink, Stage
 from daq.records import UNPLANNED, Quality, Reading, Visit
 from daq.sequencer import perform
@@ -51,6 +52,7 @@ def taken(
     clock: Clock,
     first: int | None,
     turned: Callable[[Turn], Turn],
+    rules: Rules,
 ) -> Iterator[Taken]:
     """Yield every visit that is asked for with its reading, once that is durable.
 
@@ -60,11 +62,13 @@ def taken(
         Planned number of the first visit; None for visits that nobody had planned.
     turned
         Has what only a person may do done, waits for it, and returns it with what was shown then.
+    rules
+        Of the night: how much the counter can count, and how bright the detector may see it.
 
     Raises
     ------
     DaqError
-        When the counter overflows: nothing is moved any further.
+        When there is more than that: nothing is moved any further.
     DeviceError
         When a device does not do what it was asked.
     """
@@ -78,7 +82,7 @@ def taken(
         number = UNPLANNED if first is None else first + place
         visit = Visit(number, ask.opening, ask.position_mm, ask.dwell_s)
         for _, reading in perform([(visit, 1, ask.reason)], hands, sink, clock):
-            _refuse_overflow(reading)
+            _refuse_saturated(reading, rules)
             # events are in the archive; a watch of twenty minutes is not kept in memory count by count
             yield ask, reading if ask.events else replace(reading, events=None)
 
@@ -89,13 +93,24 @@ def mask_stage(devices: Devices, mask: Mask) -> Stage:
     return next(stage for stage in devices.stages if stage.name in names)
 
 
-def _refuse_overflow(reading: Reading) -> None:
-    if reading.quality & Quality.OVERFLOW:
+def _refuse_saturated(reading: Reading, rules: Rules) -> None:
+    why = _too_much(reading, rules)
+    if why:
         raise hopeless(
             "at the bench",
-            f"the counter overflowed at {reading.position_mm:g} mm: the detector is saturated",
-            "Take light away before it is opened again, then repeat the task",
+            f"{why} at {reading.position_mm:g} mm: the detector is saturated",
+            "Take light away before it is opened again, then repeat the task; nothing was moved further",
         )
+
+
+def _too_much(reading: Reading, rules: Rules) -> str:
+    """Return what is too much for counter or detector, in words; nothing where all is well."""
+    if (reading.quality | counter_bits(reading, rules, None)) & Quality.OVERFLOW:
+        return "the counter overflowed"
+    rate_hz = reading.values[0] / reading.live_s if reading.live_s > 0 else 0.0
+    if rules.overload_hz is not None and rate_hz > rules.overload_hz:
+        return f"{rate_hz:.3g} counts a second, where {rules.overload_hz:.3g} are allowed,"
+    return ""
 
 
 def _beam(ask: Ask, devices: Devices, clock: Clock) -> None:

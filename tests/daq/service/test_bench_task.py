@@ -106,6 +106,39 @@ def test_a_failed_fit_is_a_record_with_a_sentence_and_no_validity(loaded: Loaded
     assert newest(tmp_path, "dark", loaded.rig)[0] is None
 
 
+def failing(task: Task, error: DaqError) -> Task:
+    """Return a task whose fit ends with an error."""
+
+    def refuse(*_: object) -> Outcome:
+        raise error
+
+    return replace(task, fit=refuse)
+
+
+def test_what_failed_since_is_not_passed_over_for_what_was_good_before(
+    loaded: Loaded, tmp_path: Path
+) -> None:
+    dark = short(task_of("dark"), 2)
+    carry_out(dark, loaded, tmp_path, Person())
+    carry_out(failing(dark, DaqError("the fit does not converge")), loaded, tmp_path, Person())
+
+    found, why = newest(tmp_path, "dark", loaded.rig)
+
+    assert found is None
+    assert "it failed: the fit does not converge" in why
+
+
+def test_a_task_that_a_broken_link_ended_leaves_what_was_good_before(loaded: Loaded, tmp_path: Path) -> None:
+    dark = short(task_of("dark"), 2)
+    good = carry_out(dark, loaded, tmp_path, Person())
+    with pytest.raises(DeviceError):
+        carry_out(failing(dark, DeviceError("no reply", where="counter")), loaded, tmp_path, Person())
+
+    found, _ = newest(tmp_path, "dark", loaded.rig)
+
+    assert (found or {})["record"] == good["record"]
+
+
 def test_the_newest_valid_record_is_taken(loaded: Loaded, tmp_path: Path) -> None:
     dark = short(task_of("dark"), 2)
     carry_out(dark, loaded, tmp_path, Person())
@@ -184,7 +217,10 @@ def test_a_dark_mask_is_a_sentence(loaded: Loaded, tmp_path: Path) -> None:
 def test_backlash_takes_the_flanks_of_register_and_finds_the_play_of_the_bench(
     loaded: Loaded, tmp_path: Path
 ) -> None:
-    with pytest.raises(DaqError, match="no valid record of register yet"):
+    with pytest.raises(
+        DaqError,
+        match=r"a valid record of register, and there is none \(never done in this lab\): do that first",
+    ):
         carry_out(task_of("backlash"), loaded, tmp_path, Person())
     carry_out(task_of("register"), loaded, tmp_path, Person())
 
