@@ -5,12 +5,12 @@ from __future__ import annotations
 from collections.abc import Callable, Iterable, Iterator, Mapping
 from dataclasses import replace
 
-from daq.errors import DeviceError
+from daq.errors import DaqError, DeviceError
 from daq.estimate.quality import Rules, counter_bits
 from daq.ports import AxisState, Clock, Devices, Mask, Sink, Stage
 from daq.records import UNPLANNED, Quality, Reading, Visit
 from daq.sequencer import perform
-from daq.tasks.contract import Ask, Taken, Turn, hopeless
+from daq.tasks.contract import Ask, Taken, Turn
 
 GRACE_S, POLL_NS = 10.0, 20_000_000
 
@@ -96,10 +96,10 @@ def mask_stage(devices: Devices, mask: Mask) -> Stage:
 def _refuse_saturated(reading: Reading, rules: Rules) -> None:
     why = _too_much(reading, rules)
     if why:
-        raise hopeless(
-            "at the bench",
-            f"{why} at {reading.position_mm:g} mm: the detector is saturated",
-            "Take light away before it is opened again, then repeat the task; nothing was moved further",
+        raise DaqError(
+            f"{why} with the detector at {reading.position_mm:g} mm: it is saturated",
+            where="counter",
+            remedy="Take light away, then repeat the task; nothing was moved further",
         )
 
 
@@ -109,7 +109,7 @@ def _too_much(reading: Reading, rules: Rules) -> str:
         return "the counter overflowed"
     rate_hz = reading.values[0] / reading.live_s if reading.live_s > 0 else 0.0
     if rules.overload_hz is not None and rate_hz > rules.overload_hz:
-        return f"{rate_hz:.3g} counts a second, where {rules.overload_hz:.3g} are allowed,"
+        return f"{rate_hz:.0f} counts a second, {rules.overload_hz:.0f} are allowed,"
     return ""
 
 
