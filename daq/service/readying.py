@@ -77,7 +77,7 @@ def _measured(night: Night) -> Readiness:
     asks = ready_visits(records, stage.limits_mm, place_mm, devices.shutter is not None)
     mask = FreeMask(devices.mask, stage, 0.0)
     done: list[Taken] = []
-    for one in taken(asks, devices, mask, night.archive, night.clock, None, _nobody):
+    for one in taken(asks, devices, mask, night.archive, night.clock, None, _nobody, night.judge.rules):
         done.append(one)
         night.alive()
     return readiness(records, done)
