@@ -16,9 +16,9 @@ from collections import deque
 from urllib.parse import urlsplit
 
 from simulators.hosts import Instrument, Session
+from simulators.streams import Channel, Port
 
 _HEADER = struct.Struct(">2sBBIQ")
-_CHUNK = 65536
 _VERSION = 0x0100
 _MOST_BYTES = 1 << 20
 
@@ -55,77 +55,37 @@ def messages(data: bytes) -> tuple[list[tuple[int, int, bytes]], bytes]:
     return found, data
 
 
-class HislipListener:
+class HislipListener(Port):
     """An instrument behind HiSLIP on a real port; `address` is what a rig file says.
 
-    A reply carries the number of the message that it answers, so that a late one is nobody else's.
+    A reply carries the number of the message that it answers, so that a late one is nobody else's. A client
+    makes two connections, one for messages and one for what goes past them.
     """
 
     def __init__(self, instrument: Instrument, port: int = 0) -> None:
-        self.instrument, self.down = instrument, False
-        self.socket = socket.create_server(("127.0.0.1", port))
-        self.socket.setblocking(False)
-        port = self.socket.getsockname()[1]
-        self.address = f"visa:TCPIP::127.0.0.1::hislip0,{port}::INSTR"
+        super().__init__("127.0.0.1", port)
+        self.instrument = instrument
+        self.address = f"visa:TCPIP::127.0.0.1::hislip0,{self.number}::INSTR"
 
-    def open(self) -> None:
-        """Answer connections from now on."""
-        self.down = False
-
-    def close(self) -> None:
-        """End every connection, and new ones as they come."""
-        self.down = True
-
-    def begin(self, selector: selectors.BaseSelector) -> None:
-        """Let a selector call us when somebody connects."""
-        self._selector = selector
-        selector.register(self.socket, selectors.EVENT_READ, self)
-
-    def __call__(self) -> None:
-        """Take a connection: a client makes two, one for messages and one for what goes past them."""
-        with contextlib.suppress(OSError):
-            stream, _ = self.socket.accept()
-            stream.setsockopt(socket.IPPROTO_TCP, socket.TCP_NODELAY, 1)
-            self._selector.register(stream, selectors.EVENT_READ, _Channel(stream, self, self._selector))
-
-    def end_when_down(self) -> None:
-        """Stay: somebody has to end the connections that come."""
-
-    def let_go(self) -> None:
-        """Let the port go."""
-        self.socket.close()
+    def channel(self, stream: socket.socket, selector: selectors.BaseSelector) -> Channel:
+        """Return what answers a new connection."""
+        return _Channel(stream, self, selector)
 
 
-class _Channel:
-    """Called when bytes have come on one of a client's connections."""
+class _Channel(Channel):
+    """One of a client's connections."""
 
-    def __init__(
-        self, stream: socket.socket, listener: HislipListener, selector: selectors.BaseSelector
-    ) -> None:
-        self._stream, self._listener, self._selector = stream, listener, selector
+    def __init__(self, stream: socket.socket, port: HislipListener, selector: selectors.BaseSelector) -> None:
+        super().__init__(stream, port, selector)
         self._rest, self._begun = b"", b""
         self._owed: deque[int] = deque()
-        self._session: Session = listener.instrument.session(self._send_late)
+        self._session: Session = port.instrument.session(self._send_late)
 
-    def __call__(self) -> None:
-        try:
-            data = self._stream.recv(_CHUNK)
-            found, self._rest = messages(self._rest + data)
-            for kind, parameter, payload in found:
-                self._stream.sendall(self._answer(kind, parameter, payload))
-        except OSError:
-            data = b""
-        if not data:
-            self.end()
-
-    def end_when_down(self) -> None:
-        if self._listener.down:
-            self.end()
-
-    def end(self) -> None:
-        """End the connection."""
-        self._selector.unregister(self._stream)
-        self._stream.close()
+    def take(self, data: bytes) -> None:
+        """Answer every message that is whole."""
+        found, self._rest = messages(self._rest + data)
+        for kind, parameter, payload in found:
+            self._stream.sendall(self._answer(kind, parameter, payload))
 
     def _answer(self, kind: int, parameter: int, payload: bytes) -> bytes:
         if kind == INITIALIZE:

@@ -13,11 +13,10 @@ from urllib.parse import urlsplit
 from daq.ports import Connection
 from simulators.clock import VirtualClock
 from simulators.connections import DirectConnection, TcpConnection
+from simulators.streams import Channel, Port
 
 Send = Callable[[bytes], None]
 
-_STALL_S = 10.0  # a client that takes no bytes for so long is dropped
-_CHUNK = 65536
 _LOOK_S = 0.1  # how often a real host looks whether it shall stop
 
 
@@ -80,40 +79,24 @@ def serve(clock: VirtualClock, address: str, instrument: Instrument, transport: 
     return host
 
 
-class Listener:
-    """An instrument that listens on a real TCP port from construction on; `run_real` answers.
-
-    It can go away (`close`) and come back (`open`): meanwhile connections are ended as they come.
+class Listener(Port):
+    """An instrument that listens on a real TCP port; `run_real` answers.
 
     Attributes
     ----------
     address
-        "tcp://host:port" with the port that it really has (a port 0 is replaced by a free one).
+        "tcp://host:port" with the port that it really has.
     """
 
     def __init__(self, address: str, instrument: Instrument, scheme: str = "tcp") -> None:
         place = urlsplit(address)
+        super().__init__(place.hostname or "", place.port or 0)
         self.instrument = instrument
-        self.socket = socket.create_server((place.hostname or "", place.port or 0))
-        self.socket.setblocking(False)
-        self.address = f"{scheme}://{place.hostname}:{self.socket.getsockname()[1]}"
-        self.down = False
+        self.address = f"{scheme}://{place.hostname}:{self.number}"
 
-    def open(self) -> None:
-        """Answer connections from now on."""
-        self.down = False
-
-    def close(self) -> None:
-        """End every connection, and new ones as they come."""
-        self.down = True
-
-    def begin(self, selector: selectors.BaseSelector) -> None:
-        """Let a selector call us when somebody connects."""
-        selector.register(self.socket, selectors.EVENT_READ, _Acceptor(self, selector))
-
-    def let_go(self) -> None:
-        """Let the port go."""
-        self.socket.close()
+    def channel(self, stream: socket.socket, selector: selectors.BaseSelector) -> Channel:
+        """Return what answers a new connection."""
+        return _Answer(stream, self, selector)
 
 
 class Listening(Protocol):
@@ -142,51 +125,17 @@ def run_real(listeners: Sequence[Listening], stop: threading.Event) -> None:
                 key.data.end_when_down()
 
 
-class _Acceptor:
-    """Called when somebody connects to a listener."""
+class _Answer(Channel):
+    """Feeds an instrument, and sends what it answers, at once or later."""
 
-    def __init__(self, listener: Listener, selector: selectors.BaseSelector) -> None:
-        self._listener, self._selector = listener, selector
+    def __init__(self, stream: socket.socket, port: Listener, selector: selectors.BaseSelector) -> None:
+        super().__init__(stream, port, selector)
+        self._writing = threading.Lock()
+        self._session = port.instrument.session(self._send_late)
 
-    def __call__(self) -> None:
-        try:
-            stream, _ = self._listener.socket.accept()
-        except OSError:  # the client has gone already
-            return
-        stream.settimeout(_STALL_S)
-        stream.setsockopt(socket.IPPROTO_TCP, socket.TCP_NODELAY, 1)
-        answer = _Answer(stream, self._listener, self._selector)
-        self._selector.register(stream, selectors.EVENT_READ, answer)
-
-    def end_when_down(self) -> None:
-        """Stay: somebody has to end the connections that come."""
-
-
-class _Answer:
-    """Called when bytes have come on a real connection."""
-
-    def __init__(self, stream: socket.socket, listener: Listener, selector: selectors.BaseSelector) -> None:
-        self._stream, self._selector, self._writing = stream, selector, threading.Lock()
-        self._listener = listener
-        self._session = listener.instrument.session(self._send_late)
-
-    def __call__(self) -> None:
-        try:
-            data = self._stream.recv(_CHUNK)
-            if data:
-                self._send(self._session.feed(data))
-        except OSError:
-            data = b""
-        if not data:
-            self.end()
-
-    def end_when_down(self) -> None:
-        if self._listener.down:
-            self.end()
-
-    def end(self) -> None:
-        self._selector.unregister(self._stream)
-        self._stream.close()
+    def take(self, data: bytes) -> None:
+        """Answer what has come."""
+        self._send(self._session.feed(data))
 
     def _send(self, data: bytes) -> None:
         with self._writing:
@@ -199,5 +148,5 @@ class _Answer:
 
 def _end_all(selector: selectors.BaseSelector) -> None:
     for key in list(selector.get_map().values()):
-        if isinstance(key.data, _Answer):
+        if isinstance(key.data, Channel):
             key.data.end()

@@ -16,84 +16,45 @@ import threading
 
 from daq.ports import Clock
 from simulators.hosts import Instrument, Session
+from simulators.streams import Channel, Port
 
 CREATE_LINK, WRITE, READ, DESTROY_LINK = 10, 11, 12, 23
 END_FLAG, END_REASON = 8, 4
 NO_ERROR, IO_TIMEOUT = 0, 15
 
-_CHUNK = 65536
 _MOST_BYTES = 1 << 20
 _LAST = 1 << 31
 
 
-class Vxi11Listener:
+class Vxi11Listener(Port):
     """An instrument behind VXI-11 on a real port of its own, so that no port mapper is asked."""
 
     def __init__(self, instrument: Instrument, clock: Clock) -> None:
-        self.instrument, self.clock, self.down = instrument, clock, False
-        self.socket = socket.create_server(("127.0.0.1", 0))
-        self.socket.setblocking(False)
-        self.address = f"visa:TCPIP::127.0.0.1,{self.socket.getsockname()[1]}::inst0::INSTR"
+        super().__init__("127.0.0.1", 0)
+        self.instrument, self.clock = instrument, clock
+        self.address = f"visa:TCPIP::127.0.0.1,{self.number}::inst0::INSTR"
 
-    def open(self) -> None:
-        """Answer connections from now on."""
-        self.down = False
-
-    def close(self) -> None:
-        """End every connection, and new ones as they come."""
-        self.down = True
-
-    def begin(self, selector: selectors.BaseSelector) -> None:
-        """Let a selector call us when somebody connects."""
-        self._selector = selector
-        selector.register(self.socket, selectors.EVENT_READ, self)
-
-    def __call__(self) -> None:
-        """Take a connection."""
-        with contextlib.suppress(OSError):
-            stream, _ = self.socket.accept()
-            stream.setsockopt(socket.IPPROTO_TCP, socket.TCP_NODELAY, 1)
-            self._selector.register(stream, selectors.EVENT_READ, _Core(stream, self, self._selector))
-
-    def end_when_down(self) -> None:
-        """Stay: somebody has to end the connections that come."""
-
-    def let_go(self) -> None:
-        """Let the port go."""
-        self.socket.close()
+    def channel(self, stream: socket.socket, selector: selectors.BaseSelector) -> Channel:
+        """Return what answers a new connection."""
+        return _Core(stream, self, selector)
 
 
-class _Core:
-    """Called when bytes have come on a client's core channel."""
+class _Core(Channel):
+    """A client's core channel."""
 
-    def __init__(
-        self, stream: socket.socket, listener: Vxi11Listener, selector: selectors.BaseSelector
-    ) -> None:
-        self._stream, self._listener, self._selector = stream, listener, selector
+    def __init__(self, stream: socket.socket, port: Vxi11Listener, selector: selectors.BaseSelector) -> None:
+        super().__init__(stream, port, selector)
+        self._clock = port.clock
         self._rest, self._begun, self._replies = b"", b"", b""
         self._reading: int | None = None  # number of the read that waits for a reply
         self._lock = threading.RLock()  # late replies and timeouts come from other threads
-        self._session: Session = listener.instrument.session(self._send_late)
+        self._session: Session = port.instrument.session(self._send_late)
 
-    def __call__(self) -> None:
-        try:
-            data = self._stream.recv(_CHUNK)
-            self._rest += data
-            while call := self._next_call():
-                self._obey(call)
-        except OSError:
-            data = b""
-        if not data:
-            self.end()
-
-    def end_when_down(self) -> None:
-        if self._listener.down:
-            self.end()
-
-    def end(self) -> None:
-        """End the connection."""
-        self._selector.unregister(self._stream)
-        self._stream.close()
+    def take(self, data: bytes) -> None:
+        """Carry out every call that is whole."""
+        self._rest += data
+        while call := self._next_call():
+            self._obey(call)
 
     def _next_call(self) -> bytes | None:
         if len(self._rest) < 4:
@@ -137,7 +98,7 @@ class _Core:
             if self._replies:
                 self._give()
                 return
-        clock = self._listener.clock
+        clock = self._clock
         clock.call_at(clock.now_ns() + round(timeout_s * 1e9), lambda: self._give_up(number))
 
     def _give(self) -> None:
