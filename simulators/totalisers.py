@@ -8,10 +8,9 @@ from daq.ports import Clock
 from simulators.hosts import Send
 from simulators.lines import LineSession
 from simulators.motion import NS
-from simulators.scpi import Command, FaultError, Interpreter, decimal
+from simulators.scpi import Command, Interpreter, decimal
+from simulators.shot import Shot
 from simulators.status import Status
-
-MEASURING = 16
 
 Count = Callable[[int, int], int]
 
@@ -62,42 +61,24 @@ class FrequencyMeter:
     """
 
     def __init__(self, name: str, count: Count, clock: Clock) -> None:
-        self._count, self._clock = count, clock
-        self._aperture_ns, self._open_ns = NS, -1
+        self._count, self._shot = count, Shot(clock, 1e4)
         commands = {
             "*IDN?": Command(lambda: f"tercet simulators,frequency meter,{name},1"),
-            "*RST": Command(self._abort),
-            "FREQuency:APERture": Command(self._aperture, (decimal,)),
-            "INITiate[:IMMediate]": Command(self._initiate),
+            "*RST": Command(self._shot.abort),
+            "FREQuency:APERture": Command(self._shot.set_width, (decimal,)),
+            "INITiate[:IMMediate]": Command(self._shot.begin),
             "FETCh?": Command(self._fetch),
-            "ABORt": Command(self._abort),
+            "ABORt": Command(self._shot.abort),
         }
-        status = Status(self._condition, lambda: bool(self._interpreter.responses))
+        status = Status(self._shot.condition, lambda: bool(self._interpreter.responses))
         self._interpreter = Interpreter({**status.commands(), **commands}, status.report)
 
     def session(self, send: Send) -> LineSession:
         """Return a session; the meter never speaks unasked."""
         return LineSession(self._interpreter.answer)
 
-    def _condition(self) -> int:
-        running = 0 <= self._clock.now_ns() - self._open_ns < self._aperture_ns
-        return MEASURING if self._open_ns >= 0 and running else 0
-
-    def _aperture(self, seconds: float) -> None:
-        if not 1e-6 <= seconds <= 1e4:
-            raise FaultError(-222)
-        self._aperture_ns = round(seconds * NS)
-
-    def _initiate(self) -> None:
-        if self._condition():
-            raise FaultError(-213)
-        self._open_ns = self._clock.now_ns()
-
     def _fetch(self) -> str:
-        if self._open_ns < 0 or self._condition():
+        interval_ns = self._shot.interval_ns()
+        if interval_ns is None or self._shot.condition():
             return "+9.91000000E+37"
-        counts = self._count(self._open_ns, self._open_ns + self._aperture_ns)
-        return f"{counts * NS / self._aperture_ns:+.12E}"
-
-    def _abort(self) -> None:
-        self._open_ns = -1
+        return f"{self._count(*interval_ns) * NS / self._shot.width_ns:+.12E}"
