@@ -5,7 +5,7 @@ from __future__ import annotations
 import copy
 import re
 import tomllib
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from pathlib import Path
 from typing import Any
@@ -209,11 +209,10 @@ def test_the_copy_in_a_run_folder_is_read_back(tmp_path: Path) -> None:
 
 
 @contextmanager
-def served(instrument: Instrument) -> Iterator[tuple[VirtualClock, Scripted]]:
-    clock = instrument._clock  # type: ignore[attr-defined]
+def served(instrument: Instrument, clock: VirtualClock) -> Iterator[Scripted]:
     scripted = Scripted(instrument)
     with serve(clock, ADDRESS, scripted, "direct"):
-        yield clock, scripted
+        yield scripted
 
 
 def entry(read: Dialect, **more: Any) -> DeviceEntry:
@@ -226,7 +225,7 @@ def scpi_stage(**changes: Any) -> Iterator[tuple[VirtualClock, Scripted, Dialect
     track = Track(3.0, 0.0, homed=True)
     controller = ScpiStage("a", {"X": track}, {"X": Travel((0.0, 20.0), 10.0)}, clock)
     axis = Axis(device="stages", letter="X", limits_mm=(0.0, 20.0), speed_mm_s=10.0)
-    with served(controller) as (_, scripted):
+    with served(controller, clock) as scripted:
         spoken = Spoken("stages", entry(dialect("scpi-stage", **changes)), clock)
         stage = DialectStage("mask", axis, spoken, SharedLink(spoken.link), clock)
         stage.open()
@@ -274,9 +273,10 @@ def test_a_stop_is_sent_as_it_stands_in_the_file() -> None:
 
 @contextmanager
 def counter(
-    instrument: Any, read: Dialect, **more: Any
+    make: Callable[[VirtualClock], Instrument], read: Dialect, **more: Any
 ) -> Iterator[tuple[VirtualClock, Scripted, DialectCounter]]:
-    with served(instrument) as (clock, scripted):
+    clock = VirtualClock(0)
+    with served(make(clock), clock) as scripted:
         device = DialectCounter("counter", entry(read, **more), clock)
         device.open()
         yield clock, scripted, device
@@ -289,9 +289,12 @@ def even(rate_hz: float) -> Any:
 
 @pytest.mark.parametrize("bits", [26, 32])
 def test_a_totaliser_that_rolls_over_between_two_looks_loses_nothing(bits: int) -> None:
-    totaliser = Totaliser("t", even(1e6), bits, VirtualClock(0))
-    totaliser.total = 2**bits - 500_000
-    with counter(totaliser, dialect("scpi-totaliser", counter__bits=bits)) as (_, _, device):
+    def nearly_full(clock: VirtualClock) -> Totaliser:
+        totaliser = Totaliser("t", even(1e6), bits, clock)
+        totaliser.total = 2**bits - 500_000
+        return totaliser
+
+    with counter(nearly_full, dialect("scpi-totaliser", counter__bits=bits)) as (_, _, device):
         device.arm(2.0)
         counted = device.read()
 
@@ -299,7 +302,7 @@ def test_a_totaliser_that_rolls_over_between_two_looks_loses_nothing(bits: int) 
 
 
 def test_a_gate_that_could_roll_over_twice_is_refused() -> None:
-    with counter(Totaliser("t", even(1.0), 26, VirtualClock(0)), dialect("scpi-totaliser")) as (
+    with counter(lambda clock: Totaliser("t", even(1.0), 26, clock), dialect("scpi-totaliser")) as (
         _,
         sent,
         device,
@@ -313,7 +316,7 @@ def test_a_gate_that_could_roll_over_twice_is_refused() -> None:
 
 
 def test_a_totaliser_is_read_when_the_gate_closes_and_not_later() -> None:
-    with counter(Totaliser("t", even(1000.0), 26, VirtualClock(0)), dialect("scpi-totaliser")) as (
+    with counter(lambda clock: Totaliser("t", even(1000.0), 26, clock), dialect("scpi-totaliser")) as (
         clock,
         _,
         device,
@@ -328,7 +331,7 @@ def test_a_totaliser_is_read_when_the_gate_closes_and_not_later() -> None:
 
 
 def test_a_totaliser_whose_moment_is_in_doubt_gives_no_count() -> None:
-    with counter(Totaliser("t", even(1000.0), 26, VirtualClock(0)), dialect("scpi-totaliser")) as (
+    with counter(lambda clock: Totaliser("t", even(1000.0), 26, clock), dialect("scpi-totaliser")) as (
         _,
         sent,
         device,
@@ -343,7 +346,7 @@ def test_a_totaliser_whose_moment_is_in_doubt_gives_no_count() -> None:
 
 
 def test_a_total_that_the_totaliser_cannot_show_is_garbage() -> None:
-    with counter(Totaliser("t", even(1000.0), 26, VirtualClock(0)), dialect("scpi-totaliser")) as (
+    with counter(lambda clock: Totaliser("t", even(1000.0), 26, clock), dialect("scpi-totaliser")) as (
         _,
         sent,
         device,
@@ -358,7 +361,7 @@ def test_a_total_that_the_totaliser_cannot_show_is_garbage() -> None:
 
 
 def test_a_rate_that_was_not_measured_is_no_count() -> None:
-    with counter(FrequencyMeter("f", even(1000.0), VirtualClock(0)), dialect("scpi-frequency")) as (
+    with counter(lambda clock: FrequencyMeter("f", even(1000.0), clock), dialect("scpi-frequency")) as (
         _,
         sent,
         device,
@@ -371,7 +374,7 @@ def test_a_rate_that_was_not_measured_is_no_count() -> None:
 
 
 def test_a_rate_times_its_aperture_is_the_count() -> None:
-    with counter(FrequencyMeter("f", even(12345.0), VirtualClock(0)), dialect("scpi-frequency")) as (
+    with counter(lambda clock: FrequencyMeter("f", even(12345.0), clock), dialect("scpi-frequency")) as (
         _,
         _,
         device,
@@ -382,8 +385,9 @@ def test_a_rate_times_its_aperture_is_the_count() -> None:
 
 
 def test_a_counter_that_gives_another_number_of_channels_is_garbage() -> None:
-    totaliser = Totaliser("t", even(1.0), 26, VirtualClock(0))
-    with counter(totaliser, dialect("scpi-totaliser"), channels=2) as (_, _, device):
+    with counter(
+        lambda clock: Totaliser("t", even(1.0), 26, clock), dialect("scpi-totaliser"), channels=2
+    ) as (_, _, device):
         device.arm(2.0)
 
         with pytest.raises(DeviceError, match="gave 1 channels and not 2"):
@@ -392,7 +396,7 @@ def test_a_counter_that_gives_another_number_of_channels_is_garbage() -> None:
 
 def test_channels_come_in_the_order_of_their_numbers() -> None:
     two = dialect("scpi-totaliser", command__fetch__reply=r"TOT (?P<value_2>\d+),(?P<value_1>\d+)")
-    with counter(Totaliser("t", even(1.0), 26, VirtualClock(0)), two, channels=2) as (_, sent, device):
+    with counter(lambda clock: Totaliser("t", even(1.0), 26, clock), two, channels=2) as (_, sent, device):
         totals = iter([b"TOT 5,100\n", b"TOT 8,300\n"])
         sent.change = lambda message, reply: next(totals) if "TOT" in message else reply
         device.arm(2.0)
@@ -428,8 +432,9 @@ def test_marks_of_what_is_no_number_never_become_one(text: str, value: str) -> N
 
 
 def test_what_a_gauge_says_unasked_is_passed_over() -> None:
-    gauge = Gauge("lantern", VirtualClock(0))
-    with served(gauge) as (_, scripted):
+    clock = VirtualClock(0)
+    gauge = Gauge("lantern", clock)
+    with served(gauge, clock) as scripted:
         sensor = DialectSensor("gauge", entry(dialect("text-gauge")), gauge._clock)
         sensor.open()
         gauge.chat()
@@ -442,8 +447,9 @@ def test_what_a_gauge_says_unasked_is_passed_over() -> None:
 
 
 def test_what_a_gauge_could_not_measure_is_nan() -> None:
-    gauge = Gauge("lantern", VirtualClock(0))
-    with served(gauge) as (_, scripted):
+    clock = VirtualClock(0)
+    gauge = Gauge("lantern", clock)
+    with served(gauge, clock) as scripted:
         sensor = DialectSensor("gauge", entry(dialect("text-gauge")), gauge._clock)
         sensor.open()
         scripted.change = lambda message, reply: b"p = - Pa off\n"
@@ -452,8 +458,9 @@ def test_what_a_gauge_could_not_measure_is_nan() -> None:
 
 
 def test_a_refusal_is_told_in_the_devices_words() -> None:
-    gauge = Gauge("lantern", VirtualClock(0))
-    with served(gauge) as (_, scripted):
+    clock = VirtualClock(0)
+    gauge = Gauge("lantern", clock)
+    with served(gauge, clock) as scripted:
         sensor = DialectSensor("gauge", entry(dialect("text-gauge")), gauge._clock)
         sensor.open()
         scripted.change = lambda message, reply: b"what?\n"
