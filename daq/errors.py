@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import re
 
-_QUOTED = re.compile(r"""b?'(?:[^'\\]|\\.)*'|b?"(?:[^"\\]|\\.)*\"""")
+_QUOTED = re.compile(r"""(?<!reply to )(?:b?'(?:[^'\\]|\\.)*'|b?"(?:[^"\\]|\\.)*\")""")
 
 
 class DaqError(Exception):
@@ -62,7 +62,7 @@ class StorageError(DaqError):
 
 
 def without_replies(error: DeviceError) -> DeviceError:
-    """Return an error that quotes nothing a device replied: it may be a count that is to stay hidden."""
+    """Return an error that quotes the question, and nothing that a device replied: it may be a hidden count."""
     garbled = "it gave a reply that makes no sense"
     what = garbled if error.kind == "garbage" else _QUOTED.sub("...", error.what)
     return DeviceError(what, where=error.where, remedy=error.remedy, kind=error.kind)

@@ -91,8 +91,8 @@ _COVERED = {"covers 68 %": _percent("coverage_68"), "covers 95 %": _percent("cov
 
 
 def _lost(found: Mapping[str, Any]) -> str:
-    if "lost_s" not in found:
-        return ""
+    if "why" in found:
+        return str(found["why"])
     return f"{found['lost_s']:.1f}" if found["ended"] == "complete" else "parks and can be resumed"
 
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+from collections.abc import Callable
 from math import sqrt
 from pathlib import Path
 from typing import Any
@@ -137,15 +138,34 @@ def test_everything_else_that_may_happen_has_its_test(test: str) -> None:
     assert f"def {name}(" in (DEVELOPERS.parent / path).read_text()
 
 
-def test_a_fault_costs_what_the_matrix_says() -> None:
-    kind = "pressure too high for 300 s"
-    quiet_s, _, _ = matrix._run(None)
+@pytest.fixture(scope="module")
+def quiet_s() -> float:
+    """Return how long the run of the matrix takes without a fault [s]."""
+    return matrix._run(None)[0]
 
-    run_s, ended, repeated = matrix._run(matrix.FAULTS[kind][0])
+
+@pytest.mark.parametrize(
+    ("kind", "found"),
+    [
+        (_HIGH := "pressure too high for 300 s", lambda: matrix._run(matrix.FAULTS[_HIGH][0])),
+        (_DEAD := "service killed", matrix.MEASURED[_DEAD]),
+    ],
+)
+def test_a_fault_costs_what_the_matrix_says(
+    kind: str, found: Callable[[], matrix.Found], quiet_s: float
+) -> None:
+    run_s, ended, repeated = found()
 
     told = json.loads((RESULTS / "matrix.json").read_text())["rows"][kind]
     assert run_s - quiet_s == pytest.approx(told["lost_s"], abs=1e-6)
     assert (ended, repeated) == (told["ended"], told["repeated"])
+
+
+def test_every_row_of_the_matrix_has_a_time_or_says_why_not() -> None:
+    rows = json.loads((RESULTS / "matrix.json").read_text())["rows"]
+
+    assert set(rows) == {*matrix.FAULTS, *matrix.OTHERS}
+    assert all("lost_s" in row or row["why"] for row in rows.values())
 
 
 def test_a_night_of_chaos_that_is_killed_loses_nothing() -> None:
