@@ -62,7 +62,7 @@ class StorageError(DaqError):
 
 
 def without_replies(error: DeviceError) -> DeviceError:
-    """Return an error that quotes the question, and nothing that a device replied: it may be a hidden count."""
+    """Return an error that quotes the question and no reply: that may be a count which is to stay hidden."""
     garbled = "it gave a reply that makes no sense"
     what = garbled if error.kind == "garbage" else _QUOTED.sub("...", error.what)
     return DeviceError(what, where=error.where, remedy=error.remedy, kind=error.kind)
