@@ -4,21 +4,19 @@ from __future__ import annotations
 
 import argparse
 import contextlib
-import math
 import select
 import sys
 from collections.abc import Iterator
-from dataclasses import replace
+from functools import partial
 
 from daq.cli.answer import Answer
 from daq.description import Rig
 from daq.errors import DaqError, DescriptionError
-from daq.service.at_bench import in_hand, refuse_absent
+from daq.service.at_bench import in_hand, refuse_absent, turned
 from daq.service.bench_task import Person, carry_out
 from daq.service.load import Loaded, load, load_rig
 from daq.tasks import task_of
 from daq.tasks.by_hand import Bench, halt, obey
-from daq.tasks.contract import Turn
 
 BY_HAND = "by-hand"
 
@@ -32,7 +30,7 @@ def _measured(arguments: argparse.Namespace) -> Answer:
     """Carry out a task that measures, and say what it found."""
     loaded, chosen = _loaded(arguments), task_of(arguments.name)
     refuse_absent(loaded.rig, _typed)
-    person = Person(arguments.by or "", lambda text: print(text, file=sys.stderr, flush=True), _turned)
+    person = Person(arguments.by or "", _say, partial(turned, _typed, _say))
     record = carry_out(chosen, loaded, arguments.into, person)
     lines = [f"{record['verdict']}: {record['sentence']}"]
     if record["valid_until"]:
@@ -60,29 +58,6 @@ def _loaded(arguments: argparse.Namespace) -> Loaded:
             (f"--faults {arguments.faults}: the devices of {loaded.rig.name} are real. Leave it out.",)
         )
     return loaded.with_faults(arguments.faults)
-
-
-def _turned(turn: Turn) -> Turn:
-    """Wait until a person has done what only a person may do; what the instrument shows may be typed."""
-    _say("\n".join(filter(None, (turn.caution, turn.text))))
-    while True:
-        typed = _typed("Press Enter when it is done, or type the value that is shown there: ")
-        if not typed:
-            remedy = "Set back what was turned, then repeat the task with somebody there"
-            raise DaqError("nobody has done it", where="at the bench", remedy=remedy)
-        if not typed.strip():
-            return turn
-        with contextlib.suppress(ValueError):
-            return replace(turn, shown=_finite(typed))
-        _say(f"{typed.strip()!r} is no number.")
-
-
-def _finite(typed: str) -> float:
-    """Return a number that was typed; raises ValueError for what is none."""
-    value = float(typed)
-    if not math.isfinite(value):
-        raise ValueError(typed)
-    return value
 
 
 def _by_hand(arguments: argparse.Namespace) -> Answer:

@@ -3,7 +3,9 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Iterator
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
+from dataclasses import replace
+from math import isfinite
 
 from daq.description import Rig
 from daq.devices.clock import RealClock
@@ -11,6 +13,7 @@ from daq.devices.registry import open_devices
 from daq.errors import DaqError, DeviceError
 from daq.ports import Clock, Devices
 from daq.service.beam import shut_out
+from daq.tasks.contract import Turn
 
 PRESENT = "here"
 ASKED = (
@@ -33,6 +36,28 @@ def refuse_absent(rig: Rig, typed: Callable[[str], str]) -> None:
     question = "\n".join((*ASKED, f"Type {PRESENT!r} if all of it is so: "))
     if typed(question).strip() != PRESENT:
         raise DaqError("nobody has said to be at the bench; nothing was opened", where=f"rig {rig.name}")
+
+
+def turned(typed: Callable[[str], str], said: Callable[[str], None], turn: Turn) -> Turn:
+    """Have a person do what only a person may do, and return it with what they say is shown then.
+
+    Raises
+    ------
+    DaqError
+        When nobody answers.
+    """
+    said("\n".join(filter(None, (turn.caution, turn.text))))
+    while True:
+        line = typed("Press Enter when it is done, or type the value that is shown there: ")
+        if not line:
+            remedy = "Set back what was turned, then repeat the task with somebody there"
+            raise DaqError("nobody has done it", where="at the bench", remedy=remedy)
+        if not line.strip():
+            return turn
+        with suppress(ValueError):
+            if isfinite(float(line)):
+                return replace(turn, shown=float(line))
+        said(f"{line.strip()!r} is no number.")
 
 
 @contextmanager

@@ -17,6 +17,7 @@ from daq.records import BENCH_VISIT, Reading
 from daq.tasks.yardstick import Yardstick
 
 Verdict = Literal["pass", "doubtful", "fail"]
+DIM = 0.1  # of the described light: with less of it nothing is measured
 ODD_P = 1e-3  # a fit less probable than this is doubtful
 ANYWHERE = -1  # the opening of a visit that stands at a place of the mask instead
 
@@ -107,13 +108,14 @@ class Curve:
 
 @dataclass(frozen=True, slots=True)
 class Panel:
-    """One plot of a picture: what was measured and what was fitted; `marks` are upright lines by name."""
+    """One plot: what was measured and fitted; `marks` are upright lines, `names` stand at 0, 1 ..."""
 
     title: str
     x_label: str
     y_label: str
     curves: tuple[Curve, ...]
     marks: Mapping[str, float] = field(default_factory=dict)
+    names: Sequence[str] = ()
     log_x: bool = False
 
 
@@ -164,6 +166,17 @@ def once(visits: Callable[[Setting], Sequence[Ask]]) -> Callable[[Setting, Seque
 def hopeless(task: str, what: str, remedy: str) -> DaqError:
     """Return the error that ends a task: what was seen, and what to do."""
     return DaqError(what, where=f"task {task}", remedy=remedy)
+
+
+def refuse_dark(task: str, setting: Setting, brightest_hz: float) -> None:
+    """Refuse what was counted at the brightest place when next to none of the described light fell there."""
+    expected_hz = setting.yardstick.brightest_hz
+    if brightest_hz < DIM * expected_hz:
+        raise hopeless(
+            task,
+            f"{brightest_hz:.3g} a second were counted where {expected_hz:.3g} are described",
+            "Look for the beam, the shutter and the detector, and at what the description expects",
+        )
 
 
 def within(value: float, se: float, limit: float) -> Verdict:

@@ -16,9 +16,22 @@ from scipy.stats import norm
 
 from daq import openings
 from daq.description.measurement import Positions
-from daq.estimate.arrays import FloatArray
+from daq.estimate.arrays import FloatArray, IntArray
 from daq.itinerary import expected_rates
-from daq.tasks.contract import Ask, Curve, Outcome, Panel, Setting, Taken, Task, Verdict, level, once, worst
+from daq.tasks.contract import (
+    Ask,
+    Curve,
+    Outcome,
+    Panel,
+    Setting,
+    Taken,
+    Task,
+    Verdict,
+    level,
+    once,
+    refuse_dark,
+    worst,
+)
 from daq.tasks.stands import by_stand, there_and_back
 
 STANDS, DWELL_S = 60, 2.0
@@ -40,7 +53,7 @@ class Memory:
     dof: int
 
 
-def memory(counts: FloatArray, middle_s: FloatArray, before: FloatArray) -> Memory:
+def memory(counts: FloatArray, middle_s: FloatArray, before: IntArray) -> Memory:
     """Return the memory in counts of stands there and back (S, K), taken at times (S, K).
 
     Parameters
@@ -142,6 +155,7 @@ def _memory(setting: Setting, taken: Sequence[Taken]) -> Memory:
     masks = list(setting.rig.opening_masks)
     rate = by_stand(setting, stands, lambda r: float(setting.true_hz(np.asarray(r.values[0] / r.live_s))))
     live_s = by_stand(setting, stands, lambda r: r.live_s)
+    refuse_dark("crosstalk", setting, float(rate.mean(axis=0).max()))
     middle_s = by_stand(setting, stands, lambda r: (r.gate_open_ns + r.gate_close_ns) / 2e9)
     order = [masks.index(ask.opening) for ask, _ in stands[: len(masks)]]
     before = np.zeros(rate.shape, int)
@@ -219,15 +233,17 @@ def _panels(
     return (
         Panel(
             "Openings there less back, the memory taken out",
-            ", ".join(masks),
+            "opening",
             "log, in 1e4",
             (Curve(at, 1e4 * found.direction, "measured", 1e4 * found.direction_se), level(at, 0.0, "alike")),
+            names=masks,
         ),
         Panel(
             "Slits alone far out, against the described light and their mean",
-            ", ".join(alone),
+            "slit alone",
             "counts a second",
             (*ends, level(slits, 0.0, "as described")),
+            names=alone,
         ),
     )
 

@@ -100,9 +100,10 @@ def _fit(setting: Setting, taken: Sequence[Taken]) -> Outcome:
         panels=(
             Panel(
                 "The monitor by opening, against its stand",
-                ", ".join(named),
+                "opening",
                 "log, in 1e4",
                 (Curve(np.arange(len(masks), dtype=float), 1e4 * mean, "monitor", 1e4 * se),),
+                names=named,
             ),
             *(() if levels is None else (levels[1],)),
         ),

@@ -13,8 +13,8 @@ from daq.errors import StorageError
 from daq.tasks.contract import Panel
 
 WIDE = 115  # letters of a line of the title
-INKS = ("#1b1b1b", "#b5490b", "#3f6ea8", "#7a7a7a")
-MARKERS, LINES = ("o", "s", "^", "x"), ("-", "--", ":", "-.")
+INKS = ("#1b1b1b", "#b5490b", "#3f6ea8", "#7a7a7a", "#7b3f8c", "#2f7d4f")
+MARKERS, LINES = ("o", "s", "^", "x", "D", "v"), ("-", "--", ":", "-.")
 
 
 def draw_task(path: Path, title: str, panels: Sequence[Panel]) -> None:
@@ -42,13 +42,15 @@ def _panel(axes: Axes, panel: Panel) -> None:
             lines += 1
             continue
         inks[curve.label] = INKS[points % 4]
-        style = {"marker": MARKERS[points % 4], "color": INKS[points % 4], "markersize": 3.5, "linestyle": ""}
+        style = {"marker": MARKERS[points % 6], "color": INKS[points % 6], "markersize": 3.5, "linestyle": ""}
         axes.errorbar(curve.x, curve.y, curve.bars, label=curve.label, elinewidth=0.8, **style)  # type: ignore[arg-type]
         points += 1
     high = axes.get_ylim()[1]
     for name, place in panel.marks.items():
         axes.axvline(place, color=INKS[3], linewidth=0.8, linestyle=":")
         axes.annotate(name, (place, high), rotation=90, fontsize=7, ha="right", va="top")
+    if panel.names:
+        axes.set_xticks(range(len(panel.names)), panel.names)
     axes.set(title=panel.title, xlabel=panel.x_label, ylabel=panel.y_label)
     if panel.log_x:
         axes.set_xscale("log")

@@ -25,6 +25,7 @@ from daq.tasks.contract import (
     Task,
     Verdict,
     counts_only,
+    hopeless,
     once,
     worst,
 )
@@ -36,6 +37,7 @@ DWELL_S = {BRIGHT: 5.0, DIM: 10.0, DARK: 5.0}
 KNEE = 0.01  # of the rate: where the plateau begins, so far below its line
 STEEP = 0.1  # of the rate over the whole dial: more is no plateau
 WANDER = 1e-3  # of the rate: what the dial's own wander may make
+SEEN = 5.0  # errors: with less light above dark there is none
 TURNS = 4  # rounds of line and knee
 
 
@@ -141,7 +143,13 @@ def _fit(setting: Setting, taken: Sequence[Taken]) -> Outcome:
     found, logs = {}, {}
     for role in (BRIGHT, DIM):
         rate, se = _rates(setting, taken, role)
-        light = np.maximum(rate - dark[0], 1e-9)
+        if not np.max((rate - dark[0]) / np.hypot(se, dark[1])) > SEEN:
+            raise hopeless(
+                "plateau",
+                "no more is counted with light than without, at any setting",
+                "See that light falls on the detector, then repeat; set the dial back first",
+            )
+        light = np.maximum(rate - dark[0], se)
         logs[role] = np.log(light), np.sqrt(se**2 + dark[1] ** 2) / light
         found[role] = plateau(at, *logs[role], np.arange(len(at), dtype=float))
     bright, dim = found[BRIGHT], found[DIM]

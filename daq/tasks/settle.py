@@ -12,7 +12,20 @@ import numpy as np
 from scipy.stats import chi2 as chi2_distribution
 
 from daq.estimate.arrays import FloatArray
-from daq.tasks.contract import ODD_P, Ask, Curve, Outcome, Panel, Setting, Taken, Task, Verdict, once, worst
+from daq.tasks.contract import (
+    ODD_P,
+    Ask,
+    Curve,
+    Outcome,
+    Panel,
+    Setting,
+    Taken,
+    Task,
+    Verdict,
+    once,
+    refuse_dark,
+    worst,
+)
 
 GATE_S, GATES, MOVES = 0.2, 8, 40
 TIMES_S = np.geomspace(0.03, 1.0, 36)
@@ -135,6 +148,7 @@ def _stroke(setting: Setting, taken: Sequence[Taken], name: str) -> Stroke:
     since_s = (opened - opened[:, :1]).mean(axis=0)
     even = counts[:, GATES // 2 :].mean(axis=1, keepdims=True)  # the source drifts from move to move
     summed = np.asarray((counts / even).sum(axis=0) * even.mean())
+    refuse_dark("settle", setting, float(counts.mean()) / GATE_S)
     way_mm = abs(_strokes_mm(setting)[name] - setting.rig.mask_at_mm(setting.yardstick.opening))
     return Stroke(way_mm, summed, since_s, transient(summed, since_s, GATE_S))
 

@@ -12,7 +12,7 @@ from typing import Any
 
 STUDIES = (
     *("zigzag", "irregular", "benches", "exclusions", "quality", "cuts", "matrix", "chaos", "charts"),
-    *("watched", "stopped", "places", "pooled", "tasks"),
+    *("watched", "stopped", "places", "pooled", "tasks", "masks"),
 )
 RESULTS = Path(__file__).parent / "results"
 

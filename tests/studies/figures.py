@@ -38,3 +38,21 @@ def figures(kappa: FloatArray, se: FloatArray, dof: int, counting_se: float) -> 
 def within(value: float, low: float, high: float) -> bool:
     """Return whether a figure lies in a band."""
     return bool(low <= value <= high)
+
+
+def against(values: FloatArray, se: FloatArray, truth: float, formula: float) -> dict[str, Any]:
+    """Return bias, scatter over what was said and over a formula, each with its simulation error."""
+    draws, sd, said = len(values), float(values.std(ddof=1)), float(np.sqrt(np.mean(se**2)))
+    # by the fourth moment: the scatter of an exponential law is known less well than that of a normal one
+    excess = float(np.mean((values - values.mean()) ** 4) / values.var() ** 2)
+    known = float(np.sqrt((excess - 1) / (4 * draws)))
+    return {
+        "draws": draws,
+        "bias": float(values.mean() - truth) / said,
+        "bias_se": sd / said / float(np.sqrt(draws)),
+        "over_said": sd / said,
+        "over_said_se": known * sd / said,
+        "over_formula": sd / formula,
+        "over_formula_se": known * sd / formula,
+        **({"share": sd / truth} if truth else {}),
+    }

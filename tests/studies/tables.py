@@ -157,6 +157,21 @@ _FORMS: dict[str, tuple[str, dict[str, Any]]] = {
             "false alarms": lambda found: f"{100 * found['alarms']:.2f} %" if "alarms" in found else "",
         },
     ),
+    "masks": (
+        "Bench tasks of the mask: their errors against many draws, and chips that are refused",
+        {
+            "draws": _plain("draws", "d"),
+            "bias [errors]": lambda found: _pm("bias", "bias_se", "+")(found) if "bias" in found else "",
+            "scatter over what is said": lambda found: (
+                _pm("over_said", "over_said_se")(found) if "over_said" in found else ""
+            ),
+            "over the formula": lambda found: (
+                _pm("over_formula", "over_formula_se")(found) if "over_formula" in found else ""
+            ),
+            "right": _percent("right"),
+            "false alarms": lambda found: f"{100 * found['alarms']:.2f} %" if "alarms" in found else "",
+        },
+    ),
     "zigzag": (
         "Complete zig-zag nights (bias and sd in counting bars)",
         {

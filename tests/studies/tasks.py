@@ -9,7 +9,6 @@ import numpy as np
 from scipy.stats import norm
 
 from daq.errors import DaqError
-from daq.estimate.arrays import FloatArray
 from daq.tasks.crossings import dead_time_of_cycles
 from daq.tasks.fringes import Fringes, fringes
 from daq.tasks.gaps import dead_time_of_gaps
@@ -26,7 +25,7 @@ from tests.daq.tasks.made import (
     sums_sd_s,
 )
 from tests.studies.bench import generator_of
-from tests.studies.figures import within
+from tests.studies.figures import against, within
 
 DRAWS = 4000
 TAU_S, WANTED = 40e-9, 0.05  # the dead time, and the share of it that its error shall be
@@ -69,24 +68,6 @@ def _rows(draws: int) -> Iterator[tuple[str, dict[str, Any]]]:
         yield f"clipping, {loss:.0e}", _clipped(loss)
 
 
-def _against(values: FloatArray, se: FloatArray, truth: float, formula: float) -> dict[str, Any]:
-    """Return bias, scatter over what was said and over a formula, each with its simulation error."""
-    draws, sd, said = len(values), float(values.std(ddof=1)), float(np.sqrt(np.mean(se**2)))
-    # by the fourth moment: the scatter of an exponential law is known less well than that of a normal one
-    excess = float(np.mean((values - values.mean()) ** 4) / values.var() ** 2)
-    known = float(np.sqrt((excess - 1) / (4 * draws)))
-    return {
-        "draws": draws,
-        "bias": float(values.mean() - truth) / said,
-        "bias_se": sd / said / float(np.sqrt(draws)),
-        "over_said": sd / said,
-        "over_said_se": known * sd / said,
-        "over_formula": sd / formula,
-        "over_formula_se": known * sd / formula,
-        "share": sd / truth,
-    }
-
-
 def _sums(alone_hz: float, live_s: float, kind: str, draws: int) -> dict[str, Any]:
     random = generator_of("tasks", f"sums {alone_hz} {live_s} {kind}")
     rates = crossing_rates(alone_hz, background_hz=0.0, far=1.0)
@@ -94,7 +75,7 @@ def _sums(alone_hz: float, live_s: float, kind: str, draws: int) -> dict[str, An
         dead_time_of_cycles(cycles_of(rates, CYCLES, live_s / CYCLES, kind, random), kind)
         for _ in range(draws)
     ]
-    row = _against(
+    row = against(
         np.array([one.tau_s for one in found]),
         np.array([one.se_s for one in found]),
         TAU_S,
@@ -109,7 +90,7 @@ def _gaps(rate_hz: float, number: int, tick_s: float, draws: int) -> dict[str, A
         dead_time_of_gaps([gate_ticks(rate_hz, number // 2, TAU_S, tick_s, random) for _ in range(2)], tick_s)
         for _ in range(draws)
     ]
-    row = _against(
+    row = against(
         np.array([one.tau_s for one in found]),
         np.array([one.se_s for one in found]),
         TAU_S,
@@ -134,13 +115,13 @@ def _scans(visibility: float, alone: float, draws: int) -> Iterator[Fringes]:
 def _fringe(pair: str, visibility: float, alone: float, found: list[Fringes]) -> dict[str, Any]:
     period_sd, middle_sd = fringe_sd_mm(pair, pair_counts(visibility, alone, 1e3), visibility)
     every = [one.by_pair[pair] for one in found]
-    row = _against(
+    row = against(
         np.array([one.period_mm for one in every]),
         np.array([one.period_se_mm for one in every]),
         PERIODS_MM[pair],
         period_sd,
     )
-    middle = _against(
+    middle = against(
         np.array([one.middle_mm for one in every]),
         np.array([one.middle_se_mm for one in every]),
         MIDDLE_MM,

@@ -11,7 +11,19 @@ from typing import Any
 import numpy as np
 import pytest
 
-from tests.studies import benches, chaos, charts, exclusions, irregular, matrix, plans, quality, tasks, zigzag
+from tests.studies import (
+    benches,
+    chaos,
+    charts,
+    exclusions,
+    irregular,
+    masks,
+    matrix,
+    plans,
+    quality,
+    tasks,
+    zigzag,
+)
 from tests.studies.__main__ import RESULTS, STUDIES, main, misses
 from tests.studies.bench import generator_of, night, reduced
 from tests.studies.sources import SOURCES
@@ -196,3 +208,13 @@ def test_a_few_draws_of_bench_tasks() -> None:
         assert abs(row.get("bias", 0.0)) < 4.5 * row.get("bias_se", 1.0), name
         if name.startswith("clipping"):
             assert row["meets"]["said"], name
+
+
+def test_a_few_draws_of_tasks_of_the_mask() -> None:
+    found = masks.study(16)["rows"]
+
+    assert set(found) == set(json.loads((RESULTS / "masks.json").read_text())["rows"])
+    for name, row in found.items():
+        assert abs(row.get("bias", 0.0)) < 4.5 * row.get("bias_se", 1.0), name
+        if name.startswith(("chip", "a window")):
+            assert row["right"] == 1.0, name

@@ -147,6 +147,7 @@ def test_bench_tasks_that_are_due_are_named_and_a_reason_stands_in(real, tmp_pat
         ({"verdict": "fail", "sentence": "no light"}, "it failed: no light"),
         ({"valid_until": "2020-01-01T00:00:00+00:00"}, "it held until 2020"),
         ({"set_up": {"chip": "another"}}, "taken with another"),
+        ({"chip": "lantern-3-02"}, "it was taken with another chip (lantern-3-02, now lantern-3-01)"),
     ],
 )
 def test_a_bench_record_counts_when_it_passed_holds_and_is_of_this_set_up(real, tmp_path, change, said):
@@ -161,6 +162,8 @@ def test_a_bench_record_counts_when_it_passed_holds_and_is_of_this_set_up(real, 
         "holds_for": ["chip", "devices"],
         "set_up": set_up_of(real.rig),
     }
+    if "chip" in change:
+        change = {"set_up": good["set_up"] | change}
     write_outcome(folder, good | change)
 
     (found,) = [one for one in checks(real, tmp_path, MAIL) if one.what == "bench dark"]

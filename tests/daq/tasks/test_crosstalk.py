@@ -6,6 +6,7 @@ import numpy as np
 import pytest
 
 from daq import openings
+from daq.errors import DaqError
 from daq.estimate import kappa
 from daq.estimate.arrays import FloatArray
 from daq.itinerary import compose, expected_rates
@@ -114,3 +115,10 @@ def test_the_yardstick_of_memory_is_what_a_memory_does_to_kappa() -> None:
         return kappa(patterns, patterns, plan.weights, plan.signs)[0]
 
     assert of(seen) - of(rates) == pytest.approx(share * KNOWN.yardstick.per_memory, rel=1e-2)
+
+
+def test_without_light_nothing_is_fitted() -> None:
+    dark = [(ask, reading(ask, (1600,), 3.0 * at)) for at, ask in enumerate(ASKS)]
+
+    with pytest.raises(DaqError, match=r"800 a second were counted where 3\.61e\+05 are described"):
+        TASK.fit(KNOWN, dark)

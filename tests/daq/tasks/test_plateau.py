@@ -2,10 +2,13 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 from scipy.special import ndtr
 
+from daq.errors import DaqError
 from daq.tasks.contract import Ask, Outcome
 from daq.tasks.plateau import TASK
 from tests.daq.tasks.made import drawn, setting
@@ -84,3 +87,22 @@ def test_a_person_is_cautioned_of_high_voltage_once_and_leaves_the_dial_where_it
 
 def test_without_a_dial_the_task_says_what_it_lacks() -> None:
     assert "by_hand.detector" in " ".join(TASK.lacks(setting(rig=lantern_rig(by_hand={}))))
+
+
+def test_what_the_instrument_shows_is_what_counts() -> None:
+    asks = [
+        ask if ask.turn is None else replace(ask, turn=replace(ask.turn, shown=ask.turn.value + 7))
+        for ask in TASK.asks(KNOWN, ())
+    ]
+
+    def rate_hz(ask: Ask) -> float:
+        return 50.0 if ask.role.startswith("dark") else 1e4
+
+    found = TASK.fit(KNOWN, drawn(asks, rate_hz, np.random.default_rng(6)))
+
+    assert found.values["settings"][:2] == [1007.0, 857.0]
+
+
+def test_without_light_nothing_is_fitted() -> None:
+    with pytest.raises(DaqError, match="no more is counted with light than without"):
+        TASK.fit(KNOWN, drawn(TASK.asks(KNOWN, ()), lambda ask: 800.0, np.random.default_rng(7)))
