@@ -19,6 +19,10 @@ from daq.storage.lock import is_written
 
 READY = ("armed", "simulated")
 HOLDING = "holding"
+SILENCE = (
+    "Silence until then says that nothing needs you, or that nothing can be sent: the listener of the "
+    "heartbeat (`tercet listen`) tells the one from the other."
+)
 
 
 def summary_of(lab: Path, zone: str, now: datetime) -> str:
@@ -50,9 +54,7 @@ def evening_word(lab: Path, messages: Messages, now: datetime) -> tuple[str, str
     following = f"next word at {_local(morning.isoformat(), zone)}"
     lines = [line for feed in going for line in _feed_lines(feed)] + [_coming(one, zone) for one in starting]
     lines += [] if well else ["What is not armed is skipped; what holds goes on when its cause is gone."]
-    lines += ["Silence until then says that nothing needs you, or that nothing can be sent: the listener of"]
-    lines += ["the heartbeat (`tercet listen`) tells the one from the other."]
-    return f"tercet: {word}, {following}", "\n".join(lines)
+    return f"tercet: {word}, {following}", "\n".join([*lines, SILENCE])
 
 
 def _booked(lab: Path, now: datetime) -> list[dict[str, Any]]:

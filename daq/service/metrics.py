@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, field
+from functools import cache
 from importlib.metadata import version
 from pathlib import Path
 from typing import Any
@@ -82,7 +83,7 @@ class _Families:
 
 
 def _of_place(free: int) -> Iterator[Metric]:
-    yield InfoMetricFamily("tercet_build", "Version of the program.", value={"version": version("tercet")})
+    yield InfoMetricFamily("tercet_build", "Version of the program.", value={"version": _version()})
     yield _gauge("tercet_store_free_bytes", "Free space where runs are written.", free, "bytes")
 
 
@@ -121,6 +122,11 @@ def _of_run(feed: Mapping[str, Any] | None) -> Iterator[Metric]:
         warnings.add_metric([level], sum(one.get("level") == level for one in feed["warnings"]))
     yield warnings
     yield _gauge("tercet_in_doubt", "Whether a warning puts kappa in doubt.", bool(feed.get("in_doubt")))
+
+
+@cache  # reading the metadata of a package costs more than all the rest
+def _version() -> str:
+    return version("tercet")
 
 
 def _gauge(name: str, text: str, value: float, unit: str = "") -> Metric:

@@ -149,12 +149,10 @@ def _tell(
     else:
         note_outcome(lab, run, outcome)
     say(f"booking {booking.number}: {run or booking.file.name}: {outcome}")
-    post(
-        lab,
-        NOTE,
-        f"{booking.file.stem}: {outcome}",
-        f"Booking {booking.number}, due {due}: {outcome}. {run or ''}",
-    )
+    local = f"{due.astimezone(booking.times.zone):%Y-%m-%d %H:%M} {booking.times.zone.key}"
+    ran = f" Run {run}." if run else ""
+    text = f"Booking {booking.number}, due {local}: {outcome.rstrip('.')}.{ran}"
+    post(lab, NOTE, f"{booking.file.stem}: {outcome}", text)
 
 
 def _refusal(booking: Booking, due: datetime) -> str:
