@@ -61,30 +61,53 @@ class TapedTrack(Track):
         return shown if shown == shown else super().shown_mm(at_ns)
 
 
+class Losses:
+    """The links that the archived run lost: where one is due, the instrument falls silent.
+
+    Parameters
+    ----------
+    tape
+        What the archive holds.
+    lose
+        Ends the instrument's connection.
+    """
+
+    def __init__(self, tape: Tape, lose: Callable[[], None]) -> None:
+        self._due, self._left, self._lose = tape.due, dict(tape.lost_before), lose
+        self._dumb = False
+
+    def session(self, answer: Callable[[str], str | None]) -> LineSession:
+        """Return a session; it says nothing more once its link is to be lost."""
+        self._dumb = False
+        return LineSession(lambda line: self._unless_dumb(answer(line)))
+
+    def strike(self) -> bool:
+        """Return whether a gate that is to be opened is lost, with its link."""
+        row = self._due()
+        if not self._left.get(row):
+            return False
+        self._left[row] -= 1
+        self._dumb = True
+        self._lose()
+        return True
+
+    def _unless_dumb(self, reply: str | None) -> str | None:
+        return None if self._dumb else reply
+
+
 class TapedCounter(GatedCounter):
     """A counter that gives what the archive holds; its link is lost where the archived run lost a visit."""
 
-    def __init__(self, tape: Tape, clock: Clock, lose: Callable[[], None]) -> None:
+    def __init__(self, tape: Tape, clock: Clock, losses: Losses) -> None:
         super().__init__(COUNTER, lambda open_ns, close_ns: (0,), 0.0, clock)
-        self._tape, self._lose, self._left = tape, lose, dict(tape.lost_before)
-        self._dumb = False
+        self._tape, self._losses = tape, losses
 
     def session(self, send: Send) -> LineSession:
         """Return a session; it says nothing more once its link is to be lost."""
-        self._dumb = False
-        return LineSession(self._answer)
-
-    def _answer(self, line: str) -> str | None:
-        reply = self._interpreter.answer(line)
-        return None if self._dumb else reply
+        return self._losses.session(self._interpreter.answer)
 
     def _initiate(self) -> None:
-        row = self._tape.due()
-        if self._left.get(row):
-            self._left[row] -= 1
-            self._dumb = True
-            self._lose()
-        else:
+        if not self._losses.strike():
             super()._initiate()
 
     def _answer_of(self, gate: Gate) -> str:
@@ -95,6 +118,28 @@ class TapedCounter(GatedCounter):
         counts = [*map(int, reading.values), *(count for part in parts for count in part)]
         overflow = int(bool(reading.quality & Quality.OVERFLOW))
         return f"{gate.number},{reading.live_s:.9f},{overflow},{','.join(map(str, counts))}"
+
+
+class TapedPowerMeter(PowerMeter):
+    """A power meter that gives what the archive holds, and loses its link as the counter does."""
+
+    def __init__(self, tape: Tape, clock: Clock, losses: Losses) -> None:
+        super().__init__(COUNTER, self._taped, clock)
+        self._tape, self._losses = tape, losses
+
+    def session(self, send: Send) -> LineSession:
+        """Return a session; it says nothing more once its link is to be lost."""
+        return self._losses.session(self._interpreter.answer)
+
+    def _initiate(self) -> None:
+        if not self._losses.strike():
+            super()._initiate()
+
+    def _taped(self, open_ns: int, close_ns: int) -> tuple[float, float, int]:
+        reading = self._tape.now()
+        if reading is None:
+            return 0.0, 0.0, 1
+        return reading.values[0], (reading.values_var or (0.0,))[0], reading.repeats
 
 
 class ReplayBench:
@@ -180,18 +225,8 @@ def _instruments(
     power = rig.devices[COUNTER].driver == "dialect"
     return {
         STAGES: StageController(letters, travels, clock),
-        COUNTER: _power_meter(tape, clock) if power else TapedCounter(tape, clock, lose),
+        COUNTER: (TapedPowerMeter if power else TapedCounter)(tape, clock, Losses(tape, lose)),
     }
-
-
-def _power_meter(tape: Tape, clock: Clock) -> PowerMeter:
-    def read(open_ns: int, close_ns: int) -> tuple[float, float, int]:
-        reading = tape.now()
-        if reading is None:
-            return 0.0, 0.0, 1
-        return reading.values[0], (reading.values_var or (0.0,))[0], reading.repeats
-
-    return PowerMeter(COUNTER, read, clock)
 
 
 def _cut(clock: VirtualClock, hosts: Mapping[str, Host]) -> None:

@@ -214,18 +214,25 @@ def test_a_run_that_went_on_after_a_break_is_replayed_with_the_stand_that_was_be
 
 
 @pytest.mark.parametrize("file", ["horn.toml", "beam.toml"])
-def test_power_readings_and_detected_particles_are_replayed_too(tmp_path, capsys, file):
+def test_power_readings_and_detected_particles_are_replayed_too_with_the_links_they_lost(
+    tmp_path, capsys, file
+):
     for part in ("rigs", "dialects"):
         shutil.copytree(CONFIGS / part, tmp_path / part)
     text = re.sub(r"(?m)^laps = \d+", "laps = 2", (CONFIGS / file).read_text())
     (tmp_path / file).write_text(re.sub(r"(?m)^number = \d+", "number = 3", text))
-    assert main(["rehearse", str(tmp_path / file), "--link", "direct", "--into", str(tmp_path / "lab")]) == 0
+    (tmp_path / "faults.toml").write_text(
+        '[[fault]]\ndevice = "counter"\nkind = "drop"\nat_s = 40\nseconds = 3\n'
+    )
+    words = ["--link", "direct", "--faults", str(tmp_path / "faults.toml"), "--into", str(tmp_path / "lab")]
+    assert main(["rehearse", str(tmp_path / file), *words]) == 0
     (night,) = (tmp_path / "lab" / "runs").iterdir()
 
     status, figures = replay(night, tmp_path / "again", capsys)
 
     assert status == 0
     assert figures["same_digest"] and figures["same_times"]
+    assert len(events(Path(figures["run"]), "fault")) == len(events(night, "fault")) > 0
 
 
 def _cut_short(source: Path, folder: Path, rows: int) -> None:
