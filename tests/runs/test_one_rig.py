@@ -75,6 +75,7 @@ def test_another_run_a_task_and_a_booked_start_are_refused_and_the_first_run_is_
     real, first, tmp_path
 ):
     second, lab = tmp_path / "second", tmp_path / "lab"
+    load(real).itinerary()  # what a booking has to import is imported before
     arm_and_book(lab, real, datetime.now(UTC) + timedelta(seconds=2))
 
     with (

@@ -16,6 +16,7 @@ import pytest
 from daq.cli import main
 from daq.errors import StorageError
 from daq.service.bookings import GOING_ON
+from daq.service.load import load
 from daq.service.owner import owned, refuse_owned
 from daq.storage.feed import DESK, read_feed
 from daq.storage.lab_book import insert, select
@@ -65,6 +66,12 @@ def book(lab: Path, at: datetime, *more: str) -> None:
     assert main([*words, "--first-day", at.date().isoformat(), *more]) == 0
 
 
+def soon(seconds: float) -> datetime:
+    """Return a moment so many seconds from now; what a booking has to import is imported before."""
+    load(CONFIGS / "lantern.toml").itinerary()
+    return datetime.now(ZoneInfo(ZONE)) + timedelta(seconds=seconds)
+
+
 def ended(process: subprocess.Popen[str]) -> dict:
     """Ask a service to leave and return what it did."""
     process.send_signal(signal.SIGINT)
@@ -73,7 +80,7 @@ def ended(process: subprocess.Popen[str]) -> dict:
 
 
 def test_a_booked_rehearsal_starts_by_itself_and_its_outcome_is_written_down(tmp_path, capsys):
-    book(tmp_path, datetime.now(ZoneInfo(ZONE)) + timedelta(seconds=3))
+    book(tmp_path, soon(3))
     process = service(tmp_path)
 
     start = wait_for_start(tmp_path)
@@ -104,7 +111,7 @@ def test_what_an_operator_books_on_the_page_is_booked_by_the_service(tmp_path):
 
 
 def test_an_operator_ends_the_run_and_not_the_service(tmp_path):
-    book(tmp_path, datetime.now(ZoneInfo(ZONE)) + timedelta(seconds=2), "--hours", "10")
+    book(tmp_path, soon(2), "--hours", "10")
     process = service(tmp_path)
     run = wait_for_start(tmp_path, outcome=False)["run"]
     wait_for_rows(tmp_path / "runs" / run, 8)
@@ -119,7 +126,7 @@ def test_an_operator_ends_the_run_and_not_the_service(tmp_path):
 
 
 def test_a_booked_run_is_started_once_though_its_service_is_killed_and_it_ends_by_its_time(tmp_path):
-    book(tmp_path, datetime.now(ZoneInfo(ZONE)) + timedelta(seconds=2), "--hours", "10")
+    book(tmp_path, soon(2), "--hours", "10")
     process = service(tmp_path)
     run = wait_for_start(tmp_path, outcome=False)["run"]
     wait_for_rows(tmp_path / "runs" / run, 8)
