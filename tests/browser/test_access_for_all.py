@@ -55,6 +55,7 @@ def test_axe_finds_nothing_in_either_theme_at_either_width(
     if changed is not None:
         lab.put(feed(slits=slits, **changed))
     page = open_page(clock=state == "lost", color_scheme="light", viewport={"width": 1440, "height": 900})
+    expect(page.locator("#verdict > *").first).to_be_attached(timeout=15000)
     if changed is not None:
         expect(page.locator("#strip .scatterlayer path").first).to_be_attached(timeout=15000)
     if state == "lost":
