@@ -35,7 +35,7 @@ def _limit(figures: Mapping[str, Any]) -> Iterator[str]:
     how = "planned stop" if stop["kind"] == "planned" else f"stop: {stop['kind']}"
     looked = "blinded until revealed" if figures["blinding"] == "revealed" else "not blinded"
     yield (
-        f"|kappa| < {found['limit']:.3g} at 95 % confidence (90 % interval {low} to {high}, "
+        f"|kappa| < {found['limit']:.2e} at 95 % confidence (90 % interval {low} to {high}, "
         f"{figures['pairs']} pairs, {how}, {looked})"
     )
     yield f"if kappa is zero, such a run gives a limit of about {found['sensitivity']:.2g}"

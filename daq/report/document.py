@@ -57,10 +57,10 @@ def document(facts: Mapping[str, Any]) -> Document:
 _RESIDUAL = (
     "{told}",
     "{statement_said}",
-    "Jackknife over {pairs} pairs, {normalisation} normalisation; counting alone ± "
-    "{kappa_counting_se*1e4:.3f}.",
-    "95 % interval, read once at the planned end: {once.low*1e4:+.2f} to {once.high*1e4:+.2f}",
-    "95 % over the whole night: {whole.low*1e4:+.2f} to {whole.high*1e4:+.2f}",
+    "Jackknife over {pairs} pairs, {normalisation} normalisation; counting alone would give "
+    "± {kappa_counting_se*1e4:.2f} × 1e-4.",
+    "95 % interval, read once at the planned end: ({once.low*1e4:+.2f} to {once.high*1e4:+.2f}) × 1e-4",
+    "95 % over the whole night: ({whole.low*1e4:+.2f} to {whole.high*1e4:+.2f}) × 1e-4",
     "{zero_said}",
 )
 
@@ -74,9 +74,15 @@ def _budget(facts: Mapping[str, Any]) -> Block:
     ]
     total = said(facts, "{account.budget.total_se*1e4:.3f}")
     goal = said(facts, "{goal_se*1e4:.3f}")
-    rows += [("total", total, "the jackknife, what it cannot see added in squares")] if total else []
+    rows += [("total", total, _TOTAL)] if total else []
     rows += [("goal", goal, "the description")] if goal else []
     return Block("Where the error comes from [1e-4]", rows=(("what", "size", "how it was obtained"), *rows))
+
+
+_TOTAL = (
+    "the jackknife, what it cannot see added in squares; by chance it may lie below counting: see the check "
+    "of the scatter"
+)
 
 
 def _checks(facts: Mapping[str, Any]) -> Block:

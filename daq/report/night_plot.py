@@ -18,7 +18,7 @@ SMALL = 6
 
 def draw_night(figure: Figure | SubFigure, facts: Mapping[str, Any]) -> None:
     """Draw the figures of a morning report into a figure; what the record lacks stays empty."""
-    parts = figure.subfigures(3, 1, height_ratios=(1.5, 1.0, 1.0), squeeze=False)
+    parts = figure.subfigures(3, 1, height_ratios=(1.5, 1.25, 1.0), squeeze=False)
     upper, plates, lower = parts[:, 0]
     kappa, leftover = upper.subplots(1, 2)
     _kappa(kappa, facts)
@@ -26,7 +26,7 @@ def draw_night(figure: Figure | SubFigure, facts: Mapping[str, Any]) -> None:
     _plates(plates, facts)
     _night(lower.subplots(1, 1), facts)
     upper.subplots_adjust(left=0.08, right=0.98, top=0.87, bottom=0.23, wspace=0.22)
-    plates.subplots_adjust(left=0.08, right=0.98, top=0.85, bottom=0.12, wspace=0.08)
+    plates.subplots_adjust(left=0.08, right=0.98, top=0.85, bottom=0.33, wspace=0.08)
     lower.subplots_adjust(left=0.08, right=0.98, top=0.85, bottom=0.32)
 
 
@@ -83,8 +83,8 @@ def _plates(figure: SubFigure, facts: Mapping[str, Any]) -> None:
             axes.plot(place, table[:, column] / 1e3, color=INK, linewidth=0.8)
         axes.set_title(openings.name(int(mask)), fontsize=SMALL)
         axes.tick_params(labelsize=SMALL - 1)
-        axes.tick_params(labelbottom=False)
     figure.supylabel("[1000/s]", fontsize=SMALL, x=0.01)
+    figure.supxlabel("position [mm]", fontsize=SMALL, y=0.04)
 
 
 def _night(axes: Axes, facts: Mapping[str, Any]) -> None:
@@ -95,4 +95,6 @@ def _night(axes: Axes, facts: Mapping[str, Any]) -> None:
         axes.plot(hours, mean, color=INK, linewidth=0.8)
     for one in fact(facts, "marks") or []:
         axes.axvline(one, color=ACCENT, linewidth=0.8, linestyle=":")
-    _dress(axes, "the night: level of the source; dotted: something was noticed", "hours", "level")
+    _dress(
+        axes, "the night: mean rate of a stand; dotted: something was noticed", "hours of measuring", "[1/s]"
+    )

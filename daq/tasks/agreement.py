@@ -8,7 +8,7 @@ from math import hypot, sqrt
 from daq.tasks.contract import Setting, Verdict, fits, within, worst
 from daq.tasks.crossings import Sums
 from daq.tasks.gaps import Gaps
-from daq.tasks.said import with_error
+from daq.tasks.said import of_allowed, with_error
 
 LARGEST_LOSS = 0.05
 FINE = 0.05  # error over dead time that is aimed at, where the dead time itself is wanted
@@ -80,10 +80,10 @@ def sentence_of(setting: Setting, found: Found) -> str:
     """Return what was found, and what gaps and sums say of one another."""
     (tau, se), told = found.best, setting.measurement.estimate.dead_time_s
     lost = 100 * setting.yardstick.brightest_hz * tau
+    shift = of_allowed(kappa_shift(setting, found), setting.yardstick.allowed)
     said = (
         f"The dead time is {with_error(1e9 * tau, 1e9 * se)} ns ({1e9 * told:.3g} described); its error "
-        f"moves kappa by {_tiny(kappa_shift(setting, found), setting)}, and at the brightest place "
-        f"{lost:.2g} % of the counts are lost."
+        f"moves kappa by {shift}, and at the brightest place {lost:.2g} % of the counts are lost."
     )
     return " ".join((said, *_budget(found), *_agreement(setting, found)))
 
@@ -108,10 +108,11 @@ def _agreement(setting: Setting, found: Found) -> list[str]:
     )
     said = [f"Sums and gaps agree: {both}."]
     if abs(found.apart) > APART:
+        moved = of_allowed(_moved(setting, found), setting.yardstick.allowed)
         said = [
             f"Sums and gaps disagree by {abs(found.apart):.1f} standard errors: {both}, which moves kappa by "
-            f"{_tiny(_moved(setting, found), setting)}. Something beside the dead time changes the counts "
-            f"with the rate: look at the pulse height and the threshold."
+            f"{moved}. Something beside the dead time changes the counts with the rate: look at the pulse "
+            f"height and the threshold."
         ]
     if fits(found.gaps.chi2, found.gaps.dof) != "pass":
         said.append(
@@ -120,9 +121,3 @@ def _agreement(setting: Setting, found: Found) -> list[str]:
             f"afterpulses, ringing and room light."
         )
     return said
-
-
-def _tiny(shift: float, setting: Setting) -> str:
-    allowed = setting.yardstick.allowed
-    least = 1e-3 * allowed
-    return f"less than {least:.0e}" if shift < least else f"{shift:.1e} of {allowed:.1e} allowed"

@@ -12,6 +12,7 @@ from daq import openings
 from daq.estimate.arrays import FloatArray
 from daq.itinerary import expected_rates
 from daq.tasks.contract import Ask, Curve, Outcome, Panel, Setting, Taken, Task, counts_only, within, worst
+from daq.tasks.said import of_allowed
 from daq.tasks.windows import NAME, Edges, clipped, named, plain, seen_windows, together, window
 
 COARSE, UP, DOWN = "coarse", "up", "down"
@@ -150,7 +151,7 @@ def _fit(setting: Setting, taken: Sequence[Taken]) -> Outcome:
         sentence=(
             f"{len(coarse)} windows are as drawn, {1e3 * float(np.mean(list(off.values()))):+.1f} um off "
             f"altogether; the tightest margin is {1e3 * margin[tight]:.0f} um ({tight}), so clipping moves "
-            f"kappa by {shift:.1e} of {setting.yardstick.allowed:.1e} allowed; moves up and down end "
+            f"kappa by {of_allowed(shift, setting.yardstick.allowed)}; moves up and down end "
             f"{1e3 * play_mm:.1f} um apart, and {1e3 * chance_mm:.1f} um at random."
         ),
         model="window with blurred edges, Poisson deviance",
