@@ -85,11 +85,12 @@ class Outlets:
         self.send()
         try:
             messages = self._settings().messages
-            if messages is not None:
-                now = datetime.now(UTC)
-                send_notes(
-                    self._lab, messages, now, title, summary_of(self._lab, messages.zone, now), by_apprise
-                )
+            now = datetime.now(UTC)
+            if messages is None:
+                return
+            summary = summary_of(self._lab, messages.zone, now)
+            if not send_notes(self._lab, messages, now, title, summary, by_apprise):
+                log.warning("messages could not be sent; they wait in the lab for its next run or service")
         except DaqError as error:
             log.error("%s", error)
 
