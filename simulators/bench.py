@@ -3,29 +3,21 @@
 from __future__ import annotations
 
 import json
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
-from functools import partial
 from typing import Any, Literal
 
 from daq.description import Rig
-from daq.description.device import DeviceEntry
 from daq.errors import DescriptionError
 from daq.ports import Clock
 from simulators.clock import VirtualClock
 from simulators.counters import GatedCounter
 from simulators.faults import Struck, read_script
-from simulators.gauge import Gauge, ShutterBox
 from simulators.hosts import Host, Instrument, serve
-from simulators.listmode import PARTS, EventStream
-from simulators.modbus import ModbusRoom
+from simulators.listmode import EventStream
+from simulators.models import Parts, misfits
 from simulators.motion import Track
-from simulators.powermeter import PowerMeter
-from simulators.scpi_stage import ScpiStage
-from simulators.sensors import RoomSensor
 from simulators.settings import Settings, read_settings, utc_ns
-from simulators.stages import StageController, Travel
-from simulators.totalisers import FrequencyMeter, Totaliser
 from simulators.truth import Truth
 from simulators.upsets import Spoilt, Upsets
 
@@ -161,48 +153,11 @@ def build(
     tracks = {name: _track(axis.limits_mm, kept.get(name)) for name, axis in rig.axes.items()}
     lights = (upsets.beam, upsets.to_monitor) if upsets else (None, None)
     truth = Truth(rig, settings, seed, tracks, *lights)
-
-    def count(name: str, open_ns: int, close_ns: int, channel: int = 0) -> int:
-        counts = truth.counts(name, open_ns, close_ns, channel)
-        return upsets.counted(name, open_ns, close_ns, counts) if upsets else counts
-
-    def counts(name: str, open_ns: int, close_ns: int) -> tuple[int, ...]:
-        return tuple(count(name, open_ns, close_ns, one) for one in range(rig.devices[name].channels))
-
-    shutter = ShutterBox(clock)
-    makers: Mapping[str, Callable[[str], Instrument]] = {
-        "gcode-stage": lambda name: _controller(StageController, name, rig, tracks, clock),
-        "scpi-stage": lambda name: _controller(partial(ScpiStage, name), name, rig, tracks, clock),
-        "scpi-counter": lambda name: GatedCounter(name, partial(counts, name), settings.readout_s, clock),
-        "list-mode-counter": lambda name: GatedCounter(
-            name, partial(counts, name), settings.readout_s, clock, PARTS
-        ),
-        "scpi-totaliser-26": lambda name: Totaliser(name, partial(count, name), 26, clock),
-        "scpi-totaliser-32": lambda name: Totaliser(name, partial(count, name), 32, clock),
-        "scpi-frequency": lambda name: FrequencyMeter(name, partial(count, name), clock),
-        "scpi-power": lambda name: PowerMeter(name, partial(truth.power, name), clock),
-        "scpi-sensor": lambda name: RoomSensor(name, clock),
-        "modbus-sensor": lambda name: _modbus(rig.devices[name], clock),
-        "gauge": lambda name: Gauge(name, clock),
-        "shutter": lambda name: shutter,
-    }
+    makers = Parts(rig, settings, tracks, truth, upsets, clock).makers()
     models = {name: settings.instruments.get(name, entry.driver) for name, entry in rig.devices.items()}
-    unknown = [
-        f"rig {rig.name}, devices.{name}.driver: no simulated instrument understands {model!r}. "
-        f"Name one of {', '.join(makers)} for it in [bench.instruments]."
-        for name, model in models.items()
-        if model not in makers
-    ]
-    unseen = [
-        f"rig {rig.name}, devices.{name}.channels: [bench.channels] says what {len(settings.channels)} of "
-        f"them see, not {entry.channels}. Add the others there."
-        for name, entry in rig.devices.items()
-        if entry.channels > len(settings.channels)
-    ]
-    if unknown or unseen:
-        raise DescriptionError((*unknown, *unseen))
-    if "shutter" in models.values():
-        truth.behind(shutter)
+    wrong = tuple(misfits(rig, settings, models, makers))
+    if wrong:
+        raise DescriptionError(wrong)
     instruments = {name: makers[model](name) for name, model in models.items()}
     streams = {
         name: EventStream.of(one, rig.devices[name], settings.dead_time_s, seed, clock)
@@ -217,22 +172,3 @@ def _track(limits_mm: tuple[float, float], kept: Mapping[str, float] | None) -> 
     if kept is None:
         return Track(low_mm + _FOUND_AT * (high_mm - low_mm), low_mm, homed=False)
     return Track(kept["place_mm"], low_mm, homed=bool(kept["homed"]))
-
-
-def _modbus(entry: DeviceEntry, clock: Clock) -> Instrument:
-    return ModbusRoom(clock, numbered=entry.address.startswith("tcp:"), unit=entry.unit)
-
-
-def _controller(
-    make: Callable[[Mapping[str, Track], Mapping[str, Travel], Clock], Instrument],
-    name: str,
-    rig: Rig,
-    tracks: Mapping[str, Track],
-    clock: Clock,
-) -> Instrument:
-    mine = {axis_name: axis for axis_name, axis in rig.axes.items() if axis.device == name}
-    return make(
-        {axis.letter: tracks[axis_name] for axis_name, axis in mine.items()},
-        {axis.letter: Travel(axis.limits_mm, axis.speed_mm_s) for axis in mine.values()},
-        clock,
-    )
