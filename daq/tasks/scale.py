@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Sequence
 from dataclasses import dataclass
 from math import sqrt
+from typing import Any
 
 import numpy as np
 
@@ -19,6 +20,7 @@ from daq.tasks.contract import (
     Setting,
     Taken,
     Task,
+    Verdict,
     counts_only,
     fits,
     worst,
@@ -71,33 +73,36 @@ def _fit(setting: Setting, taken: Sequence[Taken]) -> Outcome:
     expected = {pair: _expected_mm(setting, pair) for pair in _pairs(setting)}
     found = fringes(place, counts, expected, _lobe_mm(setting))
     common = _common(found, list(expected.values()))
-    distance_m = setting.rig.geometry.distance_m
-    each = found.by_pair
+    values, se = _values(found, common, setting.rig.geometry.distance_m)
+    precise: Verdict = "pass" if common.se <= FINEST_REL else "fail"
     return Outcome(
-        values={
-            "scale": common.scale,
-            "period_mm": {pair: one.period_mm for pair, one in each.items()},
-            "middle_mm": {pair: one.middle_mm for pair, one in each.items()},
-            "visibility": {pair: one.visibility for pair, one in each.items()},
-            "distance_m": common.scale * distance_m,
-        },
-        se={
-            "scale": common.se,
-            "period_mm": {pair: one.period_se_mm for pair, one in each.items()},
-            "middle_mm": {pair: one.middle_se_mm for pair, one in each.items()},
-            "distance_m": common.se * distance_m,
-        },
-        verdict=worst(
-            fits(common.chi2, len(each) - 1),
-            fits(found.chi2, found.dof),
-            "pass" if common.se <= FINEST_REL else "fail",
-        ),
+        values=values,
+        se=se,
+        verdict=worst(fits(common.chi2, len(expected) - 1), fits(found.chi2, found.dof), precise),
         sentence=_sentence(common, found),
         model="every slit alone, and a fringe between two",
         panels=(_panel(place, counts, found),),
         chi2=found.chi2,
         dof=found.dof,
     )
+
+
+def _values(found: Fringes, common: Common, distance_m: float) -> tuple[dict[str, Any], dict[str, Any]]:
+    each = found.by_pair
+    values = {
+        "scale": common.scale,
+        "period_mm": {pair: one.period_mm for pair, one in each.items()},
+        "middle_mm": {pair: one.middle_mm for pair, one in each.items()},
+        "visibility": {pair: one.visibility for pair, one in each.items()},
+        "distance_m": common.scale * distance_m,
+    }
+    se = {
+        "scale": common.se,
+        "period_mm": {pair: one.period_se_mm for pair, one in each.items()},
+        "middle_mm": {pair: one.middle_se_mm for pair, one in each.items()},
+        "distance_m": common.se * distance_m,
+    }
+    return values, se
 
 
 @dataclass(frozen=True, slots=True)

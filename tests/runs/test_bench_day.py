@@ -51,19 +51,25 @@ def test_the_plan_takes_the_records_and_says_which(day: Path, capsys: pytest.Cap
 
 @pytest.fixture(scope="module")
 def night(day: Path) -> Path:
-    """Return the run of the night that the records of the day planned."""
+    """Return the run of the night that the records of the day planned, its report beside it."""
     plan = str(day / "tonight.toml")
     assert main(["compose", str(day / "night.toml"), "--bench", str(day / "lab"), "--write", plan]) == 0
     assert main(["rehearse", plan, "--link", "direct", "--into", str(day / "lab")]) == 0
     (run,) = (day / "lab" / "runs").iterdir()
+    assert main(["report", str(run)]) == 0
     return run
+
+
+def reported(run: Path) -> dict[str, Any]:
+    """Return the facts of a morning report."""
+    return dict(json.loads((run / "report.json").read_text()))
 
 
 def test_the_night_meets_its_forecast_and_its_record_quotes_the_bench(
     day: Path, night: Path, capsys: pytest.CaptureFixture[str]
 ) -> None:
     _, expected = told(capsys, "compose", str(day / "tonight.toml"))
-    _, found = told(capsys, "report", str(night))
+    found = reported(night)
 
     assert found["kappa_counting_se"] == pytest.approx(expected["kappa_counting_se"], rel=0.03)
     # the jackknife over 10 pairs: chi with 9 degrees of freedom, 95 % between 0.548 and 1.454
@@ -73,14 +79,12 @@ def test_the_night_meets_its_forecast_and_its_record_quotes_the_bench(
     assert {"dark", "pilot", "register", "dry-lap"} <= set(quoted)
 
 
-def test_the_counting_bar_is_the_scatter_of_counts_drawn_anew(
-    night: Path, capsys: pytest.CaptureFixture[str]
-) -> None:
+def test_the_counting_bar_is_the_scatter_of_counts_drawn_anew(night: Path) -> None:
     """Every sum of an opening at a position is drawn 20 000 times from the law of its counts.
 
     Their scatter is known to 0.5 %; weights and signs are those of the archive, the sum is written out here.
     """
-    _, found = told(capsys, "report", str(night))
+    found = reported(night)
     visits = open_visits(night)
     at_mm, opening = visits["position_mm"].values, visits["opening"].values
     weights, places_mm = np.array(visits.attrs["weights"]), visits.attrs["positions_mm"]
@@ -103,15 +107,13 @@ def test_the_counting_bar_is_the_scatter_of_counts_drawn_anew(
     assert found["kappa_counting_se"] == pytest.approx(kappa.std(), rel=0.03)
 
 
-def test_the_report_of_the_night_says_what_the_run_found(
-    night: Path, capsys: pytest.CaptureFixture[str]
-) -> None:
-    _, found = told(capsys, "report", str(night))
-    kept = json.loads((night / "report.json").read_text())
+def test_the_report_of_the_night_says_what_the_run_found(night: Path) -> None:
+    found = reported(night)
+    results = open_visits(night).attrs["results"]
     page = (night / "report.html").read_text()
 
     assert (night / "report.pdf").read_bytes()[:5] == b"%PDF-"
-    assert kept["kappa_se"] == found["kappa_se"]
+    assert found["kappa_se"] == pytest.approx(results["kappa_se"])
     assert f"({1e4 * found['kappa']:+.2f} ± {1e4 * found['kappa_se']:.2f}) × 1e-4" in page
     assert all(record in page for record in ("dark/", "dry-lap/"))
     assert "The drift is that of pilot/" in page
