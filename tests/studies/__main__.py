@@ -1,4 +1,4 @@
-"""Run a study (`python -m tests.studies NAME [--nights N] [--json PATH]`), or write the `tables`."""
+"""Run a study: `python -m tests.studies NAME [--nights N] [--workers N] [--json PATH]`; or write `tables`."""
 
 from __future__ import annotations
 
@@ -6,9 +6,13 @@ import argparse
 import json
 import os
 import sys
+from functools import partial
 from importlib import import_module
 from pathlib import Path
 from typing import Any
+
+from daq.cli.study import runner
+from tests.studies.rows import rows
 
 STUDIES = (
     *("zigzag", "irregular", "benches", "exclusions", "quality", "cuts", "matrix", "chaos", "charts"),
@@ -24,6 +28,7 @@ def main(arguments: list[str] | None = None) -> int:
         "name", choices=(*STUDIES, "tables"), help="which study, or: write the tables from results"
     )
     parser.add_argument("--nights", type=int, help="how many nights (each study has its own default)")
+    parser.add_argument("--workers", type=int, default=0, help="processes that draw the rows (0: this one)")
     parser.add_argument("--json", type=Path, help="where the result goes (default: print it)")
     wanted = parser.parse_args(arguments)
     if wanted.name == "tables":
@@ -31,7 +36,7 @@ def main(arguments: list[str] | None = None) -> int:
 
         write(RESULTS)
         return 0
-    result = run(wanted.name, wanted.nights)
+    result = run(wanted.name, wanted.nights, wanted.workers)
     text = json.dumps(result, indent=1)
     if wanted.json is None:
         print(text)
@@ -43,11 +48,13 @@ def main(arguments: list[str] | None = None) -> int:
     return 1 if missed else 0
 
 
-def run(name: str, nights: int | None) -> dict[str, Any]:
-    """Return the result of a study with what it cost."""
+def run(name: str, nights: int | None, workers: int = 0) -> dict[str, Any]:
+    """Return the result of a study with what it cost; the same whatever the number of workers."""
     study = import_module(f"tests.studies.{name}").study
     begun = _cpu_s()
-    result = study() if nights is None else study(nights)
+    with runner(workers, None) as draws:
+        each = partial(rows, runner=draws)
+        result = study(each=each) if nights is None else study(nights, each=each)
     return {"study": name, **result, "cpu_s": round(_cpu_s() - begun, 1), "cores": os.cpu_count()}
 
 

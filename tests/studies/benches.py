@@ -18,6 +18,7 @@ from daq.estimate.tables import tables_of
 from daq.estimate.visits import visits_of
 from tests.studies.bench import Night, generator_of, reduced, strengths
 from tests.studies.figures import figures, within
+from tests.studies.rows import Each, rows
 
 NIGHTS = 2000
 FEW = 2e-4  # of Lantern's rates: 0.4 to 160 counts a visit
@@ -59,17 +60,19 @@ BENCHES: dict[str, tuple[Drawing, dict[str, Any]]] = {
 }
 
 
-def study(nights: int = NIGHTS) -> dict[str, Any]:
+def study(nights: int = NIGHTS, each: Each = rows) -> dict[str, Any]:
     """Return the figures of every bench on a walking source, and whether each meets its target."""
     of = reduced()
     return {
         "about": f"{len(of.plan.stand)} visits, zig-zag, random walk of 3 % per square root of an hour; "
         "bias and sd in mean counting bars",
-        "rows": {name: _bench(of, name, nights) for name in BENCHES},
+        "rows": each("benches:row", {name: [name, nights] for name in BENCHES}),
     }
 
 
-def _bench(of: Night, name: str, nights: int) -> dict[str, Any]:
+def row(name: str, nights: int) -> dict[str, Any]:
+    """Return the figures of one bench."""
+    of = reduced()
     draw, changes = BENCHES[name]
     plan = replace(of.plan, **changes)
     generator, numbers = generator_of("benches", name), []

@@ -8,6 +8,7 @@ after 100 steady stands.
 from __future__ import annotations
 
 from collections import deque
+from collections.abc import Callable, Mapping
 from math import sqrt
 from typing import Any
 
@@ -18,6 +19,7 @@ from daq.estimate.arrays import FloatArray
 from daq.estimate.shift import AFTER, H, K, ShiftChart
 from daq.estimate.wake import LATEST_STANDS, Closed, Danger, dangers
 from tests.studies.bench import generator_of
+from tests.studies.rows import Each, rows
 
 ALARMS = 1000
 STAND_S = 22.0
@@ -30,20 +32,18 @@ FLAGS_A_NIGHT = 0.12  # stands that quality rules flag on a quiet night (the stu
 SHUT_COUNTS = 800.0 * 2.2 * 41  # behind shut slits in a lap
 
 
-def study(alarms: int = ALARMS) -> dict[str, Any]:
+def study(alarms: int = ALARMS, each: Each = rows) -> dict[str, Any]:
     """Return intervals between false alarms, delays after a change, and wakes in quiet weeks."""
     about = (
         f"Stands of {STAND_S:g} s with {COUNTS:.0e} counts, k = {K:g}, h = {H:g}; quiet weeks: seven nights "
         "of 10 h, a walk of 1 % per root hour, counts, quality flags and shut slits at random"
     )
-    rows = {
-        "false alarms, level known": _steady(alarms),
-        "false alarms, as it runs": _steady_running(alarms),
-        "step of 0.5 %": _delay("step", alarms),
-        "ramp of 1 % an hour": _delay("ramp", alarms),
-        "quiet weeks": _weeks(alarms),
-    }
-    return {"about": about, "rows": rows}
+    return {"about": about, "rows": each("charts:row", {name: [name, alarms] for name in ROWS})}
+
+
+def row(name: str, alarms: int) -> dict[str, Any]:
+    """Return the figures of one row."""
+    return ROWS[name](alarms)
 
 
 def _steady(alarms: int) -> dict[str, Any]:
@@ -168,3 +168,12 @@ def _shut(shut_hz: FloatArray, lap: int) -> Closed | None:
     before = shut_hz[: lap - 2]
     se = float(before.mean()) / sqrt(SHUT_COUNTS * len(before))
     return Closed(shut_hz[lap - 2 : lap].tolist(), float(before.mean()), se)
+
+
+ROWS: Mapping[str, Callable[[int], dict[str, Any]]] = {
+    "false alarms, level known": _steady,
+    "false alarms, as it runs": _steady_running,
+    "step of 0.5 %": lambda alarms: _delay("step", alarms),
+    "ramp of 1 % an hour": lambda alarms: _delay("ramp", alarms),
+    "quiet weeks": _weeks,
+}

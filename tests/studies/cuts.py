@@ -17,6 +17,7 @@ from daq.estimate.loads import Instance
 from daq.estimate.marginal import marginal
 from tests.studies.bench import generator_of
 from tests.studies.figures import within
+from tests.studies.rows import Each, rows
 
 DRAWS = 2000
 COUNTS = 1e9
@@ -34,19 +35,21 @@ ROWS = {
 MASKS = range(8)
 
 
-def study(draws: int = DRAWS) -> dict[str, Any]:
+def study(draws: int = DRAWS, each: Each = rows) -> dict[str, Any]:
     """Return kappa before and after the cuts are accounted for, by row; the true one is zero."""
     return {
         "about": "41 positions, slits of 100 nm cut to 1 nm, measured to 0.3 nm, unevenly lit (5 %, 0.2 rad)",
-        "rows": {name: _row(name, draws, *row) for name, row in ROWS.items()},
+        "rows": each("cuts:row", {name: [name, draws] for name in ROWS}),
     }
 
 
-def _row(name: str, draws: int, visibility: tuple[float, ...], aside: float) -> dict[str, Any]:
+def row(name: str, draws: int) -> dict[str, Any]:
+    """Return the figures of one row."""
+    visibility, aside = ROWS[name]
     generator = generator_of("cuts", name)
     every = [_draw(generator, np.array(visibility), aside) for _ in range(draws)]
     before, kappa, se, joint, ratio, fits, differ = np.array(every, float).T
-    row = {
+    found = {
         "nights": draws,
         "before_rms": _rms(before),
         "rms": _rms(kappa),
@@ -56,14 +59,14 @@ def _row(name: str, draws: int, visibility: tuple[float, ...], aside: float) -> 
         "flagged": float(np.mean(differ)),
     }
     if aside:
-        return row | {"meets": {"flagged": row["flagged"] >= 0.99 and not fits.any()}}
-    return row | {
+        return found | {"meets": {"flagged": found["flagged"] >= 0.99 and not fits.any()}}
+    return found | {
         "meets": {
-            "before": within(row["before_rms"], 1e-3, 1e-2) or draws < DRAWS,
-            "rms": row["rms"] <= 1.7e-4,
-            "coverage": within(row["coverage_95"], 0.88, 0.98),
-            "joint": row["joint_rms"] <= 6e-5,
-            "chi2": within(row["chi2_over_dof"], 0.9, 1.12),
+            "before": within(found["before_rms"], 1e-3, 1e-2) or draws < DRAWS,
+            "rms": found["rms"] <= 1.7e-4,
+            "coverage": within(found["coverage_95"], 0.88, 0.98),
+            "joint": found["joint_rms"] <= 6e-5,
+            "chi2": within(found["chi2_over_dof"], 0.9, 1.12),
         }
     }
 

@@ -15,33 +15,41 @@ from daq.estimate.sums import Sums, Taking, sums_of
 from daq.estimate.tables import kappa_of, tables_of
 from daq.estimate.visits import Visits
 from tests.studies.bench import generator_of, night, visits_of_counts
+from tests.studies.rows import Each, rows
 from tests.studies.sources import SOURCES
 
 NIGHTS = 60
 LOST = 0.005
 
 
-def study(nights: int = NIGHTS) -> dict[str, Any]:
+def study(nights: int = NIGHTS, each: Each = rows) -> dict[str, Any]:
     """Return the rms error of kappa in counting standard errors, by what is done about the lost visits."""
+    of = night()
+    found = each("exclusions:errors", {"all": [nights]})["all"]
+    return {
+        "about": f"{len(of.plan.stand)} visits, {100 * LOST:g} % of them lost at random, -3 %/h, noise-free",
+        "counting_se": of.counting_se,
+        "rows": {name: _row(name, np.array(one) / of.counting_se) for name, one in found.items()},
+    }
+
+
+def errors(nights: int) -> dict[str, list[float]]:
+    """Return the errors of kappa night by night; all nights share one generator, so they are one block."""
     of = night()
     generator = generator_of("exclusions", "linear")
     strength = SOURCES["linear"](of.time_s, 1, generator)[0]
-    errors: dict[str, list[float]] = {"whole stands dropped": [], "exposure scaled": [], "joint fit": []}
-    errors["lone visits dropped"] = []
+    found: dict[str, list[float]] = {"whole stands dropped": [], "exposure scaled": [], "joint fit": []}
+    found["lone visits dropped"] = []
     for _ in range(nights):
         visits = visits_of_counts(of, of.expected * strength)
         visits.good[:] = generator.random(len(visits.good)) >= LOST
         visits.used[of.plan.stand[~visits.good]] = False
-        errors["whole stands dropped"].append(_kappa(sums_of(visits, of.plan), of.plan))
-        errors["exposure scaled"].append(_kappa(_scaled(visits, of.plan), of.plan))
-        errors["joint fit"].append(_joint(visits, of.plan))
+        found["whole stands dropped"].append(_kappa(sums_of(visits, of.plan), of.plan))
+        found["exposure scaled"].append(_kappa(_scaled(visits, of.plan), of.plan))
+        found["joint fit"].append(_joint(visits, of.plan))
         lone = Taking(visits.good, *_nothing(visits))
-        errors["lone visits dropped"].append(_kappa(sums_of(visits, of.plan, lone), of.plan))
-    return {
-        "about": f"{len(of.plan.stand)} visits, {100 * LOST:g} % of them lost at random, -3 %/h, noise-free",
-        "counting_se": of.counting_se,
-        "rows": {name: _row(name, np.array(found) / of.counting_se) for name, found in errors.items()},
-    }
+        found["lone visits dropped"].append(_kappa(sums_of(visits, of.plan, lone), of.plan))
+    return found
 
 
 def _row(name: str, error: FloatArray) -> dict[str, Any]:

@@ -13,24 +13,27 @@ from daq.estimate.visits import Visits
 from daq.estimate.whole import estimate_visits
 from tests.studies.bench import Night, generator_of, reduced, shuffled, strengths, visits_of_counts
 from tests.studies.figures import figures, within
+from tests.studies.rows import Each, rows
 from tests.studies.sources import SOURCES
 
 NIGHTS = 400
 LOST = 0.1
 
 
-def study(nights: int = NIGHTS) -> dict[str, Any]:
+def study(nights: int = NIGHTS, each: Each = rows) -> dict[str, Any]:
     """Return the figures of every source, and whether each meets its target."""
     of = reduced()
     return {
         "about": f"{len(of.plan.stand)} visits, every stand in random order, {100 * LOST:.0f} % lost; "
         "bias and sd in counting bars of the visits that were taken",
         "counting_se": _counting_se(of),
-        "rows": {source: _source(of, source, nights) for source in SOURCES},
+        "rows": each("irregular:row", {source: [source, nights] for source in SOURCES}),
     }
 
 
-def _source(of: Night, source: str, nights: int) -> dict[str, Any]:
+def row(source: str, nights: int) -> dict[str, Any]:
+    """Return the figures of one source."""
+    of = reduced()
     generator = generator_of("irregular", source)
     found = []
     for strength in strengths(of, source, nights, generator, at_once=20):

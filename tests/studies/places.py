@@ -12,6 +12,7 @@ from daq.estimate.positions import leftover_by_pair, position_tests, sign_flips
 from tests.studies.bench import Night
 from tests.studies.figures import within
 from tests.studies.pairs import TOGETHER, counted, planned, share, sums_of_night
+from tests.studies.rows import Each, rows
 from tests.studies.scaled import drawn
 from tests.studies.sources import SOURCES
 
@@ -22,14 +23,14 @@ SIZE = 4.5  # standard deviations, in all
 SHAPES = ("one position", "three periods")
 
 
-def study(nights: int = NIGHTS) -> dict[str, Any]:
+def study(nights: int = NIGHTS, each: Each = rows) -> dict[str, Any]:
     """Return the shares of nights with p up to 5 %: false alarms by source, then what is found."""
-    rows = {source: _null(source, nights) for source in SOURCES}
-    rows |= {f"{shape}, random walk": _found(shape, nights // 2) for shape in SHAPES}
+    wanted = {source: [source, None, nights] for source in SOURCES}
+    wanted |= {f"{shape}, random walk": ["random walk", shape, nights // 2] for shape in SHAPES}
     return {
         "about": "Lantern, 11 positions and 20 pairs; to be found: 41 positions and 19 pairs, 4.5 sd in all; "
         "share of nights with p up to 5 %",
-        "rows": rows,
+        "rows": each("places:row", wanted),
     }
 
 
@@ -68,6 +69,11 @@ def _shares(source: str, nights: int, shape: str | None, of: Mapping[str, Any]) 
     found = drawn("places:nights", -(-nights // TOGETHER), parameters)
     shares = {name: share(np.asarray(column) <= 0.05)["share"] for name, column in found.items()}
     return {"nights": len(found["combined"]), **shares}
+
+
+def row(source: str, shape: str | None, nights: int) -> dict[str, Any]:
+    """Return the figures of null nights of a source, or of nights that have something of a shape."""
+    return _null(source, nights) if shape is None else _found(shape, nights)
 
 
 def _null(source: str, nights: int) -> dict[str, Any]:

@@ -13,6 +13,7 @@ from daq.itinerary import Wander, compose, drift_variance, walk
 from daq.itinerary.compose import Itinerary, pattern_of_itinerary
 from tests.examples import lantern, lantern_rig
 from tests.studies.bench import generator_of
+from tests.studies.rows import Each, rows
 
 PATHS = 4000
 POINTS = 5  # of a gate
@@ -21,20 +22,18 @@ ORDERS = ("zigzag", "searched", "cyclic", "random")
 Steps = Callable[[FloatArray, int, np.random.Generator], FloatArray]
 
 
-def study(nights: int = PATHS) -> dict[str, Any]:
+def study(nights: int = PATHS, each: Each = rows) -> dict[str, Any]:
     """Return simulated over planned variance of kappa for every order and every wander."""
-    rows = {
-        f"{order}, {name}": _row(order, name, wander, paths, nights)
-        for order in ORDERS
-        for name, (wander, paths) in WANDERS.items()
-    }
+    wanted = {f"{order}, {name}": [order, name, nights] for order in ORDERS for name in WANDERS}
     return {
         "about": "Lantern, 11 positions, 6 laps, best dwell; simulated over planned variance",
-        "rows": rows,
+        "rows": each("plan_drift:row", wanted),
     }
 
 
-def _row(order: str, name: str, wander: Wander, paths: Steps, nights: int) -> dict[str, Any]:
+def row(order: str, name: str, nights: int) -> dict[str, Any]:
+    """Return the ratio of one order under one wander."""
+    wander, paths = WANDERS[name]
     itinerary = compose(
         lantern(positions__number=11, itinerary__laps=6, itinerary__order=order, itinerary__dwell="best"),
         lantern_rig(),

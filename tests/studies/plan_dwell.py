@@ -14,6 +14,7 @@ from daq.itinerary.known import Known, known_of
 from tests.daq.itinerary.rigs import without_dwell
 from tests.examples import lantern_rig
 from tests.studies.bench import generator_of
+from tests.studies.rows import Each, rows
 
 PILOTS, SECONDS, RATE_HZ = 40, 1200, 1e5
 MASKS = {"0.1 s + 0.05 s": (0.1, 40.0), "0.5 s + 0.2 s": (0.5, 10.0), "3 s + 0.5 s": (3.0, 4.0)}
@@ -34,20 +35,22 @@ WANDERS = {
 }
 
 
-def study(nights: int = PILOTS) -> dict[str, Any]:
+def study(nights: int = PILOTS, each: Each = rows) -> dict[str, Any]:
     """Return the loss in Q by source and mask over so many pilots, and over all of them."""
-    losses = {(source, mask): _losses(source, mask, nights) for source in WANDERS for mask in MASKS}
-    rows = {f"{source}, mask {mask}": _figures(loss) for (source, mask), loss in losses.items()}
+    wanted = {f"{source}, mask {mask}": [source, mask, nights] for source in WANDERS for mask in MASKS}
+    losses = {name: np.array(loss) for name, loss in each("plan_dwell:losses", wanted).items()}
+    table = {name: _figures(loss) for name, loss in losses.items()}
     every = _figures(np.concatenate(list(losses.values())))
     every["meets"] = {"median": every["median"] <= 0.02, "ninety": every["ninety"] <= 0.05}
     return {
         "about": f"Lantern, {SECONDS} samples of 1 s at {RATE_HZ:g}/s; "
         "Q at the chosen dwell over the least Q, less 1",
-        "rows": rows | {"all": every},
+        "rows": table | {"all": every},
     }
 
 
-def _losses(source: str, mask: str, nights: int) -> np.ndarray[Any, Any]:
+def losses(source: str, mask: str, nights: int) -> list[float]:
+    """Return the loss in Q by pilot."""
     settle_s, speed_mm_s = MASKS[mask]
     rig = lantern_rig(axes__mask__settle_s=settle_s, axes__mask__speed_mm_s=speed_mm_s)
     wander = WANDERS[source]
@@ -60,7 +63,7 @@ def _losses(source: str, mask: str, nights: int) -> np.ndarray[Any, Any]:
     for _ in range(nights):
         measurement = without_dwell(itinerary__laps=2, pilot={"counts": _pilot(wander, generator)})
         chosen.append(float(compose(measurement, rig).dwell_s[0]))
-    return np.array([_cost(truth, along, dwell_s) / least - 1 for dwell_s in chosen])
+    return [_cost(truth, along, dwell_s) / least - 1 for dwell_s in chosen]
 
 
 def _cost(known: Known, design: Design, dwell_s: float) -> float:

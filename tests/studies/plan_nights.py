@@ -18,6 +18,7 @@ from daq.itinerary.orders import FloatArray
 from tests.examples import lantern, lantern_rig
 from tests.studies.bench import generator_of
 from tests.studies.plan_ripple import cells
+from tests.studies.rows import Each, rows
 from tests.studies.sources import SOURCES
 
 NIGHTS = 40
@@ -27,16 +28,16 @@ POINTS = 3  # of a gate
 Wishes = dict[str, Any]
 
 
-def study(nights: int = NIGHTS) -> dict[str, Any]:
+def study(nights: int = NIGHTS, each: Each = rows) -> dict[str, Any]:
     """Return the ratio for every source."""
-    rows = {source: _row(source, nights) for source in SOURCES}
     return {
         "about": "Lantern, 41 positions, 19 pairs; root mean square jackknife over forecast",
-        "rows": rows,
+        "rows": each("plan_nights:row", {source: [source, nights] for source in SOURCES}),
     }
 
 
-def _row(source: str, nights: int) -> dict[str, Any]:
+def row(source: str, nights: int) -> dict[str, Any]:
+    """Return the ratio for one source."""
     generator = generator_of("plan nights", source)
     told = [_expected(source, generator) for _ in range(PILOTS if source == "flicker" else 1)]
     itinerary = compose(told[0], lantern_rig())

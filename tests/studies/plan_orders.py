@@ -17,6 +17,7 @@ from daq.itinerary.cost import Pattern
 from daq.itinerary.orders import Order
 from tests.studies.bench import generator_of
 from tests.studies.plan_bench import NATURAL, NIGHT_S, POSITIONS, Machine, Timed, pattern, q_of, timed
+from tests.studies.rows import Each, rows
 
 HOUR_S = 3600.0
 KNOWN_PATHS, PATHS, AT_ONCE = 300, 4000, 100  # the known figures of the walk rest on 300 simulated paths
@@ -43,22 +44,23 @@ KNOWN: Mapping[str, tuple[int, tuple[float, ...]]] = {
 }
 
 
-def study(nights: int = 20) -> dict[str, Any]:
+def study(nights: int = 20, each: Each = rows) -> dict[str, Any]:
     """Return the figures of every order; `nights` draws of the random one."""
-    of = pattern()
-    rows = {name: _row(of, name, laps, known, nights) for name, (laps, known) in KNOWN.items()}
-    by_q = sorted(rows, key=lambda name: rows[name]["figures"]["Q"])
-    for name, row in rows.items():
-        row["meets"]["ranking"] = not _misplaced(name, rows)
+    table = each("plan_orders:row", {name: [name, nights] for name in KNOWN})
+    by_q = sorted(table, key=lambda name: table[name]["figures"]["Q"])
+    for name, one in table.items():
+        one["meets"]["ranking"] = not _misplaced(name, table)
     return {
         "about": f"{POSITIONS} positions, mask 0.5 s + 0.2 s a slot, dwell {DWELL_S:g} s, "
         f"{NIGHT_S / HOUR_S:g} h; 1e-6 of kappa, gates as points; Q also with gates averaged",
         "ranking": by_q,
-        "rows": rows,
+        "rows": table,
     }
 
 
-def _row(of: Pattern, name: str, laps: int, known: tuple[float, ...], nights: int) -> dict[str, Any]:
+def row(name: str, nights: int) -> dict[str, Any]:
+    """Return the figures of one order."""
+    of, (laps, known) = pattern(), KNOWN[name]
     draws = [timed(of, order, MACHINE, DWELL_S) for order in _orders(name, laps, nights)]
     found = {
         column: float(np.sqrt(np.mean([_column(of, draw, column) ** 2 for draw in draws])))

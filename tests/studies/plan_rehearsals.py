@@ -13,6 +13,7 @@ import numpy as np
 
 from daq.cli import main
 from tests.examples import CONFIGS
+from tests.studies.rows import Each, rows
 
 NIGHTS = 40
 FEWER = (
@@ -22,16 +23,11 @@ FEWER = (
 )
 
 
-def study(nights: int = NIGHTS) -> dict[str, Any]:
+def study(nights: int = NIGHTS, each: Each = rows) -> dict[str, Any]:
     """Return the root mean square standard error of rehearsals over the forecast."""
     with tempfile.TemporaryDirectory() as folder:
-        lab = Path(folder)
-        file = _fewer_positions(lab)
-        foretold = _said(["compose", str(file)])
-        nightly = [
-            _said(["rehearse", str(file), "--link", "direct", "--seed", str(seed), "--into", str(lab)])
-            for seed in range(nights)
-        ]
+        foretold = _said(["compose", str(_fewer_positions(Path(folder)))])
+    nightly = list(each("plan_rehearsals:night", {str(seed): [seed] for seed in range(nights)}).values())
     squares = np.square([night["kappa_se"] for night in nightly])
     ratio = float(np.sqrt(squares.mean())) / foretold["kappa_se"]
     row = {
@@ -47,6 +43,13 @@ def study(nights: int = NIGHTS) -> dict[str, Any]:
         "meets": {"ratio": 0.9 <= ratio <= 1.1},
     }
     return {"about": "Lantern at 5 positions, source -3 %/h and a walk of 1 %", "rows": {"Lantern": row}}
+
+
+def night(seed: int) -> dict[str, Any]:
+    """Return what one rehearsal said."""
+    with tempfile.TemporaryDirectory() as folder:
+        file = _fewer_positions(Path(folder))
+        return _said(["rehearse", str(file), "--link", "direct", "--seed", str(seed), "--into", folder])
 
 
 def _fewer_positions(lab: Path) -> Path:

@@ -26,6 +26,7 @@ from daq.itinerary.known import known_of
 from daq.itinerary.moves import start_times_s
 from tests.examples import lantern, lantern_rig
 from tests.studies.bench import generator_of
+from tests.studies.rows import Each, rows
 
 NIGHTS = 2000
 AMPLITUDE = 0.05
@@ -44,18 +45,18 @@ class Timed:
     dwell_s: FloatArray
 
 
-def study(nights: int = NIGHTS) -> dict[str, Any]:
+def study(nights: int = NIGHTS, each: Each = rows) -> dict[str, Any]:
     """Return how often null nights are rejected, by ripple, with and without measures."""
-    rows = {name: _row(name, nights) for name in CYCLES}
-    rows["pair/2, by pauses"] = _row("pair/2", nights, unknown=1.0)
+    wanted: dict[str, list[Any]] = {name: [name, nights] for name in CYCLES}
+    wanted["pair/2, by pauses"] = ["pair/2", nights, 1.0]
     return {
         "about": f"Lantern, {POSITIONS} positions, {PAIRS} pairs, dwell {DWELL_S:g} s, "
         f"ripple of {100 * AMPLITUDE:g} % and random phase; share of null nights rejected at 5 %",
-        "rows": rows,
+        "rows": each("plan_ripple:row", wanted),
     }
 
 
-def _row(name: str, nights: int, unknown: float = 0.0) -> dict[str, Any]:
+def row(name: str, nights: int, unknown: float = 0.0) -> dict[str, Any]:
     """Return the figures of a line whose period is not known to a share of it."""
     plain = _measurement()
     along = compose(plain, RIG).design

@@ -13,6 +13,7 @@ from daq.itinerary.orders import FloatArray, IntArray
 from daq.itinerary.search import Stand, _all_orders, _drift_and_travel
 from tests.studies.bench import generator_of
 from tests.studies.plan_bench import CHANGE_S, NATURAL, POSITIONS, Machine, ideal, pattern
+from tests.studies.rows import Each, rows
 
 PLENTY = 10**10
 DRAWS = 40
@@ -34,23 +35,23 @@ KNOWN: Mapping[tuple[float, float, float], tuple[float, ...]] = {
 }
 
 
-def study(nights: int = DRAWS) -> dict[str, Any]:
+def study(nights: int = DRAWS, each: Each = rows) -> dict[str, Any]:
     """Return Q of every order on every bench; `nights` draws of a stand in random order."""
-    of = pattern()
     return {
         "about": f"Q at the best dwell, {POSITIONS} positions, mask settling + time a slot, random walk",
-        "rows": {
-            f"{settle_s:g} s + {slot_s:g} s, {100 * drift:g} %": _row(
-                of, settle_s, slot_s, drift, known, nights
-            )
-            for (settle_s, slot_s, drift), known in KNOWN.items()
-        },
+        "rows": each(
+            "plan_search:row",
+            {
+                f"{settle_s:g} s + {slot_s:g} s, {100 * drift:g} %": [settle_s, slot_s, drift, nights]
+                for settle_s, slot_s, drift in KNOWN
+            },
+        ),
     }
 
 
-def _row(
-    of: Pattern, settle_s: float, slot_s: float, drift: float, known: tuple[float, ...], nights: int
-) -> dict[str, Any]:
+def row(settle_s: float, slot_s: float, drift: float, nights: int) -> dict[str, Any]:
+    """Return Q of every order on one bench."""
+    of, known = pattern(), KNOWN[settle_s, slot_s, drift]
     points, gates = (
         dict(zip(NAMES, _every(of, settle_s, slot_s, drift, nights, width), strict=True))
         for width in (0.0, 1.0)

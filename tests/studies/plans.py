@@ -1,4 +1,4 @@
-"""Run the studies of plans: `python -m tests.studies.plans NAME... [--nights N] [--into FOLDER]`."""
+"""Run studies of plans: `python -m tests.studies.plans NAME... [--nights N] [--workers N] [--into PATH]`."""
 
 from __future__ import annotations
 
@@ -25,12 +25,13 @@ def main(arguments: list[str] | None = None) -> int:
     parser = argparse.ArgumentParser(prog="python -m tests.studies.plans", description=__doc__)
     parser.add_argument("names", nargs="+", choices=STUDIES, metavar="NAME", help=", ".join(STUDIES))
     parser.add_argument("--nights", type=int, help="how many draws (each study has its own default)")
+    parser.add_argument("--workers", type=int, default=0, help="processes that draw the rows (0: this one)")
     parser.add_argument("--into", type=Path, default=RESULTS, help="folder of the results, NAME.json each")
     wanted = parser.parse_args(arguments)
     missed = 0
     wanted.into.mkdir(parents=True, exist_ok=True)
     for name in wanted.names:
-        result = run(name, wanted.nights)
+        result = run(name, wanted.nights, wanted.workers)
         (wanted.into / f"{name}.json").write_text(json.dumps(result, indent=1) + "\n")
         for row, key in misses(result):
             missed += 1

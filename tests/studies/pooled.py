@@ -10,6 +10,7 @@ import numpy as np
 from daq.estimate.pooling import leave_one_out, pool
 from tests.studies.figures import within
 from tests.studies.pairs import share
+from tests.studies.rows import Each, rows
 from tests.studies.scaled import drawn
 
 SETS = 20_000
@@ -18,15 +19,15 @@ DOF, SPREAD = 18, 0.5
 EQUAL, SCATTERED = (2, 3, 5, 10, 20), ((5, 1.0), (5, 2.0), (10, 1.0), (20, 2.0))
 
 
-def study(sets: int = SETS) -> dict[str, Any]:
+def study(sets: int = SETS, each: Each = rows) -> dict[str, Any]:
     """Return coverage and false alarms, by number of nights and scatter between them."""
-    rows = {f"{nights} nights": _row(nights, 0.0, sets) for nights in EQUAL}
+    wanted = {f"{nights} nights": [nights, 0.0, sets] for nights in EQUAL}
     few = max(TOGETHER, 3 * sets // 10)
-    rows |= {f"{nights} nights, scatter {tau:g}": _row(nights, tau, few) for nights, tau in SCATTERED}
+    wanted |= {f"{nights} nights, scatter {tau:g}": [nights, tau, few] for nights, tau in SCATTERED}
     return {
         "about": f"standard errors of {DOF} degrees of freedom, sizes e^±{SPREAD:g}; scatter between nights "
         "in units of a night's error",
-        "rows": rows,
+        "rows": each("pooled:row", wanted),
     }
 
 
@@ -57,7 +58,8 @@ def _covers(ends: tuple[float, float]) -> float:
     return float(ends[0] <= 0 <= ends[1])
 
 
-def _row(nights: int, tau: float, number: int) -> dict[str, Any]:
+def row(nights: int, tau: float, number: int) -> dict[str, Any]:
+    """Return the figures of so many nights with a scatter between them."""
     found = drawn("pooled:sets", -(-number // TOGETHER), {"nights": nights, "tau": tau})
     shares = {name: share(column)["share"] for name, column in found.items() if not np.isnan(column).any()}
     meets = {"Paule-Mandel": shares.get("Paule-Mandel", 0.0) >= 0.94}

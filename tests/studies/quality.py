@@ -13,6 +13,7 @@ from daq.estimate import Judge, Rules
 from daq.estimate.arrays import FloatArray, IntArray
 from daq.records import Quality, Reading
 from tests.studies.bench import Night, generator_of, night
+from tests.studies.rows import Each, rows
 from tests.studies.sources import walk
 
 NIGHTS = 40
@@ -24,17 +25,23 @@ QUIET = {"quiet, 0.3 % per root hour": 0.003, "quiet, 3 % per root hour": 0.03}
 LOSSES = {"half of the counts": 0.5, "5 % of the counts": 0.05, "30 % in one slice": 0.03}
 
 
-def study(nights: int = NIGHTS) -> dict[str, Any]:
+def study(nights: int = NIGHTS, each: Each = rows) -> dict[str, Any]:
     """Return flags a night and shares found, and whether each meets its target."""
     of = night()
-    rows = {name: _quiet(of, name, per_sqrt_hour, nights) for name, per_sqrt_hour in QUIET.items()}
     spoilt = max(1, nights // 4)
-    rows |= {name: _spoilt(of, name, loss, spoilt) for name, loss in LOSSES.items()}
+    wanted = {name: [name, nights] for name in QUIET} | {name: [name, spoilt] for name in LOSSES}
     return {
         "about": f"{len(of.plan.stand)} visits, 1e5 counts behind one slit at the centre, {SLICES} slices, "
         f"default thresholds; {FAULTS} faults a night, each a loss of counts in one visit with light",
-        "rows": rows,
+        "rows": each("quality:row", wanted),
     }
+
+
+def row(name: str, nights: int) -> dict[str, Any]:
+    """Return the figures of quiet nights, or of spoilt ones."""
+    if name in QUIET:
+        return _quiet(night(), name, QUIET[name], nights)
+    return _spoilt(night(), name, LOSSES[name], nights)
 
 
 def _quiet(of: Night, name: str, per_sqrt_hour: float, nights: int) -> dict[str, Any]:

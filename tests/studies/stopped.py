@@ -12,6 +12,7 @@ from daq.estimate.arrays import FloatArray
 from daq.estimate.stopping import FUTILITY, GOAL, Stopping, due
 from tests.studies.figures import within
 from tests.studies.pairs import TOGETHER, counted, pairs_of, planned, quantile, share
+from tests.studies.rows import Each, rows
 from tests.studies.scaled import drawn
 from tests.studies.sources import SOURCES
 
@@ -21,12 +22,12 @@ RULES = ("goal", "excess of pair 8", "own scatter from 8", "significance from 3"
 PLANNED_EXCESS = {"flicker": 4.0, "random walk": 1.1}
 
 
-def study(nights: int = NIGHTS) -> dict[str, Any]:
+def study(nights: int = NIGHTS, each: Each = rows) -> dict[str, Any]:
     """Return the coverage of the t bar at the end that each rule chose, by source."""
     return {
         "about": f"Lantern, {POSITIONS} positions, at most {PAIRS} pairs, a goal that is met about pair "
         f"{GOAL_AT}; share of nights whose t bar covers the true kappa where the rule ends the run",
-        "rows": {source: _row(source, nights) for source in SOURCES},
+        "rows": each("stopped:row", {source: [source, nights] for source in SOURCES}),
     }
 
 
@@ -66,7 +67,8 @@ def _end(rule: str, kappa: FloatArray, se: FloatArray, counting: FloatArray, goa
     return PAIRS
 
 
-def _row(source: str, nights: int) -> dict[str, Any]:
+def row(source: str, nights: int) -> dict[str, Any]:
+    """Return the figures of one source."""
     parameters = {"source": source, "excess": PLANNED_EXCESS.get(source, 1.0)}
     found = drawn("stopped:nights", -(-nights // TOGETHER), parameters)
     shares = {rule: share(found[rule])["share"] for rule in RULES}

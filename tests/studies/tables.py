@@ -32,9 +32,9 @@ def text(results: Path) -> str:
             "## What the estimates do: studies",
             "",
             "Made by `python -m tests.studies tables` from `tests/studies/results`; a study is run by",
-            "`python -m tests.studies NAME [--nights N] [--json PATH]`, one of plans by",
-            "`python -m tests.studies.plans NAME`; seeds are fixed. An exclamation mark says that a target",
-            "is missed.",
+            "`python -m tests.studies NAME [--nights N] [--workers N] [--json PATH]`, one of plans by",
+            "`python -m tests.studies.plans NAME`; seeds are fixed, and every row has a generator of its own",
+            "name, so that workers change no figure. An exclamation mark says that a target is missed.",
             "",
             *parts,
         ]

@@ -30,7 +30,7 @@ def test_pairs_give_what_the_estimate_gives() -> None:
 
 
 def test_a_few_watched_nights() -> None:
-    row = watched._row("random walk", 400)
+    row = watched.row("random walk", 400)
 
     assert row["whole night"] <= 0.05
     assert row["t from 2"] > 0.15
@@ -38,7 +38,7 @@ def test_a_few_watched_nights() -> None:
 
 
 def test_a_few_stopped_nights() -> None:
-    row = stopped._row("steps", 400)
+    row = stopped.row("steps", 400)
 
     assert row["goal"] == pytest.approx(0.95, abs=4 * sqrt(0.05 * 0.95 / 400))
     assert row["significance from 3"] < 0.85
@@ -55,7 +55,7 @@ def test_a_few_nights_of_position_tests() -> None:
 
 @pytest.mark.parametrize(("nights", "tau", "column"), [(5, 0.0, "count weights"), (10, 1.0, "Paule-Mandel")])
 def test_a_few_pools(nights: int, tau: float, column: str) -> None:
-    row = pooled._row(nights, tau, 1000)
+    row = pooled.row(nights, tau, 1000)
 
     assert row[column] == pytest.approx(0.95, abs=4 * sqrt(0.05 * 0.95 / 1000))
 

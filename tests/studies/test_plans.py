@@ -16,7 +16,7 @@ from tests.studies.plans import STUDIES, main
 
 @pytest.mark.parametrize("order", ["zig-zag", "cyclic", "mirror in Thue-Morse order"])
 def test_an_order_costs_what_is_known_of_it(order: str) -> None:
-    row = plan_orders._row(pattern(), order, *plan_orders.KNOWN[order], 1)
+    row = plan_orders.row(order, 1)
 
     assert all(row["meets"].values()), row
 
@@ -36,13 +36,13 @@ def test_the_best_of_all_orders_takes_the_time_that_is_known_of_it(
 
 
 def test_planned_drift_is_what_a_few_paths_show() -> None:
-    row = plan_drift._row("zigzag", "relaxing", *plan_drift.WANDERS["relaxing"], 400)
+    row = plan_drift.row("zigzag", "relaxing", 400)
 
     assert abs(row["ratio"] - 1) < 4 * row["ratio_se"]
 
 
 def test_a_ripple_at_the_stand_is_fatal_without_measures_and_harmless_with_them() -> None:
-    row = plan_ripple._row("stand", 40)
+    row = plan_ripple.row("stand", 40)
 
     assert row["without"] > 0.9
     assert row["with"] < 0.05 + 4 * np.sqrt(0.05 * 0.95 / 40)
@@ -59,7 +59,7 @@ def test_a_plan_without_coins_is_the_same_pair_over_and_over() -> None:
 
 @pytest.mark.parametrize("source", ["linear", "random walk"])
 def test_a_few_nights_come_out_as_foretold(source: str) -> None:
-    row = plan_nights._row(source, 6)
+    row = plan_nights.row(source, 6)
 
     assert abs(row["ratio"] - 1) < 4 * row["ratio_se"] + 0.05
 

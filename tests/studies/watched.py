@@ -10,6 +10,7 @@ import numpy as np
 from daq.estimate.peeking import anytime_multiplier, hard_end_multiplier
 from tests.studies.figures import within
 from tests.studies.pairs import TOGETHER, counted, pairs_of, planned, quantile, share
+from tests.studies.rows import Each, rows
 from tests.studies.scaled import drawn
 from tests.studies.sources import SOURCES
 
@@ -17,12 +18,12 @@ NIGHTS = 2000
 POSITIONS, PAIRS, DWELL_S = 11, 20, 8.8  # ten hours, a pair in half an hour
 
 
-def study(nights: int = NIGHTS) -> dict[str, Any]:
+def study(nights: int = NIGHTS, each: Each = rows) -> dict[str, Any]:
     """Return how often each band leaves zero, by source."""
     return {
         "about": f"Lantern, {POSITIONS} positions, {PAIRS} pairs of half an hour, kappa zero; "
         "share of nights in which the band leaves zero",
-        "rows": {source: _row(source, nights) for source in SOURCES},
+        "rows": each("watched:row", {source: [source, nights] for source in SOURCES}),
     }
 
 
@@ -43,7 +44,8 @@ def nights(parameters: Mapping[str, Any], generator: np.random.Generator) -> dic
     return {name: column.astype(float) for name, column in (left | {"t at the end": end}).items()}
 
 
-def _row(source: str, nights: int) -> dict[str, Any]:
+def row(source: str, nights: int) -> dict[str, Any]:
+    """Return the figures of one source."""
     found = drawn("watched:nights", -(-nights // TOGETHER), {"source": source})
     shares = {name: share(column) for name, column in found.items()}
     return {

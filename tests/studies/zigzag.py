@@ -12,6 +12,7 @@ from daq.estimate.tables import kappa_of, over
 from daq.estimate.whole import estimate_visits
 from tests.studies.bench import Night, generator_of, least_se, night, reduced, strengths, visits_of_counts
 from tests.studies.figures import figures, within
+from tests.studies.rows import Each, rows
 from tests.studies.sources import SOURCES, walk
 
 NIGHTS = 8000
@@ -19,21 +20,23 @@ MONITOR_COUNTS = 1e6  # a visit; the monitor has a walk of its own
 MONITOR_WALK = walk(0.003)
 
 
-def study(nights: int = NIGHTS) -> dict[str, Any]:
+def study(nights: int = NIGHTS, each: Each = rows) -> dict[str, Any]:
     """Return the figures of every source, and whether each meets its target."""
     of, whole = reduced(), night()
-    rows = {source: _source(of, source, nights) for source in SOURCES}
     few = max(2, nights // 8)
-    rows |= {f"Lantern, {source}": _source(whole, source, few) for source in ("none", "random walk", "mix")}
+    wanted: dict[str, list[Any]] = {source: [source, nights] for source in SOURCES}
+    wanted |= {f"Lantern, {source}": [source, few, True] for source in ("none", "random walk", "mix")}
     return {
         "about": f"{len(of.plan.stand)} visits, {of.plan.planned_pairs} pairs, zig-zag, plain contrast; "
         f"Lantern: {len(whole.plan.stand)} visits, {whole.plan.planned_pairs} pairs",
         "counting_se": of.counting_se,
-        "rows": rows,
+        "rows": each("zigzag:row", wanted),
     }
 
 
-def _source(of: Night, source: str, nights: int) -> dict[str, Any]:
+def row(source: str, nights: int, whole: bool = False) -> dict[str, Any]:
+    """Return the figures of one source, on the whole Lantern night or the reduced one."""
+    of = night() if whole else reduced()
     generator = generator_of(f"zigzag {len(of.plan.stand)}", source)
     plain, monitored, least = _Pile(of), _Pile(of), []
     for at, strength in enumerate(strengths(of, source, nights, generator)):
