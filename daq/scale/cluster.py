@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import os
 from collections.abc import Iterable, Iterator
 from contextlib import ExitStack
 from importlib.util import find_spec
@@ -31,7 +30,6 @@ class Cluster:
                 "workers need the package distributed",
                 remedy="Install it: pip install 'tercet[scale]'; or leave it to one process: --workers 0",
             )
-        os.environ.setdefault("OMP_NUM_THREADS", "1")
         self._stack = ExitStack()
         try:
             self._client = self._stack.enter_context(_client(self._stack, workers, address, answers_within_s))

@@ -91,13 +91,15 @@ def pool_runs(
     Raises
     ------
     DescriptionError
-        For fewer than two runs, the same one twice, or runs that are hidden by different offsets.
+        For fewer than two runs, the same one twice, at another place or not, or runs that are hidden by
+        different offsets.
     StorageError
         With a sentence for every run that cannot be read.
     """
     if len(runs) < 2 or len(set(runs)) < len(runs):
         raise DescriptionError(("tercet pool: name two runs or more, each once.",))
     facts = {run: _facts(run) for run in runs}
+    _refuse_doubles(facts)
     found = {run: night for run in runs if (night := kept.get(facts[run])) is not None}
     missing = [run for run in runs if run not in found]
     failed = []
@@ -110,8 +112,20 @@ def pool_runs(
         found[run] = Night.from_bytes(outcome)
         progress(len(found))
     if failed:
-        raise StorageError("\n".join(failed))
+        raise StorageError("\n".join(failed).removesuffix("."))
     return _pooled({run: found[run] for run in runs}, len(missing))
+
+
+def _refuse_doubles(facts: Mapping[str, Mapping[str, Any]]) -> None:
+    """Refuse a run that is named by two addresses: its counts would be taken twice."""
+    first = dict[str, str]()
+    for run, known in facts.items():
+        told = str(known.get("digest", run))
+        if told in first:
+            raise DescriptionError(
+                (f"tercet pool: {first[told]} and {run} are one run. Leave one of them out.",)
+            )
+        first[told] = run
 
 
 def _facts(run: str) -> Mapping[str, Any]:

@@ -113,6 +113,8 @@ def _zipped(path: Path, where: str = "") -> Iterator[zarr.Group]:
 def _opened(store: Any, where: str) -> zarr.Group:
     try:
         return zarr.open_group(store, mode="r")
+    except FileNotFoundError as error:
+        raise StorageError("there is no such run", where=where, remedy="Check the address") from error
     except Exception as error:  # whatever a store raises
         raise StorageError(f"no run can be read here ({_first_line(error)})", where=where) from error
 
@@ -139,9 +141,13 @@ def _fetched(where: str) -> bytes:
 
     try:
         return bytes(obstore.get(store, name).bytes())
+    except FileNotFoundError as error:
+        raise StorageError("there is no such run", where=where, remedy="Check the address") from error
     except (obstore.exceptions.BaseError, OSError) as error:
         raise StorageError(
-            f"there is no such run ({_first_line(error)})", where=where, remedy="Check the address"
+            f"the run cannot be fetched ({_first_line(error)})",
+            where=where,
+            remedy="Check address and network",
         ) from error
 
 

@@ -2,6 +2,9 @@ from __future__ import annotations
 
 import hashlib
 import json
+import os
+import subprocess
+import sys
 from collections.abc import Iterable, Iterator
 from pathlib import Path
 from typing import Any
@@ -172,3 +175,15 @@ def test_the_key_holds_whatever_decides_the_numbers() -> None:
     assert len(keys) == 4
     assert job(draws=5).key == job().key
     assert json.loads(job(mean=1.0).parameters) == {"mean": 1.0}
+
+
+def test_a_process_that_draws_sums_with_one_thread_whatever_the_machine() -> None:
+    """Sums of BLAS differ in their last bit by its number of threads, which it takes when it is loaded."""
+    told = "import os, sys, daq.scale; print('numpy' in sys.modules, os.environ['OMP_NUM_THREADS'])"
+    clean = {name: value for name, value in os.environ.items() if name != "OMP_NUM_THREADS"}
+
+    found = subprocess.run(
+        [sys.executable, "-c", told], env=clean, capture_output=True, text=True, check=True
+    )
+
+    assert found.stdout.split() == ["False", "1"]
