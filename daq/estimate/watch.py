@@ -110,11 +110,18 @@ def _level(watched: Watched) -> Concern | None:
     return Concern(
         "level",
         f"The count rate {_moved(change)} by {100 * abs(change):.1f} % "
-        f"in {watched.hours:.1f} hours of measuring.",
+        f"in {watched.hours:.1f} hours of measuring.{_slowly(watched.shift)}",
         _source_later(watched),
         f"The order of measurement cancels a slow change, so {STAYS_GOOD}.",
         cost="A wider error bar where the rate fell; nothing else.",
     )
+
+
+def _slowly(shift: Shift | None) -> str:
+    """Return since when the level has been changing slowly, nothing where it has not."""
+    if shift is None or shift.sudden:
+        return ""
+    return f" Its latest slow change began {shift.hours:.1f} hours of measuring after the start."
 
 
 def _step(watched: Watched) -> Concern | None:

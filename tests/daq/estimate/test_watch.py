@@ -2,6 +2,7 @@ from typing import Any
 
 import pytest
 
+from daq.estimate.shift import Shift
 from daq.estimate.watch import Watched, concerns
 
 QUIET: dict[str, Any] = {
@@ -32,6 +33,17 @@ def test_a_source_that_changes_is_told_with_its_figure_and_that_kappa_is_good(ch
 
     assert word in found.what
     assert "kappa is still good" in found.good
+
+
+@pytest.mark.parametrize(("sudden", "kinds_found"), [(True, ["level", "step"]), (False, ["level"])])
+def test_a_step_is_a_note_of_its_own_and_a_slow_change_says_when_it_began(sudden, kinds_found):
+    shift = Shift(size=-0.06, hours=1.25, sudden=sudden)
+    levels = [1.0] * 50 + [0.94] * 50
+
+    found = concerns(Watched(**QUIET | {"levels": levels, "shift": shift}))
+
+    assert [one.kind for one in found] == kinds_found
+    assert ("slow change began 1.2 hours" in found[0].what) != sudden
 
 
 def test_a_change_below_five_percent_is_no_news():
