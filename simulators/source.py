@@ -50,10 +50,15 @@ class RandomWalk:
         return np.exp(below + (steps - whole) * (above - below))
 
     def _extend(self, steps: int) -> None:
-        while len(self._walk) <= steps:
-            block = (len(self._walk) - 1) // BLOCK
+        """Know the walk up to a step, and then some way further: a long run is not copied block by block."""
+        if len(self._walk) > steps:
+            return
+        known = (len(self._walk) - 1) // BLOCK
+        pieces = [self._walk]
+        for block in range(known, max(steps // BLOCK + 1, known * 5 // 4)):
             draws = generator(self._seed, "source walk", block).standard_normal(BLOCK)
-            self._walk = np.concatenate([self._walk, self._walk[-1] + self._step * np.cumsum(draws)])
+            pieces.append(pieces[-1][-1] + self._step * np.cumsum(draws))
+        self._walk = np.concatenate(pieces)
 
 
 def relative(factors: Sequence[Factor], time_s: FloatArray) -> FloatArray:
