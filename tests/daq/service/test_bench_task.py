@@ -274,7 +274,7 @@ def test_a_saturated_detector_is_a_sentence_and_nothing_is_moved_further(
     record = carry_out(short(task_of("dark"), 10), spoilt, tmp_path, Person())
 
     assert record["verdict"] == "fail"
-    assert "the detector is saturated. Take light away" in record["sentence"]
+    assert "it is saturated. Take light away" in record["sentence"]
     assert len(open_visits(tmp_path / "bench" / record["record"])["visit"]) == 4
 
 
