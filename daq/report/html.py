@@ -25,7 +25,7 @@ td, th { padding: 0.6pt 4pt 0.6pt 0; vertical-align: top; border-bottom: 0.3pt s
 td:not(:first-child):not(:last-child) { white-space: nowrap }
 .appendix td, .appendix p { overflow-wrap: anywhere }
 .appendix td:not(:first-child):not(:last-child) { white-space: normal }
-.two { columns: 2; column-gap: 6mm }
+.two { columns: 2; column-gap: 6mm } .two section:nth-child(-n+2), tr { break-inside: avoid }
 svg { width: 100%; height: auto; display: block }
 .sign { margin-top: 4pt; border-top: 1pt solid #1b1b1b; padding-top: 3pt }
 footer { font-size: 7pt; color: #444; margin-top: 3pt } .appendix { break-before: page }
