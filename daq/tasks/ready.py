@@ -11,6 +11,8 @@ from dataclasses import dataclass
 from math import sqrt
 from typing import Any
 
+import numpy as np
+
 from daq.records import CLOSED_VISIT, DARK_VISIT, FLANK_VISIT
 from daq.tasks.contract import Ask, Taken
 from daq.tasks.register import FINE_S, KEY, TAKE_UP_MM
@@ -106,7 +108,8 @@ def _balanced(records: Records, taken: Sequence[Taken]) -> Iterator[_Window]:
             yield _Window(name, f"{name} is dark on both flanks", off=True, dim=True)
             continue
         off_mm, _ = balance_mm(left, right, ramp)
-        se_mm = ramp / (2 * total) * sqrt(total + 2 * behind)
+        chance_mm = float(values.get("repeat_mm", 0.0)) / sqrt(2)  # both flanks are come to on their own
+        se_mm = float(np.hypot(ramp / (2 * total) * sqrt(total + 2 * behind), chance_mm))
         most_mm = min(max(float(values["margin_mm"][name]), 0.0), REACH * ramp / 2)
         off = abs(off_mm) - SURE * se_mm > most_mm
         said = f"{name} stands {1e3 * off_mm:+.1f} +- {1e3 * se_mm:.1f} um off its middle"

@@ -24,7 +24,7 @@ def day(tmp_path_factory: pytest.TempPathFactory) -> Path:
     text = (CONFIGS / "lantern.toml").read_text()
     text = text.replace("number = 41", "number = 9").replace("laps = 38", "laps = 20")
     (folder / "night.toml").write_text(text)
-    for task in ("dark", "pilot", "register", "dry-lap"):
+    for task in ("dark", "pilot", "register", "backlash", "dry-lap"):
         assert main(["task", task, str(folder / "night.toml"), "--into", str(folder / "lab")]) == 0
     return folder
 
@@ -76,7 +76,7 @@ def test_the_night_meets_its_forecast_and_its_record_quotes_the_bench(
     assert 0.548 < found["kappa_se"] / expected["kappa_se"] < 1.454
     assert abs(found["kappa"] - found["truth_kappa"]) < 4 * found["kappa_se"]
     quoted = json.loads((night / "record.json").read_text())["bench_records"]
-    assert {"dark", "pilot", "register", "dry-lap"} <= set(quoted)
+    assert {"dark", "pilot", "register", "backlash", "dry-lap"} <= set(quoted)
 
 
 def test_the_counting_bar_is_the_scatter_of_counts_drawn_anew(night: Path) -> None:
@@ -145,3 +145,20 @@ def test_after_eleven_minutes_without_a_link_flanks_and_dark_are_looked_at_first
     (ready,) = (one["text"] for one in said if "without a count" in one["text"])
     assert "A stands" in ready and "off its middle" in ready and "by dark/" in ready
     assert "min without a count: A stands" in (Path(night["run"]) / "report.html").read_text()
+
+
+def test_a_run_on_the_real_clock_takes_the_places_of_the_bench_and_its_report_says_so(
+    measurement: Path, instruments: object, tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    lab, plan = str(tmp_path / "lab"), str(measurement.with_name("tonight.toml"))
+    measurement.write_text(measurement.read_text().replace("\ngoal_se", "\n# goal_se"))  # seconds reach none
+    assert main(["task", "register", str(measurement), "--into", lab]) == 0
+    assert main(["compose", str(measurement), "--bench", lab, "--write", plan]) == 0
+    capsys.readouterr()
+
+    status, run = told(capsys, "run", plan, "--into", lab)
+
+    page = (Path(run["run"]) / "report.html").read_text()
+    assert (status, run["kind"], run["visits_missing"]) == (0, "run", 0)
+    assert "The openings stand where register/" in page
+    assert "Bench records that held at the start" in page

@@ -16,7 +16,7 @@ from tests.studies.bench import Night, generator_of, night
 from tests.studies.rows import Each, rows
 from tests.studies.sources import walk
 
-NIGHTS = 40
+NIGHTS = 100
 SLICES = 10
 FAULTS = 20  # a night
 BRIGHT = 1e5 / 88e3  # strength at which the middle of a single slit brings 1e5 counts a visit
