@@ -22,7 +22,8 @@ from daq.tasks.contract import (
     Setting,
     Taken,
     Task,
-    counts_only,
+    level,
+    once,
 )
 from daq.tasks.crossings import AB, NAME, NONE, A, B, crossings_mm, dead_time_of_cycles
 from daq.tasks.gaps import Gaps, Ticks, dead_time_of_gaps
@@ -33,9 +34,7 @@ GAPS, GATES = "gaps", 8
 WANTED_GAPS, SHORTEST_S, LONGEST_S = 1_000_000, 0.1, 10.0
 
 
-def _asks(setting: Setting, taken: Sequence[Taken]) -> Sequence[Ask]:
-    if taken:
-        return ()
+def _visits(setting: Setting) -> Sequence[Ask]:
     places = crossings_mm(setting.rig)
     sums = [
         Ask(f"{at} {cycle}", DWELL_S, place, opening)
@@ -129,11 +128,11 @@ def _panels(found: Found) -> tuple[Panel, ...]:
     at = np.arange(1.0, len(each) + 1)
     curves = [
         Curve(at, each, "one cycle"),
-        Curve(at, np.full(len(at), 1e9 * found.sums.tau_s), "all together", line=True),
+        level(at, 1e9 * found.sums.tau_s, "all together"),
     ]
     if found.gaps is None:
         return (Panel("Dead time by sums, all crossings together", "cycle", "dead time [ns]", tuple(curves)),)
-    curves.append(Curve(at, np.full(len(at), 1e9 * found.gaps.tau_s), "gaps", line=True))
+    curves.append(level(at, 1e9 * found.gaps.tau_s, "gaps"))
     middles = 1e9 * np.sqrt(found.gaps.edges_s[1:] * found.gaps.edges_s[:-1])
     return (
         Panel("Dead time by sums, all crossings together", "cycle", "dead time [ns]", tuple(curves)),
@@ -155,7 +154,6 @@ TASK = Task(
     purpose="How long the counter is blind after a count, from two slits alone and together, and from gaps.",
     days=90,
     holds_for=("devices",),
-    lacks=counts_only,
-    asks=_asks,
+    asks=once(_visits),
     fit=_fit,
 )

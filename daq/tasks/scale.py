@@ -11,7 +11,6 @@ import numpy as np
 
 from daq import openings
 from daq.estimate.arrays import FloatArray
-from daq.estimate.counting import true_rate_hz
 from daq.tasks.contract import (
     Ask,
     Curve,
@@ -21,8 +20,8 @@ from daq.tasks.contract import (
     Taken,
     Task,
     Verdict,
-    counts_only,
     fits,
+    once,
     worst,
 )
 from daq.tasks.fringes import NAME, Fringes, fringes
@@ -43,9 +42,7 @@ def _pairs(setting: Setting) -> list[str]:
     return [pair for pair in PAIRS if pair in setting.rig.mask.openings]
 
 
-def _asks(setting: Setting, taken: Sequence[Taken]) -> Sequence[Ask]:
-    if taken:
-        return ()
+def _visits(setting: Setting) -> Sequence[Ask]:
     places = setting.measurement.positions.places_mm
     low, high = setting.rig.axes[setting.rig.detector.axis].limits_mm
     first, last = min(places), max(places)
@@ -55,7 +52,7 @@ def _asks(setting: Setting, taken: Sequence[Taken]) -> Sequence[Ask]:
     shown = ("none", "A", "B", "C", *_pairs(setting))
     order = [*shown, *shown[::-1]]  # and back: a straight drift cancels
     return [
-        Ask(name, DWELL_S, float(place), openings.mask(name), beam="open" if setting.shutter else "")
+        Ask(name, DWELL_S, float(place), openings.mask(name), beam=setting.open_beam)
         for place in scan
         for name in order
         if name in setting.rig.mask.openings
@@ -142,7 +139,6 @@ def _sentence(common: Common, found: Fringes) -> str:
 
 def _counts(setting: Setting, taken: Sequence[Taken]) -> tuple[FloatArray, dict[str, FloatArray]]:
     """Return places and the counts of each opening there, the described dead time taken out."""
-    known = setting.measurement.estimate
     place = np.unique([ask.position_mm for ask, _ in taken])
     counts: dict[str, FloatArray] = {}
     live: dict[str, FloatArray] = {}
@@ -150,10 +146,7 @@ def _counts(setting: Setting, taken: Sequence[Taken]) -> tuple[FloatArray, dict[
         at = int(np.searchsorted(place, ask.position_mm))
         counts.setdefault(ask.role, np.zeros(len(place)))[at] += reading.values[0]
         live.setdefault(ask.role, np.zeros(len(place)))[at] += reading.live_s
-    return place, {
-        name: true_rate_hz(counts[name] / live[name], known.dead_time_s, known.dead_time_kind) * live[name]
-        for name in counts
-    }
+    return place, {name: setting.true_hz(counts[name] / live[name]) * live[name] for name in counts}
 
 
 def _panel(place: FloatArray, counts: dict[str, FloatArray], found: Fringes) -> Panel:
@@ -169,7 +162,6 @@ TASK = Task(
     purpose="The fringe period and the middle of the pattern on the detector's own axis.",
     days=30,
     holds_for=("axes", "geometry"),
-    lacks=counts_only,
-    asks=_asks,
+    asks=once(_visits),
     fit=_fit,
 )

@@ -90,6 +90,23 @@ _NIGHTS = {"nights": _plain("nights", "d"), "bias": _pm("bias", "bias_se", "+"),
 _COVERED = {"covers 68 %": _percent("coverage_68"), "covers 95 %": _percent("coverage_95")}
 
 
+def _alarms(found: Mapping[str, Any]) -> str:
+    return f"{100 * found['alarms']:.2f} %" if "alarms" in found else ""
+
+
+def _known(value: str, error: str, sign: str = "") -> Any:
+    form = _pm(value, error, sign)
+    return lambda found: form(found) if value in found else ""
+
+
+_DRAWN = {
+    "draws": _plain("draws", "d"),
+    "bias [errors]": _known("bias", "bias_se", "+"),
+    "scatter over what is said": _known("over_said", "over_said_se"),
+    "over the formula": _known("over_formula", "over_formula_se"),
+}
+
+
 def _lost(found: Mapping[str, Any]) -> str:
     if "why" in found:
         return str(found["why"])
@@ -144,32 +161,18 @@ _FORMS: dict[str, tuple[str, dict[str, Any]]] = {
     "tasks": (
         "Bench tasks: their own errors against many draws and against formulas",
         {
-            "draws": _plain("draws", "d"),
-            "bias [errors]": lambda found: _pm("bias", "bias_se", "+")(found) if "bias" in found else "",
-            "scatter over what is said": lambda found: (
-                _pm("over_said", "over_said_se")(found) if "over_said" in found else ""
-            ),
-            "over the formula": lambda found: (
-                _pm("over_formula", "over_formula_se")(found) if "over_formula" in found else ""
-            ),
+            **_DRAWN,
             "middle, over its formula": _plain("middle_over_formula"),
             "scatter over the truth": _percent("share"),
-            "false alarms": lambda found: f"{100 * found['alarms']:.2f} %" if "alarms" in found else "",
+            "false alarms": _alarms,
         },
     ),
     "masks": (
         "Bench tasks of the mask: their errors against many draws, and chips that are refused",
         {
-            "draws": _plain("draws", "d"),
-            "bias [errors]": lambda found: _pm("bias", "bias_se", "+")(found) if "bias" in found else "",
-            "scatter over what is said": lambda found: (
-                _pm("over_said", "over_said_se")(found) if "over_said" in found else ""
-            ),
-            "over the formula": lambda found: (
-                _pm("over_formula", "over_formula_se")(found) if "over_formula" in found else ""
-            ),
+            **_DRAWN,
             "right": _percent("right"),
-            "false alarms": lambda found: f"{100 * found['alarms']:.2f} %" if "alarms" in found else "",
+            "false alarms": _alarms,
         },
     ),
     "zigzag": (

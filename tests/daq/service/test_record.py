@@ -36,7 +36,7 @@ REQUIRED = {
     "itinerary": ("visits_planned", "visits_per_stand", "planned_pairs", "order", "weights", "signs"),
     "estimate": ("dead_time_s", "dead_time_kind", "dead_time_u_s", "counting", "blinding"),
     "integrity": ("digest", "gate_digest"),
-    "calibrations": ("bench_records",),
+    "calibrations": ("bench_records", "armed.by", "armed.utc", "armed.without"),
     "notes": ("notes",),
 }
 EMPTY_ALLOWED = {
@@ -49,6 +49,8 @@ EMPTY_ALLOWED = {
     "wishes",
 }
 
+ARMED = {"by": "night watch", "utc": "2026-12-01T16:00:00Z", "without": {"pilot": "watched by hand"}}
+
 
 @pytest.fixture(scope="module")
 def run(tmp_path_factory: pytest.TempPathFactory) -> Path:
@@ -57,7 +59,9 @@ def run(tmp_path_factory: pytest.TempPathFactory) -> Path:
     shutil.copytree(config_dir() / "rigs", folder / "rigs")
     text = (config_dir() / "lantern.toml").read_text().replace("number = 41", "number = 3")
     (folder / "short.toml").write_text(text.replace("laps = 38", "laps = 2"))
-    done, _ = begin(load(folder / "short.toml", Wishes(seed=7)), folder / "lab", Wanted("direct"))
+    done, _ = begin(
+        load(folder / "short.toml", Wishes(seed=7)), folder / "lab", Wanted("direct", armed=ARMED)
+    )
     return done
 
 
