@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator
+from collections.abc import Callable
+from functools import partial
 from typing import Any
 
 import numpy as np
@@ -16,6 +17,7 @@ from daq.tasks.settle import GATE_S, Stroke, transient
 from daq.tasks.windows import balance_mm, fitted, named, ramp_mm, window
 from tests.studies.bench import generator_of
 from tests.studies.figures import against, within
+from tests.studies.rows import Each, rows
 
 DRAWS = 2000
 EDGE_MM, BACKGROUND, RAMP_MM = 0.1, 0.02, 0.3
@@ -29,33 +31,34 @@ SHARE, STANDS = 1e-3, 60
 RATES = np.array([800.0, 40.8e3, 40.8e3, 160.8e3, 40.8e3, 40.8e3 * 4, 160.8e3, 360.8e3]) * 2.0
 
 
-def study(nights: int = DRAWS) -> dict[str, Any]:
+def study(nights: int = DRAWS, each: Each = rows) -> dict[str, Any]:
     """Return the figures of every task; a draw is one measurement at the bench."""
     return {
         "about": f"windows with edges of {EDGE_MM:g} mm in such steps, background {BACKGROUND:g}; straight "
         f"ramps {RAMP_MM:g} mm wide; creep of {CREEP:g} scatters a visit; waits by the fit, light that "
         "fades by about 2 % in 0.05 to 0.7 s; 60 stands of 2 s",
-        "rows": dict(_rows(nights)),
+        "rows": each("masks:row", {name: [name, nights] for name in _drawn()}),
     }
 
 
-def _rows(draws: int) -> Iterator[tuple[str, dict[str, Any]]]:
+def row(name: str, draws: int) -> dict[str, Any]:
+    """Return the figures of so many draws of one task, or of one kind of chip."""
+    return _drawn()[name](draws)
+
+
+def _drawn() -> dict[str, Callable[[int], dict[str, Any]]]:
+    """Return what draws each row."""
+    found: dict[str, Callable[[int], dict[str, Any]]] = {}
     for plateau in PLATEAUS:
-        yield f"register, {plateau} counts", _register(plateau, draws, window, "blurred")
-        yield f"register, straight ramps, {plateau} counts", _register(plateau, draws, ramps, "straight")
-    yield "chip as drawn", _named(draws, lambda seen, _: seen, " ".join(DRAWN_MM))
-    yield "chip turned round", _named(draws, lambda seen, _: np.sort(20.0 - seen), "in the wrong way")
-    yield (
-        "a window missing",
-        _named(draws, lambda seen, at: np.delete(seen, at % len(seen)), "7 windows were"),
-    )
-    for repeats in REPEATS:
-        yield f"backlash, {repeats} times", _backlash(repeats, draws)
-    for plateau in FLANKS:
-        yield f"flank balance, {plateau} counts", _balance(plateau, draws)
-    for limit in WAITS:
-        yield f"settle, waits for {limit:.0e}", _settle(limit, draws)
-    yield f"memory of {SHARE:.0e}", _memory(draws)
+        found[f"register, {plateau} counts"] = partial(_register, plateau, window, "blurred")
+        found[f"register, straight ramps, {plateau} counts"] = partial(_register, plateau, ramps, "straight")
+    found["chip as drawn"] = partial(_named, lambda seen, _: seen, " ".join(DRAWN_MM))
+    found["chip turned round"] = partial(_named, lambda seen, _: np.sort(20.0 - seen), "in the wrong way")
+    found["a window missing"] = partial(_named, lambda seen, at: np.delete(seen, at % len(seen)), "7 windows")
+    found |= {f"backlash, {repeats} times": partial(_backlash, repeats) for repeats in REPEATS}
+    found |= {f"flank balance, {plateau} counts": partial(_balance, plateau) for plateau in FLANKS}
+    found |= {f"settle, waits for {limit:.0e}": partial(_settle, limit) for limit in WAITS}
+    return found | {f"memory of {SHARE:.0e}": _memory}
 
 
 def ramps(place_mm: FloatArray, values: FloatArray) -> FloatArray:
@@ -66,7 +69,7 @@ def ramps(place_mm: FloatArray, values: FloatArray) -> FloatArray:
 
 
 def _register(
-    plateau: int, draws: int, shape: Callable[[FloatArray, FloatArray], FloatArray], name: str
+    plateau: int, shape: Callable[[FloatArray, FloatArray], FloatArray], name: str, draws: int
 ) -> dict[str, Any]:
     """Return how exact a centre is against the Fisher matrix of the true edges."""
     random = generator_of("masks", f"register {plateau} {name}")
@@ -94,7 +97,7 @@ def _fisher_mm(
     return float(1 / np.sqrt(np.sum(slope**2 / shape(place_mm, truth))))
 
 
-def _named(draws: int, spoil: Callable[[FloatArray, int], FloatArray], said: str) -> dict[str, Any]:
+def _named(spoil: Callable[[FloatArray, int], FloatArray], said: str, draws: int) -> dict[str, Any]:
     """Return how often a chip is taken for what it is: recognised, or refused with the right words."""
     random = generator_of("masks", f"named {said}")
     right = 0

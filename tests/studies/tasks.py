@@ -2,13 +2,15 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Mapping
+from collections.abc import Callable, Mapping
+from functools import cache, partial
 from typing import Any
 
 import numpy as np
 from scipy.stats import norm
 
 from daq.errors import DaqError
+from daq.estimate.arrays import FloatArray
 from daq.tasks.crossings import dead_time_of_cycles
 from daq.tasks.fringes import Fringes, fringes
 from daq.tasks.gaps import dead_time_of_gaps
@@ -26,6 +28,7 @@ from tests.daq.tasks.made import (
 )
 from tests.studies.bench import generator_of
 from tests.studies.figures import against, within
+from tests.studies.rows import Each, rows
 
 DRAWS = 4000
 TAU_S, WANTED = 40e-9, 0.05  # the dead time, and the share of it that its error shall be
@@ -38,34 +41,43 @@ SCANS = ((0.5, 60.0), (0.9, 60.0), (0.5, 6000.0), (0.9, 6000.0))  # visibility, 
 LOSSES = (1e-5, 1e-4, 1e-3, 1e-2)
 
 
-def study(nights: int = DRAWS) -> dict[str, Any]:
+def study(nights: int = DRAWS, each: Each = rows) -> dict[str, Any]:
     """Return the figures of every task; a draw is one measurement at the bench."""
     return {
         "about": "dead time 40 ns, even light without background; times are those of each opening at each "
         "crossing; fringes by pair; AC against half of AB at three standard errors; clipping by a million "
         "places of the stage",
-        "rows": dict(_rows(nights)),
+        "rows": each("tasks:row", {name: [name, nights] for name in _drawn()}),
     }
 
 
-def _rows(draws: int) -> Iterator[tuple[str, dict[str, Any]]]:
+def row(name: str, draws: int) -> dict[str, Any]:
+    """Return the figures of so many draws of one task."""
+    return _drawn()[name](draws)
+
+
+def _drawn() -> dict[str, Callable[[int], dict[str, Any]]]:
+    """Return what draws each row."""
+    found: dict[str, Callable[[int], dict[str, Any]]] = {}
     for kind in KINDS:
         for alone_hz, live_s in SUMS:
-            yield f"sums, {alone_hz:.0e}/s, {live_s:.0f} s, {kind}", _sums(alone_hz, live_s, kind, draws)
+            name = f"sums, {alone_hz:.0e}/s, {live_s:.0f} s, {kind}"
+            found[name] = partial(_sums, alone_hz, live_s, kind)
     needed_s = (sums_sd_s(SUMS[0][0], 1.0) / (WANTED * TAU_S)) ** 2
-    yield f"sums for 5 %, {SUMS[0][0]:.0e}/s, {needed_s:.0f} s", _sums(SUMS[0][0], needed_s, KINDS[0], draws)
+    found[f"sums for 5 %, {SUMS[0][0]:.0e}/s, {needed_s:.0f} s"] = partial(
+        _sums, SUMS[0][0], needed_s, KINDS[0]
+    )
     for rate_hz, number, tick_s in GAPS:
-        yield f"{number} gaps, {rate_hz:.0e}/s, tick {tick_s:.0e} s", _gaps(rate_hz, number, tick_s, draws)
+        name = f"{number} gaps, {rate_hz:.0e}/s, tick {tick_s:.0e} s"
+        found[name] = partial(_gaps, rate_hz, number, tick_s)
     number = round(1 / (SUMS[0][0] * WANTED * TAU_S))
-    yield f"gaps for 5 %, {SUMS[0][0]:.0e}/s, {number}", _gaps(SUMS[0][0], number, 1e-13, draws)
-    scans = {case: list(_scans(*case, draws // 2)) for case in SCANS}
-    for (visibility, alone), found in scans.items():
+    found[f"gaps for 5 %, {SUMS[0][0]:.0e}/s, {number}"] = partial(_gaps, SUMS[0][0], number, 1e-13)
+    for visibility, alone in SCANS:
         for pair in PERIODS_MM:
             name = f"fringe {pair}, visibility {visibility:g}, {alone:.0f} counts a place"
-            yield name, _fringe(pair, visibility, alone, found)
-    yield "fringes: AC said not to be half as wide", _half([one for found in scans.values() for one in found])
-    for loss in LOSSES:
-        yield f"clipping, {loss:.0e}", _clipped(loss)
+            found[name] = partial(_fringe, pair, visibility, alone)
+    found["fringes: AC said not to be half as wide"] = _half
+    return found | {f"clipping, {loss:.0e}": partial(_clipped, loss) for loss in LOSSES}
 
 
 def _sums(alone_hz: float, live_s: float, kind: str, draws: int) -> dict[str, Any]:
@@ -99,20 +111,25 @@ def _gaps(rate_hz: float, number: int, tick_s: float, draws: int) -> dict[str, A
     return row | {"meets": {"said": within(row["over_said"], 0.95, 1.05)}}
 
 
-def _scans(visibility: float, alone: float, draws: int) -> Iterator[Fringes]:
-    """Yield the fit of every scan; one that is not seen to have a fringe is left out, and so counted."""
+@cache
+def _scans(visibility: float, alone: float, draws: int) -> tuple[Fringes, ...]:
+    """Return the fit of every scan, for all rows; one that is not seen to have a fringe is left out."""
     random = generator_of("tasks", f"fringes {visibility} {alone}")
     rates = pair_counts(visibility, alone, 1e3)
     wanted = {pair: 1.003 * period for pair, period in PERIODS_MM.items()}
-    for _ in range(draws):
-        counts = {name: random.poisson(one).astype(float) for name, one in rates.items()}
-        try:
-            yield fringes(scan_mm(), counts, wanted, 1e3)
-        except DaqError:
-            continue
+    drawn = ({name: random.poisson(one).astype(float) for name, one in rates.items()} for _ in range(draws))
+    return tuple(filter(None, (_fitted(counts, wanted) for counts in drawn)))
 
 
-def _fringe(pair: str, visibility: float, alone: float, found: list[Fringes]) -> dict[str, Any]:
+def _fitted(counts: Mapping[str, FloatArray], wanted: Mapping[str, float]) -> Fringes | None:
+    try:
+        return fringes(scan_mm(), counts, wanted, 1e3)
+    except DaqError:
+        return None
+
+
+def _fringe(pair: str, visibility: float, alone: float, draws: int) -> dict[str, Any]:
+    found = _scans(visibility, alone, draws // 2)
     period_sd, middle_sd = fringe_sd_mm(pair, pair_counts(visibility, alone, 1e3), visibility)
     every = [one.by_pair[pair] for one in found]
     row = against(
@@ -136,8 +153,9 @@ def _fringe(pair: str, visibility: float, alone: float, found: list[Fringes]) ->
     }
 
 
-def _half(found: list[Fringes]) -> dict[str, Any]:
+def _half(draws: int) -> dict[str, Any]:
     """Return how often the fringe of the outer slits is said not to be half as wide as that of A and B."""
+    found = [one for case in SCANS for one in _scans(*case, draws // 2)]
     z = np.array([_apart(one) for one in found])
     share = float(np.mean(np.abs(z) > 3))
     return {"draws": len(z), "alarms": share, "meets": {"alarms": within(share, 0.001, 0.006)}}
@@ -151,7 +169,7 @@ def _apart(found: Fringes) -> float:
     return float((2 * pairs["AC"] - pairs["AB"]) / np.sqrt(what @ found.period_covariance @ what))
 
 
-def _clipped(loss: float) -> dict[str, Any]:
+def _clipped(loss: float, _: int) -> dict[str, Any]:
     random, edge_mm, repeat_mm, width_mm = generator_of("tasks", f"clip {loss}"), 0.04, 0.02, 1.2
     offset_mm = width_mm / 2 - float(norm.isf(loss)) * np.hypot(edge_mm, repeat_mm)
     said = clipped(offset_mm, width_mm, edge_mm, repeat_mm)
