@@ -17,6 +17,10 @@ ODD = 0.05
 
 def pool(arguments: argparse.Namespace) -> Answer:
     """Estimate runs anew, wherever they lie, and take them together."""
+    if arguments.picture is not None:
+        from daq.report.forest import check_ending
+
+        check_ending(arguments.picture)
     kept = Kept(arguments.into or usual_folder())
     with runner(arguments.workers, arguments.cluster) as run:
         found = pool_runs(arguments.run, run, kept, progress_of(len(arguments.run), "runs"))

@@ -59,8 +59,7 @@ def draw_forest(
     DescriptionError
         For another ending, or a place that cannot be written to.
     """
-    if path.suffix not in FORMATS:
-        raise DescriptionError((f"{path}: a picture ends in {', '.join(FORMATS)}. Give it such a name.",))
+    check_ending(path)
     labelled = len(nights) <= LABELLED
     rows = len(nights) + len(together) + 1
     height_in = 1.6 + (ROW_IN if labelled else THIN_ROW_IN) * len(nights) + ROW_IN * len(together)
@@ -81,6 +80,12 @@ def draw_forest(
         figure.savefig(path, dpi=150, metadata={"Date": None} if path.suffix == ".svg" else None)
     except OSError as error:
         raise DescriptionError((f"{path}: {(error.strerror or 'cannot be written').lower()}.",)) from error
+
+
+def check_ending(path: Path) -> None:
+    """Raise DescriptionError where a path names no kind of picture."""
+    if path.suffix not in FORMATS:
+        raise DescriptionError((f"{path}: a picture ends in {', '.join(FORMATS)}. Give it such a name.",))
 
 
 def _nights(axes: Any, nights: Sequence[Line], power: int, labelled: bool) -> None:

@@ -33,6 +33,7 @@ class Ledger:
             folder.mkdir(parents=True, exist_ok=True)
             self._data = os.open(folder / DRAWS, os.O_RDWR | os.O_CREAT | os.O_CLOEXEC, 0o644)
             self._done = os.open(folder / DONE, os.O_RDWR | os.O_CREAT | os.O_APPEND | os.O_CLOEXEC, 0o644)
+        self._begun = False  # whose the folder is stands in it from the first block on
         self.ranges: list[tuple[int, int]] = []  # done, [first, past), ascending, none touching another
         try:
             self._read()
@@ -59,6 +60,9 @@ class Ledger:
         size = self._job.draw_bytes
         line = {"first": first, "count": len(data) // size, "sha256": hashlib.sha256(data).hexdigest()}
         with rim(self._folder):
+            if not self._begun:
+                os.write(self._done, json.dumps({"job": self._job.key}).encode() + b"\n")
+                self._begun = True
             os.pwrite(self._data, data, first * size)
             os.fdatasync(self._data)
             os.write(self._done, json.dumps(line).encode() + b"\n")
@@ -99,8 +103,8 @@ class Ledger:
             os.write(self._done, b"\n")  # close off what a crash tore
         entries = [entry for line in lines if (entry := _entry(line)) is not None]
         if not entries:
-            os.write(self._done, json.dumps({"job": self._job.key}).encode() + b"\n")
             return
+        self._begun = True
         if entries[0].get("job") != self._job.key:
             raise StorageError(
                 "this folder holds another study: its parameters, its seed or the program's version differ",

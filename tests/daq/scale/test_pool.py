@@ -317,6 +317,15 @@ def test_a_forest_is_drawn(nights, tmp_path, capsys, ending):
     assert picture.stat().st_size > 5_000
 
 
+def test_a_picture_that_cannot_be_drawn_is_refused_before_a_run_is_read(nights, tmp_path, capsys):
+    kept = tmp_path / "kept"
+
+    status, _ = answer(capsys, "pool", *map(str, nights), "--picture", "forest.gif", "--into", str(kept))
+
+    assert status == 2
+    assert not kept.exists()
+
+
 def test_an_address_that_is_none_is_a_sentence(nights, capsys):
     status, found = answer(capsys, "pool", *map(str, nights), "--cluster", "nowhere://here")
 

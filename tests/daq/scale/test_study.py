@@ -129,6 +129,15 @@ def test_a_folder_of_another_study_is_refused_and_left_alone(tmp_path: Path, oth
     assert [(tmp_path / name).read_bytes() for name in (DRAWS, DONE)] == before
 
 
+def test_a_start_that_drew_nothing_leaves_the_folder_to_any_study(tmp_path: Path) -> None:
+    with pytest.raises(DiesError):
+        carry_out(job(), tmp_path, 10, dying(0))
+
+    found = carry_out(job(entropy=8), tmp_path, 10, here)
+
+    assert found.digest == hashlib.sha256(drawn(job(entropy=8), 0, 100)).hexdigest()
+
+
 def test_a_block_that_fails_is_named_and_the_others_go_on(tmp_path: Path) -> None:
     of = job("raises", draws=200, below=0.02)
 
