@@ -112,7 +112,9 @@ def _balanced(records: Records, taken: Sequence[Taken]) -> Iterator[_Window]:
         se_mm = float(np.hypot(ramp / (2 * total) * sqrt(total + 2 * behind), chance_mm))
         most_mm = min(max(float(values["margin_mm"][name]), 0.0), REACH * ramp / 2)
         off = abs(off_mm) - SURE * se_mm > most_mm
-        said = f"{name} stands {1e3 * off_mm:+.1f} +- {1e3 * se_mm:.1f} um off its middle"
+        far = abs(off_mm) > REACH * ramp / 2  # one flank is dark or wholly lit: it may be much farther
+        how = f"at least {1e3 * REACH * ramp / 2:.0f}" if far else f"{1e3 * off_mm:+.1f} +- {1e3 * se_mm:.1f}"
+        said = f"{name} stands {how} um off its middle"
         yield _Window(name, f"{said} ({1e3 * most_mm:.0f} allowed)", off=off, dim=False)
 
 

@@ -94,7 +94,7 @@ def test_a_mask_that_has_crept_off_is_told_with_how_far(off_mm: float) -> None:
     crept = found(4, off_mm=off_mm)
 
     if abs(off_mm) < 1:
-        assert crept.astray.startswith("The mask is off its place: A ")
+        assert crept.astray.startswith("The mask is off its place: A stands at least 30 um off its middle")
     else:  # both windows dark: that is for the rule of dark stands
         assert "no light on the flanks of A and C" in crept.said
 
