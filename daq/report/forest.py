@@ -15,9 +15,10 @@ from daq.errors import DescriptionError
 from daq.report.planned import ACCENT, FORMATS, INK, LIGHT
 
 ODD = 0.05
-LABELLED = 60  # nights that still have room for their names
+LABELLED = 60  # nights that still have room for their names; of more, the odd ones are named
 ROW_IN, THIN_ROW_IN, HIGHEST_IN = 0.25, 0.06, 40.0
 Interval = tuple[float, float]
+Way = tuple[str, float, Interval]
 
 
 @dataclass(frozen=True, slots=True)
@@ -41,7 +42,7 @@ class Line:
 def draw_forest(
     path: Path,
     nights: Sequence[Line],
-    together: Sequence[tuple[str, float, Interval]],
+    together: Sequence[Way],
     title: str,
     zero: bool = True,
 ) -> None:
@@ -61,7 +62,9 @@ def draw_forest(
     """
     check_ending(path)
     labelled = len(nights) <= LABELLED
-    rows = len(nights) + len(together) + 1
+    step = 1 if labelled else round(ROW_IN / THIN_ROW_IN)  # rows that a diamond takes
+    first = len(nights) + step
+    rows = first + step * len(together)
     height_in = 1.6 + (ROW_IN if labelled else THIN_ROW_IN) * len(nights) + ROW_IN * len(together)
     figure = Figure(figsize=(9.0, min(height_in, HIGHEST_IN)), layout="constrained")
     axes = figure.subplots()
@@ -71,8 +74,10 @@ def draw_forest(
     if zero:
         axes.axvline(0.0, color=INK, linewidth=0.8, linestyle=(0, (4, 3)))
     _nights(axes, nights, power, labelled)
-    _together(axes, together, power, len(nights) + 1)
-    _label(axes, nights if labelled else [], together, power, len(nights) + 1)
+    told = [(at, line) for at, line in enumerate(nights) if labelled or line.p < ODD]
+    below = [(first + step * at, one) for at, one in enumerate(together)]
+    _together(axes, below, power, 0.35 * step)
+    _label(axes, told, below, power)
     what = "kappa" if zero else "kappa + hidden offset"
     axes.set_xlabel(f"{what} [1e{power:+03d}], 95 % intervals" if power else f"{what}, 95 % intervals")
     axes.set_title(title, fontsize=9, loc="left")
@@ -98,28 +103,31 @@ def _nights(axes: Any, nights: Sequence[Line], power: int, labelled: bool) -> No
         axes.plot([line.kappa / 10.0**power], [at], "s", color=colour, markersize=max(size, 1.0))
 
 
-def _together(axes: Any, together: Sequence[tuple[str, float, Interval]], power: int, first: int) -> None:
+def _together(axes: Any, together: Sequence[tuple[int, Way]], power: int, half: float) -> None:
     """Draw diamonds, the headline filled."""
-    for at, (_, value, ends) in enumerate(together, start=first):
+    for at, (_, value, ends) in together:
         x = [one / 10.0**power for one in (ends[0], value, ends[1], value)]
-        face = INK if at == first else "white"
-        axes.fill(x, [at, at - 0.35, at, at + 0.35], facecolor=face, edgecolor=INK, linewidth=1.0, zorder=3)
+        face = INK if at == together[0][0] else "white"
+        axes.fill(x, [at, at - half, at, at + half], facecolor=face, edgecolor=INK, linewidth=1.0, zorder=3)
 
 
 def _label(
-    axes: Any, nights: Sequence[Line], together: Sequence[tuple[str, float, Interval]], power: int, first: int
+    axes: Any, nights: Sequence[tuple[int, Line]], together: Sequence[tuple[int, Way]], power: int
 ) -> None:
-    """Name the rows at the left, and tell their numbers at the right."""
+    """Name rows at the left, and tell their numbers at the right."""
     unit = 10.0**power
-    left = [*(line.name for line in nights), *(name for name, _, _ in together)]
+    left = [*(line.name for _, line in nights), *(name for _, (name, _, _) in together)]
     right = [
-        *(f"{line.kappa / unit:+.2f} ± {line.se / unit:.2f}   {100 * line.weight:.0f} %" for line in nights),
         *(
-            f"{value / unit:+.2f}   {low / unit:+.2f} to {high / unit:+.2f}"
-            for _, value, (low, high) in together
+            f"{line.kappa / unit:+.2f} ± {line.se / unit:.2f}   {100 * line.weight:.2g} %"
+            for _, line in nights
+        ),
+        *(
+            f"{v / unit:+.2f}   {low / unit:+.2f} to {high / unit:+.2f}"
+            for _, (_, v, (low, high)) in together
         ),
     ]
-    places = [*range(len(nights)), *range(first, first + len(together))]
+    places = [at for at, _ in (*nights, *together)]
     axes.set_yticks(places, left, fontsize=8)
     axes.tick_params(axis="y", length=0)
     other = axes.twinx()

@@ -16,6 +16,7 @@ OUTSTANDING = 8  # blocks a worker that wait at the scheduler at any time
 ANSWERS_WITHIN_S = 10.0
 LOOK_EVERY_S, WITHOUT_WORKERS_S = 5.0, 60.0
 KILLED = "killed:"
+DEATHS = 2  # of workers of our own that one block may cause, and as many when it is tried again alone
 RETRIES = 1  # of a block that raised; those that killed their worker are tried again alone
 
 
@@ -132,6 +133,7 @@ def _client(stack: ExitStack, workers: int, address: str | None, within_s: float
             logging.getLogger(name).setLevel(logging.CRITICAL)
     dask.config.set({"distributed.comm.timeouts.connect": f"{within_s}s"})
     if address is None:
+        dask.config.set({"distributed.scheduler.allowed-failures": DEATHS - 1})
         own = LocalCluster(
             n_workers=workers,
             threads_per_worker=1,
