@@ -14,7 +14,7 @@ from daq.estimate.arrays import FloatArray
 from daq.tasks.contract import hopeless
 
 NAME = "scale"
-NONE = "none"
+NONE, SECTIONS = "none", 4
 NONE_TERMS, ROUNDS = 3, 3  # of the background over the range; of fit and weights in turn
 LEAST_TERMS, TERMS_A_LOBE = 5, 2  # of the amplitude of one slit
 COARSEST_REL = 0.02  # error of a period, all else known: above it there is no fringe
@@ -34,11 +34,17 @@ class Fringe:
 
 @dataclass(frozen=True, slots=True)
 class Fringes:
-    """All fringes of a scan, the covariance of their periods [mm2], what was fitted, and how well."""
+    """All fringes of a scan, the covariance of their periods [mm2], what was fitted, and how well.
+
+    `bent_mm` says how far the fringes of each section of the range are still shifted, `bent_se_mm` how well
+    that is known: a stage whose scale is even shifts none.
+    """
 
     by_pair: Mapping[str, Fringe]
     period_covariance: FloatArray
     fitted: Mapping[str, FloatArray]
+    bent_mm: FloatArray
+    bent_se_mm: FloatArray
     chi2: float
     dof: int
 
@@ -235,15 +241,35 @@ def _told(
 ) -> Fringes:
     periods = [shape.of_pair(pair).start for pair in shape.pairs]
     expected = _model(shape, values)
+    bent, bent_se = _bent_mm(shape, values, seen - expected, width)
     return Fringes(
         by_pair={
             pair: _fringe(values, covariance, at) for pair, at in zip(shape.pairs, periods, strict=True)
         },
         period_covariance=covariance[np.ix_(periods, periods)],
         fitted=dict(zip(shape.names, expected.reshape(len(shape.names), -1), strict=True)),
+        bent_mm=bent,
+        bent_se_mm=bent_se,
         chi2=float(np.sum(((seen - expected) / width) ** 2)),
         dof=len(seen) - len(values),
     )
+
+
+def _bent_mm(
+    shape: _Shape, values: FloatArray, left: FloatArray, width: FloatArray
+) -> tuple[FloatArray, FloatArray]:
+    """Return how far what is left over shifts all fringes, section by section, and the errors [mm]."""
+    slopes = _slopes(shape, values)
+    shift = sum(slopes[:, shape.of_pair(pair).start + 1] for pair in shape.pairs) / width
+    pull = (left / width * shift).reshape(len(shape.names), -1).sum(axis=0)
+    weight = (shift**2).reshape(len(shape.names), -1).sum(axis=0)
+    parts = [(part.sum(), many.sum()) for part, many in zip(*map(_sections, (pull, weight)), strict=True)]
+    sums = np.array(parts)
+    return sums[:, 0] / sums[:, 1], 1 / np.sqrt(sums[:, 1])
+
+
+def _sections(values: FloatArray) -> list[FloatArray]:
+    return np.array_split(values, SECTIONS)
 
 
 def _fringe(values: FloatArray, covariance: FloatArray, at: int) -> Fringe:

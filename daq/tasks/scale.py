@@ -24,7 +24,7 @@ from daq.tasks.contract import (
     once,
     worst,
 )
-from daq.tasks.fringes import NAME, Fringes, fringes
+from daq.tasks.fringes import NAME, SECTIONS, Fringes, fringes
 from daq.tasks.said import with_error
 
 DWELL_S, PER_FRINGE = 0.5, 8  # points of the finest fringe
@@ -75,13 +75,21 @@ def _fit(setting: Setting, taken: Sequence[Taken]) -> Outcome:
     return Outcome(
         values=values,
         se=se,
-        verdict=worst(fits(common.chi2, len(expected) - 1), fits(found.chi2, found.dof), precise),
+        verdict=worst(
+            fits(common.chi2, len(expected) - 1), fits(found.chi2, found.dof), _even(found), precise
+        ),
         sentence=_sentence(common, found),
         model="every slit alone, and a fringe between two",
         panels=(_panel(place, counts, found),),
         chi2=found.chi2,
         dof=found.dof,
     )
+
+
+def _even(found: Fringes) -> Verdict:
+    """Return "doubtful" where sections of the range are shifted against one another."""
+    # the middle and the period of the fit have taken two of them
+    return fits(float(np.sum((found.bent_mm / found.bent_se_mm) ** 2)), SECTIONS - 2)
 
 
 def _values(found: Fringes, common: Common, distance_m: float) -> tuple[dict[str, Any], dict[str, Any]]:
@@ -92,12 +100,14 @@ def _values(found: Fringes, common: Common, distance_m: float) -> tuple[dict[str
         "middle_mm": {pair: one.middle_mm for pair, one in each.items()},
         "visibility": {pair: one.visibility for pair, one in each.items()},
         "distance_m": common.scale * distance_m,
+        "bent_mm": found.bent_mm.tolist(),
     }
     se = {
         "scale": common.se,
         "period_mm": {pair: one.period_se_mm for pair, one in each.items()},
         "middle_mm": {pair: one.middle_se_mm for pair, one in each.items()},
         "distance_m": common.se * distance_m,
+        "bent_mm": found.bent_se_mm.tolist(),
     }
     return values, se
 
@@ -124,6 +134,12 @@ def _common(found: Fringes, expected_mm: Sequence[float]) -> Common:
 def _sentence(common: Common, found: Fringes) -> str:
     finest = min(found.by_pair, key=lambda pair: found.by_pair[pair].period_mm)
     one = found.by_pair[finest]
+    largest_um = 1e3 * float(np.abs(found.bent_mm).max())
+    bent = (
+        ""
+        if _even(found) == "pass"
+        else f" The scale is not even over the range: sections are shifted by up to {largest_um:.1f} um."
+    )
     apart = (
         ""
         if fits(common.chi2, len(found.by_pair) - 1) == "pass"
@@ -133,7 +149,7 @@ def _sentence(common: Common, found: Fringes) -> str:
         f"Fringes are {with_error(common.scale, common.se)} times as wide as described ({finest}: "
         f"{with_error(one.period_mm, one.period_se_mm)} mm), their middle is at "
         f"{with_error(one.middle_mm, one.middle_se_mm)} mm; a scale that all share does nothing to kappa."
-        f"{apart}"
+        f"{apart}{bent}"
     )
 
 

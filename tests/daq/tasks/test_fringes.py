@@ -24,6 +24,8 @@ def test_period_and_middle_scatter_as_they_say_and_are_not_off(
         for known in [(WANTED_MM, lobe_mm)] * draws
     ]
 
+    bent = np.mean([np.sum((one.bent_mm / one.bent_se_mm) ** 2) for one in found])
+    assert bent == pytest.approx(2.0, abs=4 * 2.0 / np.sqrt(draws))  # chi-squared of two, mean and spread 2
     for pair, period in PERIODS_MM.items():
         every = [one.by_pair[pair] for one in found]
         for values, se, truth in (
