@@ -14,13 +14,13 @@ from daq.cli.answer import Answer
 from daq.cli.night import Watch, interrupts, show_page
 from daq.errors import DescriptionError
 from daq.report import lines
+from daq.service.equip import Wanted
 from daq.service.figures import figures_of
 from daq.service.foreign import take_in as taken_in
 from daq.service.night import COMPLETE
 from daq.service.owner import refuse_owned
 from daq.service.replay import WhatIf
 from daq.service.replay import replay as replayed
-from daq.service.start import Wanted
 from daq.service.tape import Tape
 from daq.service.whatif import differences, read_changes
 from daq.storage.log import read_log

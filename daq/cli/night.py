@@ -23,6 +23,7 @@ from daq.report import lines
 from daq.service.asked import Asked
 from daq.service.drift import with_drift
 from daq.service.ending import REASONS
+from daq.service.equip import Wanted
 from daq.service.figures import figures_of
 from daq.service.load import Loaded, config_dir, load
 from daq.service.night import COMPLETE
@@ -30,7 +31,7 @@ from daq.service.outlets import Outlets, outlets_of_run
 from daq.service.owner import refuse_owned
 from daq.service.page import PageProcess, make_lab
 from daq.service.progress import Progress
-from daq.service.start import Wanted, begin, resume
+from daq.service.start import begin, resume
 from daq.storage.probe import durable_write_s
 
 

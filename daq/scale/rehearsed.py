@@ -12,9 +12,10 @@ import numpy as np
 
 from daq.errors import DaqError
 from daq.estimate import estimate_run
+from daq.service.equip import Wanted
 from daq.service.load import FAULTS, Wishes, load_changed
 from daq.service.night import COMPLETE
-from daq.service.start import Wanted, begin
+from daq.service.start import begin
 from daq.storage.reader import open_visits
 
 COLUMNS = (

@@ -17,12 +17,13 @@ from daq.devices.registry import open_devices
 from daq.errors import StorageError
 from daq.estimate.blinding import OPEN
 from daq.service.again import carry_out_again
+from daq.service.equip import Wanted, night_of
 from daq.service.extensions import open_bench
 from daq.service.load import Loaded, config_dir, load_changed
 from daq.service.record import settings_of
 from daq.service.software import software
-from daq.service.start import Wanted, night_of, through
 from daq.service.tape import Tape, tape_of
+from daq.service.through import through
 from daq.service.whatif import refuse_unanswerable
 from daq.storage.blinding import blinding_of
 from daq.storage.lab import new_run_folder

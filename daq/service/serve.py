@@ -27,12 +27,13 @@ from daq.service.bookings import (
 )
 from daq.service.calendar import missed, starts
 from daq.service.desk import answer_desk, tell_desk
+from daq.service.equip import Wanted
 from daq.service.load import Loaded, load
 from daq.service.messages import NOTE, post
 from daq.service.night import WITH_PROGRAM
 from daq.service.outlets import Outlets
 from daq.service.requests import current_run
-from daq.service.start import Wanted, begin, resume
+from daq.service.start import begin, resume
 from daq.storage.feed import read_feed
 from daq.storage.lock import is_written
 from daq.storage.reader import read_meta

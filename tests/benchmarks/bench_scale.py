@@ -28,8 +28,9 @@ from daq.scale.job import job_of
 from daq.scale.kept import Kept
 from daq.scale.pool import pool_runs
 from daq.scale.study import carry_out, here
+from daq.service.equip import Wanted
 from daq.service.load import Wishes, load
-from daq.service.start import Wanted, begin
+from daq.service.start import begin
 from daq.storage.digest import digest
 from daq.storage.pack import pack_zip
 from daq.storage.reader import open_visits

@@ -206,6 +206,7 @@ def test_the_feed_gives_nothing_away_at_any_time_of_the_night(tmp_path: Path) ->
     """The feed is caught every time it is replaced; what it holds at the end is the secret of all pairs."""
     seen: list[Any] = []
     from daq.service import start
+    from daq.service.equip import Wanted
 
     lab, file = tmp_path / "lab", description(tmp_path, **BLINDED)
     folders: list[Path] = []
@@ -215,7 +216,7 @@ def test_the_feed_gives_nothing_away_at_any_time_of_the_night(tmp_path: Path) ->
 
     from daq.service.load import load
 
-    wanted = start.Wanted("direct", on_start=lambda folder, _: folders.append(folder), on_visit=look)
+    wanted = Wanted("direct", on_start=lambda folder, _: folders.append(folder), on_visit=look)
     folder, _ = start.begin(load(file), lab, wanted)
 
     secrets = Secrets(folder)

@@ -12,6 +12,7 @@ from daq.cli.toml import toml_text
 from daq.estimate import estimate_run
 from daq.service import start
 from daq.service.asked import Asked
+from daq.service.equip import Wanted
 from daq.service.load import load
 from daq.service.requests import Request
 from daq.storage.log import read_log
@@ -54,7 +55,7 @@ def test_an_end_by_hand_says_who_and_whether_kappa_could_be_seen(tmp_path, blind
         if len(taken) == 400:
             asked.requests = lambda: [Request(1, "end", "Kim", "2026-12-01T00:00:00Z")]
 
-    folder, ended = start.begin(loaded, tmp_path / "lab", start.Wanted("direct", asked=asked, on_visit=took))
+    folder, ended = start.begin(loaded, tmp_path / "lab", Wanted("direct", asked=asked, on_visit=took))
 
     found = read_meta(folder)["stop"]
     assert ended == "ended at request after a stand"

@@ -8,8 +8,9 @@ from pathlib import Path
 import numpy as np
 
 import daq
+from daq.service.equip import Wanted
 from daq.service.load import load
-from daq.service.start import Wanted, begin
+from daq.service.start import begin
 from daq.storage.events import read_events
 from daq.storage.verify import verify
 from tests.examples import CONFIGS

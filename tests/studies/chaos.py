@@ -24,6 +24,7 @@ from daq import openings
 from daq.errors import DaqError
 from daq.records import Quality, Reading
 from daq.service import start
+from daq.service.equip import Wanted
 from daq.service.figures import figures_of
 from daq.service.load import NO_WISHES, load
 from daq.storage.feed import read_feed
@@ -244,7 +245,7 @@ def _perform(lab: Path, run: Path | None) -> None:
         }
         os.write(log, (json.dumps(entry) + "\n").encode())
 
-    wanted = start.Wanted("tcp", on_visit=took)
+    wanted = Wanted("tcp", on_visit=took)
     try:
         if run is None:
             loaded = load(lab / "night.toml", NO_WISHES).with_faults(lab / "faults.toml")

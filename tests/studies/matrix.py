@@ -15,6 +15,7 @@ from typing import Any
 from daq.errors import DaqError
 from daq.records import Reading
 from daq.service import start
+from daq.service.equip import Wanted
 from daq.service.load import NO_WISHES, Loaded, load
 from daq.service.outlets import outlets_of_run
 from daq.storage.feed import read_feed
@@ -210,7 +211,7 @@ def _run(
         if killed:
             _killed(lab)
         with outlets_of_run(lab) as outlets:
-            wanted = start.Wanted("direct", **({} if outlets is None else outlets.wishes()))
+            wanted = Wanted("direct", **({} if outlets is None else outlets.wishes()))
             wanted = replace(wanted, **_person(lab)) if cleared else wanted
             with suppress(DaqError):  # the feed says why it ended
                 if killed:
@@ -256,7 +257,7 @@ def _killed(lab: Path) -> None:
             os.kill(os.getpid(), signal.SIGKILL)
 
     try:
-        start.begin(_loaded(lab), lab, start.Wanted("direct", on_visit=on_visit))
+        start.begin(_loaded(lab), lab, Wanted("direct", on_visit=on_visit))
     finally:
         os._exit(1)
 

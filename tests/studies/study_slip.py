@@ -19,8 +19,9 @@ import numpy as np
 
 from daq import open_visits
 from daq.records import Quality
+from daq.service.equip import Wanted
 from daq.service.load import Wishes, load
-from daq.service.start import Wanted, begin
+from daq.service.start import begin
 from tests.examples import CONFIGS
 
 SIZES_MM = (0.0, 0.003, 0.01, 0.03, 0.1)

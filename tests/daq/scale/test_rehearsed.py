@@ -19,8 +19,9 @@ from daq.scale.described import read_study
 from daq.scale.job import Job, drawn, job_of
 from daq.scale.ledger import DONE
 from daq.scale.rehearsed import reseeded
+from daq.service.equip import Wanted
 from daq.service.load import Wishes, load
-from daq.service.start import Wanted, begin
+from daq.service.start import begin
 from tests.daq.scale.answers import answer
 from tests.daq.scale.outside import ROOT
 from tests.examples import CONFIGS, changed, measurement_table

@@ -3,7 +3,7 @@
 import numpy as np
 import xarray as xr
 
-from daq.service.start import _break_ns
+from daq.service.equip import _break_ns
 
 S = 10**9
 

@@ -12,9 +12,10 @@ from typing import Any
 import pytest
 
 from daq.openings import names
+from daq.service.equip import Wanted
 from daq.service.load import Wishes, config_dir, load
 from daq.service.software import commit, software
-from daq.service.start import Wanted, begin
+from daq.service.start import begin
 from daq.storage.layout import columns
 from daq.storage.log import read_log
 from daq.storage.reader import open_itinerary, open_visits, read_meta
