@@ -7,14 +7,13 @@ measured with much light and with little.
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass, replace
 from math import sqrt
 
 import numpy as np
 
 from daq import openings
 from daq.description.by_hand import Dial
-from daq.estimate.arrays import BoolArray, FloatArray
+from daq.estimate.arrays import FloatArray
 from daq.tasks.contract import (
     Ask,
     Curve,
@@ -29,78 +28,15 @@ from daq.tasks.contract import (
     once,
     worst,
 )
+from daq.tasks.knee import Plateau, plateau
 from daq.tasks.turns import set_detector, told_once
 
 BRIGHT, DIM, DARK = "bright", "dim", "dark"
 SETTINGS = 11
 DWELL_S = {BRIGHT: 5.0, DIM: 10.0, DARK: 5.0}
-KNEE = 0.01  # of the rate: where the plateau begins, so far below its line
 STEEP = 0.1  # of the rate over the whole dial: more is no plateau
 WANDER = 1e-3  # of the rate: what the dial's own wander may make
 SEEN = 5.0  # errors: with less light above dark there is none
-TURNS = 4  # rounds of line and knee
-
-
-@dataclass(frozen=True, slots=True)
-class Plateau:
-    """A line through the log rate over the plateau: slope for one unit and its error, where it begins."""
-
-    slope: float
-    se: float
-    level: float
-    middle: float
-    begins: float | None
-    chi2: float
-    dof: int
-
-    def line(self, at: FloatArray) -> FloatArray:
-        """Return the log rate of the line at settings."""
-        return np.asarray(self.level + self.slope * (at - self.middle))
-
-
-def plateau(at: FloatArray, log_rate: FloatArray, se: FloatArray, number: FloatArray) -> Plateau:
-    """Return the plateau in log rates at settings, taken one after another (`number`, for a steady drift).
-
-    Notes
-    -----
-    Weighted least squares over the middle third between knee and upper end, the knee where the log rate has
-    fallen by `KNEE` below the line, in turn; errors grow with the root of chi2 over freedom above one.
-    """
-    begins, low, high = None, float(at.min()), float(at.max())
-    for _ in range(TURNS):
-        start = low if begins is None else begins
-        third = (high - start) / 3
-        inside = (at >= start + third - 1e-9) & (at <= high - third + 1e-9)
-        inside = inside if len(np.unique(at[inside])) >= 2 else at >= start + third / 2
-        found = _line(at, log_rate, se, number, inside)
-        begins = _knee(at, log_rate, found)
-    return replace(found, begins=begins)
-
-
-def _line(
-    at: FloatArray, log_rate: FloatArray, se: FloatArray, number: FloatArray, inside: BoolArray
-) -> Plateau:
-    middle = float(at[inside].mean())
-    steps = number[inside] - number[inside].mean()
-    design = np.stack([np.ones(len(steps)), at[inside] - middle, steps], axis=1) / se[inside][:, None]
-    inverse = np.linalg.pinv(design.T @ design)
-    solved = inverse @ design.T @ (log_rate[inside] / se[inside])
-    chi2 = float(np.sum((log_rate[inside] / se[inside] - design @ solved) ** 2))
-    dof = max(len(steps) - 3, 1)
-    error = sqrt(float(inverse[1, 1]) * max(chi2 / dof, 1.0))
-    return Plateau(float(solved[1]), error, float(solved[0]), middle, None, chi2, dof)
-
-
-def _knee(at: FloatArray, log_rate: FloatArray, found: Plateau) -> float | None:
-    """Return the setting at which the log rate has fallen by `KNEE` below the line, None where it has not."""
-    places = np.unique(at)
-    short = found.line(places) - np.array([float(log_rate[at == place].mean()) for place in places])
-    below = np.flatnonzero((short > KNEE) & (places < found.middle))
-    if not len(below):
-        return None
-    last = int(below[-1])
-    share = (short[last] - KNEE) / max(short[last] - short[last + 1], 1e-12)
-    return float(places[last] + min(share, 1.0) * (places[last + 1] - places[last]))
 
 
 def _lacks(setting: Setting) -> Sequence[str]:
@@ -115,16 +51,11 @@ def _dial(setting: Setting) -> Dial:
     return dial
 
 
-def _dim(setting: Setting) -> int:
-    """Return the first slit alone."""
-    return openings.mask("A")
-
-
 def _visits(setting: Setting) -> Sequence[Ask]:
     """Return bright, dim and dark visits at settings up and down, between settings as they are now."""
     dial, yard = _dial(setting), setting.yardstick
     up = [round(float(at), 6) for at in np.linspace(dial.low, dial.high, SETTINGS)]
-    shown = {BRIGHT: yard.opening, DIM: _dim(setting), DARK: 0}
+    shown = {BRIGHT: yard.opening, DIM: openings.mask("A"), DARK: 0}
     found = []
     for at in (dial.now, *up, *up[::-1], dial.now):
         for role, opening in shown.items():
