@@ -12,7 +12,7 @@ from daq.devices.clock import RealClock
 from daq.devices.registry import open_devices
 from daq.errors import DaqError, DeviceError
 from daq.ports import Clock, Devices
-from daq.service.beam import shut_out
+from daq.service.beam import shut_out_after
 from daq.tasks.contract import Turn
 
 PRESENT = "here"
@@ -72,9 +72,8 @@ def in_hand(rig: Rig) -> Iterator[tuple[Devices, Clock]]:
     clock = RealClock()
     try:
         opened = open_devices(rig, clock)
-        with opened as devices:
+        with opened as devices, shut_out_after(devices):
             yield devices, clock
-            shut_out(devices)
     except DeviceError as error:
         if rig.simulated and error.kind == "lost":
             remedy = "Serve the simulated instruments first: `python -m simulators RIG`"

@@ -2,6 +2,9 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
+from contextlib import contextmanager
+
 from daq.errors import DeviceError
 from daq.ports import Clock, Devices
 
@@ -34,3 +37,12 @@ def shut_out(devices: Devices) -> None:
     if devices.shutter is not None:
         devices.shutter.block()
         devices.shutter.armed = False
+
+
+@contextmanager
+def shut_out_after(devices: Devices) -> Iterator[None]:
+    """Give a block the beam; however it ends, Ctrl-C too, a shutter is asked to block it then."""
+    try:
+        yield
+    finally:
+        shut_out(devices)

@@ -19,7 +19,7 @@ from daq.errors import DaqError, DeviceError, StorageError
 from daq.estimate.quality import rules_of
 from daq.itinerary import Itinerary
 from daq.ports import Bench, Clock, Devices
-from daq.service.beam import let_in, shut_out
+from daq.service.beam import let_in, shut_out_after
 from daq.service.bench_records import known, set_up_of
 from daq.service.extensions import open_bench
 from daq.service.live import stamp
@@ -109,18 +109,16 @@ def _at_bench(loaded: Loaded, lab: Path) -> Iterator[tuple[Devices, Clock, Bench
     """Give the devices of a rig; simulated ones stand where the last task left them."""
     if not loaded.rig.simulated:
         clock = RealClock()
-        with open_devices(loaded.rig, clock) as devices:
+        with open_devices(loaded.rig, clock) as devices, shut_out_after(devices):
             yield devices, clock, None
-            shut_out(devices)
         return
     state = kept_state(lab, loaded.rig.name)
     bench = open_bench(
         loaded.rig, seed=loaded.bench_seed, transport="direct", state=state, faults=loaded.faults
     )
     try:
-        with open_devices(loaded.rig, bench.clock) as devices:
+        with open_devices(loaded.rig, bench.clock) as devices, shut_out_after(devices):
             yield devices, bench.clock, bench
-            shut_out(devices)
         keep_state(lab, loaded.rig.name, bench.keep())
     finally:
         bench.close()

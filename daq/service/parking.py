@@ -20,12 +20,20 @@ def park(night: Night) -> None:
     """Show no slit, shut the beam out, let the detector rest; a device that does not answer is told of."""
     if night.state is not State.ENDED:
         night.state = State.PARKING
-    try:
-        predicted_s = night.devices.mask.show(mask(NONE))
-        night.clock.sleep_until(night.clock.now_ns() + round(predicted_s * 1e9))
-        shut_out(night.devices)
-    except DeviceError as error:
-        tell(night, "could not park", text=str(error))
+    for act in (_show_none, _shut_out):
+        try:  # a mask that does not answer must not leave the beam open
+            act(night)
+        except DeviceError as error:
+            tell(night, "could not park", text=str(error))
+
+
+def _show_none(night: Night) -> None:
+    predicted_s = night.devices.mask.show(mask(NONE))
+    night.clock.sleep_until(night.clock.now_ns() + round(predicted_s * 1e9))
+
+
+def _shut_out(night: Night) -> None:
+    shut_out(night.devices)
 
 
 def stop_now(night: Night) -> None:

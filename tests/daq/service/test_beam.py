@@ -11,7 +11,7 @@ import pytest
 from daq.devices.registry import open_devices
 from daq.errors import DeviceError
 from daq.ports import Devices
-from daq.service.beam import PATIENCE_S, let_in, shut_out
+from daq.service.beam import PATIENCE_S, let_in, shut_out, shut_out_after
 from simulators.bench import WaveletBench, open_bench
 from tests.contracts.rigs import words
 from tests.examples import lantern_rig
@@ -44,6 +44,18 @@ def test_light_is_let_in_for_a_run_and_shut_out_after_it() -> None:
         after = counts(bench, devices)
 
     assert max(before, after) < 150 < 1000 < open_
+
+
+def test_light_is_shut_out_however_a_block_ends() -> None:
+    with shuttered() as (bench, devices):
+        assert devices.shutter is not None
+        with pytest.raises(KeyboardInterrupt), shut_out_after(devices):
+            let_in(devices, bench.clock)
+            open_ = devices.shutter.state()
+            raise KeyboardInterrupt
+        bench.clock.sleep_until(bench.clock.now_ns() + S)
+
+        assert (open_, devices.shutter.state()) == ("open", "blocked")
 
 
 def test_a_shutter_that_was_shut_out_is_not_opened_by_anybody_else() -> None:

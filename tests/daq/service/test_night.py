@@ -259,6 +259,30 @@ def test_parking_shows_no_slit(tmp_path):
     assert bench.mask_stage.target_mm == 0.0
 
 
+class Blocked:
+    """A shutter that keeps how it was asked to stand."""
+
+    name, armed, stands = "shutter", True, "open"
+
+    def block(self) -> None:
+        self.stands = "blocked"
+
+
+def test_parking_shuts_the_beam_out_though_the_mask_does_not_answer(tmp_path):
+    def fault(doing: str) -> None:
+        if doing == "mask start":
+            raise DeviceError("no reply", where="mask", kind="lost")
+
+    night, _ = a_night(tmp_path, fault)
+    shutter = Blocked()
+    night.devices = replace(night.devices, shutter=shutter)
+
+    park(night)
+
+    assert shutter.stands == "blocked"
+    assert events(tmp_path) == ["could not park"]
+
+
 def test_an_ended_run_takes_no_further_step(tmp_path):
     night, _ = a_night(tmp_path)
     night.become(State.ENDED)
