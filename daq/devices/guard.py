@@ -34,29 +34,35 @@ class StopOrder:
     text: str
 
 
+class Guard:
+    """The guarding process, from the program's side; it does nothing before it knows what to watch over."""
+
+    def __init__(self) -> None:
+        words = [sys.executable, "-m", "daq.devices.guard"]
+        # A session of its own: Ctrl-C on the terminal is meant for the program, not for its guard.
+        self.process = subprocess.Popen(words, stdin=subprocess.PIPE, start_new_session=True)
+
+    def watch_over(self, orders: Sequence[StopOrder]) -> None:
+        """Have these stages stopped from now on: they are ours, no other program can be moving them."""
+        _tell(self.process, json.dumps([asdict(order) for order in orders]).encode() + b"\n")
+
+
 @contextlib.contextmanager
-def guarded(orders: Sequence[StopOrder]) -> Iterator[subprocess.Popen[bytes] | None]:
+def guarded() -> Iterator[Guard]:
     """Run a guard beside the block; a block that ends by an error nobody foresaw is no goodbye either."""
-    if not orders:
-        yield None
-        return
-    words = [sys.executable, "-m", "daq.devices.guard"]
-    # A session of its own: Ctrl-C on the terminal is meant for the program, not for its guard.
-    process = subprocess.Popen(words, stdin=subprocess.PIPE, start_new_session=True)
-    assert process.stdin is not None
-    _tell(process, json.dumps([asdict(order) for order in orders]).encode() + b"\n")
+    guard = Guard()
     try:
-        yield process
+        yield guard
     except DaqError:
-        _tell(process, GOODBYE)
+        _tell(guard.process, GOODBYE)
         raise
     else:
-        _tell(process, GOODBYE)
+        _tell(guard.process, GOODBYE)
     finally:
         with contextlib.suppress(OSError):
-            process.stdin.close()
+            guard.process.stdin.close()  # type: ignore[union-attr]
         with contextlib.suppress(subprocess.TimeoutExpired):
-            process.wait(_LINGER_S)
+            guard.process.wait(_LINGER_S)
 
 
 def _tell(process: subprocess.Popen[bytes], line: bytes) -> None:
@@ -68,7 +74,10 @@ def _tell(process: subprocess.Popen[bytes], line: bytes) -> None:
 
 def watch() -> int:
     """Wait for the goodbye or for the death of the program; return 0, or 1 when a stop could not be sent."""
-    orders = [StopOrder(**order) for order in json.loads(sys.stdin.buffer.readline() or b"[]")]
+    first = sys.stdin.buffer.readline()
+    if first in (b"", GOODBYE):  # it never had stages of its own
+        return 0
+    orders = [StopOrder(**order) for order in json.loads(first)]
     _get_ready(orders)
     if sys.stdin.buffer.read().endswith(GOODBYE):
         return 0

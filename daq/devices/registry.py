@@ -75,11 +75,13 @@ def open_devices(rig: Rig, clock: Clock) -> Iterator[Devices]:
         for device in _driver(entry.driver).of_rig(name, rig, clock)
     ]
     with ExitStack() as opened:
-        if clock.kind == "real":  # in virtual time nothing can go on moving without this process
-            opened.enter_context(guarded(_stop_orders(rig, built)))
+        # In virtual time nothing can go on moving without this process.
+        guard = opened.enter_context(guarded()) if clock.kind == "real" else None
         for _, device in built:
             opened.callback(device.close)
             device.open()
+        if guard is not None:  # only now: a stage that another program moves is not ours to stop
+            guard.watch_over(_stop_orders(rig, built))
         yield _devices(rig, built)
 
 

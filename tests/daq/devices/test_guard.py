@@ -105,11 +105,20 @@ def test_a_controller_that_nobody_reaches_holds_up_no_other(bench: Bench) -> Non
         guard.StopOrder("stages", bench.words[3], "M0\n"),
     ]
 
-    with pytest.raises(RuntimeError), guard.guarded(orders) as process:
+    with pytest.raises(RuntimeError), guard.guarded() as beside:
+        beside.watch_over(orders)
         raise RuntimeError
 
     assert bench.stages.stopped.wait(WAIT_S)
-    assert process is not None and process.returncode == 1
+    assert beside.process.returncode == 1
+
+
+def test_stages_that_another_program_holds_are_not_stopped(bench: Bench) -> None:
+    with pytest.raises(RuntimeError), guard.guarded() as beside:
+        raise RuntimeError  # before the stages were ours
+
+    assert beside.process.returncode == 0
+    assert not bench.stages.stopped.is_set()
 
 
 def test_it_says_that_it_is_no_safety_function() -> None:
