@@ -2,9 +2,11 @@
 
 from __future__ import annotations
 
+import logging
 import re
 import tempfile
-from collections.abc import Mapping
+from collections.abc import Iterator, Mapping
+from contextlib import contextmanager
 from pathlib import Path
 from typing import Any
 
@@ -48,12 +50,24 @@ def night(parameters: Mapping[str, Any], generator: np.random.Generator) -> dict
         began: list[Path] = []
         wanted = Wanted("direct", on_start=lambda run, _: began.append(run))
         try:
-            run, ended = begin(loaded, folder / "lab", wanted)
+            with _quietly():
+                run, ended = begin(loaded, folder / "lab", wanted)
         except DaqError:
             if not began:
                 raise
             run, ended = began[0], ""
         return _figures(run, ended == COMPLETE)
+
+
+@contextmanager
+def _quietly() -> Iterator[None]:
+    """Keep what thousands of nights would tell off the terminal."""
+    before = logging.root.manager.disable
+    logging.disable(logging.CRITICAL)
+    try:
+        yield
+    finally:
+        logging.disable(before)
 
 
 def reseeded(script: str, seed: int) -> str:
