@@ -33,6 +33,7 @@ from daq.service.page import PageProcess, make_lab
 from daq.service.progress import Progress
 from daq.service.start import begin, resume
 from daq.storage.probe import durable_write_s
+from daq.storage.reader import read_meta
 
 
 def rehearse(arguments: argparse.Namespace) -> Answer:
@@ -47,10 +48,21 @@ def run(arguments: argparse.Namespace) -> Answer:
     return _carry_out(arguments, "", arguments.file)
 
 
+def _refuse_other_clock(folder: Path, command: str) -> None:
+    """Raise DescriptionError when a run would go on with the devices of the other command."""
+    theirs = "rehearse" if read_meta(folder).get("clock") == "virtual" else "run"
+    if command != theirs:
+        raise DescriptionError(
+            (f"{folder}: `tercet {theirs}` began it, on other devices. Use `tercet {theirs} --resume`.",)
+        )
+
+
 def _carry_out(arguments: argparse.Namespace, transport: str, file: Path) -> Answer:
     loaded = None if arguments.resume else _loaded(arguments, file)
     lab = arguments.resume.resolve().parents[1] if arguments.resume else arguments.into
     refuse_owned(lab)
+    if arguments.resume:
+        _refuse_other_clock(arguments.resume, "run" if not transport else "rehearse")
     began_s = time.monotonic()
     with ExitStack() as stack:
         page = show_page(stack, lab, sys.stderr if arguments.json else sys.stdout) if arguments.page else None

@@ -112,7 +112,8 @@ def _status_lines(figures: dict[str, Any], lab: Path) -> Iterator[str]:
     name = "kappa + offset" if Blinding(str(figures["blinding"])).hides else "kappa"
     yield f"{name} {value} after {kappa['pairs']} of {kappa['planned_pairs']} pairs"
     if figures["state"] == BROKEN_OFF:
-        yield f"Nobody carries it out. Go on with: tercet run --resume {lab / 'runs' / figures['run']}"
+        command = "rehearse" if figures["kind"] == "rehearsal" else "run"
+        yield f"Nobody carries it out. Go on with: tercet {command} --resume {lab / 'runs' / figures['run']}"
     if figures["muted_until_utc"]:
         yield f"nobody is called before {figures['muted_until_utc']}"
     for one in figures["warnings"]:

@@ -94,7 +94,7 @@ def _known_keys(model: type[BaseModel], path: list[Any]) -> set[str]:
     for part in path:
         below = [annotation for table in tables for annotation in _annotations(table, part)]
         tables = below or tables
-    return {name for table in tables for name in table.model_fields}
+    return {field.alias or name for table in tables for name, field in table.model_fields.items()}
 
 
 def _annotations(table: type[BaseModel], part: Any) -> Iterator[type[BaseModel]]:

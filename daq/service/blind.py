@@ -10,6 +10,9 @@ from datetime import UTC, datetime
 from pathlib import Path
 from typing import Any
 
+from pydantic import ValidationError
+
+from daq.description.measurement import Hidden
 from daq.errors import DescriptionError, StorageError
 from daq.estimate.blinding import BLINDED, FROZEN, OPEN, REVEALED, Blinding, blind_digest, blind_offset
 from daq.estimate.contrast import order_terms
@@ -103,9 +106,11 @@ def blind(folder: Path, scope: str, halfwidth: str | None, by: str | None) -> Ev
         raise DescriptionError(
             (f"{folder}: only a residual of three slits or more, normalised pairwise, can be blinded.",)
         )
-    halfwidth = halfwidth or _wide_enough(meta)
+    halfwidth = _wide_enough(meta) if halfwidth is None else halfwidth
     if scope != OF_THE_RUN and not SCOPE.fullmatch(scope):
         raise DescriptionError((f"--scope: {scope!r} is no name; use letters, digits, . _ and -.",))
+    if not _is_halfwidth(halfwidth):
+        raise DescriptionError((f"--halfwidth: a number above zero like 0.001, not {halfwidth!r}.",))
     lab = lab_of(folder)
     found = promise(lab, folder.name, int(meta["slits"]), {"scope": scope, "halfwidth": halfwidth})
     keep_promise(folder, found, by or getpass.getuser(), after_counts=True)
@@ -204,6 +209,15 @@ def refuse_hidden(folder: Path, raw: bool, what: str, by: str | None = None) -> 
             remedy="Reveal it first, or say --raw, which is written to its log",
         )
     _log(folder, f"raw {what} while blinded", by)
+
+
+def _is_halfwidth(text: str) -> bool:
+    """Return whether a text is the half width of an offset, as a description may give it."""
+    try:
+        Hidden(halfwidth=text)
+    except ValidationError:
+        return False
+    return True
 
 
 def _wide_enough(meta: Mapping[str, Any]) -> str:

@@ -6,10 +6,12 @@ import json
 import shutil
 import subprocess
 import sys
+from typing import Any
 
 import pytest
 
 from daq.cli import main
+from daq.cli.watch import BROKEN_OFF, _status_lines
 from tests.examples import CONFIGS
 
 
@@ -132,3 +134,34 @@ def test_every_command_has_help_with_an_example(command, capsys):
     assert stopped.value.code == 0
     assert f"example: tercet {command}" in text
     assert "--json" in text
+
+
+def test_a_rehearsal_and_a_real_run_never_go_on_with_each_others_devices(tmp_path, capsys, monkeypatch):
+    for theirs, other, clock in (("rehearse", "run", "virtual"), ("run", "rehearse", "real")):
+        monkeypatch.setattr("daq.cli.night.read_meta", lambda folder, clock=clock: {"clock": clock})
+
+        status, text = said(capsys, other, "--resume", str(tmp_path / "runs" / "night"))
+
+        assert status == 2
+        assert f"Use `tercet {theirs} --resume`." in text
+
+
+def test_status_names_the_command_that_goes_on_with_a_broken_off_run(tmp_path):
+    for kind, command in (("rehearsal", "rehearse"), ("run", "run")):
+        figures: dict[str, Any] = {
+            "run": "night",
+            "kind": kind,
+            "state": BROKEN_OFF,
+            "visit": None,
+            "age_s": 1.0,
+            "kappa": {"value": 0.0, "se": None, "pairs": 0, "planned_pairs": 3},
+            "blinding": "open",
+            "ended": None,
+            "muted_until_utc": None,
+            "warnings": [],
+            "ends_utc": None,
+            "holding": None,
+            "in_doubt": None,
+        }
+
+        assert any(f"tercet {command} --resume" in line for line in _status_lines(figures, tmp_path))

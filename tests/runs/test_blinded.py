@@ -392,6 +392,14 @@ def test_a_night_of_the_same_campaign_shares_the_offset_until_it_is_frozen(run, 
     assert "is frozen already" in capsys.readouterr().err
 
 
+def test_a_half_width_that_is_no_number_above_zero_is_refused_in_a_sentence(tmp_path, capsys):
+    run = rehearsed(tmp_path)
+    for halfwidth in ("abc", "0", "nan", ""):
+        assert main(["blind", str(run), f"--halfwidth={halfwidth}"]) == 2
+
+        assert f"--halfwidth: a number above zero like 0.001, not {halfwidth!r}." in capsys.readouterr().err
+
+
 def test_an_analysis_that_changed_after_it_was_frozen_is_not_revealed(run, capsys):
     answer(capsys, "blind", str(run), "--freeze")
     root = run / "run.zarr" / "zarr.json"

@@ -21,6 +21,13 @@ def test_an_unknown_key_is_refused_with_the_nearest_known_one():
     assert problem == "measurement.toml, itinerary.dwel_s: unknown key. Did you mean 'dwell_s'?"
 
 
+def test_the_known_keys_are_named_as_they_are_written():
+    (problem,) = problems_of(changed(measurement_table(), xyzzy=1), "measurement")
+
+    assert ", schema, " in problem
+    assert "schema_" not in problem
+
+
 def test_three_mistakes_in_a_rig_file_give_three_sentences():
     table = changed(rig_table(), detector__axs="detector", axes__mask__limits_mm=[0.0, 15.0])
     table["mask"]["openings"]["A"]["at_mm"] = 4.0
