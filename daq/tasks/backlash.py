@@ -8,6 +8,7 @@ from __future__ import annotations
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from math import sqrt
+from typing import Any
 
 import numpy as np
 from scipy.special import ndtri
@@ -101,51 +102,88 @@ class _Flank:
     counting_var: float  # of a place, by counting alone [mm^2]
 
 
+@dataclass(frozen=True, slots=True)
+class _Found:
+    """What all flanks say together: play and chance, the play by window, the margin that is there."""
+
+    play_mm: float
+    play_se_mm: float
+    chance_mm: float
+    by_window_mm: Mapping[str, tuple[float, float]]  # with standard errors
+    margin_mm: float
+    encoder: Seen
+
+    @property
+    def wanted_mm(self) -> float:
+        """What moves from both sides want of the margin."""
+        return abs(self.play_mm) / 2 + REPEATABILITY * self.chance_mm
+
+    @property
+    def both(self) -> bool:
+        """Whether moves from both sides may be allowed."""
+        return self.wanted_mm <= self.margin_mm
+
+    @property
+    def take_up_mm(self) -> float:
+        """How far to go beyond a place and come back, where one side is allowed."""
+        return 0.0 if self.both else 2 * abs(self.play_mm) + 5 * self.chance_mm
+
+
 def _fit(setting: Setting, taken: Sequence[Taken]) -> Outcome:
     flanks = {name: _flank(setting, taken, name) for name in _flanks(setting)}
-    found = {name: reversal(one.moved, one.off_mm) for name, one in flanks.items()}
-    play = float(np.mean([one[0] for one in found.values()]))
-    play_se = sqrt(sum(one[1] ** 2 for one in found.values())) / len(found)
-    counting_var = float(np.mean([one.counting_var for one in flanks.values()]))
-    chance = sqrt(max(float(np.mean([one[2] ** 2 for one in found.values()])) - counting_var, 0.0))
-    margin = min(float(one) for one in setting.earlier["register"]["margin_mm"].values())
-    wanted = abs(play) / 2 + REPEATABILITY * chance
-    both = wanted <= margin
-    take_up = 0.0 if both else 2 * abs(play) + 5 * chance
-    encoder = seen_by(
-        [one.encoder_mm for one in flanks.values()],
-        [one.place_mm for one in flanks.values()],
-        sqrt(counting_var),
-    )
-    how = (
-        "moves from both sides are allowed"
-        if both
-        else f"approach from one side, {1e3 * take_up:.0f} um of take-up"
-    )
+    found = _together(setting, flanks)
+    values, se = _values(found)
     return Outcome(
-        values={
-            "play_mm": play,
-            "repeat_mm": chance,
-            "by_window_mm": {name: one[0] for name, one in found.items()},
-            "wanted_mm": wanted,
-            "margin_mm": margin,
-            "take_up_mm": take_up,
-            "encoder_slope": encoder.slope,
-            "encoder_left_mm": encoder.left_mm,
-        },
-        se={
-            "play_mm": play_se,
-            "by_window_mm": {name: one[1] for name, one in found.items()},
-            "encoder_slope": encoder.se,
-        },
-        verdict=worst("pass" if both else "fail", "pass" if encoder.scaled else "doubtful"),
-        sentence=(
-            f"Moves up and down end {1e3 * play:.1f} +- {1e3 * play_se:.1f} um apart and scatter by "
-            f"{1e3 * chance:.1f} um; {1e3 * wanted:.0f} um of {1e3 * margin:.0f} of margin are wanted: "
-            f"{how}; {encoder.said}."
-        ),
+        values=values,
+        se=se,
+        verdict=worst("pass" if found.both else "fail", "pass" if found.encoder.scaled else "doubtful"),
+        sentence=_sentence(found),
         model="offset, reversal and steady creep",
-        panels=_panels(flanks, play, encoder),
+        panels=_panels(flanks, found.play_mm, found.encoder),
+    )
+
+
+def _together(setting: Setting, flanks: Mapping[str, _Flank]) -> _Found:
+    found = {name: reversal(one.moved, one.off_mm) for name, one in flanks.items()}
+    counting_var = float(np.mean([one.counting_var for one in flanks.values()]))
+    scatter_var = float(np.mean([one[2] ** 2 for one in found.values()]))
+    return _Found(
+        play_mm=float(np.mean([one[0] for one in found.values()])),
+        play_se_mm=sqrt(sum(one[1] ** 2 for one in found.values())) / len(found),
+        chance_mm=sqrt(max(scatter_var - counting_var, 0.0)),
+        by_window_mm={name: one[:2] for name, one in found.items()},
+        margin_mm=min(float(one) for one in setting.earlier["register"]["margin_mm"].values()),
+        encoder=seen_by(
+            [one.encoder_mm for one in flanks.values()],
+            [one.place_mm for one in flanks.values()],
+            sqrt(counting_var),
+        ),
+    )
+
+
+def _values(found: _Found) -> tuple[dict[str, Any], dict[str, Any]]:
+    values = {
+        "play_mm": found.play_mm,
+        "repeat_mm": found.chance_mm,
+        "by_window_mm": {name: play for name, (play, _) in found.by_window_mm.items()},
+        "wanted_mm": found.wanted_mm,
+        "margin_mm": found.margin_mm,
+        "take_up_mm": found.take_up_mm,
+        "encoder_slope": found.encoder.slope,
+        "encoder_left_mm": found.encoder.left_mm,
+    }
+    by_window_se = {name: play_se for name, (_, play_se) in found.by_window_mm.items()}
+    se = {"play_mm": found.play_se_mm, "by_window_mm": by_window_se, "encoder_slope": found.encoder.se}
+    return values, se
+
+
+def _sentence(found: _Found) -> str:
+    one_side = f"approach from one side, {1e3 * found.take_up_mm:.0f} um of take-up"
+    how = "moves from both sides are allowed" if found.both else one_side
+    return (
+        f"Moves up and down end {1e3 * found.play_mm:.1f} +- {1e3 * found.play_se_mm:.1f} um apart and "
+        f"scatter by {1e3 * found.chance_mm:.1f} um; {1e3 * found.wanted_mm:.0f} um of "
+        f"{1e3 * found.margin_mm:.0f} of margin are wanted: {how}; {found.encoder.said}."
     )
 
 

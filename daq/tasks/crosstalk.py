@@ -9,6 +9,7 @@ from __future__ import annotations
 from collections.abc import Sequence
 from dataclasses import dataclass
 from math import sqrt
+from typing import Any
 
 import numpy as np
 from scipy.stats import f as f_distribution
@@ -165,46 +166,85 @@ def _memory(setting: Setting, taken: Sequence[Taken]) -> Memory:
     return memory(np.maximum(rate * live_s, 0.5), middle_s, before)
 
 
+@dataclass(frozen=True, slots=True)
+class _Found:
+    """The memory and what it does to kappa, and the light of slits alone far out, by end of travel (2, N)."""
+
+    memory: Memory
+    shift: float
+    shift_se: float
+    over_hz: FloatArray
+    over_se_hz: FloatArray
+    masks: list[str]
+    alone: list[str]
+
+    @property
+    def signs(self) -> dict[str, float]:
+        """By how many standard errors each is off."""
+        return {
+            "the memory": abs(self.memory.share) / self.memory.se,
+            "the direction": float(norm.isf(self.memory.p / 2)),
+            "the light far out": float(np.max(np.abs(self.over_hz / self.over_se_hz))),
+        }
+
+
 def _fit(setting: Setting, taken: Sequence[Taken]) -> Outcome:
-    found, (over, over_se) = _memory(setting, taken), leaks(setting, taken)
-    per = setting.yardstick.per_memory
-    shift, shift_se = found.share * per, abs(found.se * per)
-    signs = {
-        "the memory": abs(found.share) / found.se,
-        "the direction": float(norm.isf(found.p / 2)),
-        "the light far out": float(np.max(np.abs(over / over_se))),
-    }
-    masks = [openings.name(mask) for mask in setting.rig.opening_masks]
-    alone = [openings.name(mask) for mask in _alone(setting)]
-    most = int(np.argmax(np.abs(found.direction / found.direction_se)))
-    end, slit = np.unravel_index(int(np.argmax(np.abs(over / over_se))), over.shape)
+    found = _found(setting, taken)
+    values, se = _values(setting, found)
+    moves = _moves_kappa(found.shift, found.shift_se, setting.yardstick.allowed)
     return Outcome(
-        values={
-            "memory": found.share,
-            "kappa_shift": shift,
-            "direction": dict(zip(masks, found.direction.tolist(), strict=True)),
-            "direction_p": found.p,
-            "far_hz": {name: over[:, at].tolist() for at, name in enumerate(alone)},
-            "far_mm": list(_ends_mm(setting)),
-        },
-        se={
-            "memory": found.se,
-            "kappa_shift": shift_se,
-            "direction": dict(zip(masks, found.direction_se.tolist(), strict=True)),
-            "far_hz": {name: over_se[:, at].tolist() for at, name in enumerate(alone)},
-        },
-        verdict=worst(_moves_kappa(shift, shift_se, setting.yardstick.allowed), _odd(signs)),
-        sentence=(
-            f"A visit sees {1e4 * found.share:+.1f} +- {1e4 * found.se:.1f} in 1e4 of the one before, which "
-            f"moves kappa by {shift:+.1e} +- {shift_se:.1e} ({setting.yardstick.allowed:.1e} allowed); "
-            f"{masks[most]} is off most there and back (p = {found.p:.2g} for all); of the slits alone, far "
-            f"out, {alone[slit]} is off most, {over[end, slit]:+.2g} +- {over_se[end, slit]:.2g} a "
-            f"second{_noted(signs)}."
-        ),
+        values=values,
+        se=se,
+        verdict=worst(moves, _odd(found.signs)),
+        sentence=_sentence(setting, found),
         model="shares of stands there and back, a share of the visit before",
-        panels=_panels(found, masks, over, over_se, alone),
-        chi2=found.chi2,
-        dof=found.dof,
+        panels=_panels(found),
+        chi2=found.memory.chi2,
+        dof=found.memory.dof,
+    )
+
+
+def _found(setting: Setting, taken: Sequence[Taken]) -> _Found:
+    seen, per = _memory(setting, taken), setting.yardstick.per_memory
+    return _Found(
+        seen,
+        seen.share * per,
+        abs(seen.se * per),
+        *leaks(setting, taken),
+        [openings.name(mask) for mask in setting.rig.opening_masks],
+        [openings.name(mask) for mask in _alone(setting)],
+    )
+
+
+def _values(setting: Setting, found: _Found) -> tuple[dict[str, Any], dict[str, Any]]:
+    seen = found.memory
+    values = {
+        "memory": seen.share,
+        "kappa_shift": found.shift,
+        "direction": dict(zip(found.masks, seen.direction.tolist(), strict=True)),
+        "direction_p": seen.p,
+        "far_hz": dict(zip(found.alone, found.over_hz.T.tolist(), strict=True)),
+        "far_mm": list(_ends_mm(setting)),
+    }
+    se = {
+        "memory": seen.se,
+        "kappa_shift": found.shift_se,
+        "direction": dict(zip(found.masks, seen.direction_se.tolist(), strict=True)),
+        "far_hz": dict(zip(found.alone, found.over_se_hz.T.tolist(), strict=True)),
+    }
+    return values, se
+
+
+def _sentence(setting: Setting, found: _Found) -> str:
+    seen, over, over_se = found.memory, found.over_hz, found.over_se_hz
+    most = int(np.argmax(np.abs(seen.direction / seen.direction_se)))
+    end, slit = np.unravel_index(int(np.argmax(np.abs(over / over_se))), over.shape)
+    return (
+        f"A visit sees {1e4 * seen.share:+.1f} +- {1e4 * seen.se:.1f} in 1e4 of the one before, which moves "
+        f"kappa by {found.shift:+.1e} +- {found.shift_se:.1e} ({setting.yardstick.allowed:.1e} allowed); "
+        f"{found.masks[most]} is off most there and back (p = {seen.p:.2g} for all); of the slits alone, far "
+        f"out, {found.alone[slit]} is off most, {over[end, slit]:+.2g} +- {over_se[end, slit]:.2g} a "
+        f"second{_noted(found.signs)}."
     )
 
 
@@ -222,12 +262,11 @@ def _noted(signs: dict[str, float]) -> str:
     return f"; look at {' and '.join(odd)}" if odd else ""
 
 
-def _panels(
-    found: Memory, masks: list[str], over: FloatArray, over_se: FloatArray, alone: list[str]
-) -> tuple[Panel, ...]:
-    at, slits = np.arange(float(len(masks))), np.arange(float(len(alone)))
+def _panels(found: _Found) -> tuple[Panel, ...]:
+    at, slits = np.arange(float(len(found.masks))), np.arange(float(len(found.alone)))
+    direction, direction_se = 1e4 * found.memory.direction, 1e4 * found.memory.direction_se
     ends = [
-        Curve(slits + 0.1 * end, over[end], f"{word} end of travel", over_se[end])
+        Curve(slits + 0.1 * end, found.over_hz[end], f"{word} end of travel", found.over_se_hz[end])
         for end, word in enumerate(("lower", "upper"))
     ]
     return (
@@ -235,15 +274,15 @@ def _panels(
             "Openings there less back, the memory taken out",
             "opening",
             "log, in 1e4",
-            (Curve(at, 1e4 * found.direction, "measured", 1e4 * found.direction_se), level(at, 0.0, "alike")),
-            names=masks,
+            (Curve(at, direction, "measured", direction_se), level(at, 0.0, "alike")),
+            names=found.masks,
         ),
         Panel(
             "Slits alone far out, against the described light and their mean",
             "slit alone",
             "counts a second",
             (*ends, level(slits, 0.0, "as described")),
-            names=alone,
+            names=found.alone,
         ),
     )
 

@@ -5,7 +5,7 @@ A check and an alarm reference: the night subtracts its own visits at `none`, ne
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from math import sqrt
 
 import numpy as np
@@ -29,6 +29,8 @@ from daq.tasks.turns import light_room, told_once
 DWELL_S, ROUNDS, PLACES, ROOM_ROUNDS = 10.0, 5, 5, 2
 ONE_SIDED_95, ONE_IN_TWENTY = 1.645, 0.05  # of a normal distribution; what it leaves above
 CLOSED, DARK, NIGHT, LIT = "closed", "dark", "room at night", "room lit"
+
+Figures = dict[str, float | None]  # by name; None for what this rig cannot tell
 
 
 def decision_and_limit(dark_hz: float, dark_s: float, closed_s: float) -> tuple[float, float]:
@@ -78,31 +80,18 @@ def _range_mm(setting: Setting) -> tuple[float, float]:
 def _fit(setting: Setting, taken: Sequence[Taken]) -> Outcome:
     counts = {role: _counts(taken, role) for role in (CLOSED, DARK)}
     room = {role: _counts(taken, role) for role in (NIGHT, LIT)}
-    closed = counts[CLOSED]
-    closed_hz, closed_se = _rate(closed)
-    chi2, dof = _even(closed)
-    values: dict[str, float | None] = {"closed_hz": closed_hz, "dark_hz": None, "leak_hz": None}
-    se: dict[str, float | None] = {"closed_hz": closed_se, "dark_hz": None, "leak_hz": None}
-    if len(counts[DARK]):
-        dark_hz, dark_se = _rate(counts[DARK])
-        limits = decision_and_limit(dark_hz, counts[DARK][:, 1].sum(), closed[:, 1].sum())
-        more, more_dof = _even(counts[DARK])
-        chi2, dof = chi2 + more, dof + more_dof
-        values |= {"dark_hz": dark_hz, "leak_hz": closed_hz - dark_hz}
-        values |= {"decision_hz": limits[0], "detection_limit_hz": limits[1]}
-        values |= {"leak_p": _chance(closed, counts[DARK])}
-        se |= {"dark_hz": dark_se, "leak_hz": sqrt(closed_se**2 + dark_se**2)}
+    values, se = _figures(counts)
+    chi2, dof = _even([table for table in counts.values() if len(table)])
     verdict = fits(chi2, dof)
     even = "even over place and time" if verdict == "pass" else "not even over place and time: look for light"
-    apart = _apart(values, se, setting.shutter)
-    lit = _lit(taken, values, se)
+    apart, lit = _apart(values, setting.shutter), _lit(room, values, se)
     return Outcome(
         values=values,
         se=se,
         verdict=verdict,
         sentence=(
-            f"With every slit shut the detector counts {closed_hz:.4g} +- {closed_se:.2g} a second{apart}; "
-            f"{even}{lit}."
+            f"With every slit shut the detector counts {values['closed_hz']:.4g} +- {se['closed_hz']:.2g} a "
+            f"second{apart}; {even}{lit}."
         ),
         model="even rate",
         panels=(
@@ -114,16 +103,31 @@ def _fit(setting: Setting, taken: Sequence[Taken]) -> Outcome:
     )
 
 
-def _apart(values: dict[str, float | None], se: dict[str, float | None], shutter: bool) -> str:
+def _figures(counts: Mapping[str, FloatArray]) -> tuple[Figures, Figures]:
+    """Return what is counted behind shut slits and in the dark, with errors; without a shutter the first."""
+    closed_hz, closed_se = _rate(counts[CLOSED])
+    values: Figures = {"closed_hz": closed_hz, "dark_hz": None, "leak_hz": None}
+    se: Figures = {"closed_hz": closed_se, "dark_hz": None, "leak_hz": None}
+    if len(counts[DARK]):
+        dark_hz, dark_se = _rate(counts[DARK])
+        limits = decision_and_limit(dark_hz, counts[DARK][:, 1].sum(), counts[CLOSED][:, 1].sum())
+        values |= {"dark_hz": dark_hz, "leak_hz": closed_hz - dark_hz}
+        values |= {"decision_hz": limits[0], "detection_limit_hz": limits[1]}
+        values |= {"leak_p": _chance(counts[CLOSED], counts[DARK])}
+        se |= {"dark_hz": dark_se, "leak_hz": sqrt(closed_se**2 + dark_se**2)}
+    return values, se
+
+
+def _apart(values: Figures, shutter: bool) -> str:
     if not shutter:
         return " (dark and light together: the rig has no shutter)"
     seen = "no more" if values["leak_p"] is None or values["leak_p"] > ONE_IN_TWENTY else "more"
     return f", {values['dark_hz']:.4g} with the beam shut, so {seen} than dark"
 
 
-def _lit(taken: Sequence[Taken], values: dict[str, float | None], se: dict[str, float | None]) -> str:
+def _lit(room: Mapping[str, FloatArray], values: Figures, se: Figures) -> str:
     """Add what the light of the room adds to values and errors, and return it in words."""
-    night, lit = (_counts(taken, role) for role in (NIGHT, LIT))
+    night, lit = room[NIGHT], room[LIT]
     if not len(night) or not len(lit):
         return ""
     (night_hz, night_se), (lit_hz, lit_se) = _rate(night), _rate(lit)
@@ -151,8 +155,13 @@ def _rate(counts: FloatArray) -> tuple[float, float]:
     return float(total / live_s), float(sqrt(max(total, 1.0)) / live_s)
 
 
-def _even(counts: FloatArray) -> tuple[float, int]:
-    """Return chi2 and degrees of freedom of counts against one rate."""
+def _even(tables: Sequence[FloatArray]) -> tuple[float, int]:
+    """Return chi2 and degrees of freedom of tables of counts, each against a rate of its own."""
+    found = [_against_one_rate(table) for table in tables]
+    return sum(chi2 for chi2, _ in found), sum(dof for _, dof in found)
+
+
+def _against_one_rate(counts: FloatArray) -> tuple[float, int]:
     expected = counts[:, 1] * counts[:, 0].sum() / counts[:, 1].sum()
     if not expected.min() > 0:
         return 0.0, 0

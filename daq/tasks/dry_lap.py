@@ -2,8 +2,9 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from itertools import pairwise
+from typing import Any
 
 import numpy as np
 
@@ -35,46 +36,43 @@ def _fit(setting: Setting, taken: Sequence[Taken]) -> Outcome:
     planned_s, took_s = _moves_s(setting, taken)
     late = took_s - planned_s
     allowed = LATE * planned_s + LATE_S + setting.rig.readout_s
-    slow = int(np.count_nonzero(late > allowed))
-    astray = sum(bool(reading.quality & ASTRAY) for _, reading in taken)
     off = _off_mm(setting, taken)
-    by_axis = ", ".join(
-        f"{axis} {1e3 * float(np.max(np.abs(values))):.1f} um" for axis, values in off.items()
-    )
-    good = not slow and not astray
+    values = {
+        "moves": len(taken),
+        "late_s": float(np.median(late)),
+        "latest_s": float(late.max()),
+        "slow": int(np.count_nonzero(late > allowed)),
+        "astray": sum(bool(reading.quality & ASTRAY) for _, reading in taken),
+        "off_mm": {axis: float(np.max(np.abs(off_mm))) for axis, off_mm in off.items()},
+    }
     return Outcome(
-        values={
-            "moves": len(taken),
-            "late_s": float(np.median(late)),
-            "latest_s": float(late.max()),
-            "slow": slow,
-            "astray": astray,
-            "off_mm": {axis: float(np.max(np.abs(values))) for axis, values in off.items()},
-        },
+        values=values,
         se={},
-        verdict="pass" if good else "fail",
-        sentence=(
-            f"{len(taken)} stops: {astray} off their target (most: {by_axis}), {slow} moves later than 5 % "
-            f"and {LATE_S:g} s beyond the plan and the readout, the latest {late.max():.2f} s."
-        ),
+        verdict="fail" if values["slow"] or values["astray"] else "pass",
+        sentence=_sentence(values),
         model="planned against measured times",
-        panels=(
-            Panel(
-                "Moves",
-                "planned [s]",
-                "measured [s]",
-                (
-                    Curve(planned_s, took_s, "move, readout included"),
-                    Curve(np.sort(planned_s), np.sort(planned_s), "as planned", line=True),
-                ),
-            ),
-            Panel(
-                "Encoder off target",
-                "stop",
-                "[um]",
-                tuple(Curve(np.arange(len(v), dtype=float), 1e3 * v, axis) for axis, v in off.items()),
-            ),
-        ),
+        panels=_panels(planned_s, took_s, off),
+    )
+
+
+def _sentence(values: Mapping[str, Any]) -> str:
+    by_axis = ", ".join(f"{axis} {1e3 * most_mm:.1f} um" for axis, most_mm in values["off_mm"].items())
+    return (
+        f"{values['moves']} stops: {values['astray']} off their target (most: {by_axis}), {values['slow']} "
+        f"moves later than {100 * LATE:g} % and {LATE_S:g} s beyond the plan and the readout, the latest "
+        f"{values['latest_s']:.2f} s."
+    )
+
+
+def _panels(planned_s: FloatArray, took_s: FloatArray, off: Mapping[str, FloatArray]) -> tuple[Panel, ...]:
+    moves = (
+        Curve(planned_s, took_s, "move, readout included"),
+        Curve(np.sort(planned_s), np.sort(planned_s), "as planned", line=True),
+    )
+    encoders = (Curve(np.arange(len(v), dtype=float), 1e3 * v, axis) for axis, v in off.items())
+    return (
+        Panel("Moves", "planned [s]", "measured [s]", moves),
+        Panel("Encoder off target", "stop", "[um]", tuple(encoders)),
     )
 
 

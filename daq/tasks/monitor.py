@@ -6,6 +6,7 @@ Whether it is linear takes attenuators that a person puts in (`[by_hand]` of the
 from __future__ import annotations
 
 from collections.abc import Sequence
+from dataclasses import dataclass
 from math import sqrt
 
 import numpy as np
@@ -65,51 +66,80 @@ def _visits(setting: Setting) -> Sequence[Ask]:
 
 
 def _fit(setting: Setting, taken: Sequence[Taken]) -> Outcome:
-    masks, channel = list(setting.rig.opening_masks), setting.measurement.estimate.monitor_channel
+    channel = setting.measurement.estimate.monitor_channel
     assert channel is not None  # `lacks` has seen to it
     stands = [one for one in taken if one[0].role.isdecimal()]
-    counts = by_stand(setting, stands, lambda reading: max(reading.values[channel], 0.5))
+    seen = _seen(setting, by_stand(setting, stands, lambda reading: max(reading.values[channel], 0.5)))
     levels = bend_of(setting, taken, channel)
+    bend, bend_se = (None, None) if levels is None else (levels[0].share, levels[0].se)
+    return Outcome(
+        values={"by_opening": _named(seen, seen.mean), "exponent": seen.exponent, "p": seen.p, "bend": bend},
+        se={"by_opening": _named(seen, seen.se), "bend": bend_se},
+        verdict="fail" if seen.mask else worst("pass" if seen.known else "doubtful", _straight(levels)),
+        sentence=_sentence(setting, seen, levels),
+        model="mean log by opening within stands",
+        panels=(_panel(seen), *(() if levels is None else (levels[1],))),
+        chi2=seen.chi2,
+        dof=len(seen.names) - 1,
+    )
+
+
+@dataclass(frozen=True, slots=True)
+class _Seen:
+    """What the monitor sees of the mask: mean log by opening, and how improbable that is by chance."""
+
+    names: Sequence[str]
+    mean: FloatArray
+    se: FloatArray
+    chi2: float
+    p: float
+    exponent: float
+    known: bool  # well enough to be used visit by visit
+
+    @property
+    def mask(self) -> bool:
+        """Whether it sees anything of the mask."""
+        return self.p < ODD_P
+
+
+def _seen(setting: Setting, counts: FloatArray) -> _Seen:
+    """Return what counts of the monitor by stand and opening (stands, K) say."""
+    masks = list(setting.rig.opening_masks)
     mean, se = by_opening(np.log(counts))
     chi2 = float(np.sum((mean / se) ** 2) * (len(masks) - 1) / len(masks))
     dof = len(masks) - 1  # told against the mean of a stand: one less
-    p = float(f_distribution.sf(chi2 / dof, dof, (STANDS // 2 - 1) * dof))
-    strength = np.log(counts.sum(axis=1))
-    source = max(float(np.var(np.diff(strength)) / 2 - np.mean(1 / counts.sum(axis=1))), 0.0)
-    power = exponent(source, float(np.mean(1 / counts.sum(axis=1))))
-    known = float(se.max()) <= setting.yardstick.rate_error
-    named = [openings.name(mask) for mask in masks]
-    largest = int(np.argmax(np.abs(mean)))
-    how = (
-        "so divide by the mean of a stand, not visit by visit"
-        if not known
-        else "so it may be used visit by visit"
-    )
-    return Outcome(
-        values={"by_opening": dict(zip(named, mean.tolist(), strict=True)), "exponent": power, "p": p}
-        | {"bend": None if levels is None else levels[0].share},
-        se={"by_opening": dict(zip(named, se.tolist(), strict=True))}
-        | {"bend": None if levels is None else levels[0].se},
-        verdict="fail" if p < ODD_P else worst("pass" if known else "doubtful", _straight(levels)),
-        sentence=(
-            f"The monitor sees {'something' if p < ODD_P else 'nothing'} of the mask (p = {p:.2g}; most at "
-            f"{named[largest]}, {1e4 * mean[largest]:+.1f} +- {1e4 * se[largest]:.1f} in 1e4; "
-            f"{1e4 * setting.yardstick.rate_error:.1f} wanted): {how}; {_bent(levels)}."
-        ),
-        model="mean log by opening within stands",
-        panels=(
-            Panel(
-                "The monitor by opening, against its stand",
-                "opening",
-                "log, in 1e4",
-                (Curve(np.arange(len(masks), dtype=float), 1e4 * mean, "monitor", 1e4 * se),),
-                names=named,
-            ),
-            *(() if levels is None else (levels[1],)),
-        ),
+    strength, counting_var = np.log(counts.sum(axis=1)), float(np.mean(1 / counts.sum(axis=1)))
+    source_var = max(float(np.var(np.diff(strength)) / 2 - counting_var), 0.0)
+    return _Seen(
+        names=[openings.name(mask) for mask in masks],
+        mean=mean,
+        se=se,
         chi2=chi2,
-        dof=dof,
+        p=float(f_distribution.sf(chi2 / dof, dof, (STANDS // 2 - 1) * dof)),
+        exponent=exponent(source_var, counting_var),
+        known=float(se.max()) <= setting.yardstick.rate_error,
     )
+
+
+def _named(seen: _Seen, values: FloatArray) -> dict[str, float]:
+    return dict(zip(seen.names, values.tolist(), strict=True))
+
+
+def _sentence(setting: Setting, seen: _Seen, levels: tuple[Bend, Panel] | None) -> str:
+    most = int(np.argmax(np.abs(seen.mean)))
+    by_stand = "so divide by the mean of a stand, not visit by visit"
+    how = "so it may be used visit by visit" if seen.known else by_stand
+    return (
+        f"The monitor sees {'something' if seen.mask else 'nothing'} of the mask (p = {seen.p:.2g}; most at "
+        f"{seen.names[most]}, {1e4 * seen.mean[most]:+.1f} +- {1e4 * seen.se[most]:.1f} in 1e4; "
+        f"{1e4 * setting.yardstick.rate_error:.1f} wanted): {how}; {_bent(levels)}."
+    )
+
+
+def _panel(seen: _Seen) -> Panel:
+    points = Curve(np.arange(len(seen.names), dtype=float), 1e4 * seen.mean, "monitor", 1e4 * seen.se)
+    title = "The monitor by opening, against its stand"
+    return Panel(title, "opening", "log, in 1e4", (points,), names=seen.names)
 
 
 def _straight(levels: tuple[Bend, Panel] | None) -> Verdict:

@@ -7,7 +7,9 @@ measured with much light and with little.
 from __future__ import annotations
 
 from collections.abc import Sequence
+from dataclasses import dataclass
 from math import sqrt
+from typing import Any
 
 import numpy as np
 
@@ -37,6 +39,7 @@ DWELL_S = {BRIGHT: 5.0, DIM: 10.0, DARK: 5.0}
 STEEP = 0.1  # of the rate over the whole dial: more is no plateau
 WANDER = 1e-3  # of the rate: what the dial's own wander may make
 SEEN = 5.0  # errors: with less light above dark there is none
+APART = 3.0  # errors: slopes of much light and of little that lie farther apart differ
 
 
 def _lacks(setting: Setting) -> Sequence[str]:
@@ -67,53 +70,89 @@ def _visits(setting: Setting) -> Sequence[Ask]:
     return told_once(found)
 
 
+@dataclass(frozen=True, slots=True)
+class _Found:
+    """The plateaus of much light and of little, the points they were fitted to, and the dark."""
+
+    at: FloatArray
+    logs: dict[str, tuple[FloatArray, FloatArray]]
+    plateaus: dict[str, Plateau]
+    dark: tuple[FloatArray, FloatArray]
+
+    @property
+    def apart(self) -> float:
+        """By how many standard errors the slope of much light lies above that of little."""
+        bright, dim = self.plateaus[BRIGHT], self.plateaus[DIM]
+        return (bright.slope - dim.slope) / sqrt(bright.se**2 + dim.se**2)
+
+    @property
+    def begins(self) -> float | None:
+        """Where the later of both begins, None where both are there from the lowest setting on."""
+        return max((one.begins for one in self.plateaus.values() if one.begins is not None), default=None)
+
+    def choose(self, dial: Dial) -> float:
+        """Return the setting that is advised: the lower third of the plateau."""
+        start = dial.low if self.begins is None else self.begins
+        return start + (dial.high - start) / 3
+
+    def dark_hz(self, setting: float) -> float:
+        """Return the dark rate about a setting."""
+        return float(np.mean(self.dark[0][np.argsort(np.abs(self.at - setting))[:2]]))
+
+
 def _fit(setting: Setting, taken: Sequence[Taken]) -> Outcome:
-    dial = _dial(setting)
-    at = _settings(taken)
-    dark = _rates(setting, taken, DARK)
-    found, logs = {}, {}
-    for role in (BRIGHT, DIM):
-        rate, se = _rates(setting, taken, role)
-        if not np.max((rate - dark[0]) / np.hypot(se, dark[1])) > SEEN:
-            raise hopeless(
-                "plateau",
-                "no more is counted with light than without, at any setting",
-                "See that light falls on the detector, then repeat; set the dial back first",
-            )
-        light = np.maximum(rate - dark[0], se)
-        logs[role] = np.log(light), np.sqrt(se**2 + dark[1] ** 2) / light
-        found[role] = plateau(at, *logs[role], np.arange(len(at), dtype=float))
-    bright, dim = found[BRIGHT], found[DIM]
-    apart = (bright.slope - dim.slope) / sqrt(bright.se**2 + dim.se**2)
-    begins = max((one.begins for one in found.values() if one.begins is not None), default=None)
-    start = dial.low if begins is None else begins
-    choose = start + (dial.high - start) / 3
-    near_hz = float(np.mean(dark[0][np.argsort(np.abs(at - choose))[:2]]))
-    what = "with the beam shut" if setting.shutter else "behind shut slits"
-    verdict = worst(_stands(bright, begins, dial), "pass" if abs(apart) <= 3 else "doubtful")
+    dial, found = _dial(setting), _found(setting, taken)
+    bright, dim = found.plateaus[BRIGHT], found.plateaus[DIM]
+    alike: Verdict = "pass" if abs(found.apart) <= APART else "doubtful"
     return Outcome(
-        values={
-            "unit": dial.unit,
-            "settings": at.tolist(),
-            "bright_hz": _rates(setting, taken, BRIGHT)[0].tolist(),
-            "dim_hz": _rates(setting, taken, DIM)[0].tolist(),
-            "dark_hz": dark[0].tolist(),
-            "slope": bright.slope,
-            "slope_dim": dim.slope,
-            "apart": apart,
-            "begins": begins,
-            "choose": choose,
-            "now": dial.now,
-            "counts": float(sum(reading.values[0] for _, reading in taken)),
-        },
+        values=_values(setting, taken, dial, found),
         se={"slope": bright.se, "slope_dim": dim.se},
-        verdict=verdict,
-        sentence=_sentence(dial, bright, dim, apart, begins, choose, f"{near_hz:.3g} a second {what}"),
+        verdict=worst(_stands(bright, found.begins, dial), alike),
+        sentence=_sentence(dial, found, "with the beam shut" if setting.shutter else "behind shut slits"),
         model="a line over the middle third above the knee",
-        panels=_panels(dial, at, logs, found, dark, begins),
+        panels=_panels(dial, found),
         chi2=bright.chi2 + dim.chi2,
         dof=bright.dof + dim.dof,
     )
+
+
+def _found(setting: Setting, taken: Sequence[Taken]) -> _Found:
+    at, dark = _settings(taken), _rates(setting, taken, DARK)
+    logs = {role: _log_light(*_rates(setting, taken, role), dark) for role in (BRIGHT, DIM)}
+    number = np.arange(len(at), dtype=float)
+    return _Found(at, logs, {role: plateau(at, *log, number) for role, log in logs.items()}, dark)
+
+
+def _log_light(
+    rate_hz: FloatArray, se_hz: FloatArray, dark: tuple[FloatArray, FloatArray]
+) -> tuple[FloatArray, FloatArray]:
+    """Return the logarithm of rates above the dark ones, and its errors; refuses where there is no light."""
+    dark_hz, dark_se_hz = dark
+    if not np.max((rate_hz - dark_hz) / np.hypot(se_hz, dark_se_hz)) > SEEN:
+        raise hopeless(
+            "plateau",
+            "no more is counted with light than without, at any setting",
+            "See that light falls on the detector, then repeat; set the dial back first",
+        )
+    light_hz = np.maximum(rate_hz - dark_hz, se_hz)
+    return np.log(light_hz), np.sqrt(se_hz**2 + dark_se_hz**2) / light_hz
+
+
+def _values(setting: Setting, taken: Sequence[Taken], dial: Dial, found: _Found) -> dict[str, Any]:
+    return {
+        "unit": dial.unit,
+        "settings": found.at.tolist(),
+        "bright_hz": _rates(setting, taken, BRIGHT)[0].tolist(),
+        "dim_hz": _rates(setting, taken, DIM)[0].tolist(),
+        "dark_hz": found.dark[0].tolist(),
+        "slope": found.plateaus[BRIGHT].slope,
+        "slope_dim": found.plateaus[DIM].slope,
+        "apart": found.apart,
+        "begins": found.begins,
+        "choose": found.choose(dial),
+        "now": dial.now,
+        "counts": float(sum(reading.values[0] for _, reading in taken)),
+    }
 
 
 def _settings(taken: Sequence[Taken]) -> FloatArray:
@@ -136,65 +175,62 @@ def _rates(setting: Setting, taken: Sequence[Taken], role: str) -> tuple[FloatAr
 
 
 def _stands(found: Plateau, begins: float | None, dial: Dial) -> Verdict:
-    steep = abs(found.slope) * (dial.high - dial.low) > STEEP
-    slipping = begins is not None and dial.now < begins
     wanders = abs(found.slope) * dial.wanders > WANDER
-    return "fail" if steep or slipping else "doubtful" if wanders else "pass"
+    bad = _steep(found, dial) or _slips(begins, dial)
+    return "fail" if bad else "doubtful" if wanders else "pass"
 
 
-def _sentence(
-    dial: Dial,
-    bright: Plateau,
-    dim: Plateau,
-    apart: float,
-    begins: float | None,
-    choose: float,
-    dark: str,
-) -> str:
-    if abs(bright.slope) * (dial.high - dial.low) > STEEP:
+def _steep(found: Plateau, dial: Dial) -> bool:
+    return abs(found.slope) * (dial.high - dial.low) > STEEP
+
+
+def _slips(begins: float | None, dial: Dial) -> bool:
+    return begins is not None and dial.now < begins
+
+
+def _sentence(dial: Dial, found: _Found, without: str) -> str:
+    bright, begins, unit = found.plateaus[BRIGHT], found.begins, dial.unit
+    if _steep(bright, dial):
         return (
-            f"No plateau is seen between {dial.low:g} and {dial.high:g} {dial.unit}: the rate goes on rising "
-            f"by {_by(dial, bright.slope, bright.se)}."
+            f"No plateau is seen between {dial.low:g} and {dial.high:g} {unit}: the rate goes on rising by "
+            f"{_by(dial, bright)}."
         )
     where = f"below {dial.low:g}" if begins is None else f"at {begins:.4g}"
-    slips = begins is not None and dial.now < begins
-    alike = (
-        "as with little light"
-        if abs(apart) <= 3
-        else f"but {_by(dial, dim.slope, dim.se)} with little light: the gain depends on the rate"
-    )
+    stands = "on the slope below" if _slips(begins, dial) else "on"
+    choose = found.choose(dial)
+    dark = f"{found.dark_hz(choose):.3g} a second {without}"
     return (
-        f"The plateau begins {where} {dial.unit} and rises by {_by(dial, bright.slope, bright.se)}, {alike}; "
-        f"{dial.now:g} {dial.unit} stands {'on the slope below' if slips else 'on'} it, and {choose:.4g} "
-        f"{dial.unit} (its lower third, {dark}) is advised; the program sets none."
+        f"The plateau begins {where} {unit} and rises by {_by(dial, bright)}, {_alike(dial, found)}; "
+        f"{dial.now:g} {unit} stands {stands} it, and {choose:.4g} {unit} (its lower third, {dark}) is "
+        f"advised; the program sets none."
     )
 
 
-def _by(dial: Dial, slope: float, se: float) -> str:
+def _alike(dial: Dial, found: _Found) -> str:
+    if abs(found.apart) <= APART:
+        return "as with little light"
+    return f"but {_by(dial, found.plateaus[DIM])} with little light: the gain depends on the rate"
+
+
+def _by(dial: Dial, found: Plateau) -> str:
     many = 100.0 if dial.unit == "V" else 1.0
     unit = f"{many:g} {dial.unit}" if many > 1 else dial.unit
-    return f"{100 * many * slope:.2f} +- {100 * many * se:.2f} % for {unit}"
+    return f"{100 * many * found.slope:.2f} +- {100 * many * found.se:.2f} % for {unit}"
 
 
-def _panels(
-    dial: Dial,
-    at: FloatArray,
-    logs: dict[str, tuple[FloatArray, FloatArray]],
-    found: dict[str, Plateau],
-    dark: tuple[FloatArray, FloatArray],
-    begins: float | None,
-) -> tuple[Panel, ...]:
-    label = f"{dial.what} [{dial.unit}]"
+def _panels(dial: Dial, found: _Found) -> tuple[Panel, ...]:
+    at, label = found.at, f"{dial.what} [{dial.unit}]"
     places = np.linspace(at.min(), at.max(), 50)
-    marks = {"now": dial.now} | ({} if begins is None else {"begins": begins})
-    least = float(at.min()) if begins is None else begins
+    marks = {"now": dial.now} | ({} if found.begins is None else {"begins": found.begins})
+    least = float(at.min()) if found.begins is None else found.begins
     far, close, above = [], [], places >= least
-    for role, (log_rate, se) in logs.items():
-        off, line = (one - found[role].level for one in (log_rate, found[role].line(places)))
+    for role, (log_rate, se) in found.logs.items():
+        one = found.plateaus[role]
+        off, line = log_rate - one.level, one.line(places) - one.level
         far.append(Curve(at, np.exp(off), role, np.exp(off) * se))
         close.append(Curve(at[at >= least], 100 * off[at >= least], role, 100 * se[at >= least]))
         close.append(Curve(places[above], 100 * line[above], f"{role}, line", line=True))
-    behind = (Curve(at, dark[0], DARK, dark[1]),)
+    behind = (Curve(at, found.dark[0], DARK, found.dark[1]),)
     return (
         Panel("Rate above dark", label, "against the plateau", tuple(far), marks),
         Panel("The plateau, close by", label, "off its middle [%]", tuple(close), {"now": dial.now}),

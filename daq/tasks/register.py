@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
 from math import sqrt
+from typing import Any
 
 import numpy as np
 from scipy.stats import norm
@@ -114,50 +116,97 @@ def _scan(setting: Setting, taken: Sequence[Taken], role: str) -> tuple[FloatArr
     return table[:, 0], setting.true_hz(table[:, 1])
 
 
+@dataclass(frozen=True, slots=True)
+class _Found:
+    """Every window as it was fitted in scans up and down, and how far the stage stands off at random."""
+
+    up: dict[str, Edges]
+    down: dict[str, Edges]
+    chance_mm: float
+
+    @property
+    def centre_mm(self) -> dict[str, float]:
+        """The middle of each window, of both ways."""
+        return {name: (one.centre_mm + self.down[name].centre_mm) / 2 for name, one in self.up.items()}
+
+    @property
+    def centre_se_mm(self) -> dict[str, float]:
+        """The standard errors of the middles."""
+        return {
+            name: sqrt(one.centre_se_mm**2 + self.down[name].centre_se_mm ** 2) / 2
+            for name, one in self.up.items()
+        }
+
+    @property
+    def plays_mm(self) -> list[float]:
+        """How far apart moves up and down end, window by window."""
+        return [self.down[name].centre_mm - one.centre_mm for name, one in self.up.items()]
+
+    @property
+    def play_mm(self) -> float:
+        """Their mean."""
+        return float(np.mean(self.plays_mm))
+
+    @property
+    def every(self) -> list[Edges]:
+        """All of them."""
+        return [*self.up.values(), *self.down.values()]
+
+
 def _fit(setting: Setting, taken: Sequence[Taken]) -> Outcome:
+    found = _fitted(setting, taken)
+    aside_mm = abs(found.play_mm) / 2 + REPEATS * found.chance_mm
+    margin_mm = {
+        name: _margin_mm(setting, one, found.down[name], aside_mm)
+        for name, one in found.up.items()
+        if name != KEY
+    }
+    values = _values(setting, found) | {"margin_mm": margin_mm}
+    still = within(found.chance_mm, 0.0, float(np.mean([one.edge_mm for one in found.up.values()])))
+    return Outcome(
+        values=values,
+        se={"centre_mm": found.centre_se_mm, "play_mm": _mean_se(found.plays_mm)},
+        verdict=worst("pass" if min(margin_mm.values()) > 0 else "fail", still),
+        sentence=_sentence(setting, values),
+        model="window with blurred edges, Poisson deviance",
+        panels=_panels(setting, taken, found.up),
+        chi2=sum(one.chi2 for one in found.every),
+        dof=sum(one.dof for one in found.every),
+    )
+
+
+def _fitted(setting: Setting, taken: Sequence[Taken]) -> _Found:
     coarse = _found(setting, taken)
     roles = {f"{role} {name}": name for role in (UP, DOWN) for name in coarse}
     scans = {role: _counts(setting, taken, role) for role in roles}
     starts = {role: _start(scans[role][1], coarse[name]) for role, name in roles.items()}
     found, chance_mm = together(scans, starts)
     up, down = ({name: found[f"{role} {name}"] for name in coarse} for role in (UP, DOWN))
-    centre = {name: (up[name].centre_mm + down[name].centre_mm) / 2 for name in coarse}
-    centre_se = {name: sqrt(up[name].centre_se_mm ** 2 + down[name].centre_se_mm ** 2) / 2 for name in coarse}
-    play = {name: down[name].centre_mm - up[name].centre_mm for name in coarse}
-    play_mm, play_se = float(np.mean(list(play.values()))), _mean_se(list(play.values()))
-    off = {name: centre[name] - at for name, at in drawn_mm(setting).items()}
-    aside_mm = abs(play_mm) / 2 + REPEATS * chance_mm
-    margin = {name: _margin_mm(setting, up[name], down[name], aside_mm) for name in coarse if name != KEY}
-    shift = _shift(setting, up, play_mm, chance_mm)
-    tight = min(margin, key=lambda name: margin[name])
-    chi2 = sum(one.chi2 for one in found.values())
-    dof = sum(one.dof for one in found.values())
-    still = within(chance_mm, 0.0, float(np.mean([one.edge_mm for one in up.values()])))
-    return Outcome(
-        values={
-            "centre_mm": centre,
-            "off_drawing_mm": off,
-            "play_mm": play_mm,
-            "repeat_mm": chance_mm,
-            "margin_mm": margin,
-            "kappa_shift": shift,
-            "position_mm": _bright(setting)[0],
-            "gate_s": FINE_S,
-            "up": plain(up),
-            "down": plain(down),
-        },
-        se={"centre_mm": centre_se, "play_mm": play_se},
-        verdict=worst("pass" if margin[tight] > 0 else "fail", still),
-        sentence=(
-            f"{len(coarse)} windows are as drawn, {1e3 * float(np.mean(list(off.values()))):+.1f} um off "
-            f"altogether; the tightest margin is {1e3 * margin[tight]:.0f} um ({tight}), so clipping moves "
-            f"kappa by {of_allowed(shift, setting.yardstick.allowed)}; moves up and down end "
-            f"{1e3 * play_mm:.1f} um apart, and {1e3 * chance_mm:.1f} um at random."
-        ),
-        model="window with blurred edges, Poisson deviance",
-        panels=_panels(setting, taken, up),
-        chi2=chi2,
-        dof=dof,
+    return _Found(up, down, chance_mm)
+
+
+def _values(setting: Setting, found: _Found) -> dict[str, Any]:
+    return {
+        "centre_mm": found.centre_mm,
+        "off_drawing_mm": {name: found.centre_mm[name] - at for name, at in drawn_mm(setting).items()},
+        "play_mm": found.play_mm,
+        "repeat_mm": found.chance_mm,
+        "kappa_shift": _shift(setting, found.up, found.play_mm, found.chance_mm),
+        "position_mm": _bright(setting)[0],
+        "gate_s": FINE_S,
+        "up": plain(found.up),
+        "down": plain(found.down),
+    }
+
+
+def _sentence(setting: Setting, values: Mapping[str, Any]) -> str:
+    margin_mm, off_mm = values["margin_mm"], list(values["off_drawing_mm"].values())
+    tight = min(margin_mm, key=lambda name: float(margin_mm[name]))
+    return (
+        f"{len(values['centre_mm'])} windows are as drawn, {1e3 * float(np.mean(off_mm)):+.1f} um off "
+        f"altogether; the tightest margin is {1e3 * margin_mm[tight]:.0f} um ({tight}), so clipping moves "
+        f"kappa by {of_allowed(values['kappa_shift'], setting.yardstick.allowed)}; moves up and down end "
+        f"{1e3 * values['play_mm']:.1f} um apart, and {1e3 * values['repeat_mm']:.1f} um at random."
     )
 
 

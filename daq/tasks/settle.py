@@ -5,8 +5,9 @@ Gates follow one another from the moment at which nothing moves any more; no sli
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from scipy.stats import chi2 as chi2_distribution
@@ -168,23 +169,13 @@ def _fit(setting: Setting, taken: Sequence[Taken]) -> Outcome:
     off = {name: one.off(wait_s, dwell_s) for name, one in strokes.items()}
     waits_s = {name: one.wait_s(dwell_s, limit) for name, one in strokes.items()}
     p = apart_p(*(one.counts for one in strokes.values()))
-    same = "long and short moves are alike" if p >= ODD_P else f"long and short moves differ (p = {p:.1g})"
     said = "; ".join(_said(name, strokes[name], *off[name], waits_s[name]) for name in strokes)
     return Outcome(
-        values={
-            "stroke_mm": {name: one.way_mm for name, one in strokes.items()},
-            "size": {name: one.size for name, one in strokes.items()},
-            "time_s": {name: float(TIMES_S[one.found.best]) for name, one in strokes.items()},
-            "seen": {name: one.seen for name, one in strokes.items()},
-            "off": {name: likely for name, (likely, _) in off.items()},
-            "off_at_most": {name: most for name, (_, most) in off.items()},
-            "wait_s": waits_s,
-            "apart_p": p,
-        },
+        values=_values(strokes, off) | {"wait_s": waits_s, "apart_p": p},
         se={"size": {name: one.se for name, one in strokes.items()}},
         verdict=worst(*(_verdict(likely, most, limit) for likely, most in off.values())),
         sentence=(
-            f"{said[0].upper()}{said[1:]}; {same}. The wait is {wait_s:g} s, and a visit may be off "
+            f"{said[0].upper()}{said[1:]}; {_alike(p)}. The wait is {wait_s:g} s, and a visit may be off "
             f"by {limit:.1e}."
         ),
         model="one exponential, its time on a grid",
@@ -192,6 +183,21 @@ def _fit(setting: Setting, taken: Sequence[Taken]) -> Outcome:
         chi2=float(sum(one.found.chi2[one.found.best] for one in strokes.values())),
         dof=2 * (GATES - 3),
     )
+
+
+def _values(strokes: Mapping[str, Stroke], off: Mapping[str, tuple[float, float]]) -> dict[str, Any]:
+    return {
+        "stroke_mm": {name: one.way_mm for name, one in strokes.items()},
+        "size": {name: one.size for name, one in strokes.items()},
+        "time_s": {name: float(TIMES_S[one.found.best]) for name, one in strokes.items()},
+        "seen": {name: one.seen for name, one in strokes.items()},
+        "off": {name: likely for name, (likely, _) in off.items()},
+        "off_at_most": {name: most for name, (_, most) in off.items()},
+    }
+
+
+def _alike(p: float) -> str:
+    return "long and short moves are alike" if p >= ODD_P else f"long and short moves differ (p = {p:.1g})"
 
 
 def _said(name: str, stroke: Stroke, likely: float, most: float, wait_s: float) -> str:
