@@ -38,8 +38,8 @@ def slit_loads(
 
     Notes
     -----
-    First order, at the described geometry. A slit that all openings share has no load: Born's rule holds for
-    whatever slits there are, as long as they are the same.
+    First order, at the described geometry. A slit that all openings share has no load: expected rates
+    have a kappa of zero for whatever slits there are, as long as they are the same.
     """
     seen = np.ones(len(plan.positions_mm), bool)
 

@@ -74,7 +74,7 @@ def test_a_monitor_that_bends_is_found_within_its_errors() -> None:
     # 40 ns, which the readings do not have, takes 1e6 / 5 s of them to be 0.8 % more than they are
     pulls = [(one.values["bend"] - 0.010 + 0.008) / one.se["bend"] for one in found]
     assert abs(np.mean(pulls)) < 4 / np.sqrt(40) + 0.1
-    assert 0.6 < np.std(pulls) < 1.5
+    assert abs(np.std(pulls, ddof=1) - 1) < 4 / np.sqrt(2 * 40)
 
 
 def test_a_monitor_that_bends_much_is_doubtful_and_without_attenuators_nothing_is_said_of_it() -> None:
