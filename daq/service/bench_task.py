@@ -18,7 +18,7 @@ from daq.devices.registry import open_devices
 from daq.errors import DaqError, DeviceError, StorageError
 from daq.estimate.quality import rules_of
 from daq.itinerary import Itinerary
-from daq.ports import Bench, Clock, Devices
+from daq.ports import Bench, Clock, Devices, Sink
 from daq.service.beam import let_in, shut_out_after
 from daq.service.bench_records import known, set_up_of
 from daq.service.extensions import open_bench
@@ -35,6 +35,7 @@ from daq.tasks.picture import draw_task
 from daq.tasks.yardstick import yardstick
 
 PICTURE = "picture.png"
+SET_BACK = "Set back what was turned by hand: the task broke off, and the program turns nothing."
 
 
 @dataclass(frozen=True, slots=True)
@@ -63,40 +64,40 @@ class _Planned:
     signs: Mapping[str, Any]
 
 
+@dataclass(frozen=True, slots=True, eq=False)
+class _Work:
+    """A task under way: what it is done with, where its archive goes, who is there."""
+
+    task: Task
+    loaded: Loaded
+    folder: Path
+    devices: Devices
+    clock: Clock
+    bench: Bench | None
+    person: Person
+
+
 def carry_out(task: Task, loaded: Loaded, lab: Path, person: Person) -> dict[str, Any]:
     """Carry out a task and return its record.
 
     Raises
     ------
     DaqError
-        When the rig lacks what the task needs: nothing was opened.
+        When the rig lacks what the task needs: nothing was moved.
     DeviceError, StorageError
         When a device or the disk failed; what was counted is kept, with a record that says so.
     """
-    rig = loaded.rig
-    values, missing = known(loaded, lab)
+    readings: list[Taken] = []
     with _at_bench(loaded, lab) as (devices, clock, bench):
-        measures = yardstick(loaded.measurement, rig)
-        setting = Setting(loaded.measurement, rig, measures, bool(devices.shutter), values, missing)
-        lacking = task.lacks(setting)
-        if lacking:
-            raise DaqError(
-                " ".join(lacking).rstrip("."), where=f"task {task.name}", remedy="Nothing was moved"
-            )
+        setting = _setting(task, loaded, lab, devices)
         _refuse_lost(devices, bench)
-        let_in(devices, clock)
-        folder = new_bench_folder(lab, task.name, clock.utc_ns())
-        person.said(f"{task.name}: {task.purpose}")
-        trouble: DaqError | None = None
-        readings: list[Taken] = []
-        try:
-            outcome = _measured(task, setting, loaded, folder, devices, clock, bench, person, readings)
-        except (DeviceError, StorageError) as error:
-            outcome, trouble = _failed(error), error
-        except DaqError as error:
-            outcome = _failed(error)
-        record = _record(task, loaded, folder, outcome, clock, person, readings)
-        record |= {"broken_off": trouble is not None}
+        with shut_out_after(devices):
+            let_in(devices, clock)
+            folder = new_bench_folder(lab, task.name, clock.utc_ns())
+            person.said(f"{task.name}: {task.purpose}")
+            work = _Work(task, loaded, folder, devices, clock, bench, person)
+            outcome, trouble = _tried(work, setting, readings)
+            record = _record(work, outcome, readings) | {"broken_off": trouble is not None}
     write_outcome(folder, record)
     draw_task(folder / PICTURE, f"{task.name}: {outcome.verdict}. {outcome.sentence}", outcome.panels)
     if trouble is not None:
@@ -104,12 +105,23 @@ def carry_out(task: Task, loaded: Loaded, lab: Path, person: Person) -> dict[str
     return record | {"record": f"{task.name}/{folder.name}", "picture": str(folder / PICTURE)}
 
 
+def _setting(task: Task, loaded: Loaded, lab: Path, devices: Devices) -> Setting:
+    """Return what a task knows before it begins; refuses one whose rig lacks what it needs."""
+    values, missing = known(loaded, lab)
+    measures = yardstick(loaded.measurement, loaded.rig)
+    setting = Setting(loaded.measurement, loaded.rig, measures, bool(devices.shutter), values, missing)
+    lacking = task.lacks(setting)
+    if lacking:
+        raise DaqError(" ".join(lacking).rstrip("."), where=f"task {task.name}", remedy="Nothing was moved")
+    return setting
+
+
 @contextmanager
 def _at_bench(loaded: Loaded, lab: Path) -> Iterator[tuple[Devices, Clock, Bench | None]]:
     """Give the devices of a rig; simulated ones stand where the last task left them."""
     if not loaded.rig.simulated:
         clock = RealClock()
-        with open_devices(loaded.rig, clock) as devices, shut_out_after(devices):
+        with open_devices(loaded.rig, clock) as devices:
             yield devices, clock, None
         return
     state = kept_state(lab, loaded.rig.name)
@@ -117,7 +129,7 @@ def _at_bench(loaded: Loaded, lab: Path) -> Iterator[tuple[Devices, Clock, Bench
         loaded.rig, seed=loaded.bench_seed, transport="direct", state=state, faults=loaded.faults
     )
     try:
-        with open_devices(loaded.rig, bench.clock) as devices, shut_out_after(devices):
+        with open_devices(loaded.rig, bench.clock) as devices:
             yield devices, bench.clock, bench
         keep_state(lab, loaded.rig.name, bench.keep())
     finally:
@@ -137,44 +149,53 @@ def _refuse_lost(devices: Devices, bench: Bench | None) -> None:
         stage.home()
 
 
-def _measured(
-    task: Task,
-    setting: Setting,
-    loaded: Loaded,
-    folder: Path,
-    devices: Devices,
-    clock: Clock,
-    bench: Bench | None,
-    person: Person,
-    readings: list[Taken],
-) -> Outcome:
+def _tried(work: _Work, setting: Setting, readings: list[Taken]) -> tuple[Outcome, DaqError | None]:
+    """Return what a task found or why it failed, and the trouble of a device or the disk."""
+    try:
+        return _measured(work, setting, readings), None
+    except (DeviceError, StorageError) as error:
+        return _failed(error), error
+    except DaqError as error:
+        return _failed(error), None
+
+
+def _measured(work: _Work, setting: Setting, readings: list[Taken]) -> Outcome:
     """Take the visits of a task into its archive, and fit them."""
-    axis = loaded.rig.axes[loaded.rig.mask.axis]
-    mask = FreeMask(devices.mask, mask_stage(devices, devices.mask), axis.settle_s)
-    asks = task.asks(setting, ())
-    whole = loaded.itinerary()
-    meta = record_of(loaded, whole, clock, devices, bench) | {
+    asks, whole = work.task.asks(setting, ()), work.loaded.itinerary()
+    meta = record_of(work.loaded, whole, work.clock, work.devices, work.bench) | {
         "kind": "bench",
-        "task": task.name,
-        "run": folder.name,
+        "task": work.task.name,
+        "run": work.folder.name,
         "visits_planned": len(asks),
         "visits_per_stand": 1,
     }
     planned = cast(Itinerary, _planned(asks, whole))
-    turned = partial(_turned, person, bench)
-    rules = rules_of(loaded.measurement.quality.model_dump())
-    with create_run(folder, texts=loaded.texts, itinerary=planned, meta=meta) as archive:
+    with create_run(work.folder, texts=work.loaded.texts, itinerary=planned, meta=meta) as archive:
         try:
-            first: int | None = 0
-            while asks:
-                for one in taken(asks, devices, mask, archive, clock, first, turned, rules):
-                    readings.append(one)
-                    if len(readings) % 100 == 0:
-                        person.said(f"{len(readings)} visits")
-                asks, first = task.asks(setting, tuple(readings)), None
-            return task.fit(setting, tuple(readings))
+            _take(work, setting, archive, asks, readings)
+            return work.task.fit(setting, tuple(readings))
         finally:
-            archive.finish({"ended_utc": stamp(clock.utc_ns())})
+            archive.finish({"ended_utc": stamp(work.clock.utc_ns())})
+
+
+def _take(work: _Work, setting: Setting, archive: Sink, asks: Sequence[Ask], readings: list[Taken]) -> None:
+    """Take visits until the task asks for none; whoever turned a knob is told when they break off."""
+    devices, rig = work.devices, work.loaded.rig
+    mask = FreeMask(devices.mask, mask_stage(devices, devices.mask), rig.axes[rig.mask.axis].settle_s)
+    turned = partial(_turned, work.person, work.bench)
+    rules = rules_of(work.loaded.measurement.quality.model_dump())
+    first: int | None = 0
+    try:
+        while asks:
+            for one in taken(asks, devices, mask, archive, work.clock, first, turned, rules):
+                readings.append(one)
+                if len(readings) % 100 == 0:
+                    work.person.said(f"{len(readings)} visits")
+            asks, first = work.task.asks(setting, tuple(readings)), None
+    except BaseException:
+        if any(ask.turn is not None for ask, _ in readings):
+            work.person.said(SET_BACK)
+        raise
 
 
 def _turned(person: Person, bench: Bench | None, turn: Turn) -> Turn:
@@ -207,34 +228,27 @@ def _failed(error: DaqError) -> Outcome:
     return Outcome({}, {}, "fail", str(error), "none", ())
 
 
-def _record(
-    task: Task,
-    loaded: Loaded,
-    folder: Path,
-    outcome: Outcome,
-    clock: Clock,
-    person: Person,
-    readings: Sequence[Taken],
-) -> dict[str, Any]:
-    at = datetime.fromtimestamp(clock.utc_ns() / 1e9, UTC)
+def _record(work: _Work, outcome: Outcome, readings: Sequence[Taken]) -> dict[str, Any]:
+    task, now_ns = work.task, work.clock.utc_ns()
+    until = datetime.fromtimestamp(now_ns / 1e9, UTC) + timedelta(days=task.days)
     made = software()
     return {
         "task": task.name,
-        "at_utc": stamp(clock.utc_ns()),
+        "at_utc": stamp(now_ns),
         "ok": outcome.verdict == "pass",
         "values": dict(outcome.values),
         "se": dict(outcome.se),
         "verdict": outcome.verdict,
         "sentence": outcome.sentence,
-        "valid_until": None if outcome.verdict == "fail" else (at + timedelta(days=task.days)).isoformat(),
+        "valid_until": None if outcome.verdict == "fail" else until.isoformat(),
         "holds_for": list(task.holds_for),
-        "set_up": set_up_of(loaded.rig),
+        "set_up": set_up_of(work.loaded.rig),
         "model": outcome.model,
         "chi2": outcome.chi2,
         "dof": outcome.dof,
         "visits": len(readings),
         "asked": [_short(ask) for ask, _ in readings],
-        "by": person.name or getpass.getuser(),
+        "by": work.person.name or getpass.getuser(),
         "software": {name: made[name] for name in ("name", "version", "commit", "changed")},
     }
 

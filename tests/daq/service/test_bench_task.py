@@ -278,6 +278,20 @@ def test_a_saturated_detector_is_a_sentence_and_nothing_is_moved_further(
     assert len(open_visits(tmp_path / "bench" / record["record"])["visit"]) == 4
 
 
+def test_where_visits_break_off_a_person_is_told_to_set_back_what_was_turned(
+    loaded: Loaded, tmp_path: Path
+) -> None:
+    said: list[str] = []
+    script = tmp_path / "faults.toml"
+    script.write_text('[[fault]]\nkind = "overflow"\ndevice = "counter"\nat_gate = 8\n')
+
+    record = carry_out(task_of("plateau"), loaded.with_faults(script), tmp_path, Person(said=said.append))
+
+    assert "the counter overflowed" in record["sentence"]
+    assert record["visits"] == 7
+    assert said[-1].startswith("Set back what was turned by hand")
+
+
 def truly(loaded: Loaded, **bench: object) -> Loaded:
     """Return the Lantern bench with another truth behind it."""
     changes = {f"bench__{name}": value for name, value in bench.items()}
