@@ -85,22 +85,27 @@ def _readings(night: Night, place: Place) -> Iterator[Reading]:
         lambda: _patient(night),
     )
     for _, reading in performed:
-        if night.judge.finding:
-            tell(night, "left out", text=night.judge.finding)
-        for note in night.judge.notes:
-            tell(night, "noticed", text=note)
-        night.running.add(reading)
-        night.counted_ns = reading.gate_close_ns
-        closed = night.live.took(reading, night.judge.odd)
-        night.trouble = Trouble()
-        if closed and not night.live.watcher.dark_stands:
-            night.darkness = Trouble()
-        if closed:
-            _stood(night, reading)
-        night.on_visit(reading)
-        night.alive()
-        night.live.write(night.state.value, night.running)
+        _took(night, reading)
         yield reading
+
+
+def _took(night: Night, reading: Reading) -> None:
+    """Take in a reading that is durable: tell it, estimate with it, do what is due at the end of a stand."""
+    if night.judge.finding:
+        tell(night, "left out", text=night.judge.finding)
+    for note in night.judge.notes:
+        tell(night, "noticed", text=note)
+    night.running.add(reading)
+    night.counted_ns = reading.gate_close_ns
+    closed = night.live.took(reading, night.judge.odd)
+    night.trouble = Trouble()
+    if closed and not night.live.watcher.dark_stands:
+        night.darkness = Trouble()
+    if closed:
+        _stood(night, reading)
+    night.on_visit(reading)
+    night.alive()
+    night.live.write(night.state.value, night.running)
 
 
 def _stood(night: Night, reading: Reading) -> None:

@@ -45,6 +45,11 @@ def make_ready(night: Night) -> bool:
     night.counted_ns = night.clock.now_ns()
     when = f"After {quiet_s / 60:.0f} min without a count" if quiet_s > QUIET_S else "Before the run goes on"
     tell(night, "ready", text=f"{when}: {found.said}")
+    return _is_in_order(night, found)
+
+
+def _is_in_order(night: Night, found: Readiness) -> bool:
+    """Return whether the run may go on with what was found; a mask off its place holds it."""
     if found.bright:
         tell(night, "noticed", text=found.bright)
     if found.astray:
