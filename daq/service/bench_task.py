@@ -32,6 +32,7 @@ from daq.tasks import Outcome, Setting, Task
 from daq.tasks.contract import Ask, Taken, Turn
 from daq.tasks.moves import FreeMask, mask_stage, taken
 from daq.tasks.picture import draw_task
+from daq.tasks.turns import by_nobody
 from daq.tasks.yardstick import yardstick
 
 PICTURE = "picture.png"
@@ -44,7 +45,7 @@ class Person:
 
     name: str = ""
     said: Callable[[str], None] = lambda text: None
-    turns: Callable[[Turn], Turn] = lambda turn: turn
+    turns: Callable[[Turn], Turn] = by_nobody
 
 
 @dataclass(frozen=True, slots=True, eq=False)

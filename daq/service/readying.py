@@ -10,9 +10,10 @@ from daq.sequencer import State
 from daq.service.beam import let_in
 from daq.service.holding import hold
 from daq.service.night import Night, tell
-from daq.tasks.contract import Taken, Turn
+from daq.tasks.contract import Taken
 from daq.tasks.moves import FreeMask, mask_stage, taken
 from daq.tasks.ready import Readiness, readiness, ready_visits
+from daq.tasks.turns import by_nobody
 
 QUIET_S = 600.0  # without a count: beyond, things may have crept
 
@@ -82,11 +83,7 @@ def _measured(night: Night) -> Readiness:
     asks = ready_visits(records, stage.limits_mm, place_mm, devices.shutter is not None)
     mask = FreeMask(devices.mask, stage, 0.0)
     done: list[Taken] = []
-    for one in taken(asks, devices, mask, night.archive, night.clock, None, _nobody, night.judge.rules):
+    for one in taken(asks, devices, mask, night.archive, night.clock, None, by_nobody, night.judge.rules):
         done.append(one)
         night.alive()
     return readiness(records, done)
-
-
-def _nobody(turn: Turn) -> Turn:
-    raise DaqError(f"nobody is there to do this: {turn.text}")

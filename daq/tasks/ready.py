@@ -47,7 +47,15 @@ def ready_visits(
             via_mm = max(at_mm - TAKE_UP_MM, limits_mm[0])
             place = float(records["register"]["values"]["position_mm"])
             asks.append(
-                Ask(f"{side} {name}", FLANK_S, place, place_mm=at_mm, via_mm=via_mm, reason=FLANK_VISIT)
+                Ask(
+                    f"{side} {name}",
+                    FLANK_S,
+                    place,
+                    place_mm=at_mm,
+                    via_mm=via_mm,
+                    beam="open" if shutter else "",  # a fault in the dark may have left it shut
+                    reason=FLANK_VISIT,
+                )
             )
     reason = DARK_VISIT if shutter else CLOSED_VISIT
     return [*asks, Ask(WITHOUT, DARK_S, place_mm, 0, beam="shut" if shutter else "", reason=reason)]

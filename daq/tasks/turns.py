@@ -6,6 +6,7 @@ from collections.abc import Iterable
 from dataclasses import replace
 
 from daq.description.by_hand import Dial
+from daq.errors import DaqError
 from daq.tasks.contract import Ask, Knob, Turn
 
 CAUTIONS: dict[Knob, str] = {
@@ -43,6 +44,11 @@ def light_room(lit: bool) -> Turn:
     """Return the turn of the room's light."""
     how = "on, as bright as it may be at night" if lit else "off, and leave the room as it is at night"
     return Turn("room light", float(lit), f"Switch the room light {how}.", CAUTIONS["room light"])
+
+
+def by_nobody(turn: Turn) -> Turn:
+    """Refuse a turn where nobody is at the bench: it must not pass for done."""
+    raise DaqError(f"nobody is there to do this: {turn.text}")
 
 
 def told_once(asks: Iterable[Ask]) -> list[Ask]:

@@ -74,9 +74,10 @@ def test_the_first_and_the_last_window_are_come_to_from_below_and_the_key_is_non
     assert (ASKS[-1].reason, ASKS[-1].position_mm) == (CLOSED_VISIT, 3.0)
 
 
-def test_with_a_shutter_the_beam_is_shut_for_the_dark() -> None:
-    last = ready_visits(RECORDS, (0.0, 20.0), 3.0, shutter=True)[-1]
+def test_with_a_shutter_the_beam_is_open_for_the_flanks_and_shut_for_the_dark() -> None:
+    *flanks, last = ready_visits(RECORDS, (0.0, 20.0), 3.0, shutter=True)
 
+    assert {ask.beam for ask in flanks} == {"open"}
     assert (last.reason, last.beam) == (DARK_VISIT, "shut")
 
 
