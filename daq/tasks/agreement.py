@@ -5,10 +5,11 @@ from __future__ import annotations
 from dataclasses import dataclass
 from math import hypot, sqrt
 
-from daq.tasks.contract import Setting, Verdict, fits, within, worst
+from daq.tasks.contract import Setting
 from daq.tasks.crossings import Sums
 from daq.tasks.gaps import Gaps
 from daq.tasks.said import of_allowed, with_error
+from daq.tasks.verdicts import Verdict, fits, within, worst
 
 LARGEST_LOSS = 0.05
 FINE = 0.05  # error over dead time that is aimed at, where the dead time itself is wanted

@@ -16,21 +16,11 @@ from scipy.stats import norm
 
 from daq.estimate.arrays import FloatArray
 from daq.estimate.regression import weighted_fit
-from daq.tasks.contract import (
-    Ask,
-    Curve,
-    Outcome,
-    Panel,
-    Setting,
-    Taken,
-    Task,
-    counts_only,
-    hopeless,
-    level,
-    once,
-    worst,
-)
+from daq.tasks.contract import Ask, Outcome, Setting, Taken, Task, counts_only, once
 from daq.tasks.encoder import Seen, seen_by
+from daq.tasks.panels import Curve, Panel, level
+from daq.tasks.refusals import hopeless
+from daq.tasks.verdicts import worst
 
 REPEATS, DWELL_S, TAKE_UP_MM = 10, 1.0, 0.5
 PATTERN = (1, -1, -1, 1)  # up, down, down, up: a steady creep cancels

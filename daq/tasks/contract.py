@@ -1,4 +1,4 @@
-"""The contract of a bench task: visits asked for, readings fitted, a verdict, and what the record says."""
+"""The contract of a bench task: visits asked for with what is known before, and the outcome of a fit."""
 
 from __future__ import annotations
 
@@ -7,18 +7,15 @@ from dataclasses import dataclass, field
 from typing import Any, Literal
 
 import numpy as np
-from scipy.stats import chi2 as chi2_distribution
 
 from daq.description import Measurement, Rig
-from daq.errors import DaqError
 from daq.estimate.arrays import FloatArray
 from daq.estimate.counting import true_rate_hz
 from daq.records import BENCH_VISIT, Reading
+from daq.tasks.panels import Panel
+from daq.tasks.verdicts import Verdict
 from daq.tasks.yardstick import Yardstick
 
-Verdict = Literal["pass", "doubtful", "fail"]
-DIM = 0.1  # of the described light: with less of it nothing is measured
-ODD_P = 1e-3  # a fit less probable than this is doubtful
 ANYWHERE = -1  # the opening of a visit that stands at a place of the mask instead
 
 
@@ -96,30 +93,6 @@ class Setting:
 
 
 @dataclass(frozen=True, slots=True)
-class Curve:
-    """One set of points (with `bars`, their standard errors) or a line of a picture."""
-
-    x: FloatArray
-    y: FloatArray
-    label: str
-    bars: FloatArray | None = None
-    line: bool = False
-
-
-@dataclass(frozen=True, slots=True)
-class Panel:
-    """One plot: what was measured and fitted; `marks` are upright lines, `names` stand at 0, 1 ..."""
-
-    title: str
-    x_label: str
-    y_label: str
-    curves: tuple[Curve, ...]
-    marks: Mapping[str, float] = field(default_factory=dict)
-    names: Sequence[str] = ()
-    log_x: bool = False
-
-
-@dataclass(frozen=True, slots=True)
 class Outcome:
     """What a task found: values and their standard errors, a verdict, one sentence, and its picture."""
 
@@ -161,41 +134,3 @@ class Task:
 def once(visits: Callable[[Setting], Sequence[Ask]]) -> Callable[[Setting, Sequence[Taken]], Sequence[Ask]]:
     """Return the `asks` of a task that knows all its visits from the start."""
     return lambda setting, taken: () if taken else visits(setting)
-
-
-def hopeless(task: str, what: str, remedy: str) -> DaqError:
-    """Return the error that ends a task: what was seen, and what to do."""
-    return DaqError(what, where=f"task {task}", remedy=remedy)
-
-
-def refuse_dark(task: str, setting: Setting, brightest_hz: float) -> None:
-    """Refuse what was counted at the brightest place when next to none of the described light fell there."""
-    expected_hz = setting.yardstick.brightest_hz
-    if brightest_hz < DIM * expected_hz:
-        raise hopeless(
-            task,
-            f"{brightest_hz:.3g} a second were counted where {expected_hz:.3g} are described",
-            "Look for the beam, the shutter and the detector, and at what the description expects",
-        )
-
-
-def within(value: float, se: float, limit: float) -> Verdict:
-    """Return how a value stands to the limit that it must not pass; nearer than its error is doubtful."""
-    if value + se <= limit:
-        return "pass"
-    return "doubtful" if value - se <= limit else "fail"
-
-
-def worst(*verdicts: Verdict) -> Verdict:
-    """Return the worst of several verdicts."""
-    return max(verdicts, key=("pass", "doubtful", "fail").index)
-
-
-def level(x: FloatArray, value: float, label: str) -> Curve:
-    """Return a value as a line across a picture."""
-    return Curve(x, np.full(len(x), value), label, line=True)
-
-
-def fits(chi2: float, dof: int) -> Verdict:
-    """Return "doubtful" where chance alone is farther off less than once in a thousand."""
-    return "pass" if dof < 1 or chi2_distribution.sf(chi2, dof) >= ODD_P else "doubtful"

@@ -16,7 +16,7 @@ from scipy.optimize import brentq
 from daq.description import Rig
 from daq.estimate.arrays import FloatArray
 from daq.estimate.counting import true_rate_hz
-from daq.tasks.contract import hopeless
+from daq.tasks.refusals import hopeless
 
 NAME = "deadtime"
 MOST_LOSS = 0.2

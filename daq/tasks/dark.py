@@ -12,19 +12,10 @@ import numpy as np
 
 from daq.estimate.arrays import FloatArray
 from daq.estimate.counting import chance_of_more
-from daq.tasks.contract import (
-    Ask,
-    Curve,
-    Outcome,
-    Panel,
-    Setting,
-    Taken,
-    Task,
-    fits,
-    level,
-    once,
-)
+from daq.tasks.contract import Ask, Outcome, Setting, Taken, Task, once
+from daq.tasks.panels import Curve, Panel, level
 from daq.tasks.turns import light_room, told_once
+from daq.tasks.verdicts import fits
 
 DWELL_S, ROUNDS, PLACES, ROOM_ROUNDS = 10.0, 5, 5, 2
 ONE_SIDED_95, ONE_IN_TWENTY = 1.645, 0.05  # of a normal distribution; what it leaves above

@@ -14,19 +14,10 @@ import numpy as np
 
 from daq.estimate.arrays import FloatArray
 from daq.tasks.agreement import Found, budget_s, kappa_shift, sentence_of, verdict_of
-from daq.tasks.contract import (
-    Ask,
-    Curve,
-    Outcome,
-    Panel,
-    Setting,
-    Taken,
-    Task,
-    level,
-    once,
-)
+from daq.tasks.contract import Ask, Outcome, Setting, Taken, Task, once
 from daq.tasks.crossings import AB, NAME, NONE, A, B, crossings_mm, dead_time_of_cycles
 from daq.tasks.gaps import Gaps, Ticks, dead_time_of_gaps
+from daq.tasks.panels import Curve, Panel, level
 
 DWELL_S, CYCLES = 5.0, 16
 ORDER = (NONE, A, AB, B, B, AB, A, NONE)  # and back: a straight drift cancels

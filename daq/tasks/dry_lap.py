@@ -11,7 +11,8 @@ import numpy as np
 from daq.estimate.arrays import FloatArray
 from daq.itinerary import compose
 from daq.records import Quality
-from daq.tasks.contract import Ask, Curve, Outcome, Panel, Setting, Taken, Task, once
+from daq.tasks.contract import Ask, Outcome, Setting, Taken, Task, once
+from daq.tasks.panels import Curve, Panel
 
 GATE_S, LATE, LATE_S = 0.1, 0.05, 0.2
 ASTRAY = Quality.OFF_TARGET | Quality.MOVED

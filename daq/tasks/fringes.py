@@ -11,7 +11,7 @@ from numpy.polynomial.chebyshev import chebvander
 from scipy.optimize import least_squares
 
 from daq.estimate.arrays import FloatArray
-from daq.tasks.contract import hopeless
+from daq.tasks.refusals import hopeless
 
 NAME = "scale"
 NONE, SECTIONS = "none", 4

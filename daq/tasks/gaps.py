@@ -14,7 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from daq.estimate.arrays import FloatArray
-from daq.tasks.contract import hopeless
+from daq.tasks.refusals import hopeless
 
 NAME = "deadtime"
 ROUNDS = 3  # of rate and edge in turn

@@ -8,7 +8,8 @@ from dataclasses import dataclass
 import numpy as np
 
 from daq.estimate.arrays import FloatArray
-from daq.tasks.contract import Ask, Curve, Panel, Setting, Taken
+from daq.tasks.contract import Ask, Setting, Taken
+from daq.tasks.panels import Curve, Panel
 from daq.tasks.turns import put_attenuator
 
 LEVEL, DARK = "level", "level dark"

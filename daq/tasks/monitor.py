@@ -14,23 +14,12 @@ from scipy.stats import f as f_distribution
 
 from daq import openings
 from daq.estimate.arrays import FloatArray
-from daq.tasks.contract import (
-    ODD_P,
-    Ask,
-    Curve,
-    Outcome,
-    Panel,
-    Setting,
-    Taken,
-    Task,
-    Verdict,
-    counts_only,
-    once,
-    worst,
-)
+from daq.tasks.contract import Ask, Outcome, Setting, Taken, Task, counts_only, once
 from daq.tasks.levels import Bend, bend_of, level_visits
+from daq.tasks.panels import Curve, Panel
 from daq.tasks.stands import by_stand, there_and_back
 from daq.tasks.turns import told_once
+from daq.tasks.verdicts import ODD_P, Verdict, worst
 
 DWELL_S, STANDS = 2.0, 40
 MOST_BEND = 0.05  # common practice, no source: a bend that all openings share moves kappa by nothing

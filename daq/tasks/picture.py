@@ -10,7 +10,7 @@ from matplotlib.axes import Axes
 from matplotlib.figure import Figure
 
 from daq.errors import StorageError
-from daq.tasks.contract import Panel
+from daq.tasks.panels import Panel
 
 WIDE = 115  # letters of a line of the title
 INKS = ("#1b1b1b", "#b5490b", "#3f6ea8", "#7a7a7a", "#7b3f8c", "#2f7d4f")

@@ -15,7 +15,10 @@ from daq.estimate.drift import structure_function
 from daq.itinerary import Forecast, compose, forecast
 from daq.itinerary.pilot import HOUR_S, wander_of_counts
 from daq.itinerary.wander import Wander
-from daq.tasks.contract import Ask, Curve, Outcome, Panel, Setting, Taken, Task, hopeless, once, within
+from daq.tasks.contract import Ask, Outcome, Setting, Taken, Task, once
+from daq.tasks.panels import Curve, Panel
+from daq.tasks.refusals import hopeless
+from daq.tasks.verdicts import within
 
 SAMPLE_S, WATCH_S, LOOK_S = 1.0, 1200.0, 100.0
 LEAST = 25  # counts of a sample: below it the logarithm is no longer even

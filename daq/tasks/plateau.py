@@ -16,22 +16,12 @@ import numpy as np
 from daq import openings
 from daq.description.by_hand import Dial
 from daq.estimate.arrays import FloatArray
-from daq.tasks.contract import (
-    Ask,
-    Curve,
-    Outcome,
-    Panel,
-    Setting,
-    Taken,
-    Task,
-    Verdict,
-    counts_only,
-    hopeless,
-    once,
-    worst,
-)
+from daq.tasks.contract import Ask, Outcome, Setting, Taken, Task, counts_only, once
 from daq.tasks.knee import Plateau, plateau
+from daq.tasks.panels import Curve, Panel
+from daq.tasks.refusals import hopeless
 from daq.tasks.turns import set_detector, told_once
+from daq.tasks.verdicts import Verdict, worst
 
 BRIGHT, DIM, DARK = "bright", "dim", "dark"
 SETTINGS = 11

@@ -15,8 +15,8 @@ import numpy as np
 
 from daq.records import CLOSED_VISIT, DARK_VISIT, FLANK_VISIT
 from daq.tasks.contract import Ask, Taken
+from daq.tasks.flanks import balance_mm, ramp_mm
 from daq.tasks.register import FINE_S, KEY, TAKE_UP_MM
-from daq.tasks.windows import balance_mm, ramp_mm
 
 FLANK_S, DARK_S = 2.0, 10.0
 LEFT, RIGHT, WITHOUT = "left", "right", "without light"

@@ -13,9 +13,13 @@ from scipy.stats import norm
 from daq import openings
 from daq.estimate.arrays import FloatArray
 from daq.itinerary import expected_rates
-from daq.tasks.contract import Ask, Curve, Outcome, Panel, Setting, Taken, Task, counts_only, within, worst
+from daq.tasks.contract import Ask, Outcome, Setting, Taken, Task, counts_only
+from daq.tasks.drawing import named, seen_windows
+from daq.tasks.flanks import clipped
+from daq.tasks.panels import Curve, Panel
 from daq.tasks.said import of_allowed
-from daq.tasks.windows import NAME, Edges, clipped, named, plain, seen_windows, together, window
+from daq.tasks.verdicts import within, worst
+from daq.tasks.windows import NAME, Edges, plain, together, window
 
 COARSE, UP, DOWN = "coarse", "up", "down"
 COARSE_S, FINE_S = 0.1, 0.2

@@ -11,21 +11,11 @@ import numpy as np
 
 from daq import openings
 from daq.estimate.arrays import FloatArray
-from daq.tasks.contract import (
-    Ask,
-    Curve,
-    Outcome,
-    Panel,
-    Setting,
-    Taken,
-    Task,
-    Verdict,
-    fits,
-    once,
-    worst,
-)
+from daq.tasks.contract import Ask, Outcome, Setting, Taken, Task, once
 from daq.tasks.fringes import NAME, SECTIONS, Fringes, fringes
+from daq.tasks.panels import Curve, Panel
 from daq.tasks.said import with_error
+from daq.tasks.verdicts import Verdict, fits, worst
 
 DWELL_S, PER_FRINGE = 0.5, 8  # points of the finest fringe
 FINEST_REL = 1e-3  # standard error of the period that is enough

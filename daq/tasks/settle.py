@@ -13,20 +13,10 @@ import numpy as np
 from scipy.stats import chi2 as chi2_distribution
 
 from daq.estimate.arrays import FloatArray
-from daq.tasks.contract import (
-    ODD_P,
-    Ask,
-    Curve,
-    Outcome,
-    Panel,
-    Setting,
-    Taken,
-    Task,
-    Verdict,
-    once,
-    refuse_dark,
-    worst,
-)
+from daq.tasks.contract import Ask, Outcome, Setting, Taken, Task, once
+from daq.tasks.panels import Curve, Panel
+from daq.tasks.refusals import refuse_dark
+from daq.tasks.verdicts import ODD_P, Verdict, worst
 
 GATE_S, GATES, MOVES = 0.2, 8, 40
 TIMES_S = np.geomspace(0.03, 1.0, 36)

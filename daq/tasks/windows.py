@@ -1,10 +1,9 @@
-"""Windows: where light passes a mask, from a scan; and which of the drawn ones they are, either way round."""
+"""Windows: where light passes a mask, fitted to a scan by its blurred edges."""
 
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
-from math import erf, sqrt
 from typing import Any
 
 import numpy as np
@@ -12,10 +11,9 @@ from scipy.optimize import brentq, least_squares
 from scipy.special import ndtr
 
 from daq.estimate.arrays import FloatArray
-from daq.tasks.contract import hopeless
+from daq.tasks.refusals import hopeless
 
 NAME = "register"
-OFF_ERRORS = 5.0  # a spacing that is farther off than so many of its errors is another one
 ROUNDS = 4  # of fit and scatter in turn
 SLOPE_MM, LEAST_HEIGHT = 1e-4, 5.0  # the height in its own errors: below it there is no window
 
@@ -158,86 +156,6 @@ def _covariance(place_mm: FloatArray, values: FloatArray, wider: FloatArray) -> 
     except np.linalg.LinAlgError:
         return None
     return found if np.all(np.diag(found) > 0) else None
-
-
-def seen_windows(place_mm: FloatArray, rate_hz: FloatArray, least_hz: float) -> list[tuple[float, float]]:
-    """Return both ends of every stretch of a coarse scan that is brighter than a rate, half a step more."""
-    step = float(np.median(np.diff(place_mm))) / 2
-    bright = np.concatenate([[False], rate_hz > least_hz, [False]])
-    starts = np.flatnonzero(bright[1:] & ~bright[:-1])
-    stops = np.flatnonzero(bright[:-1] & ~bright[1:]) - 1
-    return [
-        (float(place_mm[a]) - step, float(place_mm[b]) + step) for a, b in zip(starts, stops, strict=True)
-    ]
-
-
-def named(centres_mm: FloatArray, drawn_mm: Mapping[str, float], error_mm: float) -> dict[str, float]:
-    """Return name -> centre of the windows that were seen, when they are those of the drawing.
-
-    Raises
-    ------
-    DaqError
-        When none was seen, one is missing or too many, or the spacings fit only turned round, or both ways.
-    """
-    names = sorted(drawn_mm, key=lambda name: drawn_mm[name])
-    drawn = np.array([drawn_mm[name] for name in names])
-    if not len(centres_mm):
-        raise hopeless(
-            NAME, "no window was seen on the whole travel", "Look for the beam, shutter and detector"
-        )
-    if len(centres_mm) != len(drawn):
-        raise hopeless(
-            NAME, _wrong_number(centres_mm, drawn, names), "See that the chip is the one described"
-        )
-    forward, turned = (_spacing_error(centres_mm, side) for side in (drawn, -drawn[::-1]))
-    limit = OFF_ERRORS * error_mm * sqrt(2)
-    if forward > limit and turned <= limit:
-        raise hopeless(
-            NAME,
-            "the spacings of the windows fit the drawing only turned round: the chip is in the wrong way",
-            "Take it out and put it in as drawn",
-        )
-    if forward > limit:
-        raise hopeless(
-            NAME,
-            f"the spacings of the windows are off the drawing by {forward:.3f} mm (rms), {limit:.3f} allowed",
-            "See that the chip is the one described",
-        )
-    if turned <= limit:
-        raise hopeless(
-            NAME,
-            "the spacings fit the drawing both ways round, so nobody can say which way the chip is in",
-            "Use a chip with unequal spacings or a key window (`mask.key_mm`)",
-        )
-    return dict(zip(names, centres_mm.tolist(), strict=True))
-
-
-def _spacing_error(seen_mm: FloatArray, drawn_mm: FloatArray) -> float:
-    return float(np.sqrt(np.mean((np.diff(seen_mm) - np.diff(drawn_mm)) ** 2)))
-
-
-def _wrong_number(seen_mm: FloatArray, drawn_mm: FloatArray, names: list[str]) -> str:
-    half = float(np.diff(drawn_mm).min()) / 2
-    dark = [name for name, at in zip(names, drawn_mm, strict=True) if np.abs(seen_mm - at).min() > half]
-    near = f" Nothing near {', '.join(dark)}." if dark else ""
-    return f"{len(seen_mm)} windows were seen where the drawing has {len(drawn_mm)}.{near}".rstrip(".")
-
-
-def clipped(offset_mm: float, width_mm: float, edge_mm: float, repeat_mm: float) -> float:
-    """Return the share of the beam that a window loses, on average over where the stage comes to stand."""
-    blur = sqrt(2 * (edge_mm**2 + repeat_mm**2))
-    return sum(0.5 - erf((width_mm / 2 + side * offset_mm) / blur) / 2 for side in (-1, 1))
-
-
-def balance_mm(left: float, right: float, ramp_mm: float) -> tuple[float, float]:
-    """Return how far a window is off from the counts on its two half-height flanks, and the error [mm]."""
-    total = left + right
-    return ramp_mm / 2 * (right - left) / total, ramp_mm / (2 * sqrt(total))
-
-
-def ramp_mm(edge_mm: float) -> float:
-    """Return the width of the straight ramp whose slope at half height is that of a blurred edge."""
-    return edge_mm * sqrt(2 * np.pi)
 
 
 def plain(edges: Mapping[str, Edges]) -> dict[str, dict[str, Any]]:

@@ -12,9 +12,11 @@ from scipy.stats import t as student
 from daq.errors import DaqError
 from daq.estimate.arrays import FloatArray, IntArray
 from daq.tasks.backlash import PATTERN, reversal
-from daq.tasks.crosstalk import memory
+from daq.tasks.drawing import named
+from daq.tasks.flanks import balance_mm, ramp_mm
+from daq.tasks.memory import memory
 from daq.tasks.settle import GATE_S, Stroke, transient
-from daq.tasks.windows import balance_mm, fitted, named, ramp_mm, window
+from daq.tasks.windows import fitted, window
 from tests.studies.bench import generator_of
 from tests.studies.figures import against, within
 from tests.studies.rows import Each, rows

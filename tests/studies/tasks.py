@@ -12,9 +12,10 @@ from scipy.stats import norm
 from daq.errors import DaqError
 from daq.estimate.arrays import FloatArray
 from daq.tasks.crossings import dead_time_of_cycles
+from daq.tasks.flanks import clipped
 from daq.tasks.fringes import Fringes, fringes
 from daq.tasks.gaps import dead_time_of_gaps
-from daq.tasks.windows import clipped, window
+from daq.tasks.windows import window
 from tests.daq.tasks.made import (
     MIDDLE_MM,
     PERIODS_MM,
