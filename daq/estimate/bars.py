@@ -39,7 +39,8 @@ def bars(
     Notes
     -----
     The standard error assumes independent blocks. The excess is the ratio of both standard errors; its own
-    error is that of a standard deviation from so many blocks.
+    error is that of a standard deviation from so many blocks. Blocks that scatter less than counting do so by
+    chance, which does not last: no bar smaller than that of counting is forecast.
     """
     blocks = len(replicates)
     shrink = sqrt(pairs / planned_pairs) if planned_pairs else 1.0
@@ -57,5 +58,5 @@ def bars(
         "whole_night_95": (kappa - outer, kappa + outer) if isfinite(outer) else None,
         "excess": excess,
         "excess_se": None if excess is None else excess / sqrt(2 * freedom),
-        "forecast_se": shrink * (se if blocks >= EXCESS_KNOWN else counting),
+        "forecast_se": shrink * (max(se, counting) if blocks >= EXCESS_KNOWN else counting),
     }

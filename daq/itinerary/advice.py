@@ -13,6 +13,7 @@ from daq.itinerary.pilot import HOUR_S
 
 LONGEST_GOAL_H = 240.0  # ten days; a goal beyond it is taken for a slip of the pen
 WORTH_SAYING = 0.97  # of the time: a change that saves less is not worth a sentence
+TOGETHER = " and "
 ORDERS = ("zigzag", "searched", "cyclic", "random", "blocked")
 
 
@@ -45,11 +46,15 @@ def remedies(measurement: Measurement, rig: Rig, itinerary: Itinerary, expected:
     """Return what would meet the goal sooner, with figures, the greatest gain first; nothing if it is met."""
     if expected.goal_se is None or (expected.goal_s or 1e99) <= expected.total_s * (1 + 1e-9):
         return ()
-    found = []
+    found, best_s = [], expected.goal_s or 1e99
     for words, changed in _alternatives(measurement, itinerary):
         other = forecast(compose(changed, rig), changed)
-        if other.goal_s is not None and other.goal_s < WORTH_SAYING * (expected.goal_s or 1e99):
-            found.append((other.goal_s, f"With {words} it takes {other.goal_s / HOUR_S:.1f} h."))
+        if other.goal_s is None or other.goal_s >= WORTH_SAYING * (expected.goal_s or 1e99):
+            continue
+        if TOGETHER in words and other.goal_s >= WORTH_SAYING * best_s:
+            continue  # one change alone does as well
+        best_s = min(best_s, other.goal_s)
+        found.append((other.goal_s, f"With {words} it takes {other.goal_s / HOUR_S:.1f} h."))
     return (*(text for _, text in sorted(found)), *_brighter(expected), *_monitor(expected))
 
 
@@ -104,7 +109,7 @@ def _alternatives(measurement: Measurement, itinerary: Itinerary) -> Iterator[tu
         yield words, _with(measurement, **tables)
     if len(changes) > 1:
         every = {"order": "searched", "opening_order": None, "dwell_s": None, "dwell": "best"}
-        yield "all of these", _with(measurement, itinerary=every, positions={"time": "worth"})
+        yield TOGETHER.join(changes), _with(measurement, itinerary=every, positions={"time": "worth"})
 
 
 def _with(measurement: Measurement, **tables: Mapping[str, Any]) -> Measurement:

@@ -216,7 +216,12 @@ def test_the_feed_gives_nothing_away_at_any_time_of_the_night(tmp_path: Path) ->
 
     from daq.service.load import load
 
-    wanted = Wanted("direct", on_start=lambda folder, _: folders.append(folder), on_visit=look)
+    wanted = Wanted(
+        "direct",
+        on_start=lambda folder, _: folders.append(folder),
+        on_visit=look,
+        on_feed=lambda feed: seen.append(json.loads(json.dumps(feed))),  # however rarely it is written
+    )
     folder, _ = start.begin(load(file), lab, wanted)
 
     secrets = Secrets(folder)

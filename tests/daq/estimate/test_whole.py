@@ -13,6 +13,7 @@ from numpy.typing import ArrayLike
 from scipy.stats import t as student
 
 from daq.estimate import Plan, Sums, anytime_multiplier, estimate_run, estimate_sums, kappa
+from daq.estimate.bars import bars
 from daq.estimate.headline import headline
 from daq.estimate.sums import sums_of
 from daq.estimate.tables import tables_of
@@ -152,7 +153,21 @@ def test_the_forecast_shrinks_with_the_pairs_to_come() -> None:
     later = estimate_run(dataset(long, rows[: 8 * 20]))
 
     assert early.forecast_se == pytest.approx((early.kappa_counting_se or 0.0) * sqrt(5 / 20))
-    assert later.forecast_se == pytest.approx((later.kappa_se or 0.0) * sqrt(10 / 20))
+    # blocks that scatter less than counting explains do so by chance: that is not promised to go on
+    assert later.kappa_se is not None and later.kappa_counting_se is not None
+    assert later.kappa_se < later.kappa_counting_se
+    assert later.forecast_se == pytest.approx(later.kappa_counting_se * sqrt(10 / 20))
+
+
+@pytest.mark.parametrize(("scatter", "expected"), [(0.7, 1.0), (2.0, 2.0)])
+def test_the_forecast_is_the_larger_of_scatter_and_counting(scatter: float, expected: float) -> None:
+    blocks = 1e-4 * scatter * np.tile([1.0, -1.0], 8)
+    counting = float(np.sqrt(15 / 16 * np.sum((blocks / scatter - np.mean(blocks)) ** 2)))
+
+    found = bars(0.0, counting, blocks, 16, 16)
+
+    assert found["excess"] == pytest.approx(scatter)
+    assert found["forecast_se"] == pytest.approx(expected * counting)
 
 
 def test_a_position_whose_every_stand_was_left_out_carries_no_weight() -> None:
