@@ -10,9 +10,12 @@ from daq.estimate.quality import Rules, counter_bits
 from daq.ports import AxisState, Clock, Devices, Mask, Sink, Stage
 from daq.records import UNPLANNED, Quality, Reading, Visit
 from daq.sequencer import perform
-from daq.tasks.contract import Ask, Taken, Turn
+from daq.tasks.contract import Ask, Knob, Taken, Turn
 
 GRACE_S, POLL_NS = 10.0, 20_000_000
+IN_THE_BEAM: frozenset[Knob] = frozenset(
+    {"attenuator"}
+)  # the shutter is asked to block while hands are there
 
 
 class FreeMask:
@@ -74,8 +77,8 @@ def taken(
     """
     hands = replace(devices, mask=mask)
     for place, asked in enumerate(asks):
-        ask = asked if asked.turn is None else replace(asked, turn=turned(asked.turn))
-        _beam(ask, devices, clock)
+        ask = _by_hand(asked, devices, clock, turned)
+        _beam(ask.beam, devices, clock)
         mask.ask = ask
         if ask.via_mm is not None:
             _go(mask_stage(devices, mask), ask.via_mm, clock)
@@ -85,6 +88,15 @@ def taken(
             _refuse_saturated(reading, rules)
             # events are in the archive; a watch of twenty minutes is not kept in memory count by count
             yield ask, reading if ask.events else replace(reading, events=None)
+
+
+def _by_hand(ask: Ask, devices: Devices, clock: Clock, turned: Callable[[Turn], Turn]) -> Ask:
+    """Return a visit once a person has done what it needs; the beam is shut while hands reach into it."""
+    if ask.turn is None:
+        return ask
+    if ask.turn.knob in IN_THE_BEAM:
+        _beam("shut", devices, clock)
+    return replace(ask, turn=turned(ask.turn))
 
 
 def mask_stage(devices: Devices, mask: Mask) -> Stage:
@@ -113,16 +125,16 @@ def _too_much(reading: Reading, rules: Rules) -> str:
     return ""
 
 
-def _beam(ask: Ask, devices: Devices, clock: Clock) -> None:
-    """Let the shutter stand as a visit asks; it waits until it does."""
+def _beam(beam: str, devices: Devices, clock: Clock) -> None:
+    """Let the shutter stand as it is asked to, "open" or "shut"; it waits until it does."""
     shutter = devices.shutter
-    if shutter is None or not ask.beam:
+    if shutter is None or not beam:
         return
-    wanted = "open" if ask.beam == "open" else "blocked"
+    wanted = "open" if beam == "open" else "blocked"
     if shutter.state() == wanted:
         return
     shutter.armed = True  # a task is done with somebody at the bench
-    (shutter.unblock if ask.beam == "open" else shutter.block)()
+    (shutter.unblock if beam == "open" else shutter.block)()
     until_ns = clock.now_ns() + round(GRACE_S * 1e9)
     while shutter.state() != wanted:
         if clock.now_ns() > until_ns:
