@@ -72,6 +72,8 @@ def export(arguments: argparse.Namespace) -> Answer:
         raise DescriptionError(
             (f"{arguments.file}: end the name in .csv or .nc, so that the format is known.",)
         )
+    if not arguments.file.parent.is_dir():
+        raise DescriptionError((f"{arguments.file.parent}: there is no such folder. Make it first.",))
     refuse_hidden(arguments.run, arguments.raw, "an export")
     writer(arguments.run, arguments.file)
     return Answer(0, {"ok": True, "file": str(arguments.file)}, [f"written to {arguments.file}"])

@@ -130,7 +130,7 @@ def _end_words(figures: dict[str, Any]) -> str:
 def _warning_lines(one: dict[str, Any]) -> Iterator[str]:
     seen = one.get("acknowledged")
     yield f"! {one['what']} {one['good']}" + (f" (seen by {seen['by']})" if seen else "")
-    yield f"  {one['id']}: {one['did']} {one['do']} {one['cost']}"
+    yield f"  {one['did']} {one['do']} {one['cost']} (warning {one['id']})"
 
 
 def _log_line(entry: dict[str, Any]) -> str:

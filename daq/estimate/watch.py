@@ -9,8 +9,8 @@ from daq.estimate.shift import Shift
 
 PAIRS_TO_JUDGE = 8
 MANY_STANDS = 5  # flagged by one rule: from here it is a pattern, not an accident
-GOES_ON = "Nothing; the run goes on."
-NO_COST = "Nothing."
+GOES_ON = "The run goes on."
+NO_COST = "Doing nothing costs nothing."
 STAYS_GOOD = "kappa is still good"
 
 
@@ -145,7 +145,7 @@ def _source_later(watched: Watched) -> str:
     return (
         "Look at the source before the next run."
         if watched.over
-        else "Nothing now; look at the source later."
+        else "Nothing to do now; look at the source later."
     )
 
 

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import tomllib
 from collections.abc import Iterator, Mapping
 from pathlib import Path
 from typing import Annotated, Any, Literal
@@ -13,7 +12,7 @@ from daq.description.problems import Table, every_problem
 from daq.devices.files import with_dialects
 from daq.errors import DescriptionError
 from daq.scale.job import KNOWN
-from daq.service.files import changed
+from daq.service.files import changed, read_file, read_table
 from daq.service.load import FAULTS, Wishes, load
 
 
@@ -47,7 +46,7 @@ def read_study(path: Path) -> tuple[Study, dict[str, dict[str, Any]]]:
     DescriptionError
         With every problem of the study, its measurement or its rig.
     """
-    table = _toml(path)
+    table = read_table(read_file(path), path)
     try:
         study = Study.model_validate(table)
     except ValidationError as error:
@@ -74,33 +73,21 @@ def _given(study: Study, changes: Mapping[str, Any], path: Path) -> dict[str, An
     if study.kernel == "rehearsed":
         texts = {name: text.decode() for name, text in loaded.texts.items()}
         if study.faults is not None:
-            texts[FAULTS] = _read(path.parent / study.faults).decode()
+            texts[FAULTS] = read_file(path.parent / study.faults).decode()
         return given | {"texts": texts, "changes": dict(changes), "hours": study.hours}
     if study.faults is not None:
         raise DescriptionError((f"{path}, faults: for kernel 'rehearsed' only. Take it out.",))
-    table = changed(_toml(file), changes)
+    table = changed(read_table(read_file(file), file), changes)
     if study.hours is not None:
         table["itinerary"]["laps"] = loaded.measurement.itinerary.laps
     rig = file.parent / table["rig"]
-    return given | {"measurement": table, "rig": with_dialects(_toml(rig), rig.parent)[0]}
+    return given | {
+        "measurement": table,
+        "rig": with_dialects(read_table(read_file(rig), rig), rig.parent)[0],
+    }
 
 
 def _measurement(study: Study, path: Path) -> Path:
     if study.measurement is None:
         raise DescriptionError((f"{path}, measurement: kernel {study.kernel!r} needs one. Name its file.",))
     return path.parent / study.measurement
-
-
-def _toml(path: Path) -> dict[str, Any]:
-    try:
-        return tomllib.loads(_read(path).decode())
-    except (UnicodeDecodeError, tomllib.TOMLDecodeError) as error:
-        raise DescriptionError((f"{path}: not a TOML file: {error}. Mend it there.",)) from error
-
-
-def _read(path: Path) -> bytes:
-    try:
-        return path.read_bytes()
-    except OSError as error:
-        reason = (error.strerror or "cannot be read").lower()
-        raise DescriptionError((f"{path}: {reason}. Name a readable file.",)) from error

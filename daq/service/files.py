@@ -23,8 +23,12 @@ def read_file(path: Path) -> bytes:
 def read_table(text: bytes, path: Path) -> dict[str, Any]:
     """Return a TOML file's bytes as a table; raises DescriptionError where they are none."""
     try:
-        return tomllib.loads(text.decode())
-    except (UnicodeDecodeError, tomllib.TOMLDecodeError) as error:
+        return tomllib.loads(text.decode("utf-8-sig"))  # some editors put a mark before the first byte
+    except UnicodeDecodeError as error:
+        line = text.count(b"\n", 0, error.start) + 1
+        what = f"{path}: not a TOML file: line {line} holds a byte that is no UTF-8. Save the file as UTF-8."
+        raise DescriptionError((what,)) from error
+    except tomllib.TOMLDecodeError as error:
         raise DescriptionError((f"{path}: not a TOML file: {error}. Mend it there.",)) from error
 
 

@@ -177,3 +177,10 @@ def test_an_ending_that_names_no_format_is_refused(run, capsys, tmp_path):
 
     assert status == 2
     assert "end the name in .csv or .nc" in figures["problems"][0]
+
+
+def test_an_export_into_a_folder_that_is_not_there_says_so(run, capsys, tmp_path):
+    status, figures = answer(capsys, "export", str(run), str(tmp_path / "gone" / "visits.csv"))
+
+    assert status == 2
+    assert "there is no such folder. Make it first." in figures["problems"][0]

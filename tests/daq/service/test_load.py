@@ -3,6 +3,7 @@ import shutil
 import pytest
 
 from daq.errors import DescriptionError
+from daq.service.files import read_table
 from daq.service.load import Wishes, config_dir, derived_seed, load
 from tests.examples import CONFIGS
 
@@ -59,6 +60,19 @@ def test_what_is_no_toml_is_a_sentence(tmp_path, text):
 
     with pytest.raises(DescriptionError, match="not a TOML file"):
         load(tmp_path / "bad.toml")
+
+
+def test_a_byte_that_is_no_utf_8_is_named_by_its_line(tmp_path):
+    (tmp_path / "bad.toml").write_bytes('schema = 1\nname = "Spalt für A"\n'.encode("latin-1"))
+
+    with pytest.raises(DescriptionError, match="line 2 holds a byte that is no UTF-8"):
+        load(tmp_path / "bad.toml")
+
+
+def test_a_mark_before_the_first_byte_does_no_harm():
+    text = (CONFIGS / "lantern.toml").read_bytes()
+
+    assert read_table(b"\xef\xbb\xbf" + text, CONFIGS) == read_table(text, CONFIGS)
 
 
 def test_problems_of_both_files_come_at_once(tmp_path):

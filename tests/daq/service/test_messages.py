@@ -51,7 +51,12 @@ def test_an_urgent_message_goes_once_and_the_rest_in_the_digest(tmp_path, server
     assert (first, again, digest, no_second) == (1, 0, True, False)
     urgent, morning = server.handler.got
     assert "Subject: a-run: hold" in urgent
-    for part in ("axis mask: no reply.", "Look at its cable.", "kappa is still good.", "Nothing."):
+    for part in (
+        "axis mask: no reply.",
+        "Look at its cable.",
+        "kappa is still good.",
+        "Doing nothing costs nothing.",
+    ):
         assert part in urgent
     assert "All is well." in morning
     assert "a-run: hold" in morning
