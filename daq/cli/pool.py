@@ -27,7 +27,7 @@ def pool(arguments: argparse.Namespace) -> Answer:
     if arguments.picture is not None:
         _draw(found, arguments.picture)
     where = {"kept_in": None if kept.trouble else str(kept.folder)}
-    return Answer(0, found.to_json() | where, [*_lines(found), _read(found, kept)])
+    return Answer(0, found.to_json() | where, [*_by_night(found), *_together(found), _read(found, kept)])
 
 
 def _read(found: Pool, kept: Kept) -> str:
@@ -55,9 +55,13 @@ def _draw(found: Pool, path: Path) -> None:
     draw_forest(path, [Line(*one) for one in each], together, title, zero=not found.hidden)
 
 
-def _lines(found: Pool) -> Iterator[str]:
-    name = "kappa + offset" if found.hidden else "kappa"
-    yield f"{'':<44}{name:>14}{'± its error':>13}{'weight':>8}{'others':>12}{'z':>7}{'p':>7}"
+def _name(found: Pool) -> str:
+    return "kappa + offset" if found.hidden else "kappa"
+
+
+def _by_night(found: Pool) -> Iterator[str]:
+    """Tell each night beside all the others."""
+    yield f"{'':<44}{_name(found):>14}{'± its error':>13}{'weight':>8}{'others':>12}{'z':>7}{'p':>7}"
     nights = zip(found.runs, found.against, found.pooled.weights.tolist(), strict=True)
     for at, (run, left, weight) in enumerate(nights):
         kappa, se = (found.nights[column][at] for column in ("kappa", "kappa_se"))
@@ -66,7 +70,11 @@ def _lines(found: Pool) -> Iterator[str]:
             f"{_short(run):<44}{kappa:>+14.3e}{se:>13.2e}{weight:>8.3f}{left.others:>+12.2e}"
             f"{left.z:>+7.2f}{left.p:>7.2f}{mark}"
         )
-    one = found.pooled
+
+
+def _together(found: Pool) -> Iterator[str]:
+    """Tell whether the nights agree, and what they say together."""
+    one, name = found.pooled, _name(found)
     yield f"do the nights agree? Welch's p = {one.welch_p:.2g} (as if the errors were known: {one.q_p:.2g})"
     for cause, many in found.shared.items():
         yield f"{cause}: one cause for {many} nights, added to the error once and not night by night"
