@@ -33,7 +33,8 @@ class Pool:
     `homogeneous`: the nights agree by Welch's test. Then, and with two nights, the headline is the mean
     `by_counts`, else the one with a scatter between nights. The rule is fixed: never the narrower of the two.
     `positions`: tests of every position over the pairs of all nights, where they have the same positions.
-    `hidden`: the runs are blinded, so kappa is moved by their common offset and there is no `limit`.
+    `hidden`: the runs are blinded, so kappa is moved by their common offset and there is no `limit`; nor is
+    there one where two nights disagree.
     `read`: of how many runs the visits were read; the others were kept.
     """
 
@@ -176,7 +177,10 @@ def _pooled(of: Mapping[str, Night], read: int) -> Pool:
     return found if blind else replace(found, limit=_limit(found))
 
 
-def _limit(found: Pool) -> Statement:
+def _limit(found: Pool) -> Statement | None:
+    """Return what may be said of kappa; None where nights disagree, and are too few to say how far."""
+    if found.by_counts and not found.homogeneous:
+        return None
     value, error, _ = found.headline
     return statement(value, error, found.pooled.dof if found.by_counts else float(len(found.runs) - 1))
 
