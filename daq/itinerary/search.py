@@ -13,6 +13,7 @@ from daq.itinerary.orders import FloatArray, IntArray
 
 CHAINS = 64  # of the annealing, side by side in one array
 HEAT = (0.02, 1e-4)  # relative, first and last: orders along the mask are good, and are not to be melted
+ENOUGH = 6  # prices at most that all orders of a stand were ever weighed at, of thousands of stands
 FAILED = 1e-9  # relative: a smaller gain than this is rounding
 
 
@@ -75,7 +76,7 @@ def search(
     spent = 0
     for times in range(1, repeats + 1):
         states = float(times + 1) ** stand.weight.shape[1] * stand.weight.shape[1] ** 2
-        if spent + 2 * states <= budget:
+        if spent + ENOUGH * states <= budget:
             word = _all_orders(stand, times, budget - spent)
         else:
             word = _annealed(stand, start, times, (budget - spent) // (repeats + 1 - times), generator)
@@ -98,27 +99,68 @@ def _drift_and_travel(stand: Stand, slots: IntArray, times: int) -> tuple[FloatA
     return moving + counting, between_s.sum(axis=1)
 
 
+@dataclass(frozen=True, slots=True)
+class _Corner:
+    """An order on the convex hull of all (drift, travel), and its time x variance."""
+
+    slots: tuple[int, ...]
+    drift: float
+    travel_s: float
+    cost: float
+
+
 def _all_orders(stand: Stand, times: int, budget: int) -> Word:
     """Return the best of all orders.
 
     Notes
     -----
     Time x variance is a product of two sums over the steps of an order; the least product lies on the
-    convex hull of all (drift, travel), so it is the least of drift + price x travel at the right price.
+    convex hull of all (drift, travel), so it is the least of drift + price x travel at the right price. That
+    price is the product over the square of the time, so it lies between two bounds that any order gives;
+    between their corners of the hull the others are looked for, where one could be better.
     """
     steps = _Steps.of(stand, times)
-    best, spent, prices = None, 0, [stand.counting_var / stand.still_s]
-    while prices and (best is None or spent + steps.evaluations <= budget):
-        price = prices.pop()
-        slots = steps.cheapest(stand, price)
+    spent = 0
+
+    def corner(price: float) -> _Corner:
+        nonlocal spent
         spent += steps.evaluations
+        slots = steps.cheapest(stand, price)
         drift, travel_s = _drift_and_travel(stand, np.array([slots]), times)
-        cost = float(stand.cost(drift, travel_s)[0])
-        if best is None or cost < best.cost * (1 - FAILED):
-            best = Word(tuple(slots), cost, spent, exhaustive=True)
-            prices.append(cost / float(stand.lap_s(travel_s)[0]) ** 2)
-    assert best is not None
-    return replace(best, evaluations=spent)
+        return _Corner(
+            tuple(slots), float(drift[0]), float(travel_s[0]), float(stand.cost(drift, travel_s)[0])
+        )
+
+    best = corner(stand.counting_var / stand.still_s)
+    if best.cost <= 0:  # none is less
+        return Word(best.slots, best.cost, spent, exhaustive=True)
+    ends = corner(best.cost / stand.still_s**2), corner(stand.counting_var**2 / best.cost)
+    best = min(best, *ends, key=lambda one: one.cost)
+    sides = [ends]
+    while sides and spent + steps.evaluations <= budget:
+        swift, calm = sides.pop()
+        if not _could_hold_better(stand, swift, calm, best):
+            continue
+        price = stand.walk_per_s * (swift.drift - calm.drift) / (calm.travel_s - swift.travel_s)
+        between = corner(price / stand.stands)
+        best = min(best, between, key=lambda one: one.cost)
+        if _lies_below(stand, between, swift, price):
+            sides += [(swift, between), (between, calm)]
+    return Word(best.slots, best.cost, spent, exhaustive=not sides)
+
+
+def _could_hold_better(stand: Stand, swift: _Corner, calm: _Corner, best: _Corner) -> bool:
+    """Return whether an order with the drift of one corner and the travel of the other would be better."""
+    if calm.travel_s <= swift.travel_s or swift.drift <= calm.drift:
+        return False
+    least = stand.cost(np.array(calm.drift), np.array(swift.travel_s))
+    return bool(least < best.cost * (1 - FAILED))
+
+
+def _lies_below(stand: Stand, corner: _Corner, end: _Corner, price: float) -> bool:
+    """Return whether a corner lies below the side of the hull that begins at an end."""
+    here, there = (stand.walk_per_s * one.drift + price * one.travel_s for one in (corner, end))
+    return here < there * (1 - FAILED)
 
 
 @dataclass(frozen=True, slots=True)

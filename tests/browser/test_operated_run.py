@@ -13,7 +13,7 @@ from playwright.sync_api import Browser, Page, expect
 from daq.storage.lab_book import select
 from daq.storage.log import read_log
 from daq.storage.people import add_person
-from tests.browser.conftest import context_of
+from tests.browser.conftest import Lab, context_of
 from tests.dashboard.doors import PASSWORD
 
 pytestmark = pytest.mark.browser
@@ -32,6 +32,14 @@ def rehearsal(tmp_path: Path) -> Iterator[tuple[subprocess.Popen[str], str]]:
     process.communicate(timeout=60)
 
 
+def log_in(page: Page, address: str) -> None:
+    """Open a page as the night watch."""
+    page.goto(address)
+    page.get_by_label("Name").fill("Night watch")
+    page.get_by_label("Password").fill(PASSWORD)
+    page.get_by_role("button", name="Log in").click()
+
+
 def ask(page: Page, label: str) -> None:
     """Press a button of the page, and the same in the question that it asks back."""
     page.locator("#operate").get_by_role("button", name=label, exact=True).click(timeout=SLOW_MS)
@@ -44,10 +52,7 @@ def test_a_run_is_held_gone_on_with_and_ended_from_the_page(
     process, address = rehearsal
     context = context_of(chromium)
     page = context.new_page()
-    page.goto(address)
-    page.get_by_label("Name").fill("Night watch")
-    page.get_by_label("Password").fill(PASSWORD)
-    page.get_by_role("button", name="Log in").click()
+    log_in(page, address)
     verdict = page.get_by_role("status").first
 
     ask(page, "Hold")
@@ -55,10 +60,14 @@ def test_a_run_is_held_gone_on_with_and_ended_from_the_page(
     ask(page, "Resume")
     expect(verdict).not_to_contain_text("Holding", timeout=SLOW_MS)
     ask(page, "End and park")
-    expect(verdict).to_contain_text("Ended early.", timeout=SLOW_MS)
 
-    context.close()
     assert process.wait(timeout=60) == 1
+    lab = Lab(tmp_path)  # the run's own page has gone with it
+    lab.serve()
+    page.goto(lab.address)  # still logged in: sessions live in the lab
+    expect(verdict).to_contain_text("Ended early.", timeout=SLOW_MS)
+    context.close()
+    lab.stop()
     (folder,) = (tmp_path / "runs").iterdir()
     asked = [(row["what"], row["who"]) for row in select(tmp_path, "requests")]
     assert asked == [("hold", "Night watch"), ("resume", "Night watch"), ("park", "Night watch")]

@@ -23,7 +23,7 @@ import numpy as np
 from daq import openings
 from daq.errors import DaqError
 from daq.records import Quality, Reading
-from daq.service import start
+from daq.service import equip, start
 from daq.service.equip import Wanted
 from daq.service.figures import figures_of
 from daq.service.load import NO_WISHES, load
@@ -231,7 +231,7 @@ def _perform(lab: Path, run: Path | None) -> None:
         benches.append(simulated(*arguments, **more))
         return benches[-1]
 
-    start.open_bench = open_bench  # type: ignore[assignment,attr-defined]  # this process is the study's own
+    equip.open_bench = open_bench  # type: ignore[assignment,attr-defined]  # this process is the study's own
     log = os.open(lab / "acknowledged.jsonl", os.O_WRONLY | os.O_CREAT | os.O_APPEND)
 
     def took(reading: Reading) -> None:

@@ -3,7 +3,7 @@ from itertools import permutations
 
 import numpy as np
 import pytest
-from hypothesis import given, settings
+from hypothesis import example, given, settings
 from hypothesis import strategies as st
 
 from daq import openings
@@ -44,6 +44,7 @@ def cost_by_hand(of, slots, times):
 
 @settings(max_examples=25, deadline=None)
 @given(seed=st.integers(0, 10**6), walk=st.floats(0.0, 3.0))
+@example(seed=8016, walk=0.375)  # its best order is no neighbour of the one that the first price gives
 def test_no_order_of_five_openings_costs_less_than_the_one_found(seed, walk):
     of = stand(5, 3, seed, walk)
 
@@ -121,13 +122,13 @@ def test_exchanges_of_sixteen_openings_come_within_one_percent_of_all_orders():
     wishes = {"positions__number": 11, "expect__drift_per_sqrt_hour": 0.1, "itinerary__laps": 2}
 
     q = {}
-    for budget in (500_000, 40_000_000):
+    for budget in (500_000, 110_000_000):
         plan = lantern(**wishes, itinerary__order="searched", itinerary__search_evaluations=budget)
         itinerary = compose(plan, rig)
         q[budget] = forecast(itinerary, plan).q
         assert ("annealed" in itinerary.notes[0]) == (budget == 500_000)
 
-    assert q[500_000] <= 1.01 * q[40_000_000]
+    assert q[500_000] <= 1.01 * q[110_000_000]
 
 
 def test_the_same_seed_searches_the_same_order():
