@@ -13,7 +13,7 @@ from daq.itinerary.orders import FloatArray, IntArray
 
 CHAINS = 64  # of the annealing, side by side in one array
 HEAT = (0.02, 1e-4)  # relative, first and last: orders along the mask are good, and are not to be melted
-ENOUGH = 6  # prices at most that all orders of a stand were ever weighed at, of thousands of stands
+ENOUGH = 6  # prices: no more were needed for any of 1500 random stands of five openings
 FAILED = 1e-9  # relative: a smaller gain than this is rounding
 
 

@@ -99,23 +99,22 @@ def test_a_counter_that_overflows(folder: Path, capsys: pytest.CaptureFixture[st
     assert_left_there(folder, record, 3)
 
 
-def test_a_detector_that_sees_more_than_it_may(folder: Path, capsys: pytest.CaptureFixture[str]) -> None:
-    changed(folder / "night.toml", ("full_range = 0.9", "overload_hz = 2e5\nfull_range = 0.9"))
+@pytest.mark.parametrize(
+    ("limit", "said"),
+    [
+        ("overload_hz = 2e5", "counts a second, 200000 are allowed"),
+        ("counter_range = 1e5", "the counter overflowed"),
+    ],
+)
+def test_more_light_than_detector_or_counter_may_have(
+    folder: Path, capsys: pytest.CaptureFixture[str], limit: str, said: str
+) -> None:
+    changed(folder / "night.toml", ("full_range = 0.9", f"{limit}\nfull_range = 0.9"))
 
     status, record, _ = done(capsys, folder, "pilot")
 
     assert status == 1
-    assert "counts a second, 200000 are allowed" in record["sentence"]
-    assert_left_there(folder, record, 0)
-
-
-def test_a_counter_that_comes_near_to_its_range(folder: Path, capsys: pytest.CaptureFixture[str]) -> None:
-    changed(folder / "night.toml", ("full_range = 0.9", "counter_range = 1e5\nfull_range = 0.9"))
-
-    status, record, _ = done(capsys, folder, "pilot")
-
-    assert status == 1
-    assert "the counter overflowed" in record["sentence"]
+    assert said in record["sentence"]
     assert_left_there(folder, record, 0)
 
 
